@@ -1,0 +1,36 @@
+package engine
+
+import (
+	"time"
+
+	"gemel/drivers"
+	"gemel/scan"
+)
+
+// Bench is the hardware as the engine sees it. Package daemon/bench builds one; the engine never
+// learns what is behind the interfaces.
+type Bench struct {
+	Name      string
+	Pace      drivers.Pace // 1 on a real bench
+	Simulated bool
+
+	Axes      []scan.Axis
+	Stages    []drivers.Stage
+	Counter   drivers.Counter
+	Tag       drivers.Channel // the channel that counts gates; empty: none
+	Detectors []Detector
+	Pump      drivers.Shutter // nil: none, and darks are refused
+	Sensors   []drivers.Sensor
+	Settings  []drivers.Setting
+}
+
+// Detector is one detector behind a counter channel.
+type Detector struct {
+	Name    string
+	Channel drivers.Channel
+	TripHz  float64         // above this singles rate the detector is protected; 0: none declared
+	FloorHz float64         // below this it counts as latched or paralysed; 0: none declared
+	Glance  time.Duration   // the short gate before a dwell at which the light is judged; 0: none
+	Protect drivers.Shutter // nil: the program cannot protect it, and says so
+	Ready   time.Duration   // what the detector needs after its protector opened, before it may count
+}

@@ -1,0 +1,135 @@
+// Package scan holds the vocabulary of a scan: the plan a recipe comes to, its points and visits,
+// and what the engine must know of the bench's axes. Nothing runs here.
+package scan
+
+import (
+	"time"
+
+	"gemel/drivers"
+	"gemel/protocol/unit"
+)
+
+// Plan is a checked recipe, worked out for one bench. It is a value: never changed once a run
+// began, and worked out again to the same plan from the texts that the logbook keeps.
+type Plan struct {
+	Title   string
+	Points  []Point // in the order of their index, which is their place here
+	Dwell   Dwell
+	Repeat  Repeat
+	Dark    *Cadence // nil: none
+	Trouble Trouble
+}
+
+// Point is one set of targets. Axes and settings it does not name stay where they are.
+type Point struct {
+	Axes     []AxisTarget
+	Settings []SettingTarget
+}
+
+// AxisTarget is where an axis is to go, as a bench angle.
+type AxisTarget struct {
+	Axis  drivers.AxisName
+	Angle unit.Angle
+}
+
+// SettingTarget is what a setting is to have, in the setting's unit.
+type SettingTarget struct {
+	Setting drivers.DeviceName
+	Value   float64
+}
+
+// Dwell is how long one reading counts, in bench time.
+type Dwell struct {
+	Time  time.Duration
+	Slice time.Duration // equal to Time when the dwell is not cut
+}
+
+// Slices returns the gates a dwell is counted in: whole slices, and what is left as a last one.
+func (d Dwell) Slices() []time.Duration {
+	var s []time.Duration
+	for left := d.Time; left > 0; left -= d.Slice {
+		s = append(s, min(left, d.Slice))
+	}
+	return s
+}
+
+// Repeat says how often each point is visited, and in what manner.
+type Repeat struct {
+	Times      int
+	InPlace    bool // all visits of a point follow one another; else the whole list is passed Times times
+	Serpentine bool // every second pass runs backwards
+}
+
+// Visit is one coming to a point. Visit counts from 1.
+type Visit struct {
+	Point int
+	Visit int
+}
+
+// Visits lists every visit of the plan in the order they are made.
+func (p Plan) Visits() []Visit {
+	visits := make([]Visit, 0, len(p.Points)*p.Repeat.Times)
+	if p.Repeat.InPlace {
+		for i := range p.Points {
+			for v := 1; v <= p.Repeat.Times; v++ {
+				visits = append(visits, Visit{Point: i, Visit: v})
+			}
+		}
+		return visits
+	}
+	for v := 1; v <= p.Repeat.Times; v++ {
+		for k := range p.Points {
+			i := k
+			if p.Repeat.Serpentine && v%2 == 0 {
+				i = len(p.Points) - 1 - k
+			}
+			visits = append(visits, Visit{Point: i, Visit: v})
+		}
+	}
+	return visits
+}
+
+// Cadence is how often something is repeated beside the points. Every and EveryPoints exclude
+// one another; both may be zero when only AtStart or AtEnd is asked for.
+type Cadence struct {
+	Dwell       Dwell
+	Every       time.Duration // bench time between the starts of two
+	EveryPoints int           // visits between two
+	AtStart     bool
+	AtEnd       bool
+}
+
+// Then is what is done when something went wrong as often as the recipe allows.
+type Then string
+
+// The choices.
+const (
+	Hold Then = "hold"
+	Skip Then = "skip"
+	Stop Then = "stop"
+)
+
+// Trouble says how often a reading is taken again, and what then.
+type Trouble struct {
+	Retries int // beyond the first attempt
+	Then    Then
+}
+
+// Axis is what route and engine must know of one axis. Angles are bench angles.
+type Axis struct {
+	Name       drivers.AxisName
+	Role       string // signal_arm, idler_arm, crystal_tilt, pump_waveplate, other
+	Controller drivers.DeviceName
+	Low, High  unit.Angle // soft limits
+	Tolerance  unit.Angle // a proved position may differ from its target by this much
+	Backlash   unit.Angle // zero: no approach needed
+	Rising     bool       // the last approach is upwards
+	Settle     time.Duration
+	SpeedDegS  float64 // degrees per second, at full speed
+	AccelDegS2 float64
+	Park       *unit.Angle
+	Proof      drivers.Proof
+}
+
+// Limits says whether an angle lies within the soft limits.
+func (a Axis) Limits(angle unit.Angle) bool { return angle >= a.Low && angle <= a.High }
