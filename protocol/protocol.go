@@ -125,8 +125,10 @@ type Reading struct {
 	Sensors   []Sensor    `json:"sensors"`
 	Counts    []Count     `json:"counts"` // summed over the slices; a tag channel shows its last value
 	Slices    []Slice     `json:"slices"`
-	Scatter   *Scatter    `json:"scatter"` // null with fewer than two slices
-	Attempt   int         `json:"attempt"` // 1, or more when it was taken again
+	Scatter   *Scatter    `json:"scatter"`    // null with fewer than two slices
+	Glance    *Slice      `json:"glance"`     // the short look at the light before the dwell; not in the counts
+	LostGates int         `json:"lost_gates"` // gates that were opened in this dwell and whose counts are not here
+	Attempt   int         `json:"attempt"`    // 1, or more when it was taken again
 	Simulated *int        `json:"simulated"`
 }
 

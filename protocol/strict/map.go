@@ -1,0 +1,204 @@
+package strict
+
+import (
+	"fmt"
+	"slices"
+	"strconv"
+	"strings"
+
+	"gopkg.in/yaml.v3"
+)
+
+// Map is one level of keys. Every key must be asked for, by Need, Opt or Entries; Done reports
+// the ones nobody asked for.
+type Map struct {
+	doc   *Doc
+	node  *yaml.Node // nil: nothing to read, and the reason was reported
+	place Place
+	asked map[string]bool
+}
+
+// Entry is one key of the user's own choice, and its value.
+type Entry struct {
+	Name  string
+	Key   Place // where the name stands
+	Value Value
+}
+
+// Place is where the keys stand: the key above them.
+func (m Map) Place() Place { return m.place }
+
+// Given says whether there are keys to read.
+func (m Map) Given() bool { return m.node != nil }
+
+// Has says whether a key is written, without asking for it.
+func (m Map) Has(key string) bool {
+	k, _ := m.find(key)
+	return k != nil
+}
+
+// Need returns the value of a key that must be there.
+func (m Map) Need(key string) Value {
+	v := m.Opt(key)
+	if v.node == nil && m.node != nil {
+		at := m.place.child(key)
+		m.doc.report(at, "missing", "this key written")
+	}
+	return v
+}
+
+// Opt returns the value of a key that may be there.
+func (m Map) Opt(key string) Value {
+	if m.asked != nil {
+		m.asked[key] = true
+	}
+	k, n := m.find(key)
+	if k == nil {
+		return Value{doc: m.doc, place: m.place.child(key)}
+	}
+	at := m.place.child(key)
+	at.line, at.col = n.Line, n.Column
+	if n.Tag == "!!null" && n.Kind == yaml.ScalarNode || n.Kind == yaml.MappingNode {
+		at.line, at.col = k.Line, k.Column // an empty value stands nowhere, and keys stand under their name
+	}
+	return Value{doc: m.doc, place: at, node: n}
+}
+
+// Later refuses keys that the format foresees and this version does not act on, because a key
+// that is ignored is worse than one that is refused.
+func (m Map) Later(keys ...string) {
+	m.Refuse("not available yet", "no such key in this version", keys...)
+}
+
+// Refuse refuses keys with a reason of their own.
+func (m Map) Refuse(found, want string, keys ...string) {
+	for _, key := range keys {
+		k, n := m.find(key)
+		if k == nil {
+			continue
+		}
+		m.asked[key] = true
+		at := m.place.child(key)
+		at.line, at.col = k.Line, k.Column
+		m.doc.reportNode(n, at, found, want)
+	}
+}
+
+// Entries returns the keys that the user named, in the order of the file. The names must be
+// NATS tokens, since they become parts of subjects, columns and file names.
+func (m Map) Entries() []Entry {
+	if m.node == nil {
+		return nil
+	}
+	var entries []Entry
+	seen := map[string]bool{}
+	for i := 0; i+1 < len(m.node.Content); i += 2 {
+		k := m.node.Content[i]
+		if k.Kind != yaml.ScalarNode || m.doc.bad[k] || seen[k.Value] {
+			continue
+		}
+		seen[k.Value] = true
+		v := m.Opt(k.Value)
+		at := v.place
+		at.line, at.col = k.Line, k.Column
+		if !isName(k.Value) {
+			m.doc.report(at, fmt.Sprintf("the name %q", shorten(k.Value)), `letters, digits, "_" and "-", at most 64, beginning with a letter`)
+			continue
+		}
+		entries = append(entries, Entry{Name: k.Value, Key: at, Value: v})
+	}
+	return entries
+}
+
+// Done reports every key that nobody asked for, and names the nearest one that would do.
+func (m Map) Done() {
+	if m.node == nil {
+		return
+	}
+	known := make([]string, 0, len(m.asked))
+	for key := range m.asked {
+		known = append(known, key)
+	}
+	slices.Sort(known)
+	for i := 0; i+1 < len(m.node.Content); i += 2 {
+		k, n := m.node.Content[i], m.node.Content[i+1]
+		if k.Kind != yaml.ScalarNode || m.asked[k.Value] || m.doc.bad[k] {
+			continue
+		}
+		at := m.place.child(shorten(k.Value))
+		at.line, at.col = k.Line, k.Column
+		m.doc.reportNode(n, at, "an unknown key", wantOneOf(k.Value, known))
+	}
+}
+
+func (m Map) find(key string) (k, v *yaml.Node) {
+	if m.node == nil {
+		return nil, nil
+	}
+	for i := 0; i+1 < len(m.node.Content); i += 2 {
+		if n := m.node.Content[i]; n.Kind == yaml.ScalarNode && n.Value == key {
+			return n, m.node.Content[i+1]
+		}
+	}
+	return nil, nil
+}
+
+// wantOneOf names the nearest allowed word, and all of them if they are few.
+func wantOneOf(found string, allowed []string) string {
+	quoted := make([]string, len(allowed))
+	for i, a := range allowed {
+		quoted[i] = strconv.Quote(a)
+	}
+	near := Nearest(found, allowed)
+	switch {
+	case len(allowed) == 0:
+		return "none"
+	case near != "" && len(allowed) > 6:
+		return fmt.Sprintf("%q, which is nearest (all: %s)", near, strings.Join(allowed, ", "))
+	case near != "" && len(allowed) > 1:
+		return fmt.Sprintf("%q, which is nearest, of %s", near, strings.Join(quoted, ", "))
+	case len(allowed) == 1:
+		return quoted[0]
+	}
+	return "one of " + strings.Join(allowed, ", ")
+}
+
+// Nearest returns the allowed word with the least edits to the one found, or "" if none is near
+// enough to have been meant. Of several it takes the first.
+func Nearest(found string, allowed []string) string {
+	if len(found) > 64 {
+		return ""
+	}
+	best, least := "", max(2, len(found)/3)+1
+	for _, a := range allowed {
+		if d := edits(strings.ToLower(found), strings.ToLower(a)); d < least {
+			best, least = a, d
+		}
+	}
+	return best
+}
+
+// edits is the distance of Damerau (1964) and Levenshtein (1966), with swaps of neighbours only.
+func edits(a, b string) int {
+	x, y := []rune(a), []rune(b)
+	before, row := make([]int, len(y)+1), make([]int, len(y)+1)
+	for j := range row {
+		row[j] = j
+	}
+	for i := range x {
+		next := make([]int, len(y)+1)
+		next[0] = i + 1
+		for j := range y {
+			cost := 1
+			if x[i] == y[j] {
+				cost = 0
+			}
+			next[j+1] = min(row[j]+cost, row[j+1]+1, next[j]+1)
+			if i > 0 && j > 0 && x[i] == y[j-1] && x[i-1] == y[j] {
+				next[j+1] = min(next[j+1], before[j-1]+1)
+			}
+		}
+		before, row = row, next
+	}
+	return row[len(y)]
+}

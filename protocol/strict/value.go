@@ -1,0 +1,463 @@
+package strict
+
+import (
+	"errors"
+	"fmt"
+	"math"
+	"regexp"
+	"strconv"
+	"strings"
+	"time"
+	"unicode"
+
+	"gopkg.in/yaml.v3"
+
+	"gemel/protocol"
+	"gemel/protocol/unit"
+)
+
+// Value is one value of a file, or the absence of one. Its getters take what stands in for an
+// absent or a bad value; without that they return the zero value.
+type Value struct {
+	doc   *Doc
+	node  *yaml.Node // nil: absent
+	place Place
+}
+
+// Measured is a constant that enters a result: `4.0 ns`, or {value: 4.0 ns, u: 0.2 ns, from: "…"}.
+type Measured struct {
+	Value float64 // in the base unit of its kind
+	U     float64 // standard uncertainty, in the same unit; 0 when none is stated
+	From  string  // where the value comes from
+}
+
+// Quantity is a value with whatever unit it was written in.
+type Quantity struct {
+	Number string // as written
+	Unit   string // as written
+	Kind   unit.Kind
+	Base   float64 // in the kind's base unit
+}
+
+// Given says whether the value is written.
+func (v Value) Given() bool { return v.node != nil }
+
+// Good says whether the value is written and nothing was found wrong with it so far.
+func (v Value) Good() bool { return v.node != nil && !v.doc.bad[v.node] }
+
+// Place is where the value stands.
+func (v Value) Place() Place { return v.place }
+
+// IsList says whether the value is a list, IsMap whether it is keys and values.
+func (v Value) IsList() bool { return v.node != nil && v.node.Kind == yaml.SequenceNode }
+
+// IsMap says whether the value is keys and values.
+func (v Value) IsMap() bool { return v.node != nil && v.node.Kind == yaml.MappingNode }
+
+// Fail reports what is wrong with the value.
+func (v Value) Fail(found, want string) {
+	if v.node != nil {
+		v.doc.bad[v.node] = true
+	}
+	v.doc.report(v.place, found, want)
+}
+
+// Failf reports the value as it is written, and what is wanted.
+func (v Value) Failf(format string, a ...any) { v.Fail(v.written(), fmt.Sprintf(format, a...)) }
+
+func (v Value) written() string {
+	if v.node == nil {
+		return "nothing"
+	}
+	if v.node.Kind == yaml.ScalarNode && v.node.Style == 0 && v.node.Tag != "!!str" && v.node.Tag != "!!null" {
+		return shorten(v.node.Value) // a plain number reads better without quotes
+	}
+	return kindName(v.node)
+}
+
+// Map returns the keys of the value.
+func (v Value) Map() Map {
+	m := Map{doc: v.doc, place: v.place, asked: map[string]bool{}}
+	if v.node == nil || v.doc.bad[v.node] {
+		return m
+	}
+	if v.node.Kind != yaml.MappingNode {
+		v.Failf("keys and values")
+		return m
+	}
+	m.node = v.node
+	return m
+}
+
+// List returns the items of the value, at least low and at most high of them.
+func (v Value) List(low, high int) []Value {
+	if v.node == nil || v.doc.bad[v.node] {
+		return nil
+	}
+	if v.node.Kind != yaml.SequenceNode {
+		v.Failf("a list, such as [a, b]")
+		return nil
+	}
+	if n := len(v.node.Content); n < low || n > high {
+		want := fmt.Sprintf("%d to %d", low, high)
+		if low == high {
+			want = strconv.Itoa(low)
+		}
+		v.Fail(fmt.Sprintf("a list of %d", n), want+" in it")
+		return nil
+	}
+	items := make([]Value, len(v.node.Content))
+	for i, n := range v.node.Content {
+		at := v.place.item(i)
+		at.line, at.col = n.Line, n.Column
+		items[i] = Value{doc: v.doc, node: n, place: at}
+	}
+	return items
+}
+
+// scalar returns the text of a single value that nothing was found wrong with.
+func (v Value) scalar(want string) (string, bool) {
+	if v.node == nil || v.doc.bad[v.node] {
+		return "", false
+	}
+	if v.node.Kind != yaml.ScalarNode || v.node.Tag == "!!null" {
+		v.Failf("%s", want)
+		return "", false
+	}
+	return v.node.Value, true
+}
+
+func (v Value) quoted() bool { return v.node.Style != 0 }
+
+// Text returns one line of text, not empty, at most 400 characters.
+func (v Value) Text(or ...string) string {
+	s, ok := v.scalar("text")
+	if !ok {
+		return first(or)
+	}
+	if !v.quoted() && v.node.Tag != "!!str" {
+		v.Failf("text: write it in quotes, %q", shorten(s))
+		return first(or)
+	}
+	if strings.TrimSpace(s) == "" {
+		v.Fail("empty text", "some")
+		return first(or)
+	}
+	if len([]rune(s)) > 400 {
+		v.Fail(fmt.Sprintf("text of %d characters", len([]rune(s))), "at most 400")
+		return first(or)
+	}
+	if i := strings.IndexFunc(s, unicode.IsControl); i >= 0 {
+		v.Fail(fmt.Sprintf("a control character in %q", shorten(s)), "one line of text")
+		return first(or)
+	}
+	return s
+}
+
+// Wire returns text that goes over a line: like Text, but control characters are part of it and
+// it may be empty.
+func (v Value) Wire(or ...string) string {
+	s, ok := v.scalar("text")
+	if !ok {
+		return first(or)
+	}
+	if !v.quoted() && v.node.Tag != "!!str" {
+		v.Failf("text: write it in quotes, %q", shorten(s))
+		return first(or)
+	}
+	if len(s) > 400 {
+		v.Fail(fmt.Sprintf("text of %d bytes", len(s)), "at most 400")
+		return first(or)
+	}
+	return s
+}
+
+// Token returns a name that may stand in a NATS subject.
+func (v Value) Token(or ...string) string {
+	s, ok := v.scalar("a name")
+	if !ok {
+		return first(or)
+	}
+	if !v.quoted() && v.node.Tag != "!!str" || !isName(s) {
+		v.Failf(`a name of letters, digits, "_" and "-", at most 64, beginning with a letter`)
+		return first(or)
+	}
+	return s
+}
+
+func isName(s string) bool {
+	return protocol.IsToken(s) && (s[0] >= 'a' && s[0] <= 'z' || s[0] >= 'A' && s[0] <= 'Z')
+}
+
+// Choice returns one of the allowed words.
+func (v Value) Choice(allowed []string, or ...string) string {
+	s, ok := v.scalar("one of " + strings.Join(allowed, ", "))
+	if !ok {
+		return first(or)
+	}
+	for _, a := range allowed {
+		if s == a {
+			return s
+		}
+	}
+	v.Failf("%s", wantOneOf(s, allowed))
+	return first(or)
+}
+
+// Bool returns true or false, spelt so.
+func (v Value) Bool(or ...bool) bool {
+	s, ok := v.scalar("true or false")
+	if !ok {
+		return first(or)
+	}
+	if v.quoted() || s != "true" && s != "false" {
+		v.Failf("true or false")
+		return first(or)
+	}
+	return s == "true"
+}
+
+var (
+	wholeNumber   = regexp.MustCompile(`^-?(0|[1-9][0-9]{0,17})$`)
+	decimalNumber = regexp.MustCompile(`^-?(0|[1-9][0-9]{0,17})(\.[0-9]{1,30})?(e[+-]?[0-9]{1,2})?$`)
+)
+
+// Int returns a whole number from low to high, written in decimal.
+func (v Value) Int(low, high int64, or ...int64) int64 {
+	want := fmt.Sprintf("a whole number from %d to %d", low, high)
+	s, ok := v.scalar(want)
+	if !ok {
+		return first(or)
+	}
+	n, err := strconv.ParseInt(s, 10, 64)
+	if v.quoted() || !wholeNumber.MatchString(s) || err != nil || n < low || n > high {
+		v.Failf("%s", want)
+		return first(or)
+	}
+	return n
+}
+
+// Number returns a plain number without a unit, from low to high.
+func (v Value) Number(low, high float64, or ...float64) float64 {
+	want := fmt.Sprintf("a number from %g to %g", low, high)
+	s, ok := v.scalar(want)
+	if !ok {
+		return first(or)
+	}
+	x, err := strconv.ParseFloat(s, 64)
+	if v.quoted() || !decimalNumber.MatchString(s) || err != nil || x < low || x > high {
+		v.Failf("%s", want)
+		return first(or)
+	}
+	return x
+}
+
+// Angle returns an exact angle from low to high.
+func (v Value) Angle(low, high unit.Angle, or ...unit.Angle) unit.Angle {
+	s, ok := v.scalar(example(unit.Plane))
+	if !ok {
+		return first(or)
+	}
+	a, err := unit.ParseAngle(s)
+	if err != nil {
+		v.failUnit(err, unit.Plane)
+		return first(or)
+	}
+	if a < low || a > high {
+		v.Failf("%s to %s", low, high)
+		return first(or)
+	}
+	return a
+}
+
+// Duration returns a time from low to high.
+func (v Value) Duration(low, high time.Duration, or ...time.Duration) time.Duration {
+	s, ok := v.scalar(example(unit.Time))
+	if !ok {
+		return first(or)
+	}
+	t, err := unit.ParseDuration(s)
+	if err != nil {
+		v.failUnit(err, unit.Time)
+		return first(or)
+	}
+	if t < low || t > high {
+		v.Failf("%s to %s", Span(low), Span(high))
+		return first(or)
+	}
+	return t
+}
+
+// Quantity returns a value of the kind, in its base unit, from low to high. A share may be a
+// plain number, because one is its unit.
+func (v Value) Quantity(kind unit.Kind, low, high float64, or ...float64) float64 {
+	s, ok := v.scalar(example(kind))
+	if !ok {
+		return first(or)
+	}
+	if kind == unit.Share && !v.quoted() && decimalNumber.MatchString(s) {
+		return v.Number(low, high, or...)
+	}
+	x, err := unit.Parse(s, kind)
+	if err != nil {
+		v.failUnit(err, kind)
+		return first(or)
+	}
+	if x < low || x > high || math.IsNaN(x) {
+		v.Failf("%s to %s", inBase(low, kind), inBase(high, kind))
+		return first(or)
+	}
+	return x
+}
+
+// Any returns a value with whatever unit it carries.
+func (v Value) Any() Quantity {
+	const want = `a value with its unit, such as "2 ns" or "50 mW"`
+	s, ok := v.scalar(want)
+	if !ok {
+		return Quantity{}
+	}
+	base, kind, name, err := unit.ParseAny(s)
+	if err != nil {
+		if errors.Is(err, unit.ErrNoUnit) {
+			v.Fail(shorten(s)+" has no unit", want)
+		} else {
+			v.failParsed(err, want)
+		}
+		return Quantity{}
+	}
+	number, _, _ := strings.Cut(strings.TrimSpace(s), " ")
+	return Quantity{Number: strings.TrimSuffix(number, "%"), Unit: name, Kind: kind, Base: base}
+}
+
+// Unit returns the spelling of a unit, and its kind.
+func (v Value) Unit() (string, unit.Kind) {
+	s, ok := v.scalar("a unit such as mW, Cel or ns")
+	if !ok {
+		return "", ""
+	}
+	_, kind, name, err := unit.ParseAny("1 " + s)
+	if err != nil {
+		v.Failf("a unit such as mW, Cel or ns")
+		return "", ""
+	}
+	return name, kind
+}
+
+// Measured returns a constant with its uncertainty and its source.
+func (v Value) Measured(kind unit.Kind, low, high float64, or ...Measured) Measured {
+	if !v.Good() {
+		return first(or)
+	}
+	if !v.IsMap() {
+		fallback := first(or)
+		x := v.Quantity(kind, low, high, fallback.Value)
+		if !v.Good() {
+			return fallback
+		}
+		return Measured{Value: x}
+	}
+	m := v.Map()
+	c := Measured{Value: m.Need("value").Quantity(kind, low, high)}
+	if u := m.Opt("u"); kind == unit.Temperature && u.Good() {
+		c.U = u.kelvins()
+	} else {
+		c.U = u.Quantity(kind, 0, math.Inf(1))
+	}
+	c.From = m.Opt("from").Text()
+	m.Done()
+	return c
+}
+
+// kelvins reads a difference of temperatures, which has no zero to be shifted by.
+func (v Value) kelvins() float64 {
+	q := v.Any()
+	if !v.Good() {
+		return 0
+	}
+	if x, err := strconv.ParseFloat(q.Number, 64); err == nil && q.Kind == unit.Temperature && x >= 0 {
+		return x
+	}
+	v.Failf(`a difference such as "0.2 K"`)
+	return 0
+}
+
+func (v Value) failUnit(err error, kind unit.Kind) {
+	if errors.Is(err, unit.ErrNoUnit) {
+		v.Fail(shorten(v.node.Value)+" has no unit", example(kind))
+		return
+	}
+	v.failParsed(err, example(kind))
+}
+
+func (v Value) failParsed(err error, want string) {
+	if e, ok := errors.AsType[*unit.Error](err); ok {
+		v.Fail(shorten(e.Found), e.Want)
+		return
+	}
+	v.Failf("%s", want)
+}
+
+func example(kind unit.Kind) string {
+	switch kind {
+	case unit.Plane:
+		return `an angle such as "1.5 deg"`
+	case unit.Time:
+		return `a time such as "2 s"`
+	case unit.Length:
+		return `a length such as "405 nm"`
+	case unit.Rate:
+		return `a rate such as "250 kHz"`
+	case unit.Power:
+		return `a power such as "50 mW"`
+	case unit.Temperature:
+		return `a temperature such as "20 Cel"`
+	case unit.Share:
+		return `a share such as "65 %" or 0.65`
+	case unit.Voltage:
+		return `a voltage such as "5 V"`
+	case unit.Current:
+		return `a current such as "20 mA"`
+	}
+	return "a " + string(kind) + " with its unit"
+}
+
+// Span prints a time as a person writes it in a file.
+func Span(d time.Duration) string {
+	for _, u := range []struct {
+		per  time.Duration
+		name string
+	}{{time.Hour, "h"}, {time.Minute, "min"}, {time.Second, "s"}, {time.Millisecond, "ms"}, {time.Microsecond, "us"}} {
+		if d != 0 && d%u.per == 0 {
+			return fmt.Sprintf("%d %s", d/u.per, u.name)
+		}
+	}
+	if d == 0 {
+		return "0 s"
+	}
+	return strconv.FormatFloat(d.Seconds(), 'f', -1, 64) + " s"
+}
+
+// inBase prints a bound in the unit of its kind that makes it shortest to read.
+func inBase(x float64, kind unit.Kind) string {
+	best := ""
+	for _, name := range unit.Units(kind) {
+		in, err := unit.In(x, name)
+		if err != nil {
+			continue
+		}
+		s := strconv.FormatFloat(in, 'g', 6, 64) + " " + name
+		if best == "" || len(s) < len(best) {
+			best = s
+		}
+	}
+	return strings.TrimSuffix(best, " 1")
+}
+
+func first[T any](or []T) T {
+	if len(or) > 0 {
+		return or[0]
+	}
+	var zero T
+	return zero
+}
