@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"regexp"
+	"slices"
 	"strconv"
 	"strings"
 	"time"
@@ -195,10 +196,8 @@ func (v Value) Choice(allowed []string, or ...string) string {
 	if !ok {
 		return first(or)
 	}
-	for _, a := range allowed {
-		if s == a {
-			return s
-		}
+	if slices.Contains(allowed, s) {
+		return s
 	}
 	v.Failf("%s", wantOneOf(s, allowed))
 	return first(or)
