@@ -1,0 +1,44 @@
+package trouble
+
+// Surface says how a trouble must show, so that a test can demand that none passed unseen.
+type Surface struct {
+	// Harmless: the trouble may pass without any trace in the journal, because the program asked
+	// again, or dropped a line, and lost nothing by it. It still shows in the wire's own counts.
+	Harmless bool
+	// Retried: a question was repeated, or a line dropped, on the device's line.
+	Retried bool
+	// Events are kinds of journal events of which at least one must follow, if a run was active
+	// and the trouble met it. Empty: none is demanded.
+	Events []string
+	// Doubts: readings taken under the trouble must not stand as accepted and undoubted.
+	Doubts bool
+	// Text says the same to a person.
+	Text string
+}
+
+// Surfaces says how the trouble must show.
+func (t Trouble) Surfaces() Surface {
+	switch t.Kind {
+	case Missing:
+		return Surface{Harmless: true, Retried: true, Text: "the question times out and is asked again, or its reading is set aside"}
+	case Garbled:
+		return Surface{Harmless: true, Retried: true, Text: "the answer is refused, or differs from the second one, and the question is asked again"}
+	case Late:
+		return Surface{Harmless: true, Text: "the answer is waited for, or the question is asked again and the late line dropped; it never answers another question"}
+	case Duplicated:
+		return Surface{Harmless: true, Text: "the second line is dropped; it never answers another question"}
+	case Unasked:
+		return Surface{Harmless: true, Text: "a declared line is taken for what it is declared to mean; any other makes the question be asked again"}
+	case Restart:
+		return Surface{Events: []string{"trouble", "held", "set_aside"}, Doubts: true, Text: "no reading is accepted on a lost zero or from a lost gate; a stage that lost its zero holds the run until it is homed"}
+	case Lamp:
+		return Surface{Events: []string{"set_aside", "held", "trouble"}, Doubts: true, Text: "above a declared trip rate the detector is protected and the run holds; below it, a disturbed dwell is set aside"}
+	case Unplug:
+		return Surface{Retried: true, Events: []string{"trouble", "held", "set_aside"}, Text: "the line is opened again and everything on it verified"}
+	case Slip, LostSteps:
+		return Surface{Events: []string{"doubted", "set_aside", "held", "trouble"}, Doubts: true, Text: "an encoder shows it at the next read; counted steps hide it until the zero is verified, and then readings back to the last good check are doubted"}
+	case PumpDrift:
+		return Surface{Events: []string{"guard_broken", "held"}, Text: "a guard on the power holds the run once the power leaves its bounds"}
+	}
+	return Surface{Text: "unknown kind"}
+}
