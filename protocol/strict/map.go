@@ -31,6 +31,14 @@ func (m Map) Place() Place { return m.place }
 // Given says whether there are keys to read.
 func (m Map) Given() bool { return m.node != nil }
 
+// Fail reports what is wrong with the keys taken together.
+func (m Map) Fail(found, want string) {
+	if m.node != nil {
+		m.doc.bad[m.node] = true
+	}
+	m.doc.report(m.place, found, want)
+}
+
 // Has says whether a key is written, without asking for it.
 func (m Map) Has(key string) bool {
 	k, _ := m.find(key)

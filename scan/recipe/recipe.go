@@ -1,0 +1,256 @@
+// Package recipe turns the text of a recipe into a checked plan for one bench.
+//
+// Parse reads the text alone and reports everything that is wrong with it at once; Plan adds what
+// the bench offers. Grids are exact: angles are whole micro-arcseconds, so 0 deg to 1 deg by
+// 0.1 deg are eleven points and the last is 1 deg. The number of points and visits is worked out by
+// arithmetic and bounded before any of them exists. The same text and the same bench give the same
+// plan, for ever, because a resumed run works its plan out again.
+//
+// It refuses what it does not act on: the keys of the format that come later, a step that does not
+// divide its range (naming the ends that would do), a step that is negative or zero, and a dwell
+// that stops on coincidences, which would bias the efficiency measured.
+package recipe
+
+import (
+	"fmt"
+	"math/big"
+	"regexp"
+	"strconv"
+	"time"
+
+	"gemel/drivers"
+	"gemel/protocol/strict"
+	"gemel/scan"
+)
+
+// MaxVisits bounds points × times of one recipe.
+const MaxVisits = 1_000_000
+
+// The other bounds of a recipe. They are far beyond use, and keep mistakes and strangers small.
+const (
+	maxEntries = 6
+	maxList    = 10_000
+	maxTimes   = 100_000
+	maxSlices  = 10_000
+	minDwell   = time.Millisecond
+	maxDwell   = 24 * time.Hour
+	maxRetries = 100
+)
+
+// Order is how the points of the sweep follow one another.
+type Order string
+
+// The orders. Lines run as their entry is written: downwards when from lies above to.
+const (
+	Ascending  Order = "ascending"  // every line in the same direction
+	Serpentine Order = "serpentine" // every second inner line backwards, every second pass too
+)
+
+// Recipe is a recipe that is sound in itself. Whether a bench can do it is Plan's to say.
+type Recipe struct {
+	File    string
+	Text    string
+	Title   string
+	Sweep   []Entry // outermost first; empty: count where everything stands
+	Order   Order
+	Dwell   scan.Dwell
+	Repeat  scan.Repeat
+	Dark    *scan.Cadence
+	Trouble scan.Trouble
+
+	dwellAt, darkAt, darkDwellAt strict.Place
+}
+
+// Entry is one level of the sweep: the values of one axis or one setting.
+type Entry struct {
+	Axis    drivers.AxisName   // empty when it is a setting
+	Setting drivers.DeviceName // empty when it is an axis
+	Values  Values
+
+	nameAt strict.Place
+}
+
+// Load reads a recipe file.
+func Load(path string) (*Recipe, error) {
+	text, err := strict.ReadFile(path)
+	if err != nil {
+		return nil, err
+	}
+	return Parse(path, text)
+}
+
+// Parse reads a recipe. The name of the file is used in findings only. The error is a
+// *strict.Error with all findings.
+func Parse(file string, text []byte) (*Recipe, error) {
+	doc := strict.Parse(file, text)
+	m := doc.Root()
+	r := &Recipe{
+		File:   file,
+		Text:   string(text),
+		Title:  m.Need("title").Text(),
+		Order:  Order(m.Opt("order").Choice([]string{string(Ascending), string(Serpentine)}, string(Ascending))),
+		Repeat: readRepeat(m.Opt("repeat")),
+	}
+	r.Repeat.Serpentine = r.Order == Serpentine
+	sweep := m.Opt("sweep")
+	r.Sweep = readSweep(sweep)
+	dwell := m.Need("dwell")
+	r.Dwell, r.dwellAt = readDwell(dwell), dwell.Place()
+	dark := m.Opt("dark")
+	r.Dark, r.darkDwellAt, r.darkAt = readDark(dark)
+	r.Trouble = readTrouble(m.Opt("trouble"))
+	m.Later("background", "reference", "refine", "guards", "schedule", "result")
+	m.Done()
+	if visits := r.visits(); visits.Cmp(big.NewInt(MaxVisits)) > 0 {
+		sweep.Fail(fmt.Sprintf("%s points visited %d times are %s visits", r.points(), r.Repeat.Times, visits), fmt.Sprintf("at most %d", MaxVisits))
+	}
+	if err := doc.Err(); err != nil {
+		return nil, err
+	}
+	return r, nil
+}
+
+// Points is how many points the sweep has.
+func (r *Recipe) Points() int { return int(r.points().Int64()) }
+
+func (r *Recipe) points() *big.Int {
+	n := big.NewInt(1)
+	for _, e := range r.Sweep {
+		n.Mul(n, big.NewInt(int64(max(e.Values.Len(), 1))))
+	}
+	return n
+}
+
+func (r *Recipe) visits() *big.Int {
+	return new(big.Int).Mul(r.points(), big.NewInt(int64(r.Repeat.Times)))
+}
+
+func readSweep(v strict.Value) []Entry {
+	if v.Given() && v.IsList() && len(v.List(0, maxEntries)) == 0 && v.Good() {
+		v.Fail("an empty list", "axes or settings in it, or no key \"sweep\" to count where everything stands")
+		return nil
+	}
+	var entries []Entry
+	seen := map[string]bool{}
+	for _, item := range v.List(1, maxEntries) {
+		e, name, ok := readEntry(item.Map())
+		if !ok {
+			continue
+		}
+		if seen[name.Text()] {
+			name.Fail(strconv.Quote(name.Text())+" a second time", "each axis and each setting in one entry")
+			continue
+		}
+		seen[name.Text()] = true
+		entries = append(entries, e)
+	}
+	return entries
+}
+
+func readEntry(m strict.Map) (e Entry, name strict.Value, ok bool) {
+	axis, setting := m.Opt("axis"), m.Opt("setting")
+	m.Later("conjugate_of", "with")
+	switch {
+	case axis.Given() && setting.Given():
+		setting.Fail("an axis and a setting in one entry", "one of them; a second entry nests inside the first")
+	case axis.Given():
+		name, e.Axis = axis, drivers.AxisName(axis.Token())
+	case setting.Given():
+		name, e.Setting = setting, drivers.DeviceName(setting.Token())
+	case m.Given():
+		m.Need("axis")
+	}
+	e.nameAt = name.Place()
+	later := m.Has("conjugate_of") || m.Has("with")
+	e.Values = readValues(m, e.Axis != "", later)
+	m.Done()
+	return e, name, name.Good() && e.Values.Len() > 0
+}
+
+func readRepeat(v strict.Value) scan.Repeat {
+	r := scan.Repeat{Times: 1}
+	if !v.Given() {
+		return r
+	}
+	m := v.Map()
+	r.Times = int(m.Need("times").Int(1, maxTimes, 1))
+	r.InPlace = m.Opt("as").Choice([]string{"passes", "in_place"}, "passes") == "in_place"
+	m.Done()
+	return r
+}
+
+func readDwell(v strict.Value) scan.Dwell {
+	if !v.IsMap() {
+		t := v.Duration(minDwell, maxDwell)
+		return scan.Dwell{Time: t, Slice: t}
+	}
+	m := v.Map()
+	// Inverse binomial sampling: n/N overestimates the chance (Haldane 1945, recalled from memory).
+	m.Refuse("a dwell that ends on a number of coincidences",
+		"a fixed time: ending a count on its own success favours lucky stretches, so the efficiency comes out too high; ending on trigger counts (heralds) does not, and will come",
+		"coincidences", "pairs")
+	m.Later("heralds", "at_most")
+	foreign := m.Has("coincidences") || m.Has("pairs") || m.Has("heralds")
+	var d scan.Dwell
+	if t := m.Opt("time"); t.Given() || !foreign {
+		d.Time = m.Need("time").Duration(minDwell, maxDwell)
+	}
+	slice := m.Opt("slice")
+	d.Slice = slice.Duration(minDwell, maxDwell, d.Time)
+	if slice.Good() && d.Time > 0 {
+		switch n := (d.Time + d.Slice - 1) / d.Slice; {
+		case d.Slice > d.Time:
+			slice.Failf("no more than the dwell of %s", strict.Span(d.Time))
+		case n > maxSlices:
+			slice.Fail(fmt.Sprintf("%d slices", n), fmt.Sprintf("at most %d", maxSlices))
+		}
+	}
+	m.Done()
+	return d
+}
+
+var everyPoints = regexp.MustCompile(`^([1-9][0-9]{0,5}) points?$`)
+
+func readDark(v strict.Value) (c *scan.Cadence, dwellAt, at strict.Place) {
+	if !v.Given() {
+		return nil, dwellAt, at
+	}
+	m := v.Map()
+	c = &scan.Cadence{}
+	dwell := m.Need("dwell")
+	c.Dwell = readDwell(dwell)
+	every := m.Opt("every")
+	if text := every.Text(); every.Good() {
+		if n := everyPoints.FindStringSubmatch(text); n != nil {
+			c.EveryPoints, _ = strconv.Atoi(n[1])
+		} else if c.Every = every.Duration(time.Second, maxDwell); every.Good() && c.Every <= c.Dwell.Time {
+			every.Failf("more than the dark's own dwell of %s, or nothing else would be counted", strict.Span(c.Dwell.Time))
+		}
+	}
+	also := m.Opt("also")
+	for _, item := range also.List(1, 2) {
+		switch item.Choice([]string{"start", "end"}) {
+		case "start":
+			c.AtStart = true
+		case "end":
+			c.AtEnd = true
+		}
+	}
+	if m.Given() && !every.Given() && !also.Given() {
+		m.Need("every")
+	}
+	m.Done()
+	return c, dwell.Place(), v.Place()
+}
+
+func readTrouble(v strict.Value) scan.Trouble {
+	t := scan.Trouble{Retries: 3, Then: scan.Hold}
+	if !v.Given() {
+		return t
+	}
+	m := v.Map()
+	t.Retries = int(m.Opt("retries").Int(0, maxRetries, 3))
+	t.Then = scan.Then(m.Opt("then").Choice([]string{string(scan.Hold), string(scan.Skip), string(scan.Stop)}, string(scan.Hold)))
+	m.Done()
+	return t
+}

@@ -1,0 +1,242 @@
+package recipe
+
+import (
+	"fmt"
+	"reflect"
+	"slices"
+	"strings"
+	"testing"
+	"time"
+
+	"gemel/drivers"
+	"gemel/protocol/unit"
+	"gemel/scan"
+)
+
+// bench is what every recipe here is planned for.
+func bench() Facts {
+	axis := func(name string, low, high unit.Angle) scan.Axis {
+		return scan.Axis{Name: drivers.AxisName(name), Low: low, High: high}
+	}
+	return Facts{
+		Axes:        []scan.Axis{axis("signal_arm", -unit.Degree, 8*unit.Degree), axis("idler_arm", -unit.Degree, 8*unit.Degree), axis("crystal_tilt", -5*unit.Degree, 5*unit.Degree)},
+		Settings:    []Setting{{Name: "delay", Unit: "ns", Low: -20, High: 20}, {Name: "oven", Unit: "Cel", Low: 10, High: 60}},
+		PumpShutter: true, GateMin: 10 * time.Millisecond, GateMax: 100 * time.Second,
+	}
+}
+
+func planOf(t *testing.T, body string) scan.Plan {
+	t.Helper()
+	r, err := Parse("r.yaml", []byte("title: A\ndwell: 1 s\n"+body))
+	if err != nil {
+		t.Fatal(err)
+	}
+	p, err := r.Plan(bench())
+	if err != nil {
+		t.Fatal(err)
+	}
+	return p
+}
+
+func anglesOf(p scan.Plan, axis drivers.AxisName) []string {
+	var out []string
+	for _, point := range p.Points {
+		for _, a := range point.Axes {
+			if a.Axis == axis {
+				out = append(out, strings.TrimSuffix(a.Angle.String(), " deg"))
+			}
+		}
+	}
+	return out
+}
+
+func TestGridsAreExactAndReachBothEnds(t *testing.T) {
+	for _, c := range []struct{ name, entry, want string }{
+		{"a tenth of a degree ends on the degree", "from: 0 deg, to: 1 deg, step: 0.1 deg", "0 0.1 0.2 0.3 0.4 0.5 0.6 0.7 0.8 0.9 1"},
+		{"downwards from above to", "from: 1 deg, to: 0 deg, step: 0.25 deg", "1 0.75 0.5 0.25 0"},
+		{"through zero", "from: -0.2 deg, to: 0.2 deg, step: 0.1 deg", "-0.2 -0.1 0 0.1 0.2"},
+		{"units may differ where they are exact", "from: 0 deg, to: 30 arcmin, step: 600 arcsec", "0 0.166666667 0.333333333 0.5"},
+		{"around a centre", "around: 2.864 deg, span: 0.4 deg, step: 0.1 deg", "2.664 2.764 2.864 2.964 3.064"},
+		{"around a centre with an odd number of steps", "around: 3 deg, span: 0.3 deg, step: 0.1 deg", "2.85 2.95 3.05 3.15"},
+		{"listed as they come", "at: [3 deg, 1 deg, 2 deg, 1 deg]", "3 1 2 1"},
+		{"one value", "at: 2.5 deg", "2.5"},
+		{"milliradians round once a point", "from: 0 mrad, to: 10 mrad, step: 2.5 mrad", "0 0.143239449 0.286478898 0.429718346 0.572957795"},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			got := strings.Join(anglesOf(planOf(t, "sweep: [{axis: signal_arm, "+c.entry+"}]\n"), "signal_arm"), " ")
+			if got != c.want {
+				t.Errorf("got  %s\nwant %s", got, c.want)
+			}
+		})
+	}
+	p := planOf(t, "sweep: [{axis: signal_arm, from: 0 deg, to: 1 deg, step: 0.1 deg}]\n")
+	if last := p.Points[10].Axes[0].Angle; last != unit.Degree {
+		t.Errorf("the last point is %d micro-arcseconds; want %d", last, unit.Degree)
+	}
+	p = planOf(t, "sweep: [{axis: signal_arm, from: 0 mrad, to: 100 mrad, step: 0.1 mrad}]\n")
+	if last, want := p.Points[1000].Axes[0].Angle, unit.Radians(0.1); last != want {
+		t.Errorf("the last of a thousand steps is %v; want %v", last, want)
+	}
+}
+
+func TestOrderOfNestedSweeps(t *testing.T) {
+	const sweep = "sweep:\n- {axis: crystal_tilt, at: [0 deg, 1 deg]}\n- {axis: signal_arm, at: [1 deg, 2 deg]}\n- {axis: idler_arm, from: 1 deg, to: 3 deg, step: 1 deg}\n"
+	line := func(p scan.Plan) string {
+		var s []string
+		for _, point := range p.Points {
+			var one string
+			for _, a := range point.Axes {
+				one += strings.TrimSuffix(a.Angle.String(), " deg")
+			}
+			s = append(s, one)
+		}
+		return strings.Join(s, " ")
+	}
+	if got, want := line(planOf(t, sweep)), "011 012 013 021 022 023 111 112 113 121 122 123"; got != want {
+		t.Errorf("ascending\ngot  %s\nwant %s", got, want)
+	}
+	p := planOf(t, sweep+"order: serpentine\nrepeat: {times: 2, as: passes}\n")
+	if got, want := line(p), "011 012 013 023 022 021 121 122 123 113 112 111"; got != want {
+		t.Errorf("serpentine\ngot  %s\nwant %s", got, want)
+	}
+	for i := 1; i < len(p.Points); i++ {
+		moved := 0
+		for k, a := range p.Points[i].Axes {
+			if a != p.Points[i-1].Axes[k] {
+				moved++
+			}
+		}
+		if moved != 1 {
+			t.Errorf("%d axes move between points %d and %d; want 1", moved, i-1, i)
+		}
+	}
+	if v := p.Visits(); v[12] != (scan.Visit{Point: 11, Visit: 2}) {
+		t.Errorf("the second pass begins with %v; want where the first one ended", v[12])
+	}
+}
+
+func TestSettingsAreSteppedInTheirOwnUnit(t *testing.T) {
+	for _, c := range []struct {
+		name, entry string
+		want        []float64
+	}{
+		{"the same unit", "setting: delay, from: -0.3 ns, to: 0.3 ns, step: 0.1 ns", []float64{-0.3, -0.2, -0.1, 0, 0.1, 0.2, 0.3}},
+		{"another unit of the kind", "setting: delay, from: 100 ps, to: 300 ps, step: 100 ps", []float64{0.1, 0.2, 0.3}},
+		{"a shifted scale", "setting: oven, from: 293.15 K, to: 295.15 K, step: 1 K", []float64{20, 21, 22}},
+		{"listed in several", "setting: delay, at: [1 ns, 500 ps]", []float64{1, 0.5}},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			var got []float64
+			for _, p := range planOf(t, "sweep: [{"+c.entry+"}]\n").Points {
+				got = append(got, p.Settings[0].Value)
+			}
+			if !slices.Equal(got, c.want) {
+				t.Errorf("got %v; want %v", got, c.want)
+			}
+		})
+	}
+}
+
+func TestARecipeWithoutSweepCountsWhereEverythingStands(t *testing.T) {
+	p := planOf(t, "repeat: {times: 100, as: in_place}\n")
+	if len(p.Points) != 1 || len(p.Points[0].Axes) != 0 || len(p.Visits()) != 100 {
+		t.Errorf("%d points with %v, %d visits; want one empty point visited 100 times", len(p.Points), p.Points[0], len(p.Visits()))
+	}
+}
+
+func TestAllKeysArriveInThePlan(t *testing.T) {
+	r, err := Parse("r.yaml", []byte(`
+title: "All of them: once"
+sweep: [{axis: signal_arm, at: 1 deg}]
+order: serpentine
+dwell: {time: 5 s, slice: 2 s}
+repeat: {times: 3, as: in_place}
+dark: {every: 10 points, dwell: {time: 60 s, slice: 20 s}, also: [start, end]}
+trouble: {retries: 1, then: skip}
+`))
+	if err != nil {
+		t.Fatal(err)
+	}
+	got, err := r.Plan(bench())
+	if err != nil {
+		t.Fatal(err)
+	}
+	want := scan.Plan{
+		Title:   "All of them: once",
+		Points:  []scan.Point{{Axes: []scan.AxisTarget{{Axis: "signal_arm", Angle: unit.Degree}}}},
+		Dwell:   scan.Dwell{Time: 5 * time.Second, Slice: 2 * time.Second},
+		Repeat:  scan.Repeat{Times: 3, InPlace: true, Serpentine: true},
+		Dark:    &scan.Cadence{Dwell: scan.Dwell{Time: time.Minute, Slice: 20 * time.Second}, EveryPoints: 10, AtStart: true, AtEnd: true},
+		Trouble: scan.Trouble{Retries: 1, Then: scan.Skip},
+	}
+	want.Points[0].Settings = []scan.SettingTarget{}
+	if !reflect.DeepEqual(got, want) {
+		t.Errorf("got  %+v\nwant %+v", got, want)
+	}
+}
+
+// TestAMillionVisitsAndNotOneMore also shows that the refusal costs nothing.
+func TestAMillionVisitsAndNotOneMore(t *testing.T) {
+	text := func(times int) []byte {
+		return fmt.Appendf(nil, "title: A\ndwell: 1 s\nsweep:\n- {axis: signal_arm, from: 0 deg, to: 0.999 deg, step: 0.001 deg}\n- {axis: idler_arm, from: 0 deg, to: 0.099 deg, step: 0.001 deg}\nrepeat: {times: %d}\n", times)
+	}
+	if _, err := Parse("r.yaml", text(10)); err != nil {
+		t.Error(err)
+	}
+	_, err := Parse("r.yaml", text(11))
+	if err == nil || !strings.Contains(err.Error(), "r.yaml:4:1: sweep: 100000 points visited 11 times are 1100000 visits; want at most 1000000") {
+		t.Errorf("got %v; want the visits refused", err)
+	}
+	huge := []byte("title: A\ndwell: 1 s\nsweep:\n" + strings.Repeat("", 0) +
+		"- {axis: a, from: 0 deg, to: 0.999 deg, step: 0.001 deg}\n- {axis: b, from: 0 deg, to: 0.999 deg, step: 0.001 deg}\n- {axis: c, from: 0 deg, to: 0.999 deg, step: 0.001 deg}\n")
+	refused := testing.AllocsPerRun(3, func() {
+		if _, err := Parse("r.yaml", huge); err == nil || !strings.Contains(err.Error(), "1000000000 points") {
+			t.Errorf("got %v; want a thousand million points refused", err)
+		}
+	})
+	if refused > 5000 {
+		t.Errorf("refusing took %.0f allocations; want a few hundred, whatever the number of points", refused)
+	}
+}
+
+func FuzzParse(f *testing.F) {
+	for _, body := range []string{
+		"title: A\ndwell: 1 s\nsweep: [{axis: signal_arm, from: 0 deg, to: 1 deg, step: 0.1 deg}]\norder: serpentine\n",
+		"title: A\ndwell: {time: 5 s, slice: 1 s}\nsweep: [{axis: signal_arm, around: 2.864 deg, span: 0.4 deg, step: 0.1 deg}, {setting: delay, at: [1 ns, 2 ns]}]\nrepeat: {times: 3, as: passes}\n",
+		"title: A\ndwell: 1 s\ndark: {every: 10 points, dwell: 1 s, also: [start]}\ntrouble: {retries: 0, then: stop}\n",
+		"title: A\ndwell: 1 s\nsweep: [{setting: oven, from: 293.15 K, to: 295.15 K, step: 1 K}]\n",
+		"title: A\ndwell: {coincidences: 5}\nsweep: [{axis: x, at: 1 mrad, conjugate_of: y}]\n",
+	} {
+		f.Add(body)
+	}
+	f.Fuzz(func(t *testing.T, text string) {
+		r, err := Parse("r.yaml", []byte(text))
+		if err != nil {
+			return
+		}
+		p, err := r.Plan(bench())
+		if err != nil {
+			return
+		}
+		again, err := Parse("other.yaml", []byte(r.Text))
+		if err != nil {
+			t.Fatalf("accepted once only: %v", err)
+		}
+		second, err := again.Plan(bench())
+		if err != nil || !reflect.DeepEqual(p, second) {
+			t.Fatalf("planned differently the second time (%v)", err)
+		}
+		if len(p.Points)*p.Repeat.Times > MaxVisits || len(p.Points) == 0 || p.Dwell.Time <= 0 || p.Dwell.Slice <= 0 {
+			t.Fatalf("plan of %d points × %d, dwell %+v", len(p.Points), p.Repeat.Times, p.Dwell)
+		}
+		for _, point := range p.Points {
+			for _, a := range point.Axes {
+				for _, axis := range bench().Axes {
+					if axis.Name == a.Axis && !axis.Limits(a.Angle) {
+						t.Fatalf("%s planned to %s", a.Axis, a.Angle)
+					}
+				}
+			}
+		}
+	})
+}
