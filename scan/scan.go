@@ -111,8 +111,9 @@ const (
 
 // Trouble says how often a reading is taken again, and what then.
 type Trouble struct {
-	Retries int // beyond the first attempt
-	Then    Then
+	Retries     int // beyond the first attempt
+	Then        Then
+	GiveUpAfter time.Duration // bench time after which a hold that no person asked for fails the run; 0: the engine's default
 }
 
 // Axis is what route and engine must know of one axis. Angles are bench angles.

@@ -22,6 +22,11 @@ type Bench struct {
 	Pump      drivers.Shutter // nil: none, and darks are refused
 	Sensors   []drivers.Sensor
 	Settings  []drivers.Setting
+
+	// HomeOrder is the order in which a controller's axes search their zero, one after another.
+	HomeOrder map[drivers.DeviceName][]drivers.AxisName
+	// Unattended controllers may search for a lost zero with nobody there.
+	Unattended map[drivers.DeviceName]bool
 }
 
 // Detector is one detector behind a counter channel.

@@ -1,0 +1,162 @@
+package engine
+
+import (
+	"context"
+	"fmt"
+	"time"
+
+	"gemel/drivers"
+	"gemel/protocol/unit"
+	"gemel/scan"
+	"gemel/scan/route"
+)
+
+// notThere is an axis that does not stand where it should. It is a reason to try again.
+type notThere struct {
+	axis   drivers.AxisName
+	angle  unit.Angle
+	want   unit.Angle
+	tol    unit.Angle
+	tries  int
+	during string
+}
+
+func (n *notThere) Error() string {
+	return fmt.Sprintf("%s: stands at %s deg %s; want %s ± %s deg", n.axis, n.angle.Fixed(4), n.during, n.want.Fixed(4), n.tol.Fixed(4))
+}
+
+// proveTries is how often axes are sent again to a target that they did not reach.
+const proveTries = 3
+
+// where asks every controller for its angles.
+func (e *Engine) where(ctx context.Context) (map[drivers.AxisName]unit.Angle, error) {
+	all := map[drivers.AxisName]unit.Angle{}
+	for _, s := range e.Bench.Stages {
+		got, err := s.Where(ctx)
+		if err != nil {
+			return nil, err
+		}
+		for axis, angle := range got {
+			all[axis] = angle
+		}
+	}
+	return all, nil
+}
+
+// goTo brings axes to their targets and proves it. Axes that stand there already, sent and proved
+// before, are not moved again. The returned angles are of all axes of the bench.
+func (e *Engine) goTo(ctx context.Context, targets []scan.AxisTarget) (map[drivers.AxisName]unit.Angle, error) {
+	at, err := e.where(ctx)
+	if err != nil {
+		return nil, err
+	}
+	for try := 1; ; try++ {
+		due := e.due(at, targets)
+		if len(due) == 0 {
+			break
+		}
+		if try > proveTries {
+			a := e.axis(due[0].Axis)
+			return nil, &notThere{axis: a.Name, angle: at[a.Name], want: due[0].Angle, tol: a.Tolerance, during: fmt.Sprintf("after %d tries", proveTries)}
+		}
+		if err := e.move(ctx, at, due); err != nil {
+			return nil, err
+		}
+		if at, err = e.where(ctx); err != nil {
+			return nil, err
+		}
+		for _, t := range due {
+			if a := e.axis(t.Axis); (at[t.Axis] - t.Angle).Abs() <= a.Tolerance {
+				e.commanded[t.Axis] = t.Angle
+			}
+		}
+	}
+	for _, a := range e.Bench.Axes {
+		if _, known := e.commanded[a.Name]; !known {
+			e.commanded[a.Name] = at[a.Name] // never sent anywhere: it has to stay where it was found
+		}
+	}
+	e.step(StepProved)
+	return at, e.inPlace(at, "before the dwell")
+}
+
+// inPlace says whether every axis stands where it was sent or found.
+func (e *Engine) inPlace(at map[drivers.AxisName]unit.Angle, during string) error {
+	for _, a := range e.Bench.Axes {
+		want, known := e.commanded[a.Name]
+		if !known {
+			continue
+		}
+		if (at[a.Name] - want).Abs() > a.Tolerance {
+			delete(e.commanded, a.Name) // so that the next attempt sends it again
+			return &notThere{axis: a.Name, angle: at[a.Name], want: want, tol: a.Tolerance, during: during}
+		}
+	}
+	return nil
+}
+
+// due lists the targets that axes must be moved to.
+func (e *Engine) due(at map[drivers.AxisName]unit.Angle, targets []scan.AxisTarget) []scan.AxisTarget {
+	var due []scan.AxisTarget
+	for _, t := range targets {
+		a := e.axis(t.Axis)
+		if want, known := e.commanded[t.Axis]; known && want == t.Angle && (at[t.Axis]-t.Angle).Abs() <= a.Tolerance {
+			continue
+		}
+		due = append(due, t)
+	}
+	return due
+}
+
+// move makes the legs that lead to the targets, with the detectors protected, and settles.
+func (e *Engine) move(ctx context.Context, at map[drivers.AxisName]unit.Angle, targets []scan.AxisTarget) error {
+	legs, err := route.Legs(e.Bench.Axes, at, targets)
+	if err != nil {
+		return &drivers.Error{Op: "move", Device: "route", Remedy: drivers.GiveUp, Err: err}
+	}
+	if err := e.protect(ctx); err != nil {
+		return err
+	}
+	e.step(StepMoving)
+	var settle time.Duration
+	for _, t := range targets {
+		delete(e.commanded, t.Axis)
+		settle = max(settle, e.axis(t.Axis).Settle)
+	}
+	for _, leg := range legs {
+		for _, s := range e.Bench.Stages {
+			part := map[drivers.AxisName]unit.Angle{}
+			for _, t := range leg {
+				if e.axis(t.Axis).Controller == s.Name() {
+					part[t.Axis] = t.Angle
+				}
+			}
+			if len(part) == 0 {
+				continue
+			}
+			if err := s.Move(ctx, part); err != nil {
+				return err
+			}
+		}
+	}
+	e.step(StepMoved)
+	return e.Bench.Pace.Wait(ctx, settle)
+}
+
+func (e *Engine) axis(name drivers.AxisName) scan.Axis {
+	for _, a := range e.Bench.Axes {
+		if a.Name == name {
+			return a
+		}
+	}
+	panic("engine: the plan names axis " + string(name) + ", which the bench does not have; it should have been refused")
+}
+
+func (e *Engine) settingUnit(name drivers.DeviceName) string {
+	for _, s := range e.Bench.Settings {
+		if s.Name() == name {
+			return s.Unit()
+		}
+	}
+	return ""
+}

@@ -1,0 +1,178 @@
+package engine
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"slices"
+
+	"gemel/protocol"
+)
+
+type orderKind string
+
+const (
+	stopOrder   orderKind = "stop"
+	holdOrder   orderKind = "hold"
+	resumeOrder orderKind = "resume"
+)
+
+// order is an operator's request on its way to Run's goroutine.
+type order struct {
+	kind  orderKind
+	who   string
+	reply protocol.RunReply
+	done  chan struct{} // closed when reply is valid, or when the engine ended without it
+	did   bool
+}
+
+// ErrOver is returned for requests to a run that this engine no longer executes.
+var ErrOver = errors.New("the run is no longer active")
+
+// Stop ends the run for ever. Hold makes it wait for Resume. Each returns when the request was
+// carried out and written down; a bench that is moving or counting is interrupted for it.
+func (e *Engine) Stop(ctx context.Context, who string) (protocol.RunReply, error) {
+	return e.request(ctx, stopOrder, who)
+}
+
+// Hold sets the open dwell aside, brings the bench to rest and waits.
+func (e *Engine) Hold(ctx context.Context, who string) (protocol.RunReply, error) {
+	return e.request(ctx, holdOrder, who)
+}
+
+// Resume clears the causes operator, trouble and restart. A guard, light or a full disk clear
+// themselves when the bench is well. Where an axis has lost its zero, a resume is a person's word
+// that it may search for it now.
+func (e *Engine) Resume(ctx context.Context, who string) (protocol.RunReply, error) {
+	return e.request(ctx, resumeOrder, who)
+}
+
+func (e *Engine) request(ctx context.Context, kind orderKind, who string) (protocol.RunReply, error) {
+	o := &order{kind: kind, who: who, done: make(chan struct{})}
+	e.mu.Lock()
+	if e.over {
+		e.mu.Unlock()
+		return protocol.RunReply{}, ErrOver
+	}
+	if kind == resumeOrder && e.snapshot.State == protocol.Running {
+		r := protocol.RunReply{Run: e.RunID, State: e.snapshot.State, Causes: []protocol.Cause{}, Recorded: true}
+		e.mu.Unlock()
+		return r, nil
+	}
+	e.pending = append(e.pending, o)
+	if e.cancelOp != nil {
+		e.cancelOp(errOrdered)
+	}
+	e.mu.Unlock()
+	select {
+	case <-ctx.Done():
+		return protocol.RunReply{}, context.Cause(ctx)
+	case <-o.done:
+	}
+	if !o.did {
+		return protocol.RunReply{}, ErrOver
+	}
+	return o.reply, nil
+}
+
+// operation gives a context that ends when ctx does or when an order comes in.
+func (e *Engine) operation(ctx context.Context) (context.Context, func()) {
+	op, cancel := context.WithCancelCause(ctx)
+	e.mu.Lock()
+	defer e.mu.Unlock()
+	e.cancelOp = cancel
+	if len(e.pending) > 0 {
+		cancel(errOrdered)
+	}
+	return op, func() {
+		e.mu.Lock()
+		defer e.mu.Unlock()
+		e.cancelOp = nil
+		cancel(nil)
+	}
+}
+
+func (e *Engine) takeOrder() *order {
+	e.mu.Lock()
+	defer e.mu.Unlock()
+	if len(e.pending) == 0 {
+		return nil
+	}
+	o := e.pending[0]
+	e.pending = e.pending[1:]
+	return o
+}
+
+// obey carries out one pending order. done says that there was one.
+func (e *Engine) obey(ctx context.Context) (done bool, err error) {
+	o := e.takeOrder()
+	if o == nil {
+		return false, nil
+	}
+	switch o.kind {
+	case stopOrder:
+		err = e.end(ctx, protocol.Stopped, "stopped by "+o.who, map[string]any{"who": o.who})
+	case holdOrder:
+		if !e.progress.holds(protocol.ByOperator) {
+			err = e.holdFor(ctx, protocol.ByOperator, "held by "+o.who, map[string]any{"who": o.who})
+		}
+	case resumeOrder:
+		if e.progress.State == protocol.Holding {
+			e.homing = true
+			err = e.release(ctx, "resumed by "+o.who, map[string]any{"who": o.who}, protocol.ByOperator, protocol.ByTrouble, protocol.ByRestart)
+		}
+	}
+	if err == nil || errors.Is(err, errEnded) {
+		e.answer(o, true)
+		e.step(StepAnswered)
+		if err == nil && o.kind == resumeOrder && e.progress.State == protocol.Running {
+			return true, e.getReady(ctx, true)
+		}
+	}
+	return true, err
+}
+
+func (e *Engine) answer(o *order, recorded bool) {
+	o.reply = protocol.RunReply{Run: e.RunID, State: e.progress.State, Causes: append([]protocol.Cause{}, e.progress.Causes...), Recorded: recorded}
+	o.did = true
+	close(o.done)
+}
+
+// holdFor adds a cause, after the rest state, and writes it.
+func (e *Engine) holdFor(ctx context.Context, cause protocol.Cause, text string, detail map[string]any) error {
+	bad := e.rest(ctx)
+	e.progress.heldAt = e.now()
+	return e.event(ctx, protocol.Held, text+withBad(bad), protocol.Holding, add(e.progress.Causes, cause), detail)
+}
+
+// release takes causes away. With none left the run is running again, and must be made ready.
+func (e *Engine) release(ctx context.Context, text string, detail map[string]any, causes ...protocol.Cause) error {
+	left := slices.DeleteFunc(slices.Clone(e.progress.Causes), func(c protocol.Cause) bool { return slices.Contains(causes, c) })
+	if len(left) == len(e.progress.Causes) {
+		return nil
+	}
+	state := protocol.Running
+	if len(left) > 0 {
+		state = protocol.Holding
+		text += fmt.Sprintf("; still held by %s", join(left))
+	}
+	return e.event(ctx, protocol.WentOn, text, state, left, detail)
+}
+
+func add(causes []protocol.Cause, c protocol.Cause) []protocol.Cause {
+	if slices.Contains(causes, c) {
+		return causes
+	}
+	return append(slices.Clone(causes), c)
+}
+
+func join(causes []protocol.Cause) string {
+	text := ""
+	for i, c := range causes {
+		if i > 0 {
+			text += ", "
+		}
+		text += string(c)
+	}
+	return text
+}

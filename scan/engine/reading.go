@@ -1,0 +1,359 @@
+package engine
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"time"
+
+	"gonum.org/v1/gonum/stat/distuv"
+
+	"gemel/drivers"
+	"gemel/protocol"
+	"gemel/scan"
+)
+
+// brightness is light that a detector must not see, or too little to be believed.
+type brightness struct {
+	detector string
+	rateHz   float64
+	limitHz  float64
+	floor    bool
+}
+
+func (b *brightness) Error() string {
+	if b.floor {
+		return fmt.Sprintf("%s counts %.4g /s, below its floor of %.4g /s: latched, paralysed or unplugged", b.detector, b.rateHz, b.limitHz)
+	}
+	return fmt.Sprintf("%s counts %.4g /s, above its trip rate of %.4g /s", b.detector, b.rateHz, b.limitHz)
+}
+
+// perform takes one reading, writes it, and decides what follows from how it went.
+func (e *Engine) perform(ctx context.Context, t task) error {
+	op, end := e.operation(ctx)
+	reading, err := e.take(op, t)
+	interrupted := op.Err() != nil
+	end()
+	if _, bright := errors.AsType[*brightness](err); bright {
+		e.protectNow(ctx)
+	}
+	if reading != nil {
+		if err != nil {
+			reading.Accepted = false
+			reading.Reason = err.Error()
+			if interrupted {
+				reading.Reason = "interrupted: " + context.Cause(op).Error()
+			}
+		}
+		e.step(StepJudged)
+		if werr := e.write(ctx, protocol.ReadingEntry, &reading.Head, reading, protocol.ReadingSchema); werr != nil {
+			return werr
+		}
+		e.progress.applyReading(reading)
+		e.publishSnapshot()
+	}
+	if werr := e.tellDeaf(ctx); werr != nil {
+		return werr
+	}
+	switch {
+	case interrupted:
+		return nil // turn sees the order, or the end
+	case err != nil:
+		return e.afterError(ctx, t, err)
+	case !reading.Accepted:
+		return e.again(ctx, t, reading.Reason)
+	}
+	return nil
+}
+
+// protectNow is the first thing that happens when a detector sees too much.
+func (e *Engine) protectNow(ctx context.Context) {
+	fresh, cancel := e.fresh(ctx, 5*time.Second)
+	defer cancel()
+	_ = e.protect(fresh) // the hold that follows passes the rest state, which tries again and says what failed
+}
+
+// take moves, proves, lights, counts and judges. The reading is nil as long as no gate was
+// opened. With an error it is what was counted until then, to be set aside.
+func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
+	var targets []scan.AxisTarget
+	r := &protocol.Reading{Kind: protocol.Dark, Simulated: e.simulated, Attempt: e.progress.attempts[t.key()] + 1,
+		Settings: []protocol.Setting{}, Sensors: []protocol.Sensor{}, Counts: []protocol.Count{}, Slices: []protocol.Slice{}, Angles: []protocol.Angle{}}
+	if t.kind == lightTask {
+		r.Kind, r.Point, r.Visit = protocol.Light, &t.visit.Point, &t.visit.Visit
+		targets = e.Plan.Points[t.visit.Point].Axes
+		if err := e.set(ctx, r, e.Plan.Points[t.visit.Point].Settings); err != nil {
+			return nil, err
+		}
+	}
+	before, err := e.goTo(ctx, targets)
+	if err != nil {
+		return nil, err
+	}
+	for _, a := range e.Bench.Axes {
+		r.Angles = append(r.Angles, protocol.Angle{Axis: string(a.Name), Target: e.commanded[a.Name], Before: before[a.Name], After: before[a.Name], Proof: string(a.Proof)})
+	}
+	if err := e.light(ctx, t.kind == lightTask); err != nil {
+		return nil, err
+	}
+	e.step(StepLit)
+	if err := e.glance(ctx, r); err != nil {
+		return orNil(r), err
+	}
+	watch := newWatch(e)
+	defer func() { e.unheard = watch.fail }()
+	watch.sample(ctx)
+	r.StartedAt = protocol.Time{Time: e.now()}
+	for _, gate := range t.dwell.Slices() {
+		slice, err := e.count(ctx, r, gate)
+		if err != nil {
+			r.EndedAt = protocol.Time{Time: e.now()}
+			r.Sensors = watch.sums()
+			return orNil(r), err
+		}
+		r.Slices = append(r.Slices, slice)
+		r.Counts = sum(r.Counts, slice.Counts, e.Bench.Tag)
+		r.GateSet += slice.GateSet
+		r.Gate += slice.Gate
+		r.EndedAt = protocol.Time{Time: e.now()}
+		e.step(StepGated)
+		watch.sample(ctx)
+		if err := e.judgeLight(r.Counts, r.Gate.Duration(), slice.Counts, slice.Gate.Duration()); err != nil {
+			r.Sensors = watch.sums()
+			return r, err
+		}
+	}
+	r.Sensors = watch.sums()
+	after, err := e.where(ctx)
+	if err != nil {
+		return r, err
+	}
+	for i, a := range e.Bench.Axes {
+		r.Angles[i].After = after[a.Name]
+	}
+	if err := e.readBack(ctx, r); err != nil {
+		return r, err
+	}
+	r.Scatter = e.scatter(r.Slices)
+	if err := e.inPlace(after, "after the dwell"); err != nil {
+		r.Reason = err.Error()
+		return r, nil
+	}
+	r.Accepted = r.Reason == ""
+	return r, nil
+}
+
+// orNil drops a reading in which no gate was opened: there is nothing to set aside.
+func orNil(r *protocol.Reading) *protocol.Reading {
+	if len(r.Slices) == 0 && r.Glance == nil && r.LostGates == 0 {
+		return nil
+	}
+	if r.StartedAt.IsZero() {
+		r.StartedAt = r.EndedAt
+	}
+	return r
+}
+
+// count takes one slice, and notes in the reading what speaks against it.
+func (e *Engine) count(ctx context.Context, r *protocol.Reading, gate time.Duration) (protocol.Slice, error) {
+	g, err := e.Bench.Counter.Count(ctx, gate)
+	if err != nil {
+		if d, ok := errors.AsType[*drivers.Error](err); ok && d.GateOpened {
+			r.LostGates++
+		}
+		return protocol.Slice{}, err
+	}
+	slice := protocol.Slice{GateSet: protocol.Seconds(g.Set), Gate: protocol.Seconds(g.Length), Raw: g.Raw}
+	for _, c := range e.Bench.Counter.Channels() {
+		slice.Counts = append(slice.Counts, protocol.Count{Channel: string(c), Counts: g.Counts[c]})
+	}
+	switch {
+	case g.Overflow:
+		r.Reason = "a counter channel ran over"
+	case g.Doubtful:
+		r.Reason = "the counter doubts its gate time"
+	case (g.Length-g.Set).Abs() > g.Set/1000 || (g.Set-gate).Abs() > gate/100:
+		r.Reason = fmt.Sprintf("a gate of the wrong length: asked %s, set %s, counted %s", gate, g.Set, g.Length)
+	}
+	return slice, nil
+}
+
+// glance looks at the light for a moment before the dwell, where a detector asks for it.
+func (e *Engine) glance(ctx context.Context, r *protocol.Reading) error {
+	var gate time.Duration
+	for _, d := range e.Bench.Detectors {
+		gate = max(gate, d.Glance)
+	}
+	if gate == 0 {
+		return nil
+	}
+	slice, err := e.count(ctx, r, gate)
+	r.EndedAt = protocol.Time{Time: e.now()}
+	if err != nil {
+		return err
+	}
+	r.Reason = "" // what speaks against a glance does not speak against the dwell
+	r.Glance = &slice
+	return e.judgeLight(slice.Counts, slice.Gate.Duration(), slice.Counts, slice.Gate.Duration())
+}
+
+// floorCounts is how many counts a floor must predict before too few of them mean something: the
+// chance of none at all is then exp(-20).
+const floorCounts = 20
+
+// judgeLight compares rates with trip and floor: the last gate with the trip, since light must be
+// seen at once; all gates of the dwell with the floor, since little light needs time.
+func (e *Engine) judgeLight(all []protocol.Count, allTime time.Duration, last []protocol.Count, lastTime time.Duration) error {
+	for _, d := range e.Bench.Detectors {
+		if rate := rateOf(last, d.Channel, lastTime); d.TripHz > 0 && rate > d.TripHz {
+			return &brightness{detector: d.Name, rateHz: rate, limitHz: d.TripHz}
+		}
+		if rate := rateOf(all, d.Channel, allTime); d.FloorHz > 0 && d.FloorHz*allTime.Seconds() >= floorCounts && rate < d.FloorHz/2 {
+			return &brightness{detector: d.Name, rateHz: rate, limitHz: d.FloorHz, floor: true}
+		}
+	}
+	return nil
+}
+
+func rateOf(counts []protocol.Count, channel drivers.Channel, gate time.Duration) float64 {
+	for _, c := range counts {
+		if c.Channel == string(channel) && gate > 0 {
+			return float64(c.Counts) / gate.Seconds()
+		}
+	}
+	return 0
+}
+
+// sum adds a slice's counts, except the tag, which is a name and no amount.
+func sum(total, slice []protocol.Count, tag drivers.Channel) []protocol.Count {
+	if len(total) == 0 {
+		return append(total, slice...)
+	}
+	for i, c := range slice {
+		if c.Channel == string(tag) {
+			total[i].Counts = c.Counts
+		} else {
+			total[i].Counts += c.Counts
+		}
+	}
+	return total
+}
+
+// scatter tests whether the slices of the singles channels scatter as counts do, both ways: too
+// much, and too little. The channel that scatters least plausibly is named. Pearson's chi-square
+// against equal rates. It marks a dwell and rejects none: a laser's own noise scatters too.
+func (e *Engine) scatter(slices []protocol.Slice) *protocol.Scatter {
+	if len(slices) < 2 {
+		return nil
+	}
+	var worst *protocol.Scatter
+	for _, d := range e.Bench.Detectors {
+		var n, t float64
+		for _, s := range slices {
+			n += rateOf(s.Counts, d.Channel, time.Second)
+			t += s.Gate.Duration().Seconds()
+		}
+		if n < 5*float64(len(slices)) || t == 0 {
+			continue // too few for chi-square to mean anything
+		}
+		chi := 0.0
+		for _, s := range slices {
+			want := n * s.Gate.Duration().Seconds() / t
+			got := rateOf(s.Counts, d.Channel, time.Second)
+			chi += (got - want) * (got - want) / want
+		}
+		freedom := len(slices) - 1
+		below := distuv.ChiSquared{K: float64(freedom)}.CDF(chi)
+		above := distuv.ChiSquared{K: float64(freedom)}.Survival(chi)
+		p := min(1, 2*min(below, above))
+		if worst == nil || p < worst.P {
+			worst = &protocol.Scatter{Channel: string(d.Channel), ChiSquare: chi, Freedom: freedom, P: p}
+		}
+	}
+	return worst
+}
+
+// set brings settings to their targets and notes what was read back.
+func (e *Engine) set(ctx context.Context, r *protocol.Reading, targets []scan.SettingTarget) error {
+	for _, t := range targets {
+		s := e.setting(t.Setting)
+		value, err := s.Set(ctx, t.Value)
+		if err != nil {
+			return err
+		}
+		r.Settings = append(r.Settings, protocol.Setting{Name: string(t.Setting), Target: t.Value, Before: value, After: value, Unit: s.Unit()})
+	}
+	return nil
+}
+
+func (e *Engine) readBack(ctx context.Context, r *protocol.Reading) error {
+	for i := range r.Settings {
+		value, err := e.setting(drivers.DeviceName(r.Settings[i].Name)).Get(ctx)
+		if err != nil {
+			return err
+		}
+		r.Settings[i].After = value
+	}
+	return nil
+}
+
+func (e *Engine) setting(name drivers.DeviceName) drivers.Setting {
+	for _, s := range e.Bench.Settings {
+		if s.Name() == name {
+			return s
+		}
+	}
+	panic("engine: the plan names setting " + string(name) + ", which the bench does not have; it should have been refused")
+}
+
+// watch sums up the sensors over a dwell.
+type watch struct {
+	e    *Engine
+	sum  []protocol.Sensor
+	fail error
+}
+
+func newWatch(e *Engine) *watch {
+	w := &watch{e: e}
+	for _, s := range e.Bench.Sensors {
+		w.sum = append(w.sum, protocol.Sensor{Sensor: string(s.Name()), Unit: s.Unit()})
+	}
+	return w
+}
+
+// sample reads every sensor once. A sensor that does not answer is left out and remembered: what
+// was counted is true without it.
+func (w *watch) sample(ctx context.Context) {
+	for i, s := range w.e.Bench.Sensors {
+		if _, deaf := w.e.deaf[s.Name()]; deaf {
+			continue
+		}
+		v, err := s.Read(ctx)
+		if ctx.Err() != nil {
+			return
+		}
+		if err != nil {
+			w.e.deaf[s.Name()] = w.e.now()
+			w.fail = errors.Join(w.fail, err)
+			continue
+		}
+		q := &w.sum[i]
+		if q.Samples == 0 {
+			q.Minimum, q.Maximum = v, v
+		}
+		q.Minimum, q.Maximum = min(q.Minimum, v), max(q.Maximum, v)
+		q.Mean += (v - q.Mean) / float64(q.Samples+1)
+		q.Samples++
+	}
+}
+
+// sums returns the sensors that answered at least once.
+func (w *watch) sums() []protocol.Sensor {
+	out := []protocol.Sensor{}
+	for _, q := range w.sum {
+		if q.Samples > 0 {
+			out = append(out, q)
+		}
+	}
+	return out
+}

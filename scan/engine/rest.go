@@ -1,0 +1,164 @@
+package engine
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"strings"
+	"time"
+
+	"gemel/drivers"
+)
+
+// rest brings the bench to the rest state: light off, detectors protected, motion and counting
+// stopped. It tries everything once without waiting for dead lines, so that one dead line cannot
+// keep the others open, and then reconnects for what is left. It runs under a context of its own,
+// because the one that ended the work must not keep the shutter open. The text says what could
+// not be reached; it is empty when all was.
+func (e *Engine) rest(ctx context.Context) (bad string) {
+	defer e.step(StepRested)
+	fresh, cancel := e.fresh(ctx, 20*time.Second)
+	defer cancel()
+	jobs := e.restJobs()
+	var left []restJob
+	for _, j := range jobs {
+		within, done := context.WithTimeout(fresh, e.Bench.Pace.Real(5*time.Second)+time.Second)
+		j.err = j.do(within)
+		done()
+		if j.err != nil {
+			left = append(left, j)
+		}
+	}
+	var words []string
+	for _, j := range left {
+		within, done := context.WithTimeout(fresh, e.Bench.Pace.Real(5*time.Second)+2*time.Second)
+		err := j.device.Connect(within)
+		if err == nil {
+			err = j.do(within)
+		}
+		done()
+		if err != nil {
+			words = append(words, fmt.Sprintf("%s: %v", j.what, err))
+		}
+	}
+	e.progress.restBad = strings.Join(words, "; ")
+	e.publishSnapshot()
+	return e.progress.restBad
+}
+
+type restJob struct {
+	what   string
+	device drivers.Device
+	do     func(context.Context) error
+	err    error
+}
+
+// restJobs lists what the rest state consists of, the most urgent first.
+func (e *Engine) restJobs() []restJob {
+	var jobs []restJob
+	for _, s := range e.protectors() {
+		jobs = append(jobs, restJob{"protect by " + string(s.Name()), s, func(ctx context.Context) error { return shut(ctx, s) }, nil})
+	}
+	if s := e.Bench.Pump; s != nil {
+		jobs = append(jobs, restJob{"close " + string(s.Name()), s, func(ctx context.Context) error { return shut(ctx, s) }, nil})
+	}
+	for _, s := range e.Bench.Stages {
+		jobs = append(jobs, restJob{"stop " + string(s.Name()), s, s.Stop, nil})
+	}
+	if c := e.Bench.Counter; c != nil {
+		jobs = append(jobs, restJob{"stop counting on " + string(c.Name()), c, c.Abort, nil})
+	}
+	return jobs
+}
+
+// shut closes a shutter and believes only its answer.
+func shut(ctx context.Context, s drivers.Shutter) error {
+	if err := s.Close(ctx); err != nil {
+		return err
+	}
+	blade, err := s.State(ctx)
+	if err != nil {
+		return err
+	}
+	if blade.Open {
+		return &drivers.Error{Op: "close", Device: s.Name(), Remedy: drivers.Retry, Err: errors.New("says it is open after it was told to close")}
+	}
+	return nil
+}
+
+func (e *Engine) protectors() []drivers.Shutter {
+	var all []drivers.Shutter
+	for _, d := range e.Bench.Detectors {
+		if d.Protect == nil {
+			continue
+		}
+		known := false
+		for _, s := range all {
+			known = known || s == d.Protect
+		}
+		if !known {
+			all = append(all, d.Protect)
+		}
+	}
+	return all
+}
+
+// protect closes the detectors' shutters only: the least that must happen at once.
+func (e *Engine) protect(ctx context.Context) error {
+	var errs []error
+	for _, s := range e.protectors() {
+		errs = append(errs, shut(ctx, s))
+	}
+	return errors.Join(errs...)
+}
+
+// light sets the shutters for a reading: the pump open or closed, the detectors seeing. The pump
+// comes first, so that nothing is seen before it is as it should be.
+func (e *Engine) light(ctx context.Context, pump bool) error {
+	if s := e.Bench.Pump; s != nil {
+		if err := setShutter(ctx, s, pump); err != nil {
+			return err
+		}
+	}
+	var ready time.Duration
+	for _, d := range e.Bench.Detectors {
+		if d.Protect == nil {
+			continue
+		}
+		blade, err := d.Protect.State(ctx)
+		if err != nil {
+			return err
+		}
+		if blade.Open {
+			continue
+		}
+		if err := setShutter(ctx, d.Protect, true); err != nil {
+			return err
+		}
+		ready = max(ready, d.Ready)
+	}
+	return e.Bench.Pace.Wait(ctx, ready)
+}
+
+func setShutter(ctx context.Context, s drivers.Shutter, open bool) error {
+	blade, err := s.State(ctx)
+	if err != nil {
+		return err
+	}
+	if blade.Open == open {
+		return nil
+	}
+	if !open {
+		return shut(ctx, s)
+	}
+	if err := s.Open(ctx); err != nil {
+		return err
+	}
+	if blade, err = s.State(ctx); err != nil {
+		return err
+	}
+	if !blade.Open {
+		return &drivers.Error{Op: "open", Device: s.Name(), Remedy: drivers.Retry, Err: errors.New("says it is closed after it was told to open")}
+	}
+	return nil
+}

@@ -1,0 +1,351 @@
+package engine
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"time"
+
+	"gemel/drivers"
+	"gemel/protocol"
+	"gemel/scan"
+)
+
+// afterError does what an error's remedy asks for, and then takes the reading again or not.
+func (e *Engine) afterError(ctx context.Context, t task, err error) error {
+	if b, ok := errors.AsType[*brightness](err); ok {
+		if e.progress.attempts[t.key()] >= e.Plan.Trouble.Retries {
+			return e.again(ctx, t, b.Error()) // it is bright here each time: the arm may look into the pump
+		}
+		detail := keyDetail(t)
+		detail["detector"], detail["rate_hz"], detail["limit_hz"] = b.detector, b.rateHz, b.limitHz
+		return e.holdFor(ctx, protocol.ByLight, "held: "+b.Error(), detail)
+	}
+	if _, ok := errors.AsType[*notThere](err); ok {
+		return e.again(ctx, t, err.Error())
+	}
+	switch drivers.RemedyOf(err) {
+	case drivers.Retry:
+		return e.again(ctx, t, err.Error())
+	case drivers.Reconnect, drivers.HomeAgain:
+		if werr := e.trouble(ctx, err); werr != nil {
+			return werr
+		}
+		if werr := e.getReady(ctx, false); werr != nil || e.progress.State != protocol.Running {
+			return werr
+		}
+		return e.again(ctx, t, err.Error())
+	default:
+		return e.holdFor(ctx, protocol.ByTrouble, "held: "+err.Error(), errorDetail(err))
+	}
+}
+
+// again counts a failed attempt, and does what the recipe says when there were enough.
+func (e *Engine) again(ctx context.Context, t task, reason string) error {
+	detail := keyDetail(t)
+	detail["reason"] = reason
+	failed := e.progress.attempts[t.key()] + 1
+	detail["attempt"] = failed
+	if failed <= e.Plan.Trouble.Retries {
+		return e.note(ctx, protocol.TakenAgain, fmt.Sprintf("taken again: %s", reason), detail)
+	}
+	switch e.Plan.Trouble.Then {
+	case scan.Skip:
+		return e.note(ctx, protocol.SetAside, fmt.Sprintf("given up after %d attempts: %s", failed, reason), detail)
+	case scan.Stop:
+		return e.end(ctx, protocol.Failed, fmt.Sprintf("failed after %d attempts at one reading: %s", failed, reason), detail)
+	default:
+		return e.holdFor(ctx, protocol.ByTrouble, fmt.Sprintf("held after %d attempts: %s", failed, reason), detail)
+	}
+}
+
+func errorDetail(err error) map[string]any {
+	detail := map[string]any{}
+	if d, ok := errors.AsType[*drivers.Error](err); ok {
+		detail["device"], detail["op"], detail["remedy"] = string(d.Device), d.Op, d.Remedy.String()
+	}
+	return detail
+}
+
+func (e *Engine) trouble(ctx context.Context, err error) error {
+	return e.note(ctx, protocol.Trouble, err.Error(), errorDetail(err))
+}
+
+// connectPatience bounds how long a lost line is waited for before a person is asked.
+const connectPatience = 10 * time.Minute
+
+// getReady connects what is not connected, after which the bench is in the rest state, and makes
+// sure of every zero and every angle. all says to do so though nothing is known to be wrong. The
+// run is left holding when a person is needed.
+func (e *Engine) getReady(ctx context.Context, all bool) error {
+	op, end := e.operation(ctx)
+	defer end()
+	deadline := e.now().Add(min(connectPatience, e.patience))
+	for pause := time.Second; ; pause = min(2*pause, 30*time.Second) {
+		err := e.connectAll(op)
+		if err == nil {
+			break
+		}
+		if op.Err() != nil {
+			return nil
+		}
+		if drivers.RemedyOf(err) == drivers.GiveUp || e.now().After(deadline) {
+			return e.holdFor(ctx, protocol.ByTrouble, "held: "+err.Error(), errorDetail(err))
+		}
+		if e.Bench.Pace.Wait(op, pause) != nil {
+			return nil
+		}
+	}
+	clear(e.commanded) // angles are proved anew
+	clear(e.deaf)
+	if err := e.findZero(ctx, op); err != nil || e.progress.State != protocol.Running || op.Err() != nil {
+		return err
+	}
+	if _, err := e.where(op); err != nil && op.Err() == nil {
+		if !all && drivers.RemedyOf(err) <= drivers.Reconnect {
+			return nil // the next attempt at the reading meets it again, and is counted
+		}
+		return e.holdFor(ctx, protocol.ByTrouble, "held: "+err.Error(), errorDetail(err))
+	}
+	return nil
+}
+
+// connectAll connects every device, with all light off first.
+func (e *Engine) connectAll(ctx context.Context) error {
+	for _, j := range e.restJobs() {
+		if err := j.device.Connect(ctx); err != nil {
+			return err
+		}
+		if err := j.do(ctx); err != nil {
+			return err
+		}
+	}
+	for _, s := range e.Bench.Settings {
+		if err := s.Connect(ctx); err != nil {
+			return err
+		}
+	}
+	for _, s := range e.Bench.Sensors {
+		if err := s.Connect(ctx); err != nil {
+			if ctx.Err() != nil {
+				return err
+			}
+			e.deaf[s.Name()] = e.now()
+		}
+	}
+	return nil
+}
+
+// findZero makes sure that every axis knows its zero. A search moves through angles nobody chose,
+// so it waits for a person's word unless the bench file gives it.
+func (e *Engine) findZero(ctx, op context.Context) error {
+	for _, s := range e.Bench.Stages {
+		homed, err := s.Homed(op)
+		if op.Err() != nil {
+			return nil
+		}
+		if err != nil {
+			return e.holdFor(ctx, protocol.ByTrouble, "held: "+err.Error(), errorDetail(err))
+		}
+		var lost []drivers.AxisName
+		for _, a := range e.homeOrder(s) {
+			if !homed[a] {
+				lost = append(lost, a)
+			}
+		}
+		if len(lost) == 0 {
+			continue
+		}
+		detail := map[string]any{"controller": string(s.Name()), "axes": lost}
+		if !e.homing && !e.Bench.Unattended[s.Name()] {
+			return e.holdFor(ctx, protocol.ByTrouble, fmt.Sprintf("held: %s has lost the zero of %v; resume when the arms may search for it, with somebody there", s.Name(), lost), detail)
+		}
+		if err := s.Home(op, lost); err != nil {
+			if op.Err() != nil {
+				return nil
+			}
+			return e.holdFor(ctx, protocol.ByTrouble, "held: the search for the zero failed: "+err.Error(), errorDetail(err))
+		}
+		if err := e.note(ctx, protocol.HomedEvent, fmt.Sprintf("%s found the zero of %v", s.Name(), lost), detail); err != nil {
+			return err
+		}
+	}
+	e.homing = false
+	return nil
+}
+
+// homeOrder is the order the bench file declares, or the controller's own.
+func (e *Engine) homeOrder(s drivers.Stage) []drivers.AxisName {
+	if order := e.Bench.HomeOrder[s.Name()]; len(order) > 0 {
+		return order
+	}
+	return s.Axes()
+}
+
+// tellDeaf writes once that a sensor fell silent, and tries those that did again after a while.
+func (e *Engine) tellDeaf(ctx context.Context) error {
+	if err := e.unheard; err != nil {
+		e.unheard = nil
+		if werr := e.note(ctx, protocol.Trouble, "a sensor does not answer; readings go on without it: "+err.Error(), errorDetail(err)); werr != nil {
+			return werr
+		}
+	}
+	for _, s := range e.Bench.Sensors {
+		last, deaf := e.deaf[s.Name()]
+		if !deaf || e.now().Sub(last) < time.Minute {
+			continue
+		}
+		within, cancel := context.WithTimeout(ctx, e.Bench.Pace.Real(2*time.Second)+time.Second)
+		err := s.Connect(within)
+		cancel()
+		if err != nil {
+			e.deaf[s.Name()] = e.now()
+			continue
+		}
+		delete(e.deaf, s.Name())
+	}
+	return nil
+}
+
+// append writes one entry, and waits while there is no room. The rest state comes first then; the
+// hold itself can only be told afterwards.
+func (e *Engine) append(ctx context.Context, entry protocol.Entry) error {
+	err := e.Log.Append(context.WithoutCancel(ctx), entry)
+	if err == nil {
+		return nil
+	}
+	if errors.Is(err, ErrConflict) {
+		return err
+	}
+	since := e.now()
+	e.rest(ctx)
+	e.showHolding(protocol.ByStorage, "held: nothing can be written: "+err.Error())
+	for pause := time.Second; ; pause = min(2*pause, 30*time.Second) {
+		if ctx.Err() != nil {
+			return fmt.Errorf("not recorded: %w", err)
+		}
+		op, end := e.operation(ctx)
+		_ = e.Bench.Pace.Wait(op, pause)
+		end()
+		if err = e.Log.Append(context.WithoutCancel(ctx), entry); err == nil {
+			e.progress.storageHeld = true
+			e.publishSnapshot()
+			return nil
+		}
+		if errors.Is(err, ErrConflict) {
+			return err
+		}
+		if o := e.takeOrder(); o != nil {
+			// Done first, answered "done, not recorded": the bench is at rest already.
+			e.answerUnrecorded(o)
+			if o.kind == stopOrder {
+				return fmt.Errorf("stopped by %s while nothing could be written: %w", o.who, err)
+			}
+		}
+		if e.now().Sub(since) > e.patience {
+			return fmt.Errorf("gave up after %s: %w", e.patience, err)
+		}
+	}
+}
+
+func (e *Engine) answerUnrecorded(o *order) {
+	o.reply = protocol.RunReply{Run: e.RunID, State: protocol.Holding, Causes: []protocol.Cause{protocol.ByStorage}}
+	if o.kind == stopOrder {
+		o.reply.State, o.reply.Causes = protocol.Stopped, []protocol.Cause{}
+	}
+	o.did = true
+	close(o.done)
+}
+
+func (e *Engine) showHolding(cause protocol.Cause, reason string) {
+	e.mu.Lock()
+	defer e.mu.Unlock()
+	e.snapshot.State, e.snapshot.Causes, e.snapshot.Reason, e.snapshot.TimeLeft = protocol.Holding, add(e.progress.Causes, cause), reason, nil
+}
+
+// lookAgain is the time between two looks at a light that was too bright.
+const lookAgain = 30 * time.Second
+
+// waitOut waits while the run holds: for an operator, or for what mends itself.
+func (e *Engine) waitOut(ctx context.Context) error {
+	p := &e.progress
+	if !p.holds(protocol.ByOperator) && e.now().Sub(p.heldAt) > e.patience {
+		return e.end(ctx, protocol.Failed, fmt.Sprintf("failed: nobody came within %s; it was %s", e.patience, p.Reason), nil)
+	}
+	pause := time.Minute
+	if p.holds(protocol.ByLight) {
+		pause = lookAgain
+	}
+	op, end := e.operation(ctx)
+	err := e.Bench.Pace.Wait(op, pause)
+	end()
+	if err != nil || !p.holds(protocol.ByLight) {
+		return nil
+	}
+	return e.lookAtLight(ctx)
+}
+
+// lookAtLight opens the detectors for a moment, with the pump closed, and ends the hold when the
+// light is well. What it saw is written as a check.
+func (e *Engine) lookAtLight(ctx context.Context) error {
+	op, end := e.operation(ctx)
+	r := &protocol.Reading{Kind: protocol.Check, Simulated: e.simulated, Attempt: 1, StartedAt: protocol.Time{Time: e.now()},
+		Settings: []protocol.Setting{}, Sensors: []protocol.Sensor{}, Counts: []protocol.Count{}, Slices: []protocol.Slice{}, Angles: []protocol.Angle{}}
+	err := e.light(op, false)
+	if err == nil {
+		err = e.lookOnce(op, r)
+	}
+	interrupted := op.Err() != nil
+	end()
+	e.protectNow(ctx)
+	r.EndedAt = protocol.Time{Time: e.now()}
+	r.Accepted = err == nil
+	if err != nil {
+		r.Reason = err.Error()
+	}
+	if len(r.Slices)+r.LostGates > 0 {
+		if werr := e.write(ctx, protocol.ReadingEntry, &r.Head, r, protocol.ReadingSchema); werr != nil {
+			return werr
+		}
+		e.progress.applyReading(r)
+	}
+	if interrupted {
+		return nil
+	}
+	_, bright := errors.AsType[*brightness](err)
+	switch {
+	case err == nil:
+		if werr := e.release(ctx, "the light is well again", map[string]any{"cause": protocol.ByLight}, protocol.ByLight); werr != nil {
+			return werr
+		}
+		if e.progress.State == protocol.Running {
+			return e.getReady(ctx, true)
+		}
+	case !bright && drivers.RemedyOf(err) > drivers.Retry:
+		return e.connectQuietly(ctx)
+	}
+	return nil
+}
+
+func (e *Engine) lookOnce(ctx context.Context, r *protocol.Reading) error {
+	gate := 100 * time.Millisecond
+	for _, d := range e.Bench.Detectors {
+		gate = max(gate, d.Glance)
+	}
+	slice, err := e.count(ctx, r, gate)
+	if err != nil {
+		return err
+	}
+	r.Reason = ""
+	r.Slices, r.Counts = append(r.Slices, slice), slice.Counts
+	r.GateSet, r.Gate = slice.GateSet, slice.Gate
+	return e.judgeLight(slice.Counts, slice.Gate.Duration(), slice.Counts, slice.Gate.Duration())
+}
+
+// connectQuietly mends lines during a hold; what fails now is met again at the next look.
+func (e *Engine) connectQuietly(ctx context.Context) error {
+	op, end := e.operation(ctx)
+	defer end()
+	_ = e.connectAll(op)
+	return nil
+}
