@@ -84,11 +84,11 @@ func TestOrderOfNestedSweeps(t *testing.T) {
 	line := func(p scan.Plan) string {
 		var s []string
 		for _, point := range p.Points {
-			var one string
+			var one strings.Builder
 			for _, a := range point.Axes {
-				one += strings.TrimSuffix(a.Angle.String(), " deg")
+				one.WriteString(strings.TrimSuffix(a.Angle.String(), " deg"))
 			}
-			s = append(s, one)
+			s = append(s, one.String())
 		}
 		return strings.Join(s, " ")
 	}
