@@ -139,8 +139,7 @@ func Own(s Set) (Set, error) {
 		}
 	}
 	if s.Class == Uniaxial {
-		d, _ := s.dispersion(Ordinary)
-		e, _ := s.dispersion(Extraordinary)
+		d, e := s.dispersion(Ordinary), s.dispersion(Extraordinary)
 		lo, hi := max(d.RangeUm[0], e.RangeUm[0]), min(d.RangeUm[1], e.RangeUm[1])
 		if lo >= hi {
 			return Set{}, errors.New("crystal: the ranges of n_o and n_e do not meet; want a common range")
@@ -163,7 +162,7 @@ func joinAxes(axes []Axis) string {
 	return strings.Join(parts, ", n_")
 }
 
-func (d Dispersion) check() error {
+func (d *Dispersion) check() error {
 	if !(d.RangeUm[0] > 0 && d.RangeUm[1] > d.RangeUm[0]) {
 		return fmt.Errorf("range %v um; want two rising wavelengths in micrometres", d.RangeUm)
 	}
@@ -185,55 +184,59 @@ func (d Dispersion) check() error {
 	return nil
 }
 
-func (s Set) dispersion(a Axis) (Dispersion, bool) {
-	for _, d := range s.Axes {
-		if d.Axis == a {
-			return d, true
+func (s *Set) dispersion(a Axis) *Dispersion {
+	for i := range s.Axes {
+		if d := &s.Axes[i]; d.Axis == a {
+			return d
 		}
 	}
-	return Dispersion{}, false
+	return nil
 }
 
 // Index returns the principal index of an axis at a vacuum wavelength and crystal temperature.
 // It fails with ErrRange outside the range that the source gives.
-func (s Set) Index(a Axis, nm, cel float64) (float64, error) {
-	d, ok := s.dispersion(a)
-	if !ok {
+func (s *Set) Index(a Axis, nm, cel float64) (float64, error) {
+	d := s.dispersion(a)
+	if d == nil {
 		return 0, fmt.Errorf("crystal: %s has no n_%s; it is %s", s.Name, a, s.Class)
 	}
 	if err := s.rangeOf(d, nm); err != nil {
 		return 0, err
 	}
-	return s.Extrapolate(a, nm, cel)
+	return s.evaluate(d, nm, cel)
 }
 
 // Extrapolate is Index without the refusal, for callers that flag what they print. It still
 // fails where the formula gives no index at all.
-func (s Set) Extrapolate(a Axis, nm, cel float64) (float64, error) {
-	d, ok := s.dispersion(a)
-	if !ok {
+func (s *Set) Extrapolate(a Axis, nm, cel float64) (float64, error) {
+	d := s.dispersion(a)
+	if d == nil {
 		return 0, fmt.Errorf("crystal: %s has no n_%s; it is %s", s.Name, a, s.Class)
 	}
+	return s.evaluate(d, nm, cel)
+}
+
+func (s *Set) evaluate(d *Dispersion, nm, cel float64) (float64, error) {
 	n := d.at(nm/1000, cel, s.RefCel)
 	if !(n >= 0.1 && n < 100) {
 		return 0, fmt.Errorf("crystal: %s n_%s: the formula gives no index at %g nm; want a wavelength nearer to %g to %g nm: %w",
-			s.Name, a, nm, d.RangeUm[0]*1000, d.RangeUm[1]*1000, ErrRange)
+			s.Name, d.Axis, nm, d.RangeUm[0]*1000, d.RangeUm[1]*1000, ErrRange)
 	}
 	return n, nil
 }
 
 // CheckRange returns an error that wraps ErrRange where a wavelength is outside the range of
 // any axis of the set, and nil elsewhere.
-func (s Set) CheckRange(nm float64) error {
-	for _, d := range s.Axes {
-		if err := s.rangeOf(d, nm); err != nil {
+func (s *Set) CheckRange(nm float64) error {
+	for i := range s.Axes {
+		if err := s.rangeOf(&s.Axes[i], nm); err != nil {
 			return err
 		}
 	}
 	return nil
 }
 
-func (s Set) rangeOf(d Dispersion, nm float64) error {
+func (s *Set) rangeOf(d *Dispersion, nm float64) error {
 	// A hair of tolerance, because 1064 nm and 1.064 um are the same wavelength to a user.
 	const hair = 1e-9
 	um := nm / 1000
@@ -245,7 +248,7 @@ func (s Set) rangeOf(d Dispersion, nm float64) error {
 
 // HasTemperature reports whether the set has temperature terms on every axis. Without them
 // Index ignores the temperature, which a caller that was given one should say.
-func (s Set) HasTemperature() bool {
+func (s *Set) HasTemperature() bool {
 	for _, d := range s.Axes {
 		if d.Jundt == nil && d.DnDT == nil {
 			return false

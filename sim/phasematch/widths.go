@@ -81,7 +81,7 @@ func (s *Slab) SpectralNm(signalNm, polarDeg, azimuthDeg float64) (Width, error)
 		return Width{}, errNoEmission
 	}
 	edge := 2 * halfMax / s.ThicknessMm
-	lo, hi := s.band()
+	lo, hi := s.Band()
 	a, okA := leave(at, signalNm, -0.05, lo, edge)
 	b, okB := leave(at, signalNm, 0.05, hi, edge)
 	return Width{FWHM: b - a, Open: !okA || !okB}, nil
@@ -103,8 +103,9 @@ func (s *Slab) mismatchOver(polarDeg, azimuthDeg float64) func(float64) float64 
 	}
 }
 
-// band is the range of signal wavelengths for which signal and idler are inside the set's range.
-func (s *Slab) band() (lo, hi float64) {
+// Band is the range of signal wavelengths for which signal and idler are inside the set's range,
+// or a quarter beyond it when extrapolation was asked for.
+func (s *Slab) Band() (lo, hi float64) {
 	lo, hi = 0, math.Inf(1)
 	for _, d := range s.Crystal.Axes {
 		lo, hi = max(lo, d.RangeUm[0]*1000), min(hi, d.RangeUm[1]*1000)
@@ -123,7 +124,7 @@ func (s *Slab) band() (lo, hi float64) {
 // MatchedNm lists the signal wavelengths between lo and hi, rising, that are matched in a
 // direction. There may be none, one or two, because the outside angle has a minimum.
 func (s *Slab) MatchedNm(polarDeg, azimuthDeg, loNm, hiNm float64) []float64 {
-	lo, hi := s.band()
+	lo, hi := s.Band()
 	lo, hi = max(lo, loNm), min(hi, hiNm)
 	if !(lo < hi) {
 		return nil
