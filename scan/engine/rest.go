@@ -10,6 +10,12 @@ import (
 	"gemel/drivers"
 )
 
+// Rest brings a bench to the rest state outside any run. The text says what could not be reached.
+func Rest(ctx context.Context, b *Bench) (bad string) {
+	e := &Engine{Config: Config{Bench: b}}
+	return e.rest(ctx)
+}
+
 // rest brings the bench to the rest state: light off, detectors protected, motion and counting
 // stopped. It tries everything once without waiting for dead lines, so that one dead line cannot
 // keep the others open, and then reconnects for what is left. It runs under a context of its own,

@@ -1,0 +1,423 @@
+// Package keeper keeps one bench: it puts runs into the queue, executes one after another, takes
+// up unfinished ones after a restart, and carries operators' requests to the run they name. It
+// promises that a request is in the journal before it is answered, that one key makes one run,
+// and that the bench is at rest whenever no run moves it.
+package keeper
+
+import (
+	"context"
+	"crypto/sha256"
+	"encoding/hex"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"slices"
+	"sync"
+	"time"
+
+	"gemel/daemon/logbook"
+	"gemel/protocol"
+	"gemel/protocol/strict"
+	"gemel/scan"
+	"gemel/scan/engine"
+)
+
+// Book is what the keeper needs of the logbook.
+type Book interface {
+	NewRun(ctx context.Context, h logbook.Header, first protocol.Entry) (existing protocol.RunID, err error)
+	Append(ctx context.Context, e protocol.Entry) error
+	Entries(ctx context.Context, run protocol.RunID, afterSequence int64, limit int) ([]protocol.Entry, error)
+	Last(ctx context.Context, run protocol.RunID) (int64, error)
+	Unfinished(ctx context.Context) ([]logbook.RunRow, error)
+	Run(ctx context.Context, run protocol.RunID) (logbook.RunRow, error)
+}
+
+// Config is what a keeper is made of.
+type Config struct {
+	Book      Book
+	Bench     *engine.Bench
+	BenchText string
+	Version   string
+	// Plan works a recipe's text out for this bench. Its error is a *strict.Error with findings.
+	Plan func(recipeText string) (scan.Plan, error)
+	// Recipe reads the text of a recipe by the name it has in the configured folder; nil: there is none.
+	Recipe func(name string) (string, error)
+	// ResumeAfterRestart lets interrupted runs go on without a person.
+	ResumeAfterRestart bool
+	// Armed says whether remote requests may move the bench now.
+	Armed func(now time.Time) bool
+	// MayHome is a person's word that axes may search their zero at the start of each run.
+	MayHome bool
+	// Behind tells how many entries are not published yet; nil: nothing is published.
+	Behind func() int64
+	// Step is handed to the engine; for tests.
+	Step func(engine.Step)
+}
+
+// Keeper keeps one bench. Build it with New; Run or RunOne executes.
+type Keeper struct {
+	Config
+	wake chan struct{}
+
+	mu      sync.Mutex
+	current *engine.Engine
+	row     logbook.RunRow // of current, or of the run before
+	last    engine.Snapshot
+	queue   []protocol.RunID
+}
+
+// New makes a keeper. It starts nothing.
+func New(c Config) *Keeper {
+	if c.Armed == nil {
+		c.Armed = func(time.Time) bool { return c.Bench.Simulated }
+	}
+	return &Keeper{Config: c, wake: make(chan struct{}, 1)}
+}
+
+// Run brings the bench to rest, takes up what is unfinished, and then executes runs as they are
+// asked for, until ctx ends. An error means that the logbook or this program is broken.
+func (k *Keeper) Run(ctx context.Context) error {
+	if bad := engine.Rest(ctx, k.Bench); bad != "" {
+		if err := k.benchEvent(ctx, protocol.Trouble, "at the start the rest state was not reached: "+bad); err != nil {
+			return err
+		}
+	}
+	for ctx.Err() == nil {
+		rows, err := k.Book.Unfinished(ctx)
+		if err != nil {
+			if ctx.Err() != nil {
+				break
+			}
+			return err
+		}
+		if len(rows) == 0 {
+			select {
+			case <-ctx.Done():
+			case <-k.wake:
+			}
+			continue
+		}
+		k.mu.Lock()
+		k.queue = k.queue[:0]
+		for _, row := range rows[1:] {
+			k.queue = append(k.queue, row.Run)
+		}
+		k.mu.Unlock()
+		if _, err := k.execute(ctx, rows[0]); err != nil && ctx.Err() == nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// RunOne executes one run to its end, or to the end of ctx.
+func (k *Keeper) RunOne(ctx context.Context, run protocol.RunID) (protocol.State, error) {
+	row, err := k.Book.Run(ctx, run)
+	if err != nil {
+		return "", err
+	}
+	return k.execute(ctx, row)
+}
+
+// execute folds what the journal has of a run and lets an engine go on from there.
+func (k *Keeper) execute(ctx context.Context, row logbook.RunRow) (protocol.State, error) {
+	eng, err := k.engine(ctx, row)
+	if err != nil || eng == nil {
+		return protocol.Failed, err
+	}
+	state, err := eng.Run(ctx)
+	k.mu.Lock()
+	k.current, k.last = nil, eng.Snapshot()
+	k.mu.Unlock()
+	return state, err
+}
+
+// engine makes the engine of a run and puts it in charge, or ends a run that cannot be executed.
+// It holds the lock throughout, so that nobody stops the run in the queue meanwhile.
+func (k *Keeper) engine(ctx context.Context, row logbook.RunRow) (*engine.Engine, error) {
+	k.mu.Lock()
+	defer k.mu.Unlock()
+	past, err := k.fold(ctx, row.Run)
+	if err != nil || past.State.Final() {
+		return nil, err
+	}
+	plan, err := k.Plan(row.RecipeText)
+	if err != nil {
+		return nil, k.refuse(ctx, row, past, "failed: the recipe does not fit the bench any more: "+err.Error())
+	}
+	if row.State != protocol.Queued && row.BenchText != k.BenchText {
+		return nil, k.refuse(ctx, row, past, "failed: the bench file was changed while the run was unfinished, so what is left would not belong to what was taken; start it anew")
+	}
+	eng := engine.New(engine.Config{
+		Bench: k.Bench, Plan: plan, RunID: row.Run, Log: appender{k.Book}, Past: past,
+		ResumeAfterRestart: k.ResumeAfterRestart, MayHome: k.MayHome, Step: k.Step,
+	})
+	k.current, k.row = eng, row
+	k.queue = slices.DeleteFunc(k.queue, func(r protocol.RunID) bool { return r == row.Run })
+	return eng, nil
+}
+
+func (k *Keeper) fold(ctx context.Context, run protocol.RunID) (engine.Progress, error) {
+	var past engine.Progress
+	for {
+		entries, err := k.Book.Entries(ctx, run, max(0, past.Next-1), 1000)
+		if err != nil {
+			return past, err
+		}
+		for _, e := range entries {
+			if err := past.Fold(e); err != nil {
+				return past, err
+			}
+		}
+		if len(entries) < 1000 {
+			return past, nil
+		}
+	}
+}
+
+// refuse ends a run that cannot be executed, and says why.
+func (k *Keeper) refuse(ctx context.Context, row logbook.RunRow, past engine.Progress, text string) error {
+	return k.append(ctx, row.Run, past.Next, protocol.Ended, text, protocol.Failed, nil)
+}
+
+func (k *Keeper) append(ctx context.Context, run protocol.RunID, sequence int64, kind protocol.EventKind, text string, state protocol.State, detail map[string]any) error {
+	entry, err := k.eventEntry(run, sequence, kind, text, state, detail)
+	if err != nil {
+		return err
+	}
+	return k.Book.Append(ctx, entry)
+}
+
+func (k *Keeper) eventEntry(run protocol.RunID, sequence int64, kind protocol.EventKind, text string, state protocol.State, detail map[string]any) (protocol.Entry, error) {
+	if detail == nil {
+		detail = map[string]any{}
+	}
+	body, err := json.Marshal(protocol.Event{
+		Head: protocol.Head{Schema: protocol.EventSchema, Bench: k.Bench.Name, Run: run, Sequence: sequence, At: protocol.Time{Time: time.Now()}},
+		Kind: kind, Text: text, State: state, Causes: []protocol.Cause{}, Detail: detail,
+	})
+	return protocol.Entry{Run: run, Sequence: sequence, Kind: protocol.EventEntry, Body: body}, err
+}
+
+// benchEvent writes what happened to the bench outside any run.
+func (k *Keeper) benchEvent(ctx context.Context, kind protocol.EventKind, text string) error {
+	k.mu.Lock()
+	defer k.mu.Unlock()
+	last, err := k.Book.Last(ctx, protocol.BenchRun)
+	if err != nil {
+		return err
+	}
+	return k.append(ctx, protocol.BenchRun, last+1, kind, text, "", nil)
+}
+
+// Start checks a recipe and puts a run into the queue. It returns once that is durable.
+func (k *Keeper) Start(ctx context.Context, q protocol.StartRequest) (protocol.StartReply, error) {
+	if !k.Armed(time.Now()) {
+		return protocol.StartReply{}, protocol.Refuse(403, "the bench is not armed: somebody at the bench has to say `gemel arm --until HH:MM` first")
+	}
+	return k.Enqueue(ctx, q)
+}
+
+// Enqueue is Start for somebody at the bench itself.
+func (k *Keeper) Enqueue(ctx context.Context, q protocol.StartRequest) (protocol.StartReply, error) {
+	text := q.Recipe
+	if q.RecipeName != "" {
+		if text != "" {
+			return protocol.StartReply{}, protocol.Refuse(400, "recipe and recipe_name are both set; want one of them")
+		}
+		if k.Recipe == nil {
+			return protocol.StartReply{}, protocol.Refuse(404, "no folder of recipes is configured; send the recipe's text")
+		}
+		var err error
+		if text, err = k.Recipe(q.RecipeName); err != nil {
+			return protocol.StartReply{}, protocol.Refuse(404, err.Error())
+		}
+	}
+	if text == "" {
+		return protocol.StartReply{}, protocol.Refuse(400, "no recipe; want its text, or the name of one in the configured folder")
+	}
+	if q.Key == "" {
+		return protocol.StartReply{}, protocol.Refuse(400, "no key; want one of your own choice, so that a start asked for twice is one run")
+	}
+	plan, err := k.Plan(text)
+	if err != nil {
+		refusal := protocol.Refuse(422, "the recipe cannot be run: "+err.Error())
+		if e, ok := errors.AsType[*strict.Error](err); ok {
+			refusal.Findings = e.Findings
+		}
+		return protocol.StartReply{}, refusal
+	}
+	now := time.Now()
+	run := k.name(now, q.Key)
+	first, err := k.eventEntry(run, 1, protocol.OperatorDid, "start asked for by "+who(q.Who), protocol.Queued, map[string]any{"who": q.Who, "key": q.Key})
+	if err != nil {
+		return protocol.StartReply{}, err
+	}
+	h := logbook.Header{Run: run, Title: plan.Title, RecipeText: text, BenchText: k.BenchText, Version: k.Version, Key: q.Key, Who: q.Who, QueuedAt: protocol.Time{Time: now}}
+	if k.Bench.Simulated {
+		pace := max(1, int(k.Bench.Pace))
+		h.Simulated = &pace
+	}
+	existing, err := k.Book.NewRun(ctx, h, first)
+	if err != nil {
+		if errors.Is(err, logbook.ErrFull) {
+			return protocol.StartReply{}, protocol.Refuse(503, "nothing can be written: "+err.Error())
+		}
+		return protocol.StartReply{}, err
+	}
+	if existing != "" {
+		return protocol.StartReply{Run: existing}, nil
+	}
+	k.mu.Lock()
+	k.queue = append(k.queue, run)
+	k.mu.Unlock()
+	select {
+	case k.wake <- struct{}{}:
+	default:
+	}
+	return protocol.StartReply{Run: run}, nil
+}
+
+// name makes a run's name: it sorts by time, and two benches or two requests in one second do not
+// meet.
+func (k *Keeper) name(now time.Time, key string) protocol.RunID {
+	sum := sha256.Sum256(fmt.Appendf(nil, "%s|%s|%d", k.Bench.Name, key, now.UnixNano()))
+	return protocol.RunID(now.UTC().Format("20060102-150405") + "-" + hex.EncodeToString(sum[:4]))
+}
+
+func who(name string) string {
+	if name == "" {
+		return "somebody who gave no name"
+	}
+	return name
+}
+
+// Stop ends a run for ever, also one that waits in the queue.
+func (k *Keeper) Stop(ctx context.Context, q protocol.RunRequest) (protocol.RunReply, error) {
+	eng, err := k.find(ctx, q)
+	if err != nil {
+		return protocol.RunReply{}, err
+	}
+	if eng == nil {
+		return k.stopQueued(ctx, q)
+	}
+	return answered(eng.Stop(ctx, who(q.Who)))
+}
+
+// Hold makes the current run wait.
+func (k *Keeper) Hold(ctx context.Context, q protocol.RunRequest) (protocol.RunReply, error) {
+	eng, err := k.find(ctx, q)
+	if err != nil {
+		return protocol.RunReply{}, err
+	}
+	if eng == nil {
+		return protocol.RunReply{}, protocol.Refuse(409, fmt.Sprintf("run %s waits in the queue; it can be stopped, or left to wait", q.Run))
+	}
+	return answered(eng.Hold(ctx, who(q.Who)))
+}
+
+// Resume takes the causes away that a person may take away.
+func (k *Keeper) Resume(ctx context.Context, q protocol.RunRequest) (protocol.RunReply, error) {
+	if !k.Armed(time.Now()) {
+		return protocol.RunReply{}, protocol.Refuse(403, "the bench is not armed: somebody at the bench has to say `gemel arm --until HH:MM` first")
+	}
+	eng, err := k.find(ctx, q)
+	if err != nil {
+		return protocol.RunReply{}, err
+	}
+	if eng == nil {
+		return protocol.RunReply{}, protocol.Refuse(409, fmt.Sprintf("run %s waits in the queue; it begins when its turn comes", q.Run))
+	}
+	return answered(eng.Resume(ctx, who(q.Who)))
+}
+
+func answered(r protocol.RunReply, err error) (protocol.RunReply, error) {
+	if errors.Is(err, engine.ErrOver) {
+		return r, protocol.Refuse(409, "the run is over")
+	}
+	return r, err
+}
+
+// find returns the engine of the run a request names, or nil when that run waits in the queue.
+func (k *Keeper) find(ctx context.Context, q protocol.RunRequest) (*engine.Engine, error) {
+	if q.Run == "" {
+		return nil, protocol.Refuse(400, "no run named; want the run you mean, so that a late request cannot hit another")
+	}
+	k.mu.Lock()
+	if k.current != nil && k.row.Run == q.Run {
+		eng := k.current
+		k.mu.Unlock()
+		return eng, nil
+	}
+	k.mu.Unlock()
+	row, err := k.Book.Run(ctx, q.Run)
+	if errors.Is(err, logbook.ErrNoRun) {
+		return nil, protocol.Refuse(404, fmt.Sprintf("no run %q on this bench", q.Run))
+	}
+	if err != nil {
+		return nil, err
+	}
+	if row.State.Final() {
+		return nil, protocol.Refuse(409, fmt.Sprintf("run %s is %s, for ever", q.Run, row.State))
+	}
+	return nil, nil
+}
+
+func (k *Keeper) stopQueued(ctx context.Context, q protocol.RunRequest) (protocol.RunReply, error) {
+	k.mu.Lock()
+	defer k.mu.Unlock()
+	if k.current != nil && k.row.Run == q.Run {
+		return protocol.RunReply{}, protocol.Refuse(503, "the run begins at this moment; ask again")
+	}
+	last, err := k.Book.Last(ctx, q.Run)
+	if err != nil {
+		return protocol.RunReply{}, err
+	}
+	if err := k.append(ctx, q.Run, last+1, protocol.Ended, "stopped in the queue by "+who(q.Who), protocol.Stopped, map[string]any{"who": q.Who}); err != nil {
+		return protocol.RunReply{}, err
+	}
+	k.queue = slices.DeleteFunc(k.queue, func(r protocol.RunID) bool { return r == q.Run })
+	return protocol.RunReply{Run: q.Run, State: protocol.Stopped, Causes: []protocol.Cause{}, Recorded: true}, nil
+}
+
+// Status tells how the bench is. It never waits for the bench.
+func (k *Keeper) Status(context.Context) protocol.Status {
+	k.mu.Lock()
+	defer k.mu.Unlock()
+	s := protocol.Status{Bench: k.Bench.Name, Version: k.Version, Causes: []protocol.Cause{}, Queue: append([]protocol.RunID{}, k.queue...), Armed: k.Armed(time.Now())}
+	if k.Bench.Simulated {
+		pace := max(1, int(k.Bench.Pace))
+		s.Simulated = &pace
+	}
+	if k.Behind != nil {
+		s.Behind = k.Behind()
+	}
+	if k.row.Run == "" {
+		return s
+	}
+	snap := k.last
+	if k.current != nil {
+		snap = k.current.Snapshot()
+	}
+	s.Run, s.Title = k.row.Run, k.row.Title
+	s.State, s.Causes, s.Reason = snap.State, snap.Causes, snap.Reason
+	s.ReadingsAccepted, s.ReadingsPlanned, s.ReadingsSetAside = snap.Accepted, snap.Planned, snap.SetAside
+	if snap.TimeLeft != nil {
+		left := protocol.Seconds(k.Bench.Pace.Real(*snap.TimeLeft).Round(100 * time.Millisecond))
+		s.TimeLeft = &left
+	}
+	return s
+}
+
+// appender gives the engine its one method, and tells it which refusals are for ever.
+type appender struct{ book Book }
+
+func (a appender) Append(ctx context.Context, e protocol.Entry) error {
+	err := a.book.Append(ctx, e)
+	for _, never := range []error{logbook.ErrGap, logbook.ErrDifferent, logbook.ErrNoRun, logbook.ErrBody, logbook.ErrReadOnly} {
+		if errors.Is(err, never) {
+			return fmt.Errorf("%w: %w", engine.ErrConflict, err)
+		}
+	}
+	return err
+}
