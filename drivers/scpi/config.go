@@ -48,7 +48,7 @@ type CounterConfig struct {
 	CountingBit  *int          // of the condition; nil takes 4, "measuring"
 	OverflowBits []int         // of the quality register; nil takes 9
 	DoubtBits    []int         // of the quality register; nil takes 2, "time"
-	GateWithin   float64       // greatest share by which the gate read back may differ; 0 takes 1e-6
+	GateWithin   float64       // greatest share by which the gate read back may differ; 0 takes 1e-3; what is read back counts
 	EndWithin    time.Duration // a gate that is not over so long after its time is aborted; default 2 s and a tenth of the gate
 	PollEvery    time.Duration // default 20 ms
 }
