@@ -75,7 +75,8 @@ type Engine struct {
 
 	// Owned by Run's goroutine.
 	progress  Progress
-	commanded map[drivers.AxisName]unit.Angle // where each axis was last sent and then proved
+	commanded map[drivers.AxisName]unit.Angle // where each axis has to stand: sent there and proved, or found there
+	sent      map[drivers.AxisName]bool       // it was sent there, by the approach its file declares
 	simulated *int
 	patience  time.Duration                    // no hold but an operator's lasts longer
 	homing    bool                             // a person allowed the next search for the zero
@@ -103,7 +104,7 @@ type Snapshot struct {
 
 // New prepares an engine. It starts nothing and touches nothing.
 func New(c Config) *Engine {
-	e := &Engine{Config: c, progress: c.Past.clone(), commanded: map[drivers.AxisName]unit.Angle{}, deaf: map[drivers.DeviceName]time.Time{}}
+	e := &Engine{Config: c, progress: c.Past.clone(), commanded: map[drivers.AxisName]unit.Angle{}, sent: map[drivers.AxisName]bool{}, deaf: map[drivers.DeviceName]time.Time{}}
 	e.homing = c.MayHome
 	e.patience = c.Plan.Trouble.GiveUpAfter
 	if e.patience <= 0 {
@@ -306,7 +307,7 @@ func (e *Engine) step(s Step) {
 
 // now is bench time.
 func (e *Engine) now() time.Time {
-	return e.benchZero.Add(e.Bench.Pace.Bench(time.Since(e.origin)))
+	return e.benchZero.Add(e.Bench.Pace.Bench(time.Since(e.origin))).UTC()
 }
 
 // event writes an event with the state that follows from it.

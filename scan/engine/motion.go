@@ -67,7 +67,7 @@ func (e *Engine) goTo(ctx context.Context, targets []scan.AxisTarget) (map[drive
 		}
 		for _, t := range due {
 			if a := e.axis(t.Axis); (at[t.Axis] - t.Angle).Abs() <= a.Tolerance {
-				e.commanded[t.Axis] = t.Angle
+				e.commanded[t.Axis], e.sent[t.Axis] = t.Angle, true
 			}
 		}
 	}
@@ -88,7 +88,7 @@ func (e *Engine) inPlace(at map[drivers.AxisName]unit.Angle, during string) erro
 			continue
 		}
 		if (at[a.Name] - want).Abs() > a.Tolerance {
-			delete(e.commanded, a.Name) // so that the next attempt sends it again
+			delete(e.sent, a.Name) // so that the next attempt sends it again
 			return &notThere{axis: a.Name, angle: at[a.Name], want: want, tol: a.Tolerance, during: during}
 		}
 	}
@@ -100,7 +100,7 @@ func (e *Engine) due(at map[drivers.AxisName]unit.Angle, targets []scan.AxisTarg
 	var due []scan.AxisTarget
 	for _, t := range targets {
 		a := e.axis(t.Axis)
-		if want, known := e.commanded[t.Axis]; known && want == t.Angle && (at[t.Axis]-t.Angle).Abs() <= a.Tolerance {
+		if e.sent[t.Axis] && e.commanded[t.Axis] == t.Angle && (at[t.Axis]-t.Angle).Abs() <= a.Tolerance {
 			continue
 		}
 		due = append(due, t)
@@ -121,6 +121,7 @@ func (e *Engine) move(ctx context.Context, at map[drivers.AxisName]unit.Angle, t
 	var settle time.Duration
 	for _, t := range targets {
 		delete(e.commanded, t.Axis)
+		delete(e.sent, t.Axis)
 		settle = max(settle, e.axis(t.Axis).Settle)
 	}
 	for _, leg := range legs {

@@ -97,6 +97,7 @@ func (e *Engine) getReady(ctx context.Context, all bool) error {
 		}
 	}
 	clear(e.commanded) // angles are proved anew
+	clear(e.sent)
 	clear(e.deaf)
 	if err := e.findZero(ctx, op); err != nil || e.progress.State != protocol.Running || op.Err() != nil {
 		return err
