@@ -14,7 +14,7 @@ type Kind string
 const (
 	GateOpened  Kind = "gate_opened"  // Gate: tag, set_s
 	GateClosed  Kind = "gate_closed"  // Gate: everything; At is the gate's end, whenever it was asked for
-	GateAborted Kind = "gate_aborted" // Gate: tag, set_s, gate_s as far as it came; it has no counts
+	GateAborted Kind = "gate_aborted" // Gate: everything but counts, as far as it came
 	GateRead    Kind = "gate_read"    // Gate: tag and the counts as they were answered
 
 	MoveStarted Kind = "move_started" // Axes: true from_deg, and to_deg as planned
@@ -70,12 +70,17 @@ type GateTruth struct {
 	Overflow bool      `json:"overflow,omitempty"`
 	Doubtful bool      `json:"doubtful,omitempty"`
 
-	Axes       map[string]Range `json:"axes,omitempty"`  // true angles during the gate, bench degrees
-	PumpOpen   float64          `json:"pump_open_share"` // mean share of the pump that passed
-	LampShare  float64          `json:"lamp_share"`      // share of the gate during which the lamp was on
-	PumpMeanW  float64          `json:"pump_mean_w"`     // before the shutter
-	SignalSeen LightTruth       `json:"signal"`          // at the detector, behind its shutter
-	IdlerSeen  LightTruth       `json:"idler"`
+	Axes map[string]Range `json:"axes,omitempty"` // true angles during the gate, bench degrees
+	Seen *Seen            `json:"seen,omitempty"` // only where it is said to be filled
+}
+
+// Seen is the light during a gate.
+type Seen struct {
+	PumpOpenShare float64    `json:"pump_open_share"` // mean share of the pump that passed its shutter
+	PumpMeanW     float64    `json:"pump_mean_w"`     // before the shutter
+	LampShare     float64    `json:"lamp_share"`      // share of the gate during which the lamp was on
+	Signal        LightTruth `json:"signal"`          // at the detector, behind its shutter
+	Idler         LightTruth `json:"idler"`
 }
 
 // Range is the least and the greatest true angle.
