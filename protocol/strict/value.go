@@ -269,6 +269,42 @@ func (v Value) Angle(low, high unit.Angle, or ...unit.Angle) unit.Angle {
 	return a
 }
 
+// AnglePer returns an angle per time, written with the suffix behind its unit: "4 deg/s" has the
+// suffix "/s", "20 deg/s2" has "/s2".
+func (v Value) AnglePer(suffix string, low, high unit.Angle, or ...unit.Angle) unit.Angle {
+	want := fmt.Sprintf("an angle per time such as \"1.5 deg%s\"", suffix)
+	s, ok := v.scalar(want)
+	if !ok {
+		return first(or)
+	}
+	text, found := strings.CutSuffix(s, suffix)
+	a, err := unit.ParseAngle(text)
+	switch {
+	case errors.Is(err, unit.ErrNoUnit) && !found:
+		v.Fail(shorten(s)+" has no unit", want)
+	case !found || err != nil:
+		v.Failf("%s", want)
+	case a < low || a > high:
+		v.Failf("%s%s to %s%s", low, suffix, high, suffix)
+	default:
+		return a
+	}
+	return first(or)
+}
+
+// Pattern returns a regular expression (RE2) as it is written.
+func (v Value) Pattern(or ...string) string {
+	s := v.Wire(or...)
+	if !v.Good() {
+		return first(or)
+	}
+	if _, err := regexp.Compile(s); err != nil {
+		v.Fail(strings.TrimPrefix(err.Error(), "error parsing regexp: "), "an RE2 pattern")
+		return first(or)
+	}
+	return s
+}
+
 // Duration returns a time from low to high.
 func (v Value) Duration(low, high time.Duration, or ...time.Duration) time.Duration {
 	s, ok := v.scalar(example(unit.Time))

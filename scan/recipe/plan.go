@@ -74,8 +74,18 @@ func (e Entry) checkAxis(axes []scan.Axis) []protocol.Finding {
 	var findings []protocol.Finding
 	for _, k := range e.Values.extremes() {
 		n, at := e.Values.at(k)
-		if a := n.angle(); !axes[i].Limits(a) {
-			findings = append(findings, at.Finding(fmt.Sprintf("%s is beyond the soft limits of %s", a, e.Axis), fmt.Sprintf("%s to %s", axes[i].Low, axes[i].High)))
+		a, axis := n.angle(), axes[i]
+		low, high := axis.Low, axis.High
+		if axis.Rising {
+			low += axis.Backlash
+		} else {
+			high -= axis.Backlash
+		}
+		switch {
+		case !axis.Limits(a):
+			findings = append(findings, at.Finding(fmt.Sprintf("%s is beyond the soft limits of %s", a, e.Axis), fmt.Sprintf("%s to %s", low, high)))
+		case a < low || a > high:
+			findings = append(findings, at.Finding(fmt.Sprintf("%s leaves no room within the soft limits of %s to approach by %s", a, e.Axis, axis.Backlash), fmt.Sprintf("%s to %s", low, high)))
 		}
 	}
 	return findings

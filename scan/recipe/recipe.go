@@ -251,6 +251,7 @@ func readTrouble(v strict.Value) scan.Trouble {
 	m := v.Map()
 	t.Retries = int(m.Opt("retries").Int(0, maxRetries, 3))
 	t.Then = scan.Then(m.Opt("then").Choice([]string{string(scan.Hold), string(scan.Skip), string(scan.Stop)}, string(scan.Hold)))
+	t.GiveUpAfter = m.Opt("give_up_after").Duration(time.Minute, 7*24*time.Hour, 0)
 	m.Done()
 	return t
 }

@@ -1,0 +1,242 @@
+package bench
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"slices"
+	"strings"
+
+	"gemel/drivers"
+	"gemel/drivers/line"
+	"gemel/protocol/unit"
+	"gemel/sim/instruments"
+	"gemel/sim/source"
+	"gemel/sim/trouble"
+)
+
+// Virtual are the virtual instruments of a simulated bench, one behind each line.
+type Virtual struct {
+	World *instruments.World
+	sets  []*set
+}
+
+// VirtualOptions say how the virtual instruments are reached and what happens to them.
+type VirtualOptions struct {
+	Troubles trouble.List
+	Ledger   *instruments.Ledger // nil: one in memory
+}
+
+// set is the instrument behind one line.
+type set struct {
+	line       string
+	instrument instruments.Instrument
+	calls      chan instruments.Conn
+}
+
+// NewVirtual puts the instruments of a simulated bench into a world that begins now. Which one
+// stands behind a line follows from the devices that use it.
+func NewVirtual(f *File, o VirtualOptions) (*Virtual, error) {
+	if !f.Simulated() {
+		return nil, fmt.Errorf("bench: %s is a real bench; want one whose lines are simulated", f.Name)
+	}
+	optics, err := f.source()
+	if err != nil {
+		return nil, err
+	}
+	model, err := source.New(optics)
+	if err != nil {
+		return nil, err
+	}
+	t := f.Simulation.truth
+	world, err := instruments.NewWorld(instruments.WorldConfig{
+		Seed: f.Simulation.Seed, Pace: f.Simulation.Clock, Model: model, Troubles: o.Troubles, Ledger: o.Ledger,
+		Still: source.Pose{PumpW: optics.PumpW, PumpNm: optics.PumpNm, CrystalCel: optics.CrystalCel, PumpOpen: 1, SignalOpen: 1, IdlerOpen: 1,
+			RoomHz: [2]float64{t.signal.room, t.idler.room}},
+	})
+	if err != nil {
+		return nil, err
+	}
+	v := &Virtual{World: world}
+	for _, l := range f.Lines {
+		i, err := f.instrument(world, l.Name)
+		if err != nil {
+			return nil, fmt.Errorf("line %s: %w", l.Name, err)
+		}
+		v.sets = append(v.sets, &set{line: l.Name, instrument: i, calls: make(chan instruments.Conn)})
+	}
+	return v, nil
+}
+
+// cableBuffer is what the UARTs of a line keep that nobody has read yet.
+const cableBuffer = 4096
+
+// opener lets a line reach its instrument in memory. Opening is plugging in: what the line closes or
+// loses is gone, and the next opening is a new cable.
+func (v *Virtual) opener(l Line) (func(context.Context) (line.Port, error), error) {
+	i := slices.IndexFunc(v.sets, func(s *set) bool { return s.line == l.Name })
+	if i < 0 {
+		return nil, errors.New("no virtual instrument behind it")
+	}
+	s := v.sets[i]
+	return func(ctx context.Context) (line.Port, error) {
+		host, dev := instruments.Cable(cableBuffer)
+		select {
+		case s.calls <- dev:
+			return host, nil
+		case <-ctx.Done():
+			return nil, context.Cause(ctx)
+		}
+	}, nil
+}
+
+// Actors lists the instruments' own loops.
+func (v *Virtual) Actors() []Actor {
+	var all []Actor
+	for _, s := range v.sets {
+		all = append(all, Actor{Name: "virtual " + s.instrument.Name(), Run: s.serve})
+	}
+	return all
+}
+
+// serve answers one connection after another. An unplugged instrument answers none: whoever opens
+// its line then finds it closed.
+func (s *set) serve(ctx context.Context) error {
+	for {
+		select {
+		case <-ctx.Done():
+			return nil
+		case conn := <-s.calls:
+			err := s.instrument.Serve(ctx, conn)
+			if ctx.Err() != nil {
+				return errors.Join(conn.Close(), nil)
+			}
+			if err != nil && !errors.Is(err, instruments.ErrUnplugged) {
+				return err
+			}
+			if err := conn.Close(); err != nil {
+				return err
+			}
+		}
+	}
+}
+
+// identity is what a virtual instrument says it is: what the file expects, or a name of its own.
+func identity(d Device, model string) instruments.Identity {
+	id := instruments.Identity{Maker: "gemel", Model: model, Serial: string(d.Name), Firmware: "1"}
+	fields := []*string{&id.Maker, &id.Model, &id.Serial, &id.Firmware}
+	for i, field := range splitIdentity(d.Identity) {
+		if i < len(fields) && field != "" {
+			*fields[i] = field
+		}
+	}
+	return id
+}
+
+// users lists the devices on a line.
+func (f *File) users(name string) []Device {
+	var all []Device
+	for _, d := range f.devices() {
+		if d.Line == name {
+			all = append(all, d)
+		}
+	}
+	return all
+}
+
+// instrument makes what stands behind a line.
+func (f *File) instrument(w *instruments.World, name string) (instruments.Instrument, error) {
+	for _, c := range f.Controllers {
+		if c.Line == name {
+			return f.virtualStage(w, c)
+		}
+	}
+	if f.Counter.Line == name {
+		return f.virtualCounter(w)
+	}
+	return nil, errors.New("no virtual instrument of this kind")
+}
+
+func (f *File) virtualStage(w *instruments.World, c Controller) (instruments.Instrument, error) {
+	var axes []instruments.AxisConfig
+	for _, a := range f.Axes {
+		if a.Axis.Controller == c.Name {
+			axes = append(axes, f.virtualAxis(a, c.Dialect))
+		}
+	}
+	if c.Dialect == "gcode" {
+		return instruments.NewRotary(w, instruments.RotaryConfig{Name: string(c.Name), Identity: identity(c.Device, "rotary"), Axes: axes, Together: c.Together})
+	}
+	return instruments.NewPlain(w, instruments.PlainConfig{Name: string(c.Name), Identity: identity(c.Device, "plain"), Axes: axes})
+}
+
+// slack is how much further than the soft limits a virtual controller lets its axes go.
+const slack = 5 * unit.Degree
+
+// stepsPerDeg of a virtual axis: a tenth of a millidegree, finer than any tolerance worth proving.
+const stepsPerDeg = 10_000
+
+func (f *File) virtualAxis(a Axis, dialect string) instruments.AxisConfig {
+	t := f.Simulation.truth.axes[string(a.Name)]
+	low, high := a.Mount.Controller(a.Low), a.Mount.Controller(a.High)
+	low, high = min(low, high)-slack, max(low, high)+slack
+	start := max(a.Low, min(a.High, 0))
+	if a.Park != nil {
+		start = *a.Park
+	}
+	if t.start != nil {
+		start = *t.start
+	}
+	call := a.Letter
+	if dialect != "gcode" && a.Address != "" {
+		call = a.Address
+	}
+	return instruments.AxisConfig{
+		Letter: call, Axis: string(a.Name), Role: a.Role, Sense: a.Mount.Sense, ZeroDeg: a.Mount.Zero.Degrees(),
+		LowDeg: low.Degrees(), HighDeg: high.Degrees(), SpeedDegS: a.SpeedDegS, AccelDegS2: a.AccelDegS2,
+		BacklashDeg: t.play.Degrees(), FallingFlank: !a.Rising, StepsPerDeg: stepsPerDeg, Encoder: a.Proof == drivers.Proved,
+		HomeDeg: a.Mount.Controller(start).Degrees(), StartDeg: start.Degrees(), Homed: !t.lost,
+	}
+}
+
+// virtualCounter counts what stands behind each channel.
+func (f *File) virtualCounter(w *instruments.World) (instruments.Instrument, error) {
+	c := instruments.CounterConfig{Name: string(f.Counter.Name), Identity: identity(f.Counter.Device, "counter"), Bits: f.Counter.Bits}
+	for _, ch := range f.Counter.Channels {
+		c.Channels = append(c.Channels, f.counted(ch))
+	}
+	return instruments.NewCounter(w, c)
+}
+
+func (f *File) counted(ch drivers.Channel) string {
+	if ch == f.Counter.Tag {
+		return instruments.CountsGates
+	}
+	if _, pair := f.Counter.Coincidences[ch]; pair {
+		return instruments.CountsPairs
+	}
+	for _, d := range f.Detectors {
+		switch {
+		case d.Channel != ch:
+		case d.Name == f.Optics.Signal.Detector:
+			return instruments.CountsSignal
+		case d.Name == f.Optics.Idler.Detector:
+			return instruments.CountsIdler
+		}
+	}
+	return instruments.CountsNone
+}
+
+func splitIdentity(text string) []string {
+	if text == "" {
+		return nil
+	}
+	fields := strings.Split(text, ",")
+	for i := range fields {
+		fields[i] = strings.TrimSpace(fields[i])
+	}
+	return fields
+}
+
+// checkLineUse finds lines with devices that no single virtual instrument speaks for.
+func (r *reader) checkLineUse() {}
