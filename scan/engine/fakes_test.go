@@ -7,6 +7,7 @@ import (
 	"fmt"
 	"sync"
 	"testing"
+	"testing/synctest"
 	"time"
 
 	"gemel/drivers"
@@ -45,6 +46,7 @@ func (w *world) act(format string, args ...any) error {
 
 func (w *world) atRest(t *testing.T) {
 	t.Helper()
+	synctest.Wait()
 	for name, open := range w.open {
 		if open {
 			t.Errorf("%s is open; want the rest state", name)
@@ -190,6 +192,7 @@ func (m *memory) readings(t *testing.T) []protocol.Reading {
 
 func (m *memory) events(t *testing.T) []protocol.Event {
 	t.Helper()
+	synctest.Wait()
 	var all []protocol.Event
 	for _, e := range m.entries {
 		if e.Kind == protocol.EventEntry {

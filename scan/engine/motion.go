@@ -17,7 +17,6 @@ type notThere struct {
 	angle  unit.Angle
 	want   unit.Angle
 	tol    unit.Angle
-	tries  int
 	during string
 }
 
