@@ -1,0 +1,128 @@
+package courier
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"slices"
+	"time"
+
+	"github.com/nats-io/nats.go"
+	"github.com/nats-io/nats.go/jetstream"
+
+	"gemel/protocol"
+)
+
+// StreamConfig says which stream, and how much of the past it keeps.
+type StreamConfig struct {
+	Bench    string
+	Replicas int   // 0 is 1
+	MaxBytes int64 // 0 is 2 GiB, about a million readings
+
+	// MaxAge is for outside servers that insist on one; 0 keeps messages until MaxBytes. A stream
+	// that grew empty by age cannot tell a restarted courier where it ended, and is filled again.
+	MaxAge time.Duration
+
+	// Duplicates is the broker's own window, 0 is 10 minutes. Nothing here relies on it.
+	Duplicates time.Duration
+}
+
+// answerTime bounds each question to the broker.
+const answerTime = 5 * time.Second
+
+// Stream is a bench's JetStream stream as a Sink.
+type Stream struct {
+	js   jetstream.JetStream
+	want jetstream.StreamConfig
+}
+
+// NewStream asks nothing yet. The connection should not buffer while it is away
+// (nats.ReconnectBufSize(-1)): what it sends later is refused as out of place.
+func NewStream(conn *nats.Conn, c StreamConfig) (*Stream, error) {
+	js, err := jetstream.New(conn)
+	if err != nil {
+		return nil, err
+	}
+	return &Stream{js: js, want: jetstream.StreamConfig{
+		Name:        protocol.Stream(c.Bench),
+		Description: "journal of bench " + c.Bench,
+		Subjects:    protocol.StreamSubjects(c.Bench),
+		Storage:     jetstream.FileStorage,
+		Retention:   jetstream.LimitsPolicy,
+		Discard:     jetstream.DiscardOld,
+		MaxBytes:    orElse(c.MaxBytes, 2<<30),
+		MaxAge:      c.MaxAge,
+		Duplicates:  orElse(c.Duplicates, 10*time.Minute),
+		Replicas:    orElse(c.Replicas, 1),
+		DenyDelete:  true,
+		DenyPurge:   true,
+	}}, nil
+}
+
+func orElse[T comparable](value, otherwise T) T {
+	var zero T
+	if value == zero {
+		return otherwise
+	}
+	return value
+}
+
+// Last tells where the stream ends. It makes the stream, or changes it to what is wanted.
+func (s *Stream) Last(ctx context.Context) (Last, error) {
+	ctx, cancel := context.WithTimeout(ctx, answerTime)
+	defer cancel()
+	stream, err := s.js.Stream(ctx, s.want.Name)
+	switch {
+	case errors.Is(err, jetstream.ErrStreamNotFound):
+		stream, err = s.js.CreateStream(ctx, s.want)
+	case err == nil && !s.asWanted(stream.CachedInfo().Config):
+		stream, err = s.js.UpdateStream(ctx, s.want)
+	}
+	if err != nil {
+		return Last{}, err
+	}
+	state := stream.CachedInfo().State
+	if state.Msgs == 0 {
+		return Last{Sequence: state.LastSeq}, nil
+	}
+	m, err := stream.GetMsg(ctx, state.LastSeq)
+	if err != nil {
+		return Last{}, fmt.Errorf("message %d: %w", state.LastSeq, err)
+	}
+	return Last{Message: Message{Subject: m.Subject, ID: m.Header.Get(nats.MsgIdHdr), Body: m.Data}, Sequence: m.Sequence}, nil
+}
+
+// asWanted compares what we set; a server adds entries of its own.
+func (s *Stream) asWanted(have jetstream.StreamConfig) bool {
+	w := s.want
+	return slices.Equal(have.Subjects, w.Subjects) && have.Description == w.Description &&
+		have.Storage == w.Storage && have.Retention == w.Retention && have.Discard == w.Discard &&
+		have.MaxBytes == w.MaxBytes && have.MaxAge == w.MaxAge && have.Duplicates == w.Duplicates &&
+		have.Replicas == w.Replicas && have.DenyDelete == w.DenyDelete && have.DenyPurge == w.DenyPurge
+}
+
+// Publish sends m under its id, as the message after the given one. The expected sequence is what
+// makes it safe; the expected id guards against a stream that was filled by somebody else to
+// the same length.
+func (s *Stream) Publish(ctx context.Context, m Message, after Last) (Last, error) {
+	ctx, cancel := context.WithTimeout(ctx, answerTime)
+	defer cancel()
+	expect := []jetstream.PublishOpt{
+		jetstream.WithMsgID(m.ID),
+		jetstream.WithExpectStream(s.want.Name),
+		jetstream.WithExpectLastSequence(after.Sequence),
+		jetstream.WithRetryAttempts(0),
+	}
+	if after.ID != "" {
+		expect = append(expect, jetstream.WithExpectLastMsgID(after.ID))
+	}
+	ack, err := s.js.PublishMsg(ctx, &nats.Msg{Subject: m.Subject, Data: m.Body}, expect...)
+	if err != nil {
+		return Last{}, err
+	}
+	// A duplicate is answered before anything expected is looked at.
+	if ack.Sequence != after.Sequence+1 {
+		return Last{}, fmt.Errorf("acknowledged as message %d, expected as %d: %w", ack.Sequence, after.Sequence+1, ErrUnsure)
+	}
+	return Last{Message: m, Sequence: ack.Sequence}, nil
+}
