@@ -72,7 +72,7 @@ func BenchmarkViews(b *testing.B) {
 	}
 	for _, c := range []struct{ name, query string }{
 		{"every run with its state", `SELECT count(state) FROM run`},
-		{"one reading", `SELECT count(gate_s) FROM reading WHERE run = 'r000010' AND sequence = 2500`},
+		{"one reading", `SELECT count(gate_s) FROM reading WHERE run = 'r000010' AND sequence = 2400`},
 		{"accepted in a run of 5000", `SELECT count(*) FROM reading WHERE run = 'r000010' AND accepted`},
 		{"doubtful in a run of 5000", `SELECT count(*) FROM reading WHERE run = 'r000010' AND doubtful`},
 		{"sum of counts in a run of 5000", `SELECT sum(counts) FROM reading_count WHERE run = 'r000010' AND channel = 'pair'`},
