@@ -394,27 +394,32 @@ func (v Value) Measured(kind unit.Kind, low, high float64, or ...Measured) Measu
 	}
 	m := v.Map()
 	c := Measured{Value: m.Need("value").Quantity(kind, low, high)}
-	if u := m.Opt("u"); kind == unit.Temperature && u.Good() {
-		c.U = u.kelvins()
-	} else {
-		c.U = u.Quantity(kind, 0, math.Inf(1))
-	}
+	c.U = m.Opt("u").Difference(kind, 0, math.Inf(1))
 	c.From = m.Opt("from").Text()
 	m.Done()
 	return c
 }
 
-// kelvins reads a difference of temperatures, which has no zero to be shifted by.
-func (v Value) kelvins() float64 {
+// Difference returns a difference of two values of the kind, in its base unit: as Quantity, but
+// for temperatures 0.2 K and 0.2 Cel are the same, since a difference has no zero to be shifted by.
+func (v Value) Difference(kind unit.Kind, low, high float64, or ...float64) float64 {
+	if kind != unit.Temperature {
+		return v.Quantity(kind, low, high, or...)
+	}
 	q := v.Any()
 	if !v.Good() {
-		return 0
+		return first(or)
 	}
-	if x, err := strconv.ParseFloat(q.Number, 64); err == nil && q.Kind == unit.Temperature && x >= 0 {
+	x, err := strconv.ParseFloat(q.Number, 64)
+	switch {
+	case err != nil || q.Kind != unit.Temperature:
+		v.Failf(`a difference of temperatures such as "0.2 K"`)
+	case x < low || x > high:
+		v.Failf("%g K to %g K", low, high)
+	default:
 		return x
 	}
-	v.Failf(`a difference such as "0.2 K"`)
-	return 0
+	return first(or)
 }
 
 func (v Value) failUnit(err error, kind unit.Kind) {

@@ -16,6 +16,7 @@ import (
 	"math/big"
 	"regexp"
 	"strconv"
+	"strings"
 	"time"
 
 	"gemel/drivers"
@@ -88,7 +89,7 @@ func Parse(file string, text []byte) (*Recipe, error) {
 		File:   file,
 		Text:   string(text),
 		Title:  m.Need("title").Text(),
-		Order:  Order(m.Opt("order").Choice([]string{string(Ascending), string(Serpentine)}, string(Ascending))),
+		Order:  readOrder(m.Opt("order")),
 		Repeat: readRepeat(m.Opt("repeat")),
 	}
 	r.Repeat.Serpentine = r.Order == Serpentine
@@ -123,6 +124,13 @@ func (r *Recipe) points() *big.Int {
 
 func (r *Recipe) visits() *big.Int {
 	return new(big.Int).Mul(r.points(), big.NewInt(int64(r.Repeat.Times)))
+}
+
+func readOrder(v strict.Value) Order {
+	if v.Good() && !v.IsMap() && !v.IsList() && v.Text("") == "shuffled" {
+		v.Fail(`"shuffled": not available yet`, "ascending or serpentine")
+	}
+	return Order(v.Choice([]string{string(Ascending), string(Serpentine)}, string(Ascending)))
 }
 
 func readSweep(v strict.Value) []Entry {
@@ -223,6 +231,8 @@ func readDark(v strict.Value) (c *scan.Cadence, dwellAt, at strict.Place) {
 	if text := every.Text(); every.Good() {
 		if n := everyPoints.FindStringSubmatch(text); n != nil {
 			c.EveryPoints, _ = strconv.Atoi(n[1])
+		} else if strings.Contains(text, "point") {
+			every.Failf(`a number of points such as "10 points", or a time such as "30 min"`)
 		} else if c.Every = every.Duration(time.Second, maxDwell); every.Good() && c.Every <= c.Dwell.Time {
 			every.Failf("more than the dark's own dwell of %s, or nothing else would be counted", strict.Span(c.Dwell.Time))
 		}

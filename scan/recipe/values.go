@@ -30,7 +30,7 @@ type grid struct {
 	at, endAt   strict.Place // where the first and the last value come from
 }
 
-// number is an exact value and its unit. Angles that degrees can say are counted in whole
+// number is an exact value and its unit. Angles that degrees can say are counted in
 // micro-arcseconds, unit ""; milliradians stay what they are until a target is made of them, so
 // that a grid in milliradians is rounded once a point and not once a step.
 type number struct {
@@ -106,15 +106,10 @@ const maxAngle = 1000 * unit.Turn
 // readNumber reads one value of an axis (an angle) or of a setting (anything with a unit).
 func readNumber(v strict.Value, isAngle bool) (number, bool) {
 	if isAngle {
-		a := v.Angle(-maxAngle, maxAngle)
-		if !v.Good() {
-			return number{}, false
-		}
-		q := v.Any()
-		if q.Unit == "mrad" {
-			return exact(q)
-		}
-		return number{value: big.NewRat(int64(a), 1)}, true
+		v.Angle(-maxAngle, maxAngle)
+	}
+	if !v.Good() {
+		return number{}, false
 	}
 	q := v.Any()
 	if !v.Good() {
@@ -125,7 +120,15 @@ func readNumber(v strict.Value, isAngle bool) (number, bool) {
 
 func exact(q strict.Quantity) (number, bool) {
 	r, ok := new(big.Rat).SetString(q.Number)
-	return number{value: r, unit: q.Unit, text: q.Number + " " + q.Unit}, ok
+	if !ok {
+		return number{}, false
+	}
+	in := map[string]unit.Angle{"deg": unit.Degree, "arcmin": unit.Arcminute, "arcsec": unit.Arcsecond}
+	if per, plain := in[q.Unit]; plain {
+		// Not rounded here: a step finer than a micro-arcsecond must not grow to one and add up.
+		return number{value: r.Mul(r, big.NewRat(int64(per), 1))}, true
+	}
+	return number{value: r, unit: q.Unit, text: q.Number + " " + q.Unit}, true
 }
 
 // readValues reads the one of the three ways of giving values that an entry uses. It asks for all
