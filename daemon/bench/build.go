@@ -5,7 +5,6 @@ import (
 	"errors"
 	"fmt"
 	"hash/fnv"
-	"path/filepath"
 	"slices"
 
 	"github.com/rs/zerolog"
@@ -77,7 +76,11 @@ func opener(f *File, l Line, o Options) (func(context.Context) (line.Port, error
 	case o.Virtual != nil:
 		return o.Virtual.opener(l)
 	case f.Simulated():
-		return line.Address(filepath.Join(o.Links, l.Name), line.Mode{})
+		address, err := linked(o.Links, l.Name)
+		if err != nil {
+			return nil, err
+		}
+		return line.Address(address, line.Mode{})
 	}
 	return line.Address(l.Device, line.Mode{Baud: l.Baud, DataBits: l.DataBits, Parity: l.Parity, StopBits: l.StopBits})
 }

@@ -261,7 +261,59 @@ func (r *reader) checkSimulation() {
 			r.fail(f.Optics.at, found, "%s", want)
 		}
 	}
-	r.checkLineUse()
+	r.checkVirtual()
+}
+
+// checkVirtual finds lines that no virtual instrument can stand behind, and what each would have to
+// be that none is.
+func (r *reader) checkVirtual() {
+	f := r.file
+	role := map[string]string{}
+	use := func(d Device, what, dialect string) {
+		if d.Dialect != dialect {
+			r.fail(d.at, fmt.Sprintf("a simulated %s that speaks %s", what, d.Dialect), "%s, which the virtual one speaks", dialect)
+		}
+		switch other := role[d.Line]; {
+		case other == "" || other == "sensor" && what == "sensor":
+			role[d.Line] = what
+		default:
+			r.fail(d.lineAt, fmt.Sprintf("a %s on the simulated line of a %s", what, other), "a line of its own: one virtual instrument stands behind each")
+		}
+	}
+	for _, c := range f.Controllers {
+		dialect := c.Dialect
+		if dialect != "gcode" {
+			dialect = "custom"
+		}
+		use(c.Device, "controller", dialect)
+	}
+	use(f.Counter.Device, "counter", "scpi")
+	if f.Pump != nil {
+		use(f.Pump.Device, "shutter", "scpi")
+	}
+	blades := map[string]drivers.DeviceName{}
+	for _, s := range f.Protectors {
+		use(s.Device, "shutter", "scpi")
+		blade := f.blade(s.Name)
+		if blade == "" {
+			r.fail(s.at, "a simulated protector of a detector that is in no arm", "a detector of an arm")
+		} else if other, twice := blades[blade]; twice {
+			r.fail(s.at, fmt.Sprintf("a second simulated protector of the %s arm, after %s", blade, other), "one for each arm")
+		}
+		blades[blade] = s.Name
+	}
+	kinds := map[string]drivers.DeviceName{}
+	for _, s := range f.Sensors {
+		use(s.Device, "sensor", "scpi")
+		key := s.Line + " " + string(s.Kind)
+		if other, twice := kinds[key]; twice {
+			r.fail(s.at, fmt.Sprintf("a second %s sensor on the line of %s", s.Kind, other), "one of each kind on a simulated line")
+		}
+		kinds[key] = s.Name
+	}
+	for _, s := range f.Settings {
+		use(s.Device, "setting", "scpi")
+	}
 }
 
 // halves cuts an error of the house's shape in two.

@@ -31,7 +31,7 @@ type dialect struct {
 	counter func(strict.Map) counterMaker
 	shutter func(strict.Map) shutterMaker
 	sensor  func(strict.Map) sensorMaker
-	setting func(strict.Map) settingMaker
+	setting func(strict.Map) settingReading
 }
 
 // dialects is the table of all there are. A new one is one line here.
@@ -164,7 +164,7 @@ func scpiSensor(m strict.Map) sensorMaker {
 	}
 }
 
-func scpiSetting(m strict.Map) settingMaker {
+func scpiSetting(m strict.Map) settingReading {
 	h := m.Opt("headers").Map()
 	c := scpi.SettingConfig{
 		Common: scpiCommon(m, h),
@@ -174,11 +174,18 @@ func scpiSetting(m strict.Map) settingMaker {
 	}
 	read := inUnit(m, m.Need("tolerance"))
 	h.Done()
-	return func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
+	header, _, _ := strings.Cut(strings.TrimPrefix(c.Set, ":"), " ")
+	return settingReading{header: strings.ToUpper(header), make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
 		c := c
 		c.Common, c.Unit, c.Tolerance = scpiFor(c.Common, d.Device, pace), d.Unit, read(d.Unit)
 		return scpi.NewSetting(l, c)
-	}
+	}}
+}
+
+// settingReading is what a dialect reads of a setting.
+type settingReading struct {
+	make   settingMaker
+	header string // that sets it; a virtual setting then hears it
 }
 
 func unitOf(v strict.Value) string {
@@ -349,17 +356,17 @@ func customSensor(m strict.Map) sensorMaker {
 	}
 }
 
-func customSetting(m strict.Map) settingMaker {
+func customSetting(m strict.Map) settingReading {
 	c := custom.SettingConfig{
 		Common:       customCommon(m, []string{"set", "get"}, []string{"at_rest", "identity"}),
 		SettleWithin: m.Opt("settle_within").Duration(0, maxMove), Settle: m.Opt("settle").Duration(0, maxMove), PollEvery: m.Opt("poll_every").Duration(time.Millisecond, maxPoll),
 	}
 	read := inUnit(m, m.Need("tolerance"))
-	return func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
+	return settingReading{make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
 		c := c
 		c.Common, c.Unit, c.Tolerance = customFor(c.Common, d.Device, pace), d.Unit, read(d.Unit)
 		return custom.NewSetting(l, c)
-	}
+	}}
 }
 
 // RS-274: the words are the standard's, the rest is declared as questions of package custom.

@@ -187,7 +187,7 @@ type Setting struct {
 	Kind      unit.Kind
 	Low, High float64 // in Unit
 
-	make settingMaker
+	settingReading
 }
 
 // Simulation says how the virtual instruments live.

@@ -1,9 +1,12 @@
 package bench
 
 import (
+	"time"
+
 	"gemel/protocol/strict"
 	"gemel/protocol/unit"
 	"gemel/sim/crystal"
+	"gemel/sim/instruments"
 	"gemel/sim/phasematch"
 	"gemel/sim/source"
 )
@@ -65,10 +68,13 @@ func (a Arm) transmittance() float64 {
 
 // truth is what only the virtual instruments know.
 type truth struct {
-	signal, idler armTruth
-	jitter        float64 // s, rms between the two arrivals of a pair
-	axes          map[string]axisTruth
-	at            strict.Place
+	signal, idler                  armTruth
+	jitter                         float64 // s, rms between the two arrivals of a pair
+	powerNoise                     float64 // of the power monitor, rms, relative
+	temperatureNoise               float64 // of the temperature monitor, rms, Cel
+	powerWander, temperatureWander instruments.Wander
+	axes                           map[string]axisTruth
+	at                             strict.Place
 }
 
 type armTruth struct {
@@ -99,6 +105,10 @@ func (r *reader) simulation(v strict.Value) {
 	s.truth.at = t.Place()
 	s.truth.signal, s.truth.idler = readArmTruth(tm.Need("signal")), readArmTruth(tm.Need("idler"))
 	s.truth.jitter = tm.Opt("jitter").Quantity(unit.Time, 0, 1e-3)
+	s.truth.powerNoise = tm.Opt("power_noise").Quantity(unit.Share, 0, 1)
+	s.truth.temperatureNoise = tm.Opt("temperature_noise").Difference(unit.Temperature, 0, 10)
+	s.truth.powerWander = readWander(tm.Opt("power_wander"), unit.Share)
+	s.truth.temperatureWander = readWander(tm.Opt("temperature_wander"), unit.Temperature)
 	s.truth.axes = map[string]axisTruth{}
 	for _, e := range tm.Opt("axes").Map().Entries() {
 		a := e.Value.Map()
@@ -113,6 +123,17 @@ func (r *reader) simulation(v strict.Value) {
 	tm.Done()
 	m.Done()
 	r.file.Simulation = s
+}
+
+// readWander reads a slow swing about the value that stands still.
+func readWander(v strict.Value, kind unit.Kind) instruments.Wander {
+	if !v.Given() {
+		return instruments.Wander{}
+	}
+	m := v.Map()
+	w := instruments.Wander{Amplitude: m.Need("amplitude").Difference(kind, 0, 50), Period: m.Need("period").Duration(time.Minute, 30*24*time.Hour)}
+	m.Done()
+	return w
 }
 
 func readArmTruth(v strict.Value) armTruth {

@@ -374,7 +374,7 @@ func (r *reader) settings(v strict.Value) {
 		m := e.Value.Map()
 		s := Setting{Device: device(e.Name, e.Key, m)}
 		s.Unit, s.Kind = m.Need("unit").Unit()
-		s.Dialect, s.make = choose(m, func(d dialect) func(strict.Map) settingMaker { return d.setting })
+		s.Dialect, s.settingReading = choose(m, func(d dialect) func(strict.Map) settingReading { return d.setting })
 		s.Low, s.High = math.Inf(-1), math.Inf(1)
 		list := m.Need("limits")
 		if items := list.List(2, 2); len(items) == 2 && s.Kind != "" {

@@ -4,8 +4,10 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"path/filepath"
 	"slices"
 	"strings"
+	"time"
 
 	"gemel/drivers"
 	"gemel/drivers/line"
@@ -21,21 +23,33 @@ type Virtual struct {
 	sets  []*set
 }
 
+// Address is where a program finds the instrument of a line.
+type Address struct {
+	Line string
+	Path string // of a device, or "tcp://host:port"; empty in memory
+}
+
 // VirtualOptions say how the virtual instruments are reached and what happens to them.
 type VirtualOptions struct {
 	Troubles trouble.List
 	Ledger   *instruments.Ledger // nil: one in memory
+	// Folder is where the links to the instruments' pseudo-terminals appear, one a line, named after
+	// it (where there are none: files with TCP addresses). Empty: the instruments are reached in
+	// memory, by a Bench built on them and by nobody else.
+	Folder string
 }
 
 // set is the instrument behind one line.
 type set struct {
 	line       string
 	instrument instruments.Instrument
-	calls      chan instruments.Conn
+	calls      chan instruments.Conn // in memory
+	terminal   *terminal             // otherwise
 }
 
 // NewVirtual puts the instruments of a simulated bench into a world that begins now. Which one
-// stands behind a line follows from the devices that use it.
+// stands behind a line follows from the devices that use it. With a folder it also opens the
+// terminals, so that their addresses are good at once; the actors close them, or Close.
 func NewVirtual(f *File, o VirtualOptions) (*Virtual, error) {
 	if !f.Simulated() {
 		return nil, fmt.Errorf("bench: %s is a real bench; want one whose lines are simulated", f.Name)
@@ -51,6 +65,7 @@ func NewVirtual(f *File, o VirtualOptions) (*Virtual, error) {
 	t := f.Simulation.truth
 	world, err := instruments.NewWorld(instruments.WorldConfig{
 		Seed: f.Simulation.Seed, Pace: f.Simulation.Clock, Model: model, Troubles: o.Troubles, Ledger: o.Ledger,
+		PumpWander: t.powerWander, CrystalWander: t.temperatureWander,
 		Still: source.Pose{PumpW: optics.PumpW, PumpNm: optics.PumpNm, CrystalCel: optics.CrystalCel, PumpOpen: 1, SignalOpen: 1, IdlerOpen: 1,
 			RoomHz: [2]float64{t.signal.room, t.idler.room}},
 	})
@@ -65,7 +80,39 @@ func NewVirtual(f *File, o VirtualOptions) (*Virtual, error) {
 		}
 		v.sets = append(v.sets, &set{line: l.Name, instrument: i, calls: make(chan instruments.Conn)})
 	}
+	if o.Folder == "" {
+		return v, nil
+	}
+	for _, s := range v.sets {
+		if s.terminal, err = openTerminal(filepath.Join(o.Folder, s.line)); err != nil {
+			return nil, errors.Join(fmt.Errorf("line %s: %w", s.line, err), v.Close())
+		}
+	}
 	return v, nil
+}
+
+// Addresses lists where the instruments are found, in the order of the file's lines.
+func (v *Virtual) Addresses() []Address {
+	var all []Address
+	for _, s := range v.sets {
+		a := Address{Line: s.line}
+		if s.terminal != nil {
+			a.Path = s.terminal.address()
+		}
+		all = append(all, a)
+	}
+	return all
+}
+
+// Close takes the terminals away, for a caller that never ran the actors.
+func (v *Virtual) Close() error {
+	var errs []error
+	for _, s := range v.sets {
+		if s.terminal != nil {
+			errs = append(errs, s.terminal.unplug())
+		}
+	}
+	return errors.Join(errs...)
 }
 
 // cableBuffer is what the UARTs of a line keep that nobody has read yet.
@@ -79,6 +126,9 @@ func (v *Virtual) opener(l Line) (func(context.Context) (line.Port, error), erro
 		return nil, errors.New("no virtual instrument behind it")
 	}
 	s := v.sets[i]
+	if s.terminal != nil {
+		return line.Address(s.terminal.address(), line.Mode{})
+	}
 	return func(ctx context.Context) (line.Port, error) {
 		host, dev := instruments.Cable(cableBuffer)
 		select {
@@ -94,7 +144,11 @@ func (v *Virtual) opener(l Line) (func(context.Context) (line.Port, error), erro
 func (v *Virtual) Actors() []Actor {
 	var all []Actor
 	for _, s := range v.sets {
-		all = append(all, Actor{Name: "virtual " + s.instrument.Name(), Run: s.serve})
+		run := s.serve
+		if s.terminal != nil {
+			run = s.serveTerminal
+		}
+		all = append(all, Actor{Name: "virtual " + s.instrument.Name(), Run: run})
 	}
 	return all
 }
@@ -108,17 +162,49 @@ func (s *set) serve(ctx context.Context) error {
 			return nil
 		case conn := <-s.calls:
 			err := s.instrument.Serve(ctx, conn)
-			if ctx.Err() != nil {
-				return errors.Join(conn.Close(), nil)
-			}
-			if err != nil && !errors.Is(err, instruments.ErrUnplugged) {
+			if err := conn.Close(); err != nil {
 				return err
 			}
-			if err := conn.Close(); err != nil {
+			if err != nil && ctx.Err() == nil && !errors.Is(err, instruments.ErrUnplugged) {
 				return err
 			}
 		}
 	}
+}
+
+// replug is how long a pulled terminal stays away, at least: long enough for a host to notice.
+const replug = 50 * time.Millisecond
+
+// serveTerminal answers one host after another.
+func (s *set) serveTerminal(ctx context.Context) (err error) {
+	defer func() { err = errors.Join(err, s.terminal.unplug()) }()
+	for ctx.Err() == nil {
+		conn, err := s.terminal.accept(ctx)
+		if err != nil {
+			if ctx.Err() != nil {
+				return nil
+			}
+			return err
+		}
+		err = s.instrument.Serve(ctx, conn)
+		switch {
+		case ctx.Err() != nil:
+			return nil
+		case errors.Is(err, instruments.ErrUnplugged):
+			if err := s.terminal.unplug(); err != nil {
+				return err
+			}
+			if err := drivers.Pace(1).Wait(ctx, replug); err != nil {
+				return nil
+			}
+		case err != nil:
+			return err
+		}
+		if err := s.terminal.renew(); err != nil {
+			return err
+		}
+	}
+	return nil
 }
 
 // identity is what a virtual instrument says it is: what the file expects, or a name of its own.
@@ -133,18 +219,7 @@ func identity(d Device, model string) instruments.Identity {
 	return id
 }
 
-// users lists the devices on a line.
-func (f *File) users(name string) []Device {
-	var all []Device
-	for _, d := range f.devices() {
-		if d.Line == name {
-			all = append(all, d)
-		}
-	}
-	return all
-}
-
-// instrument makes what stands behind a line.
+// instrument makes what stands behind a line. checkVirtual has made sure that it is one.
 func (f *File) instrument(w *instruments.World, name string) (instruments.Instrument, error) {
 	for _, c := range f.Controllers {
 		if c.Line == name {
@@ -154,7 +229,75 @@ func (f *File) instrument(w *instruments.World, name string) (instruments.Instru
 	if f.Counter.Line == name {
 		return f.virtualCounter(w)
 	}
-	return nil, errors.New("no virtual instrument of this kind")
+	if f.Pump != nil && f.Pump.Line == name {
+		return virtualShutter(w, *f.Pump, instruments.PumpBlade)
+	}
+	for _, s := range f.Protectors {
+		if s.Line == name {
+			return virtualShutter(w, s, f.blade(s.Name))
+		}
+	}
+	for _, s := range f.Settings {
+		if s.Line == name {
+			return f.virtualSetting(w, s)
+		}
+	}
+	return f.virtualMonitor(w, name)
+}
+
+// virtualMonitor is one instrument for all sensors of a line. It has the line's name, or its only
+// sensor's.
+func (f *File) virtualMonitor(w *instruments.World, name string) (instruments.Instrument, error) {
+	t := f.Simulation.truth
+	c := instruments.MonitorConfig{Name: name, PowerNoise: t.powerNoise, CelNoise: t.temperatureNoise}
+	var mine []Sensor
+	for _, s := range f.Sensors {
+		if s.Line == name {
+			mine = append(mine, s)
+			c.Power = c.Power || s.Kind == unit.Power
+			c.Temperature = c.Temperature || s.Kind == unit.Temperature
+		}
+	}
+	if len(mine) == 0 {
+		return nil, errors.New("no virtual instrument stands behind it")
+	}
+	if len(mine) == 1 {
+		c.Name = string(mine[0].Name)
+	}
+	c.Identity = identity(mine[0].Device, "monitor")
+	return instruments.NewMonitor(w, c)
+}
+
+func virtualShutter(w *instruments.World, s Shutter, blade string) (instruments.Instrument, error) {
+	// A blade that is slower than the time the file allows it would be a mistake of the file's, and
+	// one that takes none would never be caught half open.
+	travel := max(min(s.SettleOpen, s.SettleClosed)*3/4, 1)
+	return instruments.NewShutter(w, instruments.ShutterConfig{Name: string(s.Name), Identity: identity(s.Device, "shutter"), Blade: blade, Travel: travel, Sensor: true})
+}
+
+// blade is what a protector stands in front of.
+func (f *File) blade(protector drivers.DeviceName) string {
+	for _, d := range f.Detectors {
+		switch {
+		case d.ProtectBy != protector:
+		case d.Name == f.Optics.Signal.Detector:
+			return instruments.SignalBlade
+		case d.Name == f.Optics.Idler.Detector:
+			return instruments.IdlerBlade
+		}
+	}
+	return ""
+}
+
+func (f *File) virtualSetting(w *instruments.World, s Setting) (instruments.Instrument, error) {
+	c := instruments.SettingConfig{Name: string(s.Name), Identity: identity(s.Device, "setting"), Header: s.header, Low: s.Low, High: s.High, Start: s.Low}
+	switch s.Kind {
+	case unit.Power:
+		c.Changes = instruments.PumpPower
+	case unit.Temperature:
+		c.Changes = instruments.CrystalTemperature
+	}
+	return instruments.NewSetting(w, c)
 }
 
 func (f *File) virtualStage(w *instruments.World, c Controller) (instruments.Instrument, error) {
@@ -237,6 +380,3 @@ func splitIdentity(text string) []string {
 	}
 	return fields
 }
-
-// checkLineUse finds lines with devices that no single virtual instrument speaks for.
-func (r *reader) checkLineUse() {}
