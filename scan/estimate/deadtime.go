@@ -10,7 +10,7 @@ type DeadTimeModel string
 
 // The models (Knoll, Radiation Detection and Measurement).
 const (
-	NonParalysable DeadTimeModel = "non_paralysable" // it is lost
+	NonParalysable DeadTimeModel = "non-paralysable" // it is lost
 	Paralysable    DeadTimeModel = "paralysable"     // it is lost, and starts the dead time anew
 )
 

@@ -1,0 +1,137 @@
+package estimate
+
+import (
+	"fmt"
+	"math"
+	"slices"
+
+	"gemel/protocol"
+)
+
+// Plateau says which readings make an efficiency: those whose arm stands within HalfWidthDeg of the
+// middle of its flat top. The middle always comes from other readings than the ones it admits,
+// because readings picked by their own fluctuations are biased high.
+type Plateau struct {
+	Axis         string
+	HalfWidthDeg float64
+	Centre       *Constant // from elsewhere (an earlier run, the model); nil: from the other passes of this run
+}
+
+// choose keeps the readings near the middle. With two visits or more each visit's readings are
+// judged by the middle of the others; with one, every second place along the axis by the rest.
+func (p Plateau) choose(lights []protocol.Reading, ch channels, windowS float64, no *Refusal) (kept []protocol.Reading, aside []Aside, notes []Condition) {
+	if !(p.HalfWidthDeg > 0) {
+		no.addf("half_width is %g deg; want a positive angle", p.HalfWidthDeg)
+		return nil, nil, nil
+	}
+	angle := make([]float64, len(lights))
+	for i, r := range lights {
+		a, ok := angleOf(r, p.Axis)
+		if !ok {
+			no.addf("reading %d: no angle of %q", r.Sequence, p.Axis)
+			return nil, nil, nil
+		}
+		angle[i] = a
+	}
+	fold := folds(lights, angle)
+	centre := map[int]float64{}
+	if p.Centre != nil {
+		if !(p.Centre.U > 0) {
+			no.addf("the plateau's centre is %g deg without an uncertainty; want its u", p.Centre.Value)
+			return nil, nil, nil
+		}
+		for _, f := range fold {
+			centre[f] = p.Centre.Value
+		}
+		v := p.Centre.Value
+		notes = append(notes, Condition{Name: "plateau's centre", Value: &v, Unit: "deg", Text: "from elsewhere: " + p.Centre.From})
+	} else {
+		names := slices.Compact(slices.Sorted(slices.Values(fold)))
+		if len(names) < 2 {
+			no.addf("one pass over %d places; want two visits, or places to split, or a centre from elsewhere: the centre must not come from the readings it admits", len(lights))
+			return nil, nil, nil
+		}
+		for _, f := range names {
+			var others []protocol.Reading
+			for i, r := range lights {
+				if fold[i] != f {
+					others = append(others, r)
+				}
+			}
+			v, u, err := middleOfTop(others, p.Axis, ch, windowS)
+			if err != nil {
+				no.addf("the plateau's centre for part %d cannot be found in the other readings: %v", f, err)
+				return nil, nil, nil
+			}
+			centre[f] = v
+			notes = append(notes, Condition{Name: fmt.Sprintf("plateau's centre for part %d", f), Value: &v, Unit: "deg", Text: fmt.Sprintf("± %.2g deg, from the %d readings of the other parts", u, len(others))})
+		}
+	}
+	for i, r := range lights {
+		if math.Abs(angle[i]-centre[fold[i]]) <= p.HalfWidthDeg {
+			kept = append(kept, r)
+		} else {
+			aside = append(aside, Aside{r.Sequence, fmt.Sprintf("off the plateau: %s at %.4f deg, centre %.4f ± %.4f deg", p.Axis, angle[i], centre[fold[i]], p.HalfWidthDeg)})
+		}
+	}
+	if len(kept) == 0 {
+		no.addf("no reading within %g deg of the plateau's centre; want a wider half_width or a finer step", p.HalfWidthDeg)
+	}
+	return kept, aside, notes
+}
+
+// folds gives each reading the part of the run it belongs to: its visit, or where there is only
+// one, its place along the axis, even or odd.
+func folds(lights []protocol.Reading, angle []float64) []int {
+	fold := make([]int, len(lights))
+	several := false
+	for i, r := range lights {
+		if r.Visit != nil {
+			fold[i] = *r.Visit
+		}
+		several = several || fold[i] != fold[0]
+	}
+	if several {
+		return fold
+	}
+	order := make([]int, len(lights))
+	for i := range order {
+		order[i] = i
+	}
+	slices.SortStableFunc(order, func(a, b int) int {
+		switch {
+		case angle[a] < angle[b]:
+			return -1
+		case angle[a] > angle[b]:
+			return 1
+		}
+		return 0
+	})
+	for place, i := range order {
+		fold[i] = 1 + place%2
+	}
+	return fold
+}
+
+// middleOfTop fits a flat top with soft edges to the coincidences, with the trigger counts as the
+// exposure inside the likelihood: pump drift cancels without a division.
+func middleOfTop(lights []protocol.Reading, axis string, ch channels, windowS float64) (centre, u float64, err error) {
+	var data []Spot
+	for _, r := range lights {
+		d, err := ch.read(r)
+		if err != nil {
+			return 0, 0, err
+		}
+		a, _ := angleOf(r, axis)
+		data = append(data, Spot{AngleDeg: a, Counts: d.c, Exposure: d.s, Known: d.chances * windowS})
+	}
+	var failed error
+	for _, shape := range []PeakShape{FlatTop, GaussianPeak} {
+		fit, err := FitPeak(data, shape, nil)
+		if err == nil {
+			return fit.CentreDeg(), fit.Fit.U(centreParam), nil
+		}
+		failed = err
+	}
+	return 0, 0, failed
+}

@@ -1,0 +1,245 @@
+package estimate
+
+import (
+	"encoding/json"
+	"fmt"
+	"math"
+	"strconv"
+	"strings"
+
+	"gemel/protocol"
+)
+
+// Result is a result with everything that is needed to check it. Its JSON is what `report --json`
+// prints; the first thirteen keys are fixed.
+type Result struct {
+	Run       protocol.RunID `json:"run"`
+	Kind      string         `json:"kind"`
+	Value     *float64       `json:"value"` // null: refused, see because
+	U         *float64       `json:"standard_uncertainty"`
+	Expanded  *float64       `json:"expanded_uncertainty"`
+	K         *float64       `json:"coverage_factor"`
+	Unit      string         `json:"unit"`
+	Budget    []Row          `json:"budget"`
+	Waterfall []Correction   `json:"corrections"`
+	Condition []Condition    `json:"conditions"`
+	Used      []int64        `json:"readings_used"`
+	SetAside  []Aside        `json:"readings_set_aside"`
+	Simulated *int           `json:"simulated"`
+
+	Title      string      `json:"title"`
+	Coverage   float64     `json:"coverage"`
+	KBecause   string      `json:"coverage_factor_because"`
+	Freedom    *float64    `json:"effective_degrees_of_freedom"` // null: unlimited
+	Interval   *Interval   `json:"interval"`                     // the coverage interval, symmetric or not
+	Dispersion *Dispersion `json:"dispersion"`
+	MonteCarlo *MonteCarlo `json:"monte_carlo"`
+	Warnings   []string    `json:"warnings"`
+	Because    []string    `json:"because"` // why there is no value
+
+	quantity string // what the sentence calls it
+}
+
+// Correction is one step of the waterfall, from raw to result.
+type Correction struct {
+	Step    string  `json:"step"`
+	Applied bool    `json:"applied"`
+	Amount  float64 `json:"amount"` // what the step itself came to, in Unit
+	Unit    string  `json:"unit"`
+	After   float64 `json:"value_after"`
+	Note    string  `json:"note"`
+}
+
+// Condition is one thing that the result holds for.
+type Condition struct {
+	Name  string   `json:"name"`
+	Value *float64 `json:"value"`
+	Unit  string   `json:"unit"`
+	Text  string   `json:"text"`
+}
+
+func (r *Result) note(name, text string) {
+	r.Condition = append(r.Condition, Condition{Name: name, Text: text})
+}
+
+func (r *Result) noteValue(name string, v float64, unit, text string) {
+	c := Condition{Name: name, Unit: unit, Text: text}
+	if !math.IsNaN(v) && !math.IsInf(v, 0) {
+		c.Value = &v
+	}
+	r.Condition = append(r.Condition, c)
+}
+
+// Refused is the result that says why there is none.
+func Refused(rows Rows, kind string, refusal *Refusal) Result {
+	r := newResult(rows, kind)
+	r.Because = refusal.Reasons
+	_, r.SetAside = rows.split()
+	r.tidy()
+	return r
+}
+
+func newResult(rows Rows, kind string) Result {
+	r := Result{Run: rows.Run, Title: rows.Title, Kind: kind, Unit: "1"}
+	for _, row := range rows.Readings {
+		if row.Simulated != nil {
+			r.Simulated = row.Simulated
+		}
+	}
+	return r
+}
+
+// tidy makes empty lists print as lists.
+func (r *Result) tidy() {
+	if r.Budget == nil {
+		r.Budget = []Row{}
+	}
+	if r.Waterfall == nil {
+		r.Waterfall = []Correction{}
+	}
+	if r.Condition == nil {
+		r.Condition = []Condition{}
+	}
+	if r.Used == nil {
+		r.Used = []int64{}
+	}
+	if r.SetAside == nil {
+		r.SetAside = []Aside{}
+	}
+	if r.Warnings == nil {
+		r.Warnings = []string{}
+	}
+	if r.Because == nil {
+		r.Because = []string{}
+	}
+}
+
+// JSON is the result for a program, indented.
+func (r Result) JSON() ([]byte, error) {
+	b, err := json.MarshalIndent(r, "", "  ")
+	if err != nil {
+		return nil, fmt.Errorf("result of %s: %w", r.Run, err)
+	}
+	return append(b, '\n'), nil
+}
+
+// Text is the result for a person: a sentence first, then waterfall, budget and conditions.
+func (r Result) Text() string {
+	var b strings.Builder
+	b.WriteString(r.Sentence() + "\n")
+	if r.Simulated != nil {
+		fmt.Fprintf(&b, "Simulated (clock factor %d): no instrument was calibrated.\n", *r.Simulated)
+	}
+	for _, w := range r.Warnings {
+		b.WriteString("Note: " + w + "\n")
+	}
+	if len(r.Waterfall) > 0 {
+		b.WriteString("\nFrom the counts to the result\n")
+		for _, c := range r.Waterfall {
+			state := ""
+			if !c.Applied {
+				state = "  (switched off)"
+			}
+			fmt.Fprintf(&b, "  %-42s %12s %-3s  %10s%s\n", c.Step, figure(c.Amount, 6), c.Unit, figure(c.After, 6), state)
+			if c.Note != "" {
+				b.WriteString("      " + c.Note + "\n")
+			}
+		}
+	}
+	if len(r.Budget) > 0 {
+		b.WriteString("\nUncertainty budget (JCGM 100)\n")
+		fmt.Fprintf(&b, "  %-44s %-16s %13s %-5s %11s %-2s %-12s %5s %12s %12s %8s\n", "quantity", "symbol", "estimate", "unit", "u", "", "distribution", "dof", "sensitivity", "contribution", "share")
+		for _, row := range r.Budget {
+			dof, u := "inf", figure(row.U, 3)
+			if row.Freedom != nil {
+				dof = strconv.FormatFloat(*row.Freedom, 'f', -1, 64)
+			}
+			if row.Covariance {
+				dof, u = "", ""
+			}
+			fmt.Fprintf(&b, "  %-44s %-16s %13s %-5s %11s %-2s %-12s %5s %12s %12s %7.1f%%\n", row.Quantity, row.Symbol, figure(row.Estimate, 7), row.Unit, u,
+				row.Evaluation, row.Distribution, dof, figure(row.Sensitivity, 3), figure(row.Contribution, 3), 100*row.Share)
+		}
+		if r.U != nil {
+			fmt.Fprintf(&b, "  combined standard uncertainty %s; coverage factor %s: %s\n", figure(*r.U, 3), figure(*r.K, 4), r.KBecause)
+			b.WriteString("  printed uncertainties are rounded here only; the JSON carries all digits\n")
+		}
+	}
+	if d := r.Dispersion; d != nil {
+		fmt.Fprintf(&b, "\nScatter between readings: Birge ratio %.3f over %d readings (chi square %.1f on %d degrees of freedom, p = %.3g)%s.\n", d.Birge, d.Readings, d.ChiSquare, d.Freedom, d.P,
+			map[bool]string{true: ": more than counting explains, so the counting rows are multiplied by it", false: ": counting explains it"}[d.Significant])
+	}
+	if m := r.MonteCarlo; m != nil {
+		fmt.Fprintf(&b, "\nMonte Carlo (JCGM 101), %d trials: mean %s, u %s, interval %s to %s. %s\n", m.Trials, figure(m.Mean, 6), figure(m.U, 3), figure(m.Symmetric.Low, 6), figure(m.Symmetric.High, 6), m.Sentence)
+	}
+	if len(r.Condition) > 0 {
+		b.WriteString("\nConditions\n")
+		for _, c := range r.Condition {
+			v := c.Text
+			if c.Value != nil {
+				v = strings.TrimSpace(figure(*c.Value, 6) + " " + strings.TrimPrefix(c.Unit, "1"))
+				if c.Text != "" {
+					v += " (" + c.Text + ")"
+				}
+			}
+			fmt.Fprintf(&b, "  %-36s %s\n", c.Name, v)
+		}
+	}
+	if len(r.SetAside) > 0 {
+		b.WriteString("\nSet aside\n")
+		for _, a := range r.SetAside {
+			fmt.Fprintf(&b, "  reading %d: %s\n", a.Sequence, a.Reason)
+		}
+	}
+	return b.String()
+}
+
+// Sentence says the result: value ± expanded uncertainty, k, readings kept and set aside.
+func (r Result) Sentence() string {
+	counts := fmt.Sprintf("%d readings kept, %d set aside", len(r.Used), len(r.SetAside))
+	if r.Value == nil {
+		return fmt.Sprintf("No %s from %s (%s): %s.", r.Kind, r.Run, counts, strings.Join(r.Because, "; "))
+	}
+	name := r.quantity
+	if name == "" {
+		name = r.Kind
+	}
+	unit := ""
+	if r.Unit != "1" {
+		unit = " " + r.Unit
+	}
+	if i := r.Interval; i != nil && !r.symmetric() {
+		return fmt.Sprintf("The %s is %s%s, with a %.4g %% interval of %s to %s%s that is not symmetric (%s); %s.", name, figure(*r.Value, 4), unit, 100*r.Coverage,
+			figure(i.Low, 4), figure(i.High, 4), unit, r.KBecause, counts)
+	}
+	places := decimals(*r.Expanded)
+	return fmt.Sprintf("The %s is %s ± %s%s (expanded uncertainty, k = %.2f, %.4g %% coverage); %s.", name,
+		strconv.FormatFloat(*r.Value, 'f', places, 64), strconv.FormatFloat(*r.Expanded, 'f', places, 64), unit, *r.K, 100*r.Coverage, counts)
+}
+
+func (r Result) symmetric() bool {
+	tiny := 1e-9 * *r.Expanded
+	return math.Abs(*r.Value-*r.Expanded-r.Interval.Low) <= tiny && math.Abs(*r.Value+*r.Expanded-r.Interval.High) <= tiny
+}
+
+// decimals is how many places show two significant digits of an uncertainty.
+func decimals(u float64) int {
+	if !(u > 0) || math.IsInf(u, 0) {
+		return 6
+	}
+	p := 1 - int(math.Floor(math.Log10(u)))
+	if math.Round(u*math.Pow(10, float64(p))) >= 100 { // 0.0996 is 0.10
+		p--
+	}
+	return min(max(p, 0), 12)
+}
+
+// figure prints a number with so many significant digits, plainly where that is short.
+func figure(v float64, digits int) string {
+	if a := math.Abs(v); v != 0 && (a < 1e-4 || a >= 1e10) {
+		return strconv.FormatFloat(v, 'e', digits-1, 64)
+	} else if a >= math.Pow(10, float64(digits)) {
+		return strconv.FormatFloat(v, 'f', 0, 64)
+	}
+	return strconv.FormatFloat(v, 'g', digits, 64)
+}
