@@ -4,6 +4,7 @@ import (
 	"bufio"
 	"context"
 	"strings"
+	"sync"
 	"testing"
 	"testing/synctest"
 	"time"
@@ -15,20 +16,24 @@ import (
 	"gemel/sim/trouble"
 )
 
-// model is the source of a small calibration bench; its numbers are invented.
-func model(t testing.TB) *source.Model {
-	t.Helper()
+// sourceModel is that of a small calibration bench; its numbers are invented.
+var sourceModel = sync.OnceValues(func() (*source.Model, error) {
 	set, err := crystal.Named("bbo-kato-1986")
 	if err != nil {
-		t.Fatal(err)
+		return nil, err
 	}
 	arm := source.Arm{Aperture: source.Iris, RadiusMm: 1.5, DistanceMm: 500, Transmittance: 0.8,
 		Filter:             source.Filter{CentreNm: 810, WidthNm: 10, Shape: source.FilterGaussian},
 		Detector:           source.Detector{Efficiency: 0.5, DarkHz: 300, DeadTimeS: 45e-9, Model: source.NonParalysable},
 		FluorescenceHzPerW: 20000, StrayHzPerW: 10000}
-	m, err := source.New(source.Optics{Crystal: set, Process: phasematch.EOO, CutDeg: 29.2, ThicknessMm: 2, CrystalCel: 20,
+	return source.New(source.Optics{Crystal: set, Process: phasematch.EOO, CutDeg: 29.2, ThicknessMm: 2, CrystalCel: 20,
 		PumpNm: 405, PumpWaistUm: 100, PumpW: 0.05, PairHzPerMw: 1000, Signal: arm, Idler: arm,
 		Counter: source.Counter{WindowS: 10e-9, JitterS: 0.5e-9, Logic: source.EveryPair}})
+})
+
+func model(t testing.TB) *source.Model {
+	t.Helper()
+	m, err := sourceModel()
 	if err != nil {
 		t.Fatal(err)
 	}

@@ -28,6 +28,8 @@ type Instrument interface {
 	// its cause; or until the plug is pulled, and returns ErrUnplugged with the connection closed.
 	// The instrument's state outlives the connection. One connection at a time.
 	Serve(ctx context.Context, conn Conn) error
+	// Plugged is false while a trouble has the device's plug pulled: its line cannot be opened.
+	Plugged() bool
 }
 
 // Conn is the instrument's end of a line: an *End, a pseudo-terminal's master, a TCP connection.

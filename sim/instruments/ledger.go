@@ -116,7 +116,12 @@ func NewLedger(out io.Writer) *Ledger {
 }
 
 func (l *Ledger) add(r Record) {
-	r.At = r.At.UTC()
+	r.At = r.At.Round(0) // what is written reads back the same
+	if r.Gate != nil {
+		g := *r.Gate
+		g.Opened = g.Opened.Round(0)
+		r.Gate = &g
+	}
 	l.mu.Lock()
 	defer l.mu.Unlock()
 	l.records = append(l.records, r)

@@ -85,9 +85,6 @@ func NewPlain(w *World, cfg PlainConfig) (*Plain, error) {
 	return p, nil
 }
 
-// Name is the device's name in the bench file.
-func (p *Plain) Name() string { return p.cfg.Name }
-
 func (p *Plain) heard(now time.Time, b byte) {
 	if b == 0x18 {
 		p.in.clear()

@@ -81,9 +81,6 @@ func NewRotary(w *World, cfg RotaryConfig) (*Rotary, error) {
 	return r, nil
 }
 
-// Name is the device's name in the bench file.
-func (r *Rotary) Name() string { return r.cfg.Name }
-
 func (r *Rotary) reset() { r.in.clear(); r.motion, r.feed = -1, 0 }
 
 func (r *Rotary) restarted(now time.Time) {

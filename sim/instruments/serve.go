@@ -48,10 +48,19 @@ type saying struct {
 	text string
 }
 
-// Latency is how long an instrument takes to answer if its configuration does not say otherwise.
+// defaultLatency is how long an instrument takes to answer if its configuration does not say otherwise.
 const defaultLatency = time.Millisecond
 
+// Name is the device's name in the bench file.
 func (a *actor) Name() string { return a.name }
+
+// Plugged is false while the device's plug is pulled.
+func (a *actor) Plugged() bool {
+	a.w.mu.Lock()
+	defer a.w.mu.Unlock()
+	a.w.settle(a.w.Now())
+	return !a.unplugged
+}
 
 // instant is the first instant of this device not before t (real time).
 func (a *actor) instant(t time.Time) time.Time {

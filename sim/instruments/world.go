@@ -97,7 +97,7 @@ func NewWorld(cfg WorldConfig) (*World, error) {
 	if cfg.Ledger == nil {
 		cfg.Ledger = NewLedger(nil)
 	}
-	now := time.Now().Round(0)
+	now := time.Now().UTC()
 	w := &World{cfg: cfg, origin: now, pace: time.Duration(cfg.Pace), ledger: cfg.Ledger,
 		arms: map[string]*axis{}, blades: map[string]*ramp{}, sets: map[string]*ramp{}, open: map[*gate]bool{},
 		lampHz: newRamp(now, 0), pump: newRamp(now, 1)}
