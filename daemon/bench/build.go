@@ -209,3 +209,29 @@ func (f *File) homing(controller drivers.DeviceName) (order []drivers.AxisName, 
 	}
 	return order, len(mine) > 0 && mine[0].Unattended
 }
+
+// Devices lists every instrument of the bench, in the order of the file's blocks.
+func (b *Bench) Devices() []drivers.Device {
+	var all []drivers.Device
+	for _, s := range b.Stages {
+		all = append(all, s)
+	}
+	all = append(all, b.Counter)
+	if b.Pump != nil {
+		all = append(all, b.Pump)
+	}
+	protectors := map[drivers.DeviceName]bool{}
+	for _, d := range b.Detectors {
+		if d.Protect != nil && !protectors[d.Protect.Name()] {
+			protectors[d.Protect.Name()] = true
+			all = append(all, d.Protect)
+		}
+	}
+	for _, s := range b.Sensors {
+		all = append(all, s)
+	}
+	for _, s := range b.Settings {
+		all = append(all, s)
+	}
+	return all
+}
