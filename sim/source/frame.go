@@ -132,9 +132,12 @@ func (m *Model) rays(b *band, s *stand, pairs bool) []ray {
 		edge = min(k*open*m.o.PumpWaistUm/1000, 12)
 	}
 	if s.arm.Aperture == Gaussian {
-		return s.rays(m.rules, points((5+1.3*phase+edge)*m.effort, 3, mostHermite), points((10+edge)*m.effort, 8, 2*mostHermite), m.mirrored)
+		return s.rays(m.rules, points((5+1.5*phase+edge)*m.effort, 3, mostEvenly), points((5+edge)*m.effort, 4, mostEvenly), m.mirrored)
 	}
-	return s.rays(m.rules, points((3+0.7*phase+0.9*edge)*m.effort, 2, 48), points((8+1.6*phase+2.5*edge)*m.effort, 6, 96), m.mirrored)
+	if !pairs {
+		return s.rays(m.rules, points((3+0.9*phase)*m.effort, 2, 48), points((8+2*phase)*m.effort, 6, 96), m.mirrored)
+	}
+	return s.rays(m.rules, points((2.5+0.65*phase+0.75*edge)*m.effort, 2, 48), points((7+1.5*phase+2*edge)*m.effort, 6, 96), m.mirrored)
 }
 
 // at is a node of the table, computed when it is first asked for.

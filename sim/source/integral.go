@@ -80,7 +80,7 @@ func (s *stand) rays(r *rules, swell, sweep int, mirrored bool) []ray {
 	a := s.arm.RadiusMm
 	if s.arm.Aperture == Gaussian {
 		// exp(-2 r²/a²): a normal density of rms a/2 in each direction, times pi a²/2.
-		h, v := r.hermite[min(swell, mostHermite)], r.hermite[min(max(4, sweep/2), mostHermite)]
+		h, v := r.normal(float64(swell), 0, 1), r.normal(float64(sweep), 0, 1)
 		for i, x := range h.x {
 			for j, y := range v.x {
 				add(x*a/2, y*a/2, math.Pi*a*a/2*h.w[i]*v.w[j])
@@ -190,7 +190,7 @@ func (b *band) choose(r *rules, first Filter, partner *Filter, at ray, effort fl
 		last = now
 	}
 	if normal {
-		h := r.hermite[points((6+1.2*turn)*effort, 3, mostHermite)]
+		h := r.normal(5, turn/3, effort)
 		for i, x := range h.x {
 			// The density of the rule goes out again, the filters come in with the colour.
 			add(centre+rms*x, h.w[i]*rms*math.Sqrt(2*math.Pi)*math.Exp(x*x/2))
@@ -260,7 +260,7 @@ func (b *band) single(r *rules, rays []ray, waistMm, offset, effort float64) flo
 			if g > 0 {
 				ex, ey = gx/g, gy/g
 			}
-			h := r.hermite[points((4+3*g/waistMm*half)*effort, 3, mostHermite)]
+			h := r.normal(4, g/waistMm*half, effort)
 			ks := p.SignalNormal(sx, sy)
 			inner := 0.0
 			for i, x := range h.x {
@@ -338,26 +338,22 @@ func (b *band) both(r *rules, rays []ray, partner *stand, waistMm, offset, effor
 				}
 				// x = a sin(t) takes the corners off the chords' ends.
 				t0, t1 := math.Asin(lo/a), math.Asin(hi/a)
-				g := r.legendre[points((12+1.3*slope*min(rx, a)*half)*effort, 6, 64)]
+				g := r.legendre[points((10+1.1*slope*half*(hi-lo)/2)*effort, 6, mostLegendre)]
 				for i, u := range g.x {
 					st, ct := math.Sincos((t0+t1)/2 + (t1-t0)/2*u)
 					x, chord := a*st, a*ct
 					mid := cy - m12/m22*(x-cx)
 					low, high := (-chord-mid)/ry, (chord-mid)/ry
-					share := (math.Erf(high/math.Sqrt2) - math.Erf(low/math.Sqrt2)) / 2
-					if share < 1e-9 {
-						continue
+					share, shift, spread := 1.0, 0.0, 1.0
+					if low > -6 || high < 6 { // else the chord cuts nothing off
+						if share = (math.Erf(high/math.Sqrt2) - math.Erf(low/math.Sqrt2)) / 2; share < 1e-9 {
+							continue
+						}
+						el, eh := bell(low), bell(high)
+						shift = (el - eh) / share
+						spread = max(0, 1-shift*shift+(low*el-high*eh)/share)
 					}
-					el, eh := bell(low), bell(high)
-					shift := (el - eh) / share
-					spread := 1 - shift*shift
-					if el > 0 {
-						spread += low * el / share
-					}
-					if eh > 0 {
-						spread -= high * eh / share
-					}
-					y, e := mid+ry*shift, ry*math.Sqrt(max(0, spread))
+					y, e := mid+ry*shift, ry*math.Sqrt(spread)
 					w := g.w[i] * (t1 - t0) / 2 * chord * math.Exp(-(x-cx)*(x-cx)*mx/2) * share * ry * math.Sqrt(2*math.Pi)
 					if thin {
 						inner += w * value(x, y)
@@ -377,7 +373,7 @@ func (b *band) both(r *rules, rays []ray, partner *stand, waistMm, offset, effor
 					continue
 				}
 				rx, ry := math.Sqrt(n22/dn), 1/math.Sqrt(n22)
-				h := r.hermite[points((5+3*slope*rx*half)*effort, 3, mostHermite)]
+				h := r.normal(5, slope*rx*half, effort)
 				for i, u := range h.x {
 					x := ex + rx*u
 					mid := ey - m12/n22*(x-ex)
@@ -400,10 +396,5 @@ func (b *band) both(r *rules, rays []ray, partner *stand, waistMm, offset, effor
 	return total
 }
 
-// bell is the standard normal density; 0 far out, so that products with infinity do not appear.
-func bell(x float64) float64 {
-	if math.Abs(x) > 30 {
-		return 0
-	}
-	return math.Exp(-x*x/2) / math.Sqrt(2*math.Pi)
-}
+// bell is the standard normal density.
+func bell(x float64) float64 { return math.Exp(-x*x/2) / math.Sqrt(2*math.Pi) }

@@ -30,65 +30,97 @@ func legendre(n int) nodes {
 	return r
 }
 
-// hermite returns the Gauss-Hermite rule of n points for the standard normal density: the weights
-// add up to one.
-func hermite(n int) nodes {
-	r := nodes{make([]float64, n), make([]float64, n)}
-	// Zeros of the normalised Hermite functions by bisection between those of the rule before.
-	value := func(x float64, n int) float64 {
+// hermites returns the Gauss-Hermite rules of 1 to most points for the standard normal density:
+// the weights of each add up to one. The zeros of one rule lie between those of the next.
+func hermites(most int) []nodes {
+	value := func(x float64, n int) float64 { // normalised Hermite polynomial
 		p, last := 1.0, 0.0
 		for k := 1; k <= n; k++ {
 			p, last = (x*p-math.Sqrt(float64(k-1))*last)/math.Sqrt(float64(k)), p
 		}
 		return p
 	}
-	before := []float64{}
-	for k := 1; k <= n; k++ {
-		edge := 2*math.Sqrt(float64(k)) + 2
-		fence := append(append([]float64{-edge}, before...), edge)
-		now := make([]float64, k)
-		for i := range k {
-			lo, hi := fence[i], fence[i+1]
-			rising := value(hi, k) > value(lo, k)
-			for range 80 {
+	all := make([]nodes, most+1)
+	for n := 1; n <= most; n++ {
+		edge := 2*math.Sqrt(float64(n)) + 2
+		r := nodes{make([]float64, n), make([]float64, n)}
+		for i := range n {
+			lo, hi := -edge, edge
+			if i > 0 {
+				lo = all[n-1].x[i-1]
+			}
+			if i < n-1 {
+				hi = all[n-1].x[i]
+			}
+			rising := value(hi, n) > value(lo, n)
+			for hi-lo > 1e-15 {
 				mid := (lo + hi) / 2
-				if (value(mid, k) > 0) == rising {
+				if mid == lo || mid == hi {
+					break
+				}
+				if (value(mid, n) > 0) == rising {
 					hi = mid
 				} else {
 					lo = mid
 				}
 			}
-			now[i] = (lo + hi) / 2
+			r.x[i] = (lo + hi) / 2
+			v := value(r.x[i], n-1)
+			r.w[i] = 1 / (float64(n) * v * v)
 		}
-		before = now
+		all[n] = r
 	}
-	for i, x := range before {
-		v := value(x, n-1)
-		r.x[i], r.w[i] = x, 1/(float64(n)*v*v)
+	return all
+}
+
+// evenly is a rule of n equidistant points for the standard normal density, weights adding up to
+// one. It beats Hermite's where the other factor oscillates.
+func evenly(n int) nodes {
+	r := nodes{make([]float64, n), make([]float64, n)}
+	sum := 0.0
+	for i := range n {
+		r.x[i] = 9.6 * ((float64(i)+0.5)/float64(n) - 0.5)
+		r.w[i] = math.Exp(-r.x[i] * r.x[i] / 2)
+		sum += r.w[i]
+	}
+	for i := range n {
+		r.w[i] /= sum
 	}
 	return r
 }
 
 const (
 	mostLegendre = 96
-	mostHermite  = 32
+	mostHermite  = 16
+	mostEvenly   = 128
 )
 
 // rules holds the quadrature rules of every size that is used, made once.
 type rules struct {
 	legendre [mostLegendre + 1]nodes
-	hermite  [mostHermite + 1]nodes
+	hermite  []nodes
+	evenly   [mostEvenly + 1]nodes
 }
 
 func newRules() *rules {
-	r := &rules{}
+	r := &rules{hermite: hermites(mostHermite)}
 	for n := 1; n <= mostLegendre; n++ {
 		r.legendre[n] = legendre(n)
 	}
-	for n := 1; n <= mostHermite; n++ {
-		r.hermite[n] = hermite(n)
+	for n := 1; n <= mostEvenly; n++ {
+		r.evenly[n] = evenly(n)
 	}
 	return r
+}
+
+// normal is a rule for the standard normal density times sinc² of a phase that grows by phase over
+// one rms. base is the number of points without it.
+func (r *rules) normal(base, phase, effort float64) nodes {
+	if n := (base + 3*phase) * effort; n <= mostHermite && phase < 1.2 {
+		return r.hermite[points(n, 3, mostHermite)]
+	}
+	// Equidistant points fail at frequencies beyond 2 pi/step less the density's own spread.
+	return r.evenly[points(9.6*(2*phase+5)/(2*math.Pi)*effort, 8, mostEvenly)]
 }
 
 // points rounds a wished number of points to one that there is a rule for.

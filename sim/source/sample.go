@@ -92,3 +92,24 @@ func binomial(rng *rand.Rand, n uint64, p float64) uint64 {
 		}
 	}
 }
+
+// gamma draws from a gamma distribution of unit scale (Marsaglia and Tsang, ACM Trans. Math.
+// Software 26, 363 (2000), recalled from memory and held by a chi-square test).
+func gamma(rng *rand.Rand, shape float64) float64 {
+	if shape < 1 {
+		return gamma(rng, shape+1) * math.Pow(1-rng.Float64(), 1/shape)
+	}
+	d := shape - 1./3
+	c := 1 / math.Sqrt(9*d)
+	for {
+		x := rng.NormFloat64()
+		v := 1 + c*x
+		if v <= 0 {
+			continue
+		}
+		v = v * v * v
+		if math.Log(1-rng.Float64()) < x*x/2+d-d*v+d*math.Log(v) {
+			return d * v
+		}
+	}
+}
