@@ -52,7 +52,8 @@ const (
 )
 
 // Serve answers requests until ctx ends, and then returns nil after the handlers that run have
-// answered. The handlers' context outlives ctx: what was begun is ended properly.
+// answered. The handlers' context outlives ctx: what was begun is ended properly. The connection
+// need not be up yet.
 func Serve(ctx context.Context, conn *nats.Conn, keeper Keeper, c Config) error {
 	service, err := micro.AddService(conn, micro.Config{
 		Name: Name, Version: semantic(c.Version), Description: "control of a photon-pair bench",
@@ -80,10 +81,6 @@ func Serve(ctx context.Context, conn *nats.Conn, keeper Keeper, c Config) error 
 		if err != nil {
 			return fmt.Errorf("remote: %s: %w", verb, err)
 		}
-	}
-	// The subscriptions are on their way; who is told that we serve must find them.
-	if err := conn.FlushWithContext(ctx); err != nil && ctx.Err() == nil {
-		return fmt.Errorf("remote: %w", err)
 	}
 	<-ctx.Done()
 	return nil

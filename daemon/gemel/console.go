@@ -1,0 +1,95 @@
+package main
+
+import (
+	"context"
+	"fmt"
+	"io"
+	"os"
+	"strings"
+	"time"
+
+	"golang.org/x/term"
+
+	"gemel/daemon/bench"
+	"gemel/daemon/keeper"
+	"gemel/protocol"
+)
+
+func isTerminal(w io.Writer) bool {
+	f, ok := w.(*os.File)
+	return ok && term.IsTerminal(int(f.Fd()))
+}
+
+func loadBench(path string) (*bench.File, error) { return bench.Load(path) }
+
+// caution says what the program is not, once, before anything moves.
+func (c *console) caution(f *bench.File) {
+	if f.Simulated() {
+		fmt.Fprintf(c.err, "bench %s is simulated, %d bench seconds in a real one: nothing real moves, and everything recorded says so\n", f.Name, int(f.Pace()))
+		return
+	}
+	fmt.Fprintln(c.err, "gemel is no safety function: laser class, eyewear, interlocks and high voltage are for the local laser safety officer, local codes and licensed practice; stages move without warning")
+	for _, name := range f.Unprotected() {
+		fmt.Fprintf(c.err, "DETECTOR %s CANNOT BE PROTECTED by this program: its bench file names no protector; room light under bias may destroy it\n", name)
+	}
+}
+
+// progress tells how far the run is: one sentence that is written over on a terminal, a line now
+// and then elsewhere.
+func (c *console) progress(ctx context.Context, k *keeper.Keeper) error {
+	every := 10 * time.Second
+	if c.terminal {
+		every = 200 * time.Millisecond
+	}
+	tick := time.NewTicker(every)
+	defer tick.Stop()
+	last := ""
+	for {
+		select {
+		case <-ctx.Done():
+			if c.terminal && last != "" {
+				fmt.Fprint(c.err, "\r\x1b[K")
+			}
+			return nil
+		case <-tick.C:
+		}
+		text := sentence(k.Status(ctx))
+		if text == last {
+			continue
+		}
+		last = text
+		if c.terminal {
+			fmt.Fprint(c.err, "\r\x1b[K"+text)
+		} else {
+			fmt.Fprintln(c.err, text)
+		}
+	}
+}
+
+// sentence says a status in words.
+func sentence(s protocol.Status) string {
+	if s.Run == "" {
+		return fmt.Sprintf("Bench %s is idle.", s.Bench)
+	}
+	var b strings.Builder
+	fmt.Fprintf(&b, "Run %s is %s", s.Run, s.State)
+	if len(s.Causes) > 0 {
+		words := make([]string, len(s.Causes))
+		for i, c := range s.Causes {
+			words[i] = string(c)
+		}
+		fmt.Fprintf(&b, " (%s)", strings.Join(words, ", "))
+	}
+	fmt.Fprintf(&b, " with %d of %d readings accepted", s.ReadingsAccepted, s.ReadingsPlanned)
+	if s.ReadingsSetAside > 0 {
+		fmt.Fprintf(&b, ", %d set aside", s.ReadingsSetAside)
+	}
+	if s.TimeLeft != nil {
+		fmt.Fprintf(&b, ", about %s left", s.TimeLeft.Duration().Round(time.Second))
+	}
+	b.WriteString(".")
+	if (s.State == protocol.Holding || s.State.Final()) && s.Reason != "" {
+		b.WriteString(" " + s.Reason)
+	}
+	return b.String()
+}

@@ -1,0 +1,255 @@
+package main
+
+import (
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"time"
+
+	"gemel/protocol"
+	"gemel/protocol/client"
+	"gemel/protocol/strict"
+)
+
+// remoteFlags say which daemon is meant: the one of a data folder, or one by URL.
+type remoteFlags struct {
+	Data  string `default:"gemel-data" placeholder:"DIR" help:"Data folder of the daemon on this machine."`
+	NATS  string `name:"nats" placeholder:"URL" help:"Another machine's NATS; needs --creds and --on."`
+	Creds string `placeholder:"FILE" help:"Credentials for --nats."`
+	On    string `placeholder:"BENCH" help:"Bench behind --nats."`
+	JSON  bool   `name:"json" help:"Print JSON."`
+}
+
+// connect finds the daemon.
+func (f remoteFlags) connect(role string) (*client.Client, error) {
+	if f.NATS == "" {
+		return client.ConnectFolder(f.Data, role)
+	}
+	if f.Creds == "" || f.On == "" {
+		return nil, errUse{errors.New("--nats needs --creds FILE and --on BENCH")}
+	}
+	return client.Connect(client.Options{URL: f.NATS, Creds: f.Creds, Bench: f.On, Name: "gemel"})
+}
+
+// requestTime bounds a request, and is its expiry: one that arrives later does nothing.
+const requestTime = 20 * time.Second
+
+func (f remoteFlags) with(ctx context.Context, role string, do func(context.Context, *client.Client) error) error {
+	c, err := f.connect(role)
+	if err != nil {
+		return err
+	}
+	defer c.Close()
+	within, cancel := context.WithTimeout(ctx, requestTime)
+	defer cancel()
+	err = do(within, c)
+	if r, ok := errors.AsType[*protocol.Refusal](err); ok && len(r.Findings) > 0 {
+		return &strict.Error{Findings: r.Findings}
+	}
+	return err
+}
+
+func (c *console) json(v any) error { return json.NewEncoder(c.out).Encode(v) }
+
+type startCommand struct {
+	remoteFlags
+	Recipe string `placeholder:"FILE" help:"Recipe to send." xor:"recipe"`
+	Name   string `placeholder:"NAME" help:"Name of a recipe in the daemon's folder." xor:"recipe"`
+	Key    string `help:"The same key twice is one run; made up if not given."`
+}
+
+func (startCommand) Help() string {
+	return "Example:\n  gemel start --recipe configs/demo-recipe.yaml"
+}
+
+func (c *startCommand) Run(ctx context.Context, con *console) error {
+	q := protocol.StartRequest{RecipeName: c.Name, Key: orElse(c.Key, newKey()), Who: whoami()}
+	if (c.Recipe == "") == (c.Name == "") {
+		return errUse{errors.New("want --recipe FILE or --name NAME")}
+	}
+	if c.Recipe != "" {
+		text, err := strict.ReadFile(c.Recipe)
+		if err != nil {
+			return err
+		}
+		q.Recipe = string(text)
+	}
+	return c.with(ctx, protocol.ControlRole, func(ctx context.Context, cl *client.Client) error {
+		r, err := cl.Start(ctx, q)
+		if err != nil {
+			return err
+		}
+		if c.JSON {
+			return con.json(r)
+		}
+		fmt.Fprintf(con.out, "queued as %s\n", r.Run)
+		return nil
+	})
+}
+
+// runFlags name a run, or leave it to be the current one.
+type runFlags struct {
+	remoteFlags
+	Which string `arg:"" optional:"" name:"run" help:"The run; without it the current one."`
+}
+
+func (c *runFlags) ask(ctx context.Context, con *console, do func(*client.Client, context.Context, protocol.RunRequest) (protocol.RunReply, error)) error {
+	return c.with(ctx, protocol.ControlRole, func(ctx context.Context, cl *client.Client) error {
+		run := protocol.RunID(c.Which)
+		if run == "" {
+			s, err := cl.Status(ctx)
+			if err != nil {
+				return err
+			}
+			if s.Run == "" || s.State.Final() {
+				return errors.New("no run is active; name one, or see gemel status")
+			}
+			run = s.Run
+		}
+		r, err := do(cl, ctx, protocol.RunRequest{Run: run, Who: whoami()})
+		if err != nil {
+			return err
+		}
+		if c.JSON {
+			return con.json(r)
+		}
+		fmt.Fprintf(con.out, "run %s is %s", r.Run, r.State)
+		for i, cause := range r.Causes {
+			fmt.Fprintf(con.out, "%s%s", map[bool]string{true: " because of ", false: ", "}[i == 0], cause)
+		}
+		if !r.Recorded {
+			fmt.Fprint(con.out, "; done, not recorded: nothing can be written at the moment")
+		}
+		fmt.Fprintln(con.out)
+		return nil
+	})
+}
+
+type stopCommand struct{ runFlags }
+
+func (stopCommand) Help() string { return "Example:\n  gemel stop" }
+func (c *stopCommand) Run(ctx context.Context, con *console) error {
+	return c.ask(ctx, con, (*client.Client).Stop)
+}
+
+type holdCommand struct{ runFlags }
+
+func (holdCommand) Help() string { return "Example:\n  gemel hold" }
+func (c *holdCommand) Run(ctx context.Context, con *console) error {
+	return c.ask(ctx, con, (*client.Client).Hold)
+}
+
+type resumeCommand struct{ runFlags }
+
+func (resumeCommand) Help() string {
+	return "Example:\n  gemel resume\n\nWhere a controller lost its zero, this is your word that its axes may search for it now: be there."
+}
+func (c *resumeCommand) Run(ctx context.Context, con *console) error {
+	return c.ask(ctx, con, (*client.Client).Resume)
+}
+
+type statusCommand struct{ remoteFlags }
+
+func (statusCommand) Help() string { return "Example:\n  gemel status --json" }
+func (c *statusCommand) Run(ctx context.Context, con *console) error {
+	return c.with(ctx, protocol.WatchRole, func(ctx context.Context, cl *client.Client) error {
+		s, err := cl.Status(ctx)
+		if err != nil {
+			return err
+		}
+		if c.JSON {
+			return con.json(s)
+		}
+		fmt.Fprintln(con.out, sentence(s))
+		return nil
+	})
+}
+
+type followCommand struct {
+	remoteFlags
+	Which string `arg:"" optional:"" name:"run" help:"The run; without it everything on the bench."`
+	All   bool   `help:"Begin with what the stream holds already."`
+	Once  bool   `help:"End when the run named has ended."`
+}
+
+func (followCommand) Help() string {
+	return "Example:\n  gemel follow --all --json | head\n\nWith --json each line is one journal entry as it was published."
+}
+
+func (c *followCommand) Run(ctx context.Context, con *console) error {
+	cl, err := c.connect(protocol.WatchRole)
+	if err != nil {
+		return err
+	}
+	defer cl.Close()
+	from := int64(0)
+	if c.All {
+		from = 1
+	}
+	for e, err := range cl.Follow(ctx, protocol.RunID(c.Which), from) {
+		if gap, ok := errors.AsType[*client.Gap](err); ok {
+			fmt.Fprintln(con.err, "gemel:", gap)
+			continue
+		}
+		if err != nil {
+			return err
+		}
+		if c.JSON {
+			fmt.Fprintf(con.out, "%s\n", e.Body)
+		} else if err := tell(con, e); err != nil {
+			return err
+		}
+		if c.Once && ended(e) {
+			return nil
+		}
+	}
+	return nil
+}
+
+func ended(e protocol.Entry) bool {
+	var ev protocol.Event
+	return e.Kind == protocol.EventEntry && json.Unmarshal(e.Body, &ev) == nil && ev.Kind == protocol.Ended
+}
+
+// tell prints one entry as a line for people.
+func tell(con *console, e protocol.Entry) error {
+	switch e.Kind {
+	case protocol.ReadingEntry:
+		var r protocol.Reading
+		if err := json.Unmarshal(e.Body, &r); err != nil {
+			return err
+		}
+		what := string(r.Kind)
+		if r.Point != nil {
+			what = fmt.Sprintf("point %d visit %d", *r.Point, *r.Visit)
+		}
+		fmt.Fprintf(con.out, "%s  %s %d  %s:", r.EndedAt.Local().Format("15:04:05"), r.Run, r.Sequence, what)
+		for _, a := range r.Angles {
+			fmt.Fprintf(con.out, " %s %s deg", a.Axis, a.After.Fixed(3))
+		}
+		for _, n := range r.Counts {
+			fmt.Fprintf(con.out, " %s %d", n.Channel, n.Counts)
+		}
+		fmt.Fprintf(con.out, " in %.4g s", r.Gate.Duration().Seconds())
+		if !r.Accepted {
+			fmt.Fprintf(con.out, "; set aside: %s", r.Reason)
+		}
+	case protocol.EventEntry:
+		var ev protocol.Event
+		if err := json.Unmarshal(e.Body, &ev); err != nil {
+			return err
+		}
+		fmt.Fprintf(con.out, "%s  %s %d  %s", ev.At.Local().Format("15:04:05"), ev.Run, ev.Sequence, ev.Text)
+	case protocol.PointEntry:
+		var p protocol.Points
+		if err := json.Unmarshal(e.Body, &p); err != nil {
+			return err
+		}
+		fmt.Fprintf(con.out, "%s  %s %d  %s decided (%s)", p.At.Local().Format("15:04:05"), p.Run, p.Sequence, count(len(p.Points), "point"), p.Grounds)
+	default:
+		fmt.Fprintf(con.out, "%s %d  %s", e.Run, e.Sequence, e.Kind)
+	}
+	_, err := fmt.Fprintln(con.out)
+	return err
+}

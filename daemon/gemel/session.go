@@ -1,0 +1,269 @@
+package main
+
+import (
+	"context"
+	"crypto/rand"
+	"encoding/hex"
+	"errors"
+	"fmt"
+	"os"
+	"os/user"
+	"path/filepath"
+	"strings"
+	"time"
+
+	"github.com/nats-io/nats.go"
+	"github.com/rs/zerolog"
+
+	"gemel/daemon/bench"
+	"gemel/daemon/broker"
+	"gemel/daemon/courier"
+	"gemel/daemon/crew"
+	"gemel/daemon/keeper"
+	"gemel/daemon/logbook"
+	"gemel/daemon/remote"
+	"gemel/protocol"
+	"gemel/protocol/strict"
+	"gemel/scan"
+	"gemel/scan/recipe"
+	"gemel/sim/instruments"
+	"gemel/sim/trouble"
+)
+
+// benchFlags are shared by the commands that build a bench.
+type benchFlags struct {
+	Bench  string `required:"" placeholder:"FILE" help:"Bench file."`
+	Data   string `default:"gemel-data" placeholder:"DIR" help:"Data folder."`
+	Lines  string `placeholder:"DIR" help:"Use instruments that already run: links DIR/<line name>."`
+	Listen string `name:"nats-listen" placeholder:"HOST:PORT" help:"Where the broker listens (loopback, free port)."`
+	Home   bool   `help:"A person is there: axes without a zero may search for it."`
+}
+
+// session is a bench brought to life: lines, virtual instruments, logbook, broker, keeper.
+type session struct {
+	file   *bench.File
+	book   *logbook.Book
+	keeper *keeper.Keeper
+	broker *broker.Broker
+	log    zerolog.Logger
+
+	courier *courier.Courier
+	crews   []*crew.Group
+	cleanup []func() // run in reverse: what was started first ends last
+}
+
+func parseRecipe(name string, text []byte) (*recipe.Recipe, error) { return recipe.Parse(name, text) }
+
+// planner works recipes out for a bench.
+func planner(f *bench.File, name string) func(string) (scan.Plan, error) {
+	return func(text string) (scan.Plan, error) {
+		r, err := parseRecipe(name, []byte(text))
+		if err != nil {
+			return scan.Plan{}, err
+		}
+		return r.Plan(f.Facts())
+	}
+}
+
+// open builds and starts everything but the keeper's own work. Whatever was started is closed
+// again when it fails.
+func open(ctx context.Context, flags benchFlags, recipeFolder string, log zerolog.Logger) (_ *session, err error) {
+	s := &session{log: log}
+	defer func() {
+		if err != nil {
+			s.close()
+		}
+	}()
+	if s.file, err = bench.Load(flags.Bench); err != nil {
+		return nil, err
+	}
+	if flags.Lines != "" && !s.file.Simulated() {
+		return nil, errUse{errors.New("--lines is for simulated benches; a real bench names its devices in the bench file")}
+	}
+	if s.book, err = logbook.Open(flags.Data); err != nil {
+		if errors.Is(err, logbook.ErrLocked) {
+			return nil, fmt.Errorf("%w; one daemon a data folder: stop it, or name another --data", err)
+		}
+		return nil, err
+	}
+	s.cleanup = append(s.cleanup, func() { _ = s.book.Close() })
+
+	options := bench.Options{Links: flags.Lines, Log: log}
+	if s.file.Simulated() && flags.Lines == "" {
+		folder, err := os.MkdirTemp("", "gemel-lines-")
+		if err != nil {
+			return nil, err
+		}
+		s.cleanup = append(s.cleanup, func() { _ = os.RemoveAll(folder) })
+		if options.Virtual, err = bench.NewVirtual(s.file, bench.VirtualOptions{Folder: folder, Ledger: instruments.NewLedger(nil), Troubles: trouble.List{}}); err != nil {
+			return nil, err
+		}
+	}
+	built, err := bench.Build(s.file, options)
+	if err != nil {
+		return nil, err
+	}
+	// Lines and instruments outlive ctx: after a signal the rest state still has to be reached.
+	lines := s.crew(ctx)
+	for _, a := range built.Actors() {
+		lines.Go(a.Name, a.Run)
+	}
+	if s.broker, err = broker.New(broker.Config{Bench: s.file.Name, Dir: flags.Data, Listen: orElse(flags.Listen, s.file.NATSListen), Log: func(text string) { log.Warn().Msg(text) }}); err != nil {
+		return nil, err
+	}
+	s.keeper = keeper.New(keeper.Config{
+		Book: s.book, Bench: &built.Bench, BenchText: s.file.Text, Version: version, Plan: planner(s.file, "recipe"),
+		Recipe: recipesIn(recipeFolder), Armed: armedIn(flags.Data, s.file.Simulated()), MayHome: flags.Home,
+		ResumeAfterRestart: s.file.AfterRestart == bench.AfterRestartResume || s.file.AfterRestart == "" && s.file.Simulated(),
+		Behind:             func() int64 { return s.courier.Behind() },
+		Step:               killpoint(),
+	})
+	return s, s.serve(ctx)
+}
+
+// crew starts a group that close will stop and wait for.
+func (s *session) crew(ctx context.Context) *crew.Group {
+	g := crew.New(context.WithoutCancel(ctx), s.panicked)
+	s.crews = append(s.crews, g)
+	s.cleanup = append(s.cleanup, func() {
+		g.Stop()
+		_ = g.Wait()
+	})
+	return g
+}
+
+// connect opens a connection of the daemon to its broker. What is published while the broker is
+// away fails at once: nothing that moves a bench may be delivered later.
+func (s *session) connect(name string) (*nats.Conn, error) {
+	c, err := s.broker.Connect(name, nats.ReconnectBufSize(-1))
+	if err == nil {
+		s.cleanup = append(s.cleanup, c.Close)
+	}
+	return c, err
+}
+
+// serve starts the broker and what lives on it.
+func (s *session) serve(ctx context.Context) error {
+	broken := s.crew(ctx)
+	broken.Go("broker", s.broker.Run)
+	select {
+	case <-s.broker.Ready():
+	case <-broken.Context().Done():
+		return broken.Wait()
+	case <-time.After(20 * time.Second):
+		return errors.New("broker: not ready after 20 s")
+	}
+	if err := s.carry(ctx); err != nil {
+		return err
+	}
+	conn, err := s.connect("remote")
+	if err != nil {
+		return err
+	}
+	front := s.crew(ctx)
+	front.Go("remote", func(ctx context.Context) error {
+		return remote.Serve(ctx, conn, s.keeper, remote.Config{Bench: s.file.Name, Version: version, Panicked: func(verb string, value any, stack []byte) {
+			s.log.Error().Str("request", verb).Interface("panic", value).Bytes("stack", stack).Msg("a request failed by a bug in this program; the bench goes on")
+		}})
+	})
+	front.Go("beat", func(ctx context.Context) error {
+		return remote.RunBeat(ctx, conn, func() protocol.Status { return s.keeper.Status(ctx) })
+	})
+	return nil
+}
+
+// carry starts the courier. At the end it gets a moment for what is left; the rest waits for the
+// next start.
+func (s *session) carry(ctx context.Context) error {
+	conn, err := s.connect("courier")
+	if err != nil {
+		return err
+	}
+	stream, err := courier.NewStream(conn, courier.StreamConfig{Bench: s.file.Name})
+	if err != nil {
+		return err
+	}
+	s.courier = courier.New(s.file.Name, s.book, stream, func(err error) {
+		if err != nil {
+			s.log.Warn().Err(err).Msg("entries wait to be published; the logbook has them")
+		} else {
+			s.log.Info().Msg("entries are published")
+		}
+	})
+	s.cleanup = append(s.cleanup, func() {
+		within, cancel := context.WithTimeout(context.WithoutCancel(ctx), 3*time.Second)
+		defer cancel()
+		if err := s.courier.Finish(within); err != nil {
+			s.log.Warn().Err(err).Int64("entries", s.courier.Behind()).Msg("not everything is published; the next start goes on")
+		}
+	})
+	g := s.crew(ctx)
+	g.Go("courier", s.courier.Run)
+	s.book.OnAppend(s.courier.Nudge)
+	return nil
+}
+
+func (s *session) panicked(p *crew.Panic) {
+	s.log.Error().Str("actor", p.Actor).Interface("panic", p.Value).Bytes("stack", p.Stack).Msg("a bug in this program; the bench is brought to rest")
+}
+
+// close ends everything in the reverse of its start: what takes requests first, the logbook last.
+func (s *session) close() {
+	for i := len(s.cleanup) - 1; i >= 0; i-- {
+		s.cleanup[i]()
+	}
+	s.cleanup = nil
+}
+
+// fated ends with ctx, or with the failure of anything that the keeper stands on; its cause says
+// which.
+func (s *session) fated(ctx context.Context) (context.Context, func()) {
+	fated, cancel := context.WithCancelCause(ctx)
+	var stops []func() bool
+	for _, g := range s.crews {
+		stops = append(stops, context.AfterFunc(g.Context(), func() { cancel(fmt.Errorf("a part of the program failed: %w", context.Cause(g.Context()))) }))
+	}
+	return fated, func() {
+		for _, stop := range stops {
+			stop()
+		}
+		cancel(nil)
+	}
+}
+
+// recipesIn reads recipes by name from one folder, and from nowhere else.
+func recipesIn(folder string) func(string) (string, error) {
+	if folder == "" {
+		return nil
+	}
+	return func(name string) (string, error) {
+		name = strings.TrimSuffix(name, ".yaml")
+		if !protocol.IsToken(name) {
+			return "", fmt.Errorf("recipe name %q; want letters, digits, \"-\" and \"_\" only", name)
+		}
+		text, err := strict.ReadFile(filepath.Join(folder, name+".yaml"))
+		return string(text), err
+	}
+}
+
+func orElse(text, otherwise string) string {
+	if text != "" {
+		return text
+	}
+	return otherwise
+}
+
+// newKey makes a key for one start, so that a repeated request is one run.
+func newKey() string {
+	b := make([]byte, 12)
+	_, _ = rand.Read(b) // never fails
+	return hex.EncodeToString(b)
+}
+
+// whoami names the person for the logbook.
+func whoami() string {
+	if u, err := user.Current(); err == nil && u.Username != "" {
+		return u.Username
+	}
+	return "somebody at the command line"
+}

@@ -1,0 +1,510 @@
+package nighttest
+
+import (
+	"bytes"
+	"encoding/json"
+	"fmt"
+	"math"
+	"slices"
+	"strings"
+	"time"
+
+	"gemel/protocol"
+	"gemel/sim/instruments"
+)
+
+// Judge says everything that is wrong with a night. It is pure: the same time line, the same
+// words. An empty answer means:
+//
+//   - every run's journal is gapless, and no entry stands in it twice;
+//   - each gate of the world is exactly one slice or glance of one reading with the same counts, or
+//     a gate that a reading names as lost, or lies before an interruption that is written down;
+//   - each slice of a reading is one gate of the world: none invented, none counted twice;
+//   - the true angle of every accepted, not doubtful reading was within tolerance of what is written;
+//   - a reading is durable before the next gate opens and before anything moves on;
+//   - an entry is durable before it is published; the stream is the journal, in order, once;
+//   - each visit is accepted once at most, and a finished run has them all or names what it gave up;
+//   - in every hold and after every end the pump is closed and the detectors are protected;
+//   - no gate opens and nothing moves after a stop was answered;
+//   - light above a trip rate closes the detector's shutter at once;
+//   - a controller that restarted is written down before any angle of its is believed again;
+//   - each kill of a run that was under way is followed by an interruption.
+func Judge(line []Moment, facts Facts) []string {
+	j := &judge{facts: facts, runs: map[protocol.RunID]*runState{}}
+	for _, m := range line {
+		j.now = m.At
+		switch {
+		case m.World != nil:
+			j.world(m.World)
+		case m.Journal != nil:
+			j.journal(m.Journal)
+		case m.Stream != nil:
+			j.stream(m.Stream)
+		case m.Process != nil:
+			j.process(m.Process)
+		}
+	}
+	j.close()
+	return j.wrong
+}
+
+type judge struct {
+	facts Facts
+	now   time.Time
+	wrong []string
+
+	runs      map[protocol.RunID]*runState
+	durable   []string // ids in the order of commit
+	bodies    map[string][]byte
+	published int
+
+	gates    []*gate // opened and not yet explained, in order
+	open     *gate
+	moved    time.Time // start of the last motion
+	lastGate time.Time // end of the last gate
+	pumpOpen bool
+	guards   map[string]bool // open protectors
+	bright   map[string]time.Time
+	killed   bool           // and not started again yet
+	orphans  bool           // gates before a kill wait for an interruption to explain them
+	current  protocol.RunID // the run that moves the bench
+	stopped  protocol.RunID
+	zeroLost map[string]time.Time // controllers that restarted, until somebody wrote it down
+	doubted  []span
+	angles   []angleCheck
+}
+
+type span struct {
+	run      protocol.RunID
+	from, to int64
+}
+
+type angleCheck struct {
+	run      protocol.RunID
+	sequence int64
+	text     string
+}
+
+type gate struct {
+	opened time.Time
+	truth  *instruments.GateTruth // nil while open
+	closed time.Time
+	ended  bool
+	tag    uint64
+	counts bool // its counts exist
+}
+
+type runState struct {
+	next     int64
+	state    protocol.State
+	causes   []protocol.Cause
+	began    bool
+	accepted map[[2]int]int64
+	givenUp  int
+	darks    int
+	owed     bool // killed while under way: an interruption has to come
+}
+
+func (j *judge) say(format string, args ...any) {
+	j.wrong = append(j.wrong, j.now.UTC().Format("15:04:05.000")+" "+fmt.Sprintf(format, args...))
+}
+
+func (j *judge) run(id protocol.RunID) *runState {
+	r := j.runs[id]
+	if r == nil {
+		r = &runState{next: 1, accepted: map[[2]int]int64{}}
+		j.runs[id] = r
+	}
+	return r
+}
+
+func (j *judge) world(r *instruments.Record) {
+	switch r.Kind {
+	case instruments.GateOpened:
+		j.gateOpened(r)
+	case instruments.GateClosed, instruments.GateAborted:
+		j.gateEnded(r)
+	case instruments.MoveStarted, instruments.HomeStarted:
+		j.moved = r.At
+		j.mustNotAct("%s: a motion began", r.Device)
+	case instruments.BladeStarted:
+		if r.Device == j.facts.Pump && r.Text == "open" && j.resting() {
+			j.say("the pump shutter was told to open while run %s rests", j.current)
+		}
+	case instruments.BladeOpened, instruments.BladeClosed:
+		open := r.Kind == instruments.BladeOpened
+		if r.Device == j.facts.Pump {
+			j.pumpOpen = open
+		}
+		if j.guards == nil {
+			j.guards = map[string]bool{}
+		}
+		j.guards[r.Device] = open
+		if !open {
+			for _, d := range j.facts.Detectors {
+				if d.Protector == r.Device {
+					delete(j.bright, d.Name)
+				}
+			}
+		}
+	case instruments.Restarted:
+		if slices.Contains(j.facts.Controls, r.Device) {
+			if j.zeroLost == nil {
+				j.zeroLost = map[string]time.Time{}
+			}
+			j.zeroLost[r.Device] = r.At
+		}
+	}
+	j.checkBright()
+}
+
+// resting says whether the current run holds, or none is active.
+func (j *judge) resting() bool {
+	r := j.runs[j.current]
+	return r != nil && (r.state == protocol.Holding || r.state.Final())
+}
+
+// mustNotAct complains when something moves or counts that has no right to.
+func (j *judge) mustNotAct(format string, args ...any) {
+	what := fmt.Sprintf(format, args...)
+	if j.killed {
+		j.say("%s while no process lives", what)
+	}
+	if j.stopped != "" && j.stopped == j.current {
+		j.say("%s after the stop of run %s was answered", what, j.stopped)
+	}
+}
+
+func (j *judge) gateOpened(r *instruments.Record) {
+	g := &gate{opened: r.At, tag: r.Gate.Tag}
+	j.gates = append(j.gates, g)
+	j.open = g
+	j.mustNotAct("%s: gate %d opened", r.Device, g.tag)
+	if run := j.runs[j.current]; j.resting() && !slices.Contains(run.causes, protocol.ByLight) {
+		j.say("gate %d opened while run %s is %s", g.tag, j.current, run.state)
+	}
+}
+
+func (j *judge) gateEnded(r *instruments.Record) {
+	g := j.open
+	if g == nil || g.tag != r.Gate.Tag {
+		j.say("gate %d ended and was never seen to open", r.Gate.Tag)
+		return
+	}
+	g.truth, g.closed, g.ended, g.counts = r.Gate, r.At, true, r.Kind == instruments.GateClosed
+	j.open = nil
+	j.lastGate = r.At
+	if r.Gate.Seen == nil {
+		return
+	}
+	for _, d := range j.facts.Detectors {
+		seen := r.Gate.Seen.Signal
+		if d.Name == "idler" {
+			seen = r.Gate.Seen.Idler
+		}
+		// Well above the trip rate for the whole gate: nobody could have missed it.
+		if d.TripHz > 0 && g.counts && seen.MeanHz > 1.5*d.TripHz && d.Protector != "" {
+			if j.bright == nil {
+				j.bright = map[string]time.Time{}
+			}
+			if _, known := j.bright[d.Name]; !known {
+				j.bright[d.Name] = r.At
+			}
+		}
+	}
+}
+
+// protectWithin is how long a detector may stay open after a gate that showed too much light:
+// the exchanges that read the gate, a resynchronisation among them, and the blade's travel.
+const protectWithin = 5 * time.Second
+
+func (j *judge) checkBright() {
+	for name, since := range j.bright {
+		if j.killed {
+			continue // nobody lives to close it; the start will
+		}
+		if j.now.Sub(since) > protectWithin {
+			j.say("the %s detector is still open %s after a gate far above its trip rate", name, j.now.Sub(since).Round(time.Millisecond))
+			delete(j.bright, name)
+		}
+	}
+}
+
+func (j *judge) journal(e *protocol.Entry) {
+	r := j.run(e.Run)
+	if e.Sequence != r.next {
+		j.say("run %s: entry %d became durable where %d was due", e.Run, e.Sequence, r.next)
+	}
+	r.next = e.Sequence + 1
+	j.durable = append(j.durable, e.ID())
+	if j.bodies == nil {
+		j.bodies = map[string][]byte{}
+	}
+	j.bodies[e.ID()] = e.Body
+	switch e.Kind {
+	case protocol.ReadingEntry:
+		var reading protocol.Reading
+		if err := json.Unmarshal(e.Body, &reading); err != nil {
+			j.say("run %s: entry %d: %v", e.Run, e.Sequence, err)
+			return
+		}
+		j.reading(r, &reading)
+	case protocol.EventEntry:
+		var ev protocol.Event
+		if err := json.Unmarshal(e.Body, &ev); err != nil {
+			j.say("run %s: entry %d: %v", e.Run, e.Sequence, err)
+			return
+		}
+		j.event(r, &ev)
+	}
+}
+
+func (j *judge) reading(r *runState, b *protocol.Reading) {
+	where := fmt.Sprintf("run %s: reading %d", b.Run, b.Sequence)
+	if r.owed {
+		j.say("%s was written after a kill, before the interruption was", where)
+	}
+	slices := b.Slices
+	if b.Glance != nil {
+		slices = append([]protocol.Slice{*b.Glance}, slices...)
+	}
+	var last *gate
+	for _, s := range slices {
+		if g := j.explain(where, s); g != nil {
+			last = g
+			if b.Accepted {
+				j.angle(b, g)
+			}
+		}
+	}
+	// What is left unexplained now was opened for this reading or before it.
+	unexplained := 0
+	for _, g := range j.gates {
+		if !g.opened.After(j.now) {
+			unexplained++
+		}
+	}
+	if j.orphans {
+		unexplained = 0 // an interruption has to explain them, and is checked there
+	}
+	if unexplained > b.LostGates {
+		j.say("%s names %d lost gates; %d gates that were opened are in no reading", where, b.LostGates, unexplained)
+	}
+	j.gates = nil
+	if last != nil {
+		if j.lastGate.After(last.closed) || j.open != nil {
+			j.say("%s: a gate was opened before it was durable", where)
+		}
+		if j.moved.After(last.closed) {
+			j.say("%s: something moved before it was durable", where)
+		}
+	}
+	for device, since := range j.zeroLost {
+		if b.Accepted && b.Kind == protocol.Light && b.EndedAt.After(since) {
+			j.say("%s was accepted after %s restarted, and nobody wrote down that its zero is lost", where, device)
+		}
+	}
+	if !b.Accepted {
+		return
+	}
+	switch b.Kind {
+	case protocol.Light:
+		key := [2]int{*b.Point, *b.Visit}
+		if before, twice := r.accepted[key]; twice {
+			j.say("%s: point %d visit %d was accepted already as entry %d", where, key[0], key[1], before)
+		}
+		r.accepted[key] = b.Sequence
+	case protocol.Dark:
+		r.darks++
+	}
+	j.totals(where, b)
+}
+
+// explain finds the gate of the world that a slice is, and compares every count.
+func (j *judge) explain(where string, s protocol.Slice) *gate {
+	tag := uint64(math.MaxUint64)
+	for _, c := range s.Counts {
+		if c.Channel == j.facts.Tag {
+			tag = c.Counts
+		}
+	}
+	for i, g := range j.gates {
+		if g.tag != tag || !g.counts {
+			continue
+		}
+		j.gates = slices.Delete(j.gates, i, i+1)
+		for k, name := range j.facts.Channels {
+			if k >= len(s.Counts) || s.Counts[k].Channel != name || k >= len(g.truth.Counts) || s.Counts[k].Counts != g.truth.Counts[k] {
+				j.say("%s: gate %d counted %v; written is %v", where, tag, g.truth.Counts, s.Counts)
+				break
+			}
+		}
+		if math.Abs(s.Gate.Duration().Seconds()-g.truth.GateS) > 1e-6+1e-3*g.truth.GateS {
+			j.say("%s: gate %d lasted %g s; written is %s", where, tag, g.truth.GateS, s.Gate.Duration())
+		}
+		return g
+	}
+	j.say("%s has a slice with tag %d: no such gate was closed since the entry before", where, tag)
+	return nil
+}
+
+func (j *judge) angle(b *protocol.Reading, g *gate) {
+	for _, a := range b.Angles {
+		tol, known := j.facts.Tolerance[a.Axis]
+		truth, seen := g.truth.Axes[a.Axis]
+		if !known || !seen {
+			continue
+		}
+		for _, written := range []float64{a.Before.Degrees(), a.After.Degrees(), a.Target.Degrees()} {
+			if math.Abs(truth.LowDeg-written) > tol || math.Abs(truth.HighDeg-written) > tol {
+				j.angles = append(j.angles, angleCheck{b.Run, b.Sequence, fmt.Sprintf("run %s: reading %d: %s was truly at %.4f to %.4f deg; written is %.4f (target %.4f, before %.4f, after %.4f)",
+					b.Run, b.Sequence, a.Axis, truth.LowDeg, truth.HighDeg, written, a.Target.Degrees(), a.Before.Degrees(), a.After.Degrees())})
+				break
+			}
+		}
+	}
+}
+
+// totals checks that the sums are the slices' sums.
+func (j *judge) totals(where string, b *protocol.Reading) {
+	for k, c := range b.Counts {
+		var total uint64
+		for _, s := range b.Slices {
+			if c.Channel == j.facts.Tag {
+				total = s.Counts[k].Counts
+			} else {
+				total += s.Counts[k].Counts
+			}
+		}
+		if total != c.Counts {
+			j.say("%s: channel %s sums to %d; written is %d", where, c.Channel, total, c.Counts)
+		}
+	}
+	if len(b.Slices) == 0 {
+		j.say("%s was accepted without a slice", where)
+	}
+}
+
+func (j *judge) event(r *runState, ev *protocol.Event) {
+	where := fmt.Sprintf("run %s: %s", ev.Run, ev.Kind)
+	if ev.Run == protocol.BenchRun {
+		return
+	}
+	switch ev.Kind {
+	case protocol.Began:
+		j.current, r.began = ev.Run, true
+	case protocol.Interrupted:
+		j.current, r.owed, j.orphans = ev.Run, false, false
+		j.gates = nil // what was open when the process died is named by this
+	case protocol.Held, protocol.WentOn:
+		r.owed = r.owed && ev.Kind != protocol.WentOn
+	case protocol.SetAside:
+		r.givenUp++
+	case protocol.Doubted:
+		from, _ := ev.Detail["from_sequence"].(float64)
+		to, _ := ev.Detail["to_sequence"].(float64)
+		j.doubted = append(j.doubted, span{ev.Run, int64(from), int64(to)})
+	case protocol.Trouble, protocol.HomedEvent:
+	}
+	if ev.Kind == protocol.Trouble || ev.Kind == protocol.Held || ev.Kind == protocol.HomedEvent || ev.Kind == protocol.Interrupted {
+		for device := range j.zeroLost {
+			if strings.Contains(ev.Text, device) || strings.Contains(fmt.Sprint(ev.Detail), device) {
+				delete(j.zeroLost, device)
+			}
+		}
+	}
+	if r.state.Final() {
+		j.say("%s after the run was %s for ever", where, r.state)
+	}
+	r.state, r.causes = ev.State, ev.Causes
+	excused := strings.Contains(ev.Text, "NOT REACHED") || ev.Kind == protocol.Interrupted && ev.Text == ""
+	if (r.state == protocol.Holding || r.state.Final()) && r.began && !excused {
+		j.atRest(where)
+	}
+	if r.state == protocol.Holding && len(r.causes) == 0 {
+		j.say("%s: holding without a cause", where)
+	}
+	if ev.Kind == protocol.Ended && ev.State == protocol.Finished && j.facts.Visits > 0 {
+		if got := len(r.accepted) + r.givenUp; got < j.facts.Visits {
+			j.say("%s: finished with %d visits accepted and %d given up; want %d", where, len(r.accepted), r.givenUp, j.facts.Visits)
+		}
+		if r.darks+r.givenUp < j.facts.MinDarks {
+			j.say("%s: finished with %d darks; want %d at least", where, r.darks, j.facts.MinDarks)
+		}
+	}
+	if ev.Kind == protocol.Ended && ev.Text == "" {
+		j.say("%s without a reason", where)
+	}
+}
+
+// atRest checks the rest state at the moment that a hold or an end becomes durable.
+func (j *judge) atRest(where string) {
+	if j.pumpOpen {
+		j.say("%s: the pump is not blocked", where)
+	}
+	for _, d := range j.facts.Detectors {
+		if d.Protector != "" && j.guards[d.Protector] {
+			j.say("%s: the %s detector is not protected", where, d.Name)
+		}
+	}
+	if j.open != nil {
+		j.say("%s: a gate is open", where)
+	}
+}
+
+func (j *judge) stream(e *protocol.Entry) {
+	body, known := j.bodies[e.ID()]
+	switch {
+	case !known:
+		j.say("entry %s was published before it was durable", e.ID())
+	case !bytes.Equal(body, e.Body):
+		j.say("entry %s was published with other bytes than it has in the journal", e.ID())
+	case j.published < len(j.durable) && j.durable[j.published] != e.ID():
+		j.say("entry %s was published where %s was due", e.ID(), j.durable[j.published])
+	}
+	j.published++
+}
+
+func (j *judge) process(p *Process) {
+	switch p.What {
+	case Killed:
+		j.killed = true
+		for id, r := range j.runs {
+			if id != protocol.BenchRun && r.began && !r.state.Final() && !slices.Contains(r.causes, protocol.ByRestart) {
+				r.owed = true
+			}
+		}
+		j.orphans = len(j.gates) > 0 || j.open != nil
+	case Started:
+		j.killed = false
+	case StopAnswered:
+		j.stopped = p.Run
+		if r := j.runs[p.Run]; r == nil || r.state != protocol.Stopped {
+			j.say("the stop of run %s was answered before it was written", p.Run)
+		}
+	case HoldAnswered:
+		if r := j.runs[p.Run]; r == nil || r.state != protocol.Holding && !r.state.Final() {
+			j.say("the hold of run %s was answered before it was written", p.Run)
+		}
+	}
+}
+
+func (j *judge) close() {
+	for _, a := range j.angles {
+		doubtful := slices.ContainsFunc(j.doubted, func(s span) bool { return s.run == a.run && a.sequence >= s.from && a.sequence <= s.to })
+		if !doubtful {
+			j.wrong = append(j.wrong, a.text)
+		}
+	}
+	for id, r := range j.runs {
+		if r.owed {
+			j.say("run %s was killed, and no interruption is written", id)
+		}
+	}
+	if len(j.gates) > 0 {
+		j.say("%d gates at the end are in no entry, the first with tag %d", len(j.gates), j.gates[0].tag)
+	}
+	if j.facts.CaughtUp && j.published != len(j.durable) {
+		j.say("%d entries are durable, %d are in the stream", len(j.durable), j.published)
+	}
+}
