@@ -228,6 +228,7 @@ func TestLedgerIsInOrderAndOnPaper(t *testing.T) {
 		s := plug(t, t.Context(), arms(t, w, nil))
 		c := plug(t, t.Context(), counter(t, w, nil))
 		c.send(":INIT\n")
+		time.Sleep(time.Millisecond)
 		s.expect("G0 A5", "TAKEN")
 		time.Sleep(time.Second)
 		c.count(time.Second)

@@ -1,8 +1,11 @@
 package instruments
 
 import (
+	"cmp"
 	"encoding/json"
 	"io"
+	"slices"
+	"strings"
 	"sync"
 	"time"
 )
@@ -130,12 +133,17 @@ func (l *Ledger) add(r Record) {
 	}
 }
 
-// Records returns everything so far. What ended without anybody asking since (a gate, a motion)
+// Records returns everything so far, ordered by time, and at one instant by device: which of two
+// devices asked at the same instant was heard first means nothing. What ended without anybody asking since (a gate, a motion)
 // is not in it before World.Settle.
 func (l *Ledger) Records() []Record {
 	l.mu.Lock()
 	defer l.mu.Unlock()
-	return append([]Record(nil), l.records...)
+	records := slices.Clone(l.records)
+	slices.SortStableFunc(records, func(a, b Record) int {
+		return cmp.Or(a.At.Compare(b.At), strings.Compare(a.Device, b.Device))
+	})
+	return records
 }
 
 // Err is the first error of writing to the ledger's file, after which nothing more was written.
