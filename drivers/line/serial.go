@@ -70,7 +70,7 @@ func Address(address string, mode Mode) (func(context.Context) (Port, error), er
 			if err != nil {
 				return nil, err
 			}
-			return conn, nil
+			return &tcpPort{conn.(*net.TCPConn)}, nil
 		}, nil
 	}
 	if address == "" || strings.Contains(address, "://") {
@@ -82,6 +82,9 @@ func Address(address string, mode Mode) (func(context.Context) (Port, error), er
 	}
 	return func(context.Context) (Port, error) { return openSerial(address, native) }, nil
 }
+
+// soon is too short a time to sleep: a read with a nearer deadline only looks at what is there.
+const soon = time.Millisecond
 
 // openSerial locks the device before it opens it: opening alone would already disturb another
 // program's settings, and the exclusive mode that the library asks for does not hold against a
@@ -131,6 +134,9 @@ func (p *serialPort) Read(b []byte) (int, error) {
 	timeout := serial.NoTimeout
 	if !p.readBy.IsZero() {
 		timeout = max(time.Until(p.readBy), 0)
+		if timeout < soon {
+			timeout = 0 // the library then only looks, in microseconds
+		}
 	}
 	if err := p.port.SetReadTimeout(timeout); err != nil {
 		return 0, err

@@ -9,7 +9,7 @@ import (
 )
 
 // Port is what a line needs of whatever carries its bytes: a net.Conn and an in-memory cable
-// are ports as they stand, Serial makes one of a serial device. A read or write that outlives
+// are ports as they stand, Address makes them of serial devices and TCP addresses. A read or write that outlives
 // its deadline must return an error that wraps os.ErrDeadlineExceeded; every other error means
 // that the port is lost. A read that finds bytes waiting returns them at once.
 type Port interface {
@@ -48,7 +48,7 @@ type Settings struct {
 const slice = 20 * time.Millisecond
 
 // sip is how long a look at what already waits in the input may take. A deadline that has
-// passed would make most ports return without looking.
+// passed would make most ports return without looking; those from Address do not sleep for it.
 const sip = 200 * time.Microsecond
 
 func (s Settings) withDefaults() Settings {
