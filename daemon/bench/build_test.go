@@ -1,13 +1,20 @@
 package bench
 
 import (
+	"bufio"
 	"context"
+	"errors"
+	"fmt"
+	"os"
+	"strings"
 	"testing"
 	"testing/synctest"
 	"time"
 
+	"gemel/daemon/crew"
 	"gemel/drivers"
 	"gemel/protocol/unit"
+	"gemel/sim/trouble"
 )
 
 // demo reads the demo bench.
@@ -119,4 +126,240 @@ func TestTheDemoBenchTakesAReadingThroughPseudoTerminals(t *testing.T) {
 	if g := oneReading(t, b); g.Counts["pairs"] < 1000 {
 		t.Errorf("counts %v; want pairs on the ring", g.Counts)
 	}
+}
+
+func parse(t *testing.T, text string) *File {
+	t.Helper()
+	f, err := Parse("bench.yaml", []byte(text))
+	if err != nil {
+		t.Fatal(err)
+	}
+	return f
+}
+
+// with returns the demo bench's text with one piece replaced.
+func with(t *testing.T, old, now string) string {
+	t.Helper()
+	text := demo(t).Text
+	if strings.Count(text, old) != 1 {
+		t.Fatalf("%q stands %d times in the demo bench; want once", old, strings.Count(text, old))
+	}
+	return strings.Replace(text, old, now, 1)
+}
+
+func TestAVirtualSettingChangesTheWorldAndIsReadBack(t *testing.T) {
+	text := with(t, "\nsensors:\n", `
+settings:
+  laser: {line: laser, dialect: scpi, unit: mW, answer_unit: W, limits: [0 mW, 60 mW], tolerance: 100 uW, headers: {set: ":SOUR:POW {value}", get: ":SOUR:POW?"}}
+  delay: {line: delay, dialect: scpi, unit: ns, limits: [-20 ns, 20 ns], tolerance: 1 ps, headers: {set: ":SOUR:DEL {value}", get: ":SOUR:DEL?"}}
+
+sensors:
+`)
+	f := parse(t, strings.Replace(text, "\nlines:\n", "\nlines:\n  laser: {device: simulated}\n  delay: {device: simulated}\n", 1))
+	synctest.Test(t, func(t *testing.T) {
+		b, _ := live(t, f, VirtualOptions{})
+		connectAll(t, b)
+		for i, c := range []struct{ set, want float64 }{{30, 30}, {-2.5, -2.5}} {
+			got, err := b.Settings[i].Set(t.Context(), c.set)
+			if err != nil || got < c.want-0.1 || got > c.want+0.1 {
+				t.Errorf("%s set to %g reads %g, %v; want %g %s", b.Settings[i].Name(), c.set, got, err, c.want, b.Settings[i].Unit())
+			}
+		}
+		for _, s := range b.Sensors {
+			if s.Name() != "pump_power" {
+				continue
+			}
+			if v, err := s.Read(t.Context()); err != nil || v < 29 || v > 31 {
+				t.Errorf("the power monitor reads %g mW, %v; want the 30 mW that were set", v, err)
+			}
+		}
+	})
+}
+
+func TestAnotherInstrumentAtTheLinesPathIsRefused(t *testing.T) {
+	folder := t.TempDir()
+	other := parse(t, with(t, `identity: "Skerry Workshop,counter,3,2.0"`, `identity: "Skerry Workshop,counter,4,2.0"`))
+	v, err := NewVirtual(other, VirtualOptions{Folder: folder})
+	if err != nil {
+		t.Fatal(err)
+	}
+	b, err := Build(demo(t), Options{Links: folder})
+	if err != nil {
+		t.Fatal(err)
+	}
+	b.virtual = v // so that live actors are all run by one group
+	ctx, cancel := context.WithCancel(t.Context())
+	done := make(chan error)
+	go func() { done <- b.Run(ctx, nil) }()
+	defer func() {
+		cancel()
+		if err := <-done; err != nil {
+			t.Error(err)
+		}
+	}()
+	if err := b.Pump.Connect(t.Context()); err != nil {
+		t.Errorf("the shutter, which is the right one: %v", err)
+	}
+	err = b.Counter.Connect(t.Context())
+	if drivers.RemedyOf(err) != drivers.GiveUp {
+		t.Errorf("got %v, remedy %s; want another counter refused", err, drivers.RemedyOf(err))
+	}
+}
+
+func TestAPulledAndReplacedPlugIsFoundAgainUnderItsLink(t *testing.T) {
+	for name, folder := range map[string]string{"in memory": "", "on a pseudo-terminal": t.TempDir()} {
+		t.Run(name, func(t *testing.T) {
+			b, v := live(t, demo(t), VirtualOptions{Folder: folder})
+			if err := b.Pump.Connect(t.Context()); err != nil {
+				t.Fatal(err)
+			}
+			if err := v.World.Let(trouble.Trouble{Kind: trouble.Unplug, Device: "shutter", For: 20 * time.Second}); err != nil {
+				t.Fatal(err)
+			}
+			failures := 0
+			for range 1000 { // bounded by the line's own patience with each attempt
+				_, err := b.Pump.State(t.Context())
+				if err == nil && failures > 0 {
+					return
+				}
+				if err != nil {
+					failures++
+					if err := b.Pump.Connect(t.Context()); err != nil && drivers.RemedyOf(err) == drivers.GiveUp {
+						t.Fatal(err)
+					}
+				}
+			}
+			t.Errorf("%d failures; want the plug noticed and the shutter found again", failures)
+		})
+	}
+}
+
+func TestInstrumentsAreAnsweredThroughAnyFileHandle(t *testing.T) {
+	v, err := NewVirtual(demo(t), VirtualOptions{Folder: t.TempDir()})
+	if err != nil {
+		t.Fatal(err)
+	}
+	ctx, cancel := context.WithCancel(t.Context())
+	g := crew.New(ctx, nil)
+	for _, a := range v.Actors() {
+		g.Go(a.Name, a.Run)
+	}
+	defer func() {
+		cancel()
+		if err := g.Wait(); err != nil {
+			t.Error(err)
+		}
+		for _, a := range v.Addresses() {
+			if _, err := os.Lstat(a.Path); !errors.Is(err, os.ErrNotExist) {
+				t.Errorf("the link of %s is left behind", a.Line)
+			}
+		}
+	}()
+	for _, a := range v.Addresses() {
+		want := map[string]string{"counter": "Skerry Workshop,counter,3,2.0\n", "pump_shutter": "Skerry Workshop,shutter,8,1.1\n"}[a.Line]
+		if want == "" {
+			continue
+		}
+		if strings.HasPrefix(a.Path, "tcp://") {
+			t.Skip("no pseudo-terminals on this system")
+		}
+		host, err := os.OpenFile(a.Path, os.O_RDWR, 0)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if _, err := host.WriteString("*IDN?\n"); err != nil {
+			t.Fatal(err)
+		}
+		answer, err := bufio.NewReader(host).ReadString('\n')
+		if err != nil || answer != want {
+			t.Errorf("%s answered %q, %v; want %q", a.Line, answer, err, want)
+		}
+		if err := host.Close(); err != nil {
+			t.Fatal(err)
+		}
+	}
+}
+
+func TestABenchIsRealOrSimulatedAndBuildsAccordingly(t *testing.T) {
+	lab, err := Load("../../configs/lab-bench.yaml")
+	if err != nil {
+		t.Fatal(err)
+	}
+	b, err := Build(lab, Options{})
+	if err != nil {
+		t.Fatal(err)
+	}
+	if b.Simulated || b.Pace != 1 || len(b.Lines) != 3 || len(b.Actors()) != 3 || len(b.Devices()) != 4 {
+		t.Errorf("simulated %t, pace %d, %d lines, %d actors, %d devices; want a real bench of 3 lines and 4 devices", b.Simulated, b.Pace, len(b.Lines), len(b.Actors()), len(b.Devices()))
+	}
+	if b.Detectors[0].Protect == nil || b.Detectors[0].Protect != b.Detectors[1].Protect {
+		t.Error("the shield is two shutters; want one in front of both detectors")
+	}
+	if _, err := NewVirtual(lab, VirtualOptions{}); err == nil {
+		t.Error("virtual instruments for a real bench; want them refused")
+	}
+	if _, err := Build(lab, Options{Links: "x"}); err == nil {
+		t.Error("links for a real bench; want them refused")
+	}
+	if _, err := Build(demo(t), Options{}); err == nil {
+		t.Error("a simulated bench with no instruments; want it refused")
+	}
+	if got := demo(t).Pace(); got != 100 {
+		t.Errorf("the demo's pace is %d; want 100", got)
+	}
+}
+
+func TestUnattendedHomingIsHandedToTheEngine(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		b, _ := live(t, demo(t), VirtualOptions{})
+		if got := fmt.Sprint(b.HomeOrder["rotary"]); got != "[signal_arm idler_arm crystal_tilt]" || !b.Unattended["rotary"] {
+			t.Errorf("order %s, unattended %t; want the file's", got, b.Unattended["rotary"])
+		}
+	})
+}
+
+func TestLineEndsAreWrittenAsBytes(t *testing.T) {
+	text := with(t, "  counter: {device: simulated}\n", `  counter: {device: simulated, ends_with: '\r\x0A', answers_end_with: '\n'}`+"\n")
+	f := parse(t, text)
+	for _, l := range f.Lines {
+		if l.Name == "counter" && (string(l.EndsWith) != "\r\n" || string(l.AnswersEndWith) != "\n") {
+			t.Errorf("line ends %q and %q; want CR LF and LF", l.EndsWith, l.AnswersEndWith)
+		}
+	}
+	for _, bad := range []string{`''`, `'\q'`, `'\x1'`, `'\n\n\n\n\n'`} {
+		if _, err := Parse("bench.yaml", []byte(strings.Replace(text, `'\r\x0A'`, bad, 1))); err == nil {
+			t.Errorf("the line end %s was accepted; want it refused", bad)
+		}
+	}
+}
+
+// FuzzParse holds that a bench file never panics the reader, and that what was accepted once is
+// accepted again and can be built.
+func FuzzParse(f *testing.F) {
+	for _, name := range []string{"demo", "lab"} {
+		file, err := Load("../../configs/" + name + "-bench.yaml")
+		if err != nil {
+			f.Fatal(err)
+		}
+		f.Add(file.Text)
+	}
+	f.Add("bench: {name: a}\nlines: {a: {device: simulated}}\ncounters: {c: {line: a, dialect: custom, asks: {}}}\n")
+	f.Fuzz(func(t *testing.T, text string) {
+		file, err := Parse("bench.yaml", []byte(text))
+		if err != nil {
+			return
+		}
+		if _, err := Parse("bench.yaml", []byte(file.Text)); err != nil {
+			t.Fatalf("accepted once only: %v", err)
+		}
+		o := Options{}
+		if file.Simulated() {
+			if o.Virtual, err = NewVirtual(file, VirtualOptions{}); err != nil {
+				t.Fatalf("accepted, but has no virtual instruments: %v", err)
+			}
+		}
+		if _, err := Build(file, o); err != nil {
+			t.Fatalf("accepted, but not built: %v", err)
+		}
+	})
 }

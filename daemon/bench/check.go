@@ -8,6 +8,7 @@ import (
 	"gemel/drivers"
 	"gemel/drivers/line"
 	"gemel/protocol/strict"
+	"gemel/protocol/unit"
 	"gemel/sim/source"
 )
 
@@ -69,13 +70,7 @@ func (r *reader) checkLines() {
 		}
 	}
 	byDevice := map[string]Line{}
-	simulated, realLines := 0, 0
 	for _, l := range f.Lines {
-		if l.Device == Simulated {
-			simulated++
-		} else if l.Device != "" {
-			realLines++
-		}
 		if !used[l.Name] {
 			r.fail(l.at, fmt.Sprintf("the line %q, used by nothing", l.Name), "an instrument that names it, or no such line")
 		}
@@ -88,16 +83,29 @@ func (r *reader) checkLines() {
 		}
 		byDevice[l.Device] = l
 	}
+	r.checkKindOfLines()
+}
+
+// checkKindOfLines holds that a bench is real or simulated as a whole. One finding is enough.
+func (r *reader) checkKindOfLines() {
+	f := r.file
+	first := slices.IndexFunc(f.Lines, func(l Line) bool { return l.Device != "" })
 	for _, l := range f.Lines {
+		simulated := l.Device == Simulated
 		switch {
-		case simulated > 0 && realLines > 0 && l.Device == Simulated:
-			r.fail(l.at, "a simulated line beside a real one", "a bench that is simulated as a whole, or not at all: its counts would be half invented")
-		case simulated > 0 && realLines > 0:
-		case l.Device == Simulated && !f.Simulated():
-			r.fail(l.at, "a simulated line without a block \"simulation\"", "simulation: {clock: …, seed: …, truth: …}")
-		case l.Device != Simulated && l.Device != "" && f.Simulated():
-			r.fail(l.at, "a real line beside a block \"simulation\"", `"simulated", or no such block: a clock that runs faster would be wrong on a real instrument`)
+		case l.Device == "":
+		case simulated != (f.Lines[first].Device == Simulated):
+			what := map[bool]string{true: "a simulated line", false: "a real line"}
+			r.fail(l.at, fmt.Sprintf("%s beside %s, %s", what[simulated], what[!simulated], f.Lines[first].Name), "a bench that is simulated as a whole, or not at all: its counts would be half invented")
+			return
 		}
+	}
+	switch {
+	case first < 0:
+	case f.Lines[first].Device == Simulated && !f.Simulated():
+		r.fail(f.Lines[first].at, "a simulated line without a block \"simulation\"", "simulation: {clock: …, seed: …, truth: …}")
+	case f.Lines[first].Device != Simulated && f.Simulated():
+		r.fail(f.Lines[first].at, "a real line beside a block \"simulation\"", `"simulated", or no such block: a clock that runs faster would be wrong on a real instrument`)
 	}
 }
 
@@ -313,6 +321,9 @@ func (r *reader) checkVirtual() {
 	}
 	for _, s := range f.Settings {
 		use(s.Device, "setting", "scpi")
+		if want := map[unit.Kind]string{unit.Power: "W", unit.Temperature: "Cel"}[s.Kind]; want != "" && s.speaks() != want {
+			r.fail(s.at, fmt.Sprintf("a simulated setting of %s that speaks %s", s.Kind, s.speaks()), "answer_unit: %s, which the virtual one speaks", want)
+		}
 	}
 }
 

@@ -175,7 +175,7 @@ func scpiSetting(m strict.Map) settingReading {
 	read := inUnit(m, m.Need("tolerance"))
 	h.Done()
 	header, _, _ := strings.Cut(strings.TrimPrefix(c.Set, ":"), " ")
-	return settingReading{header: strings.ToUpper(header), make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
+	return settingReading{header: strings.ToUpper(header), answerUnit: c.AnswerUnit, make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
 		c := c
 		c.Common, c.Unit, c.Tolerance = scpiFor(c.Common, d.Device, pace), d.Unit, read(d.Unit)
 		return scpi.NewSetting(l, c)
@@ -184,8 +184,9 @@ func scpiSetting(m strict.Map) settingReading {
 
 // settingReading is what a dialect reads of a setting.
 type settingReading struct {
-	make   settingMaker
-	header string // that sets it; a virtual setting then hears it
+	make settingMaker
+	// What a virtual setting must know: the header that sets it, and the unit it speaks; empty: its own.
+	header, answerUnit string
 }
 
 func unitOf(v strict.Value) string {

@@ -190,6 +190,14 @@ type Setting struct {
 	settingReading
 }
 
+// speaks is the unit on the wire.
+func (s Setting) speaks() string {
+	if s.answerUnit != "" {
+		return s.answerUnit
+	}
+	return s.Unit
+}
+
 // Simulation says how the virtual instruments live.
 type Simulation struct {
 	Clock int    // bench seconds in a real one

@@ -101,6 +101,13 @@ func device(name string, at strict.Place, m strict.Map) Device {
 	return Device{Name: drivers.DeviceName(name), Line: line.Token(), Identity: m.Opt("identity").Text(""), at: at, lineAt: line.Place()}
 }
 
+// done reports unknown keys, unless the dialect is unknown: then nobody can say which keys are its.
+func done(m strict.Map, d Device) {
+	if d.Dialect != "" {
+		m.Done()
+	}
+}
+
 func (r *reader) controllers(v strict.Value) {
 	for _, e := range v.Map().Entries() {
 		m := e.Value.Map()
@@ -111,7 +118,7 @@ func (r *reader) controllers(v strict.Value) {
 		if motion.Good() && c.Dialect == "gcode" && !c.Together {
 			motion.Failf(`"together": words on one RS-274 line start and finish together`)
 		}
-		m.Done()
+		done(m, c.Device)
 		r.file.Controllers = append(r.file.Controllers, c)
 	}
 }
@@ -284,7 +291,7 @@ func (r *reader) counter(e strict.Entry) Counter {
 			m.Opt("gate").Fail("the longest gate not above the shortest", "the shortest gate first")
 		}
 	}
-	m.Done()
+	done(m, c.Device)
 	return c
 }
 
@@ -347,7 +354,7 @@ func shutter(name string, at strict.Place, m strict.Map) Shutter {
 	s := Shutter{Device: device(name, at, m)}
 	s.Dialect, s.make = choose(m, func(d dialect) func(strict.Map) shutterMaker { return d.shutter })
 	s.SettleOpen, s.SettleClosed = m.Need("settle_open").Duration(0, time.Minute), m.Need("settle_closed").Duration(0, time.Minute)
-	m.Done()
+	done(m, s.Device)
 	return s
 }
 
@@ -364,7 +371,7 @@ func (r *reader) sensors(v strict.Value) {
 			u.Failf("a unit of %s: %s", s.Kind, strings.Join(unit.Units(s.Kind), ", "))
 		}
 		m.Later("period")
-		m.Done()
+		done(m, s.Device)
 		r.file.Sensors = append(r.file.Sensors, s)
 	}
 }
@@ -385,7 +392,7 @@ func (r *reader) settings(v strict.Value) {
 				list.Fail("the higher limit not above the lower", "the lower limit first")
 			}
 		}
-		m.Done()
+		done(m, s.Device)
 		r.file.Settings = append(r.file.Settings, s)
 	}
 }

@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"path/filepath"
 	"slices"
+	"strconv"
 	"strings"
 	"time"
 
@@ -290,13 +291,20 @@ func (f *File) blade(protector drivers.DeviceName) string {
 }
 
 func (f *File) virtualSetting(w *instruments.World, s Setting) (instruments.Instrument, error) {
-	c := instruments.SettingConfig{Name: string(s.Name), Identity: identity(s.Device, "setting"), Header: s.header, Low: s.Low, High: s.High, Start: s.Low}
+	wire := func(x float64) float64 {
+		base, _, _, _ := unit.ParseAny(strconv.FormatFloat(x, 'g', 17, 64) + " " + s.Unit)
+		y, _ := unit.In(base, s.speaks())
+		return y
+	}
+	c := instruments.SettingConfig{Name: string(s.Name), Identity: identity(s.Device, "setting"), Header: s.header, Low: wire(s.Low), High: wire(s.High)}
+	var start float64
 	switch s.Kind {
 	case unit.Power:
-		c.Changes = instruments.PumpPower
+		c.Changes, start = instruments.PumpPower, f.Optics.PumpPower
 	case unit.Temperature:
-		c.Changes = instruments.CrystalTemperature
+		c.Changes, start = instruments.CrystalTemperature, f.Optics.Temperature
 	}
+	c.Start = max(c.Low, min(c.High, start))
 	return instruments.NewSetting(w, c)
 }
 

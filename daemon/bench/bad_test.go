@@ -1,0 +1,48 @@
+package bench
+
+import (
+	"flag"
+	"os"
+	"path/filepath"
+	"strings"
+	"testing"
+
+	"gemel/protocol/strict"
+)
+
+var update = flag.Bool("update", false, "write the findings into the bad files")
+
+// mark begins the findings at the end of a bad file. They stand below what they are about, so that
+// writing them moves no line.
+const mark = "# findings:\n"
+
+// TestBadBenches walks the folder: each file is named after its mistake and ends with what is found.
+func TestBadBenches(t *testing.T) {
+	files, err := filepath.Glob("../../testdata/bench-bad/*.yaml")
+	if err != nil || len(files) < 60 {
+		t.Fatalf("%d bad files, %v; want the folder", len(files), err)
+	}
+	for _, file := range files {
+		name := filepath.Base(file)
+		t.Run(strings.TrimSuffix(name, ".yaml"), func(t *testing.T) {
+			text, err := strict.ReadFile(file)
+			if err != nil {
+				t.Fatal(err)
+			}
+			body, want, _ := strings.Cut(string(text), mark)
+			if _, err = Parse(name, []byte(body)); err == nil {
+				t.Fatal("accepted; want it refused")
+			}
+			got := "# " + strings.ReplaceAll(err.Error(), "\n", "\n# ") + "\n"
+			if *update {
+				if err := os.WriteFile(file, []byte(body+mark+got), 0o644); err != nil {
+					t.Fatal(err)
+				}
+				return
+			}
+			if got != want {
+				t.Errorf("found\n%swant\n%s", got, want)
+			}
+		})
+	}
+}
