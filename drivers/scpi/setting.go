@@ -70,7 +70,8 @@ func (s *Setting) Set(ctx context.Context, value float64) (float64, error) {
 		return 0, s.errorf("set", drivers.GiveUp, "%v; want a number", value)
 	}
 	v := s.toUnit.back(value)
-	text := strconv.FormatFloat(v, 'G', -1, 64)
+	// Twelve digits are more than any instrument has, and fewer than the rounding of a conversion shows.
+	text := strconv.FormatFloat(v, 'G', 12, 64)
 	if s.set.Decimals != nil {
 		text = strconv.FormatFloat(v, 'f', *s.set.Decimals, 64)
 	}
