@@ -88,7 +88,11 @@ type running struct {
 	end  *happening
 }
 
-var aperture = quantity{low: 1e-3, high: 1000, reset: 1, units: secondUnits}
+// The counter's numeric settings.
+var (
+	aperture = quantity{low: 1e-3, high: 1000, reset: 1, units: secondUnits}
+	once     = quantity{low: 1, high: 1, reset: 1}
+)
 
 // NewCounter puts a Counter into the world.
 func NewCounter(w *World, cfg CounterConfig) (*Counter, error) {
@@ -220,10 +224,13 @@ func (c *Counter) commands() []scpiCommand {
 			ask: func(s scpiCall) (string, *scpiError) { return "IMM", s.none() }},
 		{pattern: "TRIGger[:SEQuence]:COUNt",
 			set: func(s scpiCall) *scpiError {
-				_, err := quantity{low: 1, high: 1, reset: 1}.argument(s.args)
+				_, err := once.argument(s.args)
 				return err
 			},
-			ask: func(s scpiCall) (string, *scpiError) { return "1", nil }},
+			ask: func(s scpiCall) (string, *scpiError) {
+				v, err := once.asked(s, 1)
+				return strconv.FormatFloat(v, 'f', -1, 64), err
+			}},
 		{pattern: "INITiate[:IMMediate][:ALL]", set: func(s scpiCall) *scpiError {
 			if err := s.none(); err != nil {
 				return err

@@ -198,8 +198,6 @@ func newProfile(v, a float64) profile {
 	return profile{ramp: ramp, cruise: cruise, v: v, a: v / ramp.Seconds()}
 }
 
-func (f profile) lasts() time.Duration { return 2*f.ramp + f.cruise }
-
 // follow makes the motor travel from where it will be at the end of its plan to x, along f.
 func (p *path) follow(at time.Time, x float64, f profile) time.Time {
 	_, from := p.end()

@@ -300,3 +300,33 @@ func TestTroublesThatCallWhileTheInstrumentWaits(t *testing.T) {
 		l.hangUp()
 	})
 }
+
+func TestStrangersAreTroublesOfNobody(t *testing.T) {
+	w := world(t, 1, "restart(stage, at 1s); restart(tower, at 1s); lamp(at 1s, for 1s, rate 1 Hz); missing(counter, answer 1); slip(signal_arm, at 1s, by 1 deg); slip(stage, at 1s, by 1 deg)")
+	arms(t, w, nil)
+	const want = "restart(tower, at 1s); missing(counter, answer 1); slip(stage, at 1s, by 1 deg)"
+	if got := w.Strangers().String(); got != want {
+		t.Errorf("strangers: %s; want %s", got, want)
+	}
+}
+
+func TestBytesMayComeOneByOne(t *testing.T) {
+	bubble(t, func(t *testing.T) {
+		w := world(t, 1, "")
+		s, c := plug(t, t.Context(), arms(t, w, nil)), plug(t, t.Context(), counter(t, w, nil))
+		trickle := func(l *line, text, want string) {
+			t.Helper()
+			for i := range len(text) {
+				l.send(text[i : i+1])
+				time.Sleep(3 * time.Millisecond)
+			}
+			if got := l.hear(time.Second); got != want {
+				t.Errorf("%q is answered %q; want %q", text, got, want)
+			}
+		}
+		trickle(s, "G90 G0 A0\r\n", "TAKEN")
+		trickle(c, "*ESE 9;*ESE?\r\n", "9")
+		s.hangUp()
+		c.hangUp()
+	})
+}

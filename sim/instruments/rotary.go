@@ -122,11 +122,12 @@ func (r *Rotary) heard(now time.Time, b byte) {
 			r.say(now, "STILL")
 		}
 	case word == "REFD" && rest == "":
-		refd := "REFD"
+		var refd strings.Builder
+		refd.WriteString("REFD")
 		for _, x := range r.mechanism.axes {
-			refd += " " + x.cfg.Letter + bit(x.homed)
+			refd.WriteString(" " + x.cfg.Letter + bit(x.homed))
 		}
-		r.say(now, refd)
+		r.say(now, refd.String())
 	case word == "REF":
 		x := r.named(rest)
 		if x == nil {

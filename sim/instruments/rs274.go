@@ -78,7 +78,7 @@ func parseBlock(line, letters string) (block, error) {
 			}
 			group, ok := groupOf[g]
 			if !ok {
-				return b, fmt.Errorf("G%s not available", strconv.FormatFloat(v, 'f', -1, 64))
+				return b, fmt.Errorf("no G%s here", strconv.FormatFloat(v, 'f', -1, 64))
 			}
 			if groups[group] {
 				return b, fmt.Errorf("two G words of one group")
@@ -156,7 +156,7 @@ func gNumber(v float64) (int, error) {
 	t := v * 10
 	g := int(t + 0.5)
 	if v < 0 || v > 999 || t-float64(g) > 1e-6 || float64(g)-t > 1e-6 {
-		return 0, fmt.Errorf("G%v not available", v)
+		return 0, fmt.Errorf("no G%v here", v)
 	}
 	return g, nil
 }

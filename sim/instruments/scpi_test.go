@@ -83,7 +83,7 @@ func TestSCPIMessages(t *testing.T) {
 		{"switching a channel off", `:SENS:FUNC:OFF "TOT 2";:SENS:FUNC?`, `"TOT 1","TOT 3","TOT 4"`, none},
 		{"a channel there is not", `:SENS:FUNC "TOT 9"`, "", `-224,"Illegal parameter value;TOT 9"`},
 		{"channels always count together", ":SENS:FUNC:CONC OFF", "", `-221,"Settings conflict;channels always count together"`},
-		{"trigger", ":TRIG:SOUR IMM;COUN 1;:TRIG:SOUR?;COUN?", "IMM;1", none},
+		{"trigger", ":TRIG:SOUR IMM;COUN 1;:TRIG:SOUR?;COUN?;COUN? MAX", "IMM;1;1", none},
 		{"a trigger count that is not offered", ":TRIG:COUN 2", "", `-222,"Data out of range"`},
 		{"counts before the first gate", ":FETC?", "", `-230,"Data corrupt or stale"`},
 		{"a second gate while one is open", ":INIT;:INIT", "", `-213,"Init ignored"`},

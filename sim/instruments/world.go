@@ -140,6 +140,32 @@ func (w *World) Let(t trouble.Trouble) error {
 	return nil
 }
 
+// Strangers are the configured troubles that name a device or an axis the world does not have, and
+// so never happen. Ask when all instruments are there.
+func (w *World) Strangers() trouble.List {
+	w.mu.Lock()
+	defer w.mu.Unlock()
+	names := map[string]bool{"": true}
+	for _, a := range w.actors {
+		names[a.name] = true
+	}
+	axes := map[string]bool{}
+	for _, x := range w.axes {
+		axes[x.cfg.Axis] = true
+	}
+	var l trouble.List
+	for _, t := range w.cfg.Troubles {
+		among := names
+		if t.Kind == trouble.Slip || t.Kind == trouble.LostSteps {
+			among = axes
+		}
+		if !among[t.Device] {
+			l = append(l, t)
+		}
+	}
+	return l
+}
+
 // TrueDeg is the true bench angle of an axis now.
 func (w *World) TrueDeg(axis string) (float64, bool) {
 	w.mu.Lock()
