@@ -23,6 +23,8 @@ type Options struct {
 	Virtual *Virtual
 	// Links is a folder with one link a line, named after it, to instruments that already run.
 	Links string
+	// Wrap, if not nil, is put around each port as it is opened. For tests.
+	Wrap func(lineName string, p line.Port) line.Port
 	// Log is where lines write what happens on them. The zero value is silent.
 	Log zerolog.Logger
 }
@@ -57,6 +59,7 @@ func Build(f *File, o Options) (*Bench, error) {
 		if err != nil {
 			return nil, fmt.Errorf("line %s: %w", l.Name, err)
 		}
+		open = wrapped(l.Name, open, o.Wrap)
 		made := line.New(line.Settings{
 			Name: l.Name, Open: open, EndsWith: l.EndsWith, AnswersEndWith: l.AnswersEndWith, Echo: l.Echo,
 			AnswerWithin: l.AnswerWithin, LongestAnswer: l.LongestAnswer, WriteWithin: l.WriteWithin, QuietFor: l.QuietFor, OpenWithin: l.OpenWithin,
@@ -83,6 +86,19 @@ func opener(f *File, l Line, o Options) (func(context.Context) (line.Port, error
 		return line.Address(address, line.Mode{})
 	}
 	return line.Address(l.Device, line.Mode{Baud: l.Baud, DataBits: l.DataBits, Parity: l.Parity, StopBits: l.StopBits})
+}
+
+func wrapped(name string, open func(context.Context) (line.Port, error), wrap func(string, line.Port) line.Port) func(context.Context) (line.Port, error) {
+	if wrap == nil {
+		return open
+	}
+	return func(ctx context.Context) (line.Port, error) {
+		p, err := open(ctx)
+		if err != nil {
+			return nil, err
+		}
+		return wrap(name, p), nil
+	}
 }
 
 // seed is a number that is a line's own and the same every time.

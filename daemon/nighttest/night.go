@@ -1,0 +1,649 @@
+package nighttest
+
+import (
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"math/rand/v2"
+	"runtime"
+	"slices"
+	"strconv"
+	"strings"
+	"sync"
+	"sync/atomic"
+	"testing/synctest"
+	"time"
+
+	"gemel/daemon/bench"
+	"gemel/daemon/courier"
+	"gemel/daemon/crew"
+	"gemel/daemon/keeper"
+	"gemel/daemon/logbook"
+	"gemel/drivers/line"
+	"gemel/protocol"
+	"gemel/scan"
+	"gemel/scan/engine"
+	"gemel/scan/recipe"
+	"gemel/sim/instruments"
+	"gemel/sim/trouble"
+)
+
+// Night is everything that decides how a night goes. The same night is the same time line.
+type Night struct {
+	Bench  *bench.File // simulated, clock 1
+	Recipe string
+	Script
+	// Wrap sabotages: it changes a part before it is used. For the table of sabotages only.
+	Wrap Sabotage
+}
+
+// Script is what goes wrong, and what people do. It prints as one line that reads back.
+type Script struct {
+	Troubles trouble.List
+	Kills    []Kill
+	Orders   []Order
+	Broker   []Away // times during which the broker takes nothing
+}
+
+// Kill ends the process without a word: at the Nth passing of a step in its life, or after a time.
+type Kill struct {
+	Step  engine.Step
+	Nth   int
+	After time.Duration // into the process's life; used when Step is empty
+}
+
+// Order is a person's request, at a time into the night.
+type Order struct {
+	At   time.Duration
+	What string // hold, resume or stop
+}
+
+// Away is a time without a broker. Lost says that what is published at its beginning is stored and
+// its acknowledgement lost.
+type Away struct {
+	At, For time.Duration
+}
+
+// String prints the script on one line.
+func (s Script) String() string {
+	var parts []string
+	for _, k := range s.Kills {
+		if k.Step != "" {
+			parts = append(parts, fmt.Sprintf("kill %s:%d", k.Step, k.Nth))
+		} else {
+			parts = append(parts, "kill "+k.After.String())
+		}
+	}
+	for _, o := range s.Orders {
+		parts = append(parts, o.What+" "+o.At.String())
+	}
+	for _, a := range s.Broker {
+		parts = append(parts, fmt.Sprintf("away %s+%s", a.At, a.For))
+	}
+	return strings.Join(parts, ", ") + " | " + s.Troubles.String()
+}
+
+// ParseScript reads what String prints.
+func ParseScript(text string) (Script, error) {
+	var s Script
+	people, troubles, found := strings.Cut(text, "|")
+	if !found {
+		return s, fmt.Errorf("script %q; want \"kill written:3, hold 2h | troubles\"", text)
+	}
+	for word := range strings.SplitSeq(people, ",") {
+		what, arg, _ := strings.Cut(strings.TrimSpace(word), " ")
+		if what == "" {
+			continue
+		}
+		step, nth, isStep := strings.Cut(arg, ":")
+		at, length, isAway := strings.Cut(arg, "+")
+		d, derr := time.ParseDuration(at)
+		n, nerr := strconv.Atoi(nth)
+		switch {
+		case what == "kill" && isStep && nerr == nil:
+			s.Kills = append(s.Kills, Kill{Step: engine.Step(step), Nth: n})
+		case what == "kill" && derr == nil:
+			s.Kills = append(s.Kills, Kill{After: d})
+		case slices.Contains([]string{"hold", "resume", "stop"}, what) && derr == nil:
+			s.Orders = append(s.Orders, Order{At: d, What: what})
+		case what == "away" && isAway && derr == nil:
+			l, err := time.ParseDuration(length)
+			if err != nil {
+				return s, err
+			}
+			s.Broker = append(s.Broker, Away{At: d, For: l})
+		default:
+			return s, fmt.Errorf("script: %q; want kill STEP:N, kill TIME, hold TIME, resume TIME, stop TIME or away TIME+TIME", word)
+		}
+	}
+	var err error
+	s.Troubles, err = trouble.Parse(strings.TrimSpace(troubles))
+	return s, err
+}
+
+// Sabotage changes parts of the program on purpose, to see that the judge notices.
+type Sabotage struct {
+	Book   func(Book) Book
+	Bench  func(*engine.Bench)
+	Port   func(lineName string, p line.Port) line.Port
+	Sink   func(courier.Sink) courier.Sink
+	Panics engine.Step // the engine panics once at this step
+	AtPart int         // at its Nth passing
+}
+
+// Book is the logbook as keeper and courier see it together.
+type Book interface {
+	keeper.Book
+	courier.Journal
+}
+
+// Result is a night that is over.
+type Result struct {
+	Line   []Moment
+	Facts  Facts
+	State  protocol.State
+	Reason string
+	Took   time.Duration // bench time
+	Lives  int
+	// Counts of what the lines noticed, summed over all lives.
+	Lines     line.Counts
+	Accepted  int
+	SetAside  int
+	Stuck     string // why the night was given up before its run was final; empty otherwise
+	Verified  []string
+	Published int
+}
+
+// Judge judges the night, its logbook's own verification included.
+func (r *Result) Judge() []string {
+	wrong := Judge(r.Line, r.Facts)
+	for _, text := range r.Verified {
+		wrong = append(wrong, "logbook: "+text)
+	}
+	if r.Stuck != "" {
+		wrong = append(wrong, "stuck: "+r.Stuck)
+	}
+	return wrong
+}
+
+// longest bounds a night in bench time.
+const longest = 72 * time.Hour
+
+// Run runs a night in the caller's bubble, with the data folder given. The error is the test kit's
+// own, not the night's.
+func Run(n Night, data string) (*Result, error) {
+	if n.Bench.Pace() != 1 {
+		return nil, errors.New("nighttest: a bench with clock 1 is wanted: bubbles make their own time")
+	}
+	k := &kit{Night: n, data: data, began: time.Now(), sink: &standIn{}}
+	k.sink.away = func(now time.Time) bool {
+		for _, a := range n.Broker {
+			if d := now.Sub(k.began); d >= a.At && d < a.At+a.For {
+				return true
+			}
+		}
+		return false
+	}
+	k.ledger = instruments.NewLedger(nil)
+	var err error
+	if k.virtual, err = bench.NewVirtual(n.Bench, bench.VirtualOptions{Troubles: n.Troubles, Ledger: k.ledger}); err != nil {
+		return nil, err
+	}
+	world := crew.New(context.Background(), nil)
+	for _, a := range k.virtual.Actors() {
+		world.Go(a.Name, a.Run)
+	}
+	err = k.lives()
+	world.Stop()
+	if werr := world.Wait(); err == nil {
+		err = werr
+	}
+	if err != nil {
+		return nil, err
+	}
+	return k.result()
+}
+
+// kit is one night under way.
+type kit struct {
+	Night
+	data    string
+	began   time.Time
+	virtual *bench.Virtual
+	ledger  *instruments.Ledger
+	sink    *standIn
+	run     protocol.RunID
+
+	mu      sync.Mutex
+	journal []Moment
+	process []Moment
+	counts  line.Counts
+	lived   int
+	orders  int // carried out
+	stuck   string
+	panics  int
+}
+
+func (k *kit) note(p Process) {
+	k.mu.Lock()
+	defer k.mu.Unlock()
+	k.process = append(k.process, Moment{At: time.Now().UTC(), Process: &p})
+}
+
+// lives lets one process follow another until the run is final.
+func (k *kit) lives() error {
+	for {
+		final, err := k.life()
+		k.lived++
+		if err != nil || final {
+			return err
+		}
+		if time.Since(k.began) > longest {
+			k.stuck = fmt.Sprintf("the run is not final after %s", longest)
+			return nil
+		}
+		time.Sleep(17*time.Second + 331*time.Microsecond) // until somebody starts it again
+	}
+}
+
+// life is one process, from its start to its end or its death.
+func (k *kit) life() (final bool, err error) {
+	k.note(Process{What: Started})
+	book, err := logbook.Open(k.data)
+	if err != nil {
+		return false, err
+	}
+	defer func() { err = errors.Join(err, book.Close()) }()
+	built, err := bench.Build(k.Bench, bench.Options{Virtual: k.virtual, Wrap: k.Wrap.Port})
+	if err != nil {
+		return false, err
+	}
+	if k.Wrap.Bench != nil {
+		k.Wrap.Bench(&built.Bench)
+	}
+	l := &life{kit: k, lines: crew.New(context.Background(), nil), steps: map[engine.Step]int{}}
+	l.main = crew.New(context.Background(), nil)
+	if k.lived < len(k.Kills) {
+		l.kill = &k.Kills[k.lived]
+	}
+	for _, one := range built.Lines {
+		l.lines.Go("line "+one.Name(), one.Run)
+	}
+	var recorder Book = &recorder{Book: book, life: l}
+	if k.Wrap.Book != nil {
+		recorder = k.Wrap.Book(recorder)
+	}
+	var sink courier.Sink = k.sink
+	if k.Wrap.Sink != nil {
+		sink = k.Wrap.Sink(sink)
+	}
+	carrier := courier.New(k.Bench.Name, recorder, sink, nil)
+	book.OnAppend(carrier.Nudge)
+	keep := keeper.New(keeper.Config{
+		Book: recorder, Bench: &built.Bench, BenchText: k.Bench.Text, Version: "test",
+		Plan: k.plan, ResumeAfterRestart: true, Step: l.step,
+	})
+	done := make(chan protocol.State, 1)
+	l.main.Go("keeper", func(ctx context.Context) error {
+		run, err := k.choose(ctx, keep)
+		if err != nil {
+			return err
+		}
+		state, err := keep.RunOne(ctx, run)
+		if err != nil && ctx.Err() == nil && state != protocol.Failed {
+			return err
+		}
+		done <- state
+		l.main.Stop()
+		return nil
+	})
+	l.main.Go("people", func(ctx context.Context) error { return l.people(ctx, keep) })
+	if l.kill != nil && l.kill.Step == "" {
+		l.main.Go("fate", func(ctx context.Context) error {
+			timer := time.NewTimer(l.kill.After + 77*time.Nanosecond)
+			defer timer.Stop()
+			select {
+			case <-ctx.Done():
+			case <-timer.C:
+				l.die()
+			}
+			return nil
+		})
+	}
+	l.carriers = crew.New(context.Background(), nil)
+	l.carriers.Go("courier", carrier.Run)
+	err = l.main.Wait()
+	if !l.dead.Load() && err == nil {
+		k.catchUp(carrier, l.carriers)
+	}
+	l.carriers.Stop()
+	l.lines.Stop()
+	err = errors.Join(err, l.carriers.Wait(), l.lines.Wait())
+	for _, one := range built.Lines {
+		c := one.Counts()
+		k.counts.Asked += c.Asked
+		k.counts.Retried += c.Retried
+		k.counts.Missing += c.Missing
+		k.counts.Strangers += c.Strangers
+		k.counts.Strays += c.Strays
+		k.counts.Chatter += c.Chatter
+		k.counts.Restarts += c.Restarts
+		k.counts.Resynchronised += c.Resynchronised
+		k.counts.Urgent += c.Urgent
+		k.counts.Opened += c.Opened
+		k.counts.Lost += c.Lost
+	}
+	select {
+	case state := <-done:
+		return state.Final() && !l.dead.Load(), err
+	default:
+		return false, err
+	}
+}
+
+// catchUp gives the courier what time it needs once the broker is back.
+func (k *kit) catchUp(c *courier.Courier, g *crew.Group) {
+	for range 1000 {
+		synctest.Wait()
+		if c.Behind() == 0 {
+			return
+		}
+		time.Sleep(time.Minute)
+	}
+	k.stuck = fmt.Sprintf("%d entries were never published: %v", c.Behind(), c.Trouble())
+}
+
+func (k *kit) plan(text string) (scan.Plan, error) {
+	r, err := recipe.Parse("night.yaml", []byte(text))
+	if err != nil {
+		return scan.Plan{}, err
+	}
+	return r.Plan(k.Bench.Facts())
+}
+
+func (k *kit) choose(ctx context.Context, keep *keeper.Keeper) (protocol.RunID, error) {
+	// Asked again after each restart with the same key: one run, however often the process died.
+	reply, err := keep.Enqueue(ctx, protocol.StartRequest{Recipe: k.Recipe, Key: "night", Who: "nighttest"})
+	k.run = reply.Run
+	return reply.Run, err
+}
+
+// life is one process.
+type life struct {
+	*kit
+	lines, main, carriers *crew.Group
+	kill                  *Kill
+	dead                  atomic.Bool
+	stepsMu               sync.Mutex
+	steps                 map[engine.Step]int
+}
+
+// die is a power cut for the process: no line hears it any more, nothing is written any more.
+func (l *life) die() {
+	l.note(Process{What: Killed, Run: l.run})
+	l.dead.Store(true)
+	l.lines.Stop()
+	_ = l.lines.Wait()
+	l.carriers.Stop()
+	l.main.Stop()
+}
+
+// step counts the engine's steps, and kills at the one the script names. A dead process's
+// goroutine ends at its next step: its deferred calls reach nobody.
+func (l *life) step(s engine.Step) {
+	if l.dead.Load() {
+		runtime.Goexit()
+	}
+	l.stepsMu.Lock()
+	l.steps[s]++
+	n := l.steps[s]
+	l.stepsMu.Unlock()
+	if l.kill != nil && l.kill.Step == s && l.kill.Nth == n {
+		l.die()
+		runtime.Goexit()
+	}
+	if l.Wrap.Panics == s && n == max(1, l.Wrap.AtPart) && l.panics == 0 {
+		l.panics++
+		panic("sabotage: a bug at step " + string(s))
+	}
+}
+
+// people carry out the script's requests, and otherwise do what a technician does in the morning:
+// see that the run holds for something that a person may clear, look at it for a while, resume.
+func (l *life) people(ctx context.Context, keep *keeper.Keeper) error {
+	const look = 7 * time.Minute
+	since := time.Time{}
+	for {
+		wait := look + 13*time.Nanosecond
+		if l.orders < len(l.Orders) {
+			wait = min(wait, max(0, l.Orders[l.orders].At-time.Since(l.began))+19*time.Nanosecond)
+		}
+		timer := time.NewTimer(wait)
+		select {
+		case <-ctx.Done():
+			timer.Stop()
+			return nil
+		case <-timer.C:
+		}
+		if l.orders < len(l.Orders) && time.Since(l.began) >= l.Orders[l.orders].At {
+			o := l.Orders[l.orders]
+			l.orders++
+			l.ask(ctx, keep, o.What)
+			continue
+		}
+		s := keep.Status(ctx)
+		mine := slices.ContainsFunc(s.Causes, func(c protocol.Cause) bool { return c == protocol.ByTrouble || c == protocol.ByOperator })
+		switch {
+		case s.State != protocol.Holding || !mine:
+			since = time.Time{}
+		case since.IsZero():
+			since = time.Now()
+		case time.Since(since) > 2*look:
+			l.ask(ctx, keep, "resume")
+			since = time.Time{}
+		}
+		if time.Since(l.began) > longest {
+			l.ask(ctx, keep, "stop")
+		}
+	}
+}
+
+func (l *life) ask(ctx context.Context, keep *keeper.Keeper, what string) {
+	q := protocol.RunRequest{Run: l.run, Who: "a person"}
+	var r protocol.RunReply
+	var err error
+	switch what {
+	case "hold":
+		if r, err = keep.Hold(ctx, q); err == nil && r.Recorded {
+			l.note(Process{What: HoldAnswered, Run: l.run})
+		}
+	case "resume":
+		r, err = keep.Resume(ctx, q)
+	case "stop":
+		if r, err = keep.Stop(ctx, q); err == nil && r.Recorded {
+			l.note(Process{What: StopAnswered, Run: l.run})
+		}
+	}
+	// A refusal is an answer too: the run may be over.
+	if _, refused := errors.AsType[*protocol.Refusal](err); err != nil && !refused && ctx.Err() == nil {
+		l.mu.Lock()
+		l.stuck = fmt.Sprintf("%s was not answered: %v", what, err)
+		l.mu.Unlock()
+	}
+}
+
+// commitTime is what a commit costs. It also keeps what comes after it at a later instant.
+const commitTime = 1500*time.Microsecond + 3*time.Nanosecond
+
+// recorder is the logbook with a notebook beside it.
+type recorder struct {
+	Book
+	life *life
+}
+
+func (r *recorder) alive() {
+	if r.life.dead.Load() {
+		runtime.Goexit()
+	}
+}
+
+func (r *recorder) record(e protocol.Entry) {
+	r.life.mu.Lock()
+	defer r.life.mu.Unlock()
+	r.life.journal = append(r.life.journal, Moment{At: time.Now().UTC(), Journal: &e})
+}
+
+func (r *recorder) Append(ctx context.Context, e protocol.Entry) error {
+	r.alive()
+	time.Sleep(commitTime)
+	r.alive()
+	err := r.Book.Append(ctx, e)
+	if err == nil {
+		r.record(e)
+	}
+	time.Sleep(3 * time.Nanosecond)
+	return err
+}
+
+func (r *recorder) NewRun(ctx context.Context, h logbook.Header, first protocol.Entry) (protocol.RunID, error) {
+	r.alive()
+	existing, err := r.Book.NewRun(ctx, h, first)
+	if err == nil && existing == "" {
+		r.record(first)
+	}
+	return existing, err
+}
+
+// standIn is a stream that keeps what a broker would, in memory: bubbles cannot hold a broker.
+type standIn struct {
+	mu      sync.Mutex
+	away    func(time.Time) bool
+	was     bool
+	stored  []courier.Message
+	moments []Moment
+}
+
+var errAway = errors.New("the broker is away")
+
+func (s *standIn) Last(context.Context) (courier.Last, error) {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	if s.away(time.Now()) {
+		return courier.Last{}, errAway
+	}
+	if len(s.stored) == 0 {
+		return courier.Last{}, nil
+	}
+	return courier.Last{Message: s.stored[len(s.stored)-1], Sequence: uint64(len(s.stored))}, nil
+}
+
+func (s *standIn) Publish(_ context.Context, m courier.Message, after courier.Last) (courier.Last, error) {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	away := s.away(time.Now())
+	lost := away && !s.was // the first one into an outage is stored, and its acknowledgement lost
+	s.was = away
+	if away && !lost {
+		return courier.Last{}, errAway
+	}
+	if after.Sequence != uint64(len(s.stored)) {
+		return courier.Last{}, courier.ErrUnsure
+	}
+	s.stored = append(s.stored, m)
+	run, number, _ := cutLast(m.ID)
+	sequence, err := strconv.ParseInt(number, 10, 64)
+	if err != nil {
+		return courier.Last{}, err
+	}
+	s.moments = append(s.moments, Moment{At: time.Now().UTC(), Stream: &protocol.Entry{Run: protocol.RunID(run), Sequence: sequence, Body: json.RawMessage(m.Body)}})
+	if lost {
+		return courier.Last{}, errAway
+	}
+	return courier.Last{Message: m, Sequence: uint64(len(s.stored))}, nil
+}
+
+func cutLast(id string) (run, number string, found bool) {
+	i := strings.LastIndexByte(id, '.')
+	if i < 0 {
+		return id, "", false
+	}
+	return id[:i], id[i+1:], true
+}
+
+// result gathers the time line and what the logbook says of itself.
+func (k *kit) result() (*Result, error) {
+	k.virtual.World.Settle()
+	r := &Result{Facts: FactsOf(k.Bench), Took: time.Since(k.began), Lives: k.lived, Lines: k.counts, Stuck: k.stuck, Published: len(k.sink.stored)}
+	plan, err := k.plan(k.Recipe)
+	if err != nil {
+		return nil, err
+	}
+	r.Facts.Visits = len(plan.Visits())
+	if plan.Dark != nil {
+		r.Facts.MinDarks = map[bool]int{true: 1}[plan.Dark.AtStart] + map[bool]int{true: 1}[plan.Dark.AtEnd]
+	}
+	r.Facts.CaughtUp = k.stuck == ""
+	r.Line = Merge(World(k.ledger.Records()), k.journal, k.sink.moments, k.process)
+	book, err := logbook.OpenReadOnly(k.data + "/logbook.db")
+	if err != nil {
+		return nil, err
+	}
+	defer book.Close()
+	r.Verified = book.Verify(context.Background())
+	row, err := book.Run(context.Background(), k.run)
+	if err != nil {
+		return nil, err
+	}
+	r.State, r.Reason = row.State, row.Reason
+	for reading, err := range book.Readings(context.Background(), k.run) {
+		if err != nil {
+			return nil, err
+		}
+		if reading.Accepted {
+			r.Accepted++
+		} else {
+			r.SetAside++
+		}
+	}
+	return r, nil
+}
+
+// FactsOf is what the judge must know of a bench.
+func FactsOf(f *bench.File) Facts {
+	facts := Facts{Tag: string(f.Counter.Tag), Tolerance: map[string]float64{}}
+	for _, c := range f.Counter.Channels {
+		facts.Channels = append(facts.Channels, string(c))
+	}
+	for _, a := range f.Axes {
+		facts.Tolerance[string(a.Name)] = a.Tolerance.Degrees() + detection
+	}
+	for _, c := range f.Controllers {
+		facts.Controls = append(facts.Controls, string(c.Name))
+	}
+	if f.Pump != nil {
+		facts.Pump = string(f.Pump.Name)
+	}
+	for _, d := range f.Detectors {
+		facts.Detectors = append(facts.Detectors, DetectorFact{Name: d.Name, Channel: string(d.Channel), TripHz: d.TripHz, Protector: string(d.ProtectBy)})
+	}
+	return facts
+}
+
+// detection is what an encoder of the virtual stages cannot see, with room: degrees.
+const detection = 0.001
+
+// AtClockOne reads a bench file's text with the simulation's clock set to 1.
+func AtClockOne(path string, text []byte) (*bench.File, error) {
+	var out []string
+	for l := range strings.SplitSeq(string(text), "\n") {
+		if strings.HasPrefix(strings.TrimSpace(l), "clock:") {
+			l = l[:strings.Index(l, "clock:")] + "clock: 1"
+		}
+		out = append(out, l)
+	}
+	return bench.Parse(path, []byte(strings.Join(out, "\n")))
+}
+
+// seeded is the generator of one named purpose.
+func seeded(seed uint64, purpose uint64) *rand.Rand { return rand.New(rand.NewPCG(seed, purpose)) }
