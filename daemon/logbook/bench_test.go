@@ -42,10 +42,11 @@ func BenchmarkAppend(b *testing.B) {
 }
 
 // BenchmarkViews asks what a person or a report asks, of a journal of 100 000 readings in runs of
-// 5 000 with a hundred doubts.
+// 5 000 with 20 doubts each.
 func BenchmarkViews(b *testing.B) {
 	book := openBook(b, b.TempDir())
 	const runs, readings = 20, 5000
+	const doubts = 20 // a run
 	for r := range runs {
 		run := killedRun(r)
 		mustNewRun(b, book, header(run, ""))
@@ -54,9 +55,9 @@ func BenchmarkViews(b *testing.B) {
 			b.Fatal(err)
 		}
 		insert := tx.Stmt(book.insert)
-		for s := int64(2); s < 2+readings+5; s++ {
+		for s := int64(2); s < 2+readings+doubts; s++ {
 			e := aReading(run, s)
-			if s%1000 == 500 {
+			if s%250 == 0 {
 				e = doubt(run, s, s-50, s-1, "drifted")
 			}
 			if _, err := insert.Exec(e.Run, e.Sequence, e.Kind, string(e.Body)); err != nil {

@@ -29,6 +29,7 @@ func TestMain(m *testing.M) {
 	}
 	flag.Set("rapid.seed", "20310203") // the same nights every time; -rapid.seed overrides
 	flag.Set("rapid.nofailfile", "true")
+	flag.Set("rapid.checks", "50") // each some thirty commits
 	flag.Parse()
 	if testing.Short() {
 		flag.Set("rapid.checks", "15")
@@ -355,6 +356,13 @@ func TestReadingsShowTheRunAsItWasWhenTheLoopBegan(t *testing.T) {
 	if doubts[3] != "" || doubts[4] != "drifted" || doubts[5] != "slipped; drifted" {
 		t.Errorf("the second loop saw %v", doubts)
 	}
+	var doubtful, from, to int64
+	if err := b.readers.QueryRow(`SELECT count(*), min(sequence), max(sequence) FROM reading WHERE doubtful AND doubt LIKE '%drifted'`).Scan(&doubtful, &from, &to); err != nil {
+		t.Fatal(err)
+	}
+	if doubtful != last-4 || from != 4 || to != last-1 {
+		t.Errorf("the view has %d doubtful readings from %d to %d; want %d from 4 to %d", doubtful, from, to, last-4, last-1)
+	}
 	for _, err := range b.Readings(t.Context(), "r9") {
 		if !errors.Is(err, ErrNoRun) {
 			t.Errorf("an unknown run: %v; want %v", err, ErrNoRun)
@@ -378,7 +386,7 @@ func TestWhoFollowsTheJournalIsToldOfEveryCommit(t *testing.T) {
 	}
 	mustAppend(t, b, aReading("r1", 20)) // was there
 	if told != 20 {
-		t.Errorf("told %d times; want 20", told)
+		t.Fatalf("told %d times; want 20", told)
 	}
 
 	done := make(chan error, 1)

@@ -243,7 +243,7 @@ var (
 )
 
 func drawReading(t *rapid.T, h protocol.Head) protocol.Reading {
-	return protocol.Reading{
+	r := protocol.Reading{
 		Head:  h,
 		Kind:  rapid.SampledFrom([]protocol.ReadingKind{protocol.Light, protocol.Dark, protocol.Background, protocol.Reference, protocol.Check}).Draw(t, "kind"),
 		Point: someIndex.Draw(t, "point"), Visit: someIndex.Draw(t, "visit"),
@@ -265,6 +265,16 @@ func drawReading(t *rapid.T, h protocol.Head) protocol.Reading {
 			return protocol.Slice{GateSet: someSeconds.Draw(t, "gate set"), Gate: someSeconds.Draw(t, "gate"), Counts: someCounts.Draw(t, "counts"), Raw: someText.Draw(t, "raw")}
 		}), 0, 3).Draw(t, "slices"),
 	}
+	if rapid.Bool().Draw(t, "null lists") { // as a driver's nil slices come out in JSON
+		r.Angles, r.Settings, r.Sensors, r.Counts = nil, nil, nil, nil
+		for i := range r.Slices {
+			r.Slices[i].Counts = nil
+		}
+		if len(r.Slices) == 0 {
+			r.Slices = nil
+		}
+	}
+	return r
 }
 
 func drawEvent(t *rapid.T, h protocol.Head) protocol.Event {
@@ -500,14 +510,14 @@ func TestViewsFindARunWithoutScanningTheJournal(t *testing.T) {
 		if err != nil {
 			t.Fatal(err)
 		}
-		steps := 0
+		var plan []string
 		for rows.Next() {
 			var id, parent, unused int
 			var step string
 			if err := rows.Scan(&id, &parent, &unused, &step); err != nil {
 				t.Fatal(err)
 			}
-			steps++
+			plan = append(plan, step)
 			// json_each scans one body, and o is the few doubts of one reading.
 			if strings.HasPrefix(step, "SCAN") && !strings.Contains(step, "VIRTUAL TABLE") && step != "SCAN o" {
 				t.Errorf("%s: %s", view, step)
@@ -516,8 +526,14 @@ func TestViewsFindARunWithoutScanningTheJournal(t *testing.T) {
 		if err := rows.Err(); err != nil {
 			t.Fatal(err)
 		}
-		if steps == 0 {
+		if len(plan) == 0 {
 			t.Errorf("%s: no plan", view)
+		}
+		// Without these the newest of a run's readings would be parsed for each answer.
+		for _, index := range map[string][]string{"run": {"event_by_kind", "event_with_state"}, "reading": {"event_of_doubt"}}[view] {
+			if !slices.ContainsFunc(plan, func(step string) bool { return strings.Contains(step, index) }) {
+				t.Errorf("%s does not use index %s: %q", view, index, plan)
+			}
 		}
 	}
 }
