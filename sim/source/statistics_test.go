@@ -114,15 +114,12 @@ func TestGammaDrawsAreGamma(t *testing.T) {
 
 // station is one point of the grid over which counting is tested.
 type station struct {
-	name            string
-	signal, idler   Detector
-	counter         Counter
-	rates           Rates
-	gate            time.Duration
-	gates           int
-	meanToleranceR  float64 // relative, what the count-level formulae may be wrong by
-	ofAccidentalsR  float64
-	varianceToleran float64
+	name          string
+	signal, idler Detector
+	counter       Counter
+	rates         Rates
+	gate          time.Duration
+	gates         int
 }
 
 func grid() []station {
@@ -239,4 +236,167 @@ func TestCountsFollowTheEvents(t *testing.T) {
 		}
 	}
 	t.Logf("%d comparisons, largest %.2f standard deviations, limit %.2f", family, worst, limit)
+}
+
+// modes are the two ways to draw a gate; what follows must hold for both.
+var modes = []struct {
+	name string
+	draw func(*Model, *rand.Rand, []Segment) Counts
+}{
+	{"counts", (*Model).Draw},
+	{"events", (*Model).DrawEvents},
+}
+
+// TestVarianceIsPoissonAndDeadTimeReducesIt compares the variance of singles with published
+// closed forms: the mean without dead time, smaller by (1 + n tau)² with a non-paralysable one
+// (Knoll), by 1 - 2 n tau exp(-n tau) with a paralysable one.
+func TestVarianceIsPoissonAndDeadTimeReducesIt(t *testing.T) {
+	const gates = 3000
+	rates := []float64{1e4, 1e6, 1e7, 3e7}
+	family := 2 * 3 * len(rates)
+	for _, mode := range modes {
+		for k, n := range rates {
+			for j, d := range []Detector{{}, {DeadTimeS: 50e-9, Model: NonParalysable}, {DeadTimeS: 50e-9, Model: Paralysable}} {
+				x := n * d.DeadTimeS
+				mean, reduced := n, 1.0
+				switch d.Model {
+				case NonParalysable:
+					mean, reduced = n/(1+x), 1/((1+x)*(1+x))
+				case Paralysable:
+					mean, reduced = n*math.Exp(-x), 1-2*x*math.Exp(-x)
+				}
+				s := station{signal: d, counter: Counter{Logic: EveryPair}}
+				rng := rand.New(rand.NewPCG(15, uint64(10*k+j)))
+				gate := time.Duration(400 / mean * 1e9)
+				got := take(gates, func() Counts { return mode.draw(s.model(), rng, []Segment{{For: gate, Rates: Rates{SignalHz: n}}}) })
+				mean *= gate.Seconds()
+				chi2 := got.variance(0) * (gates - 1) / (mean * reduced)
+				assertChiSquare(t, fmt.Sprintf("%s, %g Hz, dead time %g s %s, variance over mean", mode.name, n, d.DeadTimeS, d.Model), chi2, gates-1, family)
+			}
+		}
+	}
+}
+
+// TestAccidentalsFollowTheProductOfSinglesForBothLogics holds independent streams to R1 R2 tau
+// (every_pair) and R1 (1 - exp(-R2 tau)) (one_per_herald), tau the full window.
+func TestAccidentalsFollowTheProductOfSinglesForBothLogics(t *testing.T) {
+	type c struct {
+		r1, r2, window float64
+		logic          string
+	}
+	var cases []c
+	for _, logic := range []string{EveryPair, OnePerHerald} {
+		for _, r := range [][2]float64{{1e5, 2e5}, {2e6, 1e6}, {1e7, 2e7}} {
+			for _, w := range []float64{10e-9, 100e-9} {
+				cases = append(cases, c{r[0], r[1], w, logic})
+			}
+		}
+	}
+	for _, mode := range modes {
+		for k, c := range cases {
+			mean := c.r1 * c.r2 * c.window
+			if c.logic == OnePerHerald {
+				mean = c.r1 * -math.Expm1(-c.r2*c.window)
+			}
+			s := station{counter: Counter{WindowS: c.window, Logic: c.logic}}
+			rng := rand.New(rand.NewPCG(16, uint64(k)))
+			const gates = 60
+			gate := time.Duration(1e5 / c.r1 * 1e9)
+			got := take(gates, func() Counts {
+				return mode.draw(s.model(), rng, []Segment{{For: gate, Rates: Rates{SignalHz: c.r1, IdlerHz: c.r2}}})
+			})
+			mean *= gate.Seconds()
+			// The mean of the gates against its own spread: the number of coincidences is over-dispersed
+			// where one event has several partners.
+			z := (got.mean[2] - mean) / math.Sqrt(got.variance(2)/gates)
+			assertChiSquare(t, fmt.Sprintf("%s, %g and %g Hz, window %g s, %s: %.2f accidentals a gate, want %.2f", mode.name, c.r1, c.r2, c.window, c.logic, got.mean[2], mean), z*z, 1, 2*len(cases))
+		}
+	}
+}
+
+// TestHeraldingIsBinomial: of S trigger events a share eta is coincident, with variance
+// eta (1 - eta)/S, not that of two independent counts.
+func TestHeraldingIsBinomial(t *testing.T) {
+	const gates = 3000
+	for _, mode := range modes {
+		for k, eta := range []float64{0.05, 0.4, 0.8} {
+			s := station{counter: Counter{WindowS: 1e-12, Logic: EveryPair}}
+			rng := rand.New(rand.NewPCG(17, uint64(k)))
+			chi2 := 0.0
+			for range gates {
+				c := mode.draw(s.model(), rng, []Segment{{For: 5 * time.Millisecond, Rates: Rates{SignalHz: 1e5, IdlerHz: 1.5e5, PairsHz: eta * 1e5}}})
+				n := float64(c.Signal)
+				d := float64(c.Coincidences) - eta*n
+				chi2 += d * d / (n * eta * (1 - eta))
+			}
+			assertChiSquare(t, fmt.Sprintf("%s, heralding %g", mode.name, eta), chi2, gates, 2*3)
+		}
+	}
+}
+
+// TestAfterpulsesAddTheirShare: with a detector that is hardly ever dead, the recorded rate grows
+// by 1/(1 - p), and the share of afterpulses is p.
+func TestAfterpulsesAddTheirShare(t *testing.T) {
+	const gates = 400
+	for _, mode := range modes {
+		for k, p := range []float64{0.005, 0.03, 0.2} {
+			d := Detector{Afterpulse: p, AfterpulseS: 40e-9, DeadTimeS: 30e-9, Model: NonParalysable}
+			s := station{signal: d, counter: Counter{Logic: EveryPair}}
+			rng := rand.New(rand.NewPCG(18, uint64(k)))
+			const n, gate = 2000., time.Second
+			got := take(gates, func() Counts { return mode.draw(s.model(), rng, []Segment{{For: gate, Rates: Rates{SignalHz: n}}}) })
+			want := n / (1 - p)
+			z := (got.mean[0] - want) / math.Sqrt(got.variance(0)/gates)
+			// n tau is 6e-5 and n·delay 8e-5: both are below what these gates resolve.
+			assertChiSquare(t, fmt.Sprintf("%s, afterpulse chance %g: %.1f counts, want %.1f", mode.name, p, got.mean[0], want), z*z, 1, 2*3)
+			if share := d.AfterpulseShare(n); math.Abs(share-p) > 1e-3*p {
+				t.Errorf("afterpulse share %g at a low rate; want %g", share, p)
+			}
+		}
+	}
+}
+
+func TestALatchedDetectorCountsNothing(t *testing.T) {
+	s := station{signal: Detector{LatchHz: 1e6}, counter: Counter{WindowS: 1e-8, Logic: EveryPair}}
+	for _, mode := range modes {
+		rng := rand.New(rand.NewPCG(19, 0))
+		dark := Rates{SignalHz: 1e4, IdlerHz: 1e4, PairsHz: 1e3}
+		light := Rates{SignalHz: 2e6, IdlerHz: 1e4, PairsHz: 1e3}
+		a := mode.draw(s.model(), rng, []Segment{{For: time.Second, Rates: dark}})
+		b := mode.draw(s.model(), rng, []Segment{{For: time.Second, Rates: light}})
+		half := mode.draw(s.model(), rng, []Segment{{For: 500 * time.Millisecond, Rates: light}, {For: 500 * time.Millisecond, Rates: dark}})
+		if a.Signal == 0 || b.Signal != 0 || b.Coincidences != 0 || b.Idler == 0 {
+			t.Errorf("%s: %+v in the dark, %+v in daylight; want no signal counts in daylight", mode.name, a, b)
+		}
+		if r := float64(half.Signal) / float64(a.Signal); r < 0.4 || r > 0.6 {
+			t.Errorf("%s: %d of %d counts when daylight ends half-way; want half", mode.name, half.Signal, a.Signal)
+		}
+	}
+}
+
+func TestTheWindowCapturesWhatJitterLeaves(t *testing.T) {
+	for _, c := range []struct {
+		k    Counter
+		want float64
+	}{
+		{Counter{WindowS: 2e-9, JitterS: 1e-9}, 0.682689},
+		{Counter{WindowS: 4e-9, JitterS: 1e-9}, 0.954500},
+		{Counter{WindowS: 4e-9, JitterS: 1e-9, DelayS: 2e-9}, 0.499968},
+		{Counter{WindowS: 4e-9, DelayS: 1.9e-9}, 1},
+		{Counter{WindowS: 4e-9, DelayS: 2.1e-9}, 0},
+	} {
+		if got := c.k.WindowCapture(); math.Abs(got-c.want) > 1e-5 {
+			t.Errorf("%+v captures %.6f; want %.6f", c.k, got, c.want)
+		}
+		s := station{counter: c.k}
+		s.counter.Logic = EveryPair
+		rng := rand.New(rand.NewPCG(20, 0))
+		got := s.model().DrawEvents(rng, []Segment{{For: time.Second, Rates: Rates{SignalHz: 1e5, IdlerHz: 1e5, PairsHz: 1e5}}})
+		n := float64(got.Signal)
+		accidental := n * n * c.k.WindowS
+		u := math.Sqrt(n*c.want*(1-c.want)+accidental) + 1
+		if d := float64(got.Coincidences) - n*c.want - accidental; math.Abs(d) > 5.5*u {
+			t.Errorf("%+v: %d of %.0f pairs; want %.0f", c.k, got.Coincidences, n, n*c.want)
+		}
+	}
 }
