@@ -264,7 +264,7 @@ func (r *reader) checkSimulation() {
 		_, err = source.New(optics)
 	}
 	if err != nil {
-		for _, one := range strings.Split(err.Error(), "\n") {
+		for one := range strings.SplitSeq(err.Error(), "\n") {
 			found, want := halves(one)
 			r.fail(f.Optics.at, found, "%s", want)
 		}
@@ -347,7 +347,7 @@ func (r *reader) checkDrivers() {
 		if err == nil {
 			return
 		}
-		for _, one := range strings.Split(err.Error(), "\n") {
+		for one := range strings.SplitSeq(err.Error(), "\n") {
 			found, want := halves(strings.TrimPrefix(one, string(d.Name)+": "))
 			r.fail(d.at, found, "%s", want)
 		}
