@@ -143,8 +143,8 @@ func (p deadPair) jointNonParalysable() float64 {
 	if p.tauD < p.tauT {
 		p.nT, p.nD, p.tauT, p.tauD = p.nD, p.nT, p.tauD, p.tauT
 	}
-	if p.tauT <= 0 { // T is never dead
-		return 1 / (1 + p.nD*p.tauD)
+	if p.tauT <= 1e-4*p.tauD { // the first order in the short one is as good as exact, and needs no grid
+		return (1 + p.nPair*p.tauT) / ((1 + p.nD*p.tauD) * (1 + p.nT*p.tauT))
 	}
 	steps := min(128, max(16, int(256*p.tauT/p.tauD)))
 	h := p.tauT / float64(steps)
@@ -190,7 +190,7 @@ func (p deadPair) jointNonParalysable() float64 {
 			x := float64(i) * h
 			here := fed(x)
 			mean := (here + next) / 2
-			if x < jump && jump < x+h {
+			if x < jump && jump <= x+h {
 				mean = ((here+early[steps])*(jump-x) + (late[0]+next)*(x+h-jump)) / (2 * h)
 			}
 			q[i] = (q[i+1]*(1-h*p.nD/2) + h*p.nT*mean) / (1 + h*p.nD/2)

@@ -197,3 +197,21 @@ func TestCoupledDeadTimesAgreeWithEvents(t *testing.T) {
 		near(t, c.name, got, 0.6, 3.5*u)
 	}
 }
+
+func TestCoupledDeadTimesJoinTheirLimits(t *testing.T) {
+	p := deadPair{modelT: NonParalysable, modelD: NonParalysable, nT: 2e6, nD: 3e6, nPair: 1e6, tauD: 100e-9}
+	p.tauT = 0
+	l, _ := p.live()
+	near(t, "a trigger never dead", l, 1/(1+0.3), 1e-12)
+	p.tauT = 1.0001e-4 * p.tauD
+	above, _ := p.live()
+	p.tauT = 0.9999e-4 * p.tauD
+	below, _ := p.live()
+	near(t, "grid against first order where they meet", above, below, 1e-7)
+	p.tauT, p.nPair = 70e-9, 0
+	l, _ = p.live()
+	near(t, "no pairs: nothing is coupled", l, 1/(1+0.3), 1e-5)
+	p = deadPair{modelT: NonParalysable, modelD: NonParalysable, nT: 2e6, nD: 2e6, nPair: 2e6, tauT: 50e-9, tauD: 50e-9}
+	l, _ = p.live()
+	near(t, "all are pairs and the dead times equal: D is live whenever T is", l, 1, 1e-6)
+}

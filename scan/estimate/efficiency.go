@@ -28,6 +28,7 @@ const (
 	refuseLoad           = 0.3   // in first order
 	refuseExact          = 0.5   // where the coupled form is exact
 	loadModelShare       = 0.1   // half-width of the model row in units of (m tau)^2
+	refuseWindow         = 0.1   // rate times window, beyond which the first order in it is not used
 	leastCollection      = 0.995 // below, a flat top proves nothing
 )
 
@@ -84,6 +85,8 @@ const (
 	inTauT
 	inTauD
 	inModel
+	inShadow
+	inEcho
 	inCapture
 	inCollection
 	inPath
@@ -185,6 +188,9 @@ func (c *calculation) refuseConstants(no *Refusal, ch channels, model Model) {
 	}
 	if c.on(AfterpulseStep) {
 		no.need(c.trigger.Afterpulse, c.trigger.Name+": the afterpulse share", 0, 0.999)
+	}
+	if c.on(ShadowStep) && ct.Logic == EveryPair && c.test.DeadTime.Value < ct.Window.Value/2 {
+		no.need(c.test.Afterpulse, c.test.Name+": the afterpulse share", 0, 0.999)
 	}
 	if c.on(DeadTimeStep) || c.on(ShadowStep) || c.on(BackgroundStep) {
 		for _, a := range []Arm{c.trigger, c.test} {
@@ -353,6 +359,9 @@ func (c *calculation) load(no *Refusal, r *Result) {
 			no.addf("%s: %v", c.trigger.Name, err)
 		}
 	}
+	if load := c.windowLoad(); (c.on(AccidentalStep) || c.on(ShadowStep)) && load > refuseWindow {
+		no.addf("count rates times coincidence window is %.3f; want at most %.1f, beyond which accidentals are not held by any check: a shorter window or a lower pump power", load, refuseWindow)
+	}
 	if !c.on(DeadTimeStep) {
 		return
 	}
@@ -382,6 +391,25 @@ func (c *calculation) load(no *Refusal, r *Result) {
 	}
 }
 
+// windowLoad is how many strange counts of either detector a window meets.
+func (c *calculation) windowLoad() float64 {
+	return (c.s + c.d) / c.gateS * c.bench.Counter.Window.Value
+}
+
+// echoes is the largest share of coincidences that can be second ones of the same pair: an
+// afterpulse of either detector that falls into the window, which a dead time beyond half the window
+// forbids. Where in the decay the window lies is not declared, so anything from none to all may be.
+func (c *calculation) echoes() float64 {
+	half, share := c.bench.Counter.Window.Value/2, 0.0
+	if c.trigger.DeadTime.Value < half {
+		share += c.trigger.Afterpulse.Value
+	}
+	if c.logic == EveryPair && c.test.DeadTime.Value < half {
+		share += c.test.Afterpulse.Value
+	}
+	return share
+}
+
 // list names the inputs and their covariances.
 func (c *calculation) list() {
 	ct := c.bench.Counter
@@ -403,6 +431,8 @@ func (c *calculation) list() {
 		inTauT:       constant("dead time of the trigger", "tau_T", "s", c.trigger.DeadTime),
 		inTauD:       constant("dead time of the detector under test", "tau_D", "s", c.test.DeadTime),
 		inModel:      {Quantity: "dead-time model", Symbol: "f_L", Unit: "1", Estimate: 1, U: Rectangular.U(hw), Evaluation: TypeB, Distribution: Rectangular},
+		inShadow:     {Quantity: "accidentals beyond the first order", Symbol: "f_K", Unit: "1", Estimate: 1, U: Rectangular.U(c.windowLoad() * c.windowLoad() / 2), Evaluation: TypeB, Distribution: Rectangular},
+		inEcho:       {Quantity: "afterpulses inside the window: none to all", Symbol: "f_E", Unit: "1", Estimate: 1 + c.echoes()/2, U: Rectangular.U(c.echoes() / 2), Evaluation: TypeB, Distribution: Rectangular},
 		inCapture:    constant("window capture", "eta_W", "1", ct.Capture),
 		inCollection: {Quantity: "collection, one-sided: between the model's share and 1", Symbol: "f_col", Unit: "1", Estimate: 1 - side, U: Rectangular.U(side), Evaluation: TypeB, Distribution: Rectangular},
 	}
@@ -447,6 +477,9 @@ func (c *calculation) silence() {
 	}
 	if !c.on(DeadTimeStep) {
 		mute(inModel)
+	}
+	if !c.on(ShadowStep) {
+		mute(inShadow, inEcho)
 	}
 	if !c.on(CaptureStep) {
 		mute(inCapture)
@@ -509,7 +542,7 @@ func (c *calculation) upTo(x []float64, n int) float64 {
 		}
 		k := 1.0
 		if on(ShadowStep) {
-			k = chanceShadow(c.logic, mT, mD, x[inWindow], tauT, tauD)
+			k = chanceShadow(c.logic, mT, mD, x[inWindow], tauT, tauD) * x[inShadow] * x[inEcho]
 		}
 		if on(AfterpulseStep) {
 			h *= 1 - x[inAfter]
@@ -613,17 +646,22 @@ func (c *calculation) scatter(x []float64) Dispersion {
 		one := *c
 		one.dwells = c.dwells[i : i+1]
 		one.s, one.d, one.c = c.dwells[i].s, c.dwells[i].d, math.Max(c.dwells[i].c, 1)
-		// what C would be in this reading at the common efficiency: value is linear in C there
+		// what C would be in this reading at the common efficiency, by secants: the value is nearly
+		// linear in it
 		z := slices.Clone(x)
+		z[inS], z[inD] = one.s, one.d
+		first := c.dwells[i]
+		first.c = one.c
+		one.dwells = []dwell{first}
 		at := func(counts float64) float64 {
-			z[inS], z[inD], z[inC] = one.s, one.d, counts
-			d := c.dwells[i]
-			d.c = one.c
-			one.dwells = []dwell{d}
+			z[inC] = counts
 			return one.value(z)
 		}
-		y0, y1 := at(0), at(1e3)
-		expect := (y - y0) / (y1 - y0) * 1e3
+		expect := one.c
+		for range 4 {
+			h := 1e-3 * (expect + 1)
+			expect += (y - at(expect)) / (at(expect+h) - at(expect)) * h
+		}
 		// d expect / dS: heralds bring eff each, accidentals rise with the rate
 		e := expect / math.Max(one.s, 1)
 		if expect > 0 && one.s > 0 {

@@ -35,16 +35,15 @@ func TestPairEfficiencyAgreesWithTheCheckValues(t *testing.T) {
 }
 
 func TestOneSimulatedNightGivesTheTruthBack(t *testing.T) {
+	w := nominal(rand.New(rand.NewPCG(5, 6)))
+	w.pairsHz = 2e5
+	all := night{w: w, readings: 10, slices: 5, sliceS: 0.1, darkS: 1}.take()
 	for _, logic := range []Logic{EveryPair, OnePerHerald} {
-		w := nominal(rand.New(rand.NewPCG(5, 6)))
-		w.pairsHz = 2e5
-		n := night{w: w, readings: 10, slices: 5, sliceS: 0.1, darkS: 1}
-		rows := n.rows(logic)
+		rows := rowsOf(all, logic)
 		r, err := Efficiency(rows, skerry(logic), Model{Collection: full}, Question{Trigger: "signal", UnderTest: "idler", MonteCarlo: 20000, Seed: 1})
 		if err != nil {
 			t.Fatal(err)
 		}
-		t.Log("\n" + r.Text())
 		near(t, "efficiency", *r.Value, w.etaD, 3*(*r.U))
 	}
 }

@@ -70,19 +70,20 @@ type night struct {
 	sliceS, darkS    float64
 }
 
-func (n night) rows(logic Logic) (rows Rows) {
-	rows.Run = "20310203T220000-test"
-	when := testStart
-	seq := int64(0)
+// taken is one reading's photons, before a counter's logic makes coincidences of them.
+type taken struct {
+	kind   protocol.ReadingKind
+	sliceS float64
+	slices []gateCounts
+}
+
+func (n night) take() (all []taken) {
 	add := func(kind protocol.ReadingKind, w world, sliceS float64, slices int) {
-		var g []gateCounts
+		t := taken{kind: kind, sliceS: sliceS}
 		for range slices {
-			g = append(g, w.count(sliceS))
+			t.slices = append(t.slices, w.count(sliceS))
 		}
-		seq++
-		r := row(seq, kind, when, sliceS, g, logic)
-		when = when.Add(r.Gate.Duration() + time.Second)
-		rows.Readings = append(rows.Readings, r)
+		all = append(all, t)
 	}
 	spoiled := n.w
 	spoiled.spoiled = true
@@ -94,10 +95,21 @@ func (n night) rows(logic Logic) (rows Rows) {
 		}
 	}
 	add(protocol.Background, spoiled, n.darkS, 1)
+	return all
+}
+
+func rowsOf(all []taken, logic Logic) (rows Rows) {
+	rows.Run = "20310203T220000-test"
+	when := testStart
+	for i, t := range all {
+		r := row(int64(i+1), t.kind, when, t.sliceS, t.slices, logic)
+		when = when.Add(r.Gate.Duration() + time.Second)
+		rows.Readings = append(rows.Readings, r)
+	}
 	return rows
 }
 
-// withLogic gives the same photons to the other counter logic.
+// nominal is the world that skerry's constants describe.
 func nominal(r *rand.Rand) world {
 	b := skerry(EveryPair)
 	path := 1.0

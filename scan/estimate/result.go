@@ -34,6 +34,7 @@ type Result struct {
 	Interval   *Interval   `json:"interval"`                     // the coverage interval, symmetric or not
 	Dispersion *Dispersion `json:"dispersion"`
 	MonteCarlo *MonteCarlo `json:"monte_carlo"`
+	Residuals  []Residual  `json:"residuals,omitempty"` // of a fitted profile
 	Warnings   []string    `json:"warnings"`
 	Because    []string    `json:"because"` // why there is no value
 
