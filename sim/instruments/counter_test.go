@@ -201,17 +201,17 @@ func TestCounterGateNobodyFetchesForHoursIsStillTrue(t *testing.T) {
 		c := plug(t, t.Context(), counter(t, w, nil))
 		s.expect("G0 A1", "TAKEN")
 		time.Sleep(2 * time.Second)
-		c.send(":INIT\n")
+		c.send(":SENS:TOT:APER 1000;:INIT\n")
 		time.Sleep(2 * time.Second)
-		for i := range 500 {
+		for i := range 500 { // some of them while the gate is open
 			s.expect([]string{"G0 A9", "G0 A2"}[i%2], "TAKEN")
 			time.Sleep(20 * time.Second)
 		}
 		if got := c.ask(":FETC?"); got != answered(gates(w, instruments.GateClosed)[0].Counts) {
 			t.Errorf("counts %s; want those of the ledger", got)
 		}
-		if r := gates(w, instruments.GateClosed)[0].Axes["signal_arm"]; math.Abs(r.LowDeg-1) > 1e-9 || math.Abs(r.HighDeg-1) > 1e-9 {
-			t.Errorf("during the gate the arm stood at %+v; want 1", r)
+		if r := gates(w, instruments.GateClosed)[0].Axes["signal_arm"]; math.Abs(r.LowDeg-1) > 1e-9 || math.Abs(r.HighDeg-9) > 1e-9 {
+			t.Errorf("during the gate the arm was at %+v; want 1, where it began, to 9", r)
 		}
 		s.hangUp()
 		c.hangUp()
@@ -255,6 +255,45 @@ func TestLedgerIsInOrderAndOnPaper(t *testing.T) {
 		// At pace 10 a gate of 1 s is over in 0.1 s, and is still 1 s in the ledger.
 		if g := gates(w, instruments.GateClosed)[0]; g.GateS != 1 {
 			t.Errorf("gate of %.6f s; want 1 s of bench time", g.GateS)
+		}
+		s.hangUp()
+		c.hangUp()
+	})
+}
+
+func TestCounterIntegratesRatesAlongAMotion(t *testing.T) {
+	bubble(t, func(t *testing.T) {
+		w := world(t, 1, "")
+		s := plug(t, t.Context(), arms(t, w, func(c *instruments.RotaryConfig) { c.Axes[0].AccelDegS2 = 1e6 }))
+		c := plug(t, t.Context(), counter(t, w, nil))
+		s.expect("G0 B2.864", "TAKEN")
+		time.Sleep(2 * time.Second)
+		c.send(":INIT\n")
+		s.expect("G0 A6", "TAKEN") // at 10 deg/s it passes the peak within a few hundredths of a second
+		time.Sleep(2 * time.Second)
+		p := still
+		p.PumpOpen, p.SignalOpen, p.IdlerOpen, p.IdlerDeg = 1, 1, 1, 2.864
+		const n = 4000
+		passing := 0.0
+		for k := range n {
+			p.SignalDeg = 6 * (float64(k) + 0.5) / n
+			passing += model(t).Rates(p).SignalHz / n
+		}
+		p.SignalDeg = 0
+		before := model(t).Rates(p).SignalHz
+		p.SignalDeg = 6
+		after := model(t).Rates(p).SignalHz
+		var moved time.Time
+		for _, r := range w.Ledger().Records() {
+			if r.Kind == instruments.MoveStarted {
+				moved = r.At
+			}
+		}
+		g := gates(w, instruments.GateClosed)[0]
+		wait := moved.Sub(g.Opened).Seconds()
+		want := before*wait + passing*0.6 + after*(0.4-wait)
+		if d := math.Abs(g.Seen.Signal.MeanHz - want); d > 1e-3*want {
+			t.Errorf("mean rate %.1f Hz; want %.1f by fine steps, to a part in a thousand", g.Seen.Signal.MeanHz, want)
 		}
 		s.hangUp()
 		c.hangUp()

@@ -22,8 +22,19 @@ const hostPoll = 10 * time.Millisecond
 // was killed outlives it. While the plug is pulled there is no link. ready, if not nil, is called
 // once, when the link can be opened, with what a bench file would say for the line.
 func Present(ctx context.Context, inst Instrument, link string, ready func(address string)) error {
-	defer func() { _ = os.Remove(link) }()
+	var old *pty
+	defer func() {
+		_ = os.Remove(link)
+		if old != nil {
+			_ = old.Close()
+		}
+	}()
 	for {
+		if old != nil && !inst.Plugged() {
+			old.link = link
+			_ = old.Close()
+			old = nil
+		}
 		if err := await(ctx, inst.Plugged); err != nil {
 			return err
 		}
@@ -35,6 +46,12 @@ func Present(ctx context.Context, inst Instrument, link string, ready func(addre
 			_ = pty.Close()
 			return fmt.Errorf("%s: %w", inst.Name(), err)
 		}
+		// Only now may the old one go: a link to a terminal that is gone leads to whoever gets its
+		// number next.
+		if old != nil {
+			_ = old.Close()
+		}
+		pty.link, old = link, pty
 		if ready != nil {
 			ready(link)
 			ready = nil
@@ -49,13 +66,13 @@ func Present(ctx context.Context, inst Instrument, link string, ready func(addre
 			pulled = errors.Is(err, ErrUnplugged)
 		}
 		if pulled {
-			_ = os.Remove(link)
-			err = nil
+			_ = pty.Close()
+			old, err = nil, nil
 		}
-		_ = pty.Close()
 		if err != nil {
 			return err
 		}
+		pty.link = ""
 	}
 }
 
@@ -93,6 +110,15 @@ func point(link, path string) error {
 type pty struct {
 	*os.File
 	slave string
+	link  string // taken away before the terminal, if it still leads here
+}
+
+// Close takes the link away, and then hangs up.
+func (p *pty) Close() error {
+	if p.link != "" {
+		_ = os.Remove(p.link)
+	}
+	return p.File.Close()
 }
 
 // openPty opens one whose slave is in raw mode already: a fresh one echoes, and turns a banner

@@ -110,3 +110,43 @@ func BenchmarkGate(b *testing.B) {
 		})
 	}
 }
+
+func TestNoTwoDevicesWakeAtOneInstant(t *testing.T) {
+	bubble(t, func(t *testing.T) {
+		w := world(t, 1, "restart(stage, at 10s); restart(counter, at 10s); restart(pump, at 10s)")
+		p, err := instruments.NewShutter(w, instruments.ShutterConfig{Name: "pump", Blade: instruments.PumpBlade})
+		if err != nil {
+			t.Fatal(err)
+		}
+		lines := []*line{plug(t, t.Context(), arms(t, w, nil)), plug(t, t.Context(), counter(t, w, nil)), plug(t, t.Context(), p)}
+		came := make([]time.Time, len(lines))
+		var hosts sync.WaitGroup
+		for i, l := range lines {
+			hosts.Go(func() {
+				l.ask([]string{"WHO", "*IDN?", "*IDN?"}[i])
+				came[i] = time.Now()
+			})
+		}
+		hosts.Wait()
+		time.Sleep(20 * time.Second)
+		for _, l := range lines {
+			l.hangUp()
+		}
+		w.Settle()
+		for _, r := range w.Ledger().Records() {
+			if r.Kind == instruments.Restarted {
+				came = append(came, r.At)
+			}
+		}
+		seen := map[int64]bool{}
+		for _, at := range came {
+			if seen[at.UnixNano()] {
+				t.Errorf("two devices did something at %v", at)
+			}
+			seen[at.UnixNano()] = true
+		}
+		if len(came) != 6 {
+			t.Errorf("%d answers and restarts; want 3 each", len(came))
+		}
+	})
+}

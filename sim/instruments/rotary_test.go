@@ -183,6 +183,8 @@ func TestRotaryStopByteActsInTheMiddleOfALine(t *testing.T) {
 		if a < 15 || a > 25 || math.Abs(a-2*b) > 1e-6 {
 			t.Errorf("stopped at %.4f and %.4f; want about 20, and both still on the line 2 to 1", a, b)
 		}
+		time.Sleep(time.Minute)
+		w.Settle()
 		var kinds []string
 		for _, r := range w.Ledger().Records() {
 			kinds = append(kinds, string(r.Kind))

@@ -357,12 +357,14 @@ func (w *World) ramps() []*ramp {
 	return rs
 }
 
-// The sampling of what changes continuously: pieces no longer than sampleEvery, at least
-// sampleLeast of them, and no more than sampleMost in one stretch.
+// The sampling of what changes continuously: pieces no longer than sampleEvery in which no arm
+// turns further than sampleDeg, well inside the width of any peak; at least sampleLeast of them,
+// and no more than sampleMost in one stretch.
 const (
 	sampleEvery = 250 * time.Millisecond
+	sampleDeg   = 0.05
 	sampleLeast = 8
-	sampleMost  = 256
+	sampleMost  = 1024
 )
 
 // pieces cuts [from, to] at each change, and further where something changes continuously. Each
@@ -384,18 +386,18 @@ func (w *World) pieces(from, to time.Time, visit func(mid time.Time, lasts time.
 	for i := 1; i < len(cuts); i++ {
 		u, v := cuts[i-1], cuts[i]
 		mid := u.Add(v.Sub(u) / 2)
-		changing := wandering
+		changing, deg := wandering, 0.0
 		for _, x := range w.arms {
-			ph := x.path.phases[x.path.find(mid)]
-			changing = changing || ph.lasts > 0 && mid.Sub(ph.at) < ph.lasts
+			deg = max(deg, math.Abs(x.path.axis(v)-x.path.axis(u)))
 		}
+		changing = changing || deg > 0
 		for _, r := range ramps {
 			p := r.points[r.find(mid)]
 			changing = changing || p.lasts > 0 && mid.Sub(p.at) < p.lasts
 		}
 		n := time.Duration(1)
 		if changing {
-			n = min(sampleMost, max(sampleLeast, (v.Sub(u)+sampleEvery-1)/sampleEvery))
+			n = min(sampleMost, max(sampleLeast, (v.Sub(u)+sampleEvery-1)/sampleEvery, time.Duration(math.Ceil(deg/sampleDeg))))
 		}
 		for k := range n {
 			a, b := u.Add(v.Sub(u)*k/n), u.Add(v.Sub(u)*(k+1)/n)
