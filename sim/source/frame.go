@@ -132,7 +132,7 @@ func (m *Model) rays(b *band, s *stand, pairs bool) []ray {
 		edge = min(k*open*m.o.PumpWaistUm/1000, 12)
 	}
 	if s.arm.Aperture == Gaussian {
-		return s.rays(m.rules, points((5+1.5*phase+edge)*m.effort, 3, mostEvenly), points((5+edge)*m.effort, 4, mostEvenly), m.mirrored)
+		return s.rays(m.rules, points((6+1.5*phase+1.3*edge)*m.effort, 3, mostEvenly), points((6+1.3*edge)*m.effort, 4, mostEvenly), m.mirrored)
 	}
 	if !pairs {
 		return s.rays(m.rules, points((3+0.9*phase)*m.effort, 2, 48), points((8+2*phase)*m.effort, 6, 96), m.mirrored)

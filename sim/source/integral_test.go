@@ -35,6 +35,9 @@ func (b brute) sums(n int) (signal, pairs float64) {
 	w := o.PumpWaistUm / 1000
 	ct, st := math.Cos(b.pose.TiltDeg*math.Pi/180), math.Sin(b.pose.TiltDeg*math.Pi/180)
 	k0p := 2 * math.Pi / (b.pose.PumpNm * 1e-6)
+	e := [3]bool{o.Process[0] == 'e', o.Process[2] == 'e', o.Process[3] == 'e'}
+	pump := b.indices(b.pose.PumpNm)
+	np := b.inside(e[0], pump, k0p, -k0p*st, 0) / k0p
 	for range n {
 		for i := range x {
 			x[i] = math.Mod(x[i]+step[i], 1)
@@ -60,15 +63,15 @@ func (b brute) sums(n int) (signal, pairs float64) {
 		g := math.Sqrt(-2*math.Log(1-x[3])) / w
 		qx, qy := -k0p*st+g*math.Cos(2*math.Pi*x[4]), g*math.Sin(2*math.Pi*x[4])
 		ix, iy := qx-sx, qy-sy
-		e := [3]bool{o.Process[0] == 'e', o.Process[2] == 'e', o.Process[3] == 'e'}
-		dk := b.inside(e[0], b.pose.PumpNm, qx, qy) - b.inside(e[1], nm, sx, sy) - b.inside(e[2], idlerNm, ix, iy)
+		is, ii := b.indices(nm), b.indices(idlerNm)
+		dk := b.inside(e[0], pump, k0p, qx, qy) - b.inside(e[1], is, ks, sx, sy) - b.inside(e[2], ii, ki, ix, iy)
 		t := dk * o.ThicknessMm / 2
 		s := 1.0
 		if t != 0 {
 			s = math.Sin(t) / t
 		}
 		ws, wi := 2*math.Pi*lightSpeed/(nm*1e-9), 2*math.Pi*lightSpeed/(idlerNm*1e-9)
-		n3 := b.inside(e[0], b.pose.PumpNm, -k0p*st, 0) / k0p * b.inside(e[1], nm, 0, 0) / ks * b.inside(e[2], idlerNm, 0, 0) / ki
+		n3 := np * b.inside(e[1], is, ks, 0, 0) / ks * b.inside(e[2], ii, ki, 0, 0) / ki
 		v := s * s * weight * ks * ks * ws * wi / n3 * 2 * math.Pi * lightSpeed / (nm * nm * 1e-9) * (b.to - b.from) * pass(o.Signal.Filter, nm)
 		signal += v
 		// Where the partner meets the idler aperture.
@@ -105,21 +108,24 @@ func pass(f Filter, nm float64) float64 {
 	return math.Pow(2, -math.Pow(2*(nm-f.CentreNm)/f.WidthNm, 2))
 }
 
-// inside is the normal part of a wave vector by repeated refraction, in 1/mm.
-func (b brute) inside(extraordinary bool, nm, qx, qy float64) float64 {
+func (b brute) indices(nm float64) [2]float64 {
 	no, _ := b.o.Crystal.Extrapolate(crystal.Ordinary, nm, b.pose.CrystalCel)
-	k0 := 2 * math.Pi / (nm * 1e-6)
+	ne, _ := b.o.Crystal.Extrapolate(crystal.Extraordinary, nm, b.pose.CrystalCel)
+	return [2]float64{no, ne}
+}
+
+// inside is the normal part of a wave vector by repeated refraction, in 1/mm.
+func (b brute) inside(extraordinary bool, n [2]float64, k0, qx, qy float64) float64 {
+	no, ne := n[0], n[1]
 	q2 := qx*qx + qy*qy
 	kz := math.Sqrt(no*no*k0*k0 - q2)
 	if !extraordinary {
 		return kz
 	}
-	ne, _ := b.o.Crystal.Extrapolate(crystal.Extraordinary, nm, b.pose.CrystalCel)
 	cx, cz := math.Sin(b.o.CutDeg*math.Pi/180), math.Cos(b.o.CutDeg*math.Pi/180)
 	for range 6 {
 		c := (qx*cx + kz*cz) / math.Sqrt(q2+kz*kz)
-		n2 := 1 / (c*c/(no*no) + (1-c*c)/(ne*ne))
-		kz = math.Sqrt(n2*k0*k0 - q2)
+		kz = math.Sqrt(k0*k0/(c*c/(no*no)+(1-c*c)/(ne*ne)) - q2)
 	}
 	return kz
 }

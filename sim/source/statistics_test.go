@@ -301,7 +301,7 @@ func TestAccidentalsFollowTheProductOfSinglesForBothLogics(t *testing.T) {
 			s := station{counter: Counter{WindowS: c.window, Logic: c.logic}}
 			rng := rand.New(rand.NewPCG(16, uint64(k)))
 			const gates = 60
-			gate := time.Duration(1e5 / c.r1 * 1e9)
+			gate := time.Duration(2e4 / c.r1 * 1e9)
 			got := take(gates, func() Counts {
 				return mode.draw(s.model(), rng, []Segment{{For: gate, Rates: Rates{SignalHz: c.r1, IdlerHz: c.r2}}})
 			})
