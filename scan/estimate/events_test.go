@@ -1,9 +1,6 @@
 package estimate
 
-import (
-	"math"
-	"math/rand/v2"
-)
+import "math/rand/v2"
 
 // world is the truth behind a simulated gate: photons one by one, written from the definitions
 // alone, so that it shares no formula with what it checks.
@@ -172,12 +169,4 @@ func (w world) count(t float64) gateCounts {
 		}
 	}
 	return c
-}
-
-// capture is the chance that a true partner falls inside the window.
-func (w world) capture() float64 {
-	if w.jitterS == 0 {
-		return 1
-	}
-	return math.Erf(w.windowS / 2 / (math.Sqrt2 * w.jitterS))
 }

@@ -6,6 +6,7 @@ import (
 	"math/rand/v2"
 	"slices"
 
+	"gonum.org/v1/gonum/interp"
 	"gonum.org/v1/gonum/stat/distuv"
 )
 
@@ -104,7 +105,11 @@ func FitPeak(data []Spot, shape PeakShape, predicted func(angleDeg float64) floa
 		return PeakFit{}, fmt.Errorf("all readings at %g deg; want a profile", low)
 	}
 	if shape == PredictedPeak {
-		f.topDeg = highest(predicted, low, high)
+		var err error
+		if f.profile, err = tabulate(predicted, low-(high-low)/2, high+(high-low)/2, (high-low)/float64(len(f.data))); err != nil {
+			return PeakFit{}, err
+		}
+		f.topDeg = highest(f.profile, low, high)
 	}
 	bestValue := math.Inf(1)
 	var failed error
@@ -123,6 +128,33 @@ func FitPeak(data []Spot, shape PeakShape, predicted func(angleDeg float64) floa
 		return PeakFit{}, fmt.Errorf("%s: %w", shape, failed)
 	}
 	return f, nil
+}
+
+// tablePerStep is how many values of the model lie between two readings of a predicted profile.
+const tablePerStep = 8
+
+// tabulate asks the model once for each place and puts a cubic spline through the answers: a fit, its
+// intervals and its goodness ask some million times, and the model takes its time.
+func tabulate(f func(float64) float64, low, high, step float64) (func(float64) float64, error) {
+	n := min(max(int((high-low)/step)*tablePerStep, 64), 4096)
+	x, y := make([]float64, n), make([]float64, n)
+	sum := 0.0
+	for i := range x {
+		x[i] = low + (high-low)*float64(i)/float64(n-1)
+		y[i] = f(x[i])
+		if !(y[i] >= 0) || math.IsInf(y[i], 0) {
+			return nil, fmt.Errorf("predicted profile: %g at %g deg; want a rate", y[i], x[i])
+		}
+		sum += y[i]
+	}
+	if sum == 0 {
+		return nil, fmt.Errorf("predicted profile: nothing from %g to %g deg; want a profile where the readings are", low, high)
+	}
+	var c interp.NaturalCubic
+	if err := c.Fit(x, y); err != nil {
+		return nil, fmt.Errorf("predicted profile: %w", err)
+	}
+	return func(v float64) float64 { return math.Max(0, c.Predict(math.Min(math.Max(v, low), high))) }, nil
 }
 
 // Cash is 2 sum [m - n + n ln(n/m)]; +Inf where an expectation is not positive.
@@ -202,7 +234,7 @@ func (f *PeakFit) problem(start []float64, low, high float64) problem {
 	}
 	lo[centreParam], hi[centreParam] = low-span/2, high+span/2
 	if f.Shape == PredictedPeak {
-		lo[centreParam], hi[centreParam] = -span, span
+		lo[centreParam], hi[centreParam] = -span/2, span/2 // as far as the table reaches
 	} else {
 		lo[widthParam], hi[widthParam] = finest, 4*span
 		lo[heightParam] = 0
@@ -399,12 +431,10 @@ func (f PeakFit) Interval(i int, coverage float64) (Interval, error) {
 		return fit.Value - f.Fit.Value - z*z, fit.Params
 	}
 	end := func(sign float64) (float64, error) {
-		in, out := at, at
-		start := f.Fit.Params
-		var v float64
+		in, start := at, f.Fit.Params
+		var out, v float64
 		for try := 1; ; try++ {
-			out = at + sign*z*u*float64(try)
-			out = math.Min(math.Max(out, f.pr.low[i]), f.pr.high[i])
+			out = math.Min(math.Max(at+sign*z*u*float64(try), f.pr.low[i]), f.pr.high[i])
 			v, start = rise(out, start)
 			if math.IsNaN(v) {
 				return 0, fmt.Errorf("profile likelihood of %s at %g: %w", f.Names[i], out, errNoFit)

@@ -1,0 +1,194 @@
+package estimate
+
+import (
+	"bytes"
+	"encoding/json"
+	"errors"
+	"math"
+	"math/rand/v2"
+	"regexp"
+	"strings"
+	"testing"
+
+	"gemel/protocol"
+)
+
+func demoNight() Rows {
+	w := nominal(rand.New(rand.NewPCG(41, 1)))
+	w.pairsHz = 1e5
+	rows := rowsOf(night{w: w, readings: 4, slices: 5, sliceS: 0.05, darkS: 0.5}.take(), EveryPair)
+	one := 1
+	for i := range rows.Readings {
+		rows.Readings[i].Simulated = &one
+	}
+	rows.Readings[2].Accepted, rows.Readings[2].Reason = false, "the pump left its band"
+	rows.Doubtful = map[int64]string{4: "the idler arm had slipped"}
+	return rows
+}
+
+func TestTheResultsJSONHasTheFixedKeys(t *testing.T) {
+	r, err := Efficiency(demoNight(), skerry(EveryPair), Model{Collection: full}, Question{Trigger: "signal", UnderTest: "idler"})
+	if err != nil {
+		t.Fatal(err)
+	}
+	refused := Refused(demoNight(), "efficiency", &Refusal{Reasons: []string{"not latched"}})
+	for _, c := range []Result{r, refused} {
+		text, err := c.JSON()
+		if err != nil {
+			t.Fatal(err)
+		}
+		var got map[string]any
+		if err := json.Unmarshal(text, &got); err != nil {
+			t.Fatal(err)
+		}
+		for _, key := range []string{"run", "kind", "value", "standard_uncertainty", "expanded_uncertainty", "coverage_factor", "unit", "budget", "corrections", "conditions",
+			"readings_used", "readings_set_aside", "simulated"} {
+			v, ok := got[key]
+			if !ok {
+				t.Errorf("no key %q", key)
+			}
+			if _, list := v.([]any); !list && strings.Contains(" budget corrections conditions readings_used readings_set_aside ", " "+key+" ") {
+				t.Errorf("%q is %v; want a list, even an empty one", key, v)
+			}
+		}
+		if got["kind"] != "efficiency" || got["run"] != "20310203T220000-test" || got["simulated"] != 1.0 {
+			t.Errorf("kind %v, run %v, simulated %v", got["kind"], got["run"], got["simulated"])
+		}
+	}
+	if refused.Value != nil || !strings.Contains(refused.Text(), "not latched") {
+		t.Errorf("refused: %v, %s", refused.Value, refused.Text())
+	}
+}
+
+func TestTheReportBeginsWithASentence(t *testing.T) {
+	r, err := Efficiency(demoNight(), skerry(EveryPair), Model{Collection: full}, Question{Trigger: "signal", UnderTest: "idler"})
+	if err != nil {
+		t.Fatal(err)
+	}
+	first, rest, _ := strings.Cut(r.Text(), "\n")
+	if !regexp.MustCompile(`^The detection efficiency of idler is 0\.\d{4} ± 0\.\d{4} \(expanded uncertainty, k = 1\.96, 95 % coverage\); 2 readings kept, 2 set aside\.$`).MatchString(first) {
+		t.Errorf("first line %q", first)
+	}
+	for _, part := range []string{"Simulated", "From the counts to the result", "raw coincidences over trigger counts", "background", "accidentals", "afterpulsing", "dead time", "window capture", "path", "collection",
+		"Uncertainty budget (JCGM 100)", "Cov(S, C)", "combined standard uncertainty", "Birge ratio", "Conditions", "wavelength", "bandwidth", "polarisation", "plane", "count rate of the trigger", "detector settings",
+		"coverage factor k", "heralding efficiency, net", "coincidence-to-accidental ratio, net", "coincidence-to-accidental ratio, gross", "Set aside", "the pump left its band", "doubtful: the idler arm had slipped"} {
+		if !strings.Contains(rest, part) {
+			t.Errorf("no %q in the report", part)
+		}
+	}
+	if a, b := strings.Index(rest, "From the counts"), strings.Index(rest, "Uncertainty budget"); a < 0 || b < a || strings.Index(rest, "Conditions") < b {
+		t.Error("want the waterfall, then the budget, then the conditions")
+	}
+}
+
+func TestTheSameRowsGiveTheSameDigits(t *testing.T) {
+	rows := demoNight()
+	ask := func(rows Rows) []byte {
+		r, err := Efficiency(rows, skerry(EveryPair), Model{Collection: full}, Question{Trigger: "signal", UnderTest: "idler", MonteCarlo: 2000, Seed: 9})
+		if err != nil {
+			t.Fatal(err)
+		}
+		text, err := r.JSON()
+		if err != nil {
+			t.Fatal(err)
+		}
+		return append(text, r.Text()...)
+	}
+	// What the logbook keeps is JSON; read back it must be the same rows.
+	copied := rows
+	copied.Readings = nil
+	for _, row := range rows.Readings {
+		text, err := json.Marshal(row)
+		if err != nil {
+			t.Fatal(err)
+		}
+		var back protocol.Reading
+		if err := json.Unmarshal(text, &back); err != nil {
+			t.Fatal(err)
+		}
+		copied.Readings = append(copied.Readings, back)
+	}
+	first := ask(rows)
+	for range 3 {
+		if !bytes.Equal(first, ask(copied)) {
+			t.Fatal("the same rows, read back, gave other digits")
+		}
+	}
+}
+
+func TestTheWaterfallEndsAtTheResultAndStepsCanBeSwitchedOff(t *testing.T) {
+	rows, b := demoNight(), skerry(EveryPair)
+	q := Question{Trigger: "signal", UnderTest: "idler"}
+	r, err := Efficiency(rows, b, Model{Collection: full}, q)
+	if err != nil {
+		t.Fatal(err)
+	}
+	last := r.Waterfall[len(r.Waterfall)-1]
+	near(t, "last step", last.After, *r.Value, 1e-15)
+	near(t, "first step", r.Waterfall[0].After, r.Waterfall[0].Amount, 1e-15)
+	if len(r.Waterfall) != 1+len(steps) {
+		t.Errorf("%d steps; want %d", len(r.Waterfall), 1+len(steps))
+	}
+	q.Off = map[Step]bool{PathStep: true}
+	off, err := Efficiency(rows, b, Model{Collection: full}, q)
+	if err != nil {
+		t.Fatal(err)
+	}
+	near(t, "without the path", *off.Value, *r.Value*0.96*0.985, 1e-12)
+	for _, row := range off.Budget {
+		if strings.HasPrefix(row.Symbol, "T_") {
+			t.Errorf("row %q although the path is switched off", row.Quantity)
+		}
+	}
+	if !strings.Contains(off.Text(), "switched off") {
+		t.Error("the report does not say that a correction is switched off")
+	}
+	for _, s := range steps {
+		q.Off = map[Step]bool{s: true}
+		if r, err := Efficiency(rows, b, Model{Collection: full}, q); err != nil || r.Waterfall[1+indexOf(s)].Applied {
+			t.Errorf("%s switched off: %v", s, err)
+		}
+	}
+}
+
+func indexOf(step Step) int {
+	for i, s := range steps {
+		if s == step {
+			return i
+		}
+	}
+	return -1
+}
+
+func TestSwitchedOffStepsNeedNoConstants(t *testing.T) {
+	r, err := Efficiency(demoNight(), Bench{Counter: Counter{Logic: EveryPair, Latched: true, Pairs: map[string][2]string{"pairs": {"signal", "idler"}}}, PumpNm: 405,
+		Arms: []Arm{{Name: "signal", Channel: "signal", Filter: &Filter{810, 10, "flat"}}, {Name: "idler", Channel: "idler"}}}, Model{}, plainQuestion(nil))
+	if err != nil {
+		t.Fatal(err)
+	}
+	near(t, "raw ratio", *r.Value, r.Waterfall[0].Amount, 1e-15)
+	// binomial, since nothing else is in it
+	s := r.Budget[1].Estimate
+	near(t, "u", *r.U, binomialU(*r.Value, s), 1e-9)
+}
+
+func binomialU(p, n float64) float64 { return math.Sqrt(p * (1 - p) / n) }
+
+func TestRoundingShowsTwoDigitsOfTheUncertainty(t *testing.T) {
+	for _, c := range []struct {
+		u    float64
+		want int
+	}{{0.0042, 4}, {0.0996, 2}, {0.1, 2}, {12, 0}, {1.2e-5, 6}, {0, 6}} {
+		if got := decimals(c.u); got != c.want {
+			t.Errorf("u = %g: %d places; want %d", c.u, got, c.want)
+		}
+	}
+}
+
+func TestARefusalIsAnError(t *testing.T) {
+	var no *Refusal
+	_, err := Efficiency(Rows{Run: "x"}, skerry(EveryPair), Model{Collection: full}, Question{Trigger: "signal", UnderTest: "idler"})
+	if !errors.As(err, &no) || !strings.HasPrefix(err.Error(), "no result: ") {
+		t.Errorf("empty run: %v", err)
+	}
+}
