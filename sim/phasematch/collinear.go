@@ -45,6 +45,9 @@ func (s *Slab) WalkoffDeg() (float64, error) {
 
 // PumpAxisDeg is the angle between pump and optic axis inside: cut plus the refracted tilt.
 func (s *Slab) PumpAxisDeg() (float64, error) {
+	if err := s.checkProcess(); err != nil {
+		return 0, err
+	}
 	p, err := s.At(2 * s.PumpNm)
 	if err == nil {
 		return p.PumpAxisDeg(), nil
@@ -63,6 +66,9 @@ func (s *Slab) PumpAxisDeg() (float64, error) {
 
 // TiltForPumpAxis is the way back: the tilt that puts the pump at an angle to the optic axis.
 func (s *Slab) TiltForPumpAxis(axisDeg float64) (float64, error) {
+	if err := s.checkProcess(); err != nil {
+		return 0, err
+	}
 	no, err := s.index(crystal.Ordinary, s.PumpNm)
 	if err != nil {
 		return 0, err
@@ -88,6 +94,9 @@ func (s *Slab) TiltForPumpAxis(axisDeg float64) (float64, error) {
 func (s *Slab) CollinearDeg(signalNm float64) ([]float64, error) {
 	if !(signalNm > s.PumpNm) {
 		return nil, fmt.Errorf("phasematch: signal %g nm with a pump of %g nm; want a longer wavelength than the pump's", signalNm, s.PumpNm)
+	}
+	if err := s.checkProcess(); err != nil {
+		return nil, err
 	}
 	idlerNm := Idler(s.PumpNm, signalNm)
 	var w [3]planeWave

@@ -14,7 +14,10 @@
 // crystals, and biaxial ones in their principal planes only.
 package phasematch
 
-import "fmt"
+import (
+	"fmt"
+	"slices"
+)
 
 // Process says how pump, signal and idler are polarised, in this order: e-oo is type I.
 type Process string
@@ -35,15 +38,14 @@ func Processes() []Process { return []Process{EOO, EOE, EEO, OEE, OOE, OEO} }
 
 // Check refuses a process that is none of the six.
 func (p Process) Check() error {
-	for _, q := range Processes() {
-		if p == q {
-			return nil
-		}
+	if slices.Contains(Processes(), p) {
+		return nil
 	}
 	return fmt.Errorf("phasematch: process %q; want one of %v", string(p), Processes())
 }
 
-// Rays says which of pump, signal and idler are extraordinary.
+// Rays says which of pump, signal and idler are extraordinary. It panics on what Check refuses for
+// being no process at all.
 func (p Process) Rays() (pump, signal, idler bool) {
 	return p[0] == 'e', p[2] == 'e', p[3] == 'e'
 }

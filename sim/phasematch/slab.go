@@ -63,7 +63,7 @@ func (s *Slab) Check() error {
 	if s.Crystal.Class != crystal.Uniaxial {
 		errorf("%s is %s; want a uniaxial crystal, biaxial ones are matched in principal planes only", s.Crystal.Name, s.Crystal.Class)
 	}
-	if err := s.Process.Check(); err != nil && !(s.PolingUm != 0 && (s.Process == "e-ee" || s.Process == "o-oo")) {
+	if err := s.checkProcess(); err != nil {
 		errs = append(errs, err)
 	}
 	if !(s.CutDeg >= 0 && s.CutDeg <= 90) {
@@ -87,11 +87,22 @@ func (s *Slab) Check() error {
 	return errors.Join(errs...)
 }
 
+// checkProcess allows equal polarisations, which only poling can match, with poling.
+func (s *Slab) checkProcess() error {
+	if s.PolingUm != 0 && (s.Process == "e-ee" || s.Process == "o-oo") {
+		return nil
+	}
+	return s.Process.Check()
+}
+
 // At prepares the slab for one signal wavelength. It fails outside the set's range (unless
 // Slab.Extrapolate), and for a signal that is not longer than the pump.
 func (s *Slab) At(signalNm float64) (Pair, error) {
 	if !(signalNm > s.PumpNm) {
 		return Pair{}, fmt.Errorf("phasematch: signal %g nm with a pump of %g nm; want a longer wavelength than the pump's", signalNm, s.PumpNm)
+	}
+	if err := s.checkProcess(); err != nil {
+		return Pair{}, err
 	}
 	var p Pair
 	p.SignalNm, p.IdlerNm = signalNm, Idler(s.PumpNm, signalNm)

@@ -187,10 +187,7 @@ func equalDead(s, i response, a, b, tau float64) float64 {
 func unequalDead(s, i response, c, ts, ti float64) float64 {
 	const cells = 256
 	h := ts / cells
-	n2 := int(math.Round(ti / h))
-	if n2 < 1 {
-		n2 = 1
-	}
+	n2 := max(1, int(math.Round(ti/h)))
 	a, b := s.driving-c, i.driving-c
 	// f[k], g[k]: densities with k cells left; of the signal dead, the idler dead. p is scaled to 1.
 	var f, g [cells + 1]float64
