@@ -292,7 +292,7 @@ func (j *judge) reading(r *runState, b *protocol.Reading) {
 	}
 	j.gates = nil
 	if last != nil {
-		if j.lastGate.After(last.closed) || j.open != nil {
+		if j.lastGate.After(last.closed) && b.LostGates == 0 || j.open != nil {
 			j.say("%s: a gate was opened before it was durable", where)
 		}
 		if j.moved.After(last.closed) {
@@ -396,15 +396,12 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 	case protocol.Interrupted:
 		j.current, r.owed, j.orphans = ev.Run, false, false
 		j.gates = nil // what was open when the process died is named by this
-	case protocol.Held, protocol.WentOn:
-		r.owed = r.owed && ev.Kind != protocol.WentOn
 	case protocol.SetAside:
 		r.givenUp++
 	case protocol.Doubted:
 		from, _ := ev.Detail["from_sequence"].(float64)
 		to, _ := ev.Detail["to_sequence"].(float64)
 		j.doubted = append(j.doubted, span{ev.Run, int64(from), int64(to)})
-	case protocol.Trouble, protocol.HomedEvent:
 	}
 	if ev.Kind == protocol.Trouble || ev.Kind == protocol.Held || ev.Kind == protocol.HomedEvent || ev.Kind == protocol.Interrupted {
 		for device := range j.zeroLost {
@@ -417,7 +414,7 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 		j.say("%s after the run was %s for ever", where, r.state)
 	}
 	r.state, r.causes = ev.State, ev.Causes
-	excused := strings.Contains(ev.Text, "NOT REACHED") || ev.Kind == protocol.Interrupted && ev.Text == ""
+	excused := strings.Contains(ev.Text, "NOT REACHED")
 	if (r.state == protocol.Holding || r.state.Final()) && r.began && !excused {
 		j.atRest(where)
 	}

@@ -1,0 +1,440 @@
+package nighttest
+
+import (
+	"bytes"
+	"context"
+	"encoding/json"
+	"errors"
+	"io"
+	"regexp"
+	"slices"
+	"strings"
+	"sync"
+	"testing"
+	"time"
+
+	"gemel/daemon/courier"
+	"gemel/drivers"
+	"gemel/drivers/line"
+	"gemel/protocol"
+	"gemel/protocol/unit"
+	"gemel/scan/engine"
+)
+
+// TestTheJudgeFindsEverySabotage is the permanent table of what this program must never do. Each
+// row breaks one promise on purpose, in a night that is flawless without it, and names the words
+// by which the judge must find it. A row whose sabotage goes unseen means that the oracle is blind.
+func TestTheJudgeFindsEverySabotage(t *testing.T) {
+	garbledCounts := ""
+	for answer := 20; answer < 600; answer += 7 {
+		garbledCounts += "; garbled(counter, answer " + itoa(answer) + ", byte 3 as \"7\")"
+	}
+	for _, row := range []struct {
+		name   string
+		script string
+		make   func() Sabotage
+		found  string
+	}{
+		{"skips the second read of the counts", "|" + garbledCounts[1:], skipSecondRead, "counted"},
+		{"publishes before the commit", "|", publishEarly, "published before it was durable"},
+		{"publishes other bytes than the journal's", "|", publishOtherBytes, "other bytes"},
+		{"opens a gate before the commit", "|", gateBeforeCommit, "a gate was opened before it was durable"},
+		{"moves on before the commit", "|", moveBeforeCommit, "something moved before it was durable"},
+		{"forgets the shutter on a panic", "|", forgetShutterOnPanic, "the pump is not blocked"},
+		{"leaves the pump open in a hold", "hold 3m |", pretendToClose, "the pump is not blocked"},
+		{"forgets to protect the detectors in a hold", "hold 3m |", forgetProtectors, "detector is not protected"},
+		{"tries again under a new sequence", "|", newSequence, "in no reading|no such gate|accepted already"},
+		{"loses a reading", "|", loseReading, "are in no reading"},
+		{"invents a count", "|", inventCount, "counted"},
+		{"writes the target for the proved angle", "| slip(signal_arm, at 4m, by 0.5 deg)", believeTarget, "was truly at"},
+		{"goes on with a lost zero", "| restart(rotary, at 4m)", trustAnyZero, "nobody wrote down that its zero is lost|was truly at"},
+		{"ignores too much light", "| lamp(at 4m, for 90s, rate 6000000 Hz)", ignoreLight, "still open"},
+		{"keeps silent about an interruption", "kill gated:30 |", forgetInterruption, "no interruption is written|before the interruption was"},
+		{"counts on after a stop was answered", "stop 3m |", countAfterStop, "is stopped"},
+		{"sums a gate twice", "|", sumTwice, "sums to"},
+	} {
+		t.Run(row.name, func(t *testing.T) {
+			t.Parallel()
+			s, err := ParseScript(row.script)
+			if err != nil {
+				t.Fatal(err)
+			}
+			n := Night{Bench: demoBench(t), Recipe: small, Script: s}
+			control := play(t, n)
+			if wrong := control.Judge(); len(wrong) > 0 {
+				t.Fatalf("the night is not flawless without the sabotage: %q", wrong[0])
+			}
+			n.Wrap = row.make()
+			wrong := play(t, n).Judge()
+			seen := slices.ContainsFunc(wrong, func(w string) bool {
+				return slices.ContainsFunc(strings.Split(row.found, "|"), func(f string) bool { return strings.Contains(w, f) })
+			})
+			if !seen {
+				t.Errorf("the judge says %q; want %q in it", wrong[:min(3, len(wrong))], row.found)
+			}
+		})
+	}
+}
+
+func itoa(n int) string { b, _ := json.Marshal(n); return string(b) }
+
+// echoPort answers a question for counts that is asked twice in a row from memory, under the new
+// question's number.
+type echoPort struct {
+	line.Port
+	mu            sync.Mutex
+	asked, answer []byte
+	replay        []byte
+}
+
+var questionNumber = regexp.MustCompile(`\*ESE ([0-9]+)`)
+
+func (p *echoPort) Write(b []byte) (int, error) {
+	p.mu.Lock()
+	same := bytes.Contains(b, []byte("FETC")) && bytes.Equal(questionNumber.ReplaceAll(b, nil), questionNumber.ReplaceAll(p.asked, nil))
+	if same && bytes.HasSuffix(p.answer, []byte("\n")) {
+		number := questionNumber.FindSubmatch(b)[1]
+		cut := bytes.LastIndexByte(p.answer, ';') + 1
+		p.replay = slices.Concat(p.answer[:cut], number, []byte("\n"))
+		p.asked = nil
+		p.mu.Unlock()
+		return len(b), nil
+	}
+	p.asked, p.answer = slices.Clone(b), nil
+	p.mu.Unlock()
+	return p.Port.Write(b)
+}
+
+func (p *echoPort) Read(b []byte) (int, error) {
+	p.mu.Lock()
+	if len(p.replay) > 0 {
+		n := copy(b, p.replay)
+		p.replay = p.replay[n:]
+		p.mu.Unlock()
+		return n, nil
+	}
+	p.mu.Unlock()
+	n, err := p.Port.Read(b)
+	p.mu.Lock()
+	p.answer = append(p.answer, b[:n]...)
+	p.mu.Unlock()
+	return n, err
+}
+
+func skipSecondRead() Sabotage {
+	return Sabotage{Port: func(name string, p line.Port) line.Port {
+		if name != "counter" {
+			return p
+		}
+		return &echoPort{Port: p}
+	}}
+}
+
+// book passes everything on, and lets a row change what is appended.
+type book struct {
+	Book
+	append func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error
+}
+
+func (b *book) Append(ctx context.Context, e protocol.Entry) error {
+	return b.append(ctx, e, b.Book.Append)
+}
+
+func onAppend(f func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error) func(Book) Book {
+	return func(inner Book) Book { return &book{inner, f} }
+}
+
+func publishEarly() Sabotage {
+	var sink courier.Sink
+	return Sabotage{
+		Sink: func(s courier.Sink) courier.Sink { sink = s; return s },
+		Book: onAppend(func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
+			if e.Kind == protocol.ReadingEntry {
+				after, err := sink.Last(ctx)
+				if err == nil {
+					_, _ = sink.Publish(ctx, courier.Message{Subject: protocol.Subject("skerry", e.Kind, e.Run), ID: e.ID(), Body: e.Body}, after)
+				}
+			}
+			return on(ctx, e)
+		}),
+	}
+}
+
+type otherBytes struct{ courier.Sink }
+
+func (s otherBytes) Publish(ctx context.Context, m courier.Message, after courier.Last) (courier.Last, error) {
+	m.Body = append(slices.Clone(m.Body), ' ')
+	return s.Sink.Publish(ctx, m, after)
+}
+
+func publishOtherBytes() Sabotage {
+	return Sabotage{Sink: func(s courier.Sink) courier.Sink { return otherBytes{s} }}
+}
+
+func gateBeforeCommit() Sabotage {
+	var counter drivers.Counter
+	n := 0
+	return Sabotage{
+		Bench: func(b *engine.Bench) { counter = b.Counter },
+		Book: onAppend(func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
+			if n++; n == 20 {
+				_, _ = counter.Count(ctx, time.Second)
+			}
+			return on(ctx, e)
+		}),
+	}
+}
+
+func moveBeforeCommit() Sabotage {
+	var stage drivers.Stage
+	n := 0
+	return Sabotage{
+		Bench: func(b *engine.Bench) { stage = b.Stages[0] },
+		Book: onAppend(func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
+			if n++; n == 20 {
+				_ = stage.Move(ctx, map[drivers.AxisName]unit.Angle{"signal_arm": 2 * unit.Degree})
+			}
+			return on(ctx, e)
+		}),
+	}
+}
+
+// liar says that it closed, and did not, once lying is set.
+type liar struct {
+	drivers.Shutter
+	lies func() bool
+}
+
+func (l *liar) Close(ctx context.Context) error {
+	if l.lies() {
+		return nil
+	}
+	return l.Shutter.Close(ctx)
+}
+
+func (l *liar) State(ctx context.Context) (drivers.Blade, error) {
+	if l.lies() {
+		return drivers.Blade{Open: false}, nil
+	}
+	return l.Shutter.State(ctx)
+}
+
+func forgetShutterOnPanic() Sabotage {
+	lying, lit := false, 0
+	return Sabotage{
+		Panics: engine.StepLit, AtPart: 12,
+		Bench: func(b *engine.Bench) {
+			b.Counter = &countingCounter{Counter: b.Counter, before: func() {}}
+			b.Pump = &liar{b.Pump, func() bool { return lying }}
+			// After the twelfth light the engine panics; what closes the shutter then is a lie.
+			for i := range b.Detectors {
+				if b.Detectors[i].Protect != nil && i == 0 {
+					b.Detectors[i].Protect = &onOpen{b.Detectors[i].Protect, func() {
+						if lit++; lit >= 11 {
+							lying = true
+						}
+					}}
+				}
+			}
+		},
+	}
+}
+
+type onOpen struct {
+	drivers.Shutter
+	opened func()
+}
+
+func (o *onOpen) Open(ctx context.Context) error {
+	err := o.Shutter.Open(ctx)
+	o.opened()
+	return err
+}
+
+type countingCounter struct {
+	drivers.Counter
+	before func()
+}
+
+func (c *countingCounter) Count(ctx context.Context, gate time.Duration) (drivers.Gate, error) {
+	c.before()
+	return c.Counter.Count(ctx, gate)
+}
+
+func pretendToClose() Sabotage {
+	return Sabotage{Bench: func(b *engine.Bench) {
+		began := time.Now()
+		b.Pump = &liar{b.Pump, func() bool { return time.Since(began) > 2*time.Minute && time.Since(began) < 4*time.Minute }}
+	}}
+}
+
+func forgetProtectors() Sabotage {
+	return Sabotage{Bench: func(b *engine.Bench) {
+		began := time.Now()
+		for i := range b.Detectors {
+			b.Detectors[i].Protect = &liar{b.Detectors[i].Protect, func() bool { return time.Since(began) > 175*time.Second && time.Since(began) < 4*time.Minute }}
+		}
+	}}
+}
+
+// renumber gives an entry another sequence, in its body too.
+func renumber(e protocol.Entry, by int64) protocol.Entry {
+	var body map[string]json.RawMessage
+	if err := json.Unmarshal(e.Body, &body); err != nil {
+		panic(err)
+	}
+	e.Sequence += by
+	body["sequence"] = json.RawMessage(itoa(int(e.Sequence)))
+	e.Body, _ = json.Marshal(body)
+	return e
+}
+
+func newSequence() Sabotage {
+	var by int64
+	n := 0
+	return Sabotage{Book: onAppend(func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
+		err := on(ctx, renumber(e, by))
+		if n++; n == 20 && err == nil {
+			by++
+			err = on(ctx, renumber(e, by))
+		}
+		return err
+	})}
+}
+
+func loseReading() Sabotage {
+	var by int64
+	return Sabotage{Book: onAppend(func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
+		if by == 0 && e.Sequence > 20 && e.Kind == protocol.ReadingEntry {
+			by--
+			return nil
+		}
+		return on(ctx, renumber(e, by))
+	})}
+}
+
+func inventCount() Sabotage {
+	return Sabotage{Book: onAppend(func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
+		if e.Sequence == 20 && e.Kind == protocol.ReadingEntry {
+			var r protocol.Reading
+			if err := json.Unmarshal(e.Body, &r); err != nil {
+				return err
+			}
+			r.Slices[0].Counts[0].Counts++
+			r.Counts[0].Counts++
+			e.Body, _ = json.Marshal(r)
+		}
+		return on(ctx, e)
+	})}
+}
+
+func sumTwice() Sabotage {
+	return Sabotage{Book: onAppend(func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
+		if e.Sequence == 20 && e.Kind == protocol.ReadingEntry {
+			var r protocol.Reading
+			if err := json.Unmarshal(e.Body, &r); err != nil {
+				return err
+			}
+			r.Counts[1].Counts += r.Slices[0].Counts[1].Counts
+			e.Body, _ = json.Marshal(r)
+		}
+		return on(ctx, e)
+	})}
+}
+
+// believer takes for true what it was told.
+type believer struct {
+	drivers.Stage
+	told map[drivers.AxisName]unit.Angle
+}
+
+func (b *believer) Move(ctx context.Context, targets map[drivers.AxisName]unit.Angle) error {
+	for axis, angle := range targets {
+		b.told[axis] = angle
+	}
+	return b.Stage.Move(ctx, targets)
+}
+
+func (b *believer) Where(ctx context.Context) (map[drivers.AxisName]unit.Angle, error) {
+	at, err := b.Stage.Where(ctx)
+	for axis := range at {
+		if angle, known := b.told[axis]; known {
+			at[axis] = angle
+		}
+	}
+	return at, err
+}
+
+func believeTarget() Sabotage {
+	return Sabotage{Bench: func(b *engine.Bench) {
+		b.Stages[0] = &believer{b.Stages[0], map[drivers.AxisName]unit.Angle{}}
+	}}
+}
+
+type trusting struct{ drivers.Stage }
+
+func (s trusting) Where(ctx context.Context) (map[drivers.AxisName]unit.Angle, error) {
+	at, err := s.Stage.Where(ctx)
+	for range 3 {
+		if drivers.RemedyOf(err) < drivers.Reconnect {
+			break
+		}
+		_ = s.Connect(ctx)
+		s.TrustZero()
+		at, err = s.Stage.Where(ctx)
+	}
+	return at, err
+}
+
+func (s trusting) Homed(ctx context.Context) (map[drivers.AxisName]bool, error) {
+	homed, err := s.Stage.Homed(ctx)
+	for a := range homed {
+		homed[a] = true
+	}
+	return homed, err
+}
+
+func (s trusting) Move(ctx context.Context, targets map[drivers.AxisName]unit.Angle) error {
+	err := s.Stage.Move(ctx, targets)
+	if drivers.RemedyOf(err) >= drivers.Reconnect && !errors.Is(err, io.EOF) {
+		return nil
+	}
+	return err
+}
+
+func trustAnyZero() Sabotage {
+	return Sabotage{Bench: func(b *engine.Bench) { b.Stages[0] = trusting{b.Stages[0]} }}
+}
+
+func ignoreLight() Sabotage {
+	return Sabotage{Bench: func(b *engine.Bench) {
+		for i := range b.Detectors {
+			b.Detectors[i].TripHz, b.Detectors[i].FloorHz = 0, 0
+		}
+	}}
+}
+
+func forgetInterruption() Sabotage {
+	var by int64
+	return Sabotage{Book: onAppend(func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
+		if e.Kind == protocol.EventEntry && bytes.Contains(e.Body, []byte(`"kind":"interrupted"`)) {
+			by--
+			return nil
+		}
+		return on(ctx, renumber(e, by))
+	})}
+}
+
+func countAfterStop() Sabotage {
+	var counter drivers.Counter
+	return Sabotage{
+		Bench: func(b *engine.Bench) { counter = b.Counter },
+		Book: onAppend(func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
+			err := on(ctx, e)
+			if bytes.Contains(e.Body, []byte(`"state":"stopped"`)) {
+				_, _ = counter.Count(context.Background(), 10*time.Millisecond)
+			}
+			return err
+		}),
+	}
+}
