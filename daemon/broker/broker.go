@@ -235,23 +235,29 @@ func (b *Broker) Run(ctx context.Context) error {
 }
 
 func (b *Broker) watchHealth(ctx context.Context) {
-	wait := b.every
+	tick := time.NewTicker(b.every)
+	defer tick.Stop()
 	unwell := 0
+	wait := b.every // from one restart to the next
+	var restarted time.Time
 	for {
 		select {
 		case <-ctx.Done():
 			return
-		case <-time.After(wait):
+		case <-tick.C:
 		}
 		err := b.check()
 		b.mu.Lock()
 		b.trouble = err
 		b.mu.Unlock()
 		if err == nil {
-			wait, unwell = b.every, 0
+			unwell = 0
+			if time.Since(restarted) > restartMost {
+				wait = b.every
+			}
 			continue
 		}
-		if unwell++; unwell < unwellMost {
+		if unwell++; unwell < unwellMost || time.Since(restarted) < wait {
 			continue
 		}
 		b.log.pass("broker: %v: starting it again", err)
@@ -259,6 +265,7 @@ func (b *Broker) watchHealth(ctx context.Context) {
 		if err := b.start(); err != nil {
 			b.log.pass("broker: %v", err)
 		}
+		unwell, restarted = 0, time.Now()
 		wait = min(2*wait, restartMost)
 	}
 }

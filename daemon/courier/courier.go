@@ -236,11 +236,10 @@ func (c *Courier) message(e protocol.Entry) Message {
 
 // stand moves the cursor. What is behind is counted anew only if it was not where it is now.
 func (c *Courier) stand(ctx context.Context, cursor int64) error {
-	if cursor == c.cursor {
-		return nil
+	if cursor != c.cursor {
+		c.cursor, c.counted = cursor, cursor
+		c.behind.Store(0)
 	}
-	c.cursor, c.counted = cursor, cursor
-	c.behind.Store(0)
 	return c.count(ctx)
 }
 

@@ -313,6 +313,33 @@ func TestAnAwayBrokerIsNotHammered(t *testing.T) {
 	})
 }
 
+// eye looks at the courier whenever something is published.
+type eye struct {
+	courier.Sink
+	look func()
+}
+
+func (e eye) Publish(ctx context.Context, m courier.Message, after courier.Last) (courier.Last, error) {
+	e.look()
+	return e.Sink.Publish(ctx, m, after)
+}
+
+func TestBehindCountsTheWholeBacklogWhileItIsCarried(t *testing.T) {
+	j, s := &journal{}, newStream()
+	j.add(entries("r1", 1, 500)...)
+	var c *courier.Courier
+	left := int64(500)
+	c = courier.New(bench, j, eye{s, func() {
+		if n := c.Behind(); n != left {
+			t.Errorf("%d behind; want %d", n, left)
+		}
+		left--
+	}}, nil)
+	if err := c.Finish(t.Context()); err != nil || c.Behind() != 0 {
+		t.Errorf("Finish: %v, %d behind; want none", err, c.Behind())
+	}
+}
+
 func TestALogbookThatCannotBeReadCostsPatienceOnly(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
 		j, s := &journal{fail: errors.New("disk I/O error")}, newStream()
