@@ -106,27 +106,50 @@ type deadPair struct {
 	tauT, tauD     float64
 }
 
-// live returns the chance that D is live when T is. Exact for two detectors of one model:
-//
-//   - paralysable: neither saw a photon during its dead time, so with a = min(tauT, tauD) the
-//     joint chance is exp(-nT tauT - nD tauD + nPair a);
-//   - non-paralysable: the stationary state of the pair (residual dead time of T, of D) under
-//     Poisson arrivals, solved numerically. Derived here; Cox and Isham (1977) and Smith (1978)
-//     are said to give the exact theory, recalled from memory. Held by
-//     TestCoupledDeadTimesAgreeWithEvents.
-//
-// For mixed models it is the first order, 1 - mD tauD + RC min(tauT, tauD), and exact is false.
-func (p deadPair) live() (l float64, exact bool) {
-	shared := math.Min(p.tauT, p.tauD)
-	switch {
-	case p.modelT == Paralysable && p.modelD == Paralysable:
-		return math.Exp(-p.nD*p.tauD + p.nPair*shared), true
-	case p.modelT == p.modelD:
-		return p.jointNonParalysable() * (1 + p.nT*p.tauT), true
+// live returns the chance that D is live when T is, exactly, under Poisson arrivals. With both
+// paralysable, neither saw a photon during its dead time, so with a = min(tauT, tauD) the joint
+// chance is exp(-nT tauT - nD tauD + nPair a). The other cases are worked out below; all were
+// derived here and are held by TestCoupledDeadTimesAgreeWithEvents. Cox and Isham (1977) and Smith
+// (1978) are said to give the exact theory, recalled from memory. Jitter between partners is
+// taken as short against the dead times, and afterpulses as ordinary counts.
+func (p deadPair) live() float64 {
+	if p.modelT == Paralysable && p.modelD == Paralysable {
+		return math.Exp(-p.nD*p.tauD + p.nPair*math.Min(p.tauT, p.tauD))
 	}
-	mD := p.modelD.Observed(p.nD, p.tauD)
-	l = 1 - mD*p.tauD
-	return l + p.nPair*l*shared, false
+	aliveT := p.modelT.Observed(p.nT, p.tauT) / p.nT
+	switch {
+	case p.modelT == Paralysable:
+		return quietAndLive(p.nT, p.tauT, p.nD, p.tauD, p.nPair) / aliveT
+	case p.modelD == Paralysable:
+		return quietAndLive(p.nD, p.tauD, p.nT, p.tauT, p.nPair) / aliveT
+	}
+	return p.jointNonParalysable() / aliveT
+}
+
+// quietAndLive is the chance that a paralysable detector saw nothing for its dead time and a
+// non-paralysable one is live. While the first sees nothing the second sees no pairs, so its
+// chance p of being live goes by p'(s) = -n' p(s) + what it recorded a dead time ago, n' = n - nPair.
+func quietAndLive(quietHz, quietS, n, tau, nPair float64) float64 {
+	alive := 1 / (1 + n*tau)
+	slow := n - nPair
+	const steps, most = 64, 40 // to a dead time; dead times until nothing is remembered
+	h := tau / steps
+	span := math.Min(quietS, most*tau)
+	p := []float64{alive}
+	for s := 0.; s < span && h > 0; {
+		d := math.Min(h, span-s)
+		fed := n * alive // in the middle of the step
+		if k := len(p) - 1; k >= steps {
+			fed = slow * (p[k-steps] + (p[k-steps+1]-p[k-steps])*d/h/2)
+		}
+		now := p[len(p)-1]
+		p = append(p, (now*(1-d*slow/2)+d*fed)/(1+d*slow/2))
+		s += d
+		if d < h*(1-1e-9) {
+			break
+		}
+	}
+	return math.Exp(-quietHz*quietS) * p[len(p)-1]
 }
 
 // jointNonParalysable returns the chance that both are live. Let D have the longer dead time, q(x)
@@ -215,28 +238,25 @@ func (p deadPair) jointNonParalysable() float64 {
 }
 
 // DeadTimeLoss returns the share of heralded photons that found the tested detector D live, from
-// what was recorded: rates of T, D and of true coincidences (1/s), and dead times (s). Exact says
-// whether it is more than the first order 1 - mD tauD + RC min(tauT, tauD), which was derived and
-// checked by event simulation for this design; see deadPair.live for the exact forms.
-func DeadTimeLoss(modelT, modelD DeadTimeModel, mT, mD, pairHz, tauT, tauD float64) (loss float64, exact bool, err error) {
+// what was recorded: rates of T, D and of true coincidences (1/s), and dead times (s). To first
+// order it is 1 - mD tauD + RC min(tauT, tauD), which is where the exact forms behind it
+// (deadPair.live) start.
+func DeadTimeLoss(modelT, modelD DeadTimeModel, mT, mD, pairHz, tauT, tauD float64) (float64, error) {
 	nT, err := modelT.True(mT, tauT, false)
 	if err != nil {
-		return 0, false, fmt.Errorf("trigger: %w", err)
+		return 0, fmt.Errorf("trigger: %w", err)
 	}
 	nD, err := modelD.True(mD, tauD, false)
 	if err != nil {
-		return 0, false, fmt.Errorf("detector under test: %w", err)
+		return 0, fmt.Errorf("detector under test: %w", err)
 	}
 	if mT <= 0 || mD <= 0 {
-		return 1, true, nil
+		return 1, nil
 	}
-	if modelT != modelD {
-		return 1 - mD*tauD + pairHz*math.Min(tauT, tauD), false, nil
-	}
-	p := deadPair{modelT: modelT, modelD: modelD, nT: nT, nD: nD, tauT: tauT, tauD: tauD}
-	p.nPair = pairHz
+	p := deadPair{modelT: modelT, modelD: modelD, nT: nT, nD: nD, tauT: tauT, tauD: tauD, nPair: pairHz}
+	loss := 1.0
 	for range 30 {
-		loss, exact = p.live()
+		loss = p.live()
 		// pairHz = nPair × chance that both are live = nPair × (mT/nT) × loss
 		pair := math.Min(pairHz*nT/(mT*loss), math.Min(nT, nD))
 		if math.Abs(pair-p.nPair) <= 1e-13*pair {
@@ -244,5 +264,5 @@ func DeadTimeLoss(modelT, modelD DeadTimeModel, mT, mD, pairHz, tauT, tauD float
 		}
 		p.nPair = pair
 	}
-	return loss, exact, nil
+	return loss, nil
 }

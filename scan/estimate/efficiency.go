@@ -25,8 +25,7 @@ const (
 	CollectionStep  Step = "collection"
 	fewCoincidences      = 100   // net; below, the interval is exact instead of symmetric
 	warnLoad             = 0.1   // m tau of the tested detector
-	refuseLoad           = 0.3   // in first order
-	refuseExact          = 0.5   // where the coupled form is exact
+	refuseLoad           = 0.5   // as far as the coupled form is held by events
 	loadModelShare       = 0.1   // half-width of the model row in units of (m tau)^2
 	refuseWindow         = 0.1   // rate times window, beyond which the first order in it is not used
 	leastCollection      = 0.995 // below, a flat top proves nothing
@@ -64,7 +63,6 @@ type calculation struct {
 	background  float64 // background counts within the light readings, own dead time removed, theirs put in
 	backgroundU float64
 
-	exact     bool
 	beyond    float64 // exact loss less first-order loss, at the estimates
 	loadD     float64 // m_D tau_D at the estimates
 	inputs    []Input
@@ -372,20 +370,15 @@ func (c *calculation) load(no *Refusal, r *Result) {
 	if c.on(CaptureStep) {
 		pairHz /= c.bench.Counter.Capture.Value
 	}
-	loss, exact, err := DeadTimeLoss(c.trigger.Model, c.test.Model, mT, mD, pairHz, tauT, tauD)
+	loss, err := DeadTimeLoss(c.trigger.Model, c.test.Model, mT, mD, pairHz, tauT, tauD)
 	if err != nil {
 		no.addf("%v", err)
 		return
 	}
-	c.exact = exact
 	c.beyond = loss - (1 - c.loadD + pairHz*math.Min(tauT, tauD))
-	bound := refuseLoad
-	if exact {
-		bound = refuseExact
-	}
-	if load := math.Max(c.loadD, mT*tauT); c.loadD > bound || exact && load > bound {
-		no.addf("count rate times dead time is %.3f (%s) and %.3f (%s); want at most %.1f, beyond which the dead-time model is not held by any check: lower the pump power",
-			c.loadD, c.test.Name, mT*tauT, c.trigger.Name, bound)
+	if loadT := mT * tauT; max(c.loadD, loadT) > refuseLoad {
+		no.addf("count rate times dead time is %.3f (%s) and %.3f (%s); want at most %.1f, beyond which the dead-time correction is not held by any check: lower the pump power",
+			c.loadD, c.test.Name, loadT, c.trigger.Name, refuseLoad)
 	} else if c.loadD > warnLoad {
 		r.Warnings = append(r.Warnings, fmt.Sprintf("count rate times dead time of %s is %.3f, above %.1f: the dead-time correction and its model row matter; a lower pump power would settle it", c.test.Name, c.loadD, warnLoad))
 	}
@@ -746,11 +739,7 @@ func (c *calculation) waterfall(r *Result, x []float64) {
 			if k.After > 0 {
 				k.Amount = before / k.After
 			}
-			k.Note = "exact coupled form"
-			if !c.exact {
-				k.Note = "first order"
-			}
-			k.Note += fmt.Sprintf(", %s; count rate times dead time %.4f", c.test.Model, c.loadD)
+			k.Note = fmt.Sprintf("coupled with the trigger's (%s, %s); count rate times dead time %.4f", c.trigger.Model, c.test.Model, c.loadD)
 			if math.Abs(c.beyond) > 0 {
 				k.Note += fmt.Sprintf(" (beyond the first order: %+.2e)", c.beyond)
 			}

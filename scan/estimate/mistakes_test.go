@@ -335,11 +335,7 @@ func TestEfficiencyRefusesWithEveryReason(t *testing.T) {
 				n.rows.Readings[i].Accepted = false
 			}
 		}, "no light reading counts"},
-		{"dead time beyond the exact form", func(n *exactNight, q *Question, m *Model) { n.bench.Arms[1].DeadTime = Constant{5e-6, 1e-8, "own"} }, "want at most 0.5"},
-		{"dead time beyond the first order of mixed models", func(n *exactNight, q *Question, m *Model) {
-			n.bench.Arms[1].DeadTime = Constant{2.8e-6, 1e-8, "own"}
-			n.bench.Arms[0].Model = Paralysable
-		}, "want at most 0.3"},
+		{"dead time beyond the checks", func(n *exactNight, q *Question, m *Model) { n.bench.Arms[1].DeadTime = Constant{5e-6, 1e-8, "own"} }, "want at most 0.5"},
 		{"a paralysed detector", func(n *exactNight, q *Question, m *Model) {
 			n.bench.Arms[1].DeadTime = Constant{3.4e-6, 1e-8, "own"}
 			n.bench.Arms[1].Model = Paralysable
