@@ -139,7 +139,26 @@ func differs(want, found string) string {
 
 // query sends parts as one message and returns the answer of each part that asks.
 func (d *device) query(ctx context.Context, q line.Question, parts ...string) ([]string, error) {
-	asks := 0
+	units, asks, err := d.exchange(ctx, q, parts...)
+	if err != nil {
+		return nil, err
+	}
+	if len(units) != asks {
+		// The number is right, so this is our answer: the instrument refused a part of it.
+		if err := d.queued(ctx, q.Op); err != nil {
+			return nil, err
+		}
+		return nil, d.miscounted(q.Op, units, asks)
+	}
+	return units, nil
+}
+
+func (d *device) miscounted(op string, units []string, asks int) error {
+	return d.errorf(op, drivers.Retry, "%.80q has %d parts; want %d", strings.Join(units, ";"), len(units), asks)
+}
+
+// exchange is query without a look at how many parts were answered; asks says how many should be.
+func (d *device) exchange(ctx context.Context, q line.Question, parts ...string) (units []string, asks int, err error) {
 	events := -1 // which answer is the event register
 	for _, p := range parts {
 		if p == d.common.AskEvents {
@@ -158,7 +177,6 @@ func (d *device) query(ctx context.Context, q line.Question, parts ...string) ([
 	}
 	q.Send = []byte(message)
 	q.Cut = d.seat.Blocks()
-	var units []string
 	q.Judge = func(frame []byte) line.Verdict {
 		units = split(frame, ';')
 		if tag != "" {
@@ -181,17 +199,8 @@ func (d *device) query(ctx context.Context, q line.Question, parts ...string) ([
 		}
 		return line.Verdict{Kind: line.Answer}
 	}
-	if _, err := d.seat.Ask(ctx, q); err != nil {
-		return nil, err
-	}
-	if len(units) != asks {
-		// The number is right, so this is our answer: the instrument refused a part of it.
-		if err := d.queued(ctx, q.Op); err != nil {
-			return nil, err
-		}
-		return nil, d.errorf(q.Op, drivers.Retry, "%d answers to %d questions in %q", len(units), asks, message)
-	}
-	return units, nil
+	_, err = d.seat.Ask(ctx, q)
+	return units, asks, err
 }
 
 func isQuery(part string) bool {
@@ -228,9 +237,12 @@ func (d *device) events(ctx context.Context, op, text string) error {
 func (d *device) queued(ctx context.Context, op string) error {
 	var first error
 	for range 32 {
-		units, err := d.query(ctx, line.Question{Op: op, Repeat: d.repeat}, d.common.AskError)
+		units, asks, err := d.exchange(ctx, line.Question{Op: op, Repeat: d.repeat}, d.common.AskError)
 		if err != nil {
 			return err
+		}
+		if len(units) != asks {
+			return d.miscounted(op, units, asks) // an instrument without an error queue
 		}
 		entry, err := d.entry(op, units[0])
 		if err != nil {

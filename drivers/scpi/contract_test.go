@@ -1,0 +1,142 @@
+package scpi
+
+import (
+	"context"
+	"fmt"
+	"strconv"
+	"strings"
+	"sync"
+	"testing"
+	"testing/synctest"
+	"time"
+
+	"gemel/drivers"
+	"gemel/drivers/drivertest"
+	"gemel/drivers/line"
+)
+
+// simple is an instrument of a few headers, written for these tests: a shutter, a meter and a
+// setting in one. It answers one message with one line.
+type simple struct {
+	mu      sync.Mutex
+	out     bool
+	delay   float64
+	power   float64
+	mask    string
+	powerOn bool
+}
+
+func (s *simple) answer(message string) string {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	var answers []string
+	say := func(format string, args ...any) { answers = append(answers, fmt.Sprintf(format, args...)) }
+	for _, unit := range strings.Split(message, ";") {
+		header, value, _ := strings.Cut(unit, " ")
+		switch header {
+		case "*IDN?":
+			say("SKERRY,BOX,1,0")
+		case "*CLS":
+			s.powerOn = false
+		case "*ESE":
+			s.mask = value
+		case "*ESE?":
+			say("%s", s.mask)
+		case "*ESR?":
+			say("%d", map[bool]int{true: 128}[s.powerOn])
+			s.powerOn = false
+		case ":OUTP":
+			s.out = value == "ON"
+		case ":OUTP?":
+			say("%d", map[bool]int{true: 1}[s.out])
+		case ":MEAS:POW?":
+			s.power += 1e-4
+			fallthrough
+		case ":FETC?":
+			say("%+.5E", s.power)
+		case ":DEL":
+			s.delay, _ = strconv.ParseFloat(value, 64)
+		case ":DEL?":
+			say("%+.6E", s.delay)
+		case ":STAT:OPER:COND?":
+			say("0")
+		case ":SYST:ERR?":
+			say(`0,"No error"`)
+		}
+	}
+	return strings.Join(answers, ";")
+}
+
+func plugged(t *testing.T, answer func(string) string, restarted func()) (*line.Line, *drivertest.Far) {
+	far := &drivertest.Far{Answer: answer, Restarted: restarted}
+	l := line.New(line.Settings{Name: "east", BackoffMax: 200 * time.Millisecond, Open: func(ctx context.Context) (line.Port, error) { return far.Open(ctx) }})
+	ctx, cancel := context.WithCancel(context.Background())
+	done := make(chan bool)
+	go func() { _ = l.Run(ctx); close(done) }()
+	t.Cleanup(func() { cancel(); <-done; far.HangUp() })
+	return l, far
+}
+
+func TestCounterContract(t *testing.T) {
+	for _, untagged := range []bool{false, true} {
+		t.Run(fmt.Sprintf("untagged %v", untagged), func(t *testing.T) {
+			drivertest.Counter(t, synctest.Test, func(t *testing.T) drivertest.CounterSetup {
+				in := &counting{}
+				l, far := plugged(t, func(m string) string { a, _ := in.message(m); return a },
+					func() { in.set(func() { in.restart, in.until, in.mask = true, time.Time{}, "0" }) })
+				cfg := counterConfig()
+				cfg.Untagged = untagged
+				c, err := NewCounter(l, cfg)
+				must(t, c, err)
+				return drivertest.CounterSetup{
+					Counter: c, Wire: far.Wire(), Gate: time.Second,
+					Opened: func() int { in.mu.Lock(); defer in.mu.Unlock(); return in.inits },
+					Last: func() map[drivers.Channel]uint64 {
+						in.mu.Lock()
+						defer in.mu.Unlock()
+						n := uint64(in.gates)
+						return map[drivers.Channel]uint64{"signal": 1000 + n, "idler": 900 + n, "pairs": 50, "gates": n}
+					},
+					Counting: func() bool { in.mu.Lock(); defer in.mu.Unlock(); return time.Now().Before(in.until) },
+				}
+			})
+		})
+	}
+}
+
+func TestOtherContracts(t *testing.T) {
+	box := func(t *testing.T) (*simple, *line.Line, *drivertest.Far) {
+		s := &simple{}
+		l, far := plugged(t, s.answer, func() {
+			s.mu.Lock()
+			defer s.mu.Unlock()
+			s.powerOn, s.mask = true, "0"
+		})
+		return s, l, far
+	}
+	common := Common{Name: "box", Identity: "SKERRY,BOX"}
+	t.Run("shutter", func(t *testing.T) {
+		drivertest.Shutter(t, synctest.Test, func(t *testing.T) drivertest.ShutterSetup {
+			s, l, far := box(t)
+			d, err := NewShutter(l, ShutterConfig{Common: common, SettleOpen: 50 * time.Millisecond})
+			must(t, d, err)
+			return drivertest.ShutterSetup{Shutter: d, Wire: far.Wire(), Open: func() bool { s.mu.Lock(); defer s.mu.Unlock(); return s.out }}
+		})
+	})
+	t.Run("sensor", func(t *testing.T) {
+		drivertest.Sensor(t, synctest.Test, func(t *testing.T) drivertest.SensorSetup {
+			s, l, far := box(t)
+			d, err := NewSensor(l, SensorConfig{Common: common, Unit: "mW", AnswerUnit: "W", Measure: ":MEAS:POW?"})
+			must(t, d, err)
+			return drivertest.SensorSetup{Sensor: d, Wire: far.Wire(), Tolerance: 1e-6, True: func() float64 { s.mu.Lock(); defer s.mu.Unlock(); return s.power * 1000 }}
+		})
+	})
+	t.Run("setting", func(t *testing.T) {
+		drivertest.Setting(t, synctest.Test, func(t *testing.T) drivertest.SettingSetup {
+			s, l, far := box(t)
+			d, err := NewSetting(l, SettingConfig{Common: common, Unit: "ns", AnswerUnit: "s", Tolerance: 1e-3, Set: ":DEL {value}", Get: ":DEL?"})
+			must(t, d, err)
+			return drivertest.SettingSetup{Setting: d, Wire: far.Wire(), Values: [2]float64{12.5, -3}, Tolerance: 1e-3, True: func() float64 { s.mu.Lock(); defer s.mu.Unlock(); return s.delay * 1e9 }}
+		})
+	})
+}
