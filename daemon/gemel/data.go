@@ -147,7 +147,7 @@ func (c *noteCommand) Run(ctx context.Context, con *console) error {
 	if _, err := os.Stat(logbookFile(c.Data)); err != nil {
 		return errUse{fmt.Errorf("no logbook in %s; name the data folder with --data", c.Data)}
 	}
-	book, err := logbook.Open(c.Data)
+	book, err := logbook.OpenForNotes(c.Data)
 	if err != nil {
 		return err
 	}

@@ -95,11 +95,9 @@ func Open(dir string) (_ *Book, err error) {
 	if err != nil {
 		return nil, err
 	}
-	if b.writer, err = open(b.file, "_txlock=immediate", "_pragma=journal_mode(WAL)", "_pragma=synchronous(FULL)",
-		"_pragma=journal_size_limit(67108864)"); err != nil {
+	if b.writer, err = openWriter(b.file); err != nil {
 		return nil, err
 	}
-	b.writer.SetMaxOpenConns(1)
 	if empty {
 		if err := create(b.writer); err != nil {
 			return nil, wrap(b.file, err)
@@ -112,6 +110,31 @@ func Open(dir string) (_ *Book, err error) {
 		return nil, err
 	}
 	return b, nil
+}
+
+// OpenForNotes opens the logbook of a data folder for AddNote alone, beside a daemon that may write
+// it: a note has to be possible at any hour. It takes no lock, makes nothing, and everything else
+// that writes answers ErrReadOnly.
+func OpenForNotes(dir string) (*Book, error) {
+	b, err := OpenReadOnly(filepath.Join(dir, fileName))
+	if err != nil {
+		return nil, err
+	}
+	if b.writer, err = openWriter(b.file); err != nil {
+		b.Close()
+		return nil, err
+	}
+	return b, nil
+}
+
+func openWriter(file string) (*sql.DB, error) {
+	db, err := open(file, "_txlock=immediate", "_pragma=journal_mode(WAL)", "_pragma=synchronous(FULL)",
+		"_pragma=journal_size_limit(67108864)")
+	if err != nil {
+		return nil, err
+	}
+	db.SetMaxOpenConns(1)
+	return db, nil
 }
 
 // OpenReadOnly opens a logbook file for reading, beside a daemon that writes it or long after. It

@@ -41,7 +41,7 @@ type RunRow struct {
 // Errors: ErrDifferent when the run's name is taken, ErrBody, ErrFull.
 func (b *Book) NewRun(ctx context.Context, h Header, first protocol.Entry) (existing protocol.RunID, err error) {
 	where := "run " + string(h.Run)
-	if b.writer == nil {
+	if b.insert == nil {
 		return "", wrap(where, ErrReadOnly)
 	}
 	if !protocol.IsToken(string(h.Run)) || h.Run == protocol.BenchRun {

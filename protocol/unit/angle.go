@@ -50,13 +50,16 @@ func (a Angle) Abs() Angle {
 	return a
 }
 
-// String prints the angle in degrees, as short as it can be said to 9 decimals: "2.85 deg".
+// String prints the angle in degrees, as short as can be read back exactly: "2.85 deg".
 func (a Angle) String() string { return a.decimal() + " deg" }
 
-// Fixed prints degrees with n decimals (0 to 9) and no unit, never as "-0.000".
+// exactDecimals of a degree tell any two angles apart: a micro-arcsecond is 2.8e-10 deg.
+const exactDecimals = 10
+
+// Fixed prints degrees with n decimals (0 to 10) and no unit, never as "-0.000".
 func (a Angle) Fixed(n int) string {
-	if n < 0 || n > 9 {
-		panic(fmt.Sprintf("unit: %d decimals of a degree; 0 to 9 are possible", n))
+	if n < 0 || n > exactDecimals {
+		panic(fmt.Sprintf("unit: %d decimals of a degree; 0 to %d are possible", n, exactDecimals))
 	}
 	s := big.NewRat(int64(a), int64(Degree)).FloatString(n)
 	if strings.Trim(s, "-0.") == "" {
@@ -66,7 +69,7 @@ func (a Angle) Fixed(n int) string {
 }
 
 func (a Angle) decimal() string {
-	s := strings.TrimRight(a.Fixed(9), "0")
+	s := strings.TrimRight(a.Fixed(exactDecimals), "0")
 	return strings.TrimSuffix(s, ".")
 }
 

@@ -145,8 +145,8 @@ func split(text string) (number, name string, err error) {
 	number, name, _ = strings.Cut(text, " ")
 	name = strings.TrimSpace(name)
 	if name == "" {
-		if strings.HasSuffix(number, "%") { // "0.5%" is as clear as "0.5 %"
-			return strings.TrimSuffix(number, "%"), "%", nil
+		if before, ok := strings.CutSuffix(number, "%"); ok { // "0.5%" is as clear as "0.5 %"
+			return before, "%", nil
 		}
 		if checkDecimal(number) == nil {
 			return "", "", fmt.Errorf("%s %w; want a value with its unit, such as \"2 s\" or \"1.5 deg\"", number, ErrNoUnit)
