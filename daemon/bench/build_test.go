@@ -13,6 +13,7 @@ import (
 
 	"gemel/daemon/crew"
 	"gemel/drivers"
+	"gemel/drivers/line"
 	"gemel/protocol/unit"
 	"gemel/sim/trouble"
 )
@@ -30,11 +31,17 @@ func demo(t *testing.T) *File {
 // live builds a bench and runs it until the test ends.
 func live(t *testing.T, f *File, vo VirtualOptions) (*Bench, *Virtual) {
 	t.Helper()
+	return liveWith(t, f, vo, nil)
+}
+
+// liveWith also puts something between the lines and their ports.
+func liveWith(t *testing.T, f *File, vo VirtualOptions, wrap func(string, line.Port) line.Port) (*Bench, *Virtual) {
+	t.Helper()
 	v, err := NewVirtual(f, vo)
 	if err != nil {
 		t.Fatal(err)
 	}
-	b, err := Build(f, Options{Virtual: v})
+	b, err := Build(f, Options{Virtual: v, Wrap: wrap})
 	if err != nil {
 		t.Fatal(err)
 	}

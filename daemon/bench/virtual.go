@@ -166,15 +166,25 @@ func (s *set) serve(ctx context.Context) error {
 			if err := conn.Close(); err != nil {
 				return err
 			}
-			if err != nil && ctx.Err() == nil && !errors.Is(err, instruments.ErrUnplugged) {
+			switch {
+			case ctx.Err() != nil:
+				return nil
+			case errors.Is(err, instruments.ErrUnplugged):
+				// A plug that opens and closes again without an end would keep its line busy for ever
+				// in one and the same instant of virtual time.
+				if err := drivers.Pace(1).Wait(ctx, replug); err != nil {
+					return nil
+				}
+			case err != nil:
 				return err
 			}
 		}
 	}
 }
 
-// replug is how long a pulled terminal stays away, at least: long enough for a host to notice.
-const replug = 50 * time.Millisecond
+// replug is how long a pulled plug stays away, at least: long enough for a host to notice. It is a
+// multiple of 997 ns, so that an instrument keeps to the instants that package instruments gives it.
+const replug = 50_000 * 997 * time.Nanosecond
 
 // serveTerminal answers one host after another.
 func (s *set) serveTerminal(ctx context.Context) (err error) {

@@ -1,0 +1,175 @@
+package bench
+
+import (
+	"bytes"
+	"io"
+	"sync"
+	"testing"
+	"testing/synctest"
+	"time"
+
+	"gemel/drivers"
+	"gemel/drivers/drivertest"
+	"gemel/drivers/line"
+	"gemel/protocol/unit"
+	"gemel/sim/instruments"
+	"gemel/sim/trouble"
+)
+
+// spoiler stands between the line and the virtual instrument of one test, and spoils answers when
+// the contract asks for it.
+type spoiler struct {
+	mu      sync.Mutex
+	planned map[int]func(*instruments.End, []byte) // by the number of the answer
+	said    int
+	host    *instruments.End // the instrument's side of what the line holds
+}
+
+func (s *spoiler) wrap(_ string, p line.Port) line.Port {
+	near, far := instruments.Cable(cableBuffer)
+	s.mu.Lock()
+	s.host = far
+	s.mu.Unlock()
+	go func() { // what the line sends
+		_, _ = io.Copy(p, far)
+		_ = p.Close()
+	}()
+	go func() { // what the instrument says
+		defer far.Close()
+		var text []byte
+		b := make([]byte, 256)
+		for {
+			n, err := p.Read(b)
+			text = append(text, b[:n]...)
+			for {
+				i := bytes.IndexByte(text, '\n')
+				if i < 0 {
+					break
+				}
+				s.pass(far, bytes.Clone(text[:i+1]))
+				text = text[i+1:]
+			}
+			if err != nil {
+				return
+			}
+		}
+	}()
+	return near
+}
+
+func (s *spoiler) pass(far *instruments.End, answer []byte) {
+	s.mu.Lock()
+	s.said++
+	spoil := s.planned[s.said]
+	delete(s.planned, s.said)
+	s.mu.Unlock()
+	if spoil == nil {
+		_, _ = far.Write(answer)
+		return
+	}
+	spoil(far, answer)
+}
+
+func (s *spoiler) plan(after int, spoil func(*instruments.End, []byte)) {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	s.planned[s.said+1+after] = spoil
+}
+
+// wire is the spoiler as the contract's hooks.
+func (s *spoiler) wire(v *Virtual, device string) drivertest.Wire {
+	return drivertest.Wire{
+		Miss: func(after int) { s.plan(after, func(*instruments.End, []byte) {}) },
+		Garble: func(after int) {
+			s.plan(after, func(far *instruments.End, a []byte) {
+				i := bytes.IndexAny(a, "0123456789")
+				i = max(i, 0)
+				if a[i]++; a[i] == '9'+1 {
+					a[i] = '0'
+				}
+				_, _ = far.Write(a)
+			})
+		},
+		Double: func(after int) {
+			s.plan(after, func(far *instruments.End, a []byte) { _, _ = far.Write(append(a, a...)) })
+		},
+		Late: func(after int, by time.Duration) {
+			s.plan(after, func(far *instruments.End, a []byte) {
+				time.AfterFunc(by, func() { _, _ = far.Write(a) })
+			})
+		},
+		Unasked: func() {
+			s.mu.Lock()
+			defer s.mu.Unlock()
+			_, _ = s.host.Write([]byte("T=21.4\n"))
+		},
+		Restart: func() {
+			if err := v.World.Let(trouble.Trouble{Kind: trouble.Restart, Device: device}); err != nil {
+				panic(err)
+			}
+			time.Sleep(3 * time.Second) // virtual: until it is up again
+		},
+		Unplug: func() {
+			if err := v.World.Let(trouble.Trouble{Kind: trouble.Unplug, Device: device, For: 10 * time.Second}); err != nil {
+				panic(err)
+			}
+			time.Sleep(time.Millisecond) // virtual: until the line has noticed
+		},
+		Plug: func() { time.Sleep(11 * time.Second) }, // virtual: until it is in again
+		Pending: func() int {
+			s.mu.Lock()
+			defer s.mu.Unlock()
+			return len(s.planned)
+		},
+	}
+}
+
+// spoiled builds the demo bench at its own pace, with a spoiler on one line.
+func spoiled(t *testing.T, lineName, device string) (*Bench, *Virtual, drivertest.Wire) {
+	t.Helper()
+	f := parse(t, with(t, "  clock: 100 ", "  clock: 1 "))
+	s := &spoiler{planned: map[int]func(*instruments.End, []byte){}}
+	b, v := liveWith(t, f, VirtualOptions{}, func(name string, p line.Port) line.Port {
+		if name != lineName {
+			return p
+		}
+		return s.wrap(name, p)
+	})
+	return b, v, s.wire(v, device)
+}
+
+func stageSetup(index int, lineName string, places [2]map[drivers.AxisName]unit.Angle) func(*testing.T) drivertest.StageSetup {
+	return func(t *testing.T) drivertest.StageSetup {
+		device := map[string]string{"arms": "rotary", "waveplate": "plate"}[lineName]
+		b, v, wire := spoiled(t, lineName, device)
+		stage := b.Stages[index]
+		return drivertest.StageSetup{Stage: stage, Wire: wire, Places: places, Tolerance: unit.Degrees(0.002),
+			True: func() map[drivers.AxisName]unit.Angle {
+				at := map[drivers.AxisName]unit.Angle{}
+				for _, axis := range stage.Axes() {
+					deg, ok := v.World.TrueDeg(string(axis))
+					if !ok {
+						t.Fatalf("no axis %s in the world", axis)
+					}
+					at[axis] = unit.Degrees(deg)
+				}
+				return at
+			}}
+	}
+}
+
+// The contract of package drivers, held by every dialect against the virtual instrument that hears
+// it: each was written from its own standard, and here they meet.
+func TestContractOfStages(t *testing.T) {
+	t.Run("gcode", func(t *testing.T) {
+		drivertest.Stage(t, synctest.Test, stageSetup(0, "arms", [2]map[drivers.AxisName]unit.Angle{
+			{"signal_arm": unit.Degree, "idler_arm": 2 * unit.Degree, "crystal_tilt": 0},
+			{"signal_arm": 9 * unit.Degree, "idler_arm": 8 * unit.Degree, "crystal_tilt": unit.Degree},
+		}))
+	})
+	t.Run("custom", func(t *testing.T) {
+		drivertest.Stage(t, synctest.Test, stageSetup(1, "waveplate", [2]map[drivers.AxisName]unit.Angle{
+			{"pump_waveplate": 0}, {"pump_waveplate": 90 * unit.Degree},
+		}))
+	})
+}
