@@ -24,7 +24,13 @@ type StageSetup struct {
 func Stage(t *testing.T, run Run, setup func(t *testing.T) StageSetup) {
 	device(t, run, func(t *testing.T) (drivers.Device, Wire, func(context.Context) error) {
 		s := setup(t)
-		return s.Stage, s.Wire, func(ctx context.Context) error { _, err := s.Stage.Homed(ctx); return err }
+		return s.Stage, s.Wire, func(ctx context.Context) error {
+			_, err := s.Stage.Where(ctx)
+			if drivers.RemedyOf(err) == drivers.HomeAgain {
+				return nil // it was asked, and answered
+			}
+			return err
+		}
 	})
 
 	ready := func(t *testing.T) StageSetup {
@@ -85,7 +91,7 @@ func Stage(t *testing.T, run Run, setup func(t *testing.T) StageSetup) {
 				}
 				return err
 			})
-			s.move(t, s.Places[1])
+			settled(t, "move", func() error { return s.Stage.Move(t.Context(), s.Places[1]) })
 			s.standsAt(t, s.Places[1])
 		})
 	})
