@@ -462,6 +462,64 @@ func TestAThinCrystalCoversTheAxis(t *testing.T) {
 	}
 }
 
+func TestAPumpSpreadWidensTheRingThroughWalkoff(t *testing.T) {
+	s := slab(t)
+	p := at(t, s, 810)
+	bare, err := p.EmissionMrad(2.864, 0)
+	if err != nil {
+		t.Fatal(err)
+	}
+	// An all but plane wave gives the plane wave's width.
+	plane, err := p.EmissionWithPumpMrad(2.864, 0, 1e5)
+	if err != nil || math.Abs(plane.FWHM/bare.FWHM-1) > 1e-4 {
+		t.Errorf("waist 10 cm: %+v, %v; want %+v", plane, err, bare)
+	}
+	tight, err := p.EmissionWithPumpMrad(2.864, 0, 50)
+	if err != nil {
+		t.Fatal(err)
+	}
+	// By brute force: the same ring averaged over a fine square grid of pump directions.
+	const w = 0.05
+	at := func(t float64) float64 {
+		_, k, _ := p.Wavenumbers()
+		sx := k * math.Sin(t)
+		sum, norm := 0.0, 0.0
+		for i := -60; i <= 60; i++ {
+			for j := -20; j <= 20; j++ {
+				qx, qy := float64(i)*0.08/w, float64(j)*0.25/w
+				g := math.Exp(-(qx*qx + qy*qy) * w * w / 2)
+				dk := p.PumpNormal(qx, qy) - p.SignalNormal(sx, 0) - p.IdlerNormal(qx-sx, qy)
+				sum += g * Sinc2(dk, s.ThicknessMm)
+				norm += g
+			}
+		}
+		return sum / norm
+	}
+	top := maximum(at, 2.5*deg, 3.2*deg, 200)
+	half := at(top) / 2
+	lo, hi := top, top
+	for at(lo) > half {
+		lo -= 1e-5
+	}
+	for at(hi) > half {
+		hi += 1e-5
+	}
+	if want := (hi - lo) * 1000; math.Abs(tight.FWHM-want) > 0.03 || tight.FWHM < 1.05*bare.FWHM {
+		t.Errorf("waist 50 um: %.4f mrad; want %.4f, well above the plane wave's %.4f", tight.FWHM, want, bare.FWHM)
+	}
+	band, err := s.SpectralNm(860, 3.2, 0)
+	if err != nil {
+		t.Fatal(err)
+	}
+	wide, err := s.SpectralWithPumpNm(860, 3.2, 0, 1e5)
+	if err != nil || math.Abs(wide.FWHM/band.FWHM-1) > 0.05 {
+		t.Errorf("band with a plane pump %+v, %v; want about %+v", wide, err, band)
+	}
+	if wider, err := s.SpectralWithPumpNm(860, 3.2, 0, 50); err != nil || !(wider.FWHM > wide.FWHM) {
+		t.Errorf("band with a waist of 50 um %+v, %v; want more than %+v", wider, err, wide)
+	}
+}
+
 func TestNothingIsComputedOutsideTheRangeUnlessAsked(t *testing.T) {
 	s := slab(t)
 	s.Crystal = set(t, "bbo-zhang-2000")
