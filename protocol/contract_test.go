@@ -5,6 +5,7 @@ import (
 	"encoding/json"
 	"fmt"
 	"io/fs"
+	"maps"
 	"path"
 	"reflect"
 	"slices"
@@ -31,13 +32,11 @@ func head(schema string) protocol.Head {
 	return protocol.Head{Schema: schema, Bench: "skerry", Run: "20310203-0405-a", Sequence: 7, At: at("2031-02-03T04:05:06.5Z")}
 }
 
-func pointer[T any](v T) *T { return &v }
-
 func status() protocol.Status {
 	return protocol.Status{
 		Bench: "skerry", Version: "1.0.0", State: protocol.Holding, Causes: []protocol.Cause{protocol.ByGuard, protocol.ByOperator}, Reason: "pump power",
 		Run: "20310203-0405-a", Title: "Ring", ReadingsAccepted: 3, ReadingsPlanned: 60, ReadingsSetAside: 1,
-		TimeLeft: pointer(protocol.Seconds(90 * time.Second)), Queue: []protocol.RunID{"r2"}, Armed: true, Simulated: pointer(20), Behind: 4,
+		TimeLeft: new(protocol.Seconds(90 * time.Second)), Queue: []protocol.RunID{"r2"}, Armed: true, Simulated: new(20), Behind: 4,
 	}
 }
 
@@ -45,7 +44,7 @@ func status() protocol.Status {
 // schema.
 func messages() map[string][]any {
 	reading := protocol.Reading{
-		Head: head(protocol.ReadingSchema), Kind: protocol.Light, Point: pointer(0), Visit: pointer(1), Accepted: true,
+		Head: head(protocol.ReadingSchema), Kind: protocol.Light, Point: new(0), Visit: new(1), Accepted: true,
 		StartedAt: at("2031-02-03T04:05:00Z"), EndedAt: at("2031-02-03T04:05:02Z"),
 		GateSet: protocol.Seconds(2 * time.Second), Gate: protocol.Seconds(1999999990),
 		Angles:   []protocol.Angle{{Axis: "signal_arm", Target: unit.Degrees(2.864), Before: unit.Degrees(2.8641), After: -unit.Degree, Proof: "proved"}},
@@ -55,7 +54,7 @@ func messages() map[string][]any {
 		Slices:   []protocol.Slice{{GateSet: protocol.Seconds(time.Second), Gate: protocol.Seconds(time.Second), Counts: []protocol.Count{{Channel: "signal", Counts: 0}}, Raw: "1,2\r\n"}},
 		Scatter:  &protocol.Scatter{Channel: "signal", ChiSquare: 3.2, Freedom: 4, P: 0.5},
 		Glance:   &protocol.Slice{GateSet: protocol.Seconds(time.Second), Gate: protocol.Seconds(time.Second), Counts: []protocol.Count{}, Raw: "3"},
-		Attempt:  2, LostGates: 1, Simulated: pointer(100),
+		Attempt:  2, LostGates: 1, Simulated: new(100),
 	}
 	bare := protocol.Reading{
 		Head: head(protocol.ReadingSchema), Kind: protocol.Dark, Reason: "overflow", StartedAt: reading.StartedAt, EndedAt: reading.EndedAt,
@@ -85,9 +84,9 @@ func messages() map[string][]any {
 			protocol.Beat{Schema: protocol.BeatSchema, At: at("2031-02-03T04:05:06.5Z"), Status: idle},
 		},
 		"status":        {status(), idle},
-		"start_request": {protocol.StartRequest{Recipe: "title: x", RecipeName: "x", Key: "k", Who: "night", ExpiresAt: pointer(at("2031-02-03T04:05:06.5Z"))}, protocol.StartRequest{Key: "k"}},
+		"start_request": {protocol.StartRequest{Recipe: "title: x", RecipeName: "x", Key: "k", Who: "night", ExpiresAt: new(at("2031-02-03T04:05:06.5Z"))}, protocol.StartRequest{Key: "k"}},
 		"start_reply":   {protocol.StartReply{Run: "r1"}},
-		"run_request":   {protocol.RunRequest{Run: "r1", Who: "night", ExpiresAt: pointer(at("2031-02-03T04:05:06.5Z"))}, protocol.RunRequest{Run: "r1"}},
+		"run_request":   {protocol.RunRequest{Run: "r1", Who: "night", ExpiresAt: new(at("2031-02-03T04:05:06.5Z"))}, protocol.RunRequest{Run: "r1"}},
 		"run_reply":     {protocol.RunReply{Run: "r1", State: protocol.Stopped, Causes: []protocol.Cause{}, Recorded: true}},
 		"problem": {
 			protocol.Problem{Error: "recipe: 1 finding", Findings: []protocol.Finding{{File: "a.yaml", Line: 3, Col: 9, Key: "dwell", Found: "2", Want: "a time"}}},
@@ -196,9 +195,7 @@ func TestTheSchemasNoticeWhatIsMissingOrOfAnotherKind(t *testing.T) {
 		required, _ := document(t, name)["required"].([]any)
 		for key := range whole {
 			part := map[string]any{}
-			for k, v := range whole {
-				part[k] = v
-			}
+			maps.Copy(part, whole)
 			delete(part, key)
 			text, err := json.Marshal(part)
 			if err != nil {
@@ -239,7 +236,7 @@ func TestAResultHasTheKeysOfTheReport(t *testing.T) {
 		t.Error(err)
 	}
 	properties := document(t, "result")["properties"].(map[string]any)
-	for _, key := range strings.Fields(`run kind value standard_uncertainty expanded_uncertainty coverage_factor unit budget corrections conditions
+	for key := range strings.FieldsSeq(`run kind value standard_uncertainty expanded_uncertainty coverage_factor unit budget corrections conditions
 		readings_used readings_set_aside simulated`) {
 		if properties[key] == nil {
 			t.Errorf("key %s is not described", key)

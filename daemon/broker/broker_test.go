@@ -256,7 +256,7 @@ func TestAWatcherReadsTheStreamAndCannotDeleteAnothersConsumer(t *testing.T) {
 	daemon := daemonConn(t, b)
 	stream := makeStream(t, daemon)
 	for i := range 3 {
-		if err := daemon.Publish("gemel.skerry.event.r1", []byte(fmt.Sprint(i))); err != nil {
+		if err := daemon.Publish("gemel.skerry.event.r1", fmt.Append(nil, i)); err != nil {
 			t.Fatal(err)
 		}
 	}
@@ -592,7 +592,7 @@ func TestAServerThatCannotStoreSaysSo(t *testing.T) {
 	}
 }
 
-// The real trigger, a full disk, cannot be had in a test; the reaction to it can.
+// A full disk itself is played in full_linux_test.go; here it is that connections live on.
 func TestAServerThatTakesNoWritesIsReplacedUnderItsConnections(t *testing.T) {
 	dir := t.TempDir()
 	log := &lines{}
