@@ -140,3 +140,86 @@ func TestOtherContracts(t *testing.T) {
 		})
 	})
 }
+
+func TestAShutterThatDoesNotObeyIsAnError(t *testing.T) {
+	for _, tc := range []struct {
+		passes      string
+		answer      string // to every question for the state
+		open, close bool   // which of the two must fail
+	}{
+		{"closed", "0", true, false}, {"closed", "1", false, true},
+		{"open", "1", true, false}, {"open", "0", false, true}, // a relay whose open contact lets light pass
+	} {
+		synctest.Test(t, func(t *testing.T) {
+			box := &simple{}
+			l, far := plugged(t, func(m string) string {
+				a := box.answer(m)
+				if strings.Contains(m, ":OUTP?") {
+					fields := strings.Split(a, ";")
+					fields[0], fields[1] = tc.answer, tc.answer
+					a = strings.Join(fields, ";")
+				}
+				return a
+			}, nil)
+			s, err := NewShutter(l, ShutterConfig{Common: Common{Name: "pump", Identity: "SKERRY"}, PassesWhen: tc.passes})
+			must(t, s, err)
+			if err := s.Connect(t.Context()); err != nil {
+				t.Fatal(err)
+			}
+			openErr, closeErr := s.Open(t.Context()), s.Close(t.Context())
+			if (openErr != nil) != tc.open || (closeErr != nil) != tc.close {
+				t.Errorf("passes when %s, always answers %s: open %v, close %v", tc.passes, tc.answer, openErr, closeErr)
+			}
+			want := map[string]string{"closed": ":OUTP OFF", "open": ":OUTP ON"}[tc.passes]
+			if heard := strings.Join(far.Heard(), "\n"); !strings.Contains(heard, "\n"+want+"\n") {
+				t.Errorf("passes when %s: closing sent\n%s\nwant %s", tc.passes, heard, want)
+			}
+		})
+	}
+}
+
+func TestABladeThatTheSensorDoesNotSeeMovingIsAnError(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		box := &simple{}
+		l, _ := plugged(t, func(m string) string {
+			return box.answer(strings.ReplaceAll(m, ":BLAD?", ":STAT:OPER:COND?")) // which says 0
+		}, nil)
+		s, err := NewShutter(l, ShutterConfig{Common: Common{Name: "pump", Identity: "SKERRY"}, AskBlade: ":BLAD?"})
+		must(t, s, err)
+		if err := s.Connect(t.Context()); err != nil {
+			t.Fatal(err)
+		}
+		if err := s.Open(t.Context()); drivers.RemedyOf(err) != drivers.Retry || !strings.Contains(err.Error(), "sensor") {
+			t.Errorf("open: %v; want the sensor's word", err)
+		}
+		if b, err := s.State(t.Context()); err != nil || b.Open || !b.Sensed {
+			t.Errorf("%+v, %v; want closed, sensed", b, err)
+		}
+	})
+}
+
+// An 8 hour night has about 30 000 gates; all of it, drivers and journal and engine, must run
+// in 5 s. This counts a tenth of them.
+func TestTheGatesOfANightTakeLittleTimeOfTheProcessor(t *testing.T) {
+	if testing.Short() {
+		t.Skip("skipped: takes a second")
+	}
+	const gates = 3000
+	start := time.Now()
+	var exchanges int
+	counted(t, func(t *testing.T, c *Counter, in *counting, l *line.Line) {
+		before := l.Counts().Asked
+		for range gates {
+			in.set(func() { in.heard = in.heard[:0] })
+			if _, err := c.Count(t.Context(), time.Second); err != nil {
+				t.Fatal(err)
+			}
+		}
+		exchanges = l.Counts().Asked - before
+	})
+	each := time.Since(start) / gates
+	t.Logf("%v a gate, both ends, in %.2f exchanges", each, float64(exchanges)/gates)
+	if exchanges > 4*gates+4 || each > 2*time.Millisecond {
+		t.Errorf("%v and %.2f exchanges a gate; want 4 exchanges and far less than 2 ms", each, float64(exchanges)/gates)
+	}
+}

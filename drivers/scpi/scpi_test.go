@@ -511,6 +511,52 @@ func TestDamagedAndDoubledAnswersAreNeverCounts(t *testing.T) {
 	}
 }
 
+func TestCountsOfAGateThatWasReadBeforeAreNotReadAgain(t *testing.T) {
+	counted(t, func(t *testing.T, c *Counter, in *counting, l *line.Line) {
+		if _, err := c.Count(t.Context(), time.Second); err != nil {
+			t.Fatal(err)
+		}
+		in.set(func() { // it acknowledges the next gate, and gives the counts of the last
+			in.meddle = func(m, a string) (string, bool) {
+				return strings.ReplaceAll(a, "1002,902,50,2", "1001,901,50,1"), a != ""
+			}
+		})
+		_, err := c.Count(t.Context(), time.Second)
+		if e := failed(t, err, drivers.Retry, true); !strings.Contains(e.Error(), "read before") {
+			t.Errorf("%v; want it to say that they were read before", err)
+		}
+	})
+}
+
+// Here the line's own rules do not help: the double comes after the next question was sent, and
+// looks like its answer.
+func TestAnAnswerWithTheNumberOfAnEarlierQuestionIsDropped(t *testing.T) {
+	counted(t, func(t *testing.T, c *Counter, in *counting, l *line.Line) {
+		in.set(func() {
+			in.meddle = func(m, a string) (string, bool) {
+				if a != "" {
+					say := func() { _, _ = in.far.Write([]byte(a + "\n")) }
+					time.AfterFunc(5*time.Millisecond, say)
+					time.AfterFunc(5500*time.Microsecond, say)
+				}
+				return "", false
+			}
+		})
+		before := l.Counts()
+		for n := range uint64(3) {
+			g, err := c.Count(t.Context(), time.Second)
+			if err != nil || g.Counts["gates"] != n+1 || g.Counts["signal"] != 1001+n {
+				t.Errorf("gate %d: %+v, %v", n+1, g, err)
+			}
+		}
+		after := l.Counts()
+		if after.Strays-before.Strays < 10 || after.Strangers != before.Strangers || after.Retried != before.Retried {
+			t.Errorf("counts %+v; want the doubles dropped, and nothing asked again", after)
+		}
+		time.Sleep(time.Second)
+	})
+}
+
 func TestAnotherInstrumentIsRefusedAndADamagedIdentityIsNot(t *testing.T) {
 	counted(t, func(t *testing.T, c *Counter, in *counting, l *line.Line) {
 		in.set(func() { in.meddle = once("*IDN?", func(string) (string, bool) { return "SKERRY,QC-4,0O42,1.7", true }) })
