@@ -56,6 +56,9 @@ func Peak(rows Rows, bench Bench, model Model, q PeakQuestion) (Result, error) {
 		return Result{}, err
 	}
 	fit, err := FitPeak(data, q.Shape, model.Profile)
+	if err == nil {
+		err = fit.inSweep()
+	}
 	if err != nil {
 		return Result{}, &Refusal{Reasons: []string{fmt.Sprintf("%s: %v", q.Shape, err)}}
 	}

@@ -133,8 +133,8 @@ func Propagate(f func(x []float64) float64, inputs []Input, crosses []Cross) (Bu
 			}
 		}
 	}
-	if variance < 0 {
-		return Budget{}, fmt.Errorf("variance %g is negative; want covariances that can be", variance)
+	if !(variance >= 0) || math.IsInf(variance, 1) {
+		return Budget{}, fmt.Errorf("variance %g; want uncertainties and covariances that can be", variance)
 	}
 	b.U = math.Sqrt(variance)
 	for i := range b.Rows {

@@ -106,7 +106,7 @@ func benchFor(reg regime, logic Logic) Bench {
 }
 
 func TestCalibrationsCoverTheTruth(t *testing.T) {
-	times := 120
+	times := 40
 	if *long {
 		times = 2000
 	}
@@ -170,7 +170,7 @@ func TestCalibrationsCoverTheTruth(t *testing.T) {
 
 // Bias where the constants are exactly what is declared: what is left is the formulas' own.
 func TestBiasIsATenthOfTheUncertaintyAtTenMillionHeralds(t *testing.T) {
-	runs, heralds := 2, 1e6
+	runs, heralds := 1, 6e5
 	if *long {
 		runs, heralds = 10, 1e7
 	}
@@ -206,7 +206,7 @@ func TestBiasIsATenthOfTheUncertaintyAtTenMillionHeralds(t *testing.T) {
 					t.Logf("%s: bias %+.1e ± %.1e, stated u %.1e: %+.3f u", logic, sum[logic], own, u[logic], sum[logic]/u[logic])
 					bound := 0.1
 					if !*long {
-						bound = 0.5
+						bound = 1.5
 					}
 					if math.Abs(sum[logic]) > bound*u[logic] {
 						t.Errorf("%s: bias %+.3f u; want at most %g", logic, sum[logic]/u[logic], bound)

@@ -294,6 +294,15 @@ func (c *calculation) takeBackground(kinds map[protocol.ReadingKind][]protocol.R
 		}
 		c.backgrounds = append(c.backgrounds, dim{middle(row), gate, n})
 	}
+	var dark, time float64
+	for _, row := range kinds[protocol.Dark] {
+		if n, ok := countOf(row.Counts, ch.s); ok {
+			dark, time = dark+n, time+row.Gate.Duration().Seconds()
+		}
+	}
+	if time > 0 && len(kinds[protocol.Background]) > 0 {
+		r.noteValue("dark count rate of the trigger", dark/time, "/s", "contained in the background, so not subtracted again")
+	}
 	slices.SortStableFunc(c.backgrounds, func(a, b dim) int { return a.mid.Compare(b.mid) })
 	for i := range c.dwells {
 		c.dwells[i].background = bracket(c.dwells[i].mid, c.backgrounds)
@@ -464,6 +473,12 @@ func (c *calculation) silence() {
 	}
 	if !c.on(BackgroundStep) {
 		mute(inB)
+	}
+	if !c.on(AccidentalStep) && !c.on(ShadowStep) {
+		mute(inWindow)
+	}
+	if !c.on(BackgroundStep) && !c.on(ShadowStep) && !c.on(DeadTimeStep) {
+		mute(inTauT, inTauD)
 	}
 	if !c.on(AfterpulseStep) {
 		mute(inAfter)

@@ -273,6 +273,23 @@ func TestTheBestPointIsBiasedAndThePlateauIsNot(t *testing.T) {
 	}
 }
 
+func TestAPlateauWithoutFlanksIsRefused(t *testing.T) {
+	rows := flatNight(rand.New(rand.NewPCG(33, 1)), 2, 0)
+	rows.Readings = slices.DeleteFunc(rows.Readings, func(r protocol.Reading) bool { return *r.Point < 11 || *r.Point > 21 }) // 2.55 to 3.05 deg of 2.3 to 3.3
+	var no *Refusal
+	if r, err := Efficiency(rows, skerry(EveryPair), Model{}, plainQuestion(&Plateau{Axis: "idler_arm", HalfWidthDeg: 0.1})); !errors.As(err, &no) {
+		t.Errorf("no flank in the sweep: got %v with %d readings; want a refusal", *r.Value, len(r.Used))
+	}
+	// with a centre from elsewhere it stands
+	r, err := Efficiency(rows, skerry(EveryPair), Model{}, plainQuestion(&Plateau{Axis: "idler_arm", HalfWidthDeg: 0.1, Centre: &Constant{2.8, 0.01, "an earlier run"}}))
+	if err != nil {
+		t.Fatal(err)
+	}
+	if len(r.Used) != 10 { // 2.7 to 2.9 deg, twice
+		t.Errorf("%d readings within 0.1 deg of 2.8 deg; want 10", len(r.Used))
+	}
+}
+
 func TestThePlateausCentreNeverComesFromTheReadingsItAdmits(t *testing.T) {
 	rows := flatNight(rand.New(rand.NewPCG(32, 1)), 3, 0)
 	use := Plateau{Axis: "idler_arm", HalfWidthDeg: 0.2}

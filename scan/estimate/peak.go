@@ -347,6 +347,15 @@ func highest(f func(float64) float64, low, high float64) float64 {
 // CentreDeg is where the fitted profile stands; of a predicted one, where its maximum stands.
 func (f PeakFit) CentreDeg() float64 { return f.topDeg + f.Fit.Params[centreParam] }
 
+// inSweep refuses a centre that the readings do not hold from both sides.
+func (f PeakFit) inSweep() error {
+	low, high := f.data[0].AngleDeg, f.data[len(f.data)-1].AngleDeg
+	if c := f.CentreDeg(); f.Fit.Bounded[centreParam] || c < low || c > high {
+		return fmt.Errorf("the centre came out at %.4g deg, outside the sweep from %.4g to %.4g deg; want a sweep with both flanks", c, low, high)
+	}
+	return nil
+}
+
 // FWHMDeg is the full width at half maximum and its standard uncertainty; of a predicted profile the
 // width is the model's and has none.
 func (f PeakFit) FWHMDeg() (fwhm, u float64) {

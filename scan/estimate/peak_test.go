@@ -1,6 +1,7 @@
 package estimate
 
 import (
+	"errors"
 	"math"
 	"math/rand/v2"
 	"testing"
@@ -123,7 +124,7 @@ func TestGoodnessIsJudgedByWhatFewCountsReallyDo(t *testing.T) {
 	// At a tenth of a count a reading the statistic is far from its degrees of freedom; the
 	// simulated one is not.
 	r := rand.New(rand.NewPCG(8, 8))
-	low, n := 0, 60
+	low, n := 0, 30
 	for range n {
 		data := profileData(r, func(x float64) float64 { return 0.1 + 2*gauss(x-1, 0.4) }, 0, 2, 60, ones)
 		f, err := FitPeak(data, GaussianPeak, nil)
@@ -138,8 +139,8 @@ func TestGoodnessIsJudgedByWhatFewCountsReallyDo(t *testing.T) {
 			t.Errorf("mean statistic %.3f of the degrees of freedom; want it visibly below at such counts", ratio)
 		}
 	}
-	if low > 15 {
-		t.Errorf("%d of %d honest data sets below p = 0.1; want about 6", low, n)
+	if low > 9 {
+		t.Errorf("%d of %d honest data sets below p = 0.1; want about 3", low, n)
 	}
 }
 
@@ -198,7 +199,7 @@ func TestFitsRefuseEmptyProfiles(t *testing.T) {
 
 // Fitted angles against the truth, the axis's error drawn anew each time.
 func TestPeakAnglesCoverTheTruth(t *testing.T) {
-	times := 150
+	times := 60
 	if *long {
 		times = 2000
 	}
@@ -270,6 +271,11 @@ func TestAPeakIsReportedWithWhatItNeeds(t *testing.T) {
 	bare.AxisError = nil
 	if _, err := Peak(spotRows(data), bare, Model{}, PeakQuestion{Axis: "idler_arm", Channel: "idler"}); err == nil {
 		t.Error("no axis error declared: want a refusal")
+	}
+	flank := profileData(rand.New(rand.NewPCG(3, 11)), func(x float64) float64 { return 5 + 300*gauss(x-2.86, 0.3) }, 2.95, 3.4, 45, ones)
+	var no *Refusal
+	if res, err := Peak(spotRows(flank), skerry(EveryPair), Model{}, PeakQuestion{Axis: "idler_arm", Channel: "idler"}); !errors.As(err, &no) {
+		t.Errorf("one flank only: got %v ± %v; want a refusal", *res.Value, *res.U)
 	}
 	flat := profileData(rand.New(rand.NewPCG(3, 10)), func(float64) float64 { return 5 }, 2.3, 3.4, 45, ones)
 	res, err = Peak(spotRows(flat), skerry(EveryPair), Model{Profile: func(x float64) float64 { return gauss(x-2.86, 0.2) }}, PeakQuestion{Axis: "idler_arm", Channel: "idler"})

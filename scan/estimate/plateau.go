@@ -59,6 +59,9 @@ func (p Plateau) choose(lights []protocol.Reading, ch channels, windowS float64,
 				}
 			}
 			v, u, err := middleOfTop(others, p.Axis, ch, windowS)
+			if err == nil && u > p.HalfWidthDeg/2 {
+				err = fmt.Errorf("it is known to ± %.2g deg only; want both flanks in the sweep, and at most half of half_width", u)
+			}
 			if err != nil {
 				no.addf("the plateau's centre for part %d cannot be found in the other readings: %v", f, err)
 				return nil, nil, nil
@@ -68,7 +71,7 @@ func (p Plateau) choose(lights []protocol.Reading, ch channels, windowS float64,
 		}
 	}
 	for i, r := range lights {
-		if math.Abs(angle[i]-centre[fold[i]]) <= p.HalfWidthDeg {
+		if math.Abs(angle[i]-centre[fold[i]]) <= p.HalfWidthDeg+1e-9 { // the edge counts, whatever the last bit says
 			kept = append(kept, r)
 		} else {
 			aside = append(aside, Aside{r.Sequence, fmt.Sprintf("off the plateau: %s at %.4f deg, centre %.4f ± %.4f deg", p.Axis, angle[i], centre[fold[i]], p.HalfWidthDeg)})
@@ -128,6 +131,9 @@ func middleOfTop(lights []protocol.Reading, axis string, ch channels, windowS fl
 	var failed error
 	for _, shape := range []PeakShape{FlatTop, GaussianPeak} {
 		fit, err := FitPeak(data, shape, nil)
+		if err == nil {
+			err = fit.inSweep()
+		}
 		if err == nil {
 			return fit.CentreDeg(), fit.Fit.U(centreParam), nil
 		}

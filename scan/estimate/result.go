@@ -6,6 +6,7 @@ import (
 	"math"
 	"strconv"
 	"strings"
+	"unicode/utf8"
 
 	"gemel/protocol"
 )
@@ -149,7 +150,11 @@ func (r Result) Text() string {
 	}
 	if len(r.Budget) > 0 {
 		b.WriteString("\nUncertainty budget (JCGM 100)\n")
-		fmt.Fprintf(&b, "  %-44s %-16s %13s %-5s %11s %-2s %-12s %5s %12s %12s %8s\n", "quantity", "symbol", "estimate", "unit", "u", "", "distribution", "dof", "sensitivity", "contribution", "share")
+		wide := 0
+		for _, row := range r.Budget {
+			wide = max(wide, utf8.RuneCountInString(row.Quantity))
+		}
+		fmt.Fprintf(&b, "  %-*s %-10s %13s %-5s %11s %-2s %-12s %5s %12s %12s %8s\n", wide, "quantity", "symbol", "estimate", "unit", "u", "", "distribution", "dof", "sensitivity", "contribution", "share")
 		for _, row := range r.Budget {
 			dof, u := "inf", figure(row.U, 3)
 			if row.Freedom != nil {
@@ -158,7 +163,7 @@ func (r Result) Text() string {
 			if row.Covariance {
 				dof, u = "", ""
 			}
-			fmt.Fprintf(&b, "  %-44s %-16s %13s %-5s %11s %-2s %-12s %5s %12s %12s %7.1f%%\n", row.Quantity, row.Symbol, figure(row.Estimate, 7), row.Unit, u,
+			fmt.Fprintf(&b, "  %-*s %-10s %13s %-5s %11s %-2s %-12s %5s %12s %12s %7.1f%%\n", wide, row.Quantity, row.Symbol, figure(row.Estimate, 7), row.Unit, u,
 				row.Evaluation, row.Distribution, dof, figure(row.Sensitivity, 3), figure(row.Contribution, 3), 100*row.Share)
 		}
 		if r.U != nil {
@@ -184,6 +189,13 @@ func (r Result) Text() string {
 				}
 			}
 			fmt.Fprintf(&b, "  %-36s %s\n", c.Name, v)
+		}
+	}
+	if len(r.Residuals) > 0 {
+		b.WriteString("\nReadings against the fitted profile\n")
+		fmt.Fprintf(&b, "  %10s %12s %12s %9s\n", "angle/deg", "counts", "expected", "residual")
+		for _, p := range r.Residuals {
+			fmt.Fprintf(&b, "  %10.4f %12.0f %12.1f %+9.2f\n", p.AngleDeg, p.Counts, p.Expected, p.Residual)
 		}
 	}
 	if len(r.SetAside) > 0 {

@@ -192,3 +192,67 @@ func TestARefusalIsAnError(t *testing.T) {
 		t.Errorf("empty run: %v", err)
 	}
 }
+
+// Whatever stands in the rows and constants, there is a number that prints, or a refusal.
+func TestHostileRowsGiveANumberOrARefusal(t *testing.T) {
+	r := rand.New(rand.NewPCG(51, 1))
+	odd := []float64{0, -1, 1e-300, 1e300, math.NaN(), math.Inf(1), 0.5, 4e-9}
+	numbers, refusals := 0, 0
+	for i := range 3000 {
+		n := newExactNight()
+		constants := []*Constant{&n.bench.Counter.Window, &n.bench.Counter.Capture, &n.bench.Arms[0].DeadTime, &n.bench.Arms[1].DeadTime, &n.bench.Arms[0].Afterpulse,
+			&n.bench.Arms[1].Afterpulse, &n.bench.Arms[1].Path[0].Constant}
+		for range r.IntN(3) {
+			c := constants[r.IntN(len(constants))]
+			if r.IntN(2) == 0 {
+				c.Value = odd[r.IntN(len(odd))]
+			} else {
+				c.U = odd[r.IntN(len(odd))]
+			}
+		}
+		for range r.IntN(4) {
+			row := &n.rows.Readings[r.IntN(len(n.rows.Readings))]
+			switch r.IntN(6) {
+			case 0:
+				row.Gate = 0
+			case 1:
+				row.Counts = row.Counts[:r.IntN(len(row.Counts)+1)]
+			case 2:
+				if len(row.Counts) == 0 {
+					continue
+				}
+				row.Counts[r.IntN(len(row.Counts))].Counts = []uint64{0, 1, 1 << 60}[r.IntN(3)]
+			case 3:
+				row.Slices = nil
+			case 4:
+				for k := range row.Slices {
+					row.Slices[k].Gate = 0
+				}
+			case 5:
+				row.Kind = []protocol.ReadingKind{protocol.Light, protocol.Dark, protocol.Background, protocol.Reference, protocol.Check}[r.IntN(5)]
+			}
+		}
+		res, err := n.ask(func(q *Question) {
+			q.Displaced = r.IntN(2) == 0
+			q.Off = map[Step]bool{steps[r.IntN(len(steps))]: true, ShadowStep: r.IntN(2) == 0}
+		})
+		var no *Refusal
+		switch {
+		case errors.As(err, &no) && len(no.Reasons) > 0:
+			refusals++
+			continue
+		case err != nil:
+			t.Fatalf("night %d: %v", i, err)
+		}
+		numbers++
+		if math.IsNaN(*res.Value+*res.U+*res.Expanded) || math.IsInf(*res.Value, 0) {
+			t.Fatalf("night %d: %v ± %v", i, *res.Value, *res.U)
+		}
+		if _, err := res.JSON(); err != nil {
+			t.Fatalf("night %d: %v", i, err)
+		}
+	}
+	if numbers < 200 || refusals < 200 {
+		t.Errorf("%d numbers and %d refusals; want plenty of both", numbers, refusals)
+	}
+}

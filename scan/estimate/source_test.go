@@ -68,7 +68,7 @@ func takeFrom(t *testing.T, o source.Optics, w world, n night, logic Logic) Rows
 }
 
 func TestCalibrationsOfTheHousesSimulatorCoverTheTruth(t *testing.T) {
-	times := 60
+	times := 25
 	if *long {
 		times = 2000
 	}
@@ -131,7 +131,7 @@ func TestPeaksAgainstTheModelsProfileCoverTheTruth(t *testing.T) {
 	}
 	top := highest(table, low, high)
 	t.Logf("ring at %.4f deg, the profile's maximum at %.4f deg", idler, top)
-	times := 100
+	times := 60
 	if *long {
 		times = 2000
 	}
