@@ -154,7 +154,9 @@ func with(t *testing.T, old, now string) string {
 	return strings.Replace(text, old, now, 1)
 }
 
-func TestAVirtualSettingChangesTheWorldAndIsReadBack(t *testing.T) {
+// withSettings is the demo bench with two settings more, and another piece replaced.
+func withSettings(t *testing.T, old, now string) string {
+	t.Helper()
 	text := with(t, "\nsensors:\n", `
 settings:
   laser: {line: laser, dialect: scpi, unit: mW, answer_unit: W, limits: [0 mW, 60 mW], tolerance: 100 uW, headers: {set: ":SOUR:POW {value}", get: ":SOUR:POW?"}}
@@ -162,7 +164,12 @@ settings:
 
 sensors:
 `)
-	f := parse(t, strings.Replace(text, "\nlines:\n", "\nlines:\n  laser: {device: simulated}\n  delay: {device: simulated}\n", 1))
+	text = strings.Replace(text, "\nlines:\n", "\nlines:\n  laser: {device: simulated}\n  delay: {device: simulated}\n", 1)
+	return strings.Replace(text, old, now, 1)
+}
+
+func TestAVirtualSettingChangesTheWorldAndIsReadBack(t *testing.T) {
+	f := parse(t, withSettings(t, "", ""))
 	synctest.Test(t, func(t *testing.T) {
 		b, _ := live(t, f, VirtualOptions{})
 		connectAll(t, b)
