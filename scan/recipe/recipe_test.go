@@ -43,7 +43,7 @@ func anglesOf(p scan.Plan, axis drivers.AxisName) []string {
 	for _, point := range p.Points {
 		for _, a := range point.Axes {
 			if a.Axis == axis {
-				out = append(out, strings.TrimSuffix(a.Angle.String(), " deg"))
+				out = append(out, strings.TrimSuffix(strings.TrimRight(a.Angle.Fixed(9), "0"), "."))
 			}
 		}
 	}
