@@ -28,7 +28,6 @@ type summary struct {
 	Most      *pointRow      `json:"most_coincident"` // null without a coincidence channel
 	axes      []string
 	channels  []string
-	singles   int
 }
 
 type pointRow struct {

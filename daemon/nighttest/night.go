@@ -5,7 +5,6 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
-	"math/rand/v2"
 	"runtime"
 	"slices"
 	"strconv"
@@ -644,6 +643,3 @@ func AtClockOne(path string, text []byte) (*bench.File, error) {
 	}
 	return bench.Parse(path, []byte(strings.Join(out, "\n")))
 }
-
-// seeded is the generator of one named purpose.
-func seeded(seed uint64, purpose uint64) *rand.Rand { return rand.New(rand.NewPCG(seed, purpose)) }

@@ -6,6 +6,7 @@ import (
 	"encoding/json"
 	"errors"
 	"io"
+	"maps"
 	"regexp"
 	"slices"
 	"strings"
@@ -25,9 +26,9 @@ import (
 // row breaks one promise on purpose, in a night that is flawless without it, and names the words
 // by which the judge must find it. A row whose sabotage goes unseen means that the oracle is blind.
 func TestTheJudgeFindsEverySabotage(t *testing.T) {
-	garbledCounts := ""
+	var garbledCounts strings.Builder
 	for answer := 20; answer < 600; answer += 7 {
-		garbledCounts += "; garbled(counter, answer " + itoa(answer) + ", byte 3 as \"7\")"
+		garbledCounts.WriteString("; garbled(counter, answer " + itoa(answer) + ", byte 3 as \"7\")")
 	}
 	for _, row := range []struct {
 		name   string
@@ -35,7 +36,7 @@ func TestTheJudgeFindsEverySabotage(t *testing.T) {
 		make   func() Sabotage
 		found  string
 	}{
-		{"skips the second read of the counts", "|" + garbledCounts[1:], skipSecondRead, "counted"},
+		{"skips the second read of the counts", "|" + garbledCounts.String()[1:], skipSecondRead, "counted"},
 		{"publishes before the commit", "|", publishEarly, "published before it was durable"},
 		{"publishes other bytes than the journal's", "|", publishOtherBytes, "other bytes"},
 		{"opens a gate before the commit", "|", gateBeforeCommit, "a gate was opened before it was durable"},
@@ -349,9 +350,7 @@ type believer struct {
 }
 
 func (b *believer) Move(ctx context.Context, targets map[drivers.AxisName]unit.Angle) error {
-	for axis, angle := range targets {
-		b.told[axis] = angle
-	}
+	maps.Copy(b.told, targets)
 	return b.Stage.Move(ctx, targets)
 }
 

@@ -3,6 +3,7 @@ package engine
 import (
 	"context"
 	"fmt"
+	"maps"
 	"time"
 
 	"gemel/drivers"
@@ -35,9 +36,7 @@ func (e *Engine) where(ctx context.Context) (map[drivers.AxisName]unit.Angle, er
 		if err != nil {
 			return nil, err
 		}
-		for axis, angle := range got {
-			all[axis] = angle
-		}
+		maps.Copy(all, got)
 	}
 	return all, nil
 }

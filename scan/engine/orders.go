@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"slices"
+	"strings"
 
 	"gemel/protocol"
 )
@@ -167,12 +168,12 @@ func add(causes []protocol.Cause, c protocol.Cause) []protocol.Cause {
 }
 
 func join(causes []protocol.Cause) string {
-	text := ""
+	var text strings.Builder
 	for i, c := range causes {
 		if i > 0 {
-			text += ", "
+			text.WriteString(", ")
 		}
-		text += string(c)
+		text.WriteString(string(c))
 	}
-	return text
+	return text.String()
 }
