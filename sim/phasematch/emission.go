@@ -99,7 +99,10 @@ func (p *Pair) roots(sinPhi, cosPhi float64, roots *[2]float64) (n int, beyond b
 		// convex function never overshoot.
 		s, ok := p.newton((math.Sqrt(d0*d0-2*curvature*f0)-d0)/curvature, 0, top, 1, sinPhi, cosPhi)
 		if !ok {
-			return 0, true
+			// Still negative where the ray would run along the face: the match lies beyond, inside only.
+			// NaN there: the partner cannot propagate before it is reached.
+			edge, _ := p.mismatch(top, sinPhi, cosPhi)
+			return 0, edge < 0
 		}
 		roots[0] = s
 		return 1, false
@@ -125,7 +128,7 @@ func (p *Pair) roots(sinPhi, cosPhi float64, roots *[2]float64) (n int, beyond b
 		roots[n] = s
 		n++
 	}
-	return n, n == 0
+	return n, false
 }
 
 // curvature estimates half the second derivative of the mismatch with respect to the sine.

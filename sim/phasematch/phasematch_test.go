@@ -4,6 +4,7 @@ import (
 	"math"
 	"math/rand/v2"
 	"testing"
+	"time"
 
 	"gemel/sim/crystal"
 )
@@ -376,6 +377,110 @@ func TestATotallyReflectedIdlerIsReportedWithoutNaN(t *testing.T) {
 	t.Error("no slab found whose idler is reflected")
 }
 
+func TestATotallyReflectedSignalIsReported(t *testing.T) {
+	s := slab(t)
+	s.Extrapolate = true
+	for cut := 40.0; cut <= 90; cut += 2 {
+		for nm := 810.0; nm < 2400; nm += 40 {
+			s.CutDeg = cut
+			p := at(t, s, nm)
+			e := p.Emission(0)
+			if !e.SignalReflected {
+				continue
+			}
+			if e.N != 0 || e.Because() != "the signal is totally reflected at the exit face" {
+				t.Errorf("%+v, because %q", e, e.Because())
+			}
+			// The closed triangle of wave vectors says the same: momentum along the face of more than
+			// air can carry.
+			along := (p.kpz*p.kpz + p.signal.kSq - p.idler.kSq) / (2 * p.kpz)
+			if q := math.Sqrt(p.signal.kSq - along*along); q < p.signal.k0*(1-1e-6) {
+				t.Errorf("cut %g signal %g: momentum along the face is %g of what air carries; want more than 1", cut, nm, q/p.signal.k0)
+			}
+			return
+		}
+	}
+	t.Error("no slab found whose signal is reflected")
+}
+
+// TestAPrincipalPlaneOfAnEqualPairOfAxesIsUniaxial builds a biaxial crystal out of BBO, with
+// n_x = n_y = n_o and n_z = n_e, and asks both solvers for the same angles.
+func TestAPrincipalPlaneOfAnEqualPairOfAxesIsUniaxial(t *testing.T) {
+	s := slab(t)
+	o, e := s.Crystal.Axes[0], s.Crystal.Axes[1]
+	x, y, z := o, o, e
+	x.Axis, y.Axis, z.Axis = crystal.X, crystal.Y, crystal.Z
+	twin := s.Crystal
+	twin.Class, twin.Axes = crystal.Biaxial, []crystal.Dispersion{x, y, z}
+	for scheme, process := range map[string]Process{"yy-p": EOO, "yp-p": EOE, "py-p": EEO} {
+		s.Process = process
+		want, err := s.CollinearDeg(790)
+		if err != nil {
+			t.Fatal(err)
+		}
+		b := Biaxial{Crystal: twin, Plane: XZ, Scheme: scheme, PumpNm: 405, SignalNm: 790, Cel: 20}
+		got, err := b.AnglesDeg()
+		if err != nil || len(got) != 1 || len(want) != 1 || math.Abs(got[0]-want[0]) > 1e-9 {
+			t.Errorf("%s: %v, %v; the uniaxial solver gives %v", scheme, got, err, want)
+		}
+		rho, err := b.WalkoffDeg(got[0])
+		s.CutDeg = want[0]
+		if w, _ := s.WalkoffDeg(); err != nil || math.Abs(rho[0]-w) > 1e-9 {
+			t.Errorf("%s: walk-off %v, %v; want %g", scheme, rho, err, w)
+		}
+	}
+	for _, scheme := range []string{"", "zz-p", "yyp", "yy-pp", "yx-p"} {
+		if _, err := (Biaxial{Crystal: twin, Plane: XZ, Scheme: scheme, PumpNm: 405, SignalNm: 790}).AnglesDeg(); err == nil {
+			t.Errorf("scheme %q was taken in the xz plane", scheme)
+		}
+	}
+}
+
+// TestBiaxialAnglesConserveMomentum recomputes the condition from the indices for every biaxial
+// set and plane.
+func TestBiaxialAnglesConserveMomentum(t *testing.T) {
+	found := 0
+	for _, name := range []string{"ktp-kato-2002", "lbo-chen-1989", "lbo-datasheet-pm", "bibo-umemura-2007"} {
+		for _, plane := range []Plane{XY, XZ, YZ} {
+			for _, scheme := range []string{"nn-p", "pp-n", "np-p", "np-n"} {
+				c := set(t, name)
+				normal, at0, at90, err := plane.axes()
+				if err != nil {
+					t.Fatal(err)
+				}
+				b := Biaxial{Crystal: c, Plane: plane, PumpNm: 532, SignalNm: 1064, Cel: 20}
+				for _, r := range scheme {
+					if r == 'n' {
+						b.Scheme += string(normal)
+					} else {
+						b.Scheme += string(r)
+					}
+				}
+				angles, err := b.AnglesDeg()
+				if err != nil {
+					t.Fatal(err)
+				}
+				index := func(pol byte, nm, angle float64) float64 {
+					n := func(a crystal.Axis) float64 { v, _ := c.Index(a, nm, 20); return v }
+					if pol == 'n' {
+						return n(normal)
+					}
+					return 1 / math.Sqrt(math.Pow(math.Cos(angle*deg)/n(at0), 2)+math.Pow(math.Sin(angle*deg)/n(at90), 2))
+				}
+				for _, a := range angles {
+					found++
+					if d := 2*index(scheme[3], 532, a) - index(scheme[0], 1064, a) - index(scheme[1], 1064, a); math.Abs(d) > 1e-10 {
+						t.Errorf("%s %s %s at %g deg: momentum is missed by %g", name, plane, scheme, a, d)
+					}
+				}
+			}
+		}
+	}
+	if found < 8 {
+		t.Errorf("%d matched angles; want several a crystal", found)
+	}
+}
+
 func TestPolingShiftsTheConditionByItsGrating(t *testing.T) {
 	s := slab(t)
 	plain := at(t, s, 810)
@@ -542,6 +647,31 @@ func threeIndices(s *Slab, nm float64) float64 {
 }
 
 var sink float64
+
+// BenchmarkInEvaluations reports emission and closed form in units of an evaluation of the three
+// indices, measured in turns within one run.
+func BenchmarkInEvaluations(b *testing.B) {
+	plain, tilted := slab(b), slab(b)
+	tilted.TiltDeg = 1.5
+	var spent [3]time.Duration
+	const each = 200
+	for b.Loop() {
+		for k, f := range []func(){
+			func() { sink = threeIndices(&plain, 800) },
+			func() { p, _ := tilted.At(800); e := p.Emission(33); sink = e.Root[0].Signal.PolarDeg },
+			func() { p, _ := plain.At(800); sink, _, _ = p.RingDeg() },
+		} {
+			start := time.Now()
+			for range each {
+				f()
+			}
+			spent[k] += time.Since(start)
+		}
+	}
+	b.ReportMetric(float64(spent[1])/float64(spent[0]), "evaluations/emission")
+	b.ReportMetric(float64(spent[2])/float64(spent[0]), "evaluations/closed-form")
+	b.ReportMetric(0, "ns/op")
+}
 
 func BenchmarkThreeIndices(b *testing.B) {
 	s := slab(b)

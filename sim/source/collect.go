@@ -44,7 +44,7 @@ func (m *Model) bandwidth(p Pose) (signal, idler Bandwidth) {
 	f := m.newFrame(p.TiltDeg, m.pumpNm(p), p.CrystalCel)
 	o := &m.o
 	s := newStand(&o.Signal, o.AzimuthDeg, p.SignalDeg, p.TiltDeg)
-	i := newStand(&o.Idler, o.AzimuthDeg+180, p.IdlerDeg, p.TiltDeg)
+	i := newStand(&o.Idler, o.AzimuthDeg, -p.IdlerDeg, p.TiltDeg)
 	type line struct{ signalNm, idlerNm, share float64 }
 	var lines []line
 	for _, w := range f.ways {

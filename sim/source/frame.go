@@ -45,12 +45,12 @@ func (m *Model) newFrame(tiltDeg, pumpNm, cel float64) *frame {
 	f.slab = phasematch.Slab{Crystal: o.Crystal, Process: o.Process, CutDeg: o.CutDeg, TiltDeg: tiltDeg, ThicknessMm: o.ThicknessMm,
 		Cel: cel, PumpNm: pumpNm, PolingUm: o.PolingUm, Extrapolate: o.Extrapolate}
 	f.centre, _ = f.slab.At(m.centreNm(pumpNm))
-	at := func(a *Arm, side, angle float64) ray {
-		s := newStand(a, o.AzimuthDeg+side, angle, tiltDeg)
+	at := func(a *Arm, angle float64) ray {
+		s := newStand(a, o.AzimuthDeg, angle, tiltDeg)
 		x, y, _ := s.face(s.centre)
 		return ray{x: x, y: y}
 	}
-	rs, ri := at(&o.Signal, 0, m.typicalDeg[0]), at(&o.Idler, 180, m.typicalDeg[1])
+	rs, ri := at(&o.Signal, m.typicalDeg[0]), at(&o.Idler, -m.typicalDeg[1])
 	swapped := f.slab
 	swapped.Process = f.slab.Process.Swapped()
 	assign := func(s, i phasematch.Slab, counts [3]bool) way {
@@ -87,7 +87,7 @@ func (m *Model) centreNm(pumpNm float64) float64 {
 func (m *Model) integral(f *frame, what int, signalDeg, idlerDeg, offset float64) float64 {
 	waist := m.o.PumpWaistUm / 1000
 	signal := newStand(&m.o.Signal, m.o.AzimuthDeg, signalDeg, f.tiltDeg)
-	idler := newStand(&m.o.Idler, m.o.AzimuthDeg+180, idlerDeg, f.tiltDeg)
+	idler := newStand(&m.o.Idler, m.o.AzimuthDeg, -idlerDeg, f.tiltDeg)
 	total := 0.0
 	for i := range f.ways {
 		w := &f.ways[i]
@@ -106,6 +106,9 @@ func (m *Model) integral(f *frame, what int, signalDeg, idlerDeg, offset float64
 			}
 			total += w.pairs.both(m.rules, m.rays(&w.pairs, first, true), other, waist, offset, m.effort, nil)
 		}
+	}
+	if math.IsNaN(total) {
+		return 0 // a slab turned so far that no pump enters
 	}
 	return total
 }

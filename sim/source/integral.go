@@ -17,11 +17,11 @@ import (
 
 const deg = math.Pi / 180
 
-// stand is an arm standing at an angle: the centre of its aperture and the aperture's own two
-// axes, as directions in the laboratory.
+// stand is an arm standing at an angle, positive on the signal's side of the pump: the centre of
+// its aperture and the aperture's own two axes, as directions in the laboratory.
 type stand struct {
 	arm              *Arm
-	centre, in, out  [3]float64 // in points along the arm's swing, away from the pump
+	centre, in, out  [3]float64 // in points along the arm's swing
 	sinTilt, cosTilt float64
 }
 

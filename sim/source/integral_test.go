@@ -31,7 +31,7 @@ func (b brute) sums(n int) (signal, pairs float64) {
 		step[i] = math.Pow(phi, -float64(i+1))
 	}
 	x := [5]float64{0.5, 0.5, 0.5, 0.5, 0.5}
-	signalArm, idlerArm := b.arm(&o.Signal, b.pose.SignalDeg, 0), b.arm(&o.Idler, b.pose.IdlerDeg, 180)
+	signalArm, idlerArm := b.arm(&o.Signal, b.pose.SignalDeg), b.arm(&o.Idler, -b.pose.IdlerDeg)
 	w := o.PumpWaistUm / 1000
 	ct, st := math.Cos(b.pose.TiltDeg*math.Pi/180), math.Sin(b.pose.TiltDeg*math.Pi/180)
 	k0p := 2 * math.Pi / (b.pose.PumpNm * 1e-6)
@@ -136,9 +136,9 @@ type bruteArm struct {
 	c, u, v [3]float64
 }
 
-func (b brute) arm(a *Arm, angle, side float64) bruteArm {
+func (b brute) arm(a *Arm, angle float64) bruteArm {
 	const rad = math.Pi / 180
-	az, t, h := (b.o.AzimuthDeg+side)*rad, angle*rad, a.OutOfPlaneDeg*rad
+	az, t, h := b.o.AzimuthDeg*rad, angle*rad, a.OutOfPlaneDeg*rad
 	along := [3]float64{math.Cos(az), math.Sin(az), 0}
 	across := [3]float64{-math.Sin(az), math.Cos(az), 0}
 	out := bruteArm{d: a.DistanceMm}
@@ -191,7 +191,7 @@ func cases(t testing.TB) []struct {
 			p.IdlerDeg += 0.1
 		}),
 		mod("Gaussian signal, iris for the idler, out of plane", func(o *Optics, p *Pose) {
-			o.Signal.Aperture, o.Idler.OutOfPlaneDeg = Gaussian, 0.15
+			o.Signal.Aperture, o.Signal.OutOfPlaneDeg, o.Idler.OutOfPlaneDeg = Gaussian, 0.1, 0.15
 		}),
 		mod("long crystal, narrow pump, azimuth 60 deg", func(o *Optics, p *Pose) {
 			o.ThicknessMm, o.PumpWaistUm, o.AzimuthDeg = 5, 40, 60

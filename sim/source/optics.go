@@ -63,7 +63,8 @@ type Arm struct {
 	Aperture      string  // Iris or Gaussian
 	RadiusMm      float64 // of the iris, or 1/e² intensity radius of the mode
 	DistanceMm    float64 // from the crystal
-	OutOfPlaneDeg float64 // angle by which the aperture's centre misses the plane the arms turn in
+	OutOfPlaneDeg float64 // angle by which the aperture's centre misses the plane the arms turn in,
+	// positive for both arms on the side of azimuth + 90 deg: partners want opposite signs
 
 	Filter        Filter
 	Transmittance float64 // from inside the crystal to the detector, at the collected wavelength

@@ -117,6 +117,57 @@ func TestAWideIdlerGivesThePlateau(t *testing.T) {
 	}
 }
 
+func TestPartnersWantOppositeHeights(t *testing.T) {
+	pairs := func(signal, idler float64) float64 {
+		o := bench(t)
+		o.PairHzPerMw, o.NonlinearPmPerV = 0, 1.75 // a scale that does not depend on the arms
+		o.Signal.OutOfPlaneDeg, o.Idler.OutOfPlaneDeg = signal, idler
+		return model(t, o).Exact(atPeak()).PairsHz
+	}
+	level, against, along := pairs(0, 0), pairs(0.2, -0.2), pairs(0.2, 0.2)
+	if !(against > 0.95*level && along < 0.2*level) {
+		t.Errorf("pairs: arms level %.4g, one up one down %.4g, both up %.4g; want partners on opposite sides", level, against, along)
+	}
+}
+
+func TestWithoutPolarisersTypeIICountsBothWays(t *testing.T) {
+	base := func() (Optics, Pose) {
+		o, p := bench(t), atPeak()
+		o.Process, o.CutDeg, o.AzimuthDeg = phasematch.EOE, 42.5, 90
+		o.PairHzPerMw, o.NonlinearPmPerV = 0, 2
+		p.SignalDeg, p.IdlerDeg = 2.95, 2.9
+		return o, p
+	}
+	o, p := base()
+	both := model(t, o).computed(p)
+	o.Signal.Polarised, o.Idler.Polarised = true, true
+	one := model(t, o).computed(p)
+	o.Process = phasematch.EEO
+	other := model(t, o).computed(p)
+	for i := range both {
+		if math.Abs(both[i]/(one[i]+other[i])-1) > 1e-9 || one[i] == 0 || other[i] == 0 {
+			t.Errorf("integral %d: %.8g without polarisers, %.8g and %.8g with; want the sum", i, both[i], one[i], other[i])
+		}
+	}
+}
+
+func TestNoPoseGivesNonsense(t *testing.T) {
+	m := model(t, bench(t))
+	for _, p := range []Pose{
+		{SignalDeg: 95, IdlerDeg: -120, PumpW: 1, PumpOpen: 1, CrystalCel: 20, SignalOpen: 1, IdlerOpen: 1},
+		{SignalDeg: 2.8, IdlerDeg: 2.8, TiltDeg: 90, PumpW: 1, PumpOpen: 1, CrystalCel: 20, SignalOpen: 1, IdlerOpen: 1},
+		{PumpW: 1, PumpNm: 150, PumpOpen: 1, SignalOpen: 1, IdlerOpen: 1},
+		{},
+	} {
+		r := m.Rates(p)
+		for _, v := range []float64{r.SignalHz, r.IdlerHz, r.PairsHz} {
+			if !(v >= 0) || math.IsInf(v, 0) {
+				t.Errorf("%+v: %+v; want rates", p, r)
+			}
+		}
+	}
+}
+
 func TestTheWaveplateSpoilsPairsAndLeavesTheBackground(t *testing.T) {
 	m := model(t, bench(t))
 	p := atPeak()
@@ -203,5 +254,10 @@ func TestDrawGivesTheSameCountsForTheSameSeed(t *testing.T) {
 	b := m.Draw(rand.New(rand.NewPCG(1, 2)), gate)
 	if a != b || a.Coincidences == 0 {
 		t.Errorf("counts %+v and %+v; want the same, with coincidences", a, b)
+	}
+	a = m.DrawEvents(rand.New(rand.NewPCG(1, 2)), gate)
+	b = m.DrawEvents(rand.New(rand.NewPCG(1, 2)), gate)
+	if a != b || a.Coincidences == 0 {
+		t.Errorf("events gave %+v and %+v; want the same, with coincidences", a, b)
 	}
 }
