@@ -28,6 +28,7 @@ const (
 	Rectangular Shape = "rectangular"
 	Triangular  Shape = "triangular"
 	Arcsine     Shape = "arcsine"
+	TwoPoint    Shape = "two-point" // at one of two bounds, nobody knows which: the half-width itself
 	Counting    Shape = "poisson"
 	Student     Shape = "t" // a mean of few observations: Freedom says how few
 )

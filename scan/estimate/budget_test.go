@@ -3,6 +3,7 @@ package estimate
 import (
 	"math"
 	"math/rand/v2"
+	"strings"
 	"testing"
 
 	"gonum.org/v1/gonum/stat/distuv"
@@ -289,7 +290,7 @@ func TestNumericalToleranceIsHalfOfTheSecondDigit(t *testing.T) {
 func TestDrawsHaveTheStandardUncertaintyTheyDeclare(t *testing.T) {
 	for _, in := range []Input{
 		{Estimate: 3, U: 2, Distribution: Normal}, {Estimate: 3, U: 2, Distribution: Rectangular}, {Estimate: 3, U: 2, Distribution: Triangular},
-		{Estimate: 3, U: 2, Distribution: Arcsine}, {Estimate: 12, U: math.Sqrt(12), Distribution: Counting}, {Estimate: 400, U: 20, Distribution: Counting},
+		{Estimate: 3, U: 2, Distribution: Arcsine}, {Estimate: 3, U: 2, Distribution: TwoPoint}, {Estimate: 12, U: math.Sqrt(12), Distribution: Counting}, {Estimate: 400, U: 20, Distribution: Counting},
 	} {
 		m, err := Simulate(in.Draw, 400_000, 4, 0.95)
 		if err != nil {
@@ -303,4 +304,23 @@ func TestDrawsHaveTheStandardUncertaintyTheyDeclare(t *testing.T) {
 		t.Fatal(err)
 	}
 	near(t, "t with 8: its quantile", m.Symmetric.High, distuv.StudentsT{Sigma: 1, Nu: 8}.Quantile(0.975), 0.02)
+}
+
+func TestMonteCarloSaysWhatItCanTell(t *testing.T) {
+	for _, c := range []struct {
+		name   string
+		off    float64
+		trials int
+		ok     bool
+		want   string
+	}{
+		{"equal", 0, 1_000_000, true, "the linear result may be used"},
+		{"apart", 3, 1_000_000, false, "use the simulated interval"},
+		{"apart by no more than the noise of few trials", 0.2, 2000, false, "too few trials to tell"},
+	} {
+		m := MonteCarlo{Trials: c.trials, U: 2, Symmetric: Interval{-3.92, 3.92}}.Against(Interval{-3.92 - c.off, 3.92}, 2)
+		if m.LinearOK != c.ok || !strings.Contains(m.Sentence, c.want) {
+			t.Errorf("%s: %v, %q; want %q", c.name, m.LinearOK, m.Sentence, c.want)
+		}
+	}
 }

@@ -369,6 +369,9 @@ func (c *calculation) load(no *Refusal, r *Result) {
 	if load := c.windowLoad(); (c.on(AccidentalStep) || c.on(ShadowStep)) && load > refuseWindow {
 		no.addf("count rates times coincidence window is %.3f; want at most %.1f, beyond which accidentals are not held by any check: a shorter window or a lower pump power", load, refuseWindow)
 	}
+	if e := c.echoes(); e > 0 && c.on(ShadowStep) {
+		r.Warnings = append(r.Warnings, fmt.Sprintf("half the coincidence window is longer than a dead time, so afterpulses may fall into it and count as second coincidences, up to %.2g %% of them: a shorter window would settle it", 100*e))
+	}
 	if !c.on(DeadTimeStep) {
 		return
 	}
@@ -400,7 +403,9 @@ func (c *calculation) windowLoad() float64 {
 
 // echoes is the largest share of coincidences that can be second ones of the same pair: an
 // afterpulse of either detector that falls into the window, which a dead time beyond half the window
-// forbids. Where in the decay the window lies is not declared, so anything from none to all may be.
+// forbids. How fast they decay is not declared: with a slow decay it is none of them, with a fast one
+// all, so the row is a two-point one. A rectangular row was tried, and covered 92.4 % of 2000
+// calibrations with a 20 ns window, dead times of 2 ns and a decay of 60 ns.
 func (c *calculation) echoes() float64 {
 	half, share := c.bench.Counter.Window.Value/2, 0.0
 	if c.trigger.DeadTime.Value < half {
@@ -434,7 +439,7 @@ func (c *calculation) list() {
 		inTauD:       constant("dead time of the detector under test", "tau_D", "s", c.test.DeadTime),
 		inModel:      {Quantity: "dead-time model", Symbol: "f_L", Unit: "1", Estimate: 1, U: Rectangular.U(hw), Evaluation: TypeB, Distribution: Rectangular},
 		inShadow:     {Quantity: "accidentals beyond the first order", Symbol: "f_K", Unit: "1", Estimate: 1, U: Rectangular.U(c.windowLoad() * c.windowLoad() / 2), Evaluation: TypeB, Distribution: Rectangular},
-		inEcho:       {Quantity: "afterpulses inside the window: none to all", Symbol: "f_E", Unit: "1", Estimate: 1 + c.echoes()/2, U: Rectangular.U(c.echoes() / 2), Evaluation: TypeB, Distribution: Rectangular},
+		inEcho:       {Quantity: "afterpulses inside the window: none or all", Symbol: "f_E", Unit: "1", Estimate: 1 + c.echoes()/2, U: TwoPoint.U(c.echoes() / 2), Evaluation: TypeB, Distribution: TwoPoint},
 		inCapture:    constant("window capture", "eta_W", "1", ct.Capture),
 		inCollection: {Quantity: "collection, one-sided: between the model's share and 1", Symbol: "f_col", Unit: "1", Estimate: 1 - side, U: Rectangular.U(side), Evaluation: TypeB, Distribution: Rectangular},
 	}

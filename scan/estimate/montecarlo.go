@@ -63,9 +63,17 @@ func (m MonteCarlo) Against(linear Interval, u float64) MonteCarlo {
 	m.LowOff = math.Abs(linear.Low - m.Symmetric.Low)
 	m.HighOff = math.Abs(linear.High - m.Symmetric.High)
 	m.LinearOK = m.LowOff <= m.Tolerance && m.HighOff <= m.Tolerance
-	m.Sentence = fmt.Sprintf("The linear interval's ends differ from the simulated ones by %.2g and %.2g, within the tolerance %.1g: the linear result may be used.", m.LowOff, m.HighOff, m.Tolerance)
-	if !m.LinearOK {
-		m.Sentence = fmt.Sprintf("The linear interval's ends differ from the simulated ones by %.2g and %.2g, the tolerance is %.1g: use the simulated interval.", m.LowOff, m.HighOff, m.Tolerance)
+	off := fmt.Sprintf("The linear interval's ends differ from the simulated ones by %.2g and %.2g; the tolerance is %.1g", m.LowOff, m.HighOff, m.Tolerance)
+	// An end of the simulated interval is itself uncertain by about 2.7 u/sqrt(M): the root of
+	// p(1-p)/M over a normal density, at 2.5 %.
+	noise := 2.7 * m.U / math.Sqrt(float64(m.Trials))
+	switch {
+	case m.LinearOK:
+		m.Sentence = off + ": the linear result may be used."
+	case max(m.LowOff, m.HighOff) < m.Tolerance+3*noise:
+		m.Sentence = off + fmt.Sprintf(": too few trials to tell whether the linear result may be used; want about %.0e.", math.Pow(5*2.7*m.U/m.Tolerance, 2))
+	default:
+		m.Sentence = off + ": use the simulated interval."
 	}
 	return m
 }
@@ -91,6 +99,11 @@ func (in Input) Draw(r *rand.Rand) float64 {
 		return in.Estimate + in.U*math.Sqrt(6)*(r.Float64()-r.Float64())
 	case Arcsine:
 		return in.Estimate + in.U*math.Sqrt2*math.Sin(math.Pi*2*r.Float64())
+	case TwoPoint:
+		if r.Uint64()&1 == 0 {
+			return in.Estimate - in.U
+		}
+		return in.Estimate + in.U
 	case Student:
 		if in.Freedom > 0 {
 			chi := 0.0
