@@ -22,7 +22,7 @@ func TestTheTableAgreesWithTheIntegralsEverywhere(t *testing.T) {
 			var top, worst collected
 			type pairOf struct{ got, want collected }
 			var all []pairOf
-			for range 25 {
+			for range 12 {
 				p := c.p
 				p.SignalDeg += 0.2 * rng.NormFloat64()
 				p.IdlerDeg += 0.2 * rng.NormFloat64()
