@@ -22,9 +22,6 @@ func (p Place) Finding(found, want string) protocol.Finding {
 // Key is the path of the key, such as "sweep[1].step".
 func (p Place) Key() string { return p.key }
 
-// Line counts from 1; 0 for the zero Place.
-func (p Place) Line() int { return p.line }
-
 func (p Place) child(name string) Place {
 	if p.key != "" {
 		name = p.key + "." + name
