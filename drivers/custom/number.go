@@ -13,31 +13,32 @@ import (
 // decimal reads a decimal number of an answer exactly: a sign, digits, at most one point. An
 // exponent is allowed, as a declared instrument may be anything, but a small one only.
 func decimal(text string) (*big.Rat, error) {
-	bad := fmt.Errorf("%.40q; want a decimal number", text)
 	if len(text) > 40 {
-		return nil, bad
+		return nil, errNumber(text)
 	}
 	unsigned := strings.TrimPrefix(strings.TrimPrefix(text, "+"), "-")
 	if len(text)-len(unsigned) > 1 {
-		return nil, bad
+		return nil, errNumber(text)
 	}
 	mantissa, exponent, hasExponent := strings.Cut(strings.ToLower(unsigned), "e")
 	whole, part, _ := strings.Cut(mantissa, ".")
 	if whole+part == "" || strings.Trim(whole+part, "0123456789") != "" {
-		return nil, bad
+		return nil, errNumber(text)
 	}
 	if hasExponent {
 		digits := strings.TrimLeft(exponent, "+-")
 		if len(exponent)-len(digits) > 1 || digits == "" || len(digits) > 2 || strings.Trim(digits, "0123456789") != "" {
-			return nil, bad
+			return nil, errNumber(text)
 		}
 	}
 	r, ok := new(big.Rat).SetString(text)
 	if !ok {
-		return nil, bad
+		return nil, errNumber(text)
 	}
 	return r, nil
 }
+
+func errNumber(text string) error { return fmt.Errorf("%.40q; want a decimal number", text) }
 
 func float(text string) (float64, error) {
 	r, err := decimal(text)

@@ -3,6 +3,7 @@ package custom
 import (
 	"fmt"
 	"regexp"
+	"slices"
 	"strconv"
 	"strings"
 )
@@ -163,12 +164,7 @@ func hasGroup(re *regexp.Regexp, name string) bool {
 }
 
 func contains(names []string, name string) bool {
-	for _, n := range names {
-		if n == name {
-			return true
-		}
-	}
-	return false
+	return slices.Contains(names, name)
 }
 
 func list(names []string) string {

@@ -13,6 +13,7 @@ package drivertest
 import (
 	"context"
 	"errors"
+	"slices"
 	"testing"
 	"time"
 
@@ -117,10 +118,8 @@ func proper(t *testing.T, op string, err error, remedies ...drivers.Remedy) *dri
 	if e.Restarted && e.Remedy != drivers.Reconnect {
 		t.Errorf("%s: %v: restarted, remedy %v; want reconnect", op, err, e.Remedy)
 	}
-	for _, r := range remedies {
-		if e.Remedy == r {
-			return e
-		}
+	if slices.Contains(remedies, e.Remedy) {
+		return e
 	}
 	t.Fatalf("%s: %v: remedy %v; want %v", op, err, e.Remedy, remedies)
 	return nil

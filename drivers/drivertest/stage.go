@@ -2,6 +2,7 @@ package drivertest
 
 import (
 	"context"
+	"maps"
 	"testing"
 	"time"
 
@@ -67,9 +68,7 @@ func Stage(t *testing.T, run Run, setup func(t *testing.T) StageSetup) {
 		axis := s.Stage.Axes()[0]
 		s.move(t, map[drivers.AxisName]unit.Angle{axis: s.Places[1][axis]})
 		want := map[drivers.AxisName]unit.Angle{}
-		for a, angle := range s.Places[0] {
-			want[a] = angle
-		}
+		maps.Copy(want, s.Places[0])
 		want[axis] = s.Places[1][axis]
 		s.standsAt(t, want)
 	})

@@ -106,7 +106,7 @@ func (c *controller) answer(text string) string {
 		return "REFUSED no such words"
 	}
 	to := c.to
-	for _, w := range strings.Fields(m[1]) {
+	for w := range strings.FieldsSeq(m[1]) {
 		to[strings.Index("AB", w[:1])], _ = strconv.ParseFloat(w[1:], 64)
 	}
 	if math.Abs(to[0]) > 90 || math.Abs(to[1]) > 90 {

@@ -31,7 +31,7 @@ func (s *simple) answer(message string) string {
 	defer s.mu.Unlock()
 	var answers []string
 	say := func(format string, args ...any) { answers = append(answers, fmt.Sprintf(format, args...)) }
-	for _, unit := range strings.Split(message, ";") {
+	for unit := range strings.SplitSeq(message, ";") {
 		header, value, _ := strings.Cut(unit, " ")
 		switch header {
 		case "*IDN?":

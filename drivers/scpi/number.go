@@ -23,7 +23,6 @@ var (
 // number reads one NR1, NR2 or NR3 of an answer: an optional sign, digits with at most one point,
 // an optional exponent. Nothing else is a number: no spaces, hex, names or empty text.
 func number(text string) (float64, error) {
-	bad := fmt.Errorf("%.40q; want a decimal number", text)
 	if len(text) > 64 {
 		return 0, fmt.Errorf("a number of %d characters; want at most 64", len(text))
 	}
@@ -31,12 +30,12 @@ func number(text string) (float64, error) {
 	if hasExponent {
 		digits := unsigned(exponent)
 		if digits == "" || strings.Trim(digits, "0123456789") != "" || len(digits) > 5 {
-			return 0, bad
+			return 0, errNumber(text)
 		}
 	}
 	whole, part, _ := strings.Cut(unsigned(mantissa), ".")
 	if whole+part == "" || strings.Trim(whole+part, "0123456789") != "" {
-		return 0, bad
+		return 0, errNumber(text)
 	}
 	f, err := strconv.ParseFloat(text, 64)
 	switch {
@@ -49,6 +48,8 @@ func number(text string) (float64, error) {
 	}
 	return f, nil
 }
+
+func errNumber(text string) error { return fmt.Errorf("%.40q; want a decimal number", text) }
 
 func unsigned(s string) string {
 	if s != "" && (s[0] == '+' || s[0] == '-') {

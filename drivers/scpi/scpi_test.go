@@ -276,7 +276,7 @@ func (c *counting) message(message string) (string, bool) {
 	var answers []string
 	say := func(format string, args ...any) { answers = append(answers, fmt.Sprintf(format, args...)) }
 	over := !time.Now().Before(c.until)
-	for _, unit := range strings.Split(message, ";") {
+	for unit := range strings.SplitSeq(message, ";") {
 		header, value, _ := strings.Cut(unit, " ")
 		switch header {
 		case "*IDN?":
