@@ -149,6 +149,9 @@ func (e *Engine) Run(ctx context.Context) (state protocol.State, err error) {
 	case ctx.Err() != nil:
 		return e.shutdown(ctx)
 	default:
+		if bad := e.rest(ctx); bad != "" {
+			err = fmt.Errorf("%w%s", err, withBad(bad))
+		}
 		return e.progress.State, err
 	}
 }

@@ -406,6 +406,22 @@ func TestAPanicEndsInTheRestState(t *testing.T) {
 	})
 }
 
+func TestALogbookThatHoldsSomethingElseEndsInTheRestState(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		n := newNight(t, nil)
+		n.fail = func(what string) error {
+			if strings.HasPrefix(what, "gate 1s pump=true") && len(n.entries) == 3 {
+				n.entries = append(n.entries, protocol.Entry{}) // somebody else wrote
+			}
+			return nil
+		}
+		if _, err := n.eng.Run(t.Context()); !errors.Is(err, ErrConflict) {
+			t.Errorf("Run() = %v; want ErrConflict", err)
+		}
+		n.atRest(t)
+	})
+}
+
 func TestTheFirstActIsTheRestState(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
 		n := newNight(t, nil)
