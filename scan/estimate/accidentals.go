@@ -22,19 +22,21 @@ func Accidentals(a, b, fullWindowS, gateS float64) float64 {
 }
 
 // chanceShadow returns by what factor the excess C - A falls short of the true coincidences,
-// because A from the flat singles rate counts chances that could not come. m are recorded rates
-// (1/s). To first order in m W, derived here, held by TestCalibrationsCoverTheTruth at high rates:
+// because A from the flat singles rate counts chances that could not come. Rates are recorded ones
+// (1/s), pairHz that of the excess. To first order in rate times window, derived here, held by
+// TestChancesInTheShadowOfDeadTimesAgreeWithEvents:
 //
-//   - while T is dead after a herald's partner-to-be no D count before it belongs to another
-//     recorded coincidence, and a recorded partner deafens D for the rest of the window:
-//     1 - mT min(W/2, tauT) - mD min(W/2, tauD);
-//   - one_per_herald swallows a chance beside a partner where D was live for both:
-//   - mD (W - 2 min(W/2, tauD)), which is the usual 1 - A/S without dead time.
-func chanceShadow(logic Logic, mT, mD, windowS, tauT, tauD float64) float64 {
+//   - before a herald, while T must have been live, no D count belongs to a recorded pair, and after
+//     a recorded partner D is deaf: 1 - mT min(W/2, tauT) - mD min(W/2, tauD);
+//   - one_per_herald swallows a chance beside a partner where D was live for both, on either side:
+//   - mD (W - 2 min(W/2, tauD)), which without dead time is the usual 1 - A/S; before the herald
+//     such chances are fewer by the pairs while T must have been live.
+func chanceShadow(logic Logic, mT, mD, pairHz, windowS, tauT, tauD float64) float64 {
 	half := windowS / 2
-	k := 1 - mT*math.Min(half, tauT) - mD*math.Min(half, tauD)
+	deafT, deafD := math.Min(half, tauT), math.Min(half, tauD)
+	k := 1 - mT*deafT - mD*deafD
 	if logic == OnePerHerald {
-		k -= mD * (windowS - 2*math.Min(half, tauD))
+		k -= mD*(windowS-2*deafD) - pairHz*math.Max(0, deafT-deafD)
 	}
 	return k
 }

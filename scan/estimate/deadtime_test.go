@@ -225,3 +225,37 @@ func TestCoupledDeadTimesJoinTheirLimits(t *testing.T) {
 	l = p.live()
 	near(t, "all are pairs and the dead times equal: D is live whenever T is", l, 1, 1e-6)
 }
+
+// What C - A misses of the true pairs, for windows longer and shorter than the dead times.
+func TestChancesInTheShadowOfDeadTimesAgreeWithEvents(t *testing.T) {
+	for i, c := range []struct {
+		name          string
+		window        float64
+		tauT, tauD    float64
+		pairsHz       float64
+		withoutIsFine bool // K is near 1 for this logic: nothing to see
+	}{
+		{"dead times beyond the window", 4e-9, 45e-9, 50e-9, 1.5e6, false},
+		{"no dead times", 10e-9, 0, 0, 1e6, true},
+		{"dead times well inside the window", 20e-9, 2e-9, 3e-9, 6e5, false},
+		{"trigger slow, tested detector fast", 20e-9, 40e-9, 2e-9, 6e5, false},
+		{"trigger fast, tested detector slow", 20e-9, 2e-9, 40e-9, 6e5, false},
+	} {
+		w := world{etaT: 0.4, etaD: 0.6, pathD: 1, noiseT: 1e5, noiseD: 1e5, modelT: NonParalysable, modelD: NonParalysable, tauT: c.tauT, tauD: c.tauD,
+			windowS: c.window, pairsHz: c.pairsHz, jitterS: 0.1e-9, randomStream: rand.New(rand.NewPCG(91, uint64(i)))}
+		const gateS = 1.
+		g := w.count(gateS)
+		a := Accidentals(float64(g.s), float64(g.d), c.window, gateS)
+		for logic, counts := range map[Logic]int{EveryPair: g.pairs, OnePerHerald: g.heralds} {
+			k := chanceShadow(logic, float64(g.s)/gateS, float64(g.d)/gateS, float64(counts)-a, c.window, c.tauT, c.tauD)
+			got := (float64(counts) - a) / k
+			u := math.Sqrt(a)
+			load := float64(g.s+g.d) / gateS * c.window
+			t.Logf("%s, %s: (C - A)/K %.0f, true %d, K %.5f, u %.0f, second order %.0f", c.name, logic, got, g.truePairs, k, u, load*load/2*float64(g.truePairs))
+			near(t, c.name+", "+string(logic), got, float64(g.truePairs), 3.5*u+load*load/2*float64(g.truePairs))
+			if miss := math.Abs(float64(counts) - a - float64(g.truePairs)); !c.withoutIsFine && miss < 5*u {
+				t.Errorf("%s, %s: C - A alone misses only %.0f ± %.0f: this case shows nothing", c.name, logic, miss, u)
+			}
+		}
+	}
+}

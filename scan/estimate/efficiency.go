@@ -377,8 +377,8 @@ func (c *calculation) load(no *Refusal, r *Result) {
 	}
 	tauT, tauD := c.trigger.DeadTime.Value, c.test.DeadTime.Value
 	c.loadD = mD * tauD
-	k := chanceShadow(c.logic, mT, mD, c.bench.Counter.Window.Value, tauT, tauD)
-	pairHz := math.Max(0, (c.c-c.chances*c.bench.Counter.Window.Value)/c.gateS/k)
+	pairHz := math.Max(0, (c.c-c.chances*c.bench.Counter.Window.Value)/c.gateS)
+	pairHz /= chanceShadow(c.logic, mT, mD, pairHz, c.bench.Counter.Window.Value, tauT, tauD)
 	if c.on(CaptureStep) {
 		pairHz /= c.bench.Counter.Capture.Value
 	}
@@ -555,7 +555,7 @@ func (c *calculation) upTo(x []float64, n int) float64 {
 		}
 		k := 1.0
 		if on(ShadowStep) {
-			k = chanceShadow(c.logic, mT, mD, x[inWindow], tauT, tauD) * x[inShadow] * x[inEcho]
+			k = chanceShadow(c.logic, mT, mD, (d.c*fC-a)/d.gateS, x[inWindow], tauT, tauD) * x[inShadow] * x[inEcho]
 		}
 		if on(AfterpulseStep) {
 			h *= 1 - x[inAfter]
@@ -750,7 +750,7 @@ func (c *calculation) waterfall(r *Result, x []float64) {
 				}
 			}
 		case ShadowStep:
-			k.Amount = chanceShadow(c.logic, mT, mD, w, x[inTauT], x[inTauD])
+			k.Amount = chanceShadow(c.logic, mT, mD, (c.c-c.accidentals())/c.gateS, w, x[inTauT], x[inTauD])
 			k.Note = "what dead times and the counter's logic (" + string(c.logic) + ") take from C - A"
 		case AfterpulseStep:
 			k.Amount = 1 - x[inAfter]
