@@ -1,6 +1,7 @@
 package source
 
 import (
+	"fmt"
 	"math"
 	"math/rand/v2"
 	"testing"
@@ -68,3 +69,19 @@ func BenchmarkNight(b *testing.B) {
 }
 
 var sinkCounts Counts
+
+// BenchmarkDraw is the counts of one gate, at rates from quiet to saturated.
+func BenchmarkDraw(b *testing.B) {
+	for _, r := range []Rates{{1e4, 1e4, 2e3}, {5e5, 5e5, 1e5}, {1e7, 1e7, 2e6}} {
+		b.Run(fmt.Sprintf("%.0e Hz", r.SignalHz), func(b *testing.B) {
+			m, err := New(bench(b))
+			if err != nil {
+				b.Fatal(err)
+			}
+			rng := rand.New(rand.NewPCG(1, 1))
+			for b.Loop() {
+				sinkCounts = m.Draw(rng, []Segment{{For: time.Second, Rates: r}})
+			}
+		})
+	}
+}

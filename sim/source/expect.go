@@ -154,18 +154,24 @@ func bothAlive(ds, di *Detector, s, i response, c float64) float64 {
 	case ts == ti:
 		return equalDead(s, i, a, b, ts)
 	}
-	// Unequal dead times: second order in rate times dead time, where that is small.
+	if max(s.driving*ts, i.driving*ti) < 0.06 {
+		return secondOrder(s, i, c, ts, ti)
+	}
+	return unequalDead(s, i, c, ts, ti)
+}
+
+// secondOrder is the chance for a longer dead time ts of the signal to second order in rate times
+// dead time: what both lose together is counted once.
+func secondOrder(s, i response, c, ts, ti float64) float64 {
+	a, b := s.driving-c, i.driving-c
 	overlap := func(t float64) float64 { // integral of min(x, ti) from 0 to t
 		if t <= ti {
 			return t * t / 2
 		}
 		return ti*ti/2 + (t-ti)*ti
 	}
-	if max(s.driving*ts, i.driving*ti) < 0.03 {
-		k := c*ti + s.driving*b*ti*ti/2 + i.driving*a*overlap(ts) + i.driving*c*overlap(ts-ti)
-		return (1 - s.rate*ts - i.rate*ti) / (1 - k)
-	}
-	return unequalDead(s, i, c, ts, ti)
+	k := c*ti + s.driving*b*ti*ti/2 + i.driving*a*overlap(ts) + i.driving*c*overlap(ts-ti)
+	return (1 - s.rate*ts - i.rate*ti) / (1 - k)
 }
 
 // equalDead solves the coupled process for equal non-paralysable dead times. With f(x) the density
@@ -185,21 +191,29 @@ func equalDead(s, i response, a, b, tau float64) float64 {
 
 // unequalDead solves it for a longer dead time ts of the signal by iteration on a grid.
 func unequalDead(s, i response, c, ts, ti float64) float64 {
-	const cells = 256
-	h := ts / cells
+	// Both dead times as nearly whole cells as can be.
+	const most = 192
+	cells, miss := most, math.Inf(1)
+	for n := most / 2; n <= most; n++ {
+		k := ti / ts * float64(n)
+		if m := math.Abs(k - math.Round(k)); math.Round(k) >= 1 && m < miss-1e-9 {
+			cells, miss = n, m
+		}
+	}
+	h := ts / float64(cells)
 	n2 := max(1, int(math.Round(ti/h)))
 	a, b := s.driving-c, i.driving-c
-	// f[k], g[k]: densities with k cells left; of the signal dead, the idler dead. p is scaled to 1.
-	var f, g [cells + 1]float64
+	// f[k], g[k]: densities with k cells left; of the signal dead, the idler dead. The chance that
+	// both are alive is scaled to 1.
+	var f, g [most + 1]float64
 	for k := range f {
 		f[k] = a
 	}
 	for k := range n2 + 1 {
 		g[k] = b
 	}
-	fade := func(n float64) (keep, half float64) { return math.Exp(-n * h), math.Exp(-n * h / 2) }
-	keepF, halfF := fade(i.driving)
-	keepG, halfG := fade(s.driving)
+	keepF, halfF := math.Exp(-i.driving*h), math.Exp(-i.driving*h/2)
+	keepG, halfG := math.Exp(-s.driving*h), math.Exp(-s.driving*h/2)
 	last := 0.0
 	for range 400 {
 		// The signal's dead time runs down while the idler, alive, may fire and later recover.
@@ -209,16 +223,25 @@ func unequalDead(s, i response, c, ts, ti float64) float64 {
 			}
 			return i.driving * f[min(cells, k+n2)]
 		}
-		f[cells] = a
+		now := a
+		f[cells] = now
 		for k := cells - 1; k >= 0; k-- {
-			f[k] = f[k+1]*keepF + h*halfF*(source(k)+source(k+1))/2
-			if k == cells-n2 {
-				f[k] += c // both fired together; the idler is back first
+			to := source(k)
+			if k == cells-n2 { // there the source jumps; this is its value on the way down
+				to = s.driving * g[n2]
+			}
+			now = now*keepF + h*halfF*(source(k+1)+to)/2
+			f[k] = now
+			if k == cells-n2 && k > 0 {
+				now += c // both fired together; the idler is back first
+				f[k] += c / 2
 			}
 		}
-		g[n2] = b
+		now = b
+		g[n2] = now
 		for k := n2 - 1; k >= 0; k-- {
-			g[k] = g[k+1]*keepG + h*halfG*i.driving*(f[n2-k]+f[n2-k-1])/2
+			now = now*keepG + h*halfG*i.driving*(f[n2-k]+f[n2-k-1])/2
+			g[k] = now
 		}
 		sum := 0.0
 		for k := range n2 {

@@ -356,6 +356,56 @@ func TestAfterpulsesAddTheirShare(t *testing.T) {
 	}
 }
 
+// TestCoupledDeadTimesAgreeByTwoRoutes: the grid solver with equal dead times against the closed
+// form, and the second order against the grid solver where both are used.
+func TestCoupledDeadTimesAgreeByTwoRoutes(t *testing.T) {
+	for _, n := range [][3]float64{{1e5, 2e5, 5e4}, {1e6, 1.2e6, 4e5}, {1e7, 2e7, 5e6}, {3e7, 3e7, 2e7}} {
+		d := Detector{DeadTimeS: 45e-9, Model: NonParalysable}
+		s, i := d.respond(n[0]), d.respond(n[1])
+		closed, grid := equalDead(s, i, n[0]-n[2], n[1]-n[2], 45e-9), unequalDead(s, i, n[2], 45e-9, 45e-9)
+		if math.Abs(grid/closed-1) > 1e-4 {
+			t.Errorf("%v Hz: both alive %.8f in closed form, %.8f on the grid", n, closed, grid)
+		}
+	}
+	for _, n := range [][3]float64{{1e5, 2e5, 5e4}, {5e5, 1e6, 3e5}, {1e6, 1e6, 2e5}} {
+		long, short := Detector{DeadTimeS: 58e-9, Model: NonParalysable}, Detector{DeadTimeS: 20e-9, Model: NonParalysable}
+		s, i := long.respond(n[0]), short.respond(n[1])
+		second, grid := secondOrder(s, i, n[2], 58e-9, 20e-9), unequalDead(s, i, n[2], 58e-9, 20e-9)
+		if math.Abs(grid/second-1) > 1e-4 {
+			t.Errorf("%v Hz: both alive %.8f to second order, %.8f on the grid", n, second, grid)
+		}
+	}
+}
+
+// TestADeadPartnerLeavesFewerAccidentals: beside a pair that both detectors recorded there is no
+// accidental partner while the dead times exceed the window, so that a counter shows fewer of them
+// than the product of its singles; a displaced window shows the product.
+func TestADeadPartnerLeavesFewerAccidentals(t *testing.T) {
+	d := Detector{DeadTimeS: 45e-9, Model: NonParalysable}
+	r := Rates{1e6, 1e6, 4e5}
+	count := func(k Counter) (sum Counts, m *Model) {
+		k.Logic = EveryPair
+		m = (station{signal: d, idler: d, counter: k}).model()
+		rng := rand.New(rand.NewPCG(21, 1))
+		for range 20 {
+			sum.add(m.DrawEvents(rng, []Segment{{For: 100 * time.Millisecond, Rates: r}}))
+		}
+		return sum, m
+	}
+	// The same events with a window that no accidental fits in: the seed is the same.
+	wide, m := count(Counter{WindowS: 10e-9})
+	narrow, _ := count(Counter{WindowS: 1e-13})
+	displaced, _ := count(Counter{WindowS: 10e-9, DelayS: 500e-9})
+	product := float64(wide.Signal) * float64(wide.Idler) * 10e-9 / 2
+	accidental := float64(wide.Coincidences - narrow.Coincidences)
+	if want := m.Expected(r).AccidentalHz * 2; math.Abs(accidental-want) > 5.5*math.Sqrt(want) || accidental > 0.7*product {
+		t.Errorf("%.0f accidentals beside pairs; want %.0f, well below the product %.0f", accidental, want, product)
+	}
+	if got := float64(displaced.Coincidences); math.Abs(got-product) > 5.5*math.Sqrt(product) {
+		t.Errorf("%.0f in a displaced window; want the product %.0f", got, product)
+	}
+}
+
 func TestALatchedDetectorCountsNothing(t *testing.T) {
 	s := station{signal: Detector{LatchHz: 1e6}, counter: Counter{WindowS: 1e-8, Logic: EveryPair}}
 	for _, mode := range modes {

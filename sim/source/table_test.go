@@ -3,6 +3,7 @@ package source
 import (
 	"math"
 	"math/rand/v2"
+	"sync"
 	"testing"
 )
 
@@ -75,4 +76,25 @@ func TestRatesDoNotDependOnWhatWasAskedBefore(t *testing.T) {
 	if got := other.Rates(p); got != want {
 		t.Errorf("rates %+v after other poses, %+v before; want the same to the bit", got, want)
 	}
+}
+
+func TestSeveralInstrumentsMayAskAtOnce(t *testing.T) {
+	m := model(t, bench(t))
+	want := model(t, bench(t)).Rates(atPeak())
+	var all sync.WaitGroup
+	for g := range 4 {
+		all.Add(1)
+		go func() {
+			defer all.Done()
+			for i := range 20 {
+				p := atPeak()
+				p.IdlerDeg += 0.001 * float64(g*i)
+				m.Rates(p)
+				if got := m.Rates(atPeak()); got != want {
+					t.Errorf("rates %+v; want %+v", got, want)
+				}
+			}
+		}()
+	}
+	all.Wait()
 }
