@@ -86,14 +86,23 @@ func (ch channels) read(r protocol.Reading) (dwell, error) {
 		}
 		*want.into = v
 	}
-	slices := r.Slices
-	if len(slices) == 0 {
-		slices = []protocol.Slice{{Gate: r.Gate, Counts: r.Counts}}
+	cut := r.Slices
+	if len(cut) == 0 {
+		cut = []protocol.Slice{{Gate: r.Gate, Counts: r.Counts}}
 	}
-	for _, sl := range slices {
-		s, _ := countOf(sl.Counts, ch.s)
-		t, _ := countOf(sl.Counts, ch.d)
-		d.chances += Accidentals(s, t, 1, sl.Gate.Duration().Seconds())
+	var s, t float64
+	for i, sl := range cut {
+		a, okA := countOf(sl.Counts, ch.s)
+		b, okB := countOf(sl.Counts, ch.d)
+		gate := sl.Gate.Duration().Seconds()
+		if !okA || !okB || gate <= 0 {
+			return d, fmt.Errorf("reading %d, slice %d: gate of %g s, channels %q and %q there: %v, %v; want a gate and both", r.Sequence, i+1, gate, ch.s, ch.d, okA, okB)
+		}
+		s, t = s+a, t+b
+		d.chances += Accidentals(a, b, 1, gate)
+	}
+	if s != d.s || t != d.d {
+		return d, fmt.Errorf("reading %d: the slices add up to %.0f and %.0f, the reading says %.0f and %.0f", r.Sequence, s, t, d.s, d.d)
 	}
 	return d, nil
 }

@@ -1,6 +1,7 @@
 package estimate
 
 import (
+	"errors"
 	"fmt"
 	"math"
 )
@@ -15,7 +16,7 @@ const (
 )
 
 // ErrNoRate marks an observed rate that no true rate can produce.
-var ErrNoRate = fmt.Errorf("no true rate gives this observed rate")
+var ErrNoRate = errors.New("no true rate gives this observed rate")
 
 // Observed returns the rate (1/s) that a detector of this model and dead time (s) records at a
 // true rate (1/s): n/(1+n tau), or n exp(-n tau) (Knoll, Radiation Detection and Measurement).

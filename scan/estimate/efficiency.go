@@ -67,7 +67,6 @@ type calculation struct {
 	loadD     float64 // m_D tau_D at the estimates
 	inputs    []Input
 	crosses   []Cross
-	pathFrom  int // place of the first path input
 	collected float64
 }
 
@@ -87,7 +86,7 @@ const (
 	inEcho
 	inCapture
 	inCollection
-	inPath
+	inPath // the first of the path's
 )
 
 // Efficiency is the detection efficiency of the arm under test by photon pairs (Klyshko 1980) with
@@ -443,7 +442,6 @@ func (c *calculation) list() {
 		inCapture:    constant("window capture", "eta_W", "1", ct.Capture),
 		inCollection: {Quantity: "collection, one-sided: between the model's share and 1", Symbol: "f_col", Unit: "1", Estimate: 1 - side, U: Rectangular.U(side), Evaluation: TypeB, Distribution: Rectangular},
 	}
-	c.pathFrom = len(c.inputs)
 	for i, t := range c.test.Path {
 		c.inputs = append(c.inputs, constant("path: "+t.Name, fmt.Sprintf("T_%d", i+1), "1", t.Constant))
 	}
@@ -502,7 +500,7 @@ func (c *calculation) silence() {
 	}
 	if !c.on(PathStep) {
 		for i := range c.test.Path {
-			mute(c.pathFrom + i)
+			mute(inPath + i)
 		}
 	}
 }
@@ -523,7 +521,11 @@ func (c *calculation) value(x []float64) float64 { return c.upTo(x, len(steps)) 
 
 // upTo applies the first n steps only: the waterfall.
 func (c *calculation) upTo(x []float64, n int) float64 {
-	on := func(s Step) bool { return slices.Index(steps, s) < n && c.on(s) }
+	on := map[Step]bool{}
+	for _, s := range steps[:n] {
+		on[s] = c.on(s)
+	}
+	background, accidental, shadow, after, dead := on[BackgroundStep], on[AccidentalStep], on[ShadowStep], on[AfterpulseStep], on[DeadTimeStep]
 	fS, fD, fC := x[inS]/c.s, x[inD]/max(c.d, 1), x[inC]/c.c
 	fB, fA := 1.0, 1.0
 	if c.background > 0 {
@@ -539,7 +541,7 @@ func (c *calculation) upTo(x []float64, n int) float64 {
 		s, t := d.s*fS, d.d*fD
 		mT, mD := s/d.gateS, t/d.gateS
 		h := s
-		if on(BackgroundStep) {
+		if background {
 			live := c.liveShare(mT, tauT)
 			for _, sh := range d.background {
 				b := c.backgrounds[sh.background]
@@ -547,21 +549,21 @@ func (c *calculation) upTo(x []float64, n int) float64 {
 			}
 		}
 		a := 0.0
-		if on(AccidentalStep) {
+		if accidental {
 			a = d.chances * fS * fD * x[inWindow]
 			if c.useDisplaced {
 				a = d.displaced / c.windows * fA
 			}
 		}
 		k := 1.0
-		if on(ShadowStep) {
+		if shadow {
 			k = chanceShadow(c.logic, mT, mD, (d.c*fC-a)/d.gateS, x[inWindow], tauT, tauD) * x[inShadow] * x[inEcho]
 		}
-		if on(AfterpulseStep) {
+		if after {
 			h *= 1 - x[inAfter]
 		}
 		loss := 1.0
-		if on(DeadTimeStep) {
+		if dead {
 			pairHz := (d.c*fC - a) / d.gateS / k
 			if c.on(CaptureStep) {
 				pairHz /= x[inCapture]
@@ -577,15 +579,15 @@ func (c *calculation) upTo(x []float64, n int) float64 {
 		heralds += h * k * loss
 	}
 	y := net / heralds
-	if on(CaptureStep) {
+	if on[CaptureStep] {
 		y /= x[inCapture]
 	}
-	if on(PathStep) {
+	if on[PathStep] {
 		for i := range c.test.Path {
-			y /= x[c.pathFrom+i]
+			y /= x[inPath+i]
 		}
 	}
-	if on(CollectionStep) {
+	if on[CollectionStep] {
 		y /= x[inCollection]
 	}
 	return y
@@ -769,7 +771,7 @@ func (c *calculation) waterfall(r *Result, x []float64) {
 			k.Amount = 1
 			var parts []string
 			for j, t := range c.test.Path {
-				k.Amount *= x[c.pathFrom+j]
+				k.Amount *= x[inPath+j]
 				part := fmt.Sprintf("%s %.6g ± %.2g", t.Name, t.Value, t.U)
 				if from := strings.TrimSpace(t.From + " " + t.Date); from != "" {
 					part += " (" + from + ")"

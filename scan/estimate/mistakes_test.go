@@ -358,6 +358,11 @@ func TestEfficiencyRefusesWithEveryReason(t *testing.T) {
 			n.bench.Arms[1].Model = Paralysable
 		}, "no true rate"},
 		{"a window as long as the counts are apart", func(n *exactNight, q *Question, m *Model) { n.bench.Counter.Window = Constant{1e-6, 1e-9, "own"} }, "a shorter window"},
+		{"slices that do not add up", func(n *exactNight, q *Question, m *Model) {
+			n.rows.Readings[3].Slices[0].Counts = slices.Clone(n.rows.Readings[3].Slices[0].Counts)
+			n.rows.Readings[3].Slices[0].Counts[0].Counts--
+		}, "the slices add up to"},
+		{"a slice without a gate", func(n *exactNight, q *Question, m *Model) { n.rows.Readings[3].Slices[0].Gate = 0 }, "slice 1: gate of 0 s"},
 		{"an arm that is none", func(n *exactNight, q *Question, m *Model) { q.UnderTest = "ider" }, `"ider"`},
 		{"afterpulses that may fall into the window, and none declared", func(n *exactNight, q *Question, m *Model) { n.bench.Arms[1].Afterpulse = Constant{} }, "idler: the afterpulse share is not declared"},
 		{"displaced windows where there are none", func(n *exactNight, q *Question, m *Model) { q.Displaced, n.bench.Counter.Displaced = true, nil }, "declares none"},
