@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"hash/fnv"
+	"path/filepath"
 	"slices"
 
 	"github.com/rs/zerolog"
@@ -79,11 +80,7 @@ func opener(f *File, l Line, o Options) (func(context.Context) (line.Port, error
 	case o.Virtual != nil:
 		return o.Virtual.opener(l)
 	case f.Simulated():
-		address, err := linked(o.Links, l.Name)
-		if err != nil {
-			return nil, err
-		}
-		return line.Address(address, line.Mode{})
+		return linked(filepath.Join(o.Links, l.Name)), nil
 	}
 	return line.Address(l.Device, line.Mode{Baud: l.Baud, DataBits: l.DataBits, Parity: l.Parity, StopBits: l.StopBits})
 }

@@ -258,18 +258,22 @@ func TestInstrumentsAreAnsweredThroughAnyFileHandle(t *testing.T) {
 	for _, a := range v.Actors() {
 		g.Go(a.Name, a.Run)
 	}
+	var addresses []Address
 	defer func() {
 		cancel()
 		if err := g.Wait(); err != nil {
 			t.Error(err)
 		}
-		for _, a := range v.Addresses() {
+		for _, a := range addresses {
 			if _, err := os.Lstat(a.Path); !errors.Is(err, os.ErrNotExist) {
 				t.Errorf("the link of %s is left behind", a.Line)
 			}
 		}
 	}()
-	for _, a := range v.Addresses() {
+	if addresses, err = v.Addresses(t.Context()); err != nil {
+		t.Fatal(err)
+	}
+	for _, a := range addresses {
 		want := map[string]string{"counter": "Skerry Workshop,counter,3,2.0\n", "pump_shutter": "Skerry Workshop,shutter,8,1.1\n"}[a.Line]
 		if want == "" {
 			continue

@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"os"
 	"path/filepath"
 	"slices"
 	"strconv"
@@ -45,12 +46,13 @@ type set struct {
 	line       string
 	instrument instruments.Instrument
 	calls      chan instruments.Conn // in memory
-	terminal   *terminal             // otherwise
+	link       string                // otherwise: where a host finds it
+	ready      chan string           // its address, once it can be opened
 }
 
 // NewVirtual puts the instruments of a simulated bench into a world that begins now. Which one
-// stands behind a line follows from the devices that use it. With a folder it also opens the
-// terminals, so that their addresses are good at once; the actors close them, or Close.
+// stands behind a line follows from the devices that use it. Nothing can be reached before the actors
+// run.
 func NewVirtual(f *File, o VirtualOptions) (*Virtual, error) {
 	if !f.Simulated() {
 		return nil, fmt.Errorf("bench: %s is a real bench; want one whose lines are simulated", f.Name)
@@ -79,41 +81,36 @@ func NewVirtual(f *File, o VirtualOptions) (*Virtual, error) {
 		if err != nil {
 			return nil, fmt.Errorf("line %s: %w", l.Name, err)
 		}
-		v.sets = append(v.sets, &set{line: l.Name, instrument: i, calls: make(chan instruments.Conn)})
+		one := &set{line: l.Name, instrument: i, calls: make(chan instruments.Conn), ready: make(chan string, 1)}
+		if o.Folder != "" {
+			one.link = filepath.Join(o.Folder, l.Name)
+		}
+		v.sets = append(v.sets, one)
 	}
-	if o.Folder == "" {
-		return v, nil
-	}
-	for _, s := range v.sets {
-		if s.terminal, err = openTerminal(filepath.Join(o.Folder, s.line)); err != nil {
-			return nil, errors.Join(fmt.Errorf("line %s: %w", s.line, err), v.Close())
+	if o.Folder != "" {
+		if err := os.MkdirAll(o.Folder, 0o755); err != nil {
+			return nil, err
 		}
 	}
 	return v, nil
 }
 
-// Addresses lists where the instruments are found, in the order of the file's lines.
-func (v *Virtual) Addresses() []Address {
+// Addresses waits until the instruments can be reached, and lists where, in the order of the file's
+// lines. It may be called once.
+func (v *Virtual) Addresses(ctx context.Context) ([]Address, error) {
 	var all []Address
 	for _, s := range v.sets {
 		a := Address{Line: s.line}
-		if s.terminal != nil {
-			a.Path = s.terminal.address()
+		if s.link != "" {
+			select {
+			case a.Path = <-s.ready:
+			case <-ctx.Done():
+				return nil, context.Cause(ctx)
+			}
 		}
 		all = append(all, a)
 	}
-	return all
-}
-
-// Close takes the terminals away, for a caller that never ran the actors.
-func (v *Virtual) Close() error {
-	var errs []error
-	for _, s := range v.sets {
-		if s.terminal != nil {
-			errs = append(errs, s.terminal.unplug())
-		}
-	}
-	return errors.Join(errs...)
+	return all, nil
 }
 
 // cableBuffer is what the UARTs of a line keep that nobody has read yet.
@@ -127,8 +124,8 @@ func (v *Virtual) opener(l Line) (func(context.Context) (line.Port, error), erro
 		return nil, errors.New("no virtual instrument behind it")
 	}
 	s := v.sets[i]
-	if s.terminal != nil {
-		return line.Address(s.terminal.address(), line.Mode{})
+	if s.link != "" {
+		return linked(s.link), nil
 	}
 	return func(ctx context.Context) (line.Port, error) {
 		host, dev := instruments.Cable(cableBuffer)
@@ -146,8 +143,8 @@ func (v *Virtual) Actors() []Actor {
 	var all []Actor
 	for _, s := range v.sets {
 		run := s.serve
-		if s.terminal != nil {
-			run = s.serveTerminal
+		if s.link != "" {
+			run = s.present
 		}
 		all = append(all, Actor{Name: "virtual " + s.instrument.Name(), Run: run})
 	}
@@ -186,36 +183,37 @@ func (s *set) serve(ctx context.Context) error {
 // multiple of 997 ns, so that an instrument keeps to the instants that package instruments gives it.
 const replug = 50_000 * 997 * time.Nanosecond
 
-// serveTerminal answers one host after another.
-func (s *set) serveTerminal(ctx context.Context) (err error) {
-	defer func() { err = errors.Join(err, s.terminal.unplug()) }()
-	for ctx.Err() == nil {
-		conn, err := s.terminal.accept(ctx)
-		if err != nil {
-			if ctx.Err() != nil {
-				return nil
-			}
-			return err
-		}
-		err = s.instrument.Serve(ctx, conn)
-		switch {
-		case ctx.Err() != nil:
-			return nil
-		case errors.Is(err, instruments.ErrUnplugged):
-			if err := s.terminal.unplug(); err != nil {
-				return err
-			}
-			if err := drivers.Pace(1).Wait(ctx, replug); err != nil {
-				return nil
-			}
-		case err != nil:
-			return err
-		}
-		if err := s.terminal.renew(); err != nil {
-			return err
-		}
+// present offers the instrument to whoever opens its link.
+func (s *set) present(ctx context.Context) error {
+	err := instruments.Present(ctx, s.instrument, s.link, func(address string) { s.ready <- address })
+	if ctx.Err() != nil {
+		return nil
 	}
-	return nil
+	return err
+}
+
+// linked opens what a link leads to, which is another terminal each time. Where there are no
+// pseudo-terminals the link is a file that holds a TCP address.
+func linked(link string) func(context.Context) (line.Port, error) {
+	return func(ctx context.Context) (line.Port, error) {
+		address := link
+		info, err := os.Lstat(link)
+		if err != nil {
+			return nil, err
+		}
+		if info.Mode().IsRegular() {
+			text, err := os.ReadFile(link)
+			if err != nil {
+				return nil, err
+			}
+			address = strings.TrimSpace(string(text))
+		}
+		open, err := line.Address(address, line.Mode{})
+		if err != nil {
+			return nil, fmt.Errorf("%s: %w", link, err)
+		}
+		return open(ctx)
+	}
 }
 
 // identity is what a virtual instrument says it is: what the file expects, or a name of its own.

@@ -58,12 +58,15 @@ func (c *simCommand) Run(ctx context.Context, con *console) (err error) {
 	if err != nil {
 		return err
 	}
-	for _, a := range v.Addresses() {
-		fmt.Fprintf(con.out, "%s %s\n", a.Line, a.Path)
-	}
 	g := crew.New(ctx, nil)
 	for _, a := range v.Actors() {
 		g.Go(a.Name, a.Run)
+	}
+	addresses, err := v.Addresses(g.Context())
+	if err == nil {
+		for _, a := range addresses {
+			fmt.Fprintf(con.out, "%s %s\n", a.Line, a.Path)
+		}
 	}
 	if err := g.Wait(); err != nil {
 		return err
