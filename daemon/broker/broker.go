@@ -359,9 +359,10 @@ func (b *Broker) InProcessConn() (net.Conn, error) {
 }
 
 // Connect opens a connection of the daemon itself. It may be called before Ready: the connection
-// then comes up when the broker does. What is published while it is away fails at once.
+// then comes up when the broker does, and it never gives up: an outside server's operator may
+// mend a refusal in the middle of the night. What is published while it is away fails at once.
 func (b *Broker) Connect(name string, more ...nats.Option) (*nats.Conn, error) {
-	options := append([]nats.Option{nats.Name(name), nats.RetryOnFailedConnect(true)}, more...)
+	options := append([]nats.Option{nats.Name(name), nats.RetryOnFailedConnect(true), nats.IgnoreAuthErrorAbort()}, more...)
 	if b.cfg.URL != "" {
 		return client.Options{URL: b.cfg.URL, Creds: b.cfg.Creds, CA: b.cfg.CA, Bench: b.cfg.Bench}.Dial(options...)
 	}

@@ -560,6 +560,15 @@ func TestWhereItListens(t *testing.T) {
 	}
 }
 
+func TestItStoresInTheDataFolderAndSyncsEveryWrite(t *testing.T) {
+	dir := t.TempDir()
+	b := begin(t, dir)
+	c := b.server().JetStreamConfig()
+	if !c.SyncAlways || c.StoreDir != filepath.Join(dir, "nats", "jetstream") || c.MaxStore != 4<<30 || c.MaxMemory != 64<<20 {
+		t.Errorf("JetStream runs with %+v", c)
+	}
+}
+
 func TestASecondServerOnTheSameFolderIsRefused(t *testing.T) {
 	dir := t.TempDir()
 	begin(t, dir)

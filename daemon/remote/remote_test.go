@@ -519,6 +519,50 @@ func TestJournalMessagesPushedToAnEndpointExecuteNothing(t *testing.T) {
 	}
 }
 
+func TestAWatcherFollowsTheJournalWithTheRightsItHas(t *testing.T) {
+	s := serve(t, &keeper{}, nil)
+	stream, err := courier.NewStream(s.daemon, courier.StreamConfig{Bench: bench})
+	if err != nil {
+		t.Fatal(err)
+	}
+	last, err := stream.Last(t.Context())
+	if err != nil {
+		t.Fatal(err)
+	}
+	for n := int64(1); n <= 3; n++ {
+		e := protocol.Entry{Run: "r1", Sequence: n}
+		if last, err = stream.Publish(t.Context(), courier.Message{Subject: "gemel.skerry.event.r1", ID: e.ID(), Body: []byte("{}")}, last); err != nil {
+			t.Fatal(err)
+		}
+	}
+	for _, role := range []string{protocol.WatchRole, protocol.ControlRole} {
+		c, err := client.ConnectFolder(s.dir, role)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if status, err := c.Status(t.Context()); err != nil || status.Bench != bench {
+			t.Errorf("%s: status %+v, %v", role, status, err)
+		}
+		_, err = c.Stop(t.Context(), protocol.RunRequest{Run: "r1"})
+		if forbidden := errors.Is(err, client.ErrForbidden); forbidden != (role == protocol.WatchRole) {
+			t.Errorf("%s: stop: %v", role, err)
+		}
+		var got []string
+		for e, err := range c.Follow(t.Context(), "r1", 1) {
+			if err != nil {
+				t.Fatalf("%s: %v", role, err)
+			}
+			if got = append(got, e.ID()); len(got) == 3 {
+				break
+			}
+		}
+		if fmt.Sprint(got) != "[r1.1 r1.2 r1.3]" {
+			t.Errorf("%s followed %v", role, got)
+		}
+		c.Close()
+	}
+}
+
 // published is a connection that only remembers.
 type published struct {
 	mu   sync.Mutex

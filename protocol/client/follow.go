@@ -146,7 +146,7 @@ func (f *follower) begin(ctx context.Context) error {
 		if f.from == 0 {
 			f.next = info.State.LastSeq + 1
 		}
-	case !info.Created.Equal(f.made) || info.State.LastSeq+1 < f.next:
+	case !info.Created.Equal(f.made):
 		f.next = 1
 	}
 	f.made, f.delivered = info.Created, 0
