@@ -274,6 +274,11 @@ func (q *Query) root(pair *phasematch.Pair, e phasematch.Emission) (r Root, warn
 	if m, err := s.Sensitivities(q.SignalNm, at, q.AzimuthDeg); err == nil {
 		r.Sensitivities = &Moves{m.PerDegCut, m.PerDegTilt, m.PerKelvin, m.PerNmPump}
 	}
+	// The angle opens like a square root: where a hundredth of a degree of cut moves it by more than
+	// a fifth of a degree, no figure of it is worth its digits.
+	if r.Sensitivities == nil || math.Abs(r.Sensitivities.PerDegCut) > 20 {
+		warnings = append(warnings, fmt.Sprintf("signal at %.4f deg: two directions are about to merge here (the ring just opens); its angle depends on cut, tilt and dispersion set more than anybody knows them", at))
+	}
 	return r, warnings
 }
 
@@ -401,27 +406,29 @@ func (p Prediction) Table() string {
 func Batch(in io.Reader, out io.Writer) error {
 	lines := bufio.NewScanner(in)
 	lines.Buffer(nil, 1<<20)
-	w := bufio.NewWriter(out)
-	encode := json.NewEncoder(w)
-	encode.SetEscapeHTML(false)
 	for lines.Scan() {
 		if len(bytes.TrimSpace(lines.Bytes())) == 0 {
 			continue
 		}
-		var answer any
-		p, err := answerLine(lines.Bytes())
-		if answer = p; err != nil {
-			answer = map[string]string{"error": strings.ReplaceAll(err.Error(), "\n", "; ")}
-		}
-		if err := encode.Encode(answer); err != nil {
-			return err
-		}
 		// A line is answered when it was asked: the asker may be waiting for it.
-		if err := w.Flush(); err != nil {
+		if _, err := out.Write(append(answer(lines.Bytes()), '\n')); err != nil {
 			return err
 		}
 	}
 	return lines.Err()
+}
+
+// answer is one line of a batch without its end.
+func answer(line []byte) []byte {
+	p, err := answerLine(line)
+	if err == nil {
+		var raw []byte
+		if raw, err = json.Marshal(p); err == nil {
+			return raw
+		}
+	}
+	raw, _ := json.Marshal(map[string]string{"error": strings.ReplaceAll(err.Error(), "\n", "; ")}) // strings always marshal
+	return raw
 }
 
 func answerLine(line []byte) (Prediction, error) {

@@ -101,6 +101,14 @@ func TestTwoRootsAreBothListed(t *testing.T) {
 	}
 }
 
+func TestARingThatJustOpensIsFlagged(t *testing.T) {
+	j := job
+	j.Cut = "28.8160 deg" // collinear at 28.81586
+	if p := predict(t, j); len(p.Roots) != 1 || !strings.Contains(strings.Join(p.Warnings, "\n"), "just opens") {
+		t.Errorf("%d roots, warnings %q; want one that doubts the angle", len(p.Roots), p.Warnings)
+	}
+}
+
 func TestExtrapolationIsRefusedOrFlagged(t *testing.T) {
 	j := job
 	j.Crystal = "bbo-zhang-2000"
@@ -221,4 +229,33 @@ func BenchmarkPredict(b *testing.B) {
 			b.Fatal(err)
 		}
 	}
+}
+
+// FuzzAnswer: whatever a line says, the answer is one JSON object with either roots or an error,
+// and nothing in it is NaN (which JSON cannot carry).
+func FuzzAnswer(f *testing.F) {
+	for _, seed := range []string{
+		`{"crystal": "bbo-kato-1986", "pump": "405 nm", "cut": "29.2 deg", "signal": "760 nm", "tilt": "2 deg", "azimuth": "33 deg", "thickness": "0.1 mm", "waist": "5 um"}`,
+		`{"crystal": "bbo-kato-1986", "process": "e-oe", "pump": "405 nm", "cut": "41 deg", "azimuth": "180 deg", "temperature": "300 K", "poling": "40 um"}`,
+		`{"crystal": "zgp-das-2003", "pump": "2050 nm", "signal": "3000 nm", "cut": "53.5 deg"}`,
+		`{"crystal": "ktp-kato-2002", "pump": "532 nm", "cut": "90 deg"}`,
+		`{"crystal": "bbo-zhang-2000", "pump": "405 nm", "cut": "0 deg", "extrapolate": true, "thickness": "900 mm", "waist": "1e-3 nm"}`,
+		`{"crystal": "bbo-kato-1986", "process": "", "pump": "1e-9 nm", "cut": "79 arcmin", "tilt": "-79.9 deg", "extrapolate": true}`,
+		`[]`, `{"pump": 405}`, `{}{}`, `{"cut": "29,2 deg"}`,
+	} {
+		f.Add([]byte(seed))
+	}
+	f.Fuzz(func(t *testing.T, line []byte) {
+		var object struct {
+			Roots []json.RawMessage `json:"roots"`
+			Error string            `json:"error"`
+		}
+		raw := answer(line)
+		if err := json.Unmarshal(raw, &object); err != nil || (object.Roots == nil) == (object.Error == "") || bytes.ContainsRune(raw, '\n') {
+			t.Fatalf("%s: %s (%v)", line, raw, err)
+		}
+		if strings.Contains(object.Error, "unsupported value") {
+			t.Fatalf("%s: a number that is none: %s", line, raw)
+		}
+	})
 }
