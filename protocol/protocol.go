@@ -188,6 +188,9 @@ type Points struct {
 	Head
 	Grounds string  `json:"grounds"` // why these points: "sweep", or what a refinement saw
 	Points  []Point `json:"points"`
+	// Stand is where the axes stood, when the run began, that the sweep does not move. They are
+	// kept there, and put back there after a background or a search for the zero.
+	Stand []AxisTarget `json:"stand,omitempty"`
 }
 
 // Point is one set of targets.

@@ -3,6 +3,8 @@
 package scan
 
 import (
+	"math/rand/v2"
+	"slices"
 	"time"
 
 	"gemel/drivers"
@@ -12,12 +14,15 @@ import (
 // Plan is a checked recipe, worked out for one bench. It is a value: never changed once a run
 // began, and worked out again to the same plan from the texts that the logbook keeps.
 type Plan struct {
-	Title   string
-	Points  []Point // in the order of their index, which is their place here
-	Dwell   Dwell
-	Repeat  Repeat
-	Dark    *Cadence // nil: none
-	Trouble Trouble
+	Title      string
+	Points     []Point // in the order of their index, which is their place here
+	Dwell      Dwell
+	Repeat     Repeat
+	Dark       *Cadence    // nil: none
+	Background *Background // nil: none
+	Guards     []Guard
+	Schedule   Schedule
+	Trouble    Trouble
 }
 
 // Point is one set of targets. Axes and settings it does not name stay where they are.
@@ -38,10 +43,14 @@ type SettingTarget struct {
 	Value   float64
 }
 
-// Dwell is how long one reading counts, in bench time.
+// Dwell is how long one reading counts, in bench time. With Heralds it ends with the first slice
+// at whose end the trigger channel has that many counts, and after Time at the latest: stopping on
+// trigger counts does not bias an efficiency, stopping on coincidences would.
 type Dwell struct {
-	Time  time.Duration
-	Slice time.Duration // equal to Time when the dwell is not cut
+	Time    time.Duration
+	Slice   time.Duration // equal to Time when the dwell is not cut
+	Heralds uint64        // 0: the dwell lasts Time
+	Trigger drivers.Channel
 }
 
 // Slices returns the gates a dwell is counted in: whole slices, and what is left as a last one.
@@ -58,6 +67,10 @@ type Repeat struct {
 	Times      int
 	InPlace    bool // all visits of a point follow one another; else the whole list is passed Times times
 	Serpentine bool // every second pass runs backwards
+	// Shuffled takes the points of each pass in an order of its own, drawn from Seed, so that a
+	// drift is not taken for a dependence on angle.
+	Shuffled bool
+	Seed     uint64
 }
 
 // Visit is one coming to a point. Visit counts from 1.
@@ -70,7 +83,7 @@ type Visit struct {
 func (p Plan) Visits() []Visit {
 	visits := make([]Visit, 0, len(p.Points)*p.Repeat.Times)
 	if p.Repeat.InPlace {
-		for i := range p.Points {
+		for _, i := range p.pass(1) {
 			for v := 1; v <= p.Repeat.Times; v++ {
 				visits = append(visits, Visit{Point: i, Visit: v})
 			}
@@ -78,15 +91,31 @@ func (p Plan) Visits() []Visit {
 		return visits
 	}
 	for v := 1; v <= p.Repeat.Times; v++ {
-		for k := range p.Points {
-			i := k
-			if p.Repeat.Serpentine && v%2 == 0 {
-				i = len(p.Points) - 1 - k
-			}
+		for _, i := range p.pass(v) {
 			visits = append(visits, Visit{Point: i, Visit: v})
 		}
 	}
 	return visits
+}
+
+// Sweeps says whether the points move an axis. All points name the same axes.
+func (p Plan) Sweeps(axis drivers.AxisName) bool {
+	return len(p.Points) > 0 && slices.ContainsFunc(p.Points[0].Axes, func(t AxisTarget) bool { return t.Axis == axis })
+}
+
+// pass is the order of the points in one pass, counted from 1.
+func (p Plan) pass(n int) []int {
+	if p.Repeat.Shuffled {
+		return rand.New(rand.NewPCG(p.Repeat.Seed, uint64(n))).Perm(len(p.Points))
+	}
+	order := make([]int, len(p.Points))
+	for i := range order {
+		order[i] = i
+	}
+	if p.Repeat.Serpentine && n%2 == 0 {
+		slices.Reverse(order)
+	}
+	return order
 }
 
 // Cadence is how often something is repeated beside the points. Every and EveryPoints exclude
@@ -97,6 +126,31 @@ type Cadence struct {
 	EveryPoints int           // visits between two
 	AtStart     bool
 	AtEnd       bool
+}
+
+// Background is counting with the pump on and phase matching spoiled: what the trigger counts
+// without a partner. Dark counts are contained in it. The axis is turned by an angle away from
+// From, where it stands otherwise, and put back; it must not be swept. From is declared, not found:
+// a run that was stopped in a background must not spoil the next one.
+type Background struct {
+	Cadence
+	Axis     drivers.AxisName
+	From, By unit.Angle
+}
+
+// Guard is a condition for counting. It is no protective guard and no interlock.
+type Guard struct {
+	Name        string // as the recipe says it
+	Sensor      drivers.DeviceName
+	Low, High   float64 // in the sensor's unit
+	Otherwise   Then
+	GiveUpAfter time.Duration // a hold for this guard fails the run after it; 0: the trouble's bound
+}
+
+// Schedule bounds a run in time. The instants are worked out when the recipe is accepted.
+type Schedule struct {
+	NotBefore time.Time // zero: at once
+	FinishBy  time.Time // zero: no end. What does not fit before it is left out, closing readings first reserved
 }
 
 // Then is what is done when something went wrong as often as the recipe allows.

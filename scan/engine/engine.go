@@ -194,11 +194,9 @@ func (e *Engine) openRun(ctx context.Context, restBad string) error {
 		}
 	}
 	if p.State == protocol.Running {
-		if err := e.getReady(ctx, true); err != nil {
-			return err
-		}
+		return e.getReady(ctx, true)
 	}
-	return e.decidePoints(ctx)
+	return nil
 }
 
 func withBad(restBad string) string {
@@ -208,13 +206,21 @@ func withBad(restBad string) string {
 	return "; THE REST STATE WAS NOT REACHED: " + restBad
 }
 
-// decidePoints writes the list of points, in entries that stay well below a message's size.
+// decidePoints writes the list of points, in entries that stay well below a message's size, and
+// with the first where the axes stand that the points do not move.
 func (e *Engine) decidePoints(ctx context.Context) error {
 	const most = 500
 	for e.progress.Decided < len(e.Plan.Points) {
 		from := e.progress.Decided
 		to := min(from+most, len(e.Plan.Points))
-		body := &protocol.Points{Grounds: "sweep"}
+		body := &protocol.Points{Grounds: e.grounds(), Points: []protocol.Point{}}
+		if from == 0 {
+			stand, ready, err := e.standing(ctx)
+			if err != nil || !ready {
+				return err
+			}
+			body.Stand = stand
+		}
 		for i := from; i < to; i++ {
 			point := protocol.Point{Point: i, Axes: []protocol.AxisTarget{}}
 			for _, t := range e.Plan.Points[i].Axes {
@@ -228,9 +234,43 @@ func (e *Engine) decidePoints(ctx context.Context) error {
 		if err := e.write(ctx, protocol.PointEntry, &body.Head, body, protocol.PointSchema); err != nil {
 			return err
 		}
-		e.progress.Decided = to
+		e.progress.applyPoints(body)
 	}
 	return nil
+}
+
+func (e *Engine) grounds() string {
+	if e.Plan.Repeat.Shuffled {
+		return fmt.Sprintf("sweep, shuffled by seed %d", e.Plan.Repeat.Seed)
+	}
+	return "sweep"
+}
+
+// standing reads where the axes are that the sweep does not move. Not ready means that the run
+// holds, or was interrupted.
+func (e *Engine) standing(ctx context.Context) (stand []protocol.AxisTarget, ready bool, err error) {
+	op, end := e.operation(ctx)
+	at, err := e.where(op)
+	interrupted := op.Err() != nil
+	end()
+	switch {
+	case interrupted:
+		return nil, false, nil
+	case err != nil:
+		return nil, false, e.holdFor(ctx, protocol.ByTrouble, "held: "+err.Error(), errorDetail(err))
+	}
+	stand = []protocol.AxisTarget{}
+	for _, a := range e.Bench.Axes {
+		if e.Plan.Sweeps(a.Name) {
+			continue
+		}
+		place := at[a.Name]
+		if b := e.Plan.Background; b != nil && b.Axis == a.Name {
+			place = b.From
+		}
+		stand = append(stand, protocol.AxisTarget{Axis: string(a.Name), Target: place})
+	}
+	return stand, true, nil
 }
 
 // turn does the next thing: an operator's request, a wait, or one reading.
@@ -250,12 +290,39 @@ func (e *Engine) turn(ctx context.Context) error {
 	if e.progress.State == protocol.Holding {
 		return e.waitOut(ctx)
 	}
+	if e.progress.Decided < len(e.Plan.Points) {
+		return e.decidePoints(ctx)
+	}
 	task, ok := e.progress.next(e.now())
 	if !ok {
+		if done, err := e.putBack(ctx); !done || err != nil {
+			return err
+		}
 		return e.end(ctx, protocol.Finished, fmt.Sprintf("finished: %d of %d readings accepted, %d set aside", e.progress.Accepted, e.progress.Planned(), e.progress.SetAside), nil)
 	}
 	e.step(StepDecided)
 	return e.perform(ctx, task)
+}
+
+// putBack turns the axis back that a background turned away, with the light off. What fails then
+// holds the run, for nobody may find the bench spoiled in the morning without a word.
+func (e *Engine) putBack(ctx context.Context) (done bool, err error) {
+	b := e.Plan.Background
+	if b == nil {
+		return true, nil
+	}
+	op, end := e.operation(ctx)
+	defer end()
+	if err = e.protect(op); err == nil {
+		_, err = e.goTo(op, e.stay(e.Plan.Points[e.progress.nearest().Point].Axes))
+	}
+	switch {
+	case op.Err() != nil:
+		return false, nil
+	case err != nil:
+		return false, e.holdFor(ctx, protocol.ByTrouble, fmt.Sprintf("held: %s could not be turned back after the last background: %v", b.Axis, err), errorDetail(err))
+	}
+	return true, nil
 }
 
 // end brings the bench to rest and closes the run for ever. The rest state comes first.

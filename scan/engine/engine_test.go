@@ -13,6 +13,7 @@ import (
 
 	"gemel/drivers"
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan"
 )
 
@@ -65,8 +66,8 @@ func TestAPlanIsTakenInOrderWithItsDarks(t *testing.T) {
 		}
 		n.atRest(t)
 		for _, r := range n.readings(t) {
-			if len(r.Angles) != 2 || r.Angles[0].Target != r.Angles[0].Before || r.Angles[0].Target != r.Angles[0].After {
-				t.Errorf("reading %d: angles %+v; want both axes at their targets", r.Sequence, r.Angles)
+			if len(r.Angles) != 3 || r.Angles[0].Target != r.Angles[0].Before || r.Angles[0].Target != r.Angles[0].After {
+				t.Errorf("reading %d: angles %+v; want all axes at their targets", r.Sequence, r.Angles)
 			}
 			if r.Kind == protocol.Light && (len(r.Slices) != 2 || r.Counts[0].Counts != 2000 || r.Gate.Duration() != 2*time.Second || r.Glance == nil) {
 				t.Errorf("reading %d: %d slices, counts %v, gate %s; want 2, 2000, 2 s, and a glance", r.Sequence, len(r.Slices), r.Counts, r.Gate.Duration())
@@ -81,6 +82,80 @@ func TestAPlanIsTakenInOrderWithItsDarks(t *testing.T) {
 			}
 		}
 	})
+}
+
+func TestABackgroundSpoilsPhaseMatchingAndPutsItBack(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		n := newNight(t, func(c *Config) {
+			c.Plan.Background = &scan.Background{Axis: "plate", From: 5 * unit.Degree, By: 45 * unit.Degree, Cadence: scan.Cadence{Dwell: scan.Dwell{Time: time.Second, Slice: time.Second}, EveryPoints: 2, AtStart: true, AtEnd: true}}
+		})
+		planned := n.eng.Snapshot().Planned
+		if state, err := n.eng.Run(t.Context()); state != protocol.Finished || err != nil {
+			t.Fatalf("Run() = %s, %v; want finished", state, err)
+		}
+		got := sequenceOf(n.readings(t))
+		if want := "dark background 0.1 1.1 background 2.1 2.2 dark background 1.2 0.2 dark background"; got != want {
+			t.Errorf("readings %s; want %s", got, want)
+		}
+		if got := len(n.readings(t)); planned != got {
+			t.Errorf("%d readings planned, %d taken", planned, got)
+		}
+		for _, r := range n.readings(t) {
+			plate := r.Angles[2].Before
+			switch {
+			case r.Kind == protocol.Background && plate != 50*unit.Degree, r.Kind == protocol.Light && plate != 5*unit.Degree:
+				t.Errorf("reading %d, %s: the plate stands at %s; want 50 deg for a background, 5 deg for light", r.Sequence, r.Kind, plate)
+			}
+		}
+		if n.at["plate"] != 5*unit.Degree {
+			t.Errorf("after the run the plate stands at %s; want it put back to 5 deg", n.at["plate"])
+		}
+	})
+}
+
+func TestARunCutInABackgroundGoesOnPhaseMatched(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		change := func(c *Config) {
+			c.Plan.Background = &scan.Background{Axis: "plate", From: 5 * unit.Degree, By: 45 * unit.Degree, Cadence: scan.Cadence{Dwell: scan.Dwell{Time: time.Second, Slice: time.Second}, AtStart: true}}
+		}
+		whole := newNight(t, change)
+		if _, err := whole.eng.Run(t.Context()); err != nil {
+			t.Fatal(err)
+		}
+		n := newNight(t, change)
+		n.memory.entries = slices.Clone(whole.entries[:4]) // began, points, dark, background
+		n.at["plate"] = 50 * unit.Degree                   // as the cut left it
+		c := n.eng.Config
+		c.Past, c.ResumeAfterRestart = n.fold(t), true
+		n.eng = New(c)
+		if state, err := n.eng.Run(t.Context()); state != protocol.Finished || err != nil {
+			t.Fatalf("Run() = %s, %v; want finished", state, err)
+		}
+		for _, r := range n.readings(t) {
+			if r.Kind == protocol.Light && r.Angles[2].Before != 5*unit.Degree {
+				t.Errorf("reading %d: light with the plate at %s; want it put back to 5 deg", r.Sequence, r.Angles[2].Before)
+			}
+		}
+	})
+}
+
+func TestADwellEndsWithEnoughHeraldsOrAtItsTime(t *testing.T) {
+	for rate, slices := range map[float64]int{1000: 3, 300: 5} {
+		synctest.Test(t, func(t *testing.T) {
+			n := newNight(t, func(c *Config) {
+				c.Plan.Dwell = scan.Dwell{Time: 5 * time.Second, Slice: time.Second, Heralds: 2500, Trigger: "signal"}
+			})
+			n.rates["signal"] = rate
+			if _, err := n.eng.Run(t.Context()); err != nil {
+				t.Fatal(err)
+			}
+			for _, r := range n.readings(t) {
+				if r.Kind == protocol.Light && len(r.Slices) != slices {
+					t.Errorf("at %g /s: %d slices; want %d", rate, len(r.Slices), slices)
+				}
+			}
+		})
+	}
 }
 
 func TestTheApproachIsAlwaysFromTheDeclaredSide(t *testing.T) {

@@ -5,6 +5,7 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
+	"maps"
 	"sync"
 	"testing"
 	"testing/synctest"
@@ -29,7 +30,7 @@ type world struct {
 }
 
 func newWorld() *world {
-	return &world{rates: map[drivers.Channel]float64{"signal": 1000, "idler": 800}, open: map[string]bool{}, at: map[drivers.AxisName]unit.Angle{}, homed: true}
+	return &world{rates: map[drivers.Channel]float64{"signal": 1000, "idler": 800}, open: map[string]bool{}, at: map[drivers.AxisName]unit.Angle{"signal_arm": 0, "idler_arm": 0, "plate": 5 * unit.Degree}, homed: true}
 }
 
 func (w *world) act(format string, args ...any) error {
@@ -65,9 +66,11 @@ func (d fakeDevice) Connect(ctx context.Context) error { return d.w.act("connect
 
 type fakeStage struct{ fakeDevice }
 
-func (s fakeStage) Axes() []drivers.AxisName { return []drivers.AxisName{"signal_arm", "idler_arm"} }
-func (s fakeStage) Together() bool           { return true }
-func (s fakeStage) TrustZero()               { s.w.homed = true }
+func (s fakeStage) Axes() []drivers.AxisName {
+	return []drivers.AxisName{"signal_arm", "idler_arm", "plate"}
+}
+func (s fakeStage) Together() bool { return true }
+func (s fakeStage) TrustZero()     { s.w.homed = true }
 func (s fakeStage) Stop(context.Context) error {
 	return s.w.act("stop %s", s.name)
 }
@@ -86,14 +89,14 @@ func (s fakeStage) Where(context.Context) (map[drivers.AxisName]unit.Angle, erro
 	if err := s.w.act("where"); err != nil {
 		return nil, err
 	}
-	return map[drivers.AxisName]unit.Angle{"signal_arm": s.w.at["signal_arm"], "idler_arm": s.w.at["idler_arm"]}, nil
+	return maps.Clone(s.w.at), nil
 }
 func (s fakeStage) Home(_ context.Context, order []drivers.AxisName) error {
 	s.w.homed = true
 	return s.w.act("home %v", order)
 }
 func (s fakeStage) Homed(context.Context) (map[drivers.AxisName]bool, error) {
-	return map[drivers.AxisName]bool{"signal_arm": s.w.homed, "idler_arm": s.w.homed}, nil
+	return map[drivers.AxisName]bool{"signal_arm": s.w.homed, "idler_arm": s.w.homed, "plate": s.w.homed}, nil
 }
 
 type fakeCounter struct{ fakeDevice }
@@ -144,7 +147,7 @@ func (w *world) bench() *Bench {
 	guard := fakeShutter{fakeDevice{w, "guard"}}
 	return &Bench{
 		Name: "skerry", Pace: 1, Simulated: true,
-		Axes:    []scan.Axis{axis("signal_arm"), axis("idler_arm")},
+		Axes:    []scan.Axis{axis("signal_arm"), axis("idler_arm"), {Name: "plate", Controller: "rotary", Low: -90 * unit.Degree, High: 90 * unit.Degree, Tolerance: unit.Degree / 100, Proof: drivers.Proved}},
 		Stages:  []drivers.Stage{fakeStage{fakeDevice{w, "rotary"}}},
 		Counter: fakeCounter{fakeDevice{w, "counter"}}, Tag: "tag",
 		Pump: fakeShutter{fakeDevice{w, "pump"}},

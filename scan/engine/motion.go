@@ -41,8 +41,9 @@ func (e *Engine) where(ctx context.Context) (map[drivers.AxisName]unit.Angle, er
 	return all, nil
 }
 
-// goTo brings axes to their targets and proves it. Axes that stand there already, sent and proved
-// before, are not moved again. The returned angles are of all axes of the bench.
+// goTo brings every axis to where it has to be and proves it: those with a target there, the
+// others to where they stood when the run began. Axes that were sent to their target before and
+// are still there are not moved again. The returned angles are of all axes of the bench.
 func (e *Engine) goTo(ctx context.Context, targets []scan.AxisTarget) (map[drivers.AxisName]unit.Angle, error) {
 	at, err := e.where(ctx)
 	if err != nil {
@@ -69,11 +70,6 @@ func (e *Engine) goTo(ctx context.Context, targets []scan.AxisTarget) (map[drive
 			}
 		}
 	}
-	for _, a := range e.Bench.Axes {
-		if _, known := e.commanded[a.Name]; !known {
-			e.commanded[a.Name] = at[a.Name] // never sent anywhere: it has to stay where it was found
-		}
-	}
 	e.step(StepProved)
 	return at, e.inPlace(at, "before the dwell")
 }
@@ -93,15 +89,28 @@ func (e *Engine) inPlace(at map[drivers.AxisName]unit.Angle, during string) erro
 	return nil
 }
 
-// due lists the targets that axes must be moved to.
+// due lists the axes that must be moved, and where to. An axis that is to stay where it stood is
+// moved only when it is elsewhere.
 func (e *Engine) due(at map[drivers.AxisName]unit.Angle, targets []scan.AxisTarget) []scan.AxisTarget {
 	var due []scan.AxisTarget
+	targeted := map[drivers.AxisName]bool{}
 	for _, t := range targets {
-		a := e.axis(t.Axis)
-		if e.sent[t.Axis] && e.commanded[t.Axis] == t.Angle && (at[t.Axis]-t.Angle).Abs() <= a.Tolerance {
+		targeted[t.Axis] = true
+		if e.sent[t.Axis] && e.commanded[t.Axis] == t.Angle && (at[t.Axis]-t.Angle).Abs() <= e.axis(t.Axis).Tolerance {
 			continue
 		}
 		due = append(due, t)
+	}
+	for _, a := range e.Bench.Axes {
+		stand, known := e.progress.stand[a.Name]
+		if !known || targeted[a.Name] {
+			continue
+		}
+		if (at[a.Name] - stand).Abs() > a.Tolerance {
+			due = append(due, scan.AxisTarget{Axis: a.Name, Angle: stand})
+			continue
+		}
+		e.commanded[a.Name] = stand
 	}
 	return due
 }

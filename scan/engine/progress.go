@@ -7,7 +7,9 @@ import (
 	"slices"
 	"time"
 
+	"gemel/drivers"
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan"
 )
 
@@ -25,13 +27,11 @@ type Progress struct {
 	Accepted int
 	SetAside int
 
-	done        map[scan.Visit]bool // accepted or given up
-	attempts    map[taskKey]int     // failed since the last success or resume
-	darks       int                 // accepted or given up
-	darkAt      time.Time           // start of the last dark
-	sinceDark   int                 // visits done since then
-	darkAfter   bool                // a dark came after the last visit
-	spent       time.Duration       // bench time spent on accepted light readings, moves included
+	done        map[scan.Visit]bool             // accepted or given up
+	attempts    map[taskKey]int                 // failed since the last success or resume
+	series      map[taskKind]series             // what is repeated beside the points
+	stand       map[drivers.AxisName]unit.Angle // where the axes have to be that the sweep does not move; nil until that is written
+	spent       time.Duration                   // bench time spent on accepted light readings, moves included
 	spentOn     int
 	startedAt   time.Time
 	heldAt      time.Time
@@ -47,9 +47,37 @@ type Progress struct {
 type taskKind string
 
 const (
-	lightTask taskKind = "light"
-	darkTask  taskKind = "dark"
+	lightTask      taskKind = "light"
+	darkTask       taskKind = "dark"
+	backgroundTask taskKind = "background"
 )
+
+// series is what was done so far of something that is repeated beside the points.
+type series struct {
+	taken int       // accepted or given up
+	at    time.Time // start of the last
+	since int       // visits done since then
+	after bool      // one came after the last visit
+}
+
+// cadence is what the plan wants of it.
+type cadence struct {
+	kind taskKind
+	scan.Cadence
+}
+
+// cadences lists what is repeated beside the points, in the order in which it is taken when
+// several are due.
+func (p *Progress) cadences() []cadence {
+	var all []cadence
+	if d := p.thePlan.Dark; d != nil {
+		all = append(all, cadence{darkTask, *d})
+	}
+	if b := p.thePlan.Background; b != nil {
+		all = append(all, cadence{backgroundTask, b.Cadence})
+	}
+	return all
+}
 
 // task is one reading to take.
 type task struct {
@@ -94,7 +122,7 @@ func (p *Progress) Fold(entry protocol.Entry) error {
 		if err := json.Unmarshal(entry.Body, &pts); err != nil {
 			return fmt.Errorf("run %s: entry %d: %w", entry.Run, entry.Sequence, err)
 		}
-		p.Decided += len(pts.Points)
+		p.applyPoints(&pts)
 		head = pts.Head
 	default:
 		if err := json.Unmarshal(entry.Body, &head); err != nil {
@@ -112,6 +140,8 @@ func (p *Progress) clone() Progress {
 	c := *p
 	c.done = maps.Clone(p.done)
 	c.attempts = maps.Clone(p.attempts)
+	c.series = maps.Clone(p.series)
+	c.stand = maps.Clone(p.stand)
 	c.Causes = slices.Clone(p.Causes)
 	if c.Next == 0 {
 		c.Next = 1
@@ -126,6 +156,9 @@ func (p *Progress) init() {
 	}
 	if p.attempts == nil {
 		p.attempts = map[taskKey]int{}
+	}
+	if p.series == nil {
+		p.series = map[taskKind]series{}
 	}
 }
 
@@ -166,6 +199,8 @@ func readingKey(r *protocol.Reading) (taskKey, bool) {
 		return taskKey{lightTask, scan.Visit{Point: *r.Point, Visit: *r.Visit}}, true
 	case r.Kind == protocol.Dark:
 		return taskKey{kind: darkTask}, true
+	case r.Kind == protocol.Background:
+		return taskKey{kind: backgroundTask}, true
 	}
 	return taskKey{}, false
 }
@@ -173,16 +208,34 @@ func readingKey(r *protocol.Reading) (taskKey, bool) {
 // finish marks a task as done, by an accepted reading or by giving it up.
 func (p *Progress) finish(key taskKey, startedAt time.Time) {
 	delete(p.attempts, key)
-	switch key.kind {
-	case lightTask:
+	if key.kind == lightTask {
 		p.done[key.visit] = true
-		p.sinceDark++
-		p.darkAfter = false
-	case darkTask:
-		p.darks++
-		p.darkAt = startedAt
-		p.sinceDark = 0
-		p.darkAfter = true
+		for kind, s := range p.series {
+			s.since++
+			s.after = false
+			p.series[kind] = s
+		}
+		return
+	}
+	p.series[key.kind] = series{taken: p.series[key.kind].taken + 1, at: startedAt, after: true}
+}
+
+// sinceOf is how many visits were done since the last of a kind, or since the run began.
+func (p *Progress) sinceOf(kind taskKind) int {
+	if s, any := p.series[kind]; any {
+		return s.since
+	}
+	return len(p.done)
+}
+
+func (p *Progress) applyPoints(pts *protocol.Points) {
+	p.Decided += len(pts.Points)
+	if pts.Stand == nil {
+		return
+	}
+	p.stand = map[drivers.AxisName]unit.Angle{}
+	for _, t := range pts.Stand {
+		p.stand[drivers.AxisName(t.Axis)] = t.Target
 	}
 }
 
@@ -242,8 +295,8 @@ func eventKey(detail map[string]any) (taskKey, bool) {
 	switch taskKind(kind) {
 	case lightTask:
 		return taskKey{lightTask, scan.Visit{Point: number("point"), Visit: number("visit")}}, true
-	case darkTask:
-		return taskKey{kind: darkTask}, true
+	case darkTask, backgroundTask:
+		return taskKey{kind: taskKind(kind)}, true
 	}
 	return taskKey{}, false
 }
@@ -254,13 +307,14 @@ func (p *Progress) next(now time.Time) (task, bool) {
 		p.cursor++
 	}
 	all := p.cursor >= len(p.visits)
-	if d := p.thePlan.Dark; d != nil {
-		due := d.AtStart && p.darks == 0 && len(p.done) == 0 ||
-			!all && d.EveryPoints > 0 && p.sinceDark >= d.EveryPoints ||
-			!all && d.Every > 0 && !now.Before(p.lastDarkOrStart().Add(d.Every)) ||
-			all && d.AtEnd && !p.darkAfter
+	for _, c := range p.cadences() {
+		had := p.series[c.kind]
+		due := c.AtStart && had.taken == 0 && len(p.done) == 0 ||
+			!all && c.EveryPoints > 0 && p.sinceOf(c.kind) >= c.EveryPoints ||
+			!all && c.Every > 0 && !now.Before(p.lastOrStart(c.kind).Add(c.Every)) ||
+			all && c.AtEnd && !had.after
 		if due {
-			return task{kind: darkTask, dwell: d.Dwell}, true
+			return task{kind: c.kind, dwell: c.Dwell}, true
 		}
 	}
 	if all {
@@ -269,32 +323,42 @@ func (p *Progress) next(now time.Time) (task, bool) {
 	return task{kind: lightTask, visit: p.visits[p.cursor], dwell: p.thePlan.Dwell}, true
 }
 
-func (p *Progress) lastDarkOrStart() time.Time {
-	if p.darkAt.IsZero() {
-		return p.startedAt
+// nearest is the visit that is next, or the last one when all are done: where the arms are for
+// what is counted beside the points.
+func (p *Progress) nearest() scan.Visit { return p.visits[min(p.cursor, len(p.visits)-1)] }
+
+func (p *Progress) lastOrStart(kind taskKind) time.Time {
+	if s := p.series[kind]; s.taken > 0 {
+		return s.at
 	}
-	return p.darkAt
+	return p.startedAt
 }
 
 // Planned counts the readings of the whole run: those taken, those that are still certain to
-// come. Darks by the clock are counted when they are taken.
+// come. What goes by the clock is counted when it is taken.
 func (p *Progress) Planned() int {
 	if p.thePlan == nil {
 		return 0
 	}
-	n := len(p.visits) + p.darks
-	d := p.thePlan.Dark
-	if d == nil {
-		return n
+	n := len(p.visits)
+	for _, c := range p.cadences() {
+		n += p.series[c.kind].taken + p.ahead(c)
 	}
+	return n
+}
+
+// ahead is how many of a cadence are certain to come.
+func (p *Progress) ahead(c cadence) int {
+	n := 0
+	had := p.series[c.kind]
 	left := len(p.visits) - len(p.done)
-	if d.AtStart && p.darks == 0 && len(p.done) == 0 {
+	if c.AtStart && had.taken == 0 && len(p.done) == 0 {
 		n++
 	}
-	if d.EveryPoints > 0 && left > 0 {
-		n += max(0, left+p.sinceDark-1) / d.EveryPoints
+	if c.EveryPoints > 0 && left > 0 {
+		n += max(0, left+p.sinceOf(c.kind)-1) / c.EveryPoints
 	}
-	if d.AtEnd && (left > 0 || !p.darkAfter) {
+	if c.AtEnd && (left > 0 || !had.after) {
 		n++
 	}
 	return n
@@ -306,15 +370,13 @@ func (p *Progress) timeLeft() *time.Duration {
 	if p.thePlan == nil {
 		return nil
 	}
-	left := p.Planned() - len(p.done) - p.darks
-	lights := len(p.visits) - len(p.done)
 	each := p.thePlan.Dwell.Time
 	if p.spentOn > 0 {
-		each = max(each, p.spent/time.Duration(p.spentOn))
+		each = p.spent / time.Duration(p.spentOn)
 	}
-	total := time.Duration(lights) * each
-	if d := p.thePlan.Dark; d != nil {
-		total += time.Duration(max(0, left-lights)) * d.Dwell.Time
+	total := time.Duration(len(p.visits)-len(p.done)) * each
+	for _, c := range p.cadences() {
+		total += time.Duration(p.ahead(c)) * c.Dwell.Time
 	}
 	return &total
 }

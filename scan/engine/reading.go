@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"slices"
 	"time"
 
 	"gonum.org/v1/gonum/stat/distuv"
@@ -76,15 +77,21 @@ func (e *Engine) protectNow(ctx context.Context) {
 // take moves, proves, lights, counts and judges. The reading is nil as long as no gate was
 // opened. With an error it is what was counted until then, to be set aside.
 func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
-	var targets []scan.AxisTarget
-	r := &protocol.Reading{Kind: protocol.Dark, Simulated: e.simulated, Attempt: e.progress.attempts[t.key()] + 1,
+	r := &protocol.Reading{Kind: protocol.ReadingKind(t.kind), Simulated: e.simulated, Attempt: e.progress.attempts[t.key()] + 1,
 		Settings: []protocol.Setting{}, Sensors: []protocol.Sensor{}, Counts: []protocol.Count{}, Slices: []protocol.Slice{}, Angles: []protocol.Angle{}}
-	if t.kind == lightTask {
-		r.Kind, r.Point, r.Visit = protocol.Light, &t.visit.Point, &t.visit.Visit
-		targets = e.Plan.Points[t.visit.Point].Axes
-		if err := e.set(ctx, r, e.Plan.Points[t.visit.Point].Settings); err != nil {
+	point := e.Plan.Points[e.progress.nearest().Point]
+	targets := point.Axes
+	switch t.kind {
+	case lightTask:
+		r.Point, r.Visit = &t.visit.Point, &t.visit.Visit
+		if err := e.set(ctx, r, point.Settings); err != nil {
 			return nil, err
 		}
+	case darkTask:
+		targets = e.stay(targets) // no light comes: where the arms look makes no difference worth a journey
+	case backgroundTask:
+		b := e.Plan.Background
+		targets = append(slices.Clone(targets), scan.AxisTarget{Axis: b.Axis, Angle: b.From + b.By})
 	}
 	before, err := e.goTo(ctx, targets)
 	if err != nil {
@@ -93,7 +100,7 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 	for _, a := range e.Bench.Axes {
 		r.Angles = append(r.Angles, protocol.Angle{Axis: string(a.Name), Target: e.commanded[a.Name], Before: before[a.Name], After: before[a.Name], Proof: string(a.Proof)})
 	}
-	if err := e.light(ctx, t.kind == lightTask); err != nil {
+	if err := e.light(ctx, t.kind != darkTask); err != nil {
 		return nil, err
 	}
 	e.step(StepLit)
@@ -105,6 +112,9 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 	watch.sample(ctx)
 	r.StartedAt = protocol.Time{Time: e.now()}
 	for _, gate := range t.dwell.Slices() {
+		if t.dwell.Heralds > 0 && countOf(r.Counts, t.dwell.Trigger) >= t.dwell.Heralds {
+			break
+		}
 		slice, err := e.count(ctx, r, gate)
 		if err != nil {
 			r.EndedAt = protocol.Time{Time: e.now()}
@@ -215,13 +225,33 @@ func (e *Engine) judgeLight(all []protocol.Count, allTime time.Duration, last []
 	return nil
 }
 
-func rateOf(counts []protocol.Count, channel drivers.Channel, gate time.Duration) float64 {
+func countOf(counts []protocol.Count, channel drivers.Channel) uint64 {
 	for _, c := range counts {
-		if c.Channel == string(channel) && gate > 0 {
-			return float64(c.Counts) / gate.Seconds()
+		if c.Channel == string(channel) {
+			return c.Counts
 		}
 	}
 	return 0
+}
+
+// stay turns targets into where those axes were last sent, so that they are proved and not moved.
+func (e *Engine) stay(targets []scan.AxisTarget) []scan.AxisTarget {
+	var stay []scan.AxisTarget
+	for _, t := range targets {
+		if e.sent[t.Axis] {
+			stay = append(stay, scan.AxisTarget{Axis: t.Axis, Angle: e.commanded[t.Axis]})
+		} else {
+			stay = append(stay, t)
+		}
+	}
+	return stay
+}
+
+func rateOf(counts []protocol.Count, channel drivers.Channel, gate time.Duration) float64 {
+	if gate <= 0 {
+		return 0
+	}
+	return float64(countOf(counts, channel)) / gate.Seconds()
 }
 
 // sum adds a slice's counts, except the tag, which is a name and no amount.
