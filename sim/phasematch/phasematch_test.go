@@ -3,6 +3,7 @@ package phasematch
 import (
 	"math"
 	"math/rand/v2"
+	"sync"
 	"testing"
 	"time"
 
@@ -18,9 +19,19 @@ func set(t testing.TB, name string) crystal.Set {
 	return s
 }
 
+// bbo is made once: the random cases ask for it tens of thousands of times.
+var bbo = sync.OnceValue(func() crystal.Set {
+	s, err := crystal.Named("bbo-kato-1986")
+	if err != nil {
+		panic(err)
+	}
+	return s
+})
+
 // slab returns a BBO slab for a violet pump; the check values use the same.
 func slab(t testing.TB) Slab {
-	return Slab{Crystal: set(t, "bbo-kato-1986"), Process: EOO, CutDeg: 29.2, ThicknessMm: 2, Cel: 20, PumpNm: 405}
+	t.Helper()
+	return Slab{Crystal: bbo(), Process: EOO, CutDeg: 29.2, ThicknessMm: 2, Cel: 20, PumpNm: 405}
 }
 
 func at(t testing.TB, s Slab, nm float64) Pair {
@@ -138,17 +149,17 @@ func TestUntiltedClosedFormAgreesWithTheVectorSolver(t *testing.T) {
 
 // positive is an invented crystal that matches all three processes of a positive one: BBO with the
 // names of its axes exchanged.
-func positive(t testing.TB) crystal.Set {
-	s := set(t, "bbo-kato-1986")
+var positive = sync.OnceValue(func() crystal.Set {
+	s := bbo()
 	o, e := s.Axes[0], s.Axes[1]
 	o.Axis, e.Axis = crystal.Extraordinary, crystal.Ordinary
 	s.Name, s.Axes = "invented positive crystal", []crystal.Dispersion{e, o}
 	own, err := crystal.Own(s)
 	if err != nil || own.Sign != "positive" {
-		t.Fatalf("sign %q, %v; want a positive crystal", own.Sign, err)
+		panic("want a positive crystal")
 	}
 	return own
-}
+})
 
 // wild draws any of the six processes in a crystal of the fitting sign, cut near the collinear
 // angle, tilted.
@@ -156,7 +167,7 @@ func wild(t testing.TB, rng *rand.Rand) (Slab, float64, float64) {
 	s := slab(t)
 	s.Process = Processes()[rng.IntN(6)]
 	if s.Process[0] == 'o' {
-		s.Crystal = positive(t)
+		s.Crystal = positive()
 	}
 	nm := 2 * s.PumpNm * (0.9 + 0.2*rng.Float64())
 	angles, err := s.CollinearDeg(nm)

@@ -83,9 +83,7 @@ func TestSeveralInstrumentsMayAskAtOnce(t *testing.T) {
 	want := model(t, bench(t)).Rates(atPeak())
 	var all sync.WaitGroup
 	for g := range 4 {
-		all.Add(1)
-		go func() {
-			defer all.Done()
+		all.Go(func() {
 			for i := range 20 {
 				p := atPeak()
 				p.IdlerDeg += 0.001 * float64(g*i)
@@ -94,7 +92,7 @@ func TestSeveralInstrumentsMayAskAtOnce(t *testing.T) {
 					t.Errorf("rates %+v; want %+v", got, want)
 				}
 			}
-		}()
+		})
 	}
 	all.Wait()
 }
