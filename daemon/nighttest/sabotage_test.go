@@ -4,8 +4,6 @@ import (
 	"bytes"
 	"context"
 	"encoding/json"
-	"errors"
-	"io"
 	"maps"
 	"regexp"
 	"slices"
@@ -48,7 +46,7 @@ func TestTheJudgeFindsEverySabotage(t *testing.T) {
 		{"loses a reading", "|", loseReading, "are in no reading"},
 		{"invents a count", "|", inventCount, "counted"},
 		{"writes the target for the proved angle", "| slip(signal_arm, at 4m, by 0.5 deg)", believeTarget, "was truly at"},
-		{"goes on with a lost zero", "| restart(rotary, at 4m)", trustAnyZero, "nobody wrote down that its zero is lost|was truly at"},
+		{"keeps silent about a lost zero", "| restart(rotary, at 4m)", trustAnyZero, "nobody wrote down that its zero is lost"},
 		{"ignores too much light", "| lamp(at 4m, for 90s, rate 6000000 Hz)", ignoreLight, "still open"},
 		{"keeps silent about an interruption", "kill gated:30 |", forgetInterruption, "no interruption is written|before the interruption was"},
 		{"counts on after a stop was answered", "stop 3m |", countAfterStop, "is stopped"},
@@ -370,33 +368,31 @@ func believeTarget() Sabotage {
 	}}
 }
 
+// trusting finds a lost zero again by itself and tells nobody.
 type trusting struct{ drivers.Stage }
+
+func (s trusting) again(ctx context.Context, err error) bool {
+	if drivers.RemedyOf(err) != drivers.Reconnect && drivers.RemedyOf(err) != drivers.HomeAgain {
+		return false
+	}
+	return s.Connect(ctx) == nil && s.Home(ctx, s.Axes()) == nil
+}
 
 func (s trusting) Where(ctx context.Context) (map[drivers.AxisName]unit.Angle, error) {
 	at, err := s.Stage.Where(ctx)
 	for range 3 {
-		if drivers.RemedyOf(err) < drivers.Reconnect {
+		if !s.again(ctx, err) {
 			break
 		}
-		_ = s.Connect(ctx)
-		s.TrustZero()
 		at, err = s.Stage.Where(ctx)
 	}
 	return at, err
 }
 
-func (s trusting) Homed(ctx context.Context) (map[drivers.AxisName]bool, error) {
-	homed, err := s.Stage.Homed(ctx)
-	for a := range homed {
-		homed[a] = true
-	}
-	return homed, err
-}
-
 func (s trusting) Move(ctx context.Context, targets map[drivers.AxisName]unit.Angle) error {
 	err := s.Stage.Move(ctx, targets)
-	if drivers.RemedyOf(err) >= drivers.Reconnect && !errors.Is(err, io.EOF) {
-		return nil
+	if s.again(ctx, err) {
+		err = s.Stage.Move(ctx, targets)
 	}
 	return err
 }
