@@ -140,7 +140,7 @@ func (m *Model) rays(b *band, s *stand, pairs bool) []ray {
 	if !pairs {
 		return s.rays(m.rules, points((3+0.9*phase)*m.effort, 2, 48), points((8+2*phase)*m.effort, 6, 96), m.mirrored)
 	}
-	return s.rays(m.rules, points((2.5+0.65*phase+0.75*edge)*m.effort, 2, 48), points((7+1.5*phase+2*edge)*m.effort, 6, 96), m.mirrored)
+	return s.rays(m.rules, points((1.6+0.55*phase+0.5*edge)*m.effort, 2, 48), points((5+1.2*phase+1.2*edge)*m.effort, 6, 96), m.mirrored)
 }
 
 // at is a node of the table, computed when it is first asked for.
