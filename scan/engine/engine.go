@@ -293,7 +293,15 @@ func (e *Engine) turn(ctx context.Context) error {
 	if e.progress.Decided < len(e.Plan.Points) {
 		return e.decidePoints(ctx)
 	}
+	if e.early(ctx) {
+		return nil
+	}
 	task, ok := e.progress.next(e.now())
+	if ok {
+		if cut, err := e.cutAtEnd(ctx, task); cut || err != nil {
+			return err
+		}
+	}
 	if !ok {
 		if done, err := e.putBack(ctx); !done || err != nil {
 			return err

@@ -140,6 +140,16 @@ func (s fakeShutter) State(context.Context) (drivers.Blade, error) {
 	return drivers.Blade{Open: s.w.open[string(s.name)]}, nil
 }
 
+type fakeSensor struct {
+	fakeDevice
+	value func() (float64, error)
+}
+
+func (s fakeSensor) Unit() string { return "mW" }
+func (s fakeSensor) Read(context.Context) (float64, error) {
+	return s.value()
+}
+
 func (w *world) bench() *Bench {
 	axis := func(name drivers.AxisName) scan.Axis {
 		return scan.Axis{Name: name, Controller: "rotary", Low: -10 * unit.Degree, High: 10 * unit.Degree, Tolerance: unit.Degree / 100, Backlash: unit.Degree / 2, Rising: true, Settle: 100 * time.Millisecond, Proof: drivers.Proved}

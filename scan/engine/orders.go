@@ -148,7 +148,7 @@ func (e *Engine) holdFor(ctx context.Context, cause protocol.Cause, text string,
 
 // release takes causes away. With none left the run is running again, and must be made ready.
 func (e *Engine) release(ctx context.Context, text string, detail map[string]any, causes ...protocol.Cause) error {
-	left := slices.DeleteFunc(slices.Clone(e.progress.Causes), func(c protocol.Cause) bool { return slices.Contains(causes, c) })
+	left := without(e.progress.Causes, causes...)
 	if len(left) == len(e.progress.Causes) {
 		return nil
 	}
@@ -165,6 +165,10 @@ func add(causes []protocol.Cause, c protocol.Cause) []protocol.Cause {
 		return causes
 	}
 	return append(slices.Clone(causes), c)
+}
+
+func without(causes []protocol.Cause, gone ...protocol.Cause) []protocol.Cause {
+	return slices.DeleteFunc(slices.Clone(causes), func(c protocol.Cause) bool { return slices.Contains(gone, c) })
 }
 
 func join(causes []protocol.Cause) string {

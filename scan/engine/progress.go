@@ -30,6 +30,8 @@ type Progress struct {
 	done        map[scan.Visit]bool             // accepted or given up
 	attempts    map[taskKey]int                 // failed since the last success or resume
 	series      map[taskKind]series             // what is repeated beside the points
+	guard       string                          // the guard that broke last
+	cut         bool                            // the schedule left the rest of the sweep out
 	stand       map[drivers.AxisName]unit.Angle // where the axes have to be that the sweep does not move; nil until that is written
 	spent       time.Duration                   // bench time spent on accepted light readings, moves included
 	spentOn     int
@@ -50,6 +52,7 @@ const (
 	lightTask      taskKind = "light"
 	darkTask       taskKind = "dark"
 	backgroundTask taskKind = "background"
+	restTask       taskKind = "rest" // all visits that are left, when the schedule cuts them off
 )
 
 // series is what was done so far of something that is repeated beside the points.
@@ -251,13 +254,16 @@ func (p *Progress) applyEvent(ev *protocol.Event) {
 	switch ev.Kind {
 	case protocol.Began:
 		p.startedAt = ev.At.Time
-	case protocol.Held, protocol.Interrupted:
+	case protocol.Held, protocol.Interrupted, protocol.GuardBroken:
 		p.heldAt = ev.At.Time
 		p.lastLightA = time.Time{}
+		if name, ok := ev.Detail["guard"].(string); ok {
+			p.guard = name
+		}
 		if key, ok := eventKey(ev.Detail); ok && slices.Contains(ev.Causes, protocol.ByLight) {
 			p.attempts[key]++ // too bright counts as an attempt, or an arm in the pump would be tried for ever
 		}
-	case protocol.WentOn:
+	case protocol.WentOn, protocol.GuardMended:
 		p.lastLightA = time.Time{}
 		if _, mended := ev.Detail["cause"]; !mended {
 			clear(p.attempts) // a person or a restart begins anew; what mended itself does not
@@ -267,7 +273,9 @@ func (p *Progress) applyEvent(ev *protocol.Event) {
 			p.attempts[key]++
 		}
 	case protocol.SetAside:
-		if key, ok := eventKey(ev.Detail); ok {
+		if key, ok := eventKey(ev.Detail); ok && key.kind == restTask {
+			p.cut = true
+		} else if ok {
 			p.finish(key, ev.At.Time)
 		}
 	}
@@ -295,7 +303,7 @@ func eventKey(detail map[string]any) (taskKey, bool) {
 	switch taskKind(kind) {
 	case lightTask:
 		return taskKey{lightTask, scan.Visit{Point: number("point"), Visit: number("visit")}}, true
-	case darkTask, backgroundTask:
+	case darkTask, backgroundTask, restTask:
 		return taskKey{kind: taskKind(kind)}, true
 	}
 	return taskKey{}, false
@@ -306,7 +314,7 @@ func (p *Progress) next(now time.Time) (task, bool) {
 	for p.cursor < len(p.visits) && p.done[p.visits[p.cursor]] {
 		p.cursor++
 	}
-	all := p.cursor >= len(p.visits)
+	all := p.cursor >= len(p.visits) || p.cut
 	for _, c := range p.cadences() {
 		had := p.series[c.kind]
 		due := c.AtStart && had.taken == 0 && len(p.done) == 0 ||
@@ -340,18 +348,26 @@ func (p *Progress) Planned() int {
 	if p.thePlan == nil {
 		return 0
 	}
-	n := len(p.visits)
+	n := len(p.done) + p.left()
 	for _, c := range p.cadences() {
 		n += p.series[c.kind].taken + p.ahead(c)
 	}
 	return n
 }
 
+// left is how many visits are still to be made.
+func (p *Progress) left() int {
+	if p.cut {
+		return 0
+	}
+	return len(p.visits) - len(p.done)
+}
+
 // ahead is how many of a cadence are certain to come.
 func (p *Progress) ahead(c cadence) int {
 	n := 0
 	had := p.series[c.kind]
-	left := len(p.visits) - len(p.done)
+	left := p.left()
 	if c.AtStart && had.taken == 0 && len(p.done) == 0 {
 		n++
 	}
@@ -374,7 +390,7 @@ func (p *Progress) timeLeft() *time.Duration {
 	if p.spentOn > 0 {
 		each = p.spent / time.Duration(p.spentOn)
 	}
-	total := time.Duration(len(p.visits)-len(p.done)) * each
+	total := time.Duration(p.left()) * each
 	for _, c := range p.cadences() {
 		total += time.Duration(p.ahead(c)) * c.Dwell.Time
 	}

@@ -100,6 +100,11 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 	for _, a := range e.Bench.Axes {
 		r.Angles = append(r.Angles, protocol.Angle{Axis: string(a.Name), Target: e.commanded[a.Name], Before: before[a.Name], After: before[a.Name], Proof: string(a.Proof)})
 	}
+	if t.kind != darkTask {
+		if err := e.checkGuards(ctx); err != nil {
+			return nil, err
+		}
+	}
 	if err := e.light(ctx, t.kind != darkTask); err != nil {
 		return nil, err
 	}
@@ -131,6 +136,12 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 		if err := e.judgeLight(r.Counts, r.Gate.Duration(), slice.Counts, slice.Gate.Duration()); err != nil {
 			r.Sensors = watch.sums()
 			return r, err
+		}
+		if t.kind != darkTask {
+			if err := e.judgeGuards(watch); err != nil {
+				r.Sensors = watch.sums()
+				return r, err
+			}
 		}
 	}
 	r.Sensors = watch.sums()

@@ -21,6 +21,9 @@ func (e *Engine) afterError(ctx context.Context, t task, err error) error {
 		detail["detector"], detail["rate_hz"], detail["limit_hz"] = b.detector, b.rateHz, b.limitHz
 		return e.holdFor(ctx, protocol.ByLight, "held: "+b.Error(), detail)
 	}
+	if b, ok := errors.AsType[*brokenGuard](err); ok {
+		return e.afterGuard(ctx, t, b)
+	}
 	if _, ok := errors.AsType[*notThere](err); ok {
 		return e.again(ctx, t, err.Error())
 	}
@@ -270,20 +273,28 @@ const lookAgain = 30 * time.Second
 // waitOut waits while the run holds: for an operator, or for what mends itself.
 func (e *Engine) waitOut(ctx context.Context) error {
 	p := &e.progress
-	if !p.holds(protocol.ByOperator) && e.now().Sub(p.heldAt) > e.patience {
-		return e.end(ctx, protocol.Failed, fmt.Sprintf("failed: nobody came within %s; it was %s", e.patience, p.Reason), nil)
+	if patience := e.patienceNow(); !p.holds(protocol.ByOperator) && e.now().Sub(p.heldAt) > patience {
+		return e.end(ctx, protocol.Failed, fmt.Sprintf("failed: it did not mend within %s; it was %s", patience, p.Reason), nil)
 	}
 	pause := time.Minute
-	if p.holds(protocol.ByLight) {
+	switch {
+	case p.holds(protocol.ByGuard):
+		pause = guardEvery
+	case p.holds(protocol.ByLight):
 		pause = lookAgain
 	}
 	op, end := e.operation(ctx)
 	err := e.Bench.Pace.Wait(op, pause)
 	end()
-	if err != nil || !p.holds(protocol.ByLight) {
+	switch {
+	case err != nil:
 		return nil
+	case p.holds(protocol.ByGuard):
+		return e.lookAtGuards(ctx)
+	case p.holds(protocol.ByLight):
+		return e.lookAtLight(ctx)
 	}
-	return e.lookAtLight(ctx)
+	return nil
 }
 
 // lookAtLight opens the detectors for a moment, with the pump closed, and ends the hold when the

@@ -1,0 +1,50 @@
+package engine
+
+import (
+	"context"
+	"fmt"
+	"time"
+
+	"gemel/protocol"
+)
+
+// overhead is what a reading may take beside its dwell before the run has measured it.
+const overhead = 15 * time.Second
+
+// early waits, at rest, while the schedule says that it is too early. waited says that the loop has
+// to look again.
+func (e *Engine) early(ctx context.Context) (waited bool) {
+	left := e.Plan.Schedule.NotBefore.Sub(e.now())
+	if e.Plan.Schedule.NotBefore.IsZero() || left <= 0 {
+		return false
+	}
+	op, end := e.operation(ctx)
+	defer end()
+	_ = e.Bench.Pace.Wait(op, min(left, time.Minute))
+	return true
+}
+
+// cutAtEnd leaves the rest of the sweep out when the next visit and the closing readings would not
+// be over by the schedule's end. The closing readings are reserved time: they happen all the same.
+func (e *Engine) cutAtEnd(ctx context.Context, t task) (cut bool, err error) {
+	end := e.Plan.Schedule.FinishBy
+	p := &e.progress
+	if end.IsZero() || t.kind != lightTask || p.cut {
+		return false, nil
+	}
+	need := t.dwell.Time + overhead
+	if p.spentOn > 0 {
+		need = max(t.dwell.Time, p.spent/time.Duration(p.spentOn)) + overhead/3
+	}
+	for _, c := range p.cadences() {
+		if c.AtEnd {
+			need += c.Dwell.Time + overhead
+		}
+	}
+	if !e.now().Add(need).After(end) {
+		return false, nil
+	}
+	left := len(p.visits) - len(p.done)
+	return true, e.note(ctx, protocol.SetAside, fmt.Sprintf("%d visits are left out: they would not be over by %s", left, end.Format("15:04")),
+		map[string]any{"task": string(restTask), "left_out": left, "finish_by": protocol.Time{Time: end}.String()})
+}
