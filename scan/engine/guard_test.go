@@ -134,7 +134,8 @@ func TestAScheduleWaitsAndThenLeavesOutWhatDoesNotFit(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
 		began := time.Now()
 		n := newNight(t, func(c *Config) {
-			c.Plan.Schedule = scan.Schedule{NotBefore: began.Add(2 * time.Hour), FinishBy: began.Add(2*time.Hour + 36*time.Second)}
+			c.Plan.Repeat.Times = 20
+			c.Plan.Schedule = scan.Schedule{NotBefore: began.Add(2 * time.Hour), FinishBy: began.Add(2*time.Hour + 90*time.Second)}
 		})
 		state, err := n.eng.Run(t.Context())
 		if state != protocol.Finished || err != nil {
@@ -145,10 +146,10 @@ func TestAScheduleWaitsAndThenLeavesOutWhatDoesNotFit(t *testing.T) {
 			t.Errorf("counted at %s; want nothing before %s", first, began.Add(2*time.Hour))
 		}
 		last := readings[len(readings)-1]
-		if last.Kind != protocol.Dark || last.EndedAt.After(began.Add(2*time.Hour+36*time.Second)) {
+		if last.Kind != protocol.Dark || last.EndedAt.After(began.Add(2*time.Hour+90*time.Second)) {
 			t.Errorf("the last reading is %s at %s; want the closing dark before the end", last.Kind, last.EndedAt)
 		}
-		if got := n.eng.Snapshot(); got.Accepted >= 9 || got.Accepted < 4 || got.Accepted != got.Planned {
+		if got := n.eng.Snapshot(); got.Accepted >= 60 || got.Accepted < 15 || got.Accepted != got.Planned {
 			t.Errorf("%d accepted of %d planned; want the cut sweep to be all there is", got.Accepted, got.Planned)
 		}
 		if p := n.fold(t); !p.cut {
