@@ -83,7 +83,7 @@ func TestCounterContract(t *testing.T) {
 			drivertest.Counter(t, synctest.Test, func(t *testing.T) drivertest.CounterSetup {
 				in := &counting{}
 				l, far := plugged(t, func(m string) string { a, _ := in.message(m); return a },
-					func() { in.set(func() { in.restart, in.until, in.mask = true, time.Time{}, "0" }) })
+					func() { in.set(func() { in.restart, in.until, in.mask, in.empty = true, time.Time{}, "0", true }) })
 				cfg := counterConfig()
 				cfg.Untagged = untagged
 				c, err := NewCounter(l, cfg)

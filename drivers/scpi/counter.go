@@ -271,23 +271,27 @@ func (c *Counter) untilOver(ctx context.Context, epoch line.Epoch) error {
 }
 
 // read takes the counts. The registers are cleared by being asked, so the first of the two
-// questions cannot be repeated: if its answer is lost, so is the gate.
+// questions cannot be repeated: if its answer is lost, so is the gate. It begins with the events: a
+// counter that restarted has no counts to answer, and only the first part of a short answer is known.
 func (c *Counter) read(ctx context.Context, epoch line.Epoch) (drivers.Gate, error) {
-	units, err := c.query(ctx, line.Question{Op: "count", Epoch: epoch}, c.set.Fetch, c.set.AskQuality, c.common.AskEvents, c.common.AskError)
+	units, err := c.query(ctx, line.Question{Op: "count", Epoch: epoch},
+		c.common.AskEvents, c.set.Fetch, c.set.AskQuality, c.common.AskEvents, c.common.AskError)
 	if err != nil {
 		return drivers.Gate{}, err
 	}
-	if entry, err := c.entry("count", units[3]); err != nil || entry != nil {
+	if entry, err := c.entry("count", units[4]); err != nil || entry != nil {
 		return drivers.Gate{}, errors.Join(err, entry)
 	}
-	if err := c.events(ctx, "count", units[2]); err != nil {
-		return drivers.Gate{}, err
+	for _, events := range []string{units[0], units[3]} {
+		if err := c.events(ctx, "count", events); err != nil {
+			return drivers.Gate{}, err
+		}
 	}
-	quality, err := register(units[1])
+	quality, err := register(units[2])
 	if err != nil {
 		return drivers.Gate{}, c.errorf("count", drivers.Retry, "quality register: %w", err)
 	}
-	raw, err := c.twice(ctx, epoch, units[0])
+	raw, err := c.twice(ctx, epoch, units[1])
 	if err != nil {
 		return drivers.Gate{}, err
 	}

@@ -159,10 +159,10 @@ func (d *device) miscounted(op string, units []string, asks int) error {
 
 // exchange is query without a look at how many parts were answered; asks says how many should be.
 func (d *device) exchange(ctx context.Context, q line.Question, parts ...string) (units []string, asks int, err error) {
-	events := -1 // which answer is the event register
+	var events []int // which answers are the event register
 	for _, p := range parts {
 		if p == d.common.AskEvents {
-			events = asks
+			events = append(events, asks)
 		}
 		if isQuery(p) {
 			asks++
@@ -189,13 +189,16 @@ func (d *device) exchange(ctx context.Context, q line.Question, parts ...string)
 			}
 			units = units[:len(units)-1]
 		}
+		// A part that fails is not answered, so that of a short answer only the first part is known.
+		for _, at := range events {
+			if at == 0 || len(units) == asks {
+				if bits, err := register(units[at]); err == nil && bits&eventPowerOn != 0 {
+					return line.Verdict{Kind: line.Restarted}
+				}
+			}
+		}
 		if tag == "" && len(units) != asks {
 			return line.Verdict{Reason: fmt.Sprintf("want %d parts", asks)}
-		}
-		if events >= 0 && len(units) == asks {
-			if bits, err := register(units[events]); err == nil && bits&eventPowerOn != 0 {
-				return line.Verdict{Kind: line.Restarted}
-			}
 		}
 		return line.Verdict{Kind: line.Answer}
 	}

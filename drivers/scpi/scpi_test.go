@@ -230,6 +230,8 @@ type counting struct {
 	mask     string
 	until    time.Time
 	restart  bool                                        // the power-on bit waits to be asked for
+	empty    bool                                        // there are no counts: FETCh? is refused and not answered
+	stale    bool                                        // such a refusal waits in the event register and the error queue
 	meddle   func(message, answer string) (string, bool) // what really goes out; false: nothing
 	deafInit bool                                        // the next message with an INITiate is lost on the way there
 }
@@ -286,7 +288,7 @@ func (c *counting) message(message string) (string, bool) {
 		case "*ESE?":
 			say("%s", c.mask)
 		case "*ESR?":
-			say("%d", map[bool]int{true: 128}[c.restart])
+			say("%d", map[bool]int{true: 128}[c.restart]+map[bool]int{true: 16}[c.stale])
 			c.restart = false
 		case ":SENS:TOT:APER?":
 			say("+1.00000000E+00")
@@ -294,18 +296,21 @@ func (c *counting) message(message string) (string, bool) {
 			c.inits++
 			c.gates++
 			c.until = time.Now().Add(time.Second)
-			over = false
+			over, c.empty = false, false
 		case ":ABOR":
 			c.aborts++
 			c.until = time.Time{}
 		case ":STAT:OPER:COND?":
 			say("%d", map[bool]int{false: 16}[over])
 		case ":FETC?":
-			say("%d,%d,%d,%d", 1000+c.gates, 900+c.gates, 50, c.gates)
+			if c.stale = c.stale || c.empty; !c.empty {
+				say("%d,%d,%d,%d", 1000+c.gates, 900+c.gates, 50, c.gates)
+			}
 		case ":STAT:QUES:EVEN?":
 			say("0")
 		case ":SYST:ERR?":
-			say(`0,"No error"`)
+			say("%s", map[bool]string{true: `-230,"Data corrupt or stale"`, false: `0,"No error"`}[c.stale])
+			c.stale = false
 		}
 	}
 	answer := strings.Join(answers, ";")
@@ -448,24 +453,32 @@ func TestAnAbortFromBesideEndsTheCountAtOnce(t *testing.T) {
 }
 
 func TestARestartDuringAGateKeepsNoReading(t *testing.T) {
-	counted(t, func(t *testing.T, c *Counter, in *counting, l *line.Line) {
-		go func() {
-			time.Sleep(500 * time.Millisecond)
-			in.set(func() { in.restart, in.until = true, time.Time{} })
-		}()
-		_, err := c.Count(t.Context(), time.Second)
-		if e := failed(t, err, drivers.Reconnect, true); !e.Restarted {
-			t.Error("want it marked as a restart")
-		}
-		_, err = c.Count(t.Context(), time.Second)
-		failed(t, err, drivers.Reconnect, false) // until connected
-		if err := c.Connect(t.Context()); err != nil {
-			t.Fatal(err)
-		}
-		if _, err := c.Count(t.Context(), time.Second); err != nil {
-			t.Error(err)
-		}
-	})
+	for name, forgets := range map[string]bool{"the counts of the gate before are still there": false, "there are no counts": true} {
+		t.Run(name, func(t *testing.T) {
+			counted(t, func(t *testing.T, c *Counter, in *counting, l *line.Line) {
+				go func() {
+					time.Sleep(500 * time.Millisecond)
+					in.set(func() { in.restart, in.until, in.empty = true, time.Time{}, forgets })
+				}()
+				_, err := c.Count(t.Context(), time.Second)
+				if e := failed(t, err, drivers.Reconnect, true); !e.Restarted {
+					t.Error("want it marked as a restart")
+				}
+				_, err = c.Count(t.Context(), time.Second)
+				failed(t, err, drivers.Reconnect, false) // until connected
+				in.set(func() { in.heard = nil })
+				if err := c.Connect(t.Context()); err != nil {
+					t.Fatal(err)
+				}
+				if heard := strings.Join(in.heard, "\n"); !strings.Contains(heard, "*RST") {
+					t.Errorf("connecting sent\n%s\nwant the start settings", heard)
+				}
+				if _, err := c.Count(t.Context(), time.Second); err != nil {
+					t.Error(err)
+				}
+			})
+		})
+	}
 }
 
 func TestDamagedAndDoubledAnswersAreNeverCounts(t *testing.T) {
