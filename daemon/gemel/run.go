@@ -3,14 +3,17 @@ package main
 import (
 	"context"
 	"encoding/json"
+	"errors"
 	"fmt"
 	"time"
 
 	"github.com/rs/zerolog"
 
 	"gemel/daemon/crew"
+	"gemel/drivers"
 	"gemel/protocol"
 	"gemel/protocol/strict"
+	"gemel/scan/engine"
 )
 
 type runCommand struct {
@@ -42,6 +45,9 @@ func (c *runCommand) Run(ctx context.Context, con *console) error {
 	}
 	defer s.close()
 	con.caution(s.file)
+	if err := s.refuseHopeless(ctx); err != nil {
+		return err
+	}
 	run, err := c.choose(ctx, s, string(text))
 	if err != nil {
 		return err
@@ -70,6 +76,47 @@ func (c *runCommand) Run(ctx context.Context, con *console) error {
 		return errNotFinished
 	}
 	return nil
+}
+
+// refuseHopeless ends a call before there is a run when a device is held by another program, or
+// is another one: no waiting mends that, and somebody sits at the keyboard. The rest state comes
+// first, as at every start.
+func (s *session) refuseHopeless(ctx context.Context) error {
+	b := s.keeper.Bench
+	bad := engine.Rest(ctx, b)
+	if bad == "" {
+		return nil
+	}
+	var hopeless []error
+	for _, d := range devices(b) {
+		within, cancel := context.WithTimeout(ctx, 5*time.Second)
+		err := d.Connect(within)
+		cancel()
+		if drivers.RemedyOf(err) == drivers.GiveUp {
+			hopeless = append(hopeless, err)
+		}
+	}
+	if len(hopeless) == 0 {
+		return nil // what may mend itself is the run's to wait for
+	}
+	return fmt.Errorf("%w; no run was begun, and the bench may not be at rest: %s", errors.Join(hopeless...), bad)
+}
+
+// devices lists what a run cannot do without.
+func devices(b *engine.Bench) []drivers.Device {
+	var all []drivers.Device
+	for _, d := range b.Detectors {
+		if d.Protect != nil {
+			all = append(all, d.Protect)
+		}
+	}
+	if b.Pump != nil {
+		all = append(all, b.Pump)
+	}
+	for _, s := range b.Stages {
+		all = append(all, s)
+	}
+	return append(all, b.Counter)
 }
 
 // checkFirst works everything out that can be known without touching anything.

@@ -1,0 +1,302 @@
+//go:build unix
+
+package main
+
+import (
+	"flag"
+	"fmt"
+	"math"
+	"path/filepath"
+	"strings"
+	"syscall"
+	"testing"
+	"time"
+
+	"gemel/daemon/logbook"
+	"gemel/protocol"
+	"gemel/protocol/client"
+	"gemel/sim/instruments"
+)
+
+var stopAll = flag.Bool("stop.all", false, "stop in every phase in every way, on every line that can be out of step")
+
+// stopWithin is what is promised for every phase: until the stop bytes are at the instruments.
+const stopWithin = time.Second
+
+// phase is a place in a run's life at which somebody wants it to stop.
+type phase struct {
+	name     string
+	bench    []change
+	recipe   string
+	troubles string
+	// reach waits until the run is there. from is the place in the ledger to look from.
+	reach func(t *testing.T, l *truth, data string)
+	rare  bool // in the long form only
+	// outOfStep is the device whose line is being brought back in step.
+	outOfStep string
+}
+
+const farRecipe = `
+title: Far apart
+sweep: [{axis: signal_arm, from: 0 deg, to: 10 deg, step: 10 deg}]
+dwell: {time: 40 s, slice: 20 s}
+`
+
+func gateIsLong(r instruments.Record) bool {
+	return r.Kind == instruments.GateOpened && r.Gate.SetS >= 10
+}
+
+func phases() []phase {
+	all := []phase{{
+		name: "during a move", recipe: farRecipe,
+		bench: []change{{`speed: 2000 deg/s$`, "speed: 1 deg/s"}},
+		reach: func(t *testing.T, l *truth, _ string) {
+			l.await(t, 0, "a long move", func(r instruments.Record) bool {
+				s, is := r.Axes["signal_arm"]
+				return r.Kind == instruments.MoveStarted && is && math.Abs(s.ToDeg-s.FromDeg) > 0.5
+			})
+		},
+	}, {
+		name: "during a gate", recipe: farRecipe,
+		reach: func(t *testing.T, l *truth, _ string) { l.await(t, 0, "a long gate", gateIsLong) },
+	}, {
+		name: "while an arm settles", recipe: farRecipe,
+		bench: []change{{`settle: 2 ms\n    park: 1 deg`, "settle: 50 s\n    park: 1 deg"}},
+		reach: func(t *testing.T, l *truth, _ string) {
+			n := 0
+			for range 2 { // away from the target by the backlash, and the approach
+				_, n = l.await(t, n, "the arms' approach", func(r instruments.Record) bool {
+					_, is := r.Axes["signal_arm"]
+					return r.Kind == instruments.MoveEnded && is
+				})
+			}
+			<-time.After(300 * time.Millisecond) // until the program has seen them at rest; settling leaves no trace
+		},
+	}, {
+		name: "during a hold", recipe: farRecipe,
+		reach: func(t *testing.T, l *truth, data string) {
+			l.await(t, 0, "a long gate", gateIsLong)
+			must(t, "hold", "--data", data)
+		},
+	}}
+	for i, device := range []string{"rotary", "counter", "shutter", "signal_shield", "monitor"} {
+		first := 20
+		if device == "shutter" {
+			first = 6 // it is asked little once it is open
+		}
+		var list []string
+		for n := first; n < first+8; n++ {
+			list = append(list, fmt.Sprintf("missing(%s, answer %d)", device, n))
+		}
+		all = append(all, phase{
+			name: "while the line of " + device + " is out of step", troubles: strings.Join(list, "; "), rare: i > 1, outOfStep: device,
+			bench:  impatient(),
+			recipe: "title: Out of step\nsweep: [{axis: signal_arm, from: 0 deg, to: 10 deg, step: 0.1 deg}]\ndwell: {time: 20 ms, slice: 10 ms}\n",
+			reach: func(t *testing.T, l *truth, _ string) {
+				l.await(t, 0, "the first missing answer", func(r instruments.Record) bool { return r.Kind == instruments.Troubled })
+			},
+		})
+	}
+	return all
+}
+
+// impatient shortens the waits for answers in the short form.
+func impatient() []change {
+	if *stopAll {
+		return nil
+	}
+	return []change{{"device: simulated}", "device: simulated, answer_within: 200 ms, longest_answer: 400 ms}"}}
+}
+
+// way is how somebody wants it to stop.
+type way struct {
+	name string
+	// start starts the run. ask stops it and returns the moment before it was asked, and a check of
+	// what came of it.
+	start func(t *testing.T, s *stopping)
+	ask   func(t *testing.T, s *stopping) time.Time
+	end   func(t *testing.T, s *stopping)
+}
+
+type stopping struct {
+	bench, recipe, data, lines string
+	p                          *program
+}
+
+func (s *stopping) serve(t *testing.T) {
+	var ok bool
+	if s.p, ok = serve(t, nil, "--bench", s.bench, "--data", s.data, "--lines", s.lines); !ok {
+		t.Fatalf("serve: %s", s.p.err)
+	}
+	must(t, "start", "--data", s.data, "--recipe", s.recipe)
+}
+
+func (s *stopping) row(t *testing.T) logbook.RunRow {
+	t.Helper()
+	book, err := logbook.OpenReadOnly(filepath.Join(s.data, "logbook.db"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer book.Close()
+	rows, err := book.Runs(t.Context())
+	if err != nil || len(rows) != 1 {
+		t.Fatalf("%d runs, %v; want 1", len(rows), err)
+	}
+	return rows[0]
+}
+
+func signalled(sig syscall.Signal) func(*testing.T, *stopping) time.Time {
+	return func(t *testing.T, s *stopping) time.Time {
+		asked := time.Now()
+		s.p.signal(sig)
+		return asked
+	}
+}
+
+var ways = []way{{
+	name: "by a request", start: func(t *testing.T, s *stopping) { s.serve(t) },
+	ask: func(t *testing.T, s *stopping) time.Time {
+		cl, err := client.ConnectFolder(s.data, protocol.ControlRole)
+		if err != nil {
+			t.Fatal(err)
+		}
+		defer cl.Close()
+		status, err := cl.Status(within(t))
+		if err != nil {
+			t.Fatal(err)
+		}
+		asked := time.Now()
+		r, err := cl.Stop(within(t), protocol.RunRequest{Run: status.Run, Who: "the test"})
+		if err != nil || r.State != protocol.Stopped || !r.Recorded {
+			t.Errorf("stop was answered %+v, %v; want stopped and recorded", r, err)
+		}
+		t.Logf("answered after %s", time.Since(asked).Round(time.Millisecond))
+		return asked
+	},
+	end: func(t *testing.T, s *stopping) {
+		s.p.signal(syscall.SIGTERM)
+		if code := s.p.wait(); code != exitDone {
+			t.Errorf("serve: exit code %d after SIGTERM; want 0\n%s", code, s.p.err)
+		}
+		if row := s.row(t); row.State != protocol.Stopped {
+			t.Errorf("the run is %s (%s); want stopped", row.State, row.Reason)
+		}
+	},
+}, {
+	name: "by SIGTERM to serve", start: func(t *testing.T, s *stopping) { s.serve(t) },
+	ask: signalled(syscall.SIGTERM),
+	end: func(t *testing.T, s *stopping) {
+		if code := s.p.wait(); code != exitDone {
+			t.Errorf("serve: exit code %d; want 0\n%s", code, s.p.err)
+		}
+		if row := s.row(t); row.State != protocol.Holding || len(row.Causes) == 0 || row.Causes[len(row.Causes)-1] != protocol.ByRestart {
+			t.Errorf("the run is %s %v (%s); want it holding for the restart", row.State, row.Causes, row.Reason)
+		}
+	},
+}, {
+	name: "by Ctrl-C to run",
+	start: func(t *testing.T, s *stopping) {
+		s.p = launch(t, nil, "run", "--bench", s.bench, "--data", s.data, "--lines", s.lines, "--recipe", s.recipe)
+	},
+	ask: signalled(syscall.SIGINT),
+	end: func(t *testing.T, s *stopping) {
+		if code := s.p.wait(); code != exitFailed {
+			t.Errorf("run: exit code %d; want 1: it did not finish\n%s", code, s.p.err)
+		}
+		if row := s.row(t); row.State != protocol.Stopped {
+			t.Errorf("the run is %s (%s); want stopped", row.State, row.Reason)
+		}
+	},
+}}
+
+// Each phase is stopped in one way by default, in turn; with -stop.all in all of them.
+func TestAStopReachesTheInstrumentsWithinASecond(t *testing.T) {
+	for i, ph := range phases() {
+		for j, w := range ways {
+			switch {
+			case *stopAll:
+			case ph.rare, i%len(ways) != j, testing.Short() && i > 1:
+				continue
+			case ph.name == "during a hold" && w.name == "by Ctrl-C to run":
+				continue
+			}
+			t.Run(ph.name+" "+w.name, func(t *testing.T) { stop(t, ph, w) })
+		}
+	}
+}
+
+func stop(t *testing.T, ph phase, w way) {
+	dir := t.TempDir()
+	s := &stopping{bench: quick(t, dir, ph.bench...), recipe: writeFile(t, filepath.Join(dir, "r.yaml"), ph.recipe), data: filepath.Join(dir, "data"), lines: filepath.Join(dir, "lines")}
+	sim, ledger := simulate(t, s.bench, s.lines, ph.troubles)
+	w.start(t, s)
+	ph.reach(t, ledger, s.data)
+	before := len(ledger.all(t))
+	asked := w.ask(t, s)
+	w.end(t, s)
+	quit(t, sim)
+	<-ledger.done
+	// The short form asks this of the instrument whose line is out of step alone, if one is.
+	want := []string{"rotary", "plate", "gate", "pump"}
+	if ph.outOfStep != "" && !*stopAll {
+		want = []string{map[string]string{"rotary": "rotary", "counter": "gate"}[ph.outOfStep]}
+	}
+	wantStopped(t, ledger.all(t), before, asked, want)
+}
+
+// wantStopped reads from the instruments' ledger what a stop did, and when.
+func wantStopped(t *testing.T, records []instruments.Record, before int, asked time.Time, want []string) {
+	t.Helper()
+	told := map[string]time.Duration{} // by device: when the stop was there
+	gate, pump := false, false
+	var report []string
+	note := func(what string, r instruments.Record) {
+		if _, known := told[what]; known || r.At.Before(asked) {
+			return
+		}
+		told[what] = r.At.Sub(asked)
+		report = append(report, fmt.Sprintf("%s %s", what, told[what].Round(time.Millisecond)))
+	}
+	for i, r := range records {
+		switch r.Kind {
+		case instruments.GateOpened:
+			gate = r.At.Before(asked)
+		case instruments.GateClosed:
+			if r.At.Before(asked) {
+				gate = false
+			}
+		case instruments.GateAborted:
+			if r.At.Before(asked) {
+				gate = false
+			} else if i >= before {
+				note("gate", r)
+			}
+		case instruments.BladeStarted:
+			if r.Device == "shutter" {
+				if r.At.Before(asked) {
+					pump = r.Text == "open"
+				} else if r.Text == "closed" {
+					note("pump", r)
+				}
+			}
+		case instruments.Stopped:
+			note(r.Device, r)
+		}
+	}
+	for _, what := range want {
+		at, is := told[what]
+		if what == "gate" && !gate || what == "pump" && !pump {
+			continue // none was open
+		}
+		if !is || at > stopWithin {
+			t.Errorf("%s: the stop arrived after %s (at all: %t); want it within %s", what, at.Round(time.Millisecond), is, stopWithin)
+		}
+	}
+	// What was on the wire may still begin; nothing may after the stop bytes.
+	for _, r := range records {
+		if at := r.At.Sub(asked); at > told["rotary"]+aftermath && len(moved([]instruments.Record{r})) > 0 {
+			t.Errorf("%s %s began %s after the stop was asked for", r.Device, r.Kind, at.Round(time.Millisecond))
+		}
+	}
+	t.Log(strings.Join(report, ", "))
+}
