@@ -39,6 +39,9 @@ type Line struct {
 	inPort     bool // a call of the port runs: should it panic, the port is lost
 	generation int  // raised by each opening
 	lost       error
+	openedAt   time.Time
+	shortLived time.Duration // not zero: the last port was lost soon, and this is the pause before the next
+	notBefore  time.Time     // when that pause is over
 	rx         []byte
 	buf        [512]byte
 	outUntil   time.Time // not zero: out of step until then, and until quiet
@@ -403,10 +406,13 @@ func (l *Line) ended(j *job) *Fault {
 	select {
 	case u := <-l.urgent:
 		l.do(u, l.pass)
-		if f := l.current(j.seat); f != nil && !j.connect {
+		switch f := l.current(j.seat); {
+		case j.connect && l.port == nil:
+			return &Fault{Why: Lost, Err: fmt.Errorf("line lost: %w", l.lost)}
+		case j.connect:
+		case f != nil:
 			return f
-		}
-		if !j.connect {
+		default:
 			return &Fault{Why: Interrupted, again: u.seat != j.seat, Err: fmt.Errorf("interrupted by an urgent message to %s", u.seat.set.Device)}
 		}
 	case <-j.q.Epoch:
@@ -443,7 +449,8 @@ func (l *Line) passInTurn(u *job) result {
 func (l *Line) pass(u *job) result {
 	start := time.Now()
 	if l.port == nil {
-		if f := l.open(u); f != nil {
+		l.notBefore = time.Time{}
+		if f := l.open(u, start.Add(l.set.OpenWithin)); f != nil {
 			return result{fault: f}
 		}
 	}
@@ -463,9 +470,10 @@ func (l *Line) pass(u *job) result {
 
 // connect opens the port if need be, waits for quiet, and makes the seat current again.
 func (l *Line) connect(j *job) result {
+	by := time.Now().Add(l.set.OpenWithin)
 	for {
 		if l.port == nil {
-			if f := l.open(j); f != nil {
+			if f := l.open(j, by); f != nil {
 				return result{fault: f}
 			}
 		}
@@ -485,17 +493,37 @@ func (l *Line) connect(j *job) result {
 }
 
 // open opens the port, with growing pauses, until it is open or the job's time is over.
-func (l *Line) open(j *job) *Fault {
-	ctx, cancel := context.WithTimeout(j.ctx, l.set.OpenWithin)
+func (l *Line) open(j *job, by time.Time) *Fault {
+	ctx, cancel := context.WithDeadline(j.ctx, by)
 	defer cancel()
 	defer context.AfterFunc(l.running, cancel)()
-	pause := l.set.BackoffMin
+	pause, wait := l.set.BackoffMin, time.Until(l.notBefore)
 	for {
+		if wait > 0 {
+			timer := time.NewTimer(wait)
+			select {
+			case <-timer.C:
+			case <-ctx.Done():
+			case u := <-l.urgent:
+				l.do(u, l.pass)
+			}
+			timer.Stop()
+		}
+		switch {
+		case l.port != nil: // opened for the urgent message
+			return nil
+		case l.running.Err() != nil:
+			return &Fault{Why: Closed, Err: drivers.ErrClosed}
+		case j.ctx.Err() != nil:
+			return &Fault{Why: Ended, Err: fmt.Errorf("%w while opening: %w", endOf(j.ctx), l.notOpen())}
+		case ctx.Err() != nil:
+			return &Fault{Why: Lost, Err: fmt.Errorf("does not open, or stay open, within %v: %w", l.set.OpenWithin, l.notOpen())}
+		}
 		l.inPort = true
 		port, err := l.set.Open(ctx)
 		l.inPort = false
 		if err == nil {
-			l.port, l.lost = port, nil
+			l.port, l.lost, l.openedAt = port, nil, time.Now()
 			l.rx = l.rx[:0]
 			l.generation++
 			l.record.count(func(c *Counts) { c.Opened++ })
@@ -506,29 +534,23 @@ func (l *Line) open(j *job) *Fault {
 			return &Fault{Why: Unusable, Err: err}
 		}
 		l.lost = err
-		// The pause is jittered so that several lines on one hub do not come back in step.
-		timer := time.NewTimer(pause/2 + time.Duration(l.jitter.Int64N(int64(pause/2)+1)))
-		select {
-		case <-timer.C:
-		case <-ctx.Done():
-		case u := <-l.urgent:
-			timer.Stop()
-			l.do(u, l.pass)
-			if l.port != nil {
-				return nil
-			}
-		}
-		timer.Stop()
+		wait = l.jittered(pause)
 		pause = min(2*pause, l.set.BackoffMax)
-		switch {
-		case l.running.Err() != nil:
-			return &Fault{Why: Closed, Err: drivers.ErrClosed}
-		case j.ctx.Err() != nil:
-			return &Fault{Why: Ended, Err: fmt.Errorf("%w while opening: %w", endOf(j.ctx), err)}
-		case ctx.Err() != nil:
-			return &Fault{Why: Lost, Err: fmt.Errorf("does not open within %v: %w", l.set.OpenWithin, err)}
-		}
 	}
+}
+
+// notOpen is why there is no port.
+func (l *Line) notOpen() error {
+	if l.lost == nil {
+		return errors.New("not tried yet")
+	}
+	return l.lost
+}
+
+// jittered shortens a pause by up to half, so that several lines on one hub do not come back in
+// step.
+func (l *Line) jittered(pause time.Duration) time.Duration {
+	return pause/2 + time.Duration(l.jitter.Int64N(int64(pause/2)+1))
 }
 
 // read reads once, for d at most. That nothing came is no error.
@@ -573,6 +595,14 @@ func (l *Line) write(b []byte) *Fault {
 // lose closes the port after anything that is not a time-out. It is closed at once: a serial
 // adapter that is plugged in again while somebody holds its old node comes back under another.
 func (l *Line) lose(err error) *Fault {
+	// A port that opens and is lost at once is as good as one that does not open: without a pause it
+	// would keep a core busy. One that lived as long as the longest pause has had it.
+	if time.Since(l.openedAt) < l.set.BackoffMax {
+		l.shortLived = min(max(2*l.shortLived, l.set.BackoffMin), l.set.BackoffMax)
+		l.notBefore = time.Now().Add(l.jittered(l.shortLived))
+	} else {
+		l.shortLived, l.notBefore = 0, time.Time{}
+	}
 	l.lost = err
 	l.drop()
 	l.record.count(func(c *Counts) { c.Lost++ })

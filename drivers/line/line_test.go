@@ -674,3 +674,92 @@ func BenchmarkAnExchangeInVirtualTime(b *testing.B) {
 		}
 	}
 }
+
+func TestAPortThatIsLostAtOnceIsOpenedAgainWithPauses(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		tries := 0
+		l := line.New(line.Settings{Name: "east", OpenWithin: 5 * time.Second, Open: func(context.Context) (line.Port, error) {
+			if tries++; tries == 1000 {
+				return nil, line.ErrHeld // or this test would never end
+			}
+			near, far := drivertest.Cable()
+			return near, far.Close()
+		}})
+		ctx, cancel := context.WithCancel(t.Context())
+		defer cancel()
+		go func() { _ = l.Run(ctx) }()
+		s := l.Seat(line.SeatSettings{Device: "stage"})
+		for range 4 {
+			before, start := tries, time.Now()
+			_, err := s.Connect(t.Context())
+			e := remedy(t, err, drivers.Reconnect, line.Lost)
+			if took := time.Since(start); took < 4*time.Second || took > 5*time.Second || tries-before > 30 {
+				t.Errorf("%v after %v and %d openings; want 5 s and a handful", e, took, tries-before)
+			}
+		}
+		before, start := tries, time.Now()
+		_, _ = s.Urgent(t.Context(), line.Question{Op: "stop", Send: []byte{3}, Bare: true})
+		if tries != before+1 || time.Since(start) != 0 {
+			t.Errorf("%d openings for an urgent message after %v; want one at once", tries-before, time.Since(start))
+		}
+	})
+}
+
+func TestAPortThatWasOpenForLongIsOpenedAgainWithoutAPause(t *testing.T) {
+	onLine(t, nil, nil, func(t *testing.T, l *line.Line, s *line.Seat, in *instrument) {
+		time.Sleep(10 * time.Second)
+		in.hangUp()
+		_, err := s.Ask(t.Context(), line.Question{Op: "q", Send: []byte("x"), Judge: anything})
+		remedy(t, err, drivers.Reconnect, line.Lost)
+		start := time.Now()
+		if _, err := s.Connect(t.Context()); err != nil || time.Since(start) > 60*time.Millisecond {
+			t.Errorf("%v after %v; want it connected as soon as it was quiet", err, time.Since(start))
+		}
+	})
+}
+
+// mute is lost with the first write.
+type mute struct{ *drivertest.End }
+
+func (mute) Write([]byte) (int, error) { return 0, io.ErrClosedPipe }
+
+func TestAConnectOutlivesAnUrgentMessageThatLosesThePort(t *testing.T) {
+	for name, spoil := range map[string]func(*drivertest.End) line.Port{
+		"after a while": func(e *drivertest.End) line.Port { return deaf{e} },
+		"at once":       func(e *drivertest.End) line.Port { return mute{e} },
+	} {
+		t.Run(name, func(t *testing.T) {
+			next := func(e *drivertest.End) line.Port { return e }
+			onLine(t, func(in *instrument, text string) { in.say("A\n") }, func(set *line.Settings) {
+				open := set.Open
+				set.Open = func(ctx context.Context) (line.Port, error) {
+					p, err := open(ctx)
+					if err != nil {
+						return nil, err
+					}
+					p = next(p.(*drivertest.End))
+					next = func(e *drivertest.End) line.Port { return e }
+					return p, nil
+				}
+			}, func(t *testing.T, l *line.Line, s *line.Seat, in *instrument) {
+				q := line.Question{Op: "q", Send: []byte("Q"), Judge: anything}
+				next = spoil
+				in.hangUp()
+				_, err := s.Ask(t.Context(), q)
+				remedy(t, err, drivers.Reconnect, line.Lost)
+				time.Sleep(10 * time.Second)
+				connected := make(chan error)
+				go func() { _, err := s.Connect(t.Context()); connected <- err }()
+				time.Sleep(10 * time.Millisecond)
+				_, err = s.Urgent(t.Context(), line.Question{Op: "stop", Send: []byte{3}, Bare: true})
+				remedy(t, err, drivers.Reconnect, line.Lost)
+				if err := <-connected; err != nil {
+					t.Fatalf("connect: %v; want the line opened again", err)
+				}
+				if _, err := s.Ask(t.Context(), q); err != nil {
+					t.Errorf("%v; want a line that is open after Connect", err)
+				}
+			})
+		})
+	}
+}
