@@ -69,6 +69,17 @@ var regimes = []regime{
 			b.Arms[i].DeadTime = Constant{2e-9, 0.1e-9, "pile-up scan"}
 		}
 	}, true},
+	{"slow counter without afterpulses: the two logics differ", NonParalysable, func(r *rand.Rand, w *world, n *night) {
+		w.pairsHz = logUniform(r, 1e5, 6e5)
+		w.noiseT, w.noiseD = 0.05*w.pairsHz, 0.05*w.pairsHz
+		lengths(*w, n, logUniform(r, 1e4, 1e5), 5)
+	}, func(b *Bench) {
+		b.Counter.Window = Constant{20e-9, 0.1e-9, "delay scan"}
+		for i := range b.Arms {
+			b.Arms[i].DeadTime = Constant{2e-9, 0.1e-9, "pile-up scan"}
+			b.Arms[i].Afterpulse = Constant{1e-5, 1e-6, "own"}
+		}
+	}, false},
 	{"very few: 5 to 90 net coincidences", NonParalysable, func(r *rand.Rand, w *world, n *night) {
 		w.pairsHz, w.noiseT, w.noiseD = 3e3, 300, 300
 		lengths(*w, n, logUniform(r, 5, 90), 3)

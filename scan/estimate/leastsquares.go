@@ -122,6 +122,7 @@ type problem struct {
 	model     func(p, m []float64)
 	value     func(m []float64) float64                      // +Inf where m is not allowed
 	slopes    func(i int, m float64) (first, second float64) // of observation i's term, the second as expected
+	enough    float64                                        // a gain this small is none; 0: to the last digit
 	fixed     int                                            // 1 + index of a parameter held at its start; 0: none
 }
 
@@ -195,7 +196,7 @@ func (pr problem) minimise() (Fit, error) {
 				p, best, moved = q, v, true
 				copy(m, trial)
 				damping = math.Max(damping/9, 1e-15)
-				if size < 1e-12 || gain <= 1e-14*math.Abs(best) && size < 1e-8 {
+				if size < 1e-12 || gain <= 1e-14*math.Abs(best) && size < 1e-8 || gain < pr.enough {
 					small++
 				} else {
 					small = 0
@@ -207,7 +208,7 @@ func (pr problem) minimise() (Fit, error) {
 				break
 			}
 		}
-		if !moved || small >= 2 {
+		if !moved || small >= 3 {
 			return pr.finish(p, m, best, jac)
 		}
 	}

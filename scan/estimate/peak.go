@@ -248,6 +248,7 @@ func (f *PeakFit) problem(start []float64, low, high float64) problem {
 	}
 	return problem{
 		n: len(n), start: start, low: lo, high: hi, model: f.expected,
+		enough: 1e-9, // of a statistic whose unit is one standard deviation: scoring creeps where a background nears nothing
 		value:  func(m []float64) float64 { return Cash(n, m) },
 		slopes: func(i int, m float64) (g, h float64) { return 2 * (1 - n[i]/m), 2 / m },
 	}
