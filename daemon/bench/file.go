@@ -56,7 +56,16 @@ func (f *File) Pace() drivers.Pace {
 
 // Facts are what a recipe must know of the bench.
 func (f *File) Facts() recipe.Facts {
-	facts := recipe.Facts{PumpShutter: f.Pump != nil, GateMin: f.Counter.GateMin, GateMax: f.Counter.GateMax}
+	facts := recipe.Facts{PumpShutter: f.Pump != nil, GateMin: f.Counter.GateMin, GateMax: f.Counter.GateMax,
+		Coincidences: f.Counter.Coincidences, Detectors: map[string]drivers.Channel{}}
+	for _, c := range f.Counter.Channels {
+		if _, pairs := f.Counter.Coincidences[c]; !pairs && c != f.Counter.Tag {
+			facts.Singles = append(facts.Singles, c)
+		}
+	}
+	for _, d := range f.Detectors {
+		facts.Detectors[d.Name] = d.Channel
+	}
 	for _, a := range f.Axes {
 		facts.Axes = append(facts.Axes, a.Axis)
 	}

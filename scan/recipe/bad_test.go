@@ -21,7 +21,7 @@ const mark = "# findings:\n"
 // TestBadRecipes walks the folder: each file is named after its mistake and ends with what is found.
 func TestBadRecipes(t *testing.T) {
 	facts := bench()
-	facts.Axes = append(facts.Axes, scan.Axis{Name: "geared_arm", High: 5 * unit.Degree, Backlash: unit.Degree / 2, Rising: true})
+	facts.Axes = append(facts.Axes, scan.Axis{Name: "geared_arm", High: 5 * unit.Degree, Backlash: unit.Degree / 2, Rising: true, Park: new(unit.Angle(0))})
 	files, err := filepath.Glob("../../testdata/recipe-bad/*.yaml")
 	if err != nil || len(files) < 30 {
 		t.Fatalf("%d bad files, %v; want the folder", len(files), err)

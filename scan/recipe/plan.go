@@ -12,6 +12,7 @@ import (
 	"gemel/protocol/strict"
 	"gemel/protocol/unit"
 	"gemel/scan"
+	"gemel/scan/route"
 )
 
 // Facts are what a plan must know of the bench.
@@ -21,6 +22,10 @@ type Facts struct {
 	PumpShutter bool          // without one there are no darks
 	GateMin     time.Duration // the counter's range of gates; zero: no bound known
 	GateMax     time.Duration
+
+	Singles      []drivers.Channel                      // channels that count one detector
+	Coincidences map[drivers.Channel][2]drivers.Channel // the two singles channels of each coincidence channel
+	Detectors    map[string]drivers.Channel             // the singles channel of each detector
 }
 
 // Setting is one setting a sweep may step.
@@ -38,57 +43,153 @@ func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 		findings = append(findings, e.check(f)...)
 	}
 	findings = append(findings, checkGates(r.Dwell, r.dwellAt, f)...)
+	trigger, found := r.trigger(f)
+	findings = append(findings, found...)
 	if r.Dark != nil {
-		findings = append(findings, checkGates(r.Dark.Dwell, r.darkDwellAt, f)...)
+		findings = append(findings, checkGates(r.Dark.Dwell, r.Dark.dwellAt, f)...)
 		if !f.PumpShutter {
-			findings = append(findings, r.darkAt.Finding("darks on a bench without a pump shutter", `no key "dark", or a "shutter" in the bench file`))
+			findings = append(findings, r.Dark.at.Finding("darks on a bench without a pump shutter", `no key "dark", or a "shutter" in the bench file`))
 		}
 	}
+	background, found := r.background(f)
+	findings = append(findings, found...)
 	if err := strict.Join(findings...); err != nil {
 		return scan.Plan{}, err
 	}
-	plan := scan.Plan{Title: r.Title, Points: r.expand(f), Dwell: r.Dwell, Repeat: r.Repeat, Trouble: r.Trouble}
+	plan := scan.Plan{Title: r.Title, Points: r.expand(f), Dwell: r.Dwell, Repeat: r.Repeat, Background: background, Trouble: r.Trouble}
+	plan.Dwell.Trigger = trigger
 	if r.Dark != nil {
-		dark := *r.Dark
+		dark := r.Dark.Cadence
 		plan.Dark = &dark
 	}
 	return plan, nil
 }
 
+// trigger is the channel whose counts end a dwell.
+func (r *Recipe) trigger(f Facts) (drivers.Channel, []protocol.Finding) {
+	if r.Dwell.Heralds == 0 {
+		return "", nil
+	}
+	if r.of == "" {
+		return "", []protocol.Finding{r.dwellAt.Finding("heralds of no channel", fmt.Sprintf(`"of" with the trigger's channel or detector, one of %q`, f.singles()))}
+	}
+	return f.single(r.of, r.ofAt, "a dwell that ends on")
+}
+
+// single finds the channel that a detector's or a channel's name means. A channel of coincidences
+// is refused, for what it would be used as.
+func (f Facts) single(name string, at strict.Place, use string) (drivers.Channel, []protocol.Finding) {
+	channel := drivers.Channel(name)
+	if c, ok := f.Detectors[name]; ok {
+		return c, nil
+	}
+	if slices.Contains(f.Singles, channel) {
+		return channel, nil
+	}
+	if _, pairs := f.Coincidences[channel]; pairs {
+		return "", []protocol.Finding{at.Finding(fmt.Sprintf("%s the coincidence channel %q", use, name), "a channel of single counts: "+whyNotPairs)}
+	}
+	return "", []protocol.Finding{at.Finding(fmt.Sprintf("no channel and no detector %q on this bench", name), known(name, f.singles()))}
+}
+
+// singles lists every name of a channel of single counts.
+func (f Facts) singles() []string {
+	var names []string
+	for _, c := range f.Singles {
+		names = append(names, string(c))
+	}
+	for name := range f.Detectors {
+		names = append(names, name)
+	}
+	slices.Sort(names)
+	return slices.Compact(names)
+}
+
+func (r *Recipe) background(f Facts) (*scan.Background, []protocol.Finding) {
+	b := r.Background
+	if b == nil {
+		return nil, nil
+	}
+	findings := checkGates(b.Dwell, b.dwellAt, f)
+	if d := r.Dark; d != nil && d.Every > 0 && b.Every > 0 && share(*d)+share(b.Cadence) >= 1 {
+		findings = append(findings, b.everyAt.Finding("darks and backgrounds that take all the time there is", fmt.Sprintf("less often: of every hour the darks take %.0f min, the backgrounds %.0f min", 60*share(*d), 60*share(b.Cadence))))
+	}
+	axis, found := f.axis(b.Turn, b.turnAt)
+	switch {
+	case found != nil:
+		return nil, append(findings, found...)
+	case slices.ContainsFunc(r.Sweep, func(e Entry) bool { return e.Axis == b.Turn }):
+		findings = append(findings, b.turnAt.Finding(fmt.Sprintf("the axis %q, which the sweep moves", b.Turn), "an axis that stands still while light is counted"))
+	case axis.Park == nil:
+		findings = append(findings, b.turnAt.Finding(fmt.Sprintf("the axis %q, which has no park angle", b.Turn),
+			`"park" at this axis in the bench file: it stands there while light is counted, and that must be declared, because a run that was stopped in a background would spoil the next one`))
+	default:
+		if found, want, ok := reach(axis, *axis.Park); !ok {
+			findings = append(findings, b.turnAt.Finding("its park angle: "+found, want+", in the bench file"))
+		}
+		if found, want, ok := reach(axis, *axis.Park+b.By); !ok {
+			findings = append(findings, b.byAt.Finding(fmt.Sprintf("%s from its park angle of %s: %s", b.By, *axis.Park, found), want))
+		}
+	}
+	if len(findings) > 0 {
+		return nil, findings
+	}
+	return &scan.Background{Cadence: b.Cadence.Cadence, Axis: b.Turn, From: *axis.Park, By: b.By}, nil
+}
+
+// share is how much of the time a cadence takes that goes by the clock.
+func share(c Cadence) float64 { return c.Dwell.Time.Seconds() / c.Every.Seconds() }
+
 func (e Entry) check(f Facts) []protocol.Finding {
 	if e.Axis != "" {
-		return e.checkAxis(f.Axes)
+		return e.checkAxis(f)
 	}
 	return e.checkSetting(f.Settings)
 }
 
-func (e Entry) checkAxis(axes []scan.Axis) []protocol.Finding {
-	i := slices.IndexFunc(axes, func(a scan.Axis) bool { return a.Name == e.Axis })
-	if i < 0 {
-		names := make([]string, len(axes))
-		for k, a := range axes {
-			names[k] = string(a.Name)
-		}
-		return []protocol.Finding{e.nameAt.Finding(fmt.Sprintf("no axis %q on this bench", e.Axis), known(string(e.Axis), names))}
+func (e Entry) checkAxis(f Facts) []protocol.Finding {
+	axis, findings := f.axis(e.Axis, e.nameAt)
+	if findings != nil {
+		return findings
 	}
-	var findings []protocol.Finding
 	for _, k := range e.Values.extremes() {
 		n, at := e.Values.at(k)
-		a, axis := n.angle(), axes[i]
-		low, high := axis.Low, axis.High
-		if axis.Rising {
-			low += axis.Backlash
-		} else {
-			high -= axis.Backlash
-		}
-		switch {
-		case !axis.Limits(a):
-			findings = append(findings, at.Finding(fmt.Sprintf("%s is beyond the soft limits of %s", a, e.Axis), fmt.Sprintf("%s to %s", low, high)))
-		case a < low || a > high:
-			findings = append(findings, at.Finding(fmt.Sprintf("%s leaves no room within the soft limits of %s to approach by %s", a, e.Axis, axis.Backlash), fmt.Sprintf("%s to %s", low, high)))
+		if found, want, ok := reach(axis, n.angle()); !ok {
+			findings = append(findings, at.Finding(found, want))
 		}
 	}
 	return findings
+}
+
+func (f Facts) axis(name drivers.AxisName, at strict.Place) (scan.Axis, []protocol.Finding) {
+	i := slices.IndexFunc(f.Axes, func(a scan.Axis) bool { return a.Name == name })
+	if i >= 0 {
+		return f.Axes[i], nil
+	}
+	names := make([]string, len(f.Axes))
+	for k, a := range f.Axes {
+		names[k] = string(a.Name)
+	}
+	return scan.Axis{}, []protocol.Finding{at.Finding(fmt.Sprintf("no axis %q on this bench", name), known(string(name), names))}
+}
+
+// reach says whether an axis may be sent to an angle, as a route would be asked at the moment of
+// moving, and if not what is wrong and what would do.
+func reach(axis scan.Axis, a unit.Angle) (found, want string, ok bool) {
+	if route.Check(axis, a) == nil {
+		return "", "", true
+	}
+	low, high := axis.Low, axis.High
+	if axis.Rising {
+		low += axis.Backlash
+	} else {
+		high -= axis.Backlash
+	}
+	want = fmt.Sprintf("%s to %s", low, high)
+	if !axis.Limits(a) {
+		return fmt.Sprintf("%s is beyond the soft limits of %s", a, axis.Name), want, false
+	}
+	return fmt.Sprintf("%s leaves no room within the soft limits of %s to approach by %s", a, axis.Name, axis.Backlash), want, false
 }
 
 func (e Entry) checkSetting(settings []Setting) []protocol.Finding {

@@ -14,9 +14,7 @@ package recipe
 import (
 	"fmt"
 	"math/big"
-	"regexp"
 	"strconv"
-	"strings"
 	"time"
 
 	"gemel/drivers"
@@ -45,21 +43,25 @@ type Order string
 const (
 	Ascending  Order = "ascending"  // every line in the same direction
 	Serpentine Order = "serpentine" // every second inner line backwards, every second pass too
+	Shuffled   Order = "shuffled"   // each pass in an order of its own, so that drift is not taken for a dependence on angle
 )
 
 // Recipe is a recipe that is sound in itself. Whether a bench can do it is Plan's to say.
 type Recipe struct {
-	File    string
-	Text    string
-	Title   string
-	Sweep   []Entry // outermost first; empty: count where everything stands
-	Order   Order
-	Dwell   scan.Dwell
-	Repeat  scan.Repeat
-	Dark    *scan.Cadence
-	Trouble scan.Trouble
+	File       string
+	Text       string
+	Title      string
+	Sweep      []Entry // outermost first; empty: count where everything stands
+	Order      Order
+	Dwell      scan.Dwell
+	Repeat     scan.Repeat
+	Dark       *Cadence
+	Background *Background
+	Trouble    scan.Trouble
 
-	dwellAt, darkAt, darkDwellAt strict.Place
+	dwellAt strict.Place
+	ofAt    strict.Place // of the dwell's trigger
+	of      string       // as it is written; empty: not there
 }
 
 // Entry is one level of the sweep: the values of one axis or one setting.
@@ -93,14 +95,15 @@ func Parse(file string, text []byte) (*Recipe, error) {
 		Repeat: readRepeat(m.Opt("repeat")),
 	}
 	r.Repeat.Serpentine = r.Order == Serpentine
+	r.Repeat.Shuffled = r.Order == Shuffled
 	sweep := m.Opt("sweep")
 	r.Sweep = readSweep(sweep)
 	dwell := m.Need("dwell")
-	r.Dwell, r.dwellAt = readDwell(dwell), dwell.Place()
-	dark := m.Opt("dark")
-	r.Dark, r.darkDwellAt, r.darkAt = readDark(dark)
+	r.readDwell(dwell)
+	r.Dark = readDark(m.Opt("dark"))
+	r.Background = readBackground(m.Opt("background"))
 	r.Trouble = readTrouble(m.Opt("trouble"))
-	m.Later("background", "reference", "refine", "guards", "schedule", "result")
+	m.Later("reference", "refine", "guards", "schedule", "result")
 	m.Done()
 	if visits := r.visits(); visits.Cmp(big.NewInt(MaxVisits)) > 0 {
 		sweep.Fail(fmt.Sprintf("%s points visited %d times are %s visits", r.points(), r.Repeat.Times, visits), fmt.Sprintf("at most %d", MaxVisits))
@@ -127,10 +130,7 @@ func (r *Recipe) visits() *big.Int {
 }
 
 func readOrder(v strict.Value) Order {
-	if v.Good() && !v.IsMap() && !v.IsList() && v.Text("") == "shuffled" {
-		v.Fail(`"shuffled": not available yet`, "ascending or serpentine")
-	}
-	return Order(v.Choice([]string{string(Ascending), string(Serpentine)}, string(Ascending)))
+	return Order(v.Choice([]string{string(Ascending), string(Serpentine), string(Shuffled)}, string(Ascending)))
 }
 
 func readSweep(v strict.Value) []Entry {
@@ -185,72 +185,6 @@ func readRepeat(v strict.Value) scan.Repeat {
 	r.InPlace = m.Opt("as").Choice([]string{"passes", "in_place"}, "passes") == "in_place"
 	m.Done()
 	return r
-}
-
-func readDwell(v strict.Value) scan.Dwell {
-	if !v.IsMap() {
-		t := v.Duration(minDwell, maxDwell)
-		return scan.Dwell{Time: t, Slice: t}
-	}
-	m := v.Map()
-	// Inverse binomial sampling: n/N overestimates the chance (Haldane 1945, recalled from memory).
-	m.Refuse("a dwell that ends on a number of coincidences",
-		"a fixed time: ending a count on its own success favours lucky stretches, so the efficiency comes out too high; ending on trigger counts (heralds) does not, and will come",
-		"coincidences", "pairs")
-	m.Later("heralds", "at_most")
-	foreign := m.Has("coincidences") || m.Has("pairs") || m.Has("heralds")
-	var d scan.Dwell
-	if t := m.Opt("time"); t.Given() || !foreign {
-		d.Time = m.Need("time").Duration(minDwell, maxDwell)
-	}
-	slice := m.Opt("slice")
-	d.Slice = slice.Duration(minDwell, maxDwell, d.Time)
-	if slice.Good() && d.Time > 0 {
-		switch n := (d.Time + d.Slice - 1) / d.Slice; {
-		case d.Slice > d.Time:
-			slice.Failf("no more than the dwell of %s", strict.Span(d.Time))
-		case n > maxSlices:
-			slice.Fail(fmt.Sprintf("%d slices", n), fmt.Sprintf("at most %d", maxSlices))
-		}
-	}
-	m.Done()
-	return d
-}
-
-var everyPoints = regexp.MustCompile(`^([1-9][0-9]{0,5}) points?$`)
-
-func readDark(v strict.Value) (c *scan.Cadence, dwellAt, at strict.Place) {
-	if !v.Given() {
-		return nil, dwellAt, at
-	}
-	m := v.Map()
-	c = &scan.Cadence{}
-	dwell := m.Need("dwell")
-	c.Dwell = readDwell(dwell)
-	every := m.Opt("every")
-	if text := every.Text(); every.Good() {
-		if n := everyPoints.FindStringSubmatch(text); n != nil {
-			c.EveryPoints, _ = strconv.Atoi(n[1])
-		} else if strings.Contains(text, "point") {
-			every.Failf(`a number of points such as "10 points", or a time such as "30 min"`)
-		} else if c.Every = every.Duration(time.Second, maxDwell); every.Good() && c.Every <= c.Dwell.Time {
-			every.Failf("more than the dark's own dwell of %s, or nothing else would be counted", strict.Span(c.Dwell.Time))
-		}
-	}
-	also := m.Opt("also")
-	for _, item := range also.List(1, 2) {
-		switch item.Choice([]string{"start", "end"}) {
-		case "start":
-			c.AtStart = true
-		case "end":
-			c.AtEnd = true
-		}
-	}
-	if m.Given() && !every.Given() && !also.Given() {
-		m.Need("every")
-	}
-	m.Done()
-	return c, dwell.Place(), v.Place()
 }
 
 func readTrouble(v strict.Value) scan.Trouble {

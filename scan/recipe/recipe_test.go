@@ -16,18 +16,28 @@ import (
 // bench is what every recipe here is planned for.
 func bench() Facts {
 	axis := func(name string, low, high unit.Angle) scan.Axis {
-		return scan.Axis{Name: drivers.AxisName(name), Low: low, High: high}
+		return scan.Axis{Name: drivers.AxisName(name), Role: name, Low: low, High: high}
 	}
+	plate := axis("pump_waveplate", -10*unit.Degree, 100*unit.Degree)
+	plate.Park = new(unit.Angle(0))
 	return Facts{
-		Axes:        []scan.Axis{axis("signal_arm", -unit.Degree, 8*unit.Degree), axis("idler_arm", -unit.Degree, 8*unit.Degree), axis("crystal_tilt", -5*unit.Degree, 5*unit.Degree)},
+		Axes:        []scan.Axis{axis("signal_arm", -unit.Degree, 8*unit.Degree), axis("idler_arm", -unit.Degree, 8*unit.Degree), axis("crystal_tilt", -5*unit.Degree, 5*unit.Degree), plate},
 		Settings:    []Setting{{Name: "delay", Unit: "ns", Low: -20, High: 20}, {Name: "oven", Unit: "Cel", Low: 10, High: 60}},
 		PumpShutter: true, GateMin: 10 * time.Millisecond, GateMax: 100 * time.Second,
+		Singles:      []drivers.Channel{"a", "b"},
+		Coincidences: map[drivers.Channel][2]drivers.Channel{"ab": {"a", "b"}},
+		Detectors:    map[string]drivers.Channel{"signal": "a", "idler": "b"},
 	}
 }
 
 func planOf(t *testing.T, body string) scan.Plan {
 	t.Helper()
-	r, err := Parse("r.yaml", []byte("title: A\ndwell: 1 s\n"+body))
+	return plan(t, "title: A\ndwell: 1 s\n"+body)
+}
+
+func plan(t *testing.T, text string) scan.Plan {
+	t.Helper()
+	r, err := Parse("r.yaml", []byte(text))
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -205,6 +215,7 @@ func FuzzParse(f *testing.F) {
 		"title: A\ndwell: {time: 5 s, slice: 1 s}\nsweep: [{axis: signal_arm, around: 2.864 deg, span: 0.4 deg, step: 0.1 deg}, {setting: delay, at: [1 ns, 2 ns]}]\nrepeat: {times: 3, as: passes}\n",
 		"title: A\ndwell: 1 s\ndark: {every: 10 points, dwell: 1 s, also: [start]}\ntrouble: {retries: 0, then: stop}\n",
 		"title: A\ndwell: 1 s\nsweep: [{setting: oven, from: 293.15 K, to: 295.15 K, step: 1 K}]\n",
+		"title: A\ndwell: {heralds: 200000, of: signal, at_most: 60 s, slice: 1 s}\nbackground: {turn: pump_waveplate, by: 45 deg, every: 10 points, dwell: 10 s}\norder: shuffled\n",
 		"title: A\ndwell: {coincidences: 5}\nsweep: [{axis: x, at: 1 mrad, conjugate_of: y}]\n",
 	} {
 		f.Add(body)
@@ -239,4 +250,42 @@ func FuzzParse(f *testing.F) {
 			}
 		}
 	})
+}
+
+func TestADwellMayEndOnTheCountsOfATrigger(t *testing.T) {
+	for _, of := range []string{"signal", "a"} {
+		p := plan(t, "title: A\ndwell: {heralds: 200000, of: "+of+", at_most: 60 s, slice: 1 s}\n")
+		want := scan.Dwell{Time: time.Minute, Slice: time.Second, Heralds: 200000, Trigger: "a"}
+		if p.Dwell != want {
+			t.Errorf("of %s: %+v; want %+v", of, p.Dwell, want)
+		}
+	}
+}
+
+func TestABackgroundTurnsAnAxisAwayFromWhereItParks(t *testing.T) {
+	b := planOf(t, "background: {turn: pump_waveplate, by: 45 deg, every: 30 min, dwell: {time: 60 s, slice: 10 s}, also: [start, end]}\n").Background
+	want := scan.Background{Axis: "pump_waveplate", By: 45 * unit.Degree,
+		Cadence: scan.Cadence{Dwell: scan.Dwell{Time: time.Minute, Slice: 10 * time.Second}, Every: 30 * time.Minute, AtStart: true, AtEnd: true}}
+	if b == nil || *b != want {
+		t.Errorf("got  %+v\nwant %+v", b, want)
+	}
+	if b := planOf(t, "background: {turn: pump_waveplate, by: -5 deg, every: 10 points, dwell: 60 s}\n").Background; b.By != -5*unit.Degree || b.EveryPoints != 10 {
+		t.Errorf("got %+v; want a turn downwards every 10 points", b)
+	}
+}
+
+func TestShuffledPassesVisitEveryPointOnce(t *testing.T) {
+	p := planOf(t, "sweep: [{axis: signal_arm, from: 0 deg, to: 1 deg, step: 0.1 deg}]\norder: shuffled\nrepeat: {times: 2, as: passes}\n")
+	if !p.Repeat.Shuffled || p.Repeat.Serpentine || p.Repeat.Seed != 0 {
+		t.Errorf("%+v; want a shuffle whose seed is still to be drawn", p.Repeat)
+	}
+	p.Repeat.Seed = 5
+	seen, sorted := map[scan.Visit]int{}, true
+	for i, v := range p.Visits() {
+		seen[v]++
+		sorted = sorted && v.Point == i%len(p.Points)
+	}
+	if len(seen) != 22 || sorted {
+		t.Errorf("%d visits, in the order of the list: %v; want 22 different ones in another order", len(seen), sorted)
+	}
 }
