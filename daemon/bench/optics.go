@@ -1,6 +1,11 @@
 package bench
 
 import (
+	"errors"
+	"fmt"
+	"slices"
+	"strconv"
+	"strings"
 	"time"
 
 	"gemel/protocol/strict"
@@ -13,7 +18,7 @@ import (
 
 // Optics is the light's way as the file states it. Lengths are metres.
 type Optics struct {
-	Crystal     string // name of a published set
+	Crystal     crystal.Set // published, or the file's own
 	Process     phasematch.Process
 	Cut         unit.Angle
 	Thickness   float64
@@ -162,8 +167,7 @@ func (r *reader) optics(v, arms strict.Value) {
 	}
 	m := v.Map()
 	o := &Optics{at: v.Place()}
-	set := m.Need("crystal")
-	o.Crystal = set.Choice(crystal.Names())
+	o.Crystal = r.crystal(m.Need("crystal"))
 	processes := make([]string, 0, 6)
 	for _, p := range phasematch.Processes() {
 		processes = append(processes, string(p))
@@ -183,7 +187,6 @@ func (r *reader) optics(v, arms strict.Value) {
 	p.Later("polarisation_axis")
 	p.Done()
 	o.PairsPerMw = m.Need("pairs_per_mw").Quantity(unit.Rate, 0, 1e9)
-	m.Later("own_crystal")
 	m.Done()
 	am := arms.Map()
 	if !arms.Given() {
@@ -239,28 +242,108 @@ func (r *reader) hasDetector(name string) bool {
 	return false
 }
 
+// crystal reads the name of a published set, or a set of the file's own as term lists:
+// n² = constant + Σ num·L^power/(L² − pole) + Σ coefficient·L^power, with L in micrometres.
+func (r *reader) crystal(v strict.Value) crystal.Set {
+	if !v.IsMap() {
+		set, _ := crystal.Named(v.Choice(crystal.Names()))
+		return set
+	}
+	before := r.findings()
+	m := v.Map()
+	name := m.Need("name")
+	set := crystal.Set{Name: name.Token(), Class: crystal.Uniaxial, Title: "the bench file's own set", SourceKind: "own"}
+	if slices.Contains(crystal.Names(), set.Name) {
+		name.Failf("a name that no published set has")
+	}
+	set.Reference = m.Need("reference").Text()
+	set.RefCel = m.Opt("temperature").Quantity(unit.Temperature, -273.15, 2000, 20)
+	set.Axes = []crystal.Dispersion{readDispersion(m.Need("n_o"), crystal.Ordinary), readDispersion(m.Need("n_e"), crystal.Extraordinary)}
+	m.Done()
+	own, err := crystal.Own(set)
+	if err != nil && r.findings() == before { // else it complains about what was found already
+		found, want := halves(strings.TrimPrefix(err.Error(), "crystal: "))
+		v.Fail(found, want)
+	}
+	return own
+}
+
+func (r *reader) findings() int {
+	if e, ok := errors.AsType[*strict.Error](r.doc.Err()); ok {
+		return len(e.Findings)
+	}
+	return 0
+}
+
+func readDispersion(v strict.Value, axis crystal.Axis) crystal.Dispersion {
+	const largest = 1e6
+	d := crystal.Dispersion{Axis: axis}
+	m := v.Map()
+	d.Constant = m.Need("constant").Number(-largest, largest)
+	for _, item := range m.Opt("poles").List(1, 16) {
+		if t := item.List(3, 3); t != nil {
+			d.Poles = append(d.Poles, crystal.Pole{Num: t[0].Number(-largest, largest), Power: int(t[1].Int(-12, 12)), Pole: t[2].Number(-largest, largest)})
+		}
+	}
+	terms := func(v strict.Value) (list []crystal.Power) {
+		for _, item := range v.List(1, 16) {
+			if t := item.List(2, 2); t != nil {
+				list = append(list, crystal.Power{Coef: t[0].Number(-largest, largest), Power: int(t[1].Int(-12, 12))})
+			}
+		}
+		return list
+	}
+	d.Powers = terms(m.Opt("powers"))
+	d.DnDT = terms(m.Opt("dn_dt"))
+	if d.DnDT != nil {
+		d.DnDTKind = "own"
+	}
+	if r := m.Need("range").List(2, 2); r != nil {
+		for i := range r {
+			d.RangeUm[i] = r[i].Quantity(unit.Length, 50e-9, 100e-6) * 1e6
+		}
+	}
+	m.Done()
+	return d
+}
+
+// Source is the light's way as the file states it, in the terms of the model: what a prediction or
+// an estimate may know. Nothing of the truth is in it; detectors have no efficiency.
+func (f *File) Source() (source.Optics, error) {
+	if f.Optics == nil {
+		return source.Optics{}, fmt.Errorf("%s: a bench without optics; want the blocks \"optics\" and \"arms\"", f.Path)
+	}
+	return f.lit(truth{}), nil
+}
+
 // source is the light as the virtual instruments need it: the optics of the file with the truth
 // that the file keeps apart.
-func (f *File) source() (source.Optics, error) {
-	set, err := crystal.Named(f.Optics.Crystal)
-	if err != nil {
-		return source.Optics{}, err
-	}
-	o, t := f.Optics, f.Simulation.truth
-	s := source.Optics{
-		Crystal: set, Process: o.Process, CutDeg: o.Cut.Degrees(), ThicknessMm: o.Thickness * 1e3, PolingUm: o.Poling * 1e6,
+func (f *File) source() (source.Optics, error) { return f.lit(f.Simulation.truth), nil }
+
+func (f *File) lit(t truth) source.Optics {
+	o := f.Optics
+	return source.Optics{
+		Crystal: o.Crystal, Process: o.Process, CutDeg: o.Cut.Degrees(), ThicknessMm: tidy(o.Thickness * 1e3), PolingUm: tidy(o.Poling * 1e6),
 		CrystalCel: o.Temperature, AzimuthDeg: o.Azimuth.Degrees(), Extrapolate: o.Extrapolate,
-		PumpNm: o.PumpWavelength * 1e9, PumpWaistUm: o.PumpWaist * 1e6, PumpW: o.PumpPower, PairHzPerMw: o.PairsPerMw,
+		PumpNm: tidy(o.PumpWavelength * 1e9), PumpWaistUm: tidy(o.PumpWaist * 1e6), PumpW: o.PumpPower, PairHzPerMw: o.PairsPerMw,
 		Signal: f.sourceArm(o.Signal, t.signal), Idler: f.sourceArm(o.Idler, t.idler),
 		Counter: source.Counter{WindowS: f.Counter.Window.Value, JitterS: t.jitter, Logic: f.Counter.Logic},
 	}
-	return s, nil
+}
+
+// tidy drops what a change of units rounds: 405.00000000000006.
+func tidy(v float64) float64 {
+	t, err := strconv.ParseFloat(strconv.FormatFloat(v, 'g', 14, 64), 64)
+	if err != nil {
+		return v
+	}
+	return t
 }
 
 func (f *File) sourceArm(a Arm, t armTruth) source.Arm {
 	s := source.Arm{
-		Aperture: a.Aperture, RadiusMm: a.Radius.Value * 1e3, DistanceMm: a.Distance.Value * 1e3, OutOfPlaneDeg: a.OutOfPlane.Degrees(),
-		Filter:        source.Filter{CentreNm: a.Filter.Centre * 1e9, WidthNm: a.Filter.Width * 1e9, Shape: a.Filter.Shape},
+		Aperture: a.Aperture, RadiusMm: tidy(a.Radius.Value * 1e3), DistanceMm: tidy(a.Distance.Value * 1e3), OutOfPlaneDeg: a.OutOfPlane.Degrees(),
+		Filter:        source.Filter{CentreNm: tidy(a.Filter.Centre * 1e9), WidthNm: tidy(a.Filter.Width * 1e9), Shape: a.Filter.Shape},
 		Transmittance: a.transmittance(), Polarised: a.Polarised,
 		FluorescenceHzPerW: t.fluorescence * 1e3, StrayHzPerW: t.stray * 1e3,
 	}

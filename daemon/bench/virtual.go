@@ -9,7 +9,6 @@ import (
 	"slices"
 	"strconv"
 	"strings"
-	"time"
 
 	"gemel/drivers"
 	"gemel/drivers/line"
@@ -166,22 +165,12 @@ func (s *set) serve(ctx context.Context) error {
 			switch {
 			case ctx.Err() != nil:
 				return nil
-			case errors.Is(err, instruments.ErrUnplugged):
-				// A plug that opens and closes again without an end would keep its line busy for ever
-				// in one and the same instant of virtual time.
-				if err := drivers.Pace(1).Wait(ctx, replug); err != nil {
-					return nil
-				}
-			case err != nil:
+			case err != nil && !errors.Is(err, instruments.ErrUnplugged):
 				return err
 			}
 		}
 	}
 }
-
-// replug is how long a pulled plug stays away, at least: long enough for a host to notice. It is a
-// multiple of 997 ns, so that an instrument keeps to the instants that package instruments gives it.
-const replug = 50_000 * 997 * time.Nanosecond
 
 // present offers the instrument to whoever opens its link.
 func (s *set) present(ctx context.Context) error {
