@@ -23,6 +23,7 @@ type Plan struct {
 	Guards     []Guard
 	Schedule   Schedule
 	Trouble    Trouble
+	Result     *Result // nil: counts, and no number at the end
 }
 
 // Point is one set of targets. Axes and settings it does not name stay where they are.
@@ -153,6 +154,33 @@ type Schedule struct {
 	FinishBy  time.Time // zero: no end. What does not fit before it is left out, closing readings first reserved
 }
 
+// Result is the number that a run is for, and which of its readings make it: said before they are
+// taken, because the best of many readings, picked afterwards, is biased high.
+type Result struct {
+	Kind ResultKind
+
+	// Of an efficiency.
+	Trigger   drivers.Channel  // singles
+	UnderTest drivers.Channel  // singles
+	PlateauOf drivers.AxisName // empty: all light readings, which stand at one place
+	HalfWidth unit.Angle       // of the plateau's part that counts
+
+	// Of a peak.
+	Of      drivers.Channel // singles or coincidences
+	Along   drivers.AxisName
+	Profile string             // empty: what fits best to what is known
+	Power   drivers.DeviceName // the sensor whose mean is part of the exposure; empty: none
+}
+
+// ResultKind is what a result is a number of.
+type ResultKind string
+
+// The kinds.
+const (
+	Efficiency ResultKind = "efficiency"
+	Peak       ResultKind = "peak"
+)
+
 // Then is what is done when something went wrong as often as the recipe allows.
 type Then string
 
@@ -184,6 +212,10 @@ type Axis struct {
 	AccelDegS2 float64
 	Park       *unit.Angle
 	Proof      drivers.Proof
+	// Together axes of one controller start and finish a move together, on a straight line. Where
+	// it is false, or controllers differ, any order of passing is expected.
+	Together bool
+	HomesAt  *unit.Angle // where its reference search leaves it; nil: not known
 }
 
 // Limits says whether an angle lies within the soft limits.

@@ -66,6 +66,9 @@ func (f *File) Facts() recipe.Facts {
 	for _, d := range f.Detectors {
 		facts.Detectors[d.Name] = d.Channel
 	}
+	for _, s := range f.Sensors {
+		facts.Sensors = append(facts.Sensors, recipe.Sensor{Name: s.Name, Unit: s.Unit})
+	}
 	for _, a := range f.Axes {
 		facts.Axes = append(facts.Axes, a.Axis)
 	}

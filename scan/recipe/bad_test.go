@@ -22,6 +22,7 @@ const mark = "# findings:\n"
 func TestBadRecipes(t *testing.T) {
 	facts := bench()
 	facts.Axes = append(facts.Axes, scan.Axis{Name: "geared_arm", High: 5 * unit.Degree, Backlash: unit.Degree / 2, Rising: true, Park: new(unit.Angle(0))})
+	facts.Singles, facts.Detectors["lonely"] = append(facts.Singles, "c"), "c"
 	files, err := filepath.Glob("../../testdata/recipe-bad/*.yaml")
 	if err != nil || len(files) < 30 {
 		t.Fatalf("%d bad files, %v; want the folder", len(files), err)

@@ -26,6 +26,7 @@ type Facts struct {
 	Singles      []drivers.Channel                      // channels that count one detector
 	Coincidences map[drivers.Channel][2]drivers.Channel // the two singles channels of each coincidence channel
 	Detectors    map[string]drivers.Channel             // the singles channel of each detector
+	Sensors      []Sensor
 }
 
 // Setting is one setting a sweep may step.
@@ -33,6 +34,12 @@ type Setting struct {
 	Name      drivers.DeviceName
 	Unit      string  // a spelling of package unit
 	Low, High float64 // in that unit
+}
+
+// Sensor is one sensor that may be watched.
+type Sensor struct {
+	Name drivers.DeviceName
+	Unit string // a spelling of package unit
 }
 
 // Plan works the recipe out for one bench. The error is a *strict.Error with all findings, each at
@@ -43,7 +50,9 @@ func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 		findings = append(findings, e.check(f)...)
 	}
 	findings = append(findings, checkGates(r.Dwell, r.dwellAt, f)...)
-	trigger, found := r.trigger(f)
+	result, found := r.result(f)
+	findings = append(findings, found...)
+	trigger, found := r.trigger(f, result)
 	findings = append(findings, found...)
 	if r.Dark != nil {
 		findings = append(findings, checkGates(r.Dark.Dwell, r.Dark.dwellAt, f)...)
@@ -56,7 +65,7 @@ func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 	if err := strict.Join(findings...); err != nil {
 		return scan.Plan{}, err
 	}
-	plan := scan.Plan{Title: r.Title, Points: r.expand(f), Dwell: r.Dwell, Repeat: r.Repeat, Background: background, Trouble: r.Trouble}
+	plan := scan.Plan{Title: r.Title, Points: r.expand(f), Dwell: r.Dwell, Repeat: r.Repeat, Background: background, Trouble: r.Trouble, Result: result}
 	plan.Dwell.Trigger = trigger
 	if r.Dark != nil {
 		dark := r.Dark.Cadence
@@ -65,20 +74,30 @@ func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 	return plan, nil
 }
 
-// trigger is the channel whose counts end a dwell.
-func (r *Recipe) trigger(f Facts) (drivers.Channel, []protocol.Finding) {
-	if r.Dwell.Heralds == 0 {
+// trigger is the channel whose counts end a dwell. An efficiency's own trigger does without being
+// named again.
+func (r *Recipe) trigger(f Facts, result *scan.Result) (drivers.Channel, []protocol.Finding) {
+	efficiency := r.Result != nil && r.Result.Kind == scan.Efficiency
+	switch {
+	case r.Dwell.Heralds == 0:
 		return "", nil
-	}
-	if r.of == "" {
+	case r.of == "" && !efficiency:
 		return "", []protocol.Finding{r.dwellAt.Finding("heralds of no channel", fmt.Sprintf(`"of" with the trigger's channel or detector, one of %q`, f.singles()))}
+	case r.of == "" && result == nil:
+		return "", nil // what is wrong with the result is reported there
+	case r.of == "":
+		return result.Trigger, nil
 	}
-	return f.single(r.of, r.ofAt, "a dwell that ends on")
+	c, findings := f.single(r.of, r.ofAt, "a dwell that ends on", whyNotPairs)
+	if findings == nil && efficiency && result != nil && c != result.Trigger {
+		return "", []protocol.Finding{r.ofAt.Finding(fmt.Sprintf("heralds of %q beside a result whose trigger is %q", r.of, r.Result.Trigger), "the result's trigger, or no \"of\": ending on counts of the detector under test biases the efficiency")}
+	}
+	return c, findings
 }
 
 // single finds the channel that a detector's or a channel's name means. A channel of coincidences
-// is refused, for what it would be used as.
-func (f Facts) single(name string, at strict.Place, use string) (drivers.Channel, []protocol.Finding) {
+// is refused with the reason.
+func (f Facts) single(name string, at strict.Place, use, why string) (drivers.Channel, []protocol.Finding) {
 	channel := drivers.Channel(name)
 	if c, ok := f.Detectors[name]; ok {
 		return c, nil
@@ -87,7 +106,7 @@ func (f Facts) single(name string, at strict.Place, use string) (drivers.Channel
 		return channel, nil
 	}
 	if _, pairs := f.Coincidences[channel]; pairs {
-		return "", []protocol.Finding{at.Finding(fmt.Sprintf("%s the coincidence channel %q", use, name), "a channel of single counts: "+whyNotPairs)}
+		return "", []protocol.Finding{at.Finding(fmt.Sprintf("%s the coincidence channel %q", use, name), "a channel of single counts: "+why)}
 	}
 	return "", []protocol.Finding{at.Finding(fmt.Sprintf("no channel and no detector %q on this bench", name), known(name, f.singles()))}
 }

@@ -58,6 +58,7 @@ type Recipe struct {
 	Dark       *Cadence
 	Background *Background
 	Trouble    scan.Trouble
+	Result     *Result
 
 	dwellAt strict.Place
 	ofAt    strict.Place // of the dwell's trigger
@@ -103,7 +104,8 @@ func Parse(file string, text []byte) (*Recipe, error) {
 	r.Dark = readDark(m.Opt("dark"))
 	r.Background = readBackground(m.Opt("background"))
 	r.Trouble = readTrouble(m.Opt("trouble"))
-	m.Later("reference", "refine", "guards", "schedule", "result")
+	r.Result = readResult(m.Opt("result"), r.Dark != nil || r.Background != nil)
+	m.Later("reference", "refine", "guards", "schedule")
 	m.Done()
 	if visits := r.visits(); visits.Cmp(big.NewInt(MaxVisits)) > 0 {
 		sweep.Fail(fmt.Sprintf("%s points visited %d times are %s visits", r.points(), r.Repeat.Times, visits), fmt.Sprintf("at most %d", MaxVisits))

@@ -27,6 +27,7 @@ func bench() Facts {
 		Singles:      []drivers.Channel{"a", "b"},
 		Coincidences: map[drivers.Channel][2]drivers.Channel{"ab": {"a", "b"}},
 		Detectors:    map[string]drivers.Channel{"signal": "a", "idler": "b"},
+		Sensors:      []Sensor{{Name: "pump_power", Unit: "mW"}, {Name: "crystal_temperature", Unit: "Cel"}},
 	}
 }
 
@@ -216,6 +217,8 @@ func FuzzParse(f *testing.F) {
 		"title: A\ndwell: 1 s\ndark: {every: 10 points, dwell: 1 s, also: [start]}\ntrouble: {retries: 0, then: stop}\n",
 		"title: A\ndwell: 1 s\nsweep: [{setting: oven, from: 293.15 K, to: 295.15 K, step: 1 K}]\n",
 		"title: A\ndwell: {heralds: 200000, of: signal, at_most: 60 s, slice: 1 s}\nbackground: {turn: pump_waveplate, by: 45 deg, every: 10 points, dwell: 10 s}\norder: shuffled\n",
+		"title: A\ndwell: {heralds: 9, at_most: 60 s, slice: 1 s}\ndark: {also: [end], dwell: 1 s}\nsweep: [{axis: idler_arm, from: 2 deg, to: 3 deg, step: 0.1 deg}]\nresult: {kind: efficiency, trigger: signal, under_test: idler, use: {plateau_of: idler_arm, half_width: 0.1 deg}}\n",
+		"title: A\ndwell: 1 s\nsweep: [{axis: idler_arm, from: 2 deg, to: 3 deg, step: 0.1 deg}]\nresult: {kind: peak, of: ab, along: idler_arm, profile: sinc2, power: pump_power}\n",
 		"title: A\ndwell: {coincidences: 5}\nsweep: [{axis: x, at: 1 mrad, conjugate_of: y}]\n",
 	} {
 		f.Add(body)
@@ -287,5 +290,42 @@ func TestShuffledPassesVisitEveryPointOnce(t *testing.T) {
 	}
 	if len(seen) != 22 || sorted {
 		t.Errorf("%d visits, in the order of the list: %v; want 22 different ones in another order", len(seen), sorted)
+	}
+}
+
+const acrossIdler = "sweep: [{axis: signal_arm, at: 2 deg}, {axis: idler_arm, from: 2 deg, to: 3 deg, step: 0.1 deg}]\n"
+
+func TestAnEfficiencyNamesItsDetectorsAndItsReadings(t *testing.T) {
+	const dark = "dark: {also: [start], dwell: 10 s}\n"
+	for _, c := range []struct {
+		name, body string
+		want       scan.Result
+	}{
+		{"by detectors, on the plateau", acrossIdler + dark + "result: {kind: efficiency, trigger: signal, under_test: idler, use: {plateau_of: idler_arm, half_width: 0.1 deg}}\n",
+			scan.Result{Kind: scan.Efficiency, Trigger: "a", UnderTest: "b", PlateauOf: "idler_arm", HalfWidth: unit.Degree / 10}},
+		{"by channels, all points", dark + "result: {kind: efficiency, trigger: b, under_test: a, use: {points: all}}\n",
+			scan.Result{Kind: scan.Efficiency, Trigger: "b", UnderTest: "a"}},
+		{"all points of one place and several settings", "sweep: [{axis: idler_arm, at: [2 deg, 2 deg]}, {setting: delay, at: [1 ns, 2 ns]}]\n" + dark + "result: {kind: efficiency, trigger: signal, under_test: idler, use: {points: all}}\n",
+			scan.Result{Kind: scan.Efficiency, Trigger: "a", UnderTest: "b"}},
+		{"a peak of coincidences", acrossIdler + "result: {kind: peak, of: ab, along: idler_arm, profile: sinc2, power: pump_power}\n",
+			scan.Result{Kind: scan.Peak, Of: "ab", Along: "idler_arm", Profile: "sinc2", Power: "pump_power"}},
+		{"a peak of a detector's counts", acrossIdler + "result: {kind: peak, of: idler, along: idler_arm}\n",
+			scan.Result{Kind: scan.Peak, Of: "b", Along: "idler_arm"}},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			if got := planOf(t, c.body).Result; got == nil || *got != c.want {
+				t.Errorf("got  %+v\nwant %+v", got, c.want)
+			}
+		})
+	}
+	if got := planOf(t, acrossIdler).Result; got != nil {
+		t.Errorf("a recipe without result has %+v; want none", got)
+	}
+}
+
+func TestHeraldsAreOfTheResultsTrigger(t *testing.T) {
+	p := plan(t, "title: A\ndwell: {heralds: 1000, at_most: 60 s, slice: 1 s}\ndark: {also: [start], dwell: 10 s}\nresult: {kind: efficiency, trigger: idler, under_test: signal, use: {points: all}}\n")
+	if p.Dwell.Trigger != "b" || p.Dwell.Heralds != 1000 {
+		t.Errorf("%+v; want heralds of b", p.Dwell)
 	}
 }
