@@ -17,6 +17,7 @@ import (
 	"os"
 	"runtime/debug"
 	"sync"
+	"sync/atomic"
 	"time"
 
 	"gemel/drivers"
@@ -29,6 +30,8 @@ type Line struct {
 	urgent chan *job
 	done   chan struct{} // closed when Run has returned
 	record record
+
+	numbered atomic.Uint32
 
 	mu    sync.Mutex
 	seats []*Seat
@@ -287,7 +290,11 @@ func (l *Line) unasked(asker *Seat, frame []byte) (known bool) {
 }
 
 func (l *Line) restarted(s *Seat) {
-	s.restarted = true
+	for _, each := range l.everySeat() {
+		if each == s || each.set.Nameless && s.set.Nameless {
+			each.restarted = true
+		}
+	}
 	l.record.count(func(c *Counts) { c.Restarts++ })
 	l.set.Log.Warn().Str("line", l.set.Name).Str("device", string(s.set.Device)).Msg("the instrument restarted")
 }

@@ -120,6 +120,9 @@ type SeatSettings struct {
 	EndsWith       []byte // empty: the line's
 	AnswersEndWith []byte // empty: the line's
 	Echo           bool   // true here or in the line's settings: questions are repeated
+	// Nameless says that nothing in a question tells whom it is for. All nameless devices of a line are
+	// then parts of one instrument: what one learns of a restart is true for all.
+	Nameless bool
 	// Unasked knows what this device sends by itself: it returns Restarted, Chatter, or the zero
 	// Verdict for anything else. Nil: it never does. It must be quick and must not call the line.
 	Unasked func(frame []byte) Verdict
@@ -159,6 +162,10 @@ func (s *Seat) Device() drivers.DeviceName { return s.set.Device }
 
 // Blocks cuts this device's answers at its terminator, but not inside blocks and strings.
 func (s *Seat) Blocks() Frame { return Blocks(s.set.AnswersEndWith) }
+
+// Number returns numbers that count up, for questions that carry one. They are the line's: devices
+// that share it never number alike.
+func (s *Seat) Number() uint32 { return s.line.numbered.Add(1) - 1 }
 
 // LongestAnswer is after which time nothing comes any more to what was sent before.
 func (s *Seat) LongestAnswer() time.Duration { return s.line.set.LongestAnswer }

@@ -69,7 +69,8 @@ type ShutterConfig struct {
 	SettleClosed time.Duration
 }
 
-// SensorConfig describes a meter of one quantity.
+// SensorConfig describes a meter of one quantity. By default it is read as SCPI-1999 spells out READ?:
+// one INITiate, and FETCh? for what it measured. That is asked twice.
 type SensorConfig struct {
 	Common
 	Unit       string        // what Read returns, a spelling of package unit
@@ -77,9 +78,11 @@ type SensorConfig struct {
 	SetUnit    string        // such as :UNIT:POW W; empty: the unit is not set
 	AskUnit    string        // such as :UNIT:POW?; empty with SetUnit empty
 	UnitAnswer string        // the answer to AskUnit, such as W
-	Measure    string        // such as :MEAS:POW?
-	Again      string        // asks for the value just measured once more; default :FETC?
-	Once       bool          // the meter cannot be asked for the same value twice
+	Initiate   string        // starts one measurement; default :INIT. One that must be waited for: :INIT;*WAI
+	Fetch      string        // asks for what was measured; default :FETC?
+	Measure    string        // for a meter without Initiate: measures and answers at once, such as :MEAS:POW?
+	Once       bool          // and cannot be asked for the same value again: it measures twice
+	Agree      float64       // how far those two may differ, in Unit; needed with Once
 	Within     time.Duration // a measurement takes no longer; 0: the line's answer time
 }
 

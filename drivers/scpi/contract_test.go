@@ -2,7 +2,9 @@ package scpi
 
 import (
 	"context"
+	"errors"
 	"fmt"
+	"math"
 	"strconv"
 	"strings"
 	"sync"
@@ -49,6 +51,8 @@ func (s *simple) answer(message string) string {
 			s.out = value == "ON"
 		case ":OUTP?":
 			say("%d", map[bool]int{true: 1}[s.out])
+		case ":INIT":
+			s.power += 1e-4
 		case ":MEAS:POW?":
 			s.power += 1e-4
 			fallthrough
@@ -123,14 +127,22 @@ func TestOtherContracts(t *testing.T) {
 			return drivertest.ShutterSetup{Shutter: d, Wire: far.Wire(), Open: func() bool { s.mu.Lock(); defer s.mu.Unlock(); return s.out }}
 		})
 	})
-	t.Run("sensor", func(t *testing.T) {
-		drivertest.Sensor(t, synctest.Test, func(t *testing.T) drivertest.SensorSetup {
-			s, l, far := box(t)
-			d, err := NewSensor(l, SensorConfig{Common: common, Unit: "mW", AnswerUnit: "W", Measure: ":MEAS:POW?"})
-			must(t, d, err)
-			return drivertest.SensorSetup{Sensor: d, Wire: far.Wire(), Tolerance: 1e-6, True: func() float64 { s.mu.Lock(); defer s.mu.Unlock(); return s.power * 1000 }}
+	for how, set := range map[string]SensorConfig{
+		"that is started and fetched": {},
+		"that measures when asked":    {Measure: ":MEAS:POW?"},
+		"that cannot be asked again":  {Measure: ":MEAS:POW?", Once: true, Agree: 0.15},
+	} {
+		t.Run("sensor "+how, func(t *testing.T) {
+			drivertest.Sensor(t, synctest.Test, func(t *testing.T) drivertest.SensorSetup {
+				s, l, far := box(t)
+				set := set
+				set.Common, set.Unit, set.AnswerUnit = common, "mW", "W"
+				d, err := NewSensor(l, set)
+				must(t, d, err)
+				return drivertest.SensorSetup{Sensor: d, Wire: far.Wire(), Tolerance: 1e-6 + set.Agree, True: func() float64 { s.mu.Lock(); defer s.mu.Unlock(); return s.power * 1000 }}
+			})
 		})
-	})
+	}
 	t.Run("setting", func(t *testing.T) {
 		drivertest.Setting(t, synctest.Test, func(t *testing.T) drivertest.SettingSetup {
 			s, l, far := box(t)
@@ -222,4 +234,67 @@ func TestTheGatesOfANightTakeLittleTimeOfTheProcessor(t *testing.T) {
 	if exchanges > 4*gates+4 || each > 2*time.Millisecond {
 		t.Errorf("%v and %.2f exchanges a gate; want 4 exchanges and far less than 2 ms", each, float64(exchanges)/gates)
 	}
+}
+
+// Two meters in one box on one line: nothing in a question says which of them it is for.
+func twoMeters(t *testing.T, answer func(far *drivertest.Far, message, answer string) string, test func(t *testing.T, box *simple, power, other *Sensor)) {
+	synctest.Test(t, func(t *testing.T) {
+		box := &simple{}
+		var far *drivertest.Far
+		l, made := plugged(t, func(m string) string { return answer(far, m, box.answer(m)) }, nil)
+		far = made
+		meter := func(name drivers.DeviceName) *Sensor {
+			s, err := NewSensor(l, SensorConfig{Common: Common{Name: name, Start: []string{":RANG 1"}}, Unit: "mW", AnswerUnit: "W"})
+			must(t, s, err)
+			if err := s.Connect(t.Context()); err != nil {
+				t.Fatal(err)
+			}
+			return s
+		}
+		defer time.Sleep(time.Minute) // the far end is still at its answer
+		test(t, box, meter("power"), meter("other"))
+	})
+}
+
+func TestMetersOnOneLineNeverTakeEachOthersAnswers(t *testing.T) {
+	double := false
+	twoMeters(t, func(far *drivertest.Far, message, answer string) string {
+		time.Sleep(10 * time.Millisecond)
+		if double && strings.Contains(message, ":INIT") {
+			double = false
+			time.AfterFunc(5*time.Millisecond, func() { far.Say(answer + "\n") })
+		}
+		return answer
+	}, func(t *testing.T, box *simple, power, other *Sensor) {
+		double = true
+		if _, err := power.Read(t.Context()); err != nil {
+			t.Fatal(err)
+		}
+		v, err := other.Read(t.Context())
+		if err != nil || math.Abs(v-box.power*1e3) > 1e-6 {
+			t.Errorf("the other meter reads %v, %v; want its own %v, not the answer before", v, err, box.power*1e3)
+		}
+	})
+}
+
+func TestARestartThatOneMeterNoticesIsTheOthersToo(t *testing.T) {
+	twoMeters(t, func(_ *drivertest.Far, _, answer string) string { return answer }, func(t *testing.T, box *simple, power, other *Sensor) {
+		box.mu.Lock()
+		box.powerOn = true
+		box.mu.Unlock()
+		for _, s := range []*Sensor{power, other} {
+			_, err := s.Read(t.Context())
+			if e, ok := errors.AsType[*drivers.Error](err); !ok || e.Remedy != drivers.Reconnect || !e.Restarted {
+				t.Errorf("%s: %v; want a restart, and reconnect", s.Name(), err)
+			}
+		}
+		for _, s := range []*Sensor{power, other} {
+			if err := s.Connect(t.Context()); err != nil {
+				t.Fatal(err)
+			}
+			if _, err := s.Read(t.Context()); err != nil {
+				t.Error(err)
+			}
+		}
+	})
 }

@@ -33,7 +33,6 @@ type device struct {
 	seat     *line.Seat
 	common   Common
 	repeat   int
-	tag      atomic.Uint32
 	identity atomic.Value // string
 }
 
@@ -51,7 +50,7 @@ func newDevice(l *line.Line, c Common, start []string) (*device, error) {
 	orElse(&c.AskError, ":SYST:ERR?")
 	orElse(&c.AskEvents, "*ESR?")
 	orElse(&c.Clear, "*CLS")
-	d := &device{seat: l.Seat(line.SeatSettings{Device: c.Name}), common: c, repeat: 2}
+	d := &device{seat: l.Seat(line.SeatSettings{Device: c.Name, Nameless: true}), common: c, repeat: 2}
 	if c.Repeat != nil {
 		d.repeat = max(*c.Repeat, 0)
 	}
@@ -172,7 +171,7 @@ func (d *device) exchange(ctx context.Context, q line.Question, parts ...string)
 	tag := ""
 	if !d.common.Untagged {
 		// 1 to 255: after power-on the mask is 0, which is nobody's number.
-		tag = strconv.Itoa(int((d.tag.Add(1)-1)%255) + 1)
+		tag = strconv.Itoa(int(d.seat.Number()%255) + 1)
 		message = "*ESE " + tag + ";" + message + ";*ESE?"
 	}
 	q.Send = []byte(message)

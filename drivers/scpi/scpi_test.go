@@ -603,6 +603,12 @@ func TestConfigurationsThatCannotWorkAreRefusedWithAllFaults(t *testing.T) {
 	if _, err := NewShutter(l, ShutterConfig{Common: Common{Name: "s"}, PassesWhen: "maybe"}); err == nil {
 		t.Error("passes when maybe: taken")
 	}
+	_, err = NewSensor(l, SensorConfig{Common: Common{Name: "p"}, Unit: "mW", Initiate: ":READ?", Fetch: ":FETC", Once: true})
+	for _, want := range []string{`initiate: ":READ?" is a query`, `fetch: ":FETC"`, "once without measure", "agree 0"} {
+		if err == nil || !strings.Contains(err.Error(), want) {
+			t.Errorf("%v; want %q in it", err, want)
+		}
+	}
 	if _, err := NewSensor(l, SensorConfig{Common: Common{Name: "p"}, Unit: "mW", AnswerUnit: "Cel", Measure: ":MEAS:POW?"}); err == nil {
 		t.Error("Cel as mW: taken")
 	}

@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"math"
 
 	"gemel/drivers"
 	"gemel/drivers/line"
@@ -24,10 +25,26 @@ func NewSensor(l *line.Line, c SensorConfig) (*Sensor, error) {
 		return nil, err
 	}
 	orElse(&c.AnswerUnit, c.Unit)
-	orElse(&c.Again, ":FETC?")
+	orElse(&c.Fetch, ":FETC?")
 	var bad []error
-	if c.Measure == "" || !isQuery(c.Measure) {
+	if c.Initiate != "" && c.Measure != "" {
+		bad = append(bad, fmt.Errorf("%s: initiate %q and measure %q; want one of them", c.Name, c.Initiate, c.Measure))
+	}
+	orElse(&c.Initiate, ":INIT")
+	if !isQuery(c.Fetch) {
+		bad = append(bad, fmt.Errorf("%s: fetch: %q; want a query", c.Name, c.Fetch))
+	}
+	if c.Measure != "" && !isQuery(c.Measure) {
 		bad = append(bad, fmt.Errorf("%s: measure: %q; want a query such as :MEAS:POW?", c.Name, c.Measure))
+	}
+	if isQuery(c.Initiate) {
+		bad = append(bad, fmt.Errorf("%s: initiate: %q is a query; want it as measure", c.Name, c.Initiate))
+	}
+	if c.Once && c.Measure == "" {
+		bad = append(bad, fmt.Errorf("%s: once without measure; want the query that measures", c.Name))
+	}
+	if c.Once != (c.Agree > 0) {
+		bad = append(bad, fmt.Errorf("%s: once %t, agree %g; want both or neither: two measurements are compared, one cannot be told from a damaged one", c.Name, c.Once, c.Agree))
 	}
 	if (c.SetUnit != "") != (c.AskUnit != "") || (c.AskUnit != "") != (c.UnitAnswer != "") {
 		bad = append(bad, fmt.Errorf("%s: of set unit, ask unit and unit answer some are missing; want all three or none", c.Name))
@@ -67,27 +84,38 @@ func (s *Sensor) Connect(ctx context.Context) error {
 	return nil
 }
 
-// Read measures once, and asks for the same measurement a second time.
+// Read measures once, and asks for the measurement twice; or it measures twice, where the meter can
+// do nothing else.
 func (s *Sensor) Read(ctx context.Context) (float64, error) {
-	parts := []string{s.set.Measure, s.set.Again, s.common.AskEvents}
-	if s.set.Once {
-		parts = []string{s.set.Measure, s.common.AskEvents}
+	parts := []string{s.set.Initiate, s.set.Fetch, s.set.Fetch, s.common.AskEvents}
+	switch {
+	case s.set.Once:
+		parts = []string{s.set.Measure, s.set.Measure, s.common.AskEvents}
+	case s.set.Measure != "":
+		parts = []string{s.set.Measure, s.set.Fetch, s.common.AskEvents}
 	}
 	units, err := s.query(ctx, line.Question{Op: "read", Repeat: s.repeat, Within: s.common.Pace.Real(s.set.Within)}, parts...)
 	if err != nil {
 		return 0, err
 	}
-	if err := s.events(ctx, "read", units[len(units)-1]); err != nil {
+	if err := s.events(ctx, "read", units[2]); err != nil {
 		return 0, err
 	}
 	if !s.set.Once && units[0] != units[1] {
 		return 0, s.errorf("read", drivers.Retry, "%.40q and %.40q; want the same twice", units[0], units[1])
 	}
-	v, err := number(units[0])
-	if err != nil {
-		return 0, s.errorf("read", drivers.Retry, "%w", err)
+	var values [2]float64
+	for i := range values {
+		v, err := number(units[i])
+		if err != nil {
+			return 0, s.errorf("read", drivers.Retry, "%w", err)
+		}
+		values[i] = s.toUnit.of(v)
 	}
-	return s.toUnit.of(v), nil
+	if math.Abs(values[0]-values[1]) > s.set.Agree {
+		return 0, s.errorf("read", drivers.Retry, "%g %s and then %g; want them equal within %g", values[0], s.set.Unit, values[1], s.set.Agree)
+	}
+	return values[1], nil
 }
 
 // linear turns a value in one unit into another.
