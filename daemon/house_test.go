@@ -141,6 +141,9 @@ func TestOnlyTheCrewStartsGoroutines(t *testing.T) {
 			if g, ok := n.(*ast.GoStmt); ok {
 				t.Errorf("%s: a bare go statement; take daemon/crew, where a panic finds the rest state", s.pos.Position(g.Pos()))
 			}
+			if sel, ok := n.(*ast.SelectorExpr); ok && (sel.Sel.Name == "WaitGroup" || sel.Sel.Name == "errgroup") {
+				t.Errorf("%s: a %s starts goroutines too; take daemon/crew", s.pos.Position(sel.Pos()), sel.Sel.Name)
+			}
 			return true
 		})
 	}

@@ -42,9 +42,7 @@ func New(ctx context.Context, onPanic func(*Panic)) *Group {
 // Go starts an actor. When it returns an error, other than by the end of its context, the
 // group's context ends with that error as its cause.
 func (g *Group) Go(name string, run func(context.Context) error) {
-	g.wg.Add(1)
-	go func() {
-		defer g.wg.Done()
+	g.wg.Go(func() {
 		defer func() {
 			if v := recover(); v != nil {
 				p := &Panic{Actor: name, Value: v, Stack: debug.Stack()}
@@ -57,7 +55,7 @@ func (g *Group) Go(name string, run func(context.Context) error) {
 		if err := run(g.ctx); err != nil && g.ctx.Err() == nil {
 			g.cancel(fmt.Errorf("%s: %w", name, err))
 		}
-	}()
+	})
 }
 
 // Context ends when the group does; its cause says why.
