@@ -474,6 +474,9 @@ func (j *judge) process(p *Process) {
 		j.orphans = len(j.gates) > 0 || j.open != nil
 	case Started:
 		j.killed = false
+		for name := range j.bright {
+			j.bright[name] = j.now // nobody could before; now the first act has to
+		}
 	case StopAnswered:
 		j.stopped = p.Run
 		if r := j.runs[p.Run]; r == nil || r.state != protocol.Stopped {

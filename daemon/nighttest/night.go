@@ -314,7 +314,7 @@ func (k *kit) life() (final bool, err error) {
 	l.carriers.Go("courier", carrier.Run)
 	err = l.main.Wait()
 	if !l.dead.Load() && err == nil {
-		k.catchUp(carrier, l.carriers)
+		k.catchUp(carrier)
 	}
 	l.carriers.Stop()
 	l.lines.Stop()
@@ -342,10 +342,13 @@ func (k *kit) life() (final bool, err error) {
 }
 
 // catchUp gives the courier what time it needs once the broker is back.
-func (k *kit) catchUp(c *courier.Courier, g *crew.Group) {
+func (k *kit) catchUp(c *courier.Courier) {
 	for range 1000 {
 		synctest.Wait()
-		if c.Behind() == 0 {
+		k.sink.mu.Lock()
+		stored := len(k.sink.stored)
+		k.sink.mu.Unlock()
+		if stored >= len(k.journal) {
 			return
 		}
 		time.Sleep(time.Minute)
