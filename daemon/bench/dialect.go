@@ -153,13 +153,15 @@ func scpiSensor(m strict.Map) sensorMaker {
 	h := m.Opt("headers").Map()
 	c := scpi.SensorConfig{
 		Common:  scpiCommon(m, h),
-		SetUnit: h.Opt("set_unit").Text(""), AskUnit: h.Opt("ask_unit").Text(""), Measure: h.Need("measure").Text(), Again: h.Opt("again").Text(""),
+		SetUnit: h.Opt("set_unit").Text(""), AskUnit: h.Opt("ask_unit").Text(""),
+		Initiate: h.Opt("initiate").Text(""), Fetch: h.Opt("fetch").Text(""), Measure: h.Opt("measure").Text(""),
 		UnitAnswer: m.Opt("unit_answer").Text(""), AnswerUnit: unitOf(m.Opt("answer_unit")), Once: m.Opt("once").Bool(), Within: m.Opt("within").Duration(0, maxPoll),
 	}
+	agree := inUnit(m, m.Opt("agree"))
 	h.Done()
 	return func(l *line.Line, pace drivers.Pace, d Sensor) (drivers.Sensor, error) {
 		c := c
-		c.Common, c.Unit = scpiFor(c.Common, d.Device, pace), d.Unit
+		c.Common, c.Unit, c.Agree = scpiFor(c.Common, d.Device, pace), d.Unit, agree(d.Unit)
 		return scpi.NewSensor(l, c)
 	}
 }
