@@ -69,6 +69,9 @@ func (f *File) Facts() recipe.Facts {
 	for _, s := range f.Sensors {
 		facts.Sensors = append(facts.Sensors, recipe.Sensor{Name: s.Name, Unit: s.Unit})
 	}
+	if f.Optics != nil {
+		facts.Conjugate = f.conjugate
+	}
 	for _, a := range f.Axes {
 		facts.Axes = append(facts.Axes, a.Axis)
 	}

@@ -27,6 +27,12 @@ type Facts struct {
 	Coincidences map[drivers.Channel][2]drivers.Channel // the two singles channels of each coincidence channel
 	Detectors    map[string]drivers.Channel             // the singles channel of each detector
 	Sensors      []Sensor
+
+	// Conjugate says where the partner of a photon goes: into which angle of the other arm, for an
+	// arm of this role (signal_arm, idler_arm) and angle at its filter's centre and a crystal
+	// tilted so; bench angles in degrees. An error says why there is none. Nil: the optics are not
+	// described.
+	Conjugate func(role string, armDeg, tiltDeg float64) (partnerDeg float64, err error)
 }
 
 // Setting is one setting a sweep may step.
@@ -46,8 +52,15 @@ type Sensor struct {
 // the line of the recipe that asks for what the bench cannot do.
 func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 	var findings []protocol.Finding
-	for _, e := range r.Sweep {
-		findings = append(findings, e.check(f)...)
+	follow := map[int]partners{}
+	for i, c := range r.columns() {
+		if c.ConjugateOf == "" {
+			findings = append(findings, c.check(f)...)
+			continue
+		}
+		p, found := r.partners(c, f)
+		follow[i] = p
+		findings = append(findings, found...)
 	}
 	findings = append(findings, checkGates(r.Dwell, r.dwellAt, f)...)
 	result, found := r.result(f)
@@ -65,7 +78,7 @@ func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 	if err := strict.Join(findings...); err != nil {
 		return scan.Plan{}, err
 	}
-	plan := scan.Plan{Title: r.Title, Points: r.expand(f), Dwell: r.Dwell, Repeat: r.Repeat, Background: background, Trouble: r.Trouble, Result: result}
+	plan := scan.Plan{Title: r.Title, Points: r.expand(f, follow), Dwell: r.Dwell, Repeat: r.Repeat, Background: background, Trouble: r.Trouble, Result: result}
 	plan.Dwell.Trigger = trigger
 	if r.Dark != nil {
 		dark := r.Dark.Cadence
@@ -137,7 +150,7 @@ func (r *Recipe) background(f Facts) (*scan.Background, []protocol.Finding) {
 	switch {
 	case found != nil:
 		return nil, append(findings, found...)
-	case slices.ContainsFunc(r.Sweep, func(e Entry) bool { return e.Axis == b.Turn }):
+	case r.sweeps(b.Turn):
 		findings = append(findings, b.turnAt.Finding(fmt.Sprintf("the axis %q, which the sweep moves", b.Turn), "an axis that stands still while light is counted"))
 	case axis.Park == nil:
 		findings = append(findings, b.turnAt.Finding(fmt.Sprintf("the axis %q, which has no park angle", b.Turn),
@@ -154,6 +167,11 @@ func (r *Recipe) background(f Facts) (*scan.Background, []protocol.Finding) {
 		return nil, findings
 	}
 	return &scan.Background{Cadence: b.Cadence.Cadence, Axis: b.Turn, From: *axis.Park, By: b.By}, nil
+}
+
+func (r *Recipe) sweeps(axis drivers.AxisName) bool {
+	_, ok := r.column(axis)
+	return ok
 }
 
 // share is how much of the time a cadence takes that goes by the clock.
@@ -287,43 +305,45 @@ func checkGates(d scan.Dwell, at strict.Place, f Facts) []protocol.Finding {
 	return nil
 }
 
-// expand lists the points, the last entry of the sweep running fastest.
-func (r *Recipe) expand(f Facts) []scan.Point {
+// expand lists the points, the last entry of the sweep running fastest. follow holds, by the place
+// of their column, where conjugates go.
+func (r *Recipe) expand(f Facts, follow map[int]partners) []scan.Point {
 	n := r.Points()
 	if len(r.Sweep) == 0 {
 		return make([]scan.Point, 1)
 	}
-	var axes, settings []int // indices of entries
-	angles, values := make([][]unit.Angle, len(r.Sweep)), make([][]float64, len(r.Sweep))
-	for i, e := range r.Sweep {
-		if e.Axis != "" {
-			axes = append(axes, i)
-			angles[i] = make([]unit.Angle, e.Values.Len())
-			for k := range angles[i] {
-				x, _ := e.Values.at(k)
-				angles[i][k] = x.angle()
-			}
+	columns := r.columns()
+	angles, values := make([][]unit.Angle, len(columns)), make([][]float64, len(columns))
+	axes := 0
+	for i, c := range columns {
+		if c.Axis != "" {
+			axes++
+			angles[i] = c.angles()
 			continue
 		}
-		settings = append(settings, i)
-		values[i] = make([]float64, e.Values.Len())
-		name := f.Settings[slices.IndexFunc(f.Settings, func(s Setting) bool { return s.Name == e.Setting })].Unit
+		values[i] = make([]float64, c.Values.Len())
+		name := f.Settings[slices.IndexFunc(f.Settings, func(s Setting) bool { return s.Name == c.Setting })].Unit
 		for k := range values[i] {
-			x, _ := e.Values.at(k)
+			x, _ := c.Values.at(k)
 			values[i][k], _ = x.in(name) // checked at the extremes: a unit that fails, fails there
 		}
 	}
 	points := make([]scan.Point, n)
-	axisTargets, settingTargets := make([]scan.AxisTarget, 0, n*len(axes)), make([]scan.SettingTarget, 0, n*len(settings))
+	axisTargets, settingTargets := make([]scan.AxisTarget, 0, n*axes), make([]scan.SettingTarget, 0, n*(len(columns)-axes))
 	at := make([]int, len(r.Sweep))
 	for p := range points {
 		r.place(p, at)
 		a, s := len(axisTargets), len(settingTargets)
-		for _, i := range axes {
-			axisTargets = append(axisTargets, scan.AxisTarget{Axis: r.Sweep[i].Axis, Angle: angles[i][at[i]]})
-		}
-		for _, i := range settings {
-			settingTargets = append(settingTargets, scan.SettingTarget{Setting: r.Sweep[i].Setting, Value: values[i][at[i]]})
+		for i, c := range columns {
+			if c.Axis == "" {
+				settingTargets = append(settingTargets, scan.SettingTarget{Setting: c.Setting, Value: values[i][at[c.level]]})
+				continue
+			}
+			angle := angles[i][at[c.level]]
+			if partner, ok := follow[i]; ok {
+				angle += partner.at(at)
+			}
+			axisTargets = append(axisTargets, scan.AxisTarget{Axis: c.Axis, Angle: angle})
 		}
 		points[p] = scan.Point{Axes: axisTargets[a:len(axisTargets):len(axisTargets)], Settings: settingTargets[s:len(settingTargets):len(settingTargets)]}
 	}

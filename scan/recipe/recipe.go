@@ -14,10 +14,8 @@ package recipe
 import (
 	"fmt"
 	"math/big"
-	"strconv"
 	"time"
 
-	"gemel/drivers"
 	"gemel/protocol/strict"
 	"gemel/scan"
 )
@@ -65,15 +63,6 @@ type Recipe struct {
 	of      string       // as it is written; empty: not there
 }
 
-// Entry is one level of the sweep: the values of one axis or one setting.
-type Entry struct {
-	Axis    drivers.AxisName   // empty when it is a setting
-	Setting drivers.DeviceName // empty when it is an axis
-	Values  Values
-
-	nameAt strict.Place
-}
-
 // Load reads a recipe file.
 func Load(path string) (*Recipe, error) {
 	text, err := strict.ReadFile(path)
@@ -116,65 +105,8 @@ func Parse(file string, text []byte) (*Recipe, error) {
 	return r, nil
 }
 
-// Points is how many points the sweep has.
-func (r *Recipe) Points() int { return int(r.points().Int64()) }
-
-func (r *Recipe) points() *big.Int {
-	n := big.NewInt(1)
-	for _, e := range r.Sweep {
-		n.Mul(n, big.NewInt(int64(max(e.Values.Len(), 1))))
-	}
-	return n
-}
-
-func (r *Recipe) visits() *big.Int {
-	return new(big.Int).Mul(r.points(), big.NewInt(int64(r.Repeat.Times)))
-}
-
 func readOrder(v strict.Value) Order {
 	return Order(v.Choice([]string{string(Ascending), string(Serpentine), string(Shuffled)}, string(Ascending)))
-}
-
-func readSweep(v strict.Value) []Entry {
-	if v.Given() && v.IsList() && len(v.List(0, maxEntries)) == 0 && v.Good() {
-		v.Fail("an empty list", "axes or settings in it, or no key \"sweep\" to count where everything stands")
-		return nil
-	}
-	var entries []Entry
-	seen := map[string]bool{}
-	for _, item := range v.List(1, maxEntries) {
-		e, name, ok := readEntry(item.Map())
-		if !ok {
-			continue
-		}
-		if seen[name.Text()] {
-			name.Fail(strconv.Quote(name.Text())+" a second time", "each axis and each setting in one entry")
-			continue
-		}
-		seen[name.Text()] = true
-		entries = append(entries, e)
-	}
-	return entries
-}
-
-func readEntry(m strict.Map) (e Entry, name strict.Value, ok bool) {
-	axis, setting := m.Opt("axis"), m.Opt("setting")
-	m.Later("conjugate_of", "with")
-	switch {
-	case axis.Given() && setting.Given():
-		setting.Fail("an axis and a setting in one entry", "one of them; a second entry nests inside the first")
-	case axis.Given():
-		name, e.Axis = axis, drivers.AxisName(axis.Token())
-	case setting.Given():
-		name, e.Setting = setting, drivers.DeviceName(setting.Token())
-	case m.Given():
-		m.Need("axis")
-	}
-	e.nameAt = name.Place()
-	later := m.Has("conjugate_of") || m.Has("with")
-	e.Values = readValues(m, e.Axis != "", later)
-	m.Done()
-	return e, name, name.Good() && e.Values.Len() > 0
 }
 
 func readRepeat(v strict.Value) scan.Repeat {

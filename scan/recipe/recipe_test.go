@@ -1,6 +1,7 @@
 package recipe
 
 import (
+	"errors"
 	"fmt"
 	"reflect"
 	"slices"
@@ -27,8 +28,20 @@ func bench() Facts {
 		Singles:      []drivers.Channel{"a", "b"},
 		Coincidences: map[drivers.Channel][2]drivers.Channel{"ab": {"a", "b"}},
 		Detectors:    map[string]drivers.Channel{"signal": "a", "idler": "b"},
+		Conjugate:    mirror,
 		Sensors:      []Sensor{{Name: "pump_power", Unit: "mW"}, {Name: "crystal_temperature", Unit: "Cel"}},
 	}
+}
+
+// mirror is a crystal whose partners leave on the mirror side, moved by the tilt, up to 7 deg.
+func mirror(role string, armDeg, tiltDeg float64) (float64, error) {
+	if armDeg > 7 {
+		return 0, errors.New("the partner does not leave the crystal")
+	}
+	if role == "idler_arm" {
+		return armDeg - tiltDeg/10, nil
+	}
+	return armDeg + tiltDeg/10, nil
 }
 
 func planOf(t *testing.T, body string) scan.Plan {
@@ -219,6 +232,7 @@ func FuzzParse(f *testing.F) {
 		"title: A\ndwell: {heralds: 200000, of: signal, at_most: 60 s, slice: 1 s}\nbackground: {turn: pump_waveplate, by: 45 deg, every: 10 points, dwell: 10 s}\norder: shuffled\n",
 		"title: A\ndwell: {heralds: 9, at_most: 60 s, slice: 1 s}\ndark: {also: [end], dwell: 1 s}\nsweep: [{axis: idler_arm, from: 2 deg, to: 3 deg, step: 0.1 deg}]\nresult: {kind: efficiency, trigger: signal, under_test: idler, use: {plateau_of: idler_arm, half_width: 0.1 deg}}\n",
 		"title: A\ndwell: 1 s\nsweep: [{axis: idler_arm, from: 2 deg, to: 3 deg, step: 0.1 deg}]\nresult: {kind: peak, of: ab, along: idler_arm, profile: sinc2, power: pump_power}\n",
+		"title: A\ndwell: 1 s\nsweep: [{axis: crystal_tilt, at: [0 deg, 1 deg]}, {axis: signal_arm, at: [1 deg, 2 deg], with: {setting: delay, at: [1 ns, 2 ns]}}, {axis: idler_arm, conjugate_of: signal_arm, span: 1 deg, step: 0.5 deg}]\n",
 		"title: A\ndwell: {coincidences: 5}\nsweep: [{axis: x, at: 1 mrad, conjugate_of: y}]\n",
 	} {
 		f.Add(body)
@@ -328,4 +342,75 @@ func TestHeraldsAreOfTheResultsTrigger(t *testing.T) {
 	if p.Dwell.Trigger != "b" || p.Dwell.Heralds != 1000 {
 		t.Errorf("%+v; want heralds of b", p.Dwell)
 	}
+}
+
+// targets prints a plan's points, one line each.
+func targets(p scan.Plan) string {
+	var b strings.Builder
+	for _, point := range p.Points {
+		for _, a := range point.Axes {
+			fmt.Fprintf(&b, "%s ", strings.TrimSuffix(a.Angle.String(), " deg"))
+		}
+		for _, s := range point.Settings {
+			fmt.Fprintf(&b, "%gns ", s.Value)
+		}
+		b.WriteString("| ")
+	}
+	return strings.TrimSuffix(b.String(), " | ")
+}
+
+func TestTwoInLockStepAreSteppedTogether(t *testing.T) {
+	for _, c := range []struct{ name, sweep, want string }{
+		{"an axis with an axis", "- {axis: signal_arm, from: 1 deg, to: 3 deg, step: 1 deg, with: {axis: idler_arm, at: [5 deg, 6 deg, 4 deg]}}", "1 5 | 2 6 | 3 4"},
+		{"an axis with a setting", "- axis: signal_arm\n  at: [1 deg, 2 deg]\n  with: {setting: delay, from: 1 ns, to: 2 ns, step: 1 ns}", "1 1ns | 2 2ns"},
+		{"a setting with an axis, around an inner axis", "- {setting: delay, at: [1 ns, 2 ns], with: {axis: crystal_tilt, at: [0 deg, 1 deg]}}\n- {axis: signal_arm, at: [3 deg, 4 deg]}", "0 3 1ns | 0 4 1ns | 1 3 2ns | 1 4 2ns"},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			if got := targets(planOf(t, "sweep:\n"+c.sweep+"\n")); got != c.want {
+				t.Errorf("got  %s\nwant %s", got, c.want)
+			}
+		})
+	}
+}
+
+func TestAConjugateGoesWhereThePartnerGoes(t *testing.T) {
+	const tilt = "- {axis: crystal_tilt, at: [0 deg, 1 deg]}\n"
+	for _, c := range []struct{ name, sweep, want string }{
+		{"alone", tilt + "- {axis: signal_arm, at: [2 deg, 3 deg]}\n- {axis: idler_arm, conjugate_of: signal_arm}", "0 2 2 | 0 3 3 | 1 2 2.1 | 1 3 3.1"},
+		{"with a span about it", tilt + "- {axis: signal_arm, at: 2 deg}\n- {axis: idler_arm, conjugate_of: signal_arm, span: 1 deg, step: 0.5 deg}", "0 2 1.5 | 0 2 2 | 0 2 2.5 | 1 2 1.6 | 1 2 2.1 | 1 2 2.6"},
+		{"the other way round, named before it is written", "- {axis: signal_arm, conjugate_of: idler_arm}\n" + tilt + "- {axis: idler_arm, at: 2 deg}", "2 0 2 | 1.9 1 2"},
+		{"tilt and arm in lock-step", "- {axis: crystal_tilt, at: [0 deg, 1 deg], with: {axis: signal_arm, at: [2 deg, 3 deg]}}\n- {axis: idler_arm, conjugate_of: signal_arm}", "0 2 2 | 1 3 3.1"},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			if got := targets(planOf(t, "sweep:\n"+c.sweep+"\n")); got != c.want {
+				t.Errorf("got  %s\nwant %s", got, c.want)
+			}
+		})
+	}
+	t.Run("the crystal stands where a background's axis parks", func(t *testing.T) {
+		f := bench()
+		f.Axes[2].Park = new(unit.Degree)
+		r, err := Parse("r.yaml", []byte("title: A\ndwell: 1 s\nbackground: {turn: crystal_tilt, by: 2 deg, also: [end], dwell: 1 s}\nsweep: [{axis: signal_arm, at: 2 deg}, {axis: idler_arm, conjugate_of: signal_arm}]\n"))
+		if err != nil {
+			t.Fatal(err)
+		}
+		p, err := r.Plan(f)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if got := targets(p); got != "2 2.1" {
+			t.Errorf("got %s; want 2 2.1", got)
+		}
+	})
+	t.Run("a bench without optics has none", func(t *testing.T) {
+		f := bench()
+		f.Conjugate = nil
+		r, err := Parse("r.yaml", []byte("title: A\ndwell: 1 s\nsweep: [{axis: crystal_tilt, at: 0 deg}, {axis: signal_arm, at: 2 deg}, {axis: idler_arm, conjugate_of: signal_arm}]\n"))
+		if err != nil {
+			t.Fatal(err)
+		}
+		if _, err := r.Plan(f); err == nil || !strings.Contains(err.Error(), "sweep[2].conjugate_of: a conjugate on a bench without optics") {
+			t.Errorf("got %v; want it refused", err)
+		}
+	})
 }

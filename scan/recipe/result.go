@@ -238,43 +238,32 @@ func (r *Recipe) swept(axis drivers.AxisName, at strict.Place, need int, what st
 	return nil
 }
 
-// places is how many different angles an axis is swept over; 0 when it is not swept.
+// places is how many different angles an axis is swept over; 0 when it is not swept. Of a conjugate
+// it is how many there can be.
 func (r *Recipe) places(axis drivers.AxisName) int {
-	e, ok := r.entry(axis)
+	c, ok := r.column(axis)
 	if !ok {
 		return 0
 	}
-	if e.Values.grid != nil {
-		return e.Values.Len()
-	}
-	var angles []unit.Angle
-	for _, l := range e.Values.listed {
-		angles = append(angles, l.angle())
-	}
+	angles := c.angles()
 	slices.Sort(angles)
-	return len(slices.Compact(angles))
+	n := len(slices.Compact(angles))
+	if c.ConjugateOf != "" && c.ConjugateOf != axis {
+		if of, ok := r.column(c.ConjugateOf); ok && of.ConjugateOf == "" {
+			n *= r.places(of.Axis)
+		}
+	}
+	return n
 }
 
-// span is how far the sweep of an axis reaches.
+// span is how far the sweep of an axis reaches, where that is known without the model.
 func (r *Recipe) span(axis drivers.AxisName) (unit.Angle, bool) {
-	e, ok := r.entry(axis)
-	if !ok {
+	c, ok := r.column(axis)
+	if !ok || c.ConjugateOf != "" && r.places(c.ConjugateOf) > 1 {
 		return 0, false
 	}
-	var angles []unit.Angle
-	for _, k := range e.Values.extremes() {
-		n, _ := e.Values.at(k)
-		angles = append(angles, n.angle())
-	}
+	angles := c.angles()
 	return slices.Max(angles) - slices.Min(angles), true
-}
-
-func (r *Recipe) entry(axis drivers.AxisName) (Entry, bool) {
-	i := slices.IndexFunc(r.Sweep, func(e Entry) bool { return e.Axis == axis })
-	if i < 0 {
-		return Entry{}, false
-	}
-	return r.Sweep[i], true
 }
 
 func (f Facts) sensor(name drivers.DeviceName, at strict.Place) (Sensor, []protocol.Finding) {

@@ -132,12 +132,12 @@ func exact(q strict.Quantity) (number, bool) {
 }
 
 // readValues reads the one of the three ways of giving values that an entry uses. It asks for all
-// their keys, so that a mistyped one is compared with each.
-func readValues(m strict.Map, isAngle, later bool) Values {
+// their keys, so that a mistyped one is compared with each. Of a conjugate it reads what is added.
+func readValues(m strict.Map, isAngle, conjugate bool) Values {
 	at := m.Opt("at")
 	from, to, step := m.Opt("from"), m.Opt("to"), m.Opt("step")
 	around, span := m.Opt("around"), m.Opt("span")
-	if !m.Given() || later {
+	if !m.Given() {
 		return Values{}
 	}
 	ways := 0
@@ -148,6 +148,15 @@ func readValues(m strict.Map, isAngle, later bool) Values {
 	}
 	const want = "one of: at; from, to and step; around, span and step"
 	switch {
+	case conjugate && (at.Given() || from.Given() || to.Given() || around.Given()):
+		m.Fail("values given in two ways", "conjugate_of alone, or with span and step about where the partner goes")
+		return Values{}
+	case conjugate && (span.Given() || step.Given()):
+		m.Need("span")
+		m.Need("step")
+		return readSpan(number{value: new(big.Rat)}, span, step, span, isAngle)
+	case conjugate:
+		return Values{listed: []listed{{number: number{value: new(big.Rat)}, at: m.Place()}}}
 	case ways == 0:
 		m.Fail("no values", want)
 		return Values{}
@@ -212,14 +221,27 @@ func readRange(from, to, step strict.Value, isAngle bool) Values {
 }
 
 func readAround(around, span, step strict.Value, isAngle bool) Values {
-	c, okC := readNumber(around, isAngle)
+	c, ok := readNumber(around, isAngle)
+	if !ok {
+		readSpan(number{}, span, step, around, isAngle) // for what is wrong with it
+		return Values{}
+	}
+	return readSpan(c, span, step, around, isAngle)
+}
+
+// readSpan reads a grid about a centre that stands at a place of its own, or nowhere: then it is a
+// zero without a unit, which goes with every angle.
+func readSpan(c number, span, step, around strict.Value, isAngle bool) Values {
 	w, okW := readNumber(span, isAngle)
 	s, okS := readStep(step, isAngle)
 	if okW && w.value.Sign() <= 0 {
 		span.Failf("a span above zero: it reaches half of it to either side")
 		okW = false
 	}
-	if !okC || !okW || !okS || !oneUnit(step, s, []strict.Value{around, span}, c, w) {
+	if c.value != nil && c.value.Sign() == 0 && c.unit == "" {
+		c.unit = s.unit
+	}
+	if c.value == nil || !okW || !okS || !oneUnit(step, s, []strict.Value{around, span}, c, w) {
 		return Values{}
 	}
 	n, ok := divide(step, w.value, s.value, func(k *big.Int) string {
