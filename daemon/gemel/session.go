@@ -88,7 +88,7 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, log zerolo
 	}
 	s.cleanup = append(s.cleanup, func() { _ = s.book.Close() })
 
-	options := bench.Options{Links: flags.Lines, Log: log}
+	options := bench.Options{Links: flags.Lines, Log: log, Wrap: sabotage()}
 	if s.file.Simulated() && flags.Lines == "" {
 		folder, err := os.MkdirTemp("", "gemel-lines-")
 		if err != nil {
@@ -169,7 +169,27 @@ func (s *session) serve(ctx context.Context) error {
 	front.Go("beat", func(ctx context.Context) error {
 		return remote.RunBeat(ctx, conn, func() protocol.Status { return s.keeper.Status(ctx) })
 	})
-	return nil
+	return s.awaitRemote(front, conn)
+}
+
+// awaitRemote returns when requests are answered, so that nobody who waited for "serving" is told
+// that there is no daemon.
+func (s *session) awaitRemote(front *crew.Group, conn *nats.Conn) error {
+	within, cancel := context.WithTimeout(front.Context(), 20*time.Second)
+	defer cancel()
+	for {
+		_, err := conn.RequestWithContext(within, protocol.DoSubject(s.file.Name, "status"), []byte("{}"))
+		switch {
+		case err == nil:
+			return nil
+		case within.Err() != nil:
+			return fmt.Errorf("remote: no request is answered after 20 s: %w", err)
+		}
+		select {
+		case <-within.Done():
+		case <-time.After(5 * time.Millisecond):
+		}
+	}
 }
 
 // carry starts the courier. At the end it gets a moment for what is left; the rest waits for the
@@ -182,6 +202,9 @@ func (s *session) carry(ctx context.Context) error {
 	stream, err := courier.NewStream(conn, courier.StreamConfig{Bench: s.file.Name})
 	if err != nil {
 		return err
+	}
+	if _, err := stream.Last(ctx); err != nil { // made now, so that whoever looks for it finds it
+		s.log.Warn().Err(err).Msg("the stream cannot be made yet; the logbook goes on")
 	}
 	s.courier = courier.New(s.file.Name, s.book, stream, func(err error) {
 		if err != nil {
