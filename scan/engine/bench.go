@@ -15,6 +15,7 @@ type Bench struct {
 	Simulated bool
 
 	Axes      []scan.Axis
+	KeepOuts  []scan.KeepOut
 	Stages    []drivers.Stage
 	Counter   drivers.Counter
 	Tag       drivers.Channel // the channel that counts gates; empty: none

@@ -117,7 +117,7 @@ func (e *Engine) due(at map[drivers.AxisName]unit.Angle, targets []scan.AxisTarg
 
 // move makes the legs that lead to the targets, with the detectors protected, and settles.
 func (e *Engine) move(ctx context.Context, at map[drivers.AxisName]unit.Angle, targets []scan.AxisTarget) error {
-	legs, err := route.Legs(e.Bench.Axes, at, targets)
+	legs, err := route.Legs(e.Bench.Axes, e.Bench.KeepOuts, at, targets, route.State{})
 	if err != nil {
 		return &drivers.Error{Op: "move", Device: "route", Remedy: drivers.GiveUp, Err: err}
 	}
