@@ -12,7 +12,7 @@ import (
 
 // long runs the coverage and bias tests at the length that the table in DEVELOPERS.md states:
 //
-//	go test ./scan/estimate -run 'Cover|Bias|Coupled' -long -v -timeout 60m
+//	go test ./scan/estimate -run 'Cover|Bias|Coupled|PeaksAgainst|PeakAngles' -long -v -timeout 90m
 var long = flag.Bool("long", false, "run coverage and bias tests at full length")
 
 // regime is a way of calibrating.
