@@ -107,14 +107,43 @@ func Names() []string {
 	return names
 }
 
-// Named returns a published set. The error lists what there is.
+// Named returns a published set. The error lists what there is, the nearest name first.
 func Named(name string) (Set, error) {
 	for _, s := range published() {
 		if s.Name == name {
 			return s, nil
 		}
 	}
-	return Set{}, fmt.Errorf("crystal: %q is not a set that this program knows; want one of %s, or a set of your own", name, strings.Join(Names(), ", "))
+	names, near := Names(), ""
+	if name == "" {
+		return Set{}, fmt.Errorf("crystal: nothing; want one of %s", strings.Join(names, ", "))
+	}
+	if n := nearest(name, names); n != "" {
+		near = fmt.Sprintf("%q, which is nearest, or ", n)
+	}
+	if len(name) > 64 {
+		name = name[:64] + "…"
+	}
+	return Set{}, fmt.Errorf("crystal: %q is not a set that this program knows; want %sone of %s", name, near, strings.Join(names, ", "))
+}
+
+// nearest is the name that shares most pieces of three letters with what was written, "" where none
+// shares any.
+func nearest(written string, names []string) string {
+	written = strings.ToLower(written)
+	best, most := "", 0
+	for _, name := range names {
+		n := 0
+		for i := range len(name) - 2 {
+			if strings.Contains(written, name[i:i+3]) {
+				n++
+			}
+		}
+		if n > most {
+			best, most = name, n
+		}
+	}
+	return best
 }
 
 // Own builds a set from a user's own terms. The range of each axis must be stated: a formula

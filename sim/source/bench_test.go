@@ -10,15 +10,19 @@ import (
 
 var sink Rates
 
-// BenchmarkCold is one point's rates at the stated accuracy, from nothing.
+// BenchmarkCold is one point's rates at the stated accuracy, from nothing, for every bench that is
+// held against brute force.
 func BenchmarkCold(b *testing.B) {
-	m, err := New(bench(b))
-	if err != nil {
-		b.Fatal(err)
-	}
-	p := atPeak()
-	for b.Loop() {
-		sink = m.Exact(p)
+	for _, c := range cases(b) {
+		b.Run(c.name, func(b *testing.B) {
+			m, err := New(c.o)
+			if err != nil {
+				b.Fatal(err)
+			}
+			for b.Loop() {
+				sink = m.Exact(c.p)
+			}
+		})
 	}
 }
 

@@ -113,18 +113,20 @@ type Peak struct {
 	FWHMDeg     float64
 }
 
-// Peaks are the shapes that sweeps around the reference find with the crystal untilted.
+// Peaks are the shapes that sweeps around the bare emission find.
 type Peaks struct {
 	SignalSingles, IdlerSingles Peak // background left out
-	PairsOverSignal             Peak // the idler arm at the reference
-	PairsOverIdler              Peak // the signal arm at the reference
+	PairsOverSignal             Peak // the idler arm on the bare emission
+	PairsOverIdler              Peak // the signal arm on the bare emission
 	PairsOverBoth               Peak // over the signal arm, the idler arm following in proportion
 }
 
 // Peaks sweeps both arms through the reference without noise.
-func (m *Model) Peaks() Peaks {
-	f := m.newFrame(0, m.o.PumpNm, m.o.CrystalCel)
-	s, i := m.typicalDeg[0], m.typicalDeg[1]
+func (m *Model) Peaks() Peaks { return m.peaks(0, m.typicalDeg[0], m.typicalDeg[1]) }
+
+// peaks sweeps both arms through two angles, with the crystal at a tilt.
+func (m *Model) peaks(tiltDeg, s, i float64) Peaks {
+	f := m.newFrame(tiltDeg, m.o.PumpNm, m.o.CrystalCel)
 	ratio := 1.0
 	if s > 0 {
 		ratio = i / s
@@ -176,10 +178,11 @@ func shape(at, step float64, rate func(float64) float64) Peak {
 	}
 	p := Peak{MaximumDeg: x[best]}
 	if best > 0 && best < len(x)-1 {
-		// Parabola through the logarithms of the three highest.
-		a, b, c := math.Log(y[best-1]), math.Log(y[best]), math.Log(y[best+1])
-		if d := a - 2*b + c; d < 0 {
-			p.MaximumDeg += step / 2 * (a - c) / d
+		p.MaximumDeg += summit(step, y[best-1], y[best], y[best+1])
+		// Again on a finer grid: the flanks bend a parabola that reaches as far as they.
+		near := step / 4
+		if lo := p.MaximumDeg - near; lo > 0 {
+			p.MaximumDeg += summit(near, rate(lo), rate(p.MaximumDeg), rate(p.MaximumDeg+near))
 		}
 	}
 	half := y[best] / 2
@@ -203,4 +206,14 @@ func shape(at, step float64, rate func(float64) float64) Peak {
 	}
 	p.CentroidDeg, p.FWHMDeg = mean/sum, last-first
 	return p
+}
+
+// summit is where the parabola through the logarithms of three neighbours is highest, as seen from
+// the middle one.
+func summit(step, left, middle, right float64) float64 {
+	a, b, c := math.Log(left), math.Log(middle), math.Log(right)
+	if d := a - 2*b + c; d < 0 {
+		return max(-step, min(step, step/2*(a-c)/d))
+	}
+	return 0
 }

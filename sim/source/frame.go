@@ -75,8 +75,10 @@ func (m *Model) newFrame(tiltDeg, pumpNm, cel float64) *frame {
 }
 
 // centreNm is the signal wavelength that stands for all: the filter's centre, or degenerate.
-func (m *Model) centreNm(pumpNm float64) float64 {
-	if f := m.o.Signal.Filter; f.WidthNm > 0 {
+func (m *Model) centreNm(pumpNm float64) float64 { return m.o.centreNm(pumpNm) }
+
+func (o *Optics) centreNm(pumpNm float64) float64 {
+	if f := o.Signal.Filter; f.WidthNm > 0 {
 		return f.CentreNm
 	}
 	return 2 * pumpNm
@@ -138,7 +140,7 @@ func (m *Model) rays(b *band, s *stand, pairs bool) []ray {
 		return s.rays(m.rules, points((6+1.5*phase+1.3*edge)*m.effort, 3, mostEvenly), points((6+1.3*edge)*m.effort, 4, mostEvenly), m.mirrored)
 	}
 	if !pairs {
-		return s.rays(m.rules, points((3+0.9*phase)*m.effort, 2, 48), points((8+2*phase)*m.effort, 6, 96), m.mirrored)
+		return s.rays(m.rules, points((2.6+0.77*phase)*m.effort, 2, 48), points((6.8+1.7*phase)*m.effort, 6, 96), m.mirrored)
 	}
 	return s.rays(m.rules, points((1.6+0.55*phase+0.5*edge)*m.effort, 2, 48), points((5+1.2*phase+1.2*edge)*m.effort, 6, 96), m.mirrored)
 }

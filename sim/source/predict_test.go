@@ -18,7 +18,7 @@ var job = Job{Crystal: "bbo-kato-1986", Process: "e-oo", Pump: "405 nm", Cut: "2
 
 func predict(t *testing.T, j Job) Prediction {
 	t.Helper()
-	q, err := j.Query()
+	q, err := j.Query(Query{})
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -87,7 +87,7 @@ func TestNoEmissionIsAnAnswerWithAReason(t *testing.T) {
 	if !bytes.Contains(raw, []byte(`"roots":[]`)) || p.Because == "" || !bytes.Contains(raw, []byte(`"signal_external_deg":null`)) {
 		t.Errorf("%s; want no roots, null angles and why", raw)
 	}
-	if !strings.Contains(p.Table(), "none: ") {
+	if !strings.Contains(p.Table(), "no emission of 810 nm at azimuth 0 deg; no direction") {
 		t.Errorf("table:\n%s\nwant it to say that there is none", p.Table())
 	}
 }
@@ -112,7 +112,7 @@ func TestARingThatJustOpensIsFlagged(t *testing.T) {
 func TestExtrapolationIsRefusedOrFlagged(t *testing.T) {
 	j := job
 	j.Crystal = "bbo-zhang-2000"
-	q, err := j.Query()
+	q, err := j.Query(Query{})
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -126,7 +126,7 @@ func TestExtrapolationIsRefusedOrFlagged(t *testing.T) {
 }
 
 func TestAJobReportsAllItsFaultsAtOnce(t *testing.T) {
-	_, err := Job{Crystal: "glass", Pump: "405", Cut: "29.2 mm", Waist: "100"}.Query()
+	_, err := Job{Crystal: "glass", Pump: "405", Cut: "29.2 mm", Waist: "100"}.Query(Query{})
 	for _, want := range []string{`"glass" is not a set`, "pump: ", "cut: ", "waist: "} {
 		if err == nil || !strings.Contains(err.Error(), want) {
 			t.Errorf("%v; want %q in it", err, want)
@@ -144,7 +144,7 @@ not json
 {"crystal": "zgp-das-2003", "pump": "2050 nm", "signal": "3000 nm", "cut": "53.5 deg", "azimuth": "30 deg"}
 `
 	var out bytes.Buffer
-	if err := Batch(strings.NewReader(in), &out); err != nil {
+	if err := Batch(strings.NewReader(in), &out, Query{}); err != nil {
 		t.Fatal(err)
 	}
 	lines := strings.Split(strings.TrimSpace(out.String()), "\n")
@@ -158,29 +158,129 @@ not json
 	}
 }
 
-func TestTheDemoLikeBenchExplainsWhyThePeakIsNotTheEmissionAngle(t *testing.T) {
-	q, err := job.Query()
-	if err != nil {
-		t.Fatal(err)
-	}
+func TestABenchTellsThePeaksFromTheBareEmission(t *testing.T) {
 	o := bench(t)
-	q.Slab.ThicknessMm, q.WaistUm, q.Optics, q.TuningPoints = o.ThicknessMm, o.PumpWaistUm, &o, 41
+	o.Idler.RadiusMm = 6
+	q := Ask(o)
+	q.Tuning = true
 	p, err := Predict(q)
 	if err != nil {
 		t.Fatal(err)
 	}
 	c := p.Collected
-	if c == nil || math.Abs(c.SignalSinglesPeakDeg-*p.SignalExternalDeg-c.PeakMinusEmissionMdeg/1000) > 1e-9 || c.PeakMinusEmissionMdeg == 0 {
+	if c == nil || len(c.Peaks) != 5 || c.BareSignalDeg != *p.SignalExternalDeg || c.BareNm != 810 {
 		t.Fatalf("collected %+v", c)
 	}
-	if table := p.Table(); !strings.Contains(table, c.Because) || !strings.Contains(table, "collected band") || strings.Count(table, "\n") < 40 {
-		t.Errorf("table:\n%s\nwant the explanation, the band and the tuning curve", table)
+	m := model(t, o)
+	for _, k := range c.Peaks {
+		if math.Abs(k.ApertureMdeg+k.BandMdeg-k.MinusBareMdeg) > 1e-9 || math.Abs(k.MaximumDeg-c.BareSignalDeg-k.MinusBareMdeg/1000) > 1e-9 {
+			t.Errorf("%+v: the parts do not add up", k)
+		}
+		if k.Of != "idler singles" {
+			continue
+		}
+		// The rates themselves say that the peak is there and the bare emission is not it.
+		at := func(deg float64) float64 { return m.integral(m.newFrame(0, 405, 20), ofIdler, 2.864, deg, 0) }
+		if !(k.MinusBareMdeg < -10 && k.ApertureMdeg < -10) || at(k.MaximumDeg) < at(k.MaximumDeg-0.005) || at(k.MaximumDeg) < at(k.MaximumDeg+0.005) || at(c.BareIdlerDeg) > at(k.MaximumDeg) {
+			t.Errorf("%+v: want the maximum of the rates, some hundredths of a degree inside the ring", k)
+		}
 	}
-	t.Log("\n" + p.Table()[:2600])
+	table := p.Table()
+	for _, want := range []string{"The two differ because " + c.Because, "peak - bare / mdeg", "collected band of the signal", "Tuning curve", "deg per K"} {
+		if !strings.Contains(table, want) {
+			t.Errorf("table:\n%s\nwant %q in it", table, want)
+		}
+	}
+}
+
+func TestATiltedBenchIsAskedAtItsTilt(t *testing.T) {
+	q, err := Job{Tilt: "0.5 deg"}.Query(Ask(bench(t)))
+	if err != nil {
+		t.Fatal(err)
+	}
+	p, err := Predict(q)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if c := p.Collected; math.Abs(c.BareSignalDeg-*p.SignalExternalDeg) > 1e-12 || c.BareSignalDeg < 3.7 || math.Abs(c.Peaks[0].MaximumDeg-c.BareSignalDeg) > 0.02 {
+		t.Errorf("bare %.4f deg, signal %.4f deg, singles %+v; want all of them near 3.87 deg", c.BareSignalDeg, *p.SignalExternalDeg, c.Peaks[0])
+	}
+}
+
+func TestAJobOverABenchKeepsWhatItDoesNotSay(t *testing.T) {
+	o := bench(t)
+	o.AzimuthDeg, o.ThicknessMm = 90, 5
+	q, err := Job{Cut: "29.5 deg"}.Query(Ask(o))
+	if err != nil {
+		t.Fatal(err)
+	}
+	if q.Slab.CutDeg != 29.5 || q.Optics.CutDeg != 29.5 || q.Slab.ThicknessMm != 5 || q.AzimuthDeg != 90 || q.WaistUm != o.PumpWaistUm || q.SignalNm != 810 || o.CutDeg != 29.2 {
+		t.Errorf("%+v; want the bench with another cut, and the bench as it was", q)
+	}
+}
+
+func TestTheWrongSignOfACrystalIsNamed(t *testing.T) {
+	j := job
+	j.Process = "o-ee"
+	if p := predict(t, j); len(p.Roots) != 0 || !strings.Contains(strings.Join(p.Warnings, "\n"), "o-ee matches in positive crystals; bbo-kato-1986 is negative") {
+		t.Errorf("%d roots, warnings %q; want none, and why", len(p.Roots), p.Warnings)
+	}
+}
+
+func TestAbsurdValuesAreRefusedByName(t *testing.T) {
+	for _, c := range []struct {
+		what string
+		job  func(*Job)
+		want string
+	}{
+		{"a negative wavelength", func(j *Job) { j.Pump = "-405 nm" }, `pump: "-405 nm"; want 100 to 20000 nm`},
+		{"a pump in metres", func(j *Job) { j.Pump = "405 m" }, `pump: "405 m"; want 100 to 20000 nm`},
+		{"a pump in degrees", func(j *Job) { j.Pump = "405 deg" }, `pump: "405 deg"; want a length in nm, um, mm, cm, m`},
+		{"a number that is none", func(j *Job) { j.Cut = "NaN deg" }, `cut: "NaN"; want a decimal number`},
+		{"a decimal comma", func(j *Job) { j.Cut = "29,2 deg" }, `cut: "29,2"; want a decimal number`},
+		{"infinity", func(j *Job) { j.Waist = "Inf um" }, `waist: "Inf"; want a decimal number`},
+		{"a cut beyond the right angle", func(j *Job) { j.Cut = "91 deg" }, `cut: "91 deg"; want 0 to 90 deg`},
+		{"no thickness", func(j *Job) { j.Thickness = "0 mm" }, `thickness: "0 mm"; want 0.001 to 500 mm`},
+		{"no waist", func(j *Job) { j.Waist = "0 um" }, `waist: "0 um"; want 1 to 10000 um`},
+		{"below absolute zero", func(j *Job) { j.Temperature = "-1 K" }, `temperature: "-1 K"; want -273.15 to 1500 Cel`},
+		{"no unit", func(j *Job) { j.Temperature = "20" }, `temperature: 20 has no unit; want `},
+		{"a process that is none", func(j *Job) { j.Process = "type I" }, `process "type I"; want one of [e-oo e-oe e-eo o-ee o-oe o-eo]`},
+		{"a crystal that is nearly one", func(j *Job) { j.Crystal = "BBO Kato" }, `"BBO Kato" is not a set that this program knows; want "bbo-kato-1986", which is nearest, or one of adp-zernike-1964`},
+		{"a biaxial crystal", func(j *Job) { j.Crystal = "ktp-kato-2002" }, `ktp-kato-2002 is biaxial; want a uniaxial crystal`},
+	} {
+		j := job
+		c.job(&j)
+		if _, err := j.Query(Query{}); err == nil || !strings.Contains(err.Error(), c.want) {
+			t.Errorf("%s: %v; want %q", c.what, err, c.want)
+		}
+	}
+}
+
+func TestABatchIsReadStrictly(t *testing.T) {
+	for line, want := range map[string]string{
+		`{"crystal": "bbo-kato-1986", "pump": 405, "cut": "29.2 deg"}`:      `job: pump: no text; want a value in quotes, with its unit`,
+		`{"crystal": "bbo-kato-1986", "Pump": "405 nm", "cut": "29.2 deg"}`: `job: "Pump" is no name; want azimuth, crystal`,
+		`{"crystal": "bbo-kato-1986", "pump": "405 nm", "pump": "450 nm"}`:  `job: pump twice; want it once`,
+		`{"crystal": "bbo-kato-1986", "extrapolate": "yes"}`:                `job: extrapolate: neither true nor false`,
+		`{"crystal": "bbo-kato-1986"`:                                       `job: `,
+		`{} {}`:                                                             `job: more than one value on a line`,
+		`{}`:                                                                `crystal: nothing; want one of`,
+		`{"pump": "405 nm", "cut": "29.2 deg", "crystal": "` + strings.Repeat("b", 70000) + `"}`: `job: a line longer than 65536 bytes`,
+	} {
+		var out bytes.Buffer
+		if err := Batch(strings.NewReader(line+"\n"+`{"crystal": "bbo-kato-1986", "pump": "405 nm", "cut": "29.2 deg", "tilt": null}`), &out, Query{}); err != nil {
+			t.Fatal(err)
+		}
+		replies := strings.Split(strings.TrimSpace(out.String()), "\n")
+		var refused struct{ Error string }
+		if len(replies) != 2 || json.Unmarshal([]byte(replies[0]), &refused) != nil || !strings.Contains(refused.Error, want) || !strings.Contains(replies[1], `"signal_external_deg":2.8641`) {
+			t.Errorf("%.80s: %.300q; want %q, and the next line answered", line, replies, want)
+		}
+	}
 }
 
 func TestThePlotIsWellFormedAndShowsBothDaughtersAndArms(t *testing.T) {
-	q, err := job.Query()
+	q, err := job.Query(Query{})
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -220,7 +320,7 @@ func TestThePlotIsWellFormedAndShowsBothDaughtersAndArms(t *testing.T) {
 }
 
 func BenchmarkPredict(b *testing.B) {
-	q, err := job.Query()
+	q, err := job.Query(Query{})
 	if err != nil {
 		b.Fatal(err)
 	}
@@ -236,6 +336,7 @@ func BenchmarkPredict(b *testing.B) {
 func FuzzAnswer(f *testing.F) {
 	for _, seed := range []string{
 		`{"crystal": "bbo-kato-1986", "pump": "405 nm", "cut": "29.2 deg", "signal": "760 nm", "tilt": "2 deg", "azimuth": "33 deg", "thickness": "0.1 mm", "waist": "5 um"}`,
+		`{"crystal": "bbo-kato-1986", "pump": "405 nm", "cut": "29.2 deg", "signal": "1060 nm", "tilt": "79 deg", "thickness": "500 mm", "waist": "10 mm"}`,
 		`{"crystal": "bbo-kato-1986", "process": "e-oe", "pump": "405 nm", "cut": "41 deg", "azimuth": "180 deg", "temperature": "300 K", "poling": "40 um"}`,
 		`{"crystal": "zgp-das-2003", "pump": "2050 nm", "signal": "3000 nm", "cut": "53.5 deg"}`,
 		`{"crystal": "ktp-kato-2002", "pump": "532 nm", "cut": "90 deg"}`,
@@ -250,7 +351,7 @@ func FuzzAnswer(f *testing.F) {
 			Roots []json.RawMessage `json:"roots"`
 			Error string            `json:"error"`
 		}
-		raw := answer(line)
+		raw := answer(line, Query{})
 		if err := json.Unmarshal(raw, &object); err != nil || (object.Roots == nil) == (object.Error == "") || bytes.ContainsRune(raw, '\n') {
 			t.Fatalf("%s: %s (%v)", line, raw, err)
 		}

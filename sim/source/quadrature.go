@@ -120,7 +120,7 @@ func (r *rules) normal(base, phase, effort float64) nodes {
 		return r.hermite[points(n, 3, mostHermite)]
 	}
 	// Equidistant points fail at frequencies beyond 2 pi/step less the density's own spread.
-	return r.evenly[points(9.6*(2*phase+5)/(2*math.Pi)*effort, 8, mostEvenly)]
+	return r.evenly[points(9.6*(2*phase+4.2)/(2*math.Pi)*effort, 8, mostEvenly)]
 }
 
 // points rounds a wished number of points to one that there is a rule for.

@@ -56,8 +56,7 @@ func (m *Model) place() error {
 	o := &m.o
 	m.mirrored = math.Mod(o.AzimuthDeg, 180) == 0 && o.Signal.OutOfPlaneDeg == 0 && o.Idler.OutOfPlaneDeg == 0
 	m.idlerFirst = o.Idler.RadiusMm/o.Idler.DistanceMm < o.Signal.RadiusMm/o.Signal.DistanceMm
-	slab := phasematch.Slab{Crystal: o.Crystal, Process: o.Process, CutDeg: o.CutDeg, ThicknessMm: o.ThicknessMm, Cel: o.CrystalCel,
-		PumpNm: o.PumpNm, PolingUm: o.PolingUm, Extrapolate: o.Extrapolate}
+	slab := o.slab(0)
 	if err := slab.Check(); err != nil {
 		return err
 	}
@@ -66,15 +65,10 @@ func (m *Model) place() error {
 	if err != nil {
 		return err
 	}
-	e := pair.Emission(o.AzimuthDeg)
-	if e.N == 0 || e.Root[0].Idler.ReflectedBack {
-		if o.PairHzPerMw > 0 {
-			return fmt.Errorf("source: no pairs at %g nm leave the untilted crystal at azimuth %g deg (%s); want optics for which the declared pair rate can hold, or the nonlinear coefficient",
-				nm, o.AzimuthDeg, e.Because())
-		}
-	} else {
-		m.typicalDeg[0] = e.Root[0].Signal.PolarDeg
-		m.typicalDeg[1], _ = e.Root[0].Idler.InPlane(o.AzimuthDeg + 180)
+	if s, i, err := m.bare(0); err == nil {
+		m.typicalDeg = [2]float64{s, i}
+	} else if o.PairHzPerMw > 0 {
+		return fmt.Errorf("%w; want optics for which the declared pair rate can hold, or the nonlinear coefficient", err)
 	}
 
 	// Scales over which rates change, as angles in air.
@@ -104,6 +98,32 @@ func (m *Model) place() error {
 	// Momenta are in 1/mm: 1e6 for the one d²q that is not normalised.
 	m.scale = 1e6 * 2 * d * d * l * l / (vacuum * lightSpeed * lightSpeed * lightSpeed * math.Pow(2*math.Pi, 3))
 	return nil
+}
+
+func (o *Optics) slab(tiltDeg float64) phasematch.Slab {
+	return phasematch.Slab{Crystal: o.Crystal, Process: o.Process, CutDeg: o.CutDeg, TiltDeg: tiltDeg, ThicknessMm: o.ThicknessMm, Cel: o.CrystalCel,
+		PumpNm: o.PumpNm, PolingUm: o.PolingUm, Extrapolate: o.Extrapolate}
+}
+
+// bare is where pairs of the signal filter's centre go that no aperture has averaged, at a tilt.
+func (m *Model) bare(tiltDeg float64) (signalDeg, idlerDeg float64, err error) {
+	o := &m.o
+	slab := o.slab(tiltDeg)
+	nm := m.centreNm(o.PumpNm)
+	pair, err := slab.At(nm)
+	if err != nil {
+		return 0, 0, err
+	}
+	e := pair.Emission(o.AzimuthDeg)
+	if e.N == 0 || e.Root[0].Idler.ReflectedBack {
+		why := e.Because()
+		if e.N > 0 {
+			why = "the idler is totally reflected at the exit face"
+		}
+		return 0, 0, fmt.Errorf("source: no pairs at %g nm leave the crystal at tilt %g deg and azimuth %g deg (%s)", nm, tiltDeg, o.AzimuthDeg, why)
+	}
+	idlerDeg, _ = e.Root[0].Idler.InPlane(o.AzimuthDeg + 180)
+	return e.Root[0].Signal.PolarDeg, idlerDeg, nil
 }
 
 func (o *Optics) check() error {
