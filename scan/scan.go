@@ -164,6 +164,7 @@ type Result struct {
 	UnderTest drivers.Channel  // singles
 	PlateauOf drivers.AxisName // empty: all light readings, which stand at one place
 	HalfWidth unit.Angle       // of the plateau's part that counts
+	At        []AxisTarget     // only readings with these axes at these targets count; empty: all
 
 	// Of a peak.
 	Of      drivers.Channel // singles or coincidences

@@ -153,6 +153,7 @@ type Counter struct {
 	Tag          drivers.Channel                        // the channel that counts gates; empty: none
 	Logic        string                                 // every_pair or one_per_herald; empty without coincidences
 	Window       strict.Measured                        // full width of the coincidence window, s
+	Capture      strict.Measured                        // share of true coincidences within the window, from a delay scan
 	Bits         int
 	GateMin      time.Duration
 	GateMax      time.Duration

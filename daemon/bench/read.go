@@ -274,6 +274,7 @@ func (r *reader) counter(e strict.Entry) Counter {
 		c.Window.U = w.Opt("u").Quantity(unit.Time, 0, 1e-3)
 		c.Window.From = w.Opt("from").Text("")
 		w.Done()
+		c.Capture = m.Opt("capture").Measured(unit.Share, 0.01, 1)
 		if latched := m.Need("latched"); !latched.Bool() && latched.Good() {
 			latched.Failf("true: no efficiency follows from singles and coincidences that were not counted in the same interval")
 		}

@@ -39,6 +39,7 @@ type commands struct {
 	Arm     armCommand     `cmd:"" help:"Allow remote starts on this bench for a while."`
 	Note    noteCommand    `cmd:"" help:"Write a note into the logbook."`
 	Export  exportCommand  `cmd:"" help:"Write a run's readings as CSV."`
+	Report  reportCommand  `cmd:"" help:"Work out a run's result from the logbook alone."`
 	Predict predictCommand `cmd:"" help:"Work out where the photons of a pair go, how wide, and how it moves."`
 	Sim     simCommand     `cmd:"" help:"Offer a bench's virtual instruments alone, to any program."`
 

@@ -1,0 +1,115 @@
+// Package report makes a run's result from the logbook alone. Recipe and bench file are read from
+// the texts that the run's header keeps, never from today's files, so that the same file gives the
+// same digits years later. It writes nothing and touches no instrument.
+package report
+
+import (
+	"context"
+	"errors"
+	"fmt"
+
+	"gemel/daemon/bench"
+	"gemel/daemon/logbook"
+	"gemel/drivers"
+	"gemel/protocol"
+	"gemel/scan"
+	"gemel/scan/estimate"
+	"gemel/scan/recipe"
+)
+
+// ErrNoResult is returned for a run whose recipe asks for no result.
+var ErrNoResult = errors.New("the recipe asks for no result")
+
+// Of works out the result of a run. A result that cannot be given says why in its Because, and is
+// no error.
+func Of(ctx context.Context, book *logbook.Book, run protocol.RunID) (estimate.Result, error) {
+	row, err := book.Run(ctx, run)
+	if err != nil {
+		return estimate.Result{}, err
+	}
+	file, err := bench.Parse("bench file in the logbook", []byte(row.BenchText))
+	if err != nil {
+		return estimate.Result{}, err
+	}
+	r, err := recipe.Parse("recipe in the logbook", []byte(row.RecipeText))
+	if err != nil {
+		return estimate.Result{}, err
+	}
+	plan, err := r.Plan(file.Facts())
+	if err != nil {
+		return estimate.Result{}, err
+	}
+	if plan.Result == nil {
+		return estimate.Result{}, fmt.Errorf("run %s: %w", run, ErrNoResult)
+	}
+	rows, err := rowsOf(ctx, book, row, plan)
+	if err != nil {
+		return estimate.Result{}, err
+	}
+	return Result(rows, file, plan)
+}
+
+// Result works out the result that a plan asks for from the rows of its run.
+func Result(rows estimate.Rows, file *bench.File, plan scan.Plan) (estimate.Result, error) {
+	b := Constants(file)
+	var result estimate.Result
+	var err error
+	switch plan.Result.Kind {
+	case scan.Efficiency:
+		q := estimate.Question{Trigger: armOf(file, plan.Result.Trigger), UnderTest: armOf(file, plan.Result.UnderTest), Off: map[estimate.Step]bool{}}
+		if plan.Result.PlateauOf != "" {
+			q.Use = &estimate.Plateau{Axis: string(plan.Result.PlateauOf), HalfWidthDeg: plan.Result.HalfWidth.Degrees()}
+		}
+		result, err = estimate.Efficiency(rows, b, model(file, plan, rows), q)
+	case scan.Peak:
+		result, err = estimate.Peak(rows, b, model(file, plan, rows), estimate.PeakQuestion{
+			Axis: string(plan.Result.Along), Channel: string(plan.Result.Of), Shape: estimate.PeakShape(plan.Result.Profile), Power: string(plan.Result.Power),
+		})
+	default:
+		return estimate.Result{}, fmt.Errorf("result of kind %q; want efficiency or peak", plan.Result.Kind)
+	}
+	if refusal, ok := errors.AsType[*estimate.Refusal](err); ok {
+		return estimate.Refused(rows, string(plan.Result.Kind), refusal), nil
+	}
+	return result, err
+}
+
+// rowsOf reads a run's readings, less those at places that the result does not use.
+func rowsOf(ctx context.Context, book *logbook.Book, row logbook.RunRow, plan scan.Plan) (estimate.Rows, error) {
+	rows := estimate.Rows{Run: row.Run, Title: row.Title, Doubtful: map[int64]string{}}
+	for r, err := range book.Readings(ctx, row.Run) {
+		if err != nil {
+			return rows, err
+		}
+		if r.Doubtful {
+			rows.Doubtful[r.Sequence] = r.Doubt
+		}
+		if r.Kind == protocol.Light && !stands(r.Reading, plan.Result.At) {
+			continue
+		}
+		rows.Readings = append(rows.Readings, r.Reading)
+	}
+	return rows, nil
+}
+
+// stands says whether a reading was taken with the axes at the places that the result asks for.
+func stands(r protocol.Reading, at []scan.AxisTarget) bool {
+	for _, t := range at {
+		for _, a := range r.Angles {
+			if a.Axis == string(t.Axis) && a.Target != t.Angle {
+				return false
+			}
+		}
+	}
+	return true
+}
+
+// armOf names the arm behind a singles channel.
+func armOf(f *bench.File, channel drivers.Channel) string {
+	for _, d := range f.Detectors {
+		if d.Channel == channel {
+			return d.Name
+		}
+	}
+	return string(channel)
+}
