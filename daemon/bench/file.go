@@ -57,7 +57,7 @@ func (f *File) Pace() drivers.Pace {
 // Facts are what a recipe must know of the bench.
 func (f *File) Facts() recipe.Facts {
 	facts := recipe.Facts{PumpShutter: f.Pump != nil, GateMin: f.Counter.GateMin, GateMax: f.Counter.GateMax,
-		Coincidences: f.Counter.Coincidences, Detectors: map[string]drivers.Channel{}}
+		Coincidences: f.Counter.Coincidences, Detectors: map[string]drivers.Channel{}, Pace: f.Pace()}
 	for _, c := range f.Counter.Channels {
 		if _, pairs := f.Counter.Coincidences[c]; !pairs && c != f.Counter.Tag {
 			facts.Singles = append(facts.Singles, c)

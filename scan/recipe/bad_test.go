@@ -6,6 +6,7 @@ import (
 	"path/filepath"
 	"strings"
 	"testing"
+	"time"
 
 	"gemel/protocol/strict"
 	"gemel/protocol/unit"
@@ -23,6 +24,7 @@ func TestBadRecipes(t *testing.T) {
 	facts := bench()
 	facts.Axes = append(facts.Axes, scan.Axis{Name: "geared_arm", High: 5 * unit.Degree, Backlash: unit.Degree / 2, Rising: true, Park: new(unit.Angle(0))})
 	facts.Singles, facts.Detectors["lonely"] = append(facts.Singles, "c"), "c"
+	facts.AcceptedAt = time.Date(2026, 3, 28, 20, 0, 0, 0, zone(t, "Europe/Berlin")) // clocks are set forward in this night
 	files, err := filepath.Glob("../../testdata/recipe-bad/*.yaml")
 	if err != nil || len(files) < 30 {
 		t.Fatalf("%d bad files, %v; want the folder", len(files), err)
@@ -35,7 +37,7 @@ func TestBadRecipes(t *testing.T) {
 				t.Fatal(err)
 			}
 			body, want, _ := strings.Cut(string(text), mark)
-			r, err := Parse(name, []byte(body))
+			r, err := parse(name, []byte(body), true)
 			if err == nil {
 				_, err = r.Plan(facts)
 			}

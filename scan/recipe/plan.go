@@ -28,6 +28,9 @@ type Facts struct {
 	Detectors    map[string]drivers.Channel             // the singles channel of each detector
 	Sensors      []Sensor
 
+	Pace       drivers.Pace // bench seconds in a real one; 0 counts as 1
+	AcceptedAt time.Time    // when the run was accepted, in the bench's location: what a schedule is reckoned from
+
 	// Conjugate says where the partner of a photon goes: into which angle of the other arm, for an
 	// arm of this role (signal_arm, idler_arm) and angle at its filter's centre and a crystal
 	// tilted so; bench angles in degrees. An error says why there is none. Nil: the optics are not
@@ -75,10 +78,14 @@ func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 	}
 	background, found := r.background(f)
 	findings = append(findings, found...)
+	guards, found := r.guards(f)
+	findings = append(findings, found...)
+	schedule, found := r.schedule(f)
+	findings = append(findings, found...)
 	if err := strict.Join(findings...); err != nil {
 		return scan.Plan{}, err
 	}
-	plan := scan.Plan{Title: r.Title, Points: r.expand(f, follow), Dwell: r.Dwell, Repeat: r.Repeat, Background: background, Trouble: r.Trouble, Result: result}
+	plan := scan.Plan{Title: r.Title, Points: r.expand(f, follow), Dwell: r.Dwell, Repeat: r.Repeat, Background: background, Guards: guards, Schedule: schedule, Trouble: r.Trouble, Result: result}
 	plan.Dwell.Trigger = trigger
 	if r.Dark != nil {
 		dark := r.Dark.Cadence

@@ -57,6 +57,8 @@ type Recipe struct {
 	Background *Background
 	Trouble    scan.Trouble
 	Result     *Result
+	Guards     []Guard
+	Schedule   *Schedule
 
 	dwellAt strict.Place
 	ofAt    strict.Place // of the dwell's trigger
@@ -74,7 +76,9 @@ func Load(path string) (*Recipe, error) {
 
 // Parse reads a recipe. The name of the file is used in findings only. The error is a
 // *strict.Error with all findings.
-func Parse(file string, text []byte) (*Recipe, error) {
+func Parse(file string, text []byte) (*Recipe, error) { return parse(file, text, nightly) }
+
+func parse(file string, text []byte, nightly bool) (*Recipe, error) {
 	doc := strict.Parse(file, text)
 	m := doc.Root()
 	r := &Recipe{
@@ -94,7 +98,12 @@ func Parse(file string, text []byte) (*Recipe, error) {
 	r.Background = readBackground(m.Opt("background"))
 	r.Trouble = readTrouble(m.Opt("trouble"))
 	r.Result = readResult(m.Opt("result"), r.Dark != nil || r.Background != nil)
-	m.Later("reference", "refine", "guards", "schedule")
+	if nightly {
+		r.Guards, r.Schedule = readGuards(m.Opt("guards")), readSchedule(m.Opt("schedule"))
+	} else {
+		m.Later("guards", "schedule")
+	}
+	m.Later("reference", "refine")
 	m.Done()
 	if visits := r.visits(); visits.Cmp(big.NewInt(MaxVisits)) > 0 {
 		sweep.Fail(fmt.Sprintf("%s points visited %d times are %s visits", r.points(), r.Repeat.Times, visits), fmt.Sprintf("at most %d", MaxVisits))

@@ -233,24 +233,27 @@ func FuzzParse(f *testing.F) {
 		"title: A\ndwell: {heralds: 9, at_most: 60 s, slice: 1 s}\ndark: {also: [end], dwell: 1 s}\nsweep: [{axis: idler_arm, from: 2 deg, to: 3 deg, step: 0.1 deg}]\nresult: {kind: efficiency, trigger: signal, under_test: idler, use: {plateau_of: idler_arm, half_width: 0.1 deg}}\n",
 		"title: A\ndwell: 1 s\nsweep: [{axis: idler_arm, from: 2 deg, to: 3 deg, step: 0.1 deg}]\nresult: {kind: peak, of: ab, along: idler_arm, profile: sinc2, power: pump_power}\n",
 		"title: A\ndwell: 1 s\nsweep: [{axis: crystal_tilt, at: [0 deg, 1 deg]}, {axis: signal_arm, at: [1 deg, 2 deg], with: {setting: delay, at: [1 ns, 2 ns]}}, {axis: idler_arm, conjugate_of: signal_arm, span: 1 deg, step: 0.5 deg}]\n",
+		"title: A\ndwell: 1 s\nguards: [{watch: pump_power, within: [45 mW, 0.055 W], otherwise: hold, give_up_after: 30 min}]\nschedule: {not_before: 22:00, finish_by: \"06:30\"}\n",
 		"title: A\ndwell: {coincidences: 5}\nsweep: [{axis: x, at: 1 mrad, conjugate_of: y}]\n",
 	} {
 		f.Add(body)
 	}
+	facts := bench()
+	facts.AcceptedAt = time.Date(2026, 3, 28, 20, 0, 0, 0, time.UTC)
 	f.Fuzz(func(t *testing.T, text string) {
-		r, err := Parse("r.yaml", []byte(text))
+		r, err := parse("r.yaml", []byte(text), true)
 		if err != nil {
 			return
 		}
-		p, err := r.Plan(bench())
+		p, err := r.Plan(facts)
 		if err != nil {
 			return
 		}
-		again, err := Parse("other.yaml", []byte(r.Text))
+		again, err := parse("other.yaml", []byte(r.Text), true)
 		if err != nil {
 			t.Fatalf("accepted once only: %v", err)
 		}
-		second, err := again.Plan(bench())
+		second, err := again.Plan(facts)
 		if err != nil || !reflect.DeepEqual(p, second) {
 			t.Fatalf("planned differently the second time (%v)", err)
 		}
@@ -259,7 +262,7 @@ func FuzzParse(f *testing.F) {
 		}
 		for _, point := range p.Points {
 			for _, a := range point.Axes {
-				for _, axis := range bench().Axes {
+				for _, axis := range facts.Axes {
 					if axis.Name == a.Axis && !axis.Limits(a.Angle) {
 						t.Fatalf("%s planned to %s", a.Axis, a.Angle)
 					}
@@ -327,7 +330,7 @@ func TestAnEfficiencyNamesItsDetectorsAndItsReadings(t *testing.T) {
 			scan.Result{Kind: scan.Peak, Of: "b", Along: "idler_arm"}},
 	} {
 		t.Run(c.name, func(t *testing.T) {
-			if got := planOf(t, c.body).Result; got == nil || *got != c.want {
+			if got := planOf(t, c.body).Result; !reflect.DeepEqual(got, &c.want) {
 				t.Errorf("got  %+v\nwant %+v", got, c.want)
 			}
 		})
