@@ -141,7 +141,6 @@ func (c *Counter) count(ctx context.Context, gate time.Duration, epoch line.Epoc
 		late = 2*time.Second + gate/10
 	}
 	by := time.Now().Add(c.common.Pace.Real(late) + c.seat.LongestAnswer())
-	before := ""
 	for {
 		over := true
 		if c.questions["at_rest"] != nil {
@@ -152,18 +151,13 @@ func (c *Counter) count(ctx context.Context, gate time.Duration, epoch line.Epoc
 			over = r.yes
 		}
 		if over {
-			r, err := c.ask(ctx, "counts", "count", nil, c.repeat, epoch)
-			if err != nil {
+			p, err := c.proved(ctx, "counts", "count", nil, epoch, toTheLetter)
+			switch {
+			case errors.Is(err, errDiffer): // it still counts
+			case err != nil:
 				return g, true, err
-			}
-			if r.yes && r.text == before {
-				return g, true, c.take(&g, r)
-			}
-			if r.yes {
-				before = r.text
-				if time.Now().Before(by) {
-					continue // the second time: it must agree to the letter
-				}
+			case p.answer.yes && (c.behind("counts") != "at_rest" || p.behind.yes):
+				return g, true, c.take(&g, p.answer)
 			}
 		}
 		if time.Now().After(by) {

@@ -44,27 +44,19 @@ func (s *Sensor) Connect(ctx context.Context) error {
 
 // Read asks twice. Where each answer is a new measurement the two may differ by Agree.
 func (s *Sensor) Read(ctx context.Context) (float64, error) {
-	if !s.set.Varies {
-		text, err := s.twice(ctx, "read", nil)
-		if err != nil {
-			return 0, err
-		}
-		return s.value(text)
-	}
-	var values [2]float64
-	for i := range values {
-		r, err := s.ask(ctx, "get", "read", nil, s.repeat, nil)
-		if err != nil {
-			return 0, err
-		}
-		if values[i], err = s.value(r.groups["value"]); err != nil {
-			return 0, err
+	agree := toTheLetter
+	if s.set.Varies {
+		agree = func(a, b proof) bool {
+			before, err := s.value(a.answer.groups["value"])
+			now, err2 := s.value(b.answer.groups["value"])
+			return err == nil && err2 == nil && math.Abs(before-now) <= s.set.Agree
 		}
 	}
-	if math.Abs(values[0]-values[1]) > s.set.Agree {
-		return 0, s.errorf("read", drivers.Retry, "%g %s and then %g; want them equal within %g", values[0], s.set.Unit, values[1], s.set.Agree)
+	p, err := s.proved(ctx, "get", "read", nil, nil, agree)
+	if err != nil {
+		return 0, err
 	}
-	return values[1], nil
+	return s.value(p.answer.groups["value"])
 }
 
 func (s *Sensor) value(text string) (float64, error) {
@@ -157,11 +149,11 @@ func (s *Setting) Set(ctx context.Context, value float64) (float64, error) {
 func (s *Setting) Get(ctx context.Context) (float64, error) { return s.get(ctx, "get") }
 
 func (s *Setting) get(ctx context.Context, op string) (float64, error) {
-	text, err := s.twice(ctx, op, nil)
+	p, err := s.proved(ctx, "get", op, nil, nil, toTheLetter)
 	if err != nil {
 		return 0, err
 	}
-	v, err := float(text)
+	v, err := float(p.answer.groups["value"])
 	if err != nil {
 		return 0, s.errorf(op, drivers.Retry, "%w", err)
 	}

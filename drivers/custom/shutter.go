@@ -65,22 +65,6 @@ func (d *device) needValue(bad *faults) {
 	}
 }
 
-// twice asks for the value until two answers in a row agree to the letter.
-func (d *device) twice(ctx context.Context, op string, epoch line.Epoch) (string, error) {
-	before, known := "", false
-	for range 4 {
-		r, err := d.ask(ctx, "get", op, nil, d.repeat, epoch)
-		if err != nil {
-			return "", err
-		}
-		if known && r.text == before {
-			return r.groups["value"], nil
-		}
-		before, known = r.text, true
-	}
-	return "", d.errorf(op, drivers.Retry, "no two answers agree, the last is %.80q", before)
-}
-
 // atRest waits until the instrument says so, where it can.
 func (d *device) atRest(ctx context.Context, op string, epoch line.Epoch, within, every time.Duration) error {
 	if d.questions["at_rest"] == nil {
@@ -158,17 +142,17 @@ func (s *Shutter) reach(ctx context.Context, op string, epoch line.Epoch, open b
 }
 
 func (s *Shutter) state(ctx context.Context, op string, epoch line.Epoch) (open bool, err error) {
-	value, err := s.twice(ctx, op, epoch)
+	p, err := s.proved(ctx, "get", op, nil, epoch, toTheLetter)
 	if err != nil {
 		return false, err
 	}
-	switch value {
+	switch p.answer.groups["value"] {
 	case s.set.Open:
 		return true, nil
 	case s.set.Closed:
 		return false, nil
 	}
-	return false, s.errorf(op, drivers.Retry, "%.40q; want %q or %q", value, s.set.Open, s.set.Closed)
+	return false, s.errorf(op, drivers.Retry, "%.40q; want %q or %q", p.answer.groups["value"], s.set.Open, s.set.Closed)
 }
 
 // State asks where the blade is.

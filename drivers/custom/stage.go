@@ -211,25 +211,12 @@ func (s *Stage) trust(axis drivers.AxisName) {
 // Where asks for the angles until two answers in a row agree to the letter, and whether the
 // controller still knows its zero.
 func (s *Stage) Where(ctx context.Context) (map[drivers.AxisName]unit.Angle, error) {
-	position, err := s.position(ctx, "where", nil)
+	position, err := s.proven(ctx, "where", nil)
 	if err != nil {
 		return nil, err
 	}
-	for tries := 0; ; tries++ {
-		again, err := s.position(ctx, "where", nil)
-		if err != nil {
-			return nil, err
-		}
-		if again.text == position.text {
-			break
-		}
-		if tries == 2 {
-			return nil, s.errorf("where", drivers.Retry, "no two answers agree, the last are %.80q and %.80q", position.text, again.text)
-		}
-		position = again
-	}
 	homed := position.homed
-	if homed == nil {
+	if len(homed) < len(s.set.Axes) {
 		if homed, err = s.homed(ctx, "where"); err != nil {
 			return nil, err
 		}
@@ -244,16 +231,35 @@ func (s *Stage) Where(ctx context.Context) (map[drivers.AxisName]unit.Angle, err
 
 type position struct {
 	angles map[drivers.AxisName]unit.Angle
-	homed  map[drivers.AxisName]bool // nil if the answer does not say
+	homed  map[drivers.AxisName]bool // of the axes of which the answers say so
 	text   string
 }
 
+// position asks once.
 func (s *Stage) position(ctx context.Context, op string, epoch line.Epoch) (position, error) {
+	return s.positionBy(op, func(a Axis, _ *position) (reply, error) {
+		return s.ask(ctx, "where", op, a.values(), s.repeat, epoch)
+	})
+}
+
+// proven asks until it is sure of the answers. What is asked between them is whether the zero is
+// known, where the controller can tell.
+func (s *Stage) proven(ctx context.Context, op string, epoch line.Epoch) (position, error) {
+	tells := s.behind("where") == "homed"
+	return s.positionBy(op, func(a Axis, p *position) (reply, error) {
+		proof, err := s.proved(ctx, "where", op, a.values(), epoch, func(a, b proof) bool {
+			return toTheLetter(a, b) && (!tells || a.behind.text == b.behind.text)
+		})
+		if err == nil && tells && proof.behind.text != "" {
+			err = s.flags(op, a, proof.behind, p.homed)
+		}
+		return proof.answer, err
+	})
+}
+
+func (s *Stage) positionBy(op string, ask func(Axis, *position) (reply, error)) (position, error) {
 	q := s.questions["where"]
-	p := position{angles: map[drivers.AxisName]unit.Angle{}}
-	if hasGroup(q.match, "homed") {
-		p.homed = map[drivers.AxisName]bool{}
-	}
+	p := position{angles: map[drivers.AxisName]unit.Angle{}, homed: map[drivers.AxisName]bool{}}
 	take := func(a Axis, number string) error {
 		angle, err := angleOf(number, s.scale(q, a))
 		if err != nil {
@@ -266,7 +272,7 @@ func (s *Stage) position(ctx context.Context, op string, epoch line.Epoch) (posi
 		if i > 0 && !q.perAxis() {
 			break
 		}
-		r, err := s.ask(ctx, "where", op, a.values(), s.repeat, epoch)
+		r, err := ask(a, &p)
 		if err != nil {
 			return position{}, err
 		}
@@ -286,7 +292,7 @@ func (s *Stage) position(ctx context.Context, op string, epoch line.Epoch) (posi
 			if err := take(each, number); err != nil {
 				return position{}, err
 			}
-			if p.homed != nil {
+			if hasGroup(q.match, "homed") {
 				yes, ok := truth[r.groups["homed"]]
 				if !ok {
 					return position{}, s.errorf(op, drivers.Retry, "%s: homed %.40q; want 1 or 0", each.Name, r.groups["homed"])
@@ -348,7 +354,7 @@ func (s *Stage) homed(ctx context.Context, op string) (map[drivers.AxisName]bool
 	q := s.questions["homed"]
 	if q == nil {
 		if hasGroup(s.questions["where"].match, "homed") {
-			p, err := s.position(ctx, op, nil)
+			p, err := s.proven(ctx, op, nil)
 			return p.homed, err
 		}
 		s.mu.Lock()
@@ -357,26 +363,36 @@ func (s *Stage) homed(ctx context.Context, op string) (map[drivers.AxisName]bool
 	}
 	homed := map[drivers.AxisName]bool{}
 	for i, a := range s.set.Axes {
-		if q.perAxis() || i == 0 {
-			r, err := s.ask(ctx, "homed", op, a.values(), s.repeat, nil)
-			if err != nil {
-				return nil, err
-			}
-			for j, each := range s.set.Axes {
-				if q.perAxis() && j != i {
-					continue
-				}
-				yes := r.yes
-				if flag, ok := r.groups[each.Letter]; ok && yes {
-					if yes, ok = truth[flag]; !ok {
-						return nil, s.errorf(op, drivers.Retry, "%s: homed %.40q; want 1 or 0", each.Name, flag)
-					}
-				}
-				homed[each.Name] = yes
-			}
+		if i > 0 && !q.perAxis() {
+			break
+		}
+		p, err := s.proved(ctx, "homed", op, a.values(), nil, toTheLetter)
+		if err != nil {
+			return nil, err
+		}
+		if err := s.flags(op, a, p.answer, homed); err != nil {
+			return nil, err
 		}
 	}
 	return homed, nil
+}
+
+// flags reads an answer to the question homed, asked for axis a or for all.
+func (s *Stage) flags(op string, a Axis, r reply, into map[drivers.AxisName]bool) error {
+	answered := s.set.Axes
+	if s.questions["homed"].perAxis() {
+		answered = []Axis{a}
+	}
+	for _, each := range answered {
+		yes := r.yes
+		if flag, ok := r.groups[each.Letter]; ok && yes {
+			if yes, ok = truth[flag]; !ok {
+				return s.errorf(op, drivers.Retry, "%s: homed %.40q; want 1 or 0", each.Name, flag)
+			}
+		}
+		into[each.Name] = yes
+	}
+	return nil
 }
 
 // Homed says for each axis whether its zero is known.
@@ -561,30 +577,43 @@ func (s *Stage) untilRest(ctx context.Context, op string, epoch line.Epoch, with
 	}
 }
 
-// atRest asks the controller; where it cannot tell, two equal positions must do.
+// atRest asks the controller; where it cannot tell, two equal positions must do. A "yes" counts only
+// if the question behind it gets its own answer.
 func (s *Stage) atRest(ctx context.Context, op string, epoch line.Epoch) (bool, error) {
 	q := s.questions["at_rest"]
 	if q == nil {
-		before, err := s.position(ctx, op, epoch)
+		before, err := s.proven(ctx, op, epoch)
 		if err != nil {
 			return false, err
 		}
 		if err := s.wait(ctx, op, epoch, s.set.PollEvery); err != nil {
 			return false, err
 		}
-		after, err := s.position(ctx, op, epoch)
+		after, err := s.proven(ctx, op, epoch)
 		return err == nil && after.text == before.text, err
 	}
 	for i, a := range s.set.Axes {
 		if i > 0 && !q.perAxis() {
 			break
 		}
-		r, err := s.ask(ctx, "at_rest", op, a.values(), s.repeat, epoch)
-		if err != nil || !r.yes {
+		rest, err := s.rests(ctx, op, a, epoch)
+		if err != nil || !rest {
 			return false, err
 		}
 	}
 	return true, nil
+}
+
+func (s *Stage) rests(ctx context.Context, op string, a Axis, epoch line.Epoch) (bool, error) {
+	for try := 0; ; try++ {
+		r, err := s.once(ctx, "at_rest", op, a.values(), epoch, false)
+		if err == nil && r.yes {
+			_, err = s.after(ctx, "at_rest", op, a.values(), epoch)
+		}
+		if f := faultOf(err); f == nil || !f.Again() || try >= s.repeat {
+			return r.yes, err
+		}
+	}
 }
 
 // Stop halts all axes out of turn and waits until the controller says it is at rest.

@@ -48,6 +48,7 @@ type Line struct {
 	rx         []byte
 	buf        [512]byte
 	outUntil   time.Time // not zero: out of step until then, and until quiet
+	oddities   int       // how often something came that belonged to nothing, or did not come
 	jitter     *rand.Rand
 }
 
@@ -146,6 +147,11 @@ func (l *Line) askOnce(j *job) ([]byte, *Fault) {
 	}
 	if f := l.ended(j); f != nil {
 		return nil, f
+	}
+	if !j.q.Follows {
+		j.seat.oddities = l.oddities
+	} else if j.seat.oddities != l.oddities {
+		return nil, &Fault{Why: Strange, again: true, Err: errors.New("something strange came after the question before; its answer may not be its own")}
 	}
 	start := time.Now()
 	if f := l.write(j.message()); f != nil {
@@ -300,6 +306,7 @@ func (l *Line) restarted(s *Seat) {
 }
 
 func (l *Line) stray(frame []byte) {
+	l.oddities++
 	l.record.count(func(c *Counts) { c.Strays++ })
 	l.record.add(Entry{At: time.Now(), Got: frame, Note: "stray answer dropped"})
 	l.set.Log.Warn().Str("line", l.set.Name).Str("answer", fmt.Sprintf("%.80q", frame)).Msg("stray answer dropped")
@@ -401,6 +408,7 @@ func (l *Line) sift(s *Seat) (noise bool) {
 
 // outOfStep says that an answer may still come to what was sent at that time.
 func (l *Line) outOfStep(sent time.Time, within time.Duration) {
+	l.oddities++
 	until := sent.Add(l.set.LongestAnswer)
 	if within > l.set.LongestAnswer { // this one was known to take longer
 		until = time.Now().Add(l.set.LongestAnswer)

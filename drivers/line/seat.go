@@ -42,6 +42,10 @@ type Question struct {
 	// Epoch, if not nil, is the device's epoch that the question belongs to: it is not sent, and
 	// not waited for, once an urgent message has ended that epoch.
 	Epoch Epoch
+	// Follows says that it proves the answer to the device's question before. If anything strange came
+	// since that was sent, such as the double of an answer, then what was taken for its answer may
+	// have been another's: this question fails as Strange and is not sent.
+	Follows bool
 }
 
 // Epoch ends when an urgent message is sent to a device: it is closed then.
@@ -99,6 +103,9 @@ type Fault struct {
 func (f *Fault) Error() string { return f.Err.Error() }
 func (f *Fault) Unwrap() error { return f.Err }
 
+// Again says that asking once more may help.
+func (f *Fault) Again() bool { return f.again }
+
 func (f *Fault) remedy() drivers.Remedy {
 	switch f.Why {
 	case Missing, Strange, Interrupted:
@@ -139,6 +146,7 @@ type Seat struct {
 	// What follows belongs to the line's owner.
 	generation int
 	restarted  bool
+	oddities   int // of the line, when the last question that follows none was sent
 }
 
 // Seat gives a device its place. It starts nothing.
