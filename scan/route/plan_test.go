@@ -169,6 +169,8 @@ func TestFindingsSayWhichPointAndWhy(t *testing.T) {
 		{"through the mount", points(at{"idler_arm": 8}, at{"idler_arm": 22}), place{"crystal_tilt": 25 * deg, "signal_arm": 3 * deg},
 			`1<0 false idler_arm from 8 deg to 22 deg: no safe order of moving: crystal_tilt at 25 deg, idler_arm from 8 deg to 22 deg: in a forbidden range on the way; keep-out "mount" wants crystal_tilt outside 19.99 deg to 30.01 deg, or idler_arm outside 9.99 deg to 20.01 deg, margin and tolerances included`},
 		{"the tilt not known", points(at{"idler_arm": 8}, at{"idler_arm": 22}), nil, ""},
+		{"a tilt that a later point names first", points(at{"idler_arm": 15}, at{"idler_arm": 22, "crystal_tilt": 25}, at{"idler_arm": 8}), place{"signal_arm": 3 * deg},
+			`2<1 false idler_arm from 22 deg to 8 deg: no safe order of moving`},
 		{"no such axis", points(at{"plate": 8}), nil, "0<-1 false plate: no such axis on this bench; want one of signal_arm, idler_arm, crystal_tilt"},
 	} {
 		t.Run(c.name, func(t *testing.T) {

@@ -73,9 +73,9 @@ func Stand(axes []scan.Axis, keepOuts []scan.KeepOut, at map[drivers.AxisName]un
 
 // Legs lists the moves that bring axes from where they stand to their targets, each leg a set of
 // targets that may be approached together. An axis that has to take up its backlash goes beyond
-// first. Where a keep-out makes moving together unsafe the axes go in turn, in a safe order and if
-// need be by a detour of the named axes; where there is none the move is refused with a *Conflict.
-// The targets' axes alone move; at holds all axes that keep-outs tie to them. An axis may begin
+// first. Where a keep-out makes moving together unsafe the axes go in turn, in a safe order if there
+// is one, or by a detour of the same axes if one is found; else the move is refused with a
+// *Conflict. The targets' axes alone move; at holds all axes that keep-outs tie to them. An axis may begin
 // inside an edge by up to its tolerance, because that is where it was let stop, and then goes away
 // from it.
 func Legs(axes []scan.Axis, keepOuts []scan.KeepOut, at map[drivers.AxisName]unit.Angle, targets []scan.AxisTarget, state State) ([][]scan.AxisTarget, error) {

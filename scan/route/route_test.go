@@ -85,6 +85,10 @@ func TestAxesGoTogetherWhereTheyMayAndInTurnWhereTheyMust(t *testing.T) {
 		{name: "no such axis", at: place{}, targets: targets("paddle", 4.), want: "paddle: no such axis on this bench; want one of signal_arm, idler_arm, crystal_tilt, plate"},
 		{name: "two targets for one axis", at: place{"plate": 0}, targets: targets("plate", 4., "plate", 5.), want: "plate: two targets in one move; want one"},
 		{name: "nothing to do", at: place{}, want: ""},
+		{name: "beyond a limit", at: place{"plate": 0}, targets: targets("plate", 91.), want: "plate: 91 deg is beyond the soft limits; want -90 deg to 90 deg"},
+		{name: "the keep-out that no order gets around is named, not the first that offends", at: place{"signal_arm": 8 * deg, "idler_arm": 3 * deg, "crystal_tilt": 0}, targets: targets("signal_arm", 15., "idler_arm", -3.5),
+			edit: func(_ []scan.Axis, k []scan.KeepOut) { k[0].Apart.Least = 10 * deg },
+			want: `signal_arm from 8 deg to 15 deg, idler_arm from 3 deg to -3.5 deg: no safe order of moving: idler_arm from 3 deg to -3.6 deg: 0 deg from the pump on the way; keep-out "pump" wants 1.1 deg or more (1 deg, and 0.1 deg for margin and tolerances), or the pump closed`},
 	} {
 		t.Run(c.name, func(t *testing.T) {
 			axes, keepOuts := skerry()
@@ -101,6 +105,27 @@ func TestAxesGoTogetherWhereTheyMayAndInTurnWhereTheyMust(t *testing.T) {
 				t.Errorf("got  %s\nwant %s", got, c.want)
 			}
 		})
+	}
+}
+
+// An axis in step that turns round stands still until its play is taken up: a line that clears a
+// corner by less than that does not clear it.
+func TestALineLeavesRoomForPlay(t *testing.T) {
+	axes := []scan.Axis{arm("signal_arm", -20, 20), arm("idler_arm", -20, 20)}
+	for i := range axes {
+		axes[i].Tolerance, axes[i].Together, axes[i].Backlash = 0, true, 0
+	}
+	keepOuts := []scan.KeepOut{{Name: "corner", Range: &scan.Range{Span: scan.Span{Axis: "signal_arm", Low: 5 * deg, High: 15 * deg},
+		While: &scan.Span{Axis: "idler_arm", Low: -15 * deg, High: 4 * deg}}}}
+	at := place{"signal_arm": 0, "idler_arm": 0}
+	legs, err := route.Legs(axes, keepOuts, at, targets("signal_arm", 10., "idler_arm", 10.), route.State{})
+	if want := "signal_arm 10, idler_arm 10"; err != nil || told(legs) != want {
+		t.Errorf("%s, %v; want %s: the line clears the corner by 1 deg", told(legs), err, want)
+	}
+	axes[1].Backlash = 2 * deg
+	legs, err = route.Legs(axes, keepOuts, at, targets("signal_arm", 10., "idler_arm", 10.), route.State{})
+	if want := "idler_arm 10 | signal_arm 10"; err != nil || told(legs) != want {
+		t.Errorf("%s, %v; want %s: a play of 2 deg does not", told(legs), err, want)
 	}
 }
 

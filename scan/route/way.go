@@ -101,7 +101,7 @@ const (
 	mostAtOnce  = 4 // tied axes of which any set may share a leg; beyond, each goes alone
 	mostTied    = 8
 	mostDetours = 4
-	mostNodes   = 20_000
+	mostNodes   = 5_000 // some ten milliseconds at worst, as nobody can interrupt it
 )
 
 // search looks for a way through the places of its movers. A node is one place of each, as a number
@@ -307,58 +307,57 @@ func (s *search) find(moves func(node []int, try func([]step) bool)) [][]step {
 	return path
 }
 
-// addDetours gives every mover the places where a way can turn: its limits, and the edges of the
-// fences, seen from the places of the others.
+// addDetours gives every mover the places where a way can turn: the edges of the fences, seen from
+// where the others stand and go, and its limits.
 func (s *search) addDetours(b *bench) {
-	most := 2
-	for p := 1; p <= mostNodes; most++ {
-		p = 1
-		for range s.movers {
-			p *= most + 1
-		}
+	most := len(s.movers[0].places)
+	for power(most+1, len(s.movers)) <= mostNodes {
+		most++
 	}
-	for range 2 { // the second time seen from the places of the first
-		before := make([][]unit.Angle, len(s.movers))
-		for i, m := range s.movers {
-			before[i] = slices.Clone(m.places)
-		}
-		others := func(axis int) []unit.Angle {
-			for i, m := range s.movers {
-				if m.axis == axis {
-					return before[i]
-				}
+	others := func(axis int) []unit.Angle {
+		for _, m := range s.movers {
+			if m.axis == axis {
+				return m.places[:goal+1]
 			}
-			return []unit.Angle{s.at[axis]}
 		}
-		for i := range s.movers {
-			m := &s.movers[i]
-			a := b.axes[m.axis]
-			add := func(p unit.Angle) {
-				there := m.places[stand] == p || m.places[begin] == p || slices.Contains(m.places[goal+1:], p)
-				if a.Limits(p) && !there && len(m.places) < most {
-					m.places = append(m.places, p)
-				}
+		return s.at[axis : axis+1]
+	}
+	for i := range s.movers {
+		m := &s.movers[i]
+		a := b.axes[m.axis]
+		add := func(p unit.Angle) {
+			there := m.places[stand] == p || m.places[begin] == p || slices.Contains(m.places[goal+1:], p)
+			if a.Limits(p) && !there && len(m.places) < most {
+				m.places = append(m.places, p)
 			}
-			for _, f := range s.fences {
-				for n := range f.count() {
-					switch {
-					case f.axis[n] != m.axis:
-					case !f.band:
-						add(f.low[n])
-						add(f.high[n])
-					case f.pair:
-						for _, v := range others(f.axis[1-n]) {
-							f.edges(n, f.side[1-n]*v, a, add)
-						}
-					default:
-						f.edges(n, 0, a, add)
+		}
+		for _, f := range s.fences {
+			for n := range f.count() {
+				switch {
+				case f.axis[n] != m.axis:
+				case !f.band:
+					add(f.low[n])
+					add(f.high[n])
+				case f.pair:
+					for _, v := range others(f.axis[1-n]) {
+						f.edges(n, f.side[1-n]*v, a, add)
 					}
+				default:
+					f.edges(n, 0, a, add)
 				}
 			}
-			add(a.Low)
-			add(a.High)
 		}
+		add(a.Low)
+		add(a.High)
 	}
+}
+
+func power(x, n int) int {
+	p := 1
+	for range n {
+		p *= x
+	}
+	return p
 }
 
 // edges finds where the n-th axis of a band is on its edge, the other adding so much to the sum.
