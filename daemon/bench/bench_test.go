@@ -30,6 +30,10 @@ func TestEveryFileInConfigsLoads(t *testing.T) {
 				if err != nil {
 					continue // reported above
 				}
+				// A recipe for one bench alone names it in its comments.
+				if _, only, named := strings.Cut(r.Text, "\n# bench: "); named && !strings.HasPrefix(only, on+"-bench.yaml\n") {
+					continue
+				}
 				if _, err := r.Plan(f.Facts()); err != nil && (on == "demo" || name != "demo-recipe.yaml") {
 					t.Errorf("on the %s bench: %v", on, err)
 				}
