@@ -1,6 +1,7 @@
 package route
 
 import (
+	"maps"
 	"math"
 	"time"
 
@@ -21,9 +22,7 @@ func Estimate(a scan.Axis, from, to unit.Angle) time.Duration {
 // that of the slowest axis.
 func Time(axes []scan.Axis, at map[drivers.AxisName]unit.Angle, legs [][]scan.AxisTarget) time.Duration {
 	here := make(map[drivers.AxisName]unit.Angle, len(at))
-	for name, angle := range at {
-		here[name] = angle
-	}
+	maps.Copy(here, at)
 	var total, settle time.Duration
 	for _, leg := range legs {
 		done := map[drivers.DeviceName]bool{}
