@@ -3,12 +3,17 @@
 // Parse reads the text alone and reports everything that is wrong with it at once; Plan adds what
 // the bench offers. Grids are exact: angles are whole micro-arcseconds, so 0 deg to 1 deg by
 // 0.1 deg are eleven points and the last is 1 deg. The number of points and visits is worked out by
-// arithmetic and bounded before any of them exists. The same text and the same bench give the same
+// arithmetic and bounded before any of them exists. The same text, bench and moment give the same
 // plan, for ever, because a resumed run works its plan out again.
 //
+// Names are resolved in Plan: a detector stands for its singles channel, times of the day become
+// instants of the moment that the run is accepted, the conjugate of an arm becomes angles by the
+// model that Facts carries.
+//
 // It refuses what it does not act on: the keys of the format that come later, a step that does not
-// divide its range (naming the ends that would do), a step that is negative or zero, and a dwell
-// that stops on coincidences, which would bias the efficiency measured.
+// divide its range (naming the ends that would do), a step that is negative or zero, a dwell that
+// stops on coincidences, which would bias the efficiency measured, a background whose axis does not
+// stand at a declared angle otherwise, and an efficiency that does not say which readings make it.
 package recipe
 
 import (
