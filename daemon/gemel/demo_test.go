@@ -51,6 +51,7 @@ func emissionDeg(t *testing.T) float64 {
 }
 
 func TestTheDemoFindsTheRingAndWritesEveryReadingOnce(t *testing.T) {
+	t.Parallel() // with what waits more than it works
 	data := filepath.Join(t.TempDir(), "data")
 	began := time.Now()
 	p := launch(t, nil, "run", "--bench", demoBenchFile, "--recipe", demoRecipeFile, "--data", data, "--json")

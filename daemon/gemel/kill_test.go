@@ -4,6 +4,7 @@ package main
 
 import (
 	"context"
+	"encoding/json"
 	"errors"
 	"flag"
 	"fmt"
@@ -383,19 +384,20 @@ func (c *killing) mustBeDead(p *program, what string, err error) {
 
 // disturb holds the run and lets it go on: requests to die at.
 func (c *killing) disturb(p *program) {
-	for _, verb := range []struct {
-		name string
-		do   func(*client.Client, context.Context, protocol.RunRequest) (protocol.RunReply, error)
-	}{{"hold", (*client.Client).Hold}, {"resume", (*client.Client).Resume}} {
-		err := c.ask(p, func(ctx context.Context, cl *client.Client) error {
-			_, err := verb.do(cl, ctx, protocol.RunRequest{Run: c.run, Who: "the harness"})
-			return err
-		})
-		if err != nil {
-			c.mustBeDead(p, verb.name, err)
-			return
-		}
+	if c.request(p, "hold", (*client.Client).Hold) {
+		c.request(p, "resume", (*client.Client).Resume)
 	}
+}
+
+func (c *killing) request(p *program, verb string, do func(*client.Client, context.Context, protocol.RunRequest) (protocol.RunReply, error)) bool {
+	err := c.ask(p, func(ctx context.Context, cl *client.Client) error {
+		_, err := do(cl, ctx, protocol.RunRequest{Run: c.run, Who: "the harness"})
+		return err
+	})
+	if err != nil {
+		c.mustBeDead(p, verb, err)
+	}
+	return err == nil
 }
 
 // untilOver reads what arrives until the run's end, or the daemon's.
@@ -407,6 +409,11 @@ func (c *killing) untilOver(p *program) {
 			if e.Run == c.run && kindOf(e) == protocol.Ended {
 				c.over = true
 				return
+			}
+			var ev protocol.Event
+			if e.Run == c.run && e.Kind == protocol.EventEntry && json.Unmarshal(e.Body, &ev) == nil && slices.Contains(ev.Causes, protocol.ByOperator) {
+				// The daemon died between hold and resume; nobody clears a person's hold but a person.
+				c.request(p, "resume", (*client.Client).Resume)
 			}
 		case <-p.ended:
 			return

@@ -89,7 +89,7 @@ func phases() []phase {
 			list = append(list, fmt.Sprintf("missing(%s, answer %d)", device, n))
 		}
 		all = append(all, phase{
-			name: "while the line of " + device + " is out of step", troubles: strings.Join(list, "; "), rare: i > 1, outOfStep: device,
+			name: "while the line of " + device + " is out of step", troubles: strings.Join(list, "; "), rare: i > 0, outOfStep: device,
 			bench:  impatient(),
 			recipe: "title: Out of step\nsweep: [{axis: signal_arm, from: 0 deg, to: 10 deg, step: 0.1 deg}]\ndwell: {time: 20 ms, slice: 10 ms}\n",
 			reach: func(t *testing.T, l *truth, _ string) {

@@ -44,6 +44,7 @@ func atRest(t *testing.T, records []instruments.Record) {
 }
 
 func TestABugInTheProgramStillLeadsToTheRestState(t *testing.T) {
+	t.Parallel()
 	for _, c := range []struct {
 		name, env, says string
 		state           protocol.State
@@ -52,7 +53,11 @@ func TestABugInTheProgramStillLeadsToTheRestState(t *testing.T) {
 		{"in the driver of the counter's line", "GEMEL_PANIC_LINE=counter:60", "panic: a bug made on purpose", protocol.Holding},
 		{"in the driver of the arms' line", "GEMEL_PANIC_LINE=arms:40", "panic: a bug made on purpose", protocol.Holding},
 	} {
+		if c.state == protocol.Holding && (testing.Short() || strings.Contains(c.env, "arms") && !*stopAll) {
+			continue // slow
+		}
 		t.Run(c.name, func(t *testing.T) {
+			t.Parallel()
 			dir := t.TempDir()
 			lines := filepath.Join(dir, "lines")
 			s := &stopping{bench: quick(t, dir), recipe: writeFile(t, filepath.Join(dir, "r.yaml"), killRecipe), data: filepath.Join(dir, "data"), lines: lines}
@@ -83,8 +88,13 @@ func TestABugInTheProgramStillLeadsToTheRestState(t *testing.T) {
 }
 
 func TestAPulledPlugIsWaitedForAndWrittenDown(t *testing.T) {
+	t.Parallel()
 	for _, device := range []string{"counter", "rotary"} {
+		if testing.Short() && device == "rotary" {
+			continue
+		}
 		t.Run(device, func(t *testing.T) {
+			t.Parallel()
 			dir := t.TempDir()
 			s := &stopping{bench: quick(t, dir), recipe: writeFile(t, filepath.Join(dir, "r.yaml"), killRecipe), data: filepath.Join(dir, "data"), lines: filepath.Join(dir, "lines")}
 			sim, ledger := simulate(t, s.bench, s.lines, "unplug("+device+", at 1.5s, for 700ms)")
@@ -128,6 +138,7 @@ func troubled(t *testing.T, data, device string) bool {
 // All instruments vanish at once and others of the same kind come back, as after a power cut of the
 // lab: the run goes on by itself or holds for a person with a reason, and can be brought to its end.
 func TestARunOutlivesThePowerOfTheLab(t *testing.T) {
+	t.Parallel()
 	dir := t.TempDir()
 	s := &stopping{bench: quick(t, dir), recipe: writeFile(t, filepath.Join(dir, "r.yaml"), killRecipe), data: filepath.Join(dir, "data"), lines: filepath.Join(dir, "lines")}
 	sim, ledger := simulate(t, s.bench, s.lines, "")
