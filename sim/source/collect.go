@@ -109,6 +109,7 @@ func (m *Model) bandwidth(p Pose) (signal, idler Bandwidth) {
 // Peak is the shape of a rate over an arm's angle, through the arm's real aperture and filter.
 type Peak struct {
 	MaximumDeg  float64
+	MiddleDeg   float64 // midway between the half maxima: where a top is flat, the peak
 	CentroidDeg float64 // of everything above a tenth of the maximum
 	FWHMDeg     float64
 }
@@ -196,15 +197,14 @@ func shape(at, step float64, rate func(float64) float64) Peak {
 		if k == 0 {
 			continue
 		}
-		cross := x[k-1] + (x[k]-x[k-1])*(half-y[k-1])/(y[k]-y[k-1])
 		switch {
 		case k <= best && y[k-1] < half && y[k] >= half:
-			first = cross
+			first = crossing(rate, half, x[k-1], x[k], y[k-1], y[k])
 		case k > best && y[k-1] >= half && y[k] < half:
-			last = cross
+			last = crossing(rate, half, x[k-1], x[k], y[k-1], y[k])
 		}
 	}
-	p.CentroidDeg, p.FWHMDeg = mean/sum, last-first
+	p.CentroidDeg, p.MiddleDeg, p.FWHMDeg = mean/sum, (first+last)/2, last-first
 	return p
 }
 
@@ -216,4 +216,20 @@ func summit(step, left, middle, right float64) float64 {
 		return max(-step, min(step, step/2*(a-c)/d))
 	}
 	return 0
+}
+
+// crossing is where a rate passes a height between two angles; five chords find it to 1e-5 of their
+// distance.
+func crossing(rate func(float64) float64, height, a, b, ya, yb float64) float64 {
+	at := a
+	for range 5 {
+		at = a + (b-a)*(height-ya)/(yb-ya)
+		y := rate(at)
+		if (y < height) == (ya < height) {
+			a, ya = at, y
+		} else {
+			b, yb = at, y
+		}
+	}
+	return at
 }

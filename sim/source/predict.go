@@ -205,14 +205,15 @@ type Collected struct {
 	warnings         []string
 }
 
-// PeakOfRate is where a sweep finds a rate highest, and why there.
+// PeakOfRate is where a sweep finds a rate, and why there.
 type PeakOfRate struct {
-	Of         string  `json:"of"`   // signal singles, idler singles or pairs
-	Over       string  `json:"over"` // signal arm, idler arm or both arms together
-	MaximumDeg float64 `json:"maximum_deg"`
+	Of         string  `json:"of"`          // signal singles, idler singles or pairs
+	Over       string  `json:"over"`        // signal arm, idler arm or both arms together
+	MiddleDeg  float64 `json:"peak_deg"`    // midway between the half maxima
+	MaximumDeg float64 `json:"maximum_deg"` // means little where the top is flat
 	FWHMDeg    float64 `json:"fwhm_deg"`
-	// The maximum less the bare emission, and its parts: of apertures, crystal and waist at one
-	// wavelength, and of the band that the filters pass.
+	// The peak less the bare emission, and its parts: of ring, apertures and waist at one wavelength,
+	// and of the band that the filters pass.
 	MinusBareMdeg float64 `json:"minus_bare_mdeg"`
 	ApertureMdeg  float64 `json:"aperture_part_mdeg"`
 	BandMdeg      float64 `json:"band_part_mdeg"`
@@ -433,7 +434,8 @@ func collect(o Optics, tiltDeg float64) (*Collected, error) {
 		Scale: m.Scale(), Fraction: c.Fraction, ApertureFraction: c.ApertureFraction,
 		SignalBandNm: c.Signal.FWHMNm, IdlerBandNm: c.Idler.FWHMNm, SignalCentreNm: c.Signal.CentreNm, IdlerCentreNm: c.Idler.CentreNm,
 		BareNm: nm, BareSignalDeg: s, BareIdlerDeg: i,
-		Because: "an arm averages over its aperture, inside which the ring curves, and over the wavelengths that its filter passes, which leave at other angles; " +
+		Because: "the ring falls off more steeply outside than inside, an arm averages over its aperture, within which the ring curves, " +
+			"and over the wavelengths that its filter passes, which leave at other angles; " +
 			"where one arm stands still, the pairs over the other peak at the partners of what the first one takes",
 		warnings: m.Warnings(),
 	}
@@ -448,9 +450,9 @@ func collect(o Optics, tiltDeg float64) (*Collected, error) {
 		{"pairs", "idler arm", i, k.PairsOverIdler, l.PairsOverIdler},
 		{"pairs", "both arms together", s, k.PairsOverBoth, l.PairsOverBoth},
 	} {
-		aperture := (x.one.MaximumDeg - x.bare) * 1000
-		total := (x.full.MaximumDeg - x.bare) * 1000
-		out.Peaks = append(out.Peaks, PeakOfRate{x.of, x.over, x.full.MaximumDeg, x.full.FWHMDeg, total, aperture, total - aperture})
+		aperture := (x.one.MiddleDeg - x.bare) * 1000
+		total := (x.full.MiddleDeg - x.bare) * 1000
+		out.Peaks = append(out.Peaks, PeakOfRate{x.of, x.over, x.full.MiddleDeg, x.full.MaximumDeg, x.full.FWHMDeg, total, aperture, total - aperture})
 	}
 	return out, nil
 }
@@ -564,11 +566,11 @@ func (c *Collected) table(b *strings.Builder) {
 	fmt.Fprintf(t, "collected band of the idler, centre and FWHM\t%.2f, %.3g\tnm\n", c.IdlerCentreNm, c.IdlerBandNm)
 	_ = t.Flush()
 	fmt.Fprintf(b, "Absolute scale, %s.\n", c.Scale)
-	b.WriteString("\nWhere a sweep finds most, and how far that is from the bare emission:\n")
+	b.WriteString("\nWhere a sweep finds its peak (midway between the half maxima), and how far that is from the bare emission:\n")
 	t = tabwriter.NewWriter(b, 0, 0, 2, ' ', tabwriter.AlignRight)
-	fmt.Fprintln(t, "of\tover the\tpeak / deg\tFWHM / deg\tpeak - bare / mdeg\tby apertures / mdeg\tby the band / mdeg\t")
+	fmt.Fprintln(t, "of\tover the\tpeak / deg\tFWHM / deg\tpeak - bare / mdeg\tby ring and apertures\tby the band\t")
 	for _, k := range c.Peaks {
-		fmt.Fprintf(t, "%s\t%s\t%.4f\t%.4f\t%+.1f\t%+.1f\t%+.1f\t\n", k.Of, k.Over, k.MaximumDeg, k.FWHMDeg, k.MinusBareMdeg, k.ApertureMdeg, k.BandMdeg)
+		fmt.Fprintf(t, "%s\t%s\t%.4f\t%.4f\t%+.1f\t%+.1f\t%+.1f\t\n", k.Of, k.Over, k.MiddleDeg, k.FWHMDeg, k.MinusBareMdeg, k.ApertureMdeg, k.BandMdeg)
 	}
 	_ = t.Flush()
 	fmt.Fprintf(b, "The two differ because %s.\n", c.Because)
