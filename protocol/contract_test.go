@@ -230,8 +230,8 @@ func TestRequestsWithAnUnknownKeyAreNotValid(t *testing.T) {
 func TestAResultHasTheKeysOfTheReport(t *testing.T) {
 	s := compile(t, "result", jsonschema.Draft2020)
 	body := `{"schema":"gemel.result.v1","bench":"skerry","run":"r1","sequence":9,"at":"2031-02-03T04:05:06.000000000Z","kind":"efficiency","value":0.55,
-		"standard_uncertainty":0.002,"expanded_uncertainty":0.004,"coverage_factor":2,"unit":"1","budget":[{}],"corrections":[{}],"conditions":{},
-		"readings_used":12,"readings_set_aside":1,"simulated":20,"more":"to come"}`
+		"standard_uncertainty":0.002,"expanded_uncertainty":0.004,"coverage_factor":2,"unit":"1","budget":[{}],"corrections":[{}],"conditions":[{}],
+		"readings_used":[4,5],"readings_set_aside":[{"sequence":6,"reason":"off the plateau"}],"simulated":20,"more":"to come"}`
 	if err := validate(s, []byte(body)); err != nil {
 		t.Error(err)
 	}

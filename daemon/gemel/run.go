@@ -10,6 +10,7 @@ import (
 	"github.com/rs/zerolog"
 
 	"gemel/daemon/crew"
+	"gemel/daemon/report"
 	"gemel/drivers"
 	"gemel/protocol"
 	"gemel/protocol/strict"
@@ -69,7 +70,7 @@ func (c *runCommand) Run(ctx context.Context, con *console) error {
 		if err := json.NewEncoder(con.out).Encode(summary); err != nil {
 			return err
 		}
-	} else if err := summary.print(con.out, pairs); err != nil {
+	} else if err := con.tell(context.WithoutCancel(ctx), s, summary, pairs); err != nil {
 		return err
 	}
 	if state != protocol.Finished {
@@ -117,6 +118,22 @@ func devices(b *engine.Bench) []drivers.Device {
 		all = append(all, s)
 	}
 	return append(all, b.Counter)
+}
+
+// tell prints the table, and under it the result that the recipe asks for.
+func (c *console) tell(ctx context.Context, s *session, sum *summary, pairs string) error {
+	if err := sum.print(c.out, pairs); err != nil {
+		return err
+	}
+	r, err := report.Of(ctx, s.book, sum.Run)
+	if errors.Is(err, report.ErrNoResult) {
+		return nil
+	}
+	if err != nil {
+		return err
+	}
+	_, err = fmt.Fprint(c.out, "\n"+r.Text())
+	return err
 }
 
 // checkFirst works everything out that can be known without touching anything.

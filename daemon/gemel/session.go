@@ -4,6 +4,7 @@ import (
 	"context"
 	"crypto/rand"
 	"encoding/hex"
+	"encoding/json"
 	"errors"
 	"fmt"
 	"os"
@@ -22,6 +23,7 @@ import (
 	"gemel/daemon/keeper"
 	"gemel/daemon/logbook"
 	"gemel/daemon/remote"
+	"gemel/daemon/report"
 	"gemel/protocol"
 	"gemel/protocol/strict"
 	"gemel/scan"
@@ -115,8 +117,15 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, log zerolo
 		Book: s.book, Bench: &built.Bench, BenchText: s.file.Text, Version: version, Plan: planner(s.file, "recipe"),
 		Recipe: recipesIn(recipeFolder), Armed: armedIn(flags.Data, s.file.Simulated()), MayHome: flags.Home,
 		ResumeAfterRestart: s.file.AfterRestart == bench.AfterRestartResume || s.file.AfterRestart == "" && s.file.Simulated(),
-		Behind:             func() int64 { return s.courier.Behind() },
-		Step:               killpoint(),
+		Conclude: func(ctx context.Context, run protocol.RunID) (json.RawMessage, error) {
+			r, err := report.Of(ctx, s.book, run)
+			if err != nil {
+				return nil, err
+			}
+			return r.JSON()
+		},
+		Behind: func() int64 { return s.courier.Behind() },
+		Step:   killpoint(),
 	})
 	return s, s.serve(ctx)
 }

@@ -7,6 +7,7 @@ package keeper
 import (
 	"context"
 	"crypto/sha256"
+	"encoding/binary"
 	"encoding/hex"
 	"encoding/json"
 	"errors"
@@ -44,6 +45,9 @@ type Config struct {
 	Recipe func(name string) (string, error)
 	// ResumeAfterRestart lets interrupted runs go on without a person.
 	ResumeAfterRestart bool
+	// Conclude works out a run's result, as a JSON object, from what is written; it is asked only
+	// for runs whose recipe wants one. Nil: no run has one.
+	Conclude func(ctx context.Context, run protocol.RunID) (json.RawMessage, error)
 	// Armed says whether remote requests may move the bench now.
 	Armed func(now time.Time) bool
 	// MayHome is a person's word that axes may search their zero at the start of each run.
@@ -148,13 +152,22 @@ func (k *Keeper) engine(ctx context.Context, row logbook.RunRow) (*engine.Engine
 	if row.State != protocol.Queued && row.BenchText != k.BenchText {
 		return nil, k.refuse(ctx, row, past, "failed: the bench file was changed while the run was unfinished, so what is left would not belong to what was taken; start it anew")
 	}
+	plan.Repeat.Seed = shuffleSeed(row.Run)
 	eng := engine.New(engine.Config{
 		Bench: k.Bench, Plan: plan, RunID: row.Run, Log: appender{k.Book}, Past: past,
-		ResumeAfterRestart: k.ResumeAfterRestart, MayHome: k.MayHome, Step: k.Step,
+		ResumeAfterRestart: k.ResumeAfterRestart, MayHome: k.MayHome, Step: k.Step, Conclude: k.concluder(row.Run, plan),
 	})
 	k.current, k.row = eng, row
 	k.queue = slices.DeleteFunc(k.queue, func(r protocol.RunID) bool { return r == row.Run })
 	return eng, nil
+}
+
+// concluder is what works out the result of one run, nil when its recipe asks for none.
+func (k *Keeper) concluder(run protocol.RunID, plan scan.Plan) func(context.Context) (json.RawMessage, error) {
+	if k.Conclude == nil || plan.Result == nil {
+		return nil
+	}
+	return func(ctx context.Context) (json.RawMessage, error) { return k.Conclude(ctx, run) }
 }
 
 func (k *Keeper) fold(ctx context.Context, run protocol.RunID) (engine.Progress, error) {
@@ -283,6 +296,12 @@ func (k *Keeper) Enqueue(ctx context.Context, q protocol.StartRequest) (protocol
 func (k *Keeper) name(now time.Time, key string) protocol.RunID {
 	sum := sha256.Sum256(fmt.Appendf(nil, "%s|%s|%d", k.Bench.Name, key, now.UnixNano()))
 	return protocol.RunID(now.UTC().Format("20060102-150405") + "-" + hex.EncodeToString(sum[:4]))
+}
+
+// shuffleSeed is a run's own, and the same after each restart.
+func shuffleSeed(run protocol.RunID) uint64 {
+	sum := sha256.Sum256([]byte(run))
+	return binary.BigEndian.Uint64(sum[:])
 }
 
 func who(name string) string {

@@ -63,6 +63,9 @@ type Config struct {
 	ResumeAfterRestart bool
 	// MayHome is a person's word, given with the start, that axes without a zero may search for it.
 	MayHome bool
+	// Conclude works out the run's result from what is written, as a JSON object; nil: the run has
+	// none. It is asked once, when everything is counted.
+	Conclude func(ctx context.Context) (json.RawMessage, error)
 	// Step, if not nil, is called at every step. Tests kill there.
 	Step func(Step)
 }
@@ -306,10 +309,55 @@ func (e *Engine) turn(ctx context.Context) error {
 		if done, err := e.putBack(ctx); !done || err != nil {
 			return err
 		}
+		if err := e.conclude(ctx); err != nil {
+			return err
+		}
 		return e.end(ctx, protocol.Finished, fmt.Sprintf("finished: %d of %d readings accepted, %d set aside", e.progress.Accepted, e.progress.Planned(), e.progress.SetAside), nil)
 	}
 	e.step(StepDecided)
 	return e.perform(ctx, task)
+}
+
+// conclude writes the result. That there is none is told, and is no reason for the run to fail: what
+// was counted stands.
+func (e *Engine) conclude(ctx context.Context) error {
+	if e.Conclude == nil || e.progress.concluded {
+		return nil
+	}
+	e.rest(ctx) // it may take a while, and nothing moves meanwhile
+	object, err := e.Conclude(ctx)
+	if err != nil {
+		e.progress.concluded = true
+		return e.note(ctx, protocol.Trouble, "no result: "+err.Error(), nil)
+	}
+	body := &resultBody{object: object}
+	if err := e.write(ctx, protocol.ResultEntry, &body.Head, body, protocol.ResultSchema); err != nil {
+		return err
+	}
+	e.progress.concluded = true
+	return nil
+}
+
+// resultBody is a result with the head of a journal entry.
+type resultBody struct {
+	protocol.Head
+	object json.RawMessage
+}
+
+// MarshalJSON puts the head's fields into the object; the head wins.
+func (r *resultBody) MarshalJSON() ([]byte, error) {
+	all := map[string]json.RawMessage{}
+	if err := json.Unmarshal(r.object, &all); err != nil {
+		return nil, fmt.Errorf("result: %w", err)
+	}
+	head, err := json.Marshal(r.Head)
+	if err != nil {
+		return nil, err
+	}
+	if err := json.Unmarshal(head, &all); err != nil {
+		return nil, err
+	}
+	return json.Marshal(all)
 }
 
 // putBack turns the axis back that a background turned away, with the light off. What fails then

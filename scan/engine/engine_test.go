@@ -2,6 +2,7 @@ package engine
 
 import (
 	"context"
+	"encoding/json"
 	"errors"
 	"fmt"
 	"reflect"
@@ -494,6 +495,46 @@ func TestALogbookThatHoldsSomethingElseEndsInTheRestState(t *testing.T) {
 			t.Errorf("Run() = %v; want ErrConflict", err)
 		}
 		n.atRest(t)
+	})
+}
+
+func TestAResultIsWrittenOnceBeforeTheEnd(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		asked := 0
+		conclude := func(context.Context) (json.RawMessage, error) {
+			asked++
+			return json.RawMessage(`{"kind":"efficiency","value":0.57,"run":"somebody else's"}`), nil
+		}
+		n := newNight(t, func(c *Config) { c.Conclude = conclude })
+		if _, err := n.eng.Run(t.Context()); err != nil {
+			t.Fatal(err)
+		}
+		e := n.entries[len(n.entries)-2]
+		var got map[string]any
+		if err := json.Unmarshal(e.Body, &got); err != nil || e.Kind != protocol.ResultEntry || got["value"] != 0.57 || got["run"] != "r" || got["schema"] != protocol.ResultSchema || got["sequence"] != float64(e.Sequence) {
+			t.Errorf("entry %d is a %s: %s, %v; want the result with the head of this entry", e.Sequence, e.Kind, e.Body, err)
+		}
+		// Cut before the end: the result is there already and is not worked out again.
+		again := newNight(t, func(c *Config) { c.Conclude = conclude })
+		again.memory.entries = slices.Clone(n.entries[:len(n.entries)-1])
+		c := again.eng.Config
+		c.Past, c.ResumeAfterRestart = again.fold(t), true
+		again.eng = New(c)
+		if state, err := again.eng.Run(t.Context()); state != protocol.Finished || err != nil || asked != 1 {
+			t.Errorf("resumed: %s, %v, asked %d times; want finished, asked once", state, err, asked)
+		}
+	})
+}
+
+func TestARunWithoutItsResultStillFinishes(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		n := newNight(t, func(c *Config) {
+			c.Conclude = func(context.Context) (json.RawMessage, error) { return nil, errors.New("the file is gone") }
+		})
+		state, err := n.eng.Run(t.Context())
+		if state != protocol.Finished || err != nil || !strings.Contains(kinds(n.events(t)), "trouble ended") {
+			t.Errorf("Run() = %s, %v, events %s; want finished, and the missing result told", state, err, kinds(n.events(t)))
+		}
 	})
 }
 

@@ -1,0 +1,137 @@
+package nighttest
+
+import (
+	"bytes"
+	"context"
+	"encoding/json"
+	"math"
+	"path/filepath"
+	"testing"
+	"testing/synctest"
+
+	"gemel/daemon/logbook"
+	"gemel/daemon/report"
+	"gemel/protocol"
+	"gemel/scan/estimate"
+)
+
+const efficiency = `
+title: Idler efficiency on the plateau
+sweep:
+  - {axis: signal_arm, at: 2.864 deg}
+  - {axis: idler_arm, around: 2.864 deg, span: 1.2 deg, step: 0.1 deg}
+order: serpentine
+dwell: {heralds: 100000, at_most: 20 s, slice: 2 s}
+repeat: {times: 2, as: passes}
+dark: {every: 10 points, dwell: 20 s, also: [start, end]}
+background: {turn: pump_waveplate, by: 45 deg, every: 10 points, dwell: 40 s, also: [start, end]}
+result: {kind: efficiency, trigger: signal, under_test: idler, use: {plateau_of: idler_arm, half_width: 0.15 deg}}
+`
+
+const ringPeak = `
+title: Find the ring
+sweep:
+  - {axis: idler_arm, at: 2.864 deg}
+  - {axis: signal_arm, around: 2.864 deg, span: 0.8 deg, step: 0.05 deg}
+dwell: 4 s
+repeat: {times: 2, as: passes}
+result: {kind: peak, of: pairs, along: signal_arm, profile: predicted}
+`
+
+// resultOf runs a night and works its result out twice: from the logbook, and from a copy of the
+// file alone.
+func resultOf(t *testing.T, recipe string) (estimate.Result, *Result) {
+	t.Helper()
+	data, n := t.TempDir(), Night{Bench: demoBench(t), Recipe: recipe}
+	var night *Result
+	synctest.Test(t, func(t *testing.T) {
+		var err error
+		if night, err = Run(n, data); err != nil {
+			t.Fatal(err)
+		}
+	})
+	demand(t, n, night, "")
+	book, err := logbook.OpenReadOnly(filepath.Join(data, "logbook.db"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer book.Close()
+	runs, err := book.Runs(t.Context())
+	if err != nil {
+		t.Fatal(err)
+	}
+	first := digits(t, book, runs[0].Run)
+	alone := filepath.Join(t.TempDir(), "copy.db")
+	if err := book.Snapshot(t.Context(), alone); err != nil {
+		t.Fatal(err)
+	}
+	kept, err := logbook.OpenReadOnly(alone)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer kept.Close()
+	if again := digits(t, kept, runs[0].Run); !bytes.Equal(first, again) {
+		t.Error("a copy of the file gives other digits")
+	}
+	r, err := report.Of(context.Background(), book, runs[0].Run)
+	if err != nil {
+		t.Fatal(err)
+	}
+	return r, night
+}
+
+func digits(t *testing.T, book *logbook.Book, run protocol.RunID) []byte {
+	t.Helper()
+	r, err := report.Of(t.Context(), book, run)
+	if err != nil {
+		t.Fatal(err)
+	}
+	text, err := r.JSON()
+	if err != nil {
+		t.Fatal(err)
+	}
+	var fixed map[string]json.RawMessage
+	if err := json.Unmarshal(text, &fixed); err != nil {
+		t.Fatal(err)
+	}
+	for _, key := range []string{"run", "kind", "value", "standard_uncertainty", "expanded_uncertainty", "coverage_factor", "unit", "budget", "corrections", "conditions", "readings_used", "readings_set_aside", "simulated"} {
+		if fixed[key] == nil {
+			t.Errorf("key %s is missing", key)
+		}
+	}
+	return text
+}
+
+// trueEfficiency stands in configs/demo-bench.yaml under simulation.truth, where no result can read it.
+const trueEfficiency = 0.57
+
+func TestTheEfficiencyOfASimulatedDetectorIsItsTrueOne(t *testing.T) {
+	r, night := resultOf(t, efficiency)
+	if r.Value == nil {
+		t.Fatalf("no value: %q", r.Because)
+	}
+	if math.Abs(*r.Value-trueEfficiency) > *r.Expanded {
+		t.Errorf("%s; the true one is %g", r.Sentence(), trueEfficiency)
+	}
+	// Counting alone is much better than the declared path: it has to agree too.
+	if counting := 0.002; math.Abs(*r.Value-trueEfficiency) > 3*counting {
+		t.Errorf("%g differs from %g by more than three times what counting allows", *r.Value, trueEfficiency)
+	}
+	t.Log(r.Sentence())
+	if len(r.Used) != 6 || night.SetAside != 0 {
+		t.Errorf("%d readings used; want three places of the plateau, twice", len(r.Used))
+	}
+}
+
+func TestTheRingIsWhereTheModelPutsIt(t *testing.T) {
+	// The profile is predicted with the emission at 2.8642 deg (checks.csv S069: bbo-kato-1986, 405 nm,
+	// cut 29.2 deg), the fit moves it by an offset, and the bench has none: both arms stand true.
+	r, _ := resultOf(t, ringPeak)
+	if r.Value == nil {
+		t.Fatalf("no value: %q", r.Because)
+	}
+	t.Log(r.Sentence())
+	if math.Abs(*r.Value-2.8642) > max(*r.Expanded, 0.02) {
+		t.Errorf("the peak stands at %g ± %g deg; want 2.864", *r.Value, *r.Expanded)
+	}
+}
