@@ -57,13 +57,15 @@ type session struct {
 func parseRecipe(name string, text []byte) (*recipe.Recipe, error) { return recipe.Parse(name, text) }
 
 // planner works recipes out for a bench.
-func planner(f *bench.File, name string) func(string) (scan.Plan, error) {
-	return func(text string) (scan.Plan, error) {
+func planner(f *bench.File, name string) func(string, time.Time) (scan.Plan, error) {
+	return func(text string, accepted time.Time) (scan.Plan, error) {
 		r, err := parseRecipe(name, []byte(text))
 		if err != nil {
 			return scan.Plan{}, err
 		}
-		return r.Plan(f.Facts())
+		facts := f.Facts()
+		facts.AcceptedAt = accepted.In(time.Local) // a recipe's clock is the one on the wall
+		return r.Plan(facts)
 	}
 }
 

@@ -39,8 +39,9 @@ type Config struct {
 	Bench     *engine.Bench
 	BenchText string
 	Version   string
-	// Plan works a recipe's text out for this bench. Its error is a *strict.Error with findings.
-	Plan func(recipeText string) (scan.Plan, error)
+	// Plan works a recipe's text out for this bench, with the moment at which it was accepted: asked
+	// again after a restart, it gives the same plan. Its error is a *strict.Error with findings.
+	Plan func(recipeText string, accepted time.Time) (scan.Plan, error)
 	// Recipe reads the text of a recipe by the name it has in the configured folder; nil: there is none.
 	Recipe func(name string) (string, error)
 	// ResumeAfterRestart lets interrupted runs go on without a person.
@@ -145,7 +146,7 @@ func (k *Keeper) engine(ctx context.Context, row logbook.RunRow) (*engine.Engine
 	if err != nil || past.State.Final() {
 		return nil, err
 	}
-	plan, err := k.Plan(row.RecipeText)
+	plan, err := k.Plan(row.RecipeText, row.QueuedAt.Time)
 	if err != nil {
 		return nil, k.refuse(ctx, row, past, "failed: the recipe does not fit the bench any more: "+err.Error())
 	}
@@ -252,7 +253,8 @@ func (k *Keeper) Enqueue(ctx context.Context, q protocol.StartRequest) (protocol
 	if q.Key == "" {
 		return protocol.StartReply{}, protocol.Refuse(400, "no key; want one of your own choice, so that a start asked for twice is one run")
 	}
-	plan, err := k.Plan(text)
+	now := time.Now()
+	plan, err := k.Plan(text, now)
 	if err != nil {
 		refusal := protocol.Refuse(422, "the recipe cannot be run: "+err.Error())
 		if e, ok := errors.AsType[*strict.Error](err); ok {
@@ -260,7 +262,6 @@ func (k *Keeper) Enqueue(ctx context.Context, q protocol.StartRequest) (protocol
 		}
 		return protocol.StartReply{}, refusal
 	}
-	now := time.Now()
 	run := k.name(now, q.Key)
 	first, err := k.eventEntry(run, 1, protocol.OperatorDid, "start asked for by "+who(q.Who), protocol.Queued, map[string]any{"who": q.Who, "key": q.Key})
 	if err != nil {

@@ -356,12 +356,14 @@ func (k *kit) catchUp(c *courier.Courier) {
 	k.stuck = fmt.Sprintf("%d entries were never published: %v", c.Behind(), c.Trouble())
 }
 
-func (k *kit) plan(text string) (scan.Plan, error) {
+func (k *kit) plan(text string, accepted time.Time) (scan.Plan, error) {
 	r, err := recipe.Parse("night.yaml", []byte(text))
 	if err != nil {
 		return scan.Plan{}, err
 	}
-	return r.Plan(k.Bench.Facts())
+	facts := k.Bench.Facts()
+	facts.AcceptedAt = accepted
+	return r.Plan(facts)
 }
 
 func (k *kit) choose(ctx context.Context, keep *keeper.Keeper) (protocol.RunID, error) {
@@ -577,7 +579,7 @@ func cutLast(id string) (run, number string, found bool) {
 func (k *kit) result() (*Result, error) {
 	k.virtual.World.Settle()
 	r := &Result{Facts: FactsOf(k.Bench), Took: time.Since(k.began), Lives: k.lived, Lines: k.counts, Stuck: k.stuck, Published: len(k.sink.stored)}
-	plan, err := k.plan(k.Recipe)
+	plan, err := k.plan(k.Recipe, k.began)
 	if err != nil {
 		return nil, err
 	}

@@ -35,7 +35,9 @@ func Of(ctx context.Context, book *logbook.Book, run protocol.RunID) (estimate.R
 	if err != nil {
 		return estimate.Result{}, err
 	}
-	plan, err := r.Plan(file.Facts())
+	facts := file.Facts()
+	facts.AcceptedAt = row.QueuedAt.Time
+	plan, err := r.Plan(facts)
 	if err != nil {
 		return estimate.Result{}, err
 	}

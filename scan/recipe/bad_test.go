@@ -37,7 +37,7 @@ func TestBadRecipes(t *testing.T) {
 				t.Fatal(err)
 			}
 			body, want, _ := strings.Cut(string(text), mark)
-			r, err := parse(name, []byte(body), true)
+			r, err := Parse(name, []byte(body))
 			if err == nil {
 				_, err = r.Plan(facts)
 			}

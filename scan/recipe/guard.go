@@ -10,10 +10,6 @@ import (
 	"gemel/scan"
 )
 
-// nightly says whether guards and schedule are taken. They are read and tested whole; a version
-// whose engine does not act on them refuses them, because a key that is ignored is worse.
-const nightly = false
-
 // Guard is a condition for counting as the recipe says it.
 type Guard struct {
 	Watch       drivers.DeviceName

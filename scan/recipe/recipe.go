@@ -81,9 +81,7 @@ func Load(path string) (*Recipe, error) {
 
 // Parse reads a recipe. The name of the file is used in findings only. The error is a
 // *strict.Error with all findings.
-func Parse(file string, text []byte) (*Recipe, error) { return parse(file, text, nightly) }
-
-func parse(file string, text []byte, nightly bool) (*Recipe, error) {
+func Parse(file string, text []byte) (*Recipe, error) {
 	doc := strict.Parse(file, text)
 	m := doc.Root()
 	r := &Recipe{
@@ -103,11 +101,7 @@ func parse(file string, text []byte, nightly bool) (*Recipe, error) {
 	r.Background = readBackground(m.Opt("background"))
 	r.Trouble = readTrouble(m.Opt("trouble"))
 	r.Result = readResult(m.Opt("result"), r.Dark != nil || r.Background != nil)
-	if nightly {
-		r.Guards, r.Schedule = readGuards(m.Opt("guards")), readSchedule(m.Opt("schedule"))
-	} else {
-		m.Later("guards", "schedule")
-	}
+	r.Guards, r.Schedule = readGuards(m.Opt("guards")), readSchedule(m.Opt("schedule"))
 	m.Later("reference", "refine")
 	m.Done()
 	if visits := r.visits(); visits.Cmp(big.NewInt(MaxVisits)) > 0 {

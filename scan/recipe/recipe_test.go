@@ -241,7 +241,7 @@ func FuzzParse(f *testing.F) {
 	facts := bench()
 	facts.AcceptedAt = time.Date(2026, 3, 28, 20, 0, 0, 0, time.UTC)
 	f.Fuzz(func(t *testing.T, text string) {
-		r, err := parse("r.yaml", []byte(text), true)
+		r, err := Parse("r.yaml", []byte(text))
 		if err != nil {
 			return
 		}
@@ -249,7 +249,7 @@ func FuzzParse(f *testing.F) {
 		if err != nil {
 			return
 		}
-		again, err := parse("other.yaml", []byte(r.Text), true)
+		again, err := Parse("other.yaml", []byte(r.Text))
 		if err != nil {
 			t.Fatalf("accepted once only: %v", err)
 		}

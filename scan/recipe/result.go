@@ -19,6 +19,7 @@ type Result struct {
 	Trigger, UnderTest string
 	PlateauOf          drivers.AxisName // empty: all points
 	HalfWidth          unit.Angle
+	at                 []standing // the other axes have to be there
 
 	Of      string
 	Along   drivers.AxisName
@@ -86,6 +87,9 @@ func (r *Result) readEfficiency(m strict.Map) {
 	}
 	u := use.Map()
 	plateau, width, points := u.Opt("plateau_of"), u.Opt("half_width"), u.Opt("points")
+	for _, e := range u.Opt("at").Map().Entries() {
+		r.at = append(r.at, standing{axis: drivers.AxisName(e.Name), angle: e.Value.Angle(-unit.Turn, unit.Turn), place: e.Value.Place()})
+	}
 	switch {
 	case points.Given() && (plateau.Given() || width.Given()):
 		u.Fail("readings chosen in two ways", "one of "+ways)
@@ -156,12 +160,24 @@ func (r *Recipe) efficiency(f Facts, out *scan.Result) []protocol.Finding {
 			findings = append(findings, q.testAt.Finding(fmt.Sprintf("%q, which no channel counts in coincidence with %q", q.UnderTest, q.Trigger), "two detectors whose coincidences this counter counts"))
 		}
 	}
+	for _, s := range q.at {
+		c, swept := r.column(s.axis)
+		switch {
+		case !swept:
+			findings = append(findings, s.place.Finding(fmt.Sprintf("the axis %q, which is not swept", s.axis), "an axis of the sweep, at one of its places"))
+		case s.axis == q.PlateauOf:
+			findings = append(findings, s.place.Finding("one place of the axis whose plateau is asked for", "other axes"))
+		case !slices.Contains(c.angles(), s.angle):
+			findings = append(findings, s.place.Finding(fmt.Sprintf("%s of %s, where no point is", s.angle, s.axis), "one of the places of its sweep"))
+		}
+		out.At = append(out.At, scan.AxisTarget{Axis: s.axis, Angle: s.angle})
+	}
 	for _, a := range f.Axes {
-		if n := r.places(a.Name); n > 1 && a.Name != q.PlateauOf && moves(a.Role) {
+		if n := r.places(a.Name); n > 1 && a.Name != q.PlateauOf && moves(a.Role) && !q.standsAt(a.Name) {
 			if q.PlateauOf == "" {
 				findings = append(findings, q.useAt.Finding(fmt.Sprintf("all points, while %s is swept over %d places", a.Name, n), fmt.Sprintf("{plateau_of: %s, half_width: …}, or a sweep that keeps to one place: readings beside the plateau make the efficiency too small", a.Name)))
 			} else {
-				findings = append(findings, q.plateauAt.Finding(fmt.Sprintf("the plateau of %s, while %s is swept over %d places", q.PlateauOf, a.Name, n), "one place of every other axis: the plateau lies elsewhere at each of them"))
+				findings = append(findings, q.plateauAt.Finding(fmt.Sprintf("the plateau of %s, while %s is swept over %d places", q.PlateauOf, a.Name, n), "one place of every other axis, in the sweep or by at: {AXIS: ANGLE} beside it: the plateau lies elsewhere at each of them"))
 			}
 		}
 	}
@@ -180,6 +196,17 @@ func (r *Recipe) efficiency(f Facts, out *scan.Result) []protocol.Finding {
 		findings = append(findings, q.widthAt.Finding(fmt.Sprintf("%s to either side in a sweep of %s", q.HalfWidth, span), "less than half of the sweep: the plateau's middle comes from its flanks, which must be in the sweep too"))
 	}
 	return findings
+}
+
+// standing is an axis at the place where its readings count.
+type standing struct {
+	axis  drivers.AxisName
+	angle unit.Angle
+	place strict.Place
+}
+
+func (r *Result) standsAt(axis drivers.AxisName) bool {
+	return slices.ContainsFunc(r.at, func(s standing) bool { return s.axis == axis })
 }
 
 // moves says whether an axis of this role changes which pairs are collected.

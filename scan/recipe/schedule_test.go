@@ -148,7 +148,7 @@ func TestInstantsAgreeWithAWatchedClock(t *testing.T) {
 const nightRecipe = "title: A\ndwell: 1 s\nschedule: {not_before: \"22:00\", finish_by: 06:30}\n"
 
 func TestAScheduleIsReckonedFromTheMomentOfAcceptance(t *testing.T) {
-	r, err := parse("r.yaml", []byte(nightRecipe), true)
+	r, err := Parse("r.yaml", []byte(nightRecipe))
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -182,13 +182,13 @@ func TestAScheduleIsReckonedFromTheMomentOfAcceptance(t *testing.T) {
 }
 
 func TestGuardsAreReadInTheSensorsUnit(t *testing.T) {
-	r, err := parse("r.yaml", []byte(`title: A
+	r, err := Parse("r.yaml", []byte(`title: A
 dwell: 1 s
 guards:
   - {watch: pump_power, within: [45 mW, 0.055 W], otherwise: hold, give_up_after: 30 min}
   - {watch: crystal_temperature, within: [292.15 K, 21.5 Cel]}
   - {watch: pump_power, within: [30 mW, 70 mW], otherwise: stop}
-`), true)
+`))
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -203,15 +203,5 @@ guards:
 	}
 	if got := fmt.Sprint(p.Guards); got != fmt.Sprint(want) {
 		t.Errorf("got  %s\nwant %s", got, fmt.Sprint(want))
-	}
-}
-
-// TestWhatTheEngineDoesNotActOnIsRefused holds the public way to the constant.
-func TestWhatTheEngineDoesNotActOnIsRefused(t *testing.T) {
-	for _, text := range []string{nightRecipe, "title: A\ndwell: 1 s\nguards: [{watch: pump_power, within: [45 mW, 55 mW]}]\n"} {
-		_, err := Parse("r.yaml", []byte(text))
-		if refused := err != nil && strings.Contains(err.Error(), "not available yet"); refused == nightly {
-			t.Errorf("%v, with nightly %v; want these keys taken if and only if it is true", err, nightly)
-		}
 	}
 }
