@@ -260,7 +260,7 @@ func (e *Engine) standing(ctx context.Context) (stand []protocol.AxisTarget, rea
 	case interrupted:
 		return nil, false, nil
 	case err != nil:
-		return nil, false, e.holdFor(ctx, protocol.ByTrouble, "held: "+err.Error(), errorDetail(err))
+		return nil, false, e.holdFor(ctx, protocol.ByTrouble, "held: "+firstLine(err), errorDetail(err))
 	}
 	stand = []protocol.AxisTarget{}
 	for _, a := range e.Bench.Axes {

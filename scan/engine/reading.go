@@ -41,7 +41,7 @@ func (e *Engine) perform(ctx context.Context, t task) error {
 	if reading != nil {
 		if err != nil {
 			reading.Accepted = false
-			reading.Reason = err.Error()
+			reading.Reason = firstLine(err)
 			if interrupted {
 				reading.Reason = "interrupted: " + context.Cause(op).Error()
 			}

@@ -17,39 +17,48 @@ func Rest(ctx context.Context, b *Bench) (bad string) {
 }
 
 // rest brings the bench to the rest state: light off, detectors protected, motion and counting
-// stopped. It tries everything once without waiting for dead lines, so that one dead line cannot
-// keep the others open, and then reconnects for what is left. It runs under a context of its own,
-// because the one that ended the work must not keep the shutter open. The text says what could
-// not be reached; it is empty when all was.
+// stopped. It goes through the devices three times. The first time each gets its command and only a
+// moment to confirm it, so that no dead line delays another's stop by more than that; then those
+// that did not confirm get their time; then what is left is connected anew. It runs under a context
+// of its own, because the one that ended the work must not keep the shutter open. The text says
+// what could not be reached; it is empty when all was.
 func (e *Engine) rest(ctx context.Context) (bad string) {
 	defer e.step(StepRested)
 	fresh, cancel := e.fresh(ctx, 20*time.Second)
 	defer cancel()
-	jobs := e.restJobs()
-	var left []restJob
+	left := e.attempt(fresh, e.restJobs(), restMoment, false)
+	left = e.attempt(fresh, left, e.Bench.Pace.Real(5*time.Second)+time.Second, false)
+	left = e.attempt(fresh, left, e.Bench.Pace.Real(5*time.Second)+2*time.Second, true)
+	var words []string
+	for _, j := range left {
+		words = append(words, fmt.Sprintf("%s: %s", j.what, firstLine(j.err)))
+	}
+	e.progress.restBad = strings.Join(words, "; ")
+	e.publishSnapshot()
+	return e.progress.restBad
+}
+
+// restMoment is what a device gets to confirm its stop before the next one is told: the last of
+// six hears of it within a second though all others are dead.
+const restMoment = 150 * time.Millisecond
+
+// attempt tries jobs, each within its time, and returns those that failed.
+func (e *Engine) attempt(ctx context.Context, jobs []restJob, within time.Duration, anew bool) (left []restJob) {
 	for _, j := range jobs {
-		within, done := context.WithTimeout(fresh, e.Bench.Pace.Real(5*time.Second)+time.Second)
-		j.err = j.do(within)
+		limit, done := context.WithTimeout(ctx, within)
+		j.err = nil
+		if anew {
+			j.err = j.device.Connect(limit)
+		}
+		if j.err == nil {
+			j.err = j.do(limit)
+		}
 		done()
 		if j.err != nil {
 			left = append(left, j)
 		}
 	}
-	var words []string
-	for _, j := range left {
-		within, done := context.WithTimeout(fresh, e.Bench.Pace.Real(5*time.Second)+2*time.Second)
-		err := j.device.Connect(within)
-		if err == nil {
-			err = j.do(within)
-		}
-		done()
-		if err != nil {
-			words = append(words, fmt.Sprintf("%s: %v", j.what, err))
-		}
-	}
-	e.progress.restBad = strings.Join(words, "; ")
-	e.publishSnapshot()
-	return e.progress.restBad
+	return left
 }
 
 type restJob struct {

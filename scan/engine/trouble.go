@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"strings"
 	"time"
 
 	"gemel/drivers"
@@ -25,11 +26,11 @@ func (e *Engine) afterError(ctx context.Context, t task, err error) error {
 		return e.afterGuard(ctx, t, b)
 	}
 	if _, ok := errors.AsType[*notThere](err); ok {
-		return e.again(ctx, t, err.Error())
+		return e.again(ctx, t, firstLine(err))
 	}
 	switch drivers.RemedyOf(err) {
 	case drivers.Retry:
-		return e.again(ctx, t, err.Error())
+		return e.again(ctx, t, firstLine(err))
 	case drivers.Reconnect, drivers.HomeAgain:
 		if werr := e.trouble(ctx, err); werr != nil {
 			return werr
@@ -37,9 +38,9 @@ func (e *Engine) afterError(ctx context.Context, t task, err error) error {
 		if werr := e.getReady(ctx, false); werr != nil || e.progress.State != protocol.Running {
 			return werr
 		}
-		return e.again(ctx, t, err.Error())
+		return e.again(ctx, t, firstLine(err))
 	default:
-		return e.holdFor(ctx, protocol.ByTrouble, "held: "+err.Error(), errorDetail(err))
+		return e.holdFor(ctx, protocol.ByTrouble, "held: "+firstLine(err), errorDetail(err))
 	}
 }
 
@@ -62,8 +63,17 @@ func (e *Engine) again(ctx context.Context, t task, reason string) error {
 	}
 }
 
+// firstLine is what of an error belongs into a sentence: a stack does not.
+func firstLine(err error) string {
+	line, _, _ := strings.Cut(err.Error(), "\n")
+	return line
+}
+
 func errorDetail(err error) map[string]any {
 	detail := map[string]any{}
+	if text := err.Error(); strings.Contains(text, "\n") {
+		detail["error"] = text
+	}
 	if d, ok := errors.AsType[*drivers.Error](err); ok {
 		detail["device"], detail["op"], detail["remedy"] = string(d.Device), d.Op, d.Remedy.String()
 	}
@@ -71,7 +81,7 @@ func errorDetail(err error) map[string]any {
 }
 
 func (e *Engine) trouble(ctx context.Context, err error) error {
-	return e.note(ctx, protocol.Trouble, err.Error(), errorDetail(err))
+	return e.note(ctx, protocol.Trouble, firstLine(err), errorDetail(err))
 }
 
 // connectPatience bounds how long a lost line is waited for before a person is asked.
@@ -93,7 +103,7 @@ func (e *Engine) getReady(ctx context.Context, all bool) error {
 			return nil
 		}
 		if drivers.RemedyOf(err) == drivers.GiveUp || e.now().After(deadline) {
-			return e.holdFor(ctx, protocol.ByTrouble, "held: "+err.Error(), errorDetail(err))
+			return e.holdFor(ctx, protocol.ByTrouble, "held: "+firstLine(err), errorDetail(err))
 		}
 		if e.Bench.Pace.Wait(op, pause) != nil {
 			return nil
@@ -109,35 +119,38 @@ func (e *Engine) getReady(ctx context.Context, all bool) error {
 		if !all && drivers.RemedyOf(err) <= drivers.Reconnect {
 			return nil // the next attempt at the reading meets it again, and is counted
 		}
-		return e.holdFor(ctx, protocol.ByTrouble, "held: "+err.Error(), errorDetail(err))
+		return e.holdFor(ctx, protocol.ByTrouble, "held: "+firstLine(err), errorDetail(err))
 	}
 	return nil
 }
 
-// connectAll connects every device, with all light off first.
+// connectAll connects every device, with all light off first. It tries them all, and returns the
+// gravest error: that another instrument answers must not hide behind a line that is merely away.
 func (e *Engine) connectAll(ctx context.Context) error {
-	for _, j := range e.restJobs() {
-		if err := j.device.Connect(ctx); err != nil {
-			return err
+	var worst error
+	note := func(err error) bool {
+		if err != nil && (worst == nil || drivers.RemedyOf(err) > drivers.RemedyOf(worst)) {
+			worst = err
 		}
-		if err := j.do(ctx); err != nil {
-			return err
+		return err == nil
+	}
+	for _, j := range e.restJobs() {
+		if note(j.device.Connect(ctx)) {
+			note(j.do(ctx))
 		}
 	}
 	for _, s := range e.Bench.Settings {
-		if err := s.Connect(ctx); err != nil {
-			return err
-		}
+		note(s.Connect(ctx))
 	}
 	for _, s := range e.Bench.Sensors {
 		if err := s.Connect(ctx); err != nil {
-			if ctx.Err() != nil {
-				return err
-			}
 			e.deaf[s.Name()] = e.now()
 		}
 	}
-	return nil
+	if err := context.Cause(ctx); err != nil {
+		return err
+	}
+	return worst
 }
 
 // findZero makes sure that every axis knows its zero. A search moves through angles nobody chose,
@@ -149,7 +162,7 @@ func (e *Engine) findZero(ctx, op context.Context) error {
 			return nil
 		}
 		if err != nil {
-			return e.holdFor(ctx, protocol.ByTrouble, "held: "+err.Error(), errorDetail(err))
+			return e.holdFor(ctx, protocol.ByTrouble, "held: "+firstLine(err), errorDetail(err))
 		}
 		var lost []drivers.AxisName
 		for _, a := range e.homeOrder(s) {
@@ -168,7 +181,7 @@ func (e *Engine) findZero(ctx, op context.Context) error {
 			if op.Err() != nil {
 				return nil
 			}
-			return e.holdFor(ctx, protocol.ByTrouble, "held: the search for the zero failed: "+err.Error(), errorDetail(err))
+			return e.holdFor(ctx, protocol.ByTrouble, "held: the search for the zero failed: "+firstLine(err), errorDetail(err))
 		}
 		if err := e.note(ctx, protocol.HomedEvent, fmt.Sprintf("%s found the zero of %v", s.Name(), lost), detail); err != nil {
 			return err
