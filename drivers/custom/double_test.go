@@ -187,3 +187,52 @@ func TestExchangesOfAMoveAndAnAngle(t *testing.T) {
 		t.Logf("two axes asked one by one: %d exchanges for their angles, %d for a move", where, l.Counts().Asked-before)
 	})
 }
+
+func TestAStopForEachAxisGoesToAllWhateverTheFirstAnswers(t *testing.T) {
+	for name, answer := range map[string]string{"nothing": "", "a refusal": "E9", "something strange": "?"} {
+		t.Run(name, func(t *testing.T) {
+			synctest.Test(t, func(t *testing.T) {
+				var when [3]time.Time
+				far := &drivertest.Far{EndsWith: "\r", Says: "\r\n", Answer: func(text string) string {
+					switch text {
+					case "X1":
+						when[1] = time.Now()
+						return answer
+					case "X2":
+						when[2] = time.Now()
+						return "OK"
+					case "S1", "S2":
+						return "IDLE"
+					}
+					return "P0"
+				}}
+				l := line.New(line.Settings{Name: "west", Open: func(ctx context.Context) (line.Port, error) { return far.Open(ctx) }})
+				ctx, cancel := context.WithCancel(context.Background())
+				done := make(chan bool)
+				go func() { _ = l.Run(ctx); close(done) }()
+				c := plainStage()
+				c.Dialect.Asks["stop"] = Ask{Send: "X{address}", Match: "OK"}
+				second := c.Axes[0]
+				second.Name, second.Address = "waveplate", "2"
+				c.Axes = append(c.Axes, second)
+				stage, err := NewStage(l, c)
+				if err != nil {
+					t.Fatal(err)
+				}
+				if err := stage.Connect(t.Context()); err != nil {
+					t.Fatal(err)
+				}
+				err = stage.Stop(t.Context())
+				if late := when[2].Sub(when[1]); when[1].IsZero() || when[2].IsZero() || late > 200*time.Millisecond {
+					t.Errorf("the second axis is stopped %v after the first; want both at once", late)
+				}
+				if (drivers.RemedyOf(err) == drivers.GiveUp) != (answer == "E9") {
+					t.Errorf("%v; want the refusal told, and nothing else", err)
+				}
+				cancel()
+				<-done
+				far.HangUp()
+			})
+		})
+	}
+}

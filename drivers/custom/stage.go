@@ -619,17 +619,28 @@ func (s *Stage) rests(ctx context.Context, op string, a Axis, epoch line.Epoch) 
 // Stop halts all axes out of turn and waits until the controller says it is at rest.
 func (s *Stage) Stop(ctx context.Context) error { return s.stop(ctx) }
 
+// brisk is how long the stop of one axis may wait for its answer while the next has not been told.
+const brisk = 100 * time.Millisecond
+
 func (s *Stage) stop(ctx context.Context) error {
 	q := s.questions["stop"]
-	for i, a := range s.set.Axes {
-		if i > 0 && !q.perAxis() {
-			break
-		}
+	axes := s.set.Axes
+	if !q.perAxis() {
+		axes = axes[:1]
+	}
+	var failed error // the first; the other axes are stopped all the same
+	for i, a := range axes {
 		var r reply
-		_, err := s.seat.Urgent(ctx, s.question(q, "stop", a.values(), &r))
-		if err != nil && !uncertain(err) {
-			return err
+		ask := s.question(q, "stop", a.values(), &r)
+		if i < len(axes)-1 {
+			ask.Within = brisk
 		}
+		if _, err := s.seat.Urgent(ctx, ask); err != nil && !uncertain(err) && failed == nil {
+			failed = err
+		}
+	}
+	if failed != nil {
+		return failed
 	}
 	for {
 		err := s.untilRest(ctx, "stop", nil, s.set.MoveWithin)

@@ -232,8 +232,9 @@ func (s *Seat) fail(op string, f *Fault) error {
 }
 
 // grace is how long one who asks waits for the owner after his context ended. The owner looks at
-// the context between two reads; only a port that hangs in open, write or close takes longer.
-const grace = 800 * time.Millisecond
+// the context between two reads; only a port that hangs in open, write or close takes longer. What
+// the second that callers are promised leaves is for a stop or an abort that follows.
+const grace = 250 * time.Millisecond
 
 func (l *Line) hand(to chan<- *job, j *job) result {
 	if j.ctx.Err() != nil {

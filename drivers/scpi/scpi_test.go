@@ -7,6 +7,7 @@ import (
 	"math"
 	"strings"
 	"sync"
+	"sync/atomic"
 	"testing"
 	"testing/synctest"
 	"time"
@@ -622,4 +623,49 @@ func TestTemperaturesAreConvertedWithTheirOffset(t *testing.T) {
 	if err != nil || math.Abs(c.of(293.15)-20) > 1e-9 || math.Abs(c.back(20)-293.15) > 1e-9 {
 		t.Errorf("%+v, %v: 293.15 K is %v Cel", c, err, c.of(293.15))
 	}
+}
+
+// stuck is a port that no longer comes back from a read, whatever its deadline says.
+type stuck struct {
+	line.Port
+	now     *atomic.Bool
+	release chan bool
+}
+
+func (s stuck) Read(b []byte) (int, error) {
+	if s.now.Load() {
+		<-s.release
+	}
+	return s.Port.Read(b)
+}
+
+func TestACountOnAPortThatHangsComesBackWithinASecond(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		in, hang, release := &counting{}, atomic.Bool{}, make(chan bool)
+		l := line.New(line.Settings{Name: "east", Open: func(ctx context.Context) (line.Port, error) {
+			p, err := in.open(ctx)
+			return stuck{p, &hang, release}, err
+		}})
+		run, end := context.WithCancel(t.Context())
+		done := make(chan bool)
+		go func() { _ = l.Run(run); close(done) }()
+		c, err := NewCounter(l, counterConfig())
+		must(t, c, err)
+		if err := c.Connect(t.Context()); err != nil {
+			t.Fatal(err)
+		}
+		ctx, cancel := context.WithTimeout(t.Context(), 1100*time.Millisecond)
+		defer cancel()
+		time.AfterFunc(500*time.Millisecond, func() { hang.Store(true) })
+		_, err = c.Count(ctx, time.Second)
+		if late := time.Since(in.until) - 100*time.Millisecond; !errors.Is(err, context.DeadlineExceeded) || late > time.Second {
+			t.Errorf("%v, %v after the end of its context; want a second at most", err, late)
+		}
+		failed(t, err, 0, true)
+		hang.Store(false)
+		close(release)
+		end()
+		<-done
+		_ = in.far.Close()
+	})
 }
