@@ -79,7 +79,9 @@ func Main(args []string, stdin io.Reader, stdout, stderr io.Writer) int {
 		return exitWrongUse
 	}
 	// The first signal asks for the rest state; a second one ends the wait for it.
-	ctx, cancel := signal.NotifyContext(context.Background(), os.Interrupt, syscall.SIGTERM)
+	// A terminal that is closed asks for it, too, and one who stopped reading must not end a night.
+	ctx, cancel := signal.NotifyContext(context.Background(), os.Interrupt, syscall.SIGTERM, syscall.SIGHUP)
+	signal.Ignore(syscall.SIGPIPE)
 	defer cancel()
 	context.AfterFunc(ctx, cancel)
 	con := &console{in: stdin, out: stdout, err: stderr, terminal: isTerminal(stderr)}

@@ -77,14 +77,17 @@ type Engine struct {
 	benchZero time.Time // bench time at origin
 
 	// Owned by Run's goroutine.
-	progress  Progress
-	commanded map[drivers.AxisName]unit.Angle // where each axis has to stand: sent there and proved, or found there
-	sent      map[drivers.AxisName]bool       // it was sent there, by the approach its file declares
-	simulated *int
-	patience  time.Duration                    // no hold but an operator's lasts longer
-	homing    bool                             // a person allowed the next search for the zero
-	deaf      map[drivers.DeviceName]time.Time // sensors that do not answer, and when they were last tried
-	unheard   error                            // what made a sensor deaf in the last dwell
+	progress   Progress
+	commanded  map[drivers.AxisName]unit.Angle // where each axis has to stand: sent there and proved, or found there
+	sent       map[drivers.AxisName]bool       // it was sent there, by the approach its file declares
+	simulated  *int
+	patience   time.Duration                    // no hold but an operator's lasts longer
+	waitsSince time.Time                        // when the present hold began to count: downtime does not
+	obeying    *order                           // the request being carried out
+	owed       []*order                         // answered "done, not recorded": written when there is room
+	homing     bool                             // a person allowed the next search for the zero
+	deaf       map[drivers.DeviceName]time.Time // sensors that do not answer, and when they were last tried
+	unheard    error                            // what made a sensor deaf in the last dwell
 
 	mu       sync.Mutex // guards what follows
 	pending  []*order
@@ -177,6 +180,7 @@ func (e *Engine) run(ctx context.Context) error {
 // openRun writes that the run began, or that it was interrupted, and connects the instruments.
 func (e *Engine) openRun(ctx context.Context, restBad string) error {
 	p := &e.progress
+	e.waitsSince = e.now()
 	switch {
 	case p.State == protocol.Queued || p.State == "":
 		if err := e.event(ctx, protocol.Began, "began: "+e.Plan.Title+withBad(restBad), protocol.Running, nil, map[string]any{
@@ -286,6 +290,9 @@ func (e *Engine) turn(ctx context.Context) error {
 		if err := e.note(ctx, protocol.WentOn, "there is room again: nothing could be written for a while, and the bench was at rest", map[string]any{"cause": protocol.ByStorage}); err != nil {
 			return err
 		}
+	}
+	if len(e.owed) > 0 {
+		return e.payOwed(ctx)
 	}
 	if done, err := e.obey(ctx); done || err != nil {
 		return err

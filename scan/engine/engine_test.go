@@ -440,28 +440,6 @@ func TestNoRoomHoldsAndNothingIsLostOrDoubled(t *testing.T) {
 	})
 }
 
-func TestAStopOnAFullDiskIsDoneAndAnsweredAsNotRecorded(t *testing.T) {
-	synctest.Test(t, func(t *testing.T) {
-		n := newNight(t, nil)
-		done := during(9*time.Second, func() {
-			n.memory.mu.Lock()
-			n.memory.full = true
-			n.memory.mu.Unlock()
-			time.Sleep(time.Minute)
-			r, err := n.eng.Stop(t.Context(), "ann")
-			if err != nil || r.Recorded || r.State != protocol.Stopped {
-				t.Errorf("Stop() = %+v, %v; want done, not recorded", r, err)
-			}
-			n.atRest(t)
-		})
-		_, err := n.eng.Run(t.Context())
-		<-done
-		if err == nil {
-			t.Error("Run() = nil; want an error that says that the stop is not recorded")
-		}
-	})
-}
-
 func TestAPanicEndsInTheRestState(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
 		n := newNight(t, nil)

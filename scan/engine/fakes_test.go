@@ -6,6 +6,7 @@ import (
 	"errors"
 	"fmt"
 	"maps"
+	"slices"
 	"sync"
 	"testing"
 	"testing/synctest"
@@ -45,9 +46,25 @@ func (w *world) act(format string, args ...any) error {
 	return nil
 }
 
+// heard is what was done so far.
+func (w *world) heard() []string {
+	synctest.Wait()
+	w.mu.Lock()
+	defer w.mu.Unlock()
+	return slices.Clone(w.log)
+}
+
+func (w *world) shutter(name string, open bool) {
+	w.mu.Lock()
+	defer w.mu.Unlock()
+	w.open[name] = open
+}
+
 func (w *world) atRest(t *testing.T) {
 	t.Helper()
 	synctest.Wait()
+	w.mu.Lock()
+	defer w.mu.Unlock()
 	for name, open := range w.open {
 		if open {
 			t.Errorf("%s is open; want the rest state", name)
@@ -125,14 +142,14 @@ type fakeShutter struct{ fakeDevice }
 func (s fakeShutter) Open(context.Context) error {
 	err := s.w.act("open %s", s.name)
 	if err == nil {
-		s.w.open[string(s.name)] = true
+		s.w.shutter(string(s.name), true)
 	}
 	return err
 }
 func (s fakeShutter) Close(context.Context) error {
 	err := s.w.act("close %s", s.name)
 	if err == nil {
-		s.w.open[string(s.name)] = false
+		s.w.shutter(string(s.name), false)
 	}
 	return err
 }

@@ -94,6 +94,7 @@ func (e *Engine) afterGuard(ctx context.Context, t task, b *brokenGuard) error {
 		return e.end(ctx, protocol.Failed, "failed: "+b.Error(), detail)
 	}
 	bad := e.rest(ctx)
+	e.waitsSince = e.now()
 	return e.event(ctx, protocol.GuardBroken, "held: "+b.Error()+withBad(bad), protocol.Holding, add(e.progress.Causes, protocol.ByGuard), detail)
 }
 

@@ -20,11 +20,14 @@ const (
 
 // order is an operator's request on its way to Run's goroutine.
 type order struct {
+	ctx   context.Context // the caller's: a resume that nobody waits for any more is dropped
 	kind  orderKind
 	who   string
 	reply protocol.RunReply
 	done  chan struct{} // closed when reply is valid, or when the engine ended without it
 	did   bool
+	// answered is Run's goroutine's own; did belongs to the reply.
+	answered bool
 }
 
 // ErrOver is returned for requests to a run that this engine no longer executes.
@@ -49,7 +52,7 @@ func (e *Engine) Resume(ctx context.Context, who string) (protocol.RunReply, err
 }
 
 func (e *Engine) request(ctx context.Context, kind orderKind, who string) (protocol.RunReply, error) {
-	o := &order{kind: kind, who: who, done: make(chan struct{})}
+	o := &order{ctx: ctx, kind: kind, who: who, done: make(chan struct{})}
 	e.mu.Lock()
 	if e.over {
 		e.mu.Unlock()
@@ -96,12 +99,16 @@ func (e *Engine) operation(ctx context.Context) (context.Context, func()) {
 func (e *Engine) takeOrder() *order {
 	e.mu.Lock()
 	defer e.mu.Unlock()
-	if len(e.pending) == 0 {
-		return nil
+	for len(e.pending) > 0 {
+		o := e.pending[0]
+		e.pending = e.pending[1:]
+		if o.kind == resumeOrder && o.ctx.Err() != nil {
+			close(o.done) // what moves the bench must not come late
+			continue
+		}
+		return o
 	}
-	o := e.pending[0]
-	e.pending = e.pending[1:]
-	return o
+	return nil
 }
 
 // obey carries out one pending order. done says that there was one.
@@ -110,6 +117,13 @@ func (e *Engine) obey(ctx context.Context) (done bool, err error) {
 	if o == nil {
 		return false, nil
 	}
+	e.obeying = o
+	defer func() {
+		e.obeying = nil
+		if !o.answered {
+			close(o.done) // our bug, or the logbook's: the caller must not wait for ever
+		}
+	}()
 	switch o.kind {
 	case stopOrder:
 		err = e.end(ctx, protocol.Stopped, "stopped by "+o.who, map[string]any{"who": o.who})
@@ -119,7 +133,6 @@ func (e *Engine) obey(ctx context.Context) (done bool, err error) {
 		}
 	case resumeOrder:
 		if e.progress.State == protocol.Holding {
-			e.homing = true
 			err = e.release(ctx, "resumed by "+o.who, map[string]any{"who": o.who}, protocol.ByOperator, protocol.ByTrouble, protocol.ByRestart)
 		}
 	}
@@ -127,22 +140,27 @@ func (e *Engine) obey(ctx context.Context) (done bool, err error) {
 		e.answer(o, true)
 		e.step(StepAnswered)
 		if err == nil && o.kind == resumeOrder && e.progress.State == protocol.Running {
-			return true, e.getReady(ctx, true)
+			e.homing = true // for this time only: somebody is there now
+			err = e.getReady(ctx, true)
+			e.homing = false
 		}
 	}
 	return true, err
 }
 
 func (e *Engine) answer(o *order, recorded bool) {
+	if o.answered {
+		return // "done, not recorded" was said already
+	}
 	o.reply = protocol.RunReply{Run: e.RunID, State: e.progress.State, Causes: append([]protocol.Cause{}, e.progress.Causes...), Recorded: recorded}
-	o.did = true
+	o.did, o.answered = true, true
 	close(o.done)
 }
 
 // holdFor adds a cause, after the rest state, and writes it.
 func (e *Engine) holdFor(ctx context.Context, cause protocol.Cause, text string, detail map[string]any) error {
 	bad := e.rest(ctx)
-	e.progress.heldAt = e.now()
+	e.waitsSince = e.now()
 	return e.event(ctx, protocol.Held, text+withBad(bad), protocol.Holding, add(e.progress.Causes, cause), detail)
 }
 
@@ -153,6 +171,7 @@ func (e *Engine) release(ctx context.Context, text string, detail map[string]any
 		return nil
 	}
 	state := protocol.Running
+	e.waitsSince = e.now()
 	if len(left) > 0 {
 		state = protocol.Holding
 		text += fmt.Sprintf("; still held by %s", join(left))

@@ -37,7 +37,6 @@ type Progress struct {
 	spent       time.Duration                   // bench time spent on accepted light readings, moves included
 	spentOn     int
 	startedAt   time.Time
-	heldAt      time.Time
 	restBad     string
 	storageHeld bool // an entry had to wait for room; the event that says so is still to be written
 	thePlan     *scan.Plan
@@ -257,7 +256,6 @@ func (p *Progress) applyEvent(ev *protocol.Event) {
 	case protocol.Began:
 		p.startedAt = ev.At.Time
 	case protocol.Held, protocol.Interrupted, protocol.GuardBroken:
-		p.heldAt = ev.At.Time
 		p.lastLightA = time.Time{}
 		if name, ok := ev.Detail["guard"].(string); ok {
 			p.guard = name

@@ -24,11 +24,11 @@ func Rest(ctx context.Context, b *Bench) (bad string) {
 // what could not be reached; it is empty when all was.
 func (e *Engine) rest(ctx context.Context) (bad string) {
 	defer e.step(StepRested)
-	fresh, cancel := e.fresh(ctx, 20*time.Second)
+	fresh, cancel := e.fresh(ctx, 8*time.Second)
 	defer cancel()
 	left := e.attempt(fresh, e.restJobs(), restMoment, false)
-	left = e.attempt(fresh, left, e.Bench.Pace.Real(5*time.Second)+time.Second, false)
-	left = e.attempt(fresh, left, e.Bench.Pace.Real(5*time.Second)+2*time.Second, true)
+	left = e.attempt(fresh, left, e.Bench.Pace.Real(2*time.Second)+time.Second, false)
+	left = e.attempt(fresh, left, e.Bench.Pace.Real(2*time.Second)+time.Second, true)
 	var words []string
 	for _, j := range left {
 		words = append(words, fmt.Sprintf("%s: %s", j.what, firstLine(j.err)))

@@ -102,6 +102,7 @@ func (e *Engine) getReady(ctx context.Context, all bool) error {
 		if op.Err() != nil {
 			return nil
 		}
+		e.showWaiting(err)
 		if drivers.RemedyOf(err) == drivers.GiveUp || e.now().After(deadline) {
 			return e.holdFor(ctx, protocol.ByTrouble, "held: "+firstLine(err), errorDetail(err))
 		}
@@ -109,6 +110,7 @@ func (e *Engine) getReady(ctx context.Context, all bool) error {
 			return nil
 		}
 	}
+	e.publishSnapshot()
 	clear(e.commanded) // angles are proved anew
 	clear(e.sent)
 	clear(e.deaf)
@@ -237,6 +239,9 @@ func (e *Engine) append(ctx context.Context, entry protocol.Entry) error {
 	since := e.now()
 	e.rest(ctx)
 	e.showHolding(protocol.ByStorage, "held: nothing can be written: "+err.Error())
+	if e.obeying != nil {
+		e.answerUnrecorded(e.obeying) // what it asked for is done as far as the bench goes, and its entry waits here
+	}
 	for pause := time.Second; ; pause = min(2*pause, 30*time.Second) {
 		if ctx.Err() != nil {
 			return fmt.Errorf("not recorded: %w", err)
@@ -253,10 +258,11 @@ func (e *Engine) append(ctx context.Context, entry protocol.Entry) error {
 			return err
 		}
 		if o := e.takeOrder(); o != nil {
-			// Done first, answered "done, not recorded": the bench is at rest already.
+			// Done first, answered "done, not recorded": the bench is at rest already. It is written, and
+			// for a hold or a stop comes true for the run, when there is room.
 			e.answerUnrecorded(o)
-			if o.kind == stopOrder {
-				return fmt.Errorf("stopped by %s while nothing could be written: %w", o.who, err)
+			if o.kind != resumeOrder {
+				e.owed = append(e.owed, o)
 			}
 		}
 		if e.now().Sub(since) > e.patience {
@@ -265,13 +271,35 @@ func (e *Engine) append(ctx context.Context, entry protocol.Entry) error {
 	}
 }
 
+// payOwed writes what was asked for while nothing could be written: a stop before any hold.
+func (e *Engine) payOwed(ctx context.Context) error {
+	owed := e.owed
+	e.owed = nil
+	for _, o := range owed {
+		if o.kind == stopOrder {
+			return e.end(ctx, protocol.Stopped, "stopped by "+o.who+", while nothing could be written", map[string]any{"who": o.who})
+		}
+	}
+	return e.holdFor(ctx, protocol.ByOperator, "held by "+owed[0].who+", while nothing could be written", map[string]any{"who": owed[0].who})
+}
+
 func (e *Engine) answerUnrecorded(o *order) {
+	if o.answered {
+		return
+	}
 	o.reply = protocol.RunReply{Run: e.RunID, State: protocol.Holding, Causes: []protocol.Cause{protocol.ByStorage}}
 	if o.kind == stopOrder {
 		o.reply.State, o.reply.Causes = protocol.Stopped, []protocol.Cause{}
 	}
-	o.did = true
+	o.did, o.answered = true, true
 	close(o.done)
+}
+
+// showWaiting lets a status say what a running run waits for.
+func (e *Engine) showWaiting(err error) {
+	e.mu.Lock()
+	defer e.mu.Unlock()
+	e.snapshot.Reason, e.snapshot.TimeLeft = "waiting: "+firstLine(err), nil
 }
 
 func (e *Engine) showHolding(cause protocol.Cause, reason string) {
@@ -286,7 +314,7 @@ const lookAgain = 30 * time.Second
 // waitOut waits while the run holds: for an operator, or for what mends itself.
 func (e *Engine) waitOut(ctx context.Context) error {
 	p := &e.progress
-	if patience := e.patienceNow(); !p.holds(protocol.ByOperator) && e.now().Sub(p.heldAt) > patience {
+	if patience := e.patienceNow(); !p.holds(protocol.ByOperator) && e.now().Sub(e.waitsSince) > patience {
 		return e.end(ctx, protocol.Failed, fmt.Sprintf("failed: it did not mend within %s; it was %s", patience, p.Reason), nil)
 	}
 	pause := time.Minute
@@ -304,7 +332,7 @@ func (e *Engine) waitOut(ctx context.Context) error {
 		return nil
 	case p.holds(protocol.ByGuard):
 		return e.lookAtGuards(ctx)
-	case p.holds(protocol.ByLight):
+	case len(p.Causes) == 1 && p.holds(protocol.ByLight): // who holds as well may have the enclosure open
 		return e.lookAtLight(ctx)
 	}
 	return nil
@@ -322,7 +350,9 @@ func (e *Engine) lookAtLight(ctx context.Context) error {
 	}
 	interrupted := op.Err() != nil
 	end()
-	e.protectNow(ctx)
+	if bad := e.rest(ctx); bad != "" && err == nil {
+		err = fmt.Errorf("the rest state was not reached after the look: %s", bad)
+	}
 	r.EndedAt = protocol.Time{Time: e.now()}
 	r.Accepted = err == nil
 	if err != nil {
@@ -347,6 +377,9 @@ func (e *Engine) lookAtLight(ctx context.Context) error {
 			return e.getReady(ctx, true)
 		}
 	case !bright && drivers.RemedyOf(err) > drivers.Retry:
+		if err := e.trouble(ctx, err); err != nil {
+			return err
+		}
 		return e.connectQuietly(ctx)
 	}
 	return nil
