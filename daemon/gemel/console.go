@@ -88,8 +88,16 @@ func sentence(s protocol.Status) string {
 		fmt.Fprintf(&b, ", about %s left", s.TimeLeft.Duration().Round(time.Second))
 	}
 	b.WriteString(".")
-	if (s.State == protocol.Holding || s.State.Final()) && s.Reason != "" {
-		b.WriteString(" " + s.Reason)
+	if (s.State == protocol.Holding || s.State.Final() || strings.HasPrefix(s.Reason, "waiting")) && s.Reason != "" {
+		b.WriteString(" " + strings.TrimSuffix(s.Reason, ".") + ".")
+	}
+	if s.State == protocol.Holding {
+		for _, c := range s.Causes {
+			if c == protocol.ByOperator || c == protocol.ByTrouble || c == protocol.ByRestart {
+				b.WriteString(" It waits for a person: gemel resume, or gemel stop.")
+				break
+			}
+		}
 	}
 	return b.String()
 }

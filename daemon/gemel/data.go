@@ -129,7 +129,12 @@ func verify(ctx context.Context, data string) (string, []protocol.Finding, error
 	if err != nil {
 		return "", nil, err
 	}
-	return fmt.Sprintf("%s: %s; sound.", file, count(len(runs), "run")), found, nil
+	var words strings.Builder
+	fmt.Fprintf(&words, "%s: %s; sound.", file, count(len(runs), "run"))
+	for _, r := range runs {
+		fmt.Fprintf(&words, "\n  %s  %s  %q", r.Run, r.State, r.Title)
+	}
+	return words.String(), found, nil
 }
 
 func logbookFile(data string) string { return filepath.Join(data, "logbook.db") }

@@ -40,7 +40,7 @@ func (c *runCommand) Run(ctx context.Context, con *console) error {
 	if err := c.checkFirst(string(text)); err != nil {
 		return err // before a folder is made or a line is opened
 	}
-	s, err := open(ctx, c.benchFlags, "", log)
+	s, err := open(ctx, c.benchFlags, "", true, log)
 	if err != nil {
 		return err
 	}

@@ -24,7 +24,7 @@ Ctrl-C and SIGTERM bring the bench to rest and leave the run unfinished; the nex
 
 func (c *serveCommand) Run(ctx context.Context, con *console) error {
 	log := newLog(con, zerolog.InfoLevel)
-	s, err := open(ctx, c.benchFlags, c.Recipes, log)
+	s, err := open(ctx, c.benchFlags, c.Recipes, false, log)
 	if err != nil {
 		return err
 	}

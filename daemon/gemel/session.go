@@ -71,7 +71,9 @@ func planner(f *bench.File, name string) func(string, time.Time) (scan.Plan, err
 
 // open builds and starts everything but the keeper's own work. Whatever was started is closed
 // again when it fails.
-func open(ctx context.Context, flags benchFlags, recipeFolder string, log zerolog.Logger) (_ *session, err error) {
+// attended says that the person who gave the command is there: what an earlier call left unfinished
+// goes on without another word.
+func open(ctx context.Context, flags benchFlags, recipeFolder string, attended bool, log zerolog.Logger) (_ *session, err error) {
 	s := &session{log: log}
 	defer func() {
 		if err != nil {
@@ -118,7 +120,7 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, log zerolo
 	s.keeper = keeper.New(keeper.Config{
 		Book: s.book, Bench: &built.Bench, BenchText: s.file.Text, Version: version, Plan: planner(s.file, "recipe"),
 		Recipe: recipesIn(recipeFolder), Armed: armedIn(flags.Data, s.file.Simulated()), MayHome: flags.Home,
-		ResumeAfterRestart: s.file.AfterRestart == bench.AfterRestartResume || s.file.AfterRestart == "" && s.file.Simulated(),
+		ResumeAfterRestart: attended || s.file.AfterRestart == bench.AfterRestartResume || s.file.AfterRestart == "" && s.file.Simulated(),
 		Conclude: func(ctx context.Context, run protocol.RunID) (json.RawMessage, error) {
 			r, err := report.Of(ctx, s.book, run)
 			if err != nil {

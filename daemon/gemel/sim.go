@@ -58,6 +58,9 @@ func (c *simCommand) Run(ctx context.Context, con *console) (err error) {
 	if err != nil {
 		return err
 	}
+	if strange := v.World.Strangers(); len(strange) > 0 {
+		return errUse{fmt.Errorf("--troubles: %s would never happen: this bench has no such device or axis; want the names of its controllers, counter, shutters, axes, and of the lines of its meters", strange)}
+	}
 	g := crew.New(ctx, nil)
 	for _, a := range v.Actors() {
 		g.Go(a.Name, a.Run)

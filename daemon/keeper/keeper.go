@@ -12,9 +12,10 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
-	"slices"
+	"strings"
 	"sync"
 	"time"
+	"unicode"
 
 	"gemel/daemon/logbook"
 	"gemel/protocol"
@@ -68,7 +69,6 @@ type Keeper struct {
 	current *engine.Engine
 	row     logbook.RunRow // of current, or of the run before
 	last    engine.Snapshot
-	queue   []protocol.RunID
 }
 
 // New makes a keeper. It starts nothing.
@@ -102,12 +102,6 @@ func (k *Keeper) Run(ctx context.Context) error {
 			}
 			continue
 		}
-		k.mu.Lock()
-		k.queue = k.queue[:0]
-		for _, row := range rows[1:] {
-			k.queue = append(k.queue, row.Run)
-		}
-		k.mu.Unlock()
 		if _, err := k.execute(ctx, rows[0]); err != nil && ctx.Err() == nil {
 			return err
 		}
@@ -150,8 +144,8 @@ func (k *Keeper) engine(ctx context.Context, row logbook.RunRow) (*engine.Engine
 	if err != nil {
 		return nil, k.refuse(ctx, row, past, "failed: the recipe does not fit the bench any more: "+err.Error())
 	}
-	if row.State != protocol.Queued && row.BenchText != k.BenchText {
-		return nil, k.refuse(ctx, row, past, "failed: the bench file was changed while the run was unfinished, so what is left would not belong to what was taken; start it anew")
+	if row.BenchText != k.BenchText {
+		return nil, k.refuse(ctx, row, past, "failed: the bench file was changed after the run was asked for, so the logbook's copy would not be the one in use; start it anew")
 	}
 	plan.Repeat.Seed = shuffleSeed(row.Run)
 	eng := engine.New(engine.Config{
@@ -159,7 +153,6 @@ func (k *Keeper) engine(ctx context.Context, row logbook.RunRow) (*engine.Engine
 		ResumeAfterRestart: k.ResumeAfterRestart, MayHome: k.MayHome, Step: k.Step, Conclude: k.concluder(row.Run, plan),
 	})
 	k.current, k.row = eng, row
-	k.queue = slices.DeleteFunc(k.queue, func(r protocol.RunID) bool { return r == row.Run })
 	return eng, nil
 }
 
@@ -280,16 +273,26 @@ func (k *Keeper) Enqueue(ctx context.Context, q protocol.StartRequest) (protocol
 		return protocol.StartReply{}, err
 	}
 	if existing != "" {
-		return protocol.StartReply{Run: existing}, nil
+		return k.known(ctx, existing, text)
 	}
-	k.mu.Lock()
-	k.queue = append(k.queue, run)
-	k.mu.Unlock()
 	select {
 	case k.wake <- struct{}{}:
 	default:
 	}
 	return protocol.StartReply{Run: run}, nil
+}
+
+// known answers a start whose key was used before. The same request again is the same run; another
+// recipe under an old key would be measured never, and reported as done.
+func (k *Keeper) known(ctx context.Context, existing protocol.RunID, text string) (protocol.StartReply, error) {
+	row, err := k.Book.Run(ctx, existing)
+	if err != nil {
+		return protocol.StartReply{}, err
+	}
+	if row.RecipeText != text {
+		return protocol.StartReply{}, protocol.Refuse(409, fmt.Sprintf("this key belongs to run %s, which has another recipe; want a key of its own for each start", existing))
+	}
+	return protocol.StartReply{Run: existing}, nil
 }
 
 // name makes a run's name: it sorts by time, and two benches or two requests in one second do not
@@ -305,9 +308,19 @@ func shuffleSeed(run protocol.RunID) uint64 {
 	return binary.BigEndian.Uint64(sum[:])
 }
 
+// who is a name as it may stand in a line of text: one line, no control characters, not endless.
 func who(name string) string {
-	if name == "" {
+	name = strings.Map(func(r rune) rune {
+		if unicode.IsControl(r) {
+			return -1
+		}
+		return r
+	}, name)
+	if name = strings.TrimSpace(name); name == "" {
 		return "somebody who gave no name"
+	}
+	if runes := []rune(name); len(runes) > 80 {
+		name = string(runes[:80])
 	}
 	return name
 }
@@ -389,6 +402,13 @@ func (k *Keeper) stopQueued(ctx context.Context, q protocol.RunRequest) (protoco
 	if k.current != nil && k.row.Run == q.Run {
 		return protocol.RunReply{}, protocol.Refuse(503, "the run begins at this moment; ask again")
 	}
+	row, err := k.Book.Run(ctx, q.Run)
+	if err != nil {
+		return protocol.RunReply{}, err
+	}
+	if row.State.Final() {
+		return protocol.RunReply{}, protocol.Refuse(409, fmt.Sprintf("run %s is %s, for ever", q.Run, row.State))
+	}
 	last, err := k.Book.Last(ctx, q.Run)
 	if err != nil {
 		return protocol.RunReply{}, err
@@ -396,15 +416,14 @@ func (k *Keeper) stopQueued(ctx context.Context, q protocol.RunRequest) (protoco
 	if err := k.append(ctx, q.Run, last+1, protocol.Ended, "stopped in the queue by "+who(q.Who), protocol.Stopped, map[string]any{"who": q.Who}); err != nil {
 		return protocol.RunReply{}, err
 	}
-	k.queue = slices.DeleteFunc(k.queue, func(r protocol.RunID) bool { return r == q.Run })
 	return protocol.RunReply{Run: q.Run, State: protocol.Stopped, Causes: []protocol.Cause{}, Recorded: true}, nil
 }
 
 // Status tells how the bench is. It never waits for the bench.
-func (k *Keeper) Status(context.Context) protocol.Status {
+func (k *Keeper) Status(ctx context.Context) protocol.Status {
 	k.mu.Lock()
 	defer k.mu.Unlock()
-	s := protocol.Status{Bench: k.Bench.Name, Version: k.Version, Causes: []protocol.Cause{}, Queue: append([]protocol.RunID{}, k.queue...), Armed: k.Armed(time.Now())}
+	s := protocol.Status{Bench: k.Bench.Name, Version: k.Version, Causes: []protocol.Cause{}, Queue: k.waiting(ctx), Armed: k.Armed(time.Now())}
 	if k.Bench.Simulated {
 		pace := max(1, int(k.Bench.Pace))
 		s.Simulated = &pace
@@ -427,6 +446,21 @@ func (k *Keeper) Status(context.Context) protocol.Status {
 		s.TimeLeft = &left
 	}
 	return s
+}
+
+// waiting lists the runs in the queue, as the logbook has them.
+func (k *Keeper) waiting(ctx context.Context) []protocol.RunID {
+	queue := []protocol.RunID{}
+	rows, err := k.Book.Unfinished(ctx)
+	if err != nil {
+		return queue
+	}
+	for _, row := range rows {
+		if k.current == nil || row.Run != k.row.Run {
+			queue = append(queue, row.Run)
+		}
+	}
+	return queue
 }
 
 // appender gives the engine its one method, and tells it which refusals are for ever.

@@ -24,7 +24,11 @@ import (
 //   - a reading is durable before the next gate opens and before anything moves on;
 //   - an entry is durable before it is published; the stream is the journal, in order, once;
 //   - each visit is accepted once at most, and a finished run has them all or names what it gave up;
-//   - in every hold and after every end the pump is closed and the detectors are protected;
+//   - an accepted dark had the pump truly blocked, all other accepted readings had it truly open, and
+//     the detectors saw;
+//   - a reading's times enclose its gates;
+//   - in every hold and after every end the pump is closed, the detectors are protected, nothing moves,
+//     nothing opens and nothing counts, but for looks at the light where light alone holds;
 //   - no gate opens and nothing moves after a stop was answered;
 //   - light above a trip rate closes the detector's shutter at once;
 //   - a controller that restarted is written down before any angle of its is believed again;
@@ -69,6 +73,7 @@ type judge struct {
 	orphans  bool           // gates before a kill wait for an interruption to explain them
 	current  protocol.RunID // the run that moves the bench
 	stopped  protocol.RunID
+	hindered time.Time            // when a wire or a device last misbehaved
 	zeroLost map[string]time.Time // controllers that restarted, until somebody wrote it down
 	doubted  []span
 	angles   []angleCheck
@@ -95,14 +100,15 @@ type gate struct {
 }
 
 type runState struct {
-	next     int64
-	state    protocol.State
-	causes   []protocol.Cause
-	began    bool
-	accepted map[[2]int]int64
-	givenUp  int
-	darks    int
-	owed     bool // killed while under way: an interruption has to come
+	next         int64
+	state        protocol.State
+	causes       []protocol.Cause
+	began        bool
+	accepted     map[[2]int]int64
+	givenUp      int
+	darksGivenUp int
+	darks        int
+	owed         bool // killed while under way: an interruption has to come
 }
 
 func (j *judge) say(format string, args ...any) {
@@ -127,9 +133,12 @@ func (j *judge) world(r *instruments.Record) {
 	case instruments.MoveStarted, instruments.HomeStarted:
 		j.moved = r.At
 		j.mustNotAct("%s: a motion began", r.Device)
+		if j.resting() {
+			j.say("%s: a motion began while run %s is %s", r.Device, j.current, j.runs[j.current].state)
+		}
 	case instruments.BladeStarted:
-		if r.Device == j.facts.Pump && r.Text == "open" && j.resting() {
-			j.say("the pump shutter was told to open while run %s rests", j.current)
+		if r.Text == "open" && j.resting() && (r.Device == j.facts.Pump || !j.onlyLight()) {
+			j.say("%s was told to open while run %s is %s", r.Device, j.current, j.runs[j.current].state)
 		}
 	case instruments.BladeOpened, instruments.BladeClosed:
 		open := r.Kind == instruments.BladeOpened
@@ -147,7 +156,10 @@ func (j *judge) world(r *instruments.Record) {
 				}
 			}
 		}
+	case instruments.Troubled, instruments.Unplugged:
+		j.hindered = r.At
 	case instruments.Restarted:
+		j.hindered = r.At
 		if slices.Contains(j.facts.Controls, r.Device) {
 			if j.zeroLost == nil {
 				j.zeroLost = map[string]time.Time{}
@@ -162,6 +174,12 @@ func (j *judge) world(r *instruments.Record) {
 func (j *judge) resting() bool {
 	r := j.runs[j.current]
 	return r != nil && (r.state == protocol.Holding || r.state.Final())
+}
+
+// onlyLight says whether the current run holds for light and nothing else, and may look at it.
+func (j *judge) onlyLight() bool {
+	r := j.runs[j.current]
+	return r != nil && r.state == protocol.Holding && slices.Equal(r.causes, []protocol.Cause{protocol.ByLight})
 }
 
 // mustNotAct complains when something moves or counts that has no right to.
@@ -180,8 +198,8 @@ func (j *judge) gateOpened(r *instruments.Record) {
 	j.gates = append(j.gates, g)
 	j.open = g
 	j.mustNotAct("%s: gate %d opened", r.Device, g.tag)
-	if run := j.runs[j.current]; j.resting() && !slices.Contains(run.causes, protocol.ByLight) {
-		j.say("gate %d opened while run %s is %s", g.tag, j.current, run.state)
+	if j.resting() && !j.onlyLight() {
+		j.say("gate %d opened while run %s is %s", g.tag, j.current, j.runs[j.current].state)
 	}
 }
 
@@ -274,6 +292,7 @@ func (j *judge) reading(r *runState, b *protocol.Reading) {
 			last = g
 			if b.Accepted {
 				j.angle(b, g)
+				j.light(where, b, g)
 			}
 		}
 	}
@@ -318,6 +337,33 @@ func (j *judge) reading(r *runState, b *protocol.Reading) {
 		r.darks++
 	}
 	j.totals(where, b)
+}
+
+// light checks what light there truly was during a gate of an accepted reading, and its times.
+func (j *judge) light(where string, b *protocol.Reading, g *gate) {
+	const slack = 50 * time.Millisecond // exchanges
+	if isGlance := b.StartedAt.After(g.opened.Add(slack)); b.EndedAt.Add(slack).Before(g.closed) || isGlance && (b.Glance == nil || g.closed.After(b.StartedAt.Add(slack))) {
+		j.say("%s is said to last from %s to %s; its gate %d lasted from %s to %s", where, b.StartedAt, b.EndedAt, g.tag, g.opened.UTC(), g.closed.UTC())
+	}
+	seen := g.truth.Seen
+	if seen == nil || b.Kind == protocol.Check {
+		return
+	}
+	switch open := seen.PumpOpenShare; {
+	case b.Kind == protocol.Dark && open > 0:
+		j.say("%s is a dark, and the pump was open during %.3g of its gate %d", where, open, g.tag)
+	case b.Kind != protocol.Dark && open < 1-1e-6:
+		j.say("%s is not dark, and the pump was open during %.3g of its gate %d only", where, open, g.tag)
+	}
+	for _, d := range j.facts.Detectors {
+		share := seen.Signal.OpenShare
+		if d.Name == "idler" {
+			share = seen.Idler.OpenShare
+		}
+		if d.Protector != "" && share < 1-1e-6 {
+			j.say("%s: the %s detector was covered during part of gate %d", where, d.Name, g.tag)
+		}
+	}
 }
 
 // explain finds the gate of the world that a slice is, and compares every count.
@@ -397,7 +443,15 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 		j.current, r.owed, j.orphans = ev.Run, false, false
 		j.gates = nil // what was open when the process died is named by this
 	case protocol.SetAside:
-		r.givenUp++
+		switch task, _ := ev.Detail["task"].(string); task {
+		case "light":
+			r.givenUp++
+		case "rest":
+			left, _ := ev.Detail["left_out"].(float64)
+			r.givenUp += int(left)
+		default:
+			r.darksGivenUp++
+		}
 	case protocol.Doubted:
 		from, _ := ev.Detail["from_sequence"].(float64)
 		to, _ := ev.Detail["to_sequence"].(float64)
@@ -414,7 +468,8 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 		j.say("%s after the run was %s for ever", where, r.state)
 	}
 	r.state, r.causes = ev.State, ev.Causes
-	excused := strings.Contains(ev.Text, "NOT REACHED")
+	// The engine's own word is no excuse where the world did nothing to hinder it.
+	excused := strings.Contains(ev.Text, "NOT REACHED") && !j.hindered.IsZero() && j.now.Sub(j.hindered) < 2*time.Minute
 	if (r.state == protocol.Holding || r.state.Final()) && r.began && !excused {
 		j.atRest(where)
 	}
@@ -425,7 +480,7 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 		if got := len(r.accepted) + r.givenUp; got < j.facts.Visits {
 			j.say("%s: finished with %d visits accepted and %d given up; want %d", where, len(r.accepted), r.givenUp, j.facts.Visits)
 		}
-		if r.darks+r.givenUp < j.facts.MinDarks {
+		if r.darks+r.darksGivenUp < j.facts.MinDarks {
 			j.say("%s: finished with %d darks; want %d at least", where, r.darks, j.facts.MinDarks)
 		}
 	}
@@ -456,7 +511,9 @@ func (j *judge) stream(e *protocol.Entry) {
 		j.say("entry %s was published before it was durable", e.ID())
 	case !bytes.Equal(body, e.Body):
 		j.say("entry %s was published with other bytes than it has in the journal", e.ID())
-	case j.published < len(j.durable) && j.durable[j.published] != e.ID():
+	case j.published >= len(j.durable):
+		j.say("entry %s was published where nothing was due", e.ID())
+	case j.durable[j.published] != e.ID():
 		j.say("entry %s was published where %s was due", e.ID(), j.durable[j.published])
 	}
 	j.published++
@@ -471,7 +528,9 @@ func (j *judge) process(p *Process) {
 				r.owed = true
 			}
 		}
-		j.orphans = len(j.gates) > 0 || j.open != nil
+		for _, r := range j.runs {
+			j.orphans = j.orphans || r.owed && (len(j.gates) > 0 || j.open != nil)
+		}
 	case Started:
 		j.killed = false
 		for name := range j.bright {

@@ -50,6 +50,10 @@ func TestTheJudgeFindsEverySabotage(t *testing.T) {
 		{"ignores too much light", "| lamp(at 4m, for 90s, rate 6000000 Hz)", ignoreLight, "still open"},
 		{"keeps silent about an interruption", "kill gated:30 |", forgetInterruption, "no interruption is written|before the interruption was"},
 		{"counts on after a stop was answered", "stop 3m |", countAfterStop, "is stopped"},
+		{"takes darks with the pump open", "|", darkInTheLight, "is a dark, and the pump was open"},
+		{"takes light with the pump closed", "|", lightInTheDark, "is not dark, and the pump was open during 0 of"},
+		{"moves an arm in a hold", "hold 3m |", moveInAHold, "a motion began while"},
+		{"says that it could not rest", "hold 3m |", pretendTrouble, "the pump is not blocked"},
 		{"sums a gate twice", "|", sumTwice, "sums to"},
 	} {
 		t.Run(row.name, func(t *testing.T) {
@@ -273,6 +277,80 @@ func forgetProtectors() Sabotage {
 		for i := range b.Detectors {
 			b.Detectors[i].Protect = &liar{b.Detectors[i].Protect, func() bool { return time.Since(began) > 175*time.Second && time.Since(began) < 4*time.Minute }}
 		}
+	}}
+}
+
+// stuck is a shutter that answers what it was told, and leaves one of the two undone.
+type stuck struct {
+	drivers.Shutter
+	opens, closes bool
+	told          bool
+}
+
+func (s *stuck) Open(ctx context.Context) error {
+	s.told = true
+	if !s.opens {
+		return nil
+	}
+	return s.Shutter.Open(ctx)
+}
+
+func (s *stuck) Close(ctx context.Context) error {
+	s.told = false
+	if !s.closes {
+		return nil
+	}
+	return s.Shutter.Close(ctx)
+}
+
+func (s *stuck) State(context.Context) (drivers.Blade, error) {
+	return drivers.Blade{Open: s.told, Sensed: true}, nil
+}
+
+func darkInTheLight() Sabotage {
+	return Sabotage{Bench: func(b *engine.Bench) { b.Pump = &stuck{Shutter: b.Pump, opens: true} }}
+}
+
+func lightInTheDark() Sabotage {
+	return Sabotage{Bench: func(b *engine.Bench) {
+		b.Pump = &stuck{Shutter: b.Pump, closes: true}
+		for i := range b.Detectors {
+			b.Detectors[i].FloorHz = 0
+		}
+	}}
+}
+
+func moveInAHold() Sabotage {
+	var stage drivers.Stage
+	return Sabotage{
+		Bench: func(b *engine.Bench) { stage = b.Stages[0] },
+		Book: onAppend(func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
+			err := on(ctx, e)
+			if bytes.Contains(e.Body, []byte(`"kind":"held"`)) {
+				_ = stage.Move(ctx, map[drivers.AxisName]unit.Angle{"signal_arm": 2 * unit.Degree})
+			}
+			return err
+		}),
+	}
+}
+
+// refuser answers no close, and so makes the engine say that it could not rest.
+type refuser struct {
+	drivers.Shutter
+	refuses func() bool
+}
+
+func (r *refuser) Close(ctx context.Context) error {
+	if r.refuses() {
+		return &drivers.Error{Op: "close", Device: r.Name(), Remedy: drivers.Retry, Err: context.DeadlineExceeded}
+	}
+	return r.Shutter.Close(ctx)
+}
+
+func pretendTrouble() Sabotage {
+	return Sabotage{Bench: func(b *engine.Bench) {
+		began := time.Now()
+		b.Pump = &refuser{b.Pump, func() bool { return time.Since(began) > 170*time.Second && time.Since(began) < 5*time.Minute }}
 	}}
 }
 
