@@ -12,6 +12,8 @@ import (
 	"testing"
 	"testing/synctest"
 
+	"gonum.org/v1/gonum/interp"
+
 	"gemel/daemon/logbook"
 	"gemel/daemon/nighttest"
 	"gemel/protocol"
@@ -26,7 +28,12 @@ type prediction struct {
 	Warnings          []string         `json:"warnings"`
 	Because           string           `json:"because"`
 	Error             string           `json:"error"`
-	Collected         struct {
+	Asked             struct {
+		TiltDeg    float64 `json:"tilt_deg"`
+		AzimuthDeg float64 `json:"azimuth_deg"`
+		Cel        float64 `json:"temperature_cel"`
+	} `json:"asked"`
+	Collected struct {
 		BareSignalDeg float64 `json:"bare_signal_deg"`
 		BareIdlerDeg  float64 `json:"bare_idler_deg"`
 		Peaks         []struct {
@@ -57,6 +64,21 @@ func TestPredictCarriesTheCheckedAngle(t *testing.T) {
 	table := must(t, append([]string{"predict"}, kato...)...)
 	if first, _, _ := strings.Cut(table, "\n"); !strings.Contains(first, "signal photons of 810 nm leave at 2.8642 deg from the pump") || !strings.Contains(table, "mrad") {
 		t.Errorf("%s\nwant a sentence first, then a table with units", table)
+	}
+}
+
+func TestAnglesAndTemperaturesMayBeNegative(t *testing.T) {
+	args := append([]string{"predict", "--json"}, kato[:8]...)
+	for _, form := range [][]string{{"--tilt", "-0.05 deg", "--temperature", "-40 Cel", "--azimuth", "-90 deg"}, {"--tilt=-0.05 deg", "--temperature=-40 Cel", "--azimuth=-90 deg"}} {
+		p := predicted(t, must(t, append(args, form...)...))
+		if p.Asked.TiltDeg != -0.05 || p.Asked.Cel != -40 || p.Asked.AzimuthDeg != -90 || len(p.Roots) != 1 {
+			t.Errorf("%v: %+v", form, p.Asked)
+		}
+	}
+	for _, form := range [][]string{{"--tilt"}, {"--tilt", "--json"}} {
+		if _, errOut, code := gemel(t, append(args, form...)...); code != exitWrongUse || !strings.Contains(errOut, `tilt: nothing; want a value with its unit, such as "29.2 deg"`) {
+			t.Errorf("%v: exit code %d\n%s\nwant the missing value named", form, code, errOut)
+		}
 	}
 }
 
@@ -147,16 +169,16 @@ const ownKato = `crystal:
 
 func TestACrystalOfTheBenchFilesOwnIsPredicted(t *testing.T) {
 	const published = "crystal: bbo-kato-1986      # one named set of dispersion formulas; two sets never mix"
-	own := variant(t, demoBenchFile, "own.yaml", change{published, strings.ReplaceAll(ownKato, "RANGE", "220 nm")})
+	own := variant(t, demoBenchFile, filepath.Join(t.TempDir(), "own.yaml"), change{published, strings.ReplaceAll(ownKato, "RANGE", "220 nm")})
 	p := predicted(t, must(t, "predict", "--json", "--bench", own))
 	if math.Abs(*p.SignalExternalDeg-emissionDeg(t)) > 1e-5 || strings.Contains(strings.Join(p.Warnings, " "), "extrapolated") {
 		t.Errorf("signal at %g deg, warnings %q; want the published set's angle", *p.SignalExternalDeg, p.Warnings)
 	}
-	short := variant(t, demoBenchFile, "short.yaml", change{published, strings.ReplaceAll(ownKato, "RANGE", "500 nm")})
+	short := variant(t, demoBenchFile, filepath.Join(t.TempDir(), "short.yaml"), change{published, strings.ReplaceAll(ownKato, "RANGE", "500 nm")})
 	if _, errOut, code := gemel(t, "predict", "--bench", short); code != exitFailed || !strings.Contains(errOut, "our-own n_o: 405 nm; want 500") {
 		t.Errorf("exit code %d\n%s\nwant a pump outside the set refused", code, errOut)
 	}
-	long := variant(t, demoBenchFile, "long.yaml", change{published, strings.ReplaceAll(ownKato, "RANGE", "500 nm") + "\n  extrapolate: true"})
+	long := variant(t, demoBenchFile, filepath.Join(t.TempDir(), "long.yaml"), change{published, strings.ReplaceAll(ownKato, "RANGE", "500 nm") + "\n  extrapolate: true"})
 	p = predicted(t, must(t, "predict", "--json", "--bench", long))
 	if math.Abs(*p.SignalExternalDeg-emissionDeg(t)) > 1e-5 || !strings.Contains(strings.Join(p.Warnings, " "), "extrapolated: crystal: our-own n_o: 405 nm") {
 		t.Errorf("signal at %g deg, warnings %q; want the same, flagged", *p.SignalExternalDeg, p.Warnings)
@@ -237,7 +259,7 @@ func TestTheDemosFittedPeaksAreThosePredicted(t *testing.T) {
 			if k.Of != "pairs" {
 				channel, profile = arm, func(deg float64) float64 { return at(deg, 0).IdlerHz - dim }
 			}
-			fit, err := estimate.FitPeak(spots(t, data, arm+"_arm", channel), estimate.PredictedPeak, profile)
+			fit, err := estimate.FitPeak(spots(t, data, arm+"_arm", channel), estimate.PredictedPeak, smooth(t, profile))
 			if err != nil {
 				t.Fatalf("%s over the %s: %v", k.Of, k.Over, err)
 			}
@@ -267,6 +289,20 @@ func TestTheDemosFittedPeaksAreThosePredicted(t *testing.T) {
 	if apart < 2 {
 		t.Errorf("%d of 4 peaks lie apart from the bare emission; the demo's apertures should move at least two", apart)
 	}
+}
+
+// smooth asks for a profile every 0.03 deg, which a fit asks for some thousand times.
+func smooth(t *testing.T, profile func(float64) float64) func(float64) float64 {
+	t.Helper()
+	var x, y []float64
+	for deg := 1.4; deg < 4.4; deg += 0.03 {
+		x, y = append(x, deg), append(y, profile(deg))
+	}
+	var c interp.NaturalCubic
+	if err := c.Fit(x, y); err != nil {
+		t.Fatal(err)
+	}
+	return func(deg float64) float64 { return max(0, c.Predict(min(max(deg, x[0]), x[len(x)-1]))) }
 }
 
 // tableDeg is what the instruments' table of rates, which holds to 1 % of the peak, may do to an

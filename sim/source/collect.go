@@ -132,18 +132,20 @@ func (m *Model) peaks(tiltDeg, s, i float64) Peaks {
 	if s > 0 {
 		ratio = i / s
 	}
-	over := func(what int, at float64, angles func(float64) (float64, float64)) Peak {
-		return shape(at, 2*m.pitchDeg[what], func(x float64) float64 {
+	over := func(what int, at float64, moved *Arm, angles func(float64) (float64, float64)) Peak {
+		// No profile is much narrower than the aperture that is swept across it.
+		step := max(2*m.pitchDeg[what], 0.35*moved.RadiusMm/moved.DistanceMm/deg)
+		return shape(at, step, func(x float64) float64 {
 			a, b := angles(x)
 			return m.integral(f, what, a, b, 0)
 		})
 	}
 	return Peaks{
-		SignalSingles:   over(ofSignal, s, func(x float64) (float64, float64) { return x, i }),
-		IdlerSingles:    over(ofIdler, i, func(x float64) (float64, float64) { return s, x }),
-		PairsOverSignal: over(ofPairs, s, func(x float64) (float64, float64) { return x, i }),
-		PairsOverIdler:  over(ofPairs, i, func(x float64) (float64, float64) { return s, x }),
-		PairsOverBoth:   over(ofPairs, s, func(x float64) (float64, float64) { return x, x * ratio }),
+		SignalSingles:   over(ofSignal, s, &m.o.Signal, func(x float64) (float64, float64) { return x, i }),
+		IdlerSingles:    over(ofIdler, i, &m.o.Idler, func(x float64) (float64, float64) { return s, x }),
+		PairsOverSignal: over(ofPairs, s, &m.o.Signal, func(x float64) (float64, float64) { return x, i }),
+		PairsOverIdler:  over(ofPairs, i, &m.o.Idler, func(x float64) (float64, float64) { return s, x }),
+		PairsOverBoth:   over(ofPairs, s, &m.o.Signal, func(x float64) (float64, float64) { return x, x * ratio }),
 	}
 }
 
@@ -212,7 +214,7 @@ func shape(at, step float64, rate func(float64) float64) Peak {
 // the middle one.
 func summit(step, left, middle, right float64) float64 {
 	a, b, c := math.Log(left), math.Log(middle), math.Log(right)
-	if d := a - 2*b + c; d < 0 {
+	if d := a - 2*b + c; d < 0 && !math.IsInf(d, -1) {
 		return max(-step, min(step, step/2*(a-c)/d))
 	}
 	return 0

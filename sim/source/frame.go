@@ -1,6 +1,8 @@
 package source
 
 import (
+	"errors"
+	"fmt"
 	"math"
 
 	"gemel/sim/phasematch"
@@ -121,17 +123,11 @@ func (m *Model) rays(b *band, s *stand, pairs bool) []ray {
 	if len(b.colours) == 0 {
 		return nil
 	}
-	p := &b.colours[len(b.colours)/2].pair
-	_, k, _ := p.Wavenumbers()
-	x, y, _ := s.face(s.centre)
-	gx, gy := p.SignalSlope(k*x, k*y)
-	a, d := s.arm.RadiusMm, s.arm.DistanceMm
-	half := b.slab.ThicknessMm / 2
-	open := a / d
-	phase := half * k * open * (math.Hypot(gx, gy) + open)
+	phase, k, _ := m.turns(b, s)
 	if math.IsNaN(phase) {
 		return nil
 	}
+	open := s.arm.RadiusMm / s.arm.DistanceMm
 	edge := 0.0
 	if pairs {
 		edge = min(k*open*m.o.PumpWaistUm/1000, 12)
@@ -143,6 +139,51 @@ func (m *Model) rays(b *band, s *stand, pairs bool) []ray {
 		return s.rays(m.rules, points((2.6+0.77*phase)*m.effort, 2, 48), points((6.8+1.7*phase)*m.effort, 6, 96), m.mirrored)
 	}
 	return s.rays(m.rules, points((1.6+0.55*phase+0.5*edge)*m.effort, 2, 48), points((5+1.2*phase+1.2*edge)*m.effort, 6, 96), m.mirrored)
+}
+
+// turns says by how many radians the phase of the mismatch turns across a stand's aperture, and
+// across the pump's own directions (1/e² radii); k is the first photon's wavenumber, 1/mm.
+func (m *Model) turns(b *band, s *stand) (aperture, k, pump float64) {
+	p := &b.colours[len(b.colours)/2].pair
+	_, k, _ = p.Wavenumbers()
+	x, y, _ := s.face(s.centre)
+	gx, gy := p.SignalSlope(k*x, k*y)
+	open := s.arm.RadiusMm / s.arm.DistanceMm
+	half := b.slab.ThicknessMm / 2
+	px, py := p.PartnerSlope(k*x, k*y)
+	return half * k * open * (math.Hypot(gx, gy) + open), k, half * math.Hypot(px, py) / (m.o.PumpWaistUm / 1000)
+}
+
+// What the numbers of quadrature points reach for.
+const (
+	mostTurnsAperture = 50
+	mostTurnsPump     = 39
+)
+
+// resolved refuses optics whose mismatch turns faster than the integration can follow.
+func (m *Model) resolved(f *frame) error {
+	var errs []error
+	for i := range f.ways {
+		for _, x := range []struct {
+			name  string
+			arm   *Arm
+			band  *band
+			angle float64
+		}{{"signal", &m.o.Signal, &f.ways[i].signal, m.typicalDeg[0]}, {"idler", &m.o.Idler, &f.ways[i].idler, -m.typicalDeg[1]}} {
+			if len(x.band.colours) == 0 {
+				continue
+			}
+			s := newStand(x.arm, m.o.AzimuthDeg, x.angle, f.tiltDeg)
+			aperture, _, pump := m.turns(x.band, &s)
+			if aperture > mostTurnsAperture {
+				errs = append(errs, fmt.Errorf("source: across the %s aperture the mismatch turns by %.0f rad; want %d or less: a shorter crystal or a smaller aperture", x.name, aperture, mostTurnsAperture))
+			}
+			if pump > mostTurnsPump {
+				errs = append(errs, fmt.Errorf("source: over the pump's own directions the %s's mismatch turns by %.0f rad; want %d or less: a shorter crystal or a wider waist", x.name, pump, mostTurnsPump))
+			}
+		}
+	}
+	return errors.Join(errs...)
 }
 
 // at is a node of the table, computed when it is first asked for.

@@ -5,11 +5,15 @@ import (
 	"encoding/json"
 	"encoding/xml"
 	"errors"
+	"fmt"
 	"io"
 	"math"
+	"math/rand/v2"
 	"strings"
 	"testing"
+	"time"
 
+	"gemel/sim/crystal"
 	"gemel/sim/phasematch"
 )
 
@@ -320,6 +324,58 @@ func TestThePlotIsWellFormedAndShowsBothDaughtersAndArms(t *testing.T) {
 	}
 }
 
+// Whatever is asked within the bounds that are printed is answered, and JSON can carry the answer.
+func TestRandomQuestionsAreAnswered(t *testing.T) {
+	rng := rand.New(rand.NewPCG(31, 2))
+	decades := func(lo, hi float64) float64 { return lo * math.Pow(hi/lo, rng.Float64()) }
+	names, matched, apertures := crystal.Names(), 0, 0
+	for i := range 900 {
+		pump := decades(250, 1500)
+		j := Job{Crystal: names[rng.IntN(len(names))], Process: string(phasematch.Processes()[rng.IntN(6)]), Pump: fmt.Sprintf("%g nm", pump),
+			Signal: fmt.Sprintf("%g nm", pump*decades(1.01, 12)), Cut: fmt.Sprintf("%g deg", 90*rng.Float64()), Tilt: fmt.Sprintf("%g deg", 79*(2*rng.Float64()-1)*rng.Float64()),
+			Azimuth: fmt.Sprintf("%g deg", 720*rng.Float64()-360), Temperature: fmt.Sprintf("%g Cel", decades(1, 1500)), Thickness: fmt.Sprintf("%g mm", decades(0.001, 500)),
+			Waist: fmt.Sprintf("%g um", decades(1, 10000)), Extrapolate: rng.IntN(2) == 0}
+		if rng.IntN(3) == 0 {
+			j.Poling = fmt.Sprintf("%g um", decades(1, 1000))
+		}
+		if rng.IntN(3) == 0 {
+			j.Signal = ""
+		}
+		known := Query{}
+		if i%15 == 0 { // a bench as wild
+			o := bench(t)
+			o.Signal.RadiusMm, o.Idler.RadiusMm = decades(0.01, 20), decades(0.01, 20)
+			o.Signal.OutOfPlaneDeg, o.Idler.OutOfPlaneDeg = 2*rng.NormFloat64(), 2*rng.NormFloat64()
+			o.Signal.Filter.WidthNm, o.Idler.Filter.WidthNm = decades(0.01, 300), decades(0.01, 300)
+			known = Ask(o)
+			j = Job{Cut: fmt.Sprintf("%g deg", 28.5+rng.Float64()), Tilt: fmt.Sprintf("%g deg", rng.NormFloat64()), Thickness: j.Thickness, Waist: j.Waist, Azimuth: j.Azimuth}
+		}
+		q, err := j.Query(known)
+		if err != nil {
+			continue
+		}
+		q.Tuning = i%10 == 0
+		p, err := Predict(q)
+		if err != nil {
+			continue
+		}
+		if _, err := json.Marshal(p); err != nil || len(p.Roots) > 2 || (len(p.Roots) == 0) != (p.Because != "") || p.Table() == "" {
+			t.Errorf("%+v: %d roots, because %q, %v", j, len(p.Roots), p.Because, err)
+		}
+		if err := Plot(io.Discard, q); err != nil && !strings.Contains(err.Error(), "holds no signal") {
+			t.Errorf("%+v: %v", j, err)
+		}
+		matched += len(p.Roots)
+		if p.Collected != nil {
+			apertures++
+		}
+	}
+	t.Logf("%d roots, %d benches", matched, apertures)
+	if matched < 40 || apertures < 5 {
+		t.Errorf("%d roots and %d benches; the questions ask nothing", matched, apertures)
+	}
+}
+
 func BenchmarkPredict(b *testing.B) {
 	q, err := job.Query(Query{})
 	if err != nil {
@@ -352,7 +408,9 @@ func FuzzAnswer(f *testing.F) {
 			Roots []json.RawMessage `json:"roots"`
 			Error string            `json:"error"`
 		}
+		slow := time.AfterFunc(20*time.Second, func() { panic(fmt.Sprintf("no answer after 20 s to %q", line)) })
 		raw := answer(line, Query{})
+		slow.Stop()
 		if err := json.Unmarshal(raw, &object); err != nil || (object.Roots == nil) == (object.Error == "") || bytes.ContainsRune(raw, '\n') {
 			t.Fatalf("%s: %s (%v)", line, raw, err)
 		}

@@ -84,8 +84,11 @@ func (m *Model) place() error {
 	m.pitchDeg = [3]float64{0.25 * emission / deg, 0.25 * emission / deg, 0.25 * min(emission, partners) / deg}
 	m.pitchOffset = 0.3 / half
 
+	f := m.newFrame(0, o.PumpNm, o.CrystalCel)
+	if err := m.resolved(f); err != nil {
+		return err
+	}
 	if o.PairHzPerMw > 0 {
-		f := m.newFrame(0, o.PumpNm, o.CrystalCel)
 		there := m.integral(f, ofPairs, m.typicalDeg[0], m.typicalDeg[1], 0)
 		if !(there > 0) {
 			return errors.New("source: the filters let no pair through both arms; want filters whose wavelengths are partners")
