@@ -224,6 +224,17 @@ func TestAJobOverABenchKeepsWhatItDoesNotSay(t *testing.T) {
 	}
 }
 
+func TestLightThatTheSetKnowsNothingOfIsSaidToBeLeftOut(t *testing.T) {
+	o := bench(t)
+	if w := strings.Join(model(t, o).Warnings(), "\n"); strings.Contains(w, "left out") {
+		t.Errorf("warnings %q of filters that the set covers", w)
+	}
+	o.Idler.Filter = Filter{}
+	if w := strings.Join(model(t, o).Warnings(), "\n"); !strings.Contains(w, "the idler arm takes wavelengths for which bbo-kato-1986 says nothing: light outside 655 to 1060 nm is left out") {
+		t.Errorf("warnings %q; want the idler's missing filter in them", w)
+	}
+}
+
 func TestTheWrongSignOfACrystalIsNamed(t *testing.T) {
 	j := job
 	j.Process = "o-ee"

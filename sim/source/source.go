@@ -191,6 +191,16 @@ func (m *Model) Warnings() []string {
 	if !o.Crystal.HasTemperature() {
 		w = append(w, fmt.Sprintf("%s has no temperature terms: the temperature changes nothing here", o.Crystal.Name))
 	}
+	slab := o.slab(0)
+	lo, hi := slab.Band()
+	for _, x := range []struct {
+		name string
+		f    Filter
+	}{{"signal", o.Signal.Filter}, {"idler", o.Idler.Filter}} {
+		if f0, f1 := x.f.window(); f0 < lo || f1 > hi {
+			w = append(w, fmt.Sprintf("the %s arm takes wavelengths for which %s says nothing: light outside %.0f to %.0f nm is left out", x.name, o.Crystal.Name, lo, hi))
+		}
+	}
 	rayleigh := math.Pi * o.PumpWaistUm * o.PumpWaistUm / o.PumpNm // mm
 	if d := min(o.Signal.DistanceMm, o.Idler.DistanceMm); rayleigh > 0.3*d {
 		w = append(w, fmt.Sprintf("an arm's aperture at %.0f mm is not far from a pump with a Rayleigh length of %.0f mm: partners spread more than computed", d, rayleigh))
