@@ -32,6 +32,9 @@ type Address struct {
 
 // VirtualOptions say how the virtual instruments are reached and what happens to them.
 type VirtualOptions struct {
+	// Model is one that TruthModel made for the same file, for many worlds that share what it has
+	// worked out. Nil: one of this world's own.
+	Model    *source.Model
 	Troubles trouble.List
 	Ledger   *instruments.Ledger // nil: one in memory
 	// Folder is where the links to the instruments' pseudo-terminals appear, one a line, named after
@@ -49,6 +52,19 @@ type set struct {
 	ready      chan string           // its address, once it can be opened
 }
 
+// TruthModel is the model behind the virtual instruments of a simulated bench. It may be shared:
+// what one world asked changes how fast another's answers come, never an answer.
+func TruthModel(f *File) (*source.Model, error) {
+	if !f.Simulated() {
+		return nil, fmt.Errorf("bench: %s is a real bench; want one whose lines are simulated", f.Name)
+	}
+	optics, err := f.source()
+	if err != nil {
+		return nil, err
+	}
+	return source.New(optics)
+}
+
 // NewVirtual puts the instruments of a simulated bench into a world that begins now. Which one
 // stands behind a line follows from the devices that use it. Nothing can be reached before the actors
 // run.
@@ -60,9 +76,11 @@ func NewVirtual(f *File, o VirtualOptions) (*Virtual, error) {
 	if err != nil {
 		return nil, err
 	}
-	model, err := source.New(optics)
-	if err != nil {
-		return nil, err
+	model := o.Model
+	if model == nil {
+		if model, err = source.New(optics); err != nil {
+			return nil, err
+		}
 	}
 	t := f.Simulation.truth
 	world, err := instruments.NewWorld(instruments.WorldConfig{

@@ -25,6 +25,7 @@ import (
 	"gemel/scan/engine"
 	"gemel/scan/recipe"
 	"gemel/sim/instruments"
+	"gemel/sim/source"
 	"gemel/sim/trouble"
 )
 
@@ -32,6 +33,7 @@ import (
 type Night struct {
 	Bench  *bench.File // simulated, clock 1
 	Recipe string
+	Model  *source.Model // of the bench, shared between nights; nil: made anew
 	Script
 	// Wrap sabotages: it changes a part before it is used. For the table of sabotages only.
 	Wrap Sabotage
@@ -186,7 +188,7 @@ func Run(n Night, data string) (*Result, error) {
 	}
 	k.ledger = instruments.NewLedger(nil)
 	var err error
-	if k.virtual, err = bench.NewVirtual(n.Bench, bench.VirtualOptions{Troubles: n.Troubles, Ledger: k.ledger}); err != nil {
+	if k.virtual, err = bench.NewVirtual(n.Bench, bench.VirtualOptions{Model: n.Model, Troubles: n.Troubles, Ledger: k.ledger}); err != nil {
 		return nil, err
 	}
 	world := crew.New(context.Background(), nil)

@@ -6,6 +6,7 @@ import (
 	"math/rand/v2"
 	"os"
 	"strings"
+	"sync"
 	"sync/atomic"
 	"testing"
 	"testing/synctest"
@@ -15,13 +16,14 @@ import (
 	"gemel/protocol"
 	"gemel/scan/engine"
 	"gemel/sim/instruments"
+	"gemel/sim/source"
 	"gemel/sim/trouble"
 )
 
 var (
 	oneSeed   = flag.Int64("night.seed", -1, "run only the troubled night of this seed")
 	oneScript = flag.String("night.script", "", "run only the night of this script, as a failure printed it")
-	nights    = flag.Int("night.count", 0, "how many troubled nights; 0: 60, or 12 with -short")
+	nights    = flag.Int("night.count", 0, "how many troubled nights; 0: 40, or 12 with -short")
 )
 
 func demoBench(t testing.TB) *bench.File {
@@ -51,8 +53,26 @@ dark: {every: 25 points, dwell: 4 s, also: [start, end]}
 trouble: {retries: 3, then: hold}
 `
 
+// demoModel is shared by all nights on the demo bench: what it has worked out once is quick ever after.
+var demoModel = sync.OnceValues(func() (*source.Model, error) {
+	const file = "../../configs/demo-bench.yaml"
+	text, err := os.ReadFile(file)
+	if err != nil {
+		return nil, err
+	}
+	f, err := AtClockOne(file, text)
+	if err != nil {
+		return nil, err
+	}
+	return bench.TruthModel(f)
+})
+
 func play(t *testing.T, n Night) (r *Result) {
 	t.Helper()
+	var err error
+	if n.Model, err = demoModel(); err != nil {
+		t.Fatal(err)
+	}
 	data := t.TempDir()
 	synctest.Test(t, func(t *testing.T) {
 		var err error
@@ -166,7 +186,7 @@ func TestTroubledNights(t *testing.T) {
 	}
 	many := *nights
 	if many == 0 {
-		many = 60
+		many = 40
 		if testing.Short() {
 			many = 12
 		}

@@ -44,6 +44,10 @@ func resultOf(t *testing.T, recipe string) (estimate.Result, *Result) {
 	t.Helper()
 	data, n := t.TempDir(), Night{Bench: demoBench(t), Recipe: recipe}
 	var night *Result
+	var err error
+	if n.Model, err = demoModel(); err != nil {
+		t.Fatal(err)
+	}
 	synctest.Test(t, func(t *testing.T) {
 		var err error
 		if night, err = Run(n, data); err != nil {

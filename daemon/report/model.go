@@ -83,21 +83,22 @@ func (w witness) collection() (float64, error) {
 	if err != nil {
 		return 0, err
 	}
-	seen := map[source.Pose]int{}
+	// In the order of the readings: a sum in the order of a map would differ in its last digit.
+	share := map[source.Pose]float64{}
+	sum, n := 0.0, 0
 	for _, r := range w.lights {
 		p := w.pose(r)
 		if swapped {
 			p.SignalDeg, p.IdlerDeg = p.IdlerDeg, p.SignalDeg
 		}
-		seen[p]++
-	}
-	sum, n := 0.0, 0
-	for p, times := range seen {
 		if half := w.plan.Result.HalfWidth.Degrees(); w.plan.Result.PlateauOf != "" && math.Abs(p.IdlerDeg-w.middle(m, p)) > half {
 			continue
 		}
-		sum += m.Collect(p).ApertureFraction * float64(times)
-		n += times
+		if _, known := share[p]; !known {
+			share[p] = m.Collect(p).ApertureFraction
+		}
+		sum += share[p]
+		n++
 	}
 	if n == 0 {
 		return 0, errors.New("by the model no reading lies on the plateau: the tested arm's angles are off its partners' by more than the half width")

@@ -12,7 +12,7 @@ import (
 
 // Rest brings a bench to the rest state outside any run. The text says what could not be reached.
 func Rest(ctx context.Context, b *Bench) (bad string) {
-	e := &Engine{Config: Config{Bench: b}}
+	e := &Engine{Config: Config{Bench: b}, opened: map[drivers.DeviceName]bool{}}
 	return e.rest(ctx)
 }
 
@@ -72,10 +72,10 @@ type restJob struct {
 func (e *Engine) restJobs() []restJob {
 	var jobs []restJob
 	for _, s := range e.protectors() {
-		jobs = append(jobs, restJob{"protect by " + string(s.Name()), s, func(ctx context.Context) error { return shut(ctx, s) }, nil})
+		jobs = append(jobs, restJob{"protect by " + string(s.Name()), s, func(ctx context.Context) error { return e.shut(ctx, s) }, nil})
 	}
 	if s := e.Bench.Pump; s != nil {
-		jobs = append(jobs, restJob{"close " + string(s.Name()), s, func(ctx context.Context) error { return shut(ctx, s) }, nil})
+		jobs = append(jobs, restJob{"close " + string(s.Name()), s, func(ctx context.Context) error { return e.shut(ctx, s) }, nil})
 	}
 	for _, s := range e.Bench.Stages {
 		jobs = append(jobs, restJob{"stop " + string(s.Name()), s, s.Stop, nil})
@@ -87,7 +87,8 @@ func (e *Engine) restJobs() []restJob {
 }
 
 // shut closes a shutter and believes only its answer.
-func shut(ctx context.Context, s drivers.Shutter) error {
+func (e *Engine) shut(ctx context.Context, s drivers.Shutter) error {
+	delete(e.opened, s.Name())
 	if err := s.Close(ctx); err != nil {
 		return err
 	}
@@ -122,7 +123,7 @@ func (e *Engine) protectors() []drivers.Shutter {
 func (e *Engine) protect(ctx context.Context) error {
 	var errs []error
 	for _, s := range e.protectors() {
-		errs = append(errs, shut(ctx, s))
+		errs = append(errs, e.shut(ctx, s))
 	}
 	return errors.Join(errs...)
 }
@@ -131,7 +132,7 @@ func (e *Engine) protect(ctx context.Context) error {
 // comes first, so that nothing is seen before it is as it should be.
 func (e *Engine) light(ctx context.Context, pump bool) error {
 	if s := e.Bench.Pump; s != nil {
-		if err := setShutter(ctx, s, pump); err != nil {
+		if _, err := e.setShutter(ctx, s, pump); err != nil {
 			return err
 		}
 	}
@@ -140,40 +141,43 @@ func (e *Engine) light(ctx context.Context, pump bool) error {
 		if d.Protect == nil {
 			continue
 		}
-		blade, err := d.Protect.State(ctx)
+		moved, err := e.setShutter(ctx, d.Protect, true)
 		if err != nil {
 			return err
 		}
-		if blade.Open {
-			continue
+		if moved {
+			ready = max(ready, d.Ready)
 		}
-		if err := setShutter(ctx, d.Protect, true); err != nil {
-			return err
-		}
-		ready = max(ready, d.Ready)
 	}
 	return e.Bench.Pace.Wait(ctx, ready)
 }
 
-func setShutter(ctx context.Context, s drivers.Shutter, open bool) error {
+// setShutter opens or closes a shutter that is not so already. One counts as open only after an
+// Open that succeeded: a blade that a failed one left on its way is seen as open before it is.
+func (e *Engine) setShutter(ctx context.Context, s drivers.Shutter, open bool) (moved bool, err error) {
 	blade, err := s.State(ctx)
 	if err != nil {
-		return err
-	}
-	if blade.Open == open {
-		return nil
+		return false, err
 	}
 	if !open {
-		return shut(ctx, s)
+		if !blade.Open {
+			return false, nil
+		}
+		return true, e.shut(ctx, s)
 	}
+	if blade.Open && e.opened[s.Name()] {
+		return false, nil
+	}
+	delete(e.opened, s.Name())
 	if err := s.Open(ctx); err != nil {
-		return err
+		return false, err
 	}
 	if blade, err = s.State(ctx); err != nil {
-		return err
+		return false, err
 	}
 	if !blade.Open {
-		return &drivers.Error{Op: "open", Device: s.Name(), Remedy: drivers.Retry, Err: errors.New("says it is closed after it was told to open")}
+		return false, &drivers.Error{Op: "open", Device: s.Name(), Remedy: drivers.Retry, Err: errors.New("says it is closed after it was told to open")}
 	}
-	return nil
+	e.opened[s.Name()] = true
+	return true, nil
 }
