@@ -148,7 +148,7 @@ func TestAPlainNATSClientDrivesARunAndReceivesEveryEntryOnceInOrder(t *testing.T
 	}
 	until("the hold", func() bool { return state == "holding" })
 	s, _ := control.ask("status", "{}")
-	if s["state"] != "holding" || s["run"] != run || s["time_left_s"] != nil || s["readings_planned"] != 136.0 {
+	if s["state"] != "holding" || s["run"] != run || s["time_left_s"] != nil || s["readings_planned"] != 138.0 {
 		t.Errorf("status of a holding run is %v", s)
 	}
 	for _, key := range []string{"bench", "state", "causes", "run", "readings_accepted", "readings_planned", "time_left_s"} {

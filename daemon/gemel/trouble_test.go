@@ -96,8 +96,10 @@ func TestAPulledPlugIsWaitedForAndWrittenDown(t *testing.T) {
 		t.Run(device, func(t *testing.T) {
 			t.Parallel()
 			dir := t.TempDir()
-			s := &stopping{bench: quick(t, dir), recipe: writeFile(t, filepath.Join(dir, "r.yaml"), killRecipe), data: filepath.Join(dir, "data"), lines: filepath.Join(dir, "lines")}
-			sim, ledger := simulate(t, s.bench, s.lines, "unplug("+device+", at 1.5s, for 700ms)")
+			// Long enough to be under way when the plug is pulled, on a busy machine too.
+			long := strings.Replace(killRecipe, "times: 2", "times: 10", 1)
+			s := &stopping{bench: quick(t, dir), recipe: writeFile(t, filepath.Join(dir, "r.yaml"), long), data: filepath.Join(dir, "data"), lines: filepath.Join(dir, "lines")}
+			sim, ledger := simulate(t, s.bench, s.lines, "unplug("+device+", at 6s, for 1s)")
 			p := launch(t, nil, "run", "--bench", s.bench, "--data", s.data, "--lines", s.lines, "--recipe", s.recipe)
 			if code := p.wait(); code != exitDone {
 				t.Errorf("exit code %d; want the run finished\n%s", code, p.err)
