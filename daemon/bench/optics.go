@@ -136,7 +136,11 @@ func readWander(v strict.Value, kind unit.Kind) instruments.Wander {
 		return instruments.Wander{}
 	}
 	m := v.Map()
-	w := instruments.Wander{Amplitude: m.Need("amplitude").Difference(kind, 0, 50), Period: m.Need("period").Duration(time.Minute, 30*24*time.Hour)}
+	most := 50.0 // kelvins
+	if kind == unit.Share {
+		most = 0.5
+	}
+	w := instruments.Wander{Amplitude: m.Need("amplitude").Difference(kind, 0, most), Period: m.Need("period").Duration(time.Minute, 30*24*time.Hour)}
 	m.Done()
 	return w
 }

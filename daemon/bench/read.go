@@ -285,7 +285,7 @@ func (r *reader) counter(e strict.Entry) Counter {
 			tag.Failf("a channel that counts gates, not a coincidence channel")
 		}
 	}
-	c.Bits = int(m.Opt("bits").Int(8, 64, 32))
+	c.Bits = int(m.Opt("bits").Int(8, 53, 32))
 	if items := m.Need("gate").List(2, 2); len(items) == 2 {
 		c.GateMin, c.GateMax = items[0].Duration(time.Microsecond, 24*time.Hour), items[1].Duration(time.Microsecond, 24*time.Hour)
 		if items[0].Good() && items[1].Good() && c.GateMin >= c.GateMax {

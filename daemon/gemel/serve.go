@@ -30,7 +30,7 @@ func (c *serveCommand) Run(ctx context.Context, con *console) error {
 	}
 	defer s.close()
 	con.caution(s.file)
-	log.Info().Str("bench", s.file.Name).Str("url", s.broker.Contact().URL).Str("data", c.Data).Msg("serving")
+	log.Info().Str("bench", s.file.Name).Str("url", s.broker.Contact().URL).Str("data", s.data).Msg("serving")
 	fated, done := s.fated(ctx)
 	defer done()
 	if err := s.keeper.Run(fated); err != nil {

@@ -35,7 +35,7 @@ import (
 // benchFlags are shared by the commands that build a bench.
 type benchFlags struct {
 	Bench  string `required:"" placeholder:"FILE" help:"Bench file."`
-	Data   string `default:"gemel-data" placeholder:"DIR" help:"Data folder."`
+	Data   string `placeholder:"DIR" help:"Data folder (the bench file's, else gemel-data)."`
 	Lines  string `placeholder:"DIR" help:"Use instruments that already run: links DIR/<line name>."`
 	Listen string `name:"nats-listen" placeholder:"HOST:PORT" help:"Where the broker listens (loopback, free port)."`
 	Home   bool   `help:"A person is there: axes without a zero may search for it."`
@@ -44,6 +44,7 @@ type benchFlags struct {
 // session is a bench brought to life: lines, virtual instruments, logbook, broker, keeper.
 type session struct {
 	file   *bench.File
+	data   string // folder
 	book   *logbook.Book
 	keeper *keeper.Keeper
 	broker *broker.Broker
@@ -83,6 +84,8 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 	if s.file, err = bench.Load(flags.Bench); err != nil {
 		return nil, err
 	}
+	flags.Data = orElse(flags.Data, orElse(s.file.LogbookFolder, "gemel-data"))
+	s.data = flags.Data
 	if flags.Lines != "" && !s.file.Simulated() {
 		return nil, errUse{errors.New("--lines is for simulated benches; a real bench names its devices in the bench file")}
 	}
