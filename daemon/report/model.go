@@ -13,26 +13,29 @@ import (
 )
 
 // model is what the source model of the declared optics can say about this run. Without optics it
-// can say nothing, and the estimate names what it misses.
-func model(f *bench.File, plan scan.Plan, rows estimate.Rows) estimate.Model {
+// can say nothing, and the estimate names what it misses. The warnings, such as a crystal set used
+// outside its range, belong into every result.
+func model(f *bench.File, plan scan.Plan, rows estimate.Rows) (m estimate.Model, warnings []string) {
 	optics, err := f.Source()
 	if err != nil {
-		return estimate.Model{}
+		return m, nil
 	}
 	w := witness{file: f, optics: optics, plan: plan}
+	if m, err := source.New(optics); err == nil {
+		warnings = m.Warnings()
+	}
 	for _, r := range rows.Readings {
 		if r.Kind == protocol.Light && r.Accepted {
 			w.lights = append(w.lights, r)
 		}
 	}
-	var m estimate.Model
 	if plan.Result.Kind == scan.Efficiency {
 		m.Collection = w.collection
 	}
 	if plan.Result.Kind == scan.Peak && len(w.lights) > 0 {
 		m.Profile = w.profile()
 	}
-	return m
+	return m, warnings
 }
 
 // witness asks the model about the places of a run.

@@ -54,6 +54,7 @@ func Of(ctx context.Context, book *logbook.Book, run protocol.RunID) (estimate.R
 // Result works out the result that a plan asks for from the rows of its run.
 func Result(rows estimate.Rows, file *bench.File, plan scan.Plan) (estimate.Result, error) {
 	b := Constants(file)
+	m, warnings := model(file, plan, rows)
 	var result estimate.Result
 	var err error
 	switch plan.Result.Kind {
@@ -62,9 +63,9 @@ func Result(rows estimate.Rows, file *bench.File, plan scan.Plan) (estimate.Resu
 		if plan.Result.PlateauOf != "" {
 			q.Use = &estimate.Plateau{Axis: string(plan.Result.PlateauOf), HalfWidthDeg: plan.Result.HalfWidth.Degrees()}
 		}
-		result, err = estimate.Efficiency(rows, b, model(file, plan, rows), q)
+		result, err = estimate.Efficiency(rows, b, m, q)
 	case scan.Peak:
-		result, err = estimate.Peak(rows, b, model(file, plan, rows), estimate.PeakQuestion{
+		result, err = estimate.Peak(rows, b, m, estimate.PeakQuestion{
 			Axis: string(plan.Result.Along), Channel: string(plan.Result.Of), Shape: estimate.PeakShape(plan.Result.Profile), Power: string(plan.Result.Power),
 		})
 	default:
@@ -73,6 +74,7 @@ func Result(rows estimate.Rows, file *bench.File, plan scan.Plan) (estimate.Resu
 	if refusal, ok := errors.AsType[*estimate.Refusal](err); ok {
 		return estimate.Refused(rows, string(plan.Result.Kind), refusal), nil
 	}
+	result.Warnings = append(result.Warnings, warnings...)
 	return result, err
 }
 
