@@ -153,6 +153,7 @@ type Counter struct {
 	Tag          drivers.Channel                        // the channel that counts gates; empty: none
 	Logic        string                                 // every_pair or one_per_herald; empty without coincidences
 	Window       strict.Measured                        // full width of the coincidence window, s
+	Displaced    []Displaced                            // coincidence channels whose windows lie off the true delay
 	Capture      strict.Measured                        // share of true coincidences within the window, from a delay scan
 	Bits         int
 	GateMin      time.Duration
@@ -161,8 +162,17 @@ type Counter struct {
 	make counterMaker
 }
 
+// Displaced is a coincidence channel whose windows lie off the true delay, and so count accidentals
+// alone.
+type Displaced struct {
+	Channel drivers.Channel
+	Of      [2]drivers.Channel
+	Windows int // of the full width, summed by the channel
+}
+
 // Detector is one photon-counting detector.
 type Detector struct {
+	Settings   []string // bias, threshold …, as a person states them
 	Name       string
 	Channel    drivers.Channel
 	DeadTime   strict.Measured // s

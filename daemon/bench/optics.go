@@ -60,6 +60,7 @@ type Filter struct {
 type Transmittance struct {
 	Part  string
 	Share strict.Measured
+	Date  string // when it was measured
 }
 
 // transmittance is the product of the declared parts.
@@ -229,6 +230,7 @@ func (r *reader) arm(v strict.Value) Arm {
 		t.Share.Value = pm.Need("value").Quantity(unit.Share, 0, 1)
 		t.Share.U = pm.Opt("u").Quantity(unit.Share, 0, 1)
 		t.Share.From = pm.Opt("from").Text("")
+		t.Date = pm.Opt("date").Text("")
 		pm.Done()
 		a.Path = append(a.Path, t)
 	}

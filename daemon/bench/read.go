@@ -275,6 +275,15 @@ func (r *reader) counter(e strict.Entry) Counter {
 		c.Window.From = w.Opt("from").Text("")
 		w.Done()
 		c.Capture = m.Opt("capture").Measured(unit.Share, 0.01, 1)
+		for _, item := range m.Opt("displaced").List(1, 16) {
+			dm := item.Map()
+			d := Displaced{Channel: one(dm.Need("channel")), Windows: int(dm.Need("windows").Int(1, 1000))}
+			if of := dm.Need("of").List(2, 2); len(of) == 2 {
+				d.Of = [2]drivers.Channel{one(of[0]), one(of[1])}
+			}
+			dm.Done()
+			c.Displaced = append(c.Displaced, d)
+		}
 		if latched := m.Need("latched"); !latched.Bool() && latched.Good() {
 			latched.Failf("true: no efficiency follows from singles and coincidences that were not counted in the same interval")
 		}
@@ -315,6 +324,9 @@ func (r *reader) detectors(v strict.Value) {
 			Dark:       m.Opt("dark_rate").Measured(unit.Rate, 0, 1e9),
 			TripHz:     m.Opt("trip_rate").Quantity(unit.Rate, 1, 1e12), FloorHz: m.Opt("floor").Quantity(unit.Rate, 0, 1e9),
 			Glance: m.Opt("glance").Duration(time.Microsecond, time.Minute),
+		}
+		for _, item := range m.Opt("settings").List(1, 32) {
+			d.Settings = append(d.Settings, item.Text())
 		}
 		model := m.Opt("model")
 		d.Model = model.Choice([]string{source.NonParalysable, source.Paralysable}, "")

@@ -8,12 +8,18 @@ import (
 	"gemel/daemon/logbook"
 	"gemel/daemon/report"
 	"gemel/protocol"
+	"gemel/scan/estimate"
 )
 
 type reportCommand struct {
 	Data string `default:"gemel-data" placeholder:"DIR" help:"Data folder."`
 	Of   string `name:"run" placeholder:"RUN" help:"The run; without it the last one whose recipe asks for a result."`
 	JSON bool   `name:"json" help:"Print JSON."`
+
+	Without   []string `placeholder:"STEP" enum:"background,accidentals,accidentals_in_dead_time,afterpulsing,dead_time,window_capture,path,collection," help:"Corrections of an efficiency to switch off: background, accidentals, accidentals_in_dead_time, afterpulsing, dead_time, window_capture, path, collection."`
+	Displaced bool     `help:"Accidentals from the counter's displaced windows instead of the product of the rates."`
+	Trials    int      `placeholder:"N" help:"Propagate the uncertainties by Monte Carlo, too (JCGM 101), with so many trials."`
+	Seed      uint64   `default:"1" help:"Of the Monte Carlo trials."`
 }
 
 func (reportCommand) Help() string {
@@ -32,12 +38,16 @@ func (c *reportCommand) Run(ctx context.Context, con *console) error {
 			return err
 		}
 	}
-	return con.result(ctx, book, run, c.JSON)
+	o := report.Options{Displaced: c.Displaced, Trials: c.Trials, Seed: c.Seed}
+	for _, step := range c.Without {
+		o.Off = append(o.Off, estimate.Step(step))
+	}
+	return con.result(ctx, book, run, o, c.JSON)
 }
 
 // result prints a run's result. One that was refused is a failure that says why.
-func (c *console) result(ctx context.Context, book *logbook.Book, run protocol.RunID, asJSON bool) error {
-	r, err := report.Of(ctx, book, run)
+func (c *console) result(ctx context.Context, book *logbook.Book, run protocol.RunID, o report.Options, asJSON bool) error {
+	r, err := report.With(ctx, book, run, o)
 	if err != nil {
 		return err
 	}

@@ -81,6 +81,9 @@ func resultOf(t *testing.T, recipe string) (estimate.Result, *Result) {
 	if err != nil {
 		t.Fatal(err)
 	}
+	if r.Kind == "efficiency" {
+		options(t, book, r)
+	}
 	return r, night
 }
 
@@ -104,6 +107,29 @@ func digits(t *testing.T, book *logbook.Book, run protocol.RunID) []byte {
 		}
 	}
 	return text
+}
+
+// options checks what a person may ask otherwise of the same run.
+func options(t *testing.T, book *logbook.Book, asked estimate.Result) {
+	t.Helper()
+	with := func(o report.Options) estimate.Result {
+		t.Helper()
+		r, err := report.With(t.Context(), book, asked.Run, o)
+		if err != nil {
+			t.Fatal(err)
+		}
+		return r
+	}
+	// The declared path is 0.995 × 0.984 × 0.95.
+	if r := with(report.Options{Off: []estimate.Step{estimate.PathStep}}); r.Value == nil || math.Abs(*r.Value/(*asked.Value*0.995*0.984*0.95)-1) > 1e-9 {
+		t.Errorf("without the path: %s; with it: %s", r.Sentence(), asked.Sentence())
+	}
+	if r := with(report.Options{Displaced: true}); r.Value != nil || len(r.Because) == 0 {
+		t.Errorf("by displaced windows, which this counter has not: %s", r.Sentence())
+	}
+	if r := with(report.Options{Trials: 2000, Seed: 1}); r.MonteCarlo == nil || *r.Value != *asked.Value {
+		t.Errorf("with trials: %s, %v; want the same value and a Monte Carlo beside it", r.Sentence(), r.MonteCarlo)
+	}
 }
 
 // trueEfficiency stands in configs/demo-bench.yaml under simulation.truth, where no result can read it.

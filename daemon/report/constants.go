@@ -17,6 +17,9 @@ func Constants(f *bench.File) estimate.Bench {
 	for channel, of := range f.Counter.Coincidences {
 		b.Counter.Pairs[string(channel)] = [2]string{string(of[0]), string(of[1])}
 	}
+	for _, d := range f.Counter.Displaced {
+		b.Counter.Displaced = append(b.Counter.Displaced, estimate.Displaced{Channel: string(d.Channel), Of: [2]string{string(d.Of[0]), string(d.Of[1])}, Windows: d.Windows})
+	}
 	for _, a := range f.Axes {
 		b.AxisError[string(a.Name)] = estimate.Constant{U: a.Error.Degrees(), From: "bench file, error of " + string(a.Name)}
 	}
@@ -24,7 +27,7 @@ func Constants(f *bench.File) estimate.Bench {
 		b.PumpNm = f.Optics.PumpWavelength * 1e9
 	}
 	for _, d := range f.Detectors {
-		arm := estimate.Arm{Name: d.Name, Channel: string(d.Channel), DeadTime: constant(d.DeadTime), Model: estimate.DeadTimeModel(d.Model), Afterpulse: constant(d.Afterpulse)}
+		arm := estimate.Arm{Name: d.Name, Channel: string(d.Channel), DeadTime: constant(d.DeadTime), Model: estimate.DeadTimeModel(d.Model), Afterpulse: constant(d.Afterpulse), Settings: d.Settings}
 		if f.Optics != nil {
 			light(f, &arm)
 		}
@@ -50,7 +53,7 @@ func light(f *bench.File, arm *estimate.Arm) {
 		}
 	}
 	for _, t := range way.Path {
-		arm.Path = append(arm.Path, estimate.Transmittance{Name: t.Part, Constant: constant(t.Share)})
+		arm.Path = append(arm.Path, estimate.Transmittance{Name: t.Part, Constant: constant(t.Share), Date: t.Date})
 	}
 	arm.Face = way.Face
 	if way.Filter.Width > 0 {

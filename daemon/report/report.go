@@ -20,9 +20,21 @@ import (
 // ErrNoResult is returned for a run whose recipe asks for no result.
 var ErrNoResult = errors.New("the recipe asks for no result")
 
-// Of works out the result of a run. A result that cannot be given says why in its Because, and is
-// no error.
+// Options change how a result is worked out, never which readings make it.
+type Options struct {
+	Off       []estimate.Step // corrections of an efficiency that are switched off
+	Displaced bool            // accidentals from the displaced windows instead of the product
+	Trials    int             // of a Monte Carlo propagation (JCGM 101); 0: none
+	Seed      uint64
+}
+
+// Of works out the result of a run as its recipe asks for it.
 func Of(ctx context.Context, book *logbook.Book, run protocol.RunID) (estimate.Result, error) {
+	return With(ctx, book, run, Options{})
+}
+
+// With is Of with options. A result that cannot be given says why in its Because, and is no error.
+func With(ctx context.Context, book *logbook.Book, run protocol.RunID, o Options) (estimate.Result, error) {
 	row, err := book.Run(ctx, run)
 	if err != nil {
 		return estimate.Result{}, err
@@ -48,18 +60,22 @@ func Of(ctx context.Context, book *logbook.Book, run protocol.RunID) (estimate.R
 	if err != nil {
 		return estimate.Result{}, err
 	}
-	return Result(rows, file, plan)
+	return Result(rows, file, plan, o)
 }
 
 // Result works out the result that a plan asks for from the rows of its run.
-func Result(rows estimate.Rows, file *bench.File, plan scan.Plan) (estimate.Result, error) {
+func Result(rows estimate.Rows, file *bench.File, plan scan.Plan, o Options) (estimate.Result, error) {
 	b := Constants(file)
 	m, warnings := model(file, plan, rows)
 	var result estimate.Result
 	var err error
 	switch plan.Result.Kind {
 	case scan.Efficiency:
-		q := estimate.Question{Trigger: armOf(file, plan.Result.Trigger), UnderTest: armOf(file, plan.Result.UnderTest), Off: map[estimate.Step]bool{}}
+		q := estimate.Question{Trigger: armOf(file, plan.Result.Trigger), UnderTest: armOf(file, plan.Result.UnderTest), Off: map[estimate.Step]bool{},
+			Displaced: o.Displaced, MonteCarlo: o.Trials, Seed: o.Seed}
+		for _, step := range o.Off {
+			q.Off[step] = true
+		}
 		if plan.Result.PlateauOf != "" {
 			q.Use = &estimate.Plateau{Axis: string(plan.Result.PlateauOf), HalfWidthDeg: plan.Result.HalfWidth.Degrees()}
 		}
