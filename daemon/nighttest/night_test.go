@@ -110,15 +110,15 @@ func TestAQuietNightIsFlawless(t *testing.T) {
 	}
 }
 
-// long is eight hours of work.
+// long is eight hours of work: the demo's points, counted for a minute each, seven times over.
 const long = `
 title: Eight hours
 sweep:
-  - {axis: signal_arm, around: 2.864 deg, span: 0.8 deg, step: 0.1 deg}
-  - {axis: idler_arm, around: 2.864 deg, span: 1.2 deg, step: 0.05 deg}
+  - {axis: signal_arm, around: 2.864 deg, span: 0.4 deg, step: 0.1 deg}
+  - {axis: idler_arm, around: 2.864 deg, span: 2.4 deg, step: 0.2 deg}
 order: serpentine
 dwell: {time: 60 s, slice: 10 s}
-repeat: {times: 2, as: passes}
+repeat: {times: 7, as: passes}
 dark: {every: 30 min, dwell: 60 s, also: [start, end]}
 `
 
