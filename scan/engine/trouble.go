@@ -179,6 +179,11 @@ func (e *Engine) findZero(ctx, op context.Context) error {
 		if !e.homing && !e.Bench.Unattended[s.Name()] {
 			return e.holdFor(ctx, protocol.ByTrouble, fmt.Sprintf("held: %s has lost the zero of %v; resume when the arms may search for it, with somebody there", s.Name(), lost), detail)
 		}
+		// Said before the search: one that is interrupted may find the zero all the same, and then
+		// nothing else would tell that it was lost.
+		if err := e.note(ctx, protocol.Trouble, fmt.Sprintf("%s has lost the zero of %v and searches for it", s.Name(), lost), detail); err != nil {
+			return err
+		}
 		if err := s.Home(op, lost); err != nil {
 			if op.Err() != nil {
 				return nil
