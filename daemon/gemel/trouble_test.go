@@ -114,6 +114,26 @@ func TestAPulledPlugIsWaitedForAndWrittenDown(t *testing.T) {
 	}
 }
 
+func TestAClosedTerminalBringsTheBenchToRest(t *testing.T) {
+	t.Parallel()
+	dir := t.TempDir()
+	long := strings.Replace(killRecipe, "times: 2", "times: 50", 1)
+	s := &stopping{bench: quick(t, dir), recipe: writeFile(t, filepath.Join(dir, "r.yaml"), long), data: filepath.Join(dir, "data"), lines: filepath.Join(dir, "lines")}
+	sim, ledger := simulate(t, s.bench, s.lines, "")
+	p := launch(t, nil, "run", "--bench", s.bench, "--data", s.data, "--lines", s.lines, "--recipe", s.recipe)
+	ledger.await(t, 0, "a gate", func(r instruments.Record) bool { return r.Kind == instruments.GateClosed })
+	p.signal(syscall.SIGHUP)
+	if code := p.wait(); code != exitFailed {
+		t.Errorf("exit code %d; want 1", code)
+	}
+	if row := s.row(t); row.State != protocol.Stopped {
+		t.Errorf("the run is %s (%s); want stopped", row.State, row.Reason)
+	}
+	quit(t, sim)
+	<-ledger.done
+	atRest(t, ledger.all(t))
+}
+
 func troubled(t *testing.T, data, device string) bool {
 	t.Helper()
 	book, err := logbook.OpenReadOnly(filepath.Join(data, "logbook.db"))
