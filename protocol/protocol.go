@@ -111,25 +111,34 @@ const (
 // Reading is the counts of one completed dwell, with what was proved before and after.
 type Reading struct {
 	Head
-	Kind      ReadingKind `json:"kind"`
-	Point     *int        `json:"point"` // index in the run's list of points, from 0; null where the kind has none
-	Visit     *int        `json:"visit"` // from 1; null where the kind has none
-	Accepted  bool        `json:"accepted"`
-	Reason    string      `json:"reason"` // why it was set aside; empty when accepted
-	StartedAt Time        `json:"started_at"`
-	EndedAt   Time        `json:"ended_at"`
-	GateSet   Seconds     `json:"gate_set_s"` // summed over the slices
-	Gate      Seconds     `json:"gate_s"`     // as the counter measured it, summed
-	Angles    []Angle     `json:"angles"`
-	Settings  []Setting   `json:"settings"`
-	Sensors   []Sensor    `json:"sensors"`
-	Counts    []Count     `json:"counts"` // summed over the slices; a tag channel shows its last value
-	Slices    []Slice     `json:"slices"`
-	Scatter   *Scatter    `json:"scatter"`    // null with fewer than two slices
-	Glance    *Slice      `json:"glance"`     // the short look at the light before the dwell; not in the counts
-	LostGates int         `json:"lost_gates"` // gates that were opened in this dwell and whose counts are not here
-	Attempt   int         `json:"attempt"`    // 1, or more when it was taken again
-	Simulated *int        `json:"simulated"`
+	Kind      ReadingKind  `json:"kind"`
+	Point     *int         `json:"point"` // index in the run's list of points, from 0; null where the kind has none
+	Visit     *int         `json:"visit"` // from 1; null where the kind has none
+	Accepted  bool         `json:"accepted"`
+	Reason    string       `json:"reason"` // why it was set aside; empty when accepted
+	StartedAt Time         `json:"started_at"`
+	EndedAt   Time         `json:"ended_at"`
+	GateSet   Seconds      `json:"gate_set_s"` // summed over the slices
+	Gate      Seconds      `json:"gate_s"`     // as the counter measured it, summed
+	Angles    []Angle      `json:"angles"`
+	Settings  []Setting    `json:"settings"`
+	Sensors   []Sensor     `json:"sensors"`
+	Counts    []Count      `json:"counts"` // summed over the slices; a tag channel shows its last value
+	Slices    []Slice      `json:"slices"`
+	Scatter   *Scatter     `json:"scatter"`             // null with fewer than two slices
+	Glance    *Slice       `json:"glance"`              // the short look at the light before the dwell; not in the counts
+	LostGates int          `json:"lost_gates"`          // gates that were opened in this dwell and whose counts are not here
+	Attempt   int          `json:"attempt"`             // 1, or more when it was taken again
+	Reference *ReferenceOf `json:"reference,omitempty"` // of the kind reference: which of the set's readings it is
+	Simulated *int         `json:"simulated"`
+}
+
+// ReferenceOf says which reading of which set of references one is.
+type ReferenceOf struct {
+	Set   int    `json:"set"`   // from 1
+	Place int    `json:"place"` // in the plan's list of places, from 0
+	Arm   string `json:"arm"`   // whose flank it is; empty: the top, which all arms share
+	On    string `json:"on"`    // low_flank, top or high_flank
 }
 
 // Angle is where one axis was told to be and where it stood around the dwell, degrees.
@@ -191,6 +200,25 @@ type Points struct {
 	// Stand is where the axes stood, when the run began, that the sweep does not move. They are
 	// kept there, and put back there after a background or a search for the zero.
 	Stand []AxisTarget `json:"stand,omitempty"`
+	// Refined is the number, from 1, of the refinement that added these points after the first pass;
+	// 0: they are the sweep's. A refinement without points is the last.
+	Refined int `json:"refined,omitempty"`
+	// Earlier are the values that the points take from earlier results, in the recipe's order.
+	Earlier []EarlierValue `json:"earlier,omitempty"`
+}
+
+// EarlierValue is a value taken from an earlier result on this bench. Exactly one of Axis and
+// Setting is set.
+type EarlierValue struct {
+	Kind     string      `json:"kind"` // of the result
+	Axis     string      `json:"axis,omitempty"`
+	Setting  string      `json:"setting,omitempty"`
+	From     string      `json:"from"` // the title asked for
+	Run      RunID       `json:"run"`
+	Sequence int64       `json:"sequence"` // the result's entry in that run
+	Angle    *unit.Angle `json:"angle_deg,omitempty"`
+	Value    *float64    `json:"value,omitempty"` // in the setting's unit
+	U        float64     `json:"u"`               // standard uncertainty, degrees or the setting's unit
 }
 
 // Point is one set of targets.
@@ -198,6 +226,7 @@ type Point struct {
 	Point    int            `json:"point"`
 	Axes     []AxisTarget   `json:"axes"`
 	Settings []SettingValue `json:"settings,omitempty"`
+	Empty    string         `json:"empty,omitempty"` // why nobody goes there
 }
 
 // AxisTarget is where an axis is to go.

@@ -20,16 +20,66 @@ type Plan struct {
 	Repeat     Repeat
 	Dark       *Cadence    // nil: none
 	Background *Background // nil: none
+	Reference  *Reference  // nil: none
+	Refine     *Refine     // nil: the points stay as they are
 	Guards     []Guard
 	Schedule   Schedule
 	Trouble    Trouble
-	Result     *Result // nil: counts, and no number at the end
+	Results    []Result // the numbers the run is for; empty: counts alone
+
+	// Earlier are the values that the points take from earlier results, in the recipe's order.
+	Earlier []Earlier
+}
+
+// Open lists the values of the plan that no earlier result gives yet. A plan with any is
+// provisional: its points stand where the model, or the axis's park angle, puts them, and nobody
+// goes there.
+func (p Plan) Open() []Earlier {
+	var open []Earlier
+	for _, e := range p.Earlier {
+		if e.Source == nil {
+			open = append(open, e)
+		}
+	}
+	return open
+}
+
+// Earlier is a value taken from an earlier result on this bench.
+type Earlier struct {
+	Ask       EarlierAsk
+	Otherwise Then   // hold or stop, when there is none
+	Missing   string // why there is none; empty with a Source
+	Source    *EarlierSource
+}
+
+// EarlierAsk says which result a value is taken from: the last of its kind from a finished run
+// with that title.
+type EarlierAsk struct {
+	Kind         ResultKind         // peak, zero or delay
+	Axis         drivers.AxisName   // of a peak or a zero
+	Setting      drivers.DeviceName // of a delay
+	From         string             // the title of the run
+	NotOlderThan time.Duration      // 0: however old
+	Below        unit.Angle         // its standard uncertainty at most; 0: whatever it is. Of a delay: see BelowValue
+	BelowValue   float64            // the same of a setting, in its unit
+}
+
+// EarlierSource is where a value came from.
+type EarlierSource struct {
+	Run      string     // the run that measured it
+	Sequence int64      // its result's entry
+	Angle    unit.Angle // of an axis
+	Value    float64    // of a setting, in its unit
+	U        float64    // its standard uncertainty, in degrees or the setting's unit
 }
 
 // Point is one set of targets. Axes and settings it does not name stay where they are.
 type Point struct {
 	Axes     []AxisTarget
 	Settings []SettingTarget
+	// Empty is why there is nothing to be seen at this point, such as a ring that is closed at its
+	// tilt. Such a point keeps its index and its place in every list, and nobody goes there.
+	Empty string
 }
 
 // AxisTarget is where an axis is to go, as a bench angle.
@@ -80,7 +130,7 @@ type Visit struct {
 	Visit int
 }
 
-// Visits lists every visit of the plan in the order they are made.
+// Visits lists every visit of the plan in the order they are made. Points that are empty have none.
 func (p Plan) Visits() []Visit {
 	visits := make([]Visit, 0, len(p.Points)*p.Repeat.Times)
 	if p.Repeat.InPlace {
@@ -89,14 +139,14 @@ func (p Plan) Visits() []Visit {
 				visits = append(visits, Visit{Point: i, Visit: v})
 			}
 		}
-		return visits
-	}
-	for v := 1; v <= p.Repeat.Times; v++ {
-		for _, i := range p.pass(v) {
-			visits = append(visits, Visit{Point: i, Visit: v})
+	} else {
+		for v := 1; v <= p.Repeat.Times; v++ {
+			for _, i := range p.pass(v) {
+				visits = append(visits, Visit{Point: i, Visit: v})
+			}
 		}
 	}
-	return visits
+	return slices.DeleteFunc(visits, func(v Visit) bool { return p.Points[v.Point].Empty != "" })
 }
 
 // Sweeps says whether the points move an axis. All points name the same axes.
@@ -139,22 +189,94 @@ type Background struct {
 	From, By unit.Angle
 }
 
-// Guard is a condition for counting. It is no protective guard and no interlock.
+// Guard is a condition for counting. It is no protective guard and no interlock. Exactly one of
+// Sensor, Rate, DarkRate and ReferenceAge is set.
 type Guard struct {
-	Name        string // as the recipe says it
-	Sensor      drivers.DeviceName
-	Low, High   float64 // in the sensor's unit
-	Otherwise   Then
-	GiveUpAfter time.Duration // a hold for this guard fails the run after it; 0: the trouble's bound
+	Name   string             // as the recipe says it
+	Sensor drivers.DeviceName // its value, before, during and after each light dwell
+	Rate   drivers.Channel    // counts per second of each gate of each light dwell, the glance before it included
+	// DarkRate is a channel's counts per second in each dark.
+	DarkRate drivers.Channel
+	// ReferenceAge is how old the last good reference may be when a light dwell begins. A hold for
+	// it is a trouble's: a person lets it go on, and a new reference comes first.
+	ReferenceAge time.Duration
+	Low, High    float64 // in the sensor's unit, or per second
+	Otherwise    Then
+	GiveUpAfter  time.Duration // a hold for this guard fails the run after it; 0: the trouble's bound
+}
+
+// Reference is a return to known places to see drift: a check point, no calibration standard. One
+// set is a reading at each of its places, in their order. The first set of a run, and the first
+// after a person let a run go on that a reference held, is what later ones are compared with.
+type Reference struct {
+	Cadence   // AtStart is always set
+	Places    []ReferencePlace
+	Trigger   drivers.Channel // singles of the one arm's detector
+	UnderTest drivers.Channel // singles of the other's
+	Pairs     drivers.Channel // their coincidences
+	Bounds    Bounds
+	Otherwise Then // note, hold or stop
+}
+
+// ReferencePlace is where one reading of a reference is taken.
+type ReferencePlace struct {
+	Arm  drivers.AxisName // the arm whose profile it lies on; empty: the top that all arms share
+	On   Spot
+	Axes []AxisTarget // of every arm, and of the crystal's tilt where the sweep moves it
+}
+
+// Spot is a place on an arm's profile of coincidences.
+type Spot string
+
+// The spots.
+const (
+	LowFlank  Spot = "low_flank"  // at half maximum, towards smaller bench angles
+	Top       Spot = "top"        // where the partner goes
+	HighFlank Spot = "high_flank" // at half maximum, towards greater bench angles
+)
+
+// Bounds are how far a reference may be from the one it is compared with. Zero: not looked at.
+type Bounds struct {
+	Singles float64    // relative change of each detector's singles at the top, 0.01 is 1 %
+	Ratio   float64    // relative change of coincidences over singles, for both detectors, at the top
+	Centre  unit.Angle // shift of each arm's centre, fitted to its flanks and the top
+}
+
+// Refine adds points after the first pass, where the counts say so. Exactly one of Span and Below
+// is set.
+type Refine struct {
+	Of    drivers.Channel  // the counts that are looked at, singles or coincidences
+	Along drivers.AxisName // the axis the points are added on
+	// Span and Step are of the grid about the maximum.
+	Span, Step unit.Angle
+	// Below asks for points until the fitted position's standard uncertainty is no more than this.
+	Below  unit.Angle
+	AtMost int           // points added in all
+	Within time.Duration // bench time that all of them may take, dwells and moves; 0: no bound but AtMost
 }
 
 // Schedule bounds a run in time. The instants are worked out when the recipe is accepted.
 type Schedule struct {
 	NotBefore time.Time // zero: at once
 	FinishBy  time.Time // zero: no end. What does not fit before it is left out, closing readings first reserved
+	WarmUp    *WarmUp   // nil: none
 }
 
-// Result is the number that a run is for, and which of its readings make it: said before they are
+// WarmUp waits, at rest, until every sensor is steady.
+type WarmUp struct {
+	Steady []Steady
+	AtMost time.Duration // then the run holds for a person
+}
+
+// Steady says that a sensor's greatest and least value over a time differ by no more than a bound.
+type Steady struct {
+	Sensor   drivers.DeviceName
+	Relative float64 // of the mean, 0.005 is 0.5 %; 0: Absolute counts
+	Absolute float64 // in the sensor's unit
+	Over     time.Duration
+}
+
+// Result is a number that a run is for, and which of its readings make it: said before they are
 // taken, because the best of many readings, picked afterwards, is biased high.
 type Result struct {
 	Kind ResultKind
@@ -164,12 +286,21 @@ type Result struct {
 	UnderTest drivers.Channel  // singles
 	PlateauOf drivers.AxisName // empty: all light readings, which stand at one place
 	HalfWidth unit.Angle       // of the plateau's part that counts
-	At        []AxisTarget     // only readings with these axes at these targets count; empty: all
+	// By names a setting whose values each give an efficiency of their own, shown one by one and
+	// fitted by a line against the setting; empty: one number.
+	By drivers.DeviceName
 
-	// Of a peak.
-	Of      drivers.Channel // singles or coincidences
-	Along   drivers.AxisName
-	Profile string             // empty: what fits best to what is known
+	// Of an efficiency, a peak or a zero: only readings with these axes at these targets count; empty: all.
+	At []AxisTarget
+
+	// Of a peak, a zero, a tuning curve, a conjugate map, a delay.
+	Of    drivers.Channel  // singles or coincidences
+	Along drivers.AxisName // the axis whose profile is fitted; of a conjugate map the arm that searches
+	// Against is the axis whose places each give a fitted position: the tilt of a tuning curve, the
+	// other arm of a conjugate map.
+	Against drivers.AxisName
+	Setting drivers.DeviceName // of a delay: the setting that is swept
+	Profile string             // of a peak; empty: what fits best to what is known
 	Power   drivers.DeviceName // the sensor whose mean is part of the exposure; empty: none
 }
 
@@ -178,8 +309,13 @@ type ResultKind string
 
 // The kinds.
 const (
-	Efficiency ResultKind = "efficiency"
-	Peak       ResultKind = "peak"
+	Efficiency   ResultKind = "efficiency"    // of the detector under test
+	Peak         ResultKind = "peak"          // centre, width and height along an axis
+	TuningCurve  ResultKind = "tuning_curve"  // fitted angles against tilt, beside phase matching
+	ConjugateMap ResultKind = "conjugate_map" // fitted partner angles against the other arm's, beside phase matching
+	Drift        ResultKind = "drift"         // what the references say of the night
+	Zero         ResultKind = "zero"          // an arm's zero, from both sides of the ring
+	Delay        ResultKind = "delay"         // where coincidences are centred against a delay, and the window's width
 )
 
 // Then is what is done when something went wrong as often as the recipe allows.
@@ -190,6 +326,7 @@ const (
 	Hold Then = "hold"
 	Skip Then = "skip"
 	Stop Then = "stop"
+	Note Then = "note" // of a reference: it is written, readings are doubted, and the run goes on
 )
 
 // Trouble says how often a reading is taken again, and what then.
@@ -221,3 +358,12 @@ type Axis struct {
 
 // Limits says whether an angle lies within the soft limits.
 func (a Axis) Limits(angle unit.Angle) bool { return angle >= a.Low && angle <= a.High }
+
+// Expected is what the source model, with the bench file's declared values, expects to be recorded
+// at a place, per second of light. It is what a forecast is made of, and never a result.
+type Expected struct {
+	CountsHz      map[drivers.Channel]float64 // singles, and coincidences with the accidental ones in them
+	AccidentalsHz map[drivers.Channel]float64 // of the coincidence channels
+	DarkHz        map[drivers.Channel]float64 // with the pump blocked
+	Warnings      []string                    // such as no emission at this tilt
+}

@@ -124,12 +124,13 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 		Book: s.book, Bench: &built.Bench, BenchText: s.file.Text, Version: version, Plan: planner(s.file, "recipe"),
 		Recipe: recipesIn(recipeFolder), Armed: armedIn(flags.Data, s.file.Simulated()), MayHome: flags.Home,
 		ResumeAfterRestart: attended || s.file.AfterRestart == bench.AfterRestartResume || s.file.AfterRestart == "" && s.file.Simulated(),
-		Conclude: func(ctx context.Context, run protocol.RunID) (json.RawMessage, error) {
+		Conclude: func(ctx context.Context, run protocol.RunID) ([]json.RawMessage, error) {
 			r, err := report.Of(ctx, s.book, run)
 			if err != nil {
 				return nil, err
 			}
-			return r.JSON()
+			object, err := r.JSON()
+			return []json.RawMessage{object}, err
 		},
 		Behind: func() int64 { return s.courier.Behind() },
 		Step:   killpoint(),

@@ -47,9 +47,9 @@ type Config struct {
 	Recipe func(name string) (string, error)
 	// ResumeAfterRestart lets interrupted runs go on without a person.
 	ResumeAfterRestart bool
-	// Conclude works out a run's result, as a JSON object, from what is written; it is asked only
-	// for runs whose recipe wants one. Nil: no run has one.
-	Conclude func(ctx context.Context, run protocol.RunID) (json.RawMessage, error)
+	// Conclude works out a run's results, each as a JSON object, from what is written; it is asked
+	// only for runs whose recipe wants some. Nil: no run has any.
+	Conclude func(ctx context.Context, run protocol.RunID) ([]json.RawMessage, error)
 	// Armed says whether remote requests may move the bench now.
 	Armed func(now time.Time) bool
 	// MayHome is a person's word that axes may search their zero at the start of each run.
@@ -157,11 +157,11 @@ func (k *Keeper) engine(ctx context.Context, row logbook.RunRow) (*engine.Engine
 }
 
 // concluder is what works out the result of one run, nil when its recipe asks for none.
-func (k *Keeper) concluder(run protocol.RunID, plan scan.Plan) func(context.Context) (json.RawMessage, error) {
-	if k.Conclude == nil || plan.Result == nil {
+func (k *Keeper) concluder(run protocol.RunID, plan scan.Plan) func(context.Context) ([]json.RawMessage, error) {
+	if k.Conclude == nil || len(plan.Results) == 0 {
 		return nil
 	}
-	return func(ctx context.Context) (json.RawMessage, error) { return k.Conclude(ctx, run) }
+	return func(ctx context.Context) ([]json.RawMessage, error) { return k.Conclude(ctx, run) }
 }
 
 func (k *Keeper) fold(ctx context.Context, run protocol.RunID) (engine.Progress, error) {

@@ -29,10 +29,10 @@ func model(f *bench.File, plan scan.Plan, rows estimate.Rows) (m estimate.Model,
 			w.lights = append(w.lights, r)
 		}
 	}
-	if plan.Result.Kind == scan.Efficiency {
+	if plan.Results[0].Kind == scan.Efficiency {
 		m.Collection = w.collection
 	}
-	if plan.Result.Kind == scan.Peak && len(w.lights) > 0 {
+	if plan.Results[0].Kind == scan.Peak && len(w.lights) > 0 {
 		m.Profile = w.profile()
 	}
 	return m, warnings
@@ -76,7 +76,7 @@ func (w witness) put(p *source.Pose, axis string, deg float64) {
 // over the readings of the plateau. Around which angle these lie is asked of the model too, so that
 // no reading decides whether it counts.
 func (w witness) collection() (float64, error) {
-	optics, swapped := w.optics, string(w.plan.Result.Trigger) != w.channelOf(w.file.Optics.Signal)
+	optics, swapped := w.optics, string(w.plan.Results[0].Trigger) != w.channelOf(w.file.Optics.Signal)
 	if swapped {
 		optics.Signal, optics.Idler = optics.Idler, optics.Signal
 		optics.AzimuthDeg += 180
@@ -94,7 +94,7 @@ func (w witness) collection() (float64, error) {
 		if swapped {
 			p.SignalDeg, p.IdlerDeg = p.IdlerDeg, p.SignalDeg
 		}
-		if half := w.plan.Result.HalfWidth.Degrees(); w.plan.Result.PlateauOf != "" && math.Abs(p.IdlerDeg-w.middle(m, p)) > half {
+		if half := w.plan.Results[0].HalfWidth.Degrees(); w.plan.Results[0].PlateauOf != "" && math.Abs(p.IdlerDeg-w.middle(m, p)) > half {
 			continue
 		}
 		if _, known := share[p]; !known {
@@ -148,10 +148,10 @@ func (w witness) profile() func(float64) float64 {
 		return nil
 	}
 	base := w.pose(w.lights[0])
-	of := string(w.plan.Result.Of)
+	of := string(w.plan.Results[0].Of)
 	return func(deg float64) float64 {
 		p := base
-		w.put(&p, string(w.plan.Result.Along), deg)
+		w.put(&p, string(w.plan.Results[0].Along), deg)
 		r := m.Rates(p)
 		switch of {
 		case w.channelOf(w.file.Optics.Signal):

@@ -53,7 +53,7 @@ func With(ctx context.Context, book *logbook.Book, run protocol.RunID, o Options
 	if err != nil {
 		return estimate.Result{}, err
 	}
-	if plan.Result == nil {
+	if len(plan.Results) == 0 {
 		return estimate.Result{}, fmt.Errorf("run %s: %w", run, ErrNoResult)
 	}
 	rows, err := rowsOf(ctx, book, row, plan)
@@ -69,26 +69,26 @@ func Result(rows estimate.Rows, file *bench.File, plan scan.Plan, o Options) (es
 	m, warnings := model(file, plan, rows)
 	var result estimate.Result
 	var err error
-	switch plan.Result.Kind {
+	switch plan.Results[0].Kind {
 	case scan.Efficiency:
-		q := estimate.Question{Trigger: armOf(file, plan.Result.Trigger), UnderTest: armOf(file, plan.Result.UnderTest), Off: map[estimate.Step]bool{},
+		q := estimate.Question{Trigger: armOf(file, plan.Results[0].Trigger), UnderTest: armOf(file, plan.Results[0].UnderTest), Off: map[estimate.Step]bool{},
 			Displaced: o.Displaced, MonteCarlo: o.Trials, Seed: o.Seed}
 		for _, step := range o.Off {
 			q.Off[step] = true
 		}
-		if plan.Result.PlateauOf != "" {
-			q.Use = &estimate.Plateau{Axis: string(plan.Result.PlateauOf), HalfWidthDeg: plan.Result.HalfWidth.Degrees()}
+		if plan.Results[0].PlateauOf != "" {
+			q.Use = &estimate.Plateau{Axis: string(plan.Results[0].PlateauOf), HalfWidthDeg: plan.Results[0].HalfWidth.Degrees()}
 		}
 		result, err = estimate.Efficiency(rows, b, m, q)
 	case scan.Peak:
 		result, err = estimate.Peak(rows, b, m, estimate.PeakQuestion{
-			Axis: string(plan.Result.Along), Channel: string(plan.Result.Of), Shape: estimate.PeakShape(plan.Result.Profile), Power: string(plan.Result.Power),
+			Axis: string(plan.Results[0].Along), Channel: string(plan.Results[0].Of), Shape: estimate.PeakShape(plan.Results[0].Profile), Power: string(plan.Results[0].Power),
 		})
 	default:
-		return estimate.Result{}, fmt.Errorf("result of kind %q; want efficiency or peak", plan.Result.Kind)
+		return estimate.Result{}, fmt.Errorf("result of kind %q; want efficiency or peak", plan.Results[0].Kind)
 	}
 	if refusal, ok := errors.AsType[*estimate.Refusal](err); ok {
-		return estimate.Refused(rows, string(plan.Result.Kind), refusal), nil
+		return estimate.Refused(rows, string(plan.Results[0].Kind), refusal), nil
 	}
 	result.Warnings = append(result.Warnings, warnings...)
 	return result, err
@@ -104,7 +104,7 @@ func rowsOf(ctx context.Context, book *logbook.Book, row logbook.RunRow, plan sc
 		if r.Doubtful {
 			rows.Doubtful[r.Sequence] = r.Doubt
 		}
-		if r.Kind == protocol.Light && !stands(r.Reading, plan.Result.At) {
+		if r.Kind == protocol.Light && !stands(r.Reading, plan.Results[0].At) {
 			continue
 		}
 		rows.Readings = append(rows.Readings, r.Reading)

@@ -63,11 +63,32 @@ type Config struct {
 	ResumeAfterRestart bool
 	// MayHome is a person's word, given with the start, that axes without a zero may search for it.
 	MayHome bool
-	// Conclude works out the run's result from what is written, as a JSON object; nil: the run has
-	// none. It is asked once, when everything is counted.
-	Conclude func(ctx context.Context) (json.RawMessage, error)
+	// Conclude works out the run's results from what is written, each as a JSON object, in the order
+	// of the plan; nil: the run has none. It is asked when everything is counted.
+	Conclude func(ctx context.Context) ([]json.RawMessage, error)
+	// Replan works the plan out again, for one whose values from earlier results were missing.
+	Replan func(ctx context.Context) (scan.Plan, error)
+	// Judge compares one complete set of references, counted from 1, with an earlier one, from what
+	// is written. It is asked once a set, and again after a restart that came in between.
+	Judge func(ctx context.Context, set, baseline int) (Verdict, error)
+	// Refine decides which points are added, from what is written. It is asked after the first pass,
+	// and after the points of each refinement, until it adds none.
+	Refine func(ctx context.Context, round int) (Refinement, error)
 	// Step, if not nil, is called at every step. Tests kill there.
 	Step func(Step)
+}
+
+// Verdict is what a set of references says about the night so far.
+type Verdict struct {
+	Good   bool
+	Text   string         // one sentence: what changed by how much, and what was allowed
+	Detail map[string]any // the numbers
+}
+
+// Refinement is a decision to add points, or not to.
+type Refinement struct {
+	Points  []scan.Point // each is visited once; none: the refinement is over
+	Grounds string       // one sentence: what the counts say, and why these points
 }
 
 // Engine executes one run. Build it with New, run it with Run, once.
@@ -329,18 +350,21 @@ func (e *Engine) turn(ctx context.Context) error {
 // conclude writes the result. That there is none is told, and is no reason for the run to fail: what
 // was counted stands.
 func (e *Engine) conclude(ctx context.Context) error {
-	if e.Conclude == nil || e.progress.concluded {
+	if e.Conclude == nil || e.progress.concluded || e.progress.results >= len(e.Plan.Results) {
 		return nil
 	}
 	e.rest(ctx) // it may take a while, and nothing moves meanwhile
-	object, err := e.Conclude(ctx)
+	objects, err := e.Conclude(ctx)
 	if err != nil {
 		e.progress.concluded = true
 		return e.note(ctx, protocol.Trouble, "no result: "+err.Error(), nil)
 	}
-	body := &resultBody{object: object}
-	if err := e.write(ctx, protocol.ResultEntry, &body.Head, body, protocol.ResultSchema); err != nil {
-		return err
+	for _, object := range objects[min(e.progress.results, len(objects)):] {
+		body := &resultBody{object: object}
+		if err := e.write(ctx, protocol.ResultEntry, &body.Head, body, protocol.ResultSchema); err != nil {
+			return err
+		}
+		e.progress.results++
 	}
 	e.progress.concluded = true
 	return nil

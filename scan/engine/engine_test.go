@@ -479,11 +479,12 @@ func TestALogbookThatHoldsSomethingElseEndsInTheRestState(t *testing.T) {
 func TestAResultIsWrittenOnceBeforeTheEnd(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
 		asked := 0
-		conclude := func(context.Context) (json.RawMessage, error) {
+		conclude := func(context.Context) ([]json.RawMessage, error) {
 			asked++
-			return json.RawMessage(`{"kind":"efficiency","value":0.57,"run":"somebody else's"}`), nil
+			return []json.RawMessage{json.RawMessage(`{"kind":"efficiency","value":0.57,"run":"somebody else's"}`)}, nil
 		}
-		n := newNight(t, func(c *Config) { c.Conclude = conclude })
+		wanted := func(c *Config) { c.Conclude, c.Plan.Results = conclude, []scan.Result{{Kind: scan.Efficiency}} }
+		n := newNight(t, wanted)
 		if _, err := n.eng.Run(t.Context()); err != nil {
 			t.Fatal(err)
 		}
@@ -493,7 +494,7 @@ func TestAResultIsWrittenOnceBeforeTheEnd(t *testing.T) {
 			t.Errorf("entry %d is a %s: %s, %v; want the result with the head of this entry", e.Sequence, e.Kind, e.Body, err)
 		}
 		// Cut before the end: the result is there already and is not worked out again.
-		again := newNight(t, func(c *Config) { c.Conclude = conclude })
+		again := newNight(t, wanted)
 		again.memory.entries = slices.Clone(n.entries[:len(n.entries)-1])
 		c := again.eng.Config
 		c.Past, c.ResumeAfterRestart = again.fold(t), true
@@ -507,7 +508,8 @@ func TestAResultIsWrittenOnceBeforeTheEnd(t *testing.T) {
 func TestARunWithoutItsResultStillFinishes(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
 		n := newNight(t, func(c *Config) {
-			c.Conclude = func(context.Context) (json.RawMessage, error) { return nil, errors.New("the file is gone") }
+			c.Plan.Results = []scan.Result{{Kind: scan.Efficiency}}
+			c.Conclude = func(context.Context) ([]json.RawMessage, error) { return nil, errors.New("the file is gone") }
 		})
 		state, err := n.eng.Run(t.Context())
 		if state != protocol.Finished || err != nil || !strings.Contains(kinds(n.events(t)), "trouble ended") {

@@ -30,7 +30,8 @@ type Progress struct {
 	done        map[scan.Visit]bool             // accepted or given up
 	attempts    map[taskKey]int                 // failed since the last success or resume
 	series      map[taskKind]series             // what is repeated beside the points
-	concluded   bool                            // the result is written
+	results     int                             // written so far
+	concluded   bool                            // all of them are, or there are none to be had
 	guard       string                          // the guard that broke last
 	cut         bool                            // the schedule left the rest of the sweep out
 	stand       map[drivers.AxisName]unit.Angle // where the axes have to be that the sweep does not move; nil until that is written
@@ -128,7 +129,9 @@ func (p *Progress) Fold(entry protocol.Entry) error {
 		p.applyPoints(&pts)
 		head = pts.Head
 	default:
-		p.concluded = p.concluded || entry.Kind == protocol.ResultEntry
+		if entry.Kind == protocol.ResultEntry {
+			p.results++
+		}
 		if err := json.Unmarshal(entry.Body, &head); err != nil {
 			return fmt.Errorf("run %s: entry %d: %w", entry.Run, entry.Sequence, err)
 		}

@@ -32,8 +32,8 @@ result: {kind: efficiency, trigger: signal, under_test: idler, use: {plateau_of:
 			t.Errorf("%s: %v; want it taken", at, err)
 		case want != "" && (err == nil || !strings.Contains(err.Error(), want)):
 			t.Errorf("%s: %v; want %q in it", at, err, want)
-		case want == "" && (len(plan.Result.At) != 1 || plan.Result.At[0].Angle != 3*unit.Degree):
-			t.Errorf("%s: planned as %v", at, plan.Result.At)
+		case want == "" && (len(plan.Results[0].At) != 1 || plan.Results[0].At[0].Angle != 3*unit.Degree):
+			t.Errorf("%s: planned as %v", at, plan.Results[0].At)
 		}
 	}
 }

@@ -36,6 +36,23 @@ type Facts struct {
 	// tilted so; bench angles in degrees. An error says why there is none. Nil: the optics are not
 	// described.
 	Conjugate func(role string, armDeg, tiltDeg float64) (partnerDeg float64, err error)
+
+	KeepOuts []scan.KeepOut
+
+	// Emission says at which bench angle an arm of this role sees the light of its filter's centre,
+	// for a crystal tilted so; degrees. Nil: the optics are not described.
+	Emission func(role string, tiltDeg float64) (deg float64, err error)
+	// Flanks are the bench angles of an arm at which coincidences fall to half, with everything else
+	// at the places given. Nil: the optics are not described.
+	Flanks func(arm drivers.AxisName, top []scan.AxisTarget) (low, high unit.Angle, err error)
+	// Expect says what the declared source gives at a place; axes and settings that it does not name
+	// stand at park, at zero without one, or where the optics declare them. Nil: the optics are not
+	// described.
+	Expect func(axes []scan.AxisTarget, settings []scan.SettingTarget) (scan.Expected, error)
+
+	// Earlier finds the value of an earlier result; its error says why there is none. Nil: there is
+	// no logbook to ask, and all values are open.
+	Earlier func(scan.EarlierAsk) (scan.EarlierSource, error)
 }
 
 // Setting is one setting a sweep may step.
@@ -85,7 +102,10 @@ func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 	if err := strict.Join(findings...); err != nil {
 		return scan.Plan{}, err
 	}
-	plan := scan.Plan{Title: r.Title, Points: r.expand(f, follow), Dwell: r.Dwell, Repeat: r.Repeat, Background: background, Guards: guards, Schedule: schedule, Trouble: r.Trouble, Result: result}
+	plan := scan.Plan{Title: r.Title, Points: r.expand(f, follow), Dwell: r.Dwell, Repeat: r.Repeat, Background: background, Guards: guards, Schedule: schedule, Trouble: r.Trouble}
+	if result != nil {
+		plan.Results = []scan.Result{*result}
+	}
 	plan.Dwell.Trigger = trigger
 	if r.Dark != nil {
 		dark := r.Dark.Cadence

@@ -330,12 +330,12 @@ func TestAnEfficiencyNamesItsDetectorsAndItsReadings(t *testing.T) {
 			scan.Result{Kind: scan.Peak, Of: "b", Along: "idler_arm"}},
 	} {
 		t.Run(c.name, func(t *testing.T) {
-			if got := planOf(t, c.body).Result; !reflect.DeepEqual(got, &c.want) {
+			if got := planOf(t, c.body).Results; !reflect.DeepEqual(got, []scan.Result{c.want}) {
 				t.Errorf("got  %+v\nwant %+v", got, c.want)
 			}
 		})
 	}
-	if got := planOf(t, acrossIdler).Result; got != nil {
+	if got := planOf(t, acrossIdler).Results; got != nil {
 		t.Errorf("a recipe without result has %+v; want none", got)
 	}
 }
