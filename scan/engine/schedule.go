@@ -29,8 +29,20 @@ func (e *Engine) early(ctx context.Context) (waited bool) {
 func (e *Engine) cutAtEnd(ctx context.Context, t task) (cut bool, err error) {
 	end := e.Plan.Schedule.FinishBy
 	p := &e.progress
-	if end.IsZero() || t.kind != lightTask || p.cut {
+	if !p.tooLate(t, e.now()) {
 		return false, nil
+	}
+	left := len(p.visits) - len(p.done)
+	return true, e.note(ctx, protocol.SetAside, fmt.Sprintf("%d visits are left out: they would not be over by %s", left, end.Format("15:04")),
+		map[string]any{"task": string(restTask), "left_out": left, "finish_by": protocol.Time{Time: end}.String()})
+}
+
+// tooLate is the rule that the cut goes by: whether a visit that begins now, and the closing readings
+// after it, would not be over by the schedule's end.
+func (p *Progress) tooLate(t task, now time.Time) bool {
+	end := p.thePlan.Schedule.FinishBy
+	if end.IsZero() || t.kind != lightTask || p.cut {
+		return false
 	}
 	need := t.dwell.Time + overhead
 	if p.spentOn > 0 {
@@ -41,10 +53,5 @@ func (e *Engine) cutAtEnd(ctx context.Context, t task) (cut bool, err error) {
 			need += c.Dwell.Time + overhead
 		}
 	}
-	if !e.now().Add(need).After(end) {
-		return false, nil
-	}
-	left := len(p.visits) - len(p.done)
-	return true, e.note(ctx, protocol.SetAside, fmt.Sprintf("%d visits are left out: they would not be over by %s", left, end.Format("15:04")),
-		map[string]any{"task": string(restTask), "left_out": left, "finish_by": protocol.Time{Time: end}.String()})
+	return now.Add(need).After(end)
 }
