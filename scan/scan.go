@@ -64,6 +64,14 @@ type EarlierAsk struct {
 	BelowValue   float64            // the same of a setting, in its unit
 }
 
+// Of names the axis or the setting that a value is for.
+func (a EarlierAsk) Of() string {
+	if a.Axis != "" {
+		return string(a.Axis)
+	}
+	return string(a.Setting)
+}
+
 // EarlierSource is where a value came from.
 type EarlierSource struct {
 	Run      string     // the run that measured it

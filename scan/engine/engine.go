@@ -110,6 +110,7 @@ type Engine struct {
 	homing     bool                             // a person allowed the next search for the zero
 	deaf       map[drivers.DeviceName]time.Time // sensors that do not answer, and when they were last tried
 	unheard    error                            // what made a sensor deaf in the last dwell
+	warm       *warmUp                          // what is seen of the sensors while they become steady
 
 	mu       sync.Mutex // guards what follows
 	pending  []*order
@@ -248,17 +249,10 @@ func (e *Engine) decidePoints(ctx context.Context) error {
 			if err != nil || !ready {
 				return err
 			}
-			body.Stand = stand
+			body.Stand, body.Earlier = stand, e.earlierBody()
 		}
 		for i := from; i < to; i++ {
-			point := protocol.Point{Point: i, Axes: []protocol.AxisTarget{}}
-			for _, t := range e.Plan.Points[i].Axes {
-				point.Axes = append(point.Axes, protocol.AxisTarget{Axis: string(t.Axis), Target: t.Angle})
-			}
-			for _, s := range e.Plan.Points[i].Settings {
-				point.Settings = append(point.Settings, protocol.SettingValue{Name: string(s.Setting), Target: s.Value, Unit: e.settingUnit(s.Setting)})
-			}
-			body.Points = append(body.Points, point)
+			body.Points = append(body.Points, e.pointBody(i, e.Plan.Points[i]))
 		}
 		if err := e.write(ctx, protocol.PointEntry, &body.Head, body, protocol.PointSchema); err != nil {
 			return err
@@ -266,6 +260,17 @@ func (e *Engine) decidePoints(ctx context.Context) error {
 		e.progress.applyPoints(body)
 	}
 	return nil
+}
+
+func (e *Engine) pointBody(index int, p scan.Point) protocol.Point {
+	body := protocol.Point{Point: index, Axes: []protocol.AxisTarget{}, Empty: p.Empty}
+	for _, t := range p.Axes {
+		body.Axes = append(body.Axes, protocol.AxisTarget{Axis: string(t.Axis), Target: t.Angle})
+	}
+	for _, s := range p.Settings {
+		body.Settings = append(body.Settings, protocol.SettingValue{Name: string(s.Setting), Target: s.Value, Unit: e.settingUnit(s.Setting)})
+	}
+	return body
 }
 
 func (e *Engine) grounds() string {
@@ -322,11 +327,23 @@ func (e *Engine) turn(ctx context.Context) error {
 	if e.progress.State == protocol.Holding {
 		return e.waitOut(ctx)
 	}
+	if e.progress.Decided == 0 && len(e.Plan.Open()) > 0 {
+		return e.findEarlier(ctx)
+	}
 	if e.progress.Decided < len(e.Plan.Points) {
 		return e.decidePoints(ctx)
 	}
+	if e.progress.ref.pending {
+		return e.judge(ctx)
+	}
+	if waited, err := e.warming(ctx); waited || err != nil {
+		return err
+	}
 	if e.early(ctx) {
 		return nil
+	}
+	if e.refinable() {
+		return e.refine(ctx)
 	}
 	task, ok := e.progress.next(e.now())
 	if ok {
@@ -341,7 +358,18 @@ func (e *Engine) turn(ctx context.Context) error {
 		if err := e.conclude(ctx); err != nil {
 			return err
 		}
+		if who := e.progress.cutBy; who != "" {
+			return e.end(ctx, protocol.Stopped, fmt.Sprintf("stopped by %s after a point: %d of %d readings accepted, the closing ones among them", who, e.progress.Accepted, e.progress.Planned()), map[string]any{"who": who})
+		}
 		return e.end(ctx, protocol.Finished, fmt.Sprintf("finished: %d of %d readings accepted, %d set aside", e.progress.Accepted, e.progress.Planned(), e.progress.SetAside), nil)
+	}
+	if task.kind == lightTask {
+		if b, again := e.oldReference(); again {
+			e.progress.ref.due = true
+			return nil
+		} else if b != nil {
+			return e.afterGuard(ctx, task, b)
+		}
 	}
 	e.step(StepDecided)
 	return e.perform(ctx, task)
@@ -402,7 +430,7 @@ func (e *Engine) putBack(ctx context.Context) (done bool, err error) {
 	op, end := e.operation(ctx)
 	defer end()
 	if err = e.protect(op); err == nil {
-		_, err = e.goTo(op, e.stay(e.Plan.Points[e.progress.nearest().Point].Axes))
+		_, err = e.goTo(op, e.stay(e.progress.point(e.progress.nearest().Point).Axes))
 	}
 	switch {
 	case op.Err() != nil:

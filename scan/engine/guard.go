@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"math"
 	"time"
 
 	"gemel/drivers"
@@ -16,10 +17,14 @@ type brokenGuard struct {
 	guard scan.Guard
 	value float64
 	unit  string
-	err   error // the sensor did not answer
+	err   error  // the sensor did not answer
+	text  string // what is wrong, where it is no value outside bounds
 }
 
 func (b *brokenGuard) Error() string {
+	if b.text != "" {
+		return fmt.Sprintf("guard %s: %s", b.guard.Name, b.text)
+	}
 	if b.err != nil {
 		return fmt.Sprintf("guard %s: the sensor does not answer: %v", b.guard.Name, b.err)
 	}
@@ -30,6 +35,9 @@ func (b *brokenGuard) Error() string {
 // well.
 func (e *Engine) checkGuards(ctx context.Context) error {
 	for _, g := range e.Plan.Guards {
+		if g.Sensor == "" {
+			continue
+		}
 		s := e.sensor(g.Sensor)
 		value, err := s.Read(ctx)
 		if err != nil && ctx.Err() == nil && drivers.RemedyOf(err) == drivers.Reconnect {
@@ -54,6 +62,9 @@ func (e *Engine) checkGuards(ctx context.Context) error {
 // its bounds for a moment was seen by the dwell, too.
 func (e *Engine) judgeGuards(w *watch) error {
 	for _, g := range e.Plan.Guards {
+		if g.Sensor == "" {
+			continue
+		}
 		seen := false
 		for _, q := range w.sum {
 			if q.Sensor != string(g.Sensor) || q.Samples == 0 {
@@ -73,16 +84,77 @@ func (e *Engine) judgeGuards(w *watch) error {
 	return nil
 }
 
+// judgeRates holds one gate of a light dwell against the guards of rates. A background's rates are
+// others by design.
+func (e *Engine) judgeRates(kind taskKind, gate protocol.Slice) error {
+	if kind != lightTask {
+		return nil
+	}
+	return e.outOfBounds(func(g scan.Guard) drivers.Channel { return g.Rate }, gate.Counts, gate.Gate.Duration())
+}
+
+// judgeDark holds a dark against the guards of dark rates.
+func (e *Engine) judgeDark(r *protocol.Reading) error {
+	if r.Kind != protocol.Dark {
+		return nil
+	}
+	return e.outOfBounds(func(g scan.Guard) drivers.Channel { return g.DarkRate }, r.Counts, r.Gate.Duration())
+}
+
+// outOfBounds finds a guard whose channel's rate is outside its bounds by more than four times what
+// the count itself scatters: a short gate must not break a guard that a long one meets.
+func (e *Engine) outOfBounds(of func(scan.Guard) drivers.Channel, counts []protocol.Count, gate time.Duration) error {
+	for _, g := range e.Plan.Guards {
+		if of(g) == "" || gate <= 0 {
+			continue
+		}
+		rate := rateOf(counts, of(g), gate)
+		low, high := g.Low*gate.Seconds(), g.High*gate.Seconds()
+		n := rate * gate.Seconds()
+		if n < low-4*math.Sqrt(low) || n > high+4*math.Sqrt(high)+4 {
+			return &brokenGuard{guard: g, value: rate, unit: "/s"}
+		}
+	}
+	return nil
+}
+
+// oldReference finds a guard that wants a younger reference, now that light would be counted next.
+// again says that one can be had: the last set was not the last thing done.
+func (e *Engine) oldReference() (b *brokenGuard, again bool) {
+	p := &e.progress
+	for _, g := range e.Plan.Guards {
+		if g.ReferenceAge == 0 {
+			continue
+		}
+		if age := e.now().Sub(p.ref.goodAt); age > g.ReferenceAge {
+			text := fmt.Sprintf("the last good reference is %s old; want at most %s", age.Round(time.Second), g.ReferenceAge)
+			if p.ref.goodAt.IsZero() {
+				text = "there is no good reference"
+			}
+			return &brokenGuard{guard: g, text: text}, p.sinceOf(referenceTask) > 0
+		}
+	}
+	return nil, false
+}
+
 // afterGuard does what the recipe says of a guard that broke at a task.
 func (e *Engine) afterGuard(ctx context.Context, t task, b *brokenGuard) error {
-	detail := map[string]any{"guard": b.guard.Name, "sensor": string(b.guard.Sensor), "low": b.guard.Low, "high": b.guard.High, "unit": b.unit}
-	if b.err == nil {
+	detail := map[string]any{"guard": b.guard.Name, "low": b.guard.Low, "high": b.guard.High, "unit": b.unit}
+	switch g := b.guard; {
+	case g.Sensor != "":
+		detail["sensor"] = string(g.Sensor)
+	case g.Rate != "":
+		detail["channel"] = string(g.Rate)
+	case g.DarkRate != "":
+		detail["channel"] = string(g.DarkRate)
+	}
+	if b.err == nil && b.text == "" {
 		detail["value"] = b.value
 	}
 	switch b.guard.Otherwise {
 	case scan.Skip:
-		if err := e.note(ctx, protocol.GuardBroken, b.Error(), detail); err != nil {
-			return err
+		if err := e.note(ctx, protocol.GuardBroken, b.Error(), detail); err != nil || b.guard.DarkRate != "" {
+			return err // the dark itself is sound
 		}
 		skipped := keyDetail(t)
 		skipped["reason"] = b.Error()
@@ -92,6 +164,9 @@ func (e *Engine) afterGuard(ctx context.Context, t task, b *brokenGuard) error {
 			return err
 		}
 		return e.end(ctx, protocol.Failed, "failed: "+b.Error(), detail)
+	}
+	if b.guard.ReferenceAge > 0 {
+		return e.holdFor(ctx, protocol.ByTrouble, "held: "+b.Error(), detail)
 	}
 	bad := e.rest(ctx)
 	e.waitsSince = e.now()
@@ -103,6 +178,11 @@ const guardEvery = 10 * time.Second
 
 // lookAtGuards ends the hold when every guard is met again.
 func (e *Engine) lookAtGuards(ctx context.Context) error {
+	if g, ok := e.guardNamed(e.progress.guard); ok && g.Sensor == "" {
+		if met, err := e.lookAtRate(ctx, g); !met || err != nil {
+			return err
+		}
+	}
 	op, end := e.operation(ctx)
 	err := e.checkGuards(op)
 	interrupted := op.Err() != nil
@@ -124,13 +204,47 @@ func (e *Engine) lookAtGuards(ctx context.Context) error {
 	return nil
 }
 
+// lookAtRate counts one gate as the guard's readings are counted, at the place where the axes stand,
+// and says whether its rate is within bounds again. What it saw is written as a check.
+func (e *Engine) lookAtRate(ctx context.Context, g scan.Guard) (met bool, err error) {
+	against, interrupted, err := e.check(ctx, g.Rate != "", func(r *protocol.Reading) error {
+		channel := func(q scan.Guard) drivers.Channel {
+			if q.Name != g.Name {
+				return ""
+			}
+			return q.Rate + q.DarkRate
+		}
+		return e.outOfBounds(channel, r.Counts, r.Gate.Duration())
+	})
+	if err != nil || interrupted || against == nil {
+		return against == nil && !interrupted, err
+	}
+	if _, bright := errors.AsType[*brightness](against); bright {
+		return false, e.holdFor(ctx, protocol.ByLight, "held: "+against.Error(), nil)
+	}
+	if _, broken := errors.AsType[*brokenGuard](against); !broken && drivers.RemedyOf(against) > drivers.Retry {
+		if err := e.trouble(ctx, against); err != nil {
+			return false, err
+		}
+		return false, e.connectQuietly(ctx)
+	}
+	return false, nil
+}
+
+func (e *Engine) guardNamed(name string) (scan.Guard, bool) {
+	for _, g := range e.Plan.Guards {
+		if g.Name == name {
+			return g, true
+		}
+	}
+	return scan.Guard{}, false
+}
+
 // patienceNow is how long the present hold may last.
 func (e *Engine) patienceNow() time.Duration {
 	if e.progress.holds(protocol.ByGuard) {
-		for _, g := range e.Plan.Guards {
-			if g.Name == e.progress.guard && g.GiveUpAfter > 0 {
-				return g.GiveUpAfter
-			}
+		if g, ok := e.guardNamed(e.progress.guard); ok && g.GiveUpAfter > 0 {
+			return g.GiveUpAfter
 		}
 	}
 	return e.patience

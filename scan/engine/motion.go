@@ -2,6 +2,7 @@ package engine
 
 import (
 	"context"
+	"errors"
 	"fmt"
 	"maps"
 	"time"
@@ -115,14 +116,39 @@ func (e *Engine) due(at map[drivers.AxisName]unit.Angle, targets []scan.AxisTarg
 	return due
 }
 
-// move makes the legs that lead to the targets, with the detectors protected, and settles.
+// legs finds the way, and says whether the pump must be closed for it.
+func (e *Engine) legs(at map[drivers.AxisName]unit.Angle, targets []scan.AxisTarget) (legs [][]scan.AxisTarget, closePump bool, err error) {
+	legs, err = route.Legs(e.Bench.Axes, e.Bench.KeepOuts, at, targets, route.State{})
+	if _, conflict := errors.AsType[*route.Conflict](err); conflict && e.Bench.Pump != nil {
+		if dark, derr := route.Legs(e.Bench.Axes, e.Bench.KeepOuts, at, targets, route.State{PumpClosed: true}); derr == nil {
+			return dark, true, nil
+		}
+	}
+	return legs, false, err
+}
+
+// mayOpen says whether the pump may be opened with the axes where they are.
+func (e *Engine) mayOpen(at map[drivers.AxisName]unit.Angle) error {
+	if err := route.Stand(e.Bench.Axes, e.Bench.KeepOuts, at, route.State{}); err != nil {
+		return &drivers.Error{Op: "open the pump", Device: "route", Remedy: drivers.GiveUp, Err: err}
+	}
+	return nil
+}
+
+// move makes the legs that lead to the targets, with the detectors protected, and settles. Where
+// only a closed pump leaves a way, it is closed, and stays so until the next light.
 func (e *Engine) move(ctx context.Context, at map[drivers.AxisName]unit.Angle, targets []scan.AxisTarget) error {
-	legs, err := route.Legs(e.Bench.Axes, e.Bench.KeepOuts, at, targets, route.State{})
+	legs, closePump, err := e.legs(at, targets)
 	if err != nil {
 		return &drivers.Error{Op: "move", Device: "route", Remedy: drivers.GiveUp, Err: err}
 	}
 	if err := e.protect(ctx); err != nil {
 		return err
+	}
+	if closePump {
+		if err := e.shut(ctx, e.Bench.Pump); err != nil {
+			return err
+		}
 	}
 	e.step(StepMoving)
 	var settle time.Duration

@@ -16,6 +16,7 @@ const (
 	stopOrder   orderKind = "stop"
 	holdOrder   orderKind = "hold"
 	resumeOrder orderKind = "resume"
+	closeOrder  orderKind = "close"
 )
 
 // order is an operator's request on its way to Run's goroutine.
@@ -51,6 +52,13 @@ func (e *Engine) Resume(ctx context.Context, who string) (protocol.RunReply, err
 	return e.request(ctx, resumeOrder, who)
 }
 
+// StopAfterPoint ends the run when the point that is being counted is done and the closing darks,
+// backgrounds and references are taken. It returns when that is written down, at the end of the
+// slice that is open. A run that holds is stopped at once.
+func (e *Engine) StopAfterPoint(ctx context.Context, who string) (protocol.RunReply, error) {
+	return e.request(ctx, closeOrder, who)
+}
+
 func (e *Engine) request(ctx context.Context, kind orderKind, who string) (protocol.RunReply, error) {
 	o := &order{ctx: ctx, kind: kind, who: who, done: make(chan struct{})}
 	e.mu.Lock()
@@ -64,7 +72,7 @@ func (e *Engine) request(ctx context.Context, kind orderKind, who string) (proto
 		return r, nil
 	}
 	e.pending = append(e.pending, o)
-	if e.cancelOp != nil {
+	if e.cancelOp != nil && (kind != closeOrder || e.snapshot.State == protocol.Holding) {
 		e.cancelOp(errOrdered)
 	}
 	e.mu.Unlock()
@@ -85,7 +93,7 @@ func (e *Engine) operation(ctx context.Context) (context.Context, func()) {
 	e.mu.Lock()
 	defer e.mu.Unlock()
 	e.cancelOp = cancel
-	if len(e.pending) > 0 {
+	if slices.ContainsFunc(e.pending, func(o *order) bool { return o.kind != closeOrder }) {
 		cancel(errOrdered)
 	}
 	return op, func() {
@@ -127,6 +135,12 @@ func (e *Engine) obey(ctx context.Context) (done bool, err error) {
 	switch o.kind {
 	case stopOrder:
 		err = e.end(ctx, protocol.Stopped, "stopped by "+o.who, map[string]any{"who": o.who})
+	case closeOrder:
+		if e.progress.State == protocol.Holding {
+			err = e.end(ctx, protocol.Stopped, "stopped by "+o.who, map[string]any{"who": o.who})
+		} else {
+			err = e.cutBy(ctx, o.who)
+		}
 	case holdOrder:
 		if !e.progress.holds(protocol.ByOperator) {
 			err = e.holdFor(ctx, protocol.ByOperator, "held by "+o.who, map[string]any{"who": o.who})
@@ -146,6 +160,38 @@ func (e *Engine) obey(ctx context.Context) (done bool, err error) {
 		}
 	}
 	return true, err
+}
+
+// cutBy leaves the rest of the sweep out by a person's wish. The closing readings follow.
+func (e *Engine) cutBy(ctx context.Context, who string) error {
+	if e.progress.cutBy != "" {
+		return nil
+	}
+	left := e.progress.left()
+	return e.note(ctx, protocol.SetAside, fmt.Sprintf("%s asked to stop after this point: %d visits are left out, closing readings follow", who, left),
+		map[string]any{"task": string(restTask), "left_out": left, "who": who})
+}
+
+// hearWishes writes, between two slices, that the run is to stop after this point.
+func (e *Engine) hearWishes(ctx context.Context) error {
+	e.mu.Lock()
+	var o *order
+	if len(e.pending) > 0 && e.pending[0].kind == closeOrder {
+		o, e.pending = e.pending[0], e.pending[1:]
+	}
+	e.mu.Unlock()
+	if o == nil {
+		return nil
+	}
+	e.obeying = o
+	err := e.cutBy(ctx, o.who)
+	e.obeying = nil
+	if err != nil {
+		close(o.done)
+		return err
+	}
+	e.answer(o, true)
+	return nil
 }
 
 func (e *Engine) answer(o *order, recorded bool) {

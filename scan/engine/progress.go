@@ -23,9 +23,10 @@ type Progress struct {
 	Causes   []protocol.Cause
 	Reason   string // the text of the last event that changed the state
 	LastAt   time.Time
-	Decided  int // points written so far
+	Decided  int // points of the sweep written so far
 	Accepted int
 	SetAside int
+	Earlier  []protocol.EarlierValue // values that the points took from earlier results
 
 	done        map[scan.Visit]bool             // accepted or given up
 	attempts    map[taskKey]int                 // failed since the last success or resume
@@ -33,7 +34,14 @@ type Progress struct {
 	results     int                             // written so far
 	concluded   bool                            // all of them are, or there are none to be had
 	guard       string                          // the guard that broke last
-	cut         bool                            // the schedule left the rest of the sweep out
+	cut         bool                            // the rest of the sweep is left out, by the schedule or by a person
+	cutBy       string                          // the person; empty: the schedule
+	warm        bool                            // the warm-up is over
+	ref         references                      // where the references stand
+	refined     []scan.Point                    // points added after the first pass
+	refinedAt   time.Time                       // when the first of them were decided
+	refineRound int                             // of the last refinement written
+	refineDone  bool                            // none follows
 	stand       map[drivers.AxisName]unit.Angle // where the axes have to be that the sweep does not move; nil until that is written
 	spent       time.Duration                   // bench time spent on accepted light readings, moves included
 	spentOn     int
@@ -53,6 +61,7 @@ const (
 	lightTask      taskKind = "light"
 	darkTask       taskKind = "dark"
 	backgroundTask taskKind = "background"
+	referenceTask  taskKind = "reference"
 	restTask       taskKind = "rest" // all visits that are left, when the schedule cuts them off
 )
 
@@ -80,10 +89,22 @@ func (p *Progress) cadences() []cadence {
 	if b := p.thePlan.Background; b != nil {
 		all = append(all, cadence{backgroundTask, b.Cadence})
 	}
+	if r := p.thePlan.Reference; r != nil {
+		all = append(all, cadence{referenceTask, r.Cadence})
+	}
 	return all
 }
 
-// task is one reading to take.
+// readings is how many readings one of a cadence consists of.
+func (p *Progress) readings(c cadence) int {
+	if c.kind == referenceTask {
+		return len(p.thePlan.Reference.Places)
+	}
+	return 1
+}
+
+// task is one reading to take. Of a reference the visit's point is the place in the plan's list, and
+// its visit the number of the set.
 type task struct {
 	kind  taskKind
 	visit scan.Visit
@@ -149,6 +170,7 @@ func (p *Progress) clone() Progress {
 	c.attempts = maps.Clone(p.attempts)
 	c.series = maps.Clone(p.series)
 	c.stand = maps.Clone(p.stand)
+	c.refined = slices.Clone(p.refined)
 	c.Causes = slices.Clone(p.Causes)
 	if c.Next == 0 {
 		c.Next = 1
@@ -172,7 +194,18 @@ func (p *Progress) init() {
 func (p *Progress) plan(plan *scan.Plan) {
 	p.thePlan = plan
 	p.visits = plan.Visits()
+	for i := range p.refined {
+		p.visits = append(p.visits, scan.Visit{Point: len(plan.Points) + i, Visit: 1})
+	}
 	p.cursor = 0
+}
+
+// point is one of the sweep's, or one that a refinement added.
+func (p *Progress) point(i int) scan.Point {
+	if n := len(p.thePlan.Points); i >= n {
+		return p.refined[i-n]
+	}
+	return p.thePlan.Points[i]
 }
 
 func (p *Progress) holds(c protocol.Cause) bool { return slices.Contains(p.Causes, c) }
@@ -180,6 +213,9 @@ func (p *Progress) holds(c protocol.Cause) bool { return slices.Contains(p.Cause
 func (p *Progress) applyReading(r *protocol.Reading) {
 	p.init()
 	key, known := readingKey(r)
+	if r.Kind != protocol.Check {
+		p.ref.passed() // it would not have been taken after a bad one
+	}
 	if !r.Accepted {
 		p.SetAside++
 		return
@@ -188,6 +224,10 @@ func (p *Progress) applyReading(r *protocol.Reading) {
 		return
 	}
 	p.Accepted++
+	if key.kind == referenceTask {
+		p.applyReference(r)
+		return
+	}
 	p.finish(key, r.StartedAt.Time)
 	if key.kind == lightTask {
 		if !p.lastLightA.IsZero() {
@@ -208,6 +248,8 @@ func readingKey(r *protocol.Reading) (taskKey, bool) {
 		return taskKey{kind: darkTask}, true
 	case r.Kind == protocol.Background:
 		return taskKey{kind: backgroundTask}, true
+	case r.Kind == protocol.Reference && r.Reference != nil:
+		return taskKey{referenceTask, scan.Visit{Point: r.Reference.Place, Visit: r.Reference.Set}}, true
 	}
 	return taskKey{}, false
 }
@@ -224,6 +266,10 @@ func (p *Progress) finish(key taskKey, startedAt time.Time) {
 		}
 		return
 	}
+	if key.kind == referenceTask { // given up, and with it the set
+		p.ref.abandon()
+		p.ref.due = false
+	}
 	p.series[key.kind] = series{taken: p.series[key.kind].taken + 1, at: startedAt, after: true}
 }
 
@@ -236,13 +282,45 @@ func (p *Progress) sinceOf(kind taskKind) int {
 }
 
 func (p *Progress) applyPoints(pts *protocol.Points) {
+	if pts.Refined > 0 {
+		p.applyRefinement(pts)
+		return
+	}
 	p.Decided += len(pts.Points)
+	if pts.Earlier != nil {
+		p.Earlier = pts.Earlier
+	}
 	if pts.Stand == nil {
 		return
 	}
 	p.stand = map[drivers.AxisName]unit.Angle{}
 	for _, t := range pts.Stand {
 		p.stand[drivers.AxisName(t.Axis)] = t.Target
+	}
+}
+
+// applyRefinement adds points at the end of the list. One without points is the last.
+func (p *Progress) applyRefinement(pts *protocol.Points) {
+	p.refineRound = pts.Refined
+	if len(pts.Points) == 0 {
+		p.refineDone = true
+		return
+	}
+	if p.refinedAt.IsZero() {
+		p.refinedAt = pts.At.Time
+	}
+	for _, q := range pts.Points {
+		point := scan.Point{}
+		for _, t := range q.Axes {
+			point.Axes = append(point.Axes, scan.AxisTarget{Axis: drivers.AxisName(t.Axis), Angle: t.Target})
+		}
+		for _, t := range q.Settings {
+			point.Settings = append(point.Settings, scan.SettingTarget{Setting: drivers.DeviceName(t.Name), Value: t.Target})
+		}
+		p.refined = append(p.refined, point)
+		if p.thePlan != nil {
+			p.visits = append(p.visits, scan.Visit{Point: q.Point, Visit: 1})
+		}
 	}
 }
 
@@ -255,6 +333,7 @@ func (p *Progress) applyEvent(ev *protocol.Event) {
 		p.State = ev.State
 		p.Causes = slices.Clone(ev.Causes)
 	}
+	p.ref.applyEvent(ev)
 	switch ev.Kind {
 	case protocol.Began:
 		p.startedAt = ev.At.Time
@@ -268,6 +347,10 @@ func (p *Progress) applyEvent(ev *protocol.Event) {
 		}
 	case protocol.WentOn, protocol.GuardMended:
 		p.lastLightA = time.Time{}
+		if _, warm := ev.Detail["warm_up"]; warm {
+			p.warm = true
+			return
+		}
 		if _, mended := ev.Detail["cause"]; !mended {
 			clear(p.attempts) // a person or a restart begins anew; what mended itself does not
 		}
@@ -278,6 +361,7 @@ func (p *Progress) applyEvent(ev *protocol.Event) {
 	case protocol.SetAside:
 		if key, ok := eventKey(ev.Detail); ok && key.kind == restTask {
 			p.cut = true
+			p.cutBy, _ = ev.Detail["who"].(string)
 		} else if ok {
 			p.finish(key, ev.At.Time)
 		}
@@ -286,44 +370,53 @@ func (p *Progress) applyEvent(ev *protocol.Event) {
 
 func keyDetail(t task) map[string]any {
 	d := map[string]any{"task": string(t.kind)}
-	if t.kind == lightTask {
+	if t.kind == lightTask || t.kind == referenceTask {
 		d["point"], d["visit"] = t.visit.Point, t.visit.Visit
 	}
 	return d
 }
 
 func eventKey(detail map[string]any) (taskKey, bool) {
-	number := func(name string) int {
-		switch v := detail[name].(type) {
-		case float64:
-			return int(v)
-		case int:
-			return v
-		}
-		return 0
-	}
+	number := func(name string) int { return numberIn(detail, name) }
 	kind, _ := detail["task"].(string)
 	switch taskKind(kind) {
-	case lightTask:
-		return taskKey{lightTask, scan.Visit{Point: number("point"), Visit: number("visit")}}, true
+	case lightTask, referenceTask:
+		return taskKey{taskKind(kind), scan.Visit{Point: number("point"), Visit: number("visit")}}, true
 	case darkTask, backgroundTask, restTask:
 		return taskKey{kind: taskKind(kind)}, true
 	}
 	return taskKey{}, false
 }
 
+// numberIn reads a whole number of a detail, as it was made or as JSON gave it back; 0: there is none.
+func numberIn(detail map[string]any, name string) int {
+	switch v := detail[name].(type) {
+	case float64:
+		return int(v)
+	case int:
+		return v
+	case int64:
+		return int(v)
+	}
+	return 0
+}
+
 // next returns the reading that is due now, and false when the plan is done.
 func (p *Progress) next(now time.Time) (task, bool) {
-	for p.cursor < len(p.visits) && p.done[p.visits[p.cursor]] {
-		p.cursor++
+	all := p.visited() || p.cut
+	if place, begun := p.ref.begun(); begun {
+		return p.referenceAt(place, p.ref.set), true
 	}
-	all := p.cursor >= len(p.visits) || p.cut
 	for _, c := range p.cadences() {
 		had := p.series[c.kind]
 		due := c.AtStart && had.taken == 0 && len(p.done) == 0 ||
 			!all && c.EveryPoints > 0 && p.sinceOf(c.kind) >= c.EveryPoints ||
 			!all && c.Every > 0 && !now.Before(p.lastOrStart(c.kind).Add(c.Every)) ||
+			!all && c.kind == referenceTask && p.ref.due ||
 			all && c.AtEnd && !had.after
+		if due && c.kind == referenceTask {
+			return p.referenceAt(0, p.ref.set+1), true
+		}
 		if due {
 			return task{kind: c.kind, dwell: c.Dwell}, true
 		}
@@ -332,6 +425,14 @@ func (p *Progress) next(now time.Time) (task, bool) {
 		return task{}, false
 	}
 	return task{kind: lightTask, visit: p.visits[p.cursor], dwell: p.thePlan.Dwell}, true
+}
+
+// visited says whether every visit that is decided was made or given up.
+func (p *Progress) visited() bool {
+	for p.cursor < len(p.visits) && p.done[p.visits[p.cursor]] {
+		p.cursor++
+	}
+	return p.cursor >= len(p.visits)
 }
 
 // nearest is the visit that is next, or the last one when all are done: where the arms are for
@@ -353,7 +454,7 @@ func (p *Progress) Planned() int {
 	}
 	n := len(p.done) + p.left()
 	for _, c := range p.cadences() {
-		n += p.series[c.kind].taken + p.ahead(c)
+		n += (p.series[c.kind].taken + p.ahead(c)) * p.readings(c)
 	}
 	return n
 }
@@ -395,7 +496,7 @@ func (p *Progress) timeLeft() *time.Duration {
 	}
 	total := time.Duration(p.left()) * each
 	for _, c := range p.cadences() {
-		total += time.Duration(p.ahead(c)) * c.Dwell.Time
+		total += time.Duration(p.ahead(c)*p.readings(c)) * c.Dwell.Time
 	}
 	return &total
 }

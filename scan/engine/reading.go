@@ -52,6 +52,9 @@ func (e *Engine) perform(ctx context.Context, t task) error {
 		}
 		e.progress.applyReading(reading)
 		e.publishSnapshot()
+		if err == nil && reading.Accepted {
+			err = e.judgeDark(reading)
+		}
 	}
 	if werr := e.tellDeaf(ctx); werr != nil {
 		return werr
@@ -79,7 +82,7 @@ func (e *Engine) protectNow(ctx context.Context) {
 func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 	r := &protocol.Reading{Kind: protocol.ReadingKind(t.kind), Simulated: e.simulated, Attempt: e.progress.attempts[t.key()] + 1,
 		Settings: []protocol.Setting{}, Sensors: []protocol.Sensor{}, Counts: []protocol.Count{}, Slices: []protocol.Slice{}, Angles: []protocol.Angle{}}
-	point := e.Plan.Points[e.progress.nearest().Point]
+	point := e.progress.point(e.progress.nearest().Point)
 	targets := point.Axes
 	switch t.kind {
 	case lightTask:
@@ -92,6 +95,15 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 	case backgroundTask:
 		b := e.Plan.Background
 		targets = append(slices.Clone(targets), scan.AxisTarget{Axis: b.Axis, Angle: b.From + b.By})
+	case referenceTask:
+		ref := e.Plan.Reference
+		place := ref.Places[t.visit.Point]
+		r.Reference = &protocol.ReferenceOf{Set: t.visit.Visit, Place: t.visit.Point, Places: len(ref.Places), Arm: string(place.Arm), On: string(place.On)}
+		targets = e.withOthers(place.Axes, targets)
+		// Settings that are swept are put where they were first, or each set would be another one.
+		if err := e.set(ctx, r, e.Plan.Points[0].Settings); err != nil {
+			return nil, err
+		}
 	}
 	before, err := e.goTo(ctx, targets)
 	if err != nil {
@@ -104,6 +116,9 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 		if err := e.checkGuards(ctx); err != nil {
 			return nil, err
 		}
+		if err := e.mayOpen(before); err != nil {
+			return nil, err
+		}
 	}
 	if err := e.light(ctx, t.kind != darkTask); err != nil {
 		return nil, err
@@ -111,6 +126,11 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 	e.step(StepLit)
 	if err := e.glance(ctx, r); err != nil {
 		return orNil(r), err
+	}
+	if r.Glance != nil {
+		if err := e.judgeRates(t.kind, *r.Glance); err != nil {
+			return r, err
+		}
 	}
 	watch := newWatch(e)
 	defer func() { e.unheard = watch.fail }()
@@ -138,10 +158,13 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 			return r, err
 		}
 		if t.kind != darkTask {
-			if err := e.judgeGuards(watch); err != nil {
+			if err := errors.Join(e.judgeGuards(watch), e.judgeRates(t.kind, slice)); err != nil {
 				r.Sensors = watch.sums()
 				return r, err
 			}
+		}
+		if err := e.hearWishes(ctx); err != nil {
+			return r, err
 		}
 	}
 	r.Sensors = watch.sums()
@@ -243,6 +266,17 @@ func countOf(counts []protocol.Count, channel drivers.Channel) uint64 {
 		}
 	}
 	return 0
+}
+
+// withOthers adds to targets of some axes where the points' other axes stand now.
+func (e *Engine) withOthers(some, all []scan.AxisTarget) []scan.AxisTarget {
+	out := slices.Clone(some)
+	for _, t := range e.stay(all) {
+		if !slices.ContainsFunc(some, func(s scan.AxisTarget) bool { return s.Axis == t.Axis }) {
+			out = append(out, t)
+		}
+	}
+	return out
 }
 
 // stay turns targets into where those axes were last sent, so that they are proved and not moved.

@@ -32,7 +32,7 @@ func (e *Engine) cutAtEnd(ctx context.Context, t task) (cut bool, err error) {
 	if !p.tooLate(t, e.now()) {
 		return false, nil
 	}
-	left := len(p.visits) - len(p.done)
+	left := p.left()
 	return true, e.note(ctx, protocol.SetAside, fmt.Sprintf("%d visits are left out: they would not be over by %s", left, end.Format("15:04")),
 		map[string]any{"task": string(restTask), "left_out": left, "finish_by": protocol.Time{Time: end}.String()})
 }
@@ -50,8 +50,15 @@ func (p *Progress) tooLate(t task, now time.Time) bool {
 	}
 	for _, c := range p.cadences() {
 		if c.AtEnd {
-			need += c.Dwell.Time + overhead
+			need += time.Duration(p.readings(c)) * (c.Dwell.Time + overhead)
 		}
 	}
 	return now.Add(need).After(end)
+}
+
+func (e *Engine) refineWithin() time.Duration {
+	if e.Plan.Refine == nil {
+		return 0
+	}
+	return e.Plan.Refine.Within
 }

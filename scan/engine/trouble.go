@@ -9,7 +9,9 @@ import (
 
 	"gemel/drivers"
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan"
+	"gemel/scan/route"
 )
 
 // afterError does what an error's remedy asks for, and then takes the reading again or not.
@@ -179,6 +181,12 @@ func (e *Engine) findZero(ctx, op context.Context) error {
 		if !e.homing && !e.Bench.Unattended[s.Name()] {
 			return e.holdFor(ctx, protocol.ByTrouble, fmt.Sprintf("held: %s has lost the zero of %v; resume when the arms may search for it, with somebody there", s.Name(), lost), detail)
 		}
+		if err := e.maySearch(op, lost); err != nil {
+			if op.Err() != nil {
+				return nil
+			}
+			return e.holdFor(ctx, protocol.ByTrouble, "held: "+firstLine(err), detail)
+		}
 		// Said before the search: one that is interrupted may find the zero all the same, and then
 		// nothing else would tell that it was lost.
 		if err := e.note(ctx, protocol.Trouble, fmt.Sprintf("%s has lost the zero of %v and searches for it", s.Name(), lost), detail); err != nil {
@@ -196,6 +204,31 @@ func (e *Engine) findZero(ctx, op context.Context) error {
 	}
 	e.homing = false
 	return nil
+}
+
+// maySearch says whether axes may search their zero, one after another, without entering a keep-out.
+// Only axes that know their zero are believed to stand where they say.
+func (e *Engine) maySearch(ctx context.Context, lost []drivers.AxisName) error {
+	if len(e.Bench.KeepOuts) == 0 {
+		return nil
+	}
+	known := map[drivers.AxisName]unit.Angle{}
+	for _, s := range e.Bench.Stages {
+		homed, err := s.Homed(ctx)
+		if err != nil {
+			return err
+		}
+		at, err := s.Where(ctx)
+		if err != nil {
+			return err
+		}
+		for name, angle := range at {
+			if homed[name] {
+				known[name] = angle
+			}
+		}
+	}
+	return route.HomeOrder(e.Bench.Axes, e.Bench.KeepOuts, known, lost)
 }
 
 // homeOrder is the order the bench file declares, or the controller's own.
@@ -326,6 +359,9 @@ func (e *Engine) waitOut(ctx context.Context) error {
 	switch {
 	case p.holds(protocol.ByGuard):
 		pause = guardEvery
+		if g, ok := e.guardNamed(p.guard); ok && g.Sensor == "" {
+			pause = lookAgain // it opens the light for a moment
+		}
 	case p.holds(protocol.ByLight):
 		pause = lookAgain
 	}
@@ -346,48 +382,67 @@ func (e *Engine) waitOut(ctx context.Context) error {
 // lookAtLight opens the detectors for a moment, with the pump closed, and ends the hold when the
 // light is well. What it saw is written as a check.
 func (e *Engine) lookAtLight(ctx context.Context) error {
-	op, end := e.operation(ctx)
-	r := &protocol.Reading{Kind: protocol.Check, Simulated: e.simulated, Attempt: 1, StartedAt: protocol.Time{Time: e.now()},
-		Settings: []protocol.Setting{}, Sensors: []protocol.Sensor{}, Counts: []protocol.Count{}, Slices: []protocol.Slice{}, Angles: []protocol.Angle{}}
-	err := e.light(op, false)
-	if err == nil {
-		err = e.lookOnce(op, r)
+	against, interrupted, err := e.check(ctx, false, func(*protocol.Reading) error { return nil })
+	if err != nil || interrupted {
+		return err
 	}
-	interrupted := op.Err() != nil
-	end()
-	if bad := e.rest(ctx); bad != "" && err == nil {
-		err = fmt.Errorf("the rest state was not reached after the look: %s", bad)
-	}
-	r.EndedAt = protocol.Time{Time: e.now()}
-	r.Accepted = err == nil
-	if err != nil {
-		r.Reason = err.Error()
-	}
-	if len(r.Slices)+r.LostGates > 0 {
-		if werr := e.write(ctx, protocol.ReadingEntry, &r.Head, r, protocol.ReadingSchema); werr != nil {
-			return werr
-		}
-		e.progress.applyReading(r)
-	}
-	if interrupted {
-		return nil
-	}
-	_, bright := errors.AsType[*brightness](err)
+	_, bright := errors.AsType[*brightness](against)
 	switch {
-	case err == nil:
-		if werr := e.release(ctx, "the light is well again", map[string]any{"cause": protocol.ByLight}, protocol.ByLight); werr != nil {
-			return werr
+	case against == nil:
+		if err := e.release(ctx, "the light is well again", map[string]any{"cause": protocol.ByLight}, protocol.ByLight); err != nil {
+			return err
 		}
 		if e.progress.State == protocol.Running {
 			return e.getReady(ctx, true)
 		}
-	case !bright && drivers.RemedyOf(err) > drivers.Retry:
-		if err := e.trouble(ctx, err); err != nil {
+	case !bright && drivers.RemedyOf(against) > drivers.Retry:
+		if err := e.trouble(ctx, against); err != nil {
 			return err
 		}
 		return e.connectQuietly(ctx)
 	}
 	return nil
+}
+
+// check counts one gate during a hold, with the pump open or closed, and comes back to rest. What it
+// saw is written as a reading of the kind check. against is what speaks against going on: the light,
+// an instrument, or what judge says; err is the logbook's.
+func (e *Engine) check(ctx context.Context, pump bool, judge func(*protocol.Reading) error) (against error, interrupted bool, err error) {
+	op, end := e.operation(ctx)
+	r := &protocol.Reading{Kind: protocol.Check, Simulated: e.simulated, Attempt: 1, StartedAt: protocol.Time{Time: e.now()},
+		Settings: []protocol.Setting{}, Sensors: []protocol.Sensor{}, Counts: []protocol.Count{}, Slices: []protocol.Slice{}, Angles: []protocol.Angle{}}
+	if pump {
+		var at map[drivers.AxisName]unit.Angle
+		if at, against = e.where(op); against == nil {
+			against = e.mayOpen(at)
+		}
+	}
+	if against == nil {
+		against = e.light(op, pump)
+	}
+	if against == nil {
+		against = e.lookOnce(op, r)
+	}
+	if against == nil {
+		against = judge(r)
+	}
+	interrupted = op.Err() != nil
+	end()
+	if bad := e.rest(ctx); bad != "" && against == nil {
+		against = fmt.Errorf("the rest state was not reached after the look: %s", bad)
+	}
+	r.EndedAt = protocol.Time{Time: e.now()}
+	r.Accepted = against == nil
+	if against != nil {
+		r.Reason = against.Error()
+	}
+	if len(r.Slices)+r.LostGates > 0 {
+		if err := e.write(ctx, protocol.ReadingEntry, &r.Head, r, protocol.ReadingSchema); err != nil {
+			return against, interrupted, err
+		}
+		e.progress.applyReading(r)
+	}
+	return against, interrupted, nil
 }
 
 func (e *Engine) lookOnce(ctx context.Context, r *protocol.Reading) error {
