@@ -135,10 +135,11 @@ type Reading struct {
 
 // ReferenceOf says which reading of which set of references one is.
 type ReferenceOf struct {
-	Set   int    `json:"set"`   // from 1
-	Place int    `json:"place"` // in the plan's list of places, from 0
-	Arm   string `json:"arm"`   // whose flank it is; empty: the top, which all arms share
-	On    string `json:"on"`    // low_flank, top or high_flank
+	Set    int    `json:"set"`    // from 1
+	Place  int    `json:"place"`  // in the plan's list of places, from 0
+	Places int    `json:"places"` // how many readings make a set
+	Arm    string `json:"arm"`    // whose flank it is; empty: the top, which all arms share
+	On     string `json:"on"`     // low_flank, top or high_flank
 }
 
 // Angle is where one axis was told to be and where it stood around the dwell, degrees.
@@ -281,21 +282,22 @@ type Beat struct {
 
 // Status is the live state of a bench, as `status --json` prints it.
 type Status struct {
-	Bench            string   `json:"bench"`
-	Version          string   `json:"version"`
-	State            State    `json:"state"` // of the current run; "" when the bench is idle
-	Causes           []Cause  `json:"causes"`
-	Reason           string   `json:"reason"`
-	Run              RunID    `json:"run"`
-	Title            string   `json:"title"`
-	ReadingsAccepted int      `json:"readings_accepted"`
-	ReadingsPlanned  int      `json:"readings_planned"`
-	ReadingsSetAside int      `json:"readings_set_aside"`
-	TimeLeft         *Seconds `json:"time_left_s"` // null while holding, or unknown
-	Queue            []RunID  `json:"queue"`
-	Armed            bool     `json:"armed"`
-	Simulated        *int     `json:"simulated"` // null on a real bench, else the clock factor
-	Behind           int64    `json:"entries_unpublished"`
+	Bench            string       `json:"bench"`
+	Version          string       `json:"version"`
+	State            State        `json:"state"` // of the current run; "" when the bench is idle
+	Causes           []Cause      `json:"causes"`
+	Reason           string       `json:"reason"`
+	Run              RunID        `json:"run"`
+	Title            string       `json:"title"`
+	ReadingsAccepted int          `json:"readings_accepted"`
+	ReadingsPlanned  int          `json:"readings_planned"`
+	ReadingsSetAside int          `json:"readings_set_aside"`
+	TimeLeft         *Seconds     `json:"time_left_s"` // null while holding, or unknown
+	Queue            []RunID      `json:"queue"`
+	Waiting          []WaitingRun `json:"waiting"` // the same with titles
+	Armed            bool         `json:"armed"`
+	Simulated        *int         `json:"simulated"` // null on a real bench, else the clock factor
+	Behind           int64        `json:"entries_unpublished"`
 }
 
 // StartRequest asks for a run. Exactly one of Recipe and RecipeName is set.
