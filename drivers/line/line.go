@@ -32,6 +32,7 @@ type Line struct {
 	record record
 
 	numbered atomic.Uint32
+	letGo    atomic.Bool // its port belongs to another program; see release.go
 
 	mu    sync.Mutex
 	seats []*Seat
@@ -74,6 +75,7 @@ type job struct {
 	seat    *Seat
 	q       Question
 	connect bool
+	release bool
 	reply   chan result // buffered: the owner never waits for the one who asked
 }
 
@@ -101,9 +103,12 @@ func (l *Line) Run(ctx context.Context) error {
 		case u := <-l.urgent:
 			l.do(u, l.passInTurn)
 		case j := <-l.jobs:
-			if j.connect {
+			switch {
+			case j.release:
+				l.do(j, l.release)
+			case j.connect:
 				l.do(j, l.connect)
-			} else {
+			default:
 				l.do(j, l.ask)
 			}
 		}
@@ -527,6 +532,8 @@ func (l *Line) open(j *job, by time.Time) *Fault {
 		switch {
 		case l.port != nil: // opened for the urgent message
 			return nil
+		case l.letGo.Load():
+			return &Fault{Why: Unusable, Err: ErrLetGo}
 		case l.running.Err() != nil:
 			return &Fault{Why: Closed, Err: drivers.ErrClosed}
 		case j.ctx.Err() != nil:
