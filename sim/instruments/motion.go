@@ -216,14 +216,19 @@ func (p *path) follow(at time.Time, x float64, f profile) time.Time {
 	return at
 }
 
-// ramp is a quantity that travels evenly from one value to another, such as a shutter's blade.
+// ramp is a quantity that travels from one value to another: evenly, such as a shutter's blade, or
+// ever more slowly, such as a temperature.
 type ramp struct{ points []rampPoint }
 
 type rampPoint struct {
 	at       time.Time
 	lasts    time.Duration
 	from, to float64
+	lag      time.Duration // time constant of an exponential approach; 0: evenly
 }
+
+// mostLags is when an exponential approach is over: what is left is a few parts in 10⁹ of the way.
+const mostLags = 20
 
 func newRamp(at time.Time, x float64) *ramp {
 	return &ramp{points: []rampPoint{{at: at, from: x, to: x}}}
@@ -236,17 +241,30 @@ func (r *ramp) find(at time.Time) int {
 
 func (r *ramp) value(at time.Time) float64 {
 	p := r.points[r.find(at)]
-	if t := at.Sub(p.at); t < p.lasts && t >= 0 {
+	t := at.Sub(p.at)
+	switch {
+	case t < 0 || t >= p.lasts:
+		return p.to
+	case p.lag > 0:
+		return p.to + (p.from-p.to)*math.Exp(-t.Seconds()/p.lag.Seconds())
+	default:
 		return p.from + (p.to-p.from)*float64(t)/float64(p.lasts)
 	}
-	return p.to
 }
 
 // turn sends the quantity to x from where it is, lasting as given.
 func (r *ramp) turn(at time.Time, x float64, lasts time.Duration) {
-	p := rampPoint{at: at, lasts: lasts, from: r.value(at), to: x}
-	r.points = r.points[:r.find(at)+1]
-	if r.points[len(r.points)-1].at.Equal(at) {
+	r.add(rampPoint{at: at, lasts: lasts, from: r.value(at), to: x})
+}
+
+// drift lets the quantity approach x exponentially, with a time constant.
+func (r *ramp) drift(at time.Time, x float64, lag time.Duration) {
+	r.add(rampPoint{at: at, lasts: mostLags * lag, from: r.value(at), to: x, lag: lag})
+}
+
+func (r *ramp) add(p rampPoint) {
+	r.points = r.points[:r.find(p.at)+1]
+	if r.points[len(r.points)-1].at.Equal(p.at) {
 		r.points[len(r.points)-1] = p
 		return
 	}

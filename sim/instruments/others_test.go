@@ -330,3 +330,56 @@ func TestBytesMayComeOneByOne(t *testing.T) {
 		c.hangUp()
 	})
 }
+
+func TestATemperatureIsReachedEverMoreSlowly(t *testing.T) {
+	bubble(t, func(t *testing.T) {
+		w := world(t, 1, "")
+		s, err := instruments.NewSetting(w, instruments.SettingConfig{Name: "oven", Header: "SOURce:TEMPerature", Low: 10, High: 80, Start: 20,
+			Lag: 40 * time.Second, Within: 0.1, Changes: instruments.CrystalTemperature})
+		if err != nil {
+			t.Fatal(err)
+		}
+		m, err := instruments.NewMonitor(w, instruments.MonitorConfig{Name: "thermometer", Temperature: true})
+		if err != nil {
+			t.Fatal(err)
+		}
+		l, k := plug(t, t.Context(), s), plug(t, t.Context(), m)
+		l.expect(":SOUR:TEMP 30;:SOUR:TEMP?", "3.000000E+01")
+		begun := time.Now()
+		for _, after := range []time.Duration{10 * time.Second, 40 * time.Second, 120 * time.Second} {
+			time.Sleep(after - time.Since(begun))
+			want := 30 - 10*math.Exp(-after.Seconds()/40)
+			if v := number(t, k.ask(":MEAS:TEMP?")); math.Abs(v-want) > 0.01 {
+				t.Errorf("after %v the crystal has %.3f Cel; want %.3f", after, v, want)
+			}
+			l.expect(":STAT:OPER:COND?", "2")
+		}
+		// A tenth of a kelvin of ten is left after ln(100) time constants.
+		time.Sleep(time.Duration(40*math.Log(100)*float64(time.Second)) - time.Since(begun) + 100*time.Millisecond)
+		l.expect(":STAT:OPER:COND?;*OPC?", "0;1")
+		l.expect(":SOUR:TEMP 30.05;:STAT:OPER:COND?", "0") // nearer already than what counts as reached
+		l.hangUp()
+		k.hangUp()
+	})
+}
+
+func TestSettingsThatCannotBeAreRefused(t *testing.T) {
+	bubble(t, func(t *testing.T) {
+		w := world(t, 1, "")
+		good := instruments.SettingConfig{Name: "delay", Header: "SOURce:DELay", Low: 0, High: 1, Changes: instruments.Delay}
+		if _, err := instruments.NewSetting(w, good); err != nil {
+			t.Fatal(err)
+		}
+		for name, c := range map[string]instruments.SettingConfig{
+			"a second delay":                       {Name: "other", Header: "SOURce:DELay", High: 1, Changes: instruments.Delay},
+			"a change of nothing there is":         {Name: "other", Header: "SOURce:FOO", High: 1, Changes: "colour"},
+			"a lag that never ends":                {Name: "other", Header: "SOURce:TEMPerature", High: 1, Lag: time.Second},
+			"both ways to follow":                  {Name: "other", Header: "SOURce:TEMPerature", High: 1, Lag: time.Second, Within: 1, PerSecond: 1},
+			"a start outside of what it can be at": {Name: "other", Header: "SOURce:TEMPerature", High: 1, Start: 2},
+		} {
+			if _, err := instruments.NewSetting(w, c); err == nil {
+				t.Errorf("%s is taken; want it refused", name)
+			}
+		}
+	})
+}

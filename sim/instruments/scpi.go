@@ -70,6 +70,7 @@ const (
 
 // Bits of the status registers that our instruments use.
 const (
+	operationSettling    = 1 << 1
 	operationMeasuring   = 1 << 4
 	questionableTime     = 1 << 2
 	scpiMessageLimit     = 4096

@@ -69,8 +69,8 @@ type World struct {
 	arms    map[string]*axis // by role
 	blades  map[string]*ramp // by what they stand in front of
 	lampHz  *ramp
-	pump    *ramp // share of the still power
-	sets    map[string]*ramp
+	pump    *ramp               // share of the still power
+	sets    map[string]*Setting // by what they change
 	open    map[*gate]bool
 	moments []time.Time // scratch
 }
@@ -99,7 +99,7 @@ func NewWorld(cfg WorldConfig) (*World, error) {
 	}
 	now := time.Now().UTC()
 	w := &World{cfg: cfg, origin: now, pace: time.Duration(cfg.Pace), ledger: cfg.Ledger,
-		arms: map[string]*axis{}, blades: map[string]*ramp{}, sets: map[string]*ramp{}, open: map[*gate]bool{},
+		arms: map[string]*axis{}, blades: map[string]*ramp{}, sets: map[string]*Setting{}, open: map[*gate]bool{},
 		lampHz: newRamp(now, 0), pump: newRamp(now, 1)}
 	w.mu.Lock()
 	defer w.mu.Unlock()
@@ -312,6 +312,7 @@ func (w *World) pose(at time.Time) source.Pose {
 	}
 	p.PumpW = w.pumpW(at)
 	p.CrystalCel = w.crystalCel(at)
+	w.set(&p, at)
 	p.PumpOpen, p.SignalOpen, p.IdlerOpen = w.openShare(PumpBlade, at), w.openShare(SignalBlade, at), w.openShare(IdlerBlade, at)
 	lamp := w.lampHz.value(at)
 	p.RoomHz[0] += lamp
@@ -321,18 +322,44 @@ func (w *World) pose(at time.Time) source.Pose {
 
 func (w *World) pumpW(at time.Time) float64 {
 	p := w.cfg.Still.PumpW
-	if r := w.sets[PumpPower]; r != nil {
-		p = r.value(at)
+	if v, ok := w.setTo(PumpPower, at); ok {
+		p = v
 	}
 	return max(0, p*w.pump.value(at)*(1+w.cfg.PumpWander.at(at.Sub(w.origin))))
 }
 
 func (w *World) crystalCel(at time.Time) float64 {
 	c := w.cfg.Still.CrystalCel
-	if r := w.sets[CrystalTemperature]; r != nil {
-		c = r.value(at)
+	if v, ok := w.setTo(CrystalTemperature, at); ok {
+		c = v
 	}
 	return c + w.cfg.CrystalWander.at(at.Sub(w.origin))
+}
+
+// setTo is the true value of what a setting changes.
+func (w *World) setTo(what string, at time.Time) (float64, bool) {
+	s := w.sets[what]
+	if s == nil {
+		return 0, false
+	}
+	return s.value.value(at), true
+}
+
+// set puts what the settings change into a pose, all but power and temperature.
+func (w *World) set(p *source.Pose, at time.Time) {
+	if v, ok := w.setTo(Delay, at); ok {
+		p.DelayS += v - w.sets[Delay].cfg.Neutral
+	}
+	for i, iris := range []string{SignalIris, IdlerIris} {
+		if v, ok := w.setTo(iris, at); ok {
+			p.RadiusMm[i] = v / 2 * 1000
+		}
+	}
+	for i, bias := range []string{SignalBias, IdlerBias} {
+		if v, ok := w.setTo(bias, at); ok {
+			p.Gain[i] = w.sets[bias].cfg.PerVolt * (v - w.sets[bias].cfg.Neutral)
+		}
+	}
 }
 
 func (w *World) openShare(blade string, at time.Time) float64 {
@@ -349,9 +376,9 @@ func (w *World) ramps() []*ramp {
 			rs = append(rs, r)
 		}
 	}
-	for _, name := range []string{PumpPower, CrystalTemperature} {
-		if r := w.sets[name]; r != nil {
-			rs = append(rs, r)
+	for _, name := range Effects() {
+		if s := w.sets[name]; s != nil {
+			rs = append(rs, s.value)
 		}
 	}
 	return rs

@@ -76,7 +76,7 @@ var sinkCounts Counts
 
 // BenchmarkDraw is the counts of one gate, at rates from quiet to saturated.
 func BenchmarkDraw(b *testing.B) {
-	for _, r := range []Rates{{1e4, 1e4, 2e3}, {5e5, 5e5, 1e5}, {1e7, 1e7, 2e6}} {
+	for _, r := range []Rates{{SignalHz: 1e4, IdlerHz: 1e4, PairsHz: 2e3}, {SignalHz: 5e5, IdlerHz: 5e5, PairsHz: 1e5}, {SignalHz: 1e7, IdlerHz: 1e7, PairsHz: 2e6}} {
 		b.Run(fmt.Sprintf("%.0e Hz", r.SignalHz), func(b *testing.B) {
 			m, err := New(bench(b))
 			if err != nil {

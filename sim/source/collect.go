@@ -22,6 +22,7 @@ type Bandwidth struct {
 
 // Collect integrates over both arms at a pose, shutters open.
 func (m *Model) Collect(p Pose) Collection {
+	m = m.with(p.RadiusMm)
 	p.SignalOpen, p.IdlerOpen = 1, 1
 	w := m.pairW(p) * m.scale
 	c := m.computed(p)

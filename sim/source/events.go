@@ -19,6 +19,7 @@ func (m *Model) DrawEvents(rng *rand.Rand, segments []Segment) Counts {
 		end := start + seg.For.Seconds()
 		r := seg.Rates
 		pairs := min(r.PairsHz, r.SignalHz, r.IdlerHz)
+		before := len(arms[1].times)
 		alone := [2]float64{r.SignalHz - pairs, r.IdlerHz - pairs}
 		arms[0].latched = arms[0].d.LatchHz > 0 && r.SignalHz > arms[0].d.LatchHz
 		arms[1].latched = arms[1].d.LatchHz > 0 && r.IdlerHz > arms[1].d.LatchHz
@@ -40,6 +41,9 @@ func (m *Model) DrawEvents(rng *rand.Rand, segments []Segment) Counts {
 		}
 		for i := range arms {
 			arms[i].release(rng, end)
+		}
+		for j := before; j < len(arms[1].times); j++ { // what the counter is given, not when the detector fired
+			arms[1].times[j] -= r.DelayS
 		}
 		start = end
 	}

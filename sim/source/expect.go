@@ -87,7 +87,9 @@ func (m *Model) expected(r Rates, s, i response) Recorded {
 	ds, di := &m.o.Signal.Detector, &m.o.Idler.Detector
 	c := min(r.PairsHz, s.driving, i.driving)
 	both := bothAlive(ds, di, s, i, c)
-	out.TrueHz = c * both * m.o.Counter.WindowCapture()
+	k := m.o.Counter
+	k.DelayS += r.DelayS
+	out.TrueHz = c * both * k.WindowCapture()
 	together := c * both
 
 	// Chances to find a recorded idler event later than a recorded signal event, and the other way
@@ -115,7 +117,6 @@ func (m *Model) expected(r Rates, s, i response) Recorded {
 		}
 		return sum + of.rate*partner.rate*max(0, lag-tau)
 	}
-	k := m.o.Counter
 	between := func(lo, hi float64, of, partner response, d, other *Detector) float64 {
 		return later(of, partner, d, other, max(0, hi)) - later(of, partner, d, other, max(0, lo))
 	}

@@ -128,10 +128,17 @@ type Pose struct {
 	SignalOpen          float64 // detector shutters, 0 to 1
 	IdlerOpen           float64
 	RoomHz              [2]float64 // recorded room light at signal and idler detector, when open
+
+	// What settings change. Zero is the bench as it was built.
+	DelayS   float64    // by how far the delay between the channels is set wrong
+	RadiusMm [2]float64 // of the signal and the idler arm's iris; 0: as built
+	Gain     [2]float64 // relative change of the detectors' efficiencies: -0.1 leaves nine tenths
 }
 
 // Rates are rates of detection events: efficiency and dark counts are in, dead time, afterpulses
 // and the counter are not. PairsHz are true coincident detections and contained in both others.
 type Rates struct {
 	SignalHz, IdlerHz, PairsHz float64
+
+	DelayS float64 // the pose's: the counter's window lies so much further off the pairs
 }

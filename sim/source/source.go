@@ -18,12 +18,14 @@ type Model struct {
 
 	mirrored    bool       // both arms stand in the principal plane
 	idlerFirst  bool       // the idler arm has the smaller aperture: pairs start from its photon
+	filled      [2]float64 // area of the arms' apertures, in that of the bench as built: what light without partners follows
 	typicalDeg  [2]float64 // where the arms stand at the reference
 	pitchDeg    [3]float64 // of the table, by quantity
 	pitchOffset float64    // of the table, 1/mm
 
 	mu     sync.Mutex
 	frames map[frameKey]*frame
+	sized  map[[2]float64]*Model // the same bench with other irises
 }
 
 // frameKey names a frame by whole pitches of tilt, pump wavelength and temperature.
@@ -44,7 +46,7 @@ func New(o Optics) (*Model, error) {
 	if err := o.check(); err != nil {
 		return nil, err
 	}
-	m := &Model{o: o, rules: newRules(), effort: 1, frames: map[frameKey]*frame{}}
+	m := &Model{o: o, rules: newRules(), effort: 1, filled: [2]float64{1, 1}, frames: map[frameKey]*frame{}, sized: map[[2]float64]*Model{}}
 	if err := m.place(); err != nil {
 		return nil, err
 	}
@@ -55,14 +57,11 @@ func New(o Optics) (*Model, error) {
 func (m *Model) place() error {
 	o := &m.o
 	m.mirrored = math.Mod(o.AzimuthDeg, 180) == 0 && o.Signal.OutOfPlaneDeg == 0 && o.Idler.OutOfPlaneDeg == 0
-	m.idlerFirst = o.Idler.RadiusMm/o.Idler.DistanceMm < o.Signal.RadiusMm/o.Signal.DistanceMm
 	slab := o.slab(0)
 	if err := slab.Check(); err != nil {
 		return err
 	}
-	nm := m.centreNm(o.PumpNm)
-	pair, err := slab.At(nm)
-	if err != nil {
+	if _, err := slab.At(m.centreNm(o.PumpNm)); err != nil {
 		return err
 	}
 	if s, i, err := m.bare(0); err == nil {
@@ -71,19 +70,7 @@ func (m *Model) place() error {
 		return fmt.Errorf("%w; want optics for which the declared pair rate can hold, or the nonlinear coefficient", err)
 	}
 
-	// Scales over which rates change, as angles in air.
-	_, ks, ki := pair.Wavenumbers()
-	k := min(ks, ki)
-	stand := newStand(&o.Signal, o.AzimuthDeg, m.typicalDeg[0], 0)
-	x, y, _ := stand.face(stand.centre)
-	gx, gy := pair.SignalSlope(ks*x, ks*y)
-	half := o.ThicknessMm / 2
-	emission := 1.2 / (half*k*math.Hypot(gx, gy) + math.Sqrt(half*k)) // the second term bounds it on the axis
-	open := min(o.Signal.RadiusMm/o.Signal.DistanceMm, o.Idler.RadiusMm/o.Idler.DistanceMm)
-	partners := math.Hypot(1/(k*o.PumpWaistUm/1000), open/2)
-	m.pitchDeg = [3]float64{0.25 * emission / deg, 0.25 * emission / deg, 0.25 * min(emission, partners) / deg}
-	m.pitchOffset = 0.3 / half
-
+	m.size()
 	f := m.newFrame(0, o.PumpNm, o.CrystalCel)
 	if err := m.resolved(f); err != nil {
 		return err
@@ -222,6 +209,7 @@ func (m *Model) Reference() (signalDeg, idlerDeg float64) { return m.typicalDeg[
 // Rates returns the rates of detection events at a pose, from the table: to 1 % of the largest
 // rates nearby, and in microseconds where the arms have been before.
 func (m *Model) Rates(p Pose) Rates {
+	m = m.with(p.RadiusMm)
 	m.mu.Lock()
 	defer m.mu.Unlock()
 	return m.rates(p, m.tabulated(p))
@@ -229,7 +217,69 @@ func (m *Model) Rates(p Pose) Rates {
 
 // Exact is Rates without the table: milliseconds, always.
 func (m *Model) Exact(p Pose) Rates {
+	m = m.with(p.RadiusMm)
 	return m.rates(p, m.computed(p))
+}
+
+// mostSized bounds how many irises are remembered.
+const mostSized = 32
+
+// with is the model of the same bench with irises of other radii. The absolute scale stays: a
+// declared pair rate holds for the bench as built.
+func (m *Model) with(radiusMm [2]float64) *Model {
+	o := m.o
+	for i, arm := range []*Arm{&o.Signal, &o.Idler} {
+		if radiusMm[i] > 0 {
+			arm.RadiusMm = radiusMm[i]
+		}
+		radiusMm[i] = arm.RadiusMm
+	}
+	if radiusMm == [2]float64{m.o.Signal.RadiusMm, m.o.Idler.RadiusMm} {
+		return m
+	}
+	m.mu.Lock()
+	defer m.mu.Unlock()
+	if other := m.sized[radiusMm]; other != nil {
+		return other
+	}
+	if len(m.sized) >= mostSized {
+		clear(m.sized) // forgetting costs time, never an answer
+	}
+	other := &Model{o: o, rules: m.rules, effort: m.effort, scale: m.scale, frames: map[frameKey]*frame{},
+		mirrored: m.mirrored, typicalDeg: m.typicalDeg}
+	for i, arm := range []Arm{m.o.Signal, m.o.Idler} {
+		other.filled[i] = radiusMm[i] / arm.RadiusMm * radiusMm[i] / arm.RadiusMm
+	}
+	other.size()
+	// No pitch is wider than the bench's own, whose errors are known.
+	for i := range other.pitchDeg {
+		other.pitchDeg[i] = min(other.pitchDeg[i], m.pitchDeg[i])
+	}
+	m.sized[radiusMm] = other
+	return other
+}
+
+// size works out what follows from the apertures' sizes: which photon the integration of pairs
+// starts from, and the scales over which rates change, as angles in air.
+func (m *Model) size() {
+	o := &m.o
+	m.idlerFirst = o.Idler.RadiusMm/o.Idler.DistanceMm < o.Signal.RadiusMm/o.Signal.DistanceMm
+	slab := o.slab(0)
+	pair, err := slab.At(m.centreNm(o.PumpNm))
+	if err != nil {
+		return // place has asked before
+	}
+	_, ks, ki := pair.Wavenumbers()
+	k := min(ks, ki)
+	stand := newStand(&o.Signal, o.AzimuthDeg, m.typicalDeg[0], 0)
+	x, y, _ := stand.face(stand.centre)
+	gx, gy := pair.SignalSlope(ks*x, ks*y)
+	half := o.ThicknessMm / 2
+	emission := 1.2 / (half*k*math.Hypot(gx, gy) + math.Sqrt(half*k)) // the second term bounds it on the axis
+	open := min(o.Signal.RadiusMm/o.Signal.DistanceMm, o.Idler.RadiusMm/o.Idler.DistanceMm)
+	partners := math.Hypot(1/(k*o.PumpWaistUm/1000), open/2)
+	m.pitchDeg = [3]float64{0.25 * emission / deg, 0.25 * emission / deg, 0.25 * min(emission, partners) / deg}
+	m.pitchOffset = 0.3 / half
 }
 
 // collected are the three integrals at a pose.
@@ -309,18 +359,32 @@ func (m *Model) pairW(p Pose) float64 {
 func (m *Model) rates(p Pose, c collected) Rates {
 	o := &m.o
 	w := m.pairW(p) * m.scale
-	ts := o.Signal.Transmittance * o.Signal.Detector.Efficiency * p.SignalOpen
-	ti := o.Idler.Transmittance * o.Idler.Detector.Efficiency * p.IdlerOpen
+	gs, gi := o.Signal.Detector.gain(p.Gain[0]), o.Idler.Detector.gain(p.Gain[1])
+	ts := o.Signal.Transmittance * o.Signal.Detector.Efficiency * gs * p.SignalOpen
+	ti := o.Idler.Transmittance * o.Idler.Detector.Efficiency * gi * p.IdlerOpen
 	s, i := w*c[ofSignal]*ts, w*c[ofIdler]*ti
 	pump := p.PumpW * p.PumpOpen
 	return Rates{
-		SignalHz: s + o.Signal.background(pump, p.SignalOpen, p.RoomHz[0]),
-		IdlerHz:  i + o.Idler.background(pump, p.IdlerOpen, p.RoomHz[1]),
+		SignalHz: s + o.Signal.background(pump, gs*p.SignalOpen*m.filled[0], p.RoomHz[0]),
+		IdlerHz:  i + o.Idler.background(pump, gi*p.IdlerOpen*m.filled[1], p.RoomHz[1]),
 		// Interpolation must not find more partners than photons.
 		PairsHz: min(w*c[ofPairs]*ts*ti, s, i),
+		DelayS:  p.DelayS,
 	}
 }
 
-func (a *Arm) background(pumpW, open, roomHz float64) float64 {
-	return a.Detector.DarkHz + open*(roomHz+pumpW*(a.FluorescenceHzPerW+a.StrayHzPerW))
+// gain is the factor on the efficiency that a relative change of it makes: none makes it negative,
+// or more than one.
+func (d *Detector) gain(change float64) float64 {
+	g := max(0, 1+change)
+	if d.Efficiency*g > 1 {
+		return 1 / d.Efficiency
+	}
+	return g
+}
+
+// background is the light without partners, and the dark counts. passes is the share of that light
+// that is counted of what was stated.
+func (a *Arm) background(pumpW, passes, roomHz float64) float64 {
+	return a.Detector.DarkHz + passes*(roomHz+pumpW*(a.FluorescenceHzPerW+a.StrayHzPerW))
 }

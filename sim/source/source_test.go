@@ -184,7 +184,7 @@ func TestTheWaveplateSpoilsPairsAndLeavesTheBackground(t *testing.T) {
 	}
 	p = atPeak()
 	p.PumpOpen, p.RoomHz = 0, [2]float64{40, 70}
-	if r := m.Rates(p); r != (Rates{340, 370, 0}) {
+	if r := m.Rates(p); r != (Rates{SignalHz: 340, IdlerHz: 370, PairsHz: 0}) {
 		t.Errorf("pump shut, room light on: %+v; want dark counts and room light", r)
 	}
 	p = atPeak()

@@ -142,7 +142,7 @@ func grid() []station {
 		{"45 ns with afterpulses", ap(np(45), 0.03, 80e-9), ap(np(45), 0.02, 50e-9)},
 	}
 	for _, d := range pairsOf {
-		for _, r := range []Rates{{2e4, 3e4, 4e3}, {3e5, 2e5, 6e4}, {2e6, 3e6, 0}, {3e6, 2e6, 8e5}, {1.5e7, 2e7, 5e6}} {
+		for _, r := range []Rates{{SignalHz: 2e4, IdlerHz: 3e4, PairsHz: 4e3}, {SignalHz: 3e5, IdlerHz: 2e5, PairsHz: 6e4}, {SignalHz: 2e6, IdlerHz: 3e6, PairsHz: 0}, {SignalHz: 3e6, IdlerHz: 2e6, PairsHz: 8e5}, {SignalHz: 1.5e7, IdlerHz: 2e7, PairsHz: 5e6}} {
 			for _, c := range []Counter{
 				{WindowS: 10e-9, JitterS: 1e-9, Logic: EveryPair},
 				{WindowS: 8e-9, JitterS: 0.5e-9, Logic: OnePerHerald},
@@ -382,7 +382,7 @@ func TestCoupledDeadTimesAgreeByTwoRoutes(t *testing.T) {
 // than the product of its singles; a displaced window shows the product.
 func TestADeadPartnerLeavesFewerAccidentals(t *testing.T) {
 	d := Detector{DeadTimeS: 45e-9, Model: NonParalysable}
-	r := Rates{1e6, 1e6, 4e5}
+	r := Rates{SignalHz: 1e6, IdlerHz: 1e6, PairsHz: 4e5}
 	count := func(k Counter) (sum Counts, m *Model) {
 		k.Logic = EveryPair
 		m = (station{signal: d, idler: d, counter: k}).model()
