@@ -29,6 +29,10 @@ func (e *Engine) early(ctx context.Context) (waited bool) {
 func (e *Engine) cutAtEnd(ctx context.Context, t task) (cut bool, err error) {
 	end := e.Plan.Schedule.FinishBy
 	p := &e.progress
+	if within := e.refineWithin(); within > 0 && t.kind == lightTask && !p.cut && t.visit.Point >= len(e.Plan.Points) && e.now().Sub(p.refinedAt) >= within {
+		left := p.left()
+		return true, e.note(ctx, protocol.SetAside, fmt.Sprintf("%d added points are left out: refining may take %s", left, within), map[string]any{"task": string(restTask), "left_out": left})
+	}
 	if !p.tooLate(t, e.now()) {
 		return false, nil
 	}
