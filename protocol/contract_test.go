@@ -36,7 +36,7 @@ func status() protocol.Status {
 	return protocol.Status{
 		Bench: "skerry", Version: "1.0.0", State: protocol.Holding, Causes: []protocol.Cause{protocol.ByGuard, protocol.ByOperator}, Reason: "pump power",
 		Run: "20310203-0405-a", Title: "Ring", ReadingsAccepted: 3, ReadingsPlanned: 60, ReadingsSetAside: 1,
-		TimeLeft: new(protocol.Seconds(90 * time.Second)), Queue: []protocol.RunID{"r2"}, Armed: true, Simulated: new(20), Behind: 4,
+		TimeLeft: new(protocol.Seconds(90 * time.Second)), Queue: []protocol.RunID{"r2"}, Waiting: []protocol.WaitingRun{{Run: "r2", Title: "Peak"}}, Armed: true, Simulated: new(20), Behind: 4,
 	}
 }
 
@@ -60,7 +60,7 @@ func messages() map[string][]any {
 		Head: head(protocol.ReadingSchema), Kind: protocol.Dark, Reason: "overflow", StartedAt: reading.StartedAt, EndedAt: reading.EndedAt,
 		Angles: []protocol.Angle{}, Settings: []protocol.Setting{}, Sensors: []protocol.Sensor{}, Counts: []protocol.Count{}, Slices: []protocol.Slice{}, Attempt: 1,
 	}
-	idle := protocol.Status{Bench: "skerry", Causes: []protocol.Cause{}, Queue: []protocol.RunID{}}
+	idle := protocol.Status{Bench: "skerry", Causes: []protocol.Cause{}, Queue: []protocol.RunID{}, Waiting: []protocol.WaitingRun{}}
 	benchEvent := protocol.Event{Head: head(protocol.EventSchema), Kind: protocol.OperatorDid, Text: "armed", Causes: []protocol.Cause{}, Detail: map[string]any{}}
 	benchEvent.Run = protocol.BenchRun
 	return map[string][]any{
@@ -88,6 +88,11 @@ func messages() map[string][]any {
 		"start_reply":   {protocol.StartReply{Run: "r1"}},
 		"run_request":   {protocol.RunRequest{Run: "r1", Who: "night", ExpiresAt: new(at("2031-02-03T04:05:06.5Z"))}, protocol.RunRequest{Run: "r1"}},
 		"run_reply":     {protocol.RunReply{Run: "r1", State: protocol.Stopped, Causes: []protocol.Cause{}, Recorded: true}},
+		"queue_reply": {
+			protocol.QueueReply{Bench: "skerry", Queue: []protocol.QueuedRun{{Run: "r2", Title: "Peak", QueuedAt: at("2031-02-03T04:05:06.5Z"), Who: "ann", State: protocol.Queued, ReadingsPlanned: new(60)}}},
+			protocol.QueueReply{Bench: "skerry", Queue: []protocol.QueuedRun{{Run: "r2", QueuedAt: at("2031-02-03T04:05:06.5Z"), State: protocol.Holding}}},
+		},
+		"reorder_request": {protocol.ReorderRequest{Runs: []protocol.RunID{"r3", "r2"}, Who: "ann", ExpiresAt: new(at("2031-02-03T04:05:06.5Z"))}, protocol.ReorderRequest{Runs: []protocol.RunID{"r3"}}},
 		"problem": {
 			protocol.Problem{Error: "recipe: 1 finding", Findings: []protocol.Finding{{File: "a.yaml", Line: 3, Col: 9, Key: "dwell", Found: "2", Want: "a time"}}},
 			protocol.Refuse(404, "no run r9").Problem,
@@ -97,7 +102,7 @@ func messages() map[string][]any {
 }
 
 // unborn are schemas without a Go type yet.
-var unborn = []string{"result", "status_request"}
+var unborn = []string{"result", "status_request", "queue_request"}
 
 func names(t *testing.T) []string {
 	t.Helper()
@@ -220,6 +225,8 @@ func TestRequestsWithAnUnknownKeyAreNotValid(t *testing.T) {
 		{"run_request", `{"run":"r1","runs":"r2"}`},
 		{"start_request", `{"recipe":"x","key":"k","priority":1}`},
 		{"status_request", `{"run":"r1"}`},
+		{"queue_request", `{"run":"r1"}`},
+		{"reorder_request", `{"runs":["r1"],"first":"r1"}`},
 	} {
 		if validate(compile(t, c.name, jsonschema.Draft2020), []byte(c.body)) == nil {
 			t.Errorf("%s %s: valid; want it noticed", c.name, c.body)
@@ -347,6 +354,7 @@ func TestSchemasListTheValuesThatGoKnows(t *testing.T) {
 		protocol.SetAside, protocol.TakenAgain, protocol.Doubted, protocol.Interrupted, protocol.Trouble, protocol.OperatorDid, protocol.Ended}
 	for _, c := range []struct{ got, want string }{
 		{enum("run_reply", "properties", "state"), text(states)},
+		{enum("queue_reply", "properties", "queue", "items", "properties", "state"), text(states)},
 		{enum("status", "properties", "state"), text(append([]protocol.State{""}, states...))},
 		{enum("event", "properties", "state"), text(append([]protocol.State{""}, states...))},
 		{enum("status", "properties", "causes", "items"), text(causes)},
@@ -444,7 +452,7 @@ func TestAsyncAPIDescribesTheSubjectsThatGoUses(t *testing.T) {
 	for _, k := range []protocol.EntryKind{protocol.ReadingEntry, protocol.PointEntry, protocol.EventEntry, protocol.ResultEntry} {
 		want[string(k)] = protocol.Subject("{bench}", k, "{run}")
 	}
-	verbs := []string{"start", "stop", "hold", "resume", "status"}
+	verbs := []string{"start", "stop", "hold", "resume", "status", "queue", "reorder", "withdraw"}
 	for _, v := range verbs {
 		want[v] = protocol.DoSubject("{bench}", v)
 	}
