@@ -357,7 +357,7 @@ func TestATemperatureIsReachedEverMoreSlowly(t *testing.T) {
 		// A tenth of a kelvin of ten is left after ln(100) time constants.
 		time.Sleep(time.Duration(40*math.Log(100)*float64(time.Second)) - time.Since(begun) + 100*time.Millisecond)
 		l.expect(":STAT:OPER:COND?;*OPC?", "0;1")
-		l.expect(":SOUR:TEMP 30.05;:STAT:OPER:COND?", "0") // nearer already than what counts as reached
+		l.expect(":SOUR:TEMP 29.95;:STAT:OPER:COND?", "0") // nearer already than what counts as reached
 		l.hangUp()
 		k.hangUp()
 	})
