@@ -1,6 +1,7 @@
 package route
 
 import (
+	"errors"
 	"math"
 	"time"
 
@@ -25,6 +26,7 @@ type Trip struct {
 	Travel time.Duration // of all legs, settling not included
 	Settle time.Duration // of the slowest axis that was sent
 	Sent   int           // commands to controllers
+	Dark   bool          // the pump has to be closed for it
 }
 
 // NewWalk prepares a walk. The error is about the keep-outs as such.
@@ -52,8 +54,8 @@ func NewWalk(axes []scan.Axis, keepOuts []scan.KeepOut) (*Walk, error) {
 	return w, nil
 }
 
-// Go is the move of the axes marked from here to there; the others stand at here. The error says why
-// no way is free.
+// Go is the move of the axes marked from here to there; the others stand at here. Where only a closed
+// pump leaves a way, that is the way taken. The error says why there is none.
 func (w *Walk) Go(here, there []unit.Angle, sent []bool) (Trip, error) {
 	var t Trip
 	first, last := w.back, w.to
@@ -136,6 +138,11 @@ func (w *Walk) legs(here, there []unit.Angle, sent []bool) (Trip, error) {
 		}
 	}
 	legs, err := Legs(w.axes, w.keepOuts, at, targets, State{})
+	if _, conflict := errors.AsType[*Conflict](err); conflict {
+		if dark, derr := Legs(w.axes, w.keepOuts, at, targets, State{PumpClosed: true}); derr == nil {
+			legs, err, t.Dark = dark, nil, true
+		}
+	}
 	if err != nil {
 		return t, err
 	}

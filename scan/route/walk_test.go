@@ -1,6 +1,7 @@
 package route_test
 
 import (
+	"errors"
 	"slices"
 	"testing"
 	"time"
@@ -33,6 +34,11 @@ func TestAWalkTakesWhatItsLegsTake(t *testing.T) {
 		}
 		targets := drawTargets(t, axes, end)
 		legs, err := route.Legs(axes, keepOuts, at, targets, route.State{})
+		dark := false
+		if _, conflict := errors.AsType[*route.Conflict](err); conflict {
+			dark = true
+			legs, err = route.Legs(axes, keepOuts, at, targets, route.State{PumpClosed: true})
+		}
 		here, there, sent := make([]unit.Angle, len(axes)), make([]unit.Angle, len(axes)), make([]bool, len(axes))
 		for i, a := range axes {
 			here[i], there[i] = at[a.Name], at[a.Name]
@@ -48,7 +54,7 @@ func TestAWalkTakesWhatItsLegsTake(t *testing.T) {
 		if err != nil {
 			return
 		}
-		if want := route.Time(axes, at, legs); trip.Travel+trip.Settle != want {
+		if want := route.Time(axes, at, legs); trip.Travel+trip.Settle != want || trip.Dark != dark {
 			t.Fatalf("from %v to %v: %v; the legs %v take %s", at, targets, trip, legs, want)
 		}
 		commands := 0
