@@ -36,7 +36,7 @@ func status() protocol.Status {
 	return protocol.Status{
 		Bench: "skerry", Version: "1.0.0", State: protocol.Holding, Causes: []protocol.Cause{protocol.ByGuard, protocol.ByOperator}, Reason: "pump power",
 		Run: "20310203-0405-a", Title: "Ring", ReadingsAccepted: 3, ReadingsPlanned: 60, ReadingsSetAside: 1,
-		TimeLeft: new(protocol.Seconds(90 * time.Second)), Queue: []protocol.RunID{"r2"}, Waiting: []protocol.WaitingRun{{Run: "r2", Title: "Peak"}}, Armed: true, Simulated: new(20), Behind: 4,
+		TimeLeft: new(protocol.Seconds(90 * time.Second)), Queue: []protocol.RunID{"r2"}, Waiting: []protocol.WaitingRun{{Run: "r2", Title: "Peak"}}, Armed: true, Simulated: new(20), Behind: 4, Hand: "ann",
 	}
 }
 
@@ -96,6 +96,22 @@ func messages() map[string][]any {
 		"problem": {
 			protocol.Problem{Error: "recipe: 1 finding", Findings: []protocol.Finding{{File: "a.yaml", Line: 3, Col: 9, Key: "dwell", Found: "2", Want: "a time"}}},
 			protocol.Refuse(404, "no run r9").Problem,
+		},
+		"hand_request": {
+			protocol.HandRequest{Act: protocol.HandMove, Session: "s", Who: "ann", Axis: "signal_arm", To: new(unit.Degree), By: new(-unit.Degree / 10), Shutter: "pump", Open: new(false),
+				Setting: "delay", Value: new(1.2), Unit: "ns", Gate: protocol.Seconds(time.Second / 2), Live: true, ExpiresAt: new(at("2031-02-03T04:05:06.5Z"))},
+			protocol.HandRequest{Act: protocol.HandRest},
+		},
+		"hand_reply": {
+			protocol.HandReply{Act: protocol.HandTake, Session: "s", Text: "taken", Recorded: true, Lease: protocol.Seconds(2 * time.Minute),
+				Axes:     []protocol.HandAxis{{Axis: "signal_arm", Angle: new(unit.Degree), Low: -unit.Degree, High: unit.Degree, Proof: "proved"}, {Axis: "idler_arm", Proof: "reported", Trouble: "no zero"}},
+				Shutters: []protocol.HandBlade{{Shutter: "shutter", Guards: "pump", Open: true}}, Settings: []protocol.HandValue{{Name: "delay", Value: new(1.2), Unit: "ns"}},
+				Sensors: []protocol.HandValue{{Name: "pump_power", Unit: "mW", Trouble: "no answer"}},
+				Look: &protocol.HandLookedAt{Gate: protocol.Seconds(time.Second / 2), Doubt: "a counter channel ran over",
+					Rates:  []protocol.HandRate{{Channel: "signal", Counts: 500, Rate: 1000}, {Channel: "pairs", Counts: 5, Rate: 10, Accidentals: new(0.1)}},
+					Ratios: []protocol.HandRatio{{Channel: "pairs", Over: "signal", Ratio: new(0.01), U: new(0.004)}, {Channel: "pairs", Over: "idler"}}},
+				Moved: []protocol.HandMoved{{Name: "signal_arm", Before: 1, After: 2, Unit: "deg"}}},
+			protocol.HandReply{Act: protocol.HandWhere, LetGo: true, Axes: []protocol.HandAxis{}, Shutters: []protocol.HandBlade{}, Settings: []protocol.HandValue{}, Sensors: []protocol.HandValue{}, Moved: []protocol.HandMoved{}},
 		},
 		"contact": {protocol.Contact{URL: "nats://127.0.0.1:4222", Bench: "skerry", Control: "control.nk", Watch: "watch.nk"}},
 	}
@@ -360,6 +376,8 @@ func TestSchemasListTheValuesThatGoKnows(t *testing.T) {
 		{enum("status", "properties", "causes", "items"), text(causes)},
 		{enum("reading", "properties", "kind"), text(kinds)},
 		{enum("event", "properties", "kind"), text(events)},
+		{enum("hand_request", "properties", "act"), text(protocol.HandActs())},
+		{enum("hand_reply", "properties", "act"), text(protocol.HandActs())},
 	} {
 		if c.got != c.want {
 			t.Errorf("the schema lists %s; want %s", c.got, c.want)
@@ -452,7 +470,7 @@ func TestAsyncAPIDescribesTheSubjectsThatGoUses(t *testing.T) {
 	for _, k := range []protocol.EntryKind{protocol.ReadingEntry, protocol.PointEntry, protocol.EventEntry, protocol.ResultEntry} {
 		want[string(k)] = protocol.Subject("{bench}", k, "{run}")
 	}
-	verbs := []string{"start", "stop", "hold", "resume", "status", "queue", "reorder", "withdraw"}
+	verbs := []string{"start", "stop", "hold", "resume", "status", "queue", "reorder", "withdraw", "hand"}
 	for _, v := range verbs {
 		want[v] = protocol.DoSubject("{bench}", v)
 	}

@@ -298,6 +298,7 @@ type Status struct {
 	Armed            bool         `json:"armed"`
 	Simulated        *int         `json:"simulated"` // null on a real bench, else the clock factor
 	Behind           int64        `json:"entries_unpublished"`
+	Hand             string       `json:"hand"` // who has the bench under their hand; empty: nobody
 }
 
 // StartRequest asks for a run. Exactly one of Recipe and RecipeName is set.
