@@ -82,6 +82,13 @@ func Serve(ctx context.Context, conn *nats.Conn, keeper Keeper, c Config) error 
 			return fmt.Errorf("remote: %s: %w", verb, err)
 		}
 	}
+	if hands, can := keeper.(Hands); can {
+		err := service.AddEndpoint("hand", h.hand(hands), micro.WithEndpointSubject(protocol.DoSubject(c.Bench, "hand")),
+			micro.WithEndpointPendingLimits(pendingRequests, pendingBytes))
+		if err != nil {
+			return fmt.Errorf("remote: hand: %w", err)
+		}
+	}
 	<-ctx.Done()
 	return nil
 }
