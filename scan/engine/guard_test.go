@@ -157,3 +157,61 @@ func TestAScheduleWaitsAndThenLeavesOutWhatDoesNotFit(t *testing.T) {
 		}
 	})
 }
+
+func TestARateGuardHoldsUntilTheRateIsWellAgain(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		n := newNight(t, func(c *Config) {
+			c.Plan.Guards = []scan.Guard{{Name: "rate of signal", Rate: "signal", Low: 500, High: 2000, Otherwise: scan.Hold}}
+		})
+		began := time.Now()
+		n.world.fail = func(what string) error {
+			n.world.mu.Lock()
+			defer n.world.mu.Unlock()
+			since := time.Since(began)
+			n.world.rates["signal"] = 1000
+			if since > 6*time.Second && since < 3*time.Minute {
+				n.world.rates["signal"] = 200
+			}
+			return nil
+		}
+		state, err := n.eng.Run(t.Context())
+		if state != protocol.Finished || err != nil {
+			t.Fatalf("Run() = %s, %v; want finished", state, err)
+		}
+		events := n.events(t)
+		if got := kinds(events); got != "began guard_broken guard_mended ended" || !strings.Contains(events[1].Text, "200 /s; want 500 to 2000 /s") || events[1].Detail["channel"] != "signal" {
+			t.Fatalf("events %s, %q; want the rate and its bounds", got, events[1].Text)
+		}
+		if mended := events[2].At.Sub(began); mended < 3*time.Minute || mended > 4*time.Minute {
+			t.Errorf("mended after %s; want soon after 3 min", mended)
+		}
+		checks := 0
+		for _, r := range n.readings(t) {
+			if r.Kind == protocol.Light && r.Accepted && countOf(r.Counts, "signal") < 1900 {
+				t.Errorf("reading %d was accepted with %d counts", r.Sequence, countOf(r.Counts, "signal"))
+			}
+			if r.Kind == protocol.Check {
+				checks++
+			}
+		}
+		if checks < 4 || checks > 8 {
+			t.Errorf("%d checks in three minutes; want one each half minute", checks)
+		}
+	})
+}
+
+func TestAGuardOfTheDarkRateLooksAtDarks(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		n := newNight(t, func(c *Config) {
+			c.Plan.Guards = []scan.Guard{{Name: "dark rate of idler", DarkRate: "idler", Low: 0, High: 500, Otherwise: scan.Stop}}
+		})
+		state, err := n.eng.Run(t.Context())
+		events := n.events(t)
+		if state != protocol.Failed || err != nil || kinds(events) != "began guard_broken ended" || !strings.Contains(events[1].Text, "800 /s; want 0 to 500 /s") {
+			t.Errorf("Run() = %s, %v, events %s; want failed at the first dark", state, err, kinds(events))
+		}
+		if got := sequenceOf(n.readings(t)); got != "dark" {
+			t.Errorf("readings %s; want the dark, accepted", got)
+		}
+	})
+}
