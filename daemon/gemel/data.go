@@ -106,7 +106,7 @@ func (c *checkCommand) recipe(f *bench.File) (string, error) {
 		}
 		return fmt.Sprintf("%s: sound in itself; name a --bench to see whether it fits.", c.Recipe), nil
 	}
-	plan, err := planner(f, c.Recipe)(string(text), time.Now())
+	plan, err := planner(f, c.Recipe)(string(text), time.Now(), nil)
 	if err != nil {
 		return "", err
 	}

@@ -142,7 +142,7 @@ func (c *runCommand) checkFirst(text string) error {
 	if err != nil {
 		return err
 	}
-	_, err = planner(f, c.Recipe)(text, time.Now())
+	_, err = planner(f, c.Recipe)(text, time.Now(), nil)
 	return err
 }
 

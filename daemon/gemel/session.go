@@ -24,6 +24,7 @@ import (
 	"gemel/daemon/logbook"
 	"gemel/daemon/remote"
 	"gemel/daemon/report"
+	"gemel/drivers"
 	"gemel/protocol"
 	"gemel/protocol/strict"
 	"gemel/scan"
@@ -57,17 +58,40 @@ type session struct {
 
 func parseRecipe(name string, text []byte) (*recipe.Recipe, error) { return recipe.Parse(name, text) }
 
+// earlierFunc finds the value of an earlier result; nil: there is no logbook to ask.
+type earlierFunc = func(scan.EarlierAsk) (scan.EarlierSource, error)
+
 // planner works recipes out for a bench.
-func planner(f *bench.File, name string) func(string, time.Time) (scan.Plan, error) {
-	return func(text string, accepted time.Time) (scan.Plan, error) {
+func planner(f *bench.File, name string) func(string, time.Time, earlierFunc) (scan.Plan, error) {
+	return func(text string, accepted time.Time, earlier earlierFunc) (scan.Plan, error) {
 		r, err := parseRecipe(name, []byte(text))
 		if err != nil {
 			return scan.Plan{}, err
 		}
 		facts := f.Facts()
 		facts.AcceptedAt = accepted.In(time.Local) // a recipe's clock is the one on the wall
+		facts.Earlier = earlier
 		return r.Plan(facts)
 	}
+}
+
+// declared says what a bench file declares that an angle of an axis means.
+func declared(benchText string, axis drivers.AxisName) (string, error) {
+	f, err := bench.Parse("bench file in the logbook", []byte(benchText))
+	if err != nil {
+		return "", err
+	}
+	for _, a := range f.Axes {
+		if a.Name != axis {
+			continue
+		}
+		text := fmt.Sprintf("zero %s, sense %d", a.Mount.Zero, a.Mount.Sense)
+		if a.StepsPerTurn > 0 {
+			text += fmt.Sprintf(", %g steps a turn, gear %g", a.StepsPerTurn, a.Gear)
+		}
+		return text + fmt.Sprintf(", on %s %s", a.Controller, orElse(a.Letter, a.Address)), nil
+	}
+	return "", fmt.Errorf("no axis %q in the bench file", axis)
 }
 
 // open builds and starts everything but the keeper's own work. Whatever was started is closed
@@ -123,6 +147,7 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 	s.keeper = keeper.New(keeper.Config{
 		Book: s.book, Bench: &built.Bench, BenchText: s.file.Text, Version: version, Plan: planner(s.file, "recipe"),
 		Recipe: recipesIn(recipeFolder), Armed: armedIn(flags.Data, s.file.Simulated()), MayHome: flags.Home,
+		Declared:           declared,
 		ResumeAfterRestart: attended || s.file.AfterRestart == bench.AfterRestartResume || s.file.AfterRestart == "" && s.file.Simulated(),
 		Conclude: func(ctx context.Context, run protocol.RunID) ([]json.RawMessage, error) {
 			r, err := report.Of(ctx, s.book, run)

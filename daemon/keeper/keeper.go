@@ -18,6 +18,7 @@ import (
 	"unicode"
 
 	"gemel/daemon/logbook"
+	"gemel/drivers"
 	"gemel/protocol"
 	"gemel/protocol/strict"
 	"gemel/scan"
@@ -30,8 +31,13 @@ type Book interface {
 	Append(ctx context.Context, e protocol.Entry) error
 	Entries(ctx context.Context, run protocol.RunID, afterSequence int64, limit int) ([]protocol.Entry, error)
 	Last(ctx context.Context, run protocol.RunID) (int64, error)
-	Unfinished(ctx context.Context) ([]logbook.RunRow, error)
+	Queue(ctx context.Context) ([]logbook.Waiting, error)
 	Run(ctx context.Context, run protocol.RunID) (logbook.RunRow, error)
+	RunsTitled(ctx context.Context, bench, title string) ([]logbook.Titled, error)
+	Results(ctx context.Context, run protocol.RunID) ([]protocol.Entry, error)
+	Taken(ctx context.Context, run protocol.RunID) (values []protocol.EarlierValue, decided bool, err error)
+	Owe(stops []logbook.OwedStop) error
+	Owed() ([]logbook.OwedStop, error)
 }
 
 // Config is what a keeper is made of.
@@ -41,8 +47,13 @@ type Config struct {
 	BenchText string
 	Version   string
 	// Plan works a recipe's text out for this bench, with the moment at which it was accepted: asked
-	// again after a restart, it gives the same plan. Its error is a *strict.Error with findings.
-	Plan func(recipeText string, accepted time.Time) (scan.Plan, error)
+	// again after a restart, with the same values of earlier results, it gives the same plan. Its
+	// error is a *strict.Error with findings; a value that is missing is none.
+	Plan func(recipeText string, accepted time.Time, earlier func(scan.EarlierAsk) (scan.EarlierSource, error)) (scan.Plan, error)
+	// Declared says, in a text that is equal where the meaning is, what a bench file declares that an
+	// angle of the axis means: its zero, its sense and its steps. Nil: only results under the very
+	// same bench file are taken.
+	Declared func(benchText string, axis drivers.AxisName) (string, error)
 	// Recipe reads the text of a recipe by the name it has in the configured folder; nil: there is none.
 	Recipe func(name string) (string, error)
 	// ResumeAfterRestart lets interrupted runs go on without a person.
@@ -50,6 +61,10 @@ type Config struct {
 	// Conclude works out a run's results, each as a JSON object, from what is written; it is asked
 	// only for runs whose recipe wants some. Nil: no run has any.
 	Conclude func(ctx context.Context, run protocol.RunID) ([]json.RawMessage, error)
+	// Judge compares a complete set of references with an earlier one. Nil: none is judged.
+	Judge func(ctx context.Context, run protocol.RunID, plan scan.Plan, set, baseline int) (engine.Verdict, error)
+	// Refine decides which points are added after the first pass. Nil: none is.
+	Refine func(ctx context.Context, run protocol.RunID, plan scan.Plan, round int) (engine.Refinement, error)
 	// Armed says whether remote requests may move the bench now.
 	Armed func(now time.Time) bool
 	// MayHome is a person's word that axes may search their zero at the start of each run.
@@ -65,7 +80,13 @@ type Keeper struct {
 	Config
 	wake chan struct{}
 
-	mu      sync.Mutex
+	// order is held while it is decided whose turn it is, and while that is changed. It may be held
+	// for as long as a journal takes to be read, so no status waits for it. It is taken before mu.
+	order sync.Mutex
+	// events is held while an event of the bench finds its place.
+	events sync.Mutex
+
+	mu      sync.Mutex // held for moments only
 	current *engine.Engine
 	row     logbook.RunRow // of current, or of the run before
 	last    engine.Snapshot
@@ -83,47 +104,81 @@ func New(c Config) *Keeper {
 // asked for, until ctx ends. An error means that the logbook or this program is broken.
 func (k *Keeper) Run(ctx context.Context) error {
 	if bad := engine.Rest(ctx, k.Bench); bad != "" {
-		if err := k.benchEvent(ctx, protocol.Trouble, "at the start the rest state was not reached: "+bad); err != nil {
+		if err := k.benchEvent(ctx, protocol.Trouble, "at the start the rest state was not reached: "+bad, nil); err != nil && !errors.Is(err, logbook.ErrFull) {
 			return err
 		}
 	}
 	for ctx.Err() == nil {
-		rows, err := k.Book.Unfinished(ctx)
-		if err != nil {
-			if ctx.Err() != nil {
-				break
-			}
+		idle, err := k.once(ctx)
+		switch {
+		case ctx.Err() != nil:
+		case errors.Is(err, logbook.ErrFull):
+			k.wait(ctx, fullEvery) // whoever is next begins when it can be written
+		case err != nil:
 			return err
-		}
-		if len(rows) == 0 {
-			select {
-			case <-ctx.Done():
-			case <-k.wake:
-			}
-			continue
-		}
-		if _, err := k.execute(ctx, rows[0]); err != nil && ctx.Err() == nil {
-			return err
+		case idle:
+			k.wait(ctx, 0)
 		}
 	}
 	return nil
 }
 
+// fullEvery is the time between two looks for room on a full disk, with no run to look for it.
+const fullEvery = 10 * time.Second
+
+// wait returns when there may be something to do; 0 is however late that is.
+func (k *Keeper) wait(ctx context.Context, most time.Duration) {
+	var late <-chan time.Time
+	if most > 0 {
+		timer := time.NewTimer(most)
+		defer timer.Stop()
+		late = timer.C
+	}
+	select {
+	case <-ctx.Done():
+	case <-k.wake:
+	case <-late:
+	}
+}
+
+// once executes the run whose turn it is. idle says that there is none.
+func (k *Keeper) once(ctx context.Context) (idle bool, err error) {
+	if err := k.payOwed(ctx); err != nil {
+		return false, err
+	}
+	eng, idle, err := k.turn(ctx)
+	if err == nil && eng != nil {
+		_, err = k.execute(ctx, eng)
+	}
+	return idle, err
+}
+
 // RunOne executes one run to its end, or to the end of ctx.
 func (k *Keeper) RunOne(ctx context.Context, run protocol.RunID) (protocol.State, error) {
+	if err := k.payOwed(ctx); err != nil {
+		return "", err
+	}
 	row, err := k.Book.Run(ctx, run)
 	if err != nil {
 		return "", err
 	}
-	return k.execute(ctx, row)
-}
-
-// execute folds what the journal has of a run and lets an engine go on from there.
-func (k *Keeper) execute(ctx context.Context, row logbook.RunRow) (protocol.State, error) {
-	eng, err := k.engine(ctx, row)
-	if err != nil || eng == nil {
+	plan, planErr, err := k.workOut(ctx, row)
+	if err != nil {
+		return "", err
+	}
+	eng, err := k.take(ctx, row, plan, planErr, func() (bool, error) { return true, nil })
+	if err != nil {
 		return protocol.Failed, err
 	}
+	if eng == nil { // it had ended, or could not be executed
+		row, err := k.Book.Run(ctx, run)
+		return row.State, err
+	}
+	return k.execute(ctx, eng)
+}
+
+// execute lets an engine go on from where the journal ends.
+func (k *Keeper) execute(ctx context.Context, eng *engine.Engine) (protocol.State, error) {
 	state, err := eng.Run(ctx)
 	k.mu.Lock()
 	k.current, k.last = nil, eng.Snapshot()
@@ -131,29 +186,31 @@ func (k *Keeper) execute(ctx context.Context, row logbook.RunRow) (protocol.Stat
 	return state, err
 }
 
-// engine makes the engine of a run and puts it in charge, or ends a run that cannot be executed.
-// It holds the lock throughout, so that nobody stops the run in the queue meanwhile.
-func (k *Keeper) engine(ctx context.Context, row logbook.RunRow) (*engine.Engine, error) {
-	k.mu.Lock()
-	defer k.mu.Unlock()
-	past, err := k.fold(ctx, row.Run)
-	if err != nil || past.State.Final() {
-		return nil, err
-	}
-	plan, err := k.Plan(row.RecipeText, row.QueuedAt.Time)
-	if err != nil {
-		return nil, k.refuse(ctx, row, past, "failed: the recipe does not fit the bench any more: "+err.Error())
-	}
-	if row.BenchText != k.BenchText {
-		return nil, k.refuse(ctx, row, past, "failed: the bench file was changed after the run was asked for, so the logbook's copy would not be the one in use; start it anew")
-	}
-	plan.Repeat.Seed = shuffleSeed(row.Run)
-	eng := engine.New(engine.Config{
+// engine makes the engine of a run.
+func (k *Keeper) engine(row logbook.RunRow, plan scan.Plan, past engine.Progress) *engine.Engine {
+	c := engine.Config{
 		Bench: k.Bench, Plan: plan, RunID: row.Run, Log: appender{k.Book}, Past: past,
 		ResumeAfterRestart: k.ResumeAfterRestart, MayHome: k.MayHome, Step: k.Step, Conclude: k.concluder(row.Run, plan),
-	})
-	k.current, k.row = eng, row
-	return eng, nil
+	}
+	// The engine asks from one goroutine.
+	c.Replan = func(ctx context.Context) (scan.Plan, error) {
+		again, err := k.plan(row, k.earlierNow(ctx).find)
+		if err == nil {
+			plan = again
+		}
+		return again, err
+	}
+	if k.Judge != nil {
+		c.Judge = func(ctx context.Context, set, baseline int) (engine.Verdict, error) {
+			return k.Judge(ctx, row.Run, plan, set, baseline)
+		}
+	}
+	if k.Refine != nil {
+		c.Refine = func(ctx context.Context, round int) (engine.Refinement, error) {
+			return k.Refine(ctx, row.Run, plan, round)
+		}
+	}
+	return engine.New(c)
 }
 
 // concluder is what works out the result of one run, nil when its recipe asks for none.
@@ -182,45 +239,47 @@ func (k *Keeper) fold(ctx context.Context, run protocol.RunID) (engine.Progress,
 	}
 }
 
-// refuse ends a run that cannot be executed, and says why.
-func (k *Keeper) refuse(ctx context.Context, row logbook.RunRow, past engine.Progress, text string) error {
-	return k.append(ctx, row.Run, past.Next, protocol.Ended, text, protocol.Failed, nil)
-}
-
-func (k *Keeper) append(ctx context.Context, run protocol.RunID, sequence int64, kind protocol.EventKind, text string, state protocol.State, detail map[string]any) error {
-	entry, err := k.eventEntry(run, sequence, kind, text, state, detail)
+func (k *Keeper) append(ctx context.Context, run protocol.RunID, sequence int64, kind protocol.EventKind, text string, state protocol.State, causes []protocol.Cause, detail map[string]any) error {
+	entry, err := k.eventEntry(run, sequence, kind, text, state, causes, detail)
 	if err != nil {
 		return err
 	}
 	return k.Book.Append(ctx, entry)
 }
 
-func (k *Keeper) eventEntry(run protocol.RunID, sequence int64, kind protocol.EventKind, text string, state protocol.State, detail map[string]any) (protocol.Entry, error) {
+func (k *Keeper) eventEntry(run protocol.RunID, sequence int64, kind protocol.EventKind, text string, state protocol.State, causes []protocol.Cause, detail map[string]any) (protocol.Entry, error) {
+	if causes == nil {
+		causes = []protocol.Cause{}
+	}
 	if detail == nil {
 		detail = map[string]any{}
 	}
 	body, err := json.Marshal(protocol.Event{
 		Head: protocol.Head{Schema: protocol.EventSchema, Bench: k.Bench.Name, Run: run, Sequence: sequence, At: protocol.Time{Time: time.Now()}},
-		Kind: kind, Text: text, State: state, Causes: []protocol.Cause{}, Detail: detail,
+		Kind: kind, Text: text, State: state, Causes: causes, Detail: detail,
 	})
 	return protocol.Entry{Run: run, Sequence: sequence, Kind: protocol.EventEntry, Body: body}, err
 }
 
 // benchEvent writes what happened to the bench outside any run.
-func (k *Keeper) benchEvent(ctx context.Context, kind protocol.EventKind, text string) error {
-	k.mu.Lock()
-	defer k.mu.Unlock()
+func (k *Keeper) benchEvent(ctx context.Context, kind protocol.EventKind, text string, detail map[string]any) error {
+	k.events.Lock()
+	defer k.events.Unlock()
 	last, err := k.Book.Last(ctx, protocol.BenchRun)
 	if err != nil {
 		return err
 	}
-	return k.append(ctx, protocol.BenchRun, last+1, kind, text, "", nil)
+	return k.append(ctx, protocol.BenchRun, last+1, kind, text, "", nil, detail)
+}
+
+func notArmed() error {
+	return protocol.Refuse(403, "the bench is not armed: somebody at the bench has to say `gemel arm --until HH:MM` first")
 }
 
 // Start checks a recipe and puts a run into the queue. It returns once that is durable.
 func (k *Keeper) Start(ctx context.Context, q protocol.StartRequest) (protocol.StartReply, error) {
 	if !k.Armed(time.Now()) {
-		return protocol.StartReply{}, protocol.Refuse(403, "the bench is not armed: somebody at the bench has to say `gemel arm --until HH:MM` first")
+		return protocol.StartReply{}, notArmed()
 	}
 	return k.Enqueue(ctx, q)
 }
@@ -247,7 +306,11 @@ func (k *Keeper) Enqueue(ctx context.Context, q protocol.StartRequest) (protocol
 		return protocol.StartReply{}, protocol.Refuse(400, "no key; want one of your own choice, so that a start asked for twice is one run")
 	}
 	now := time.Now()
-	plan, err := k.Plan(text, now)
+	earlier := k.earlierNow(ctx)
+	plan, err := k.Plan(text, now, earlier.find)
+	if earlier.broken != nil {
+		return protocol.StartReply{}, earlier.broken
+	}
 	if err != nil {
 		refusal := protocol.Refuse(422, "the recipe cannot be run: "+err.Error())
 		if e, ok := errors.AsType[*strict.Error](err); ok {
@@ -256,7 +319,7 @@ func (k *Keeper) Enqueue(ctx context.Context, q protocol.StartRequest) (protocol
 		return protocol.StartReply{}, refusal
 	}
 	run := k.name(now, q.Key)
-	first, err := k.eventEntry(run, 1, protocol.OperatorDid, "start asked for by "+who(q.Who), protocol.Queued, map[string]any{"who": q.Who, "key": q.Key})
+	first, err := k.eventEntry(run, 1, protocol.OperatorDid, "start asked for by "+who(q.Who), protocol.Queued, nil, map[string]any{"who": q.Who, "key": q.Key, "readings_planned": k.planned(plan)})
 	if err != nil {
 		return protocol.StartReply{}, err
 	}
@@ -273,7 +336,7 @@ func (k *Keeper) Enqueue(ctx context.Context, q protocol.StartRequest) (protocol
 		return protocol.StartReply{}, err
 	}
 	if existing != "" {
-		return k.known(ctx, existing, text)
+		return k.askedBefore(ctx, existing, text)
 	}
 	select {
 	case k.wake <- struct{}{}:
@@ -282,9 +345,14 @@ func (k *Keeper) Enqueue(ctx context.Context, q protocol.StartRequest) (protocol
 	return protocol.StartReply{Run: run}, nil
 }
 
-// known answers a start whose key was used before. The same request again is the same run; another
+// planned is how many readings a plan is certain to take.
+func (k *Keeper) planned(plan scan.Plan) int {
+	return engine.New(engine.Config{Bench: k.Bench, Plan: plan}).Snapshot().Planned
+}
+
+// askedBefore answers a start whose key was used before. The same request again is the same run; another
 // recipe under an old key would be measured never, and reported as done.
-func (k *Keeper) known(ctx context.Context, existing protocol.RunID, text string) (protocol.StartReply, error) {
+func (k *Keeper) askedBefore(ctx context.Context, existing protocol.RunID, text string) (protocol.StartReply, error) {
 	row, err := k.Book.Run(ctx, existing)
 	if err != nil {
 		return protocol.StartReply{}, err
@@ -327,14 +395,25 @@ func who(name string) string {
 
 // Stop ends a run for ever, also one that waits in the queue.
 func (k *Keeper) Stop(ctx context.Context, q protocol.RunRequest) (protocol.RunReply, error) {
-	eng, err := k.find(ctx, q)
-	if err != nil {
-		return protocol.RunReply{}, err
+	for {
+		eng, err := k.find(ctx, q)
+		if err != nil {
+			return protocol.RunReply{}, err
+		}
+		if eng != nil {
+			reply, err := answered(eng.Stop(ctx, who(q.Who)))
+			if err == nil && !reply.Recorded {
+				k.order.Lock()
+				defer k.order.Unlock()
+				_ = k.owe(q) // it is done, and was answered "not recorded": what fails here makes it no worse
+			}
+			return reply, err
+		}
+		reply, err := k.stopQueued(ctx, q)
+		if !errors.Is(err, errBegan) {
+			return reply, err
+		}
 	}
-	if eng == nil {
-		return k.stopQueued(ctx, q)
-	}
-	return answered(eng.Stop(ctx, who(q.Who)))
 }
 
 // Hold makes the current run wait.
@@ -352,7 +431,7 @@ func (k *Keeper) Hold(ctx context.Context, q protocol.RunRequest) (protocol.RunR
 // Resume takes the causes away that a person may take away.
 func (k *Keeper) Resume(ctx context.Context, q protocol.RunRequest) (protocol.RunReply, error) {
 	if !k.Armed(time.Now()) {
-		return protocol.RunReply{}, protocol.Refuse(403, "the bench is not armed: somebody at the bench has to say `gemel arm --until HH:MM` first")
+		return protocol.RunReply{}, notArmed()
 	}
 	eng, err := k.find(ctx, q)
 	if err != nil {
@@ -376,54 +455,32 @@ func (k *Keeper) find(ctx context.Context, q protocol.RunRequest) (*engine.Engin
 	if q.Run == "" {
 		return nil, protocol.Refuse(400, "no run named; want the run you mean, so that a late request cannot hit another")
 	}
-	k.mu.Lock()
-	if k.current != nil && k.row.Run == q.Run {
-		eng := k.current
-		k.mu.Unlock()
+	if eng := k.executing(q.Run); eng != nil {
 		return eng, nil
 	}
-	k.mu.Unlock()
-	row, err := k.Book.Run(ctx, q.Run)
-	if errors.Is(err, logbook.ErrNoRun) {
-		return nil, protocol.Refuse(404, fmt.Sprintf("no run %q on this bench", q.Run))
-	}
-	if err != nil {
-		return nil, err
-	}
-	if row.State.Final() {
-		return nil, protocol.Refuse(409, fmt.Sprintf("run %s is %s, for ever", q.Run, row.State))
-	}
-	return nil, nil
+	_, err := k.unfinished(ctx, q.Run)
+	return nil, err
 }
 
-func (k *Keeper) stopQueued(ctx context.Context, q protocol.RunRequest) (protocol.RunReply, error) {
+// executing returns the engine of a run, nil when none executes it.
+func (k *Keeper) executing(run protocol.RunID) *engine.Engine {
 	k.mu.Lock()
 	defer k.mu.Unlock()
-	if k.current != nil && k.row.Run == q.Run {
-		return protocol.RunReply{}, protocol.Refuse(503, "the run begins at this moment; ask again")
+	if k.row.Run != run {
+		return nil
 	}
-	row, err := k.Book.Run(ctx, q.Run)
-	if err != nil {
-		return protocol.RunReply{}, err
-	}
-	if row.State.Final() {
-		return protocol.RunReply{}, protocol.Refuse(409, fmt.Sprintf("run %s is %s, for ever", q.Run, row.State))
-	}
-	last, err := k.Book.Last(ctx, q.Run)
-	if err != nil {
-		return protocol.RunReply{}, err
-	}
-	if err := k.append(ctx, q.Run, last+1, protocol.Ended, "stopped in the queue by "+who(q.Who), protocol.Stopped, map[string]any{"who": q.Who}); err != nil {
-		return protocol.RunReply{}, err
-	}
-	return protocol.RunReply{Run: q.Run, State: protocol.Stopped, Causes: []protocol.Cause{}, Recorded: true}, nil
+	return k.current
 }
 
-// Status tells how the bench is. It never waits for the bench.
+// Status tells how the bench is. It never waits for the bench, nor for a request.
 func (k *Keeper) Status(ctx context.Context) protocol.Status {
-	k.mu.Lock()
-	defer k.mu.Unlock()
-	s := protocol.Status{Bench: k.Bench.Name, Version: k.Version, Causes: []protocol.Cause{}, Queue: k.waiting(ctx), Armed: k.Armed(time.Now())}
+	s := protocol.Status{Bench: k.Bench.Name, Version: k.Version, Causes: []protocol.Cause{}, Armed: k.Armed(time.Now()),
+		Queue: []protocol.RunID{}, Waiting: []protocol.WaitingRun{}}
+	waiting, _ := k.waiting(ctx) // a logbook that cannot be read is told by whoever must read it
+	for _, w := range waiting {
+		s.Queue = append(s.Queue, w.Run)
+		s.Waiting = append(s.Waiting, protocol.WaitingRun{Run: w.Run, Title: w.Title})
+	}
 	if k.Bench.Simulated {
 		pace := max(1, int(k.Bench.Pace))
 		s.Simulated = &pace
@@ -431,6 +488,8 @@ func (k *Keeper) Status(ctx context.Context) protocol.Status {
 	if k.Behind != nil {
 		s.Behind = k.Behind()
 	}
+	k.mu.Lock()
+	defer k.mu.Unlock()
 	if k.row.Run == "" {
 		return s
 	}
@@ -446,21 +505,6 @@ func (k *Keeper) Status(ctx context.Context) protocol.Status {
 		s.TimeLeft = &left
 	}
 	return s
-}
-
-// waiting lists the runs in the queue, as the logbook has them.
-func (k *Keeper) waiting(ctx context.Context) []protocol.RunID {
-	queue := []protocol.RunID{}
-	rows, err := k.Book.Unfinished(ctx)
-	if err != nil {
-		return queue
-	}
-	for _, row := range rows {
-		if k.current == nil || row.Run != k.row.Run {
-			queue = append(queue, row.Run)
-		}
-	}
-	return queue
 }
 
 // appender gives the engine its one method, and tells it which refusals are for ever.

@@ -31,7 +31,7 @@ func keeping(t *testing.T, change func(*Config)) (*Keeper, *logbook.Book) {
 	})
 	c := Config{
 		Book: book, Bench: &engine.Bench{Name: "skerry", Pace: 1, Simulated: true}, BenchText: "bench: {name: skerry}", Version: "test",
-		Plan: func(text string, _ time.Time) (scan.Plan, error) {
+		Plan: func(text string, _ time.Time, _ func(scan.EarlierAsk) (scan.EarlierSource, error)) (scan.Plan, error) {
 			if strings.Contains(text, "bad") {
 				return scan.Plan{}, &strict.Error{Findings: []protocol.Finding{{File: "recipe", Line: 2, Col: 1, Key: "dwell", Found: "bad", Want: "a time"}}}
 			}

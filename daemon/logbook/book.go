@@ -109,6 +109,7 @@ func Open(dir string) (_ *Book, err error) {
 	if b.readers, err = openReaders(b.file); err != nil {
 		return nil, err
 	}
+	_ = reserve(dir) // without it a stop on a full disk is only in memory; that is no reason not to begin
 	return b, nil
 }
 

@@ -1,11 +1,13 @@
 package logbook
 
 import (
+	"cmp"
 	"context"
 	"database/sql"
 	"encoding/json"
 	"errors"
 	"fmt"
+	"slices"
 
 	"gemel/protocol"
 )
@@ -105,11 +107,18 @@ func (b *Book) Runs(ctx context.Context) ([]RunRow, error) {
 	return rows, wrap(b.file, err)
 }
 
-// Unfinished returns the runs that are in no final state, in the order they were asked for.
+// Unfinished returns the runs that are in no final state, in the order of Queue.
 func (b *Book) Unfinished(ctx context.Context) ([]RunRow, error) {
 	rows, err := b.runs(ctx, selectRun+`WHERE state IS NULL OR state NOT IN (?, ?, ?) ORDER BY number`,
 		protocol.Finished, protocol.Stopped, protocol.Failed)
-	return rows, wrap(b.file, err)
+	if err != nil {
+		return nil, wrap(b.file, err)
+	}
+	return rows, b.arrange(ctx, len(rows), func(place map[protocol.RunID]int) {
+		slices.SortStableFunc(rows, func(a, b RunRow) int {
+			return cmp.Compare(rank(place, a.Run, a.State), rank(place, b.Run, b.State))
+		})
+	})
 }
 
 // Run returns one run, or ErrNoRun.

@@ -358,13 +358,13 @@ func (k *kit) catchUp(c *courier.Courier) {
 	k.stuck = fmt.Sprintf("%d entries were never published: %v", c.Behind(), c.Trouble())
 }
 
-func (k *kit) plan(text string, accepted time.Time) (scan.Plan, error) {
+func (k *kit) plan(text string, accepted time.Time, earlier func(scan.EarlierAsk) (scan.EarlierSource, error)) (scan.Plan, error) {
 	r, err := recipe.Parse("night.yaml", []byte(text))
 	if err != nil {
 		return scan.Plan{}, err
 	}
 	facts := k.Bench.Facts()
-	facts.AcceptedAt = accepted
+	facts.AcceptedAt, facts.Earlier = accepted, earlier
 	return r.Plan(facts)
 }
 
@@ -581,7 +581,7 @@ func cutLast(id string) (run, number string, found bool) {
 func (k *kit) result() (*Result, error) {
 	k.virtual.World.Settle()
 	r := &Result{Facts: FactsOf(k.Bench), Took: time.Since(k.began), Lives: k.lived, Lines: k.counts, Stuck: k.stuck, Published: len(k.sink.stored)}
-	plan, err := k.plan(k.Recipe, k.began)
+	plan, err := k.plan(k.Recipe, k.began, nil)
 	if err != nil {
 		return nil, err
 	}
