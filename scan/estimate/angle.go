@@ -70,9 +70,7 @@ func Peak(rows Rows, bench Bench, model Model, q PeakQuestion) (Result, error) {
 	if err != nil {
 		return Result{}, &Refusal{Reasons: []string{err.Error()}}
 	}
-	e := b.Expand(q.Coverage)
-	r.Value, r.U, r.Expanded, r.K, r.KBecause, r.Budget = &b.Value, &b.U, &e.U, &e.K, e.Because, b.Rows
-	r.Interval = &Interval{b.Value - e.U, b.Value + e.U}
+	e := r.state(b)
 	axis := e.K * zero.U
 	if i, err := fit.Interval(centreParam, q.Coverage); err != nil {
 		r.Warnings = append(r.Warnings, "the profile likelihood of the angle could not be followed ("+err.Error()+"): the interval is the symmetric one")
@@ -160,12 +158,22 @@ func gather(kinds map[protocol.ReadingKind][]protocol.Reading, bench Bench, q Pe
 	return data
 }
 
-// Residual is one reading of a fitted profile.
+// Residual is one reading of a fitted profile. Exactly one of AngleDeg and DelayS is set.
 type Residual struct {
-	AngleDeg float64 `json:"angle_deg"`
-	Counts   float64 `json:"counts"`
-	Expected float64 `json:"expected_counts"`
-	Residual float64 `json:"residual"` // signed root of the reading's part of the Cash statistic
+	AngleDeg  *float64 `json:"angle_deg,omitempty"`
+	DelayS    *float64 `json:"delay_s,omitempty"`
+	ExposureS float64  `json:"exposure_s"` // gate, times the power (or the singles of a delay) over their mean
+	Counts    float64  `json:"counts"`
+	Expected  float64  `json:"expected_counts"`
+	Residual  float64  `json:"residual"` // signed root of the reading's part of the Cash statistic
+}
+
+// Place is where the reading lies on its profile, and in which unit.
+func (r Residual) Place() (at float64, unit string) {
+	if r.AngleDeg != nil {
+		return *r.AngleDeg, "deg"
+	}
+	return *r.DelayS, "s"
 }
 
 // Residuals lists what the fit leaves, in the order of the angles.
@@ -173,7 +181,8 @@ func (f PeakFit) Residuals() []Residual {
 	data, m := f.Expected()
 	list := make([]Residual, len(data))
 	for i, s := range data {
-		list[i] = Residual{s.AngleDeg, s.Counts, m[i], math.Copysign(math.Sqrt(math.Max(0, Cash([]float64{s.Counts}, []float64{m[i]}))), s.Counts-m[i])}
+		list[i] = Residual{AngleDeg: &data[i].AngleDeg, ExposureS: s.Exposure, Counts: s.Counts, Expected: m[i],
+			Residual: math.Copysign(math.Sqrt(math.Max(0, Cash([]float64{s.Counts}, []float64{m[i]}))), s.Counts-m[i])}
 	}
 	return list
 }
@@ -218,6 +227,7 @@ func describe(r *Result, fit PeakFit, q PeakQuestion) {
 		}
 	}
 	r.Residuals = fit.Residuals()
+	r.fitted = fit.RateHz
 }
 
 // decide compares the counts within the width with those well outside it.

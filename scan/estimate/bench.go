@@ -84,10 +84,24 @@ type Model struct {
 	// Profile is the predicted coincidence or singles rate against the angle of an axis (degrees), in
 	// any unit: its offset, scale and background are fitted.
 	Profile func(angleDeg float64) float64
+
+	// Of a tuning curve and of a conjugate map: at a place of the other axis (degrees, as it was asked
+	// for) the predicted profile along the arm, where the other axis truly stands shiftDeg further.
+	ProfileAt func(againstDeg, shiftDeg float64) func(angleDeg float64) float64
+	// Bare is where the light of the filter's centre goes that no aperture has averaged, seen by the
+	// arm, with the other axis at an angle: by phase matching against a tilt, by the momentum along
+	// the face against the other arm.
+	Bare func(againstDeg float64) (angleDeg float64, err error)
+	// CutDeg is the cut whose crystal, untilted, has the same angle between pump and optic axis as
+	// the declared one at this tilt.
+	CutDeg func(tiltDeg float64) (float64, error)
 }
 
 // Refusal says, with every reason at once, why there is no result.
-type Refusal struct{ Reasons []string }
+type Refusal struct {
+	Reasons []string
+	Limit   *UpperLimit // what can be said nevertheless; nil: nothing
+}
 
 func (r *Refusal) Error() string { return "no result: " + strings.Join(r.Reasons, "; ") }
 

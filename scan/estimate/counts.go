@@ -15,6 +15,14 @@ type Rows struct {
 	Title    string
 	Readings []protocol.Reading
 	Doubtful map[int64]string // sequence: why a reading was doubted after it was accepted
+	// Planned is how many points the sweep has; those with a higher index were added by a refinement,
+	// after counts were seen. 0: none was.
+	Planned int
+}
+
+// refined says whether a reading belongs to a point that a refinement added.
+func (r Rows) refined(row protocol.Reading) bool {
+	return r.Planned > 0 && row.Point != nil && *row.Point >= r.Planned
 }
 
 // Aside is a reading that does not count, and why.
@@ -38,6 +46,20 @@ func (r Rows) split() (byKind map[protocol.ReadingKind][]protocol.Reading, aside
 		}
 	}
 	return byKind, aside
+}
+
+// asPlanned keeps the readings of the sweep itself. An efficiency without a plateau is what its points
+// were said to be before anything was counted.
+func (r Rows) asPlanned(lights []protocol.Reading, aside []Aside) ([]protocol.Reading, []Aside) {
+	var kept []protocol.Reading
+	for _, row := range lights {
+		if r.refined(row) {
+			aside = append(aside, Aside{row.Sequence, "at a point that a refinement added after counts were seen; only the sweep's points make this number"})
+			continue
+		}
+		kept = append(kept, row)
+	}
+	return kept, aside
 }
 
 func countOf(counts []protocol.Count, channel string) (float64, bool) {

@@ -2,6 +2,7 @@ package estimate
 
 import (
 	"fmt"
+	"maps"
 	"math"
 	"math/rand/v2"
 	"slices"
@@ -123,8 +124,11 @@ func Efficiency(rows Rows, bench Bench, model Model, q Question) (Result, error)
 
 	kinds, aside := rows.split()
 	lights := kinds[protocol.Light]
+	if q.Use == nil {
+		lights, aside = rows.asPlanned(lights, aside)
+	}
 	if q.Use != nil {
-		kept, dropped, notes := q.Use.choose(lights, ch, bench.Counter.Window.Value, no)
+		kept, dropped, notes := q.Use.choose(rows, lights, ch, bench.Counter.Window.Value, no)
 		lights = kept
 		aside = append(aside, dropped...)
 		result.Condition = append(result.Condition, notes...)
@@ -150,6 +154,10 @@ func Efficiency(rows Rows, bench Bench, model Model, q Question) (Result, error)
 	c.sum()
 	if c.s <= c.background || c.c <= 0 {
 		no.addf("%.0f trigger counts against a background of %.0f, %.0f coincidences; want heralds and coincidences", c.s, c.background, c.c)
+		no.Limit = c.upperLimit(q.Coverage)
+		if l := no.Limit; l != nil {
+			no.addf("what can be said: the efficiency of %s is below %.3g with %.4g %% coverage (%s)", c.test.Name, l.Efficiency, 100*l.Coverage, l.Because)
+		}
 		return Result{}, no
 	}
 	c.load(no, &result)
@@ -159,6 +167,50 @@ func Efficiency(rows Rows, bench Bench, model Model, q Question) (Result, error)
 	c.list()
 	result.SetAside = aside
 	return c.finish(result, q)
+}
+
+// UpperLimit is what a calibration without a single coincidence says nevertheless.
+type UpperLimit struct {
+	Efficiency float64 `json:"efficiency"`
+	Coverage   float64 `json:"coverage"` // one-sided
+	Counts     float64 `json:"coincidences"`
+	Because    string  `json:"because"`
+}
+
+// upperLimit is the efficiency at which no coincidence would be seen with a chance of 1 - coverage:
+// exp(-m) = 1 - coverage, so m = -ln(1 - coverage), 3.00 coincidences for 95 % (the one-sided case of
+// Garwood 1936). Nothing is taken off for accidentals, of which there are none to be sure of, so the
+// limit errs upwards only. The constants stand at their declared values.
+func (c *calculation) upperLimit(coverage float64) *UpperLimit {
+	if c.c > 0 || !(c.s > c.background) {
+		return nil
+	}
+	l := *c
+	l.off = maps.Clone(c.off)
+	if l.off == nil {
+		l.off = map[Step]bool{}
+	}
+	l.off[AccidentalStep], l.off[ShadowStep] = true, true
+	l.useDisplaced = false
+	l.dwells = slices.Clone(c.dwells)
+	limit := UpperLimit{Coverage: coverage, Counts: PoissonUpper(0, coverage)}
+	for i := range l.dwells {
+		l.dwells[i].c = limit.Counts * l.dwells[i].s / c.s
+	}
+	l.c = limit.Counts
+	no := &Refusal{}
+	l.load(no, &Result{})
+	if no.err() != nil {
+		return nil
+	}
+	l.list()
+	x := make([]float64, len(l.inputs))
+	for i, in := range l.inputs {
+		x[i] = in.Estimate
+	}
+	limit.Efficiency = math.Min(1, l.value(x))
+	limit.Because = fmt.Sprintf("no coincidence was counted, which happens in %.3g %% of cases where %.2f are expected, -ln(1 - %.4g); accidentals are not taken off, and the constants stand at their declared values", 100*(1-coverage), limit.Counts, coverage)
+	return &limit
 }
 
 func (c *calculation) on(s Step) bool { return !c.off[s] }

@@ -296,7 +296,7 @@ func TestThePlateausCentreNeverComesFromTheReadingsItAdmits(t *testing.T) {
 	ch := channels{s: "signal", d: "idler", c: "pairs"}
 	pick := func(rows Rows, visit int) (kept []int64) {
 		no := &Refusal{}
-		readings, _, _ := use.choose(rows.Readings, ch, 0, no)
+		readings, _, _ := use.choose(rows, rows.Readings, ch, 0, no)
 		if err := no.err(); err != nil {
 			t.Fatal(err)
 		}

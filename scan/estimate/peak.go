@@ -195,6 +195,9 @@ func (f *PeakFit) rate(x float64, p []float64) float64 {
 	return p[heightParam] * gauss(v, p[widthParam])
 }
 
+// RateHz is the fitted profile with its background, in counts per exposure.
+func (f PeakFit) RateHz(x float64) float64 { return f.rate(x, f.Fit.Params) + f.ground(f.Fit.Params) }
+
 func (f *PeakFit) ground(p []float64) float64 {
 	if f.Shape == PredictedPeak {
 		return p[2]

@@ -11,6 +11,11 @@ import (
 // Plateau says which readings make an efficiency: those whose arm stands within HalfWidthDeg of the
 // middle of its flat top. The middle always comes from other readings than the ones it admits,
 // because readings picked by their own fluctuations are biased high.
+//
+// Readings of refined points, which lie where earlier counts were high, have no say about the middle:
+// crowded about a fluctuation they would pull it there and so admit the readings that fluctuated.
+// Within the half-width of a middle found without them they count like all others, because whether
+// one is admitted goes by its angle alone, and its own counts had no part in choosing that.
 type Plateau struct {
 	Axis         string
 	HalfWidthDeg float64
@@ -19,7 +24,7 @@ type Plateau struct {
 
 // choose keeps the readings near the middle. With two visits or more each visit's readings are
 // judged by the middle of the others; with one, every second place along the axis by the rest.
-func (p Plateau) choose(lights []protocol.Reading, ch channels, windowS float64, no *Refusal) (kept []protocol.Reading, aside []Aside, notes []Condition) {
+func (p Plateau) choose(rows Rows, lights []protocol.Reading, ch channels, windowS float64, no *Refusal) (kept []protocol.Reading, aside []Aside, notes []Condition) {
 	if !(p.HalfWidthDeg > 0) {
 		no.addf("half_width is %g deg; want a positive angle", p.HalfWidthDeg)
 		return nil, nil, nil
@@ -33,7 +38,7 @@ func (p Plateau) choose(lights []protocol.Reading, ch channels, windowS float64,
 		}
 		angle[i] = a
 	}
-	fold := folds(lights, angle)
+	fold := folds(rows, lights, angle)
 	centre := map[int]float64{}
 	if p.Centre != nil {
 		if !(p.Centre.U > 0) {
@@ -47,14 +52,14 @@ func (p Plateau) choose(lights []protocol.Reading, ch channels, windowS float64,
 		notes = append(notes, Condition{Name: "plateau's centre", Value: &v, Unit: "deg", Text: "from elsewhere: " + p.Centre.From})
 	} else {
 		names := slices.Compact(slices.Sorted(slices.Values(fold)))
-		if len(names) < 2 {
+		if !parted(rows, lights, fold) {
 			no.addf("one pass over %d places; want two visits, or places to split, or a centre from elsewhere: the centre must not come from the readings it admits", len(lights))
 			return nil, nil, nil
 		}
 		for _, f := range names {
 			var others []protocol.Reading
 			for i, r := range lights {
-				if fold[i] != f {
+				if fold[i] != f && !rows.refined(r) {
 					others = append(others, r)
 				}
 			}
@@ -83,23 +88,44 @@ func (p Plateau) choose(lights []protocol.Reading, ch channels, windowS float64,
 	return kept, aside, notes
 }
 
-// folds gives each reading the part of the run it belongs to: its visit, or where there is only
-// one, its place along the axis, even or odd.
-func folds(lights []protocol.Reading, angle []float64) []int {
-	fold := make([]int, len(lights))
-	several := false
+// parted says whether the sweep's own readings make two parts at least.
+func parted(rows Rows, lights []protocol.Reading, fold []int) bool {
+	first := -1
 	for i, r := range lights {
+		switch {
+		case rows.refined(r):
+		case first < 0:
+			first = fold[i]
+		case fold[i] != first:
+			return true
+		}
+	}
+	return false
+}
+
+// folds gives each reading the part of the run it belongs to: its visit, or where there is only
+// one, its place along the axis, even or odd. Readings of refined points, which find no middle, are
+// part 1, after whose counts they were placed.
+func folds(rows Rows, lights []protocol.Reading, angle []float64) []int {
+	fold := make([]int, len(lights))
+	var order []int // of the sweep's own
+	first, several := -1, false
+	for i, r := range lights {
+		if rows.refined(r) {
+			fold[i] = 1
+			continue
+		}
+		order = append(order, i)
 		if r.Visit != nil {
 			fold[i] = *r.Visit
 		}
-		several = several || fold[i] != fold[0]
+		if first < 0 {
+			first = fold[i]
+		}
+		several = several || fold[i] != first
 	}
 	if several {
 		return fold
-	}
-	order := make([]int, len(lights))
-	for i := range order {
-		order[i] = i
 	}
 	slices.SortStableFunc(order, func(a, b int) int {
 		switch {

@@ -39,8 +39,22 @@ type Result struct {
 	Warnings   []string    `json:"warnings"`
 	Because    []string    `json:"because"` // why there is no value
 
-	quantity string // what the sentence calls it
+	// What a kind adds.
+	Delay *DelayProfile `json:"delay,omitempty"`       // of the kind delay
+	Zero  *ZeroOfArm    `json:"zero,omitempty"`        // of the kind zero
+	Curve *Curve        `json:"curve,omitempty"`       // of the kinds tuning_curve and conjugate_map
+	Drift *DriftTable   `json:"drift,omitempty"`       // of the kind drift
+	By    *BySetting    `json:"by,omitempty"`          // of an efficiency at several values of a setting
+	Parts []Result      `json:"parts,omitempty"`       // the efficiency at each of these values, whole
+	Limit *UpperLimit   `json:"upper_limit,omitempty"` // of an efficiency without a single coincidence
+
+	quantity string                // what the sentence calls it
+	fitted   func(float64) float64 // the fitted profile, in counts a second against degrees or seconds
 }
+
+// Fitted is the fitted profile of a peak, a zero or a delay, in counts a second against what its
+// residuals are against. It is there as long as the result was not read back from JSON.
+func (r Result) Fitted() (rateHz func(at float64) float64, ok bool) { return r.fitted, r.fitted != nil }
 
 // Correction is one step of the waterfall, from raw to result.
 type Correction struct {
@@ -75,7 +89,7 @@ func (r *Result) noteValue(name string, v float64, unit, text string) {
 // Refused is the result that says why there is none.
 func Refused(rows Rows, kind string, refusal *Refusal) Result {
 	r := newResult(rows, kind)
-	r.Because = refusal.Reasons
+	r.Because, r.Limit = refusal.Reasons, refusal.Limit
 	_, r.SetAside = rows.split()
 	r.tidy()
 	return r
@@ -89,6 +103,17 @@ func newResult(rows Rows, kind string) Result {
 		}
 	}
 	return r
+}
+
+// state takes value, uncertainties and rows from a budget.
+func (r *Result) state(b Budget) Expanded {
+	e := b.Expand(r.Coverage)
+	r.Value, r.U, r.Expanded, r.K, r.KBecause, r.Budget = &b.Value, &b.U, &e.U, &e.K, e.Because, b.Rows
+	r.Interval = &Interval{b.Value - e.U, b.Value + e.U}
+	if !math.IsInf(b.Freedom, 1) {
+		r.Freedom = &b.Freedom
+	}
+	return e
 }
 
 // tidy makes empty lists print as lists.
@@ -134,6 +159,12 @@ func (r Result) Text() string {
 	}
 	for _, w := range r.Warnings {
 		b.WriteString("Note: " + w + "\n")
+	}
+	for _, part := range []interface{ text(*strings.Builder) }{r.Delay, r.Zero, r.Curve, r.By} {
+		part.text(&b)
+	}
+	if r.Drift != nil {
+		b.WriteString("\n" + r.Drift.Text())
 	}
 	if len(r.Waterfall) > 0 {
 		b.WriteString("\nFrom the counts to the result\n")
@@ -193,9 +224,17 @@ func (r Result) Text() string {
 	}
 	if len(r.Residuals) > 0 {
 		b.WriteString("\nReadings against the fitted profile\n")
-		fmt.Fprintf(&b, "  %10s %12s %12s %9s\n", "angle/deg", "counts", "expected", "residual")
+		head := "angle/deg"
+		if r.Residuals[0].AngleDeg == nil {
+			head = "delay/ns"
+		}
+		fmt.Fprintf(&b, "  %10s %12s %12s %9s\n", head, "counts", "expected", "residual")
 		for _, p := range r.Residuals {
-			fmt.Fprintf(&b, "  %10.4f %12.0f %12.1f %+9.2f\n", p.AngleDeg, p.Counts, p.Expected, p.Residual)
+			at, _ := p.Place()
+			if p.AngleDeg == nil {
+				at *= 1e9
+			}
+			fmt.Fprintf(&b, "  %10.4f %12.0f %12.1f %+9.2f\n", at, p.Counts, p.Expected, p.Residual)
 		}
 	}
 	if len(r.SetAside) > 0 {
@@ -211,11 +250,11 @@ func (r Result) Text() string {
 func (r Result) Sentence() string {
 	counts := fmt.Sprintf("%d readings kept, %d set aside", len(r.Used), len(r.SetAside))
 	if r.Value == nil {
-		return fmt.Sprintf("No %s from %s (%s): %s.", r.Kind, r.Run, counts, strings.Join(r.Because, "; "))
+		return fmt.Sprintf("No %s from %s (%s): %s.", strings.ReplaceAll(r.Kind, "_", " "), r.Run, counts, strings.Join(r.Because, "; "))
 	}
 	name := r.quantity
 	if name == "" {
-		name = r.Kind
+		name = strings.ReplaceAll(r.Kind, "_", " ")
 	}
 	unit := ""
 	if r.Unit != "1" {
