@@ -46,8 +46,8 @@ func (o *Outlook) Next(now time.Time) (Foreseen, bool) {
 		o.refineAt(now)
 	}
 	t, ok := p.next(now)
-	if ok && p.tooLate(t, now) {
-		o.leftOut = p.left()
+	if ok && (p.tooLate(t, now) || o.refinedLongEnough(t, now)) {
+		o.leftOut += p.left()
 		p.cut = true
 		t, ok = p.next(now)
 	}
@@ -65,6 +65,11 @@ func (o *Outlook) Next(now time.Time) (Foreseen, bool) {
 func (o *Outlook) refinable() bool {
 	p := &o.progress
 	return p.thePlan.Refine != nil && o.refine != nil && !p.refineDone && !p.cut && p.visited()
+}
+
+func (o *Outlook) refinedLongEnough(t task, now time.Time) bool {
+	p := &o.progress
+	return t.kind == lightTask && t.visit.Point >= len(p.thePlan.Points) && p.thePlan.Refine.Within > 0 && now.Sub(p.refinedAt) >= p.thePlan.Refine.Within
 }
 
 // refineAt adds the points of a round, as the engine would.
