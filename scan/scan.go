@@ -362,6 +362,9 @@ type Axis struct {
 	// it is false, or controllers differ, any order of passing is expected.
 	Together bool
 	HomesAt  *unit.Angle // where its reference search leaves it; nil: not known
+	// HomeRunUp says that the search turns the axis straight towards HomesAt from wherever it stands,
+	// and otherwise only within this of it; nil: anywhere within the soft limits.
+	HomeRunUp *unit.Angle
 }
 
 // Limits says whether an angle lies within the soft limits.

@@ -95,3 +95,58 @@ func TestTheOrderOfSearchesDecides(t *testing.T) {
 		t.Errorf("%v; want it refused: no such axis", err)
 	}
 }
+
+// straight walks a search that goes straight to its reference from every whole degree at which the
+// bench may stand: outside the keep-out, and on the side of it where it parks. It says how near
+// the arms come to one another.
+func straight(axes []scan.Axis, searched int) (nearest unit.Angle) {
+	nearest = unit.Turn
+	for s := axes[0].Low; s <= axes[0].High; s += deg {
+		for i := axes[1].Low; i <= axes[1].High; i += deg {
+			if s+i < 2*deg { // signal and idler count to opposite sides: they are their sum apart
+				continue
+			}
+			at := [2]unit.Angle{s, i}
+			home, runUp := *axes[searched].HomesAt, *axes[searched].HomeRunUp
+			for x := min(at[searched], home-runUp); x <= max(at[searched], home+runUp); x += deg / 2 {
+				if x < at[searched] && x < home-runUp || x > at[searched] && x > home+runUp {
+					continue
+				}
+				nearest = min(nearest, x+at[1-searched])
+			}
+		}
+	}
+	return nearest
+}
+
+func TestASearchStraightAwayFromTheOtherArmIsAllowedWhereverBothStand(t *testing.T) {
+	park, runUp := 3*deg, deg
+	arm := func(name drivers.AxisName, low, high, home unit.Angle) scan.Axis {
+		return scan.Axis{Name: name, Controller: "arms", Low: low, High: high, Park: &park, HomesAt: &home, HomeRunUp: &runUp}
+	}
+	keepOuts := []scan.KeepOut{{Name: "apart", Apart: &scan.Apart{Arms: [2]scan.Arm{{Axis: "signal_arm", Side: 1}, {Axis: "idler_arm", Side: -1}}, Least: 2 * deg}}}
+	for _, c := range []struct {
+		name        string
+		low, home   unit.Angle
+		change      func(*scan.Axis)
+		want, truth bool // truth: nothing in the walk comes nearer than allowed
+	}{
+		{"outwards to the far end", -4 * deg, 12 * deg, nil, true, true},
+		{"outwards to within its run-up of the far end", -4 * deg, 11 * deg, nil, true, true},
+		{"inwards", -4 * deg, 0, nil, false, false},
+		{"to the middle, from either side", -4 * deg, 6 * deg, nil, false, false},
+		{"outwards, nobody knows how", -4 * deg, 12 * deg, func(a *scan.Axis) { a.HomeRunUp = nil }, false, true},
+		{"outwards, nobody knows from where", -4 * deg, 12 * deg, func(a *scan.Axis) { a.Park = nil }, false, true},
+	} {
+		axes := []scan.Axis{arm("signal_arm", c.low, 12*deg, c.home), arm("idler_arm", c.low, 12*deg, 12*deg)}
+		if c.change != nil {
+			c.change(&axes[0])
+		} else if safe := straight(axes, 0) >= 2*deg; safe != c.truth {
+			t.Errorf("%s: walked, the arms come %s near; the table says otherwise", c.name, straight(axes, 0))
+		}
+		err := route.HomeOrder(axes, keepOuts, nil, []drivers.AxisName{"signal_arm", "idler_arm"})
+		if (err == nil) != c.want {
+			t.Errorf("%s: %v; want it allowed: %v", c.name, err, c.want)
+		}
+	}
+}
