@@ -82,6 +82,13 @@ type Stage interface {
 	TrustZero()
 }
 
+// Verifier is a Stage that can look for the reference mark of an axis and keep the zero it has.
+type Verifier interface {
+	// Mark searches the reference mark of an axis and returns the angle at which it was found, by
+	// the zero the controller has. The axis is left there.
+	Mark(ctx context.Context, axis AxisName) (unit.Angle, error)
+}
+
 // Gate is one closed counting interval.
 type Gate struct {
 	Counts   map[Channel]uint64 // all channels latched together, the tag channel too

@@ -157,9 +157,11 @@ func (p Plan) Visits() []Visit {
 	return slices.DeleteFunc(visits, func(v Visit) bool { return p.Points[v.Point].Empty != "" })
 }
 
-// Sweeps says whether the points move an axis. All points name the same axes.
+// Sweeps says whether the points move an axis. All points name the same axes, but those that are
+// empty, which may name fewer.
 func (p Plan) Sweeps(axis drivers.AxisName) bool {
-	return len(p.Points) > 0 && slices.ContainsFunc(p.Points[0].Axes, func(t AxisTarget) bool { return t.Axis == axis })
+	i := slices.IndexFunc(p.Points, func(p Point) bool { return p.Empty == "" })
+	return i >= 0 && slices.ContainsFunc(p.Points[i].Axes, func(t AxisTarget) bool { return t.Axis == axis })
 }
 
 // pass is the order of the points in one pass, counted from 1.
@@ -365,6 +367,14 @@ type Axis struct {
 	// HomeRunUp says that the search turns the axis straight towards HomesAt from wherever it stands,
 	// and otherwise only within this of it; nil: anywhere within the soft limits.
 	HomeRunUp *unit.Angle
+	Verify    *Verify // nil: its zero is not verified while a run goes on
+}
+
+// Verify says how often an axis's zero is verified at its reference mark, and how far off it may be.
+// It is compulsory for an axis whose position is only counted, because a slip would not show.
+type Verify struct {
+	Every     time.Duration // bench time between two; 0: at the start, after each interruption and at the end only
+	Tolerance unit.Angle
 }
 
 // Limits says whether an angle lies within the soft limits.

@@ -342,6 +342,9 @@ func (e *Engine) turn(ctx context.Context) error {
 	if e.early(ctx) {
 		return nil
 	}
+	if a, due := e.toVerify(false); due {
+		return e.verify(ctx, a)
+	}
 	if e.refinable() {
 		return e.refine(ctx)
 	}
@@ -352,6 +355,9 @@ func (e *Engine) turn(ctx context.Context) error {
 		}
 	}
 	if !ok {
+		if a, due := e.toVerify(true); due {
+			return e.verify(ctx, a)
+		}
 		if done, err := e.putBack(ctx); !done || err != nil {
 			return err
 		}

@@ -42,6 +42,8 @@ type Progress struct {
 	refinedAt   time.Time                       // when the first of them were decided
 	refineRound int                             // of the last refinement written
 	refineDone  bool                            // none follows
+	zeros       map[drivers.AxisName]verified   // when each axis's zero was last found true
+	lastTaken   int64                           // entry of the last accepted reading
 	stand       map[drivers.AxisName]unit.Angle // where the axes have to be that the sweep does not move; nil until that is written
 	spent       time.Duration                   // bench time spent on accepted light readings, moves included
 	spentOn     int
@@ -171,6 +173,7 @@ func (p *Progress) clone() Progress {
 	c.series = maps.Clone(p.series)
 	c.stand = maps.Clone(p.stand)
 	c.refined = slices.Clone(p.refined)
+	c.zeros = maps.Clone(p.zeros)
 	c.Causes = slices.Clone(p.Causes)
 	if c.Next == 0 {
 		c.Next = 1
@@ -224,6 +227,7 @@ func (p *Progress) applyReading(r *protocol.Reading) {
 		return
 	}
 	p.Accepted++
+	p.lastTaken = r.Sequence
 	if key.kind == referenceTask {
 		p.applyReference(r)
 		return
@@ -334,6 +338,7 @@ func (p *Progress) applyEvent(ev *protocol.Event) {
 		p.Causes = slices.Clone(ev.Causes)
 	}
 	p.ref.applyEvent(ev)
+	p.applyVerified(ev)
 	switch ev.Kind {
 	case protocol.Began:
 		p.startedAt = ev.At.Time

@@ -170,7 +170,7 @@ func (e *Engine) findZero(ctx, op context.Context) error {
 		}
 		var lost []drivers.AxisName
 		for _, a := range e.homeOrder(s) {
-			if !homed[a] {
+			if !homed[a] || e.progress.zeros[a].wrong {
 				lost = append(lost, a)
 			}
 		}
@@ -178,6 +178,9 @@ func (e *Engine) findZero(ctx, op context.Context) error {
 			continue
 		}
 		detail := map[string]any{"controller": string(s.Name()), "axes": lost}
+		if err := e.doubtUnverified(ctx, lost); err != nil {
+			return err
+		}
 		if !e.homing && !e.Bench.Unattended[s.Name()] {
 			return e.holdFor(ctx, protocol.ByTrouble, fmt.Sprintf("held: %s has lost the zero of %v; resume when the arms may search for it, with somebody there", s.Name(), lost), detail)
 		}
@@ -219,8 +222,8 @@ func (e *Engine) maySearch(ctx context.Context, lost []drivers.AxisName) error {
 			return err
 		}
 		at, err := s.Where(ctx)
-		if err != nil {
-			return err
+		if err != nil && drivers.RemedyOf(err) != drivers.HomeAgain {
+			return err // one that has lost a zero says nothing about its other axes either
 		}
 		for name, angle := range at {
 			if homed[name] {
