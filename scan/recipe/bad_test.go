@@ -23,6 +23,7 @@ const mark = "# findings:\n"
 func TestBadRecipes(t *testing.T) {
 	facts := bench()
 	facts.Axes = append(facts.Axes, scan.Axis{Name: "geared_arm", High: 5 * unit.Degree, Backlash: unit.Degree / 2, Rising: true, Park: new(unit.Angle(0))})
+	facts.KeepOuts = []scan.KeepOut{{Name: "post", Range: &scan.Range{Span: scan.Span{Axis: "geared_arm", Low: 7 * unit.Degree / 2, High: 4 * unit.Degree}}}}
 	facts.Singles, facts.Detectors["lonely"] = append(facts.Singles, "c"), "c"
 	facts.AcceptedAt = time.Date(2026, 3, 28, 20, 0, 0, 0, zone(t, "Europe/Berlin")) // clocks are set forward in this night
 	files, err := filepath.Glob("../../testdata/recipe-bad/*.yaml")

@@ -14,6 +14,8 @@ import (
 type partners struct {
 	of, tilt int            // levels of the sweep that step the other arm and the crystal; tilt -1: not by a level of its own
 	angle    [][]unit.Angle // by place of the tilt, then of the other arm
+	none     [][]string     // why there is no partner; nil where all have one
+	open     bool           // the other arm, or the tilt, stands provisionally
 }
 
 // at is where the partner goes at a point, given by its place on every level.
@@ -23,6 +25,18 @@ func (p partners) at(level []int) unit.Angle {
 		k = level[p.tilt]
 	}
 	return p.angle[k][level[p.of]]
+}
+
+// empty is why no partner goes anywhere at a point; empty when one does.
+func (p partners) empty(level []int) string {
+	if p.none == nil {
+		return ""
+	}
+	k := 0
+	if p.tilt >= 0 {
+		k = level[p.tilt]
+	}
+	return p.none[k][level[p.of]]
 }
 
 // roundPartner keeps targets that come from a model as short as a person would write them: a
@@ -40,7 +54,7 @@ func (r *Recipe) partners(c column, f Facts) (p partners, findings []protocol.Fi
 	fail := func(found, want string) (partners, []protocol.Finding) {
 		return p, []protocol.Finding{c.ofAt.Finding(found, want)}
 	}
-	if roles := []string{axis.Role, other.Role}; !slices.Contains(roles, "signal_arm") || !slices.Contains(roles, "idler_arm") {
+	if roles := []string{axis.Role, other.Role}; !slices.Contains(roles, signalArm) || !slices.Contains(roles, idlerArm) {
 		return fail(fmt.Sprintf("%s (%s) as conjugate of %s (%s)", axis.Name, axis.Role, other.Name, other.Role), "one arm as conjugate of the other")
 	}
 	of, ok := r.column(c.ConjugateOf)
@@ -52,7 +66,7 @@ func (r *Recipe) partners(c column, f Facts) (p partners, findings []protocol.Fi
 	case f.Conjugate == nil:
 		return fail("a conjugate on a bench without optics", `blocks "optics" and "arms" in the bench file`)
 	}
-	p.of, p.tilt = of.level, -1
+	p.of, p.tilt, p.open = of.level, -1, of.open()
 	tilts, ok := r.tilts(f, &p)
 	if !ok {
 		return fail("a conjugate without the crystal's tilt", "an entry such as {axis: "+tiltName(f)+", at: 0 deg}: where the crystal stands decides where the partner goes")
@@ -65,19 +79,21 @@ func (r *Recipe) partners(c column, f Facts) (p partners, findings []protocol.Fi
 	lowest, highest := c.offsets()
 	var none, beyond int
 	var firstNone, firstBeyond, want string
+	reasons := make([][]string, 0, len(tilts))
 	for i, tilt := range tilts {
 		if lockStep && i > 0 {
 			break
 		}
-		row := make([]unit.Angle, len(arms))
+		row, why := make([]unit.Angle, len(arms)), make([]string, len(arms))
 		for k, arm := range arms {
 			if lockStep {
 				tilt = tilts[k]
 			}
 			deg, err := f.Conjugate(other.Role, arm.Degrees(), tilt.Degrees())
 			if err != nil {
+				why[k] = fmt.Sprintf("%s at %s, crystal tilted by %s: %v", other.Name, arm, tilt, err)
 				if none++; none == 1 {
-					firstNone = fmt.Sprintf("%s at %s, crystal tilted by %s: %v", other.Name, arm, tilt, err)
+					firstNone = why[k]
 				}
 				continue
 			}
@@ -91,13 +107,20 @@ func (r *Recipe) partners(c column, f Facts) (p partners, findings []protocol.Fi
 				}
 			}
 		}
-		p.angle = append(p.angle, row)
+		p.angle, reasons = append(p.angle, row), append(reasons, why)
 	}
 	places := len(p.angle) * len(arms)
 	if none > 0 {
-		findings = append(findings, c.ofAt.Finding(fmt.Sprintf("%s (%d of %d places)", firstNone, none, places), "places from which a partner leaves the crystal"))
+		p.none = reasons
+	}
+	if p.open {
+		return p, nil // nobody goes where this would be
+	}
+	if none == places {
+		findings = append(findings, c.ofAt.Finding(fmt.Sprintf("%s (%d of %d places)", firstNone, none, places), "a place from which a partner leaves the crystal"))
 	}
 	if beyond > 0 {
+		firstBeyond += of.from()
 		findings = append(findings, c.ofAt.Finding(fmt.Sprintf("%s (%d of %d places)", firstBeyond, beyond, places), want))
 	}
 	return p, findings
@@ -107,12 +130,12 @@ func (r *Recipe) partners(c column, f Facts) (p partners, findings []protocol.Fi
 // crystal stands that can be tilted.
 func (r *Recipe) tilts(f Facts, p *partners) ([]unit.Angle, bool) {
 	name := tiltName(f)
-	i := slices.IndexFunc(f.Axes, func(a scan.Axis) bool { return a.Role == "crystal_tilt" })
+	i := slices.IndexFunc(f.Axes, func(a scan.Axis) bool { return a.Role == crystalTilt })
 	if i < 0 {
 		return []unit.Angle{0}, true
 	}
 	if c, ok := r.column(f.Axes[i].Name); ok {
-		p.tilt = c.level
+		p.tilt, p.open = c.level, p.open || c.open()
 		return c.angles(), true
 	}
 	if r.Background != nil && string(r.Background.Turn) == name && f.Axes[i].Park != nil {
@@ -123,7 +146,7 @@ func (r *Recipe) tilts(f Facts, p *partners) ([]unit.Angle, bool) {
 
 func tiltName(f Facts) string {
 	for _, a := range f.Axes {
-		if a.Role == "crystal_tilt" {
+		if a.Role == crystalTilt {
 			return string(a.Name)
 		}
 	}
@@ -137,12 +160,16 @@ func (e Entry) offsets() (low, high unit.Angle) {
 	return first.angle(), last.angle()
 }
 
-// angles lists an axis entry's values.
+// angles lists an axis entry's values; of a conjugate, what is added.
 func (e Entry) angles() []unit.Angle {
+	var from unit.Angle
+	if e.stand != nil {
+		from = e.stand.angle
+	}
 	all := make([]unit.Angle, e.Values.Len())
 	for k := range all {
 		n, _ := e.Values.at(k)
-		all[k] = n.angle()
+		all[k] = from + n.angle()
 	}
 	return all
 }

@@ -138,9 +138,17 @@ func readBackground(v strict.Value) *Background {
 var everyPoints = regexp.MustCompile(`^([1-9][0-9]{0,5}) points?$`)
 
 func readCadence(m strict.Map, at strict.Place, what string) Cadence {
-	dwell, every, also := m.Need("dwell"), m.Opt("every"), m.Opt("also")
+	m.Need("dwell")
+	return readCadenceOr(m, at, what, scan.Dwell{})
+}
+
+// readCadenceOr does without a dwell, and takes the one given in its stead.
+func readCadenceOr(m strict.Map, at strict.Place, what string, or scan.Dwell) Cadence {
+	dwell, every, also := m.Opt("dwell"), m.Opt("every"), m.Opt("also")
 	c := Cadence{at: at, dwellAt: dwell.Place(), everyAt: every.Place()}
-	c.Dwell = readTime(dwell)
+	if c.Dwell = or; dwell.Given() {
+		c.Dwell = readTime(dwell)
+	}
 	if text := every.Text(); every.Good() {
 		if n := everyPoints.FindStringSubmatch(text); n != nil {
 			c.EveryPoints, _ = strconv.Atoi(n[1])

@@ -68,10 +68,20 @@ type Sensor struct {
 	Unit string // a spelling of package unit
 }
 
+// The roles of axes that the model knows.
+const (
+	signalArm   = "signal_arm"
+	idlerArm    = "idler_arm"
+	crystalTilt = "crystal_tilt"
+)
+
 // Plan works the recipe out for one bench. The error is a *strict.Error with all findings, each at
 // the line of the recipe that asks for what the bench cannot do.
+//
+// A plan whose Open is not empty is provisional: its places are not judged by limits and keep-outs,
+// because nobody goes there. Planned again with the values known, it is judged in full.
 func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
-	var findings []protocol.Finding
+	r, earlier, findings := r.resolved(f)
 	follow := map[int]partners{}
 	for i, c := range r.columns() {
 		if c.ConjugateOf == "" {
@@ -83,9 +93,9 @@ func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 		findings = append(findings, found...)
 	}
 	findings = append(findings, checkGates(r.Dwell, r.dwellAt, f)...)
-	result, found := r.result(f)
+	results, found := r.results(f)
 	findings = append(findings, found...)
-	trigger, found := r.trigger(f, result)
+	trigger, found := r.trigger(f, results)
 	findings = append(findings, found...)
 	if r.Dark != nil {
 		findings = append(findings, checkGates(r.Dark.Dwell, r.Dark.dwellAt, f)...)
@@ -95,6 +105,10 @@ func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 	}
 	background, found := r.background(f)
 	findings = append(findings, found...)
+	reference, found := r.reference(f, results)
+	findings = append(findings, found...)
+	refine, found := r.refine(f)
+	findings = append(findings, found...)
 	guards, found := r.guards(f)
 	findings = append(findings, found...)
 	schedule, found := r.schedule(f)
@@ -102,37 +116,55 @@ func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 	if err := strict.Join(findings...); err != nil {
 		return scan.Plan{}, err
 	}
-	plan := scan.Plan{Title: r.Title, Points: r.expand(f, follow), Dwell: r.Dwell, Repeat: r.Repeat, Background: background, Guards: guards, Schedule: schedule, Trouble: r.Trouble}
-	if result != nil {
-		plan.Results = []scan.Result{*result}
+	plan := scan.Plan{Title: r.Title, Points: r.expand(f, follow), Dwell: r.Dwell, Repeat: r.Repeat, Background: background, Reference: reference,
+		Refine: refine, Guards: guards, Schedule: schedule, Trouble: r.Trouble, Earlier: earlier}
+	for _, q := range results {
+		plan.Results = append(plan.Results, *q)
 	}
 	plan.Dwell.Trigger = trigger
 	if r.Dark != nil {
 		dark := r.Dark.Cadence
 		plan.Dark = &dark
 	}
+	if err := strict.Join(r.keptOut(f, plan)...); err != nil {
+		return scan.Plan{}, err
+	}
 	return plan, nil
 }
 
 // trigger is the channel whose counts end a dwell. An efficiency's own trigger does without being
-// named again.
-func (r *Recipe) trigger(f Facts, result *scan.Result) (drivers.Channel, []protocol.Finding) {
-	efficiency := r.Result != nil && r.Result.Kind == scan.Efficiency
-	switch {
-	case r.Dwell.Heralds == 0:
+// named again. results holds nil for one that is not sound.
+func (r *Recipe) trigger(f Facts, results []*scan.Result) (drivers.Channel, []protocol.Finding) {
+	if r.Dwell.Heralds == 0 {
 		return "", nil
-	case r.of == "" && !efficiency:
+	}
+	var c drivers.Channel
+	if r.of != "" {
+		var found []protocol.Finding
+		if c, found = f.single(r.of, r.ofAt, "a dwell that ends on", whyNotPairs); found != nil {
+			return "", found
+		}
+	}
+	efficiencies := 0
+	for i, q := range r.Results {
+		if q.Kind != scan.Efficiency {
+			continue
+		}
+		efficiencies++
+		switch {
+		case results[i] == nil: // what is wrong with it is reported there
+		case c == "":
+			c = results[i].Trigger
+		case c != results[i].Trigger && r.of != "":
+			return "", []protocol.Finding{r.ofAt.Finding(fmt.Sprintf("heralds of %q beside a result whose trigger is %q", r.of, q.Trigger), "the result's trigger, or no \"of\": ending on counts of the detector under test biases the efficiency")}
+		case c != results[i].Trigger:
+			return "", []protocol.Finding{q.triggerAt.Finding(fmt.Sprintf("the trigger %q, while the dwell ends on heralds of another", q.Trigger), "the same trigger in every efficiency, or a dwell of a fixed time: ending on counts of the detector under test biases the efficiency")}
+		}
+	}
+	if c == "" && efficiencies == 0 {
 		return "", []protocol.Finding{r.dwellAt.Finding("heralds of no channel", fmt.Sprintf(`"of" with the trigger's channel or detector, one of %q`, f.singles()))}
-	case r.of == "" && result == nil:
-		return "", nil // what is wrong with the result is reported there
-	case r.of == "":
-		return result.Trigger, nil
 	}
-	c, findings := f.single(r.of, r.ofAt, "a dwell that ends on", whyNotPairs)
-	if findings == nil && efficiency && result != nil && c != result.Trigger {
-		return "", []protocol.Finding{r.ofAt.Finding(fmt.Sprintf("heralds of %q beside a result whose trigger is %q", r.of, r.Result.Trigger), "the result's trigger, or no \"of\": ending on counts of the detector under test biases the efficiency")}
-	}
-	return c, findings
+	return c, nil
 }
 
 // single finds the channel that a detector's or a channel's name means. A channel of coincidences
@@ -208,7 +240,7 @@ func (e Entry) check(f Facts) []protocol.Finding {
 	if e.Axis != "" {
 		return e.checkAxis(f)
 	}
-	return e.checkSetting(f.Settings)
+	return e.checkSetting(f)
 }
 
 func (e Entry) checkAxis(f Facts) []protocol.Finding {
@@ -216,10 +248,17 @@ func (e Entry) checkAxis(f Facts) []protocol.Finding {
 	if findings != nil {
 		return findings
 	}
+	if e.open() {
+		return nil
+	}
+	var from unit.Angle
+	if e.stand != nil {
+		from = e.stand.angle
+	}
 	for _, k := range e.Values.extremes() {
 		n, at := e.Values.at(k)
-		if found, want, ok := reach(axis, n.angle()); !ok {
-			findings = append(findings, at.Finding(found, want))
+		if found, want, ok := reach(axis, from+n.angle()); !ok {
+			findings = append(findings, at.Finding(found+e.from(), want))
 		}
 	}
 	return findings
@@ -235,6 +274,16 @@ func (f Facts) axis(name drivers.AxisName, at strict.Place) (scan.Axis, []protoc
 		names[k] = string(a.Name)
 	}
 	return scan.Axis{}, []protocol.Finding{at.Finding(fmt.Sprintf("no axis %q on this bench", name), known(string(name), names))}
+}
+
+// role is the role of an axis; empty when there is no such axis.
+func (f Facts) role(name drivers.AxisName) string {
+	for _, a := range f.Axes {
+		if a.Name == name {
+			return a.Role
+		}
+	}
+	return ""
 }
 
 // reach says whether an axis may be sent to an angle, as a route would be asked at the moment of
@@ -256,28 +305,51 @@ func reach(axis scan.Axis, a unit.Angle) (found, want string, ok bool) {
 	return fmt.Sprintf("%s leaves no room within the soft limits of %s to approach by %s", a, axis.Name, axis.Backlash), want, false
 }
 
-func (e Entry) checkSetting(settings []Setting) []protocol.Finding {
-	i := slices.IndexFunc(settings, func(s Setting) bool { return s.Name == e.Setting })
-	if i < 0 {
-		names := make([]string, len(settings))
-		for k, s := range settings {
-			names[k] = string(s.Name)
-		}
-		return []protocol.Finding{e.nameAt.Finding(fmt.Sprintf("no setting %q on this bench", e.Setting), known(string(e.Setting), names))}
+func (e Entry) checkSetting(f Facts) []protocol.Finding {
+	s, findings := f.setting(e.Setting, e.nameAt)
+	if findings != nil {
+		return findings
 	}
-	s := settings[i]
-	var findings []protocol.Finding
 	for _, k := range e.Values.extremes() {
 		n, at := e.Values.at(k)
-		x, err := n.in(s.Unit)
+		x, err := e.value(k, s.Unit)
 		switch {
 		case err != nil:
 			findings = append(findings, at.Finding(n.String(), fmt.Sprintf("a value in %s, the unit of %s", s.Unit, s.Name)))
-		case x < s.Low || x > s.High:
-			findings = append(findings, at.Finding(fmt.Sprintf("%s is beyond the limits of %s", n, s.Name), fmt.Sprintf("%g %s to %g %s", s.Low, s.Unit, s.High, s.Unit)))
+		case !e.open() && (x < s.Low || x > s.High):
+			written := n.String()
+			if e.stand != nil {
+				written = fmt.Sprintf("%g %s", x, s.Unit)
+			}
+			findings = append(findings, at.Finding(fmt.Sprintf("%s is beyond the limits of %s%s", written, s.Name, e.from()), fmt.Sprintf("%g %s to %g %s", s.Low, s.Unit, s.High, s.Unit)))
 		}
 	}
 	return findings
+}
+
+// value is value i of a setting's entry, in the setting's unit.
+func (e Entry) value(i int, name string) (float64, error) {
+	n, _ := e.Values.at(i)
+	if e.stand == nil {
+		return n.in(name)
+	}
+	x, err := n.difference(name)
+	if err != nil || x == 0 {
+		return e.stand.value, err // to the last digit
+	}
+	return strconv.ParseFloat(strconv.FormatFloat(e.stand.value+x, 'g', 12, 64), 64)
+}
+
+func (f Facts) setting(name drivers.DeviceName, at strict.Place) (Setting, []protocol.Finding) {
+	i := slices.IndexFunc(f.Settings, func(s Setting) bool { return s.Name == name })
+	if i >= 0 {
+		return f.Settings[i], nil
+	}
+	names := make([]string, len(f.Settings))
+	for k, s := range f.Settings {
+		names[k] = string(s.Name)
+	}
+	return Setting{}, []protocol.Finding{at.Finding(fmt.Sprintf("no setting %q on this bench", name), known(string(name), names))}
 }
 
 // in returns the value in another unit of its kind, as the decimal number a person would write: the
@@ -333,7 +405,8 @@ func checkGates(d scan.Dwell, at strict.Place, f Facts) []protocol.Finding {
 }
 
 // expand lists the points, the last entry of the sweep running fastest. follow holds, by the place
-// of their column, where conjugates go.
+// of their column, where conjugates go; a point where one goes nowhere is empty, and names the other
+// axes alone.
 func (r *Recipe) expand(f Facts, follow map[int]partners) []scan.Point {
 	n := r.Points()
 	if len(r.Sweep) == 0 {
@@ -349,10 +422,9 @@ func (r *Recipe) expand(f Facts, follow map[int]partners) []scan.Point {
 			continue
 		}
 		values[i] = make([]float64, c.Values.Len())
-		name := f.Settings[slices.IndexFunc(f.Settings, func(s Setting) bool { return s.Name == c.Setting })].Unit
+		s, _ := f.setting(c.Setting, c.nameAt)
 		for k := range values[i] {
-			x, _ := c.Values.at(k)
-			values[i][k], _ = x.in(name) // checked at the extremes: a unit that fails, fails there
+			values[i][k], _ = c.value(k, s.Unit) // checked at the extremes: a unit that fails, fails there
 		}
 	}
 	points := make([]scan.Point, n)
@@ -368,11 +440,14 @@ func (r *Recipe) expand(f Facts, follow map[int]partners) []scan.Point {
 			}
 			angle := angles[i][at[c.level]]
 			if partner, ok := follow[i]; ok {
+				if points[p].Empty = partner.empty(at); points[p].Empty != "" {
+					continue // nowhere to send this arm
+				}
 				angle += partner.at(at)
 			}
 			axisTargets = append(axisTargets, scan.AxisTarget{Axis: c.Axis, Angle: angle})
 		}
-		points[p] = scan.Point{Axes: axisTargets[a:len(axisTargets):len(axisTargets)], Settings: settingTargets[s:len(settingTargets):len(settingTargets)]}
+		points[p].Axes, points[p].Settings = axisTargets[a:len(axisTargets):len(axisTargets)], settingTargets[s:len(settingTargets):len(settingTargets)]
 	}
 	return points
 }

@@ -61,10 +61,13 @@ type Recipe struct {
 	Dark       *Cadence
 	Background *Background
 	Trouble    scan.Trouble
-	Result     *Result
+	Reference  *Reference
+	Refine     *Refine
+	Results    []Result
 	Guards     []Guard
 	Schedule   *Schedule
 
+	sweepAt strict.Place
 	dwellAt strict.Place
 	ofAt    strict.Place // of the dwell's trigger
 	of      string       // as it is written; empty: not there
@@ -94,15 +97,17 @@ func Parse(file string, text []byte) (*Recipe, error) {
 	r.Repeat.Serpentine = r.Order == Serpentine
 	r.Repeat.Shuffled = r.Order == Shuffled
 	sweep := m.Opt("sweep")
-	r.Sweep = readSweep(sweep)
+	r.Sweep, r.sweepAt = readSweep(sweep), sweep.Place()
 	dwell := m.Need("dwell")
 	r.readDwell(dwell)
 	r.Dark = readDark(m.Opt("dark"))
 	r.Background = readBackground(m.Opt("background"))
 	r.Trouble = readTrouble(m.Opt("trouble"))
-	r.Result = readResult(m.Opt("result"), r.Dark != nil || r.Background != nil)
-	r.Guards, r.Schedule = readGuards(m.Opt("guards")), readSchedule(m.Opt("schedule"))
-	m.Later("reference", "refine")
+	r.Reference = readReference(m.Opt("reference"), r.Dwell)
+	r.Refine = readRefine(m.Opt("refine"))
+	r.readResults(m.Opt("result"))
+	r.readGuards(m.Opt("guards"))
+	r.Schedule = readSchedule(m.Opt("schedule"))
 	m.Done()
 	if visits := r.visits(); visits.Cmp(big.NewInt(MaxVisits)) > 0 {
 		sweep.Fail(fmt.Sprintf("%s points visited %d times are %s visits", r.points(), r.Repeat.Times, visits), fmt.Sprintf("at most %d", MaxVisits))

@@ -3,6 +3,7 @@ package recipe
 import (
 	"errors"
 	"fmt"
+	"math"
 	"reflect"
 	"slices"
 	"strings"
@@ -29,7 +30,8 @@ func bench() Facts {
 		Coincidences: map[drivers.Channel][2]drivers.Channel{"ab": {"a", "b"}},
 		Detectors:    map[string]drivers.Channel{"signal": "a", "idler": "b"},
 		Conjugate:    mirror,
-		Sensors:      []Sensor{{Name: "pump_power", Unit: "mW"}, {Name: "crystal_temperature", Unit: "Cel"}},
+		Emission:     ring, Flanks: halves, Expect: source, Earlier: measured,
+		Sensors: []Sensor{{Name: "pump_power", Unit: "mW"}, {Name: "crystal_temperature", Unit: "Cel"}},
 	}
 }
 
@@ -42,6 +44,66 @@ func mirror(role string, armDeg, tiltDeg float64) (float64, error) {
 		return armDeg - tiltDeg/10, nil
 	}
 	return armDeg + tiltDeg/10, nil
+}
+
+// ring is where the mirror's light leaves, up to a tilt of 4 deg.
+func ring(role string, tiltDeg float64) (float64, error) {
+	if tiltDeg > 4 {
+		return 0, errors.New("the ring is closed")
+	}
+	if role == "idler_arm" {
+		return 2.8 + tiltDeg/10, nil
+	}
+	return 2.8, nil
+}
+
+// spread is the standard deviation of the coincidences about the partner's place.
+const spread = 0.3 // deg
+
+// beside is how far an arm is beside the partner of the other, whose crystal is not tilted.
+func beside(axes []scan.AxisTarget) float64 {
+	var off float64
+	for _, t := range axes {
+		switch t.Axis {
+		case "signal_arm":
+			off += t.Angle.Degrees()
+		case "idler_arm":
+			off -= t.Angle.Degrees()
+		}
+	}
+	return off
+}
+
+func halves(arm drivers.AxisName, top []scan.AxisTarget) (low, high unit.Angle, err error) {
+	i := slices.IndexFunc(top, func(t scan.AxisTarget) bool { return t.Axis == arm })
+	centre := top[i].Angle.Degrees() + beside(top)
+	if arm == "signal_arm" {
+		centre = top[i].Angle.Degrees() - beside(top)
+	}
+	half := spread * math.Sqrt(2*math.Ln2)
+	return unit.Degrees(centre - half), unit.Degrees(centre + half), nil
+}
+
+// source gives 2000 coincidences a second at the top, 50 of them accidental.
+func source(axes []scan.AxisTarget, _ []scan.SettingTarget) (scan.Expected, error) {
+	pairs := 1950 * math.Exp(-beside(axes)*beside(axes)/(2*spread*spread))
+	return scan.Expected{
+		CountsHz:      map[drivers.Channel]float64{"a": 20000, "b": 15000, "ab": pairs + 50},
+		AccidentalsHz: map[drivers.Channel]float64{"ab": 50},
+	}, nil
+}
+
+// measured is a logbook with a few runs in it.
+func measured(ask scan.EarlierAsk) (scan.EarlierSource, error) {
+	switch ask.From {
+	case "Find the ring":
+		return scan.EarlierSource{Run: "R7", Sequence: 40, Angle: 2_876_543 * unit.Degree / 1_000_000, U: 0.004}, nil
+	case "At the edge":
+		return scan.EarlierSource{Run: "R8", Sequence: 41, Angle: 7900 * unit.Degree / 1000, U: 0.004}, nil
+	case "Delay scan":
+		return scan.EarlierSource{Run: "R9", Sequence: 12, Value: 3.217, U: 0.02}, nil
+	}
+	return scan.EarlierSource{}, fmt.Errorf("no finished run %q has one", ask.From)
 }
 
 func planOf(t *testing.T, body string) scan.Plan {

@@ -15,6 +15,7 @@ import (
 type Schedule struct {
 	NotBefore *Clock // nil: at once
 	FinishBy  *Clock // nil: no end
+	WarmUp    *WarmUp
 
 	at, beforeAt, byAt strict.Place
 }
@@ -33,12 +34,11 @@ func readSchedule(v strict.Value) *Schedule {
 		return nil
 	}
 	m := v.Map()
-	m.Later("warm_up")
-	before, by := m.Opt("not_before"), m.Opt("finish_by")
-	s := &Schedule{NotBefore: readClock(before), FinishBy: readClock(by), at: v.Place(), beforeAt: before.Place(), byAt: by.Place()}
+	before, by, warm := m.Opt("not_before"), m.Opt("finish_by"), m.Opt("warm_up")
+	s := &Schedule{NotBefore: readClock(before), FinishBy: readClock(by), WarmUp: readWarmUp(warm), at: v.Place(), beforeAt: before.Place(), byAt: by.Place()}
 	switch {
-	case m.Given() && !before.Given() && !by.Given() && !m.Has("warm_up"):
-		m.Fail("no times", `"not_before", "finish_by" or both`)
+	case m.Given() && !before.Given() && !by.Given() && !warm.Given():
+		m.Fail("no times", `"not_before", "finish_by", "warm_up" or several of them`)
 	case s.NotBefore != nil && s.FinishBy != nil && *s.NotBefore == *s.FinishBy:
 		by.Fail(fmt.Sprintf("%s again", s.FinishBy), "another time than not_before")
 	}
@@ -68,11 +68,17 @@ func readClock(v strict.Value) *Clock {
 // schedule turns times of the day into instants, once, for the moment the recipe is accepted.
 func (r *Recipe) schedule(f Facts) (scan.Schedule, []protocol.Finding) {
 	s := r.Schedule
-	switch {
-	case s == nil:
+	if s == nil {
 		return scan.Schedule{}, nil
+	}
+	warm, findings := s.WarmUp.plan(f)
+	switch {
+	case findings != nil:
+		return scan.Schedule{}, findings
+	case s.NotBefore == nil && s.FinishBy == nil:
+		return scan.Schedule{WarmUp: warm}, nil // in bench time, whatever the wall says
 	case f.Pace > 1:
-		return scan.Schedule{}, []protocol.Finding{s.at.Finding(fmt.Sprintf("a schedule on a simulated bench at %d times the speed", f.Pace), `no key "schedule", or "clock: 1" in the bench file: this bench's hours are not those on the wall`)}
+		return scan.Schedule{}, []protocol.Finding{s.at.Finding(fmt.Sprintf("a schedule on a simulated bench at %d times the speed", f.Pace), `no "not_before" and no "finish_by", or "clock: 1" in the bench file: this bench's hours are not those on the wall`)}
 	case f.AcceptedAt.IsZero():
 		return scan.Schedule{}, []protocol.Finding{s.at.Finding("a schedule without a moment to reckon from", "to be asked for a run, or with a time")}
 	}
@@ -80,7 +86,7 @@ func (r *Recipe) schedule(f Facts) (scan.Schedule, []protocol.Finding) {
 	if !ok {
 		return scan.Schedule{}, []protocol.Finding{s.byAt.Finding(fmt.Sprintf("%s to %s in the night to %s, when the clocks leave these times out", s.NotBefore, s.FinishBy, to.Format("2006-01-02")), "times with a night between them")}
 	}
-	return scan.Schedule{NotBefore: from, FinishBy: to}, nil
+	return scan.Schedule{NotBefore: from, FinishBy: to, WarmUp: warm}, nil
 }
 
 // Instants works out when a run may begin and has to end that is accepted at a moment, in the

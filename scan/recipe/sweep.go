@@ -13,11 +13,13 @@ import (
 type Entry struct {
 	Axis    drivers.AxisName   // empty when it is a setting
 	Setting drivers.DeviceName // empty when it is an axis
-	// Values are the targets; of a conjugate they are what is added to where the partner goes.
+	// Values are the targets; of a conjugate they are what is added to where the partner goes, of an
+	// earlier result what is added to it.
 	Values      Values
 	ConjugateOf drivers.AxisName // the other arm; empty: targets as written
 	With        *Entry           // has as many values, and takes them in lock-step; nil: nothing
 
+	stand        *stand // where an earlier result put it, once that is worked out
 	nameAt, ofAt strict.Place
 }
 

@@ -13,8 +13,9 @@ import (
 // Values are the targets of one entry, kept as the arithmetic that makes them or as they are
 // listed, never expanded.
 type Values struct {
-	listed []listed
-	grid   *grid
+	listed  []listed
+	grid    *grid
+	earlier *Earlier // what they are added to; nil: they are targets themselves
 }
 
 type listed struct {
@@ -36,7 +37,6 @@ type grid struct {
 type number struct {
 	value *big.Rat
 	unit  string
-	text  string // as written
 }
 
 // Len is how many values there are.
@@ -86,18 +86,14 @@ func (n number) angle() unit.Angle {
 }
 
 func (n number) String() string {
-	if n.text != "" {
-		return n.text
-	}
 	if n.unit == "" {
 		return n.angle().String()
 	}
-	return decimal(n.value) + " " + n.unit
-}
-
-func decimal(x *big.Rat) string {
-	s := x.FloatString(15)
-	return strings.TrimSuffix(strings.TrimRight(s, "0"), ".")
+	s := n.value.FloatString(15)
+	if strings.Contains(s, ".") {
+		s = strings.TrimSuffix(strings.TrimRight(s, "0"), ".")
+	}
+	return s + " " + n.unit
 }
 
 // maxAngle is far beyond any axis and far within what arithmetic takes.
@@ -128,11 +124,12 @@ func exact(q strict.Quantity) (number, bool) {
 		// Not rounded here: a step finer than a micro-arcsecond must not grow to one and add up.
 		return number{value: r.Mul(r, big.NewRat(int64(per), 1))}, true
 	}
-	return number{value: r, unit: q.Unit, text: q.Number + " " + q.Unit}, true
+	return number{value: r, unit: q.Unit}, true
 }
 
 // readValues reads the one of the three ways of giving values that an entry uses. It asks for all
-// their keys, so that a mistyped one is compared with each. Of a conjugate it reads what is added.
+// their keys, so that a mistyped one is compared with each. Of a conjugate, and of an earlier result,
+// it reads what is added.
 func readValues(m strict.Map, isAngle, conjugate bool) Values {
 	at := m.Opt("at")
 	from, to, step := m.Opt("from"), m.Opt("to"), m.Opt("step")
@@ -164,8 +161,11 @@ func readValues(m strict.Map, isAngle, conjugate bool) Values {
 		m.Fail("values given in two ways", want)
 		return Values{}
 	case at.IsMap():
-		at.Fail("a value from an earlier result: not available yet", "an angle, or a list of them")
-		return Values{}
+		e := readEarlier(at, isAngle)
+		if e == nil {
+			return Values{}
+		}
+		return Values{listed: []listed{{number: number{value: new(big.Rat)}, at: at.Place()}}, earlier: e}
 	case at.Given():
 		return readListed(at, isAngle)
 	case from.Given() || to.Given():
@@ -221,6 +221,15 @@ func readRange(from, to, step strict.Value, isAngle bool) Values {
 }
 
 func readAround(around, span, step strict.Value, isAngle bool) Values {
+	if around.IsMap() {
+		e := readEarlier(around, isAngle)
+		v := readSpan(number{value: new(big.Rat)}, span, step, around, isAngle)
+		if e == nil || v.Len() == 0 {
+			return Values{}
+		}
+		v.earlier = e
+		return v
+	}
 	c, ok := readNumber(around, isAngle)
 	if !ok {
 		readSpan(number{}, span, step, around, isAngle) // for what is wrong with it
