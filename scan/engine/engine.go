@@ -74,6 +74,9 @@ type Config struct {
 	// Refine decides which points are added, from what is written. It is asked after the first pass,
 	// and after the points of each refinement, until it adds none.
 	Refine func(ctx context.Context, round int) (Refinement, error)
+	// Room says why the logbook should not be written to much longer, before it cannot be; nil: it is
+	// not asked. It is asked before each reading.
+	Room func() error
 	// Step, if not nil, is called at every step. Tests kill there.
 	Step func(Step)
 }
@@ -376,6 +379,9 @@ func (e *Engine) turn(ctx context.Context) error {
 		} else if b != nil {
 			return e.afterGuard(ctx, task, b)
 		}
+	}
+	if bad := e.room(); bad != nil {
+		return e.holdFor(ctx, protocol.ByStorage, "held: "+bad.Error(), nil)
 	}
 	e.step(StepDecided)
 	return e.perform(ctx, task)

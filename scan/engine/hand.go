@@ -29,7 +29,7 @@ type HandFacts struct {
 type HandPairs struct {
 	Channel drivers.Channel
 	Of      [2]drivers.Channel
-	Windows float64 // seconds in all, for accidental coincidences
+	Window  float64 // seconds, full width
 }
 
 // Lines are all the lines of a bench. Released ones are closed, and stay so until Take.
@@ -273,7 +273,7 @@ func (h *Hand) told(s protocol.Slice, doubt string) protocol.HandLookedAt {
 		rate := protocol.HandRate{Channel: c.Channel, Counts: c.Counts, Rate: rateOf(s.Counts, drivers.Channel(c.Channel), gate)}
 		for _, p := range h.facts.Pairs {
 			if string(p.Channel) == c.Channel {
-				a := rateOf(s.Counts, p.Of[0], gate) * rateOf(s.Counts, p.Of[1], gate) * p.Windows
+				a := rateOf(s.Counts, p.Of[0], gate) * rateOf(s.Counts, p.Of[1], gate) * p.Window
 				rate.Accidentals = &a
 			}
 		}

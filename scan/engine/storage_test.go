@@ -1,6 +1,7 @@
 package engine
 
 import (
+	"errors"
 	"slices"
 	"strings"
 	"testing"
@@ -151,5 +152,29 @@ func TestAWeekendWithoutTheProgramCountsForNoHold(t *testing.T) {
 			t.Errorf("Run() = %s, %v; want finished", state, err)
 		}
 		<-done
+	})
+}
+
+func TestLittleRoomHoldsBeforeThereIsNone(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		began := time.Now()
+		n := newNight(t, func(c *Config) {
+			c.Room = func() error {
+				if since := time.Since(began); since > 6*time.Second && since < 10*time.Minute {
+					return errors.New("3 MB are left where the logbook is; want 64 MB")
+				}
+				return nil
+			}
+		})
+		if state, err := n.eng.Run(t.Context()); state != protocol.Finished || err != nil {
+			t.Fatalf("Run() = %s, %v; want finished", state, err)
+		}
+		events := n.events(t)
+		if kinds(events) != "began held went_on ended" || !slices.Equal(events[1].Causes, []protocol.Cause{protocol.ByStorage}) || !strings.Contains(events[1].Text, "3 MB are left") {
+			t.Errorf("events %s, %q for %v; want a hold for storage that ends itself", kinds(events), events[1].Text, events[1].Causes)
+		}
+		if got := sequenceOf(n.readings(t)); got != "dark 0.1 1.1 2.1 2.2 dark 1.2 0.2 dark" {
+			t.Errorf("readings %s; want all, none set aside", got)
+		}
 	})
 }

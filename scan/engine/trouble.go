@@ -365,7 +365,7 @@ func (e *Engine) waitOut(ctx context.Context) error {
 		if g, ok := e.guardNamed(p.guard); ok && g.Sensor == "" {
 			pause = lookAgain // it opens the light for a moment
 		}
-	case p.holds(protocol.ByLight):
+	case p.holds(protocol.ByLight), p.holds(protocol.ByStorage):
 		pause = lookAgain
 	}
 	op, end := e.operation(ctx)
@@ -374,10 +374,33 @@ func (e *Engine) waitOut(ctx context.Context) error {
 	switch {
 	case err != nil:
 		return nil
+	case p.holds(protocol.ByStorage):
+		return e.lookAtRoom(ctx)
 	case p.holds(protocol.ByGuard):
 		return e.lookAtGuards(ctx)
 	case len(p.Causes) == 1 && p.holds(protocol.ByLight): // who holds as well may have the enclosure open
 		return e.lookAtLight(ctx)
+	}
+	return nil
+}
+
+func (e *Engine) room() error {
+	if e.Room == nil {
+		return nil
+	}
+	return e.Room()
+}
+
+// lookAtRoom ends the hold when there is room again.
+func (e *Engine) lookAtRoom(ctx context.Context) error {
+	if e.room() != nil {
+		return nil
+	}
+	if err := e.release(ctx, "there is room again", map[string]any{"cause": protocol.ByStorage}, protocol.ByStorage); err != nil {
+		return err
+	}
+	if e.progress.State == protocol.Running {
+		return e.getReady(ctx, true)
 	}
 	return nil
 }
