@@ -22,6 +22,7 @@ type Foreseen struct {
 	Visit scan.Visit // beside the points it is the visit whose place the arms have
 	Point scan.Point // of that visit
 	Place int        // of a reference, in the plan's list
+	Set   int        // of a reference, from 1
 	Dwell scan.Dwell
 
 	task task
@@ -57,7 +58,7 @@ func (o *Outlook) Next(now time.Time) (Foreseen, bool) {
 	f := Foreseen{Kind: protocol.ReadingKind(t.kind), Visit: p.nearest(), Dwell: t.dwell, task: t}
 	f.Point = p.point(f.Visit.Point)
 	if t.kind == referenceTask {
-		f.Place = t.visit.Point
+		f.Place, f.Set = t.visit.Point, t.visit.Visit
 	}
 	return f, true
 }
