@@ -3,8 +3,10 @@ package report
 import (
 	"errors"
 	"math"
+	"slices"
 
 	"gemel/daemon/bench"
+	"gemel/drivers"
 	"gemel/protocol"
 	"gemel/scan"
 	"gemel/scan/estimate"
@@ -12,28 +14,40 @@ import (
 	"gemel/sim/source"
 )
 
-// model is what the source model of the declared optics can say about this run. Without optics it
-// can say nothing, and the estimate names what it misses. The warnings, such as a crystal set used
-// outside its range, belong into every result.
-func model(f *bench.File, plan scan.Plan, rows estimate.Rows) (m estimate.Model, warnings []string) {
+// model is what the source model of the declared optics can say about one result of a run. Without
+// optics it can say nothing, and the estimate names what it misses. The warnings, such as a crystal
+// set used outside its range, belong into every result.
+func model(f *bench.File, result scan.Result, rows estimate.Rows) (m estimate.Model, warnings []string) {
 	optics, err := f.Source()
 	if err != nil {
 		return m, nil
 	}
-	w := witness{file: f, optics: optics, plan: plan}
+	w := witness{file: f, optics: optics, result: result}
 	if m, err := source.New(optics); err == nil {
 		warnings = m.Warnings()
 	}
 	for _, r := range rows.Readings {
-		if r.Kind == protocol.Light && r.Accepted {
+		if _, doubtful := rows.Doubtful[r.Sequence]; r.Kind == protocol.Light && r.Accepted && !doubtful {
 			w.lights = append(w.lights, r)
 		}
 	}
-	if plan.Results[0].Kind == scan.Efficiency {
-		m.Collection = w.collection
+	if len(w.lights) == 0 {
+		return m, warnings
 	}
-	if plan.Results[0].Kind == scan.Peak && len(w.lights) > 0 {
-		m.Profile = w.profile()
+	switch result.Kind {
+	case scan.Efficiency:
+		m.Collection = w.collection
+	case scan.Peak, scan.Zero:
+		m.Profile = w.profile(w.lights, 0)
+	case scan.TuningCurve:
+		m.ProfileAt, m.CutDeg = w.profileAt, w.cut
+		m.Bare = func(tiltDeg float64) (float64, error) { return f.Facts().Emission(w.role(result.Along), tiltDeg) }
+	case scan.ConjugateMap:
+		tilt := w.pose(w.lights[0]).TiltDeg
+		m.ProfileAt = w.profileAt
+		m.Bare = func(otherDeg float64) (float64, error) {
+			return f.Facts().Conjugate(w.role(result.Against), otherDeg, tilt)
+		}
 	}
 	return m, warnings
 }
@@ -42,41 +56,39 @@ func model(f *bench.File, plan scan.Plan, rows estimate.Rows) (m estimate.Model,
 type witness struct {
 	file   *bench.File
 	optics source.Optics
-	plan   scan.Plan
+	result scan.Result
 	lights []protocol.Reading
 }
 
-// pose is where a reading's axes stood, as the model wants it.
+// pose is how the bench stood at a reading, as the model wants it.
 func (w witness) pose(r protocol.Reading) source.Pose {
-	o := w.optics
-	p := source.Pose{PumpW: o.PumpW, PumpNm: o.PumpNm, CrystalCel: o.CrystalCel, PumpOpen: 1, SignalOpen: 1, IdlerOpen: 1}
+	p := w.file.Still()
+	for _, s := range r.Settings {
+		w.file.Set(&p, drivers.DeviceName(s.Name), (s.Before+s.After)/2)
+	}
 	for _, a := range r.Angles {
-		w.put(&p, a.Axis, (a.Before.Degrees()+a.After.Degrees())/2)
+		w.file.Put(&p, drivers.AxisName(a.Axis), stood(a))
 	}
 	return p
 }
 
-func (w witness) put(p *source.Pose, axis string, deg float64) {
+// stood is where an axis stood around a reading, degrees.
+func stood(a protocol.Angle) float64 { return (a.Before.Degrees() + a.After.Degrees()) / 2 }
+
+func (w witness) role(axis drivers.AxisName) string {
 	for _, a := range w.file.Axes {
-		if string(a.Name) != axis {
-			continue
-		}
-		switch a.Role {
-		case "signal_arm":
-			p.SignalDeg = deg
-		case "idler_arm":
-			p.IdlerDeg = deg
-		case "crystal_tilt":
-			p.TiltDeg = deg
+		if a.Name == axis {
+			return a.Role
 		}
 	}
+	return ""
 }
 
 // collection is the share of the trigger's partners that the tested arm's aperture takes, averaged
 // over the readings of the plateau. Around which angle these lie is asked of the model too, so that
 // no reading decides whether it counts.
 func (w witness) collection() (float64, error) {
-	optics, swapped := w.optics, string(w.plan.Results[0].Trigger) != w.channelOf(w.file.Optics.Signal)
+	optics, swapped := w.optics, string(w.result.Trigger) != w.channelOf(w.file.Optics.Signal)
 	if swapped {
 		optics.Signal, optics.Idler = optics.Idler, optics.Signal
 		optics.AzimuthDeg += 180
@@ -91,10 +103,12 @@ func (w witness) collection() (float64, error) {
 	sum, n := 0.0, 0
 	for _, r := range w.lights {
 		p := w.pose(r)
+		p.DelayS, p.Gain = 0, [2]float64{} // which collect nothing
 		if swapped {
 			p.SignalDeg, p.IdlerDeg = p.IdlerDeg, p.SignalDeg
+			p.RadiusMm[0], p.RadiusMm[1] = p.RadiusMm[1], p.RadiusMm[0]
 		}
-		if half := w.plan.Results[0].HalfWidth.Degrees(); w.plan.Results[0].PlateauOf != "" && math.Abs(p.IdlerDeg-w.middle(m, p)) > half {
+		if half := w.result.HalfWidth.Degrees(); w.result.PlateauOf != "" && math.Abs(p.IdlerDeg-w.middle(m, p)) > half {
 			continue
 		}
 		if _, known := share[p]; !known {
@@ -136,22 +150,28 @@ func partnerProcess(p phasematch.Process) phasematch.Process {
 }
 
 // profile predicts a channel's rate against the swept axis, in the unit of a perfect detector:
-// scale, offset and background are the fit's.
-func (w witness) profile() func(float64) float64 {
+// scale, offset and background are the fit's. All other axes follow it as they did in the readings,
+// an arm that was kept on the partner for one; the crystal stands tiltDeg further than it says.
+func (w witness) profile(lights []protocol.Reading, tiltDeg float64) func(float64) float64 {
 	optics := w.optics
 	for _, arm := range []*source.Arm{&optics.Signal, &optics.Idler} {
 		arm.Detector = source.Detector{Efficiency: 1, Model: arm.Detector.Model}
 		arm.FluorescenceHzPerW, arm.StrayHzPerW = 0, 0
 	}
 	m, err := source.New(optics)
-	if err != nil {
+	if err != nil || len(lights) == 0 {
 		return nil
 	}
-	base := w.pose(w.lights[0])
-	of := string(w.plan.Results[0].Of)
+	base := w.pose(lights[0])
+	follow := w.follow(lights)
+	of := string(w.result.Of)
 	return func(deg float64) float64 {
 		p := base
-		w.put(&p, string(w.plan.Results[0].Along), deg)
+		for _, f := range follow {
+			w.file.Put(&p, f.axis, f.at(deg))
+		}
+		w.file.Put(&p, w.result.Along, deg)
+		p.TiltDeg += tiltDeg
 		r := m.Rates(p)
 		switch of {
 		case w.channelOf(w.file.Optics.Signal):
@@ -161,4 +181,76 @@ func (w witness) profile() func(float64) float64 {
 		}
 		return r.PairsHz
 	}
+}
+
+// profileAt is profile for the readings at one place of the other axis.
+func (w witness) profileAt(againstDeg, shiftDeg float64) func(float64) float64 {
+	var there []protocol.Reading
+	for _, r := range w.lights {
+		if slices.ContainsFunc(r.Angles, func(a protocol.Angle) bool {
+			return a.Axis == string(w.result.Against) && a.Target.Degrees() == againstDeg
+		}) {
+			there = append(there, r)
+		}
+	}
+	return w.profile(there, shiftDeg)
+}
+
+// followed is an axis as a straight line against the swept one, which is what a conjugate is over the
+// width of a profile, and what an axis is that stands still.
+type followed struct {
+	axis                 drivers.AxisName
+	alongDeg, deg, slope float64
+}
+
+func (f followed) at(alongDeg float64) float64 { return f.deg + f.slope*(alongDeg-f.alongDeg) }
+
+func (w witness) follow(lights []protocol.Reading) (all []followed) {
+	along := func(r protocol.Reading, axis drivers.AxisName) (float64, bool) {
+		for _, a := range r.Angles {
+			if a.Axis == string(axis) {
+				return stood(a), true
+			}
+		}
+		return 0, false
+	}
+	for _, a := range w.file.Axes {
+		if a.Name == w.result.Along {
+			continue
+		}
+		f := followed{axis: a.Name}
+		n, xx, xy := 0.0, 0.0, 0.0
+		for _, r := range lights {
+			x, okX := along(r, w.result.Along)
+			y, okY := along(r, a.Name)
+			if okX && okY {
+				f.alongDeg, f.deg, n = f.alongDeg+x, f.deg+y, n+1
+			}
+		}
+		if n == 0 {
+			continue
+		}
+		f.alongDeg, f.deg = f.alongDeg/n, f.deg/n
+		for _, r := range lights {
+			x, okX := along(r, w.result.Along)
+			y, okY := along(r, a.Name)
+			if okX && okY {
+				xx, xy = xx+(x-f.alongDeg)*(x-f.alongDeg), xy+(x-f.alongDeg)*(y-f.deg)
+			}
+		}
+		if xx > 0 {
+			f.slope = xy / xx
+		}
+		all = append(all, f)
+	}
+	return all
+}
+
+// cut is the cut whose untilted crystal has the same angle between pump and optic axis as the
+// declared one at a tilt.
+func (w witness) cut(tiltDeg float64) (float64, error) {
+	o := w.optics
+	slab := phasematch.Slab{Crystal: o.Crystal, Process: o.Process, CutDeg: o.CutDeg, TiltDeg: tiltDeg, ThicknessMm: o.ThicknessMm, Cel: o.CrystalCel,
+		PumpNm: o.PumpNm, PolingUm: o.PolingUm, Extrapolate: o.Extrapolate}
+	return slab.PumpAxisDeg()
 }

@@ -1,6 +1,7 @@
-// Package report makes a run's result from the logbook alone. Recipe and bench file are read from
-// the texts that the run's header keeps, never from today's files, so that the same file gives the
-// same digits years later. It writes nothing and touches no instrument.
+// Package report makes a run's results from the logbook alone. Recipe and bench file are read from
+// the texts that the run's header keeps, and what its points took from earlier results from its own
+// journal, never from today's files and results, so that the same file gives the same digits years
+// later. It writes nothing and touches no instrument.
 package report
 
 import (
@@ -12,6 +13,7 @@ import (
 	"gemel/daemon/logbook"
 	"gemel/drivers"
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan"
 	"gemel/scan/estimate"
 	"gemel/scan/recipe"
@@ -24,79 +26,144 @@ var ErrNoResult = errors.New("the recipe asks for no result")
 type Options struct {
 	Off       []estimate.Step // corrections of an efficiency that are switched off
 	Displaced bool            // accidentals from the displaced windows instead of the product
-	Trials    int             // of a Monte Carlo propagation (JCGM 101); 0: none
+	Trials    int             // of a Monte Carlo propagation (JCGM 101) of an efficiency; 0: none
 	Seed      uint64
 }
 
-// Of works out the result of a run as its recipe asks for it.
-func Of(ctx context.Context, book *logbook.Book, run protocol.RunID) (estimate.Result, error) {
-	return With(ctx, book, run, Options{})
-}
-
-// With is Of with options. A result that cannot be given says why in its Because, and is no error.
-func With(ctx context.Context, book *logbook.Book, run protocol.RunID, o Options) (estimate.Result, error) {
+// All works out the results of a run, in the order in which its recipe asks for them. A result that
+// cannot be given says why in its Because, and is no error.
+func All(ctx context.Context, book *logbook.Book, run protocol.RunID, o Options) ([]estimate.Result, error) {
 	row, err := book.Run(ctx, run)
 	if err != nil {
-		return estimate.Result{}, err
+		return nil, err
 	}
-	file, err := bench.Parse("bench file in the logbook", []byte(row.BenchText))
+	file, plan, err := planOf(ctx, book, row)
 	if err != nil {
-		return estimate.Result{}, err
-	}
-	r, err := recipe.Parse("recipe in the logbook", []byte(row.RecipeText))
-	if err != nil {
-		return estimate.Result{}, err
-	}
-	facts := file.Facts()
-	facts.AcceptedAt = row.QueuedAt.Time
-	plan, err := r.Plan(facts)
-	if err != nil {
-		return estimate.Result{}, err
+		return nil, err
 	}
 	if len(plan.Results) == 0 {
-		return estimate.Result{}, fmt.Errorf("run %s: %w", run, ErrNoResult)
+		return nil, fmt.Errorf("run %s: %w", run, ErrNoResult)
 	}
 	rows, err := rowsOf(ctx, book, row, plan)
 	if err != nil {
-		return estimate.Result{}, err
+		return nil, err
 	}
-	return Result(rows, file, plan, o)
+	var all []estimate.Result
+	for _, q := range plan.Results {
+		result, err := Result(rows, file, plan, q, o)
+		if err != nil {
+			return nil, fmt.Errorf("run %s: %s: %w", run, q.Kind, err)
+		}
+		all = append(all, result)
+	}
+	return all, nil
 }
 
-// Result works out the result that a plan asks for from the rows of its run.
-func Result(rows estimate.Rows, file *bench.File, plan scan.Plan, o Options) (estimate.Result, error) {
-	b := Constants(file)
-	m, warnings := model(file, plan, rows)
-	var result estimate.Result
-	var err error
-	switch plan.Results[0].Kind {
-	case scan.Efficiency:
-		q := estimate.Question{Trigger: armOf(file, plan.Results[0].Trigger), UnderTest: armOf(file, plan.Results[0].UnderTest), Off: map[estimate.Step]bool{},
-			Displaced: o.Displaced, MonteCarlo: o.Trials, Seed: o.Seed}
-		for _, step := range o.Off {
-			q.Off[step] = true
-		}
-		if plan.Results[0].PlateauOf != "" {
-			q.Use = &estimate.Plateau{Axis: string(plan.Results[0].PlateauOf), HalfWidthDeg: plan.Results[0].HalfWidth.Degrees()}
-		}
-		result, err = estimate.Efficiency(rows, b, m, q)
-	case scan.Peak:
-		result, err = estimate.Peak(rows, b, m, estimate.PeakQuestion{
-			Axis: string(plan.Results[0].Along), Channel: string(plan.Results[0].Of), Shape: estimate.PeakShape(plan.Results[0].Profile), Power: string(plan.Results[0].Power),
-		})
-	default:
-		return estimate.Result{}, fmt.Errorf("result of kind %q; want efficiency or peak", plan.Results[0].Kind)
+// planOf works out a run's bench and plan from the texts that it keeps.
+func planOf(ctx context.Context, book *logbook.Book, row logbook.RunRow) (*bench.File, scan.Plan, error) {
+	file, err := bench.Parse("bench file in the logbook", []byte(row.BenchText))
+	if err != nil {
+		return nil, scan.Plan{}, err
 	}
+	r, err := recipe.Parse("recipe in the logbook", []byte(row.RecipeText))
+	if err != nil {
+		return nil, scan.Plan{}, err
+	}
+	taken, _, err := book.Taken(ctx, row.Run)
+	if err != nil {
+		return nil, scan.Plan{}, err
+	}
+	facts := file.Facts()
+	facts.AcceptedAt = row.QueuedAt.Time
+	facts.Earlier = earlier(taken)
+	plan, err := r.Plan(facts)
+	return file, plan, err
+}
+
+// earlier answers with the values that a run's points were made of, whatever was measured since.
+func earlier(taken []protocol.EarlierValue) func(scan.EarlierAsk) (scan.EarlierSource, error) {
+	return func(ask scan.EarlierAsk) (scan.EarlierSource, error) {
+		for _, v := range taken {
+			if v.Kind != string(ask.Kind) || v.Axis != string(ask.Axis) || v.Setting != string(ask.Setting) || v.From != ask.From {
+				continue
+			}
+			s := scan.EarlierSource{Run: string(v.Run), Sequence: v.Sequence, U: v.U}
+			if v.Angle != nil {
+				s.Angle = *v.Angle
+			}
+			if v.Value != nil {
+				s.Value = *v.Value
+			}
+			return s, nil
+		}
+		return scan.EarlierSource{}, errors.New("the run's journal holds none: its points were not decided")
+	}
+}
+
+// Result works out one result that a plan asks for from the rows of its run.
+func Result(rows estimate.Rows, file *bench.File, plan scan.Plan, q scan.Result, o Options) (estimate.Result, error) {
+	rows = standing(rows, q.At)
+	b := Constants(file)
+	m, warnings := model(file, q, rows)
+	result, err := asked(rows, file, b, m, plan, q, o)
 	if refusal, ok := errors.AsType[*estimate.Refusal](err); ok {
-		return estimate.Refused(rows, string(plan.Results[0].Kind), refusal), nil
+		return estimate.Refused(rows, string(q.Kind), refusal), nil
 	}
 	result.Warnings = append(result.Warnings, warnings...)
 	return result, err
 }
 
-// rowsOf reads a run's readings, less those at places that the result does not use.
+func asked(rows estimate.Rows, file *bench.File, b estimate.Bench, m estimate.Model, plan scan.Plan, q scan.Result, o Options) (estimate.Result, error) {
+	curve := estimate.CurveQuestion{Channel: string(q.Of), Along: string(q.Along), Against: string(q.Against)}
+	switch q.Kind {
+	case scan.Efficiency:
+		ask := estimate.Question{Trigger: armOf(file, q.Trigger), UnderTest: armOf(file, q.UnderTest), Off: map[estimate.Step]bool{},
+			Displaced: o.Displaced, MonteCarlo: o.Trials, Seed: o.Seed}
+		for _, step := range o.Off {
+			ask.Off[step] = true
+		}
+		if q.PlateauOf != "" {
+			ask.Use = &estimate.Plateau{Axis: string(q.PlateauOf), HalfWidthDeg: q.HalfWidth.Degrees()}
+		}
+		if q.By != "" {
+			return estimate.EfficiencyBy(rows, b, m, ask, string(q.By))
+		}
+		return estimate.Efficiency(rows, b, m, ask)
+	case scan.Peak:
+		return estimate.Peak(rows, b, m, estimate.PeakQuestion{Axis: string(q.Along), Channel: string(q.Of), Shape: estimate.PeakShape(q.Profile), Power: string(q.Power)})
+	case scan.Zero:
+		return estimate.Zero(rows, b, m, estimate.ZeroQuestion{Axis: string(q.Along), Channel: string(q.Of)})
+	case scan.TuningCurve:
+		return estimate.TuningCurve(rows, b, m, curve)
+	case scan.ConjugateMap:
+		return estimate.ConjugateMap(rows, b, m, curve)
+	case scan.Delay:
+		return estimate.Delay(rows, b, estimate.DelayQuestion{Channel: string(q.Of), Setting: string(q.Setting), Operating: operating(file, q.Setting)})
+	case scan.Drift:
+		if plan.Reference == nil {
+			return estimate.Result{}, &estimate.Refusal{Reasons: []string{"the recipe takes no references; want a key \"reference\""}}
+		}
+		return estimate.Drift(rows, b, estimate.DriftQuestion{ReferenceQuestion: estimate.ReferenceQuestion{Of: *plan.Reference}})
+	}
+	return estimate.Result{}, fmt.Errorf("a result of kind %q; want one that this program knows", q.Kind)
+}
+
+// operating is where a delay stands while the bench counts, in its own unit; nil: not declared.
+func operating(f *bench.File, setting drivers.DeviceName) *float64 {
+	for _, s := range f.Settings {
+		if s.Name != setting || s.Centre == nil {
+			continue
+		}
+		if at, err := unit.In(s.Centre.Value, s.Unit); err == nil {
+			return &at
+		}
+	}
+	return nil
+}
+
+// rowsOf reads a run's readings.
 func rowsOf(ctx context.Context, book *logbook.Book, row logbook.RunRow, plan scan.Plan) (estimate.Rows, error) {
-	rows := estimate.Rows{Run: row.Run, Title: row.Title, Doubtful: map[int64]string{}}
+	rows := estimate.Rows{Run: row.Run, Title: row.Title, Doubtful: map[int64]string{}, Planned: len(plan.Points)}
 	for r, err := range book.Readings(ctx, row.Run) {
 		if err != nil {
 			return rows, err
@@ -104,12 +171,24 @@ func rowsOf(ctx context.Context, book *logbook.Book, row logbook.RunRow, plan sc
 		if r.Doubtful {
 			rows.Doubtful[r.Sequence] = r.Doubt
 		}
-		if r.Kind == protocol.Light && !stands(r.Reading, plan.Results[0].At) {
-			continue
-		}
 		rows.Readings = append(rows.Readings, r.Reading)
 	}
 	return rows, nil
+}
+
+// standing leaves out the light of other places than those that the result asks for.
+func standing(rows estimate.Rows, at []scan.AxisTarget) estimate.Rows {
+	if len(at) == 0 {
+		return rows
+	}
+	kept := rows
+	kept.Readings = nil
+	for _, r := range rows.Readings {
+		if r.Kind != protocol.Light || stands(r, at) {
+			kept.Readings = append(kept.Readings, r)
+		}
+	}
+	return kept
 }
 
 // stands says whether a reading was taken with the axes at the places that the result asks for.

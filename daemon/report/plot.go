@@ -1,0 +1,339 @@
+package report
+
+import (
+	"errors"
+	"fmt"
+	"io"
+	"math"
+	"strconv"
+	"strings"
+
+	"gemel/scan/estimate"
+)
+
+// ErrNothingToDraw is returned where no result has a profile, a curve or values against a setting.
+var ErrNothingToDraw = errors.New("no result of this run has a profile, a curve or values against a setting to draw")
+
+// The sheet, in units of the picture.
+const (
+	sheetWidth               = 760.
+	left, right              = 78., 28.
+	mainHeight, residualHigh = 250., 76.
+	lineHigh                 = 16.
+	wrapAt                   = 104 // letters in a line
+)
+
+// Plot draws the results as an SVG picture, one below the other, each under its sentence: readings as
+// circles with their counting uncertainty, the fit as a line, and what the fit leaves below it, in
+// units of the uncertainty. What was predicted is a broken line. One ink.
+func Plot(w io.Writer, all []estimate.Result) error {
+	var b strings.Builder
+	s := &sheet{}
+	drawn := 0
+	for _, r := range all {
+		p, ok := pictureOf(r)
+		if ok {
+			drawn++
+		}
+		s.sentence(r)
+		if ok {
+			s.draw(p)
+		}
+		s.y += 26
+	}
+	if drawn == 0 {
+		return ErrNothingToDraw
+	}
+	fmt.Fprintf(&b, "<svg xmlns=\"http://www.w3.org/2000/svg\" viewBox=\"0 0 %g %g\" font-family=\"sans-serif\" font-size=\"12\" fill=\"none\" stroke=\"#222\">\n", sheetWidth, s.y)
+	fmt.Fprintf(&b, "<rect x=\"0\" y=\"0\" width=\"%g\" height=\"%g\" fill=\"#fff\" stroke=\"none\"/>\n%s</svg>\n", sheetWidth, s.y, s.b.String())
+	_, err := io.WriteString(w, b.String())
+	return err
+}
+
+// picture is readings and lines against one quantity.
+type picture struct {
+	across, up string // what the axes are, with units
+	points     []mark
+	fitted     []place // a solid line
+	predicted  []place // a broken one
+	hairlines  []hairline
+	residuals  []place // in units of the uncertainty
+	fromZero   bool
+	key        string
+}
+
+type place struct{ x, y float64 }
+
+type mark struct {
+	place
+	u float64
+}
+
+type hairline struct {
+	x    float64
+	text string
+}
+
+// pictureOf is false where there is nothing to draw.
+func pictureOf(r estimate.Result) (picture, bool) {
+	switch {
+	case r.Value == nil:
+		return picture{}, false
+	case r.Curve != nil:
+		return curved(*r.Curve), true
+	case r.By != nil:
+		return bySetting(*r.By), true
+	case len(r.Residuals) > 0:
+		return profiled(r), true
+	}
+	return picture{}, false
+}
+
+func profiled(r estimate.Result) picture {
+	p := picture{across: "angle / deg", up: "counts / s", fromZero: true, key: "circles: readings, with the root of their counts; line: the fit; below: what it leaves, in units of its uncertainty"}
+	scale := 1.
+	if _, unit := r.Residuals[0].Place(); unit == "s" {
+		p.across, scale = "delay / ns", 1e9
+	}
+	low, high := math.Inf(1), math.Inf(-1)
+	for _, one := range r.Residuals {
+		at, _ := one.Place()
+		low, high = math.Min(low, at), math.Max(high, at)
+		p.points = append(p.points, mark{place{at * scale, one.Counts / one.ExposureS}, math.Sqrt(math.Max(one.Counts, 1)) / one.ExposureS})
+		p.residuals = append(p.residuals, place{at * scale, one.Residual})
+	}
+	if rate, ok := r.Fitted(); ok {
+		const steps = 700
+		for i := range steps + 1 {
+			at := low + (high-low)*float64(i)/steps
+			p.fitted = append(p.fitted, place{at * scale, rate(at)})
+		}
+	}
+	switch {
+	case r.Zero != nil:
+		p.hairlines = []hairline{{r.Zero.LowDeg, fixed(r.Zero.LowDeg, 4)}, {*r.Value, "zero " + fixed(*r.Value, 4)}, {r.Zero.HighDeg, fixed(r.Zero.HighDeg, 4)}}
+		// Between the sides nothing was fitted.
+		var kept []place
+		for _, f := range p.fitted {
+			if near(f.x, p.points, (high-low)/25) {
+				kept = append(kept, f)
+			} else {
+				kept = append(kept, place{f.x, math.NaN()})
+			}
+		}
+		p.fitted = kept
+	case r.Delay != nil:
+		d := r.Delay
+		p.hairlines = []hairline{{(d.CentreS - d.WidthS/2) * scale, fixed((d.CentreS-d.WidthS/2)*scale, 3)}, {d.CentreS * scale, "centre " + fixed(d.CentreS*scale, 3)}, {(d.CentreS + d.WidthS/2) * scale, fixed((d.CentreS+d.WidthS/2)*scale, 3)}}
+	default:
+		p.hairlines = []hairline{{*r.Value, fixed(*r.Value, 4)}}
+	}
+	return p
+}
+
+func near(x float64, points []mark, within float64) bool {
+	for _, m := range points {
+		if math.Abs(m.x-x) <= within {
+			return true
+		}
+	}
+	return false
+}
+
+func curved(c estimate.Curve) picture {
+	p := picture{across: c.Against + " / deg", up: c.Along + " / deg",
+		key: "circles: fitted angles; broken line: predicted with nothing fitted; line: with the unknowns fitted; below: what is left, in units of its uncertainty"}
+	for _, one := range c.Places {
+		if one.Left != "" {
+			continue
+		}
+		p.points = append(p.points, mark{place{one.AgainstDeg, one.AngleDeg}, one.U})
+		p.predicted = append(p.predicted, place{one.AgainstDeg, one.PredictedDeg})
+		p.fitted = append(p.fitted, place{one.AgainstDeg, one.FittedDeg})
+		p.residuals = append(p.residuals, place{one.AgainstDeg, one.ResidualDeg / one.U})
+	}
+	return p
+}
+
+func bySetting(by estimate.BySetting) picture {
+	p := picture{across: by.Setting + " / " + by.Unit, up: "efficiency", key: "circles: one efficiency each, with what counting leaves open; line: fitted to them; below: what it leaves, in units of that"}
+	for _, one := range by.Values {
+		if one.Value == nil {
+			continue
+		}
+		p.points = append(p.points, mark{place{one.At, *one.Value}, one.OwnU})
+		p.fitted = append(p.fitted, place{one.At, one.LineAt})
+		p.residuals = append(p.residuals, place{one.At, (*one.Value - one.LineAt) / one.OwnU})
+	}
+	return p
+}
+
+// sheet is the picture as far as it is drawn.
+type sheet struct {
+	b strings.Builder
+	y float64
+}
+
+func (s *sheet) line(format string, a ...any) { fmt.Fprintf(&s.b, format+"\n", a...) }
+
+// text stands on paper, whatever line passes behind it.
+func (s *sheet) text(x, y float64, anchor, text string) {
+	s.line(`<text x="%.1f" y="%.1f" text-anchor="%s" fill="#222" stroke="#fff" stroke-width="4" stroke-linejoin="round" paint-order="stroke">%s</text>`, x, y, anchor,
+		strings.NewReplacer("&", "&amp;", "<", "&lt;", ">", "&gt;").Replace(text))
+}
+
+func (s *sheet) sentence(r estimate.Result) {
+	s.y += 8
+	text := r.Sentence()
+	if r.Simulated != nil {
+		text += " Simulated."
+	}
+	s.paragraph(text)
+}
+
+func (s *sheet) paragraph(text string) {
+	for len(text) > 0 {
+		row := text
+		if len(row) > wrapAt {
+			if i := strings.LastIndexByte(row[:wrapAt], ' '); i > 0 {
+				row = row[:i]
+			}
+		}
+		s.y += lineHigh
+		s.text(20, s.y, "start", row)
+		text = strings.TrimPrefix(text[len(row):], " ")
+	}
+}
+
+func (s *sheet) draw(p picture) {
+	s.paragraph(p.key + ".")
+	top := s.y + 30
+	bottom := top + mainHeight
+	lowX, highX, lowY, highY := p.bounds()
+	x := func(v float64) float64 { return left + (v-lowX)/(highX-lowX)*(sheetWidth-left-right) }
+	y := func(v float64) float64 { return bottom - (v-lowY)/(highY-lowY)*mainHeight }
+	for _, v := range ticks(lowY, highY, 5) {
+		s.line(`<path d="M%.1f %.1fh-5" stroke-width="0.8"/>`, left, y(v))
+		s.text(left-9, y(v)+4, "end", plain(v))
+	}
+	s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="0.8"/>`, left, top, bottom)
+	s.upright(20, (top+bottom)/2, p.up)
+	foot := bottom + 18 + residualHigh
+	for i, h := range p.hairlines {
+		s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="0.5" stroke-dasharray="1 3"/>`, x(h.x), top-4, bottom)
+		s.text(x(h.x), top-8-float64(i%2)*12, "middle", h.text) // names of neighbours do not run into one another
+	}
+	s.curve(p.predicted, x, y, ` stroke-dasharray="6 3"`)
+	s.curve(p.fitted, x, y, "")
+	for _, m := range p.points {
+		s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="0.7"/><circle cx="%.1f" cy="%.1f" r="2.6" fill="#fff"/>`, x(m.x), y(m.y-m.u), y(m.y+m.u), x(m.x), y(m.y))
+	}
+	// What is left.
+	most := 3.
+	for _, r := range p.residuals {
+		most = math.Max(most, math.Abs(r.y))
+	}
+	most = math.Ceil(most)
+	mid := bottom + 18 + residualHigh/2
+	z := func(v float64) float64 { return mid - v/most*residualHigh/2 }
+	s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="0.8"/>`, left, bottom+18, foot)
+	for _, v := range []float64{-most, 0, most} {
+		s.line(`<path d="M%.1f %.1fh-5" stroke-width="0.8"/>`, left, z(v))
+		s.text(left-9, z(v)+4, "end", plain(v))
+	}
+	s.line(`<path d="M%.1f %.1fH%.1f" stroke-width="0.5"/>`, left, z(0), sheetWidth-right)
+	s.upright(20, mid, "left / u")
+	for _, r := range p.residuals {
+		s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="1.2"/>`, x(r.x), z(0), z(r.y))
+	}
+	s.line(`<path d="M%.1f %.1fH%.1f" stroke-width="0.8"/>`, left, foot, sheetWidth-right)
+	for _, v := range ticks(lowX, highX, 6) {
+		s.line(`<path d="M%.1f %.1fv5" stroke-width="0.8"/>`, x(v), foot)
+		s.text(x(v), foot+18, "middle", plain(v))
+	}
+	s.text((left+sheetWidth-right)/2, foot+36, "middle", p.across)
+	s.y = foot + 42
+}
+
+func (s *sheet) upright(x, y float64, text string) {
+	s.line(`<g transform="translate(%.1f %.1f) rotate(-90)">`, x, y)
+	s.text(0, 0, "middle", text)
+	s.line(`</g>`)
+}
+
+// curve joins places; one that is no number breaks it.
+func (s *sheet) curve(places []place, x, y func(float64) float64, dash string) {
+	var d strings.Builder
+	pen := byte('M')
+	for _, p := range places {
+		if math.IsNaN(p.y) {
+			pen = 'M'
+			continue
+		}
+		fmt.Fprintf(&d, "%c%.1f %.1f", pen, x(p.x), y(p.y))
+		pen = 'L'
+	}
+	if d.Len() > 0 {
+		s.line(`<path d="%s" stroke-width="1.3"%s/>`, d.String(), dash)
+	}
+}
+
+// bounds leave a margin about everything.
+func (p picture) bounds() (lowX, highX, lowY, highY float64) {
+	lowX, highX, lowY, highY = math.Inf(1), math.Inf(-1), math.Inf(1), math.Inf(-1)
+	take := func(x, y float64) {
+		if !math.IsNaN(y) {
+			lowX, highX, lowY, highY = math.Min(lowX, x), math.Max(highX, x), math.Min(lowY, y), math.Max(highY, y)
+		}
+	}
+	for _, m := range p.points {
+		take(m.x, m.y-m.u)
+		take(m.x, m.y+m.u)
+	}
+	for _, line := range [][]place{p.fitted, p.predicted} {
+		for _, f := range line {
+			take(f.x, f.y)
+		}
+	}
+	if p.fromZero {
+		lowY = math.Min(lowY, 0)
+	}
+	margin := func(low, high *float64, share float64) {
+		room := (*high - *low) * share
+		if room == 0 {
+			room = math.Max(math.Abs(*high)*0.1, 1e-3)
+		}
+		*low, *high = *low-room, *high+room
+	}
+	margin(&lowX, &highX, 0.03)
+	if p.fromZero {
+		highY += (highY - lowY) * 0.05
+	} else {
+		margin(&lowY, &highY, 0.06)
+	}
+	if highY <= lowY {
+		highY = lowY + 1
+	}
+	return lowX, highX, lowY, highY
+}
+
+// ticks are round numbers between two, at least so many.
+func ticks(low, high float64, least int) (list []float64) {
+	step := math.Pow(10, math.Floor(math.Log10((high-low)/float64(least))))
+	for _, k := range []float64{5, 2} {
+		if (high-low)/(k*step) >= float64(least) {
+			step *= k
+			break
+		}
+	}
+	for i := math.Ceil(low / step); i*step <= high; i++ {
+		list = append(list, i*step)
+	}
+	return list
+}
+
+func plain(v float64) string {
+	return strconv.FormatFloat(math.Round(v*1e9)/1e9+0, 'g', 8, 64)
+}
+
+func fixed(v float64, places int) string { return strconv.FormatFloat(v, 'f', places, 64) }
