@@ -16,6 +16,7 @@ func Permissions(bench, role string) *server.Permissions {
 	stream := protocol.Stream(bench)
 	publish := []string{
 		protocol.DoSubject(bench, "status"),
+		protocol.DoSubject(bench, "queue"),
 		"$JS.API.INFO",
 		"$JS.API.STREAM.INFO." + stream,
 		"$JS.API.STREAM.MSG.GET." + stream,

@@ -69,7 +69,7 @@ func (c *console) progress(ctx context.Context, k *keeper.Keeper) error {
 // sentence says a status in words.
 func sentence(s protocol.Status) string {
 	if s.Run == "" {
-		return fmt.Sprintf("Bench %s is idle.", s.Bench)
+		return fmt.Sprintf("Bench %s is idle.", s.Bench) + next(s.Waiting)
 	}
 	var b strings.Builder
 	fmt.Fprintf(&b, "Run %s is %s", s.Run, s.State)
@@ -99,5 +99,21 @@ func sentence(s protocol.Status) string {
 			}
 		}
 	}
-	return b.String()
+	return b.String() + next(s.Waiting)
+}
+
+// next names the runs that wait.
+func next(waiting []protocol.WaitingRun) string {
+	const most = 3
+	var titles []string
+	for _, w := range waiting[:min(len(waiting), most)] {
+		titles = append(titles, fmt.Sprintf("%q", w.Title))
+	}
+	switch more := len(waiting) - most; {
+	case len(waiting) == 0:
+		return ""
+	case more > 0:
+		return fmt.Sprintf(" Next: %s and %d more.", strings.Join(titles, ", "), more)
+	}
+	return " Next: " + strings.Join(titles, ", ") + "."
 }

@@ -35,8 +35,10 @@ type commands struct {
 	Hold    holdCommand    `cmd:"" help:"Make a run wait, with the bench at rest."`
 	Resume  resumeCommand  `cmd:"" help:"Let a run go on that a person, a trouble or a restart holds."`
 	Status  statusCommand  `cmd:"" help:"Say how the bench is."`
+	Queue   queueCommand   `cmd:"" help:"List the runs that wait, reorder them, withdraw one."`
 	Follow  followCommand  `cmd:"" help:"Print what happens, as it happens."`
 	Arm     armCommand     `cmd:"" help:"Allow remote starts on this bench for a while."`
+	Hand    handCommand    `cmd:"" help:"Take the bench in hand: live rates, one axis, shutters, settings, lines."`
 	Note    noteCommand    `cmd:"" help:"Write a note into the logbook."`
 	Export  exportCommand  `cmd:"" help:"Write a run's readings as CSV."`
 	Report  reportCommand  `cmd:"" help:"Work out a run's result from the logbook alone."`

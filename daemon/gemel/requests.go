@@ -5,11 +5,15 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
+	"io"
+	"sync"
 	"time"
 
+	"gemel/daemon/crew"
 	"gemel/protocol"
 	"gemel/protocol/client"
 	"gemel/protocol/strict"
+	"gemel/protocol/unit"
 )
 
 // remoteFlags say which daemon is meant: the one of a data folder, or one by URL.
@@ -171,25 +175,78 @@ type followCommand struct {
 	Which string `arg:"" optional:"" name:"run" help:"The run; without it everything on the bench."`
 	All   bool   `help:"Begin with what the stream holds already."`
 	Once  bool   `help:"End when the run named has ended."`
+	Give  string `name:"give-up" placeholder:"TIME" help:"End with code 1 when nothing is heard of the daemon for so long."`
 }
 
 func (followCommand) Help() string {
-	return "Example:\n  gemel follow --all --json | head\n\nWith --json each line is one journal entry as it was published."
+	return `Example:
+  gemel follow --all --json | head
+  gemel follow --once --give-up "2 min" 20310203-213000-5f0c1a2b
+
+With --json each line is one journal entry as it was published. When the daemon falls silent for five seconds, a line on standard error says so, and another when it is back; following goes on across both, with no entry lost or doubled, because a daemon that died goes on with its run when it is started again. Whoever must not wait for that says --give-up.`
 }
 
+// silent is how long the beat, which comes once a second, may be missing before that is told.
+const silent = 5 * time.Second
+
 func (c *followCommand) Run(ctx context.Context, con *console) error {
+	patience := time.Duration(0)
+	if c.Give != "" {
+		var err error
+		if patience, err = unit.ParseDuration(c.Give); err != nil || patience < silent {
+			return errUse{errors.Join(fmt.Errorf("--give-up %q; want %s or more", c.Give, strict.Span(silent)), err)}
+		}
+	}
 	cl, err := c.connect(protocol.WatchRole)
 	if err != nil {
 		return err
 	}
 	defer cl.Close()
+	if !c.JSON {
+		c.now(ctx, con, cl)
+	}
+	aside := &aside{to: con.err}
+	g := crew.New(ctx, nil)
+	g.Go("journal", func(ctx context.Context) error {
+		defer g.Stop()
+		return c.journal(ctx, con, aside, cl)
+	})
+	g.Go("beat", func(ctx context.Context) error { return listen(ctx, aside, cl, patience) })
+	return g.Wait()
+}
+
+// now tells how the bench is and what waits, before the entries begin.
+func (c *followCommand) now(ctx context.Context, con *console, cl *client.Client) {
+	within, cancel := context.WithTimeout(ctx, silent)
+	defer cancel()
+	s, err := cl.Status(within)
+	if err != nil {
+		fmt.Fprintf(con.err, "gemel: %v; following all the same\n", err)
+		return
+	}
+	fmt.Fprintln(con.err, sentence(s))
+}
+
+// aside is where two actors write lines that belong to no entry.
+type aside struct {
+	mu sync.Mutex
+	to io.Writer
+}
+
+func (a *aside) say(v ...any) {
+	a.mu.Lock()
+	defer a.mu.Unlock()
+	fmt.Fprintln(a.to, append([]any{"gemel:"}, v...)...)
+}
+
+func (c *followCommand) journal(ctx context.Context, con *console, aside *aside, cl *client.Client) error {
 	from := int64(0)
 	if c.All {
 		from = 1
 	}
 	for e, err := range cl.Follow(ctx, protocol.RunID(c.Which), from) {
 		if gap, ok := errors.AsType[*client.Gap](err); ok {
-			fmt.Fprintln(con.err, "gemel:", gap)
+			aside.say(gap)
 			continue
 		}
 		if err != nil {
@@ -202,6 +259,29 @@ func (c *followCommand) Run(ctx context.Context, con *console) error {
 		}
 		if c.Once && ended(e) {
 			return nil
+		}
+	}
+	return nil
+}
+
+// listen tells when the daemon falls silent and when it is heard again. patience 0 has no end.
+func listen(ctx context.Context, aside *aside, cl *client.Client, patience time.Duration) error {
+	lost := false
+	for _, err := range cl.Beats(ctx, silent) {
+		silence, ok := errors.AsType[*client.Silence](err)
+		switch {
+		case err == nil:
+			if lost {
+				aside.say("the daemon is heard again")
+			}
+			lost = false
+		case !ok:
+			return err
+		case patience > 0 && silence.For >= patience:
+			return fmt.Errorf("%w; given up", silence)
+		case !lost:
+			lost = true
+			aside.say(fmt.Sprintf("%v; still following", silence))
 		}
 	}
 	return nil

@@ -98,6 +98,15 @@ func (b *Book) NewRun(ctx context.Context, h Header, first protocol.Entry) (exis
 	return "", nil
 }
 
+// Asked returns the run of a bench that was asked for with a key, empty when there is none.
+func (b *Book) Asked(ctx context.Context, bench, key string) (run protocol.RunID, err error) {
+	err = b.readers.QueryRowContext(ctx, `SELECT run FROM header WHERE bench = ? AND key = ?`, bench, key).Scan(&run)
+	if errors.Is(err, sql.ErrNoRows) {
+		return "", nil
+	}
+	return run, wrap(b.file, err)
+}
+
 const selectRun = `SELECT run, title, state, reason, started_at, ended_at, recipe_text, bench_text, version, simulated,
 	causes, bench, key, who, queued_at FROM run `
 

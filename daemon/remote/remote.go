@@ -31,6 +31,9 @@ type Keeper interface {
 	Hold(context.Context, protocol.RunRequest) (protocol.RunReply, error)
 	Resume(context.Context, protocol.RunRequest) (protocol.RunReply, error)
 	Status(context.Context) protocol.Status
+	Queue(context.Context) (protocol.QueueReply, error)
+	Reorder(context.Context, protocol.ReorderRequest) (protocol.QueueReply, error)
+	Withdraw(context.Context, protocol.RunRequest) (protocol.RunReply, error)
 }
 
 // Config names the service.
@@ -70,9 +73,9 @@ func Serve(ctx context.Context, conn *nats.Conn, keeper Keeper, c Config) error 
 		"hold":     h.onRun(keeper.Hold),
 		"resume":   h.onRun(keeper.Resume),
 		"status":   h.status,
-		"queue":    notYet,
-		"reorder":  notYet,
-		"withdraw": notYet,
+		"queue":    h.queue,
+		"reorder":  h.reorder,
+		"withdraw": h.onRun(keeper.Withdraw),
 		"forecast": notYet,
 	} {
 		err := service.AddEndpoint(verb, h.guarded(verb, handle),
@@ -239,6 +242,48 @@ func (h *handlers) onRun(do func(context.Context, protocol.RunRequest) (protocol
 	}
 }
 
+func (h *handlers) queue(data []byte) (any, error) {
+	if len(data) > 0 {
+		if _, err := decode[struct{}](data, maxSmall); err != nil {
+			return nil, err
+		}
+	}
+	return listed(h.keeper.Queue(h.ctx))
+}
+
+func (h *handlers) reorder(data []byte) (any, error) {
+	r, err := decode[protocol.ReorderRequest](data, maxSmall)
+	if err != nil {
+		return nil, err
+	}
+	if err := inTime(r.ExpiresAt); err != nil {
+		return nil, err
+	}
+	if n := len(r.Runs); n == 0 || n > protocol.MostQueued {
+		return nil, protocol.Refuse(400, fmt.Sprintf("reorder: %d runs; want 1 to %d, the ones that are to go first", n, protocol.MostQueued))
+	}
+	for _, run := range r.Runs {
+		if !protocol.IsToken(string(run)) {
+			return nil, protocol.Refuse(400, fmt.Sprintf("reorder: run %.80q; want the names of runs that wait", run))
+		}
+	}
+	if err := short("reorder", map[string]string{"who": r.Who}); err != nil {
+		return nil, err
+	}
+	return listed(h.keeper.Reorder(h.ctx, r))
+}
+
+// listed writes an empty list as a list.
+func listed(reply protocol.QueueReply, err error) (any, error) {
+	if err != nil {
+		return nil, err
+	}
+	if reply.Queue == nil {
+		reply.Queue = []protocol.QueuedRun{}
+	}
+	return reply, nil
+}
+
 func (h *handlers) status(data []byte) (any, error) {
 	if len(data) > 0 {
 		if _, err := decode[struct{}](data, maxSmall); err != nil {
@@ -255,6 +300,9 @@ func whole(s protocol.Status) protocol.Status {
 	}
 	if s.Queue == nil {
 		s.Queue = []protocol.RunID{}
+	}
+	if s.Waiting == nil {
+		s.Waiting = []protocol.WaitingRun{}
 	}
 	return s
 }

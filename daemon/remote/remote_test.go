@@ -76,6 +76,19 @@ func (k *keeper) Resume(_ context.Context, r protocol.RunRequest) (protocol.RunR
 	return k.run("resume", r)
 }
 
+func (k *keeper) Queue(context.Context) (protocol.QueueReply, error) {
+	return protocol.QueueReply{Bench: bench}, nil
+}
+
+func (k *keeper) Reorder(_ context.Context, r protocol.ReorderRequest) (protocol.QueueReply, error) {
+	k.note("reorder %v by %s", r.Runs, r.Who)
+	return protocol.QueueReply{Bench: bench, Queue: []protocol.QueuedRun{{Run: "r2", Title: "Ring", State: protocol.Queued, ReadingsPlanned: new(3)}}}, nil
+}
+
+func (k *keeper) Withdraw(_ context.Context, r protocol.RunRequest) (protocol.RunReply, error) {
+	return k.run("withdraw", r)
+}
+
 func (k *keeper) Status(context.Context) protocol.Status {
 	return protocol.Status{Bench: bench, Version: "1.2.3", State: protocol.Running, Run: "r1"}
 }
@@ -210,13 +223,18 @@ func TestRequestsReachTheKeeperAndAreAnswered(t *testing.T) {
 		{"stop", `{"run":"r1","who":"night"}`, `{"run":"r1","state":"holding","causes":[],"recorded":true}`},
 		{"hold", `{"run":"r1"}`, `{"run":"r1","state":"holding","causes":[],"recorded":true}`},
 		{"resume", ` {"who":"night","run":"r1"} `, `{"run":"r1","state":"holding","causes":[],"recorded":true}`},
+		{"withdraw", `{"run":"r1","who":"night"}`, `{"run":"r1","state":"holding","causes":[],"recorded":true}`},
+		{"reorder", `{"runs":["r2","r1"],"who":"night","expires_at":"` + soon + `"}`,
+			`{"bench":"skerry","queue":[{"run":"r2","title":"Ring","queued_at":null,"who":"","state":"queued","readings_planned":3}]}`},
+		{"queue", `{}`, `{"bench":"skerry","queue":[]}`},
+		{"queue", ``, `{"bench":"skerry","queue":[]}`},
 	} {
 		code, text, answer := ask(t, nc, c.verb, c.body)
 		if code != "" || text != "" || answer != c.answer {
 			t.Errorf("%s %s: %s %s %s; want %s", c.verb, c.body, code, text, answer, c.answer)
 		}
 	}
-	if got, want := k.notes(), "start demo by night; start  by night; stop r1 by night; hold r1 by ; resume r1 by night"; got != want {
+	if got, want := k.notes(), "start demo by night; start  by night; stop r1 by night; hold r1 by ; resume r1 by night; withdraw r1 by night; reorder [r2 r1] by night"; got != want {
 		t.Errorf("the keeper heard %q; want %q", got, want)
 	}
 	for _, body := range []string{"{}", ""} {
@@ -261,9 +279,19 @@ func TestRequestsThatExecuteNothing(t *testing.T) {
 		{"no recipe", "start", `{"key":"k"}`, "400", "exactly one"},
 		{"no key", "start", `{"recipe":"a"}`, "400", "no key"},
 		{"status with something", "status", `{"run":"r1"}`, "400", "want only an empty object"},
-		{"queue", "queue", `{}`, "501", "not available yet"},
-		{"reorder", "reorder", `{}`, "501", "not available yet"},
-		{"withdraw", "withdraw", `{}`, "501", "not available yet"},
+		{"queue with something", "queue", `{"run":"r1"}`, "400", "want only an empty object"},
+		{"reorder of nothing", "reorder", `{"runs":[]}`, "400", "0 runs; want 1 to 200"},
+		{"reorder without runs", "reorder", `{"who":"w"}`, "400", "0 runs"},
+		{"reorder of too many", "reorder", `{"runs":["r` + strings.Repeat(`","r`, 200) + `"]}`, "400", "201 runs"},
+		{"reorder of no tokens", "reorder", `{"runs":["r1","r.*"]}`, "400", `run "r.*"`},
+		{"reorder of null", "reorder", `{"runs":[null]}`, "400", `run ""`},
+		{"reorder of numbers", "reorder", `{"runs":[1]}`, "400", "runs"},
+		{"reorder of a run", "reorder", `{"runs":"r1"}`, "400", "runs"},
+		{"reorder as large as a recipe", "reorder", `{"runs":["` + big[:70000] + `"]}`, "413", "want at most 65536"},
+		{"reorder by a long name", "reorder", `{"runs":["r1"],"who":"` + big[:300] + `"}`, "400", "who of 300 bytes"},
+		{"expired reorder", "reorder", `{"runs":["r1"],"expires_at":"` + past + `"}`, "408", "nothing was done"},
+		{"withdraw of no run", "withdraw", `{}`, "400", "want the name of the run"},
+		{"expired withdraw", "withdraw", `{"run":"r1","expires_at":"` + past + `"}`, "408", "nothing was done"},
 		{"forecast", "forecast", `{}`, "501", "not available yet"},
 	} {
 		t.Run(c.name, func(t *testing.T) {

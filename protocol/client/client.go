@@ -123,6 +123,23 @@ func (c *Client) Status(ctx context.Context) (protocol.Status, error) {
 	return ask[protocol.Status](ctx, c, "status", struct{}{})
 }
 
+// Queue asks for the runs that wait, the next first.
+func (c *Client) Queue(ctx context.Context) (protocol.QueueReply, error) {
+	return ask[protocol.QueueReply](ctx, c, "queue", struct{}{})
+}
+
+// Reorder asks to put the runs it names first in the queue. It expires like Start.
+func (c *Client) Reorder(ctx context.Context, r protocol.ReorderRequest) (protocol.QueueReply, error) {
+	r.ExpiresAt = expiry(ctx, r.ExpiresAt)
+	return ask[protocol.QueueReply](ctx, c, "reorder", r)
+}
+
+// Withdraw asks to stop a run that waits in the queue, and no other. It has no expiry unless the
+// request brings one.
+func (c *Client) Withdraw(ctx context.Context, r protocol.RunRequest) (protocol.RunReply, error) {
+	return ask[protocol.RunReply](ctx, c, "withdraw", r)
+}
+
 func expiry(ctx context.Context, given *protocol.Time) *protocol.Time {
 	if deadline, ok := ctx.Deadline(); ok && given == nil {
 		return &protocol.Time{Time: deadline}
