@@ -288,6 +288,10 @@ func (r *Recipe) fit(f Facts, q *Result, out *scan.Result) []protocol.Finding {
 	var findings []protocol.Finding
 	out.Of, pairs, findings = f.channel(q.Of, q.ofAt)
 	findings = append(findings, r.standings(q, q.Along, "one place of the axis along which is fitted")...)
+	if q.Power != "" {
+		_, found := f.sensor(q.Power, q.powerAt)
+		findings = append(findings, found...)
+	}
 	axis, found := f.axis(q.Along, q.alongAt)
 	if findings = append(findings, found...); found != nil {
 		return findings
@@ -299,10 +303,6 @@ func (r *Recipe) fit(f Facts, q *Result, out *scan.Result) []protocol.Finding {
 	switch q.Kind {
 	case scan.Peak:
 		findings = append(findings, r.swept(q.Along, q.alongAt, max(profiles[q.Profile], need), strings.TrimSpace("a profile "+q.Profile))...)
-		if q.Power != "" {
-			_, found := f.sensor(q.Power, q.powerAt)
-			findings = append(findings, found...)
-		}
 	case scan.Zero:
 		findings = append(findings, r.bothSides(q, need)...)
 	case scan.TuningCurve, scan.ConjugateMap:
