@@ -68,6 +68,9 @@ func (c *console) progress(ctx context.Context, k *keeper.Keeper) error {
 
 // sentence says a status in words.
 func sentence(s protocol.Status) string {
+	if s.Hand != "" {
+		return fmt.Sprintf("Bench %s is in the hand of %s; gemel stop ends that, at rest.", s.Bench, s.Hand) + next(s.Waiting)
+	}
 	if s.Run == "" {
 		return fmt.Sprintf("Bench %s is idle.", s.Bench) + next(s.Waiting)
 	}

@@ -106,10 +106,14 @@ func (c *runFlags) ask(ctx context.Context, con *console, do func(*client.Client
 			if err != nil {
 				return err
 			}
-			if s.Run == "" || s.State.Final() {
+			switch active := s.Run != "" && !s.State.Final(); {
+			case active:
+				run = s.Run
+			case s.Hand != "":
+				run = protocol.BenchRun // whose stop is the end of hand work
+			default:
 				return errors.New("no run is active; name one, or see gemel status")
 			}
-			run = s.Run
 		}
 		r, err := do(cl, ctx, protocol.RunRequest{Run: run, Who: whoami()})
 		if err != nil {
@@ -118,7 +122,11 @@ func (c *runFlags) ask(ctx context.Context, con *console, do func(*client.Client
 		if c.JSON {
 			return con.json(r)
 		}
-		fmt.Fprintf(con.out, "run %s is %s", r.Run, r.State)
+		if r.Run == protocol.BenchRun {
+			fmt.Fprint(con.out, "nobody has the bench in hand any more; it is at rest")
+		} else {
+			fmt.Fprintf(con.out, "run %s is %s", r.Run, r.State)
+		}
 		for i, cause := range r.Causes {
 			fmt.Fprintf(con.out, "%s%s", map[bool]string{true: " because of ", false: ", "}[i == 0], cause)
 		}

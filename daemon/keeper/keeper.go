@@ -27,6 +27,7 @@ import (
 
 // Book is what the keeper needs of the logbook.
 type Book interface {
+	Asked(ctx context.Context, bench, key string) (protocol.RunID, error)
 	NewRun(ctx context.Context, h logbook.Header, first protocol.Entry) (existing protocol.RunID, err error)
 	Append(ctx context.Context, e protocol.Entry) error
 	Entries(ctx context.Context, run protocol.RunID, afterSequence int64, limit int) ([]protocol.Entry, error)
@@ -69,6 +70,8 @@ type Config struct {
 	Armed func(now time.Time) bool
 	// MayHome is a person's word that axes may search their zero at the start of each run.
 	MayHome bool
+	// Hand is what hand work has to know beside the bench.
+	Hand engine.HandFacts
 	// Behind tells how many entries are not published yet; nil: nothing is published.
 	Behind func() int64
 	// Step is handed to the engine; for tests.
@@ -90,6 +93,7 @@ type Keeper struct {
 	current *engine.Engine
 	row     logbook.RunRow // of current, or of the run before
 	last    engine.Snapshot
+	hands   hands
 }
 
 // New makes a keeper. It starts nothing.
@@ -103,10 +107,14 @@ func New(c Config) *Keeper {
 // Run brings the bench to rest, takes up what is unfinished, and then executes runs as they are
 // asked for, until ctx ends. An error means that the logbook or this program is broken.
 func (k *Keeper) Run(ctx context.Context) error {
+	defer k.openHands()()
 	if bad := engine.Rest(ctx, k.Bench); bad != "" {
 		if err := k.benchEvent(ctx, protocol.Trouble, "at the start the rest state was not reached: "+bad, nil); err != nil && !errors.Is(err, logbook.ErrFull) {
 			return err
 		}
+	}
+	if err := k.tellCutHand(ctx); err != nil && !errors.Is(err, logbook.ErrFull) && ctx.Err() == nil {
+		return err
 	}
 	for ctx.Err() == nil {
 		idle, err := k.once(ctx)
@@ -144,6 +152,9 @@ func (k *Keeper) wait(ctx context.Context, most time.Duration) {
 // once executes the run whose turn it is. idle says that there is none.
 func (k *Keeper) once(ctx context.Context) (idle bool, err error) {
 	if err := k.payOwed(ctx); err != nil {
+		return false, err
+	}
+	if done, err := k.handWork(ctx); done || err != nil {
 		return false, err
 	}
 	eng, idle, err := k.turn(ctx)
@@ -305,6 +316,18 @@ func (k *Keeper) Enqueue(ctx context.Context, q protocol.StartRequest) (protocol
 	if q.Key == "" {
 		return protocol.StartReply{}, protocol.Refuse(400, "no key; want one of your own choice, so that a start asked for twice is one run")
 	}
+	if run, err := k.Book.Asked(ctx, k.Bench.Name, q.Key); err != nil || run != "" {
+		if err != nil {
+			return protocol.StartReply{}, err
+		}
+		return k.askedBefore(ctx, run, text)
+	}
+	if queue, err := k.Book.Queue(ctx); err != nil || len(queue) >= protocol.MostQueued {
+		if err != nil {
+			return protocol.StartReply{}, err
+		}
+		return protocol.StartReply{}, protocol.Refuse(503, fmt.Sprintf("%d runs wait already; want at most %d: withdraw some, or ask again when some are done", len(queue), protocol.MostQueued))
+	}
 	now := time.Now()
 	earlier := k.earlierNow(ctx)
 	plan, err := k.Plan(text, now, earlier.find)
@@ -395,6 +418,9 @@ func who(name string) string {
 
 // Stop ends a run for ever, also one that waits in the queue.
 func (k *Keeper) Stop(ctx context.Context, q protocol.RunRequest) (protocol.RunReply, error) {
+	if q.Run == protocol.BenchRun {
+		return k.stopHand(ctx, q)
+	}
 	for {
 		eng, err := k.find(ctx, q)
 		if err != nil {
@@ -490,6 +516,9 @@ func (k *Keeper) Status(ctx context.Context) protocol.Status {
 	}
 	k.mu.Lock()
 	defer k.mu.Unlock()
+	if k.hands.session != nil {
+		s.Hand = k.hands.session.who
+	}
 	if k.row.Run == "" {
 		return s
 	}

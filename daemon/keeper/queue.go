@@ -75,6 +75,9 @@ func (k *Keeper) take(ctx context.Context, row logbook.RunRow, plan scan.Plan, p
 	if is, err := first(); err != nil || !is {
 		return nil, errors.Join(err, errNotFirst)
 	}
+	if k.handSession() != nil {
+		return nil, nil // a person has the bench; the run waits
+	}
 	past, err := k.fold(ctx, row.Run)
 	if err != nil || past.State.Final() {
 		return nil, err
