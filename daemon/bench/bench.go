@@ -26,7 +26,7 @@ func Load(path string) (*File, error) {
 func Parse(path string, text []byte) (*File, error) {
 	doc := strict.Parse(path, text)
 	m := doc.Root()
-	r := reader{doc: doc, file: &File{Path: path, Text: string(text)}}
+	r := reader{doc: doc, file: &File{Path: path, Text: string(text), outlook: &outlook{}}}
 	r.bench(m.Need("bench"))
 	r.lines(m.Need("lines"))
 	r.simulation(m.Opt("simulation"))
@@ -38,8 +38,9 @@ func Parse(path string, text []byte) (*File, error) {
 	r.sensors(m.Opt("sensors"))
 	r.settings(m.Opt("settings"))
 	r.optics(m.Opt("optics"), m.Opt("arms"))
+	r.keepOuts(m.Opt("keep_out"))
 	r.service(m)
-	m.Later("keep_out", "page", "guards")
+	m.Later("page", "guards")
 	m.Done()
 	if doc.Readable() {
 		r.check()

@@ -110,7 +110,7 @@ func seed(names ...string) uint64 {
 
 func (b *Bench) build(lines map[string]*line.Line) error {
 	f, pace := b.File, b.File.Pace()
-	e := engine.Bench{Name: f.Name, Pace: pace, Simulated: f.Simulated(), Tag: f.Counter.Tag,
+	e := engine.Bench{Name: f.Name, Pace: pace, Simulated: f.Simulated(), Tag: f.Counter.Tag, KeepOuts: f.KeepOuts,
 		HomeOrder: map[drivers.DeviceName][]drivers.AxisName{}, Unattended: map[drivers.DeviceName]bool{}}
 	var err error
 	for _, a := range f.Axes {

@@ -154,17 +154,18 @@ func with(t *testing.T, old, now string) string {
 	return strings.Replace(text, old, now, 1)
 }
 
-// withSettings is the demo bench with two settings more, and another piece replaced.
+// withSettings is the demo bench with three settings more, and another piece replaced.
 func withSettings(t *testing.T, old, now string) string {
 	t.Helper()
-	text := with(t, "\nsensors:\n", `
-settings:
-  laser: {line: laser, dialect: scpi, unit: mW, answer_unit: W, limits: [0 mW, 60 mW], tolerance: 100 uW, headers: {set: ":SOUR:POW {value}", get: ":SOUR:POW?"}}
-  delay: {line: delay, dialect: scpi, unit: ns, limits: [-20 ns, 20 ns], tolerance: 1 ps, headers: {set: ":SOUR:DEL {value}", get: ":SOUR:DEL?"}}
+	text := with(t, "\noptics:\n", `
+  oven: {line: oven, dialect: scpi, is: crystal_temperature, unit: Cel, limits: [15 Cel, 60 Cel], tolerance: 0.02 K, settle_within: 10 min, headers: {set: ":SOUR:TEMP {value}", get: ":SOUR:TEMP?"}}
+  iris: {line: iris, dialect: scpi, is: idler_iris, unit: mm, answer_unit: m, limits: [1 mm, 12 mm], tolerance: 10 um, headers: {set: ":SOUR:POS {value}", get: ":SOUR:POS?"}}
+  bias: {line: bias, dialect: scpi, is: idler_bias, unit: V, nominal: 41.8 V, per_volt: 3 %, limits: [30 V, 45 V], tolerance: 10 mV, headers: {set: ":SOUR:VOLT {value}", get: ":SOUR:VOLT?"}}
 
-sensors:
+optics:
 `)
-	text = strings.Replace(text, "\nlines:\n", "\nlines:\n  laser: {device: simulated}\n  delay: {device: simulated}\n", 1)
+	text = strings.Replace(text, "\nlines:\n", "\nlines:\n  oven: {device: simulated}\n  iris: {device: simulated}\n  bias: {device: simulated}\n", 1)
+	text = strings.Replace(text, "    settings:\n", "    settings:\n      oven: {lag: 40 s}\n      bias: {per_volt: 3.5 %}\n", 1)
 	return strings.Replace(text, old, now, 1)
 }
 
@@ -173,7 +174,7 @@ func TestAVirtualSettingChangesTheWorldAndIsReadBack(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
 		b, _ := live(t, f, VirtualOptions{})
 		connectAll(t, b)
-		for i, c := range []struct{ set, want float64 }{{30, 30}, {-2.5, -2.5}} {
+		for i, c := range []struct{ set, want float64 }{{12.5, 12.5}, {30, 30}, {25, 25}, {4, 4}, {40, 40}} {
 			got, err := b.Settings[i].Set(t.Context(), c.set)
 			if err != nil || got < c.want-0.1 || got > c.want+0.1 {
 				t.Errorf("%s set to %g reads %g, %v; want %g %s", b.Settings[i].Name(), c.set, got, err, c.want, b.Settings[i].Unit())

@@ -8,7 +8,6 @@ import (
 	"gemel/drivers"
 	"gemel/drivers/line"
 	"gemel/protocol/strict"
-	"gemel/protocol/unit"
 	"gemel/sim/source"
 )
 
@@ -20,6 +19,8 @@ func (r *reader) check() {
 	r.checkAxes()
 	r.checkHoming()
 	r.checkDetectors()
+	r.checkSettings()
+	r.checkKeepOuts()
 	if f.Simulated() {
 		r.checkSimulation()
 	}
@@ -135,8 +136,9 @@ func (r *reader) checkAxes() {
 		names = append(names, string(c.Name))
 	}
 	taken, roles := map[string]drivers.AxisName{}, map[string]drivers.AxisName{}
-	for _, a := range f.Axes {
+	for i, a := range f.Axes {
 		axesOf[a.Axis.Controller]++
+		f.Axes[i].Together = slices.ContainsFunc(f.Controllers, func(c Controller) bool { return c.Name == a.Axis.Controller && c.Together })
 		if c := string(a.Axis.Controller); c != "" && !slices.Contains(names, c) {
 			r.fail(a.controllerAt, fmt.Sprintf("no controller %q", c), "%s", oneOf(c, names))
 		}
@@ -251,6 +253,7 @@ func (r *reader) checkSimulation() {
 			r.fail(t.at, fmt.Sprintf("the truth about an axis %q that there is not", name), "an axis of this file")
 		}
 	}
+	r.checkSettingTruth()
 	for _, a := range f.Axes {
 		if a.Acceleration == 0 {
 			r.fail(a.at, "a simulated axis without acceleration", "acceleration: 20 deg/s2, or what it has")
@@ -321,7 +324,7 @@ func (r *reader) checkVirtual() {
 	}
 	for _, s := range f.Settings {
 		use(s.Device, "setting", "scpi")
-		if want := map[unit.Kind]string{unit.Power: "W", unit.Temperature: "Cel"}[s.Kind]; want != "" && s.speaks() != want {
+		if want := effectOf(s.Is).speaks; want != "" && s.speaks() != want {
 			r.fail(s.at, fmt.Sprintf("a simulated setting of %s that speaks %s", s.Kind, s.speaks()), "answer_unit: %s, which the virtual one speaks", want)
 		}
 	}

@@ -246,7 +246,7 @@ func TestContractOfSensors(t *testing.T) {
 func TestContractOfSettings(t *testing.T) {
 	drivertest.Setting(t, synctest.Test, func(t *testing.T) drivertest.SettingSetup {
 		b, v, wire := spoiledFile(t, parse(t, withSettings(t, "  clock: 100 ", "  clock: 1 ")), "laser", "laser")
-		return drivertest.SettingSetup{Setting: b.Settings[0], Wire: wire, Values: [2]float64{30, 50}, Tolerance: 1e-3, True: func() float64 {
+		return drivertest.SettingSetup{Setting: b.Settings[1], Wire: wire, Values: [2]float64{30, 50}, Tolerance: 1e-3, True: func() float64 {
 			r, n := last(v, "laser", instruments.ValueSet)
 			if n == 0 {
 				return b.File.Optics.PumpPower * 1e3

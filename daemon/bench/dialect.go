@@ -177,7 +177,7 @@ func scpiSetting(m strict.Map) settingReading {
 	read := inUnit(m, m.Need("tolerance"))
 	h.Done()
 	header, _, _ := strings.Cut(strings.TrimPrefix(c.Set, ":"), " ")
-	return settingReading{header: strings.ToUpper(header), answerUnit: c.AnswerUnit, make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
+	return settingReading{header: strings.ToUpper(header), answerUnit: c.AnswerUnit, tolerance: read, make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
 		c := c
 		c.Common, c.Unit, c.Tolerance = scpiFor(c.Common, d.Device, pace), d.Unit, read(d.Unit)
 		return scpi.NewSetting(l, c)
@@ -189,6 +189,7 @@ type settingReading struct {
 	make settingMaker
 	// What a virtual setting must know: the header that sets it, and the unit it speaks; empty: its own.
 	header, answerUnit string
+	tolerance          func(unit string) float64 // nil: nothing virtual speaks that dialect
 }
 
 func unitOf(v strict.Value) string {

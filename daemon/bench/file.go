@@ -28,6 +28,7 @@ type File struct {
 	Protectors  []Shutter
 	Sensors     []Sensor
 	Settings    []Setting
+	KeepOuts    []scan.KeepOut
 	Optics      *Optics // nil: none described; a simulated bench has them
 
 	Simulation *Simulation // nil on a real bench
@@ -35,6 +36,9 @@ type File struct {
 	LogbookFolder string // absolute or relative to where the program stands; empty: the command's choice
 	NATSListen    string // host:port; empty: the command's choice
 	AfterRestart  string // AfterRestartHold or AfterRestartResume
+
+	outlook    *outlook
+	keepOutsAt []strict.Place
 }
 
 // What `serve` does with a run that a crash or SIGTERM left unfinished.
@@ -69,8 +73,9 @@ func (f *File) Facts() recipe.Facts {
 	for _, s := range f.Sensors {
 		facts.Sensors = append(facts.Sensors, recipe.Sensor{Name: s.Name, Unit: s.Unit})
 	}
+	facts.KeepOuts = f.KeepOuts
 	if f.Optics != nil {
-		facts.Conjugate = f.conjugate
+		facts.Conjugate, facts.Emission, facts.Flanks, facts.Expect = f.conjugate, f.emission, f.flanks, f.expect
 	}
 	for _, a := range f.Axes {
 		facts.Axes = append(facts.Axes, a.Axis)
@@ -155,6 +160,7 @@ type Counter struct {
 	Window       strict.Measured                        // full width of the coincidence window, s
 	Displaced    []Displaced                            // coincidence channels whose windows lie off the true delay
 	Capture      strict.Measured                        // share of true coincidences within the window, from a delay scan
+	Jitter       strict.Measured                        // rms between the two arrivals of a pair, s; for forecasts alone
 	Bits         int
 	GateMin      time.Duration
 	GateMax      time.Duration
@@ -179,6 +185,8 @@ type Detector struct {
 	Model      string          // non-paralysable or paralysable; empty without a dead time
 	Afterpulse strict.Measured // share of recorded events
 	Dark       strict.Measured // Hz, as stated
+	Expected   strict.Measured // efficiency that a forecast takes; no value: a perfect detector
+	RoomHz     float64         // room light that a forecast takes, recorded
 	TripHz     float64
 	FloorHz    float64
 	Glance     time.Duration
@@ -204,24 +212,6 @@ type Sensor struct {
 	Unit string
 
 	make sensorMaker
-}
-
-// Setting is what can be set and read back and is no axis.
-type Setting struct {
-	Device
-	Unit      string
-	Kind      unit.Kind
-	Low, High float64 // in Unit
-
-	settingReading
-}
-
-// speaks is the unit on the wire.
-func (s Setting) speaks() string {
-	if s.answerUnit != "" {
-		return s.answerUnit
-	}
-	return s.Unit
 }
 
 // Simulation says how the virtual instruments live.

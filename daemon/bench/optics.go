@@ -46,6 +46,7 @@ type Arm struct {
 	OutOfPlane unit.Angle
 	Filter     Filter
 	Polarised  bool
+	UnpairedHz float64 // recorded light without partners for each milliwatt of pump, that a forecast takes
 	Path       []Transmittance
 	Face       string // "window" or "fibre_input": the plane the efficiency refers to; empty: not stated
 }
@@ -80,6 +81,7 @@ type truth struct {
 	temperatureNoise               float64 // of the temperature monitor, rms, Cel
 	powerWander, temperatureWander instruments.Wander
 	axes                           map[string]axisTruth
+	settings                       []settingTruth
 	at                             strict.Place
 }
 
@@ -126,6 +128,7 @@ func (r *reader) simulation(v strict.Value) {
 		a.Done()
 		s.truth.axes[e.Name] = x
 	}
+	s.truth.settings = readSettingTruths(tm.Opt("settings"))
 	tm.Done()
 	m.Done()
 	r.file.Simulation = s
@@ -224,6 +227,7 @@ func (r *reader) arm(v strict.Value) Arm {
 		fm.Done()
 	}
 	a.Polarised = m.Opt("polarised").Bool()
+	a.UnpairedHz = m.Opt("expected_unpaired_per_mw").Quantity(unit.Rate, 0, 1e9)
 	for _, item := range m.Opt("path").List(1, 64) {
 		pm := item.Map()
 		t := Transmittance{Part: pm.Need("part").Text()}

@@ -2,7 +2,6 @@ package bench
 
 import (
 	"encoding/hex"
-	"math"
 	"regexp"
 	"strings"
 	"time"
@@ -209,12 +208,27 @@ func readHome(v strict.Value, a *Axis) {
 		return
 	}
 	m := v.Map()
-	a.Unattended = m.Need("unattended").Bool()
+	a.Unattended = m.Opt("unattended").Bool()
 	order, together := m.Opt("order"), m.Opt("together")
 	a.HomeOrder = int(order.Int(1, 99, 0))
 	a.AllAtOnce = together.Bool()
 	if a.Unattended && !order.Given() {
 		m.Need("order")
+	}
+	at, runUp := m.Opt("at"), m.Opt("run_up")
+	if at.Given() {
+		deg := at.Angle(-farthest, farthest)
+		a.HomesAt = &deg
+		if at.Good() && a.High > a.Low && !a.Limits(deg) {
+			at.Failf("a place within the limits, %s to %s", a.Low, a.High)
+		}
+	}
+	if runUp.Given() {
+		deg := runUp.Angle(0, unit.Turn)
+		a.HomeRunUp = &deg
+		if !at.Given() {
+			m.Need("at")
+		}
 	}
 	m.Done()
 }
@@ -275,6 +289,7 @@ func (r *reader) counter(e strict.Entry) Counter {
 		c.Window.From = w.Opt("from").Text("")
 		w.Done()
 		c.Capture = m.Opt("capture").Measured(unit.Share, 0.01, 1)
+		c.Jitter = m.Opt("jitter").Measured(unit.Time, 0, 1e-3)
 		for _, item := range m.Opt("displaced").List(1, 16) {
 			dm := item.Map()
 			d := Displaced{Channel: one(dm.Need("channel")), Windows: int(dm.Need("windows").Int(1, 1000))}
@@ -322,6 +337,8 @@ func (r *reader) detectors(v strict.Value) {
 			DeadTime:   m.Opt("dead_time").Measured(unit.Time, 0, 1),
 			Afterpulse: m.Opt("afterpulsing").Measured(unit.Share, 0, 0.5),
 			Dark:       m.Opt("dark_rate").Measured(unit.Rate, 0, 1e9),
+			Expected:   m.Opt("expected_efficiency").Measured(unit.Share, 0.0001, 1),
+			RoomHz:     m.Opt("expected_room_light").Quantity(unit.Rate, 0, 1e9),
 			TripHz:     m.Opt("trip_rate").Quantity(unit.Rate, 1, 1e12), FloorHz: m.Opt("floor").Quantity(unit.Rate, 0, 1e9),
 			Glance: m.Opt("glance").Duration(time.Microsecond, time.Minute),
 		}
@@ -386,27 +403,6 @@ func (r *reader) sensors(v strict.Value) {
 		m.Later("period")
 		done(m, s.Device)
 		r.file.Sensors = append(r.file.Sensors, s)
-	}
-}
-
-func (r *reader) settings(v strict.Value) {
-	for _, e := range v.Map().Entries() {
-		m := e.Value.Map()
-		s := Setting{Device: device(e.Name, e.Key, m)}
-		s.Unit, s.Kind = m.Need("unit").Unit()
-		s.Dialect, s.settingReading = choose(m, func(d dialect) func(strict.Map) settingReading { return d.setting })
-		s.Low, s.High = math.Inf(-1), math.Inf(1)
-		list := m.Need("limits")
-		if items := list.List(2, 2); len(items) == 2 && s.Kind != "" {
-			low, high := items[0].Quantity(s.Kind, -1e30, 1e30), items[1].Quantity(s.Kind, -1e30, 1e30)
-			s.Low, _ = unit.In(low, s.Unit)
-			s.High, _ = unit.In(high, s.Unit)
-			if items[0].Good() && items[1].Good() && low >= high {
-				list.Fail("the higher limit not above the lower", "the lower limit first")
-			}
-		}
-		done(m, s.Device)
-		r.file.Settings = append(r.file.Settings, s)
 	}
 }
 

@@ -46,6 +46,7 @@ func tables() map[string]table {
 		"Every instrument":             at("bench", `(controllers|counters|protectors|sensors|settings)\.\w+|shutter`, "counters.counter"),
 		"`controllers.NAME`":           at("bench", `controllers\.\w+`, "controllers.own"),
 		"`axes.NAME`":                  at("bench", `axes\.\w+`, "axes.pump_waveplate", "axes.signal_arm"),
+		"`keep_out.NAME`":              at("bench", `keep_out\.\w+`, "keep_out.new"),
 		"`counters.NAME`":              at("bench", `counters\.\w+`, "counters.counter"),
 		"`detectors.NAME`":             at("bench", `detectors\.\w+`, "detectors.signal"),
 		"`shutter`, `protectors.NAME`": at("bench", `shutter|protectors\.\w+`, "shutter"),
@@ -54,11 +55,11 @@ func tables() map[string]table {
 		"`optics`":                     at("bench", `optics`, "optics"),
 		"`arms.signal`, `arms.idler`":  at("bench", `arms\.\w+`, "arms.signal"),
 		"`simulation`":                 at("simulated", `simulation`, "simulation"),
-		"Dialect `scpi`":               at("bench", `counters\.counter|shutter|protectors\.signal_shield|sensors\.pump_power|settings\.delay`, "counters.counter"),
+		"Dialect `scpi`":               at("bench", `counters\.counter|shutter|protectors\.signal_shield|sensors\.pump_power|settings\.(delay|oven|bias)`, "counters.counter"),
 		"`scpi` counters":              at("bench", `counters\.counter`, "counters.counter"),
 		"`scpi` shutters":              at("bench", `shutter|protectors\.signal_shield`, "shutter"),
 		"`scpi` sensors":               at("bench", `sensors\.pump_power`, "sensors.pump_power"),
-		"`scpi` settings":              at("bench", `settings\.delay`, "settings.delay"),
+		"`scpi` settings":              at("bench", `settings\.(delay|oven|bias)`, "settings.delay"),
 		"Dialect `custom`":             at("bench", `\w+\.own\w*`, "controllers.own", "settings.own_power"),
 		"`custom` controllers":         at("bench", `controllers\.own`, "controllers.own"),
 		"`custom` counters":            at("own counter", `counters\.own_counter`, "counters.own_counter"),
@@ -124,7 +125,11 @@ arms: {signal: {detector: signal, aperture: {kind: gaussian, radius: 1.2 mm}, di
 		l.keys["device"] = &node{text: "simulated"}
 	}
 	delete(simulated.at("detectors.idler").keys, "protect")
-	simulated.merge(grow(t, `{simulation: {seed: 1, truth: {signal: {efficiency: 60 %}, idler: {efficiency: 55 %}}}}`))
+	simulated.merge(grow(t, `{simulation: {seed: 1, truth: {signal: {efficiency: 60 %}, idler: {efficiency: 55 %}}},
+lines: {oven: {device: simulated}, bias: {device: simulated}},
+settings: {delay: {is: delay, answer_unit: s},
+ oven: {line: oven, dialect: scpi, is: crystal_temperature, unit: Cel, limits: [15 Cel, 60 Cel], tolerance: 0.1 K, headers: {set: ":SOUR:TEMP {value}", get: ":SOUR:TEMP?"}},
+ bias: {line: bias, dialect: scpi, is: idler_bias, unit: V, nominal: 41 V, per_volt: 3 %, limits: [30 V, 45 V], tolerance: 0.1 V, headers: {set: ":SOUR:VOLT {value}", get: ":SOUR:VOLT?"}}}}`))
 	files := map[string]*node{
 		"bench": bench, "own counter": counter, "simulated": simulated,
 		"recipe": grow(t, `{title: Both arms, sweep: [{axis: crystal_tilt, at: 0 deg}, {axis: signal_arm, at: 2.864 deg}], dwell: 5 s}`),
@@ -627,6 +632,10 @@ func (n *node) put(place string, example *node) {
 		n.keys[list].list = append(n.keys[list].list, example)
 		return
 	}
+	if block, name, below := strings.Cut(place, "."); below && n.at(place) == nil {
+		n.put(block, &node{keys: map[string]*node{name: example}})
+		return
+	}
 	if here := n.at(place); here == nil || here.keys == nil {
 		n.keys[place] = example // all such places are blocks at the top
 		return
@@ -682,7 +691,7 @@ var index = regexp.MustCompile(`\[[0-9]+\]`)
 func general(path string) string {
 	path = index.ReplaceAllString(path, "[]")
 	for _, c := range []struct{ from, to string }{
-		{`(^|\.)truth\.axes\.[^.]+$`, "${1}truth.axes.NAME"}, {`(^|\.)truth\.(signal|idler)$`, "${1}truth.ARM"},
+		{`(^|\.)truth\.(axes|settings)\.[^.]+$`, "${1}truth.$2.NAME"}, {`(^|\.)truth\.(signal|idler)$`, "${1}truth.ARM"},
 		{`(^|\.)asks\.[^.]+$`, "${1}asks.QUESTION"}, {`(\.own\w*)\.start\[\]$`, "${1}.asks.QUESTION"},
 		{`(^|\.)crystal\.n_[oe]$`, "${1}crystal.INDEX"}, {`^sweep\[\]\.with$`, "sweep[]"},
 	} {

@@ -7,7 +7,6 @@ import (
 	"os"
 	"path/filepath"
 	"slices"
-	"strconv"
 	"strings"
 
 	"gemel/drivers"
@@ -305,24 +304,6 @@ func (f *File) blade(protector drivers.DeviceName) string {
 	return ""
 }
 
-func (f *File) virtualSetting(w *instruments.World, s Setting) (instruments.Instrument, error) {
-	wire := func(x float64) float64 {
-		base, _, _, _ := unit.ParseAny(strconv.FormatFloat(x, 'g', 17, 64) + " " + s.Unit)
-		y, _ := unit.In(base, s.speaks())
-		return y
-	}
-	c := instruments.SettingConfig{Name: string(s.Name), Identity: identity(s.Device, "setting"), Header: s.header, Low: wire(s.Low), High: wire(s.High)}
-	var start float64
-	switch s.Kind {
-	case unit.Power:
-		c.Changes, start = instruments.PumpPower, f.Optics.PumpPower
-	case unit.Temperature:
-		c.Changes, start = instruments.CrystalTemperature, f.Optics.Temperature
-	}
-	c.Start = max(c.Low, min(c.High, start))
-	return instruments.NewSetting(w, c)
-}
-
 func (f *File) virtualStage(w *instruments.World, c Controller) (instruments.Instrument, error) {
 	var axes []instruments.AxisConfig
 	for _, a := range f.Axes {
@@ -353,6 +334,10 @@ func (f *File) virtualAxis(a Axis, dialect string) instruments.AxisConfig {
 	if t.start != nil {
 		start = *t.start
 	}
+	home := start
+	if a.HomesAt != nil {
+		home = *a.HomesAt
+	}
 	call := a.Letter
 	if dialect != "gcode" && a.Address != "" {
 		call = a.Address
@@ -361,7 +346,7 @@ func (f *File) virtualAxis(a Axis, dialect string) instruments.AxisConfig {
 		Letter: call, Axis: string(a.Name), Role: a.Role, Sense: a.Mount.Sense, ZeroDeg: a.Mount.Zero.Degrees(),
 		LowDeg: low.Degrees(), HighDeg: high.Degrees(), SpeedDegS: a.SpeedDegS, AccelDegS2: a.AccelDegS2,
 		BacklashDeg: t.play.Degrees(), FallingFlank: !a.Rising, StepsPerDeg: stepsPerDeg, Encoder: a.Proof == drivers.Proved,
-		HomeDeg: a.Mount.Controller(start).Degrees(), StartDeg: start.Degrees(), Homed: !t.lost,
+		HomeDeg: a.Mount.Controller(home).Degrees(), StartDeg: start.Degrees(), Homed: !t.lost,
 	}
 }
 

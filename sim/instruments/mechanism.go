@@ -316,6 +316,9 @@ func (m *mechanism) drop(j *job) {
 	}
 }
 
+// RunUpDeg is how far below its reference, beside the play, a search begins that comes from above.
+const RunUpDeg = 1.
+
 // home begins the search for an axis's reference: down below the switch if need be, then slowly
 // onto it with the flank on which the zero holds.
 func (m *mechanism) home(now time.Time, x *axis) (refusal string) {
@@ -331,9 +334,8 @@ func (m *mechanism) home(now time.Time, x *axis) (refusal string) {
 	if x.cfg.FallingFlank {
 		flank = -1
 	}
-	const runUpDeg = 1
 	home := x.sense() * (x.cfg.HomeDeg - x.cfg.ZeroDeg)
-	below := home - flank*(runUpDeg+x.cfg.BacklashDeg)
+	below := home - flank*(RunUpDeg+x.cfg.BacklashDeg)
 	at := now
 	if _, motor := x.path.end(); (motor-below)*flank > 0 {
 		d := math.Abs(motor - below)

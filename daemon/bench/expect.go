@@ -1,0 +1,265 @@
+package bench
+
+import (
+	"errors"
+	"fmt"
+	"math"
+	"slices"
+	"sync"
+
+	"gemel/drivers"
+	"gemel/protocol/unit"
+	"gemel/scan"
+	"gemel/sim/instruments"
+	"gemel/sim/source"
+)
+
+// outlook is the declared source as a model, made once for a file when first asked for. It may be
+// used by several goroutines.
+type outlook struct {
+	once     sync.Once
+	model    *source.Model
+	warnings []string
+	err      error
+
+	mu    sync.Mutex
+	empty map[unit.Angle]string // why there is no emission, by tilt
+}
+
+// expectation is the light as the file states it, with what it says is to be expected of detectors
+// and backgrounds. Nothing of a simulated bench's truth is in it.
+func (f *File) expectation() (o source.Optics, missing []string) {
+	o = f.lit(truth{})
+	o.Counter.JitterS = f.Counter.Jitter.Value
+	for _, x := range []struct {
+		arm *source.Arm
+		way Arm
+	}{{&o.Signal, f.Optics.Signal}, {&o.Idler, f.Optics.Idler}} {
+		x.arm.StrayHzPerW = x.way.UnpairedHz * 1e3
+		x.arm.Detector.Efficiency = 1
+		for _, d := range f.Detectors {
+			switch {
+			case d.Name != x.way.Detector:
+			case d.Expected.Value > 0:
+				x.arm.Detector.Efficiency = d.Expected.Value
+			default:
+				missing = append(missing, fmt.Sprintf("the detector %s has no expected_efficiency in the bench file: a perfect one is taken", d.Name))
+			}
+		}
+		if x.arm.Detector.Afterpulse > 0 && x.arm.Detector.AfterpulseS == 0 {
+			x.arm.Detector.AfterpulseS = 1e-9 // not declared; what matters is how many there are
+		}
+	}
+	for _, s := range f.Settings {
+		if s.Is == instruments.Delay && s.Centre == nil {
+			missing = append(missing, fmt.Sprintf("the delay %s has no centre in the bench file: pairs are taken as centred wherever it stands", s.Name))
+		}
+	}
+	return o, missing
+}
+
+// outlooked is the model of what is expected.
+func (f *File) outlooked() (*source.Model, error) {
+	l := f.outlook
+	l.once.Do(func() {
+		if f.Optics == nil {
+			l.err = errors.New("a bench without optics; want the blocks \"optics\" and \"arms\"")
+			return
+		}
+		o, missing := f.expectation()
+		if l.model, l.err = source.New(o); l.err == nil {
+			l.warnings = append(missing, l.model.Warnings()...)
+		}
+	})
+	return l.model, l.err
+}
+
+// noEmission says why there is none at a tilt; empty: there is.
+func (f *File) noEmission(tilt unit.Angle) string {
+	l := f.outlook
+	l.mu.Lock()
+	defer l.mu.Unlock()
+	why, known := l.empty[tilt]
+	if !known {
+		if f.Optics.Signal.Filter.Centre > 0 {
+			if _, err := f.emission(signalArm, tilt.Degrees()); err != nil {
+				why = err.Error()
+			}
+		}
+		if l.empty == nil || len(l.empty) > 10_000 {
+			l.empty = map[unit.Angle]string{}
+		}
+		l.empty[tilt] = why
+	}
+	return why
+}
+
+// expect is what the declared source gives at a place.
+func (f *File) expect(axes []scan.AxisTarget, settings []scan.SettingTarget) (scan.Expected, error) {
+	m, err := f.outlooked()
+	if err != nil {
+		return scan.Expected{}, err
+	}
+	for _, t := range axes {
+		if !slices.ContainsFunc(f.Axes, func(a Axis) bool { return a.Name == t.Axis }) {
+			return scan.Expected{}, fmt.Errorf("no axis %q on this bench; want one of its own", t.Axis)
+		}
+	}
+	for _, t := range settings {
+		if !slices.ContainsFunc(f.Settings, func(s Setting) bool { return s.Name == t.Setting }) {
+			return scan.Expected{}, fmt.Errorf("no setting %q on this bench; want one of its own", t.Setting)
+		}
+	}
+	p := f.pose(axes, settings)
+	for i, arm := range []Arm{f.Optics.Signal, f.Optics.Idler} {
+		for _, d := range f.Detectors {
+			if d.Name == arm.Detector {
+				p.RoomHz[i] = d.RoomHz
+			}
+		}
+	}
+	light := f.recorded(m, p)
+	p.PumpOpen = 0
+	dark := f.recorded(m, p)
+	e := scan.Expected{CountsHz: map[drivers.Channel]float64{}, AccidentalsHz: map[drivers.Channel]float64{}, DarkHz: map[drivers.Channel]float64{}, Warnings: slices.Clone(f.outlook.warnings)}
+	if why := f.noEmission(tiltOf(p)); why != "" {
+		e.Warnings = append(e.Warnings, why)
+	}
+	signal, idler := f.channelOf(f.Optics.Signal), f.channelOf(f.Optics.Idler)
+	for _, c := range f.Counter.Channels {
+		switch of, pairs := f.Counter.Coincidences[c]; {
+		case c == f.Counter.Tag:
+		case c == signal:
+			e.CountsHz[c], e.DarkHz[c] = light.SignalHz, dark.SignalHz
+		case c == idler:
+			e.CountsHz[c], e.DarkHz[c] = light.IdlerHz, dark.IdlerHz
+		case pairs:
+			e.CountsHz[c], e.AccidentalsHz[c], e.DarkHz[c] = 0, 0, 0
+			if of == [2]drivers.Channel{signal, idler} || of == [2]drivers.Channel{idler, signal} {
+				e.CountsHz[c], e.AccidentalsHz[c], e.DarkHz[c] = light.TrueHz+light.AccidentalHz, light.AccidentalHz, dark.AccidentalHz
+			}
+		default: // a detector in no arm, or none
+			for _, d := range f.Detectors {
+				if d.Channel == c {
+					e.CountsHz[c], e.DarkHz[c] = d.Dark.Value+d.RoomHz, d.Dark.Value+d.RoomHz
+				}
+			}
+		}
+	}
+	for _, d := range f.Counter.Displaced { // windows that hold accidentals alone
+		w := f.Counter.Window.Value * float64(d.Windows)
+		lit, unlit := e.CountsHz[d.Of[0]]*e.CountsHz[d.Of[1]]*w, e.DarkHz[d.Of[0]]*e.DarkHz[d.Of[1]]*w
+		e.CountsHz[d.Channel], e.AccidentalsHz[d.Channel], e.DarkHz[d.Channel] = lit, lit, unlit
+	}
+	return e, nil
+}
+
+// recorded is what detectors and counter make of a pose. The declared capture holds where the delay is
+// right; off it the window's overlap with the declared jitter is left.
+func (f *File) recorded(m *source.Model, p source.Pose) source.Recorded {
+	r := m.Expected(m.Rates(p))
+	if f.Counter.Capture.Value > 0 {
+		r.TrueHz *= f.Counter.Capture.Value / source.Counter{WindowS: f.Counter.Window.Value, JitterS: f.Counter.Jitter.Value}.WindowCapture()
+	}
+	return r
+}
+
+// channelOf is the channel of an arm's detector.
+func (f *File) channelOf(arm Arm) drivers.Channel {
+	for _, d := range f.Detectors {
+		if d.Name == arm.Detector {
+			return d.Channel
+		}
+	}
+	return ""
+}
+
+// flanks are the bench angles of an arm at which pairs in both arms are half of what they are at
+// most along it, with everything else at the places given.
+func (f *File) flanks(arm drivers.AxisName, top []scan.AxisTarget) (low, high unit.Angle, err error) {
+	m, err := f.outlooked()
+	if err != nil {
+		return 0, 0, err
+	}
+	i := slices.IndexFunc(f.Axes, func(a Axis) bool { return a.Name == arm })
+	if i < 0 || f.Axes[i].Role != signalArm && f.Axes[i].Role != idlerArm {
+		return 0, 0, fmt.Errorf("%s is no arm; want an axis whose role is signal_arm or idler_arm", arm)
+	}
+	p := f.pose(top, nil)
+	begin := p.SignalDeg
+	if f.Axes[i].Role == idlerArm {
+		begin = p.IdlerDeg
+	}
+	if !slices.ContainsFunc(top, func(t scan.AxisTarget) bool { return t.Axis == arm }) {
+		if begin, err = f.emission(f.Axes[i].Role, p.TiltDeg); err != nil {
+			return 0, 0, err
+		}
+	}
+	pairs := func(deg float64) float64 {
+		f.Put(&p, arm, deg)
+		return m.Exact(p).PairsHz
+	}
+	l, h, ok := flanksOf(pairs, begin, f.openDeg()/3)
+	if !ok {
+		return 0, 0, fmt.Errorf("no coincidences about %s at %.4f deg, nor a half of any within reach; want the other arm where the partners go", arm, begin)
+	}
+	// A ten-thousandth of a degree is finer than any arm needs, and the same on every machine.
+	round := func(deg float64) unit.Angle { return unit.Degrees(math.Round(deg*1e4) / 1e4) }
+	return round(l), round(h), nil
+}
+
+// openDeg is the smaller aperture's radius, as an angle: nothing along an arm is much narrower.
+func (f *File) openDeg() float64 {
+	a, b := f.Optics.Signal, f.Optics.Idler
+	return min(a.Radius.Value/a.Distance.Value, b.Radius.Value/b.Distance.Value) * 180 / math.Pi
+}
+
+// flanksOf finds, by steps and then by bisection, where a peak about an angle falls to half of its
+// maximum.
+func flanksOf(rate func(float64) float64, begin, step float64) (low, high float64, ok bool) {
+	const most = 120 // steps to either side
+	at, top := begin, rate(begin)
+	edge := func(side float64) float64 {
+		inner := at
+		for k := 1; k <= most; k++ {
+			x := at + side*step*float64(k)
+			y := rate(x)
+			if y > 1.01*top { // a flat top is not flat to the last digit
+				return math.NaN() // climbing: the maximum is elsewhere
+			}
+			if y < top/2 {
+				outer := x
+				for range 30 {
+					mid := (inner + outer) / 2
+					if rate(mid) < top/2 {
+						outer = mid
+					} else {
+						inner = mid
+					}
+				}
+				return (inner + outer) / 2
+			}
+			inner = x
+		}
+		return math.NaN()
+	}
+	// Uphill to the maximum, in steps and then in ever smaller ones.
+	for h := step; h > step/100; h /= 3 {
+		for range most {
+			up, down := rate(at+h), rate(at-h)
+			if up <= top && down <= top {
+				break
+			}
+			if up > down {
+				at, top = at+h, up
+			} else {
+				at, top = at-h, down
+			}
+		}
+	}
+	if !(top > 0) {
+		return 0, 0, false
+	}
+	low, high = edge(-1), edge(1)
+	return low, high, low < high
+}
