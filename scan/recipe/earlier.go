@@ -41,15 +41,18 @@ func readEarlier(v strict.Value, isAngle bool) *Earlier {
 		want = "delay, with the setting"
 	}
 	sound, given := true, 0
-	for kind, whose := range map[scan.ResultKind]strict.Value{scan.Peak: peak, scan.Zero: zero, scan.Delay: delay} {
-		if !whose.Given() {
+	for _, k := range []struct {
+		kind  scan.ResultKind
+		whose strict.Value
+	}{{scan.Peak, peak}, {scan.Zero, zero}, {scan.Delay, delay}} {
+		if !k.whose.Given() {
 			continue
 		}
 		given++
-		e.Kind, e.whoseAt = kind, whose.Place()
-		name := whose.Token()
-		sound = sound && whose.Good()
-		if kind == scan.Delay {
+		e.Kind, e.whoseAt = k.kind, k.whose.Place()
+		name := k.whose.Token()
+		sound = sound && k.whose.Good()
+		if k.kind == scan.Delay {
 			e.Setting = drivers.DeviceName(name)
 		} else {
 			e.Axis = drivers.AxisName(name)

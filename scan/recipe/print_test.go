@@ -174,10 +174,6 @@ func (d drawer) above(name string) string {
 	return fmt.Sprintf("%d.%d %s", d.int(name, 0, 20), d.int(name+" fraction", 1, 9999), d.one(name+" unit", "deg", "arcmin", "arcsec"))
 }
 
-func (d drawer) duration(name string, low int) string {
-	return fmt.Sprintf("%d.%d %s", d.int(name, low, 20), d.int(name+" tenths", 0, 9), d.one(name+" unit", "s", "min", "s"))
-}
-
 func (d drawer) long(name string) string {
 	return fmt.Sprintf("%d %s", d.int(name, 1, 20), d.one(name+" unit", "min", "h"))
 }
