@@ -2,6 +2,7 @@ package recipe
 
 import (
 	"fmt"
+	"reflect"
 	"strings"
 	"testing"
 	"time"
@@ -188,6 +189,14 @@ guards:
   - {watch: pump_power, within: [45 mW, 0.055 W], otherwise: hold, give_up_after: 30 min}
   - {watch: crystal_temperature, within: [292.15 K, 21.5 Cel]}
   - {watch: pump_power, within: [30 mW, 70 mW], otherwise: stop}
+  - {rate: signal, within: [1 kHz, 80 kHz], otherwise: skip}
+  - {rate: a, within: [1 kHz, 80 kHz]}
+  - {rate: a, within: [10 /s, 80 kHz]}
+  - {dark_rate: idler, within: [0 Hz, 500 Hz]}
+  - {reference_age: 1 h, otherwise: stop}
+dark: {also: [end], dwell: 1 s}
+sweep: [{axis: crystal_tilt, at: 0 deg}, {axis: signal_arm, at: 2 deg}, {axis: idler_arm, at: 2 deg}]
+reference: {axes: [idler_arm], every: 30 min}
 `))
 	if err != nil {
 		t.Fatal(err)
@@ -200,8 +209,37 @@ guards:
 		{Name: "pump_power", Sensor: "pump_power", Low: 45, High: 55, Otherwise: scan.Hold, GiveUpAfter: 30 * time.Minute},
 		{Name: "crystal_temperature", Sensor: "crystal_temperature", Low: 19, High: 21.5, Otherwise: scan.Hold},
 		{Name: "pump_power 2", Sensor: "pump_power", Low: 30, High: 70, Otherwise: scan.Stop},
+		{Name: "rate signal", Rate: "a", Low: 1000, High: 80000, Otherwise: scan.Skip},
+		{Name: "rate a", Rate: "a", Low: 1000, High: 80000, Otherwise: scan.Hold},
+		{Name: "rate a 2", Rate: "a", Low: 10, High: 80000, Otherwise: scan.Hold},
+		{Name: "dark_rate idler", DarkRate: "b", High: 500, Otherwise: scan.Hold},
+		{Name: "reference_age", ReferenceAge: time.Hour, Otherwise: scan.Stop},
 	}
 	if got := fmt.Sprint(p.Guards); got != fmt.Sprint(want) {
 		t.Errorf("got  %s\nwant %s", got, fmt.Sprint(want))
+	}
+}
+
+func TestAWarmUpIsSteadyInShareOrInTheSensorsUnit(t *testing.T) {
+	r, err := Parse("r.yaml", []byte(`title: A
+dwell: 1 s
+schedule: {warm_up: {steady: {pump_power: 0.5 % over 10 min, crystal_temperature: 0.1 K over 90 s}, at_most: 2 h}}
+`))
+	if err != nil {
+		t.Fatal(err)
+	}
+	want := scan.WarmUp{AtMost: 2 * time.Hour, Steady: []scan.Steady{
+		{Sensor: "pump_power", Relative: 0.005, Over: 10 * time.Minute},
+		{Sensor: "crystal_temperature", Absolute: 0.1, Over: 90 * time.Second},
+	}}
+	f := bench()
+	f.Pace = 100 // a warm-up is told in bench time, whatever the clock on the wall says
+	p, err := r.Plan(f)
+	if err != nil || p.Schedule.WarmUp == nil || !reflect.DeepEqual(*p.Schedule.WarmUp, want) {
+		t.Errorf("%+v, %v; want %+v", p.Schedule.WarmUp, err, want)
+	}
+	f.Sensors[0].Unit = "%" // a share of a share is nobody's meaning: half a percent is half a percent
+	if p, err = r.Plan(f); err != nil || p.Schedule.WarmUp.Steady[0].Absolute != 0.5 {
+		t.Errorf("%+v, %v; want half a percent of a sensor in percent as a difference", p.Schedule.WarmUp, err)
 	}
 }
