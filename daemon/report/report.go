@@ -143,7 +143,7 @@ func asked(rows estimate.Rows, file *bench.File, b estimate.Bench, m estimate.Mo
 		if plan.Reference == nil {
 			return estimate.Result{}, &estimate.Refusal{Reasons: []string{"the recipe takes no references; want a key \"reference\""}}
 		}
-		return estimate.Drift(rows, b, estimate.DriftQuestion{ReferenceQuestion: estimate.ReferenceQuestion{Of: *plan.Reference}})
+		return estimate.Drift(rows, b, driftQuestion(rows, file, *plan.Reference))
 	}
 	return estimate.Result{}, fmt.Errorf("a result of kind %q; want one that this program knows", q.Kind)
 }

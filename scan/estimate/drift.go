@@ -60,6 +60,7 @@ func Drift(rows Rows, bench Bench, q DriftQuestion) (Result, error) {
 	if q.Coverage == 0 {
 		q.Coverage = 0.95
 	}
+	q.ReferenceQuestion = q.tabulated()
 	r := newResult(rows, string(scan.Drift))
 	r.Coverage = q.Coverage
 	sets := q.sets(rows, &r)

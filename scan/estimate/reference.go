@@ -72,6 +72,7 @@ type ReferenceVerdict struct {
 //
 // Held by TestReferencesThatDidNotChangeAreSeldomCalledBad and TestChangesAreFound.
 func JudgeReference(now, before []protocol.Reading, bench Bench, q ReferenceQuestion) ReferenceVerdict {
+	q = q.tabulated()
 	a, b := newReferenceSet(before, bench, q), newReferenceSet(now, bench, q)
 	v := ReferenceVerdict{Good: true}
 	if bound := q.Of.Bounds.Singles; bound > 0 {
@@ -267,6 +268,30 @@ func (q ReferenceQuestion) arms() []string {
 		}
 	}
 	return arms
+}
+
+// tabulated asks the model once about each arm, from a width below its low flank to one above the
+// high one: a set's three fits would ask it thousands of times, and it takes milliseconds. An arm
+// that it cannot predict is taken for a Gaussian.
+func (q ReferenceQuestion) tabulated() ReferenceQuestion {
+	all := map[string]func(float64) float64{}
+	for arm, profile := range q.Profile {
+		low, high := math.Inf(1), math.Inf(-1)
+		for _, p := range q.Of.Places {
+			for _, t := range p.Axes {
+				if string(p.Arm) == arm && t.Axis == p.Arm {
+					low, high = math.Min(low, t.Angle.Degrees()), math.Max(high, t.Angle.Degrees())
+				}
+			}
+		}
+		if reach := high - low; reach > 0 {
+			if table, err := tabulate(profile, low-1.2*reach, high+1.2*reach, reach); err == nil {
+				all[arm] = table
+			}
+		}
+	}
+	q.Profile = all
+	return q
 }
 
 // pooled is what a dwell of gateS would count, by both dwells' rates together.

@@ -72,14 +72,21 @@ const (
 	raised           // counts per exposure at the maximum
 )
 
+// predictedSteps is how many steps from flank to flank a predicted profile is asked at, times
+// tablePerStep.
+const predictedSteps = 4
+
 func predictedCentre(three [3]Spot, profile func(float64) float64) (centre, u float64, err error) {
 	low, high := three[0].AngleDeg, three[2].AngleDeg
 	reach := high - low
-	table, err := tabulate(profile, low-reach, high+reach, reach/32)
+	table, err := tabulate(profile, low-reach, high+reach, reach/predictedSteps)
 	if err != nil {
 		return 0, 0, err
 	}
-	top := highest(table, low, high)
+	top := highest(table, low-reach/2, high+reach/2)
+	if top < low-0.49*reach || top > high+0.49*reach {
+		return vertex(three) // the prediction stands elsewhere, and says nothing of the form here
+	}
 	peak := table(top)
 	shape := func(v float64) float64 { return math.Max(table(top+v)/peak, 1e-9) }
 	n := make([]float64, 3)

@@ -66,9 +66,13 @@ func (b refBench) take(r *rand.Rand, set int) []protocol.Reading {
 }
 
 func refQuestion(bounds scan.Bounds) ReferenceQuestion {
+	at := func(signalDeg, idlerDeg float64) []scan.AxisTarget {
+		return []scan.AxisTarget{{Axis: "signal_arm", Angle: unit.Degrees(signalDeg)}, {Axis: "idler_arm", Angle: unit.Degrees(idlerDeg)}}
+	}
 	return ReferenceQuestion{Of: scan.Reference{
-		Places: []scan.ReferencePlace{{On: scan.Top}, {Arm: "signal_arm", On: scan.LowFlank}, {Arm: "signal_arm", On: scan.HighFlank},
-			{Arm: "idler_arm", On: scan.LowFlank}, {Arm: "idler_arm", On: scan.HighFlank}},
+		Places: []scan.ReferencePlace{{On: scan.Top, Axes: at(3.1, 3.1)},
+			{Arm: "signal_arm", On: scan.LowFlank, Axes: at(2.85, 3.1)}, {Arm: "signal_arm", On: scan.HighFlank, Axes: at(3.35, 3.1)},
+			{Arm: "idler_arm", On: scan.LowFlank, Axes: at(3.1, 2.75)}, {Arm: "idler_arm", On: scan.HighFlank, Axes: at(3.1, 3.45)}},
 		Trigger: "signal", UnderTest: "idler", Pairs: "pairs", Bounds: bounds,
 	}}
 }

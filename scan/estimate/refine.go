@@ -22,9 +22,8 @@ type RefineQuestion struct {
 	Allowed func(scan.Point) error
 	Each    time.Duration // bench time that a point takes: dwell, move and the rest
 	Spent   time.Duration // bench time that the refinement took so far
-	// Profile predicts the rate of the channel against the axis (degrees), in any unit, with
-	// everything else as at this point; nil, or a nil function: there is no prediction.
-	Profile func(at scan.Point) func(angleDeg float64) float64
+	// Expect predicts the rate of the channel at a point, in any unit; nil: there is no prediction.
+	Expect func(scan.Point) float64
 }
 
 // Refinement is a decision to add points, or not to.

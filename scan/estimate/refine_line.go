@@ -280,11 +280,18 @@ func (l refineLine) flat() float64 {
 func (l refineLine) fit(q RefineQuestion) (PeakFit, error) {
 	shapes := []PeakShape{GaussianPeak, FlatTop}
 	var predicted func(float64) float64
-	if q.Profile != nil {
-		predicted = q.Profile(l.like[0])
-	}
-	if predicted != nil {
+	if q.Expect != nil {
 		shapes = append(shapes, PredictedPeak)
+		predicted = func(angleDeg float64) float64 {
+			p, ok := l.point(q.Of.Along, unit.Degrees(angleDeg))
+			if !ok { // beyond the line's end, where what follows is not known
+				p = l.like[0]
+				if unit.Degrees(angleDeg) > l.places[0] {
+					p = l.like[len(l.like)-1]
+				}
+			}
+			return q.Expect(p)
+		}
 	}
 	var best PeakFit
 	var failed error
