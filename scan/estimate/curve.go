@@ -329,8 +329,8 @@ func (c *comparison) fitPlace(g group, shiftDeg float64) (placeFit, error) {
 		return p, errors.New("no peak is decided to be there: its net counts are below the decision threshold")
 	}
 	p.offset, p.u, p.peak = p.shape.Fit.Params[centreParam]+p.predictedAtShift, p.shape.Fit.U(centreParam), p.shape.middleDeg()
-	if !(p.u > 0) {
-		return p, errors.New("the profile does not hold its angle: its uncertainty came out as nothing")
+	if fwhm, _ := p.shape.FWHMDeg(); !(p.u > 0 && p.u < fwhm/2) {
+		return p, fmt.Errorf("its angle is held to ± %.2g deg only, with a width of %.2g deg: too few counts, or none of the light", p.u, fwhm)
 	}
 	return p, nil
 }

@@ -5,6 +5,8 @@ import (
 	"math"
 	"strings"
 
+	"gonum.org/v1/gonum/stat/distuv"
+
 	"gemel/protocol"
 	"gemel/protocol/unit"
 )
@@ -34,9 +36,12 @@ type DelayProfile struct {
 	Declared   bool     `json:"operating_delay_declared"`      // else it is the centre
 	Capture    float64  `json:"window_capture"`                // share of true coincidences inside the window there
 	CaptureU   float64  `json:"window_capture_standard_uncertainty"`
-	PairsHz    float64  `json:"pairs_per_s"`       // in the middle of the window
-	FloorHz    float64  `json:"accidentals_per_s"` // the flat floor
-	FloorU     float64  `json:"accidentals_standard_uncertainty_per_s"`
+	// CaptureIn is the coverage interval: what is lost, 1 - capture, is known to a factor rather than
+	// to a difference, so it is not symmetric.
+	CaptureIn Interval `json:"window_capture_interval"`
+	PairsHz   float64  `json:"pairs_per_s"`       // in the middle of the window
+	FloorHz   float64  `json:"accidentals_per_s"` // the flat floor
+	FloorU    float64  `json:"accidentals_standard_uncertainty_per_s"`
 	// ByFloorS is the window that the floor and the singles' rates give, null where none was seen.
 	ByFloorS *float64 `json:"full_width_by_accidentals_s"`
 	ByFloorU *float64 `json:"full_width_by_accidentals_standard_uncertainty_s"`
@@ -77,46 +82,57 @@ func Delay(rows Rows, bench Bench, q DelayQuestion) (Result, error) {
 	if err := no.err(); err != nil {
 		return Result{}, err
 	}
+	// Where no reading lies on an edge, the likelihood is flat between the two beside it, and nothing
+	// holds the jitter.
 	fit, err := FitPeak(scan.data, FlatTop, nil)
+	sharp := err != nil || fit.Fit.Bounded[edgeParam] || fit.Fit.Params[edgeParam] < scan.pitch()/4
+	if sharp {
+		fit, err = fitPeak(scan.data, FlatTop, nil, scan.pitch()/4)
+	}
 	if err != nil {
-		no.addf("%v", err)
+		no.addf("%v; want a sweep with readings on both edges that ends on the floor beside them", err)
 		return Result{}, no
 	}
 	p := fit.Fit.Params
-	centre, width, edge := p[centreParam], p[widthParam], p[edgeParam]
+	centre, width := p[centreParam], p[widthParam]
 	low, high := fit.data[0].AngleDeg, fit.data[len(fit.data)-1].AngleDeg
 	if centre-width/2 < low || centre+width/2 > high || fit.Fit.Bounded[centreParam] || fit.Fit.Bounded[widthParam] {
 		no.addf("the window came out from %.4g to %.4g ns in a sweep from %.4g to %.4g ns; want a sweep that ends on the floor beside both edges", centre-width/2, centre+width/2, low, high)
 		return Result{}, no
 	}
-	// Where no reading lies on an edge, the likelihood is flat between the two beside it.
-	step := scan.step(centre-width/2, centre+width/2)
-	sharp := fit.Fit.Bounded[edgeParam] || edge < step/4
-	coarse := 0.0
+	inputs := []Input{{Quantity: "fit of the window's profile", Symbol: "t_fit", Unit: scan.unit, Estimate: centre / scan.perNano, U: fit.Fit.U(centreParam) / scan.perNano, Evaluation: TypeA, Distribution: Normal}}
+	widthU := fit.Fit.U(widthParam)
 	if sharp {
-		coarse = step / 2
-		r.Warnings = append(r.Warnings, fmt.Sprintf("the edges are sharper than the step of %.3g ns beside them: centre and width carry the step, and the jitter is not measured; a finer sweep over the edges would tell", step))
+		// Each edge is somewhere between two readings, and no more is known of it.
+		low, lowHalf := scan.gap(centre - width/2)
+		high, highHalf := scan.gap(centre + width/2)
+		fit.Fit.Params[centreParam], fit.Fit.Params[widthParam] = (low+high)/2, high-low
+		widthU = math.Hypot(Rectangular.U(lowHalf), Rectangular.U(highHalf))
+		inputs = []Input{
+			{Quantity: "gap between readings that the lower edge lies in", Symbol: "t_low", Unit: scan.unit, Estimate: low / scan.perNano, U: Rectangular.U(lowHalf) / scan.perNano, Evaluation: TypeB, Distribution: Rectangular},
+			{Quantity: "gap between readings that the upper edge lies in", Symbol: "t_high", Unit: scan.unit, Estimate: high / scan.perNano, U: Rectangular.U(highHalf) / scan.perNano, Evaluation: TypeB, Distribution: Rectangular},
+		}
+		r.Warnings = append(r.Warnings, fmt.Sprintf("the edges are sharper than the step of %.3g ns beside them: centre and width are known to that step alone, and the jitter is not measured; a finer sweep over the edges would tell", 2*math.Max(lowHalf, highHalf)))
 	}
-	b, err := Propagate(func(x []float64) float64 { return x[0] + (x[1]+x[2])/2 }, []Input{
-		{Quantity: "fit of the window's profile", Symbol: "t_fit", Unit: scan.unit, Estimate: centre / scan.perNano, U: fit.Fit.U(centreParam) / scan.perNano, Evaluation: TypeA, Distribution: Normal},
-		{Quantity: "step of the sweep at the lower edge", Symbol: "t_low", Unit: scan.unit, U: Rectangular.U(coarse) / scan.perNano, Evaluation: TypeB, Distribution: Rectangular},
-		{Quantity: "step of the sweep at the upper edge", Symbol: "t_high", Unit: scan.unit, U: Rectangular.U(coarse) / scan.perNano, Evaluation: TypeB, Distribution: Rectangular},
-	}, nil)
+	b, err := Propagate(func(x []float64) float64 {
+		sum := 0.0
+		for _, v := range x {
+			sum += v / float64(len(x))
+		}
+		return sum
+	}, inputs, nil)
 	if err != nil {
 		no.addf("%v", err)
 		return Result{}, no
 	}
-	if !sharp {
-		b.Rows = b.Rows[:1]
-	}
 	r.Unit = scan.unit
 	r.state(b)
-	r.Delay = scan.profile(fit, b.U*scan.perNano, math.Hypot(fit.Fit.U(widthParam), math.Sqrt2*Rectangular.U(coarse)), sharp, q)
+	r.Delay = scan.profile(fit, b.U*scan.perNano, widthU, sharp, q)
 	r.Delay.judge(&r, bench.Counter, q.Channel)
 	g := fit.Goodness(q.Trials, q.Seed)
 	r.noteValue("Cash statistic", g.Statistic, "1", fmt.Sprintf("%d degrees of freedom; %d simulated data sets gave %.4g on average", fit.Fit.Freedom, g.Trials, g.Mean))
 	r.noteValue("goodness of fit", g.P, "1", "share of simulated data sets that fit no better")
-	if g.P < onePercent {
+	if g.P < onePercent && !sharp {
 		r.Warnings = append(r.Warnings, fmt.Sprintf("a box with Gaussian edges does not describe the readings (p = %.2g): centre, width and capture are those of the wrong shape", g.P))
 	}
 	r.Residuals = fit.Residuals()
@@ -183,21 +199,27 @@ func settingOf(r protocol.Reading, name string) (value float64, unit string, ok 
 	return 0, "", false
 }
 
-// step is the wider of the two gaps between readings in which the edges lie.
-func (d delayed) step(edges ...float64) float64 {
-	wide := 0.0
-	for _, e := range edges {
-		below, above := math.Inf(-1), math.Inf(1)
-		for _, s := range d.data {
-			if s.AngleDeg <= e {
-				below = math.Max(below, s.AngleDeg)
-			} else {
-				above = math.Min(above, s.AngleDeg)
-			}
-		}
-		wide = math.Max(wide, above-below)
+// pitch is the mean gap between places, 0 where there is one.
+func (d delayed) pitch() float64 {
+	low, high := math.Inf(1), math.Inf(-1)
+	places := map[float64]bool{}
+	for _, s := range d.data {
+		low, high, places[s.AngleDeg] = math.Min(low, s.AngleDeg), math.Max(high, s.AngleDeg), true
 	}
-	return wide
+	return (high - low) / math.Max(float64(len(places)-1), 1)
+}
+
+// gap is the middle and the half-width of the gap between readings that a place lies in.
+func (d delayed) gap(at float64) (middle, half float64) {
+	below, above := math.Inf(-1), math.Inf(1)
+	for _, s := range d.data {
+		if s.AngleDeg <= at {
+			below = math.Max(below, s.AngleDeg)
+		} else {
+			above = math.Min(above, s.AngleDeg)
+		}
+	}
+	return (below + above) / 2, (above - below) / 2
 }
 
 func (d delayed) profile(fit PeakFit, centreU, widthU float64, sharp bool, q DelayQuestion) *DelayProfile {
@@ -218,13 +240,18 @@ func (d delayed) profile(fit PeakFit, centreU, widthU float64, sharp bool, q Del
 		JitterS: p[edgeParam] * nano, OperatingS: at * nano, Declared: q.Operating != nil, Capture: capture(p), CaptureU: fit.carry(capture),
 		PairsHz: top, FloorHz: p[groundParam], FloorU: fit.Fit.U(groundParam)}
 	if sharp {
-		// Anything up to a jitter of the step's size is as good.
-		soft := append([]float64(nil), p...)
-		soft[edgeParam] = math.Max(p[edgeParam], d.step(p[centreParam]-p[widthParam]/2, p[centreParam]+p[widthParam]/2)/2)
-		w.CaptureU = math.Hypot(w.CaptureU, Rectangular.U(math.Abs(w.Capture-capture(soft))))
+		// The jitter may be anything from none to what was held.
+		none := append([]float64(nil), p...)
+		none[edgeParam] /= 100
+		w.CaptureU = math.Hypot(w.CaptureU, Rectangular.U(math.Abs(w.Capture-capture(none))))
 	} else {
 		u := fit.Fit.U(edgeParam) * nano
 		w.JitterU = &u
+	}
+	w.CaptureIn = Interval{w.Capture - 2*w.CaptureU, 1}
+	if lost := 1 - w.Capture; lost > 0 && w.CaptureU > 0 {
+		factor := math.Exp(distuv.UnitNormal.Quantile((1+q.Coverage)/2) * w.CaptureU / lost)
+		w.CaptureIn = Interval{math.Max(0, 1-lost*factor), 1 - lost/factor}
 	}
 	if d.chances > 0 && !fit.Fit.Bounded[groundParam] {
 		by, u := w.FloorHz*d.exposure/d.chances, w.FloorU*d.exposure/d.chances
@@ -271,7 +298,7 @@ func (w *DelayProfile) text(b *strings.Builder) {
 	if w.Declared {
 		where = fmt.Sprintf("at the operating delay of %.5g ns", w.OperatingS/nano)
 	}
-	line("true pairs inside the window", "%.5g ± %.2g, %s", w.Capture, w.CaptureU, where)
+	line("true pairs inside the window", "%.5g ± %.2g (interval %.5g to %.5g), %s", w.Capture, w.CaptureU, w.CaptureIn.Low, w.CaptureIn.High, where)
 	line("pairs in the middle", "%.5g /s", w.PairsHz)
 	line("floor of accidentals", "%.4g ± %.2g /s", w.FloorHz, w.FloorU)
 	if w.ByFloorS != nil {

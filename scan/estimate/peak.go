@@ -67,12 +67,19 @@ type PeakFit struct {
 	profile func(float64) float64
 	topDeg  float64 // where the predicted profile is highest
 	pr      problem
+
+	heldEdge float64 // of a flat top; 0: fitted
 }
 
 // FitPeak fits a profile to counts by their Poisson likelihood (Cash, Astrophys. J. 228, 939
 // (1979), in the form with the terms of n, so that it can be compared between data sets). predicted
 // is needed by PredictedPeak alone.
 func FitPeak(data []Spot, shape PeakShape, predicted func(angleDeg float64) float64) (PeakFit, error) {
+	return fitPeak(data, shape, predicted, 0)
+}
+
+// fitPeak is FitPeak, with a flat top's edges held where heldEdge is above 0.
+func fitPeak(data []Spot, shape PeakShape, predicted func(angleDeg float64) float64, heldEdge float64) (PeakFit, error) {
 	names, ok := peakNames[shape]
 	if !ok {
 		return PeakFit{}, fmt.Errorf("shape %q; want gaussian, sinc2, flat_top, two_peaks or predicted", shape)
@@ -80,7 +87,7 @@ func FitPeak(data []Spot, shape PeakShape, predicted func(angleDeg float64) floa
 	if shape == PredictedPeak && predicted == nil {
 		return PeakFit{}, fmt.Errorf("shape predicted without a model; want one that predicts the profile")
 	}
-	f := PeakFit{Shape: shape, Names: names, profile: predicted}
+	f := PeakFit{Shape: shape, Names: names, profile: predicted, heldEdge: heldEdge}
 	total := 0.0
 	for _, s := range data {
 		if s.Exposure > 0 {
@@ -245,6 +252,9 @@ func (f *PeakFit) problem(start []float64, low, high float64) problem {
 	switch f.Shape {
 	case FlatTop:
 		lo[edgeParam], hi[edgeParam] = finest, span/2
+		if f.heldEdge > 0 {
+			lo[edgeParam], hi[edgeParam] = f.heldEdge, f.heldEdge
+		}
 	case TwoPeaks:
 		lo[centre2Param], hi[centre2Param] = low-span/2, high+span/2
 		lo[width2Param], hi[width2Param] = finest, 4*span
