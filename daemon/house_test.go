@@ -45,6 +45,7 @@ var arrows = map[string][]string{
 	"scan/route":    {"protocol", "protocol/unit", "drivers", "scan", "sim/crystal", "sim/phasematch"},
 	"scan/estimate": {"protocol", "protocol/unit", "drivers", "scan", "sim/crystal", "sim/phasematch", "sim/source"},
 	"scan/engine":   {"protocol", "protocol/unit", "drivers", "scan", "scan/route"},
+	"scan/forecast": {"protocol", "protocol/unit", "drivers", "scan", "scan/route", "scan/engine", "scan/estimate", "sim/crystal", "sim/phasematch", "sim/source"},
 
 	"daemon":           {},
 	"daemon/crew":      {},
@@ -53,7 +54,7 @@ var arrows = map[string][]string{
 	"daemon/courier":   {"protocol", "protocol/client", "daemon/broker"},
 	"daemon/remote":    {"protocol", "protocol/unit", "protocol/client", "daemon/broker", "daemon/courier"},
 	"daemon/keeper":    {"protocol", "protocol/unit", "protocol/strict", "drivers", "scan", "scan/engine", "daemon/logbook"},
-	"daemon/report":    {"protocol", "protocol/unit", "protocol/strict", "drivers", "scan", "scan/recipe", "scan/route", "scan/engine", "scan/estimate", "sim/crystal", "sim/phasematch", "sim/source", "daemon/bench", "daemon/logbook"},
+	"daemon/report":    {"protocol", "protocol/unit", "protocol/strict", "drivers", "scan", "scan/recipe", "scan/route", "scan/engine", "scan/estimate", "scan/forecast", "sim/crystal", "sim/phasematch", "sim/source", "daemon/bench", "daemon/logbook"},
 	"daemon/bench":     {"*"},
 	"daemon/nighttest": {"*"},
 	"daemon/gemel":     {"*"},

@@ -27,23 +27,24 @@ const (
 )
 
 type commands struct {
-	Run     runCommand     `cmd:"" help:"Run one recipe from start to result, in this process."`
-	Serve   serveCommand   `cmd:"" help:"Serve a bench: runs are started and stopped by other programs."`
-	Check   checkCommand   `cmd:"" help:"Check a bench file, a recipe, a data folder; touch nothing."`
-	Start   startCommand   `cmd:"" help:"Ask a serving daemon to run a recipe."`
-	Stop    stopCommand    `cmd:"" help:"Stop a run for ever; the bench comes to rest first."`
-	Hold    holdCommand    `cmd:"" help:"Make a run wait, with the bench at rest."`
-	Resume  resumeCommand  `cmd:"" help:"Let a run go on that a person, a trouble or a restart holds."`
-	Status  statusCommand  `cmd:"" help:"Say how the bench is."`
-	Queue   queueCommand   `cmd:"" help:"List the runs that wait, reorder them, withdraw one."`
-	Follow  followCommand  `cmd:"" help:"Print what happens, as it happens."`
-	Arm     armCommand     `cmd:"" help:"Allow remote starts on this bench for a while."`
-	Hand    handCommand    `cmd:"" help:"Take the bench in hand: live rates, one axis, shutters, settings, lines."`
-	Note    noteCommand    `cmd:"" help:"Write a note into the logbook."`
-	Export  exportCommand  `cmd:"" help:"Write a run's readings as CSV."`
-	Report  reportCommand  `cmd:"" help:"Work out a run's result from the logbook alone."`
-	Predict predictCommand `cmd:"" help:"Work out where the photons of a pair go, how wide, and how it moves."`
-	Sim     simCommand     `cmd:"" help:"Offer a bench's virtual instruments alone, to any program."`
+	Run      runCommand      `cmd:"" help:"Run one recipe from start to result, in this process."`
+	Serve    serveCommand    `cmd:"" help:"Serve a bench: runs are started and stopped by other programs."`
+	Check    checkCommand    `cmd:"" help:"Check a bench file, a recipe, a data folder; touch nothing."`
+	Start    startCommand    `cmd:"" help:"Ask a serving daemon to run a recipe."`
+	Stop     stopCommand     `cmd:"" help:"Stop a run for ever; the bench comes to rest first."`
+	Hold     holdCommand     `cmd:"" help:"Make a run wait, with the bench at rest."`
+	Resume   resumeCommand   `cmd:"" help:"Let a run go on that a person, a trouble or a restart holds."`
+	Status   statusCommand   `cmd:"" help:"Say how the bench is."`
+	Queue    queueCommand    `cmd:"" help:"List the runs that wait, reorder them, withdraw one."`
+	Follow   followCommand   `cmd:"" help:"Print what happens, as it happens."`
+	Arm      armCommand      `cmd:"" help:"Allow remote starts on this bench for a while."`
+	Hand     handCommand     `cmd:"" help:"Take the bench in hand: live rates, one axis, shutters, settings, lines."`
+	Note     noteCommand     `cmd:"" help:"Write a note into the logbook."`
+	Export   exportCommand   `cmd:"" help:"Write a run's readings as CSV."`
+	Report   reportCommand   `cmd:"" help:"Work out a run's result from the logbook alone."`
+	Forecast forecastCommand `cmd:"" help:"Say what a recipe will do, how long it takes and what it will be worth; move nothing."`
+	Predict  predictCommand  `cmd:"" help:"Work out where the photons of a pair go, how wide, and how it moves."`
+	Sim      simCommand      `cmd:"" help:"Offer a bench's virtual instruments alone, to any program."`
 
 	Version kong.VersionFlag `help:"Print the version and end."`
 }

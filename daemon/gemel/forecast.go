@@ -1,0 +1,78 @@
+package main
+
+import (
+	"context"
+	"io"
+	"time"
+
+	"gemel/daemon/bench"
+	"gemel/daemon/report"
+	"gemel/scan/forecast"
+	"gemel/scan/recipe"
+)
+
+type forecastCommand struct {
+	Bench  string `required:"" placeholder:"FILE" help:"Bench file."`
+	Recipe string `required:"" placeholder:"FILE" help:"Recipe file."`
+	Aim    string `placeholder:"U" help:"Standard uncertainty that is wanted, such as \"0.5 %\" or \"0.01 deg\": says the dwell that each point needs."`
+	From   string `placeholder:"RUN" help:"Take rates and overheads from an earlier run instead of the model."`
+	Data   string `placeholder:"DIR" help:"Data folder of that run, and of earlier results (the bench file's, else gemel-data)."`
+	Plot   string `placeholder:"FILE.svg" help:"Draw the night: angle across, time downward."`
+	JSON   bool   `name:"json" help:"Print the forecast as one JSON object, every point in it."`
+}
+
+func (forecastCommand) Help() string {
+	return `What will this recipe do, how long does it take, and what will it be worth? Nothing moves, and no instrument is needed.
+
+Examples:
+  gemel forecast --bench configs/demo-bench.yaml --recipe configs/efficiency-recipe.yaml
+  gemel forecast --bench configs/demo-bench.yaml --recipe configs/efficiency-recipe.yaml --aim "0.5 %"
+  gemel forecast --bench configs/demo-bench.yaml --recipe configs/demo-recipe.yaml --plot night.svg
+
+It takes for granted that every reading succeeds at once, that no guard breaks and that the bench is as its file says. Warnings do not change the exit code.`
+}
+
+func (c *forecastCommand) Run(ctx context.Context, con *console) error {
+	file, err := loadBench(c.Bench)
+	if err != nil {
+		return err
+	}
+	r, err := recipe.Load(c.Recipe)
+	if err != nil {
+		return err
+	}
+	o := report.Foreseen{Begins: time.Now()}
+	if c.Aim != "" {
+		aim, err := forecast.ParseAim(c.Aim)
+		if err != nil {
+			return errUse{err}
+		}
+		o.Aim = &aim
+	}
+	f, err := c.work(ctx, file, r, o)
+	if err != nil {
+		return err
+	}
+	if c.Plot != "" {
+		if err := writePicture(c.Plot, f.Draw); err != nil {
+			return err
+		}
+	}
+	if c.JSON {
+		out := f.Forecast
+		out.PointList = f.List()
+		return con.json(out)
+	}
+	_, err = io.WriteString(con.out, f.Text())
+	return err
+}
+
+func (c *forecastCommand) work(ctx context.Context, file *bench.File, r *recipe.Recipe, o report.Foreseen) (*forecast.Forecast, error) {
+	facts := file.Facts()
+	facts.AcceptedAt = o.Begins.In(time.Local)
+	plan, err := r.Plan(facts)
+	if err != nil {
+		return nil, err
+	}
+	return report.Forecast(file, plan, o)
+}

@@ -1,0 +1,453 @@
+package forecast
+
+import (
+	"fmt"
+	"math"
+	"slices"
+	"sort"
+	"strings"
+	"time"
+
+	"gemel/drivers"
+	"gemel/protocol/unit"
+	"gemel/scan"
+	"gemel/scan/route"
+)
+
+// Bounds of what is warned of.
+const (
+	mostLoad        = 0.1  // count rate times dead time
+	mostAccidental  = 0.10 // share of the coincidences where there are most
+	mostInterpolate = 0.01 // relative error between the places that were evaluated
+	mostTold        = 5    // findings of one kind that are told one by one
+)
+
+// Band is what the arms' filters pass, vacuum wavelengths.
+type Band struct {
+	PumpNm            float64
+	Channels          [2]drivers.Channel // of the signal's and the idler's detector
+	Names             [2]string
+	CentreNm, WidthNm [2]float64 // width 0: no filter
+}
+
+func (f *Forecast) warnf(format string, args ...any) {
+	f.Warnings = append(f.Warnings, fmt.Sprintf(format, args...))
+}
+
+// warn looks at everything that cannot work, or will not be worth its time.
+func (f *Forecast) warn(a Ask) error {
+	if err := f.warnOfWays(a); err != nil {
+		return err
+	}
+	f.warnOfTime(a)
+	f.warnOfEmpty()
+	for _, d := range a.Bench.Detectors {
+		if d.ProtectBy == "" {
+			f.warnf("the detector %s cannot be protected: nothing closes before it", d.Name)
+		}
+	}
+	f.warnOfBand(a.Band)
+	for _, e := range a.Plan.Open() {
+		name := string(e.Ask.Axis)
+		if name == "" {
+			name = string(e.Ask.Setting)
+		}
+		f.warnf("provisional: no %s of %s from %q yet (%s); points stand where the model or the park angle puts them", e.Ask.Kind, name, e.Ask.From, orElse(e.Missing, "no such result"))
+	}
+	if f.rates == nil {
+		if a.Expect == nil {
+			f.warnf("no counts are forecast: the bench file does not describe the optics")
+		}
+		return nil
+	}
+	f.warnOfRates(a)
+	return nil
+}
+
+func orElse(text, otherwise string) string {
+	if text != "" {
+		return text
+	}
+	return otherwise
+}
+
+// warnOfWays is about limits and keep-outs, at the points and on the ways between them.
+func (f *Forecast) warnOfWays(a Ask) error {
+	at := map[drivers.AxisName]unit.Angle{}
+	for i, x := range a.Bench.Axes {
+		at[x.Name] = a.Bench.Start[i]
+	}
+	findings, err := route.CheckPlan(a.Bench.Axes, a.Bench.KeepOuts, a.Plan, at)
+	if err != nil {
+		return err
+	}
+	dark, told := 0, 0
+	for _, x := range findings {
+		if x.PumpClosed && a.Bench.Pump != nil {
+			dark++
+			continue
+		}
+		told++
+		if told > mostTold {
+			continue
+		}
+		switch {
+		case x.Point < 0:
+			f.warnf("%v", x.Err)
+		case x.From >= 0 && x.From != x.Point:
+			f.warnf("point %d, on the way from point %d: %v", x.Point, x.From, x.Err)
+		default:
+			f.warnf("point %d: %v", x.Point, x.Err)
+		}
+	}
+	if told > mostTold {
+		more := fmt.Sprint(told - mostTold)
+		if len(findings) == route.MostFindings {
+			more += " or more"
+		}
+		f.warnf("and %s points more like that", more)
+	}
+	if dark > 0 {
+		f.warnf("%d ways are free only with the pump shutter closed: it is closed for them", dark)
+	}
+	return nil
+}
+
+func (f *Forecast) warnOfTime(a Ask) {
+	s := a.Plan.Schedule
+	if f.LeftOut > 0 {
+		f.warnf("cannot finish: %d of %d visits are left out, because they would not be over by %s", f.LeftOut, f.LeftOut+f.Visits, f.clock(s.FinishBy))
+	} else if !s.FinishBy.IsZero() && f.FinishesAt.After(s.FinishBy) {
+		f.warnf("cannot finish: closing readings go on until %s, after the end at %s", f.clock(f.FinishesAt.Time), f.clock(s.FinishBy))
+	}
+	if w := s.WarmUp; w != nil {
+		f.warnf("the warm-up is taken at its shortest; it may last %s", span(w.AtMost))
+	}
+	if r := a.Plan.Refine; r != nil && a.Refine == nil {
+		f.warnf("the refinement is not foreseen: it may add %d points", r.AtMost)
+	}
+	if h := a.Plan.Dwell.Heralds; h > 0 && a.Expect == nil {
+		f.warnf("dwells end on counts of %s, which are not known here: each is taken at its longest, %s", a.Plan.Dwell.Trigger, span(a.Plan.Dwell.Time))
+	}
+}
+
+func (f *Forecast) warnOfEmpty() {
+	why := map[string]int{}
+	first := map[string]int{}
+	for i, p := range f.plan.Points {
+		if p.Empty != "" {
+			if why[p.Empty] == 0 {
+				first[p.Empty] = i
+			}
+			why[p.Empty]++
+		}
+	}
+	reasons := make([]string, 0, len(why))
+	for r := range why {
+		reasons = append(reasons, r)
+	}
+	sort.Slice(reasons, func(i, j int) bool { return first[reasons[i]] < first[reasons[j]] })
+	for i, r := range reasons {
+		if i == mostTold {
+			f.warnf("and points without emission for %d reasons more", len(reasons)-mostTold)
+			break
+		}
+		f.warnf("no emission at %s, from point %d on: %s", plural(why[r], "point"), first[r], r)
+	}
+}
+
+// warnOfBand holds the band that each filter heralds against the other filter: 1/l_i = 1/l_p - 1/l_s at
+// both edges.
+func (f *Forecast) warnOfBand(b *Band) {
+	if b == nil || b.PumpNm <= 0 || b.WidthNm[0] <= 0 || b.WidthNm[1] <= 0 {
+		return
+	}
+	partner := func(nm float64) float64 { return 1 / (1/b.PumpNm - 1/nm) }
+	look := func(trigger int) {
+		other := 1 - trigger
+		p, q := partner(b.CentreNm[trigger]-b.WidthNm[trigger]/2), partner(b.CentreNm[trigger]+b.WidthNm[trigger]/2)
+		low, high := math.Min(p, q), math.Max(p, q)
+		from, to := b.CentreNm[other]-b.WidthNm[other]/2, b.CentreNm[other]+b.WidthNm[other]/2
+		if low < from-1e-9 || high > to+1e-9 {
+			f.warnf("the filter of %s passes %.2f to %.2f nm, the band that %s heralds is %.2f to %.2f nm: partners are lost", b.Names[other], from, to, b.Names[trigger], low, high)
+		}
+	}
+	for _, r := range f.plan.Results {
+		if r.Kind != scan.Efficiency {
+			continue
+		}
+		for i := range 2 {
+			if r.Trigger == b.Channels[i] {
+				look(i)
+			}
+		}
+		return
+	}
+	// Without a trigger the wider one must take all that the narrower one heralds.
+	if b.WidthNm[0] <= b.WidthNm[1] {
+		look(0)
+	} else {
+		look(1)
+	}
+}
+
+// worst keeps the largest of something and where it is.
+type worst struct {
+	value float64
+	point int
+	many  int
+}
+
+func (w *worst) see(value, bound float64, point int) {
+	if value > w.value {
+		w.value, w.point = value, point
+	}
+	if value > bound {
+		w.many++
+	}
+}
+
+// warnOfRates is about what the detectors and the counter see.
+func (f *Forecast) warnOfRates(a Ask) {
+	r := f.rates
+	for _, w := range r.warnings {
+		f.warnf("%s", w)
+	}
+	if r.failed != nil {
+		f.warnf("no rates at point %d: %v", r.failedAt, r.failed)
+	}
+	if r.error > mostInterpolate {
+		f.warnf("rates between the %d places that were worked out differ from the model by up to %s: a sweep with fewer points would show more", r.evaluated, share(r.error))
+	}
+	ns := len(f.singles)
+	trip, floor, load := make([]worst, len(a.Bench.Detectors)), make([]worst, len(a.Bench.Detectors)), make([]worst, len(a.Bench.Detectors))
+	highest := make([]worst, len(f.channels()))
+	brightest := make([]worst, len(f.pairs))
+	under := worst{}
+	column := make([]int, len(a.Bench.Detectors))
+	for d, x := range a.Bench.Detectors {
+		column[d] = slices.Index(f.singles, x.Channel)
+		floor[d].value = math.Inf(-1)
+	}
+	trigger := slices.Index(f.channels(), a.Plan.Dwell.Trigger)
+	got := make(row, len(r.channels))
+	longest := a.Plan.Dwell.Time.Seconds()
+	accidental := make([]float64, len(f.pairs))
+	for i, p := range a.Plan.Points {
+		if p.Empty != "" {
+			continue
+		}
+		r.into(i, got)
+		if math.IsNaN(got[0]) {
+			continue
+		}
+		for d, x := range a.Bench.Detectors {
+			if column[d] < 0 {
+				continue
+			}
+			hz := got[column[d]]
+			if x.TripHz > 0 {
+				trip[d].see(hz, x.TripHz, i)
+			}
+			if x.FloorHz > 0 {
+				floor[d].see(-hz, -x.FloorHz/2, i)
+			}
+			load[d].see(hz*x.DeadTimeS, mostLoad, i)
+		}
+		for k := range highest {
+			highest[k].see(got[k], math.Inf(1), i)
+		}
+		for k := range f.pairs {
+			if got[ns+k] > brightest[k].value {
+				accidental[k] = got[ns+len(f.pairs)+k] / got[ns+k]
+			}
+			brightest[k].see(got[ns+k], math.Inf(1), i)
+		}
+		if h := a.Plan.Dwell.Heralds; h > 0 && trigger >= 0 {
+			under.see(float64(h)-got[trigger]*longest, 0, i)
+		}
+	}
+	for d, x := range a.Bench.Detectors {
+		if trip[d].many > 0 {
+			f.warnf("%s would count %.3g /s at point %d, above its trip rate of %.3g /s; so at %s", x.Name, trip[d].value, trip[d].point, x.TripHz, plural(trip[d].many, "point"))
+		}
+		if floor[d].many > 0 {
+			f.warnf("%s would count %.3g /s at point %d, below half of its floor of %.3g /s, and be taken for latched; so at %s", x.Name, -floor[d].value, floor[d].point, x.FloorHz, plural(floor[d].many, "point"))
+		}
+		if load[d].many > 0 {
+			f.warnf("count rate times dead time of %s is %.3f at point %d, above %.1f: its correction will matter; so at %s", x.Name, load[d].value, load[d].point, mostLoad, plural(load[d].many, "point"))
+		}
+	}
+	f.warnOfOverflow(a, highest)
+	for k, c := range f.pairs {
+		if accidental[k] > mostAccidental {
+			f.warnf("%s of the coincidences on %s are accidental at point %d, where there are most: less pump power or a shorter window would help", share(accidental[k]), c, brightest[k].point)
+		}
+	}
+	if under.many > 0 {
+		f.warnf("%d counts of %s are not reached within %s at %s, by %.3g at most (point %d): these dwells last their longest", a.Plan.Dwell.Heralds, a.Plan.Dwell.Trigger, span(a.Plan.Dwell.Time), plural(under.many, "point"), under.value, under.point)
+	}
+	f.warnOfSpans(a)
+}
+
+// warnOfOverflow is about the counter's bits in the longest gate.
+func (f *Forecast) warnOfOverflow(a Ask, highest []worst) {
+	if a.Bench.Counter.Bits <= 0 {
+		return
+	}
+	gate := a.Plan.Dwell.Slice
+	for _, d := range []scan.Dwell{cadenceOf(a.Plan.Background), referenceOf(a.Plan.Reference)} {
+		gate = max(gate, d.Slice)
+	}
+	full := math.Pow(2, float64(a.Bench.Counter.Bits))
+	for k, c := range f.channels() {
+		if n := highest[k].value * gate.Seconds(); n >= full {
+			f.warnf("channel %s would count %.3g in a gate of %s at point %d, beyond the counter's %d bits: %.3g; want slices of %s at most", c, n, span(gate), highest[k].point, a.Bench.Counter.Bits, full,
+				span(time.Duration(full/highest[k].value*float64(time.Second)).Truncate(time.Millisecond)))
+		}
+	}
+}
+
+func cadenceOf(b *scan.Background) scan.Dwell {
+	if b == nil {
+		return scan.Dwell{}
+	}
+	return b.Dwell
+}
+
+func referenceOf(r *scan.Reference) scan.Dwell {
+	if r == nil {
+		return scan.Dwell{}
+	}
+	return r.Dwell
+}
+
+// warnOfSpans finds results whose peak lies at an end of the sweep or beyond.
+func (f *Forecast) warnOfSpans(a Ask) {
+	for _, q := range a.Plan.Results {
+		channel, along := q.Of, q.Along
+		if q.Kind == scan.Efficiency {
+			along = q.PlateauOf
+			for c, of := range a.Bench.Counter.Coincidences {
+				if of == [2]drivers.Channel{q.Trigger, q.UnderTest} || of == [2]drivers.Channel{q.UnderTest, q.Trigger} {
+					channel = c
+				}
+			}
+		}
+		k := slices.Index(f.channels(), channel)
+		if k < 0 || along == "" && q.Setting == "" {
+			continue
+		}
+		f.warnOfSpan(q, k, along)
+	}
+}
+
+func (f *Forecast) warnOfSpan(q scan.Result, k int, along drivers.AxisName) {
+	place := func(p scan.Point) (at float64, ok bool) {
+		for _, t := range p.Axes {
+			if along != "" && t.Axis == along {
+				return t.Angle.Degrees(), true
+			}
+		}
+		for _, t := range p.Settings {
+			if along == "" && t.Setting == q.Setting {
+				return t.Value, true
+			}
+		}
+		return 0, false
+	}
+	got := make(row, len(f.rates.channels))
+	low, high, top := math.Inf(1), math.Inf(-1), math.Inf(-1)
+	lowHz, highHz, topHz, where := 0.0, 0.0, math.Inf(-1), ""
+	for i, p := range f.plan.Points {
+		at, ok := place(p)
+		if !ok || p.Empty != "" || !stands(p, q.At) {
+			continue
+		}
+		f.rates.into(i, got)
+		hz := got[k]
+		if math.IsNaN(hz) {
+			continue
+		}
+		switch {
+		case at < low:
+			low, lowHz = at, hz
+		case at == low:
+			lowHz = math.Max(lowHz, hz)
+		}
+		switch {
+		case at > high:
+			high, highHz = at, hz
+		case at == high:
+			highHz = math.Max(highHz, hz)
+		}
+		if hz > topHz {
+			top, topHz = at, hz
+		}
+	}
+	if !(high > low) || !(topHz > 0) {
+		return
+	}
+	name, unitOf := string(along), "deg"
+	if along == "" {
+		name, unitOf = string(q.Setting), f.unitOf(q.Setting)
+	}
+	switch {
+	case top == low:
+		where = "lower"
+	case top == high:
+		where = "upper"
+	}
+	if where != "" {
+		f.warnf("the span of %s, %.4g to %.4g %s, misses the peak: the most counts of %s (%.3g /s) are at its %s end", name, low, high, unitOf, f.channels()[k], topHz, where)
+		return
+	}
+	if half := topHz / 2; q.Kind != scan.TuningCurve && q.Kind != scan.ConjugateMap && (lowHz > half || highHz > half) {
+		f.warnf("the span of %s, %.4g to %.4g %s, holds one flank at most: at its ends there are %.3g and %.3g counts of %s a second, at the top %.3g", name, low, high, unitOf, lowHz, highHz, f.channels()[k], topHz)
+	}
+}
+
+// stands says whether a point has the axes where a result wants them.
+func stands(p scan.Point, at []scan.AxisTarget) bool {
+	for _, want := range at {
+		for _, t := range p.Axes {
+			if t.Axis == want.Axis && t.Angle != want.Angle {
+				return false
+			}
+		}
+	}
+	return true
+}
+
+func plural(n int, what string) string {
+	if n == 1 {
+		return "1 " + what
+	}
+	return fmt.Sprintf("%d %ss", n, what)
+}
+
+// clock is a moment on the wall of whoever asked.
+func (f *Forecast) clock(t time.Time) string {
+	t = t.In(f.local)
+	if b := f.BeginsAt.In(f.local); t.YearDay() == b.YearDay() && t.Year() == b.Year() || t.Sub(b) < 20*time.Hour {
+		return t.Format("15:04")
+	}
+	return t.Format("15:04 on 2 Jan")
+}
+
+// span prints a duration as people say it.
+func span(d time.Duration) string {
+	switch {
+	case d >= 48*time.Hour:
+		return fmt.Sprintf("%d d %d h", d/(24*time.Hour), d%(24*time.Hour)/time.Hour)
+	case d >= time.Hour:
+		return strings.TrimSuffix(fmt.Sprintf("%d h %d min", d/time.Hour, (d%time.Hour).Round(time.Minute)/time.Minute), " 0 min")
+	case d >= 10*time.Minute:
+		return fmt.Sprintf("%d min", d.Round(time.Minute)/time.Minute)
+	case d >= time.Minute:
+		return strings.TrimSuffix(fmt.Sprintf("%d min %d s", d/time.Minute, (d%time.Minute).Round(time.Second)/time.Second), " 0 s")
+	case d >= 10*time.Second:
+		return fmt.Sprintf("%.0f s", d.Seconds())
+	}
+	return fmt.Sprintf("%.3g s", d.Seconds())
+}
