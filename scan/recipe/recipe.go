@@ -7,13 +7,24 @@
 // plan, for ever, because a resumed run works its plan out again.
 //
 // Names are resolved in Plan: a detector stands for its singles channel, times of the day become
-// instants of the moment that the run is accepted, the conjugate of an arm becomes angles by the
-// model that Facts carries.
+// instants of the moment that the run is accepted, the conjugate of an arm and the places of a
+// reference become angles by the model that Facts carries, a value from an earlier result what Facts
+// finds. Where it finds none the plan is provisional (scan.Plan.Open): nobody goes there, and it is
+// worked out again, and judged in full, once the value is known.
 //
-// It refuses what it does not act on: the keys of the format that come later, a step that does not
-// divide its range (naming the ends that would do), a step that is negative or zero, a dwell that
-// stops on coincidences, which would bias the efficiency measured, a background whose axis does not
-// stand at a declared angle otherwise, and an efficiency that does not say which readings make it.
+// Points stand in the order that the sweep writes: nothing is reordered to save travel but the
+// places within one set of references, whose order nobody asks for. A point whose conjugate does
+// not leave the crystal keeps its index and is empty; points that a user wrote as angles are never
+// emptied, since to see no light there may be what they are for.
+//
+// Print writes a recipe as text that reads back as the same one.
+//
+// It refuses a step that does not divide its range (naming the ends that would do), a step that is
+// negative or zero, a dwell that stops on coincidences, which would bias the efficiency measured, a
+// background whose axis does not stand at a declared angle otherwise, a result that the sweep cannot
+// give, an efficiency that does not say which readings make it, a reference that moves what no point
+// brings back or whose bounds its own counting error would break, and, with keep-outs, points and
+// ways between them that the bench must not take.
 package recipe
 
 import (
