@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"io"
 	"os"
 	"path/filepath"
 	"strings"
@@ -89,7 +90,7 @@ func (c *predictCommand) Run(_ context.Context, con *console) error {
 		return errUse{err}
 	}
 	if c.Plot != "" {
-		if err := plot(c.Plot, q); err != nil {
+		if err := writePicture(c.Plot, func(w io.Writer) error { return source.Plot(w, q) }); err != nil {
 			return err
 		}
 	}
@@ -100,8 +101,8 @@ func (c *predictCommand) Run(_ context.Context, con *console) error {
 	return err
 }
 
-// plot writes the picture beside its place and moves it there: nobody sees half of it.
-func plot(path string, q source.Query) (err error) {
+// writePicture writes a picture beside its place and moves it there: nobody sees half of it.
+func writePicture(path string, draw func(io.Writer) error) (err error) {
 	f, err := os.CreateTemp(filepath.Dir(path), ".gemel-plot-*")
 	if err != nil {
 		return err
@@ -111,7 +112,7 @@ func plot(path string, q source.Query) (err error) {
 			err = errors.Join(err, os.Remove(f.Name()))
 		}
 	}()
-	if err := errors.Join(source.Plot(f, q), f.Chmod(0o644), f.Close()); err != nil {
+	if err := errors.Join(draw(f), f.Chmod(0o644), f.Close()); err != nil {
 		return err
 	}
 	return os.Rename(f.Name(), path)

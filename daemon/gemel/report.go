@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"io"
 
 	"gemel/daemon/logbook"
 	"gemel/daemon/report"
@@ -20,10 +21,18 @@ type reportCommand struct {
 	Displaced bool     `help:"Accidentals from the counter's displaced windows instead of the product of the rates."`
 	Trials    int      `placeholder:"N" help:"Propagate the uncertainties by Monte Carlo, too (JCGM 101), with so many trials."`
 	Seed      uint64   `default:"1" help:"Of the Monte Carlo trials."`
+	Plot      string   `placeholder:"FILE.svg" help:"Draw profiles with their fits, and curves against the model."`
 }
 
 func (reportCommand) Help() string {
-	return "Example:\n  gemel report --data gemel-data\n\nThe result is worked out from the logbook file alone: recipe and bench file are read from the run's own header, and a copy of the file gives the same digits."
+	return `Examples:
+  gemel report --data gemel-data
+  gemel report --data gemel-data --json
+  gemel report --data gemel-data --plot ring.svg
+
+The results are worked out from the logbook file alone: recipe and bench file are read from the run's own header, and a copy of the file gives the same digits.
+
+--json prints one object: the recipe's first result, and under the key results the list of all of them, the first included. The exit code is 0 only if each has a value; one without says why under because.`
 }
 
 func (c *reportCommand) Run(ctx context.Context, con *console) error {
@@ -42,28 +51,35 @@ func (c *reportCommand) Run(ctx context.Context, con *console) error {
 	for _, step := range c.Without {
 		o.Off = append(o.Off, estimate.Step(step))
 	}
-	return con.result(ctx, book, run, o, c.JSON)
-}
-
-// result prints a run's result. One that was refused is a failure that says why.
-func (c *console) result(ctx context.Context, book *logbook.Book, run protocol.RunID, o report.Options, asJSON bool) error {
-	r, err := report.With(ctx, book, run, o)
+	all, err := report.All(ctx, book, run, o)
 	if err != nil {
 		return err
 	}
+	if c.Plot != "" {
+		if err := writePicture(c.Plot, func(w io.Writer) error { return report.Plot(w, all) }); err != nil {
+			return err
+		}
+	}
+	return con.results(all, c.JSON)
+}
+
+// results prints a run's results. One that was refused is a failure that says why.
+func (c *console) results(all []estimate.Result, asJSON bool) error {
 	if asJSON {
-		text, err := r.JSON()
+		text, err := report.JSON(all)
 		if err != nil {
 			return err
 		}
 		if _, err := c.out.Write(text); err != nil {
 			return err
 		}
-	} else if _, err := fmt.Fprint(c.out, r.Text()); err != nil {
+	} else if _, err := fmt.Fprint(c.out, report.Text(all)); err != nil {
 		return err
 	}
-	if r.Value == nil {
-		return errNotFinished
+	for _, r := range all {
+		if r.Value == nil {
+			return errNotFinished
+		}
 	}
 	return nil
 }
@@ -74,7 +90,7 @@ func lastWithResult(ctx context.Context, book *logbook.Book, file string) (proto
 		return "", err
 	}
 	for i := len(runs) - 1; i >= 0; i-- {
-		if _, err := report.Of(ctx, book, runs[i].Run); !errors.Is(err, report.ErrNoResult) {
+		if _, err := report.All(ctx, book, runs[i].Run, report.Options{}); !errors.Is(err, report.ErrNoResult) {
 			return runs[i].Run, nil
 		}
 	}

@@ -120,19 +120,19 @@ func devices(b *engine.Bench) []drivers.Device {
 	return append(all, b.Counter)
 }
 
-// tell prints the table, and under it the result that the recipe asks for.
+// tell prints the table, and under it the results that the recipe asks for.
 func (c *console) tell(ctx context.Context, s *session, sum *summary, pairs string) error {
 	if err := sum.print(c.out, pairs); err != nil {
 		return err
 	}
-	r, err := report.Of(ctx, s.book, sum.Run)
+	all, err := report.All(ctx, s.book, sum.Run, report.Options{})
 	if errors.Is(err, report.ErrNoResult) {
 		return nil
 	}
 	if err != nil {
 		return err
 	}
-	_, err = fmt.Fprint(c.out, "\n"+r.Text())
+	_, err = fmt.Fprint(c.out, "\n"+report.Text(all))
 	return err
 }
 

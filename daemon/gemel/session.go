@@ -146,19 +146,20 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 	}
 	s.keeper = keeper.New(keeper.Config{
 		Book: s.book, Bench: &built.Bench, BenchText: s.file.Text, Version: version, Plan: planner(s.file, "recipe"),
+		Hand:   built.Hand(),
 		Recipe: recipesIn(recipeFolder), Armed: armedIn(flags.Data, s.file.Simulated()), MayHome: flags.Home,
 		Declared:           declared,
 		ResumeAfterRestart: attended || s.file.AfterRestart == bench.AfterRestartResume || s.file.AfterRestart == "" && s.file.Simulated(),
 		Conclude: func(ctx context.Context, run protocol.RunID) ([]json.RawMessage, error) {
-			r, err := report.Of(ctx, s.book, run)
+			all, err := report.All(ctx, s.book, run, report.Options{})
 			if err != nil {
 				return nil, err
 			}
-			object, err := r.JSON()
-			return []json.RawMessage{object}, err
+			return report.Objects(all)
 		},
-		Behind: func() int64 { return s.courier.Behind() },
-		Step:   killpoint(),
+		Foresee: foreseer(s.file),
+		Behind:  func() int64 { return s.courier.Behind() },
+		Step:    killpoint(),
 	})
 	return s, s.serve(ctx)
 }

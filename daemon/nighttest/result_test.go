@@ -77,10 +77,11 @@ func resultOf(t *testing.T, recipe string) (estimate.Result, *Result) {
 	if again := digits(t, kept, runs[0].Run); !bytes.Equal(first, again) {
 		t.Error("a copy of the file gives other digits")
 	}
-	r, err := report.Of(context.Background(), book, runs[0].Run)
+	all, err := report.All(context.Background(), book, runs[0].Run, report.Options{})
 	if err != nil {
 		t.Fatal(err)
 	}
+	r := all[0]
 	if r.Kind == "efficiency" {
 		options(t, book, r)
 	}
@@ -89,11 +90,11 @@ func resultOf(t *testing.T, recipe string) (estimate.Result, *Result) {
 
 func digits(t *testing.T, book *logbook.Book, run protocol.RunID) []byte {
 	t.Helper()
-	r, err := report.Of(t.Context(), book, run)
+	all, err := report.All(t.Context(), book, run, report.Options{})
 	if err != nil {
 		t.Fatal(err)
 	}
-	text, err := r.JSON()
+	text, err := report.JSON(all)
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -114,11 +115,11 @@ func options(t *testing.T, book *logbook.Book, asked estimate.Result) {
 	t.Helper()
 	with := func(o report.Options) estimate.Result {
 		t.Helper()
-		r, err := report.With(t.Context(), book, asked.Run, o)
+		all, err := report.All(t.Context(), book, asked.Run, o)
 		if err != nil {
 			t.Fatal(err)
 		}
-		return r
+		return all[0]
 	}
 	// The declared path is 0.995 × 0.984 × 0.95.
 	if r := with(report.Options{Off: []estimate.Step{estimate.PathStep}}); r.Value == nil || math.Abs(*r.Value/(*asked.Value*0.995*0.984*0.95)-1) > 1e-9 {
