@@ -60,7 +60,6 @@ func Drift(rows Rows, bench Bench, q DriftQuestion) (Result, error) {
 	if q.Coverage == 0 {
 		q.Coverage = 0.95
 	}
-	q.ReferenceQuestion = q.tabulated()
 	r := newResult(rows, string(scan.Drift))
 	r.Coverage = q.Coverage
 	sets := q.sets(rows, &r)
@@ -172,13 +171,14 @@ func (q DriftQuestion) measures(bench Bench) []measure {
 			return value, value * math.Sqrt(v), nil
 		})})
 	}
+	profiles := q.profiles()
 	for _, arm := range q.arms() {
 		all = append(all, measure{centreName(arm), "deg", false, func(readings []protocol.Reading) (float64, float64, error) {
 			three, _, err := newReferenceSet(readings, bench, q.ReferenceQuestion).flanks(arm)
 			if err != nil {
 				return 0, 0, err
 			}
-			return centreOf(three, q.Profile[arm])
+			return centreOf(three, profiles[arm])
 		}})
 	}
 	return all

@@ -72,7 +72,7 @@ type ReferenceVerdict struct {
 //
 // Held by TestReferencesThatDidNotChangeAreSeldomCalledBad and TestChangesAreFound.
 func JudgeReference(now, before []protocol.Reading, bench Bench, q ReferenceQuestion) ReferenceVerdict {
-	q = q.tabulated()
+	profiles := q.profiles()
 	a, b := newReferenceSet(before, bench, q), newReferenceSet(now, bench, q)
 	v := ReferenceVerdict{Good: true}
 	if bound := q.Of.Bounds.Singles; bound > 0 {
@@ -87,7 +87,7 @@ func JudgeReference(now, before []protocol.Reading, bench Bench, q ReferenceQues
 	}
 	if bound := q.Of.Bounds.Centre; bound > 0 {
 		for _, arm := range q.arms() {
-			v.add(centreChange(a, b, arm, bound))
+			v.add(centreChange(a, b, arm, profiles[arm], bound))
 		}
 	}
 	return v
@@ -270,12 +270,11 @@ func (q ReferenceQuestion) arms() []string {
 	return arms
 }
 
-// tabulated asks the model once about each arm, from a width below its low flank to one above the
-// high one: a set's three fits would ask it thousands of times, and it takes milliseconds. An arm
-// that it cannot predict is taken for a Gaussian.
-func (q ReferenceQuestion) tabulated() ReferenceQuestion {
-	all := map[string]func(float64) float64{}
-	for arm, profile := range q.Profile {
+// profiles asks the model once about each arm: a set's three fits would ask it thousands of times,
+// and it takes milliseconds.
+func (q ReferenceQuestion) profiles() map[string]*armProfile {
+	all := map[string]*armProfile{}
+	for arm, model := range q.Profile {
 		low, high := math.Inf(1), math.Inf(-1)
 		for _, p := range q.Of.Places {
 			for _, t := range p.Axes {
@@ -284,14 +283,9 @@ func (q ReferenceQuestion) tabulated() ReferenceQuestion {
 				}
 			}
 		}
-		if reach := high - low; reach > 0 {
-			if table, err := tabulate(profile, low-1.2*reach, high+1.2*reach, reach); err == nil {
-				all[arm] = table
-			}
-		}
+		all[arm] = newArmProfile(model, low, high)
 	}
-	q.Profile = all
-	return q
+	return all
 }
 
 // pooled is what a dwell of gateS would count, by both dwells' rates together.
@@ -409,7 +403,7 @@ func (s referenceSet) flanks(arm string) (spots [3]Spot, gateS float64, err erro
 	return spots, gateS, nil
 }
 
-func centreChange(a, b referenceSet, arm string, allowed unit.Angle) Change {
+func centreChange(a, b referenceSet, arm string, profile *armProfile, allowed unit.Angle) Change {
 	name, bound := centreName(arm), allowed.Degrees()
 	before, gateA, err := a.flanks(arm)
 	if err != nil {
@@ -419,7 +413,6 @@ func centreChange(a, b referenceSet, arm string, allowed unit.Angle) Change {
 	if err != nil {
 		return untold(name, "deg", bound, err)
 	}
-	profile := a.q.Profile[arm]
 	c := Change{Quantity: name, Unit: "deg", Bound: bound, shown: shownDegrees, Counts: math.Inf(1)}
 	var both [3]Spot
 	for i := range both {

@@ -8,8 +8,8 @@ import (
 	"gonum.org/v1/gonum/stat/distuv"
 )
 
-// centreOf is where a profile's maximum stands, from three readings: low flank, top, high flank,
-// with its standard uncertainty by counting.
+// centreOf is where a profile stands, from three readings: low flank, top, high flank, with its
+// standard uncertainty by counting.
 //
 // Without a predicted profile it is a Gaussian without ground, which three readings fit exactly:
 // with y = ln(rate net of accidentals) the centre is the vertex of the parabola through the three,
@@ -20,14 +20,45 @@ import (
 // is fwhm/(4 ln2 sqrt(N)) = 0.36 fwhm/sqrt(N) (derived here). With a predicted profile, centre,
 // width and height are those of the profile, moved and stretched, by Poisson likelihood: a flat top
 // has steeper flanks than a Gaussian of its width, which would call each shift too large.
-func centreOf(three [3]Spot, profile func(float64) float64) (centre, u float64, err error) {
+func centreOf(three [3]Spot, predicted *armProfile) (centre, u float64, err error) {
 	if !(three[0].AngleDeg < three[1].AngleDeg && three[1].AngleDeg < three[2].AngleDeg) {
 		return 0, 0, fmt.Errorf("flanks at %.4g and %.4g deg, the top at %.4g deg; want the top between them", three[0].AngleDeg, three[2].AngleDeg, three[1].AngleDeg)
 	}
-	if profile != nil {
-		return predictedCentre(three, profile)
+	if predicted != nil {
+		return predicted.centre(three)
 	}
 	return vertex(three)
+}
+
+// armProfile is a predicted profile through the top of a reference.
+type armProfile struct {
+	rate      func(angleDeg float64) float64
+	middleDeg float64 // half way between its half maxima: of a flat top the maximum itself stands anywhere
+	peak      float64
+}
+
+// newArmProfile asks the model from a width below the low flank to one above the high one. It is nil
+// where the model cannot say, or where the profile that it predicts stands elsewhere and says nothing
+// of the form here.
+func newArmProfile(model func(angleDeg float64) float64, low, high float64) *armProfile {
+	reach := high - low
+	if !(reach > 0) {
+		return nil
+	}
+	table, err := tabulate(model, low-1.2*reach, high+1.2*reach, reach)
+	if err != nil {
+		return nil
+	}
+	top := highest(table, low-reach, high+reach)
+	p := &armProfile{rate: table, peak: table(top)}
+	at := func(side float64) float64 {
+		return half(func(v float64) float64 { return table(top+side*v) / p.peak }, 0, 2.2*reach)
+	}
+	p.middleDeg = top + (at(1)-at(-1))/2
+	if p.middleDeg < low-reach/2 || p.middleDeg > high+reach/2 {
+		return nil
+	}
+	return p
 }
 
 var errNoPeak = errors.New("the counts on both flanks and at the top are no peak")
@@ -67,28 +98,15 @@ func vertex(three [3]Spot) (centre, u float64, err error) {
 
 // The parameters of a predicted profile through three readings.
 const (
-	moved     = iota // where its maximum stands, degrees
+	moved     = iota // where its middle stands, degrees
 	stretched        // its width, of the predicted one
-	raised           // counts per exposure at the maximum
+	raised           // counts per exposure at its maximum
 )
 
-// predictedSteps is how many steps from flank to flank a predicted profile is asked at, times
-// tablePerStep.
-const predictedSteps = 4
-
-func predictedCentre(three [3]Spot, profile func(float64) float64) (centre, u float64, err error) {
+func (a *armProfile) centre(three [3]Spot) (centre, u float64, err error) {
 	low, high := three[0].AngleDeg, three[2].AngleDeg
 	reach := high - low
-	table, err := tabulate(profile, low-reach, high+reach, reach/predictedSteps)
-	if err != nil {
-		return 0, 0, err
-	}
-	top := highest(table, low-reach/2, high+reach/2)
-	if top < low-0.49*reach || top > high+0.49*reach {
-		return vertex(three) // the prediction stands elsewhere, and says nothing of the form here
-	}
-	peak := table(top)
-	shape := func(v float64) float64 { return math.Max(table(top+v)/peak, 1e-9) }
+	shape := func(v float64) float64 { return math.Max(a.rate(a.middleDeg+v)/a.peak, 1e-9) }
 	n := make([]float64, 3)
 	for i, s := range three {
 		n[i] = s.Counts
@@ -103,7 +121,7 @@ func predictedCentre(three [3]Spot, profile func(float64) float64) (centre, u fl
 		value:  func(m []float64) float64 { return Cash(n, m) },
 		slopes: func(i int, m float64) (g, h float64) { return 2 * (1 - n[i]/m), 2 / m },
 	}
-	starts := []float64{three[1].AngleDeg, top}
+	starts := []float64{three[1].AngleDeg, a.middleDeg}
 	if c, _, err := vertex(three); err == nil {
 		starts = append(starts, c)
 	}

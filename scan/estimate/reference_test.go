@@ -107,7 +107,7 @@ func TestThreeReadingsGiveTheCentreAndItsUncertaintyExactly(t *testing.T) {
 		t.Fatal(err)
 	}
 	near(t, "u with flanks at half maximum", u, fwhm/(4*math.Ln2*math.Sqrt(top)), 1e-12)
-	c, v, err := centreOf(three, func(x float64) float64 { return gauss(x-2.9, fwhm) })
+	c, v, err := centreOf(three, newArmProfile(func(x float64) float64 { return gauss(x-2.9, fwhm) }, 2.8, 3.4))
 	if err != nil {
 		t.Fatal(err)
 	}
