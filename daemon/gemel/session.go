@@ -28,6 +28,7 @@ import (
 	"gemel/protocol"
 	"gemel/protocol/strict"
 	"gemel/scan"
+	"gemel/scan/engine"
 	"gemel/scan/recipe"
 	"gemel/sim/instruments"
 	"gemel/sim/trouble"
@@ -156,6 +157,12 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 				return nil, err
 			}
 			return report.Objects(all)
+		},
+		Judge: func(ctx context.Context, run protocol.RunID, plan scan.Plan, set, baseline int) (engine.Verdict, error) {
+			return report.Judge(ctx, s.book, run, plan, s.file, set, baseline)
+		},
+		Refine: func(ctx context.Context, run protocol.RunID, plan scan.Plan, round int) (engine.Refinement, error) {
+			return report.Refine(ctx, s.book, run, plan, s.file, round)
 		},
 		Foresee: foreseer(s.file),
 		Behind:  func() int64 { return s.courier.Behind() },
