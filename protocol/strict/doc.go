@@ -1,7 +1,7 @@
 // Package strict reads the YAML that recipes and bench files share, and takes nothing on trust.
 //
-// It promises that every finding of a file is reported at once, each with file, line, column, key
-// path, what was found and what is wanted; that a value is accepted only if it is written the way
+// It promises that every finding of a file is reported at once (of more than a hundred, how many
+// more), each with file, line, column, key path, what was found and what is wanted; that a value is accepted only if it is written the way
 // it is meant; and that hostile input costs a bounded amount of time and memory.
 //
 // It refuses files over 1 MiB (by their size, unread), more than one document, aliases, anchors,
@@ -42,7 +42,9 @@ type Doc struct {
 	file     string
 	root     *yaml.Node // nil when nothing can be read from it
 	findings []protocol.Finding
+	more     int // findings that were not kept
 	bad      map[*yaml.Node]bool
+	probe    *probe // not nil while a format is described: there is no file then
 }
 
 // ReadFile reads a file's bytes, unless there are more than MaxBytes: then, and only then, the
@@ -251,6 +253,9 @@ func (d *Doc) inspectMap(n *yaml.Node, at Place, depth int, nodes *int) bool {
 
 // Root is the file's top level.
 func (d *Doc) Root() Map {
+	if d.probe != nil {
+		return Map{doc: d, node: d.probe.stand}
+	}
 	return Map{doc: d, node: d.root, place: Place{file: d.file, line: 1, col: 1}, asked: map[string]bool{}}
 }
 
@@ -260,12 +265,23 @@ func (d *Doc) Readable() bool { return d.root != nil }
 // Fail adds a finding at a place that was kept from this file.
 func (d *Doc) Fail(at Place, found, want string) { d.report(at, found, want) }
 
-// Err returns all findings so far, sorted by position, as an *Error; nil if there are none.
-func (d *Doc) Err() error { return Join(d.findings...) }
+// Err returns the findings so far, sorted by position, as an *Error; nil if there are none. Of very
+// many it returns the first that were found, and a last one that counts the others.
+func (d *Doc) Err() error { return join(d.findings, d.more) }
 
 func (d *Doc) report(at Place, found, want string) {
+	if d.probe != nil {
+		return
+	}
+	if d.full() {
+		d.more++
+		return
+	}
 	d.findings = append(d.findings, at.Finding(found, want))
 }
+
+// full says whether further findings are only counted.
+func (d *Doc) full() bool { return len(d.findings) >= maxFindings }
 
 // reportNode reports and remembers that the node is not to be read.
 func (d *Doc) reportNode(n *yaml.Node, at Place, found, want string) {

@@ -31,8 +31,15 @@ func (m Map) Place() Place { return m.place }
 // Given says whether there are keys to read.
 func (m Map) Given() bool { return m.node != nil }
 
-// Fail reports what is wrong with the keys taken together.
+// Fail reports what is wrong with the keys taken together: the reason lies in which of them are there,
+// and in words chosen. So Describe takes it; what lies in other contents is for Value.Fail.
 func (m Map) Fail(found, want string) {
+	if p := m.probe(); p != nil {
+		if m.Given() {
+			p.note(note{what: wrong, path: m.place.key, owner: m.place.key, text: found})
+		}
+		return
+	}
 	if m.node != nil {
 		m.doc.bad[m.node] = true
 	}
@@ -41,6 +48,9 @@ func (m Map) Fail(found, want string) {
 
 // Has says whether a key is written, without asking for it.
 func (m Map) Has(key string) bool {
+	if p := m.probe(); p != nil {
+		return p.has(m.probedValue(key))
+	}
 	k, _ := m.find(key)
 	return k != nil
 }
@@ -48,6 +58,9 @@ func (m Map) Has(key string) bool {
 // Need returns the value of a key that must be there.
 func (m Map) Need(key string) Value {
 	v := m.Opt(key)
+	if p := m.probe(); p != nil {
+		return p.need(v)
+	}
 	if v.node == nil && m.node != nil {
 		at := m.place.child(key)
 		m.doc.report(at, "missing", "this key written")
@@ -57,6 +70,13 @@ func (m Map) Need(key string) Value {
 
 // Opt returns the value of a key that may be there.
 func (m Map) Opt(key string) Value {
+	if p := m.probe(); p != nil {
+		v := m.probedValue(key)
+		if m.Given() {
+			p.note(note{what: asked, path: v.place.key, owner: v.owner, text: key})
+		}
+		return v
+	}
 	if m.asked != nil {
 		m.asked[key] = true
 	}
@@ -64,7 +84,11 @@ func (m Map) Opt(key string) Value {
 	if k == nil {
 		return Value{doc: m.doc, place: m.place.child(key)}
 	}
-	at := m.place.child(key)
+	return m.value(k, n)
+}
+
+func (m Map) value(k, n *yaml.Node) Value {
+	at := m.place.child(k.Value)
 	at.line, at.col = n.Line, n.Column
 	if n.Tag == "!!null" && n.Kind == yaml.ScalarNode || n.Kind == yaml.MappingNode {
 		at.line, at.col = k.Line, k.Column // an empty value stands nowhere, and keys stand under their name
@@ -81,6 +105,10 @@ func (m Map) Later(keys ...string) {
 // Refuse refuses keys with a reason of their own.
 func (m Map) Refuse(found, want string, keys ...string) {
 	for _, key := range keys {
+		if p := m.probe(); p != nil {
+			p.bar(m, key, found)
+			continue
+		}
 		k, n := m.find(key)
 		if k == nil {
 			continue
@@ -98,6 +126,9 @@ func (m Map) Entries() []Entry {
 	if m.node == nil {
 		return nil
 	}
+	if p := m.probe(); p != nil {
+		return p.entries(m)
+	}
 	var entries []Entry
 	seen := map[string]bool{}
 	for i := 0; i+1 < len(m.node.Content); i += 2 {
@@ -106,7 +137,8 @@ func (m Map) Entries() []Entry {
 			continue
 		}
 		seen[k.Value] = true
-		v := m.Opt(k.Value)
+		m.asked[k.Value] = true
+		v := m.value(k, m.node.Content[i+1])
 		at := v.place
 		at.line, at.col = k.Line, k.Column
 		if !isName(k.Value) {
@@ -123,6 +155,10 @@ func (m Map) Done() {
 	if m.node == nil {
 		return
 	}
+	if p := m.probe(); p != nil {
+		p.note(note{what: closed, path: m.place.key, owner: m.place.key})
+		return
+	}
 	known := make([]string, 0, len(m.asked))
 	for key := range m.asked {
 		known = append(known, key)
@@ -135,8 +171,21 @@ func (m Map) Done() {
 		}
 		at := m.place.child(shorten(k.Value))
 		at.line, at.col = k.Line, k.Column
-		m.doc.reportNode(n, at, "an unknown key", wantOneOf(k.Value, known))
+		want := ""
+		if !m.doc.full() { // comparing takes time, and hostile files have many keys
+			want = wantOneOf(k.Value, known)
+		}
+		m.doc.reportNode(n, at, "an unknown key", want)
 	}
+}
+
+// probedValue is the value of a key while a format is described.
+func (m Map) probedValue(key string) Value {
+	v := Value{doc: m.doc, place: m.place.child(key), owner: m.place.key}
+	if !m.Given() {
+		v.sure = -1
+	}
+	return v
 }
 
 func (m Map) find(key string) (k, v *yaml.Node) {
@@ -171,14 +220,18 @@ func wantOneOf(found string, allowed []string) string {
 	return "one of " + strings.Join(allowed, ", ")
 }
 
+// maxNear bounds the comparisons of one word.
+const maxNear = 300
+
 // Nearest returns the allowed word with the least edits to the one found, or "" if none is near
-// enough to have been meant. Of several it takes the first.
+// enough to have been meant. Of several it takes the first. Words beyond the first few hundred are
+// not looked at.
 func Nearest(found string, allowed []string) string {
 	if len(found) > 64 {
 		return ""
 	}
 	best, least := "", max(2, len(found)/3)+1
-	for _, a := range allowed {
+	for _, a := range allowed[:min(len(allowed), maxNear)] {
 		if d := edits(strings.ToLower(found), strings.ToLower(a)); d < least {
 			best, least = a, d
 		}

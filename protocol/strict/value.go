@@ -23,6 +23,11 @@ type Value struct {
 	doc   *Doc
 	node  *yaml.Node // nil: absent
 	place Place
+
+	// While a format is described: the keys it stands under, and whether it is there (1), is not
+	// (-1) or was not asked yet.
+	owner string
+	sure  int8
 }
 
 // Measured is a constant that enters a result: `4.0 ns`, or {value: 4.0 ns, u: 0.2 ns, from: "…"}.
@@ -41,22 +46,48 @@ type Quantity struct {
 }
 
 // Given says whether the value is written.
-func (v Value) Given() bool { return v.node != nil }
+func (v Value) Given() bool {
+	if p := v.probe(); p != nil {
+		return p.has(v)
+	}
+	return v.node != nil
+}
 
 // Good says whether the value is written and nothing was found wrong with it so far.
-func (v Value) Good() bool { return v.node != nil && !v.doc.bad[v.node] }
+func (v Value) Good() bool {
+	if p := v.probe(); p != nil {
+		return p.has(v)
+	}
+	return v.node != nil && !v.doc.bad[v.node]
+}
 
 // Place is where the value stands.
 func (v Value) Place() Place { return v.place }
 
-// IsList says whether the value is a list, IsMap whether it is keys and values.
-func (v Value) IsList() bool { return v.node != nil && v.node.Kind == yaml.SequenceNode }
+// IsList says whether the value is a list.
+func (v Value) IsList() bool {
+	if p := v.probe(); p != nil {
+		return p.is(v, yaml.SequenceNode)
+	}
+	return v.node != nil && v.node.Kind == yaml.SequenceNode
+}
 
 // IsMap says whether the value is keys and values.
-func (v Value) IsMap() bool { return v.node != nil && v.node.Kind == yaml.MappingNode }
+func (v Value) IsMap() bool {
+	if p := v.probe(); p != nil {
+		return p.is(v, yaml.MappingNode)
+	}
+	return v.node != nil && v.node.Kind == yaml.MappingNode
+}
 
-// Fail reports what is wrong with the value.
+// Fail reports what is wrong with the value. Before its contents are read, and right after Choice,
+// Bool, Unit or Match, the reason lies in that answer or in which other keys are there: so Describe
+// takes it.
 func (v Value) Fail(found, want string) {
+	if p := v.probe(); p != nil {
+		p.fail(v, found)
+		return
+	}
 	if v.node != nil {
 		v.doc.bad[v.node] = true
 	}
@@ -78,6 +109,9 @@ func (v Value) written() string {
 
 // Map returns the keys of the value.
 func (v Value) Map() Map {
+	if p := v.probe(); p != nil {
+		return p.keys(v)
+	}
 	m := Map{doc: v.doc, place: v.place, asked: map[string]bool{}}
 	if v.node == nil || v.doc.bad[v.node] {
 		return m
@@ -92,6 +126,9 @@ func (v Value) Map() Map {
 
 // List returns the items of the value, at least low and at most high of them.
 func (v Value) List(low, high int) []Value {
+	if p := v.probe(); p != nil {
+		return p.list(v, low, high)
+	}
 	if v.node == nil || v.doc.bad[v.node] {
 		return nil
 	}
@@ -132,6 +169,9 @@ func (v Value) quoted() bool { return v.node.Style != 0 }
 
 // Text returns one line of text, not empty, at most 400 characters.
 func (v Value) Text(or ...string) string {
+	if p := v.probe(); p != nil {
+		return probed(v, textShape(vagueText, 400, false, false), likeText, or)
+	}
 	s, ok := v.scalar("text")
 	if !ok {
 		return first(or)
@@ -158,6 +198,9 @@ func (v Value) Text(or ...string) string {
 // Wire returns text that goes over a line: like Text, but control characters are part of it and
 // it may be empty.
 func (v Value) Wire(or ...string) string {
+	if p := v.probe(); p != nil {
+		return probed(v, textShape(vagueText, 400, true, true), likeText, or)
+	}
 	s, ok := v.scalar("text")
 	if !ok {
 		return first(or)
@@ -175,6 +218,9 @@ func (v Value) Wire(or ...string) string {
 
 // Token returns a name that may stand in a NATS subject.
 func (v Value) Token(or ...string) string {
+	if p := v.probe(); p != nil {
+		return probed(v, tokenShape(), likeText, or)
+	}
 	s, ok := v.scalar("a name")
 	if !ok {
 		return first(or)
@@ -192,6 +238,9 @@ func isName(s string) bool {
 
 // Choice returns one of the allowed words.
 func (v Value) Choice(allowed []string, or ...string) string {
+	if p := v.probe(); p != nil {
+		return probedWord(v, unlike(allowed), strings2any, first(or))
+	}
 	s, ok := v.scalar("one of " + strings.Join(allowed, ", "))
 	if !ok {
 		return first(or)
@@ -205,6 +254,9 @@ func (v Value) Choice(allowed []string, or ...string) string {
 
 // Bool returns true or false, spelt so.
 func (v Value) Bool(or ...bool) bool {
+	if p := v.probe(); p != nil {
+		return probedWord(v, unlike([]string{"false", "true"}), bools, strconv.FormatBool(first(or))) == "true"
+	}
 	s, ok := v.scalar("true or false")
 	if !ok {
 		return first(or)
@@ -223,6 +275,9 @@ var (
 
 // Int returns a whole number from low to high, written in decimal.
 func (v Value) Int(low, high int64, or ...int64) int64 {
+	if p := v.probe(); p != nil {
+		return probed(v, intShape(low, high), end(p, low, high), or)
+	}
 	want := fmt.Sprintf("a whole number from %d to %d", low, high)
 	s, ok := v.scalar(want)
 	if !ok {
@@ -238,6 +293,9 @@ func (v Value) Int(low, high int64, or ...int64) int64 {
 
 // Number returns a plain number without a unit, from low to high.
 func (v Value) Number(low, high float64, or ...float64) float64 {
+	if p := v.probe(); p != nil {
+		return probed(v, numberShape(low, high), end(p, finite(low), finite(high)), or)
+	}
 	want := fmt.Sprintf("a number from %g to %g", low, high)
 	s, ok := v.scalar(want)
 	if !ok {
@@ -253,6 +311,13 @@ func (v Value) Number(low, high float64, or ...float64) float64 {
 
 // Angle returns an exact angle from low to high.
 func (v Value) Angle(low, high unit.Angle, or ...unit.Angle) unit.Angle {
+	if p := v.probe(); p != nil {
+		a := end(p, low, high)
+		if p.has(v) {
+			p.angles[v.place.key] = a
+		}
+		return probed(v, angleShape(low, high, ""), a, or)
+	}
 	s, ok := v.scalar(example(unit.Plane))
 	if !ok {
 		return first(or)
@@ -272,6 +337,9 @@ func (v Value) Angle(low, high unit.Angle, or ...unit.Angle) unit.Angle {
 // AnglePer returns an angle per time, written with the suffix behind its unit: "4 deg/s" has the
 // suffix "/s", "20 deg/s2" has "/s2".
 func (v Value) AnglePer(suffix string, low, high unit.Angle, or ...unit.Angle) unit.Angle {
+	if p := v.probe(); p != nil {
+		return probed(v, angleShape(low, high, suffix), end(p, low, high), or)
+	}
 	want := fmt.Sprintf("an angle per time such as \"1.5 deg%s\"", suffix)
 	s, ok := v.scalar(want)
 	if !ok {
@@ -305,8 +373,23 @@ func (v Value) Pattern(or ...string) string {
 	return s
 }
 
+// Match returns what Regexp.FindStringSubmatch finds in a value that is text; nil if the pattern does
+// not match, which is no finding. The pattern is part of the format: Describe tells it.
+func (v Value) Match(re *regexp.Regexp) []string {
+	if p := v.probe(); p != nil {
+		return p.match(v, re)
+	}
+	if !v.Good() || v.node.Kind != yaml.ScalarNode || !v.quoted() && v.node.Tag != "!!str" {
+		return nil
+	}
+	return re.FindStringSubmatch(v.node.Value)
+}
+
 // Duration returns a time from low to high.
 func (v Value) Duration(low, high time.Duration, or ...time.Duration) time.Duration {
+	if p := v.probe(); p != nil {
+		return probed(v, durationShape(low, high), end(p, low, high), or)
+	}
 	s, ok := v.scalar(example(unit.Time))
 	if !ok {
 		return first(or)
@@ -326,6 +409,9 @@ func (v Value) Duration(low, high time.Duration, or ...time.Duration) time.Durat
 // Quantity returns a value of the kind, in its base unit, from low to high. A share may be a
 // plain number, because one is its unit.
 func (v Value) Quantity(kind unit.Kind, low, high float64, or ...float64) float64 {
+	if p := v.probe(); p != nil {
+		return probed(v, quantityShape(kind, low, high), end(p, finite(low), finite(high)), or)
+	}
 	s, ok := v.scalar(example(kind))
 	if !ok {
 		return first(or)
@@ -347,6 +433,9 @@ func (v Value) Quantity(kind unit.Kind, low, high float64, or ...float64) float6
 
 // Any returns a value with whatever unit it carries.
 func (v Value) Any() Quantity {
+	if p := v.probe(); p != nil {
+		return p.any(v)
+	}
 	const want = `a value with its unit, such as "2 ns" or "50 mW"`
 	s, ok := v.scalar(want)
 	if !ok {
@@ -365,14 +454,22 @@ func (v Value) Any() Quantity {
 	return Quantity{Number: strings.TrimSuffix(number, "%"), Unit: name, Kind: kind, Base: base}
 }
 
-// Unit returns the spelling of a unit, and its kind.
+// Unit returns the spelling of a unit, and its kind. A Fail after it must be for the kind.
 func (v Value) Unit() (string, unit.Kind) {
+	if p := v.probe(); p != nil {
+		name := probedWord(v, p.units, units, "")
+		if name == "" {
+			return "", ""
+		}
+		_, kind, _, _ := unit.ParseAny("1 " + name)
+		return name, kind
+	}
 	s, ok := v.scalar("a unit such as mW, Cel or ns")
 	if !ok {
 		return "", ""
 	}
 	_, kind, name, err := unit.ParseAny("1 " + s)
-	if err != nil {
+	if err != nil || name != s {
 		v.Failf("a unit such as mW, Cel or ns")
 		return "", ""
 	}
@@ -403,7 +500,7 @@ func (v Value) Measured(kind unit.Kind, low, high float64, or ...Measured) Measu
 // Difference returns a difference of two values of the kind, in its base unit: as Quantity, but
 // for temperatures 0.2 K and 0.2 Cel are the same, since a difference has no zero to be shifted by.
 func (v Value) Difference(kind unit.Kind, low, high float64, or ...float64) float64 {
-	if kind != unit.Temperature {
+	if kind != unit.Temperature || v.probe() != nil {
 		return v.Quantity(kind, low, high, or...)
 	}
 	q := v.Any()
@@ -420,6 +517,15 @@ func (v Value) Difference(kind unit.Kind, low, high float64, or ...float64) floa
 		return x
 	}
 	return first(or)
+}
+
+// allUnits lists all units, those of a kind together.
+func allUnits() [][]string {
+	var names [][]string
+	for _, kind := range unit.Kinds() {
+		names = append(names, unit.Units(kind))
+	}
+	return names
 }
 
 func (v Value) failUnit(err error, kind unit.Kind) {

@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 	"math/big"
+	"regexp"
 	"sort"
 	"strconv"
 	"strings"
@@ -61,6 +62,39 @@ func Units(kind Kind) []string {
 		return names[i] < names[j]
 	})
 	return names
+}
+
+// Kinds lists all kinds.
+func Kinds() []Kind {
+	return []Kind{Plane, Time, Length, Rate, Power, Temperature, Share, Voltage, Current}
+}
+
+// Pattern is a regular expression, in the syntax that RE2 and ECMA-262 share and without anchors, for
+// the quantities of a kind, or of any kind if it is empty. It matches all that Parse reads; where
+// negative is false, all but those below zero, and a few of these that are nearly zero.
+func Pattern(kind Kind, negative bool) string {
+	kinds := []Kind{kind}
+	if kind == "" {
+		kinds = Kinds()
+	}
+	var names []string
+	for _, k := range kinds {
+		names = append(names, Units(k)...)
+	}
+	for i, name := range names {
+		names[i] = regexp.QuoteMeta(name)
+	}
+	const space, mantissa, exponent = `[ \t\r\n]*`, `(?:[0-9]+\.?[0-9]*|\.[0-9]+)`, `(?:[eE][+-]?[0-9]{1,2})?`
+	number := `[+-]?` + mantissa + exponent
+	if !negative {
+		// What is written with a minus may still be zero, or be rounded to it.
+		number = `(?:\+?` + mantissa + exponent + `|-(?:0*\.[0-9]+|0+\.?)` + exponent + `|-` + mantissa + `[eE]-[0-9]{1,2})`
+	}
+	behind := ` ` + space + `(?:` + strings.Join(names, "|") + `)`
+	if kind == "" || kind == Share {
+		behind = `(?:` + behind + `|%)`
+	}
+	return space + number + behind + space
 }
 
 // Parse reads a quantity of the given kind, such as "405 nm", and returns it in the base unit.
@@ -139,11 +173,14 @@ func wrongUnit(text string, kind Kind) error {
 	return &Error{Text: text, Found: strconv.Quote(text), Want: article + string(kind) + " in " + strings.Join(Units(kind), ", ")}
 }
 
+// blanks may stand around a value: those that YAML may leave there, no others.
+const blanks = " \t\r\n"
+
 // split cuts "1.5 deg" in two. A plain number wraps ErrNoUnit.
 func split(text string) (number, name string, err error) {
-	text = strings.TrimSpace(text)
+	text = strings.Trim(text, blanks)
 	number, name, _ = strings.Cut(text, " ")
-	name = strings.TrimSpace(name)
+	name = strings.Trim(name, blanks)
 	if name == "" {
 		if before, ok := strings.CutSuffix(number, "%"); ok { // "0.5%" is as clear as "0.5 %"
 			return before, "%", nil
