@@ -73,10 +73,12 @@ func tables() map[string]table {
 		"`repeat`":                     at("recipe", `repeat`, "repeat"),
 		"`dark`, `background`":         at("recipe", `dark|background`, "dark", "background"),
 		"`background`":                 at("recipe", `background`, "background"),
-		"`guards[]`":                   at("recipe", `guards\[\]`, "guards[]"),
+		"`reference`":                  at("swept", `reference`, "reference"),
+		"`refine`":                     at("swept", `refine`, "refine"),
+		"`guards[]`":                   at("recipe, swept", `guards\[\]`, "guards[]"),
 		"`schedule`":                   at("recipe", `schedule`, "schedule"),
 		"`trouble`":                    at("recipe", `trouble`, "trouble"),
-		"`result`":                     at("swept", `result`, "result"),
+		"`result`":                     at("swept, stepped", `result`, "result"),
 	}
 }
 
@@ -134,7 +136,9 @@ settings: {delay: {is: delay, answer_unit: s},
 		"bench": bench, "own counter": counter, "simulated": simulated,
 		"recipe": grow(t, `{title: Both arms, sweep: [{axis: crystal_tilt, at: 0 deg}, {axis: signal_arm, at: 2.864 deg}], dwell: 5 s}`),
 		// For results, whose arms must be swept.
-		"swept": grow(t, `{title: Both arms, sweep: [{axis: crystal_tilt, at: 0 deg}, {axis: signal_arm, at: 2.864 deg}, {axis: idler_arm, around: 2.864 deg, span: 1 deg, step: 0.1 deg}], dwell: 5 s, dark: {dwell: 5 s, also: [end]}}`),
+		"swept": grow(t, `{title: Both arms, sweep: [{axis: crystal_tilt, at: 0 deg}, {axis: signal_arm, at: 2.864 deg}, {axis: idler_arm, around: 2.864 deg, span: 1 deg, step: 0.1 deg}], dwell: 5 s, dark: {dwell: 5 s, also: [end]}, reference: {axes: [idler_arm], on: [top], every: 30 min, dwell: 5 s}}`),
+		"stepped": grow(t, `{title: All of them, sweep: [{axis: crystal_tilt, at: [0 deg, 1 deg]}, {setting: delay, from: 0 ns, to: 4 ns, step: 1 ns},
+ {axis: signal_arm, at: [-0.9 deg, -0.8 deg, -0.7 deg, -0.6 deg, 0.6 deg, 0.7 deg, 0.8 deg, 0.9 deg]}, {axis: idler_arm, around: 2.864 deg, span: 1 deg, step: 0.1 deg}], dwell: 5 s, dark: {dwell: 5 s, also: [end]}}`),
 	}
 	f, err := Parse("", []byte(bench.String()))
 	if err != nil {
@@ -149,7 +153,7 @@ settings: {delay: {is: delay, answer_unit: s},
 func (s sound) read(t *testing.T, doc string, n *node) []protocol.Finding {
 	t.Helper()
 	var err error
-	if doc == "recipe" || doc == "swept" {
+	if doc == "recipe" || doc == "swept" || doc == "stepped" {
 		var r *recipe.Recipe
 		if r, err = recipe.Parse("recipe.yaml", []byte(n.String())); err == nil {
 			_, err = r.Plan(s.facts)
@@ -693,7 +697,7 @@ func general(path string) string {
 	for _, c := range []struct{ from, to string }{
 		{`(^|\.)truth\.(axes|settings)\.[^.]+$`, "${1}truth.$2.NAME"}, {`(^|\.)truth\.(signal|idler)$`, "${1}truth.ARM"},
 		{`(^|\.)asks\.[^.]+$`, "${1}asks.QUESTION"}, {`(\.own\w*)\.start\[\]$`, "${1}.asks.QUESTION"},
-		{`(^|\.)crystal\.n_[oe]$`, "${1}crystal.INDEX"}, {`^sweep\[\]\.with$`, "sweep[]"},
+		{`(^|\.)crystal\.n_[oe]$`, "${1}crystal.INDEX"}, {`^sweep\[\]\.with$`, "sweep[]"}, {`^result\[\]$`, "result"},
 	} {
 		path = regexp.MustCompile(c.from).ReplaceAllString(path, c.to)
 	}

@@ -72,6 +72,9 @@ func readEarlier(v strict.Value, isAngle bool) *Earlier {
 		sound = false
 	}
 	e.NotOlderThan = older.Duration(time.Minute, maxAge, 0)
+	if isAngle {
+		below.Angle(0, unit.Turn/4)
+	}
 	if n, ok := readNumber(below, isAngle); ok {
 		if n.value.Sign() <= 0 {
 			below.Failf("a standard uncertainty above zero")

@@ -18,14 +18,15 @@ import (
 func said(r *scan.Reference) string {
 	var all []string
 	for _, p := range r.Places {
-		s := string(p.On)
+		var s strings.Builder
+		s.WriteString(string(p.On))
 		if p.Arm != "" {
-			s += " of " + string(p.Arm)
+			s.WriteString(" of " + string(p.Arm))
 		}
 		for _, t := range p.Axes {
-			s += " " + strings.TrimSuffix(t.Angle.String(), " deg")
+			s.WriteString(" " + strings.TrimSuffix(t.Angle.String(), " deg"))
 		}
-		all = append(all, s)
+		all = append(all, s.String())
 	}
 	return strings.Join(all, " | ")
 }
