@@ -222,7 +222,7 @@ func (r *Recipe) referenceTop(f Facts) (top []scan.AxisTarget, open bool, findin
 			place[c.Axis] = angles[0]
 			open = open || c.open()
 		case role != signalArm && role != idlerArm && role != "":
-			findings = append(findings, q.Cadence.at.Finding(fmt.Sprintf("references while %s is swept over %s", c.Axis, places(n)), fmt.Sprintf("a key such as at: {%s: %s}: where it stands in all of them", c.Axis, angles[0])))
+			findings = append(findings, q.Cadence.at.Finding(fmt.Sprintf("references while %s is swept over %s", c.Axis, placeCount(n)), fmt.Sprintf("a key such as at: {%s: %s}: where it stands in all of them", c.Axis, angles[0])))
 		}
 	}
 	if len(findings) > 0 {

@@ -339,7 +339,7 @@ func (r *Recipe) bothSides(q *Result, need int) []protocol.Finding {
 		}
 	}
 	if below < need || above < need {
-		return []protocol.Finding{q.alongAt.Finding(fmt.Sprintf("%s of %s below the pump at 0 deg and %d above it", places(below), q.Along, above), fmt.Sprintf("at least %d on each side, such as at: [-3.2 deg, -3 deg, …, 3 deg, 3.2 deg]: the zero lies between the two sides of the ring", need))}
+		return []protocol.Finding{q.alongAt.Finding(fmt.Sprintf("%s of %s below the pump at 0 deg and %d above it", placeCount(below), q.Along, above), fmt.Sprintf("at least %d on each side, such as at: [-3.2 deg, -3 deg, …, 3 deg, 3.2 deg]: the zero lies between the two sides of the ring", need))}
 	}
 	return nil
 }
@@ -361,7 +361,7 @@ func (r *Recipe) against(f Facts, q *Result, along scan.Axis, need int) (finding
 	if c, ok := r.column(q.Along); !ok || c.ConjugateOf == "" {
 		return append(findings, r.swept(q.Along, q.alongAt, need, "a peak")...)
 	} else if n := distinct(c.Values); n < need {
-		findings = append(findings, q.alongAt.Finding(fmt.Sprintf("%s of %s about each partner", places(n), q.Along), fmt.Sprintf("at least %d, for a peak: span and step beside conjugate_of", need)))
+		findings = append(findings, q.alongAt.Finding(fmt.Sprintf("%s of %s about each partner", placeCount(n), q.Along), fmt.Sprintf("at least %d, for a peak: span and step beside conjugate_of", need)))
 	}
 	return findings
 }
@@ -412,12 +412,12 @@ func (r *Recipe) swept(axis drivers.AxisName, at strict.Place, need int, what st
 	case n == 0:
 		return []protocol.Finding{at.Finding(fmt.Sprintf("the axis %q, which is not swept", axis), "an axis of the sweep")}
 	case n < need:
-		return []protocol.Finding{at.Finding(fmt.Sprintf("%s of %s", places(n), axis), fmt.Sprintf("at least %d different ones, for %s", need, what))}
+		return []protocol.Finding{at.Finding(fmt.Sprintf("%s of %s", placeCount(n), axis), fmt.Sprintf("at least %d different ones, for %s", need, what))}
 	}
 	return nil
 }
 
-func places(n int) string {
+func placeCount(n int) string {
 	if n == 1 {
 		return "one place"
 	}
