@@ -26,12 +26,16 @@ func model(f *bench.File, result scan.Result, rows estimate.Rows) (m estimate.Mo
 	if m, err := source.New(optics); err == nil {
 		warnings = m.Warnings()
 	}
+	w.perfect, _ = source.New(perfect(optics)) // nil where the optics cannot be computed
 	for _, r := range rows.Readings {
 		if _, doubtful := rows.Doubtful[r.Sequence]; r.Kind == protocol.Light && r.Accepted && !doubtful {
 			w.lights = append(w.lights, r)
 		}
 	}
 	if len(w.lights) == 0 {
+		return m, warnings
+	}
+	if w.perfect == nil && result.Kind != scan.Efficiency {
 		return m, warnings
 	}
 	switch result.Kind {
@@ -58,6 +62,16 @@ type witness struct {
 	optics source.Optics
 	result scan.Result
 	lights []protocol.Reading
+
+	perfect *source.Model // with perfect detectors, for the shape of a profile
+}
+
+func perfect(o source.Optics) source.Optics {
+	for _, arm := range []*source.Arm{&o.Signal, &o.Idler} {
+		arm.Detector = source.Detector{Efficiency: 1, Model: arm.Detector.Model}
+		arm.FluorescenceHzPerW, arm.StrayHzPerW = 0, 0
+	}
+	return o
 }
 
 // pose is how the bench stood at a reading, as the model wants it.
@@ -153,13 +167,7 @@ func partnerProcess(p phasematch.Process) phasematch.Process {
 // scale, offset and background are the fit's. All other axes follow it as they did in the readings,
 // an arm that was kept on the partner for one; the crystal stands tiltDeg further than it says.
 func (w witness) profile(lights []protocol.Reading, tiltDeg float64) func(float64) float64 {
-	optics := w.optics
-	for _, arm := range []*source.Arm{&optics.Signal, &optics.Idler} {
-		arm.Detector = source.Detector{Efficiency: 1, Model: arm.Detector.Model}
-		arm.FluorescenceHzPerW, arm.StrayHzPerW = 0, 0
-	}
-	m, err := source.New(optics)
-	if err != nil || len(lights) == 0 {
+	if w.perfect == nil || len(lights) == 0 {
 		return nil
 	}
 	base := w.pose(lights[0])
@@ -172,7 +180,7 @@ func (w witness) profile(lights []protocol.Reading, tiltDeg float64) func(float6
 		}
 		w.file.Put(&p, w.result.Along, deg)
 		p.TiltDeg += tiltDeg
-		r := m.Rates(p)
+		r := w.perfect.Rates(p)
 		switch of {
 		case w.channelOf(w.file.Optics.Signal):
 			return r.SignalHz

@@ -276,6 +276,7 @@ func newComparison(rows Rows, bench Bench, model Model, q CurveQuestion, kind st
 			a, _ := angleOf(row, q.Against)
 			g.trueDeg += a / float64(len(lights))
 		}
+		g.trueDeg = math.Round(g.trueDeg*1e6) / 1e6 // no axis tells more, and a sum of shares does
 		c.groups = append(c.groups, g)
 	}
 	slices.Sort(c.r.Used)

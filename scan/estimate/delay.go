@@ -39,10 +39,13 @@ type DelayProfile struct {
 	// CaptureIn is the coverage interval: what is lost, 1 - capture, is known to a factor rather than
 	// to a difference, so it is not symmetric.
 	CaptureIn Interval `json:"window_capture_interval"`
-	PairsHz   float64  `json:"pairs_per_s"`       // in the middle of the window
-	FloorHz   float64  `json:"accidentals_per_s"` // the flat floor
-	FloorU    float64  `json:"accidentals_standard_uncertainty_per_s"`
-	// ByFloorS is the window that the floor and the singles' rates give, null where none was seen.
+	PairsHz   float64  `json:"pairs_per_s"` // in the middle of the window
+	BelowHz   float64  `json:"accidentals_below_per_s"`
+	BelowU    float64  `json:"accidentals_below_standard_uncertainty_per_s"`
+	AboveHz   float64  `json:"accidentals_above_per_s"`
+	AboveU    float64  `json:"accidentals_above_standard_uncertainty_per_s"`
+	// ByFloorS is the window that the floors and the singles' rates give; null where none was seen, or
+	// where a dead time ends within the sweep.
 	ByFloorS *float64 `json:"full_width_by_accidentals_s"`
 	ByFloorU *float64 `json:"full_width_by_accidentals_standard_uncertainty_s"`
 }
@@ -54,12 +57,17 @@ const nano = 1e-9
 // the window is. A pair is counted when its two times, apart by the delay and a Gaussian jitter, are
 // no more than half the full window apart, so the profile is a box convolved with a Gaussian,
 //
-//	P {erf[(W/2 - v)/(sqrt2 s)] + erf[(W/2 + v)/(sqrt2 s)]}/2 + floor,   v = delay - centre,
+//	P {erf[(W/2 - v)/(sqrt2 s)] + erf[(W/2 + v)/(sqrt2 s)]}/2 + floor,   v = delay - centre.
 //
-// on the flat floor of the accidentals (derived here; held against drawn times by
-// TestDelayScansOfSingleTimesGiveTheWindowBack). It is fitted by Poisson likelihood; the counts of
-// the pair's first channel are the exposure, so that a drifting pump makes no false flank. The
-// setting's own scale is taken as exact. The error is a *Refusal where there is nothing to fit.
+// The floor is flat on either side, and not the same on both: a chance partner that comes after its
+// herald is missed where the herald's true partner made the detector dead, which is the case for the
+// share of heralds that have one, and that share is not the same for the two detectors. As the window
+// goes over the pairs the one floor becomes the other. (Derived here; held against drawn times by
+// TestDelayScansOfSingleTimesGiveTheWindowBack.)
+//
+// The fit is by Poisson likelihood; the counts of the pair's first channel are the exposure, so that a
+// drifting pump makes no false flank. The setting's own scale is taken as exact. The error is a
+// *Refusal where there is nothing to fit.
 func Delay(rows Rows, bench Bench, q DelayQuestion) (Result, error) {
 	if q.Coverage == 0 {
 		q.Coverage = 0.95
@@ -84,10 +92,10 @@ func Delay(rows Rows, bench Bench, q DelayQuestion) (Result, error) {
 	}
 	// Where no reading lies on an edge, the likelihood is flat between the two beside it, and nothing
 	// holds the jitter.
-	fit, err := FitPeak(scan.data, FlatTop, nil)
+	fit, err := FitPeak(scan.data, window, nil)
 	sharp := err != nil || fit.Fit.Bounded[edgeParam] || fit.Fit.Params[edgeParam] < scan.pitch()/4
 	if sharp {
-		fit, err = fitPeak(scan.data, FlatTop, nil, scan.pitch()/4)
+		fit, err = fitPeak(scan.data, window, nil, scan.pitch()/4)
 	}
 	if err != nil {
 		no.addf("%v; want a sweep with readings on both edges that ends on the floor beside them", err)
@@ -128,12 +136,13 @@ func Delay(rows Rows, bench Bench, q DelayQuestion) (Result, error) {
 	r.Unit = scan.unit
 	r.state(b)
 	r.Delay = scan.profile(fit, b.U*scan.perNano, widthU, sharp, q)
+	scan.floors(r.Delay, fit, bench, pair)
 	r.Delay.judge(&r, bench.Counter, q.Channel)
 	g := fit.Goodness(q.Trials, q.Seed)
 	r.noteValue("Cash statistic", g.Statistic, "1", fmt.Sprintf("%d degrees of freedom; %d simulated data sets gave %.4g on average", fit.Fit.Freedom, g.Trials, g.Mean))
 	r.noteValue("goodness of fit", g.P, "1", "share of simulated data sets that fit no better")
 	if g.P < onePercent && !sharp {
-		r.Warnings = append(r.Warnings, fmt.Sprintf("a box with Gaussian edges does not describe the readings (p = %.2g): centre, width and capture are those of the wrong shape", g.P))
+		r.Warnings = append(r.Warnings, fmt.Sprintf("a box with Gaussian edges on two floors does not describe the readings (p = %.2g): centre, width and capture are those of the wrong shape", g.P))
 	}
 	r.Residuals = fit.Residuals()
 	for i := range r.Residuals {
@@ -152,10 +161,10 @@ type delayed struct {
 	perNano  float64 // nanoseconds in one of the setting's units
 	chances  float64 // sum of S D / T over all readings: times W it is the floor's counts
 	exposure float64
+	singles  [2]float64 // of the pair's two channels, all readings
 }
 
 func delayScan(lights []protocol.Reading, ch channels, setting string, r *Result, no *Refusal) (d delayed) {
-	singles := 0.0
 	for _, row := range lights {
 		at, name, ok := settingOf(row, setting)
 		if !ok {
@@ -174,17 +183,18 @@ func delayScan(lights []protocol.Reading, ch channels, setting string, r *Result
 			return d
 		}
 		d.data = append(d.data, Spot{AngleDeg: at * d.perNano, Counts: one.c, Exposure: one.s})
-		d.chances, d.exposure, singles = d.chances+one.chances, d.exposure+one.gateS, singles+one.s
+		d.chances, d.exposure = d.chances+one.chances, d.exposure+one.gateS
+		d.singles[0], d.singles[1] = d.singles[0]+one.s, d.singles[1]+one.d
 		r.Used = append(r.Used, row.Sequence)
 	}
 	switch {
 	case len(d.data) == 0:
 		no.addf("no light reading counts; want a sweep of %s", setting)
-	case singles == 0:
+	case d.singles[0] == 0:
 		no.addf("channel %q counted nothing; want light", ch.s)
 	}
 	for i := range d.data {
-		d.data[i].Exposure *= d.exposure / singles
+		d.data[i].Exposure *= d.exposure / d.singles[0]
 	}
 	return d
 }
@@ -238,7 +248,7 @@ func (d delayed) profile(fit PeakFit, centreU, widthU float64, sharp bool, q Del
 	top := p[heightParam] / math.Erf(p[widthParam]/2/(math.Sqrt2*p[edgeParam]))
 	w := &DelayProfile{Setting: q.Setting, CentreS: p[centreParam] * nano, CentreU: centreU * nano, WidthS: p[widthParam] * nano, WidthU: widthU * nano,
 		JitterS: p[edgeParam] * nano, OperatingS: at * nano, Declared: q.Operating != nil, Capture: capture(p), CaptureU: fit.carry(capture),
-		PairsHz: top, FloorHz: p[groundParam], FloorU: fit.Fit.U(groundParam)}
+		PairsHz: top, BelowHz: p[groundParam], BelowU: fit.Fit.U(groundParam), AboveHz: p[ground2Param], AboveU: fit.Fit.U(ground2Param)}
 	if sharp {
 		// The jitter may be anything from none to what was held.
 		none := append([]float64(nil), p...)
@@ -253,11 +263,40 @@ func (d delayed) profile(fit PeakFit, centreU, widthU float64, sharp bool, q Del
 		factor := math.Exp(distuv.UnitNormal.Quantile((1+q.Coverage)/2) * w.CaptureU / lost)
 		w.CaptureIn = Interval{math.Max(0, 1-lost*factor), 1 - lost/factor}
 	}
-	if d.chances > 0 && !fit.Fit.Bounded[groundParam] {
-		by, u := w.FloorHz*d.exposure/d.chances, w.FloorU*d.exposure/d.chances
-		w.ByFloorS, w.ByFloorU = &by, &u
-	}
 	return w
+}
+
+// floors works the window out that the floors ask for: chance partners come at the rate S D W, less
+// on either side those that meet a detector made dead by a pair.
+func (d delayed) floors(w *DelayProfile, fit PeakFit, bench Bench, pair [2]string) {
+	mean, u := (w.BelowHz+w.AboveHz)/2, math.Hypot(w.BelowU, w.AboveU)/2
+	if !(d.chances > 0) || fit.Fit.Bounded[groundParam] || fit.Fit.Bounded[ground2Param] {
+		return
+	}
+	reach := 0.0
+	for _, s := range fit.data {
+		reach = math.Max(reach, (math.Abs(s.AngleDeg-fit.Fit.Params[centreParam])+fit.Fit.Params[widthParam]/2)*nano)
+	}
+	missed := 0.0
+	for i, channel := range pair {
+		for _, a := range bench.Arms {
+			if a.Channel != channel {
+				continue
+			}
+			switch tau := a.DeadTime.Value; {
+			case tau >= reach: // where the partner of the other channel's counts makes it dead all along
+				missed += w.PairsHz * d.exposure / d.singles[1-i] / 2
+			case tau > 0:
+				return
+			}
+		}
+	}
+	if missed >= 1 {
+		return
+	}
+	scale := d.exposure / d.chances / (1 - missed)
+	by, byU := mean*scale, u*scale
+	w.ByFloorS, w.ByFloorU = &by, &byU
 }
 
 // judge compares with what the bench file declares.
@@ -269,7 +308,7 @@ func (w *DelayProfile) judge(r *Result, c Counter, channel string) {
 	}
 	if w.ByFloorS != nil {
 		if apart := (w.WidthS - *w.ByFloorS) / math.Hypot(w.WidthU, *w.ByFloorU); math.Abs(apart) > 4 {
-			r.Warnings = append(r.Warnings, fmt.Sprintf("the floor of %s asks for a window of %.4g ± %.2g ns, the edges for %.4g ± %.2g ns: something besides chance counts beside the window, or chance pairs are lost", channel, *w.ByFloorS/nano, *w.ByFloorU/nano, w.WidthS/nano, w.WidthU/nano))
+			r.Warnings = append(r.Warnings, fmt.Sprintf("the floors of %s ask for a window of %.4g ± %.2g ns, the edges for %.4g ± %.2g ns: something besides chance counts beside the window, or chance pairs are lost", channel, *w.ByFloorS/nano, *w.ByFloorU/nano, w.WidthS/nano, w.WidthU/nano))
 		}
 	}
 	if w.Declared && c.Capture.U > 0 {
@@ -300,9 +339,9 @@ func (w *DelayProfile) text(b *strings.Builder) {
 	}
 	line("true pairs inside the window", "%.5g ± %.2g (interval %.5g to %.5g), %s", w.Capture, w.CaptureU, w.CaptureIn.Low, w.CaptureIn.High, where)
 	line("pairs in the middle", "%.5g /s", w.PairsHz)
-	line("floor of accidentals", "%.4g ± %.2g /s", w.FloorHz, w.FloorU)
+	line("accidentals below, and above", "%.4g ± %.2g, and %.4g ± %.2g /s", w.BelowHz, w.BelowU, w.AboveHz, w.AboveU)
 	if w.ByFloorS != nil {
-		line("full width by that floor", "%.4g ± %.2g ns", *w.ByFloorS/nano, *w.ByFloorU/nano)
+		line("full width by these floors", "%.4g ± %.2g ns", *w.ByFloorS/nano, *w.ByFloorU/nano)
 	}
 	fmt.Fprintf(b, "  for the counter in the bench file:   window: {full: %.5g ns, u: %.2g ns}, capture: {value: %.4f %%, u: %.2g %%}\n", w.WidthS/nano, w.WidthU/nano, 100*w.Capture, math.Max(100*w.CaptureU, 0.001))
 }

@@ -20,6 +20,9 @@ const (
 	FlatTop       PeakShape = "flat_top"  // a box of the width given, its edges softened by a Gaussian of deviation edge
 	TwoPeaks      PeakShape = "two_peaks" // two Gaussians, each with its own width
 	PredictedPeak PeakShape = "predicted" // Model.Profile with offset, scale and background
+
+	// window is a flat top on a floor of two levels: what a coincidence window sees against a delay.
+	window PeakShape = "window"
 )
 
 // halfSinc is where sinc^2 is one half.
@@ -45,7 +48,8 @@ const (
 	heightParam
 	groundParam
 	edgeParam
-	centre2Param = iota
+	ground2Param
+	centre2Param = iota - 1
 	width2Param
 	height2Param
 )
@@ -56,6 +60,7 @@ var peakNames = map[PeakShape][]string{
 	FlatTop:       {"centre", "box width", "height", "background", "edge"},
 	TwoPeaks:      {"centre", "fwhm", "height", "background", "second centre", "second fwhm", "second height"},
 	PredictedPeak: {"offset", "scale", "background"},
+	window:        {"centre", "full width", "height", "floor below", "jitter", "floor above"},
 }
 
 // PeakFit is a fitted profile.
@@ -196,6 +201,10 @@ func (f *PeakFit) rate(x float64, p []float64) float64 {
 		return p[heightParam] * s * s
 	case FlatTop:
 		return p[heightParam] * softBox(v, p[widthParam], p[edgeParam])
+	case window:
+		// As far as the window has gone over the pairs, the one floor has become the other.
+		over := math.Min(math.Max((v+p[widthParam]/2)/p[widthParam], 0), 1)
+		return p[heightParam]*softBox(v, p[widthParam], p[edgeParam]) + over*(p[ground2Param]-p[groundParam])
 	case TwoPeaks:
 		return p[heightParam]*gauss(v, p[widthParam]) + p[height2Param]*gauss(x-p[centre2Param], p[width2Param])
 	}
@@ -250,7 +259,7 @@ func (f *PeakFit) problem(start []float64, low, high float64) problem {
 		lo[heightParam] = 0
 	}
 	switch f.Shape {
-	case FlatTop:
+	case FlatTop, window:
 		lo[edgeParam], hi[edgeParam] = finest, span/2
 		if f.heldEdge > 0 {
 			lo[edgeParam], hi[edgeParam] = f.heldEdge, f.heldEdge
@@ -314,6 +323,10 @@ func (f *PeakFit) starts(low, high float64) [][]float64 {
 	case FlatTop:
 		for _, e := range []float64{0.05, 0.15, 0.4} {
 			list = append(list, []float64{centre, width, height, ground, e * width})
+		}
+	case window:
+		for _, e := range []float64{0.05, 0.15, 0.4} {
+			list = append(list, []float64{centre, width, height, ground, e * width, ground})
 		}
 	case TwoPeaks:
 		for _, apart := range []float64{0.5, 1, 0.25} {

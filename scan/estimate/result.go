@@ -39,6 +39,10 @@ type Result struct {
 	Warnings   []string    `json:"warnings"`
 	Because    []string    `json:"because"` // why there is no value
 
+	// What it is a number of, also where there is none: an earlier result is found by it.
+	Axis    string `json:"axis,omitempty"`    // of a peak, a zero, a curve: the axis along which profiles are fitted
+	Setting string `json:"setting,omitempty"` // of a delay: the setting that is swept
+
 	// What a kind adds.
 	Delay *DelayProfile `json:"delay,omitempty"`       // of the kind delay
 	Zero  *ZeroOfArm    `json:"zero,omitempty"`        // of the kind zero
@@ -266,7 +270,16 @@ func (r Result) Sentence() string {
 	}
 	places := decimals(*r.Expanded)
 	return fmt.Sprintf("The %s is %s ± %s%s (expanded uncertainty, k = %.2f, %.4g %% coverage); %s.", name,
-		strconv.FormatFloat(*r.Value, 'f', places, 64), strconv.FormatFloat(*r.Expanded, 'f', places, 64), unit, *r.K, 100*r.Coverage, counts)
+		fixed(*r.Value, places), fixed(*r.Expanded, places), unit, *r.K, 100*r.Coverage, counts)
+}
+
+// fixed prints so many decimals, and nothing never as less than nothing.
+func fixed(v float64, places int) string {
+	text := strconv.FormatFloat(v, 'f', places, 64)
+	if bare, negative := strings.CutPrefix(text, "-"); negative && strings.Trim(bare, "0.") == "" {
+		return bare
+	}
+	return text
 }
 
 func (r Result) symmetric() bool {

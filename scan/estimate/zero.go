@@ -123,7 +123,7 @@ func Zero(rows Rows, bench Bench, model Model, q ZeroQuestion) (Result, error) {
 		}
 		r.Residuals = append(r.Residuals, side[i].Residuals()...)
 	}
-	r.note("zero in the bench file", fmt.Sprintf("add %+.4f deg, times sense, to the key zero of %s: then the pump is at 0", *r.Value, q.Axis))
+	r.note("zero in the bench file", fmt.Sprintf("add %s deg, times sense, to the key zero of %s: then the pump is at 0", fixed(*r.Value, 4), q.Axis))
 	r.fitted = func(deg float64) float64 {
 		if deg > 0 {
 			return side[1].RateHz(deg)
