@@ -75,29 +75,10 @@ func planOf(ctx context.Context, book *logbook.Book, row logbook.RunRow) (*bench
 	}
 	facts := file.Facts()
 	facts.AcceptedAt = row.QueuedAt.Time
-	facts.Earlier = earlier(taken)
+	// The values that the run's points were made of, whatever was measured since.
+	facts.Earlier = func(ask scan.EarlierAsk) (scan.EarlierSource, error) { return logbook.Again(taken, ask) }
 	plan, err := r.Plan(facts)
 	return file, plan, err
-}
-
-// earlier answers with the values that a run's points were made of, whatever was measured since.
-func earlier(taken []protocol.EarlierValue) func(scan.EarlierAsk) (scan.EarlierSource, error) {
-	return func(ask scan.EarlierAsk) (scan.EarlierSource, error) {
-		for _, v := range taken {
-			if v.Kind != string(ask.Kind) || v.Axis != string(ask.Axis) || v.Setting != string(ask.Setting) || v.From != ask.From {
-				continue
-			}
-			s := scan.EarlierSource{Run: string(v.Run), Sequence: v.Sequence, U: v.U}
-			if v.Angle != nil {
-				s.Angle = *v.Angle
-			}
-			if v.Value != nil {
-				s.Value = *v.Value
-			}
-			return s, nil
-		}
-		return scan.EarlierSource{}, errors.New("the run's journal holds none: its points were not decided")
-	}
 }
 
 // Result works out one result that a plan asks for from the rows of its run.
@@ -107,9 +88,11 @@ func Result(rows estimate.Rows, file *bench.File, plan scan.Plan, q scan.Result,
 	m, warnings := model(file, q, rows)
 	result, err := asked(rows, file, b, m, plan, q, o)
 	if refusal, ok := errors.AsType[*estimate.Refusal](err); ok {
-		return estimate.Refused(rows, string(q.Kind), refusal), nil
+		result, err = estimate.Refused(rows, string(q.Kind), refusal), nil
+	} else {
+		result.Warnings = append(result.Warnings, warnings...)
 	}
-	result.Warnings = append(result.Warnings, warnings...)
+	result.Axis, result.Setting = string(q.Along), string(q.Setting)
 	return result, err
 }
 
