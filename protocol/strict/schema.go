@@ -203,7 +203,8 @@ func (x *explorer) explore(top string, context script) []way {
 					tried[key]++
 					for k := range d.options {
 						if k != d.chosen && x.run(with(w.script, d.id, k), prefer, w.high).log(top, d.path) != p.log(top, d.path) {
-							x.matters[d.id], grown = true, true
+							grown = true
+							x.mark(d)
 							break
 						}
 					}
@@ -212,6 +213,20 @@ func (x *explorer) explore(top string, context script) []way {
 		}
 		if !grown {
 			return ways
+		}
+	}
+}
+
+// mark says that a question matters, and so whether the value is there at all and of its kind: else
+// it is not asked.
+func (x *explorer) mark(d decision) {
+	x.matters[d.id] = true
+	for path := d.path; ; path = path[:strings.LastIndexByte(path, '[')] {
+		for _, suffix := range []string{"?", "{}", "[]"} {
+			x.matters[path+suffix] = true
+		}
+		if !strings.HasSuffix(path, "]") || len(path) <= len(d.owner)+1 {
+			return
 		}
 	}
 }
