@@ -9,6 +9,8 @@
 package bench
 
 import (
+	"encoding/json"
+
 	"gemel/protocol/strict"
 )
 
@@ -24,9 +26,30 @@ func Load(path string) (*File, error) {
 // Parse reads the text of a bench file. Relative paths in it start at the folder of path. The error
 // is a *strict.Error with all findings.
 func Parse(path string, text []byte) (*File, error) {
-	doc := strict.Parse(path, text)
-	m := doc.Root()
-	r := reader{doc: doc, file: &File{Path: path, Text: string(text), outlook: &outlook{}}}
+	r := reader{doc: strict.Parse(path, text), file: &File{Path: path, Text: string(text), outlook: &outlook{}}}
+	r.read()
+	if err := r.doc.Err(); err != nil {
+		return nil, err
+	}
+	return r.file, nil
+}
+
+// Schema is the JSON Schema of bench files, made of the reader that Parse uses.
+func Schema() (json.RawMessage, error) {
+	return strict.Describe("gemel bench", func(doc *strict.Doc) {
+		r := reader{doc: doc, file: &File{outlook: &outlook{}}}
+		r.read()
+	})
+}
+
+// reader fills a File from a document.
+type reader struct {
+	doc  *strict.Doc
+	file *File
+}
+
+func (r *reader) read() {
+	m := r.doc.Root()
 	r.bench(m.Need("bench"))
 	r.lines(m.Need("lines"))
 	r.simulation(m.Opt("simulation"))
@@ -42,17 +65,7 @@ func Parse(path string, text []byte) (*File, error) {
 	r.service(m)
 	m.Later("page", "guards")
 	m.Done()
-	if doc.Readable() {
+	if r.doc.Readable() {
 		r.check()
 	}
-	if err := doc.Err(); err != nil {
-		return nil, err
-	}
-	return r.file, nil
-}
-
-// reader fills a File from a document.
-type reader struct {
-	doc  *strict.Doc
-	file *File
 }

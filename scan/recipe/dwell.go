@@ -150,7 +150,7 @@ func readCadenceOr(m strict.Map, at strict.Place, what string, or scan.Dwell) Ca
 		c.Dwell = readTime(dwell)
 	}
 	if text := every.Text(); every.Good() {
-		if n := everyPoints.FindStringSubmatch(text); n != nil {
+		if n := every.Match(everyPoints); n != nil {
 			c.EveryPoints, _ = strconv.Atoi(n[1])
 		} else if strings.Contains(text, "point") {
 			every.Failf(`a number of points such as "10 points", or a time such as "30 min"`)

@@ -28,6 +28,7 @@
 package recipe
 
 import (
+	"encoding/json"
 	"fmt"
 	"math/big"
 	"time"
@@ -97,10 +98,22 @@ func Load(path string) (*Recipe, error) {
 // *strict.Error with all findings.
 func Parse(file string, text []byte) (*Recipe, error) {
 	doc := strict.Parse(file, text)
+	r := read(doc)
+	if err := doc.Err(); err != nil {
+		return nil, err
+	}
+	r.File, r.Text = file, string(text)
+	return r, nil
+}
+
+// Schema is the JSON Schema of recipes, made of the reader that Parse uses.
+func Schema() (json.RawMessage, error) {
+	return strict.Describe("gemel recipe", func(doc *strict.Doc) { read(doc) })
+}
+
+func read(doc *strict.Doc) *Recipe {
 	m := doc.Root()
 	r := &Recipe{
-		File:   file,
-		Text:   string(text),
 		Title:  m.Need("title").Text(),
 		Order:  readOrder(m.Opt("order")),
 		Repeat: readRepeat(m.Opt("repeat")),
@@ -123,10 +136,7 @@ func Parse(file string, text []byte) (*Recipe, error) {
 	if visits := r.visits(); visits.Cmp(big.NewInt(MaxVisits)) > 0 {
 		sweep.Fail(fmt.Sprintf("%s points visited %d times are %s visits", r.points(), r.Repeat.Times, visits), fmt.Sprintf("at most %d", MaxVisits))
 	}
-	if err := doc.Err(); err != nil {
-		return nil, err
-	}
-	return r, nil
+	return r
 }
 
 func readOrder(v strict.Value) Order {

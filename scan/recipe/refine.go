@@ -65,12 +65,11 @@ func readRefine(v strict.Value) *Refine {
 const maxRefined = 10_000
 
 func readPoints(v strict.Value) int {
-	text := v.Text()
-	if !v.Good() {
+	if v.Text(); !v.Good() {
 		return 0
 	}
 	var n int
-	if m := everyPoints.FindStringSubmatch(text); m != nil {
+	if m := v.Match(everyPoints); m != nil {
 		n, _ = strconv.Atoi(m[1])
 	}
 	if n == 0 || n > maxRefined {

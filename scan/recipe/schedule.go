@@ -50,11 +50,10 @@ func readClock(v strict.Value) *Clock {
 	if !v.Given() {
 		return nil
 	}
-	text := v.Text()
-	if !v.Good() {
+	if v.Text(); !v.Good() {
 		return nil
 	}
-	n := clockTime.FindStringSubmatch(text)
+	n := v.Match(clockTime)
 	if n == nil {
 		v.Failf(`a time of the day from "00:00" to "23:59"`)
 		return nil

@@ -54,7 +54,7 @@ func readWith(v strict.Value, leader Entry, leaderOK bool, seen map[string]bool)
 	case !ok || !leaderOK:
 		return nil
 	case e.Values.Len() != leader.Values.Len():
-		m.Fail(fmt.Sprintf("%d values beside %d", e.Values.Len(), leader.Values.Len()), "as many: both are stepped together")
+		v.Fail(fmt.Sprintf("%d values beside %d", e.Values.Len(), leader.Values.Len()), "as many: both are stepped together")
 		return nil
 	}
 	return &e

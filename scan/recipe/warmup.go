@@ -44,12 +44,11 @@ func readWarmUp(v strict.Value) *WarmUp {
 	}
 	for _, e := range entries {
 		one := Steady{Sensor: drivers.DeviceName(e.Name), nameAt: e.Key, at: e.Value.Place()}
-		text := e.Value.Text()
-		if !e.Value.Good() {
+		if e.Value.Text(); !e.Value.Good() {
 			continue
 		}
 		const want = `how little it may move, and over which time, such as "0.5 %% over 10 min"`
-		parts := movesOver.FindStringSubmatch(text)
+		parts := e.Value.Match(movesOver)
 		if parts == nil {
 			e.Value.Failf(want)
 			continue
