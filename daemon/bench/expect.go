@@ -22,9 +22,20 @@ type outlook struct {
 	warnings []string
 	err      error
 
-	mu    sync.Mutex
-	empty map[unit.Angle]string // why there is no emission, by tilt
+	mu     sync.Mutex
+	empty  map[unit.Angle]string // why there is no emission, by tilt
+	flanks map[flank][2]unit.Angle
 }
+
+// flank names what was asked for: plans are worked out again and again, and the first answer takes a
+// second.
+type flank struct {
+	arm drivers.AxisName
+	at  source.Pose
+}
+
+// mostKnown bounds what is remembered. Forgetting costs time, never an answer.
+const mostKnown = 10_000
 
 // expectation is the light as the file states it, with what it says is to be expected of detectors
 // and backgrounds. Nothing of a simulated bench's truth is in it.
@@ -86,7 +97,7 @@ func (f *File) noEmission(tilt unit.Angle) string {
 				why = err.Error()
 			}
 		}
-		if l.empty == nil || len(l.empty) > 10_000 {
+		if l.empty == nil || len(l.empty) >= mostKnown {
 			l.empty = map[unit.Angle]string{}
 		}
 		l.empty[tilt] = why
@@ -195,17 +206,72 @@ func (f *File) flanks(arm drivers.AxisName, top []scan.AxisTarget) (low, high un
 			return 0, 0, err
 		}
 	}
-	pairs := func(deg float64) float64 {
-		f.Put(&p, arm, deg)
-		return m.Exact(p).PairsHz
+	l := f.outlook
+	asked := flank{arm, p}
+	f.Put(&asked.at, arm, begin)
+	l.mu.Lock()
+	known, ok := l.flanks[asked]
+	l.mu.Unlock()
+	if ok {
+		return known[0], known[1], nil
 	}
-	l, h, ok := flanksOf(pairs, begin, f.openDeg()/3)
-	if !ok {
-		return 0, 0, fmt.Errorf("no coincidences about %s at %.4f deg, nor a half of any within reach; want the other arm where the partners go", arm, begin)
+	if low, high, err = f.halved(m, asked); err != nil {
+		return 0, 0, err
 	}
-	// A ten-thousandth of a degree is finer than any arm needs, and the same on every machine.
-	round := func(deg float64) unit.Angle { return unit.Degrees(math.Round(deg*1e4) / 1e4) }
-	return round(l), round(h), nil
+	l.mu.Lock()
+	defer l.mu.Unlock()
+	if l.flanks == nil || len(l.flanks) >= mostKnown {
+		l.flanks = map[flank][2]unit.Angle{}
+	}
+	l.flanks[asked] = [2]unit.Angle{low, high}
+	return low, high, nil
+}
+
+// halved works the flanks out.
+func (f *File) halved(m *source.Model, asked flank) (low, high unit.Angle, err error) {
+	arm, p := asked.arm, asked.at
+	begin := p.SignalDeg
+	if i := slices.IndexFunc(f.Axes, func(a Axis) bool { return a.Name == arm }); f.Axes[i].Role == idlerArm {
+		begin = p.IdlerDeg
+	}
+	at := func(deg float64) source.Pose {
+		q := p
+		f.Put(&q, arm, deg)
+		return q
+	}
+	table := func(deg float64) float64 { return m.Rates(at(deg)).PairsHz }
+	exact := func(deg float64) float64 { return m.Exact(at(deg)).PairsHz }
+	peak, lowDeg, highDeg, ok := flanksOf(table, begin, f.openDeg()/3)
+	ring := f.Still()
+	ring.SignalDeg, ring.IdlerDeg = m.Reference()
+	ring.TiltDeg = 0
+	if !ok || table(peak) < 1e-3*m.Rates(ring).PairsHz {
+		return 0, 0, fmt.Errorf("no coincidences to speak of with %s at %.4f deg, or none that fall to a half within reach; want the other arm where the partners go", arm, begin)
+	}
+	// The table is true to 1 %; at a flank that is worth a few chords of the exact rate. A ten-thousandth
+	// of a degree is finer than any arm needs, and the same on every machine.
+	half := exact(peak) / 2
+	place := func(deg float64) unit.Angle {
+		return unit.Degrees(math.Round(chord(exact, half, deg, f.openDeg()/50)*1e4) / 1e4)
+	}
+	return place(lowDeg), place(highDeg), nil
+}
+
+// chord finds where a rate has a height near an angle.
+func chord(rate func(float64) float64, height, near, reach float64) float64 {
+	a, b := near-reach, near+reach
+	ya, yb := rate(a)-height, rate(b)-height
+	for range 4 {
+		if ya == yb {
+			break
+		}
+		x := b - yb*(b-a)/(yb-ya)
+		if math.Abs(x-near) > 10*reach { // not a flank: what the table found is nearer
+			return near
+		}
+		a, ya, b, yb = b, yb, x, rate(x)-height
+	}
+	return b
 }
 
 // openDeg is the smaller aperture's radius, as an angle: nothing along an arm is much narrower.
@@ -216,9 +282,10 @@ func (f *File) openDeg() float64 {
 
 // flanksOf finds, by steps and then by bisection, where a peak about an angle falls to half of its
 // maximum.
-func flanksOf(rate func(float64) float64, begin, step float64) (low, high float64, ok bool) {
+func flanksOf(rate func(float64) float64, begin, step float64) (at, low, high float64, ok bool) {
 	const most = 120 // steps to either side
-	at, top := begin, rate(begin)
+	at = begin
+	top := rate(at)
 	edge := func(side float64) float64 {
 		inner := at
 		for k := 1; k <= most; k++ {
@@ -229,7 +296,7 @@ func flanksOf(rate func(float64) float64, begin, step float64) (low, high float6
 			}
 			if y < top/2 {
 				outer := x
-				for range 30 {
+				for range 20 {
 					mid := (inner + outer) / 2
 					if rate(mid) < top/2 {
 						outer = mid
@@ -258,8 +325,8 @@ func flanksOf(rate func(float64) float64, begin, step float64) (low, high float6
 		}
 	}
 	if !(top > 0) {
-		return 0, 0, false
+		return at, 0, 0, false
 	}
 	low, high = edge(-1), edge(1)
-	return low, high, low < high
+	return at, low, high, low < high
 }
