@@ -8,6 +8,8 @@ import (
 	"gemel/drivers"
 	"gemel/drivers/line"
 	"gemel/protocol/strict"
+	"gemel/protocol/unit"
+	"gemel/sim/instruments"
 	"gemel/sim/source"
 )
 
@@ -257,6 +259,9 @@ func (r *reader) checkSimulation() {
 	for _, a := range f.Axes {
 		if a.Acceleration == 0 {
 			r.fail(a.at, "a simulated axis without acceleration", "acceleration: 20 deg/s2, or what it has")
+		}
+		if least := unit.Degrees(instruments.RunUpDeg) + t.axes[string(a.Name)].play; a.HomeRunUp != nil && *a.HomeRunUp < least {
+			r.fail(a.homeAt, fmt.Sprintf("a run-up of %s", *a.HomeRunUp), "%s or more: the virtual controller begins its search there, play included", least)
 		}
 	}
 	if r.doc.Err() != nil {
