@@ -46,7 +46,7 @@ func (k *Keeper) earlierNow(ctx context.Context) *lookup {
 // find returns the value that is asked for; its error says what was found, and what is wanted.
 func (l *lookup) find(ask scan.EarlierAsk) (scan.EarlierSource, error) {
 	if l.decided {
-		return l.again(ask)
+		return logbook.Again(l.taken, ask)
 	}
 	source, err := l.keeper.earlier(l.ctx, ask, l.now)
 	if none, ok := errors.AsType[*noValue](err); ok {
@@ -56,24 +56,6 @@ func (l *lookup) find(ask scan.EarlierAsk) (scan.EarlierSource, error) {
 		l.broken = err
 	}
 	return source, err
-}
-
-// again gives a run the values that it has begun with.
-func (l *lookup) again(ask scan.EarlierAsk) (scan.EarlierSource, error) {
-	for _, v := range l.taken {
-		if v.Kind != string(ask.Kind) || v.Axis != string(ask.Axis) || v.Setting != string(ask.Setting) || v.From != ask.From {
-			continue
-		}
-		s := scan.EarlierSource{Run: string(v.Run), Sequence: v.Sequence, U: v.U}
-		if v.Angle != nil {
-			s.Angle = *v.Angle
-		}
-		if v.Value != nil {
-			s.Value = *v.Value
-		}
-		return s, nil
-	}
-	return scan.EarlierSource{}, none("the run's journal has its points and no %s from %q beside them; want the recipe that it began with", subject(ask), ask.From)
 }
 
 // noValue says why there is no earlier result that will do. Anything else is no answer.
@@ -260,13 +242,8 @@ type result struct {
 	U       *float64 `json:"standard_uncertainty"`
 	Unit    string   `json:"unit"`
 	Because []string `json:"because"`
-	Axis    string   `json:"axis"` // of a peak
-	Zero    struct {
-		Axis string `json:"axis"`
-	} `json:"zero"`
-	Delay struct {
-		Setting string `json:"setting"`
-	} `json:"delay"`
+	Axis    string   `json:"axis"`
+	Setting string   `json:"setting"`
 }
 
 func readResult(e protocol.Entry) (result, error) {
@@ -281,8 +258,5 @@ func (r result) answers(ask scan.EarlierAsk) bool {
 	if r.Kind != string(ask.Kind) {
 		return false
 	}
-	if ask.Axis == "" {
-		return r.Delay.Setting == string(ask.Setting)
-	}
-	return cmp.Or(r.Axis, r.Zero.Axis) == string(ask.Axis)
+	return r.Axis == string(ask.Axis) && r.Setting == string(ask.Setting)
 }

@@ -7,6 +7,7 @@ import (
 	"fmt"
 
 	"gemel/protocol"
+	"gemel/scan"
 )
 
 // Titled is a run by its title alone: what has to be known of it before its results are read.
@@ -70,4 +71,23 @@ func (b *Book) Taken(ctx context.Context, run protocol.RunID) (values []protocol
 		return nil, false, fmt.Errorf("%s: entry %d: %w", where, numbered[0].Sequence, err)
 	}
 	return first.Earlier, true, nil
+}
+
+// Again finds among the values that a run has taken the one that is asked for, so that its recipe
+// comes to the same plan again.
+func Again(taken []protocol.EarlierValue, ask scan.EarlierAsk) (scan.EarlierSource, error) {
+	for _, v := range taken {
+		if v.Kind != string(ask.Kind) || v.Axis != string(ask.Axis) || v.Setting != string(ask.Setting) || v.From != ask.From {
+			continue
+		}
+		s := scan.EarlierSource{Run: string(v.Run), Sequence: v.Sequence, U: v.U}
+		if v.Angle != nil {
+			s.Angle = *v.Angle
+		}
+		if v.Value != nil {
+			s.Value = *v.Value
+		}
+		return s, nil
+	}
+	return scan.EarlierSource{}, fmt.Errorf("the run took no %s of %s%s from %q; want the recipe that it began with", ask.Kind, ask.Axis, ask.Setting, ask.From)
 }
