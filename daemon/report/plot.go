@@ -80,7 +80,7 @@ func pictureOf(r estimate.Result) (picture, bool) {
 	case r.Value == nil:
 		return picture{}, false
 	case r.Curve != nil:
-		return curved(*r.Curve), true
+		return curved(r), true
 	case r.By != nil:
 		return bySetting(*r.By), true
 	case len(r.Residuals) > 0:
@@ -89,26 +89,28 @@ func pictureOf(r estimate.Result) (picture, bool) {
 	return picture{}, false
 }
 
+const linePlaces = 700
+
 func profiled(r estimate.Result) picture {
-	p := picture{across: "angle / deg", up: "counts / s", fromZero: true, key: "circles: readings, with the root of their counts; line: the fit; below: what it leaves, in units of its uncertainty"}
+	p := picture{across: "angle / deg", up: "counts / s", fromZero: true,
+		key: "circles: readings less what is known of them (darks, accidentals), with the root of their counts; line: the fit; below: what it leaves, in units of its uncertainty"}
 	scale := 1.
 	if _, unit := r.Residuals[0].Place(); unit == "s" {
 		p.across, scale = "delay / ns", 1e9
 	}
+	rate, _ := r.Lines()
 	low, high := math.Inf(1), math.Inf(-1)
 	for _, one := range r.Residuals {
 		at, _ := one.Place()
 		low, high = math.Min(low, at), math.Max(high, at)
-		p.points = append(p.points, mark{place{at * scale, one.Counts / one.ExposureS}, math.Sqrt(math.Max(one.Counts, 1)) / one.ExposureS})
+		known := 0.
+		if rate != nil {
+			known = one.Expected/one.ExposureS - rate(at)
+		}
+		p.points = append(p.points, mark{place{at * scale, one.Counts/one.ExposureS - known}, math.Sqrt(math.Max(one.Counts, 1)) / one.ExposureS})
 		p.residuals = append(p.residuals, place{at * scale, one.Residual})
 	}
-	if rate, ok := r.Fitted(); ok {
-		const steps = 700
-		for i := range steps + 1 {
-			at := low + (high-low)*float64(i)/steps
-			p.fitted = append(p.fitted, place{at * scale, rate(at)})
-		}
-	}
+	p.fitted = lineOf(rate, low, high, scale)
 	switch {
 	case r.Zero != nil:
 		p.hairlines = []hairline{{r.Zero.LowDeg, fixed(r.Zero.LowDeg, 4)}, {*r.Value, "zero " + fixed(*r.Value, 4)}, {r.Zero.HighDeg, fixed(r.Zero.HighDeg, 4)}}
@@ -131,6 +133,17 @@ func profiled(r estimate.Result) picture {
 	return p
 }
 
+func lineOf(f func(float64) float64, low, high, scale float64) (line []place) {
+	if f == nil {
+		return nil
+	}
+	for i := range linePlaces + 1 {
+		at := low + (high-low)*float64(i)/linePlaces
+		line = append(line, place{at * scale, f(at)})
+	}
+	return line
+}
+
 func near(x float64, points []mark, within float64) bool {
 	for _, m := range points {
 		if math.Abs(m.x-x) <= within {
@@ -140,18 +153,21 @@ func near(x float64, points []mark, within float64) bool {
 	return false
 }
 
-func curved(c estimate.Curve) picture {
+func curved(r estimate.Result) picture {
+	c := r.Curve
 	p := picture{across: c.Against + " / deg", up: c.Along + " / deg",
 		key: "circles: fitted angles; broken line: predicted with nothing fitted; line: with the unknowns fitted; below: what is left, in units of its uncertainty"}
+	low, high := math.Inf(1), math.Inf(-1)
 	for _, one := range c.Places {
 		if one.Left != "" {
 			continue
 		}
+		low, high = math.Min(low, one.AgainstDeg), math.Max(high, one.AgainstDeg)
 		p.points = append(p.points, mark{place{one.AgainstDeg, one.AngleDeg}, one.U})
-		p.predicted = append(p.predicted, place{one.AgainstDeg, one.PredictedDeg})
-		p.fitted = append(p.fitted, place{one.AgainstDeg, one.FittedDeg})
 		p.residuals = append(p.residuals, place{one.AgainstDeg, one.ResidualDeg / one.U})
 	}
+	fitted, predicted := r.Lines()
+	p.fitted, p.predicted = lineOf(fitted, low, high, 1), lineOf(predicted, low, high, 1)
 	return p
 }
 
@@ -336,4 +352,7 @@ func plain(v float64) string {
 	return strconv.FormatFloat(math.Round(v*1e9)/1e9+0, 'g', 8, 64)
 }
 
-func fixed(v float64, places int) string { return strconv.FormatFloat(v, 'f', places, 64) }
+func fixed(v float64, places int) string {
+	p := math.Pow(10, float64(places))
+	return strconv.FormatFloat(math.Round(v*p)/p+0, 'f', places, 64) // + 0: nothing is not less than nothing
+}

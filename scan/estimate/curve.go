@@ -140,6 +140,7 @@ func TuningCurve(rows Rows, bench Bench, model Model, q CurveQuestion) (Result, 
 		}
 	}
 	v.Inseparable = append(v.Inseparable, same)
+	c.r.fitted = func(tiltDeg float64) float64 { return c.bare(tiltDeg+shift) + v.Unknowns[1].Value }
 	c.finish(fit)
 	return c.r, nil
 }
@@ -205,6 +206,13 @@ func ConjugateMap(rows Rows, bench Bench, model Model, q CurveQuestion) (Result,
 		v.Inseparable = append(v.Inseparable, "the ratio of the two filters' wavelengths and the ratio of the two axes' scales: both are a slope")
 	} else {
 		v.Inseparable = append(v.Inseparable, "a slope: with fewer than three places there is none to see")
+	}
+	c.r.fitted = func(deg float64) float64 {
+		y := c.bare(deg) + fit.p[0]
+		if free == 2 {
+			y += fit.p[1] * (deg - middle)
+		}
+		return y
 	}
 	c.finish(fit)
 	return c.r, nil
@@ -371,6 +379,15 @@ func (c *comparison) tuned(shift float64) (linear, int, error) {
 	return f, 1, err
 }
 
+// bare is where the model's bare light goes, NaN where it has none.
+func (c *comparison) bare(againstDeg float64) float64 {
+	v, err := c.model.Bare(againstDeg)
+	if err != nil {
+		return math.NaN()
+	}
+	return v
+}
+
 // factor multiplies the fits' uncertainties where the angles scatter more than they allow.
 func (c *comparison) factor(f linear) float64 { return f.dispersion.factor() }
 
@@ -401,6 +418,7 @@ func (c *comparison) finish(f linear) {
 	if f.dispersion.Significant {
 		c.r.Warnings = append(c.r.Warnings, fmt.Sprintf("the angles scatter about the model by %.2f times their uncertainties (p = %.2g), which are multiplied by it: an axis's errors from place to place, or a model that is not this crystal's", f.dispersion.Birge, f.dispersion.P))
 	}
+	c.r.predicted = c.bare
 	c.r.note("model", "its own uncertainty (dispersion formulas, temperature, pump wavelength) is not in the budget")
 	c.r.tidy()
 }

@@ -52,13 +52,16 @@ type Result struct {
 	Parts []Result      `json:"parts,omitempty"`       // the efficiency at each of these values, whole
 	Limit *UpperLimit   `json:"upper_limit,omitempty"` // of an efficiency without a single coincidence
 
-	quantity string                // what the sentence calls it
-	fitted   func(float64) float64 // the fitted profile, in counts a second against degrees or seconds
+	quantity string // what the sentence calls it
+	// As lines, for a picture: counts a second against degrees or seconds, degrees against degrees.
+	fitted, predicted func(float64) float64
 }
 
-// Fitted is the fitted profile of a peak, a zero or a delay, in counts a second against what its
-// residuals are against. It is there as long as the result was not read back from JSON.
-func (r Result) Fitted() (rateHz func(at float64) float64, ok bool) { return r.fitted, r.fitted != nil }
+// Lines are what was fitted, and what the model predicts with nothing fitted, nil where there is
+// none: of a profile counts a second, without what is known of them, against degrees or seconds; of a
+// curve degrees against degrees, NaN where no light goes. A result that was read back from JSON has
+// none.
+func (r Result) Lines() (fitted, predicted func(at float64) float64) { return r.fitted, r.predicted }
 
 // Correction is one step of the waterfall, from raw to result.
 type Correction struct {
