@@ -106,7 +106,7 @@ func (c *Counter) Count(ctx context.Context, gate time.Duration) (drivers.Gate, 
 	out.GateOpened = true
 	c.lastTag.Store(-1)
 	if out.Remedy != drivers.Reconnect && !epoch.Over() {
-		ctx, cancel := urgently(ctx)
+		ctx, cancel := line.Urgently(ctx)
 		defer cancel()
 		if abortErr := c.halt(ctx, "count"); abortErr != nil && !uncertain(abortErr) {
 			out.Err = fmt.Errorf("%w; and the gate was not ended: %w", out.Err, abortErr)

@@ -411,46 +411,12 @@ func (d *device) Name() drivers.DeviceName { return d.common.Name }
 func (d *device) Identity() string { return d.identity.Load().(string) }
 
 func (d *device) errorf(op string, remedy drivers.Remedy, format string, args ...any) error {
-	return &drivers.Error{Op: op, Device: d.common.Name, Remedy: remedy, Err: fmt.Errorf(format, args...)}
-}
-
-// ended is the error for a context that ended between two questions.
-func (d *device) ended(ctx context.Context, op string) error {
-	err := ctx.Err()
-	if cause := context.Cause(ctx); cause != nil && !errors.Is(cause, err) {
-		err = fmt.Errorf("%w: %w", err, cause)
-	}
-	return &drivers.Error{Op: op, Device: d.common.Name, Err: err}
+	return line.Errorf(d.common.Name, op, remedy, format, args...)
 }
 
 // wait waits for a bench time, the end of ctx or the end of the epoch.
 func (d *device) wait(ctx context.Context, op string, epoch line.Epoch, bench time.Duration) error {
-	if ctx.Err() != nil {
-		return d.ended(ctx, op)
-	}
-	if epoch.Over() {
-		return d.stopped(op)
-	}
-	timer := time.NewTimer(d.common.Pace.Real(max(bench, 0)))
-	defer timer.Stop()
-	select {
-	case <-timer.C:
-		return nil
-	case <-ctx.Done():
-		return d.ended(ctx, op)
-	case <-epoch:
-		return d.stopped(op)
-	}
-}
-
-func (d *device) stopped(op string) error {
-	return d.errorf(op, drivers.Retry, "stopped by an urgent message to this device")
-}
-
-// urgently runs what must still be done after ctx has ended, within what is left of the second
-// that callers are promised.
-func urgently(ctx context.Context) (context.Context, context.CancelFunc) {
-	return context.WithTimeout(context.WithoutCancel(ctx), 700*time.Millisecond)
+	return line.Wait(ctx, d.common.Name, op, epoch, d.common.Pace.Real(bench))
 }
 
 func faultOf(err error) *line.Fault {

@@ -2,7 +2,6 @@ package custom
 
 import (
 	"fmt"
-	"math"
 	"math/big"
 	"strconv"
 	"strings"
@@ -96,41 +95,4 @@ func plain(v float64, n int) string {
 		return "0"
 	}
 	return s
-}
-
-// linear turns a value in one unit into another.
-type linear struct{ factor, offset float64 }
-
-func (c linear) of(v float64) float64   { return c.factor*v + c.offset }
-func (c linear) back(v float64) float64 { return (v - c.offset) / c.factor }
-
-// conversionOf finds the conversion by what package unit makes of 0 and 1: every unit it knows is
-// a factor and an offset from another of its kind.
-func conversionOf(from, to string) (linear, error) {
-	if from == "" || from == to {
-		if _, _, _, err := unit.ParseAny("1 " + to); err != nil {
-			return linear{}, err
-		}
-		return linear{1, 0}, nil
-	}
-	zero, kind, _, err := unit.ParseAny("0 " + from)
-	if err != nil {
-		return linear{}, err
-	}
-	one, err := unit.Parse("1 "+from, kind)
-	if err != nil {
-		return linear{}, err
-	}
-	if _, err := unit.Parse("1 "+to, kind); err != nil {
-		return linear{}, err
-	}
-	offset, err := unit.In(zero, to)
-	if err != nil {
-		return linear{}, err
-	}
-	sum, err := unit.In(one, to)
-	if err == nil && math.Abs(sum-offset) == 0 {
-		err = fmt.Errorf("%q and %q have no conversion", from, to)
-	}
-	return linear{sum - offset, offset}, err
 }

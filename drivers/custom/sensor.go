@@ -10,20 +10,21 @@ import (
 
 	"gemel/drivers"
 	"gemel/drivers/line"
+	"gemel/protocol/unit"
 )
 
 // Sensor is a sensor whose language was declared.
 type Sensor struct {
 	*device
 	set    SensorConfig
-	toUnit linear
+	toUnit unit.Conversion
 }
 
 // NewSensor makes a sensor from its configuration. It sends nothing.
 func NewSensor(l *line.Line, c SensorConfig) (*Sensor, error) {
 	d, bad := newDevice(l, c.Common, valued("get"))
 	d.needValue(bad)
-	toUnit, err := conversionOf(c.Dialect.Asks["get"].UnitIs, c.Unit)
+	toUnit, err := unit.Convert(c.Dialect.Asks["get"].UnitIs, c.Unit)
 	if err != nil {
 		bad.add("asks.get.unit_is", "%w", err)
 	}
@@ -64,26 +65,26 @@ func (s *Sensor) value(text string) (float64, error) {
 	if err != nil {
 		return 0, s.errorf("read", drivers.Retry, "%w", err)
 	}
-	return s.toUnit.of(v), nil
+	return s.toUnit.Of(v), nil
 }
 
 // Setting is a setting whose language was declared.
 type Setting struct {
 	*device
 	set      SettingConfig
-	toUnit   linear // of get
-	sendUnit linear // of set
+	toUnit   unit.Conversion // of get
+	sendUnit unit.Conversion // of set
 }
 
 // NewSetting makes a setting from its configuration. It sends nothing.
 func NewSetting(l *line.Line, c SettingConfig) (*Setting, error) {
 	d, bad := newDevice(l, c.Common, valued("set", "get"))
 	d.needValue(bad)
-	toUnit, err := conversionOf(c.Dialect.Asks["get"].UnitIs, c.Unit)
+	toUnit, err := unit.Convert(c.Dialect.Asks["get"].UnitIs, c.Unit)
 	if err != nil {
 		bad.add("asks.get.unit_is", "%w", err)
 	}
-	sendUnit, err := conversionOf(c.Dialect.Asks["set"].UnitIs, c.Unit)
+	sendUnit, err := unit.Convert(c.Dialect.Asks["set"].UnitIs, c.Unit)
 	if err != nil {
 		bad.add("asks.set.unit_is", "%w", err)
 	}
@@ -118,7 +119,7 @@ func (s *Setting) Set(ctx context.Context, value float64) (float64, error) {
 	if q.ask.Decimals != nil {
 		decimals = *q.ask.Decimals
 	}
-	text := strconv.FormatFloat(s.sendUnit.back(value), 'f', decimals, 64)
+	text := strconv.FormatFloat(s.sendUnit.Back(value), 'f', decimals, 64)
 	if strings.Trim(text, "-0.") == "" {
 		text = strings.TrimPrefix(text, "-")
 	}
@@ -157,5 +158,5 @@ func (s *Setting) get(ctx context.Context, op string) (float64, error) {
 	if err != nil {
 		return 0, s.errorf(op, drivers.Retry, "%w", err)
 	}
-	return s.toUnit.of(v), nil
+	return s.toUnit.Of(v), nil
 }

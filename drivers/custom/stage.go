@@ -458,7 +458,7 @@ func (s *Stage) halted(ctx context.Context, epoch line.Epoch, err error) error {
 	if !ok || e.Remedy == drivers.Reconnect || epoch.Over() {
 		return err // the line is gone, or somebody else has stopped it
 	}
-	ctx, cancel := urgently(ctx)
+	ctx, cancel := line.Urgently(ctx)
 	defer cancel()
 	if stopErr := s.stop(ctx); stopErr != nil {
 		out := *e

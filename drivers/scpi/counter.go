@@ -370,7 +370,7 @@ func (c *Counter) Abort(ctx context.Context) error {
 
 // abort ends our own gate on the way out of Count, even if its context has ended.
 func (c *Counter) abort(ctx context.Context) error {
-	ctx, cancel := urgently(ctx)
+	ctx, cancel := line.Urgently(ctx)
 	defer cancel()
 	_, err := c.seat.Urgent(ctx, line.Question{Op: "abort", Send: []byte(c.set.Abort)})
 	return err

@@ -618,13 +618,6 @@ func TestConfigurationsThatCannotWorkAreRefusedWithAllFaults(t *testing.T) {
 	}
 }
 
-func TestTemperaturesAreConvertedWithTheirOffset(t *testing.T) {
-	c, err := conversionOf("K", "Cel")
-	if err != nil || math.Abs(c.of(293.15)-20) > 1e-9 || math.Abs(c.back(20)-293.15) > 1e-9 {
-		t.Errorf("%+v, %v: 293.15 K is %v Cel", c, err, c.of(293.15))
-	}
-}
-
 // stuck is a port that no longer comes back from a read, whatever its deadline says.
 type stuck struct {
 	line.Port

@@ -15,7 +15,7 @@ import (
 type Sensor struct {
 	*device
 	set    SensorConfig
-	toUnit linear
+	toUnit unit.Conversion
 }
 
 // NewSensor makes a sensor from its configuration. It sends nothing.
@@ -49,7 +49,7 @@ func NewSensor(l *line.Line, c SensorConfig) (*Sensor, error) {
 	if (c.SetUnit != "") != (c.AskUnit != "") || (c.AskUnit != "") != (c.UnitAnswer != "") {
 		bad = append(bad, fmt.Errorf("%s: of set unit, ask unit and unit answer some are missing; want all three or none", c.Name))
 	}
-	conversion, err := conversionOf(c.AnswerUnit, c.Unit)
+	conversion, err := unit.Convert(c.AnswerUnit, c.Unit)
 	if err != nil {
 		bad = append(bad, fmt.Errorf("%s: %w", c.Name, err))
 	}
@@ -110,44 +110,10 @@ func (s *Sensor) Read(ctx context.Context) (float64, error) {
 		if err != nil {
 			return 0, s.errorf("read", drivers.Retry, "%w", err)
 		}
-		values[i] = s.toUnit.of(v)
+		values[i] = s.toUnit.Of(v)
 	}
 	if math.Abs(values[0]-values[1]) > s.set.Agree {
 		return 0, s.errorf("read", drivers.Retry, "%g %s and then %g; want them equal within %g", values[0], s.set.Unit, values[1], s.set.Agree)
 	}
 	return values[1], nil
-}
-
-// linear turns a value in one unit into another.
-type linear struct{ factor, offset float64 }
-
-func (c linear) of(v float64) float64   { return c.factor*v + c.offset }
-func (c linear) back(v float64) float64 { return (v - c.offset) / c.factor }
-
-// conversionOf finds the conversion by what package unit makes of 0 and 1: every unit it knows is
-// a factor and an offset from another of its kind.
-func conversionOf(from, to string) (linear, error) {
-	if from == to {
-		if _, _, _, err := unit.ParseAny("1 " + to); err != nil {
-			return linear{}, err
-		}
-		return linear{1, 0}, nil
-	}
-	zero, kind, _, err := unit.ParseAny("0 " + from)
-	if err != nil {
-		return linear{}, err
-	}
-	one, err := unit.Parse("1 "+from, kind)
-	if err != nil {
-		return linear{}, err
-	}
-	if _, err := unit.Parse("1 "+to, kind); err != nil {
-		return linear{}, err
-	}
-	offset, err := unit.In(zero, to)
-	if err != nil {
-		return linear{}, err
-	}
-	sum, err := unit.In(one, to)
-	return linear{sum - offset, offset}, err
 }

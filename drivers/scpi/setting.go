@@ -11,13 +11,14 @@ import (
 
 	"gemel/drivers"
 	"gemel/drivers/line"
+	"gemel/protocol/unit"
 )
 
 // Setting is something that can be set and read back, such as a delay or a power.
 type Setting struct {
 	*device
 	set    SettingConfig
-	toUnit linear
+	toUnit unit.Conversion
 }
 
 // NewSetting makes a setting from its configuration. It sends nothing.
@@ -48,7 +49,7 @@ func NewSetting(l *line.Line, c SettingConfig) (*Setting, error) {
 	if *c.SettlingBit > 15 {
 		bad = append(bad, fmt.Errorf("%s: settling bit %d; want 0 to 15, or -1 for none", c.Name, *c.SettlingBit))
 	}
-	conversion, err := conversionOf(c.AnswerUnit, c.Unit)
+	conversion, err := unit.Convert(c.AnswerUnit, c.Unit)
 	if err != nil {
 		bad = append(bad, fmt.Errorf("%s: %w", c.Name, err))
 	}
@@ -69,7 +70,7 @@ func (s *Setting) Set(ctx context.Context, value float64) (float64, error) {
 	if math.IsNaN(value) || math.IsInf(value, 0) {
 		return 0, s.errorf("set", drivers.GiveUp, "%v; want a number", value)
 	}
-	v := s.toUnit.back(value)
+	v := s.toUnit.Back(value)
 	// Twelve digits are more than any instrument has, and fewer than the rounding of a conversion shows.
 	text := strconv.FormatFloat(v, 'G', 12, 64)
 	if s.set.Decimals != nil {
@@ -138,5 +139,5 @@ func (s *Setting) get(ctx context.Context, op string) (float64, error) {
 	if err != nil {
 		return 0, s.errorf(op, drivers.Retry, "%w", err)
 	}
-	return s.toUnit.of(v), nil
+	return s.toUnit.Of(v), nil
 }
