@@ -19,6 +19,7 @@ import (
 	"gemel/daemon/crew"
 	"gemel/daemon/keeper"
 	"gemel/daemon/logbook"
+	"gemel/daemon/report"
 	"gemel/drivers/line"
 	"gemel/protocol"
 	"gemel/scan"
@@ -284,6 +285,12 @@ func (k *kit) life() (final bool, err error) {
 	keep := keeper.New(keeper.Config{
 		Book: recorder, Bench: &built.Bench, BenchText: k.Bench.Text, Version: "test",
 		Plan: k.plan, ResumeAfterRestart: true, Step: l.step,
+		Judge: func(ctx context.Context, run protocol.RunID, plan scan.Plan, set, baseline int) (engine.Verdict, error) {
+			return report.Judge(ctx, book, run, plan, k.Bench, set, baseline)
+		},
+		Refine: func(ctx context.Context, run protocol.RunID, plan scan.Plan, round int) (engine.Refinement, error) {
+			return report.Refine(ctx, book, run, plan, k.Bench, round)
+		},
 	})
 	done := make(chan protocol.State, 1)
 	l.main.Go("keeper", func(ctx context.Context) error {
