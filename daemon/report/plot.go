@@ -93,7 +93,7 @@ const linePlaces = 700
 
 func profiled(r estimate.Result) picture {
 	p := picture{across: "angle / deg", up: "counts / s", fromZero: true,
-		key: "circles: readings less what is known of them (darks, accidentals), with the root of their counts; line: the fit; below: what it leaves, in units of its uncertainty"}
+		key: "Circles: readings less what is known of them (darks, accidentals), with the root of their counts; line: the fit; below: what it leaves, in units of its uncertainty"}
 	scale := 1.
 	if _, unit := r.Residuals[0].Place(); unit == "s" {
 		p.across, scale = "delay / ns", 1e9
@@ -156,7 +156,7 @@ func near(x float64, points []mark, within float64) bool {
 func curved(r estimate.Result) picture {
 	c := r.Curve
 	p := picture{across: c.Against + " / deg", up: c.Along + " / deg",
-		key: "circles: fitted angles; broken line: predicted with nothing fitted; line: with the unknowns fitted; below: what is left, in units of its uncertainty"}
+		key: "Circles: fitted angles; broken line: predicted with nothing fitted; line: with the unknowns fitted; below: what is left, in units of its uncertainty"}
 	low, high := math.Inf(1), math.Inf(-1)
 	for _, one := range c.Places {
 		if one.Left != "" {
@@ -172,7 +172,7 @@ func curved(r estimate.Result) picture {
 }
 
 func bySetting(by estimate.BySetting) picture {
-	p := picture{across: by.Setting + " / " + by.Unit, up: "efficiency", key: "circles: one efficiency each, with what counting leaves open; line: fitted to them; below: what it leaves, in units of that"}
+	p := picture{across: by.Setting + " / " + by.Unit, up: "efficiency", key: "Circles: one efficiency each, with what counting leaves open; line: fitted to them; below: what it leaves, in units of that"}
 	for _, one := range by.Values {
 		if one.Value == nil {
 			continue
@@ -223,7 +223,7 @@ func (s *sheet) paragraph(text string) {
 
 func (s *sheet) draw(p picture) {
 	s.paragraph(p.key + ".")
-	top := s.y + 30
+	top := s.y + 42
 	bottom := top + mainHeight
 	lowX, highX, lowY, highY := p.bounds()
 	x := func(v float64) float64 { return left + (v-lowX)/(highX-lowX)*(sheetWidth-left-right) }

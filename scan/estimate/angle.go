@@ -97,7 +97,7 @@ func gather(kinds map[protocol.ReadingKind][]protocol.Reading, bench Bench, q Pe
 	if !isPair {
 		for _, row := range kinds[protocol.Dark] {
 			if n, ok := countOf(row.Counts, q.Channel); ok && row.Gate > 0 {
-				darks = append(darks, dim{middle(row), row.Gate.Duration().Seconds(), n})
+				darks = append(darks, dim{mid: middle(row), gateS: row.Gate.Duration().Seconds(), counts: n})
 			}
 		}
 	}

@@ -11,6 +11,7 @@ import (
 	"gonum.org/v1/gonum/stat/distuv"
 
 	"gemel/protocol"
+	"gemel/protocol/unit"
 )
 
 // BySetting is an efficiency at several values of a setting, and the straight line through them. Own
@@ -44,34 +45,40 @@ const slopeLevel = 0.01
 // EfficiencyBy is Efficiency at each value of a setting by itself, and the weighted mean of all. A
 // slope against the pump's power tells of accidentals or dead time that are not rightly corrected.
 //
-// Backgrounds count for the value that they were taken at, since fluorescence follows the pump; where
-// there is none the darks stand in, with a warning. Weights are 1/u^2 of the counting parts alone:
+// Backgrounds count for the value that they were taken at, since fluorescence follows the pump. Where
+// a value has none of its own and the setting is a power, the others are scaled to it: what they have
+// above the darks grows with the pump. With another setting the darks stand in, with a warning. Weights are 1/u^2 of the counting parts alone:
 // constants common to all values are not averaged down.
 func EfficiencyBy(rows Rows, bench Bench, model Model, q Question, setting string) (Result, error) {
 	if q.Coverage == 0 {
 		q.Coverage = 0.95
 	}
 	no := &Refusal{}
-	values, unit := settingValues(rows, setting, no)
+	values, unitName := settingValues(rows, setting, no)
 	if err := no.err(); err != nil {
 		return Result{}, err
 	}
 	r := newResult(rows, "efficiency")
 	r.Coverage = q.Coverage
-	by := &BySetting{Setting: setting, Unit: unit}
+	by := &BySetting{Setting: setting, Unit: unitName}
+	stood := standing(rows, setting)
 	var good []Result
 	var x []float64
 	aside := map[int64]string{}
 	for _, v := range values {
-		part := rows.at(setting, v)
-		one, err := Efficiency(part, bench, model, q)
+		part, scaled := rows.at(setting, v, stood, isPower(unitName))
+		ask := q
+		if scaled {
+			ask.pumpRatio = func(r protocol.Reading) float64 { return v / stood[r.Sequence] }
+		}
+		one, err := Efficiency(part, bench, model, ask)
 		if refusal, ok := errors.AsType[*Refusal](err); ok {
 			one = Refused(part, "efficiency", refusal)
-			no.addf("at %s = %g %s: %s", setting, v, unit, strings.Join(refusal.Reasons, "; "))
+			no.addf("at %s = %g %s: %s", setting, v, unitName, strings.Join(refusal.Reasons, "; "))
 		} else if err != nil {
 			return Result{}, err
 		}
-		one.Title = fmt.Sprintf("%s, %s = %g %s", rows.Title, setting, v, unit)
+		one.Title = fmt.Sprintf("%s, %s = %g %s", rows.Title, setting, v, unitName)
 		r.Parts = append(r.Parts, one)
 		for _, a := range one.SetAside {
 			aside[a.Sequence] = a.Reason
@@ -82,7 +89,7 @@ func EfficiencyBy(rows Rows, bench Bench, model Model, q Question, setting strin
 			good, x = append(good, one), append(x, v)
 			r.Used = append(r.Used, one.Used...)
 			for _, w := range one.Warnings {
-				r.Warnings = append(r.Warnings, fmt.Sprintf("at %s = %g %s: %s", setting, v, unit, w))
+				r.Warnings = append(r.Warnings, fmt.Sprintf("at %s = %g %s: %s", setting, v, unitName, w))
 			}
 		}
 		by.Values = append(by.Values, line)
@@ -127,18 +134,50 @@ func settingValues(rows Rows, setting string, no *Refusal) (values []float64, un
 	return slices.Compact(values), unit
 }
 
-// at keeps what belongs to one value of a setting: readings that had it, and those that no pump
-// reaches. Readings of another value are not set aside: they make another number.
-func (r Rows) at(setting string, value float64) Rows {
-	part := r
-	part.Readings = nil
-	for _, row := range r.Readings {
-		i := slices.IndexFunc(row.Settings, func(s protocol.Setting) bool { return s.Name == setting })
-		if row.Kind == protocol.Dark || i < 0 || row.Settings[i].Target == value {
-			part.Readings = append(part.Readings, row)
+// standing is what a setting had at each reading, by its sequence: as the reading says, or where it
+// was left by the one before. Of what came before the first nothing is known.
+func standing(rows Rows, setting string) map[int64]float64 {
+	stood := map[int64]float64{}
+	last, known := 0.0, false
+	for _, row := range rows.Readings {
+		if i := slices.IndexFunc(row.Settings, func(s protocol.Setting) bool { return s.Name == setting }); i >= 0 {
+			last, known = row.Settings[i].Target, true
+		}
+		if known {
+			stood[row.Sequence] = last
 		}
 	}
-	return part
+	return stood
+}
+
+func isPower(name string) bool {
+	_, err := unit.Parse("1 "+name, unit.Power)
+	return err == nil
+}
+
+// at keeps what belongs to one value of a setting: light and backgrounds that had it, and darks, which
+// no pump reaches. scaled says that no background had it and those of other powers stand in. Readings
+// of another value are not set aside: they make another number.
+func (r Rows) at(setting string, value float64, stood map[int64]float64, power bool) (part Rows, scaled bool) {
+	own := slices.ContainsFunc(r.Readings, func(row protocol.Reading) bool {
+		at, known := stood[row.Sequence]
+		_, doubted := r.Doubtful[row.Sequence]
+		return row.Kind == protocol.Background && row.Accepted && !doubted && known && at == value
+	})
+	part = r
+	part.Readings = nil
+	for _, row := range r.Readings {
+		at, known := stood[row.Sequence]
+		switch {
+		case row.Kind == protocol.Dark, known && at == value:
+		case row.Kind == protocol.Background && known && at > 0 && power && !own:
+			scaled = true
+		default:
+			continue
+		}
+		part.Readings = append(part.Readings, row)
+	}
+	return part, scaled
 }
 
 // ownVariance is what counting gives of an efficiency's variance.

@@ -145,12 +145,65 @@ func TestBackgroundsCountForTheirOwnPower(t *testing.T) {
 	if res, err = EfficiencyBy(rows, skerry(EveryPair), Model{Collection: full}, q, "pump_power"); err != nil {
 		t.Fatal(err)
 	}
-	if v := res.By.Values[2]; v.Value != nil || len(v.Because) == 0 || !strings.Contains(strings.Join(res.Warnings, "\n"), "1 of 4 values gave no efficiency") {
+	if v := res.By.Values[2]; v.Value != nil || !strings.Contains(strings.Join(v.Because, ""), "without a dark") || !strings.Contains(strings.Join(res.Warnings, "\n"), "1 of 4 values gave no efficiency") {
 		t.Errorf("%+v, %q", v, res.Warnings)
 	}
 	var no *Refusal
 	if _, err := EfficiencyBy(rows, skerry(EveryPair), Model{Collection: full}, q, "iris"); !errors.As(err, &no) || !strings.Contains(err.Error(), "iris") {
 		t.Errorf("by a setting that there is not: %v", err)
+	}
+}
+
+// As an engine writes it: backgrounds say nothing of the setting, which stands where the reading before
+// left it, always at the highest power here.
+func TestBackgroundsOfAnotherPowerAreScaledAboveTheDark(t *testing.T) {
+	times, inside, miss, slopes := 20, 0, 0.0, 0
+	if *long {
+		times = 300
+	}
+	const darkHz = 20000.0
+	for i := range times {
+		r := rand.New(rand.NewPCG(98, uint64(i)))
+		b := skerry(EveryPair)
+		tonight := drawn(r, b, NonParalysable)
+		rows, truth := atPowers(r, powers, 15000, func(w *world) {
+			d := tonight
+			d.pairsHz, d.noiseT, d.noiseD = w.pairsHz, 4*w.noiseT+darkHz, w.noiseD
+			*w = d
+		})
+		var kept []protocol.Reading
+		for _, one := range rows.Readings {
+			if one.Kind == protocol.Background {
+				if one.Settings[0].Target != 45 || len(kept) == 0 || kept[len(kept)-1].Settings == nil && kept[len(kept)-1].Kind == protocol.Background {
+					continue
+				}
+				one.Settings = nil
+				if at := kept[len(kept)-1].Settings[0].Target; at != 45 {
+					continue // the one before the first light at 45 mW
+				}
+			}
+			kept = append(kept, one)
+		}
+		dark := row(900, protocol.Dark, testStart, 2, []gateCounts{{s: int(drawPoisson(r, 2*darkHz/(1-tonight.afterT)*(1-darkHz*45e-9)))}}, EveryPair)
+		rows.Readings = append(kept, dark)
+		res, err := EfficiencyBy(rows, b, Model{Collection: full}, Question{Trigger: "signal", UnderTest: "idler"}, "pump_power")
+		if err != nil {
+			t.Fatal(err)
+		}
+		if res.Interval.Low <= truth && truth <= res.Interval.High {
+			inside++
+		}
+		miss += (*res.Value - truth) / *res.U / float64(times)
+		if res.By.Significant || res.Dispersion.Significant {
+			slopes++
+		}
+		if v := res.By.Values[0]; v.Value == nil || math.Abs(*v.Value-truth) > 5*v.U {
+			t.Errorf("night %d: at 5 mW %v ± %g of %g", i, *v.Value, v.U, truth)
+		}
+	}
+	coverage(t, "mean over powers, backgrounds scaled", inside, times, miss)
+	if float64(slopes) > 2+0.1*float64(times) {
+		t.Errorf("%d of %d nights with a slope; want next to none", slopes, times)
 	}
 }
 

@@ -138,6 +138,20 @@ type dim struct {
 	mid    time.Time
 	gateS  float64
 	counts float64
+
+	// Of one that was taken at another pump power (scaled): what its own counting adds to the variance
+	// of counts, and the seconds of dark in counts.
+	scaled   bool
+	variance float64
+	darkS    float64
+}
+
+// uncertain is the variance of the counts by their own counting; no count is not no rate.
+func (d dim) uncertain() float64 {
+	if d.scaled {
+		return d.variance
+	}
+	return math.Max(d.counts, 1)
 }
 
 func (d dim) rateHz() float64 { return d.counts / d.gateS }

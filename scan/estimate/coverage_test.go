@@ -1,6 +1,7 @@
 package estimate
 
 import (
+	"errors"
 	"flag"
 	"fmt"
 	"math"
@@ -126,7 +127,7 @@ func TestCalibrationsCoverTheTruth(t *testing.T) {
 			t.Parallel()
 			inside := map[string]int{}
 			miss, sumU := map[string]float64{}, map[string]float64{}
-			significant, refused := 0, 0
+			significant, refused, limits := 0, 0, 0
 			for i := range times {
 				r := rand.New(rand.NewPCG(uint64(1000+k), uint64(i)))
 				b := benchFor(reg, EveryPair)
@@ -140,6 +141,13 @@ func TestCalibrationsCoverTheTruth(t *testing.T) {
 						b := benchFor(reg, logic)
 						name := fmt.Sprintf("%s, displaced %v", logic, displaced)
 						res, err := Efficiency(rowsOf(all, logic), b, Model{Collection: full}, Question{Trigger: "signal", UnderTest: "idler", Displaced: displaced})
+						if no, ok := errors.AsType[*Refusal](err); ok && no.Limit != nil {
+							limits++ // nothing coincided: everything below the limit is the interval
+							if w.etaD <= no.Limit.Efficiency {
+								inside[name]++
+							}
+							continue
+						}
 						if err != nil {
 							refused++
 							t.Logf("calibration %d: %v", i, err)
@@ -171,9 +179,10 @@ func TestCalibrationsCoverTheTruth(t *testing.T) {
 					t.Errorf("%s: %.2f %% covered; want %.1f to %.1f %%", name, 100*share, 100*low, 100*high)
 				}
 			}
-			t.Logf("significant scatter in %.1f %%, refused %d", 100*float64(significant)/float64(4*times), refused)
-			if refused > 0 {
-				t.Errorf("%d refused; want none", refused)
+			t.Logf("significant scatter in %.1f %%, refused %d, without a coincidence %d", 100*float64(significant)/float64(4*times), refused, limits)
+			// With a handful of heralds now and then the background is no less than they are.
+			if refused > 0 && !reg.wide || float64(refused) > 0.005*float64(4*times) {
+				t.Errorf("%d refused; want none, or next to none where heralds are few", refused)
 			}
 		})
 	}

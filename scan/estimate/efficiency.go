@@ -44,6 +44,9 @@ type Question struct {
 	Coverage   float64       // 0: 0.95
 	MonteCarlo int           // trials; 0: none
 	Seed       uint64
+
+	// pumpRatio is how much more pump there was at the light than at a background; nil: as much.
+	pumpRatio func(background protocol.Reading) float64
 }
 
 // calculation holds an efficiency's rows and evaluates its formula at any values of the inputs.
@@ -63,6 +66,8 @@ type calculation struct {
 	gateS       float64
 	background  float64 // background counts within the light readings, own dead time removed, theirs put in
 	backgroundU float64
+	// Of the dark rate, where backgrounds of another pump power are made of it.
+	darkVariance float64
 
 	beyond    float64 // exact loss less first-order loss, at the estimates
 	loadD     float64 // m_D tau_D at the estimates
@@ -147,7 +152,7 @@ func Efficiency(rows Rows, bench Bench, model Model, q Question) (Result, error)
 		c.dwells = append(c.dwells, d)
 		result.Used = append(result.Used, r.Sequence)
 	}
-	c.takeBackground(kinds, ch, &result, no)
+	c.takeBackground(kinds, ch, q.pumpRatio, &result, no)
 	if err := no.err(); err != nil {
 		return Result{}, err
 	}
@@ -321,7 +326,7 @@ func onePlace(lights []protocol.Reading, axes []string, no *Refusal) {
 	}
 }
 
-func (c *calculation) takeBackground(kinds map[protocol.ReadingKind][]protocol.Reading, ch channels, r *Result, no *Refusal) {
+func (c *calculation) takeBackground(kinds map[protocol.ReadingKind][]protocol.Reading, ch channels, pumpRatio func(protocol.Reading) float64, r *Result, no *Refusal) {
 	if !c.on(BackgroundStep) {
 		return
 	}
@@ -336,6 +341,12 @@ func (c *calculation) takeBackground(kinds map[protocol.ReadingKind][]protocol.R
 		no.addf("neither background nor dark was taken; want background readings, or the correction switched off")
 		return
 	}
+	var dark, time float64
+	for _, row := range kinds[protocol.Dark] {
+		if n, ok := countOf(row.Counts, ch.s); ok {
+			dark, time = dark+n, time+row.Gate.Duration().Seconds()
+		}
+	}
 	for _, row := range from {
 		n, ok := countOf(row.Counts, ch.s)
 		gate := row.Gate.Duration().Seconds()
@@ -343,13 +354,20 @@ func (c *calculation) takeBackground(kinds map[protocol.ReadingKind][]protocol.R
 			no.addf("%s reading %d: channel %q in a gate of %g s; want counts", row.Kind, row.Sequence, ch.s, gate)
 			continue
 		}
-		c.backgrounds = append(c.backgrounds, dim{middle(row), gate, n})
-	}
-	var dark, time float64
-	for _, row := range kinds[protocol.Dark] {
-		if n, ok := countOf(row.Counts, ch.s); ok {
-			dark, time = dark+n, time+row.Gate.Duration().Seconds()
+		one := dim{mid: middle(row), gateS: gate, counts: n}
+		if pumpRatio != nil && row.Kind == protocol.Background {
+			if more := pumpRatio(row); more != 1 {
+				if time == 0 {
+					no.addf("background reading %d was taken at another pump power, and without a dark nobody knows which part of it follows the pump; want darks, or backgrounds at each power", row.Sequence)
+					continue
+				}
+				// What the pump makes grows with it, the dark does not.
+				one.scaled, one.variance, one.darkS = true, more*more*math.Max(n, 1), (1-more)*gate
+				one.counts = more*n + one.darkS*dark/time
+				c.darkVariance = math.Max(dark, 1) / (time * time)
+			}
 		}
+		c.backgrounds = append(c.backgrounds, one)
 	}
 	if time > 0 && len(kinds[protocol.Background]) > 0 {
 		r.noteValue("dark count rate of the trigger", dark/time, "/s", "contained in the background, so not subtracted again")
@@ -377,10 +395,12 @@ func (c *calculation) sum() {
 			weight[s.background] += w
 		}
 	}
+	darkS := 0.0
 	for i, b := range c.backgrounds {
-		c.backgroundU += weight[i] * weight[i] * math.Max(b.counts, 1) // no count is not no rate
+		c.backgroundU += weight[i] * weight[i] * b.uncertain()
+		darkS += weight[i] * b.darkS
 	}
-	c.backgroundU = math.Sqrt(c.backgroundU)
+	c.backgroundU = math.Sqrt(c.backgroundU + darkS*darkS*c.darkVariance)
 	if f := c.backgroundScatter().factor(); f > 1 {
 		c.backgroundU *= f
 	}
@@ -395,7 +415,11 @@ func (c *calculation) backgroundScatter() Dispersion {
 	var res, variance []float64
 	for _, b := range c.backgrounds {
 		expect := counts / time * b.gateS
-		res, variance = append(res, b.counts-expect), append(variance, expect)
+		spread := expect
+		if b.scaled {
+			spread = b.variance
+		}
+		res, variance = append(res, b.counts-expect), append(variance, spread)
 	}
 	return Disperse(res, variance, 1)
 }

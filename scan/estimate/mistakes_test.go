@@ -526,7 +526,7 @@ func TestTheBackgroundHasItsOwnDeadTime(t *testing.T) {
 		}
 		c.dwells = append(c.dwells, d)
 	}
-	c.takeBackground(kinds, channels{s: "signal"}, &r, no)
+	c.takeBackground(kinds, channels{s: "signal"}, nil, &r, no)
 	c.sum()
 	mS, mB := c.s/c.gateS, c.backgrounds[0].rateHz()
 	near(t, "factor", c.background, mB*c.gateS*(1-mS*1e-6)/(1-mB*1e-6), 1e-6)
