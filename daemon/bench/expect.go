@@ -229,49 +229,22 @@ func (f *File) flanks(arm drivers.AxisName, top []scan.AxisTarget) (low, high un
 
 // halved works the flanks out.
 func (f *File) halved(m *source.Model, asked flank) (low, high unit.Angle, err error) {
-	arm, p := asked.arm, asked.at
-	begin := p.SignalDeg
-	if i := slices.IndexFunc(f.Axes, func(a Axis) bool { return a.Name == arm }); f.Axes[i].Role == idlerArm {
-		begin = p.IdlerDeg
+	idler := slices.ContainsFunc(f.Axes, func(a Axis) bool { return a.Name == asked.arm && a.Role == idlerArm })
+	begin := asked.at.SignalDeg
+	if idler {
+		begin = asked.at.IdlerDeg
 	}
-	at := func(deg float64) source.Pose {
-		q := p
-		f.Put(&q, arm, deg)
-		return q
-	}
-	table := func(deg float64) float64 { return m.Rates(at(deg)).PairsHz }
-	exact := func(deg float64) float64 { return m.Exact(at(deg)).PairsHz }
-	peak, lowDeg, highDeg, ok := flanksOf(table, begin, f.openDeg()/3)
+	pairs := m.Along(asked.at, idler)
+	peak, lowDeg, highDeg, ok := flanksOf(pairs, begin, f.openDeg()/2)
 	ring := f.Still()
 	ring.SignalDeg, ring.IdlerDeg = m.Reference()
 	ring.TiltDeg = 0
-	if !ok || table(peak) < 1e-3*m.Rates(ring).PairsHz {
-		return 0, 0, fmt.Errorf("no coincidences to speak of with %s at %.4f deg, or none that fall to a half within reach; want the other arm where the partners go", arm, begin)
+	if !ok || pairs(peak) < 1e-3*m.Rates(ring).PairsHz {
+		return 0, 0, fmt.Errorf("no coincidences to speak of with %s at %.4f deg, or none that fall to a half within reach; want the other arm where the partners go", asked.arm, begin)
 	}
-	// The table is true to 1 %; at a flank that is worth a few chords of the exact rate. A ten-thousandth
-	// of a degree is finer than any arm needs, and the same on every machine.
-	half := exact(peak) / 2
-	place := func(deg float64) unit.Angle {
-		return unit.Degrees(math.Round(chord(exact, half, deg, f.openDeg()/50)*1e4) / 1e4)
-	}
+	// A ten-thousandth of a degree is finer than any arm needs, and the same on every machine.
+	place := func(deg float64) unit.Angle { return unit.Degrees(math.Round(deg*1e4) / 1e4) }
 	return place(lowDeg), place(highDeg), nil
-}
-
-// chord finds where a rate has a height near an angle.
-func chord(rate func(float64) float64, height, near, reach float64) float64 {
-	a, b := near-reach, near+reach
-	ya, yb := rate(a)-height, rate(b)-height
-	for range 4 {
-		if ya == yb {
-			break
-		}
-		x := b - yb*(b-a)/(yb-ya)
-		if math.Abs(x-near) > 10*reach { // not a flank: what the table found is nearer
-			return near
-		}
-		a, ya, b, yb = b, yb, x, rate(x)-height
-	}
-	return b
 }
 
 // openDeg is the smaller aperture's radius, as an angle: nothing along an arm is much narrower.
@@ -280,41 +253,18 @@ func (f *File) openDeg() float64 {
 	return min(a.Radius.Value/a.Distance.Value, b.Radius.Value/b.Distance.Value) * 180 / math.Pi
 }
 
-// flanksOf finds, by steps and then by bisection, where a peak about an angle falls to half of its
+// flanksOf finds, by steps and then by chords, where a peak about an angle falls to half of its
 // maximum.
 func flanksOf(rate func(float64) float64, begin, step float64) (at, low, high float64, ok bool) {
-	const most = 120 // steps to either side
+	const most = 60 // steps to either side
+	// Uphill to the maximum, in steps and then in smaller ones. A flat top is not flat to the last digit,
+	// and where on it the maximum is means nothing.
 	at = begin
 	top := rate(at)
-	edge := func(side float64) float64 {
-		inner := at
-		for k := 1; k <= most; k++ {
-			x := at + side*step*float64(k)
-			y := rate(x)
-			if y > 1.01*top { // a flat top is not flat to the last digit
-				return math.NaN() // climbing: the maximum is elsewhere
-			}
-			if y < top/2 {
-				outer := x
-				for range 20 {
-					mid := (inner + outer) / 2
-					if rate(mid) < top/2 {
-						outer = mid
-					} else {
-						inner = mid
-					}
-				}
-				return (inner + outer) / 2
-			}
-			inner = x
-		}
-		return math.NaN()
-	}
-	// Uphill to the maximum, in steps and then in ever smaller ones.
-	for h := step; h > step/100; h /= 3 {
+	for _, h := range []float64{step, step / 3, step / 9} {
 		for range most {
 			up, down := rate(at+h), rate(at-h)
-			if up <= top && down <= top {
+			if max(up, down) <= 1.001*top {
 				break
 			}
 			if up > down {
@@ -327,6 +277,42 @@ func flanksOf(rate func(float64) float64, begin, step float64) (at, low, high fl
 	if !(top > 0) {
 		return at, 0, 0, false
 	}
+	edge := func(side float64) float64 {
+		inner, yi := at, top
+		for k := 1; k <= most; k++ {
+			outer := at + side*step*float64(k)
+			yo := rate(outer)
+			switch {
+			case yo > 1.01*top:
+				return math.NaN() // climbing: the maximum is elsewhere
+			case yo < top/2:
+				return halfway(rate, top/2, inner, outer, yi, yo)
+			}
+			inner, yi = outer, yo
+		}
+		return math.NaN()
+	}
 	low, high = edge(-1), edge(1)
 	return at, low, high, low < high
+}
+
+// halfway finds where a rate passes a height between two angles on both sides of it, by chords, and
+// by halves where chords creep (regula falsi, Illinois variant of Dowell and Jarratt 1971, recalled
+// from memory).
+func halfway(rate func(float64) float64, height, a, b, ya, yb float64) float64 {
+	ya, yb = ya-height, yb-height
+	x := b
+	for range 30 {
+		last := x
+		x = b - yb*(b-a)/(yb-ya)
+		if math.Abs(x-last) < 2e-6 { // far below what an angle is rounded to
+			break
+		}
+		if y := rate(x) - height; (y < 0) == (yb < 0) {
+			b, yb, ya = x, y, ya/2
+		} else {
+			a, ya, b, yb = b, yb, x, y
+		}
+	}
+	return x
 }

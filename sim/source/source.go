@@ -221,6 +221,21 @@ func (m *Model) Exact(p Pose) Rates {
 	return m.rates(p, m.computed(p))
 }
 
+// Along is the exact rate of pairs against the angle of one arm, the idler's or the signal's, with
+// everything else at a pose: Exact without working out the crystal anew for each angle.
+func (m *Model) Along(p Pose, idler bool) func(deg float64) float64 {
+	m = m.with(p.RadiusMm)
+	f := m.newFrame(p.TiltDeg, m.pumpNm(p), p.CrystalCel)
+	return func(deg float64) float64 {
+		q := p
+		q.SignalDeg = deg
+		if idler {
+			q.SignalDeg, q.IdlerDeg = p.SignalDeg, deg
+		}
+		return m.rates(q, m.integrals(f, q)).PairsHz
+	}
+}
+
 // mostSized bounds how many irises are remembered.
 const mostSized = 32
 
@@ -331,7 +346,10 @@ func (m *Model) tabulated(p Pose) collected {
 }
 
 func (m *Model) computed(p Pose) collected {
-	f := m.newFrame(p.TiltDeg, m.pumpNm(p), p.CrystalCel)
+	return m.integrals(m.newFrame(p.TiltDeg, m.pumpNm(p), p.CrystalCel), p)
+}
+
+func (m *Model) integrals(f *frame, p Pose) collected {
 	var c collected
 	for what := range c {
 		c[what] = m.integral(f, what, p.SignalDeg, p.IdlerDeg, 0)
