@@ -40,6 +40,24 @@ func status() protocol.Status {
 	}
 }
 
+func foreseen() protocol.Forecast {
+	return protocol.Forecast{
+		Schema: protocol.ForecastSchema, Bench: "skerry", Title: "Ring", Sentence: "1 point, 2 s.", BeginsAt: at("2031-02-03T04:05:06.5Z"), FinishesAt: at("2031-02-03T04:05:08.5Z"),
+		Duration: protocol.Seconds(2 * time.Second), Counting: protocol.Seconds(2 * time.Second), Points: 1, Visits: 1, Uncertainty: new(0.004), Floor: new(0.003),
+		Results: []protocol.ForecastResult{
+			{Kind: "efficiency", Unit: "1", Value: new(0.55), Uncertainty: new(0.004), Counting: new(0.002), Floor: new(0.003), FloorFrom: []protocol.ForecastShare{{Quantity: "path", Contribution: 0.003}}, Because: []string{}},
+			{Kind: "peak", FloorFrom: []protocol.ForecastShare{}, Because: []string{"no optics"}},
+		},
+		Aim: &protocol.ForecastAim{Text: "0.5 %", Wanted: 0.0035, Reachable: true, Dwell: new(protocol.Seconds(time.Second)), Heralds: new(uint64(7)), Beside: new(protocol.Seconds(time.Second)),
+			BestShare: new(0.1), Share: new(0.2), Duration: new(protocol.Seconds(time.Minute)), Uncertainty: new(0.0035)},
+		RatesFrom: "the model", RatesAt: 1, Interpolation: 0.001, OverheadFrom: "measured", Warnings: []string{"no emission"},
+		PointList: []protocol.ForecastPoint{{
+			Point:  protocol.Point{Point: 0, Axes: []protocol.AxisTarget{{Axis: "signal_arm", Target: unit.Degree}}, Settings: []protocol.SettingValue{{Name: "delay", Target: 1e-9, Unit: "s"}}, Empty: "closed"},
+			Visits: 1, Gate: protocol.Seconds(2 * time.Second), Singles: map[string]float64{"signal": 20}, Coincidences: map[string]float64{"pairs": 2}, Accidentals: map[string]float64{"pairs": 0.1},
+		}},
+	}
+}
+
 // messages are one full and one sparse example of everything that is sent, under the name of the
 // schema.
 func messages() map[string][]any {
@@ -93,6 +111,14 @@ func messages() map[string][]any {
 			protocol.QueueReply{Bench: "skerry", Queue: []protocol.QueuedRun{{Run: "r2", QueuedAt: at("2031-02-03T04:05:06.5Z"), State: protocol.Holding}}},
 		},
 		"reorder_request": {protocol.ReorderRequest{Runs: []protocol.RunID{"r3", "r2"}, Who: "ann", ExpiresAt: new(at("2031-02-03T04:05:06.5Z"))}, protocol.ReorderRequest{Runs: []protocol.RunID{"r3"}}},
+		"forecast_request": {
+			protocol.ForecastRequest{Recipe: "title: x", RecipeName: "x", Aim: "0.5 %", Who: "night", ExpiresAt: new(at("2031-02-03T04:05:06.5Z"))},
+			protocol.ForecastRequest{RecipeName: "x"},
+		},
+		"forecast": {foreseen(), protocol.Forecast{
+			Schema: protocol.ForecastSchema, Bench: "skerry", BeginsAt: at("2031-02-03T04:05:06.5Z"), FinishesAt: at("2031-02-03T04:05:06.5Z"), Results: []protocol.ForecastResult{}, Warnings: []string{},
+			PointListLeftOut: "3000 points",
+		}},
 		"problem": {
 			protocol.Problem{Error: "recipe: 1 finding", Findings: []protocol.Finding{{File: "a.yaml", Line: 3, Col: 9, Key: "dwell", Found: "2", Want: "a time"}}},
 			protocol.Refuse(404, "no run r9").Problem,
@@ -242,6 +268,7 @@ func TestRequestsWithAnUnknownKeyAreNotValid(t *testing.T) {
 		{"start_request", `{"recipe":"x","key":"k","priority":1}`},
 		{"status_request", `{"run":"r1"}`},
 		{"queue_request", `{"run":"r1"}`},
+		{"forecast_request", `{"recipe":"x","key":"k"}`},
 		{"reorder_request", `{"runs":["r1"],"first":"r1"}`},
 	} {
 		if validate(compile(t, c.name, jsonschema.Draft2020), []byte(c.body)) == nil {
@@ -470,7 +497,7 @@ func TestAsyncAPIDescribesTheSubjectsThatGoUses(t *testing.T) {
 	for _, k := range []protocol.EntryKind{protocol.ReadingEntry, protocol.PointEntry, protocol.EventEntry, protocol.ResultEntry} {
 		want[string(k)] = protocol.Subject("{bench}", k, "{run}")
 	}
-	verbs := []string{"start", "stop", "hold", "resume", "status", "queue", "reorder", "withdraw", "hand"}
+	verbs := []string{"start", "stop", "hold", "resume", "status", "queue", "reorder", "withdraw", "forecast", "hand"}
 	for _, v := range verbs {
 		want[v] = protocol.DoSubject("{bench}", v)
 	}

@@ -2,11 +2,15 @@ package main
 
 import (
 	"context"
+	"fmt"
 	"io"
 	"time"
 
 	"gemel/daemon/bench"
+	"gemel/daemon/remote"
 	"gemel/daemon/report"
+	"gemel/protocol"
+	"gemel/scan"
 	"gemel/scan/forecast"
 	"gemel/scan/recipe"
 )
@@ -65,6 +69,31 @@ func (c *forecastCommand) Run(ctx context.Context, con *console) error {
 	}
 	_, err = io.WriteString(con.out, f.Text())
 	return err
+}
+
+// foreseer makes the forecasts that a daemon is asked for.
+func foreseer(file *bench.File) func(context.Context, scan.Plan, time.Time, string) (protocol.Forecast, error) {
+	return func(_ context.Context, plan scan.Plan, begins time.Time, asked string) (protocol.Forecast, error) {
+		o := report.Foreseen{Begins: begins}
+		if asked != "" {
+			aim, err := forecast.ParseAim(asked)
+			if err != nil {
+				return protocol.Forecast{}, protocol.Refuse(400, err.Error())
+			}
+			o.Aim = &aim
+		}
+		f, err := report.Forecast(file, plan, o)
+		if err != nil {
+			return protocol.Forecast{}, err
+		}
+		out := f.Forecast
+		if f.Points+f.PointsAdded <= remote.MostPoints {
+			out.PointList = f.List()
+		} else {
+			out.PointListLeftOut = fmt.Sprintf("%d points; more than %d are not listed in a message", f.Points+f.PointsAdded, remote.MostPoints)
+		}
+		return out, nil
+	}
 }
 
 func (c *forecastCommand) work(ctx context.Context, file *bench.File, r *recipe.Recipe, o report.Foreseen) (*forecast.Forecast, error) {

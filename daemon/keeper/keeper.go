@@ -66,6 +66,8 @@ type Config struct {
 	Judge func(ctx context.Context, run protocol.RunID, plan scan.Plan, set, baseline int) (engine.Verdict, error)
 	// Refine decides which points are added after the first pass. Nil: none is.
 	Refine func(ctx context.Context, run protocol.RunID, plan scan.Plan, round int) (engine.Refinement, error)
+	// Foresee works out what a plan would do, for an aim that may be empty. Nil: no forecasts are made.
+	Foresee func(ctx context.Context, plan scan.Plan, begins time.Time, aim string) (protocol.Forecast, error)
 	// Armed says whether remote requests may move the bench now.
 	Armed func(now time.Time) bool
 	// MayHome is a person's word that axes may search their zero at the start of each run.

@@ -76,7 +76,7 @@ func Serve(ctx context.Context, conn *nats.Conn, keeper Keeper, c Config) error 
 		"queue":    h.queue,
 		"reorder":  h.reorder,
 		"withdraw": h.onRun(keeper.Withdraw),
-		"forecast": notYet,
+		"forecast": h.forecast,
 	} {
 		err := service.AddEndpoint(verb, h.guarded(verb, handle),
 			micro.WithEndpointSubject(protocol.DoSubject(c.Bench, verb)),
