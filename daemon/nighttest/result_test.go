@@ -4,8 +4,12 @@ import (
 	"bytes"
 	"context"
 	"encoding/json"
+	"encoding/xml"
+	"errors"
+	"io"
 	"math"
 	"path/filepath"
+	"strings"
 	"testing"
 	"testing/synctest"
 
@@ -38,9 +42,40 @@ repeat: {times: 2, as: passes}
 result: {kind: peak, of: pairs, along: signal_arm, profile: predicted}
 `
 
-// resultOf runs a night and works its result out twice: from the logbook, and from a copy of the
-// file alone.
+const delayScan = `
+title: Coincidence delay
+sweep:
+  - {axis: signal_arm, at: 2.86 deg}
+  - {axis: idler_arm, at: 2.86 deg}
+  - {setting: delay, from: 14 ns, to: 23 ns, step: 0.25 ns}
+dwell: 1 s
+result:
+  - {kind: delay, of: pairs, setting: delay}
+`
+
+const bothSides = `
+title: Zero and both sides
+sweep:
+  - {axis: crystal_tilt, at: 0 deg}
+  - {axis: idler_arm, at: 11 deg}
+  - {axis: signal_arm, at: [-3.6 deg, -3.2 deg, -3 deg, -2.9 deg, -2.8 deg, -2.7 deg, -2.5 deg, -2.1 deg, 2.1 deg, 2.5 deg, 2.7 deg, 2.8 deg, 2.9 deg, 3 deg, 3.2 deg, 3.6 deg]}
+dwell: 2 s
+dark: {dwell: 10 s, also: [start, end]}
+result:
+  - {kind: zero, of: signal, along: signal_arm}
+  - {kind: peak, of: signal, along: signal_arm, profile: two_peaks}
+`
+
+// resultOf is the first of resultsOf.
 func resultOf(t *testing.T, recipe string) (estimate.Result, *Result) {
+	t.Helper()
+	all, night := resultsOf(t, recipe)
+	return all[0], night
+}
+
+// resultsOf runs a night and works its results out twice: from the logbook, and from a copy of the
+// file alone.
+func resultsOf(t *testing.T, recipe string) ([]estimate.Result, *Result) {
 	t.Helper()
 	data, n := t.TempDir(), Night{Bench: demoBench(t), Recipe: recipe}
 	var night *Result
@@ -81,11 +116,10 @@ func resultOf(t *testing.T, recipe string) (estimate.Result, *Result) {
 	if err != nil {
 		t.Fatal(err)
 	}
-	r := all[0]
-	if r.Kind == "efficiency" {
-		options(t, book, r)
+	if all[0].Kind == "efficiency" {
+		options(t, book, all[0])
 	}
-	return r, night
+	return all, night
 }
 
 func digits(t *testing.T, book *logbook.Book, run protocol.RunID) []byte {
@@ -164,5 +198,83 @@ func TestTheRingIsWhereTheModelPutsIt(t *testing.T) {
 	t.Log(r.Sentence())
 	if math.Abs(*r.Value-2.8642) > max(*r.Expanded, 0.02) {
 		t.Errorf("the peak stands at %g ± %g deg; want 2.864", *r.Value, *r.Expanded)
+	}
+}
+
+// trueDelayNs and trueJitterNs stand in configs/demo-bench.yaml under simulation.truth.
+const (
+	trueDelayNs  = 18.42
+	trueJitterNs = 0.35
+)
+
+func TestTheDelayOfASimulatedCounterIsItsTrueOne(t *testing.T) {
+	r, _ := resultOf(t, delayScan)
+	if r.Value == nil {
+		t.Fatalf("no value: %q", r.Because)
+	}
+	t.Log(r.Sentence())
+	d := r.Delay
+	for _, c := range []struct {
+		what            string
+		got, want, u, k float64
+	}{
+		{"centre", *r.Value, trueDelayNs, *r.U, 4},
+		{"full width", d.WidthS * 1e9, 4, d.WidthU * 1e9, 4},
+		{"jitter", d.JitterS * 1e9, trueJitterNs, *d.JitterU * 1e9, 4},
+		{"window by the floors", *d.ByFloorS * 1e9, 4, *d.ByFloorU * 1e9, 4},
+	} {
+		if math.Abs(c.got-c.want) > c.k*c.u {
+			t.Errorf("%s: %g ± %g; the true one is %g", c.what, c.got, c.u, c.want)
+		}
+	}
+	if r.Unit != "ns" || !d.Declared {
+		t.Errorf("unit %q, operating delay declared: %v", r.Unit, d.Declared)
+	}
+}
+
+func TestSeveralResultsComeInTheRecipesOrder(t *testing.T) {
+	all, _ := resultsOf(t, bothSides)
+	if len(all) != 2 || all[0].Kind != "zero" || all[1].Kind != "peak" {
+		t.Fatalf("%d results; want a zero and a peak", len(all))
+	}
+	for _, r := range all {
+		if r.Value == nil {
+			t.Fatalf("no %s: %q", r.Kind, r.Because)
+		}
+		t.Log(r.Sentence())
+	}
+	// The bench's arms stand true, and its ring is even: checks S069.
+	z := all[0].Zero
+	if math.Abs(*all[0].Value) > 4*z.OffsetU || math.Abs(z.HalfDeg-*z.Expected) > 4*z.OffsetU {
+		t.Errorf("zero %g, half the distance %g where %g is predicted, ± %g deg", *all[0].Value, z.HalfDeg, *z.Expected, z.OffsetU)
+	}
+	text, err := report.JSON(all)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var body struct {
+		Kind    string            `json:"kind"`
+		Results []json.RawMessage `json:"results"`
+	}
+	if err := json.Unmarshal(text, &body); err != nil || body.Kind != "zero" || len(body.Results) != 2 {
+		t.Errorf("%v: kind %q, %d results; want the first's own keys and a list of both", err, body.Kind, len(body.Results))
+	}
+	var picture strings.Builder
+	if err := report.Plot(&picture, all); err != nil {
+		t.Fatal(err)
+	}
+	if n := strings.Count(picture.String(), "<circle"); n != 16+16 {
+		t.Errorf("%d readings drawn; want each in both pictures", n)
+	}
+	if d := xml.NewDecoder(strings.NewReader(picture.String())); !wellFormed(d) {
+		t.Error("the picture is no XML")
+	}
+}
+
+func wellFormed(d *xml.Decoder) bool {
+	for {
+		if _, err := d.Token(); err != nil {
+			return errors.Is(err, io.EOF)
+		}
 	}
 }

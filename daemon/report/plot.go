@@ -17,7 +17,7 @@ var ErrNothingToDraw = errors.New("no result of this run has a profile, a curve 
 // The sheet, in units of the picture.
 const (
 	sheetWidth               = 760.
-	left, right              = 78., 28.
+	left, right              = 84., 28.
 	mainHeight, residualHigh = 250., 76.
 	lineHigh                 = 16.
 	wrapAt                   = 104 // letters in a line
@@ -233,7 +233,7 @@ func (s *sheet) draw(p picture) {
 		s.text(left-9, y(v)+4, "end", plain(v))
 	}
 	s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="0.8"/>`, left, top, bottom)
-	s.upright(20, (top+bottom)/2, p.up)
+	s.upright(14, (top+bottom)/2, p.up)
 	foot := bottom + 18 + residualHigh
 	for i, h := range p.hairlines {
 		s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="0.5" stroke-dasharray="1 3"/>`, x(h.x), top-4, bottom)
@@ -258,7 +258,7 @@ func (s *sheet) draw(p picture) {
 		s.text(left-9, z(v)+4, "end", plain(v))
 	}
 	s.line(`<path d="M%.1f %.1fH%.1f" stroke-width="0.5"/>`, left, z(0), sheetWidth-right)
-	s.upright(20, mid, "left / u")
+	s.upright(14, mid, "left / u")
 	for _, r := range p.residuals {
 		s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="1.2"/>`, x(r.x), z(0), z(r.y))
 	}

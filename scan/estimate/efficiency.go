@@ -814,6 +814,9 @@ func (c *calculation) waterfall(r *Result, x []float64) {
 		case BackgroundStep:
 			k.Amount = c.background
 			k.Note = fmt.Sprintf("%d measurements, interpolated in time, each freed of its own dead time; the dark is contained in it", len(c.backgrounds))
+			if slices.ContainsFunc(c.backgrounds, func(d dim) bool { return d.scaled }) {
+				k.Note += "; taken at another pump power, and scaled to this one above the dark"
+			}
 		case AccidentalStep:
 			k.Amount = product
 			k.Note = fmt.Sprintf("slice by slice from the full singles: %.6g", product)
