@@ -28,9 +28,10 @@ type Optics struct {
 	Extrapolate bool
 
 	PumpWavelength float64
-	PumpWaist      float64 // 1/e² intensity radius at the crystal
-	PumpPower      float64 // W
-	PairsPerMw     float64 // Hz: both photons through apertures and filters, before losses
+	PumpWaist      float64    // 1/e² intensity radius at the crystal
+	PumpPower      float64    // W
+	PumpOff        unit.Angle // of its polarisation from the one that is phase-matched, wave plate at 0
+	PairsPerMw     float64    // Hz: both photons through apertures and filters, before losses
 
 	Signal, Idler Arm
 
@@ -51,10 +52,25 @@ type Arm struct {
 	Face       string // "window" or "fibre_input": the plane the efficiency refers to; empty: not stated
 }
 
-// Filter is a band pass; zero means none.
+// Filter is a band pass; zero means none. Centre and Width are those that the light sees, at the angle
+// at which it meets the filter.
 type Filter struct {
 	Centre, Width float64 // m
 	Shape         string
+}
+
+// tilt moves the band to where it is for light that meets the filter at an angle.
+func (f *Filter) tilt(angle, index strict.Value, m strict.Map) {
+	if !angle.Given() && !index.Given() {
+		return
+	}
+	m.Need("angle")
+	m.Need("index")
+	deg, n := angle.Angle(0, 60*unit.Degree).Degrees(), index.Number(1, 5, 1)
+	if angle.Good() && index.Good() {
+		t := source.Filter{CentreNm: f.Centre * 1e9, WidthNm: f.Width * 1e9}.Tilted(deg, n)
+		f.Centre, f.Width = tidy(t.CentreNm)*1e-9, tidy(t.WidthNm)*1e-9
+	}
 }
 
 // Transmittance is one part of the way from inside the crystal to the detector.
@@ -192,7 +208,7 @@ func (r *reader) optics(v, arms strict.Value) {
 	o.PumpWaist = p.Need("waist").Quantity(unit.Length, 1e-6, 1e-2)
 	o.PumpPower = p.Need("power").Quantity(unit.Power, 0, 100)
 	p.Refuse("a pulsed pump: not supported", "a continuous pump: with pulses, accidentals come in bunches that this program does not correct", "pulsed", "repetition_rate", "pulse_length")
-	p.Later("polarisation_axis")
+	o.PumpOff = p.Opt("polarisation_axis").Angle(-unit.Turn/4, unit.Turn/4)
 	p.Done()
 	o.PairsPerMw = m.Need("pairs_per_mw").Quantity(unit.Rate, 0, 1e9)
 	m.Done()
@@ -223,7 +239,7 @@ func (r *reader) arm(v strict.Value) Arm {
 		fm := f.Map()
 		a.Filter = Filter{Centre: fm.Need("centre").Quantity(unit.Length, 100e-9, 20e-6), Width: fm.Need("width").Quantity(unit.Length, 1e-12, 10e-6),
 			Shape: fm.Need("shape").Choice([]string{source.FilterGaussian, source.FilterFlat})}
-		fm.Later("angle", "index")
+		a.Filter.tilt(fm.Opt("angle"), fm.Opt("index"), fm)
 		fm.Done()
 	}
 	a.Polarised = m.Opt("polarised").Bool()
@@ -335,7 +351,7 @@ func (f *File) lit(t truth) source.Optics {
 	return source.Optics{
 		Crystal: o.Crystal, Process: o.Process, CutDeg: o.Cut.Degrees(), ThicknessMm: tidy(o.Thickness * 1e3), PolingUm: tidy(o.Poling * 1e6),
 		CrystalCel: o.Temperature, AzimuthDeg: o.Azimuth.Degrees(), Extrapolate: o.Extrapolate,
-		PumpNm: tidy(o.PumpWavelength * 1e9), PumpWaistUm: tidy(o.PumpWaist * 1e6), PumpW: o.PumpPower, PairHzPerMw: o.PairsPerMw,
+		PumpNm: tidy(o.PumpWavelength * 1e9), PumpWaistUm: tidy(o.PumpWaist * 1e6), PumpW: o.PumpPower, PumpOffDeg: o.PumpOff.Degrees(), PairHzPerMw: o.PairsPerMw,
 		Signal: f.sourceArm(o.Signal, t.signal), Idler: f.sourceArm(o.Idler, t.idler),
 		Counter: source.Counter{WindowS: f.Counter.Window.Value, JitterS: t.jitter, Logic: f.Counter.Logic},
 	}

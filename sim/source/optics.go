@@ -14,6 +14,8 @@
 package source
 
 import (
+	"math"
+
 	"gemel/sim/crystal"
 	"gemel/sim/phasematch"
 )
@@ -33,6 +35,10 @@ type Optics struct {
 	PumpNm      float64
 	PumpWaistUm float64 // 1/e² intensity radius, at the crystal
 	PumpW       float64 // nominal; the pose carries what there is
+	// PumpOffDeg is by how far the pump's polarisation is turned from the one that is phase-matched, with
+	// the wave plate at 0. The plate turns it by twice its own angle: at half of this it is right. The
+	// declared pair rate holds for a polarisation that is right.
+	PumpOffDeg float64
 
 	// The absolute scale: one of the two, the other 0. PairHzPerMw is the rate of pairs a
 	// milliwatt of pump at which both photons pass apertures and filters, before transmittances
@@ -82,6 +88,17 @@ type Filter struct {
 	CentreNm float64
 	WidthNm  float64 // full width at half maximum
 	Shape    string  // FilterGaussian or FilterFlat
+}
+
+// Tilted is an interference filter of an effective index as light sees it that meets it under an
+// angle: the band moves to shorter waves by sqrt(1 - sin²angle/index²), and keeps its relative width
+// (thin-film optics, recalled from memory). The two polarisations part at large angles, which is not
+// in it, nor the spread of angles within an aperture.
+func (f Filter) Tilted(angleDeg, index float64) Filter {
+	s := math.Sin(angleDeg*deg) / index
+	by := math.Sqrt(1 - s*s)
+	f.CentreNm, f.WidthNm = f.CentreNm*by, f.WidthNm*by
+	return f
 }
 
 // The two dead-time models (Knoll, Radiation Detection and Measurement).

@@ -118,3 +118,28 @@ func TestADetectorsGainChangesItsOwnLightAndNoDarkCounts(t *testing.T) {
 		t.Errorf("%+v; want a perfect signal detector and a blind idler one", r)
 	}
 }
+
+// A spacer between two mirrors of index n passes what fits into its way across, n d cos(angle inside).
+func TestATiltedFilterPassesWhatFitsIntoItsSpacer(t *testing.T) {
+	for _, c := range []struct{ angle, index float64 }{{0, 2.1}, {8, 2.1}, {20, 1.45}, {45, 3.2}} {
+		inside := math.Asin(math.Sin(c.angle*math.Pi/180) / c.index)
+		f := Filter{CentreNm: 812, WidthNm: 10, Shape: FilterFlat}.Tilted(c.angle, c.index)
+		if want := 812 * math.Cos(inside); math.Abs(f.CentreNm-want) > 1e-9 || math.Abs(f.WidthNm/f.CentreNm-10./812) > 1e-12 {
+			t.Errorf("at %g deg %.6f nm, %.6f wide; want %.6f and the same share of it", c.angle, f.CentreNm, f.WidthNm, want)
+		}
+	}
+}
+
+func TestTheWavePlateMakesUpForATurnedPolarisation(t *testing.T) {
+	o := bench(t)
+	right := model(t, o).Rates(atPeak()).PairsHz
+	o.PumpOffDeg = 30
+	m := model(t, o)
+	for plate, share := range map[float64]float64{0: 0.75, 15: 1, -30: 0, 37.5: 0.5} {
+		p := atPeak()
+		p.WaveplateDeg = plate
+		if got := m.Rates(p).PairsHz; math.Abs(got-share*right) > 1e-9*right {
+			t.Errorf("plate at %g deg: %.3f pairs a second; want %.3f", plate, got, share*right)
+		}
+	}
+}

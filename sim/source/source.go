@@ -366,7 +366,7 @@ func (m *Model) pumpNm(p Pose) float64 {
 
 // pairW is the pump power that makes pairs: what passes the shutter, phase-matched component.
 func (m *Model) pairW(p Pose) float64 {
-	h := math.Cos(2 * p.WaveplateDeg * deg)
+	h := math.Cos((2*p.WaveplateDeg - m.o.PumpOffDeg) * deg)
 	w := p.PumpW * p.PumpOpen * h * h
 	if w < 1e-15*p.PumpW { // 45 deg spoils, whatever the cosine rounds to
 		return 0
