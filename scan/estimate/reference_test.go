@@ -137,7 +137,7 @@ func TestWhatIsNoPeakHasNoCentre(t *testing.T) {
 }
 
 func TestReferencesThatDidNotChangeAreSeldomCalledBad(t *testing.T) {
-	sets := 20000
+	sets := 10000
 	if *long {
 		sets = 500000
 	}

@@ -155,7 +155,7 @@ func TestAGridIsCutByWhatIsAllowed(t *testing.T) {
 
 func TestNoGridIsPutAboutChance(t *testing.T) {
 	of := scan.Refine{Of: "idler", Along: "idler_arm", Span: unit.Degrees(0.4), Step: unit.Degrees(0.02), AtMost: 40}
-	for seed := range uint64(200) {
+	for seed := range uint64(60) {
 		run := newRefined(of, idlerSweep(2, 4, 0.1), func(scan.Point) float64 { return 50 }, rand.New(rand.NewPCG(83, seed)))
 		if d := run.round(); len(d.Points) > 0 {
 			t.Fatalf("seed %d: %s; want none", seed, d.Grounds)
@@ -213,7 +213,7 @@ func TestAnAxisThatFollowsIsInterpolated(t *testing.T) {
 }
 
 func TestPositionsBecomeAsSharpAsAsked(t *testing.T) {
-	times := 150
+	times := 60
 	if *long {
 		times = 4000
 	}
