@@ -7,8 +7,8 @@ type QueueReply struct {
 	Queue []QueuedRun `json:"queue"`
 }
 
-// QueuedRun is a run that waits. Its state is queued, or holding when it was interrupted and has
-// not been taken up yet.
+// QueuedRun is a run that waits. Its state is queued, or where it was interrupted and is still to be
+// taken up the last that is written: it goes on first.
 type QueuedRun struct {
 	Run             RunID  `json:"run"`
 	Title           string `json:"title"`

@@ -75,7 +75,7 @@ func (c *console) queue(q protocol.QueueReply) error {
 		}
 		fmt.Fprintf(c.out, ", asked for at %s by %s", r.QueuedAt.Local().Format(time.DateTime), orElse(r.Who, "somebody who gave no name"))
 		if r.State != protocol.Queued {
-			fmt.Fprintf(c.out, "; %s: it was interrupted, and goes on before the others", r.State)
+			fmt.Fprint(c.out, "; it was interrupted, and goes on before the others")
 		}
 		fmt.Fprintln(c.out)
 	}

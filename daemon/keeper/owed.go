@@ -48,26 +48,9 @@ func (k *Keeper) payOwed(ctx context.Context) error {
 		case row.State.Final():
 			continue // it was written before the program ended
 		}
-		if err := k.endOwed(ctx, row, s.Who); err != nil {
+		if err := k.endWaiting(ctx, row, "stopped by "+s.Who+", while nothing could be written", s.Who); err != nil {
 			return err
 		}
 	}
 	return k.Book.Owe(nil)
-}
-
-// endOwed ends a run whose stop was owed. What had begun was interrupted first: the entry that found
-// no room is lost.
-func (k *Keeper) endOwed(ctx context.Context, row logbook.RunRow, by string) error {
-	if row.State != protocol.Queued && !slices.Contains(row.Causes, protocol.ByRestart) {
-		last, err := k.Book.Last(ctx, row.Run)
-		if err != nil {
-			return err
-		}
-		text := "interrupted: the program ended while nothing could be written; what was being counted is lost, nothing that was written is"
-		err = k.append(ctx, row.Run, last+1, protocol.Interrupted, text, protocol.Holding, append(row.Causes, protocol.ByRestart), map[string]any{"after_sequence": last})
-		if err != nil {
-			return err
-		}
-	}
-	return k.endQueued(ctx, row.Run, "stopped by "+by+", while nothing could be written", by)
 }

@@ -203,6 +203,13 @@ func (k *Keeper) Withdraw(ctx context.Context, q protocol.RunRequest) (protocol.
 		return protocol.RunReply{}, err
 	}
 	if eng == nil {
+		row, err := k.unfinished(ctx, q.Run)
+		if err == nil && row.State != protocol.Queued {
+			err = protocol.Refuse(409, fmt.Sprintf("run %s has begun and was interrupted; it can be stopped", q.Run))
+		}
+		if err != nil {
+			return protocol.RunReply{}, err
+		}
 		reply, err := k.stopQueued(ctx, q)
 		if !errors.Is(err, errBegan) {
 			return reply, err
@@ -220,11 +227,12 @@ func (k *Keeper) stopQueued(ctx context.Context, q protocol.RunRequest) (protoco
 	if k.executing(q.Run) != nil {
 		return protocol.RunReply{}, errBegan
 	}
-	if _, err := k.unfinished(ctx, q.Run); err != nil {
+	row, err := k.unfinished(ctx, q.Run)
+	if err != nil {
 		return protocol.RunReply{}, err
 	}
 	reply := protocol.RunReply{Run: q.Run, State: protocol.Stopped, Causes: []protocol.Cause{}, Recorded: true}
-	err := k.endQueued(ctx, q.Run, "stopped in the queue by "+who(q.Who), q.Who)
+	err = k.endWaiting(ctx, row, "stopped in the queue by "+who(q.Who), q.Who)
 	if errors.Is(err, logbook.ErrFull) {
 		reply.Recorded = false
 		err = k.owe(q)
@@ -232,10 +240,21 @@ func (k *Keeper) stopQueued(ctx context.Context, q protocol.RunRequest) (protoco
 	return reply, err
 }
 
-func (k *Keeper) endQueued(ctx context.Context, run protocol.RunID, text, by string) error {
-	last, err := k.Book.Last(ctx, run)
+// endWaiting ends a run that no engine executes. What had begun was interrupted first, and that is
+// told: what was counted at that moment is lost.
+func (k *Keeper) endWaiting(ctx context.Context, row logbook.RunRow, text, by string) error {
+	last, err := k.Book.Last(ctx, row.Run)
 	if err != nil {
 		return err
 	}
-	return k.append(ctx, run, last+1, protocol.Ended, text, protocol.Stopped, nil, map[string]any{"who": by})
+	if row.State != protocol.Queued && !slices.Contains(row.Causes, protocol.ByRestart) {
+		causes := append(slices.Clone(row.Causes), protocol.ByRestart)
+		err := k.append(ctx, row.Run, last+1, protocol.Interrupted, "interrupted: the program ended without a word; what was being counted is lost, nothing that was written is",
+			protocol.Holding, causes, map[string]any{"after_sequence": last})
+		if err != nil {
+			return err
+		}
+		last++
+	}
+	return k.append(ctx, row.Run, last+1, protocol.Ended, text, protocol.Stopped, nil, map[string]any{"who": by})
 }

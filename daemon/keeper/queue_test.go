@@ -230,6 +230,9 @@ func TestAnInterruptedRunGoesFirstWhateverTheQueueSays(t *testing.T) {
 		if err := reorder(t, k, runs, "a"); code(err) != 409 || !strings.Contains(err.Error(), "interrupted") {
 			t.Errorf("the interrupted run in another place: %v; want 409", err)
 		}
+		if _, err := k.Withdraw(t.Context(), protocol.RunRequest{Run: runs["a"]}); code(err) != 409 || !strings.Contains(err.Error(), "can be stopped") {
+			t.Errorf("the interrupted run withdrawn: %v; want 409, since it has begun", err)
+		}
 		if got := titles(t, k); got != "a c b" {
 			t.Errorf("the queue is %s; want a c b", got)
 		}
