@@ -197,8 +197,8 @@ func TestAnyProgramMayAskASimulatedInstrumentWhoItIs(t *testing.T) {
 			t.Error(err)
 		}
 	}
-	if asked != 5 {
-		t.Errorf("%d devices were asked; want 5", asked)
+	if asked != 7 {
+		t.Errorf("%d devices were asked; want 7", asked)
 	}
 	quit(t, p)
 }

@@ -38,7 +38,7 @@ type phase struct {
 
 const farRecipe = `
 title: Far apart
-sweep: [{axis: signal_arm, from: 0 deg, to: 10 deg, step: 10 deg}]
+sweep: [{axis: signal_arm, from: 2 deg, to: 11 deg, step: 9 deg}]
 dwell: {time: 40 s, slice: 20 s}
 `
 
@@ -91,7 +91,7 @@ func phases() []phase {
 		all = append(all, phase{
 			name: "while the line of " + device + " is out of step", troubles: strings.Join(list, "; "), rare: i > 0, outOfStep: device,
 			bench:  impatient(),
-			recipe: "title: Out of step\nsweep: [{axis: signal_arm, from: 0 deg, to: 10 deg, step: 0.1 deg}]\ndwell: {time: 20 ms, slice: 10 ms}\n",
+			recipe: "title: Out of step\nsweep: [{axis: signal_arm, from: 1 deg, to: 11 deg, step: 0.1 deg}]\ndwell: {time: 20 ms, slice: 10 ms}\n",
 			reach: func(t *testing.T, l *truth, _ string) {
 				l.await(t, 0, "the first missing answer", func(r instruments.Record) bool { return r.Kind == instruments.Troubled })
 			},
