@@ -20,21 +20,21 @@ import (
 // question that has more than one answer is answered by a script, and all that is asked is noted.
 // Paths are those of findings, with "[]" for any item of a list and "*" for a name of the user's.
 type probe struct {
-	script map[string]int          // the answers, by the question's id
-	prefer func(owner string) bool // whose keys are there unless the script says otherwise; nil: nobody's
-	high   bool                    // numbers are as great as they may be, instead of as small
-	taken  []decision              // in the order asked
-	answer map[string]int          // what was answered, by id
-	notes  []note                  // what was asked for
-	there  map[string]bool         // by path: the key is there or not
-	kind   map[string]yaml.Kind    // by path: what the value is
-	not    map[string][]yaml.Kind  // by path: what it is not
-	angles map[string]unit.Angle   // by path: what was read there
-	barred map[string]string       // by path: why the key is refused
-	vague  map[string]bool         // by path: what was read of it last says not all of it
-	stand  *yaml.Node              // for every value that is there
-	limit  int                     // notes left
-	units  [][]string              // of every kind
+	script map[string]int         // the answers, by the question's id
+	prefer func(decision) bool    // of which questions the answer is that the key is there, unless the script says otherwise; nil: of none
+	high   bool                   // numbers are as great as they may be, instead of as small
+	taken  []decision             // in the order asked
+	answer map[string]int         // what was answered, by id
+	notes  []note                 // what was asked for
+	there  map[string]bool        // by path: the key is there or not
+	kind   map[string]yaml.Kind   // by path: what the value is
+	not    map[string][]yaml.Kind // by path: what it is not
+	angles map[string]unit.Angle  // by path: what was read there
+	barred map[string]string      // by path: why the key is refused
+	vague  map[string]bool        // by path: what was read of it last says not all of it
+	stand  *yaml.Node             // for every value that is there
+	limit  int                    // notes left
+	units  [][]string             // of every kind
 }
 
 // decision is an answer: whether a key is there ("?"), whether a value is keys ("{}") or a list
@@ -50,7 +50,7 @@ type note struct {
 	what        topic
 	path, owner string
 	text        string
-	shape       shape
+	shape       *shape
 }
 
 type topic string
@@ -82,7 +82,7 @@ type shape struct {
 // maxNotes ends a reader that asks for ever.
 const maxNotes = 50_000
 
-func newProbe(script map[string]int, prefer func(string) bool, high bool, units [][]string) *probe {
+func newProbe(script map[string]int, prefer func(decision) bool, high bool, units [][]string) *probe {
 	return &probe{script: script, prefer: prefer, high: high, answer: map[string]int{}, there: map[string]bool{}, kind: map[string]yaml.Kind{},
 		not: map[string][]yaml.Kind{}, angles: map[string]unit.Angle{}, barred: map[string]string{}, vague: map[string]bool{}, stand: &yaml.Node{}, limit: maxNotes, units: units}
 }
@@ -100,13 +100,13 @@ func (p *probe) decide(d decision) int {
 		return chosen
 	}
 	d.chosen = p.script[d.id]
-	if _, scripted := p.script[d.id]; !scripted && p.prefer != nil && p.prefer(d.owner) && strings.HasSuffix(d.id, "?") {
+	if _, scripted := p.script[d.id]; !scripted && p.prefer != nil && strings.HasSuffix(d.id, "?") && p.prefer(d) {
 		d.chosen = 1
 	}
 	d.chosen = min(d.chosen, d.options-1)
 	p.answer[d.id] = d.chosen
 	p.taken = append(p.taken, d)
-	p.note(note{what: decided, path: d.path, owner: d.owner, text: d.id})
+	p.note(note{what: decided, path: d.path, owner: d.owner, text: d.id[len(d.path):]})
 	return d.chosen
 }
 
@@ -186,7 +186,7 @@ func (p *probe) must(v Value, kind yaml.Kind) bool {
 }
 
 func (p *probe) see(v Value, s shape) {
-	p.note(note{what: valued, path: v.place.key, owner: v.owner, text: s.text, shape: s})
+	p.note(note{what: valued, path: v.place.key, owner: v.owner, text: s.text, shape: &s})
 }
 
 func (p *probe) fail(v Value, found string) {
@@ -247,7 +247,7 @@ func probedWord(v Value, words [][]string, asAny func([]string) []any, or string
 		id.WriteString(alike[0] + "|")
 	}
 	k := p.decide(decision{id: id.String(), path: v.place.key, owner: v.owner, options: len(words), words: words})
-	p.see(v, shape{rank: specific, kind: yaml.ScalarNode, text: id.String(), words: words, wordID: id.String(), asAny: asAny})
+	p.see(v, shape{rank: specific, kind: yaml.ScalarNode, text: id.String()[len(v.place.key):], words: words, wordID: id.String(), asAny: asAny})
 	return words[k][0]
 }
 

@@ -18,9 +18,12 @@ import (
 const (
 	maxRuns   = 400_000
 	maxLeaves = 5_000
-	// places are how many of the ways found so far, of those where the same is refused, a question is
+	// places are how many of the ways found so far, of those that are refused and of those that are not, a question is
 	// tried in before it is believed that nothing else depends on it.
 	places = 3
+	// maxWords are how many words may be alternatives that change what else is asked in ways that
+	// only show together with other keys.
+	maxWords = 8
 )
 
 // Describe returns a JSON Schema (draft 2020-12) of the format that a reader takes, worked out by
@@ -89,14 +92,14 @@ type explorer struct {
 	runs    int
 	units   [][]string
 	matters map[string]bool           // questions whose answer changes what else is asked or refused
-	known   map[string]map[string]any // schemas of keys by path and what they depend on
+	known   map[string]map[string]any // schemas of keys by their signatures
 	signed  map[string]string         // signatures by what they are of
 	grounds map[string]bool           // refusals that depend on nothing outside their keys
 }
 
 type script = map[string]int
 
-func (x *explorer) run(s script, prefer func(string) bool, high bool) *probe {
+func (x *explorer) run(s script, prefer func(decision) bool, high bool) *probe {
 	if x.runs++; x.runs > maxRuns {
 		panic(fmt.Sprintf("more than %d ways", maxRuns))
 	}
@@ -110,24 +113,20 @@ func within(path, top string) bool {
 	return top == "" || path == top || strings.HasPrefix(path, top) && (path[len(top)] == '.' || path[len(top)] == '[')
 }
 
-// refusals are what is refused of some keys.
-func (p *probe) refusals(top string) string {
-	var b strings.Builder
-	for _, n := range p.notes {
-		if n.what == wrong && n.owner == top {
-			b.WriteString(n.path + " " + n.text + "\n")
-		}
-	}
-	return b.String()
+// refused says whether anything about some keys is refused.
+func (p *probe) refused(top string) bool {
+	return slices.ContainsFunc(p.notes, func(n note) bool { return n.what == wrong && n.owner == top })
 }
 
-// log is what a reader said at and below some keys, but for what it said of one path unless it
-// refused it.
+// log is what a reader said at and below some keys, in paths that begin there, but for what it said
+// of one path unless it refused it.
 func (p *probe) log(top, but string) string {
 	var b strings.Builder
 	for _, n := range p.notes {
 		if within(n.owner, top) && (but == "" || n.what == wrong && n.owner == top || !within(n.path, but)) {
-			b.WriteString(string(n.what) + " " + n.path + " " + n.text + "\n")
+			for _, s := range []string{string(n.what), " ", n.path[len(top):], " ", n.text, "\n"} {
+				b.WriteString(s)
+			}
 		}
 	}
 	return b.String()
@@ -183,26 +182,25 @@ func (x *explorer) ways(top string, context script) []way {
 
 // explore finds the questions about some keys that matter, and returns all ways to write them.
 func (x *explorer) explore(top string, context script) []way {
-	ours := func(owner string) bool { return owner == top }
 	for {
-		ways := x.ways(top, context)
+		ways, free := x.ways(top, context), x.free(top)
 		grown := false
 		tried := map[string]int{}
 		for _, w := range ways {
-			for _, prefer := range []func(string) bool{nil, ours} {
-				p := w.probe
-				if prefer != nil {
-					p = x.run(w.script, prefer, w.high)
+			for _, s := range x.states(top, w, free) {
+				if s.most == 1 && tried[s.name] > 0 {
+					continue
 				}
-				refused := p.refusals(top)
+				tried[s.name]++
+				p := x.run(s.script, s.prefer, w.high)
 				for _, d := range p.taken {
-					key := fmt.Sprint(d.id, prefer != nil, w.high, refused)
-					if d.owner != top || x.matters[d.id] || tried[key] >= places {
+					key := fmt.Sprint(s.name, d.id, p.refused(top))
+					if d.owner != top || x.matters[d.id] || tried[key] >= s.most {
 						continue
 					}
 					tried[key]++
 					for k := range d.options {
-						if k != d.chosen && x.run(with(w.script, d.id, k), prefer, w.high).log(top, d.path) != p.log(top, d.path) {
+						if k != d.chosen && x.run(with(s.script, d.id, k), s.prefer, w.high).log(top, d.path) != p.log(top, d.path) {
 							grown = true
 							x.mark(d)
 							break
@@ -215,6 +213,36 @@ func (x *explorer) explore(top string, context script) []way {
 			return ways
 		}
 	}
+}
+
+// state is what questions are tried in whether they matter.
+type state struct {
+	name   string
+	script script
+	prefer func(decision) bool
+	most   int // times
+}
+
+// states are one way to write some keys with none of the free ones, with all of them, and with one
+// word after the other that is not the first.
+func (x *explorer) states(top string, w way, free func(decision) bool) []state {
+	name := fmt.Sprint(w.high, w.refused(top))
+	all := []state{{name, w.script, nil, places}, {"full " + name, w.script, free, places}}
+	for _, d := range x.run(w.script, free, w.high).taken {
+		if !free(d) || d.words == nil || len(d.words) > maxWords {
+			continue
+		}
+		for k := 1; k < len(d.words); k++ {
+			all = append(all, state{fmt.Sprint(d.id, k, name), with(with(w.script, d.path+"?", 1), d.id, k), nil, 1})
+		}
+	}
+	return all
+}
+
+// free says which of some keys may be there without any of the others minding.
+func (x *explorer) free(top string) func(decision) bool {
+	matters := maps.Clone(x.matters) // as they are now: what is compared must not change under way
+	return func(d decision) bool { return d.owner == top && !matters[d.id] }
 }
 
 // mark says that a question matters, and so whether the value is there at all and of its kind: else
@@ -258,7 +286,8 @@ func (x *explorer) keys(top string, above *probe) map[string]any {
 	if above != nil {
 		context = x.context(above, top)
 	}
-	id := top + "\n" + x.signature(top, context)
+	// What is asked in the same way is the same, wherever it stands.
+	id := x.signature(top, context)
 	if known, ok := x.known[id]; ok {
 		return known
 	}
@@ -284,13 +313,13 @@ func (x *explorer) signature(top string, context script) string {
 		return known
 	}
 	var b strings.Builder
-	below := func(owner string) bool { return within(owner, top) }
+	below := func(d decision) bool { return within(d.owner, top) }
 	for _, high := range []bool{false, true} {
 		b.WriteString(x.run(context, nil, high).log(top, ""))
 		full := x.run(context, below, high)
 		b.WriteString(full.log(top, ""))
 		for _, d := range full.taken {
-			if below(d.owner) && d.words != nil && len(d.words) < 12 {
+			if below(d) && d.words != nil && len(d.words) <= maxWords {
 				for k := range d.options {
 					b.WriteString(x.run(with(context, d.id, k), below, high).log(top, ""))
 				}
@@ -407,7 +436,7 @@ func (x *explorer) form(top string, w way) form {
 
 // fillings are runs of one way in which all its keys are there that are free to be.
 func (x *explorer) fillings(top string, w way) []*probe {
-	ours := func(owner string) bool { return owner == top }
+	ours := x.free(top)
 	// Free keys do not matter to one another, so that all can be let in at once.
 	full := x.run(w.script, ours, w.high)
 	runs := []*probe{w.probe, full}
@@ -437,7 +466,7 @@ func (p *probe) refuses(top string, but *probe) bool {
 
 // value is the schema of what stands at a path in one way.
 func (x *explorer) value(path string, p *probe) map[string]any {
-	best := shape{rank: -1}
+	best := &shape{rank: -1}
 	var all []map[string]any
 	for _, n := range p.notes {
 		if n.what != valued || n.path != path || n.shape.rank < best.rank {
@@ -447,14 +476,17 @@ func (x *explorer) value(path string, p *probe) map[string]any {
 			all = nil
 		}
 		if s := n.shape; s.kind == yaml.SequenceNode && best.kind == s.kind {
-			best.low, best.high = max(s.low, best.low), min(s.high, best.high)
+			both := *best
+			both.low, both.high = max(s.low, best.low), min(s.high, best.high)
+			best = &both
 			continue
 		}
 		best = n.shape
 		switch {
 		case best.words != nil:
 			words := best.words
-			if x.matters[best.wordID] {
+			// One item stands for all of a list, so that its word is not the only one.
+			if x.matters[best.wordID] && !strings.HasSuffix(path, "[]") {
 				words = words[p.answer[best.wordID]:][:1]
 			}
 			all = append(all, map[string]any{"enum": best.asAny(slices.Concat(words...))})
@@ -465,7 +497,7 @@ func (x *explorer) value(path string, p *probe) map[string]any {
 		}
 	}
 	if best.kind == yaml.SequenceNode {
-		return x.list(path, best, p)
+		return x.list(path, *best, p)
 	}
 	both := alternatives{}
 	for _, s := range all {
@@ -587,7 +619,7 @@ func (x *explorer) literals(top string, forms []form) []literal {
 // asAny is how the words of a question are written in JSON.
 func (*explorer) asAny(f form, id string) func([]string) []any {
 	for _, n := range f.way.notes {
-		if n.shape.wordID == id {
+		if n.shape != nil && n.shape.wordID == id {
 			return n.shape.asAny
 		}
 	}
