@@ -3,6 +3,7 @@ package report
 import (
 	"context"
 	"fmt"
+	"slices"
 
 	"gemel/daemon/bench"
 	"gemel/daemon/logbook"
@@ -37,7 +38,8 @@ func Judge(ctx context.Context, book *logbook.Book, run protocol.RunID, plan sca
 	}
 	q := estimate.ReferenceQuestion{Of: *plan.Reference, Profile: profiles(file, *plan.Reference, before)}
 	v := estimate.JudgeReference(now, before, Constants(file), q)
-	return engine.Verdict{Good: v.Good, Text: v.Text(), Detail: v.Detail()}, nil
+	untold := slices.ContainsFunc(v.Changes, func(c estimate.Change) bool { return c.Finding == estimate.Untold })
+	return engine.Verdict{Good: v.Good, Untold: untold, Text: v.Text(), Detail: v.Detail()}, nil
 }
 
 // profiles predicts each arm's profile of coincidences through the top, by the declared source. It

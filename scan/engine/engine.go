@@ -84,6 +84,7 @@ type Config struct {
 // Verdict is what a set of references says about the night so far.
 type Verdict struct {
 	Good   bool
+	Untold bool           // too few counts for one of the bounds: neither good nor bad
 	Text   string         // one sentence: what changed by how much, and what was allowed
 	Detail map[string]any // the numbers
 }

@@ -57,6 +57,7 @@ type Hand struct {
 	blades   map[drivers.DeviceName]protocol.HandBlade
 	settings map[drivers.DeviceName]protocol.HandValue
 	sensors  map[drivers.DeviceName]protocol.HandValue
+	askedAt  time.Time // when all of that was asked last
 }
 
 // NewHand puts a bench under a hand. It touches nothing.
@@ -151,6 +152,7 @@ func (h *Hand) held() error {
 
 // look fills what State tells.
 func (h *Hand) look(ctx context.Context) {
+	h.askedAt = time.Now()
 	h.places(ctx)
 	h.lookAtShutters(ctx)
 	for _, s := range h.e.Bench.Settings {
@@ -233,7 +235,8 @@ func (h *Hand) guards(s drivers.Shutter) string {
 	return strings.Join(names, ", ")
 }
 
-// Look counts one gate and judges the light in it.
+// Look counts one gate and judges the light in it. A long one is cut into shorter gates while detectors
+// see light, so that too much of it does not wait for the end.
 func (h *Hand) Look(ctx context.Context, gate time.Duration) (protocol.HandLookedAt, error) {
 	if err := h.held(); err != nil {
 		return protocol.HandLookedAt{}, err
@@ -241,13 +244,40 @@ func (h *Hand) Look(ctx context.Context, gate time.Duration) (protocol.HandLooke
 	if low, high := h.facts.GateMin, h.facts.GateMax; gate <= 0 || gate < low || high > 0 && gate > high {
 		return protocol.HandLookedAt{}, refuseHand("gate %s; want %s to %s", gate, low, high)
 	}
-	slice, doubt, err := h.gate(ctx, gate)
-	if err != nil {
-		return protocol.HandLookedAt{}, err
+	var all protocol.Slice
+	doubt := ""
+	for left := gate; left > 0; {
+		part := left
+		if h.seeing() && left >= 2*handSlice {
+			part = handSlice
+		}
+		left -= part
+		slice, bad, err := h.gate(ctx, part)
+		if err != nil {
+			return protocol.HandLookedAt{}, err
+		}
+		if err := h.judge(ctx, slice); err != nil {
+			return protocol.HandLookedAt{}, err
+		}
+		all.Counts = sum(all.Counts, slice.Counts, h.e.Bench.Tag)
+		all.Gate += slice.Gate
+		if bad != "" {
+			doubt = bad
+		}
 	}
-	seen := h.told(slice, doubt)
-	return seen, h.judge(ctx, slice)
+	if time.Since(h.askedAt) > handRefresh {
+		h.look(ctx)
+	}
+	return h.told(all, doubt), context.Cause(ctx)
 }
+
+// handSlice is the longest gate in which detectors see light that nobody judges, nearly: a last one may
+// be twice as long. handRefresh is the time between two questions of how everything stands while a
+// person looks at rates.
+const (
+	handSlice   = 2 * time.Second
+	handRefresh = 2 * time.Second
+)
 
 // Watch is a glance that is nobody's: while detectors see light, somebody has to.
 func (h *Hand) Watch(ctx context.Context) error {

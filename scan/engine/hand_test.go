@@ -236,6 +236,26 @@ func TestTooMuchLightIsProtectedFromBeforeItIsTold(t *testing.T) {
 	})
 }
 
+func TestALongGateIsJudgedBeforeItsEnd(t *testing.T) {
+	underHand(t, nil, func(t *testing.T, w *world, h *Hand) {
+		if l, err := h.Look(t.Context(), 9*time.Second); err != nil || l.Gate.Duration() != 9*time.Second || len(w.acts("gate")) != 1 {
+			t.Fatalf("behind shutters: %+v, %v, %v; want one gate", l, err, w.acts("gate"))
+		}
+		if err := h.Shutter(t.Context(), "detectors", true); err != nil {
+			t.Fatal(err)
+		}
+		w.log = nil
+		if l, err := h.Look(t.Context(), 9*time.Second); err != nil || l.Gate.Duration() != 9*time.Second || l.Rates[0].Counts != 9000 || len(w.acts("gate")) != 4 {
+			t.Errorf("seeing light: %+v, %v, %v; want 9 s in four gates", l, err, w.acts("gate"))
+		}
+		w.rates["idler"] = 2e5
+		began := time.Now()
+		if _, err := h.Look(t.Context(), 90*time.Second); err == nil || w.open["guard"] || time.Since(began) > 3*time.Second {
+			t.Errorf("Look() = %v after %s; want the light seen in the first gate", err, time.Since(began))
+		}
+	})
+}
+
 func TestADetectorWithoutAProtectorHasThePumpClosedForIt(t *testing.T) {
 	underHand(t, func(_ *world, b *Bench) { b.Detectors[1].Protect = nil }, func(t *testing.T, w *world, h *Hand) {
 		refused(t, h.Shutter(t.Context(), "idler", true), "names no protector")

@@ -23,6 +23,7 @@ type references struct {
 	pending     bool      // complete, and not judged yet
 	baseline    int       // the set that others are compared with; 0: the next complete one
 	held        bool      // a bad one holds the run
+	untold      bool      // it was written that a bound cannot be judged: once is enough
 	goodUntil   int64     // entry of the last reading of the last good set
 	goodAt      time.Time // when that set began; zero: there is none
 }
@@ -45,6 +46,9 @@ func (f *references) applyEvent(ev *protocol.Event) {
 	if _, bad := ev.Detail["reference"]; bad && ev.Kind != protocol.Ended {
 		f.pending = false
 		f.held = f.held || ev.State == protocol.Holding
+	}
+	if untold, _ := ev.Detail["untold"].(bool); untold {
+		f.untold = true
 	}
 	switch ev.Kind {
 	case protocol.Held, protocol.Interrupted, protocol.GuardBroken:
@@ -105,7 +109,10 @@ func (e *Engine) judge(ctx context.Context) error {
 	}
 	if verdict.Good {
 		f.passed()
-		return nil
+		if !verdict.Untold || f.untold {
+			return nil
+		}
+		return e.note(ctx, protocol.Trouble, fmt.Sprintf("reference %d against %d: %s", f.set, f.baseline, verdict.Text), map[string]any{"untold": true, "changes": verdict.Detail})
 	}
 	text := fmt.Sprintf("reference %d against %d: %s", f.set, f.baseline, verdict.Text)
 	detail := map[string]any{}

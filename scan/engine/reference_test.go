@@ -211,3 +211,18 @@ func TestAnOldReferenceIsRenewedBeforeItBreaksAGuard(t *testing.T) {
 		}
 	})
 }
+
+func TestABoundThatCannotBeJudgedIsToldOnce(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		n := referenced(t, scan.Hold, never)
+		n.eng.Config.Judge = func(context.Context, int, int) (Verdict, error) {
+			return Verdict{Good: true, Untold: true, Text: "cannot tell: centre of idler_arm; want a dwell of at least 40 s"}, nil
+		}
+		if state, err := n.eng.Run(t.Context()); state != protocol.Finished || err != nil {
+			t.Fatalf("Run() = %s, %v; want finished", state, err)
+		}
+		if events := n.events(t); kinds(events) != "began trouble ended" || !strings.Contains(events[1].Text, "want a dwell of at least 40 s") {
+			t.Errorf("events %s; want what cannot be judged, once", kinds(events))
+		}
+	})
+}
