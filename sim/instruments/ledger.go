@@ -25,6 +25,7 @@ const (
 	MoveStopped Kind = "move_stopped" // the same, when a stopped axis has come to rest
 	HomeStarted Kind = "home_started" // Axes: from_deg
 	HomeFound   Kind = "home_found"   // Axes: true from_deg and to_deg; the axis knows its zero now
+	Underway    Kind = "underway"     // between the two, at a few instants: Stand
 	Stopped     Kind = "stop_byte"    // a stop byte arrived, whether or not something moved
 	Refused     Kind = "refused"      // a line was refused; Text: the line and the reason
 
@@ -53,8 +54,10 @@ type Record struct {
 	Gate  *GateTruth      `json:"gate,omitempty"`
 	Axes  map[string]Span `json:"axes,omitempty"` // by the axis's name in the bench file; bench degrees
 	Value float64         `json:"value,omitempty"`
-	Text  string          `json:"text,omitempty"`
-	Line  string          `json:"line,omitempty"`
+	// Stand is where every axis of the bench truly is, bench degrees: in all records of motion.
+	Stand map[string]float64 `json:"stand,omitempty"`
+	Text  string             `json:"text,omitempty"`
+	Line  string             `json:"line,omitempty"`
 }
 
 // Span is where an axis truly went, in bench degrees.

@@ -133,7 +133,7 @@ func (x *axis) upset(at time.Time, t trouble.Trouble) {
 	from := x.path.axis(at)
 	x.path.shift(at, t.ByDeg)
 	x.slip += t.ByDeg
-	x.w.record(Record{At: at, Kind: Slipped, Text: t.String(), Axes: map[string]Span{x.cfg.Axis: {from, x.path.axis(at)}}})
+	x.w.record(Record{At: at, Kind: Slipped, Text: t.String(), Axes: map[string]Span{x.cfg.Axis: {from, x.path.axis(at)}}, Stand: x.w.stand(at)})
 }
 
 // mechanism is the moving part of a controller: axes, the moves that are planned, the searches.
@@ -152,7 +152,12 @@ type job struct {
 	from       map[string]Span
 	started    bool
 	begin, end *happening
+	looks      []*happening // at where the axes are meanwhile
 }
+
+// looksOfJob is at how many instants of a motion the ledger says where everything is: between them
+// nothing turns back.
+const looksOfJob = 7
 
 // maxJobs is how many moves a controller keeps in its queue.
 const maxJobs = 16
@@ -273,8 +278,8 @@ func (x *axis) loseSteps(at time.Time) {
 	x.w.at(at, nil, func(at time.Time) { x.upset(at, t) })
 }
 
-// enter puts a job on the list, and its beginning and end into the future.
-func (m *mechanism) enter(j *job, began, ended Kind, first, last time.Time, done func(at time.Time)) {
+// enter puts a job on the list, and its beginning and end into the future. turns are where it turns back.
+func (m *mechanism) enter(j *job, began, ended Kind, first, last time.Time, done func(at time.Time), turns ...time.Time) {
 	m.jobs = append(m.jobs, j)
 	start := func(at time.Time) {
 		j.started = true
@@ -283,7 +288,7 @@ func (m *mechanism) enter(j *job, began, ended Kind, first, last time.Time, done
 			j.from[x.cfg.Axis] = Span{FromDeg: x.path.axis(at)}
 			planned[x.cfg.Axis] = Span{FromDeg: x.path.axis(at), ToDeg: x.path.axis(last)}
 		}
-		m.w.record(Record{At: at, Device: m.name, Kind: began, Axes: planned})
+		m.w.record(Record{At: at, Device: m.name, Kind: began, Axes: planned, Stand: m.w.stand(at)})
 	}
 	if first.After(m.w.Now()) {
 		j.begin = m.w.at(first, nil, start)
@@ -295,8 +300,16 @@ func (m *mechanism) enter(j *job, began, ended Kind, first, last time.Time, done
 		if done != nil {
 			done(at)
 		}
-		m.w.record(Record{At: at, Device: m.name, Kind: ended, Axes: j.spans(at)})
+		m.w.record(Record{At: at, Device: m.name, Kind: ended, Axes: j.spans(at), Stand: m.w.stand(at)})
 	})
+	for i := range looksOfJob {
+		turns = append(turns, first.Add(last.Sub(first)*time.Duration(i+1)/(looksOfJob+1)))
+	}
+	for _, at := range turns {
+		j.looks = append(j.looks, m.w.at(at, nil, func(at time.Time) {
+			m.w.record(Record{At: at, Device: m.name, Kind: Underway, Stand: m.w.stand(at)})
+		}))
+	}
 }
 
 func (j *job) spans(at time.Time) map[string]Span {
@@ -341,13 +354,14 @@ func (m *mechanism) home(now time.Time, x *axis) (refusal string) {
 		d := math.Abs(motor - below)
 		at = x.path.follow(at, below, newProfile(x.cfg.SpeedDegS/d, x.cfg.AccelDegS2/d))
 	}
+	turn := at
 	_, motor := x.path.end()
 	d := math.Abs(home - motor)
 	at = x.path.follow(at, home, newProfile(x.cfg.SpeedDegS/2/d, x.cfg.AccelDegS2/d))
 	j := &job{home: x, axes: []*axis{x}, from: map[string]Span{}}
 	m.enter(j, HomeStarted, HomeFound, now, at, func(time.Time) {
 		x.homed, x.lost, x.slip = true, 0, 0
-	})
+	}, turn)
 	return ""
 }
 
@@ -376,11 +390,14 @@ func (m *mechanism) interrupt(rest time.Time, within time.Duration) {
 	for _, j := range m.jobs {
 		j.begin.callOff()
 		j.end.callOff()
+		for _, look := range j.looks {
+			look.callOff()
+		}
 		if !j.started {
 			continue
 		}
 		report := func(at time.Time) {
-			m.w.record(Record{At: at, Device: m.name, Kind: MoveStopped, Axes: j.spans(at)})
+			m.w.record(Record{At: at, Device: m.name, Kind: MoveStopped, Axes: j.spans(at), Stand: m.w.stand(at)})
 		}
 		if within > 0 {
 			m.w.at(rest, nil, report)

@@ -189,8 +189,8 @@ func TestRotaryStopByteActsInTheMiddleOfALine(t *testing.T) {
 		for _, r := range w.Ledger().Records() {
 			kinds = append(kinds, string(r.Kind))
 		}
-		if got := strings.Join(kinds, " "); got != "move_started stop_byte move_stopped" {
-			t.Errorf("ledger: %s; want move_started stop_byte move_stopped", got)
+		if got := strings.Join(kinds, " "); got != "move_started underway stop_byte move_stopped" {
+			t.Errorf("ledger: %s; want move_started underway stop_byte move_stopped", got)
 		}
 		l.hangUp()
 	})

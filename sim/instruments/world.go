@@ -178,6 +178,15 @@ func (w *World) TrueDeg(axis string) (float64, bool) {
 	return 0, false
 }
 
+// stand is where every axis truly is.
+func (w *World) stand(at time.Time) map[string]float64 {
+	all := make(map[string]float64, len(w.axes))
+	for _, x := range w.axes {
+		all[x.cfg.Axis] = x.path.axis(at)
+	}
+	return all
+}
+
 func (w *World) bench(real time.Time) time.Time { return w.origin.Add(real.Sub(w.origin) * w.pace) }
 
 // real is the first instant at which bench time is at.

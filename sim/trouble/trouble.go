@@ -37,6 +37,11 @@ const (
 	PumpDrift Kind = "pump_drift" // the pump's power changes by the share Share, evenly over For, and stays there
 )
 
+// Kinds lists them all, wire troubles first.
+func Kinds() []Kind {
+	return []Kind{Missing, Garbled, Late, Duplicated, Unasked, Restart, Lamp, Unplug, Slip, LostSteps, PumpDrift}
+}
+
 // Trouble is one thing that goes wrong. Which fields count depends on the kind; the others are zero.
 type Trouble struct {
 	Kind   Kind
