@@ -51,7 +51,7 @@ type HandReply struct {
 	Act      HandAct       `json:"act"`
 	Session  string        `json:"session"`
 	Text     string        `json:"text"`     // one sentence for a person
-	Recorded bool          `json:"recorded"` // false: done, but there was no room to write it down; or one of many looks
+	Recorded bool          `json:"recorded"` // false: not written down, for want of room, as one of many looks, or because it touched nothing
 	Lease    Seconds       `json:"lease_s"`  // the session ends when nothing is asked for so long
 	LetGo    bool          `json:"let_go"`   // the lines are another program's
 	Axes     []HandAxis    `json:"axes"`

@@ -11,6 +11,7 @@ import (
 	"strings"
 	"time"
 
+	"gemel/daemon/logbook"
 	"gemel/drivers"
 	"gemel/protocol"
 	"gemel/protocol/unit"
@@ -130,16 +131,71 @@ func orNothing(text string) string {
 	return text
 }
 
-// enqueueHand gives an order to Run's goroutine, and opens the session if it is the first.
+// enqueueHand gives an order to Run's goroutine, and opens the session if it is the first. Only that
+// waits until it is decided whose turn it is: a request to rest never does.
 func (k *Keeper) enqueueHand(ctx context.Context, o *handOrder) error {
-	k.order.Lock() // nobody decides meanwhile whose turn it is
+	for {
+		if k.handSession() != nil {
+			if err := k.giveHand(o, false, nil); !errors.Is(err, errHandOver) {
+				return err
+			}
+		}
+		if opened, err := k.openHand(ctx, o); opened || err != nil {
+			return err
+		}
+	}
+}
+
+var errHandOver = errors.New("the session ended meanwhile")
+
+// openHand gives an order that may open a session; not opened, with no error, means that somebody
+// else opened one just before.
+func (k *Keeper) openHand(ctx context.Context, o *handOrder) (opened bool, err error) {
+	k.order.Lock()
 	defer k.order.Unlock()
+	if k.handSession() != nil {
+		return false, nil
+	}
 	queue, err := k.waiting(ctx)
 	if err != nil {
-		return err
+		return false, err
 	}
+	return true, k.giveHand(o, true, queue)
+}
+
+// giveHand puts an order where Run's goroutine finds it.
+func (k *Keeper) giveHand(o *handOrder, mayOpen bool, queue []logbook.Waiting) error {
 	k.mu.Lock()
 	defer k.mu.Unlock()
+	if k.hands.session == nil && !mayOpen {
+		return errHandOver
+	}
+	if err := k.admit(o, queue); err != nil {
+		return err
+	}
+	h := &k.hands
+	if len(h.waiting) >= mostHandOrders && !o.interrupts() {
+		return protocol.Refuse(503, "too many acts wait already")
+	}
+	h.session.last = time.Now()
+	if o.interrupts() {
+		h.waiting = append([]*handOrder{o}, h.waiting...)
+		if h.cancel != nil {
+			h.cancel(fmt.Errorf("interrupted by %s", o.by))
+		}
+	} else {
+		h.waiting = append(h.waiting, o)
+	}
+	k.nudge()
+	return nil
+}
+
+// mostHandOrders may wait for the one that is carried out.
+const mostHandOrders = 16
+
+// admit says whether an order belongs to the session, and opens one where it may. It needs mu, and to
+// open one, order too.
+func (k *Keeper) admit(o *handOrder, queue []logbook.Waiting) error {
 	h := &k.hands
 	switch s := h.session; {
 	case !h.serving:
@@ -158,19 +214,6 @@ func (k *Keeper) enqueueHand(ctx context.Context, o *handOrder) error {
 	default:
 		return protocol.Refuse(409, fmt.Sprintf("%s has the bench under their hand since %s; it is free when they leave, or %s after the last they asked", s.who, s.since.Local().Format("15:04:05"), handLease))
 	}
-	if len(h.waiting) >= 16 {
-		return protocol.Refuse(503, "too many acts wait already")
-	}
-	h.session.last = time.Now()
-	if o.interrupts() {
-		h.waiting = append([]*handOrder{o}, h.waiting...)
-		if h.cancel != nil {
-			h.cancel(fmt.Errorf("interrupted by %s", o.by))
-		}
-	} else {
-		h.waiting = append(h.waiting, o)
-	}
-	k.nudge()
 	return nil
 }
 
@@ -210,18 +253,18 @@ func (k *Keeper) openHands() (closeHands func()) {
 		k.mu.Lock()
 		k.hands.serving, k.hands.session = false, nil
 		k.mu.Unlock()
-		k.refuseHands("the daemon is ending; nothing was done")
+		k.refuseHands(503, "the daemon is ending; nothing was done")
 	}
 }
 
 // refuseHands answers every order that waits.
-func (k *Keeper) refuseHands(text string) {
+func (k *Keeper) refuseHands(code int, text string) {
 	k.mu.Lock()
 	waiting := k.hands.waiting
 	k.hands.waiting = nil
 	k.mu.Unlock()
 	for _, o := range waiting {
-		o.answer(protocol.HandReply{}, protocol.Refuse(503, text))
+		o.answer(protocol.HandReply{}, protocol.Refuse(code, text))
 	}
 }
 
@@ -268,7 +311,7 @@ func (w *handWork) run(ctx context.Context) (err error) {
 	func() {
 		defer func() {
 			if v := recover(); v != nil {
-				why, last = fmt.Sprintf("a bug in this program ended the hand work of %s: %v", w.s.who, v), w.now
+				why, last = fmt.Sprintf("a bug in this program ended the hand work of %s: %v", w.who(), v), w.now
 				err = fmt.Errorf("hand work: panic: %v\n%s", v, debug.Stack())
 			}
 		}()
@@ -287,9 +330,9 @@ func (w *handWork) loop(ctx context.Context) (why string, last *handOrder) {
 		}
 		switch {
 		case o.stop:
-			return fmt.Sprintf("%s ended the hand work of %s", o.by, w.s.who), o
+			return fmt.Sprintf("%s ended the hand work of %s", o.by, w.who()), o
 		case o.ends():
-			return fmt.Sprintf("%s took the hand off the bench", w.s.who), o
+			return fmt.Sprintf("%s took the hand off the bench", w.who()), o
 		}
 		w.now = o
 		reply, err := w.carryOut(ctx, o)
@@ -300,6 +343,18 @@ func (w *handWork) loop(ctx context.Context) (why string, last *handOrder) {
 			return "", nil
 		}
 	}
+}
+
+func (w *handWork) who() string {
+	w.k.mu.Lock()
+	defer w.k.mu.Unlock()
+	return w.s.who
+}
+
+func (w *handWork) name() string {
+	w.k.mu.Lock()
+	defer w.k.mu.Unlock()
+	return w.s.name
 }
 
 func (w *handWork) touch() {
@@ -324,13 +379,13 @@ func (w *handWork) next(ctx context.Context) (o *handOrder, why string) {
 		if w.hand.LetGo() {
 			left = handLease // another program works: nothing of ours is on, and only a person takes the lines back
 		} else if left <= 0 {
-			return nil, fmt.Sprintf("nothing was asked for %s, so the hand work of %s ended", handLease, w.s.who)
+			return nil, fmt.Sprintf("nothing was asked for %s, so the hand work of %s ended", handLease, w.who())
 		}
 		timer := time.NewTimer(min(left, handWatch))
 		select {
 		case <-ctx.Done():
 			timer.Stop()
-			return nil, fmt.Sprintf("the program was told to end, and the hand work of %s with it", w.s.who)
+			return nil, fmt.Sprintf("the program was told to end, and the hand work of %s with it", w.who())
 		case <-w.k.wake:
 			timer.Stop()
 		case <-timer.C:
@@ -404,7 +459,7 @@ func (w *handWork) carryOut(ctx context.Context, o *handOrder) (protocol.HandRep
 		return protocol.HandReply{}, protocol.Refuse(409, refused.Text)
 	}
 	reply := w.hand.State()
-	reply.Act, reply.Session, reply.Text, reply.Lease, reply.Look = o.q.Act, w.s.name, text, protocol.Seconds(handLease), seen
+	reply.Act, reply.Session, reply.Text, reply.Lease, reply.Look = o.q.Act, w.name(), text, protocol.Seconds(handLease), seen
 	if moved != nil {
 		reply.Moved = moved
 	}
@@ -603,8 +658,8 @@ func (w *handWork) writeLooks(ctx context.Context) {
 	if w.looks.count == 0 {
 		return
 	}
-	text := fmt.Sprintf("%s looked %d times; the last time %s", w.s.who, w.looks.count, w.looks.last)
-	w.record(ctx, protocol.OperatorDid, text, map[string]any{"who": w.s.who, "act": string(protocol.HandLook), "times": w.looks.count, "gate_s": w.looks.gate.Seconds(), handDetail: handGoesOn})
+	text := fmt.Sprintf("%s looked %d times; the last time %s", w.who(), w.looks.count, w.looks.last)
+	w.record(ctx, protocol.OperatorDid, text, map[string]any{"who": w.who(), "act": string(protocol.HandLook), "times": w.looks.count, "gate_s": w.looks.gate.Seconds(), handDetail: handGoesOn})
 	w.looks.count = 0
 }
 
@@ -620,7 +675,7 @@ const (
 // is written when there is room.
 func (w *handWork) record(ctx context.Context, kind protocol.EventKind, text string, detail map[string]any) bool {
 	if detail == nil {
-		detail = map[string]any{"who": w.s.who, handDetail: handGoesOn}
+		detail = map[string]any{"who": w.who(), handDetail: handGoesOn}
 	}
 	w.owed = append(w.owed, owedEvent{kind, text, detail})
 	if w.payOwed(ctx) {
@@ -650,7 +705,11 @@ func (w *handWork) noRoom() error {
 
 // end leaves the rest state, writes that the session is over, and answers who asked for that.
 func (w *handWork) end(ctx context.Context, why string, last *handOrder, bug error) {
-	bad := w.hand.End(ctx)
+	bad, how := "", ", with the lines still another program's"
+	if !w.hand.LetGo() || ctx.Err() == nil {
+		bad = w.hand.End(ctx)
+		how = ", with the bench at rest" + notAtRest(bad)
+	}
 	recorded := true
 	if w.begun {
 		w.writeLooks(ctx)
@@ -658,7 +717,7 @@ func (w *handWork) end(ctx context.Context, why string, last *handOrder, bug err
 		if bug != nil || bad != "" {
 			kind = protocol.Trouble
 		}
-		recorded = w.record(ctx, kind, why+", with the bench at rest"+notAtRest(bad), map[string]any{"who": w.s.who, handDetail: handEnds})
+		recorded = w.record(ctx, kind, why+how, map[string]any{"who": w.who(), handDetail: handEnds})
 	}
 	k := w.k
 	k.mu.Lock()
@@ -666,14 +725,14 @@ func (w *handWork) end(ctx context.Context, why string, last *handOrder, bug err
 	k.mu.Unlock()
 	if last != nil {
 		reply := w.hand.State()
-		reply.Act, reply.Session, reply.Text, reply.Recorded = last.q.Act, w.s.name, why+", with the bench at rest"+notAtRest(bad), recorded
+		reply.Act, reply.Session, reply.Text, reply.Recorded = last.q.Act, w.name(), why+how, recorded
 		var err error
 		if bug != nil {
 			err = protocol.Refuse(500, why)
 		}
 		last.answer(reply, err)
 	}
-	k.refuseHands("the session of hand work ended; nothing was done")
+	k.refuseHands(409, "no such session of hand work: it ended just now, and nothing more was done")
 	k.nudge() // a run may wait
 }
 

@@ -572,6 +572,20 @@ func TestTheEndOfTheProgramEndsHandWorkAtRest(t *testing.T) {
 	})
 }
 
+func TestTheEndOfTheProgramLeavesLinesThatWereLetGo(t *testing.T) {
+	lines := &countedLines{}
+	lend(t, func(c *Config) { c.Hand.Lines = lines }, func(t *testing.T, l *lending) {
+		l.do(protocol.HandRequest{Act: protocol.HandWhere})
+		l.do(protocol.HandRequest{Act: protocol.HandRelease})
+		if err := l.stop(); err != nil {
+			t.Fatal(err)
+		}
+		if texts := l.texts(); !lines.letGo || !strings.HasSuffix(texts[len(texts)-1], "with the lines still another program's") {
+			t.Errorf("let go: %v, written: %q; want the other program left alone", lines.letGo, texts[len(texts)-1])
+		}
+	})
+}
+
 func TestABugInHandWorkEndsAtRestAndIsAnswered(t *testing.T) {
 	var failed error
 	lend(t, nil, func(t *testing.T, l *lending) {
@@ -583,6 +597,7 @@ func TestABugInHandWorkEndsAtRestAndIsAnswered(t *testing.T) {
 		if a := <-l.ask(look(time.Second)); code(a.err) != 500 {
 			t.Errorf("answered %v; want 500", a.err)
 		}
+		synctest.Wait()
 		failed = l.stop()
 		l.atRest()
 		texts := l.texts()
