@@ -122,7 +122,7 @@ func TestTheQueueOutlivesEveryDeathOfTheDaemon(t *testing.T) {
 	q := newQueueing(t)
 	q.start("Long", "10 min")
 	q.until("the long run is executed", func() bool { return strings.Contains(must(t, "status", "--data", q.data), "is running") })
-	for _, title := range strings.Fields("A B C D E") {
+	for title := range strings.FieldsSeq("A B C D E") {
 		q.start(title, "20 ms")
 	}
 	if got := q.order(); got != "A B C D E" {
@@ -233,7 +233,7 @@ func TestFollowTellsOfADeadDaemonAndGoesOnUnlessToldOtherwise(t *testing.T) {
 	if n := strings.Count(patient.err.String(), "nothing was heard"); n != 1 {
 		t.Errorf("the silence is told %d times; want once", n)
 	}
-	for _, line := range strings.Split(strings.TrimSpace(brief.out.String()), "\n") {
+	for line := range strings.SplitSeq(strings.TrimSpace(brief.out.String()), "\n") {
 		if !json.Valid([]byte(line)) {
 			t.Errorf("follow --json printed %q", line)
 		}
