@@ -497,7 +497,7 @@ func TestAsyncAPIDescribesTheSubjectsThatGoUses(t *testing.T) {
 	for _, k := range []protocol.EntryKind{protocol.ReadingEntry, protocol.PointEntry, protocol.EventEntry, protocol.ResultEntry} {
 		want[string(k)] = protocol.Subject("{bench}", k, "{run}")
 	}
-	verbs := []string{"start", "stop", "hold", "resume", "status", "queue", "reorder", "withdraw", "forecast", "hand"}
+	verbs := []string{"start", "stop", "hold", "resume", "status", "queue", "reorder", "withdraw", "forecast", "hand", "stop_after_point"}
 	for _, v := range verbs {
 		want[v] = protocol.DoSubject("{bench}", v)
 	}

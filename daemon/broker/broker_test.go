@@ -168,6 +168,7 @@ func TestPermissionsHold(t *testing.T) {
 		{"gemel.skerry.do.queue", both},
 		{"gemel.skerry.do.reorder", controlOnly},
 		{"gemel.skerry.do.withdraw", controlOnly},
+		{"gemel.skerry.do.stop_after_point", controlOnly},
 		{"gemel.skerry.do.forecast", controlOnly},
 		{"gemel.skerry.do.start.more", none},
 		{"gemel.other.do.status", none},

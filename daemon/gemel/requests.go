@@ -23,6 +23,8 @@ type remoteFlags struct {
 	Creds string `placeholder:"FILE" help:"Credentials for --nats."`
 	On    string `placeholder:"BENCH" help:"Bench behind --nats."`
 	JSON  bool   `name:"json" help:"Print JSON."`
+
+	patience time.Duration // more than a request usually gets
 }
 
 // connect finds the daemon.
@@ -39,13 +41,16 @@ func (f remoteFlags) connect(role string) (*client.Client, error) {
 // requestTime bounds a request, and is its expiry: one that arrives later does nothing.
 const requestTime = 20 * time.Second
 
+// sliceTime bounds a request that is answered when the open slice ends.
+const sliceTime = 10 * time.Minute
+
 func (f remoteFlags) with(ctx context.Context, role string, do func(context.Context, *client.Client) error) error {
 	c, err := f.connect(role)
 	if err != nil {
 		return err
 	}
 	defer c.Close()
-	within, cancel := context.WithTimeout(ctx, requestTime)
+	within, cancel := context.WithTimeout(ctx, max(f.patience, requestTime))
 	defer cancel()
 	err = do(within, c)
 	if r, ok := errors.AsType[*protocol.Refusal](err); ok && len(r.Findings) > 0 {
@@ -138,10 +143,17 @@ func (c *runFlags) ask(ctx context.Context, con *console, do func(*client.Client
 	})
 }
 
-type stopCommand struct{ runFlags }
+type stopCommand struct {
+	runFlags
+	AfterPoint bool `help:"Let the open point end, and take the closing darks, backgrounds and references first."`
+}
 
-func (stopCommand) Help() string { return "Example:\n  gemel stop" }
+func (stopCommand) Help() string { return "Example:\n  gemel stop\n  gemel stop --after-point" }
 func (c *stopCommand) Run(ctx context.Context, con *console) error {
+	if c.AfterPoint {
+		c.patience = sliceTime
+		return c.ask(ctx, con, (*client.Client).StopAfterPoint)
+	}
 	return c.ask(ctx, con, (*client.Client).Stop)
 }
 

@@ -444,6 +444,19 @@ func (k *Keeper) Stop(ctx context.Context, q protocol.RunRequest) (protocol.RunR
 	}
 }
 
+// StopAfterPoint ends a run when its open point is done and the closing readings are taken; one that
+// waits in the queue is stopped there.
+func (k *Keeper) StopAfterPoint(ctx context.Context, q protocol.RunRequest) (protocol.RunReply, error) {
+	eng, err := k.find(ctx, q)
+	if err != nil {
+		return protocol.RunReply{}, err
+	}
+	if eng == nil {
+		return k.Stop(ctx, q)
+	}
+	return answered(eng.StopAfterPoint(ctx, who(q.Who)))
+}
+
 // Hold makes the current run wait.
 func (k *Keeper) Hold(ctx context.Context, q protocol.RunRequest) (protocol.RunReply, error) {
 	eng, err := k.find(ctx, q)

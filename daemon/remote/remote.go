@@ -34,6 +34,7 @@ type Keeper interface {
 	Queue(context.Context) (protocol.QueueReply, error)
 	Reorder(context.Context, protocol.ReorderRequest) (protocol.QueueReply, error)
 	Withdraw(context.Context, protocol.RunRequest) (protocol.RunReply, error)
+	StopAfterPoint(context.Context, protocol.RunRequest) (protocol.RunReply, error)
 }
 
 // Config names the service.
@@ -76,7 +77,9 @@ func Serve(ctx context.Context, conn *nats.Conn, keeper Keeper, c Config) error 
 		"queue":    h.queue,
 		"reorder":  h.reorder,
 		"withdraw": h.onRun(keeper.Withdraw),
-		"forecast": h.forecast,
+		// A verb of its own: it waits for the end of a slice, and a stop must not wait behind it.
+		"stop_after_point": h.onRun(keeper.StopAfterPoint),
+		"forecast":         h.forecast,
 	} {
 		err := service.AddEndpoint(verb, h.guarded(verb, handle),
 			micro.WithEndpointSubject(protocol.DoSubject(c.Bench, verb)),

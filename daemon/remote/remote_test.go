@@ -89,6 +89,10 @@ func (k *keeper) Withdraw(_ context.Context, r protocol.RunRequest) (protocol.Ru
 	return k.run("withdraw", r)
 }
 
+func (k *keeper) StopAfterPoint(_ context.Context, r protocol.RunRequest) (protocol.RunReply, error) {
+	return k.run("stop after point", r)
+}
+
 func (k *keeper) Status(context.Context) protocol.Status {
 	return protocol.Status{Bench: bench, Version: "1.2.3", State: protocol.Running, Run: "r1"}
 }
@@ -224,6 +228,7 @@ func TestRequestsReachTheKeeperAndAreAnswered(t *testing.T) {
 		{"hold", `{"run":"r1"}`, `{"run":"r1","state":"holding","causes":[],"recorded":true}`},
 		{"resume", ` {"who":"night","run":"r1"} `, `{"run":"r1","state":"holding","causes":[],"recorded":true}`},
 		{"withdraw", `{"run":"r1","who":"night"}`, `{"run":"r1","state":"holding","causes":[],"recorded":true}`},
+		{"stop_after_point", `{"run":"r1","who":"night"}`, `{"run":"r1","state":"holding","causes":[],"recorded":true}`},
 		{"reorder", `{"runs":["r2","r1"],"who":"night","expires_at":"` + soon + `"}`,
 			`{"bench":"skerry","queue":[{"run":"r2","title":"Ring","queued_at":null,"who":"","state":"queued","readings_planned":3}]}`},
 		{"queue", `{}`, `{"bench":"skerry","queue":[]}`},
@@ -234,7 +239,7 @@ func TestRequestsReachTheKeeperAndAreAnswered(t *testing.T) {
 			t.Errorf("%s %s: %s %s %s; want %s", c.verb, c.body, code, text, answer, c.answer)
 		}
 	}
-	if got, want := k.notes(), "start demo by night; start  by night; stop r1 by night; hold r1 by ; resume r1 by night; withdraw r1 by night; reorder [r2 r1] by night"; got != want {
+	if got, want := k.notes(), "start demo by night; start  by night; stop r1 by night; hold r1 by ; resume r1 by night; withdraw r1 by night; stop after point r1 by night; reorder [r2 r1] by night"; got != want {
 		t.Errorf("the keeper heard %q; want %q", got, want)
 	}
 	for _, body := range []string{"{}", ""} {

@@ -107,6 +107,12 @@ func (c *Client) Stop(ctx context.Context, r protocol.RunRequest) (protocol.RunR
 	return ask[protocol.RunReply](ctx, c, "stop", r)
 }
 
+// StopAfterPoint asks to end a run when its open point is done and the closing darks, backgrounds and
+// references are taken. It is answered at the end of the slice that is open, so give it time.
+func (c *Client) StopAfterPoint(ctx context.Context, r protocol.RunRequest) (protocol.RunReply, error) {
+	return ask[protocol.RunReply](ctx, c, "stop_after_point", r)
+}
+
 // Hold asks a run to hold. It has no expiry unless the request brings one.
 func (c *Client) Hold(ctx context.Context, r protocol.RunRequest) (protocol.RunReply, error) {
 	return ask[protocol.RunReply](ctx, c, "hold", r)
