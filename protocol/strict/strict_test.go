@@ -2,6 +2,7 @@ package strict
 
 import (
 	"errors"
+	"fmt"
 	"os"
 	"path/filepath"
 	"strings"
@@ -154,6 +155,27 @@ func TestAnAliasBombIsRefusedWithoutBeingExpanded(t *testing.T) {
 	d, _ := read(b.String())
 	if err := d.Err(); err == nil || !strings.Contains(err.Error(), "the alias") {
 		t.Fatalf("got %v; want the aliases refused", err)
+	}
+}
+
+func TestAHostileFileGetsAHundredFindingsAndTheirNumber(t *testing.T) {
+	var unknown, entries strings.Builder
+	entries.WriteString("things:\n")
+	n := 0
+	for ; unknown.Len() < MaxBytes*9/10 && n < maxNodes-10; n++ {
+		fmt.Fprintf(&unknown, "nam%d: 1\n", n)
+		fmt.Fprintf(&entries, " a%d: 1\n", n)
+	}
+	for name, text := range map[string]string{"keys that nobody knows": unknown.String(), "names without what they need": entries.String()} {
+		d, _ := read(text)
+		e, ok := errors.AsType[*Error](d.Err())
+		if !ok || len(e.Findings) != maxFindings+1 {
+			t.Fatalf("%s: %d findings; want %d", name, len(e.Findings), maxFindings+1)
+		}
+		last := e.Findings[maxFindings]
+		if want := fmt.Sprintf("%d more findings", n-maxFindings); last.Found != want || last.Line != e.Findings[maxFindings-1].Line {
+			t.Errorf("%s: the last says %q on line %d; want %q on line %d", name, last.Found, last.Line, want, e.Findings[maxFindings-1].Line)
+		}
 	}
 }
 
