@@ -52,9 +52,9 @@ func dots(text string) [7]string {
 	return out
 }
 
-// largest draws a text with each dot two columns wide and one row high, seven rows in all.
+// largest draws a text with each dot two columns wide and one row high, below a free row.
 func largest(text string) []string {
-	var lines []string
+	lines := []string{""}
 	for _, row := range dots(text) {
 		var b strings.Builder
 		for _, d := range row {
@@ -69,7 +69,7 @@ func largest(text string) []string {
 	return lines
 }
 
-// large draws a text with two dots above one another in each place, four rows in all.
+// large draws a text with two dots above one another in each place, above half a free row: four in all.
 func large(text string) []string {
 	rows := dots(text)
 	var lines []string

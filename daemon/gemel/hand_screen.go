@@ -57,11 +57,16 @@ func rateText(hz float64) string {
 
 // lines lays the screen out for a terminal of that size. There are never more than it has.
 func (s *handScreen) lines(width, height int) []string {
-	below := append([]string{}, s.stands...)
+	var below []string
+	for _, line := range s.stands {
+		below = append(below, wrapped(line, width)...)
+	}
 	if s.doing != "" {
 		below = append(below, s.doing)
 	}
-	below = append(below, s.said...)
+	for _, line := range s.said {
+		below = append(below, wrapped(line, width)...)
+	}
 	room := max(0, height-3-len(below)) // the head, a free line, and the line that is typed
 	lines := append([]string{s.head}, s.drawn(width, room)...)
 	lines = append(lines, "")
@@ -74,36 +79,57 @@ func (s *handScreen) lines(width, height int) []string {
 	return lines
 }
 
-// drawn draws the figures in the largest way for which there is room.
+// drawn draws the figures in the largest way for which there is room: all of them, else as many as
+// can be, from the first, and the others as text.
 func (s *handScreen) drawn(width, room int) []string {
 	all := s.figures()
-	label := 0
-	for _, f := range all {
-		label = max(label, utf8.RuneCountInString(f.name))
+	if lines, fits := drawnSo(all, len(all), largest, width, room); fits {
+		return lines
 	}
-	for _, way := range []func(string) []string{largest, large, func(t string) []string { return []string{t} }} {
-		var lines []string
-		fits := true
-		for _, f := range all {
-			figure := way(f.value)
-			if len(figure) > 1 {
-				lines = append(lines, "")
-			}
-			for y, row := range figure {
-				name, unit := "", ""
-				if y == len(figure)-1 { // on the line the figures stand on
-					name, unit = f.name, f.unit
-				}
-				line := strings.TrimRight(fmt.Sprintf("%-*s  %s  %s", label, name, row, unit), " ")
-				fits = fits && utf8.RuneCountInString(line) <= width
-				lines = append(lines, line)
-			}
-		}
-		if fits && len(lines) <= room {
+	for n := len(all); n >= 0; n-- {
+		if lines, fits := drawnSo(all, n, large, width, room); fits {
 			return lines
 		}
 	}
 	return nil
+}
+
+// drawnSo draws the first n figures so, and the others as text.
+func drawnSo(all []figure, n int, way func(string) []string, width, room int) (lines []string, fits bool) {
+	label := 0
+	for _, f := range all {
+		label = max(label, utf8.RuneCountInString(f.name))
+	}
+	fits = true
+	for i, f := range all {
+		rows := []string{f.value}
+		if i < n {
+			rows = way(f.value)
+		}
+		for y, row := range rows {
+			name, unit := "", ""
+			if y == len(rows)-1 { // on the line the figures stand on
+				name, unit = f.name, f.unit
+			}
+			line := strings.TrimRight(fmt.Sprintf("%-*s  %s  %s", label, name, row, unit), " ")
+			fits = fits && utf8.RuneCountInString(line) <= width
+			lines = append(lines, line)
+		}
+	}
+	return lines, fits && len(lines) <= room
+}
+
+// wrapped breaks a line between words.
+func wrapped(line string, width int) []string {
+	var lines []string
+	for utf8.RuneCountInString(line) > width {
+		at := strings.LastIndexByte(cut(line, width+1), ' ')
+		if at <= 0 {
+			break
+		}
+		lines, line = append(lines, line[:at]), line[at+1:]
+	}
+	return append(lines, line)
 }
 
 func cut(line string, width int) string {

@@ -45,20 +45,20 @@ func TestFiguresAreDrawnInBothSizes(t *testing.T) {
 		way  func(string) []string
 		rows int
 		wide int
-	}{{largest, 7, 22}, {large, 4, 11}} {
+	}{{largest, 8, 22}, {large, 4, 11}} {
 		rows := c.way("20")
 		if len(rows) != c.rows {
 			t.Fatalf("%d rows; want %d", len(rows), c.rows)
 		}
 		ink := 0
 		for _, row := range rows {
-			if utf8.RuneCountInString(row) != c.wide {
+			if row != "" && utf8.RuneCountInString(row) != c.wide {
 				t.Errorf("row %q is %d wide; want %d", row, utf8.RuneCountInString(row), c.wide)
 			}
 			ink += 2*strings.Count(row, "█") + strings.Count(row, "▀") + strings.Count(row, "▄")
 		}
 		// 14 dots of a 2 and 16 of a 0; a dot is two blocks, or half a block.
-		if want := map[int]int{7: 4 * 30, 4: 30}[c.rows]; ink != want {
+		if want := map[int]int{8: 4 * 30, 4: 30}[c.rows]; ink != want {
 			t.Errorf("%d halves of blocks; want %d:\n%s", ink, want, strings.Join(rows, "\n"))
 		}
 	}
@@ -87,6 +87,7 @@ func TestTheScreenUsesTheRoomThereIsAndNoMore(t *testing.T) {
 	}{
 		{200, 60, strings.Repeat("█", 10)},
 		{100, 36, "▀"},
+		{80, 24, "▀"}, // a terminal as it opens: four large, the fifth as text
 		{80, 14, "18 432"},
 		{30, 4, ""},
 		{8, 2, ""},
@@ -104,6 +105,17 @@ func TestTheScreenUsesTheRoomThereIsAndNoMore(t *testing.T) {
 		text := strings.Join(lines, "\n")
 		if !strings.Contains(text, c.block) || !strings.HasPrefix(lines[len(lines)-1], "> ") {
 			t.Errorf("%d × %d has no %q, or not the line that is typed last:\n%s", c.width, c.height, c.block, text)
+		}
+	}
+}
+
+func TestWordsAreBrokenBetweenThem(t *testing.T) {
+	for line, want := range map[string]string{
+		"signal_arm 2.9 deg, idler_arm 2.8 deg": "signal_arm 2.9|deg, idler_arm|2.8 deg",
+		"short":                                 "short", "": "", "averylongwordthatdoesnotfit": "averylongwordthatdoesnotfit",
+	} {
+		if got := strings.Join(wrapped(line, 14), "|"); got != want {
+			t.Errorf("%q is %s; want %s", line, got, want)
 		}
 	}
 }
