@@ -177,7 +177,7 @@ func scpiSetting(m strict.Map) settingReading {
 	read := inUnit(m, m.Need("tolerance"))
 	h.Done()
 	header, _, _ := strings.Cut(strings.TrimPrefix(c.Set, ":"), " ")
-	return settingReading{header: strings.ToUpper(header), answerUnit: c.AnswerUnit, tolerance: read, make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
+	return settingReading{Settle: c.Settle, header: strings.ToUpper(header), answerUnit: c.AnswerUnit, tolerance: read, make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
 		c := c
 		c.Common, c.Unit, c.Tolerance = scpiFor(c.Common, d.Device, pace), d.Unit, read(d.Unit)
 		return scpi.NewSetting(l, c)
@@ -186,7 +186,8 @@ func scpiSetting(m strict.Map) settingReading {
 
 // settingReading is what a dialect reads of a setting.
 type settingReading struct {
-	make settingMaker
+	Settle time.Duration // after it was set, before it is read back
+	make   settingMaker
 	// What a virtual setting must know: the header that sets it, and the unit it speaks; empty: its own.
 	header, answerUnit string
 	tolerance          func(unit string) float64 // nil: nothing virtual speaks that dialect
@@ -366,7 +367,7 @@ func customSetting(m strict.Map) settingReading {
 		SettleWithin: m.Opt("settle_within").Duration(0, maxMove), Settle: m.Opt("settle").Duration(0, maxMove), PollEvery: m.Opt("poll_every").Duration(time.Millisecond, maxPoll),
 	}
 	read := inUnit(m, m.Need("tolerance"))
-	return settingReading{make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
+	return settingReading{Settle: c.Settle, make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
 		c := c
 		c.Common, c.Unit, c.Tolerance = customFor(c.Common, d.Device, pace), d.Unit, read(d.Unit)
 		return custom.NewSetting(l, c)

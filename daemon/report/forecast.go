@@ -6,6 +6,7 @@ import (
 
 	"gemel/daemon/bench"
 	"gemel/drivers"
+	"gemel/protocol"
 	"gemel/scan"
 	"gemel/scan/estimate"
 	"gemel/scan/forecast"
@@ -41,13 +42,13 @@ func Forecast(file *bench.File, plan scan.Plan, o Foreseen) (*forecast.Forecast,
 		}
 	}
 	if plan.Refine != nil {
-		constants := Constants(file)
-		ask.Refine = func(rows estimate.Rows, points []scan.Point, added int, each, spent time.Duration) []scan.Point {
-			i := slices.IndexFunc(file.Axes, func(a bench.Axis) bool { return a.Name == plan.Refine.Along })
-			if i < 0 {
+		ask.Refine = func(rows estimate.Rows, points []scan.Point, added int, refinedAt, now time.Time) []scan.Point {
+			known := past{rows: rows, points: points, added: added, refinedAt: protocol.Time{Time: refinedAt}, lastAt: protocol.Time{Time: now}}
+			d, err := known.refine(plan, file)
+			if err != nil {
 				return nil
 			}
-			return estimate.Refine(rows, constants, estimate.RefineQuestion{Of: *plan.Refine, Axis: file.Axes[i].Axis, Points: points, Added: added, Each: each, Spent: spent}).Points
+			return d.Points
 		}
 	}
 	return forecast.Of(ask)
@@ -92,7 +93,7 @@ func forecastBench(file *bench.File) forecast.Bench {
 		b.Sensors = append(b.Sensors, s.Name)
 	}
 	for _, s := range file.Settings {
-		b.Settings = append(b.Settings, forecast.Setting{Name: s.Name, Unit: s.Unit})
+		b.Settings = append(b.Settings, forecast.Setting{Name: s.Name, Unit: s.Unit, Settle: s.Settle})
 	}
 	return b
 }
@@ -102,7 +103,7 @@ const bitsAsked = 400
 
 // costs are the measured ones, with what slow lines add.
 func costs(file *bench.File) forecast.Costs {
-	c := forecast.Measured()
+	c := forecast.Measured(len(file.Lines))
 	c.On = map[drivers.DeviceName]time.Duration{}
 	baud := map[string]int{}
 	for _, l := range file.Lines {

@@ -31,11 +31,20 @@ func Refine(ctx context.Context, book *logbook.Book, run protocol.RunID, plan sc
 	if err != nil {
 		return engine.Refinement{}, err
 	}
+	d, err := known.refine(plan, file)
+	if err != nil {
+		return engine.Refinement{}, fmt.Errorf("run %s: %w", run, err)
+	}
+	return engine.Refinement{Points: d.Points, Grounds: d.Grounds}, nil
+}
+
+// refine asks the estimate, in the words of bench and plan.
+func (known past) refine(plan scan.Plan, file *bench.File) (estimate.Refinement, error) {
 	q := estimate.RefineQuestion{Of: *plan.Refine, Points: known.points, Added: known.added, Each: known.each(plan.Dwell), Spent: known.spent()}
 	facts := file.Facts()
 	i := slices.IndexFunc(facts.Axes, func(a scan.Axis) bool { return a.Name == plan.Refine.Along })
 	if i < 0 {
-		return engine.Refinement{}, fmt.Errorf("run %s: refined along %q; want an axis of this bench", run, plan.Refine.Along)
+		return estimate.Refinement{}, fmt.Errorf("refined along %q; want an axis of this bench", plan.Refine.Along)
 	}
 	q.Axis = facts.Axes[i]
 	stand := map[drivers.AxisName]unit.Angle{}
@@ -67,8 +76,7 @@ func Refine(ctx context.Context, book *logbook.Book, run protocol.RunID, plan sc
 			q.Expect = nil
 		}
 	}
-	d := estimate.Refine(known.rows, Constants(file), q)
-	return engine.Refinement{Points: d.Points, Grounds: d.Grounds}, nil
+	return estimate.Refine(known.rows, Constants(file), q), nil
 }
 
 // past is a run's journal before one of its decisions.

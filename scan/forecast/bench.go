@@ -64,17 +64,20 @@ type Costs struct {
 	On       map[drivers.DeviceName]time.Duration // the same for devices whose lines are slower
 	Write    time.Duration                        // until an entry of the journal is on the disk
 	Start    time.Duration                        // from the start until the first reading is decided: lines opened, instruments asked who they are
-	Poll     time.Duration                        // how late the counter's end is seen, beyond the questions
+	Turn     time.Duration                        // how much later the end of a leg is seen in which an axis turns round, because its play takes time that nobody declared
 	// What an earlier run took beyond all this, for each reading and each slice of one; less than
 	// nothing where it was quicker.
 	Reading, Slice time.Duration
 	From           string // where the numbers come from, for people
 }
 
-// Measured are the costs that were measured on virtual instruments whose answers take 1.2 ms, each
-// question some thirty bytes; a line that says its baud rate adds what those take on it.
-func Measured() Costs {
-	return Costs{Question: 1200 * time.Microsecond, Write: 1500 * time.Microsecond, From: "questions on the lines at 1.2 ms each, as measured on virtual instruments"}
+// Measured are the costs that were measured on virtual instruments whose answers take 1.2 ms, on so
+// many lines. Opening one and asking who is there takes 100 ms, and controllers are asked every 50 ms
+// whether they are at rest.
+func Measured(lines int) Costs {
+	const question = 1200 * time.Microsecond
+	return Costs{Question: question, Write: 1500 * time.Microsecond, Start: 480*time.Millisecond + time.Duration(lines)*100*time.Millisecond, Turn: 50*time.Millisecond + question,
+		From: "questions on the lines at 1.2 ms each, as measured on virtual instruments"}
 }
 
 func (c Costs) ask(device drivers.DeviceName, questions int) time.Duration {

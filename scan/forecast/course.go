@@ -225,10 +225,9 @@ func (c *course) take(f engine.Foreseen, r *taken) {
 	r.started = c.now
 	c.dwell(f, r)
 	c.spend(c.whereAll)
-	for range settings {
-		c.overhead(k.Question * askGet)
+	for _, s := range settings {
+		c.overhead(k.ask(s.Setting, askGet))
 	}
-	r.ended = c.now
 }
 
 // stayAll makes every axis stay where it has to be: the course's own there is begun anew.
@@ -297,9 +296,12 @@ func (c *course) goTo(point int) {
 	}
 	c.spent.Moving += trip.Travel
 	c.now += trip.Travel
-	c.spend(expense{settle: trip.Settle, overhead: c.bench.Costs.ask("", askMove*trip.Sent)})
+	c.spend(expense{settle: trip.Settle, overhead: c.bench.Costs.ask(c.mover(), askMove*trip.Sent)})
 	if trip.Travel == 0 {
-		c.overhead(c.bench.Costs.ask("", askStill*trip.Sent))
+		c.overhead(c.bench.Costs.ask(c.mover(), askStill*trip.Sent))
+	}
+	if trip.Back {
+		c.overhead(2 * c.bench.Costs.Turn)
 	}
 	for i := range c.there {
 		if c.due[i] {
@@ -307,6 +309,16 @@ func (c *course) goTo(point int) {
 		}
 	}
 	c.spend(c.whereAll)
+}
+
+// mover is a controller of the move just made: the first that was sent.
+func (c *course) mover() drivers.DeviceName {
+	for i := range c.due {
+		if c.due[i] {
+			return c.bench.Axes[i].Controller
+		}
+	}
+	return ""
 }
 
 // light opens and closes what the reading needs.
@@ -341,7 +353,7 @@ func (c *course) count(gate time.Duration, times float64) {
 		c.gate = gate
 	}
 	k := c.bench.Costs
-	c.overhead(time.Duration(questions*float64(k.ask(c.bench.Counter.Name, 1))) + time.Duration(times*float64(k.Poll)))
+	c.overhead(time.Duration(questions * float64(k.ask(c.bench.Counter.Name, 1))))
 }
 
 // dwell counts the slices. One that ends on the trigger's counts has as many as these take on the
@@ -365,6 +377,8 @@ func (c *course) dwell(f engine.Foreseen, r *taken) {
 	} else {
 		c.count(gates[0], n)
 	}
+	c.now += total
+	r.ended = c.now
 	sample := time.Duration(n*float64(c.sampleAll.overhead)) + time.Duration(n*float64(c.bench.Costs.Slice))
 	c.overhead(sample)
 	if f.Kind == protocol.Light {
@@ -372,7 +386,6 @@ func (c *course) dwell(f engine.Foreseen, r *taken) {
 	} else {
 		c.spent.Beside += total
 	}
-	c.now += total
 }
 
 // heraldedSlices is how many slices a dwell has on the average that ends with the first one at whose

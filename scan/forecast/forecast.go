@@ -25,8 +25,9 @@ type Ask struct {
 	// Results works the plan's results out, in its order, from rows that hold expected counts; nil:
 	// nothing is said of them. An error is a whole that cannot be worked out.
 	Results func(rows estimate.Rows) ([]estimate.Result, error)
-	// Refine decides what a refinement adds after what was counted so far; nil: not foreseen.
-	Refine func(rows estimate.Rows, points []scan.Point, added int, each, spent time.Duration) []scan.Point
+	// Refine decides what a refinement adds after what was counted so far, of the points decided so far
+	// the last so many added; refinedAt is zero before the first. Nil: not foreseen.
+	Refine func(rows estimate.Rows, points []scan.Point, added int, refinedAt, now time.Time) []scan.Point
 	Aim    *Aim
 	Band   *Band // what the filters pass; nil: not declared
 }
@@ -111,13 +112,12 @@ func course1(a Ask) (*Forecast, *rowMaker, error) {
 	var refine func(int) []scan.Point
 	if a.Refine != nil && a.Plan.Refine != nil && a.Expect != nil && maker.few {
 		refine = func(int) []scan.Point {
-			each := (c.spent.All() - c.spent.Waiting) / time.Duration(max(1, len(maker.rows.Readings)))
-			spent := time.Duration(0)
+			var at time.Time
 			if maker.refinedAt > 0 {
-				spent = c.now - maker.refinedAt
+				at = a.Begins.Add(maker.refinedAt)
 			}
 			points := append(slices.Clone(a.Plan.Points), f.added...)
-			more := a.Refine(maker.rows, points, len(f.added), each, spent)
+			more := a.Refine(maker.rows, points, len(f.added), at, a.Begins.Add(c.now))
 			more = more[:min(len(more), max(0, a.Plan.Refine.AtMost-len(f.added)))]
 			if len(more) > 0 && maker.refinedAt == 0 {
 				maker.refinedAt = c.now

@@ -21,6 +21,7 @@ type rowMaker struct {
 
 	carry     map[protocol.ReadingKind][]float64
 	other     map[string]scan.Expected // at places that are none of the plan's points
+	set       []scan.SettingTarget     // what the settings were last set to
 	refinedAt time.Duration
 }
 
@@ -93,12 +94,8 @@ func (m *rowMaker) hz(r *taken) []float64 {
 			f.rates.into(r.point, got)
 			copy(out, got[:len(channels)])
 		}
-	default:
-		settings := f.point(r.point).Settings
-		if r.kind == protocol.Reference {
-			settings = f.plan.Points[0].Settings
-		}
-		x, _ := m.expected(at(), settings)
+	default: // a background sets nothing
+		x, _ := m.expected(at(), m.set)
 		fill(x.CountsHz)
 	}
 	return out
@@ -133,6 +130,9 @@ func (m *rowMaker) add(r *taken) {
 		settings = f.plan.Points[0].Settings
 	default:
 		settings = nil
+	}
+	if settings != nil {
+		m.set = settings
 	}
 	for _, s := range settings {
 		row.Settings = append(row.Settings, protocol.Setting{Name: string(s.Setting), Target: s.Value, Before: s.Value, After: s.Value, Unit: f.unitOf(s.Setting)})

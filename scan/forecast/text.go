@@ -2,6 +2,7 @@ package forecast
 
 import (
 	"fmt"
+	"slices"
 	"strings"
 
 	"gemel/protocol"
@@ -109,6 +110,9 @@ func (f *Forecast) textOfCounts(line func(string, ...any)) {
 	k := len(f.singles)
 	if len(f.pairs) == 0 {
 		k = 0
+	}
+	if len(f.plan.Results) > 0 {
+		k = max(0, slices.Index(f.channels(), f.lookedAt(f.plan.Results[0])))
 	}
 	for i := range f.plan.Points {
 		if f.visits[i] == 0 || !f.perVisit(i, rate) {

@@ -280,7 +280,7 @@ func (f *Forecast) warnOfRates(a Ask) {
 	}
 	f.warnOfOverflow(a, highest)
 	for k, c := range f.pairs {
-		if accidental[k] > mostAccidental {
+		if accidental[k] > mostAccidental && f.wants(c) {
 			f.warnf("%s of the coincidences on %s are accidental at point %d, where there are most: less pump power or a shorter window would help", share(accidental[k]), c, brightest[k].point)
 		}
 	}
@@ -288,6 +288,24 @@ func (f *Forecast) warnOfRates(a Ask) {
 		f.warnf("%d counts of %s are not reached within %s at %s, by %.3g at most (point %d): these dwells last their longest", a.Plan.Dwell.Heralds, a.Plan.Dwell.Trigger, span(a.Plan.Dwell.Time), plural(under.many, "point"), under.value, under.point)
 	}
 	f.warnOfSpans(a)
+}
+
+// wants says whether a result looks at a channel of coincidences, or none looks at anything.
+func (f *Forecast) wants(c drivers.Channel) bool {
+	return len(f.plan.Results) == 0 || slices.ContainsFunc(f.plan.Results, func(q scan.Result) bool { return f.lookedAt(q) == c })
+}
+
+// lookedAt is the channel that a result is made of.
+func (f *Forecast) lookedAt(q scan.Result) drivers.Channel {
+	if q.Kind != scan.Efficiency {
+		return q.Of
+	}
+	for _, c := range f.pairs {
+		if of := f.bench.Counter.Coincidences[c]; of == [2]drivers.Channel{q.Trigger, q.UnderTest} || of == [2]drivers.Channel{q.UnderTest, q.Trigger} {
+			return c
+		}
+	}
+	return ""
 }
 
 // warnOfOverflow is about the counter's bits in the longest gate.
@@ -325,14 +343,9 @@ func referenceOf(r *scan.Reference) scan.Dwell {
 // warnOfSpans finds results whose peak lies at an end of the sweep or beyond.
 func (f *Forecast) warnOfSpans(a Ask) {
 	for _, q := range a.Plan.Results {
-		channel, along := q.Of, q.Along
+		channel, along := f.lookedAt(q), q.Along
 		if q.Kind == scan.Efficiency {
 			along = q.PlateauOf
-			for c, of := range a.Bench.Counter.Coincidences {
-				if of == [2]drivers.Channel{q.Trigger, q.UnderTest} || of == [2]drivers.Channel{q.UnderTest, q.Trigger} {
-					channel = c
-				}
-			}
 		}
 		k := slices.Index(f.channels(), channel)
 		if k < 0 || along == "" && q.Setting == "" {
@@ -428,7 +441,7 @@ func plural(n int, what string) string {
 
 // clock is a moment on the wall of whoever asked.
 func (f *Forecast) clock(t time.Time) string {
-	t = t.In(f.local)
+	t = t.In(f.local).Round(time.Minute)
 	if b := f.BeginsAt.In(f.local); t.YearDay() == b.YearDay() && t.Year() == b.Year() || t.Sub(b) < 20*time.Hour {
 		return t.Format("15:04")
 	}

@@ -263,17 +263,27 @@ func (f *Forecast) besideKind() protocol.ReadingKind {
 // inUnit prints an uncertainty of a result: as a share of an efficiency, in its unit otherwise.
 func (f *Forecast) inUnit(u float64, r protocol.ForecastResult) string {
 	switch {
-	case r.Unit == "1" && r.Value != nil && *r.Value != 0:
+	case r.Unit == "1" && r.Kind == string(scan.Efficiency) && r.Value != nil && *r.Value != 0:
 		return share(u / math.Abs(*r.Value))
+	case r.Unit == "1": // a relative change
+		return share(u)
 	case r.Unit == "s":
-		return fmt.Sprintf("%.2g ns", u*1e9)
+		return fmt.Sprintf("%.2g ps", u*1e12)
+	case r.Unit == "ns":
+		return fmt.Sprintf("%.2g ps", u*1e3)
 	case r.Unit == "deg":
 		return fmt.Sprintf("%.2g mdeg", u*1e3)
 	}
 	return strings.TrimSpace(fmt.Sprintf("%.2g %s", u, r.Unit))
 }
 
-func share(v float64) string { return fmt.Sprintf("%.2g %%", 100*v) }
+// share prints a share in percent, to two digits where there are not more before the point.
+func share(v float64) string {
+	if v >= 0.1 {
+		return fmt.Sprintf("%.0f %%", 100*v)
+	}
+	return fmt.Sprintf("%.2g %%", 100*v)
+}
 
 // floorNames says what a floor is made of: what alone is a quarter of its variance or more.
 func (f *Forecast) floorNames(r protocol.ForecastResult) string {

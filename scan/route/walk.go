@@ -27,6 +27,7 @@ type Trip struct {
 	Settle time.Duration // of the slowest axis that was sent
 	Sent   int           // commands to controllers
 	Dark   bool          // the pump has to be closed for it
+	Back   bool          // an axis goes beyond first, to take up its backlash
 }
 
 // NewWalk prepares a walk. The error is about the keep-outs as such.
@@ -78,6 +79,7 @@ func (w *Walk) Go(here, there []unit.Angle, sent []bool) (Trip, error) {
 			return w.legs(here, there, sent)
 		}
 	}
+	t.Back = twice
 	w.leg(&t, here, first, sent, false)
 	if twice {
 		w.leg(&t, first, last, sent, true)
@@ -134,6 +136,7 @@ func (w *Walk) legs(here, there []unit.Angle, sent []bool) (Trip, error) {
 		at[a.Name] = here[i]
 		if sent[i] {
 			targets = append(targets, scan.AxisTarget{Axis: a.Name, Angle: there[i]})
+			t.Back = t.Back || nearerThanApproach(a, here[i], there[i])
 			t.Settle = max(t.Settle, a.Settle)
 		}
 	}
