@@ -11,7 +11,6 @@ import (
 	"bytes"
 	"encoding/json"
 	"fmt"
-	"math/big"
 	"regexp"
 	"strings"
 	"time"
@@ -438,9 +437,7 @@ func (s Seconds) Duration() time.Duration { return time.Duration(s) }
 
 // MarshalJSON writes seconds with as many decimals as needed, at most nine.
 func (s Seconds) MarshalJSON() ([]byte, error) {
-	text := big.NewRat(int64(s), int64(time.Second)).FloatString(9)
-	text = strings.TrimSuffix(strings.TrimRight(text, "0"), ".")
-	return []byte(text), nil
+	return []byte(unit.FormatSeconds(int64(s))), nil
 }
 
 // UnmarshalJSON reads a decimal number of seconds, to the nanosecond.

@@ -9,7 +9,7 @@ import (
 	"fmt"
 	"math"
 	"math/big"
-	"strconv"
+	"math/bits"
 	"strings"
 )
 
@@ -69,6 +69,14 @@ func (a Angle) Fixed(n int) string {
 }
 
 func (a Angle) decimal() string {
+	// A micro-arcsecond is 25/9 of 10^-10 degrees.
+	if high, low := bits.Mul64(magnitude(int64(a)), 25); high < 9 {
+		n, rest := bits.Div64(high, low, 9)
+		if rest > 4 {
+			n++
+		}
+		return fixed(a < 0, n, exactDecimals)
+	}
 	s := strings.TrimRight(a.Fixed(exactDecimals), "0")
 	return strings.TrimSuffix(s, ".")
 }
@@ -86,11 +94,11 @@ func (a *Angle) UnmarshalJSON(b []byte) error {
 	return nil
 }
 
-var angleUnits = map[string]*big.Rat{
-	"deg":    big.NewRat(int64(Degree), 1),
-	"arcmin": big.NewRat(int64(Arcminute), 1),
-	"arcsec": big.NewRat(int64(Arcsecond), 1),
-	"mrad":   nil, // irrational in degrees: rounds once
+var angleUnits = map[string]Angle{
+	"deg":    Degree,
+	"arcmin": Arcminute,
+	"arcsec": Arcsecond,
+	"mrad":   0, // irrational in degrees: rounds once
 }
 
 // ParseAngle reads "1.5 deg", "30 arcmin", "12 arcsec" or "4.2 mrad".
@@ -122,16 +130,11 @@ func ParseAngleIn(number, name string) (Angle, error) {
 	if err := checkDecimal(number); err != nil {
 		return 0, err
 	}
-	r, ok := new(big.Rat).SetString(number)
-	if !ok {
-		return 0, &Error{Text: number, Found: strconv.Quote(number), Want: "a decimal number"}
-	}
-	r.Mul(r, per)
-	i, ok := new(big.Int).SetString(r.FloatString(0), 10)
-	if !ok || !i.IsInt64() || i.Int64() > maxAngle || i.Int64() < -maxAngle {
+	n, _, ok := scaled(number, uint64(per), false)
+	if !ok || n > maxAngle || n < -maxAngle {
 		return 0, errTooLarge(number, name)
 	}
-	return Angle(i.Int64()), nil
+	return Angle(n), nil
 }
 
 func errTooLarge(number, name string) error {

@@ -3,7 +3,6 @@ package unit
 import (
 	"fmt"
 	"math"
-	"math/big"
 	"regexp"
 	"sort"
 	"strconv"
@@ -137,6 +136,9 @@ func In(value float64, name string) (float64, error) {
 	return (value - s.offset) / s.factor, nil
 }
 
+// nanoseconds of each unit of time, but for picoseconds, which are thousandths of one.
+var nanoseconds = map[string]uint64{"ps": 1, "ns": 1, "us": 1e3, "ms": 1e6, "s": 1e9, "min": 60e9, "h": 3600e9}
+
 // ParseDuration reads a time such as "2 s", "500 ms" or "1.5 h", exactly to the nanosecond.
 func ParseDuration(text string) (time.Duration, error) {
 	number, name, err := split(text)
@@ -149,20 +151,14 @@ func ParseDuration(text string) (time.Duration, error) {
 	if err := checkDecimal(number); err != nil {
 		return 0, err
 	}
-	r, ok := new(big.Rat).SetString(number)
-	if !ok {
-		return 0, &Error{Text: text, Found: strconv.Quote(number), Want: "a decimal number"}
-	}
-	perSecond := map[string]*big.Rat{"ps": big.NewRat(1, 1000), "ns": big.NewRat(1, 1), "us": big.NewRat(1e3, 1), "ms": big.NewRat(1e6, 1),
-		"s": big.NewRat(1e9, 1), "min": big.NewRat(60e9, 1), "h": big.NewRat(3600e9, 1)}
-	r.Mul(r, perSecond[name])
-	if !r.IsInt() {
+	n, exact, ok := scaled(number, nanoseconds[name], name == "ps")
+	switch {
+	case !ok:
+		return 0, &Error{Text: text, Found: text, Want: "less than 292 years"}
+	case !exact:
 		return 0, &Error{Text: text, Found: text, Want: "whole nanoseconds"}
 	}
-	if !r.Num().IsInt64() {
-		return 0, &Error{Text: text, Found: text, Want: "less than 292 years"}
-	}
-	return time.Duration(r.Num().Int64()), nil
+	return time.Duration(n), nil
 }
 
 func wrongUnit(text string, kind Kind) error {
