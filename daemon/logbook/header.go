@@ -118,8 +118,7 @@ func (b *Book) Runs(ctx context.Context) ([]RunRow, error) {
 
 // Unfinished returns the runs that are in no final state, in the order of Queue.
 func (b *Book) Unfinished(ctx context.Context) ([]RunRow, error) {
-	rows, err := b.runs(ctx, selectRun+`WHERE state IS NULL OR state NOT IN (?, ?, ?) ORDER BY number`,
-		protocol.Finished, protocol.Stopped, protocol.Failed)
+	rows, err := b.runs(ctx, selectRun+`WHERE run IN (`+notEnded+`) ORDER BY number`)
 	if err != nil {
 		return nil, wrap(b.file, err)
 	}
