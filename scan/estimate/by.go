@@ -48,7 +48,8 @@ const slopeLevel = 0.01
 // Backgrounds count for the value that they were taken at, since fluorescence follows the pump. Where
 // a value has none of its own and the setting is a power, the others are scaled to it: what they have
 // above the darks grows with the pump. With another setting the darks stand in, with a warning. Weights are 1/u^2 of the counting parts alone:
-// constants common to all values are not averaged down.
+// constants common to all values are not averaged down, and neither are backgrounds that stand in for
+// other values than their own.
 func EfficiencyBy(rows Rows, bench Bench, model Model, q Question, setting string) (Result, error) {
 	if q.Coverage == 0 {
 		q.Coverage = 0.95
@@ -64,10 +65,12 @@ func EfficiencyBy(rows Rows, bench Bench, model Model, q Question, setting strin
 	stood := standing(rows, setting)
 	var good []Result
 	var x []float64
+	lent := false // backgrounds that several values share
 	aside := map[int64]string{}
 	for _, v := range values {
 		part, scaled := rows.at(setting, v, stood, isPower(unitName))
 		ask := q
+		lent = lent || scaled
 		if scaled {
 			ask.pumpRatio = func(r protocol.Reading) float64 { return v / stood[r.Sequence] }
 		}
@@ -85,7 +88,7 @@ func EfficiencyBy(rows Rows, bench Bench, model Model, q Question, setting strin
 		}
 		line := ByValue{At: v, Value: one.Value, Because: one.Because}
 		if one.Value != nil {
-			line.U, line.OwnU = *one.U, math.Sqrt(ownVariance(one))
+			line.U = *one.U
 			good, x = append(good, one), append(x, v)
 			r.Used = append(r.Used, one.Used...)
 			for _, w := range one.Warnings {
@@ -102,7 +105,10 @@ func EfficiencyBy(rows Rows, bench Bench, model Model, q Question, setting strin
 		r.SetAside = append(r.SetAside, Aside{n, aside[n]})
 	}
 	r.By = by
-	if err := by.line(&r, good, x); err != nil {
+	own := func(row Row) bool {
+		return row.Covariance || row.Evaluation == TypeA && !(lent && row.Symbol == backgroundSymbol)
+	}
+	if err := by.line(&r, good, x, own); err != nil {
 		no.addf("%v", err)
 		return Result{}, no
 	}
@@ -180,23 +186,23 @@ func (r Rows) at(setting string, value float64, stood map[int64]float64, power b
 	return part, scaled
 }
 
-// ownVariance is what counting gives of an efficiency's variance.
-func ownVariance(r Result) float64 {
+// ownVariance is what rows of its own give of an efficiency's variance.
+func ownVariance(r Result, own func(Row) bool) float64 {
 	v := *r.U * *r.U
 	for _, row := range r.Budget {
-		if row.Evaluation == TypeB && !row.Covariance {
+		if !own(row) {
 			v -= row.Contribution * row.Contribution
 		}
 	}
 	return math.Max(v, 1e-6**r.U**r.U) // rounding
 }
 
-// line fits the straight line and states the mean.
-func (by *BySetting) line(r *Result, good []Result, x []float64) error {
+// line fits the straight line and states the mean. own tells rows that the values do not share.
+func (by *BySetting) line(r *Result, good []Result, x []float64, own func(Row) bool) error {
 	var y, u []float64
 	sumW, middle := 0.0, 0.0
 	for i, one := range good {
-		y, u = append(y, *one.Value), append(u, math.Sqrt(ownVariance(one)))
+		y, u = append(y, *one.Value), append(u, math.Sqrt(ownVariance(one, own)))
 		w := 1 / (u[i] * u[i])
 		sumW, middle = sumW+w, middle+w*x[i]
 	}
@@ -229,7 +235,7 @@ func (by *BySetting) line(r *Result, good []Result, x []float64) error {
 	for i, one := range good {
 		w := 1 / (u[i] * u[i])
 		for _, row := range one.Budget {
-			if row.Evaluation != TypeB || row.Covariance {
+			if own(row) {
 				continue
 			}
 			c := shared[row.Symbol]
@@ -240,6 +246,7 @@ func (by *BySetting) line(r *Result, good []Result, x []float64) error {
 			}
 			move := row.Sensitivity * row.U // by one standard uncertainty
 			c.mean += w / sumW * move
+			c.row.U = math.Max(c.row.U, row.U)
 			if k == 2 {
 				c.slope += w * (x[i] - middle) / spread * move
 			}
@@ -250,8 +257,8 @@ func (by *BySetting) line(r *Result, good []Result, x []float64) error {
 	variance := 0.0
 	for _, s := range symbols {
 		c := shared[s]
-		// In units of its own standard uncertainty where the values do not agree on the constant's value.
-		inputs = append(inputs, Input{Quantity: c.row.Quantity, Symbol: s, Unit: c.row.Unit, Estimate: c.row.Estimate, U: c.row.U, Evaluation: TypeB, Distribution: c.row.Distribution})
+		// Moved by its uncertainty, a constant moves the mean by what it moves each value by, weighted.
+		inputs = append(inputs, Input{Quantity: c.row.Quantity, Symbol: s, Unit: c.row.Unit, Estimate: c.row.Estimate, U: c.row.U, Evaluation: c.row.Evaluation, Distribution: c.row.Distribution})
 		moves = append(moves, c.mean/c.row.U)
 		variance += c.slope * c.slope
 	}
@@ -266,7 +273,12 @@ func (by *BySetting) line(r *Result, good []Result, x []float64) error {
 		return err
 	}
 	r.state(b)
+	next := 0
 	for i := range by.Values {
+		if by.Values[i].Value != nil {
+			by.Values[i].OwnU = u[next]
+			next++
+		}
 		by.Values[i].LineAt = fit.p[0]
 		if k == 2 {
 			by.Values[i].LineAt += fit.p[1] * (by.Values[i].At - middle)

@@ -95,7 +95,11 @@ func Delay(rows Rows, bench Bench, q DelayQuestion) (Result, error) {
 	fit, err := FitPeak(scan.data, window, nil)
 	sharp := err != nil || fit.Fit.Bounded[edgeParam] || fit.Fit.Params[edgeParam] < scan.pitch()/4
 	if sharp {
-		fit, err = fitPeak(scan.data, window, nil, scan.pitch()/4)
+		var known [][]float64
+		if err == nil {
+			known = append(known, fit.Fit.Params)
+		}
+		fit, err = fitPeak(scan.data, window, nil, scan.pitch()/4, known...)
 	}
 	if err != nil {
 		no.addf("%v; want a sweep with readings on both edges that ends on the floor beside them", err)

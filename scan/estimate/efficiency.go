@@ -76,6 +76,8 @@ type calculation struct {
 	collected float64
 }
 
+const backgroundSymbol = "B"
+
 // places of the inputs
 const (
 	inC = iota
@@ -361,9 +363,9 @@ func (c *calculation) takeBackground(kinds map[protocol.ReadingKind][]protocol.R
 					no.addf("background reading %d was taken at another pump power, and without a dark nobody knows which part of it follows the pump; want darks, or backgrounds at each power", row.Sequence)
 					continue
 				}
-				// What the pump makes grows with it, the dark does not.
+				// What the pump makes grows with it, the dark does not; the dead time goes with both.
 				one.scaled, one.variance, one.darkS = true, more*more*math.Max(n, 1), (1-more)*gate
-				one.counts = more*n + one.darkS*dark/time
+				one.counts = c.recorded(more*c.arriving(n/gate)+(1-more)*c.arriving(dark/time)) * gate
 				c.darkVariance = math.Max(dark, 1) / (time * time)
 			}
 		}
@@ -376,6 +378,15 @@ func (c *calculation) takeBackground(kinds map[protocol.ReadingKind][]protocol.R
 	for i := range c.dwells {
 		c.dwells[i].background = bracket(c.dwells[i].mid, c.backgrounds)
 	}
+}
+
+// arriving is the rate at which the trigger would count without a dead time, recorded the way back.
+func (c *calculation) arriving(recordedHz float64) float64 {
+	return recordedHz / c.liveShare(recordedHz, c.trigger.DeadTime.Value)
+}
+
+func (c *calculation) recorded(hz float64) float64 {
+	return c.trigger.Model.Observed(hz, c.trigger.DeadTime.Value)
 }
 
 func (c *calculation) sum() {
@@ -507,7 +518,7 @@ func (c *calculation) list() {
 		inS:          {Quantity: "trigger counts", Symbol: "S", Unit: "1", Estimate: c.s, U: math.Sqrt(c.s), Evaluation: TypeA, Distribution: Counting},
 		inD:          {Quantity: "counts of the detector under test", Symbol: "D", Unit: "1", Estimate: c.d, U: math.Sqrt(c.d), Evaluation: TypeA, Distribution: Counting},
 		inA:          {Quantity: "accidentals by displaced windows", Symbol: "A", Unit: "1", Estimate: a, U: u, Evaluation: TypeA, Distribution: Counting},
-		inB:          {Quantity: "background within the trigger counts", Symbol: "B", Unit: "1", Estimate: c.background, U: c.backgroundU, Evaluation: TypeA, Distribution: Normal},
+		inB:          {Quantity: "background within the trigger counts", Symbol: backgroundSymbol, Unit: "1", Estimate: c.background, U: c.backgroundU, Evaluation: TypeA, Distribution: Normal},
 		inWindow:     constant("coincidence window, full", "W", "s", ct.Window),
 		inAfter:      constant("afterpulse share of the trigger", "p_ap", "1", c.trigger.Afterpulse),
 		inTauT:       constant("dead time of the trigger", "tau_T", "s", c.trigger.DeadTime),

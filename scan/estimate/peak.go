@@ -83,8 +83,9 @@ func FitPeak(data []Spot, shape PeakShape, predicted func(angleDeg float64) floa
 	return fitPeak(data, shape, predicted, 0)
 }
 
-// fitPeak is FitPeak, with a flat top's edges held where heldEdge is above 0.
-func fitPeak(data []Spot, shape PeakShape, predicted func(angleDeg float64) float64, heldEdge float64) (PeakFit, error) {
+// fitPeak is FitPeak, with a flat top's edges held where heldEdge is above 0, and more places to start
+// from than those seen in the data.
+func fitPeak(data []Spot, shape PeakShape, predicted func(angleDeg float64) float64, heldEdge float64, more ...[]float64) (PeakFit, error) {
 	names, ok := peakNames[shape]
 	if !ok {
 		return PeakFit{}, fmt.Errorf("shape %q; want gaussian, sinc2, flat_top, two_peaks or predicted", shape)
@@ -125,7 +126,7 @@ func fitPeak(data []Spot, shape PeakShape, predicted func(angleDeg float64) floa
 	}
 	bestValue := math.Inf(1)
 	var failed error
-	for _, start := range f.starts(low, high) {
+	for _, start := range append(f.starts(low, high), more...) {
 		pr := f.problem(start, low, high)
 		fit, err := pr.minimise()
 		if err != nil {
@@ -325,8 +326,24 @@ func (f *PeakFit) starts(low, high float64) [][]float64 {
 			list = append(list, []float64{centre, width, height, ground, e * width})
 		}
 	case window:
+		// A window's middle is the median of what is above the floor, and its width twice the middle half, even where counts are few.
+		total, sum := 0.0, 0.0
+		for i := range f.data {
+			total += math.Max(0, rates[i]-ground)
+		}
+		quarter := [3]float64{}
+		for i, s := range f.data {
+			before := sum
+			sum += math.Max(0, rates[i]-ground)
+			for k, share := range []float64{0.25, 0.5, 0.75} {
+				if before < share*total && sum >= share*total {
+					quarter[k] = s.AngleDeg
+				}
+			}
+		}
+		wide := math.Max(2*(quarter[2]-quarter[0]), step)
 		for _, e := range []float64{0.05, 0.15, 0.4} {
-			list = append(list, []float64{centre, width, height, ground, e * width, ground})
+			list = append(list, []float64{centre, width, height, ground, e * width, ground}, []float64{quarter[1], wide, height, ground, e * wide, ground})
 		}
 	case TwoPeaks:
 		for _, apart := range []float64{0.5, 1, 0.25} {
