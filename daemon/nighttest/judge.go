@@ -6,11 +6,13 @@ import (
 	"fmt"
 	"math"
 	"slices"
+	"strconv"
 	"strings"
 	"time"
 
 	"gemel/protocol"
 	"gemel/sim/instruments"
+	"gemel/sim/trouble"
 )
 
 // Judge says everything that is wrong with a night. It is pure: the same time line, the same
@@ -28,15 +30,36 @@ import (
 //     the detectors saw;
 //   - a reading's times enclose its gates;
 //   - in every hold and after every end the pump is closed, the detectors are protected, nothing moves,
-//     nothing opens and nothing counts, but for looks at the light where light alone holds;
+//     nothing opens and nothing counts, but for looks at the light where light alone holds, or the
+//     guard of a rate alone, which alone may open the pump for it;
 //   - no gate opens and nothing moves after a stop was answered;
 //   - light above a trip rate closes the detector's shutter at once;
 //   - a controller that restarted is written down before any angle of its is believed again;
-//   - each kill of a run that was under way is followed by an interruption.
-func Judge(line []Moment, facts Facts) []string {
+//   - each kill of a run that was under way is followed by an interruption;
+//   - what places, lights, planned, effect and waits say in their files.
+func Judge(line []Moment, facts Facts) []string { return Examine(line, facts).Wrong }
+
+// Verdict is what a night comes to.
+type Verdict struct {
+	Wrong   []string
+	Effects []Effect
+}
+
+// Effect is a trouble that took effect: the ledger says so.
+type Effect struct {
+	Kind trouble.Kind
+	// Surfaced says that it showed as it declares, Shown that it showed somehow: in an event, or in
+	// what a line counts.
+	Surfaced, Shown bool
+}
+
+// Examine judges a night, and tells which troubles took effect and which of them showed.
+func Examine(line []Moment, facts Facts) Verdict {
 	j := &judge{facts: facts, runs: map[protocol.RunID]*runState{}}
 	for _, m := range line {
 		j.now = m.At
+		j.watchLight()
+		j.watchWait()
 		switch {
 		case m.World != nil:
 			j.world(m.World)
@@ -49,7 +72,12 @@ func Judge(line []Moment, facts Facts) []string {
 		}
 	}
 	j.close()
-	return j.wrong
+	v := Verdict{Wrong: j.wrong}
+	for _, e := range j.effects {
+		noticed := e.trouble.Wired() && facts.Noticed > 0
+		v.Effects = append(v.Effects, Effect{Kind: e.trouble.Kind, Surfaced: e.surfaced || noticed, Shown: e.surfaced || e.shown || noticed})
+	}
+	return v
 }
 
 type judge struct {
@@ -77,6 +105,17 @@ type judge struct {
 	zeroLost map[string]time.Time // controllers that restarted, until somebody wrote it down
 	doubted  []span
 	angles   []angleCheck
+
+	places      places
+	lights      lights
+	waits       waits
+	pumpMoves   bool                // its blade is on its way to be open
+	moveStarted time.Time           // of the last motion that is no search
+	out         map[string]bool     // devices whose plug is out
+	values      map[string][]valued // by device, and quantity of a sensor
+	effects     []*effect
+	lives       int
+	wasKilled   bool
 }
 
 type span struct {
@@ -108,7 +147,9 @@ type runState struct {
 	givenUp      int
 	darksGivenUp int
 	darks        int
-	owed         bool // killed while under way: an interruption has to come
+	owed         bool   // killed while under way: an interruption has to come
+	guard        string // that broke last
+	planned      *planned
 }
 
 func (j *judge) say(format string, args ...any) {
@@ -125,6 +166,10 @@ func (j *judge) run(id protocol.RunID) *runState {
 }
 
 func (j *judge) world(r *instruments.Record) {
+	j.place(r)
+	j.lamp(r)
+	j.value(r)
+	j.troubled(r)
 	switch r.Kind {
 	case instruments.GateOpened:
 		j.gateOpened(r)
@@ -132,23 +177,28 @@ func (j *judge) world(r *instruments.Record) {
 		j.gateEnded(r)
 	case instruments.MoveStarted, instruments.HomeStarted:
 		j.moved = r.At
+		if r.Kind == instruments.MoveStarted {
+			j.moveStarted = r.At
+		}
 		j.mustNotAct("%s: a motion began", r.Device)
 		if j.resting() {
 			j.say("%s: a motion began while run %s is %s", r.Device, j.current, j.runs[j.current].state)
 		}
 	case instruments.BladeStarted:
-		if r.Text == "open" && j.resting() && (r.Device == j.facts.Pump || !j.onlyLight()) {
+		if r.Device == j.facts.Pump {
+			j.pumpMoves = r.Text == "open"
+		} else if r.Text == "open" {
+			j.guard(r.Device, true) // light comes through from now on
+		}
+		if r.Text == "open" && j.resting() && !j.mayLook(r.Device == j.facts.Pump) {
 			j.say("%s was told to open while run %s is %s", r.Device, j.current, j.runs[j.current].state)
 		}
 	case instruments.BladeOpened, instruments.BladeClosed:
 		open := r.Kind == instruments.BladeOpened
 		if r.Device == j.facts.Pump {
-			j.pumpOpen = open
+			j.pumpOpen, j.pumpMoves = open, false
 		}
-		if j.guards == nil {
-			j.guards = map[string]bool{}
-		}
-		j.guards[r.Device] = open
+		j.guard(r.Device, open)
 		if !open {
 			for _, d := range j.facts.Detectors {
 				if d.Protector == r.Device {
@@ -156,8 +206,14 @@ func (j *judge) world(r *instruments.Record) {
 				}
 			}
 		}
-	case instruments.Troubled, instruments.Unplugged:
+	case instruments.Troubled:
 		j.hindered = r.At
+	case instruments.Unplugged, instruments.Plugged:
+		j.hindered = r.At
+		if j.out == nil {
+			j.out = map[string]bool{}
+		}
+		j.out[r.Device] = r.Kind == instruments.Unplugged
 	case instruments.Restarted:
 		j.hindered = r.At
 		if slices.Contains(j.facts.Controls, r.Device) {
@@ -170,16 +226,38 @@ func (j *judge) world(r *instruments.Record) {
 	j.checkBright()
 }
 
+func (j *judge) guard(device string, open bool) {
+	if j.guards == nil {
+		j.guards = map[string]bool{}
+	}
+	j.guards[device] = open
+}
+
 // resting says whether the current run holds, or none is active.
 func (j *judge) resting() bool {
 	r := j.runs[j.current]
 	return r != nil && (r.state == protocol.Holding || r.state.Final())
 }
 
-// onlyLight says whether the current run holds for light and nothing else, and may look at it.
-func (j *judge) onlyLight() bool {
+// mayLook says whether the current run holds for light and nothing else, and may look at it. For the
+// guard of a rate of light it may open the pump, too.
+func (j *judge) mayLook(pump bool) bool {
 	r := j.runs[j.current]
-	return r != nil && r.state == protocol.Holding && slices.Equal(r.causes, []protocol.Cause{protocol.ByLight})
+	if r == nil || r.state != protocol.Holding || len(r.causes) != 1 {
+		return false
+	}
+	if r.causes[0] == protocol.ByLight {
+		return !pump
+	}
+	if r.causes[0] != protocol.ByGuard {
+		return false
+	}
+	for _, g := range j.facts.Plans[j.current].Guards {
+		if g.Name == r.guard {
+			return g.Rate != "" || g.DarkRate != "" && !pump
+		}
+	}
+	return false
 }
 
 // mustNotAct complains when something moves or counts that has no right to.
@@ -198,7 +276,7 @@ func (j *judge) gateOpened(r *instruments.Record) {
 	j.gates = append(j.gates, g)
 	j.open = g
 	j.mustNotAct("%s: gate %d opened", r.Device, g.tag)
-	if j.resting() && !j.onlyLight() {
+	if j.resting() && !j.mayLook(false) {
 		j.say("gate %d opened while run %s is %s", g.tag, j.current, j.runs[j.current].state)
 	}
 }
@@ -259,7 +337,21 @@ func (j *judge) journal(e *protocol.Entry) {
 		j.bodies = map[string][]byte{}
 	}
 	j.bodies[e.ID()] = e.Body
+	before := r.state
+	defer func() {
+		j.heard(e, before)
+		if r.planned != nil {
+			r.planned.wrote = j.now
+		}
+	}()
 	switch e.Kind {
+	case protocol.PointEntry:
+		var points protocol.Points
+		if err := json.Unmarshal(e.Body, &points); err != nil {
+			j.say("run %s: entry %d: %v", e.Run, e.Sequence, err)
+			return
+		}
+		j.decided(&points)
 	case protocol.ReadingEntry:
 		var reading protocol.Reading
 		if err := json.Unmarshal(e.Body, &reading); err != nil {
@@ -311,7 +403,7 @@ func (j *judge) reading(r *runState, b *protocol.Reading) {
 	}
 	j.gates = nil
 	if last != nil {
-		if j.lastGate.After(last.closed) && b.LostGates == 0 || j.open != nil {
+		if (j.lastGate.After(last.closed) || j.open != nil) && b.LostGates == 0 {
 			j.say("%s: a gate was opened before it was durable", where)
 		}
 		if j.moved.After(last.closed) {
@@ -323,9 +415,11 @@ func (j *judge) reading(r *runState, b *protocol.Reading) {
 			j.say("%s was accepted after %s restarted, and nobody wrote down that its zero is lost", where, device)
 		}
 	}
+	j.taken(where, b)
 	if !b.Accepted {
 		return
 	}
+	j.accepted(b)
 	switch b.Kind {
 	case protocol.Light:
 		key := [2]int{*b.Point, *b.Visit}
@@ -346,9 +440,22 @@ func (j *judge) light(where string, b *protocol.Reading, g *gate) {
 		j.say("%s is said to last from %s to %s; its gate %d lasted from %s to %s", where, b.StartedAt, b.EndedAt, g.tag, g.opened.UTC(), g.closed.UTC())
 	}
 	seen := g.truth.Seen
-	if seen == nil || b.Kind == protocol.Check {
+	if seen == nil {
 		return
 	}
+	for _, d := range j.facts.Detectors {
+		at := seen.Signal
+		if d.Name == "idler" {
+			at = seen.Idler
+		}
+		if d.TripHz > 0 && at.MeanHz > wellAbove*d.TripHz {
+			j.say("%s was accepted, and the %s detector saw %.3g /s in gate %d; it trips at %.3g /s", where, d.Name, at.MeanHz, g.tag, d.TripHz)
+		}
+	}
+	if b.Kind == protocol.Check {
+		return
+	}
+	j.guarded(where, b, seen)
 	switch open := seen.PumpOpenShare; {
 	case b.Kind == protocol.Dark && open > 0:
 		j.say("%s is a dark, and the pump was open during %.3g of its gate %d", where, open, g.tag)
@@ -468,6 +575,15 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 		j.say("%s after the run was %s for ever", where, r.state)
 	}
 	r.state, r.causes = ev.State, ev.Causes
+	if name, ok := ev.Detail["guard"].(string); ok && ev.Kind == protocol.GuardBroken {
+		r.guard = name
+	}
+	j.surface(ev.Run, ev.Kind)
+	j.placed(ev)
+	j.follow(where, ev)
+	if ev.Kind == protocol.Ended {
+		j.reason(where, ev)
+	}
 	// The engine's own word is no excuse where the world did nothing to hinder it.
 	excused := strings.Contains(ev.Text, "NOT REACHED") && !j.hindered.IsZero() && j.now.Sub(j.hindered) < 2*time.Minute
 	if (r.state == protocol.Holding || r.state.Final()) && r.began && !excused {
@@ -476,7 +592,7 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 	if r.state == protocol.Holding && len(r.causes) == 0 {
 		j.say("%s: holding without a cause", where)
 	}
-	if ev.Kind == protocol.Ended && ev.State == protocol.Finished && j.facts.Visits > 0 {
+	if _, known := j.facts.Plans[ev.Run]; !known && ev.Kind == protocol.Ended && ev.State == protocol.Finished && j.facts.Visits > 0 {
 		if got := len(r.accepted) + r.givenUp; got < j.facts.Visits {
 			j.say("%s: finished with %d visits accepted and %d given up; want %d", where, len(r.accepted), r.givenUp, j.facts.Visits)
 		}
@@ -522,7 +638,7 @@ func (j *judge) stream(e *protocol.Entry) {
 func (j *judge) process(p *Process) {
 	switch p.What {
 	case Killed:
-		j.killed = true
+		j.killed, j.wasKilled = true, true
 		for id, r := range j.runs {
 			if id != protocol.BenchRun && r.began && !r.state.Final() && !slices.Contains(r.causes, protocol.ByRestart) {
 				r.owed = true
@@ -533,9 +649,17 @@ func (j *judge) process(p *Process) {
 		}
 	case Started:
 		j.killed = false
+		j.lives++
+		j.waits.since = j.now
 		for name := range j.bright {
 			j.bright[name] = j.now // nobody could before; now the first act has to
 		}
+	case DiskFull, DiskFree:
+		j.waits.full = p.What == DiskFull
+		j.waits.freed = j.now
+	case CameOlder:
+		n, _ := strconv.Atoi(p.Text)
+		j.published = max(0, j.published-n)
 	case StopAnswered:
 		j.stopped = p.Run
 		if r := j.runs[p.Run]; r == nil || r.state != protocol.Stopped {
@@ -549,9 +673,9 @@ func (j *judge) process(p *Process) {
 }
 
 func (j *judge) close() {
+	j.verdicts()
 	for _, a := range j.angles {
-		doubtful := slices.ContainsFunc(j.doubted, func(s span) bool { return s.run == a.run && a.sequence >= s.from && a.sequence <= s.to })
-		if !doubtful {
+		if j.doubtless(a.run, a.sequence) {
 			j.wrong = append(j.wrong, a.text)
 		}
 	}

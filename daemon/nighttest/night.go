@@ -1,6 +1,7 @@
 package nighttest
 
 import (
+	"bytes"
 	"context"
 	"encoding/json"
 	"errors"
@@ -34,6 +35,8 @@ import (
 type Night struct {
 	Bench  *bench.File // simulated, clock 1
 	Recipe string
+	Before []string      // recipes that are queued before it
+	Daemon bool          // one loop takes the runs from the queue, as serve does; else each is executed by itself, as run does
 	Model  *source.Model // of the bench, shared between nights; nil: made anew
 	Script
 	// Wrap sabotages: it changes a part before it is used. For the table of sabotages only.
@@ -46,6 +49,14 @@ type Script struct {
 	Kills    []Kill
 	Orders   []Order
 	Broker   []Away // times during which the broker takes nothing
+	Full     []Away // times during which the disk has no room for a page more
+	Older    []Older
+}
+
+// Older is a broker that comes back as it was some messages ago.
+type Older struct {
+	At time.Duration
+	By int
 }
 
 // Kill ends the process without a word: at the Nth passing of a step in its life, or after a time.
@@ -83,6 +94,12 @@ func (s Script) String() string {
 	for _, a := range s.Broker {
 		parts = append(parts, fmt.Sprintf("away %s+%s", a.At, a.For))
 	}
+	for _, f := range s.Full {
+		parts = append(parts, fmt.Sprintf("full %s+%s", f.At, f.For))
+	}
+	for _, o := range s.Older {
+		parts = append(parts, fmt.Sprintf("older %s:%d", o.At, o.By))
+	}
 	return strings.Join(parts, ", ") + " | " + s.Troubles.String()
 }
 
@@ -109,14 +126,24 @@ func ParseScript(text string) (Script, error) {
 			s.Kills = append(s.Kills, Kill{After: d})
 		case slices.Contains([]string{"hold", "resume", "stop"}, what) && derr == nil:
 			s.Orders = append(s.Orders, Order{At: d, What: what})
-		case what == "away" && isAway && derr == nil:
+		case what == "older" && isStep && nerr == nil:
+			d, err := time.ParseDuration(step)
+			if err != nil {
+				return s, err
+			}
+			s.Older = append(s.Older, Older{At: d, By: n})
+		case (what == "away" || what == "full") && isAway && derr == nil:
 			l, err := time.ParseDuration(length)
 			if err != nil {
 				return s, err
 			}
-			s.Broker = append(s.Broker, Away{At: d, For: l})
+			if a := (Away{At: d, For: l}); what == "away" {
+				s.Broker = append(s.Broker, a)
+			} else {
+				s.Full = append(s.Full, a)
+			}
 		default:
-			return s, fmt.Errorf("script: %q; want kill STEP:N, kill TIME, hold TIME, resume TIME, stop TIME or away TIME+TIME", word)
+			return s, fmt.Errorf("script: %q; want kill STEP:N, kill TIME, hold TIME, resume TIME, stop TIME, away TIME+TIME, full TIME+TIME or older TIME:N", word)
 		}
 	}
 	var err error
@@ -144,7 +171,7 @@ type Book interface {
 type Result struct {
 	Line   []Moment
 	Facts  Facts
-	State  protocol.State
+	State  protocol.State // of the last run
 	Reason string
 	Took   time.Duration // bench time
 	Lives  int
@@ -155,18 +182,35 @@ type Result struct {
 	Stuck     string // why the night was given up before its run was final; empty otherwise
 	Verified  []string
 	Published int
+	Ends      []End         // of all runs, in the order they were asked for
+	Killed    []engine.Step // where kills took effect; empty: by the clock
+}
+
+// End is what became of a run.
+type End struct {
+	Run    protocol.RunID
+	State  protocol.State
+	Reason string
 }
 
 // Judge judges the night, its logbook's own verification included.
-func (r *Result) Judge() []string {
-	wrong := Judge(r.Line, r.Facts)
+func (r *Result) Judge() []string { return r.Examine().Wrong }
+
+// Examine does the same, and tells which troubles took effect.
+func (r *Result) Examine() Verdict {
+	v := Examine(r.Line, r.Facts)
 	for _, text := range r.Verified {
-		wrong = append(wrong, "logbook: "+text)
+		v.Wrong = append(v.Wrong, "logbook: "+text)
 	}
 	if r.Stuck != "" {
-		wrong = append(wrong, "stuck: "+r.Stuck)
+		v.Wrong = append(v.Wrong, "stuck: "+r.Stuck)
 	}
-	return wrong
+	for _, e := range r.Ends {
+		if !e.State.Final() && r.Stuck == "" {
+			v.Wrong = append(v.Wrong, fmt.Sprintf("run %s is %s (%s) at the end; want it final", e.Run, e.State, e.Reason))
+		}
+	}
+	return v
 }
 
 // longest bounds a night in bench time.
@@ -178,7 +222,15 @@ func Run(n Night, data string) (*Result, error) {
 	if n.Bench.Pace() != 1 {
 		return nil, errors.New("nighttest: a bench with clock 1 is wanted: bubbles make their own time")
 	}
-	k := &kit{Night: n, data: data, began: time.Now(), sink: &standIn{}}
+	k := &kit{Night: n, data: data, began: time.Now(), sink: &standIn{}, final: map[protocol.RunID]bool{}, over: make(chan struct{})}
+	k.sink.older = func(now time.Time) (by int) {
+		for len(k.Older) > 0 && now.Sub(k.began) >= k.Older[0].At {
+			by += k.Older[0].By
+			k.Older = k.Older[1:]
+		}
+		return by
+	}
+	k.sink.lost = func(n int) { k.note(Process{What: CameOlder, Text: strconv.Itoa(n)}) }
 	k.sink.away = func(now time.Time) bool {
 		for _, a := range n.Broker {
 			if d := now.Sub(k.began); d >= a.At && d < a.At+a.For {
@@ -215,9 +267,11 @@ type kit struct {
 	virtual *bench.Virtual
 	ledger  *instruments.Ledger
 	sink    *standIn
-	run     protocol.RunID
+	runs    []protocol.RunID // as they were asked for; the last is the night's own
 
 	mu      sync.Mutex
+	final   map[protocol.RunID]bool
+	over    chan struct{} // closed when every run is final
 	journal []Moment
 	process []Moment
 	counts  line.Counts
@@ -225,6 +279,15 @@ type kit struct {
 	orders  int // carried out
 	stuck   string
 	panics  int
+	killed  []engine.Step // steps at which a kill took effect, in order; empty for one by the clock
+}
+
+// run is the one that people mean when they say nothing else.
+func (k *kit) run() protocol.RunID {
+	if len(k.runs) == 0 {
+		return ""
+	}
+	return k.runs[len(k.runs)-1]
 }
 
 func (k *kit) note(p Process) {
@@ -285,6 +348,13 @@ func (k *kit) life() (final bool, err error) {
 	keep := keeper.New(keeper.Config{
 		Book: recorder, Bench: &built.Bench, BenchText: k.Bench.Text, Version: "test",
 		Plan: k.plan, ResumeAfterRestart: true, Step: l.step,
+		Conclude: func(ctx context.Context, run protocol.RunID) ([]json.RawMessage, error) {
+			all, err := report.All(ctx, book, run, report.Options{})
+			if err != nil {
+				return nil, err
+			}
+			return report.Objects(all)
+		},
 		Judge: func(ctx context.Context, run protocol.RunID, plan scan.Plan, set, baseline int) (engine.Verdict, error) {
 			return report.Judge(ctx, book, run, plan, k.Bench, set, baseline)
 		},
@@ -292,20 +362,7 @@ func (k *kit) life() (final bool, err error) {
 			return report.Refine(ctx, book, run, plan, k.Bench, round)
 		},
 	})
-	done := make(chan protocol.State, 1)
-	l.main.Go("keeper", func(ctx context.Context) error {
-		run, err := k.choose(ctx, keep)
-		if err != nil {
-			return err
-		}
-		state, err := keep.RunOne(ctx, run)
-		if err != nil && ctx.Err() == nil && state != protocol.Failed {
-			return err
-		}
-		done <- state
-		l.main.Stop()
-		return nil
-	})
+	l.main.Go("keeper", func(ctx context.Context) error { return l.work(ctx, keep) })
 	l.main.Go("people", func(ctx context.Context) error { return l.people(ctx, keep) })
 	if l.kill != nil && l.kill.Step == "" {
 		l.main.Go("fate", func(ctx context.Context) error {
@@ -318,6 +375,9 @@ func (k *kit) life() (final bool, err error) {
 			}
 			return nil
 		})
+	}
+	if len(k.Full) > 0 {
+		l.main.Go("disk", func(ctx context.Context) error { return l.disk(ctx, book) })
 	}
 	l.carriers = crew.New(context.Background(), nil)
 	l.carriers.Go("courier", carrier.Run)
@@ -342,11 +402,73 @@ func (k *kit) life() (final bool, err error) {
 		k.counts.Opened += c.Opened
 		k.counts.Lost += c.Lost
 	}
-	select {
-	case state := <-done:
-		return state.Final() && !l.dead.Load(), err
-	default:
-		return false, err
+	return k.allFinal() && !l.dead.Load(), err
+}
+
+func (k *kit) allFinal() bool {
+	k.mu.Lock()
+	defer k.mu.Unlock()
+	return len(k.runs) > 0 && len(k.final) == len(k.runs)
+}
+
+// work executes the night's runs: as the daemon does, or each by itself.
+func (l *life) work(ctx context.Context, keep *keeper.Keeper) error {
+	if err := l.choose(ctx, keep); err != nil || ctx.Err() != nil {
+		return err
+	}
+	if l.Daemon {
+		l.main.Go("end", func(ctx context.Context) error {
+			select {
+			case <-ctx.Done():
+			case <-l.over:
+				time.Sleep(time.Second) // whoever asked for the end gets an answer
+				l.main.Stop()
+			}
+			return nil
+		})
+		return keep.Run(ctx)
+	}
+	for _, run := range l.runs {
+		state, err := keep.RunOne(ctx, run)
+		if err != nil && ctx.Err() == nil && state != protocol.Failed || ctx.Err() != nil {
+			return err
+		}
+	}
+	l.main.Stop()
+	return nil
+}
+
+// disk takes the room away and gives it back.
+func (l *life) disk(ctx context.Context, book *logbook.Book) error {
+	full := false
+	for {
+		wait, now := time.Duration(-1), time.Since(l.began)
+		want := false
+		for _, f := range l.Full {
+			want = want || now >= f.At && now < f.At+f.For
+			for _, at := range []time.Duration{f.At, f.At + f.For} {
+				if at > now && (wait < 0 || at-now < wait) {
+					wait = at - now
+				}
+			}
+		}
+		if want != full {
+			if err := book.SetMaxPages(ctx, map[bool]int64{true: 1}[want]); err != nil && ctx.Err() == nil {
+				return err
+			}
+			full = want
+			l.note(Process{What: map[bool]ProcessKind{true: DiskFull, false: DiskFree}[full]})
+		}
+		if wait < 0 {
+			return nil
+		}
+		timer := time.NewTimer(wait + 5*time.Nanosecond)
+		select {
+		case <-ctx.Done():
+			timer.Stop()
+			return nil
+		case <-timer.C:
+		}
 	}
 }
 
@@ -375,11 +497,31 @@ func (k *kit) plan(text string, accepted time.Time, earlier func(scan.EarlierAsk
 	return r.Plan(facts)
 }
 
-func (k *kit) choose(ctx context.Context, keep *keeper.Keeper) (protocol.RunID, error) {
-	// Asked again after each restart with the same key: one run, however often the process died.
-	reply, err := keep.Enqueue(ctx, protocol.StartRequest{Recipe: k.Recipe, Key: "night", Who: "nighttest"})
-	k.run = reply.Run
-	return reply.Run, err
+// recipes lists what is asked for, in order, each with a key of its own.
+func (k *kit) recipes() []string { return append(slices.Clone(k.Before), k.Recipe) }
+
+// choose asks for every run. Asked again after each restart with the same keys: one run each, however
+// often the process died. On a full disk somebody asks again after a while.
+func (l *life) choose(ctx context.Context, keep *keeper.Keeper) error {
+	var runs []protocol.RunID
+	for i, text := range l.recipes() {
+		for {
+			reply, err := keep.Enqueue(ctx, protocol.StartRequest{Recipe: text, Key: fmt.Sprintf("night %d", i+1), Who: "nighttest"})
+			if err == nil {
+				runs = append(runs, reply.Run)
+				break
+			}
+			r, refused := errors.AsType[*protocol.Refusal](err)
+			if ctx.Err() != nil || !refused || r.Code != 503 {
+				return err
+			}
+			time.Sleep(time.Minute)
+		}
+	}
+	l.mu.Lock()
+	defer l.mu.Unlock()
+	l.runs = runs
+	return nil
 }
 
 // life is one process.
@@ -394,7 +536,10 @@ type life struct {
 
 // die is a power cut for the process: no line hears it any more, nothing is written any more.
 func (l *life) die() {
-	l.note(Process{What: Killed, Run: l.run})
+	l.note(Process{What: Killed, Run: l.run()})
+	l.mu.Lock()
+	l.killed = append(l.killed, l.kill.Step)
+	l.mu.Unlock()
 	l.dead.Store(true)
 	l.lines.Stop()
 	_ = l.lines.Wait()
@@ -426,7 +571,8 @@ func (l *life) step(s engine.Step) {
 // see that the run holds for something that a person may clear, look at it for a while, resume.
 func (l *life) people(ctx context.Context, keep *keeper.Keeper) error {
 	const look = 7 * time.Minute
-	since := time.Time{}
+	const enough = 12 // fruitless resumes, after which nobody comes again
+	since, resumed := time.Time{}, 0
 	for {
 		wait := look + 13*time.Nanosecond
 		if l.orders < len(l.Orders) {
@@ -452,9 +598,13 @@ func (l *life) people(ctx context.Context, keep *keeper.Keeper) error {
 			since = time.Time{}
 		case since.IsZero():
 			since = time.Now()
+		case time.Since(since) > 2*look && resumed == enough:
+			l.ask(ctx, keep, "stop")
+			since, resumed = time.Time{}, 0
 		case time.Since(since) > 2*look:
 			l.ask(ctx, keep, "resume")
 			since = time.Time{}
+			resumed++
 		}
 		if time.Since(l.began) > longest {
 			l.ask(ctx, keep, "stop")
@@ -463,19 +613,25 @@ func (l *life) people(ctx context.Context, keep *keeper.Keeper) error {
 }
 
 func (l *life) ask(ctx context.Context, keep *keeper.Keeper, what string) {
-	q := protocol.RunRequest{Run: l.run, Who: "a person"}
+	q := protocol.RunRequest{Run: keep.Status(ctx).Run, Who: "a person"}
+	if q.Run == "" {
+		q.Run = l.run()
+	}
+	if q.Run == "" {
+		return // nothing was asked for yet
+	}
 	var r protocol.RunReply
 	var err error
 	switch what {
 	case "hold":
 		if r, err = keep.Hold(ctx, q); err == nil && r.Recorded {
-			l.note(Process{What: HoldAnswered, Run: l.run})
+			l.note(Process{What: HoldAnswered, Run: q.Run})
 		}
 	case "resume":
 		r, err = keep.Resume(ctx, q)
 	case "stop":
 		if r, err = keep.Stop(ctx, q); err == nil && r.Recorded {
-			l.note(Process{What: StopAnswered, Run: l.run})
+			l.note(Process{What: StopAnswered, Run: q.Run})
 		}
 	}
 	// A refusal is an answer too: the run may be over.
@@ -505,6 +661,12 @@ func (r *recorder) record(e protocol.Entry) {
 	r.life.mu.Lock()
 	defer r.life.mu.Unlock()
 	r.life.journal = append(r.life.journal, Moment{At: time.Now().UTC(), Journal: &e})
+	if k := r.life.kit; e.Kind == protocol.EventEntry && e.Run != protocol.BenchRun && bytes.Contains(e.Body, []byte(`"kind":"ended"`)) {
+		k.final[e.Run] = true
+		if len(k.runs) > 0 && len(k.final) == len(k.runs) {
+			close(k.over)
+		}
+	}
 }
 
 func (r *recorder) Append(ctx context.Context, e protocol.Entry) error {
@@ -532,6 +694,8 @@ func (r *recorder) NewRun(ctx context.Context, h logbook.Header, first protocol.
 type standIn struct {
 	mu      sync.Mutex
 	away    func(time.Time) bool
+	older   func(time.Time) int // how many messages are lost now
+	lost    func(int)
 	was     bool
 	stored  []courier.Message
 	moments []Moment
@@ -545,6 +709,7 @@ func (s *standIn) Last(context.Context) (courier.Last, error) {
 	if s.away(time.Now()) {
 		return courier.Last{}, errAway
 	}
+	s.age()
 	if len(s.stored) == 0 {
 		return courier.Last{}, nil
 	}
@@ -560,6 +725,7 @@ func (s *standIn) Publish(_ context.Context, m courier.Message, after courier.La
 	if away && !lost {
 		return courier.Last{}, errAway
 	}
+	s.age()
 	if after.Sequence != uint64(len(s.stored)) {
 		return courier.Last{}, courier.ErrUnsure
 	}
@@ -576,6 +742,14 @@ func (s *standIn) Publish(_ context.Context, m courier.Message, after courier.La
 	return courier.Last{Message: m, Sequence: uint64(len(s.stored))}, nil
 }
 
+// age loses the messages that a broker which comes back older does not have.
+func (s *standIn) age() {
+	if n := min(s.older(time.Now()), len(s.stored)); n > 0 {
+		s.stored = s.stored[:len(s.stored)-n]
+		s.lost(n)
+	}
+}
+
 func cutLast(id string) (run, number string, found bool) {
 	i := strings.LastIndexByte(id, '.')
 	if i < 0 {
@@ -588,14 +762,24 @@ func cutLast(id string) (run, number string, found bool) {
 func (k *kit) result() (*Result, error) {
 	k.virtual.World.Settle()
 	r := &Result{Facts: FactsOf(k.Bench), Took: time.Since(k.began), Lives: k.lived, Lines: k.counts, Stuck: k.stuck, Published: len(k.sink.stored)}
-	plan, err := k.plan(k.Recipe, k.began, nil)
-	if err != nil {
-		return nil, err
+	for i, text := range k.recipes() {
+		if i >= len(k.runs) {
+			break
+		}
+		plan, err := k.plan(text, k.began, nil)
+		if err != nil {
+			return nil, err
+		}
+		r.Facts.Plans[k.runs[i]] = plan
 	}
-	r.Facts.Visits = len(plan.Visits())
-	if plan.Dark != nil {
-		r.Facts.MinDarks = map[bool]int{true: 1}[plan.Dark.AtStart] + map[bool]int{true: 1}[plan.Dark.AtEnd]
+	if last, ok := r.Facts.Plans[k.run()]; ok {
+		r.Facts.Visits = len(last.Visits())
+		if last.Dark != nil {
+			r.Facts.MinDarks = map[bool]int{true: 1}[last.Dark.AtStart] + map[bool]int{true: 1}[last.Dark.AtEnd]
+		}
 	}
+	r.Killed = k.killed
+	r.Facts.Noticed = k.counts.Retried + k.counts.Missing + k.counts.Strangers + k.counts.Strays + k.counts.Chatter + k.counts.Resynchronised + k.counts.Lost + k.counts.Restarts
 	r.Facts.CaughtUp = k.stuck == ""
 	r.Line = Merge(World(k.ledger.Records()), k.journal, k.sink.moments, k.process)
 	book, err := logbook.OpenReadOnly(k.data + "/logbook.db")
@@ -604,19 +788,22 @@ func (k *kit) result() (*Result, error) {
 	}
 	defer book.Close()
 	r.Verified = book.Verify(context.Background())
-	row, err := book.Run(context.Background(), k.run)
-	if err != nil {
-		return nil, err
-	}
-	r.State, r.Reason = row.State, row.Reason
-	for reading, err := range book.Readings(context.Background(), k.run) {
+	for _, run := range k.runs {
+		row, err := book.Run(context.Background(), run)
 		if err != nil {
 			return nil, err
 		}
-		if reading.Accepted {
-			r.Accepted++
-		} else {
-			r.SetAside++
+		r.State, r.Reason = row.State, row.Reason
+		r.Ends = append(r.Ends, End{run, row.State, row.Reason})
+		for reading, err := range book.Readings(context.Background(), run) {
+			if err != nil {
+				return nil, err
+			}
+			if reading.Accepted {
+				r.Accepted++
+			} else {
+				r.SetAside++
+			}
 		}
 	}
 	return r, nil
@@ -624,15 +811,30 @@ func (k *kit) result() (*Result, error) {
 
 // FactsOf is what the judge must know of a bench.
 func FactsOf(f *bench.File) Facts {
-	facts := Facts{Tag: string(f.Counter.Tag), Tolerance: map[string]float64{}}
+	facts := Facts{Tag: string(f.Counter.Tag), Tolerance: map[string]float64{}, Plans: map[protocol.RunID]scan.Plan{}, KeepOuts: f.KeepOuts, Controller: map[string]string{},
+		HomeOrder: map[string][]string{}, Unattended: map[string]bool{}, Settings: map[string]Scale{}, Sensors: map[string]Scale{}}
 	for _, c := range f.Counter.Channels {
 		facts.Channels = append(facts.Channels, string(c))
 	}
 	for _, a := range f.Axes {
 		facts.Tolerance[string(a.Name)] = a.Tolerance.Degrees() + detection
+		facts.Axes = append(facts.Axes, a.Axis)
+		facts.Controller[string(a.Name)] = string(a.Axis.Controller)
 	}
 	for _, c := range f.Controllers {
 		facts.Controls = append(facts.Controls, string(c.Name))
+		mine := slices.DeleteFunc(slices.Clone(f.Axes), func(a bench.Axis) bool { return a.Axis.Controller != c.Name })
+		slices.SortStableFunc(mine, func(a, b bench.Axis) int { return a.HomeOrder - b.HomeOrder })
+		for _, a := range mine {
+			facts.HomeOrder[string(c.Name)] = append(facts.HomeOrder[string(c.Name)], string(a.Name))
+			facts.Unattended[string(c.Name)] = a.Unattended
+		}
+	}
+	for _, s := range f.Settings {
+		facts.Settings[string(s.Name)] = Scale{Device: string(s.Name), Factor: factors[s.Unit], Tolerance: within[s.Unit]}
+	}
+	for _, s := range f.Sensors {
+		facts.Sensors[string(s.Name)] = Scale{Device: s.Line, Factor: factors[s.Unit], Quantity: map[string]string{"mW": "W", "Cel": "Cel"}[s.Unit]}
 	}
 	if f.Pump != nil {
 		facts.Pump = string(f.Pump.Name)
@@ -642,6 +844,12 @@ func FactsOf(f *bench.File) Facts {
 	}
 	return facts
 }
+
+// factors turn a value of the family's benches into the unit that the ledger has.
+var factors = map[string]float64{"mW": 1e-3, "ns": 1e-9, "Cel": 1}
+
+// within is what their files allow of a setting, in its unit.
+var within = map[string]float64{"mW": 0.01, "ns": 0.002}
 
 // detection is what an encoder of the virtual stages cannot see, with room: degrees.
 const detection = 0.001

@@ -11,6 +11,7 @@ import (
 	"time"
 
 	"gemel/protocol"
+	"gemel/scan"
 	"gemel/sim/instruments"
 )
 
@@ -39,6 +40,9 @@ const (
 	Killed       ProcessKind = "killed" // without a word
 	StopAnswered ProcessKind = "stop answered"
 	HoldAnswered ProcessKind = "hold answered"
+	CameOlder    ProcessKind = "came older" // the broker: it lost its last messages, as many as Text says
+	DiskFull     ProcessKind = "disk full"
+	DiskFree     ProcessKind = "disk free"
 )
 
 // Facts are what the judge must know of the bench and of what was asked for.
@@ -49,11 +53,35 @@ type Facts struct {
 	Pump      string             // device name of the pump shutter
 	Detectors []DetectorFact
 	Controls  []string // the names of the stages' devices
-	// Visits and Darks are what the plan asks for; a finished run has them all, or says which it gave up.
+	Axes      []scan.Axis
+	KeepOuts  []scan.KeepOut
+	// Controller is the device that turns an axis.
+	Controller map[string]string
+	// Plans are what each run was asked for. A finished run did all of it, or says what it gave up.
+	Plans map[protocol.RunID]scan.Plan
+	// Visits and MinDarks are the same of a run without a plan here.
 	Visits   int
 	MinDarks int
+	// HomeOrder is by controller; Unattended ones may search with nobody there.
+	HomeOrder  map[string][]string
+	Unattended map[string]bool
+	Settings   map[string]Scale
+	Sensors    map[string]Scale
+	// Watch is how long light at a detector may go unseen; 0: the longest gate of the plan.
+	Watch time.Duration
+	// Noticed is how many answers the lines waited for in vain, asked again for or dropped.
+	Noticed int
 	// CaughtUp says that the courier was given the time to publish everything.
 	CaughtUp bool
+}
+
+// Scale says where the ledger has what a reading calls by a name, and by what a reading's value is
+// multiplied to be the ledger's.
+type Scale struct {
+	Device    string
+	Quantity  string // of a sensor: W or Cel
+	Factor    float64
+	Tolerance float64 // in the reading's unit
 }
 
 // DetectorFact is one detector of the judge's interest.
@@ -70,7 +98,7 @@ func Merge(parts ...[]Moment) []Moment {
 	all := slices.Concat(parts...)
 	rank := func(m Moment) int {
 		switch {
-		case m.World != nil:
+		case m.World != nil, m.Process != nil && m.Process.What == CameOlder:
 			return 0
 		case m.Journal != nil:
 			return 1

@@ -179,6 +179,9 @@ const guardEvery = 10 * time.Second
 // lookAtGuards ends the hold when every guard is met again.
 func (e *Engine) lookAtGuards(ctx context.Context) error {
 	if g, ok := e.guardNamed(e.progress.guard); ok && g.Sensor == "" {
+		if len(e.progress.Causes) > 1 {
+			return nil // who holds as well may have the enclosure open: no light for a look
+		}
 		if met, err := e.lookAtRate(ctx, g); !met || err != nil {
 			return err
 		}

@@ -178,6 +178,9 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 	if err := e.readBack(ctx, r); err != nil {
 		return r, err
 	}
+	if err := e.stillLit(ctx, t.kind != darkTask); err != nil {
+		return r, err
+	}
 	r.Scatter = e.scatter(r.Slices)
 	if err := e.inPlace(after, "after the dwell"); err != nil {
 		r.Reason = err.Error()

@@ -152,6 +152,32 @@ func (e *Engine) light(ctx context.Context, pump bool) error {
 	return e.Bench.Pace.Wait(ctx, ready)
 }
 
+// stillLit says after a dwell whether the shutters are as they were for it: one that lost its power
+// meanwhile has fallen shut.
+func (e *Engine) stillLit(ctx context.Context, pump bool) error {
+	if s := e.Bench.Pump; s != nil {
+		if err := e.still(ctx, s, pump); err != nil {
+			return err
+		}
+	}
+	for _, s := range e.protectors() {
+		if err := e.still(ctx, s, true); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+func (e *Engine) still(ctx context.Context, s drivers.Shutter, open bool) error {
+	blade, err := s.State(ctx)
+	if err != nil || blade.Open == open {
+		return err
+	}
+	delete(e.opened, s.Name())
+	says := map[bool]string{true: "open", false: "closed"}
+	return &drivers.Error{Op: "count", Device: s.Name(), Remedy: drivers.Retry, Err: fmt.Errorf("says it is %s after the dwell, and was %s before it", says[blade.Open], says[open])}
+}
+
 // setShutter opens or closes a shutter that is not so already. One counts as open only after an
 // Open that succeeded: a blade that a failed one left on its way is seen as open before it is.
 func (e *Engine) setShutter(ctx context.Context, s drivers.Shutter, open bool) (moved bool, err error) {

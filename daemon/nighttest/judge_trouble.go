@@ -1,0 +1,121 @@
+package nighttest
+
+import (
+	"slices"
+	"strings"
+	"time"
+
+	"gemel/protocol"
+	"gemel/sim/instruments"
+	"gemel/sim/trouble"
+)
+
+// effect is a trouble that took effect: the ledger says so.
+type effect struct {
+	trouble  trouble.Trouble
+	at       time.Time
+	run      protocol.RunID // that was running then; empty: none
+	readings int            // accepted readings of that run that began since
+	surfaced bool           // as it declares
+	shown    bool           // somehow: in an event, a reading set aside, a check
+}
+
+// troubled takes a trouble in whose record says what it is. A kind that the judge never heard of is
+// held to what it declares.
+func (j *judge) troubled(r *instruments.Record) {
+	if r.Text == "" || !strings.Contains(r.Text, "(") || r.Kind == instruments.Refused || r.Kind == instruments.LampOff || r.Kind == instruments.Plugged {
+		return
+	}
+	l, err := trouble.Parse(r.Text)
+	if err != nil || len(l) != 1 {
+		return
+	}
+	e := &effect{trouble: l[0], at: r.At}
+	if s := j.runs[j.current]; s != nil && s.state == protocol.Running && !j.killed {
+		e.run = j.current
+	}
+	j.effects = append(j.effects, e)
+}
+
+// surfaces takes an event in: which troubles it may be the sign of.
+func (j *judge) surface(run protocol.RunID, kind protocol.EventKind) {
+	for _, e := range j.effects {
+		if e.surfaced || e.run != run {
+			continue
+		}
+		e.shown = e.shown || slices.Contains([]protocol.EventKind{protocol.TakenAgain, protocol.Trouble, protocol.Held, protocol.SetAside, protocol.GuardBroken, protocol.Doubted, protocol.HomedEvent, protocol.Interrupted}, kind)
+		e.surfaced = slices.Contains(e.trouble.Surfaces().Events, string(kind))
+	}
+}
+
+// unseen is how many readings may be accepted after a trouble that has to show in an event.
+const unseen = 6
+
+// accepted counts a reading against the troubles that did not show yet.
+func (j *judge) accepted(b *protocol.Reading) {
+	for _, e := range j.effects {
+		if e.run == b.Run && !e.surfaced && b.StartedAt.After(e.at) {
+			e.readings++
+		}
+	}
+}
+
+// demands says whether a trouble that took effect must have shown in the journal: the run met it.
+func (j *judge) demands(e *effect) bool {
+	s := e.trouble.Surfaces()
+	if s.Harmless || len(s.Events) == 0 || e.run == "" || e.readings < unseen {
+		return false
+	}
+	switch e.trouble.Kind {
+	case trouble.Lamp, trouble.PumpDrift:
+		return false // judged by the light itself: in no accepted reading above the trip rate, or outside a guard
+	case trouble.Slip, trouble.LostSteps:
+		return false // judged by the true angles
+	case trouble.Restart, trouble.Unplug:
+		return slices.Contains(j.facts.Controls, e.trouble.Device) // the others lose nothing that a reading rests on
+	}
+	return true
+}
+
+// verdicts judges every trouble at the end of the night.
+func (j *judge) verdicts() {
+	wired := 0
+	for _, e := range j.effects {
+		if e.trouble.Surfaces().Retried {
+			wired++
+		}
+		if j.demands(e) && !e.surfaced {
+			j.say("%s took effect, and none of %v followed in %d readings", e.trouble, e.trouble.Surfaces().Events, e.readings)
+		}
+	}
+	if wired > 2*j.lives && j.facts.CaughtUp && j.facts.Noticed == 0 {
+		j.say("%d troubles of lines took effect, and no line noticed anything", wired)
+	}
+}
+
+// reasons judges an end that was not as planned: it says why, and the night has something that can be
+// the reason.
+func (j *judge) reason(where string, ev *protocol.Event) {
+	hit := func(kinds ...trouble.Kind) bool {
+		return slices.ContainsFunc(j.effects, func(e *effect) bool { return slices.Contains(kinds, e.trouble.Kind) })
+	}
+	switch {
+	case ev.State == protocol.Stopped && !strings.Contains(ev.Text, "stopped by "):
+		j.say("%s: stopped, and %q does not say by whom", where, ev.Text)
+	case ev.State != protocol.Failed:
+	case len(strings.TrimPrefix(ev.Text, "failed")) < 10:
+		j.say("%s: failed, and %q is no reason", where, ev.Text)
+	case len(j.effects) == 0 && !j.wasKilled && !strings.Contains(ev.Text, "guard") && !strings.Contains(ev.Text, "no value"):
+		j.say("%s: failed in a night without trouble: %s", where, ev.Text)
+	case strings.Contains(ev.Text, "trip rate") && !hit(trouble.Lamp) && j.knownKinds():
+		j.say("%s: failed for light, and no lamp was on: %s", where, ev.Text)
+	case strings.Contains(ev.Text, "lost the zero") && !hit(trouble.Restart) && j.knownKinds():
+		j.say("%s: failed for a lost zero, and nothing restarted: %s", where, ev.Text)
+	}
+}
+
+// knownKinds says whether all troubles of the night are ones whose consequences are known here.
+func (j *judge) knownKinds() bool {
+	known := []trouble.Kind{trouble.Missing, trouble.Garbled, trouble.Late, trouble.Duplicated, trouble.Unasked, trouble.Restart, trouble.Lamp, trouble.Unplug, trouble.Slip, trouble.LostSteps, trouble.PumpDrift}
+	return !slices.ContainsFunc(j.effects, func(e *effect) bool { return !slices.Contains(known, e.trouble.Kind) })
+}

@@ -1,0 +1,5 @@
+//go:build race
+
+package nighttest
+
+const raced = true
