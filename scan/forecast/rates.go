@@ -20,9 +20,10 @@ type Expect func(axes []scan.AxisTarget, settings []scan.SettingTarget) (scan.Ex
 // rates are what every point of a plan records: evaluated at each where they are few, or at nodes and
 // interpolated in between. Between nodes the logarithm of each rate is followed by cubics along each
 // entry of the sweep: what falls off as a Gaussian is then met to the last digit, and what is small
-// keeps its relative error.
+// keeps its relative error. Of coincidences the true and the accidental ones are followed each for
+// itself, since they fall off differently.
 type rates struct {
-	channels  []drivers.Channel // of counts, then of accidentals
+	channels  []drivers.Channel // of counts, coincidences last, then of their accidentals
 	counts    int               // how many of them are counts
 	points    []scan.Point
 	lattice   *lattice  // nil: a row of values each point
@@ -161,7 +162,7 @@ func (e *evaluator) spread() {
 		}
 	}
 	for n := range l.nodes() {
-		for _, v := range e.at(l.point(n)) {
+		for _, v := range e.parted(e.at(l.point(n))) {
 			e.values = append(e.values, logOf(v))
 		}
 	}
@@ -169,6 +170,23 @@ func (e *evaluator) spread() {
 		l.levels[i].weigh()
 	}
 	e.check()
+}
+
+// parted takes the accidental ones from the coincidences, and joined puts them back.
+func (r *rates) parted(v row) row {
+	pairs := len(r.channels) - r.counts
+	for k := range pairs {
+		v[r.counts-pairs+k] = v[r.counts-pairs+k] - v[r.counts+k]
+	}
+	return v
+}
+
+func (r *rates) joined(v row) row {
+	pairs := len(r.channels) - r.counts
+	for k := range pairs {
+		v[r.counts-pairs+k] += v[r.counts+k]
+	}
+	return v
 }
 
 func logOf(v float64) float64 { return math.Log(math.Max(v, leastHz)) } // NaN stays
@@ -185,11 +203,12 @@ func (e *evaluator) needed(i int) int {
 			base += other.size / 2 * other.stride
 		}
 	}
+	pairs := len(e.channels) - e.counts
 	known := map[int]row{}
 	ask := func(index int) row {
 		p := e.lattice.reflect(base, i, index)
 		if _, ok := known[index]; !ok {
-			known[index] = e.at(p)
+			known[index] = e.parted(e.at(p))
 		}
 		return known[index]
 	}
@@ -212,7 +231,11 @@ func (e *evaluator) needed(i int) int {
 				for j := range 4 {
 					log += v.weight[mid][j] * logOf(ask(v.at[v.first[mid]+j])[c])
 				}
-				if d := math.Abs(math.Exp(log)/math.Max(got[c], leastHz) - 1); !math.IsNaN(d) && got[c] > leastHz {
+				whole := got[c]
+				if c < e.counts && c >= e.counts-pairs {
+					whole += got[c+pairs] // an error of the true ones matters as far as there are some
+				}
+				if d := math.Abs(math.Exp(log)-got[c]) / math.Max(whole, leastHz); !math.IsNaN(d) && whole > leastHz {
 					worst = math.Max(worst, d)
 				}
 			}
@@ -224,19 +247,30 @@ func (e *evaluator) needed(i int) int {
 	return min(n, v.size)
 }
 
+// dim is the share of a channel's highest rate below which an error counts relative to it: the model's
+// own table keeps a hundredth of what is nearby.
+const dim = 0.05
+
 // check looks for the error between nodes, at places drawn from a fixed seed.
 func (e *evaluator) check() {
 	rng := rand.New(rand.NewPCG(1, uint64(len(e.points))))
-	got := make(row, len(e.channels))
+	var wants, gots []row
+	highest := make(row, e.counts)
 	for range min(checked, MostEvaluations-e.evaluated) {
 		i := rng.IntN(len(e.points))
-		want := e.at(i)
+		want, got := e.at(i), make(row, len(e.channels))
 		e.into(i, got)
-		for k := range e.counts {
-			if want[k] > leastHz {
-				if d := math.Abs(got[k]/want[k] - 1); !math.IsNaN(d) {
-					e.error = math.Max(e.error, d)
-				}
+		wants, gots = append(wants, want), append(gots, got)
+		for k := range highest {
+			if want[k] > highest[k] {
+				highest[k] = want[k]
+			}
+		}
+	}
+	for i := range wants {
+		for k, most := range highest {
+			if d := math.Abs(gots[i][k]-wants[i][k]) / math.Max(wants[i][k], dim*most); !math.IsNaN(d) {
+				e.error = math.Max(e.error, d)
 			}
 		}
 	}
@@ -271,6 +305,7 @@ func (r *rates) into(point int, out row) {
 			out[k] = 0
 		}
 	}
+	r.joined(out)
 }
 
 // lattice sees a list of points as what it was made from: entries nested in one another, the last

@@ -14,7 +14,8 @@ import (
 // Draw draws the spine of the night: angle across, time downward, both arms as mirrored tracks beside
 // the pump, darks as notches in it, waiting as white space, references in one column of their own.
 func (f *Forecast) Draw(w io.Writer) error {
-	const width, top, bottom, left, right = 760., 96., 28., 74., 70.
+	const width, top, bottom, left, right = 760., 96., 44., 74., 70.
+	const wide = 104 // letters of a line
 	whole := f.Duration.Duration()
 	height := top + bottom + math.Min(900, math.Max(360, 3*float64(len(f.track))))
 	y := func(d time.Duration) float64 {
@@ -29,7 +30,7 @@ func (f *Forecast) Draw(w io.Writer) error {
 		line(`<text x="%.1f" y="%.1f" text-anchor="%s" fill="#222" stroke="#fff" stroke-width="4" stroke-linejoin="round" paint-order="stroke">%s</text>`, x, y, anchor, escape(s))
 	}
 	at := 18.0
-	for _, part := range wrapped(f.Sentence, 108) {
+	for _, part := range wrapped(f.Sentence, wide) {
 		text(18, at, "start", part)
 		at += 16
 	}
@@ -54,7 +55,6 @@ func (f *Forecast) Draw(w io.Writer) error {
 	}
 	for _, t := range tracks {
 		line(`<path d="%s" stroke-width="1.1"%s/>`, t.path(f, y), t.dash)
-		text(t.letterX, top-10, "middle", "")
 		line(`<text x="%.1f" y="%.1f" font-family="serif" font-size="17" text-anchor="middle" fill="#222" stroke="none">%s</text>`, t.letterX, top-22, t.letter)
 		for _, v := range []float64{t.low, t.high} {
 			text(t.x(v), top-8, "middle", fmt.Sprintf("%.4g°", v))
@@ -70,7 +70,9 @@ func (f *Forecast) Draw(w io.Writer) error {
 	if w := f.Waiting.Duration(); w > 0 && y(w)-y(0) > 14 {
 		text(spine, (y(0)+y(w))/2+4, "middle", "waits "+span(w))
 	}
-	text(18, height-8, "start", f.key(tracks))
+	for i, part := range wrapped(f.key(tracks), wide) {
+		text(18, height-24+16*float64(i), "start", part)
+	}
 	line(`</svg>`)
 	_, err := io.WriteString(w, b.String())
 	return err
@@ -158,6 +160,9 @@ func (t track) path(f *Forecast, y func(time.Duration) float64) string {
 			continue
 		}
 		if s.kind != protocol.Light {
+			if open { // the arms stand meanwhile
+				fmt.Fprintf(&p, "V%.1f", y(s.ended))
+			}
 			continue
 		}
 		x := t.x(s.at[t.axis].Degrees())
