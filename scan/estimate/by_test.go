@@ -95,7 +95,7 @@ func TestAWrongWindowIsASlopeAgainstThePower(t *testing.T) {
 }
 
 func TestHonestPowersHaveNoSlope(t *testing.T) {
-	times, found, inside, miss := 30, 0, 0, 0.0
+	times, found, inside, miss := 12, 0, 0, 0.0
 	if *long {
 		times = 500
 	}
@@ -157,7 +157,7 @@ func TestBackgroundsCountForTheirOwnPower(t *testing.T) {
 // As an engine writes it: backgrounds say nothing of the setting, which stands where the reading before
 // left it, always at the highest power here.
 func TestBackgroundsOfAnotherPowerAreScaledAboveTheDark(t *testing.T) {
-	times, inside, miss, slopes := 20, 0, 0.0, 0
+	times, inside, miss, slopes := 8, 0, 0.0, 0
 	if *long {
 		times = 300
 	}

@@ -264,7 +264,7 @@ func TestAnotherCutIsTheTiltsZeroByAnotherName(t *testing.T) {
 }
 
 func TestTuningCurvesCoverTheTruth(t *testing.T) {
-	times := 20
+	times := 10
 	if *long {
 		times = 1000
 	}

@@ -57,7 +57,7 @@ func plainDelay() delayWorld {
 }
 
 func TestDelayScansOfSingleTimesGiveTheWindowBack(t *testing.T) {
-	times := 60
+	times := 24
 	if *long {
 		times = 2000
 	}
