@@ -605,3 +605,41 @@ func TestFoldAndLifeAgree(t *testing.T) {
 		}
 	})
 }
+
+type fakeSetting struct {
+	fakeDevice
+	value *float64
+}
+
+func (s fakeSetting) Unit() string { return "mW" }
+func (s fakeSetting) Set(_ context.Context, value float64) (float64, error) {
+	*s.value = value + 0.001
+	return *s.value, s.w.act("set %s %g", s.name, value)
+}
+func (s fakeSetting) Get(context.Context) (float64, error) { return *s.value, nil }
+
+func TestEveryReadingSaysWhereTheSteppedSettingsStand(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		value := 45.0
+		n := newNight(t, func(c *Config) {
+			for i := range c.Plan.Points {
+				c.Plan.Points[i].Settings = []scan.SettingTarget{{Setting: "laser", Value: float64(15 * (i + 1))}}
+			}
+		})
+		n.eng.Bench.Settings = []drivers.Setting{fakeSetting{fakeDevice{n.world, "laser"}, &value}}
+		if state, err := n.eng.Run(t.Context()); state != protocol.Finished || err != nil {
+			t.Fatalf("Run() = %s, %v; want finished", state, err)
+		}
+		var got []string
+		for _, r := range n.readings(t) {
+			if len(r.Settings) != 1 {
+				t.Fatalf("reading %d has settings %+v; want the laser", r.Sequence, r.Settings)
+			}
+			got = append(got, fmt.Sprintf("%s %g/%g", r.Kind, r.Settings[0].Target, r.Settings[0].After))
+		}
+		want := "dark 45/45, light 15/15.001, light 30/30.001, light 45/45.001, light 45/45.001, dark 45/45.001, light 30/30.001, light 15/15.001, dark 15/15.001"
+		if strings.Join(got, ", ") != want {
+			t.Errorf("settings %s; want %s", strings.Join(got, ", "), want)
+		}
+	})
+}

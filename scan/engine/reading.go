@@ -92,7 +92,13 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 		}
 	case darkTask:
 		targets = e.stay(targets) // no light comes: where the arms look makes no difference worth a journey
+		if err := e.noteSettings(ctx, r, point.Settings); err != nil {
+			return nil, err
+		}
 	case backgroundTask:
+		if err := e.noteSettings(ctx, r, point.Settings); err != nil {
+			return nil, err
+		}
 		b := e.Plan.Background
 		targets = append(slices.Clone(targets), scan.AxisTarget{Axis: b.Axis, Angle: b.From + b.By})
 	case referenceTask:
@@ -355,11 +361,31 @@ func (e *Engine) scatter(slices []protocol.Slice) *protocol.Scatter {
 func (e *Engine) set(ctx context.Context, r *protocol.Reading, targets []scan.SettingTarget) error {
 	for _, t := range targets {
 		s := e.setting(t.Setting)
+		delete(e.told, t.Setting)
 		value, err := s.Set(ctx, t.Value)
 		if err != nil {
 			return err
 		}
+		e.told[t.Setting] = t.Value
 		r.Settings = append(r.Settings, protocol.Setting{Name: string(t.Setting), Target: t.Value, Before: value, After: value, Unit: s.Unit()})
+	}
+	return nil
+}
+
+// noteSettings notes where the settings stand that the points step: what is counted beside the points
+// is counted there.
+func (e *Engine) noteSettings(ctx context.Context, r *protocol.Reading, stepped []scan.SettingTarget) error {
+	for _, t := range stepped {
+		s := e.setting(t.Setting)
+		value, err := s.Get(ctx)
+		if err != nil {
+			return err
+		}
+		target, told := e.told[t.Setting]
+		if !told {
+			target = value
+		}
+		r.Settings = append(r.Settings, protocol.Setting{Name: string(t.Setting), Target: target, Before: value, After: value, Unit: s.Unit()})
 	}
 	return nil
 }

@@ -115,6 +115,7 @@ func (e *Engine) getReady(ctx context.Context, all bool) error {
 	e.publishSnapshot()
 	clear(e.commanded) // angles are proved anew
 	clear(e.sent)
+	clear(e.told)
 	clear(e.deaf)
 	if err := e.findZero(ctx, op); err != nil || e.progress.State != protocol.Running || op.Err() != nil {
 		return err
