@@ -606,17 +606,17 @@ func TestFoldAndLifeAgree(t *testing.T) {
 	})
 }
 
-type fakeSetting struct {
+type offSetting struct {
 	fakeDevice
 	value *float64
 }
 
-func (s fakeSetting) Unit() string { return "mW" }
-func (s fakeSetting) Set(_ context.Context, value float64) (float64, error) {
+func (s offSetting) Unit() string { return "mW" }
+func (s offSetting) Set(_ context.Context, value float64) (float64, error) {
 	*s.value = value + 0.001
 	return *s.value, s.w.act("set %s %g", s.name, value)
 }
-func (s fakeSetting) Get(context.Context) (float64, error) { return *s.value, nil }
+func (s offSetting) Get(context.Context) (float64, error) { return *s.value, nil }
 
 func TestEveryReadingSaysWhereTheSteppedSettingsStand(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
@@ -626,7 +626,7 @@ func TestEveryReadingSaysWhereTheSteppedSettingsStand(t *testing.T) {
 				c.Plan.Points[i].Settings = []scan.SettingTarget{{Setting: "laser", Value: float64(15 * (i + 1))}}
 			}
 		})
-		n.eng.Bench.Settings = []drivers.Setting{fakeSetting{fakeDevice{n.world, "laser"}, &value}}
+		n.eng.Bench.Settings = []drivers.Setting{offSetting{fakeDevice{n.world, "laser"}, &value}}
 		if state, err := n.eng.Run(t.Context()); state != protocol.Finished || err != nil {
 			t.Fatalf("Run() = %s, %v; want finished", state, err)
 		}

@@ -416,7 +416,8 @@ func (p *Progress) next(now time.Time) (task, bool) {
 		had := p.series[c.kind]
 		due := c.AtStart && had.taken == 0 && len(p.done) == 0 ||
 			!all && c.EveryPoints > 0 && p.sinceOf(c.kind) >= c.EveryPoints ||
-			!all && c.Every > 0 && !now.Before(p.lastOrStart(c.kind).Add(c.Every)) ||
+			// One visit at least lies between two, or what takes longer than its cadence would be all there is.
+			!all && c.Every > 0 && p.sinceOf(c.kind) > 0 && !now.Before(p.lastOrStart(c.kind).Add(c.Every)) ||
 			!all && c.kind == referenceTask && p.ref.due ||
 			all && c.AtEnd && !had.after
 		if due && c.kind == referenceTask {
