@@ -156,7 +156,8 @@ func (c *course) run(begins time.Time, refine func(int) []scan.Point, see func(*
 		}
 		r = taken{kind: f.Kind, point: f.Visit.Point, visit: f.Visit.Visit, place: f.Place, set: f.Set, at: c.here}
 		if f.Visit.Point >= len(c.plan.Points) {
-			r.more = &f.Point
+			point := f.Point // f itself must not be made anew a million times
+			r.more = &point
 		}
 		c.take(f, &r)
 		look.Taken(f, begins.Add(r.started), begins.Add(r.ended))
