@@ -29,8 +29,8 @@ func (forecastCommand) Help() string {
 	return `What will this recipe do, how long does it take, and what will it be worth? Nothing moves, and no instrument is needed.
 
 Examples:
-  gemel forecast --bench configs/demo-bench.yaml --recipe configs/efficiency-recipe.yaml
-  gemel forecast --bench configs/demo-bench.yaml --recipe configs/efficiency-recipe.yaml --aim "0.5 %"
+  gemel forecast --bench configs/demo-bench.yaml --recipe configs/recipes/efficiency.yaml
+  gemel forecast --bench configs/demo-bench.yaml --recipe configs/recipes/efficiency.yaml --aim "0.5 %"
   gemel forecast --bench configs/demo-bench.yaml --recipe configs/demo-recipe.yaml --plot night.svg
 
 It takes for granted that every reading succeeds at once, that no guard breaks and that the bench is as its file says. Warnings do not change the exit code.`
