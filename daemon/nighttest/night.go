@@ -159,6 +159,7 @@ type Sabotage struct {
 	Sink   func(courier.Sink) courier.Sink
 	Panics engine.Step // the engine panics once at this step
 	AtPart int         // at its Nth passing
+	Line   func([]Moment) []Moment
 }
 
 // Book is the logbook as keeper and courier see it together.
@@ -782,6 +783,9 @@ func (k *kit) result() (*Result, error) {
 	r.Facts.Noticed = k.counts.Retried + k.counts.Missing + k.counts.Strangers + k.counts.Strays + k.counts.Chatter + k.counts.Resynchronised + k.counts.Lost + k.counts.Restarts
 	r.Facts.CaughtUp = k.stuck == ""
 	r.Line = Merge(World(k.ledger.Records()), k.journal, k.sink.moments, k.process)
+	if k.Wrap.Line != nil {
+		r.Line = k.Wrap.Line(r.Line)
+	}
 	book, err := logbook.OpenReadOnly(k.data + "/logbook.db")
 	if err != nil {
 		return nil, err
