@@ -17,6 +17,7 @@ import (
 	"regexp"
 	"strings"
 	"sync"
+	"sync/atomic"
 	"syscall"
 	"testing"
 	"time"
@@ -343,11 +344,14 @@ func serve(t *testing.T, env []string, args ...string) (*program, bool) {
 	return p, p.says(p.err, `"message":"serving"`)
 }
 
+var ports atomic.Int64 // tried so far
+
 // port finds a free one outside of the range that the system hands out, so that it is still free
 // when a daemon is started again.
 func port(t *testing.T) string {
 	t.Helper()
-	for i := range 2000 {
+	for range 2000 {
+		i := int(ports.Add(1))
 		address := fmt.Sprintf("127.0.0.1:%d", 20000+(os.Getpid()*7+i*13)%12000)
 		if l, err := net.Listen("tcp", address); err == nil {
 			_ = l.Close()
