@@ -2,12 +2,14 @@ package instruments
 
 import (
 	"fmt"
+	"math"
 	"slices"
 	"strconv"
 	"strings"
 	"time"
 
 	"gemel/sim/source"
+	"gemel/sim/trouble"
 )
 
 // What a channel of a Counter counts.
@@ -86,6 +88,8 @@ type running struct {
 	draw uint64
 	setS float64
 	end  *happening
+
+	wrong float64 // by what share it is longer than it was set
 }
 
 // The counter's numeric settings.
@@ -133,7 +137,7 @@ func NewCounter(w *World, cfg CounterConfig) (*Counter, error) {
 	if err := w.join(&c.actor); err != nil {
 		return nil, err
 	}
-	c.session = session{identity: cfg.Identity, in: lines{limit: scpiMessageLimit}, rst: c.reset,
+	c.session = session{identity: func() Identity { return c.identify(cfg.Identity) }, in: lines{limit: scpiMessageLimit}, rst: c.reset,
 		pending: func(time.Time) bool { return c.running != nil }, answer: c.say}
 	c.tree = compile(append(c.base(), c.commands()...))
 	c.powerOn()
@@ -319,8 +323,11 @@ func (c *Counter) initiate(now time.Time) {
 	c.opened++
 	c.drawn++
 	c.latched = nil
-	lasts := time.Duration(c.gateS * (1 + c.cfg.GateError) * 1e9)
-	r := &running{gate: gate{from: now}, tag: c.opened, draw: c.drawn, setS: c.gateS}
+	r := &running{gate: gate{from: now}, tag: c.opened, draw: c.drawn, setS: c.gateS, wrong: c.cfg.GateError}
+	if s := c.spoilOnce(trouble.WrongGate, now); s != nil {
+		r.wrong += s.trouble.Share
+	}
+	lasts := max(1, time.Duration(c.gateS*(1+r.wrong)*1e9))
 	c.running = r
 	w.open[&r.gate] = true
 	c.questionable.turn(1<<c.cfg.OverflowBit|1<<c.cfg.TimeBit, false)
@@ -336,10 +343,17 @@ func (c *Counter) close(at time.Time, r *running) {
 	truth.Tag, truth.SetS = r.tag, r.setS
 	counts := w.cfg.Model.Draw(w.rng(c.cfg.Name, r.draw), segments)
 	limit := uint64(1) << c.cfg.Bits
+	burst := -1
+	if c.spoilOnce(trouble.Overflow, at) != nil {
+		burst = slices.IndexFunc(c.cfg.Channels, func(what string) bool { return what != CountsGates && what != CountsNone })
+	}
 	for i, what := range c.cfg.Channels {
 		n := channelCounts(what, counts, r.tag)
 		if c.off[i] {
 			n = 0
+		}
+		if i == burst { // something made it run over, and what is left says nothing
+			n += limit - min(n, limit) + w.rng(c.cfg.Name+" burst", r.draw).Uint64N(limit)
 		}
 		if n >= limit {
 			n %= limit
@@ -347,7 +361,7 @@ func (c *Counter) close(at time.Time, r *running) {
 		}
 		truth.Counts = append(truth.Counts, n)
 	}
-	truth.Doubtful = c.cfg.DoubtAbove > 0 && (c.cfg.GateError > c.cfg.DoubtAbove || -c.cfg.GateError > c.cfg.DoubtAbove)
+	truth.Doubtful = c.cfg.DoubtAbove > 0 && math.Abs(r.wrong) > c.cfg.DoubtAbove
 	c.latched = &truth
 	c.running = nil
 	delete(w.open, &r.gate)

@@ -37,7 +37,7 @@ func FuzzSCPI(f *testing.F) {
 	}
 	f.Fuzz(func(t *testing.T, message string) {
 		answers := 0
-		s := session{in: lines{limit: scpiMessageLimit}, rst: func(time.Time) {}, pending: func(time.Time) bool { return false },
+		s := session{identity: func() Identity { return Identity{} }, in: lines{limit: scpiMessageLimit}, rst: func(time.Time) {}, pending: func(time.Time) bool { return false },
 			answer: func(_ time.Time, line string) {
 				answers++
 				if len(line) > 64*len(message)+64 {

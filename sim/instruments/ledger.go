@@ -25,6 +25,8 @@ const (
 	MoveStopped Kind = "move_stopped" // the same, when a stopped axis has come to rest
 	HomeStarted Kind = "home_started" // Axes: from_deg
 	HomeFound   Kind = "home_found"   // Axes: true from_deg and to_deg; the axis knows its zero now
+	MarkStarted Kind = "mark_started" // Axes: from_deg; a search that keeps the zero
+	MarkFound   Kind = "mark_found"   // Axes: true from_deg and to_deg; the axis stands at its reference mark
 	Underway    Kind = "underway"     // between the two, at a few instants: Stand
 	Stopped     Kind = "stop_byte"    // a stop byte arrived, whether or not something moved
 	Refused     Kind = "refused"      // a line was refused; Text: the line and the reason
@@ -42,6 +44,10 @@ const (
 	LampOff   Kind = "lamp_off"
 	Slipped   Kind = "slipped" // Axes: true from_deg and to_deg
 	Drifting  Kind = "drifting"
+	Hopped    Kind = "mode_hopped"  // Value: nm
+	Stalled   Kind = "stalled"      // Axes: from_deg where it stands, to_deg where it should have gone
+	Befell    Kind = "befell"       // Text: a trouble that no other record tells of, when it first met something
+	Passed    Kind = "passed"       // Text: the kind of a trouble that befell and is over
 	Troubled  Kind = "wire_trouble" // Text: the trouble as trouble.Parse reads it; Line: the answer it hit
 )
 

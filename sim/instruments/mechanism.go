@@ -39,7 +39,9 @@ type axis struct {
 	lost  float64 // what the reading is wrong by since the zero was lost, controller degrees
 	slip  float64 // motor minus counted position, bench degrees; an encoder does not care
 
-	toLose float64 // steps to be lost in the next move
+	toLose  float64          // steps to be lost in the next move
+	toStall *trouble.Trouble // in the next move
+	seeking bool             // it searches its reference
 }
 
 func (w *World) newAxis(cfg AxisConfig) (*axis, error) {
@@ -126,14 +128,32 @@ func (x *axis) loseZero(at time.Time) {
 
 // upset lets the axis slip, now or in its next move.
 func (x *axis) upset(at time.Time, t trouble.Trouble) {
-	if turning, _ := x.path.moving(at); t.Kind == trouble.LostSteps && !turning {
+	turning, _ := x.path.moving(at)
+	switch {
+	case t.Kind == trouble.LostSteps && !turning:
 		x.toLose += t.ByDeg
+		return
+	case t.Kind == trouble.Stall && (!turning || x.seeking):
+		x.toStall = &t
+		return
+	case t.Kind == trouble.Stall:
+		x.stall(at, t)
 		return
 	}
 	from := x.path.axis(at)
 	x.path.shift(at, t.ByDeg)
 	x.slip += t.ByDeg
 	x.w.record(Record{At: at, Kind: Slipped, Text: t.String(), Axes: map[string]Span{x.cfg.Axis: {from, x.path.axis(at)}}, Stand: x.w.stand(at)})
+}
+
+// stall stops the axis where it is, while its controller goes on counting until the motion should end.
+func (x *axis) stall(at time.Time, t trouble.Trouble) {
+	end, goal := x.path.end()
+	planned := x.path.axis(end)
+	stands := x.path.halt(at)
+	x.path.add(phase{at: end, x: stands})
+	x.slip += stands - goal
+	x.w.record(Record{At: at, Kind: Stalled, Text: t.String(), Axes: map[string]Span{x.cfg.Axis: {x.path.axis(at), planned}}, Stand: x.w.stand(at)})
 }
 
 // mechanism is the moving part of a controller: axes, the moves that are planned, the searches.
@@ -144,6 +164,9 @@ type mechanism struct {
 	together bool
 
 	jobs []*job // under way and planned, in order
+
+	owner     *actor
+	toRestart *trouble.Trouble // in the next move
 }
 
 type job struct {
@@ -260,15 +283,37 @@ func (m *mechanism) move(now time.Time, targets []target, feedDegMin float64) (r
 		if end.After(last) {
 			last = end
 		}
+		middle := begin.Add(end.Sub(begin) / 2)
 		if t.axis.toLose != 0 {
-			t.axis.loseSteps(begin.Add(end.Sub(begin) / 2))
+			t.axis.loseSteps(middle)
+		}
+		if stall := t.axis.toStall; stall != nil {
+			t.axis.toStall = nil
+			t.axis.w.at(middle, nil, func(at time.Time) { t.axis.upset(at, *stall) })
 		}
 		j.axes = append(j.axes, t.axis)
 	}
 	if len(j.axes) > 0 {
 		m.enter(j, MoveStarted, MoveEnded, first, last, nil)
+		m.restartIn(first.Add(last.Sub(first) / 2))
 	}
 	return ""
+}
+
+// restartIn lets the controller that waits for a motion to restart in do so, if it still moves by then.
+func (m *mechanism) restartIn(middle time.Time) {
+	t := m.toRestart
+	if t == nil {
+		return
+	}
+	m.toRestart = nil
+	m.w.at(m.owner.own(middle), m.owner, func(at time.Time) {
+		if !m.turning(at) {
+			m.toRestart = t
+			return
+		}
+		m.owner.midway(at, *t)
+	})
 }
 
 // loseSteps lets the axis lose steps in the middle of the move just planned.
@@ -343,6 +388,26 @@ func (m *mechanism) home(now time.Time, x *axis) (refusal string) {
 	}
 	x.homed = false
 	x.toLose = 0
+	m.search(now, x, HomeStarted, HomeFound, func(time.Time) { x.homed, x.lost, x.slip = true, 0, 0 })
+	return ""
+}
+
+// mark begins the search for an axis's reference mark as home does, and keeps the zero as it is.
+func (m *mechanism) mark(now time.Time, x *axis) (refusal string) {
+	switch {
+	case m.searching() == x:
+		return "" // asked again: it is at it
+	case m.turning(now):
+		return "still turning"
+	case !x.homed:
+		return fmt.Sprintf("%s has no reference", x.cfg.Letter)
+	}
+	m.search(now, x, MarkStarted, MarkFound, nil)
+	return ""
+}
+
+func (m *mechanism) search(now time.Time, x *axis, began, found Kind, done func(time.Time)) {
+	x.seeking = true
 	flank := 1.0
 	if x.cfg.FallingFlank {
 		flank = -1
@@ -359,10 +424,12 @@ func (m *mechanism) home(now time.Time, x *axis) (refusal string) {
 	d := math.Abs(home - motor)
 	at = x.path.follow(at, home, newProfile(x.cfg.SpeedDegS/2/d, x.cfg.AccelDegS2/d))
 	j := &job{home: x, axes: []*axis{x}, from: map[string]Span{}}
-	m.enter(j, HomeStarted, HomeFound, now, at, func(time.Time) {
-		x.homed, x.lost, x.slip = true, 0, 0
+	m.enter(j, began, found, now, at, func(at time.Time) {
+		x.seeking = false
+		if done != nil {
+			done(at)
+		}
 	}, turn)
-	return ""
 }
 
 // stop slows everything down and forgets what was planned.
@@ -388,6 +455,9 @@ func (m *mechanism) stop(now time.Time) {
 // interrupt ends all jobs, at the time when everything has come to rest.
 func (m *mechanism) interrupt(rest time.Time, within time.Duration) {
 	for _, j := range m.jobs {
+		if j.home != nil {
+			j.home.seeking = false
+		}
 		j.begin.callOff()
 		j.end.callOff()
 		for _, look := range j.looks {
@@ -417,7 +487,7 @@ func (m *mechanism) lose(now time.Time) {
 	}
 	m.interrupt(now, 0)
 	for _, x := range m.axes {
-		x.toLose = 0
+		x.toLose, x.toStall = 0, nil
 		if !x.cfg.KeepsZero {
 			x.loseZero(now)
 		}

@@ -5,6 +5,8 @@ import (
 	"math"
 	"strings"
 	"time"
+
+	"gemel/sim/trouble"
 )
 
 // MonitorConfig describes a Monitor.
@@ -39,6 +41,7 @@ type Monitor struct {
 	celUnit   string
 	drawn     uint64
 	measured  bool
+	ever      bool    // since the world began
 	watt, cel float64 // as measured last
 }
 
@@ -56,7 +59,7 @@ func NewMonitor(w *World, cfg MonitorConfig) (*Monitor, error) {
 	if err := w.join(&m.actor); err != nil {
 		return nil, err
 	}
-	m.session = session{identity: cfg.Identity, in: lines{limit: scpiMessageLimit}, answer: m.say,
+	m.session = session{identity: func() Identity { return m.identify(cfg.Identity) }, in: lines{limit: scpiMessageLimit}, answer: m.say,
 		rst: m.defaults, pending: func(time.Time) bool { return false }}
 	commands := []scpiCommand{{pattern: "INITiate[:IMMediate][:ALL]", set: func(c scpiCall) *scpiError {
 		err := c.none()
@@ -122,15 +125,30 @@ func (m *Monitor) unit(pattern string, unit *string, words ...string) scpiComman
 
 // measure takes everything at one instant. Its noise follows from how many measurements there were.
 func (m *Monitor) measure(now time.Time) {
+	if s := m.spoils(trouble.StuckValue); s != nil && m.ever {
+		m.measured = true
+		m.meet(s, now, "")
+		m.tell(now)
+		return
+	}
 	m.drawn++
 	noise := m.actor.w.rng(m.cfg.Name, m.drawn)
-	m.measured = true
+	m.measured, m.ever = true, true
 	if m.cfg.Power {
 		m.watt = m.actor.w.pumpW(now) * (1 + m.cfg.PowerNoise*noise.NormFloat64())
-		m.actor.w.record(Record{At: now, Device: m.cfg.Name, Kind: SensorRead, Text: "W", Value: m.watt})
 	}
 	if m.cfg.Temperature {
 		m.cel = m.actor.w.crystalCel(now) + m.cfg.CelNoise*noise.NormFloat64()
+	}
+	m.tell(now)
+}
+
+// tell writes down what was measured.
+func (m *Monitor) tell(now time.Time) {
+	if m.cfg.Power {
+		m.actor.w.record(Record{At: now, Device: m.cfg.Name, Kind: SensorRead, Text: "W", Value: m.watt})
+	}
+	if m.cfg.Temperature {
 		m.actor.w.record(Record{At: now, Device: m.cfg.Name, Kind: SensorRead, Text: "Cel", Value: m.cel})
 	}
 }

@@ -26,6 +26,8 @@ type PlainConfig struct {
 //	M1 1234500   -> OK              accepted; the axis goes there
 //	S1           -> IDLE, or RAMP while it speeds up or slows down, or BUSY
 //	H1           -> OK              searches the reference
+//	R1           -> OK              searches the reference and keeps the zero: when IDLE, P1 tells
+//	                                what it reads there
 //	Z1           -> 1 or 0          whether the axis knows its zero
 //	X            -> OK              stops all axes; the byte 0x18 does the same at once, even in
 //	                                the middle of a line, which it clears, and has no answer
@@ -73,7 +75,8 @@ func NewPlain(w *World, cfg PlainConfig) (*Plain, error) {
 	if err := w.join(&p.actor); err != nil {
 		return nil, err
 	}
-	p.mechanism = mechanism{name: cfg.Name, w: w}
+	p.mechanism = mechanism{name: cfg.Name, w: w, owner: &p.actor}
+	p.moves = &p.mechanism
 	for _, a := range cfg.Axes {
 		x, err := w.newAxis(a)
 		if err != nil {
@@ -113,12 +116,12 @@ func (p *Plain) halt(now time.Time) {
 func (p *Plain) do(now time.Time, line string) string {
 	switch line {
 	case "I":
-		return "I" + p.cfg.Identity.String()
+		return "I" + p.identify(p.cfg.Identity).String()
 	case "X":
 		p.halt(now)
 		return "OK"
 	}
-	if !strings.ContainsRune("PMSHZ", rune(line[0])) {
+	if !strings.ContainsRune("PMSHZR", rune(line[0])) {
 		return plainUnknown
 	}
 	address, rest, more := strings.Cut(line[1:], " ")
@@ -142,6 +145,14 @@ func (p *Plain) do(now time.Time, line string) string {
 		return "IDLE"
 	case 'H':
 		if p.home(now, x) != "" {
+			return plainNotNow
+		}
+		return "OK"
+	case 'R':
+		switch {
+		case !x.homed:
+			return plainZero
+		case p.mark(now, x) != "":
 			return plainNotNow
 		}
 		return "OK"

@@ -27,6 +27,8 @@ type RotaryConfig struct {
 //	WHERE             -> AT A+012.3400 B-003.0000 C+000.0000 (controller degrees, each axis)
 //	REST              -> STILL, or TURNING while anything moves or waits to move
 //	REF A             -> TAKEN; the axis searches its reference; REST and REFD tell when it is done
+//	MARK A            -> TAKEN; the same search, but the zero stays as it is: at rest, the axis stands at
+//	                     its reference mark, and WHERE tells what it reads there
 //	REFD              -> REFD A1 B1 C0 (1: the axis knows its zero)
 //	WHO               -> WHO <maker>,<model>,<serial>,<firmware>
 //	byte 0x03         stops everything at once, also in the middle of a line, which it clears;
@@ -68,7 +70,8 @@ func NewRotary(w *World, cfg RotaryConfig) (*Rotary, error) {
 	if err := w.join(&r.actor); err != nil {
 		return nil, err
 	}
-	r.mechanism = mechanism{name: cfg.Name, w: w, together: cfg.Together}
+	r.mechanism = mechanism{name: cfg.Name, w: w, together: cfg.Together, owner: &r.actor}
+	r.moves = &r.mechanism
 	for _, a := range cfg.Axes {
 		x, err := w.newAxis(a)
 		if err != nil {
@@ -107,7 +110,7 @@ func (r *Rotary) heard(now time.Time, b byte) {
 	switch rest = strings.TrimSpace(rest); {
 	case word == "":
 	case word == "WHO" && rest == "":
-		r.say(now, "WHO "+r.cfg.Identity.String())
+		r.say(now, "WHO "+r.identify(r.cfg.Identity).String())
 	case word == "WHERE" && rest == "":
 		var at strings.Builder
 		at.WriteString("AT")
@@ -128,13 +131,17 @@ func (r *Rotary) heard(now time.Time, b byte) {
 			refd.WriteString(" " + x.cfg.Letter + bit(x.homed))
 		}
 		r.say(now, refd.String())
-	case word == "REF":
+	case word == "REF" || word == "MARK":
 		x := r.named(rest)
 		if x == nil {
 			r.refuse(now, line, fmt.Sprintf("no axis %q", rest))
 			return
 		}
-		r.answer(now, line, r.home(now, x))
+		search := r.home
+		if word == "MARK" {
+			search = r.mark
+		}
+		r.answer(now, line, search(now, x))
 	default:
 		b, err := parseBlock(line, r.letters)
 		if err != nil {

@@ -15,7 +15,7 @@ import (
 // message, as the parser no longer knows where it is. *OPC? and *WAI make everything behind them
 // wait for a pending operation, and nothing on a serial line can overtake that.
 type session struct {
-	identity Identity
+	identity func() Identity
 	tree     []scpiCommand
 	rst      func(now time.Time)      // *RST of the device functions
 	pending  func(now time.Time) bool // an operation is under way
@@ -288,7 +288,7 @@ func (s *session) common(now time.Time, h header, args []argument) *scpiError {
 	}
 	switch name {
 	case "IDN?":
-		return put("%s", s.identity)
+		return put("%s", s.identity())
 	case "CLS":
 		s.errors, s.esr, s.opc = nil, 0, false
 		s.operation.event, s.questionable.event = 0, 0

@@ -37,9 +37,30 @@ type actor struct {
 	deafUntil time.Time
 	unplugged bool
 	restarts  int
+	another   bool       // the instrument behind the plug is not the one that was there
+	moves     *mechanism // what it moves; nil: nothing
+
+	pulled int      // troubles that have the plug pulled
+	deaf   []*spell // it neither hears nor answers
+	hung   []*spell // what is written to it hangs
+	spoilt []*spell // what waits for, or lasts over, gates, measurements and motions of blades
 
 	conn  Conn
 	dirty bool
+}
+
+// stalling is a connection whose host's writes can be made to hang.
+type stalling interface {
+	Stall(on bool)
+	Waited() (since time.Time, ok bool)
+}
+
+// identify is who it says it is: whoever stands behind the plug.
+func (a *actor) identify(i Identity) Identity {
+	if a.another {
+		return Identity{Maker: "another", Model: "other", Serial: "other", Firmware: "0"}
+	}
+	return i
 }
 
 // saying is a line on its way to the host.
@@ -80,15 +101,22 @@ func (a *actor) say(now time.Time, line string) {
 	for _, t := range troubles {
 		a.w.record(Record{At: now, Device: a.name, Kind: Troubled, Text: t.String(), Line: line})
 	}
+	open := false
 	for _, h := range heard {
-		a.queue(now.Add(a.latency), h.Delay, h.Line)
+		end := a.end
+		if h.Open {
+			end = ""
+		}
+		a.queue(now.Add(a.latency), h.Delay, h.Line+end, open)
+		open = h.Open
 	}
 }
 
 // murmur queues a line that answers nothing.
-func (a *actor) murmur(at time.Time, line string) { a.queue(at, 0, line) }
+func (a *actor) murmur(at time.Time, line string) { a.queue(at, 0, line+a.end, false) }
 
-func (a *actor) queue(at time.Time, delay time.Duration, line string) {
+// queue puts a text on its way. Nothing overtakes the rest of an answer.
+func (a *actor) queue(at time.Time, delay time.Duration, text string, rest bool) {
 	due := a.w.real(at)
 	if !due.After(a.last) {
 		due = a.last.Add(1)
@@ -98,6 +126,9 @@ func (a *actor) queue(at time.Time, delay time.Duration, line string) {
 		a.last = due
 	} else {
 		due = a.instant(due.Add(delay / a.w.pace))
+		if rest {
+			a.last = due
+		}
 	}
 	i, _ := slices.BinarySearchFunc(a.out, due, func(s saying, t time.Time) int {
 		if s.due.After(t) {
@@ -105,7 +136,7 @@ func (a *actor) queue(at time.Time, delay time.Duration, line string) {
 		}
 		return -1
 	})
-	a.out = slices.Insert(a.out, i, saying{due, line + a.end})
+	a.out = slices.Insert(a.out, i, saying{due, text})
 }
 
 // expect schedules a trouble of this device.
@@ -121,15 +152,125 @@ func (a *actor) expect(t trouble.Trouble) {
 			a.w.record(Record{At: at, Device: a.name, Kind: Restarted, Text: t.String()})
 			a.powerCycle(at)
 		})
-	case trouble.Unplug:
+	case trouble.RestartMoving:
 		a.w.at(at, a, func(at time.Time) {
+			switch {
+			case a.moves == nil:
+			case a.moves.turning(at):
+				a.midway(at, t)
+			default:
+				a.moves.toRestart = &t
+			}
+		})
+	case trouble.Unplug, trouble.Gone, trouble.Stranger:
+		a.w.at(at, a, func(at time.Time) {
+			a.pulled++
 			a.unplugged = true
 			a.w.record(Record{At: at, Device: a.name, Kind: Unplugged, Text: t.String()})
 		})
+		if t.Kind == trouble.Gone {
+			break
+		}
 		a.w.at(a.own(at.Add(t.For)), nil, func(at time.Time) {
+			if a.pulled--; a.pulled > 0 {
+				return
+			}
 			a.unplugged = false
 			a.w.record(Record{At: at, Device: a.name, Kind: Plugged, Text: t.String()})
 		})
+		if t.Kind == trouble.Stranger {
+			a.w.at(a.own(at.Add(t.For)), nil, func(time.Time) { a.another = true })
+		}
+	case trouble.Silent, trouble.DeadLine:
+		a.w.at(at, nil, func(time.Time) { a.deaf = append(a.deaf, &spell{trouble: t}) })
+		if t.Kind == trouble.Silent {
+			a.w.at(at.Add(t.For), nil, func(at time.Time) { a.over(&a.deaf, at, t) })
+		}
+	case trouble.Hung:
+		a.w.at(at, a, func(at time.Time) {
+			a.hung = append(a.hung, &spell{trouble: t})
+			a.stall(true)
+		})
+		a.w.at(a.own(at.Add(t.For)), a, func(at time.Time) {
+			a.waited()
+			a.over(&a.hung, at, t)
+			a.stall(len(a.hung) > 0)
+		})
+	case trouble.WrongGate, trouble.Overflow, trouble.StuckValue, trouble.StuckShutter:
+		a.w.at(at, nil, func(time.Time) { a.spoilt = append(a.spoilt, &spell{trouble: t}) })
+		if t.For > 0 {
+			a.w.at(at.Add(t.For), nil, func(at time.Time) { a.over(&a.spoilt, at, t) })
+		}
+	}
+}
+
+// spell is a trouble from its time to its end. It takes effect when it first meets something.
+type spell struct {
+	trouble trouble.Trouble
+	met     bool
+}
+
+// meet writes down, once, that the trouble took effect.
+func (a *actor) meet(s *spell, at time.Time, line string) {
+	if s == nil || s.met {
+		return
+	}
+	s.met = true
+	a.w.record(Record{At: at, Device: a.name, Kind: Befell, Text: s.trouble.String(), Line: line})
+}
+
+// over ends a trouble, and says so if it ever took effect.
+func (a *actor) over(among *[]*spell, at time.Time, t trouble.Trouble) {
+	i := slices.IndexFunc(*among, func(s *spell) bool { return s.trouble == t })
+	if i < 0 {
+		return
+	}
+	if (*among)[i].met {
+		a.w.record(Record{At: at, Device: a.name, Kind: Passed, Text: string(t.Kind)})
+	}
+	*among = slices.Delete(*among, i, i+1)
+}
+
+// spoils is the first trouble of a kind that waits or lasts.
+func (a *actor) spoils(k trouble.Kind) *spell {
+	if i := slices.IndexFunc(a.spoilt, func(s *spell) bool { return s.trouble.Kind == k }); i >= 0 {
+		return a.spoilt[i]
+	}
+	return nil
+}
+
+// spoilOnce takes a trouble that happens to one thing and is over.
+func (a *actor) spoilOnce(k trouble.Kind, at time.Time) *spell {
+	s := a.spoils(k)
+	if s != nil {
+		a.meet(s, at, "")
+		a.spoilt = slices.DeleteFunc(a.spoilt, func(other *spell) bool { return other == s })
+	}
+	return s
+}
+
+// midway restarts a controller in the middle of a motion.
+func (a *actor) midway(at time.Time, t trouble.Trouble) {
+	a.w.record(Record{At: at, Device: a.name, Kind: Restarted, Text: t.String()})
+	a.powerCycle(at)
+}
+
+// stall lets the host's writes hang, or go on. What hung is heard then.
+func (a *actor) stall(on bool) {
+	if c, ok := a.conn.(stalling); ok {
+		c.Stall(on)
+	}
+}
+
+// waited looks whether something that was written hung meanwhile.
+func (a *actor) waited() {
+	if len(a.hung) == 0 {
+		return
+	}
+	if c, ok := a.conn.(stalling); ok {
+		if since, waited := c.Waited(); waited {
+			a.meet(a.hung[0], a.w.bench(since), "")
+		}
 	}
 }
 
@@ -156,11 +297,15 @@ func (a *actor) poke() {
 func (a *actor) Serve(ctx context.Context, conn Conn) error {
 	a.w.mu.Lock()
 	a.conn = conn
+	if len(a.hung) > 0 {
+		a.stall(true)
+	}
 	now := time.Now()
 	a.out = slices.DeleteFunc(a.out, func(s saying) bool { return s.due.Before(now) }) // said to nobody
 	a.w.mu.Unlock()
 	defer func() {
 		a.w.mu.Lock()
+		a.waited()
 		a.conn = nil
 		a.w.mu.Unlock()
 	}()
@@ -245,8 +390,18 @@ func (a *actor) take(b []byte) {
 	defer a.w.mu.Unlock()
 	now := a.w.Now()
 	a.w.settle(now)
-	if a.unplugged || now.Before(a.deafUntil) {
+	switch {
+	case a.unplugged || now.Before(a.deafUntil):
 		return
+	case len(a.deaf) > 0:
+		a.meet(a.deaf[0], now, string(b))
+		return
+	case len(a.hung) > 0:
+		// A line of the system's takes what is written to it, up to its buffer: nobody hears it.
+		if _, ok := a.conn.(stalling); !ok {
+			a.meet(a.hung[0], now, string(b))
+			return
+		}
 	}
 	for _, c := range b {
 		a.hear(now, c)

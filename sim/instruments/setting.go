@@ -90,7 +90,7 @@ func NewSetting(w *World, cfg SettingConfig) (*Setting, error) {
 	if cfg.Changes != "" {
 		w.sets[cfg.Changes] = s
 	}
-	s.session = session{identity: cfg.Identity, in: lines{limit: scpiMessageLimit}, answer: s.say,
+	s.session = session{identity: func() Identity { return s.identify(cfg.Identity) }, in: lines{limit: scpiMessageLimit}, answer: s.say,
 		rst: func(now time.Time) { s.turn(now, cfg.Start) }, pending: func(now time.Time) bool { return s.there != nil }}
 	q := quantity{low: cfg.Low, high: cfg.High, reset: cfg.Start, units: cfg.Units}
 	s.tree = compile(append(s.base(),

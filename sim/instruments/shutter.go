@@ -3,6 +3,8 @@ package instruments
 import (
 	"fmt"
 	"time"
+
+	"gemel/sim/trouble"
 )
 
 // What the blade of a Shutter stands in front of.
@@ -34,9 +36,10 @@ type ShutterConfig struct {
 type Shutter struct {
 	actor
 	session
-	cfg  ShutterConfig
-	on   bool
-	move *happening
+	cfg   ShutterConfig
+	on    bool // as it was commanded
+	stuck bool // a command moved nothing; the next one may
+	move  *happening
 }
 
 // NewShutter puts a Shutter into the world.
@@ -61,7 +64,7 @@ func NewShutter(w *World, cfg ShutterConfig) (*Shutter, error) {
 		share = 1
 	}
 	w.blades[cfg.Blade] = newRamp(w.Now(), share)
-	s.session = session{identity: cfg.Identity, in: lines{limit: scpiMessageLimit}, answer: s.say,
+	s.session = session{identity: func() Identity { return s.identify(cfg.Identity) }, in: lines{limit: scpiMessageLimit}, answer: s.say,
 		rst: func(now time.Time) { s.turn(now, false) }, pending: func(time.Time) bool { return false }}
 	commands := []scpiCommand{{pattern: "OUTPut[:STATe]",
 		set: func(c scpiCall) *scpiError {
@@ -85,10 +88,16 @@ func NewShutter(w *World, cfg ShutterConfig) (*Shutter, error) {
 
 // turn sends the blade on its way, from wherever it is.
 func (s *Shutter) turn(now time.Time, on bool) {
-	if s.on == on {
+	if s.on == on && !s.stuck {
 		return
 	}
 	s.on = on
+	if spell := s.spoils(trouble.StuckShutter); spell != nil {
+		s.meet(spell, now, "")
+		s.stuck = true
+		return
+	}
+	s.stuck = false
 	w := s.actor.w
 	to, kind, text := 0.0, BladeClosed, "closed"
 	if on {

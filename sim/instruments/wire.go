@@ -39,8 +39,9 @@ type lane struct {
 	limit   int
 	dropped uint64
 	stalled bool
-	hungUp  bool // the writer is gone: read what is left, then io.EOF
-	dead    bool // the reader is gone
+	waited  time.Time // since when a writer has waited on the stalled line; zero: none did
+	hungUp  bool      // the writer is gone: read what is left, then io.EOF
+	dead    bool      // the reader is gone
 	closed  [2]bool
 	until   [2]time.Time
 	alarm   [2]*time.Timer
@@ -136,6 +137,9 @@ func (e *End) Write(b []byte) (int, error) {
 			l.changed.Broadcast()
 			return len(b), nil
 		}
+		if l.waited.IsZero() {
+			l.waited = time.Now()
+		}
 		l.changed.Wait()
 	}
 }
@@ -177,8 +181,18 @@ func (e *End) SetDeadline(t time.Time) error {
 func (e *End) Stall(on bool) {
 	e.in.mu.Lock()
 	e.in.stalled = on
+	if on {
+		e.in.waited = time.Time{}
+	}
 	e.in.changed.Broadcast()
 	e.in.mu.Unlock()
+}
+
+// Waited says since when a write to this end has waited, or waited, because of the last Stall(true).
+func (e *End) Waited() (since time.Time, ok bool) {
+	e.in.mu.Lock()
+	defer e.in.mu.Unlock()
+	return e.in.waited, !e.in.waited.IsZero()
 }
 
 // Dropped is how many bytes sent to this end were lost because its buffer was full.

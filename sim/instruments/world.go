@@ -70,6 +70,9 @@ type World struct {
 	blades  map[string]*ramp // by what they stand in front of
 	lampHz  *ramp
 	pump    *ramp               // share of the still power
+	warmer  *ramp               // Cel
+	longer  *ramp               // nm
+	latched map[string][]*latch // by arm
 	sets    map[string]*Setting // by what they change
 	open    map[*gate]bool
 	moments []time.Time // scratch
@@ -100,7 +103,7 @@ func NewWorld(cfg WorldConfig) (*World, error) {
 	now := time.Now().UTC()
 	w := &World{cfg: cfg, origin: now, pace: time.Duration(cfg.Pace), ledger: cfg.Ledger,
 		arms: map[string]*axis{}, blades: map[string]*ramp{}, sets: map[string]*Setting{}, open: map[*gate]bool{},
-		lampHz: newRamp(now, 0), pump: newRamp(now, 1)}
+		lampHz: newRamp(now, 0), pump: newRamp(now, 1), warmer: newRamp(now, 0), longer: newRamp(now, 0), latched: map[string][]*latch{}}
 	w.mu.Lock()
 	defer w.mu.Unlock()
 	for _, t := range cfg.Troubles {
@@ -123,6 +126,9 @@ func (w *World) Settle() {
 	w.mu.Lock()
 	defer w.mu.Unlock()
 	w.settle(w.Now())
+	for _, a := range w.actors {
+		a.waited()
+	}
 }
 
 // Let makes a world trouble happen: at its time, or at once if that has passed. Wire troubles
@@ -156,8 +162,11 @@ func (w *World) Strangers() trouble.List {
 	var l trouble.List
 	for _, t := range w.cfg.Troubles {
 		among := names
-		if t.Kind == trouble.Slip || t.Kind == trouble.LostSteps {
+		switch {
+		case t.Kind.OfAxis():
 			among = axes
+		case t.Kind == trouble.Latched:
+			among = map[string]bool{SignalBlade: true, IdlerBlade: true}
 		}
 		if !among[t.Device] {
 			l = append(l, t)
@@ -257,7 +266,19 @@ func (w *World) happen(t trouble.Trouble) {
 			w.pump.turn(at, max(0, w.pump.value(at)*(1+t.Share)), t.For)
 			w.record(Record{At: at, Kind: Drifting, Text: t.String(), Value: t.Share})
 		})
-	case trouble.Slip, trouble.LostSteps:
+	case trouble.TemperatureDrift:
+		w.at(at, nil, func(at time.Time) {
+			w.warmer.turn(at, w.warmer.value(at)+t.ByCel, t.For)
+			w.record(Record{At: at, Kind: Drifting, Text: t.String(), Value: t.ByCel})
+		})
+	case trouble.ModeHop:
+		w.at(at, nil, func(at time.Time) {
+			w.longer.turn(at, w.longer.value(at)+t.ByNm, 0)
+			w.record(Record{At: at, Kind: Hopped, Text: t.String(), Value: t.ByNm})
+		})
+	case trouble.Latched:
+		w.latched[t.Device] = append(w.latched[t.Device], &latch{trouble: t, from: at, to: at.Add(t.For)})
+	case trouble.Slip, trouble.LostSteps, trouble.Stall:
 		w.at(at, nil, func(at time.Time) {
 			for _, x := range w.axes {
 				if x.cfg.Axis == t.Device {
@@ -265,7 +286,7 @@ func (w *World) happen(t trouble.Trouble) {
 				}
 			}
 		})
-	case trouble.Restart, trouble.Unplug:
+	default:
 		for _, a := range w.actors {
 			if a.name == t.Device {
 				a.expect(t)
@@ -286,7 +307,7 @@ func (w *World) join(a *actor) error {
 	a.wire = w.cfg.Troubles.Wire(a.name)
 	w.actors = append(w.actors, a)
 	for _, t := range w.cfg.Troubles {
-		if t.Device == a.name && (t.Kind == trouble.Restart || t.Kind == trouble.Unplug) {
+		if t.Device == a.name && t.Kind.OfDevice() {
 			a.expect(t)
 		}
 	}
@@ -321,6 +342,7 @@ func (w *World) pose(at time.Time) source.Pose {
 	}
 	p.PumpW = w.pumpW(at)
 	p.CrystalCel = w.crystalCel(at)
+	p.PumpNm += w.longer.value(at)
 	w.set(&p, at)
 	p.PumpOpen, p.SignalOpen, p.IdlerOpen = w.openShare(PumpBlade, at), w.openShare(SignalBlade, at), w.openShare(IdlerBlade, at)
 	lamp := w.lampHz.value(at)
@@ -342,7 +364,7 @@ func (w *World) crystalCel(at time.Time) float64 {
 	if v, ok := w.setTo(CrystalTemperature, at); ok {
 		c = v
 	}
-	return c + w.cfg.CrystalWander.at(at.Sub(w.origin))
+	return c + w.warmer.value(at) + w.cfg.CrystalWander.at(at.Sub(w.origin))
 }
 
 // setTo is the true value of what a setting changes.
@@ -379,7 +401,7 @@ func (w *World) openShare(blade string, at time.Time) float64 {
 }
 
 func (w *World) ramps() []*ramp {
-	rs := []*ramp{w.lampHz, w.pump}
+	rs := []*ramp{w.lampHz, w.pump, w.warmer, w.longer}
 	for _, name := range []string{PumpBlade, SignalBlade, IdlerBlade} {
 		if r := w.blades[name]; r != nil {
 			rs = append(rs, r)
@@ -413,6 +435,15 @@ func (w *World) pieces(from, to time.Time, visit func(mid time.Time, lasts time.
 	ramps := w.ramps()
 	for _, r := range ramps {
 		cuts = r.cuts(from, to, cuts)
+	}
+	for _, all := range w.latched {
+		for _, l := range all {
+			for _, t := range []time.Time{l.from, l.to} {
+				if t.After(from) && t.Before(to) {
+					cuts = append(cuts, t)
+				}
+			}
+		}
 	}
 	cuts = append(cuts, to)
 	slices.SortFunc(cuts, time.Time.Compare)
@@ -458,13 +489,21 @@ func (w *World) look(from, to time.Time) (GateTruth, []source.Segment) {
 	}
 	var segments []source.Segment
 	var last source.Pose
+	var lastGives [2]float64
+	var light source.Rates // what arrives, whatever a latched detector makes of it
 	total := max(to.Sub(from).Seconds(), 1e-12)
 	w.pieces(from, to, func(mid time.Time, lasts time.Duration) {
 		p := w.pose(mid)
-		if len(segments) == 0 || p != last {
-			segments = append(segments, source.Segment{Rates: w.cfg.Model.Rates(p)})
+		gives := [2]float64{w.gives(SignalBlade, mid, p.SignalOpen), w.gives(IdlerBlade, mid, p.IdlerOpen)}
+		if len(segments) == 0 || p != last || gives != lastGives {
+			light = w.cfg.Model.Rates(p)
+			counted := light
+			counted.SignalHz *= gives[0]
+			counted.IdlerHz *= gives[1]
+			counted.PairsHz *= gives[0] * gives[1]
+			segments = append(segments, source.Segment{Rates: counted})
 		}
-		last = p
+		last, lastGives = p, gives
 		s := &segments[len(segments)-1]
 		s.For += lasts
 		share := lasts.Seconds() / total
@@ -475,10 +514,35 @@ func (w *World) look(from, to time.Time) (GateTruth, []source.Segment) {
 			lit = share
 		}
 		seen.LampShare += lit
-		seen.Signal.see(p.SignalOpen, share, lit, s.Rates.SignalHz)
-		seen.Idler.see(p.IdlerOpen, share, lit, s.Rates.IdlerHz)
+		seen.Signal.see(p.SignalOpen, share, lit, light.SignalHz)
+		seen.Idler.see(p.IdlerOpen, share, lit, light.IdlerHz)
 	})
 	return t, segments
+}
+
+// latch is a time during which a detector gives next to nothing.
+type latch struct {
+	trouble  trouble.Trouble
+	from, to time.Time
+	met      bool
+}
+
+// latchedGives is what a latched detector gives of what it should.
+const latchedGives = 1e-4
+
+// gives is what an arm's detector gives of what it should. A latched one shows it first in light.
+func (w *World) gives(arm string, at time.Time, open float64) float64 {
+	for _, l := range w.latched[arm] {
+		if at.Before(l.from) || !at.Before(l.to) {
+			continue
+		}
+		if !l.met && open > 0 {
+			l.met = true
+			w.record(Record{At: at, Device: arm, Kind: Befell, Text: l.trouble.String()})
+		}
+		return latchedGives
+	}
+	return 1
 }
 
 func (l *LightTruth) see(open, share, lit, hz float64) {

@@ -2,6 +2,7 @@ package trouble
 
 import (
 	"math/rand/v2"
+	"slices"
 	"time"
 )
 
@@ -14,6 +15,7 @@ type Target struct {
 	Restart bool          // it may start anew
 	Unplug  bool          // its line may go away
 	Axes    []string      // axes that may slip or lose steps
+	May     []Kind        // what else may happen to it, or to its axes; a Latched one is an arm
 }
 
 // Night says what Draw may draw from.
@@ -47,18 +49,18 @@ func Draw(rng *rand.Rand, night Night, n int) List {
 		t := Trouble{Kind: kinds[rng.IntN(len(kinds))]}
 		fits := night.fits(t.Kind)
 		switch {
-		case t.Kind == Lamp || t.Kind == PumpDrift:
+		case !t.Wired() && !t.Kind.OfDevice() && !t.Kind.OfAxis() && t.Kind != Latched:
 			t.At = within(rng, night.For)
 		case len(fits) == 0:
 			continue
 		default:
 			g := fits[rng.IntN(len(fits))]
 			t.Device = g.Device
-			switch t.Kind {
-			case Restart, Unplug:
-				t.At = within(rng, night.For)
-			case Slip, LostSteps:
+			switch {
+			case t.Kind.OfAxis():
 				t.Device = g.Axes[rng.IntN(len(g.Axes))]
+				t.At = within(rng, night.For)
+			case !t.Wired():
 				t.At = within(rng, night.For)
 			default:
 				t.Answer = 1 + rng.IntN(g.Answers)
@@ -79,18 +81,31 @@ func Draw(rng *rand.Rand, night Night, n int) List {
 		case PumpDrift:
 			t.For = time.Duration(1+rng.IntN(60)) * time.Minute
 			t.Share = float64(rng.IntN(41)-20) / 100
-		case Unplug:
+		case Unplug, Stranger, Hung:
 			t.For = time.Duration(1+rng.IntN(20)) * time.Second
+		case Silent, Latched, StuckValue, StuckShutter:
+			t.For = time.Duration(1+rng.IntN(300)) * time.Second
+		case ModeHop:
+			t.ByNm = eitherWay(rng, float64(2+rng.IntN(30))/100)
+		case TemperatureDrift:
+			t.For = time.Duration(1+rng.IntN(60)) * time.Minute
+			t.ByCel = eitherWay(rng, float64(1+rng.IntN(80))/10)
+		case WrongGate:
+			t.Share = eitherWay(rng, float64(5+rng.IntN(46))/100)
 		case Slip, LostSteps:
-			t.ByDeg = float64(1+rng.IntN(200)) / 100
-			if rng.IntN(2) == 0 {
-				t.ByDeg = -t.ByDeg
-			}
+			t.ByDeg = eitherWay(rng, float64(1+rng.IntN(200))/100)
 		}
 		last = t
 		l = append(l, t)
 	}
 	return l
+}
+
+func eitherWay(rng *rand.Rand, x float64) float64 {
+	if rng.IntN(2) == 0 {
+		return -x
+	}
+	return x
 }
 
 func (t *Trouble) wire(rng *rand.Rand, g Target) {
@@ -109,6 +124,9 @@ func (t *Trouble) wire(rng *rand.Rand, g Target) {
 		longest := max(g.Longest, time.Millisecond)
 		t.By = time.Millisecond * time.Duration(1+rng.Int64N(int64(longest/time.Millisecond)))
 		t.By = min(t.By, g.Longest)
+	case Split:
+		t.Byte = rng.IntN(64)
+		t.By = max(1, time.Duration(rng.Int64N(int64(max(g.Longest*9/10, 2))))) // the rest of it is within the longest answer
 	case Unasked:
 		if len(g.Chatter) > 0 {
 			t.Text = g.Chatter[rng.IntN(len(g.Chatter))]
@@ -134,6 +152,10 @@ func (n Night) fits(k Kind) []Target {
 			ok = g.Unplug
 		case Slip, LostSteps:
 			ok = len(g.Axes) > 0
+		default:
+			if !(Trouble{Kind: k}).Wired() {
+				ok = slices.Contains(g.May, k) && (!k.OfAxis() || len(g.Axes) > 0)
+			}
 		}
 		if ok {
 			fits = append(fits, g)

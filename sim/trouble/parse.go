@@ -3,6 +3,7 @@ package trouble
 import (
 	"fmt"
 	"math"
+	"slices"
 	"strconv"
 	"strings"
 	"time"
@@ -11,12 +12,20 @@ import (
 // Parse reads a list as String prints it. Spaces and line ends between troubles are free. Each
 // kind takes its arguments in one order:
 //
-//	missing(DEVICE, answer N)                 restart(DEVICE, at TIME)
-//	duplicated(DEVICE, answer N)              unplug(DEVICE, at TIME, for TIME)
-//	late(DEVICE, answer N, by TIME)           lamp(at TIME, for TIME, rate NUMBER Hz)
-//	garbled(DEVICE, answer N, byte I as "c")  slip(AXIS, at TIME, by NUMBER deg)
-//	unasked(DEVICE, answer N, line "TEXT")    lost_steps(AXIS, at TIME, by NUMBER deg)
-//	                                          pump_drift(at TIME, for TIME, share NUMBER)
+//	missing(DEVICE, answer N)                   restart(DEVICE, at TIME)
+//	duplicated(DEVICE, answer N)                restart_moving(DEVICE, at TIME)
+//	late(DEVICE, answer N, by TIME)             unplug(DEVICE, at TIME, for TIME)
+//	garbled(DEVICE, answer N, byte I as "c")    gone(DEVICE, at TIME)
+//	split(DEVICE, answer N, byte I, by TIME)    stranger(DEVICE, at TIME, for TIME)
+//	unasked(DEVICE, answer N, line "TEXT")      silent(DEVICE, at TIME, for TIME)
+//	slip(AXIS, at TIME, by NUMBER deg)          dead_line(DEVICE, at TIME)
+//	lost_steps(AXIS, at TIME, by NUMBER deg)    hung(DEVICE, at TIME, for TIME)
+//	stall(AXIS, at TIME)                        wrong_gate(COUNTER, at TIME, share NUMBER)
+//	lamp(at TIME, for TIME, rate NUMBER Hz)     overflow(COUNTER, at TIME)
+//	pump_drift(at TIME, for TIME, share NUMBER) latched(ARM, at TIME, for TIME)
+//	mode_hop(at TIME, by NUMBER nm)             stuck_value(SENSOR, at TIME, for TIME)
+//	temperature_drift(at TIME, for TIME, by NUMBER Cel)
+//	                                            stuck_shutter(SHUTTER, at TIME, for TIME)
 //
 // TIME is a time as Go prints it, such as 2h13m or 230ms. An error says at which character of
 // the list reading stopped.
@@ -137,28 +146,44 @@ func (p *parser) quoted() string {
 func (p *parser) trouble() Trouble {
 	t := Trouble{Kind: Kind(p.word("a kind of trouble"))}
 	p.literal("(")
-	switch t.Kind {
-	case Missing, Garbled, Late, Duplicated, Unasked:
+	switch {
+	case !slices.Contains(Kinds(), t.Kind):
+		p.fail("%q is no kind of trouble; there are %s", t.Kind, join(Kinds()))
+	case t.Wired():
 		t.Device = p.word("a device")
 		p.literal(",")
 		p.literal("answer")
 		if t.Answer = p.whole("the number of an answer, from 1"); t.Answer < 1 {
 			p.fail("answer 0; answers count from 1")
 		}
-	case Restart, Unplug, Slip, LostSteps:
-		t.Device = p.word("a device or axis")
-		p.literal(",")
-		t.At = p.time("at")
-	case Lamp, PumpDrift:
-		t.At = p.time("at")
 	default:
-		p.fail("%q is no kind of trouble; there are missing, garbled, late, duplicated, unasked, restart, lamp, unplug, slip, lost_steps and pump_drift", t.Kind)
+		if t.Kind.OfAxis() || t.Kind.OfDevice() || t.Kind == Latched {
+			t.Device = p.word("a device, axis or arm")
+			p.literal(",")
+		}
+		t.At = p.time("at")
+	}
+	if t.Kind.lasts() {
+		p.literal(",")
+		t.For = p.time("for")
+	}
+	amount := func(key, want, unit string) float64 {
+		p.literal(",")
+		p.literal(key)
+		x := p.number(want)
+		p.literal(unit)
+		return x
 	}
 	switch t.Kind {
-	case Garbled:
+	case Garbled, Split:
 		p.literal(",")
 		p.literal("byte")
 		t.Byte = p.whole("a place in the line, from 0")
+		if t.Kind == Split {
+			p.literal(",")
+			t.By = p.time("by")
+			break
+		}
 		p.literal("as")
 		s := []rune(p.quoted())
 		if len(s) != 1 || s[0] > 255 {
@@ -174,27 +199,25 @@ func (p *parser) trouble() Trouble {
 		p.literal("line")
 		t.Text = p.quoted()
 	case Lamp:
-		p.literal(",")
-		t.For = p.time("for")
-		p.literal(",")
-		p.literal("rate")
-		t.RateHz = p.number("a rate")
-		p.literal("Hz")
-	case Unplug:
-		p.literal(",")
-		t.For = p.time("for")
+		t.RateHz = amount("rate", "a rate", "Hz")
 	case Slip, LostSteps:
-		p.literal(",")
-		p.literal("by")
-		t.ByDeg = p.number("an angle")
-		p.literal("deg")
-	case PumpDrift:
-		p.literal(",")
-		t.For = p.time("for")
-		p.literal(",")
-		p.literal("share")
-		t.Share = p.number("a share")
+		t.ByDeg = amount("by", "an angle", "deg")
+	case ModeHop:
+		t.ByNm = amount("by", "a change of wavelength", "nm")
+	case TemperatureDrift:
+		t.ByCel = amount("by", "a change of temperature", "Cel")
+	case PumpDrift, WrongGate:
+		t.Share = amount("share", "a share", "")
 	}
 	p.literal(")")
 	return t
+}
+
+func join(kinds []Kind) string {
+	words := make([]string, len(kinds))
+	for i, k := range kinds {
+		words[i] = string(k)
+	}
+	last := len(words) - 1
+	return strings.Join(words[:last], ", ") + " and " + words[last]
 }

@@ -12,13 +12,13 @@ import (
 	"gemel/sim/trouble"
 )
 
-var all = []trouble.Kind{trouble.Missing, trouble.Garbled, trouble.Late, trouble.Duplicated, trouble.Unasked,
-	trouble.Restart, trouble.Lamp, trouble.Unplug, trouble.Slip, trouble.LostSteps, trouble.PumpDrift}
-
 func bench() trouble.Night {
-	return trouble.Night{For: 8 * time.Hour, Kinds: all, Targets: []trouble.Target{
-		{Device: "stage", Answers: 1000, Longest: 800 * time.Millisecond, Chatter: []string{"T=21.4", `a "quoted", (odd); line`}, Restart: true, Unplug: true, Axes: []string{"signal_arm", "idler_arm"}},
-		{Device: "counter", Answers: 1000, Longest: time.Second, Restart: true}}}
+	return trouble.Night{For: 8 * time.Hour, Kinds: trouble.Kinds(), Targets: []trouble.Target{
+		{Device: "stage", Answers: 1000, Longest: 800 * time.Millisecond, Chatter: []string{"T=21.4", `a "quoted", (odd); line`}, Restart: true, Unplug: true, Axes: []string{"signal_arm", "idler_arm"}, May: []trouble.Kind{trouble.RestartMoving, trouble.Stall, trouble.Gone, trouble.Stranger, trouble.Hung}},
+		{Device: "counter", Answers: 1000, Longest: time.Second, Restart: true, May: []trouble.Kind{trouble.WrongGate, trouble.Overflow, trouble.Silent, trouble.DeadLine}},
+		{Device: "idler", May: []trouble.Kind{trouble.Latched}},
+		{Device: "monitor", May: []trouble.Kind{trouble.StuckValue}},
+		{Device: "shutter", May: []trouble.Kind{trouble.StuckShutter}}}}
 }
 
 func TestListPrintsAsItReads(t *testing.T) {
@@ -29,6 +29,10 @@ func TestListPrintsAsItReads(t *testing.T) {
 		`garbled(stage, answer 3, byte 5 as "7"); unasked(stage, answer 4, line "T=21.4")`,
 		"restart(stage, at 1h0m5s); unplug(counter, at 3h, for 2s); pump_drift(at 0s, for 10m, share -0.12)",
 		"slip(signal_arm, at 20m, by 0.5 deg); lost_steps(idler_arm, at 1s, by -1.25 deg); duplicated(counter, answer 1)",
+		"split(stage, answer 9, byte 3, by 200ms); restart_moving(stage, at 5m); stall(signal_arm, at 1h)",
+		"mode_hop(at 2h, by -0.11 nm); temperature_drift(at 2h, for 20m, by 1.5 Cel); gone(stage, at 3h); stranger(counter, at 3h, for 10s)",
+		"silent(monitor, at 1m, for 1m30s); dead_line(shutter, at 1m); hung(stage, at 1m, for 5s); wrong_gate(counter, at 1m, share -0.2); overflow(counter, at 1m)",
+		"latched(idler, at 1m, for 1m30s); stuck_value(monitor, at 1m, for 1m30s); stuck_shutter(shutter, at 1m, for 1m30s)",
 	} {
 		l, err := trouble.Parse(text)
 		if err != nil {
@@ -74,6 +78,7 @@ func TestParseSaysWhereAndWhat(t *testing.T) {
 
 func FuzzParse(f *testing.F) {
 	f.Add("late(counter, answer 412, by 230ms); lamp(at 2h13m, for 40s, rate 250000 Hz)")
+	f.Add("split(stage, answer 9, byte 3, by 200ms); mode_hop(at 2h, by -0.11 nm); wrong_gate(counter, at 1m, share -0.2); latched(idler, at 1m, for 1m30s)")
 	f.Add(`garbled(stage, answer 3, byte 5 as "7"); unasked(stage, answer 4, line "T=21.4")`)
 	f.Fuzz(func(t *testing.T, text string) {
 		l, err := trouble.Parse(text)
@@ -91,6 +96,9 @@ func heard(w *trouble.Wire, line string) []string {
 	var s []string
 	h, _ := w.Pass(line)
 	for _, x := range h {
+		if x.Open {
+			x.Line += "..."
+		}
 		if x.Delay > 0 {
 			x.Line += " after " + x.Delay.String()
 		}
@@ -114,6 +122,10 @@ func TestWire(t *testing.T) {
 		{`garbled(c, answer 1, byte 2 as "9")`, []string{"+19034"}},
 		{`garbled(c, answer 1, byte 8 as "9")`, []string{"+19034"}}, // modulo the length
 		{`garbled(c, answer 1, byte 2 as "2")`, []string{"+13034"}}, // is 2 already: the next digit
+		{"split(c, answer 1, byte 2, by 1s)", []string{"+1...", "2034 after 1s"}},
+		{"split(c, answer 1, byte 6, by 1s)", []string{"...", "+12034 after 1s"}},
+		{"missing(c, answer 1); split(c, answer 1, byte 2, by 1s)", nil},
+		{"split(c, answer 1, byte 2, by 1s); duplicated(c, answer 1)", []string{"+1...", "2034 after 1s", "+1...", "2034 after 1s"}},
 		{"missing(c, answer 1); duplicated(c, answer 1)", nil},
 		{"late(c, answer 1, by 1s); duplicated(c, answer 1)", []string{"+12034 after 1s", "+12034 after 1s"}},
 	} {
@@ -163,6 +175,9 @@ func TestDrawKeepsToItsBounds(t *testing.T) {
 					follows++
 				}
 			}
+			if x.Kind == trouble.Split && (x.By <= 0 || x.By >= time.Second || x.Device == "stage" && x.By >= 800*time.Millisecond) {
+				t.Errorf("%s: the rest comes later than the line's longest answer", x)
+			}
 			if x.Kind == trouble.Late && (x.By > time.Second || x.Device == "stage" && x.By > 800*time.Millisecond) {
 				t.Errorf("%s: later than the line's longest answer", x)
 			}
@@ -172,12 +187,12 @@ func TestDrawKeepsToItsBounds(t *testing.T) {
 			if (x.Kind == trouble.Unplug || x.Kind == trouble.Slip) && x.Device == "counter" || x.At >= n.For {
 				t.Errorf("%s: nothing allows it", x)
 			}
-			if s := x.Surfaces(); s.Text == "" || !s.Harmless && len(s.Events) == 0 {
+			if s := x.Surfaces(); s.Text == "" || !s.Harmless && len(s.Events) == 0 && s.Undetectable == "" {
 				t.Errorf("%s: nothing says how it must surface", x)
 			}
 		}
 	}
-	for _, k := range all {
+	for _, k := range trouble.Kinds() {
 		if kinds[k] == 0 {
 			t.Errorf("%s was never drawn", k)
 		}

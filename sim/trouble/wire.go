@@ -2,9 +2,10 @@ package trouble
 
 import "time"
 
-// Heard is one line as the host gets it.
+// Heard is one line as the host gets it, or a part of one.
 type Heard struct {
 	Line  string
+	Open  bool          // its line goes on: what comes next is the rest of it
 	Delay time.Duration // beyond the moment at which the untroubled answer would have come; bench time
 }
 
@@ -55,6 +56,8 @@ func (w *Wire) Pass(line string) ([]Heard, List) {
 			for i := range heard {
 				heard[i].Delay += t.By
 			}
+		case Split:
+			heard = split(heard, t)
 		case Duplicated:
 			heard = append(heard, heard...)
 		case Unasked:
@@ -62,6 +65,18 @@ func (w *Wire) Pass(line string) ([]Heard, List) {
 		}
 	}
 	return heard, troubles
+}
+
+// split breaks the last line in two.
+func split(heard []Heard, t Trouble) []Heard {
+	if len(heard) == 0 || heard[len(heard)-1].Line == "" {
+		return heard
+	}
+	last := &heard[len(heard)-1]
+	at := t.Byte % len(last.Line)
+	rest := Heard{Line: last.Line[at:], Delay: last.Delay + t.By}
+	last.Line, last.Open = last.Line[:at], true
+	return append(heard, rest)
 }
 
 func (w *Wire) garble(line string, t Trouble) string {
