@@ -4,13 +4,17 @@ import (
 	"context"
 	"fmt"
 	"io"
+	"os"
 	"time"
 
 	"gemel/daemon/bench"
+	"gemel/daemon/keeper"
+	"gemel/daemon/logbook"
 	"gemel/daemon/remote"
 	"gemel/daemon/report"
 	"gemel/protocol"
 	"gemel/scan"
+	"gemel/scan/engine"
 	"gemel/scan/forecast"
 	"gemel/scan/recipe"
 )
@@ -96,9 +100,28 @@ func foreseer(file *bench.File) func(context.Context, scan.Plan, time.Time, stri
 	}
 }
 
+// work plans the recipe with what the data folder knows of earlier results, if there is one.
 func (c *forecastCommand) work(ctx context.Context, file *bench.File, r *recipe.Recipe, o report.Foreseen) (*forecast.Forecast, error) {
 	facts := file.Facts()
 	facts.AcceptedAt = o.Begins.In(time.Local)
+	data := logbookFile(orElse(c.Data, orElse(file.LogbookFolder, "gemel-data")))
+	_, err := os.Stat(data)
+	switch {
+	case err == nil:
+		book, err := logbook.OpenReadOnly(data)
+		if err != nil {
+			return nil, err
+		}
+		defer book.Close()
+		facts.Earlier = keeper.New(keeper.Config{Book: book, Bench: &engine.Bench{Name: file.Name}, BenchText: file.Text, Declared: declared}).Earlier(ctx)
+		if c.From != "" {
+			if o.Earlier, err = report.FromRun(ctx, book, protocol.RunID(c.From), file); err != nil {
+				return nil, err
+			}
+		}
+	case c.From != "" || c.Data != "":
+		return nil, errUse{fmt.Errorf("%s: %w; want --data with the folder of a run", data, err)}
+	}
 	plan, err := r.Plan(facts)
 	if err != nil {
 		return nil, err

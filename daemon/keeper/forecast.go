@@ -7,6 +7,7 @@ import (
 
 	"gemel/protocol"
 	"gemel/protocol/strict"
+	"gemel/scan"
 )
 
 // Forecast says what a recipe would do if it were started now. It writes nothing and touches no
@@ -39,4 +40,9 @@ func (k *Keeper) Forecast(ctx context.Context, q protocol.ForecastRequest) (prot
 		return protocol.Forecast{}, refusal
 	}
 	return k.Foresee(ctx, plan, now, q.Aim)
+}
+
+// Earlier finds values of earlier results as they are now, for a plan that is not run.
+func (k *Keeper) Earlier(ctx context.Context) func(scan.EarlierAsk) (scan.EarlierSource, error) {
+	return k.earlierNow(ctx).find
 }

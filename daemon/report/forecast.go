@@ -149,10 +149,3 @@ func band(file *bench.File) *forecast.Band {
 	}
 	return b
 }
-
-// EarlierRun is what an earlier run says of rates and of what takes time.
-type EarlierRun struct {
-	Expect forecast.Expect
-	Costs  forecast.Costs
-	From   string
-}

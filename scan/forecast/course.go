@@ -67,8 +67,8 @@ type course struct {
 	stuck map[int]error // points to which no way is free
 
 	// What one thing of a kind takes, worked out once.
-	closeAll, openAll, whereAll, sampleAll, guardAll expense
-	glance                                           time.Duration
+	closeAll, openAll, whereAll, sampleAll, guardAll, shownAll expense
+	glance                                                     time.Duration
 }
 
 // expense is a time that is part settling, part overhead.
@@ -105,7 +105,11 @@ func newCourse(plan *scan.Plan, b *Bench) (*course, error) {
 		c.glance = max(c.glance, d.Glance)
 		if d.ProtectBy != "" {
 			ready = max(ready, d.Ready)
+			c.shownAll.overhead += k.ask(d.ProtectBy, askState)
 		}
+	}
+	if b.Pump != nil {
+		c.shownAll.overhead += k.ask(b.Pump.Name, askState)
 	}
 	c.openAll.settle += ready
 	for _, name := range b.Controllers {
@@ -225,6 +229,7 @@ func (c *course) take(f engine.Foreseen, r *taken) {
 	c.spend(c.sampleAll)
 	r.started = c.now
 	c.dwell(f, r)
+	c.spend(c.shownAll)
 	c.spend(c.whereAll)
 	for _, s := range settings {
 		c.overhead(k.ask(s.Setting, askGet))
@@ -325,8 +330,8 @@ func (c *course) mover() drivers.DeviceName {
 // light opens and closes what the reading needs.
 func (c *course) light(pump bool) {
 	k := c.bench.Costs
+	c.spend(c.shownAll)
 	if s := c.bench.Pump; s != nil {
-		c.overhead(k.ask(s.Name, askState))
 		switch {
 		case pump && !c.pumped:
 			c.spend(expense{settle: s.SettleOpen, overhead: k.ask(s.Name, askOpen+askState)})
@@ -334,11 +339,6 @@ func (c *course) light(pump bool) {
 			c.spend(expense{settle: s.SettleClosed, overhead: k.ask(s.Name, askClose+askState)})
 		}
 		c.pumped = pump
-	}
-	for _, d := range c.bench.Detectors {
-		if d.ProtectBy != "" {
-			c.overhead(k.ask(d.ProtectBy, askState))
-		}
 	}
 	if !c.shown {
 		c.spend(c.openAll)

@@ -54,10 +54,32 @@ type Forecast struct {
 
 // step is one reading in the picture.
 type step struct {
-	kind    protocol.ReadingKind
-	started time.Duration
-	ended   time.Duration
-	at      []unit.Angle
+	kind         protocol.ReadingKind
+	point, visit int
+	started      time.Duration
+	ended        time.Duration
+	gate         time.Duration
+	slices       float64
+	at           []unit.Angle
+}
+
+// Timed is one reading of a forecast, times since the start.
+type Timed struct {
+	Kind         protocol.ReadingKind
+	Point, Visit int // of a light
+	Started      time.Duration
+	Ended        time.Duration
+	Gate         time.Duration
+	Slices       float64
+}
+
+// Times are the readings in their order; of a long run only every so many lights are kept.
+func (f *Forecast) Times() []Timed {
+	all := make([]Timed, len(f.track))
+	for i, s := range f.track {
+		all[i] = Timed{Kind: s.kind, Point: s.point, Visit: s.visit, Started: s.started, Ended: s.ended, Gate: s.gate, Slices: s.slices}
+	}
+	return all
 }
 
 // mostSteps bounds what a picture draws; of more readings every so many are drawn.
@@ -134,7 +156,7 @@ func course1(a Ask) (*Forecast, *rowMaker, error) {
 		f.see(r)
 		maker.add(r)
 		if seen%every == 0 || r.kind != protocol.Light {
-			f.track = append(f.track, step{kind: r.kind, started: r.started, ended: r.ended, at: slices.Clone(r.at)})
+			f.track = append(f.track, step{kind: r.kind, point: r.point, visit: r.visit, started: r.started, ended: r.ended, gate: r.gate, slices: r.slices, at: slices.Clone(r.at)})
 		}
 		seen++
 	})
