@@ -3,12 +3,13 @@
 //
 // It promises: an entry that Append accepted is on the disk and stays there, byte for byte, in its
 // place; sequences have no gaps; asking twice writes once; a full disk is said as such and loses
-// nothing that was accepted. What people read are views over the entries' own bodies (schema.sql
-// describes them), so there is one truth.
+// nothing that was accepted; a damaged file is found, not written to, and Rescue takes out of it
+// what can be read. What people read are views over the entries' own bodies (schema.sql describes
+// them), so there is one truth.
 //
 // It refuses: changing or removing an entry, an entry out of its turn or with a body that is not
-// its own, a run it does not know, a second writer on the same folder, a file that another
-// program or a newer gemel made. It does not judge readings, and it publishes nothing.
+// its own, a run it does not know, a second writer on the same folder, a file that is damaged, or
+// that another program or a newer gemel made. It does not judge readings, and it publishes nothing.
 package logbook
 
 import (
@@ -24,6 +25,8 @@ import (
 	"strconv"
 	"strings"
 	"sync"
+	"sync/atomic"
+	"time"
 
 	"github.com/gofrs/flock"
 	"modernc.org/sqlite"
@@ -35,7 +38,7 @@ var schema string
 
 const (
 	applicationID = 0x67656D6C // "geml"
-	schemaVersion = 1
+	schemaVersion = 2
 
 	fileName = "logbook.db"
 	lockName = "lock"
@@ -45,6 +48,7 @@ const (
 var (
 	ErrLocked    = errors.New("in use by another process")
 	ErrForeign   = errors.New("not a logbook that this program can use")
+	ErrDamaged   = errors.New("the logbook is damaged")
 	ErrReadOnly  = errors.New("opened for reading only")
 	ErrNoRun     = errors.New("no such run")
 	ErrGap       = errors.New("sequence out of turn")
@@ -63,6 +67,8 @@ type Book struct {
 	writer  *sql.DB      // one connection; nil when read-only
 	insert  *sql.Stmt    // on writer
 	readers *sql.DB
+	folder  *sql.DB // folds the write-ahead log into the file; nil when read-only
+	appends atomic.Int64
 
 	mu       sync.Mutex
 	onAppend []func()
@@ -91,22 +97,28 @@ func Open(dir string) (_ *Book, err error) {
 	if err := useDisk(); err != nil {
 		return nil, err
 	}
-	empty, err := inspect(b.file)
+	version, err := inspect(b.file)
 	if err != nil {
 		return nil, err
+	}
+	if version != 0 {
+		if err := lookOver(b.file); err != nil {
+			return nil, err
+		}
 	}
 	if b.writer, err = openWriter(b.file); err != nil {
 		return nil, err
 	}
-	if empty {
-		if err := create(b.writer); err != nil {
-			return nil, wrap(b.file, err)
-		}
+	if err := bringAlong(b.writer, version); err != nil {
+		return nil, wrap(b.file, err)
 	}
 	if b.insert, err = b.writer.Prepare(insertEntry); err != nil {
 		return nil, wrap(b.file, err)
 	}
 	if b.readers, err = openReaders(b.file); err != nil {
+		return nil, err
+	}
+	if b.folder, err = openFolder(b.file); err != nil {
 		return nil, err
 	}
 	_ = reserve(dir) // without it a stop on a full disk is only in memory; that is no reason not to begin
@@ -149,11 +161,11 @@ func OpenReadOnly(file string) (*Book, error) {
 	if err := useDisk(); err != nil {
 		return nil, err
 	}
-	empty, err := inspect(file)
+	version, err := inspect(file)
 	if err != nil {
 		return nil, err
 	}
-	if empty {
+	if version == 0 {
 		return nil, fmt.Errorf("%s: there is nothing in it, or no such file: %w", file, ErrForeign)
 	}
 	readers, err := openReaders(file)
@@ -172,6 +184,9 @@ func (b *Book) Close() error {
 	}
 	if b.insert != nil {
 		errs = append(errs, b.insert.Close())
+	}
+	if b.folder != nil {
+		errs = append(errs, b.folder.Close())
 	}
 	if b.writer != nil { // last, so that SQLite folds the write-ahead log into the file
 		errs = append(errs, b.writer.Close())
@@ -246,52 +261,95 @@ func useDisk() error {
 	return nil
 }
 
-// inspect looks whether the file is ours before anything about it is changed. A file that is not
-// there, or in which a first start came to nothing, is empty.
-func inspect(file string) (empty bool, err error) {
+// inspect looks whether the file is ours before anything about it is changed, and returns its
+// schema. A file that is not there, or in which a first start came to nothing, has schema 0.
+func inspect(file string) (version int, err error) {
 	info, err := os.Stat(file)
 	if errors.Is(err, fs.ErrNotExist) || err == nil && info.Size() == 0 {
-		return true, nil
+		return 0, nil
 	}
 	if err != nil {
-		return false, fmt.Errorf("logbook: %w", err)
+		return 0, fmt.Errorf("logbook: %w", err)
 	}
 	db, err := open(file, "mode=ro")
 	if err != nil {
-		return false, err
+		return 0, orDamaged(file, err)
 	}
 	defer db.Close()
-	var application, version, objects int64
+	var application, objects int64
 	err = db.QueryRow(`SELECT (SELECT application_id FROM pragma_application_id), (SELECT user_version FROM pragma_user_version),
 		(SELECT count(*) FROM sqlite_schema)`).Scan(&application, &version, &objects)
 	switch {
 	case isCode(err, sqlite3.SQLITE_NOTADB):
-		return false, fmt.Errorf("%s: no SQLite database: %w; want a file that gemel made, or none", file, ErrForeign)
+		return 0, orDamaged(file, notADatabase(file))
 	case err != nil:
-		return false, wrap(file, err)
+		return 0, wrap(file, err)
 	case application == 0 && version == 0 && objects == 0:
-		return true, nil
+		return 0, nil
 	case application != applicationID:
-		return false, fmt.Errorf("%s: made by another program (application id %#x): %w; want a file that gemel made, or none", file, application, ErrForeign)
+		return 0, orDamaged(file, fmt.Errorf("%s: made by another program (application id %#x): %w; want a file that gemel made, or none", file, application, ErrForeign))
 	case version > schemaVersion:
-		return false, fmt.Errorf("%s: made by a newer gemel (schema %d): %w; want schema %d, or a newer program", file, version, ErrForeign, schemaVersion)
-	case version < schemaVersion:
-		return false, fmt.Errorf("%s: schema %d: %w; want schema %d", file, version, ErrForeign, schemaVersion)
+		return 0, fmt.Errorf("%s: made by a newer gemel (schema %d): %w; want schema %d, or a newer program", file, version, ErrForeign, schemaVersion)
+	case version < 1:
+		return 0, orDamaged(file, fmt.Errorf("%s: schema %d: %w; want schema 1 to %d", file, version, ErrForeign, schemaVersion))
 	}
-	return false, nil
+	return version, nil
 }
 
-// create makes all or nothing: a power cut in the middle leaves a file that inspect calls empty.
-func create(db *sql.DB) error {
+// orDamaged tells a damaged logbook from a file of somebody else's: in ours are entries.
+func orDamaged(file string, err error) error {
+	if errors.Is(err, ErrForeign) && holdsEntries(file) {
+		return fmt.Errorf("%s: %w: its first page is not what it was, and there are entries in it", file, ErrDamaged)
+	}
+	return err
+}
+
+// lookTime bounds the look at a file before it is written to. A logbook of some ten thousand
+// readings is looked at whole in it; Verify has no such bound.
+const lookTime = 10 * time.Second
+
+// lookOver finds damage before anything is written. What it has not found within lookTime it does
+// not find.
+func lookOver(file string) error {
+	db, err := open(file, "mode=ro", "_pragma=query_only(1)")
+	if err != nil {
+		return err
+	}
+	defer db.Close()
+	ctx, cancel := context.WithTimeout(context.Background(), lookTime)
+	defer cancel()
+	var found string
+	err = db.QueryRowContext(ctx, `PRAGMA quick_check(1)`).Scan(&found)
+	switch {
+	case ctx.Err() != nil:
+		return nil
+	case err != nil:
+		return wrap(file, err)
+	case found != "ok":
+		return fmt.Errorf("%s: %w: %s", file, ErrDamaged, strings.ReplaceAll(found, "\n", "; "))
+	}
+	return nil
+}
+
+// bringAlong makes a file of an earlier schema one of the present; schema 0 is an empty file. It
+// does all or nothing: a power cut in the middle leaves what was there.
+func bringAlong(db *sql.DB, version int) error {
+	if version == schemaVersion {
+		return nil
+	}
 	tx, err := db.Begin()
 	if err != nil {
 		return err
 	}
 	defer tx.Rollback()
-	if _, err := tx.Exec(schema); err != nil {
+	steps := schema + fmt.Sprintf("; PRAGMA application_id = %d", applicationID)
+	if version == 1 {
+		steps = `ALTER TABLE header ADD COLUMN sum INTEGER; ALTER TABLE journal ADD COLUMN sum INTEGER`
+	}
+	if _, err := tx.Exec(steps); err != nil {
 		return err
 	}
-	if _, err := tx.Exec(fmt.Sprintf("PRAGMA application_id = %d; PRAGMA user_version = %d", applicationID, schemaVersion)); err != nil {
+	if _, err := tx.Exec(fmt.Sprintf("PRAGMA user_version = %d", schemaVersion)); err != nil {
 		return err
 	}
 	return tx.Commit()
@@ -324,11 +382,15 @@ func open(file string, options ...string) (*sql.DB, error) {
 	if err := db.Ping(); err != nil {
 		db.Close()
 		if isCode(err, sqlite3.SQLITE_NOTADB) {
-			return nil, fmt.Errorf("%s: no SQLite database: %w; want a file that gemel made, or none", file, ErrForeign)
+			return nil, notADatabase(file)
 		}
 		return nil, wrap(file, err)
 	}
 	return db, nil
+}
+
+func notADatabase(file string) error {
+	return fmt.Errorf("%s: no SQLite database: %w; want a file that gemel made, or none", file, ErrForeign)
 }
 
 func isCode(err error, primary int) bool {
@@ -336,7 +398,7 @@ func isCode(err error, primary int) bool {
 	return ok && e.Code()&0xff == primary
 }
 
-// wrap says where an error happened, and calls a full disk by its name. SQLite answers IOERR, not
+// wrap says where an error happened, and calls a full disk and a damaged file by their names. SQLite answers IOERR, not
 // FULL, for a quota, a file-size limit or a failed flush; to the caller these are the same: keep
 // what you have and ask again.
 func wrap(where string, err error) error {
@@ -345,6 +407,9 @@ func wrap(where string, err error) error {
 	}
 	if isCode(err, sqlite3.SQLITE_FULL) || isCode(err, sqlite3.SQLITE_IOERR) {
 		return fmt.Errorf("%s: %w: %w", where, ErrFull, err)
+	}
+	if isCode(err, sqlite3.SQLITE_CORRUPT) {
+		return fmt.Errorf("%s: %w: %w", where, ErrDamaged, err)
 	}
 	return fmt.Errorf("%s: %w", where, err)
 }

@@ -7,6 +7,7 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
+	"hash/crc32"
 	"unicode/utf8"
 
 	"gemel/protocol"
@@ -16,8 +17,8 @@ import (
 
 // One statement is one transaction: whether the entry's turn has come and the entry itself cannot
 // come apart, and the usual case costs one round trip.
-const insertEntry = `INSERT INTO journal (run, sequence, kind, body)
-	SELECT ?1, ?2, ?3, ?4
+const insertEntry = `INSERT INTO journal (run, sequence, kind, body, sum)
+	SELECT ?1, ?2, ?3, ?4, ?5
 	 WHERE ?2 = 1 + coalesce((SELECT max(sequence) FROM journal WHERE run = ?1), 0)
 	   AND (?1 = '-' OR EXISTS (SELECT 1 FROM header WHERE run = ?1))`
 
@@ -36,7 +37,7 @@ func (b *Book) Append(ctx context.Context, e protocol.Entry) error {
 		return wrap(where, err)
 	}
 	ctx = context.WithoutCancel(ctx)
-	result, err := b.insert.ExecContext(ctx, e.Run, e.Sequence, e.Kind, string(e.Body))
+	result, err := b.insert.ExecContext(ctx, e.Run, e.Sequence, e.Kind, string(e.Body), sumOf(string(e.Kind), string(e.Body)))
 	if err != nil {
 		return wrap(where, refused(err))
 	}
@@ -48,6 +49,7 @@ func (b *Book) Append(ctx context.Context, e protocol.Entry) error {
 		return wrap(where, b.whyNot(ctx, e))
 	}
 	b.tell()
+	b.boundLog()
 	return nil
 }
 
@@ -81,6 +83,19 @@ func refused(err error) error {
 	return err
 }
 
+// mostBody is the greatest body, in bytes: what is larger no broker of ours carries, and everything
+// behind it would wait for ever. The greatest that the program makes is a fraction of it.
+const mostBody = 4<<20 - 4096
+
+// sumOf is what the columns named sum hold.
+func sumOf(parts ...string) int64 {
+	var sum uint32
+	for _, p := range parts {
+		sum = crc32.Update(sum, crc32.MakeTable(crc32.Castagnoli), append([]byte(p), 0))
+	}
+	return int64(sum)
+}
+
 // fits checks what would make an entry useless to those who read it: no JSON, another entry's
 // body, or a doubt that does not say about what.
 func fits(e protocol.Entry) error {
@@ -91,6 +106,9 @@ func fits(e protocol.Entry) error {
 	}
 	if e.Sequence < 1 {
 		return fmt.Errorf("%w: sequence %d; want 1 or more", ErrGap, e.Sequence)
+	}
+	if len(e.Body) > mostBody {
+		return fmt.Errorf("%w: %d bytes; want at most %d", ErrBody, len(e.Body), mostBody)
 	}
 	if !utf8.Valid(e.Body) {
 		return fmt.Errorf("%w: not UTF-8; want JSON", ErrBody)

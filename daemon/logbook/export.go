@@ -249,19 +249,24 @@ func (b *Book) Snapshot(ctx context.Context, file string) (err error) {
 	if _, err := db.ExecContext(ctx, `VACUUM INTO ?`, part); err != nil {
 		return wrap("snapshot "+file, err)
 	}
-	if err := flush(part, os.O_RDWR); err != nil {
+	if err := keep(part, file); err != nil {
 		return fmt.Errorf("snapshot: %w", err)
 	}
+	return nil
+}
+
+// keep brings a finished file to the disk and gives it its name.
+func keep(part, file string) error {
+	if err := flush(part, os.O_RDWR); err != nil {
+		return err
+	}
 	if err := os.Rename(part, file); err != nil {
-		return fmt.Errorf("snapshot: %w", err)
+		return err
 	}
 	if runtime.GOOS == "windows" { // has no flush for folders
 		return nil
 	}
-	if err := flush(filepath.Dir(file), os.O_RDONLY); err != nil { // the name, too
-		return fmt.Errorf("snapshot: %w", err)
-	}
-	return nil
+	return flush(filepath.Dir(file), os.O_RDONLY) // the name, too
 }
 
 func flush(path string, flag int) error {

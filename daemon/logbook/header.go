@@ -8,6 +8,7 @@ import (
 	"errors"
 	"fmt"
 	"slices"
+	"strconv"
 
 	"gemel/protocol"
 )
@@ -34,6 +35,14 @@ type RunRow struct {
 	Causes    []protocol.Cause
 	StartedAt protocol.Time // zero until it began
 	EndedAt   protocol.Time // zero until it ended
+}
+
+func (h Header) sum(bench string) int64 {
+	simulated := ""
+	if h.Simulated != nil {
+		simulated = strconv.Itoa(*h.Simulated)
+	}
+	return sumOf(string(h.Run), bench, h.Title, h.RecipeText, h.BenchText, h.Version, simulated, h.Key, h.Who, h.QueuedAt.String())
 }
 
 // NewRun writes a run's header and its first entry, both or neither. When a run of the same bench
@@ -84,11 +93,11 @@ func (b *Book) NewRun(ctx context.Context, h Header, first protocol.Entry) (exis
 	if taken {
 		return "", fmt.Errorf("%s: %w; want a name of its own", where, ErrDifferent)
 	}
-	if _, err := tx.ExecContext(ctx, `INSERT INTO header (run, bench, title, recipe_text, bench_text, version, simulated, key, who, queued_at)
-		VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?)`, h.Run, head.Bench, h.Title, h.RecipeText, h.BenchText, h.Version, h.Simulated, key, h.Who, h.QueuedAt.String()); err != nil {
+	if _, err := tx.ExecContext(ctx, `INSERT INTO header (run, bench, title, recipe_text, bench_text, version, simulated, key, who, queued_at, sum)
+		VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)`, h.Run, head.Bench, h.Title, h.RecipeText, h.BenchText, h.Version, h.Simulated, key, h.Who, h.QueuedAt.String(), h.sum(head.Bench)); err != nil {
 		return "", wrap(where, err)
 	}
-	if _, err := tx.StmtContext(ctx, b.insert).ExecContext(ctx, first.Run, first.Sequence, first.Kind, string(first.Body)); err != nil {
+	if _, err := tx.StmtContext(ctx, b.insert).ExecContext(ctx, first.Run, first.Sequence, first.Kind, string(first.Body), sumOf(string(first.Kind), string(first.Body))); err != nil {
 		return "", wrap(where, refused(err))
 	}
 	if err := tx.Commit(); err != nil {

@@ -1,5 +1,6 @@
--- The logbook, schema 1. The file is an SQLite 3 database, <data folder>/logbook.db, with
--- application_id 0x67656D6C ("geml") and user_version 1.
+-- The logbook, schema 2. The file is an SQLite 3 database, <data folder>/logbook.db, with
+-- application_id 0x67656D6C ("geml") and user_version 2. Schema 1 had no sums; a file that has it
+-- is brought along when a daemon opens it, and what stood in it stays without.
 --
 -- There is one truth: the bodies in "journal". They are the JSON documents that protocol/ describes,
 -- byte for byte as they were appended and as NATS carries them. "header" holds what belongs to a run
@@ -29,12 +30,15 @@ CREATE TABLE header (
   key         TEXT,            -- the idempotency key of the request, if it had one
   who         TEXT NOT NULL,
   queued_at   TEXT NOT NULL,
+  sum         INTEGER,         -- as in the journal, of the columns from run to queued_at; null counts as empty
   UNIQUE (bench, key)
 ) STRICT;
 
 -- The journal. id counts from 1 without gaps in the order of commits; sequence does so within a
 -- run. Run "-" holds the events of the bench itself and has no header. The checks are here, and
 -- not only in the program, so that no other writer can make an entry that contradicts its key.
+-- SQLite notices damage to its own structure; that a body is what was written, only sum says: the
+-- CRC-32C (Castagnoli) of kind and body, each followed by a zero byte. Null: written by schema 1.
 CREATE TABLE journal (
   id       INTEGER PRIMARY KEY,
   run      TEXT NOT NULL,
@@ -43,6 +47,7 @@ CREATE TABLE journal (
   body     TEXT NOT NULL CHECK (json_valid(body)
              AND json_extract(body, '$.run') IS run
              AND json_extract(body, '$.sequence') IS sequence),
+  sum      INTEGER,
   UNIQUE (run, sequence)
 ) STRICT;
 
