@@ -44,6 +44,11 @@ type Message struct {
 type Last struct {
 	Message
 	Sequence uint64
+
+	// Renew is not nil when messages are gone between the stream's first and its last, by damage: the
+	// limits take from the front only. It makes the stream anew, empty. Message is then one that is
+	// still there.
+	Renew func(context.Context) error
 }
 
 // Sink is a stream.
@@ -156,6 +161,13 @@ func (c *Courier) pass(ctx context.Context, more func(context.Context) bool) (ca
 	cursor, err := c.find(ctx, last)
 	if err != nil {
 		return 0, err
+	}
+	if last.Renew != nil { // what stands behind a hole would never be filled in front of it
+		c.become(fmt.Errorf("stream %s: messages are gone from its middle: it is made anew and filled again from the logbook", protocol.Stream(c.bench)))
+		if err := last.Renew(ctx); err != nil {
+			return 0, fmt.Errorf("stream %s: messages are gone from its middle, and it cannot be made anew: %w", protocol.Stream(c.bench), err)
+		}
+		last, cursor = Last{}, 0
 	}
 	if err := c.stand(ctx, cursor); err != nil {
 		return 0, err

@@ -85,11 +85,32 @@ func (s *Stream) Last(ctx context.Context) (Last, error) {
 	if state.Msgs == 0 {
 		return Last{Sequence: state.LastSeq}, nil
 	}
+	end := Last{Sequence: state.LastSeq}
+	if state.LastSeq-state.FirstSeq+1 != state.Msgs {
+		end.Renew = s.renew
+	}
 	m, err := stream.GetMsg(ctx, state.LastSeq)
+	if errors.Is(err, jetstream.ErrMsgNotFound) && end.Renew != nil {
+		if m, err = stream.GetMsg(ctx, state.FirstSeq); errors.Is(err, jetstream.ErrMsgNotFound) {
+			return end, nil // whose they were cannot be seen
+		}
+	}
 	if err != nil {
 		return Last{}, fmt.Errorf("message %d: %w", state.LastSeq, err)
 	}
-	return Last{Message: Message{Subject: m.Subject, ID: m.Header.Get(nats.MsgIdHdr), Body: m.Data}, Sequence: m.Sequence}, nil
+	end.Message = Message{Subject: m.Subject, ID: m.Header.Get(nats.MsgIdHdr), Body: m.Data}
+	return end, nil
+}
+
+// renew makes the stream anew. Nothing is lost by it: the journal has every message.
+func (s *Stream) renew(ctx context.Context) error {
+	ctx, cancel := context.WithTimeout(ctx, answerTime)
+	defer cancel()
+	if err := s.js.DeleteStream(ctx, s.want.Name); err != nil && !errors.Is(err, jetstream.ErrStreamNotFound) {
+		return err
+	}
+	_, err := s.js.CreateStream(ctx, s.want)
+	return err
 }
 
 // asWanted compares what we set; a server adds entries of its own.

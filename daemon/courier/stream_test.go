@@ -358,3 +358,47 @@ func BenchmarkPublish(b *testing.B) {
 	b.ReportMetric(float64(time.Second)/float64(plain), "plain_fsyncs/s")
 	b.ReportMetric(float64(each)/float64(plain), "fsyncs/publish")
 }
+
+// Messages that are gone between others, as after a damaged disk, are not filled in where they were:
+// the stream is made anew, unless it is another logbook's.
+func TestARealStreamWithAHoleIsMadeAnew(t *testing.T) {
+	for name, gone := range map[string][]uint64{"in its middle": {3, 4}, "at its end": {5, 6}} {
+		t.Run(name, func(t *testing.T) {
+			p := newPlace(t)
+			j, theirs := &journal{}, &journal{}
+			j.add(entries("r1", 1, 6)...)
+			theirs.add(entries("r9", 1, 6)...)
+			finish(t, j, p.stream(courier.StreamConfig{}))
+			// Nobody may delete a message, so a stream that lets them be is put in its place.
+			js := p.js()
+			name := protocol.Stream(bench)
+			if err := js.DeleteStream(t.Context(), name); err != nil {
+				t.Fatal(err)
+			}
+			stream, err := js.CreateStream(t.Context(), jetstream.StreamConfig{Name: name, Subjects: protocol.StreamSubjects(bench)})
+			if err != nil {
+				t.Fatal(err)
+			}
+			for _, e := range j.entries {
+				m := &nats.Msg{Subject: protocol.Subject(bench, e.Kind, e.Run), Data: e.Body, Header: nats.Header{nats.MsgIdHdr: {e.Entry.ID()}}}
+				if _, err := js.PublishMsg(t.Context(), m); err != nil {
+					t.Fatal(err)
+				}
+			}
+			for _, n := range gone {
+				if err := stream.DeleteMsg(t.Context(), n); err != nil {
+					t.Fatal(err)
+				}
+			}
+			c := courier.New(bench, theirs, p.stream(courier.StreamConfig{}), nil)
+			if err := c.Finish(t.Context()); !errors.Is(err, courier.ErrForeign) {
+				t.Errorf("another logbook's courier: %v; want ErrForeign", err)
+			}
+			j.add(entries("r2", 1, 1)...)
+			finish(t, j, p.stream(courier.StreamConfig{}))
+			if got, want := p.ids(), j.ids(); !slices.Equal(got, want) {
+				t.Errorf("the stream holds %v; want %v", got, want)
+			}
+		})
+	}
+}
