@@ -145,13 +145,16 @@ func parse(t *testing.T, text string) *File {
 }
 
 // with returns the demo bench's text with one piece replaced.
-func with(t *testing.T, old, now string) string {
+func with(t *testing.T, changes ...string) string {
 	t.Helper()
 	text := demo(t).Text
-	if strings.Count(text, old) != 1 {
-		t.Fatalf("%q stands %d times in the demo bench; want once", old, strings.Count(text, old))
+	for i := 0; i < len(changes); i += 2 {
+		if old := changes[i]; strings.Count(text, old) != 1 {
+			t.Fatalf("%q stands %d times in the demo bench; want once", old, strings.Count(text, old))
+		}
+		text = strings.Replace(text, changes[i], changes[i+1], 1)
 	}
-	return strings.Replace(text, old, now, 1)
+	return text
 }
 
 // withSettings is the demo bench with three settings more, and another piece replaced.

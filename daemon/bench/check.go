@@ -185,6 +185,15 @@ func (r *reader) checkHoming() {
 		}
 		orders := map[int]drivers.AxisName{}
 		for _, a := range mine {
+			switch {
+			case a.Verify == nil:
+			case !c.marks:
+				r.fail(a.verifyAt, fmt.Sprintf("a zero to be verified, though %s has no question \"mark\"", c.Name), "that question: it searches the reference mark and keeps the zero")
+			case a.HomesAt == nil:
+				r.fail(a.verifyAt, "a zero to be verified, and no place where its mark is", "home: {at: …}, where the search leaves the axis")
+			case a.Verify.Tolerance < a.Tolerance:
+				r.fail(a.verifyAt, fmt.Sprintf("a tolerance of %s below the axis's own, %s", a.Verify.Tolerance, a.Tolerance), "at least that: no move is nearer to its target")
+			}
 			other, twice := orders[a.HomeOrder]
 			switch {
 			case !a.Unattended && slices.ContainsFunc(mine, func(b Axis) bool { return b.Unattended }):

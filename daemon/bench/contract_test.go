@@ -143,12 +143,12 @@ func spoiledFile(t *testing.T, f *File, lineName, device string) (*Bench, *Virtu
 	return b, v, s.wire(v, device)
 }
 
-func stageSetup(index int, lineName string, places [2]map[drivers.AxisName]unit.Angle) func(*testing.T) drivertest.StageSetup {
+func stageSetup(index int, lineName string, places [2]map[drivers.AxisName]unit.Angle, marks map[drivers.AxisName]unit.Angle, change ...string) func(*testing.T) drivertest.StageSetup {
 	return func(t *testing.T) drivertest.StageSetup {
 		device := map[string]string{"arms": "rotary", "waveplate": "plate"}[lineName]
-		b, v, wire := spoiled(t, lineName, device)
+		b, v, wire := spoiledFile(t, parse(t, with(t, append([]string{"  clock: 100 ", "  clock: 1 "}, change...)...)), lineName, device)
 		stage := b.Stages[index]
-		return drivertest.StageSetup{Stage: stage, Wire: wire, Places: places, Tolerance: unit.Degrees(0.002),
+		setup := drivertest.StageSetup{Stage: stage, Wire: wire, Places: places, Tolerance: unit.Degrees(0.002), Marks: marks,
 			True: func() map[drivers.AxisName]unit.Angle {
 				at := map[drivers.AxisName]unit.Angle{}
 				for _, axis := range stage.Axes() {
@@ -160,6 +160,15 @@ func stageSetup(index int, lineName string, places [2]map[drivers.AxisName]unit.
 				}
 				return at
 			}}
+		if len(change) > 0 { // its position is only counted
+			setup.Push = func(axis drivers.AxisName, by unit.Angle) {
+				if err := v.World.Let(trouble.Trouble{Kind: trouble.Slip, Device: string(axis), ByDeg: by.Degrees()}); err != nil {
+					t.Fatal(err)
+				}
+				time.Sleep(time.Millisecond) // virtual: until it has slipped
+			}
+		}
+		return setup
 	}
 }
 
@@ -170,14 +179,20 @@ func TestContractOfStages(t *testing.T) {
 		drivertest.Stage(t, synctest.Test, stageSetup(0, "arms", [2]map[drivers.AxisName]unit.Angle{
 			{"signal_arm": unit.Degree, "idler_arm": 2 * unit.Degree, "crystal_tilt": 0},
 			{"signal_arm": 9 * unit.Degree, "idler_arm": 8 * unit.Degree, "crystal_tilt": unit.Degree},
-		}))
+		}, map[drivers.AxisName]unit.Angle{"signal_arm": unit.Degrees(11.5), "idler_arm": unit.Degrees(11.5), "crystal_tilt": 0}))
 	})
+	plate := [2]map[drivers.AxisName]unit.Angle{{"pump_waveplate": 0}, {"pump_waveplate": 90 * unit.Degree}}
 	t.Run("custom", func(t *testing.T) {
-		drivertest.Stage(t, synctest.Test, stageSetup(1, "waveplate", [2]map[drivers.AxisName]unit.Angle{
-			{"pump_waveplate": 0}, {"pump_waveplate": 90 * unit.Degree},
-		}))
+		drivertest.Stage(t, synctest.Test, stageSetup(1, "waveplate", plate, map[drivers.AxisName]unit.Angle{"pump_waveplate": 0}))
+	})
+	t.Run("custom, position only counted", func(t *testing.T) {
+		drivertest.Stage(t, synctest.Test, stageSetup(1, "waveplate", plate, map[drivers.AxisName]unit.Angle{"pump_waveplate": 60 * unit.Degree}, countedPlate...))
 	})
 }
+
+// countedPlate changes the demo bench so that the wave plate's position is only counted.
+var countedPlate = []string{"    park: 0 deg\n    position_from: encoder\n    home: {unattended: true, order: 1}\n",
+	"    park: 0 deg\n    position_from: steps\n    verify_home: {every: 30 min, tolerance: 0.02 deg}\n    home: {unattended: true, order: 1, at: 60 deg}\n"}
 
 // last returns the newest record of a device of one of the kinds, and how many there are.
 func last(v *Virtual, device string, kinds ...instruments.Kind) (newest instruments.Record, n int) {
@@ -254,4 +269,17 @@ func TestContractOfSettings(t *testing.T) {
 			return r.Value * 1e3 // W to mW
 		}}
 	})
+}
+
+func TestACountedPositionIsReportedAndVerified(t *testing.T) {
+	f := parse(t, with(t, countedPlate...))
+	for _, a := range f.Axes {
+		counted := a.Name == "pump_waveplate"
+		if (a.Proof == drivers.Reported) != counted || (a.Verify != nil) != counted {
+			t.Errorf("%s: positions %s, to be verified %+v; want the plate's alone reported and verified", a.Name, a.Proof, a.Verify)
+		}
+		if counted && (a.Verify.Every != 30*time.Minute || a.Verify.Tolerance != unit.Degrees(0.02) || *a.HomesAt != 60*unit.Degree) {
+			t.Errorf("%s: %+v at %v; want what the file says", a.Name, a.Verify, *a.HomesAt)
+		}
+	}
 }

@@ -303,12 +303,12 @@ func customFor(c custom.Common, d Device, pace drivers.Pace) custom.Common {
 
 func customStage(m strict.Map) stageReading {
 	c := custom.StageConfig{
-		Common:    customCommon(m, []string{"where", "at_rest", "move", "stop"}, []string{"homed", "home", "identity"}),
+		Common:    customCommon(m, []string{"where", "at_rest", "move", "stop"}, []string{"homed", "home", "mark", "identity"}),
 		FeedUnit:  m.Opt("feed_unit").Choice([]string{"deg/min", "deg/s"}, ""),
 		PollEvery: m.Opt("poll_every").Duration(time.Millisecond, maxPoll), Margin: m.Opt("margin").Duration(0, maxMove),
 		MoveWithin: m.Opt("move_within").Duration(0, maxMove), HomeWithin: m.Opt("home_within").Duration(0, maxMove),
 	}
-	return stageWith(c.Dialect.Asks["home"], func(l *line.Line, pace drivers.Pace, d Controller, axes []custom.Axis) (drivers.Stage, error) {
+	return stageWith(c.Dialect.Asks, func(l *line.Line, pace drivers.Pace, d Controller, axes []custom.Axis) (drivers.Stage, error) {
 		c := c
 		c.Common, c.Axes, c.Together = customFor(c.Common, d.Device, pace), axes, d.Together
 		return custom.NewStage(l, c)
@@ -319,12 +319,13 @@ func customStage(m strict.Map) stageReading {
 type stageReading struct {
 	make     stageMaker
 	homes    bool // it can search for its zero
+	marks    bool // it can look for its reference mark and keep the zero
 	homesAll bool // and then only all axes at once
 }
 
-func stageWith(home custom.Ask, make stageMaker) stageReading {
-	question := home.Send + home.Bytes
-	return stageReading{make: make, homes: question != "", homesAll: question != "" && !strings.Contains(question, "{letter}") && !strings.Contains(question, "{address}")}
+func stageWith(asks map[string]custom.Ask, make stageMaker) stageReading {
+	question := asks["home"].Send + asks["home"].Bytes
+	return stageReading{make: make, marks: asks["mark"].Send+asks["mark"].Bytes != "", homes: question != "", homesAll: question != "" && !strings.Contains(question, "{letter}") && !strings.Contains(question, "{address}")}
 }
 
 func customCounter(m strict.Map) counterMaker {
@@ -385,10 +386,10 @@ func gcodeStage(m strict.Map) stageReading {
 		PollEvery: m.Opt("poll_every").Duration(time.Millisecond, maxPoll), Margin: m.Opt("margin").Duration(0, maxMove),
 		MoveWithin: m.Opt("move_within").Duration(0, maxMove), HomeWithin: m.Opt("home_within").Duration(0, maxMove),
 	}
-	all := asks(m, []string{"where", "at_rest", "stop"}, []string{"homed", "home", "identity"})
-	c.Position, c.AtRest, c.Stop, c.Homed, c.Home, c.AskWho = all["where"], all["at_rest"], all["stop"], all["homed"], all["home"], all["identity"]
+	all := asks(m, []string{"where", "at_rest", "stop"}, []string{"homed", "home", "mark", "identity"})
+	c.Position, c.AtRest, c.Stop, c.Homed, c.Home, c.Mark, c.AskWho = all["where"], all["at_rest"], all["stop"], all["homed"], all["home"], all["mark"], all["identity"]
 	m.Later("frame")
-	return stageWith(c.Home, func(l *line.Line, pace drivers.Pace, d Controller, axes []custom.Axis) (drivers.Stage, error) {
+	return stageWith(all, func(l *line.Line, pace drivers.Pace, d Controller, axes []custom.Axis) (drivers.Stage, error) {
 		c := c
 		c.Name, c.Identity, c.Pace, c.Axes = d.Name, d.Identity, pace, axes
 		return gcode.NewStage(l, c)

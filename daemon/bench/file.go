@@ -147,7 +147,7 @@ type Axis struct {
 	HomeOrder    int        // place among its controller's axes in that search
 	AllAtOnce    bool       // the file accepts that the controller searches all axes at once
 
-	at, controllerAt, letterAt, homeAt strict.Place
+	at, controllerAt, letterAt, homeAt, verifyAt strict.Place
 }
 
 // Counter is the gated counter.

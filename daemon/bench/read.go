@@ -9,6 +9,7 @@ import (
 	"gemel/drivers"
 	"gemel/protocol/strict"
 	"gemel/protocol/unit"
+	"gemel/scan"
 	"gemel/sim/source"
 )
 
@@ -177,17 +178,32 @@ func (r *reader) axes(v strict.Value) {
 			m.Fail("one of steps_per_turn and gear", "both or neither")
 		}
 		a.Proof = drivers.Proved
-		if from := m.Need("position_from"); from.Choice([]string{"encoder", "steps"}) == "steps" {
-			from.Fail(`"steps": not available yet`, `"encoder": a position that is only counted needs verify_home, which nothing acts on yet, or a slip would stay unseen`)
-			m.Opt("verify_home")
-		} else {
-			m.Refuse("only with position_from: steps", "no such key", "verify_home")
+		from, verify := m.Need("position_from"), m.Opt("verify_home")
+		if from.Choice([]string{"encoder", "steps"}) == "steps" {
+			a.Proof = drivers.Reported
+			if m.Given() && !verify.Given() {
+				from.Fail(`"steps" without verify_home`, `verify_home: {every: 30 min, tolerance: …} beside it, or "encoder": where a position is only counted, a slip does not show until the zero is looked for`)
+			}
 		}
+		readVerify(verify, &a)
 		a.Error = m.Opt("error").Angle(0, unit.Turn)
 		readHome(home, &a)
 		m.Done()
 		r.file.Axes = append(r.file.Axes, a)
 	}
+}
+
+// longestUnverified is the longest between two looks at a reference mark.
+const longestUnverified = 7 * 24 * time.Hour
+
+func readVerify(v strict.Value, a *Axis) {
+	a.verifyAt = v.Place()
+	if !v.Given() {
+		return
+	}
+	m := v.Map()
+	a.Verify = &scan.Verify{Every: m.Opt("every").Duration(time.Minute, longestUnverified), Tolerance: m.Need("tolerance").Angle(unit.MicroArcsecond, unit.Turn)}
+	m.Done()
 }
 
 // limits reads [low, high].

@@ -94,7 +94,7 @@ func soundFiles(t *testing.T) sound {
 lines: {a: {device: /dev/a}, b: {device: /dev/b}, c: {device: /dev/c}, d: {device: /dev/d}, e: {device: /dev/e}, f: {device: /dev/f}, g: {device: /dev/g}, h: {device: /dev/h}, tcp: {device: "tcp://192.0.2.17:5025"}},
 controllers: {
  rotary: {line: a, dialect: gcode, motion: together, ack: ok, asks: {where: {send: W, match: "A(?P<A>[-0-9.]+) B(?P<B>[-0-9.]+) C(?P<C>[-0-9.]+)"}, at_rest: {send: R, match: S, otherwise: M}, stop: {bytes: '\x18'}}},
- own: {line: b, dialect: custom, motion: each, asks: {where: {send: "P{address}", match: "P(?P<angle>-?[0-9.]+)"}, move: {send: "M{address} {angle}", match: OK}, at_rest: {send: "S{address}", match: IDLE, otherwise: BUSY}, stop: {bytes: '\x18'}, home: {send: H, match: OK}}}},
+ own: {line: b, dialect: custom, motion: each, asks: {where: {send: "P{address}", match: "P(?P<angle>-?[0-9.]+)"}, move: {send: "M{address} {angle}", match: OK}, at_rest: {send: "S{address}", match: IDLE, otherwise: BUSY}, stop: {bytes: '\x18'}, home: {send: H, match: OK}, mark: {send: "R{address}", match: OK}}}},
 axes: {
  signal_arm: {role: signal_arm, controller: rotary, letter: A, limits: [-1 deg, 12 deg], speed: 6 deg/s, acceleration: 30 deg/s2, tolerance: 0.002 deg, position_from: encoder},
  idler_arm: {role: idler_arm, controller: rotary, letter: B, limits: [-1 deg, 12 deg], speed: 6 deg/s, acceleration: 30 deg/s2, tolerance: 0.002 deg, position_from: encoder},

@@ -15,7 +15,7 @@ type Dialect struct {
 	AnswersEndWith string // ends each answer; empty: the line's
 	Echo           bool   // the instrument repeats each question before it answers
 
-	Asks    map[string]Ask // by question: where at_rest homed move stop home arm counts identity set get
+	Asks    map[string]Ask // by question: where at_rest homed move stop home mark arm counts identity set get
 	Refused string         // pattern of a refusal of any question, with an optional group reason
 	Unasked []Unasked      // what comes without having been asked for
 	Start   []Ask          // sent by each Connect, one after the other
@@ -31,7 +31,7 @@ type Ask struct {
 	Bytes     string // instead of Send: exactly these bytes, without a terminator
 	Match     string // pattern of the answer, or of the answer "yes"; empty: nothing is answered
 	Otherwise string // pattern of the answer "no"
-	Proves    string // for move and home: "accepted" (the default) or "arrived"
+	Proves    string // for move, home and mark: "accepted" (the default) or "arrived"
 
 	AngleIs  unit.Angle    // what 1 in {angle} or the groups for angles means; 0: 1 deg, or the axis's steps
 	UnitIs   string        // the unit of {value} and the group value, a spelling of package unit; empty: the device's

@@ -24,7 +24,7 @@ import (
 
 // Questions are all the names an entry of Asks may have.
 func Questions() []string {
-	return []string{"where", "at_rest", "homed", "move", "stop", "home", "arm", "counts", "identity", "set", "get"}
+	return []string{"where", "at_rest", "homed", "move", "stop", "home", "mark", "arm", "counts", "identity", "set", "get"}
 }
 
 // question is one entry, checked and compiled.
@@ -208,7 +208,7 @@ func compile(bad *faults, where, name string, a Ask, names, groups []string) *qu
 		}
 		fallthrough
 	default:
-		if name != "move" && name != "home" || a.Proves != "arrived" {
+		if name != "move" && name != "home" && name != "mark" || a.Proves != "arrived" {
 			bad.add(where+".proves", "%q; want accepted, or for move and home arrived", a.Proves)
 		}
 	}

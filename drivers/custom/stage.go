@@ -7,6 +7,7 @@ import (
 	"maps"
 	"math"
 	"math/big"
+	"slices"
 	"strings"
 	"sync"
 	"time"
@@ -43,6 +44,7 @@ func NewStage(l *line.Line, c StageConfig) (*Stage, error) {
 			"move":     {{"letter", "address", "angle", "feed", "targets"}, nil},
 			"stop":     {one, nil},
 			"home":     {one, nil},
+			"mark":     {one, nil},
 			"identity": {nil, []string{"identity"}},
 		},
 		needed: []string{"where", "move", "stop"},
@@ -131,6 +133,14 @@ func (s *Stage) check(bad *faults) {
 			s.needGroups(bad, q, "")
 		}
 	}
+	if q := s.questions["mark"]; q != nil {
+		if !q.perAxis() && len(s.set.Axes) > 1 {
+			bad.add("asks.mark.send", "%q for %d axes; want {letter} or {address}", q.ask.Send+q.ask.Bytes, len(s.set.Axes))
+		}
+		if q.ask.Match == "" {
+			bad.add("asks.mark", "no match; want the answer to a search that was accepted, or is over")
+		}
+	}
 	if q := s.questions["at_rest"]; q != nil && (q.ask.Match == "" || q.ask.Otherwise == "") {
 		bad.add("asks.at_rest", "want match and otherwise: the answers for yes and for no")
 	}
@@ -211,19 +221,23 @@ func (s *Stage) trust(axis drivers.AxisName) {
 // Where asks for the angles until two answers in a row agree to the letter, and whether the
 // controller still knows its zero.
 func (s *Stage) Where(ctx context.Context) (map[drivers.AxisName]unit.Angle, error) {
-	position, err := s.proven(ctx, "where", nil)
+	return s.where(ctx, "where", nil)
+}
+
+func (s *Stage) where(ctx context.Context, op string, epoch line.Epoch) (map[drivers.AxisName]unit.Angle, error) {
+	position, err := s.proven(ctx, op, epoch)
 	if err != nil {
 		return nil, err
 	}
 	homed := position.homed
 	if len(homed) < len(s.set.Axes) {
-		if homed, err = s.homed(ctx, "where"); err != nil {
+		if homed, err = s.homed(ctx, op); err != nil {
 			return nil, err
 		}
 	}
 	for _, a := range s.set.Axes {
 		if !homed[a.Name] && !s.vouched(a.Name) {
-			return nil, s.errorf("where", drivers.HomeAgain, "%s does not know its zero", a.Name)
+			return nil, s.errorf(op, drivers.HomeAgain, "%s does not know its zero", a.Name)
 		}
 	}
 	return position.angles, nil
@@ -681,22 +695,9 @@ func (s *Stage) Home(ctx context.Context, order []drivers.AxisName) error {
 
 // search runs one reference search, for the axes that take part in it.
 func (s *Stage) search(ctx context.Context, axes []Axis, epoch line.Epoch) error {
-	q := s.questions["home"]
-	var r reply
-	ask := s.question(q, "home", axes[0].values(), &r)
-	ask.Epoch = epoch
-	if q.ask.Proves == "arrived" && q.ask.Within == 0 {
-		ask.Within = s.common.Pace.Real(s.set.HomeWithin)
-	}
-	_, unacknowledged := s.seat.Ask(ctx, ask)
-	if err := unacknowledged; err != nil && !uncertain(err) {
-		if f := faultOf(err); f != nil && !f.Sent {
-			return err
-		}
-		return s.halted(ctx, epoch, err)
-	}
-	if err := s.untilRest(ctx, "home", epoch, s.set.HomeWithin); err != nil {
-		return s.halted(ctx, epoch, err)
+	unacknowledged, err := s.seek(ctx, "home", axes[0], epoch)
+	if err != nil {
+		return err
 	}
 	homed, err := s.homed(ctx, "home")
 	if err != nil {
@@ -718,4 +719,53 @@ func (s *Stage) search(ctx context.Context, axes []Axis, epoch line.Epoch) error
 		s.trust(a.Name)
 	}
 	return nil
+}
+
+// seek sends a search for a reference and waits until it is at rest. unacknowledged says why nobody can
+// say that it took place, though nothing moves any more.
+func (s *Stage) seek(ctx context.Context, op string, a Axis, epoch line.Epoch) (unacknowledged, err error) {
+	q := s.questions[op]
+	var r reply
+	ask := s.question(q, op, a.values(), &r)
+	ask.Epoch = epoch
+	if q.ask.Proves == "arrived" && q.ask.Within == 0 {
+		ask.Within = s.common.Pace.Real(s.set.HomeWithin)
+	}
+	_, unacknowledged = s.seat.Ask(ctx, ask)
+	if err := unacknowledged; err != nil && !uncertain(err) {
+		if f := faultOf(err); f != nil && !f.Sent {
+			return nil, err
+		}
+		return nil, s.halted(ctx, epoch, err)
+	}
+	if err := s.untilRest(ctx, op, epoch, s.set.HomeWithin); err != nil {
+		return nil, s.halted(ctx, epoch, err)
+	}
+	return unacknowledged, nil
+}
+
+// Mark searches the reference mark of an axis by the question mark, which leaves the zero as it is and
+// the axis at its mark, and returns the angle that the controller then reports for it.
+func (s *Stage) Mark(ctx context.Context, axis drivers.AxisName) (unit.Angle, error) {
+	q := s.questions["mark"]
+	i := slices.IndexFunc(s.set.Axes, func(a Axis) bool { return a.Name == axis })
+	switch {
+	case q == nil:
+		return 0, s.errorf("mark", drivers.GiveUp, "the controller has no search that keeps the zero; want the question mark")
+	case i < 0:
+		return 0, s.errorf("mark", drivers.GiveUp, "no axis %q; want one of %v", axis, s.Axes())
+	}
+	epoch := s.seat.Epoch()
+	if _, err := s.where(ctx, "mark", epoch); err != nil {
+		return 0, err // there is a zero to be kept
+	}
+	unacknowledged, err := s.seek(ctx, "mark", s.set.Axes[i], epoch)
+	if err == nil {
+		err = unacknowledged
+	}
+	if err != nil {
+		return 0, err
+	}
+	at, err := s.where(ctx, "mark", epoch)
+	return at[axis], err
 }

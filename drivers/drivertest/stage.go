@@ -19,6 +19,10 @@ type StageSetup struct {
 	// True says where the axes stand in truth, as bench angles.
 	True      func() map[drivers.AxisName]unit.Angle
 	Tolerance unit.Angle // between that and what is reported
+	// Marks says where the axes' reference marks are, by a true zero, for a stage that can look for
+	// them; nil: it cannot. Push pushes an axis without its controller's knowing; nil: not possible.
+	Marks map[drivers.AxisName]unit.Angle
+	Push  func(axis drivers.AxisName, by unit.Angle)
 }
 
 // Stage holds a stage to the contract.
@@ -103,6 +107,77 @@ func Stage(t *testing.T, run Run, setup func(t *testing.T) StageSetup) {
 			s.near(t, "after the move", before, s.Places[0])
 			s.standsAt(t, s.Places[0])
 		})
+	})
+	marks := func(s StageSetup) drivers.Verifier {
+		v, _ := s.Stage.(drivers.Verifier)
+		return v
+	}
+	test("a search for the mark says where it is, and keeps the zero", func(t *testing.T, s StageSetup) {
+		if s.Marks == nil {
+			t.Skip("SKIPPED: the caller says of no mark")
+		}
+		s.move(t, s.Places[0])
+		for axis, mark := range s.Marks {
+			at, err := marks(s).Mark(t.Context(), axis)
+			if err != nil || (at-mark).Abs() > s.Tolerance {
+				t.Errorf("%s: the mark is found at %v, %v; want %v", axis, at, err, mark)
+			}
+			s.near(t, "in truth", s.True(), map[drivers.AxisName]unit.Angle{axis: mark})
+			if s.Push == nil {
+				continue
+			}
+			by := 20 * s.Tolerance
+			s.Push(axis, by)
+			if at, err = marks(s).Mark(t.Context(), axis); err != nil || (at+by-mark).Abs() > s.Tolerance {
+				t.Errorf("%s, pushed by %v: the mark is found at %v, %v; want %v", axis, by, at, err, mark-by)
+			}
+			s.near(t, "in truth", s.True(), map[drivers.AxisName]unit.Angle{axis: mark})
+		}
+		_, err := marks(s).Mark(t.Context(), "no_such_axis")
+		proper(t, "mark", err, drivers.GiveUp)
+	})
+	t.Run("whatever happens to an answer, a mark is where it is said to be", func(t *testing.T) {
+		hooks(t, run, func(t *testing.T) Wire { return setup(t).Wire }).each(t, run, func(t *testing.T, plan func(Wire)) {
+			s := ready(t)
+			if s.Marks == nil {
+				t.Skip("SKIPPED: the caller says of no mark")
+			}
+			axis := s.Stage.Axes()[0]
+			plan(s.Wire)
+			settled(t, "mark", func() error {
+				at, err := marks(s).Mark(t.Context(), axis)
+				if err == nil && (at-s.Marks[axis]).Abs() > s.Tolerance {
+					t.Errorf("the mark is found at %v; want %v", at, s.Marks[axis])
+				}
+				return err
+			})
+			s.near(t, "in truth", s.True(), map[drivers.AxisName]unit.Angle{axis: s.Marks[axis]})
+		})
+	})
+	test("no mark is looked for without a zero to keep", func(t *testing.T, s StageSetup) {
+		if s.Marks == nil || s.Wire.Restart == nil {
+			t.Skip("SKIPPED: the caller has no hook for a restart, or says of no mark")
+		}
+		s.Wire.Restart()
+		if err := s.Stage.Connect(t.Context()); err != nil {
+			t.Fatalf("connect: %v", err)
+		}
+		before := s.True()
+		_, err := marks(s).Mark(t.Context(), s.Stage.Axes()[0])
+		proper(t, "mark", err, drivers.HomeAgain)
+		s.near(t, "in truth", s.True(), before)
+	})
+	test("the end of a context stops a search for the mark within a second", func(t *testing.T, s StageSetup) {
+		if s.Marks == nil {
+			t.Skip("SKIPPED: the caller says of no mark")
+		}
+		s.move(t, s.Places[0])
+		ctx, cancel := context.WithTimeout(t.Context(), 50*time.Millisecond)
+		defer cancel()
+		start := time.Now().Add(50 * time.Millisecond)
+		_, err := marks(s).Mark(ctx, s.Stage.Axes()[0])
+		endedWithin(t, "mark", start, err)
+		s.rests(t)
 	})
 	test("the end of a context stops a move within a second", func(t *testing.T, s StageSetup) {
 		s.move(t, s.Places[0])

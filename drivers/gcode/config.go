@@ -33,6 +33,7 @@ type Config struct {
 	Stop     custom.Ask // needed
 	Homed    custom.Ask // Send empty: the controller cannot tell
 	Home     custom.Ask // Send empty: it has no reference search
+	Mark     custom.Ask // Send empty: it cannot search its reference mark and keep the zero
 	AskWho   custom.Ask // Send empty: it has no identity
 
 	// Start lines are sent by each Connect and acknowledged; nil takes "G21 G90 G94", "G54",

@@ -57,7 +57,7 @@ func NewStage(l *line.Line, c Config) (*custom.Stage, error) {
 		},
 	}
 	for name, a := range map[string]custom.Ask{
-		"where": c.Position, "at_rest": c.AtRest, "stop": c.Stop, "homed": c.Homed, "home": c.Home, "identity": c.AskWho,
+		"where": c.Position, "at_rest": c.AtRest, "stop": c.Stop, "homed": c.Homed, "home": c.Home, "mark": c.Mark, "identity": c.AskWho,
 	} {
 		if a.Send != "" || a.Bytes != "" {
 			stage.Dialect.Asks[name] = a

@@ -36,6 +36,7 @@ func config() gcode.Config {
 		Stop:     custom.Ask{Bytes: `\x03`},
 		Homed:    custom.Ask{Send: "REFD", Match: "REFD A(?P<A>[01]) B(?P<B>[01]) C[01]"},
 		Home:     custom.Ask{Send: "REF {letter}", Match: "TAKEN"},
+		Mark:     custom.Ask{Send: "MARK {letter}", Match: "TAKEN"},
 		AskWho:   custom.Ask{Send: "WHO", Match: "WHO (?P<identity>.*)"},
 	}
 }
@@ -96,6 +97,15 @@ func (c *controller) answer(text string) string {
 		c.homing = strings.Index("AB", text[4:]) + 1
 		to := c.to
 		to[c.homing-1] = 0
+		c.turn(to, 2)
+		return "TAKEN"
+	case strings.HasPrefix(text, "MARK "):
+		axis := strings.Index("AB", text[5:])
+		if !c.homed[axis] {
+			return "REFUSED no zero"
+		}
+		to := c.to
+		to[axis] = 0
 		c.turn(to, 2)
 		return "TAKEN"
 	case text == "G21 G90 G94", text == "G54", text == "G92.1":
@@ -167,6 +177,7 @@ func TestContract(t *testing.T) {
 				{"signal_arm": unit.Degrees(1.5), "idler_arm": unit.Degrees(-2.25)},
 				{"signal_arm": unit.Degrees(-1.25), "idler_arm": unit.Degrees(3)},
 			},
+			Marks: map[drivers.AxisName]unit.Angle{"signal_arm": 0, "idler_arm": unit.Degrees(2)},
 			True: func() map[drivers.AxisName]unit.Angle {
 				c.mu.Lock()
 				defer c.mu.Unlock()
