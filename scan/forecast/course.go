@@ -29,6 +29,19 @@ func (s Spent) All() time.Duration {
 	return s.Waiting + s.Moving + s.Settling + s.Counting + s.Beside + s.Overhead
 }
 
+func (s *Spent) add(t Spent) {
+	s.Waiting += t.Waiting
+	s.Moving += t.Moving
+	s.Settling += t.Settling
+	s.Counting += t.Counting
+	s.Beside += t.Beside
+	s.Overhead += t.Overhead
+}
+
+func (s Spent) less(t Spent) Spent {
+	return Spent{s.Waiting - t.Waiting, s.Moving - t.Moving, s.Settling - t.Settling, s.Counting - t.Counting, s.Beside - t.Beside, s.Overhead - t.Overhead}
+}
+
 // taken is one reading of the course.
 type taken struct {
 	kind    protocol.ReadingKind
@@ -62,14 +75,31 @@ type course struct {
 	shown   bool         // protectors open
 	gate    time.Duration
 
-	now   time.Duration
-	spent Spent
-	stuck map[int]error // points to which no way is free
+	now    time.Duration
+	spent  Spent
+	habits []habit
+	anew   bool // everything is worked out anew, for tests
+	stuck  map[int]error // points to which no way is free
 
 	// What one thing of a kind takes, worked out once.
 	closeAll, openAll, whereAll, sampleAll, guardAll, shownAll expense
 	glance                                                     time.Duration
 }
+
+// habit is a light reading that came before, and all that it took: one after the same move, on a bench
+// that stood alike, takes the same.
+type habit struct {
+	moved          []unit.Angle // of each axis
+	due            []bool
+	spent          Spent
+	all            time.Duration
+	started, ended time.Duration // since its begin
+	gate           time.Duration // counted
+	slices         float64
+}
+
+// mostHabits is how many are kept: the steps of a sweep, forth and back, and from line to line.
+const mostHabits = 6
 
 // expense is a time that is part settling, part overhead.
 type expense struct{ settle, overhead time.Duration }
@@ -87,6 +117,13 @@ func newCourse(plan *scan.Plan, b *Bench) (*course, error) {
 	}
 	if g := plan.Background; g != nil {
 		c.stand[c.axis(g.Axis)] = g.From
+	}
+	at := map[drivers.AxisName]unit.Angle{}
+	for i, a := range b.Axes {
+		at[a.Name] = b.Start[i]
+	}
+	if plan.Refine == nil { // its points are not in the plan
+		walk.Only(*plan, at)
 	}
 	if len(plan.Points) > 0 {
 		for _, t := range plan.Points[0].Axes {
@@ -192,7 +229,6 @@ func (c *course) wait(d time.Duration) {
 
 // take is one reading, in the engine's order: settings, move, guards, light, glance, slices, proof.
 func (c *course) take(f engine.Foreseen, r *taken) {
-	k := c.bench.Costs
 	c.stayAll()
 	var settings []scan.SettingTarget
 	switch f.Kind {
@@ -214,8 +250,21 @@ func (c *course) take(f engine.Foreseen, r *taken) {
 			c.there[i], c.target[i] = t.Angle, true
 		}
 	}
+	any := c.decide()
+	alike := f.Kind == protocol.Light && len(settings) == 0 && f.Dwell.Heralds == 0 && c.pumped && c.shown && c.walk.Free() && !c.anew
+	if alike && c.asBefore(r) {
+		return
+	}
+	began, before, gate := c.now, c.spent, c.gate
+	var h habit
+	if alike && len(c.habits) < mostHabits {
+		h = habit{due: slices.Clone(c.due), moved: make([]unit.Angle, len(c.here))}
+		for i := range c.here {
+			h.moved[i] = c.there[i] - c.here[i]
+		}
+	}
 	c.set(settings)
-	c.goTo(f.Visit.Point)
+	c.goTo(f.Visit.Point, any)
 	light := f.Kind != protocol.Dark
 	if light {
 		c.spend(c.guardAll)
@@ -232,8 +281,35 @@ func (c *course) take(f engine.Foreseen, r *taken) {
 	c.spend(c.shownAll)
 	c.spend(c.whereAll)
 	for _, s := range settings {
-		c.overhead(k.ask(s.Setting, askGet))
+		c.overhead(c.bench.Costs.ask(s.Setting, askGet))
 	}
+	if h.due != nil && c.gate == gate && c.pumped && c.shown {
+		h.spent, h.all, h.started, h.ended, h.gate, h.slices = c.spent.less(before), c.now-began, r.started-began, r.ended-began, r.gate, r.slices
+		c.habits = append(c.habits, h)
+	}
+}
+
+// asBefore does what was done before after the same move.
+func (c *course) asBefore(r *taken) bool {
+next:
+	for k := range c.habits {
+		h := &c.habits[k]
+		for i, due := range h.due {
+			if due != c.due[i] || due && h.moved[i] != c.there[i]-c.here[i] {
+				continue next
+			}
+		}
+		r.started, r.ended, r.gate, r.slices = c.now+h.started, c.now+h.ended, h.gate, h.slices
+		c.now += h.all
+		c.spent.add(h.spent)
+		for i, due := range c.due {
+			if due {
+				c.here[i], c.sent[i] = c.there[i], true
+			}
+		}
+		return true
+	}
+	return false
 }
 
 // stayAll makes every axis stay where it has to be: the course's own there is begun anew.
@@ -271,20 +347,22 @@ func (c *course) set(settings []scan.SettingTarget) {
 	}
 }
 
-// goTo moves what has to be moved, with the detectors protected.
-func (c *course) goTo(point int) {
-	c.spend(c.whereAll)
-	any := false
+// decide says which axes have to be moved, and whether there are any.
+func (c *course) decide() (any bool) {
 	for i := range c.there {
-		a := &c.bench.Axes[i]
-		switch {
-		case c.target[i]:
+		if c.target[i] {
 			c.due[i] = !c.sent[i] || c.here[i] != c.there[i]
-		default:
-			c.due[i] = (c.here[i] - c.there[i]).Abs() > a.Tolerance
+		} else {
+			c.due[i] = (c.here[i] - c.there[i]).Abs() > c.bench.Axes[i].Tolerance
 		}
 		any = any || c.due[i]
 	}
+	return any
+}
+
+// goTo moves what was decided, with the detectors protected.
+func (c *course) goTo(point int, any bool) {
+	c.spend(c.whereAll)
 	if !any {
 		return
 	}
@@ -417,7 +495,7 @@ func (c *course) end() {
 		c.shown = false
 		c.stayAll()
 		c.aim(c.plan.Points[0].Axes, true)
-		c.goTo(-1)
+		c.goTo(-1, c.decide())
 	}
 	rest := c.closeAll
 	if s := c.bench.Pump; s != nil {

@@ -8,6 +8,7 @@ import (
 	"io"
 	"math"
 	"math/rand/v2"
+	"reflect"
 	"slices"
 	"strings"
 	"testing"
@@ -313,6 +314,43 @@ func TestAPictureIsWholeAndSaysTheSentence(t *testing.T) {
 	}
 	if strings.Contains(picture, "NaN") || strings.Contains(picture, "Inf") {
 		t.Error("the picture has numbers that are none")
+	}
+}
+
+// What is taken from an earlier, equal reading is what would be worked out anew.
+func TestHabitsChangeNothing(t *testing.T) {
+	saved := 0
+	rapid.Check(t, func(t *rapid.T) {
+		p := grid([3]float64{2.7, 3.1, float64(rapid.IntRange(1, 5).Draw(t, "signal"))}, [3]float64{2.4, 3.3, float64(rapid.IntRange(2, 6).Draw(t, "idler"))}, rapid.Bool().Draw(t, "serpentine"))
+		p.Repeat.Times, p.Repeat.InPlace = rapid.IntRange(1, 3).Draw(t, "times"), rapid.Bool().Draw(t, "in place")
+		p.Repeat.Shuffled = rapid.Bool().Draw(t, "shuffled")
+		p.Dwell = scan.Dwell{Time: 5 * time.Second, Slice: time.Duration(rapid.IntRange(1, 5).Draw(t, "slice")) * time.Second}
+		dwell := scan.Dwell{Time: 3 * time.Second, Slice: 3 * time.Second}
+		p.Dark = &scan.Cadence{Dwell: dwell, EveryPoints: rapid.IntRange(1, 9).Draw(t, "points between darks")}
+		p.Background = &scan.Background{Cadence: scan.Cadence{Dwell: dwell, Every: time.Minute, AtEnd: true}, Axis: "plate", By: 45 * deg}
+		b := arms()
+		var all [2][]taken
+		var spent [2]Spent
+		for k := range all {
+			c, err := newCourse(&p, &b)
+			if err != nil {
+				t.Fatal(err)
+			}
+			c.anew = k == 1
+			c.run(evening, nil, func(r *taken) {
+				one := *r
+				one.at = slices.Clone(r.at)
+				all[k] = append(all[k], one)
+			})
+			spent[k] = c.spent
+			saved += len(c.habits)
+		}
+		if !reflect.DeepEqual(all[0], all[1]) || spent[0] != spent[1] {
+			t.Fatalf("%d readings in %+v by habit; %d in %+v anew", len(all[0]), spent[0], len(all[1]), spent[1])
+		}
+	})
+	if saved == 0 {
+		t.Error("no habit was ever formed")
 	}
 }
 

@@ -37,6 +37,9 @@ func CheckPlan(axes []scan.Axis, keepOuts []scan.KeepOut, plan scan.Plan, at map
 	if err != nil {
 		return nil, err
 	}
+	if b.roomy(plan, at) {
+		return nil, nil
+	}
 	c := &checker{bench: b, told: map[[2]int]bool{}, from: make([]unit.Angle, len(axes)), to: make([]unit.Angle, len(axes))}
 	here, known := b.place(at)
 	spoiled := -1
@@ -214,6 +217,77 @@ func (c *checker) atOnce(here, there []unit.Angle) bool {
 	}
 	for i := range c.fences {
 		if c.fences[i].crossed(here, c.to) || back && c.fences[i].crossed(c.to, there) {
+			return false
+		}
+	}
+	return true
+}
+
+// roomy says that nothing of a plan can be wrong: the box that holds all its places, and where axes
+// stand that it does not name, lies within the limits with room to approach, and no fence is about any
+// of it. Most plans are far from everything, and so a million points take no longer than reading them.
+func (b *bench) roomy(plan scan.Plan, at map[drivers.AxisName]unit.Angle) bool {
+	n := len(b.axes)
+	low, high, set, named := make([]unit.Angle, n), make([]unit.Angle, n), make([]bool, n), make([]bool, n)
+	wide := func(i int, a unit.Angle) {
+		if !set[i] {
+			low[i], high[i], set[i] = a, a, true
+		}
+		low[i], high[i] = min(low[i], a), max(high[i], a)
+	}
+	for i, a := range b.axes {
+		if place, known := at[a.Name]; known {
+			wide(i, place)
+		}
+	}
+	var columns []int
+	add := func(targets []scan.AxisTarget) bool {
+		for k, t := range targets {
+			i := -1
+			if k < len(columns) && b.axes[columns[k]].Name == t.Axis {
+				i = columns[k]
+			} else if known, ok := b.number[t.Axis]; ok {
+				i = known
+				if k == len(columns) {
+					columns = append(columns, i)
+				}
+			} else {
+				return false
+			}
+			named[i] = true
+			wide(i, t.Angle)
+		}
+		return true
+	}
+	for _, p := range plan.Points {
+		if !add(p.Axes) {
+			return false
+		}
+	}
+	if r := plan.Reference; r != nil {
+		for _, p := range r.Places {
+			if !add(p.Axes) {
+				return false
+			}
+		}
+	}
+	if g := plan.Background; g != nil && !add([]scan.AxisTarget{{Axis: g.Axis, Angle: g.From}}) {
+		return false
+	} else if g != nil {
+		wide(b.number[g.Axis], g.From+g.By)
+	}
+	for i, a := range b.axes {
+		if !named[i] {
+			continue
+		}
+		low[i], high[i] = min(low[i], approach(a, low[i])), max(high[i], approach(a, high[i]))
+		if !a.Limits(low[i]) || !a.Limits(high[i]) {
+			return false
+		}
+	}
+	for _, f := range b.fences {
+		f.line = false // anywhere in the box
+		if f.unknown(set) < 0 && f.crossed(low, high) {
 			return false
 		}
 	}

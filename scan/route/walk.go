@@ -55,6 +55,17 @@ func NewWalk(axes []scan.Axis, keepOuts []scan.KeepOut) (*Walk, error) {
 	return w, nil
 }
 
+// Only says that all moves are a plan's, from where the axes stand at first. Where that leaves every
+// keep-out far away, moves take no longer than their way, whatever the places: Free then is true.
+func (w *Walk) Only(plan scan.Plan, at map[drivers.AxisName]unit.Angle) {
+	if w.roomy(plan, at) {
+		w.fences = nil
+	}
+}
+
+// Free says that no keep-out is looked at.
+func (w *Walk) Free() bool { return len(w.fences) == 0 }
+
 // Go is the move of the axes marked from here to there; the others stand at here. Where only a closed
 // pump leaves a way, that is the way taken. The error says why there is none.
 func (w *Walk) Go(here, there []unit.Angle, sent []bool) (Trip, error) {
