@@ -240,12 +240,25 @@ func (k *Keeper) stopQueued(ctx context.Context, q protocol.RunRequest) (protoco
 	return reply, err
 }
 
+// busy says whether some run is being executed. Under order nothing can begin to be.
+func (k *Keeper) busy() bool {
+	k.mu.Lock()
+	defer k.mu.Unlock()
+	return k.current != nil
+}
+
 // endWaiting ends a run that no engine executes. What had begun was interrupted first, and that is
-// told: what was counted at that moment is lost.
+// told: what was counted at that moment is lost. The process that died may have left the bench hot,
+// and perhaps nobody has brought it to rest yet: that comes first, unless another run has the bench.
 func (k *Keeper) endWaiting(ctx context.Context, row logbook.RunRow, text, by string) error {
 	last, err := k.Book.Last(ctx, row.Run)
 	if err != nil {
 		return err
+	}
+	if row.State != protocol.Queued && !k.busy() {
+		if bad := engine.Rest(ctx, k.Bench); bad != "" {
+			text += "; THE REST STATE WAS NOT REACHED: " + bad
+		}
 	}
 	if row.State != protocol.Queued && !slices.Contains(row.Causes, protocol.ByRestart) {
 		causes := append(slices.Clone(row.Causes), protocol.ByRestart)

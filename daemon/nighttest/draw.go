@@ -237,9 +237,6 @@ func (d dice) guards(dark, reference bool) (guards []string) {
 	return guards
 }
 
-// Rests are the steps that a script may kill at.
-var killable = engine.Steps
-
 // script throws what goes wrong, who interferes, and when the process dies.
 func (d dice) script(file *bench.File, plans []scan.Plan) Script {
 	length := time.Duration(0)
@@ -250,23 +247,23 @@ func (d dice) script(file *bench.File, plans []scan.Plan) Script {
 		length += time.Duration(n) * (p.Dwell.Time + 1500*time.Millisecond)
 	}
 	s := Script{Troubles: trouble.Draw(d.Rand, trouble.Night{Targets: targets(file, readings), For: length, Kinds: trouble.Kinds(), LampHz: 6e6}, d.between(2, 12))}
-	answered := false
-	for range []int{0, 0, 1, 1, 2, 2, 3, 3, 3, 3}[d.IntN(10)] {
+	answered := 0
+	for range []int{0, 1, 2, 2, 3, 3, 3, 3}[d.IntN(8)] {
 		// Each life has to be long enough to meet its kill.
 		k := Kill{After: d.within(length / 4)}
-		if !d.in(5) {
-			k = Kill{Step: killable[d.IntN(len(killable))], Nth: d.between(1, 20)}
+		if !d.in(7) {
+			k = Kill{Step: engine.Steps[d.IntN(len(engine.Steps))], Nth: d.between(1, 20)}
 			switch k.Step {
 			case engine.StepRested:
 				k.Nth = d.between(1, 3)
 			case engine.StepAnswered:
-				k.Nth, answered = 1, true
+				k.Nth, answered = 1, answered+2
 			}
 		}
 		s.Kills = append(s.Kills, k)
 	}
-	if d.in(3) || answered {
-		for range d.between(1, 3) {
+	if d.in(3) || answered > 0 {
+		for range d.between(1, 2) + answered {
 			at := d.within(length)
 			s.Orders = append(s.Orders, Order{At: at, What: "hold"})
 			if !d.in(3) { // else the technician finds it
@@ -297,8 +294,9 @@ func targets(file *bench.File, readings int) []trouble.Target {
 		i := slices.IndexFunc(file.Lines, func(l bench.Line) bool { return l.Name == line })
 		return max(file.Lines[i].LongestAnswer, time.Second) // what a line that declares none is waited for
 	}
-	add := func(name, line string, answers int, axes []string) {
-		all = append(all, trouble.Target{Device: name, Answers: answers, Longest: longest(line), Restart: true, Unplug: true, Axes: axes})
+	line := []trouble.Kind{trouble.Gone, trouble.Stranger, trouble.Silent, trouble.DeadLine, trouble.Hung}
+	add := func(name, of string, answers int, axes []string, may ...trouble.Kind) {
+		all = append(all, trouble.Target{Device: name, Answers: answers, Longest: longest(of), Restart: true, Unplug: true, Axes: axes, May: append(may, line...)})
 	}
 	for _, c := range file.Controllers {
 		var axes []string
@@ -307,19 +305,22 @@ func targets(file *bench.File, readings int) []trouble.Target {
 				axes = append(axes, string(a.Name))
 			}
 		}
-		add(string(c.Name), c.Line, 6*readings, axes)
+		add(string(c.Name), c.Line, 6*readings, axes, trouble.RestartMoving, trouble.Stall)
 	}
-	add(string(file.Counter.Name), file.Counter.Line, 9*readings, nil)
+	add(string(file.Counter.Name), file.Counter.Line, 9*readings, nil, trouble.WrongGate, trouble.Overflow)
 	for _, s := range append(slices.Clone(file.Protectors), *file.Pump) {
-		add(string(s.Name), s.Line, 3*readings, nil)
+		add(string(s.Name), s.Line, 3*readings, nil, trouble.StuckShutter)
 	}
 	for _, l := range file.Lines {
 		if slices.ContainsFunc(file.Sensors, func(s bench.Sensor) bool { return s.Line == l.Name }) {
-			add(l.Name, l.Name, 6*readings, nil)
+			add(l.Name, l.Name, 6*readings, nil, trouble.StuckValue)
 		}
 	}
 	for _, s := range file.Settings {
 		add(string(s.Name), s.Line, 10, nil)
+	}
+	for _, arm := range []string{"signal", "idler"} {
+		all = append(all, trouble.Target{Device: arm, May: []trouble.Kind{trouble.Latched}})
 	}
 	return all
 }

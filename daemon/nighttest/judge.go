@@ -175,7 +175,7 @@ func (j *judge) world(r *instruments.Record) {
 		j.gateOpened(r)
 	case instruments.GateClosed, instruments.GateAborted:
 		j.gateEnded(r)
-	case instruments.MoveStarted, instruments.HomeStarted:
+	case instruments.MoveStarted, instruments.HomeStarted, instruments.MarkStarted:
 		j.moved = r.At
 		if r.Kind == instruments.MoveStarted {
 			j.moveStarted = r.At
@@ -319,7 +319,7 @@ func (j *judge) checkBright() {
 		if j.killed {
 			continue // nobody lives to close it; the start will
 		}
-		if j.now.Sub(since) > protectWithin {
+		if j.now.Sub(since) > j.watchPeriod()+protectWithin {
 			j.say("the %s detector is still open %s after a gate far above its trip rate", name, j.now.Sub(since).Round(time.Millisecond))
 			delete(j.bright, name)
 		}
@@ -443,12 +443,14 @@ func (j *judge) light(where string, b *protocol.Reading, g *gate) {
 	if seen == nil {
 		return
 	}
+	// A glance is no data, and too short for a latched detector to be told from a dark one.
+	isGlance := b.Glance != nil && g.opened.Before(b.StartedAt.Time)
 	for _, d := range j.facts.Detectors {
 		at := seen.Signal
 		if d.Name == "idler" {
 			at = seen.Idler
 		}
-		if d.TripHz > 0 && at.MeanHz > wellAbove*d.TripHz {
+		if d.TripHz > 0 && at.MeanHz > wellAbove*d.TripHz && !isGlance {
 			j.say("%s was accepted, and the %s detector saw %.3g /s in gate %d; it trips at %.3g /s", where, d.Name, at.MeanHz, g.tag, d.TripHz)
 		}
 	}
@@ -639,6 +641,7 @@ func (j *judge) process(p *Process) {
 	switch p.What {
 	case Killed:
 		j.killed, j.wasKilled = true, true
+		j.died()
 		for id, r := range j.runs {
 			if id != protocol.BenchRun && r.began && !r.state.Final() && !slices.Contains(r.causes, protocol.ByRestart) {
 				r.owed = true

@@ -16,15 +16,16 @@ import (
 // order only, in the dark, with the detectors protected, and not without a person where the file asks
 // for one.
 type places struct {
-	stand    map[string]float64
-	since    time.Time
-	unknown  map[string]bool    // its zero is lost: what it reports means nothing
-	off      map[string]float64 // true minus reported, of one that only counts
-	slipped  time.Time
-	searched map[string]int  // by controller: place in its order of the last search, from 1
-	person   bool            // somebody let the run go on, and nothing held it since
-	pump     []openSince     // when the pump's blade began to open, and was closed, newest last
-	blamed   map[string]bool // keep-outs that are violated now, said once
+	stand     map[string]float64
+	since     time.Time
+	unknown   map[string]bool    // its zero is lost: what it reports means nothing
+	off       map[string]float64 // true minus reported, of one that only counts
+	slipped   time.Time
+	searched  map[string]int // by controller: place in its order of the last search, from 1
+	searching map[string]bool
+	person    bool            // somebody let the run go on, and nothing held it since
+	pump      []openSince     // when the pump's blade began to open, and was closed, newest last
+	blamed    map[string]bool // keep-outs that are violated now, said once
 }
 
 type openSince struct {
@@ -64,6 +65,9 @@ func (j *judge) place(r *instruments.Record) {
 	case instruments.Slipped:
 		p.slipped = r.At
 		for axis, span := range r.Axes {
+			if p.searching[axis] {
+				p.unknown[axis] = true // it ends elsewhere than at its mark
+			}
 			if j.axis(axis).Proof != drivers.Proved {
 				p.off[axis] += span.ToDeg - span.FromDeg
 			}
@@ -71,12 +75,14 @@ func (j *judge) place(r *instruments.Record) {
 		p.stand = r.Stand // nobody's doing: the way there is not judged
 	case instruments.MoveStarted:
 		clear(p.searched)
+	case instruments.MarkStarted:
+		j.inTheDark(r)
 	case instruments.HomeStarted:
+		j.inTheDark(r)
 		j.search(r)
-	case instruments.HomeFound:
+		p.searching = map[string]bool{}
 		for axis := range r.Axes {
-			delete(p.unknown, axis)
-			delete(p.off, axis)
+			p.searching[axis] = true
 		}
 	}
 	if r.Stand == nil {
@@ -86,6 +92,12 @@ func (j *judge) place(r *instruments.Record) {
 		j.way(p.stand, r.Stand, p.since, r.At)
 	}
 	p.stand, p.since = r.Stand, r.At
+	if r.Kind == instruments.HomeFound {
+		for axis := range r.Axes {
+			delete(p.unknown, axis)
+			delete(p.off, axis)
+		}
+	}
 }
 
 // slipUnseen is how long a slip may be unknown to a program that asks an encoder before each light.
@@ -216,8 +228,8 @@ func (j *judge) axis(name string) scan.Axis {
 	return scan.Axis{}
 }
 
-// search judges a search for a zero.
-func (j *judge) search(r *instruments.Record) {
+// inTheDark judges the light during a search for a mark.
+func (j *judge) inTheDark(r *instruments.Record) {
 	if j.pumpOpen || j.pumpMoves {
 		j.say("%s searches its zero with the pump open", r.Device)
 	}
@@ -226,6 +238,10 @@ func (j *judge) search(r *instruments.Record) {
 			j.say("%s searches its zero with the %s detector open", r.Device, d.Name)
 		}
 	}
+}
+
+// search judges the order of searches for zeros, and who let them.
+func (j *judge) search(r *instruments.Record) {
 	order := j.facts.HomeOrder[r.Device]
 	for axis := range r.Axes {
 		at := slices.Index(order, axis) + 1

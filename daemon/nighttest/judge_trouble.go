@@ -31,7 +31,7 @@ func (j *judge) troubled(r *instruments.Record) {
 		return
 	}
 	e := &effect{trouble: l[0], at: r.At}
-	if s := j.runs[j.current]; s != nil && s.state == protocol.Running && !j.killed {
+	if s := j.runs[j.current]; s != nil && s.state == protocol.Running && !j.killed && !j.waits.full {
 		e.run = j.current
 	}
 	j.effects = append(j.effects, e)
@@ -50,6 +50,16 @@ func (j *judge) surface(run protocol.RunID, kind protocol.EventKind) {
 
 // unseen is how many readings may be accepted after a trouble that has to show in an event.
 const unseen = 6
+
+// died takes in that the process was killed: the next one connects everything anew, and verifies it, so
+// what was met by nobody yet need not show.
+func (j *judge) died() {
+	for _, e := range j.effects {
+		if !e.surfaced && e.readings < unseen {
+			e.run = ""
+		}
+	}
+}
 
 // accepted counts a reading against the troubles that did not show yet.
 func (j *judge) accepted(b *protocol.Reading) {
@@ -100,7 +110,7 @@ func (j *judge) reason(where string, ev *protocol.Event) {
 		return slices.ContainsFunc(j.effects, func(e *effect) bool { return slices.Contains(kinds, e.trouble.Kind) })
 	}
 	switch {
-	case ev.State == protocol.Stopped && !strings.Contains(ev.Text, "stopped by "):
+	case ev.State == protocol.Stopped && !strings.Contains(ev.Text, " by "):
 		j.say("%s: stopped, and %q does not say by whom", where, ev.Text)
 	case ev.State != protocol.Failed:
 	case len(strings.TrimPrefix(ev.Text, "failed")) < 10:

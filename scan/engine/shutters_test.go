@@ -87,3 +87,32 @@ func TestARateIsNotLookedAtWhileAPersonHoldsAsWell(t *testing.T) {
 		}
 	})
 }
+
+// So much light that the detector latches looks like no light: a short look must not end the hold.
+func TestALatchedDetectorIsNotTakenForADarkOneByALook(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		n := newNight(t, nil)
+		began := time.Now()
+		n.world.fail = func(string) error {
+			n.world.mu.Lock()
+			defer n.world.mu.Unlock()
+			switch since := time.Since(began); {
+			case since > 8*time.Second && since < 20*time.Second:
+				n.world.rates["signal"] = 1e6
+			case since > 20*time.Second && since < 5*time.Minute:
+				n.world.rates["signal"] = 0
+			default:
+				n.world.rates["signal"] = 1000
+			}
+			return nil
+		}
+		state, err := n.eng.Run(t.Context())
+		if state != protocol.Finished || err != nil {
+			t.Fatalf("Run() = %s, %v; want finished", state, err)
+		}
+		events := n.events(t)
+		if got := kinds(events); got != "began held went_on ended" || events[2].At.Sub(began) < 5*time.Minute {
+			t.Errorf("events %s; want one hold, until the detector counts again", got)
+		}
+	})
+}

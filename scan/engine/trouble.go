@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"slices"
 	"strings"
 	"time"
 
@@ -472,20 +473,37 @@ func (e *Engine) check(ctx context.Context, pump bool, judge func(*protocol.Read
 	return against, interrupted, nil
 }
 
+// lookOnce counts a short gate, and where that is too short for a detector's floor to mean something
+// a longer one: a detector that so much light has latched looks as if it were dark for a moment, too.
 func (e *Engine) lookOnce(ctx context.Context, r *protocol.Reading) error {
-	gate := 100 * time.Millisecond
+	gate, floor := 100*time.Millisecond, time.Duration(0)
 	for _, d := range e.Bench.Detectors {
 		gate = max(gate, d.Glance)
+		if d.FloorHz > 0 {
+			floor = max(floor, min(longestLook, time.Duration(1.1*floorCounts/d.FloorHz*float64(time.Second))))
+		}
 	}
-	slice, err := e.count(ctx, r, gate)
-	if err != nil {
-		return err
+	for _, gate := range []time.Duration{gate, floor} {
+		if gate == 0 || gate <= r.Gate.Duration() {
+			continue
+		}
+		slice, err := e.count(ctx, r, gate)
+		if err != nil {
+			return err
+		}
+		r.Reason = ""
+		r.Slices, r.Counts = append(r.Slices, slice), sum(r.Counts, slices.Clone(slice.Counts), e.Bench.Tag)
+		r.GateSet += slice.GateSet
+		r.Gate += slice.Gate
+		if err := e.judgeLight(r.Counts, r.Gate.Duration(), slice.Counts, slice.Gate.Duration()); err != nil {
+			return err
+		}
 	}
-	r.Reason = ""
-	r.Slices, r.Counts = append(r.Slices, slice), slice.Counts
-	r.GateSet, r.Gate = slice.GateSet, slice.Gate
-	return e.judgeLight(slice.Counts, slice.Gate.Duration(), slice.Counts, slice.Gate.Duration())
+	return nil
 }
+
+// longestLook bounds how long a detector is opened to see whether it is below its floor.
+const longestLook = 10 * time.Second
 
 // connectQuietly mends lines during a hold; what fails now is met again at the next look.
 func (e *Engine) connectQuietly(ctx context.Context) error {
