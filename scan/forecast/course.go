@@ -78,7 +78,7 @@ type course struct {
 	now    time.Duration
 	spent  Spent
 	habits []habit
-	anew   bool // everything is worked out anew, for tests
+	anew   bool          // everything is worked out anew, for tests
 	stuck  map[int]error // points to which no way is free
 
 	// What one thing of a kind takes, worked out once.
