@@ -18,7 +18,7 @@ import (
 // channel, each with the variance that the events themselves show, since dead time makes it smaller
 // than a Poisson one. That the test can fail is shown beside it: counts three percent off are found.
 func TestExpectedCountsAgreeWithSimulatedEvents(t *testing.T) {
-	const visits = 60
+	const visits = 300
 	for _, power := range []float64{0.2, 1, 12} { // idler singles from 60 000 to some millions a second
 		t.Run(fmt.Sprintf("%g times the power", power), func(t *testing.T) {
 			l := light(t, power)

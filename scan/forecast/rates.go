@@ -319,8 +319,7 @@ type lattice struct {
 // level is one entry of the sweep.
 type level struct {
 	size   int
-	stride int       // points from one of its values to the next
-	value  []float64 // what it sets, as far as that rises evenly or not; nil: by its index
+	stride int // points from one of its values to the next
 
 	at     []int        // the nodes, by index
 	first  []int        // for each index the first of the four nodes it is blended from

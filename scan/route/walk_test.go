@@ -34,7 +34,9 @@ func TestAWalkTakesWhatItsLegsTake(t *testing.T) {
 		}
 		targets := drawTargets(t, axes, end)
 		// Among ways of equal length the order of the targets chooses; the walk has that of the axes.
-		index := func(x scan.AxisTarget) int { return slices.IndexFunc(axes, func(a scan.Axis) bool { return a.Name == x.Axis }) }
+		index := func(x scan.AxisTarget) int {
+			return slices.IndexFunc(axes, func(a scan.Axis) bool { return a.Name == x.Axis })
+		}
 		slices.SortFunc(targets, func(a, b scan.AxisTarget) int { return index(a) - index(b) })
 		legs, err := route.Legs(axes, keepOuts, at, targets, route.State{})
 		dark := false
