@@ -256,6 +256,7 @@ func (s *session) carry(ctx context.Context) error {
 	if _, err := stream.Last(ctx); err != nil { // made now, so that whoever looks for it finds it
 		s.log.Warn().Err(err).Msg("the stream cannot be made yet; the logbook goes on")
 	}
+	stream.CheckOnce()
 	s.courier = courier.New(s.file.Name, s.book, onCarry(stream), func(err error) {
 		if err != nil {
 			s.log.Warn().Err(err).Msg("entries wait to be published; the logbook has them")
