@@ -181,6 +181,7 @@ func TestWarningsSayWhatIsWrongAndWhere(t *testing.T) {
 		{"a warm-up", func(a *Ask) {
 			a.Plan.Schedule.WarmUp = &scan.WarmUp{Steady: []scan.Steady{{Over: time.Minute}}, AtMost: time.Hour}
 		}, "it may last 1 h"},
+		{"zeros that are verified", func(a *Ask) { a.Bench.Axes[1].Verify = &scan.Verify{Every: 30 * time.Second} }, "the zeros of idler_arm are verified about 4 times"},
 		{"optics that are not described", func(a *Ask) { a.Expect = nil }, "does not describe the optics"},
 		{"rates that cannot be told", func(a *Ask) {
 			a.Expect = func([]scan.AxisTarget, []scan.SettingTarget) (scan.Expected, error) {

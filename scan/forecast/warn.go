@@ -120,6 +120,9 @@ func (f *Forecast) warnOfTime(a Ask) {
 	} else if !s.FinishBy.IsZero() && f.FinishesAt.After(s.FinishBy) {
 		f.warnf("cannot finish: closing readings go on until %s, after the end at %s", f.clock(f.FinishesAt.Time), f.clock(s.FinishBy))
 	}
+	if names, times := f.zeros(); times > 0 {
+		f.warnf("the zeros of %s are verified about %s: the time of these searches is not known, and not in the forecast", strings.Join(names, ", "), map[bool]string{true: "once", false: fmt.Sprintf("%d times", times)}[times == 1])
+	}
 	if w := s.WarmUp; w != nil {
 		f.warnf("the warm-up is taken at its shortest; it may last %s", span(w.AtMost))
 	}
@@ -129,6 +132,22 @@ func (f *Forecast) warnOfTime(a Ask) {
 	if h := a.Plan.Dwell.Heralds; h > 0 && a.Expect == nil {
 		f.warnf("dwells end on counts of %s, which are not known here: each is taken at its longest, %s", a.Plan.Dwell.Trigger, span(a.Plan.Dwell.Time))
 	}
+}
+
+// zeros are the axes whose zero is verified, and how often in all: before the first light, every so
+// often, and after the last.
+func (f *Forecast) zeros() (names []string, times int) {
+	for _, a := range f.bench.Axes {
+		if a.Verify == nil {
+			continue
+		}
+		names = append(names, string(a.Name))
+		times += 2
+		if a.Verify.Every > 0 {
+			times += int(f.Duration.Duration() / a.Verify.Every)
+		}
+	}
+	return names, times
 }
 
 func (f *Forecast) warnOfEmpty() {
