@@ -69,6 +69,9 @@ func (f *File) Facts() recipe.Facts {
 	}
 	for _, d := range f.Detectors {
 		facts.Detectors[d.Name] = d.Channel
+		if d.Watch > 0 && (facts.Watch == 0 || d.Watch < facts.Watch) {
+			facts.Watch = d.Watch
+		}
 	}
 	for _, s := range f.Sensors {
 		facts.Sensors = append(facts.Sensors, recipe.Sensor{Name: s.Name, Unit: s.Unit})
@@ -190,6 +193,7 @@ type Detector struct {
 	TripHz     float64
 	FloorHz    float64
 	Glance     time.Duration
+	Watch      time.Duration      // the longest gate without a look at its light; 0: as long as a dwell's slice
 	ProtectBy  drivers.DeviceName // empty: the program cannot protect it, and says so
 	Ready      time.Duration      // after the protector opened
 

@@ -344,6 +344,9 @@ func join(names []drivers.Channel) string {
 	return strings.Join(s, ", ")
 }
 
+// defaultWatch is the longest gate without a look at a light that may trip.
+const defaultWatch = 2 * time.Second
+
 func (r *reader) detectors(v strict.Value) {
 	for _, e := range v.Map().Entries() {
 		m := e.Value.Map()
@@ -371,6 +374,14 @@ func (r *reader) detectors(v strict.Value) {
 		}
 		if d.TripHz > 0 && !m.Has("glance") {
 			m.Need("glance")
+		}
+		watch := m.Opt("watch")
+		d.Watch = watch.Duration(10*time.Millisecond, time.Hour, 0)
+		switch {
+		case d.TripHz == 0 && watch.Given():
+			watch.Fail("a watch without a trip rate to judge the light by", "trip_rate beside it, or no such key")
+		case d.TripHz > 0 && d.Watch == 0:
+			d.Watch = defaultWatch
 		}
 		if p := m.Opt("protect"); p.Given() {
 			pm := p.Map()

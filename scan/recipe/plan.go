@@ -22,6 +22,7 @@ type Facts struct {
 	PumpShutter bool          // without one there are no darks
 	GateMin     time.Duration // the counter's range of gates; zero: no bound known
 	GateMax     time.Duration
+	Watch       time.Duration // the longest gate without a look at the light: slices are cut to it; 0: none
 
 	Singles      []drivers.Channel                      // channels that count one detector
 	Coincidences map[drivers.Channel][2]drivers.Channel // the two singles channels of each coincidence channel
@@ -125,6 +126,9 @@ func (r *Recipe) Plan(f Facts) (scan.Plan, error) {
 	if r.Dark != nil {
 		dark := r.Dark.Cadence
 		plan.Dark = &dark
+	}
+	for _, d := range dwells(&plan) {
+		*d = f.watched(*d)
 	}
 	if err := strict.Join(r.keptOut(f, plan)...); err != nil {
 		return scan.Plan{}, err
@@ -387,7 +391,41 @@ func known(name string, names []string) string {
 	return fmt.Sprintf("one of %q", names)
 }
 
+// dwells are all that a plan counts for. What plan and recipe share is parted first.
+func dwells(plan *scan.Plan) []*scan.Dwell {
+	all := []*scan.Dwell{&plan.Dwell}
+	if plan.Dark != nil {
+		all = append(all, &plan.Dark.Dwell)
+	}
+	if b := plan.Background; b != nil {
+		own := *b
+		plan.Background = &own
+		all = append(all, &own.Dwell)
+	}
+	if q := plan.Reference; q != nil {
+		own := *q
+		plan.Reference = &own
+		all = append(all, &own.Dwell)
+	}
+	return all
+}
+
+// watched cuts the slices of a dwell into equal gates, to the millisecond, so that the light is looked
+// at as often as its detectors need.
+func (f Facts) watched(d scan.Dwell) scan.Dwell {
+	if f.Watch > 0 && d.Slice > f.Watch {
+		n := (d.Slice + f.Watch - 1) / f.Watch
+		cut := (d.Slice + n - 1) / n
+		d.Slice = min((cut + time.Millisecond - 1).Truncate(time.Millisecond), f.Watch)
+	}
+	return d
+}
+
 func checkGates(d scan.Dwell, at strict.Place, f Facts) []protocol.Finding {
+	d = f.watched(d)
+	if n := (d.Time + d.Slice - 1) / d.Slice; n > maxSlices {
+		return []protocol.Finding{at.Finding(fmt.Sprintf("%d gates of %s, as often as the light has to be looked at", n, strict.Span(d.Slice)), fmt.Sprintf("at most %d: a shorter dwell and more repeats", maxSlices))}
+	}
 	low, high := f.GateMin, f.GateMax
 	if high == 0 {
 		high = math.MaxInt64

@@ -345,6 +345,56 @@ func FuzzParse(f *testing.F) {
 	})
 }
 
+func TestSlicesAreCutToTheWatch(t *testing.T) {
+	for _, c := range []struct {
+		dwell        string
+		watch, slice time.Duration
+		gates        int
+	}{
+		{"20 s", 0, 20 * time.Second, 1},
+		{"20 s", 2 * time.Second, 2 * time.Second, 10},
+		{"1 s", 2 * time.Second, time.Second, 1},
+		{"5 s", 2 * time.Second, 1667 * time.Millisecond, 3},
+		{"{time: 30 s, slice: 10 s}", 3 * time.Second, 2500 * time.Millisecond, 12},
+		{"{time: 30 s, slice: 1 s}", 3 * time.Second, time.Second, 30},
+		{"{heralds: 1000, of: a, at_most: 60 s, slice: 5 s}", 2 * time.Second, 1667 * time.Millisecond, 36},
+		{"1 h", 2 * time.Second, 2 * time.Second, 1800},
+	} {
+		f := bench()
+		f.Watch = c.watch
+		r, err := Parse("r.yaml", []byte("title: A\nsweep: [{axis: signal_arm, at: [1 deg]}]\ndwell: "+c.dwell+"\ndark: {every: 10 points, dwell: 20 s, also: [start]}\n"))
+		if err != nil {
+			t.Fatal(err)
+		}
+		p, err := r.Plan(f)
+		if err != nil {
+			t.Errorf("dwell %s watched every %v: %v", c.dwell, c.watch, err)
+			continue
+		}
+		if p.Dwell.Slice != c.slice || len(p.Dwell.Slices()) != c.gates {
+			t.Errorf("dwell %s watched every %v: %d gates of %v; want %d of %v", c.dwell, c.watch, len(p.Dwell.Slices()), p.Dwell.Slice, c.gates, c.slice)
+		}
+		if c.watch > 0 && p.Dark.Dwell.Slice > c.watch {
+			t.Errorf("a dark in gates of %v, watched every %v", p.Dark.Dwell.Slice, c.watch)
+		}
+		if c.dwell == "1 h" {
+			continue // longer than a gate of this counter
+		}
+		if again, err := r.Plan(bench()); err != nil || again.Dark.Dwell.Slice != 20*time.Second {
+			t.Errorf("planned again without a watch: darks in gates of %v, %v; want the recipe's own", again.Dark.Dwell.Slice, err)
+		}
+	}
+	f := bench()
+	f.Watch = time.Second
+	r, err := Parse("r.yaml", []byte("title: A\nsweep: [{axis: signal_arm, at: [1 deg]}]\ndwell: 12 h\n"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	if _, err := r.Plan(f); err == nil || !strings.Contains(err.Error(), "43200 gates of 1 s") {
+		t.Errorf("a dwell of 12 h watched every second: %v; want it refused", err)
+	}
+}
+
 func TestADwellMayEndOnTheCountsOfATrigger(t *testing.T) {
 	for _, of := range []string{"signal", "a"} {
 		p := plan(t, "title: A\ndwell: {heralds: 200000, of: "+of+", at_most: 60 s, slice: 1 s}\n")
