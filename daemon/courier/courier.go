@@ -45,9 +45,9 @@ type Last struct {
 	Message
 	Sequence uint64
 
-	// Renew is not nil when messages are gone between the stream's first and its last, by damage: the
-	// limits take from the front only. It makes the stream anew, empty. Message is then one that is
-	// still there.
+	// Renew is not nil when messages are missing between the stream's first and its last, by damage:
+	// the limits take from the front only. It makes the stream anew, empty. Message is then one that is
+	// still there, if any is.
 	Renew func(context.Context) error
 }
 
@@ -163,9 +163,11 @@ func (c *Courier) pass(ctx context.Context, more func(context.Context) bool) (ca
 		return 0, err
 	}
 	if last.Renew != nil { // what stands behind a hole would never be filled in front of it
-		c.become(fmt.Errorf("stream %s: messages are gone from its middle: it is made anew and filled again from the logbook", protocol.Stream(c.bench)))
+		if last.Sequence > 0 {
+			c.become(fmt.Errorf("stream %s: messages are missing: it is made anew and filled again from the logbook", protocol.Stream(c.bench)))
+		}
 		if err := last.Renew(ctx); err != nil {
-			return 0, fmt.Errorf("stream %s: messages are gone from its middle, and it cannot be made anew: %w", protocol.Stream(c.bench), err)
+			return 0, fmt.Errorf("stream %s: messages are missing, and it cannot be made anew: %w", protocol.Stream(c.bench), err)
 		}
 		last, cursor = Last{}, 0
 	}

@@ -92,10 +92,13 @@ func (s *Stream) Last(ctx context.Context) (Last, error) {
 		return Last{}, err
 	}
 	state := stream.CachedInfo().State
-	if state.Msgs == 0 {
-		return Last{Sequence: state.LastSeq}, nil
-	}
 	end := Last{Sequence: state.LastSeq}
+	if state.Msgs == 0 {
+		if s.unchecked { // a server that finds nothing in damaged files may expect the next number all the same
+			end.Renew = s.renew
+		}
+		return end, nil
+	}
 	if state.LastSeq-state.FirstSeq+1 != state.Msgs {
 		end.Renew = s.renew
 	}
@@ -155,9 +158,20 @@ func (s *Stream) renew(ctx context.Context) error {
 	if err := s.js.DeleteStream(ctx, s.want.Name); err != nil && !errors.Is(err, jetstream.ErrStreamNotFound) {
 		return err
 	}
-	_, err := s.js.CreateStream(ctx, s.want)
-	return err
+	for {
+		_, err := s.js.CreateStream(ctx, s.want)
+		if err == nil {
+			s.unchecked = false
+			return nil
+		}
+		sleep(ctx, renewPause) // the files of the old one may still be on their way out
+		if ctx.Err() != nil {
+			return err
+		}
+	}
 }
+
+const renewPause = 50 * time.Millisecond
 
 // asWanted compares what we set; a server adds entries of its own.
 func (s *Stream) asWanted(have jetstream.StreamConfig) bool {
