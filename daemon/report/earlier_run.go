@@ -230,8 +230,8 @@ func (e *EarlierRun) expect(axes []scan.AxisTarget, settings []scan.SettingTarge
 	return out, nil
 }
 
-// compare finds what the run's readings took beyond the forecast of the same run: the median over
-// lights that followed one another in both, so that no hold is among it.
+// compare finds what the run's readings took beyond the forecast of the same run: the mean over lights
+// that followed one another in both, so that no hold is among it.
 func (e *EarlierRun) compare(readings []protocol.Reading, foreseen []forecast.Timed) {
 	type key struct{ point, visit int }
 	at := map[key]int{}
@@ -264,14 +264,14 @@ func (e *EarlierRun) compare(readings []protocol.Reading, foreseen []forecast.Ti
 		}
 		between = append(between, r.StartedAt.Sub(before.EndedAt.Time).Seconds()-(t.Started-foreseen[k-1].Ended).Seconds())
 	}
-	median := func(x []float64) time.Duration {
-		if len(x) == 0 {
-			return 0
+	mean := func(x []float64) time.Duration {
+		sum := 0.0
+		for _, v := range x {
+			sum += v / float64(len(x))
 		}
-		slices.Sort(x)
-		return time.Duration(x[len(x)/2] * float64(time.Second))
+		return time.Duration(sum * float64(time.Second))
 	}
-	e.Costs.Reading, e.Costs.Slice = median(between), median(inside)
+	e.Costs.Reading, e.Costs.Slice = mean(between), mean(inside)
 	e.Costs.From = fmt.Sprintf("as %s had it: %s a reading and %s a slice beyond 1.2 ms a question", e.From, e.Costs.Reading.Round(time.Millisecond), e.Costs.Slice.Round(time.Millisecond))
 	if len(between) == 0 {
 		e.Costs.From = forecast.Measured(0).From + "; " + e.From + " has no two lights in a row to tell"

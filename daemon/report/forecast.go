@@ -1,6 +1,7 @@
 package report
 
 import (
+	"fmt"
 	"slices"
 	"time"
 
@@ -105,6 +106,9 @@ const bitsAsked = 400
 func costs(file *bench.File) forecast.Costs {
 	c := forecast.Measured(len(file.Lines))
 	c.On = map[drivers.DeviceName]time.Duration{}
+	if pace := file.Pace(); pace > 1 {
+		c.From += fmt.Sprintf("; with the clock %d times as fast, what this computer takes itself counts as often and is not in it: --from RUN has it from a run", int(pace))
+	}
 	baud := map[string]int{}
 	for _, l := range file.Lines {
 		baud[l.Name] = l.Baud

@@ -146,6 +146,12 @@ func (c *Client) Withdraw(ctx context.Context, r protocol.RunRequest) (protocol.
 	return ask[protocol.RunReply](ctx, c, "withdraw", r)
 }
 
+// Forecast asks what a recipe would do; nothing moves for it. It expires like Start.
+func (c *Client) Forecast(ctx context.Context, r protocol.ForecastRequest) (protocol.Forecast, error) {
+	r.ExpiresAt = expiry(ctx, r.ExpiresAt)
+	return ask[protocol.Forecast](ctx, c, "forecast", r)
+}
+
 func expiry(ctx context.Context, given *protocol.Time) *protocol.Time {
 	if deadline, ok := ctx.Deadline(); ok && given == nil {
 		return &protocol.Time{Time: deadline}

@@ -1,0 +1,57 @@
+//go:build unix
+
+package main
+
+import (
+	"encoding/json"
+	"os"
+	"path/filepath"
+	"strings"
+	"testing"
+
+	"gemel/protocol"
+)
+
+// The daemon makes a forecast while a run goes on, and it is the one that the command makes.
+func TestADaemonForecastsWhileARunGoesOn(t *testing.T) {
+	q := newQueueing(t)
+	defer quit(t, q.daemon)
+	q.start("long", "1 h")
+	text, err := os.ReadFile("../../configs/demo-recipe.yaml")
+	if err != nil {
+		t.Fatal(err)
+	}
+	cl := q.client()
+	defer cl.Close()
+	remote, err := cl.Forecast(within(t), protocol.ForecastRequest{Recipe: string(text), Aim: "1 %", Who: "a test"})
+	if err != nil || remote.Schema != protocol.ForecastSchema {
+		t.Fatalf("answered %.80q, %v", remote.Sentence, err)
+	}
+	var local protocol.Forecast
+	args := []string{"--bench", filepath.Join(q.dir, "quick-bench.yaml"), "--recipe", "../../configs/demo-recipe.yaml", "--aim", "1 %"}
+	if err := json.Unmarshal([]byte(must(t, append([]string{"forecast", "--json"}, args...)...)), &local); err != nil {
+		t.Fatal(err)
+	}
+	if len(remote.PointList) != 65 || remote.Duration != local.Duration || *remote.Uncertainty != *local.Uncertainty || remote.Aim == nil || !remote.Aim.Reachable {
+		t.Errorf("the daemon says %q with %d points and %+v; the command %q", remote.Sentence, len(remote.PointList), remote.Aim, local.Sentence)
+	}
+	picture := filepath.Join(q.dir, "night.svg")
+	said := must(t, append([]string{"forecast", "--plot", picture}, args...)...)
+	drawn, err := os.ReadFile(picture)
+	if err != nil || !strings.Contains(string(drawn), "65 points twice") || !strings.HasPrefix(said, "65 points twice") {
+		t.Errorf("the picture has %d bytes, %v; the text begins %.80q", len(drawn), err, said)
+	}
+}
+
+func TestForecastsThatAreAskedWrongly(t *testing.T) {
+	args := []string{"forecast", "--bench", "../../configs/demo-bench.yaml", "--recipe", "../../configs/demo-recipe.yaml"}
+	for _, c := range []struct{ name, flag, value, want string }{
+		{"an aim without a unit", "--aim", "0.5", `aim "0.5"`},
+		{"a run without its data", "--from", "r1", "want --data with the folder of a run"},
+		{"a folder without a logbook", "--data", t.TempDir(), "want --data with the folder of a run"},
+	} {
+		if _, said, code := gemel(t, append(args, c.flag, c.value)...); code != exitWrongUse || !strings.Contains(said, c.want) {
+			t.Errorf("%s: exit %d, %q; want %d and %q", c.name, code, said, exitWrongUse, c.want)
+		}
+	}
+}
