@@ -22,6 +22,7 @@ import (
 	"net/url"
 	"os"
 	"path/filepath"
+	"slices"
 	"strconv"
 	"strings"
 	"sync"
@@ -373,7 +374,10 @@ func open(file string, options ...string) (*sql.DB, error) {
 	if !strings.HasPrefix(path, "/") { // a drive letter
 		path = "/" + path
 	}
-	query := strings.Join(append([]string{busy, "_pragma=trusted_schema(0)"}, options...), "&")
+	if !slices.ContainsFunc(options, func(o string) bool { return strings.HasPrefix(o, "_pragma=busy_timeout") }) {
+		options = append(options, busy) // of two the driver would take the first
+	}
+	query := strings.Join(append(options, "_pragma=trusted_schema(0)"), "&")
 	name := url.URL{Scheme: "file", Path: path, RawQuery: query}
 	db, err := sql.Open("sqlite", name.String())
 	if err != nil {
