@@ -6,6 +6,7 @@ import (
 	"encoding/json"
 	"os"
 	"path/filepath"
+	"regexp"
 	"strings"
 	"testing"
 
@@ -53,5 +54,28 @@ func TestForecastsThatAreAskedWrongly(t *testing.T) {
 		if _, said, code := gemel(t, append(args, c.flag, c.value)...); code != exitWrongUse || !strings.Contains(said, c.want) {
 			t.Errorf("%s: exit %d, %q; want %d and %q", c.name, code, said, exitWrongUse, c.want)
 		}
+	}
+}
+
+// What the README shows is what the program says, but for the clock.
+func TestTheReadmesForecastIsATrueOne(t *testing.T) {
+	readme, err := os.ReadFile("../../README.md")
+	if err != nil {
+		t.Fatal(err)
+	}
+	said := must(t, "forecast", "--bench", "../../configs/demo-bench.yaml", "--recipe", "../../configs/demo-recipe.yaml", "--aim", "0.7 %")
+	clock := regexp.MustCompile(`done at [0-9:]+`)
+	shown := clock.ReplaceAllString(string(readme), "done at")
+	lines := 0
+	for line := range strings.SplitSeq(clock.ReplaceAllString(said, "done at"), "\n") {
+		if strings.Contains(line, "from counting") || strings.Contains(line, "floor") || strings.HasPrefix(line, "  each ") || strings.Contains(line, "the run then takes") {
+			lines++
+			if !strings.Contains(shown, line+"\n") {
+				t.Errorf("the README does not show %q", line)
+			}
+		}
+	}
+	if lines < 5 {
+		t.Errorf("%d lines compared of\n%s", lines, said)
 	}
 }
