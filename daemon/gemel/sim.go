@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"io"
 	"os"
+	"path/filepath"
 
 	"gemel/daemon/bench"
 	"gemel/daemon/crew"
@@ -43,6 +44,10 @@ func (c *simCommand) Run(ctx context.Context, con *console) (err error) {
 			return err
 		}
 		defer os.RemoveAll(folder)
+	}
+	// What a killed one left leads to terminals that are gone, or to somebody else's by now.
+	for _, l := range f.Lines {
+		_ = os.Remove(filepath.Join(folder, l.Name))
 	}
 	var out io.Writer
 	if c.Ledger != "" {
