@@ -350,9 +350,12 @@ func (f *File) virtualAxis(a Axis, dialect string) instruments.AxisConfig {
 	}
 }
 
+// doubtAbove is by what share a gate may be wrong before a virtual counter says so.
+const doubtAbove = 0.001
+
 // virtualCounter counts what stands behind each channel.
 func (f *File) virtualCounter(w *instruments.World) (instruments.Instrument, error) {
-	c := instruments.CounterConfig{Name: string(f.Counter.Name), Identity: identity(f.Counter.Device, "counter"), Bits: f.Counter.Bits}
+	c := instruments.CounterConfig{Name: string(f.Counter.Name), Identity: identity(f.Counter.Device, "counter"), Bits: f.Counter.Bits, DoubtAbove: doubtAbove}
 	for _, ch := range f.Counter.Channels {
 		c.Channels = append(c.Channels, f.counted(ch))
 	}

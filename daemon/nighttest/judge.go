@@ -149,6 +149,8 @@ type runState struct {
 	darks        int
 	owed         bool   // killed while under way: an interruption has to come
 	guard        string // that broke last
+	unreached    string // what in the present hold said that the rest state was not reached
+	counting     bool   // a reading was taken since it last began or went on: all is connected
 	planned      *planned
 }
 
@@ -416,10 +418,12 @@ func (j *judge) reading(r *runState, b *protocol.Reading) {
 		}
 	}
 	j.taken(where, b)
+	r.counting = r.state == protocol.Running
 	if !b.Accepted {
+		j.surface(b.Run, protocol.SetAside)
 		return
 	}
-	j.accepted(b)
+	j.accepted(where, b)
 	switch b.Kind {
 	case protocol.Light:
 		key := [2]int{*b.Point, *b.Visit}
@@ -456,6 +460,9 @@ func (j *judge) light(where string, b *protocol.Reading, g *gate) {
 	}
 	if b.Kind == protocol.Check {
 		return
+	}
+	if (g.truth.Doubtful || g.truth.Overflow) && !isGlance {
+		j.say("%s was accepted, and its gate %d is doubtful (%v) or ran over (%v)", where, g.tag, g.truth.Doubtful, g.truth.Overflow)
 	}
 	j.guarded(where, b, seen)
 	switch open := seen.PumpOpenShare; {
@@ -494,7 +501,7 @@ func (j *judge) explain(where string, s protocol.Slice) *gate {
 				break
 			}
 		}
-		if math.Abs(s.Gate.Duration().Seconds()-g.truth.GateS) > 1e-6+1e-3*g.truth.GateS {
+		if math.Abs(s.Gate.Duration().Seconds()-g.truth.GateS) > 1e-6+1e-3*g.truth.GateS && !g.truth.Doubtful {
 			j.say("%s: gate %d lasted %g s; written is %s", where, tag, g.truth.GateS, s.Gate.Duration())
 		}
 		return g
@@ -586,10 +593,20 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 	if ev.Kind == protocol.Ended {
 		j.reason(where, ev)
 	}
-	// The engine's own word is no excuse where the world did nothing to hinder it.
-	excused := strings.Contains(ev.Text, "NOT REACHED") && !j.hindered.IsZero() && j.now.Sub(j.hindered) < 2*time.Minute
-	if (r.state == protocol.Holding || r.state.Final()) && r.began && !excused {
-		j.atRest(where)
+	text := ev.Text
+	switch {
+	case ev.State == protocol.Running:
+		r.unreached, r.counting = "", r.counting && ev.Kind != protocol.WentOn
+	case strings.Contains(text, "NOT REACHED"):
+		r.unreached = text
+	case ev.Kind != protocol.Held && ev.Kind != protocol.Ended:
+		text = r.unreached // what happens in a hold need not say it again
+	}
+	if r.state != protocol.Running || ev.Kind == protocol.Began {
+		r.counting = false
+	}
+	if (r.state == protocol.Holding || r.state.Final()) && r.began {
+		j.atRest(where, text)
 	}
 	if r.state == protocol.Holding && len(r.causes) == 0 {
 		j.say("%s: holding without a cause", where)
@@ -607,17 +624,23 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 	}
 }
 
-// atRest checks the rest state at the moment that a hold or an end becomes durable.
-func (j *judge) atRest(where string) {
-	if j.pumpOpen {
+// atRest checks the rest state at the moment that a hold or an end becomes durable. What is not
+// reached must be said, by the name of the device, and that word is no excuse where the world did
+// nothing to hinder it.
+func (j *judge) atRest(where, text string) {
+	excused := func(device string) bool {
+		_, bad, said := strings.Cut(text, "NOT REACHED")
+		return said && strings.Contains(bad, device) && j.hinders(device)
+	}
+	if j.pumpOpen && !excused(j.facts.Pump) {
 		j.say("%s: the pump is not blocked", where)
 	}
 	for _, d := range j.facts.Detectors {
-		if d.Protector != "" && j.guards[d.Protector] {
+		if d.Protector != "" && j.guards[d.Protector] && !excused(d.Protector) {
 			j.say("%s: the %s detector is not protected", where, d.Name)
 		}
 	}
-	if j.open != nil {
+	if j.open != nil && !excused(j.facts.Counter) {
 		j.say("%s: a gate is open", where)
 	}
 }

@@ -61,10 +61,10 @@ func (j *judge) watchLight() {
 			continue
 		}
 		bound := j.watchPeriod() + protectWithin
-		if j.now.Sub(j.hindered) < bound+hindrance || j.out[d.Protector] {
+		if j.now.Sub(j.hindered) < bound+hindrance || j.hinders("") {
 			bound += hindrance
 		}
-		if lasts := j.now.Sub(x.since) - x.dead; lasts > bound && !j.out[d.Protector] {
+		if lasts := j.now.Sub(x.since) - x.dead; lasts > bound && !j.out[d.Protector] && !j.hinders(d.Protector) {
 			x.said = true
 			j.say("the %s detector was in light above its trip rate for %s; want at most %s", d.Name, lasts.Round(time.Millisecond), bound)
 		}

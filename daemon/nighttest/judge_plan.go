@@ -484,6 +484,11 @@ func (j *judge) guarded(where string, b *protocol.Reading, seen *instruments.See
 		return
 	}
 	for _, g := range p.plan.Guards {
+		for _, s := range b.Sensors {
+			if s.Sensor == string(g.Sensor) && s.Samples > 0 && (s.Minimum < g.Low || s.Maximum > g.High) {
+				j.say("%s was accepted with %s from %g to %g %s; the guard wants %g to %g", where, s.Sensor, s.Minimum, s.Maximum, s.Unit, g.Low, g.High)
+			}
+		}
 		scale, ok := j.facts.Sensors[string(g.Sensor)]
 		if !ok || scale.Quantity != "W" {
 			continue

@@ -31,7 +31,8 @@ func (j *judge) troubled(r *instruments.Record) {
 		return
 	}
 	e := &effect{trouble: l[0], at: r.At}
-	if s := j.runs[j.current]; s != nil && s.state == protocol.Running && !j.killed && !j.waits.full {
+	if s := j.runs[j.current]; s != nil && s.state == protocol.Running && s.counting && !j.killed && !j.waits.full &&
+		(e.trouble.Device == "" || !j.hinders(e.trouble.Device)) { // behind another trouble of its device it is met by nobody
 		e.run = j.current
 	}
 	j.effects = append(j.effects, e)
@@ -61,8 +62,32 @@ func (j *judge) died() {
 	}
 }
 
-// accepted counts a reading against the troubles that did not show yet.
-func (j *judge) accepted(b *protocol.Reading) {
+// hinders says whether the world keeps a device from doing what it is told, or did a moment ago; any
+// device, where none is named.
+func (j *judge) hinders(device string) bool {
+	const moment = 2 * time.Minute
+	for _, e := range j.effects {
+		if e.trouble.Device != device && (device != "" || !e.trouble.Kind.OfDevice()) {
+			continue
+		}
+		until := e.at.Add(e.trouble.For + moment)
+		if e.trouble.Kind == trouble.Gone || e.trouble.Kind == trouble.DeadLine || !j.now.After(until) {
+			return true
+		}
+	}
+	return false
+}
+
+// accepted counts a reading against the troubles that did not show yet. None may be accepted from a
+// detector below its floor: it is latched, or paralysed.
+func (j *judge) accepted(where string, b *protocol.Reading) {
+	for _, d := range j.facts.Detectors {
+		for _, c := range b.Counts {
+			if least := d.FloorHz / 2 * b.Gate.Duration().Seconds(); c.Channel == d.Channel && least > 12 && float64(c.Counts) < 0.9*least {
+				j.say("%s was accepted, and the %s detector counted %d, below its floor", where, d.Name, c.Counts)
+			}
+		}
+	}
 	for _, e := range j.effects {
 		if e.run == b.Run && !e.surfaced && b.StartedAt.After(e.at) {
 			e.readings++
@@ -77,14 +102,24 @@ func (j *judge) demands(e *effect) bool {
 		return false
 	}
 	switch e.trouble.Kind {
-	case trouble.Lamp, trouble.PumpDrift:
-		return false // judged by the light itself: in no accepted reading above the trip rate, or outside a guard
-	case trouble.Slip, trouble.LostSteps:
+	case trouble.Lamp, trouble.PumpDrift, trouble.TemperatureDrift, trouble.Latched:
+		return false // judged by the light itself, and by what guards say of accepted readings
+	case trouble.Slip, trouble.LostSteps, trouble.Stall:
 		return false // judged by the true angles
-	case trouble.Restart, trouble.Unplug:
+	case trouble.WrongGate, trouble.Overflow:
+		return false // judged by the gates
+	case trouble.StuckShutter:
+		return false // judged by the light at the detector
+	case trouble.Restart, trouble.RestartMoving, trouble.Unplug:
 		return slices.Contains(j.facts.Controls, e.trouble.Device) // the others lose nothing that a reading rests on
 	}
-	return true
+	return e.trouble.Device == "" || j.needed(e.trouble.Device)
+}
+
+// needed says whether no reading can be taken without a device.
+func (j *judge) needed(device string) bool {
+	return slices.Contains(j.facts.Controls, device) || device == j.facts.Counter || device == j.facts.Pump ||
+		slices.ContainsFunc(j.facts.Detectors, func(d DetectorFact) bool { return d.Protector == device })
 }
 
 // verdicts judges every trouble at the end of the night.
@@ -117,15 +152,9 @@ func (j *judge) reason(where string, ev *protocol.Event) {
 		j.say("%s: failed, and %q is no reason", where, ev.Text)
 	case len(j.effects) == 0 && !j.wasKilled && !strings.Contains(ev.Text, "guard") && !strings.Contains(ev.Text, "no value"):
 		j.say("%s: failed in a night without trouble: %s", where, ev.Text)
-	case strings.Contains(ev.Text, "trip rate") && !hit(trouble.Lamp) && j.knownKinds():
+	case strings.Contains(ev.Text, "trip rate") && !hit(trouble.Lamp, trouble.Overflow):
 		j.say("%s: failed for light, and no lamp was on: %s", where, ev.Text)
-	case strings.Contains(ev.Text, "lost the zero") && !hit(trouble.Restart) && j.knownKinds():
-		j.say("%s: failed for a lost zero, and nothing restarted: %s", where, ev.Text)
+	case strings.Contains(ev.Text, "lost the zero") && !j.wasKilled && !slices.ContainsFunc(j.effects, func(e *effect) bool { return slices.Contains(j.facts.Controls, e.trouble.Device) }):
+		j.say("%s: failed for a lost zero, and nothing happened to a stage: %s", where, ev.Text)
 	}
-}
-
-// knownKinds says whether all troubles of the night are ones whose consequences are known here.
-func (j *judge) knownKinds() bool {
-	known := []trouble.Kind{trouble.Missing, trouble.Garbled, trouble.Late, trouble.Duplicated, trouble.Unasked, trouble.Restart, trouble.Lamp, trouble.Unplug, trouble.Slip, trouble.LostSteps, trouble.PumpDrift}
-	return !slices.ContainsFunc(j.effects, func(e *effect) bool { return !slices.Contains(known, e.trouble.Kind) })
 }

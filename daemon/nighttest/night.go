@@ -840,11 +840,12 @@ func FactsOf(f *bench.File) Facts {
 	for _, s := range f.Sensors {
 		facts.Sensors[string(s.Name)] = Scale{Device: s.Line, Factor: factors[s.Unit], Quantity: map[string]string{"mW": "W", "Cel": "Cel"}[s.Unit]}
 	}
+	facts.Counter = string(f.Counter.Name)
 	if f.Pump != nil {
 		facts.Pump = string(f.Pump.Name)
 	}
 	for _, d := range f.Detectors {
-		facts.Detectors = append(facts.Detectors, DetectorFact{Name: d.Name, Channel: string(d.Channel), TripHz: d.TripHz, Protector: string(d.ProtectBy)})
+		facts.Detectors = append(facts.Detectors, DetectorFact{Name: d.Name, Channel: string(d.Channel), TripHz: d.TripHz, FloorHz: d.FloorHz, Protector: string(d.ProtectBy)})
 	}
 	return facts
 }

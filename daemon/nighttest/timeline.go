@@ -51,6 +51,7 @@ type Facts struct {
 	Tag       string
 	Tolerance map[string]float64 // by axis, degrees: what a proved angle may be off, detection limit included
 	Pump      string             // device name of the pump shutter
+	Counter   string
 	Detectors []DetectorFact
 	Controls  []string // the names of the stages' devices
 	Axes      []scan.Axis
@@ -89,6 +90,7 @@ type DetectorFact struct {
 	Name      string // "signal" or "idler": which of the two lights of the ledger it sees
 	Channel   string
 	TripHz    float64
+	FloorHz   float64
 	Protector string // device name; empty: none
 }
 
