@@ -4,11 +4,14 @@ package main
 
 import (
 	"encoding/json"
+	"io/fs"
 	"os"
 	"path/filepath"
 	"regexp"
 	"strings"
 	"testing"
+
+	"github.com/santhosh-tekuri/jsonschema/v6"
 
 	"gemel/protocol"
 )
@@ -33,6 +36,7 @@ func TestADaemonForecastsWhileARunGoesOn(t *testing.T) {
 	if err := json.Unmarshal([]byte(must(t, append([]string{"forecast", "--json"}, args...)...)), &local); err != nil {
 		t.Fatal(err)
 	}
+	conforms(t, "forecast", must(t, append([]string{"forecast", "--json"}, args...)...))
 	if len(remote.PointList) != 65 || remote.Duration != local.Duration || *remote.Uncertainty != *local.Uncertainty || remote.Aim == nil || !remote.Aim.Reachable {
 		t.Errorf("the daemon says %q with %d points and %+v; the command %q", remote.Sentence, len(remote.PointList), remote.Aim, local.Sentence)
 	}
@@ -41,6 +45,33 @@ func TestADaemonForecastsWhileARunGoesOn(t *testing.T) {
 	drawn, err := os.ReadFile(picture)
 	if err != nil || !strings.Contains(string(drawn), "65 points twice") || !strings.HasPrefix(said, "65 points twice") {
 		t.Errorf("the picture has %d bytes, %v; the text begins %.80q", len(drawn), err, said)
+	}
+}
+
+// conforms holds what was printed against the written contract.
+func conforms(t *testing.T, name, body string) {
+	t.Helper()
+	text, err := fs.ReadFile(protocol.Contract(), "schemas/"+name+".json")
+	if err != nil {
+		t.Fatal(err)
+	}
+	read := func(text string) any {
+		v, err := jsonschema.UnmarshalJSON(strings.NewReader(text))
+		if err != nil {
+			t.Fatal(err)
+		}
+		return v
+	}
+	c := jsonschema.NewCompiler()
+	if err := c.AddResource(name, read(string(text))); err != nil {
+		t.Fatal(err)
+	}
+	schema, err := c.Compile(name)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := schema.Validate(read(body)); err != nil {
+		t.Errorf("%s: %v", name, err)
 	}
 }
 
