@@ -137,7 +137,7 @@ func TestTheJudgeFindsEverySabotage(t *testing.T) {
 		{"stops", "counts on after a stop was answered", "", "stop 3m |", countAfterStop, "is stopped"},
 		{"stops", "moves on after a stop was answered", "", "stop 3m |", moveAfterStop, "is stopped"},
 		{"troubles", "mends a lost line silently", "", "| unplug(rotary, at 4m, for 10s)", reconnectSilently, "took effect, and none of"},
-		{"troubles", "writes nothing of a lost line", "", "| unplug(rotary, at 4m, for 10s)", withoutEvents(protocol.Trouble, protocol.Held, protocol.TakenAgain), "took effect, and none of"},
+		{"troubles", "writes nothing of a lost line", "", "| unplug(rotary, at 4m, for 10s)", withoutEvents(protocol.Trouble, protocol.Held, protocol.TakenAgain), "took effect, and none of|is attempt 2, and 0 failed before it"},
 		{"reasons", "ends without a reason", "", "stop 3m |", event(of(protocol.Ended, func(e *protocol.Event) { e.Text = "" })), "without a reason"},
 		{"reasons", "does not say who stopped it", "", "stop 3m |", event(of(protocol.Ended, func(e *protocol.Event) { e.Text = "stopped" })), "does not say by whom"},
 		{"reasons", "fails for nothing", "", "|", event(of(protocol.Ended, func(e *protocol.Event) {
