@@ -177,7 +177,7 @@ func TestAVirtualSettingChangesTheWorldAndIsReadBack(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
 		b, _ := live(t, f, VirtualOptions{})
 		connectAll(t, b)
-		for i, c := range []struct{ set, want float64 }{{12.5, 12.5}, {30, 30}, {25, 25}, {4, 4}, {40, 40}} {
+		for i, c := range []struct{ set, want float64 }{{12.5, 12.5}, {30, 30}, {60, 60}, {25, 25}, {4, 4}, {40, 40}} {
 			got, err := b.Settings[i].Set(t.Context(), c.set)
 			if err != nil || got < c.want-0.1 || got > c.want+0.1 {
 				t.Errorf("%s set to %g reads %g, %v; want %g %s", b.Settings[i].Name(), c.set, got, err, c.want, b.Settings[i].Unit())

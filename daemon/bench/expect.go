@@ -125,7 +125,7 @@ func (f *File) expect(axes []scan.AxisTarget, settings []scan.SettingTarget) (sc
 	for i, arm := range []Arm{f.Optics.Signal, f.Optics.Idler} {
 		for _, d := range f.Detectors {
 			if d.Name == arm.Detector {
-				p.RoomHz[i] = d.RoomHz
+				p.RoomHz[i] += d.RoomHz
 			}
 		}
 	}

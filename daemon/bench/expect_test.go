@@ -95,6 +95,26 @@ func TestWhatIsExpectedFollowsSettingsAsDeclared(t *testing.T) {
 	}
 }
 
+func TestALampIsExpectedInBothDetectorsAndInNoPair(t *testing.T) {
+	f := demo(t)
+	at := stand(2.864, 2.864, 0)
+	lamp := func(percent float64) scan.SettingTarget { return scan.SettingTarget{Setting: "lamp", Value: percent} }
+	blocked := scan.SettingTarget{Setting: "laser", Value: 0}
+	off, on := expected(t, f, at, blocked, lamp(0)), expected(t, f, at, blocked, lamp(80))
+	for channel, adds := range map[drivers.Channel]float64{"signal": 48e3, "idler": 40e3} {
+		// 45 ns of dead time and less than a hundredth of afterpulses about it
+		if more := on.CountsHz[channel] - off.CountsHz[channel]; math.Abs(more-adds) > 0.01*adds {
+			t.Errorf("%s: the lamp adds %.0f /s; want about %.0f", channel, more, adds)
+		}
+		if math.Abs(on.CountsHz[channel]-on.DarkHz[channel]) > 1e-6 {
+			t.Errorf("%s: %.1f /s with the pump at 0 mW and %.1f in the dark; want the same", channel, on.CountsHz[channel], on.DarkHz[channel])
+		}
+	}
+	if on.CountsHz["pairs"] != on.AccidentalsHz["pairs"] || on.CountsHz["pairs"] < 4e-9*48e3*40e3 {
+		t.Errorf("%.3g pairs /s of which %.3g by chance; want chance alone", on.CountsHz["pairs"], on.AccidentalsHz["pairs"])
+	}
+}
+
 func TestExpectationsKnowNothingOfTheTruth(t *testing.T) {
 	text := withSettings(t, "efficiency: 57 %, fluorescence_per_mw: 12 Hz, stray_per_mw: 5 Hz, room: 1100 Hz", "efficiency: 7 %, fluorescence_per_mw: 900 Hz")
 	text = strings.Replace(text, "offset: 18.42 ns", "offset: 3 ns", 1)

@@ -68,6 +68,10 @@ func (f *File) Set(p *source.Pose, setting drivers.DeviceName, value float64) {
 		p.Gain[0] = s.PerVolt * (base - s.Nominal)
 	case instruments.IdlerBias:
 		p.Gain[1] = s.PerVolt * (base - s.Nominal)
+	case instruments.RoomLight:
+		for i, adds := range s.AddsHz {
+			p.RoomHz[i] += max(0, value) * adds
+		}
 	}
 }
 

@@ -27,6 +27,7 @@ type Setting struct {
 	Centre  *strict.Measured // of a delay: where pairs are centred, s; nil: not known
 	Nominal float64          // of a bias: where the detector is as declared, V
 	PerVolt float64          // of a bias: relative change of the efficiency
+	AddsHz  [2]float64       // of a lamp: to what is recorded at signal and idler, for each 1 of Unit
 
 	isAt strict.Place
 	settingReading
@@ -88,7 +89,7 @@ func (r *reader) settings(v strict.Value) {
 
 // readIs reads what a setting changes, and the constants that belong to it.
 func readIs(m strict.Map, s *Setting) {
-	is, centre, nominal, perVolt := m.Opt("is"), m.Opt("centre"), m.Opt("nominal"), m.Opt("per_volt")
+	is, centre, nominal, perVolt, adds := m.Opt("is"), m.Opt("centre"), m.Opt("nominal"), m.Opt("per_volt"), m.Opt("adds")
 	s.Is, s.isAt = is.Choice(instruments.Effects(), ""), is.Place()
 	if want := effectOf(s.Is).kind; want != "" && s.Kind != "" && s.Kind != want {
 		is.Fail(fmt.Sprintf("%s in %s", s.Is, s.Unit), fmt.Sprintf("a unit of %s: %s", want, strings.Join(unit.Units(want), ", ")))
@@ -109,6 +110,20 @@ func readIs(m strict.Map, s *Setting) {
 	if isBias(s.Is) {
 		m.Need("nominal")
 		m.Need("per_volt")
+	}
+	if s.Is == instruments.RoomLight {
+		m.Need("adds")
+	}
+	if !adds.Given() {
+		return
+	}
+	am := adds.Map()
+	for i, arm := range []string{"signal", "idler"} {
+		s.AddsHz[i] = am.Need(arm).Quantity(unit.Rate, 0, 1e9)
+	}
+	am.Done()
+	if s.Is != instruments.RoomLight {
+		adds.Fail("said of what is no lamp", "is: room_light, or no such key")
 	}
 }
 
@@ -235,6 +250,8 @@ func (s Setting) neutral(o *Optics) float64 {
 			return s.Centre.Value
 		}
 		return 0
+	case instruments.RoomLight:
+		return 0 // off
 	}
 	return s.Nominal
 }
@@ -259,6 +276,10 @@ func (f *File) virtualSetting(w *instruments.World, s Setting) (instruments.Inst
 	t, neutral, perVolt := f.truthOf(s)
 	c := instruments.SettingConfig{Name: string(s.Name), Identity: identity(s.Device, "setting"), Header: s.header, Changes: s.Is,
 		Low: wire(s.base(s.Low)), High: wire(s.base(s.High)), Neutral: neutral, PerVolt: perVolt, Lag: t.lag}
+	one := wire(s.base(1)) - wire(s.base(0))
+	for i, adds := range s.AddsHz {
+		c.RoomHz[i] = adds / one
+	}
 	start := wire(neutral)
 	if t.start != nil {
 		start = wire(t.start.Base)

@@ -122,6 +122,13 @@ func TestSettingsDoToTheCountsWhatTheirKindSays(t *testing.T) {
 				t.Errorf("the power monitor reads %g mW, %v; want 20", v, err)
 			}
 		}
+		set("lamp", 80)
+		p.RoomHz = [2]float64{900 + 80*600, 1100 + 80*500}
+		check("20 mW and a lamp", p)
+		set("laser", 0)
+		p.PumpW = 0
+		check("a lamp alone", p)
+		set("lamp", 0)
 		set("laser", 45)
 		set("iris", 3)
 		p = pose

@@ -17,11 +17,12 @@ const (
 	IdlerIris          = "idler_iris"          // m, diameter
 	SignalBias         = "signal_bias"         // V
 	IdlerBias          = "idler_bias"          // V
+	RoomLight          = "room_light"          // its own unit
 )
 
 // Effects lists them all.
 func Effects() []string {
-	return []string{PumpPower, CrystalTemperature, Delay, SignalIris, IdlerIris, SignalBias, IdlerBias}
+	return []string{PumpPower, CrystalTemperature, Delay, SignalIris, IdlerIris, SignalBias, IdlerBias, RoomLight}
 }
 
 // SettingConfig describes a Setting.
@@ -42,6 +43,9 @@ type SettingConfig struct {
 	// change of that efficiency for each volt more: a straight line, which is an invention.
 	Neutral float64
 	PerVolt float64
+	// RoomHz is what a lamp adds to what is recorded at the signal's and the idler's open detector, for
+	// each 1 of its value.
+	RoomHz [2]float64
 
 	Latency time.Duration
 	Boot    time.Duration

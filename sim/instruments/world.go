@@ -346,8 +346,12 @@ func (w *World) pose(at time.Time) source.Pose {
 	w.set(&p, at)
 	p.PumpOpen, p.SignalOpen, p.IdlerOpen = w.openShare(PumpBlade, at), w.openShare(SignalBlade, at), w.openShare(IdlerBlade, at)
 	lamp := w.lampHz.value(at)
-	p.RoomHz[0] += lamp
-	p.RoomHz[1] += lamp
+	for i := range p.RoomHz {
+		p.RoomHz[i] += lamp
+		if v, ok := w.setTo(RoomLight, at); ok {
+			p.RoomHz[i] += max(0, v) * w.sets[RoomLight].cfg.RoomHz[i]
+		}
+	}
 	return p
 }
 
