@@ -34,6 +34,7 @@ type File struct {
 	Simulation *Simulation // nil on a real bench
 
 	LogbookFolder string // absolute or relative to where the program stands; empty: the command's choice
+	LeastRoom     int64  // bytes that are kept free on the logbook's disk; 0: the logbook's own bound
 	NATSListen    string // host:port; empty: the command's choice
 	AfterRestart  string // AfterRestartHold or AfterRestartResume
 

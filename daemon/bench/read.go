@@ -3,6 +3,7 @@ package bench
 import (
 	"encoding/hex"
 	"regexp"
+	"strconv"
 	"strings"
 	"time"
 
@@ -433,11 +434,37 @@ func (r *reader) sensors(v strict.Value) {
 	}
 }
 
+// diskRoom is an amount of disk.
+var diskRoom = regexp.MustCompile(`^([1-9][0-9]{0,5}) (MB|GB)$`)
+
+// readRoom returns bytes.
+func readRoom(v strict.Value) int64 {
+	if v.Text(); !v.Good() {
+		return 0
+	}
+	n := v.Match(diskRoom)
+	if n == nil {
+		v.Failf("whole MB or GB, such as \"64 MB\"")
+		return 0
+	}
+	bytes, _ := strconv.ParseInt(n[1], 10, 64)
+	if bytes *= 1e6; n[2] == "GB" {
+		bytes *= 1e3
+	}
+	return bytes
+}
+
 // service reads what concerns the program around the bench.
 func (r *reader) service(m strict.Map) {
 	if v := m.Opt("logbook"); v.Given() {
 		l := v.Map()
-		r.file.LogbookFolder = near(r.file.Path, l.Need("folder").Text(""))
+		folder, room := l.Opt("folder"), l.Opt("least_room")
+		if folder.Given() || !room.Given() {
+			r.file.LogbookFolder = near(r.file.Path, l.Need("folder").Text(""))
+		}
+		if room.Given() {
+			r.file.LeastRoom = readRoom(room)
+		}
 		l.Done()
 	}
 	if v := m.Opt("nats"); v.Given() {

@@ -6,11 +6,9 @@ import (
 	"errors"
 	"fmt"
 	"io"
-	"strings"
 	"time"
 
 	"gemel/daemon/bench"
-	"gemel/daemon/logbook"
 	"gemel/protocol"
 	"gemel/protocol/strict"
 	"gemel/scan/recipe"
@@ -20,20 +18,27 @@ type checkCommand struct {
 	Bench  string `placeholder:"FILE" help:"Bench file to check."`
 	Recipe string `placeholder:"FILE" help:"Recipe to check, against the bench if one is named."`
 	Data   string `placeholder:"DIR" help:"Data folder whose logbook to verify."`
+	Rescue string `placeholder:"FILE" help:"Write what is sound of a damaged logbook (--data) into a new file."`
 	JSON   bool   `name:"json" help:"Print what was checked and the findings as JSON."`
 	Schema string `placeholder:"recipe|bench" help:"Print the JSON Schema of recipes or of bench files, and check nothing."`
 }
 
 func (checkCommand) Help() string {
-	return "Example:\n  gemel check --bench configs/demo-bench.yaml --recipe configs/demo-recipe.yaml\n\nNothing is opened, moved or written. Every finding of every file is reported at once.\n\n  gemel check --schema recipe > recipe.schema.json\n\nprints what an editor's language support can check while you type. It knows keys, words and units, not the bench, so that only this command finds everything."
+	return "Example:\n  gemel check --bench configs/demo-bench.yaml --recipe configs/demo-recipe.yaml\n\nNothing is opened, moved or written. Every finding of every file is reported at once.\n\n  gemel check --schema recipe > recipe.schema.json\n\nprints what an editor's language support can check while you type. It knows keys, words and units, not the bench, so that only this command finds everything.\n\n  gemel check --data gemel-data\n\nverifies a logbook, also beside a daemon that writes it.\n\n  gemel check --data gemel-data --rescue rescued.db\n\nreads a damaged one without changing it, and writes what is sound into a new file."
 }
 
 func (c *checkCommand) Run(ctx context.Context, con *console) error {
 	if c.Schema != "" {
-		if c.Bench != "" || c.Recipe != "" || c.Data != "" || c.JSON {
+		if c.Bench != "" || c.Recipe != "" || c.Data != "" || c.Rescue != "" || c.JSON {
 			return errUse{errors.New("--schema beside other flags; want it alone: it checks nothing")}
 		}
 		return printSchema(con.out, c.Schema)
+	}
+	if c.Rescue != "" {
+		if c.Bench != "" || c.Recipe != "" || c.Data == "" {
+			return errUse{errors.New("--rescue needs --data, and neither --bench nor --recipe")}
+		}
+		return rescue(ctx, con, c.Data, c.Rescue, c.JSON)
 	}
 	if c.Bench == "" && c.Recipe == "" && c.Data == "" {
 		return errUse{errors.New("nothing to check; want --bench, --recipe or --data")}
@@ -138,28 +143,4 @@ func (c *checkCommand) recipe(f *bench.File) (string, error) {
 		return "", err
 	}
 	return fmt.Sprintf("%s: %q, %s, %s of light; sound, and fits the bench.", c.Recipe, plan.Title, count(len(plan.Points), "point"), count(len(plan.Visits()), "reading")), nil
-}
-
-// verify opens a logbook for reading only and checks everything that can be checked in it.
-func verify(ctx context.Context, data string) (string, []protocol.Finding, error) {
-	file := logbookFile(data)
-	book, err := logbook.OpenReadOnly(file)
-	if err != nil {
-		return "", nil, err
-	}
-	defer book.Close()
-	var found []protocol.Finding
-	for _, text := range book.Verify(ctx) {
-		found = append(found, protocol.Finding{File: file, Found: text})
-	}
-	runs, err := book.Runs(ctx)
-	if err != nil {
-		return "", nil, err
-	}
-	var words strings.Builder
-	fmt.Fprintf(&words, "%s: %s; sound.", file, count(len(runs), "run"))
-	for _, r := range runs {
-		fmt.Fprintf(&words, "\n  %s  %s  %q", r.Run, r.State, r.Title)
-	}
-	return words.String(), found, nil
 }

@@ -43,18 +43,26 @@ type exportCommand struct {
 	Data string `default:"gemel-data" placeholder:"DIR" help:"Data folder."`
 	Run_ string `name:"run" placeholder:"RUN" help:"The run; without it the last one."`
 	To   string `placeholder:"FILE" help:"Where to write; without it standard output."`
+
+	Snapshot string `placeholder:"FILE" help:"Copy the whole logbook, as it is now, into a new file; a daemon may go on writing."`
 }
 
 func (exportCommand) Help() string {
-	return "Example:\n  gemel export --to night.csv\n\nThe units of all columns stand in the header comment of the file."
+	return "Example:\n  gemel export --to night.csv\n\nThe units of all columns stand in the header comment of the file.\n\n  gemel export --snapshot night.db\n\ncopies the whole logbook while a daemon writes it. Never copy the file of a running daemon by other means."
 }
 
 func (c *exportCommand) Run(ctx context.Context, con *console) (err error) {
+	if c.Snapshot != "" && (c.Run_ != "" || c.To != "") {
+		return errUse{errors.New("--snapshot beside other flags; want it alone: it copies all runs")}
+	}
 	book, err := logbook.OpenReadOnly(logbookFile(c.Data))
 	if err != nil {
-		return err
+		return whenDamaged(c.Data, err)
 	}
 	defer book.Close()
+	if c.Snapshot != "" {
+		return snapshot(ctx, con, book, c.Data, c.Snapshot)
+	}
 	run := protocol.RunID(c.Run_)
 	if run == "" {
 		runs, err := book.Runs(ctx)

@@ -1,6 +1,7 @@
 package main
 
 import (
+	"cmp"
 	"context"
 	"crypto/rand"
 	"encoding/hex"
@@ -118,6 +119,9 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 		if errors.Is(err, logbook.ErrLocked) {
 			return nil, fmt.Errorf("%w; one daemon a data folder: stop it, or name another --data", err)
 		}
+		if errors.Is(err, logbook.ErrDamaged) {
+			return nil, fmt.Errorf("%w; it was not written to: %s", err, afterDamage(flags.Data))
+		}
 		return nil, err
 	}
 	s.cleanup = append(s.cleanup, func() { _ = s.book.Close() })
@@ -166,6 +170,7 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 		},
 		Foresee: foreseer(s.file),
 		Behind:  func() int64 { return s.courier.Behind() },
+		Room:    s.book.Room(cmp.Or(s.file.LeastRoom, logbook.LeastRoom)),
 		Step:    killpoint(),
 	})
 	return s, s.serve(ctx)

@@ -76,6 +76,8 @@ type Config struct {
 	Hand engine.HandFacts
 	// Behind tells how many entries are not published yet; nil: nothing is published.
 	Behind func() int64
+	// Room is handed to the engine: why a run should hold before the disk is full. Nil: it is not asked.
+	Room func() error
 	// Step is handed to the engine; for tests.
 	Step func(engine.Step)
 }
@@ -203,7 +205,7 @@ func (k *Keeper) execute(ctx context.Context, eng *engine.Engine) (protocol.Stat
 func (k *Keeper) engine(row logbook.RunRow, plan scan.Plan, past engine.Progress) *engine.Engine {
 	c := engine.Config{
 		Bench: k.Bench, Plan: plan, RunID: row.Run, Log: appender{k.Book}, Past: past,
-		ResumeAfterRestart: k.ResumeAfterRestart, MayHome: k.MayHome, Step: k.Step, Conclude: k.concluder(row.Run, plan),
+		ResumeAfterRestart: k.ResumeAfterRestart, MayHome: k.MayHome, Room: k.Room, Step: k.Step, Conclude: k.concluder(row.Run, plan),
 	}
 	// The engine asks from one goroutine.
 	c.Replan = func(ctx context.Context) (scan.Plan, error) {
