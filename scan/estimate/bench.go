@@ -101,6 +101,7 @@ type Model struct {
 type Refusal struct {
 	Reasons []string
 	Limit   *UpperLimit // what can be said nevertheless; nil: nothing
+	Net     *NetPairs   // the same of a delay; nil: nothing
 }
 
 func (r *Refusal) Error() string { return "no result: " + strings.Join(r.Reasons, "; ") }

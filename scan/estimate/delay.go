@@ -90,6 +90,12 @@ func Delay(rows Rows, bench Bench, q DelayQuestion) (Result, error) {
 	if err := no.err(); err != nil {
 		return Result{}, err
 	}
+	if net, flat := scan.flat(bench.Counter.Window.Value, q); flat {
+		no.Net = &net
+		no.addf("no window: the coincidences of %s are the same at every delay, as far as they were counted (the largest excess, at %.5g ns, is %.1f standard deviations); want pairs, or a sweep over where they are", q.Channel, net.MostAtS/nano, net.Most)
+		no.addf("%s", net.sentence(q.Channel))
+		return Result{}, no
+	}
 	// Where no reading lies on an edge, the likelihood is flat between the two beside it, and nothing
 	// holds the jitter.
 	fit, err := FitPeak(scan.data, window, nil)

@@ -51,6 +51,7 @@ type Result struct {
 	By    *BySetting    `json:"by,omitempty"`          // of an efficiency at several values of a setting
 	Parts []Result      `json:"parts,omitempty"`       // the efficiency at each of these values, whole
 	Limit *UpperLimit   `json:"upper_limit,omitempty"` // of an efficiency without a single coincidence
+	Net   *NetPairs     `json:"net_pairs,omitempty"`   // of a delay without a window
 
 	quantity string // what the sentence calls it
 	// As lines, for a picture: counts a second against degrees or seconds, degrees against degrees.
@@ -96,7 +97,7 @@ func (r *Result) noteValue(name string, v float64, unit, text string) {
 // Refused is the result that says why there is none.
 func Refused(rows Rows, kind string, refusal *Refusal) Result {
 	r := newResult(rows, kind)
-	r.Because, r.Limit = refusal.Reasons, refusal.Limit
+	r.Because, r.Limit, r.Net = refusal.Reasons, refusal.Limit, refusal.Net
 	_, r.SetAside = rows.split()
 	r.tidy()
 	return r
