@@ -201,20 +201,23 @@ func (s *set) present(ctx context.Context) error {
 // linked opens what a link leads to, which is another terminal each time. Where there are no
 // pseudo-terminals the link is a file that holds a TCP address.
 func linked(link string) func(context.Context) (line.Port, error) {
+	terminal, wrong := line.Address(link, line.Mode{}) // one for all openings: it bounds what hangs
 	return func(ctx context.Context) (line.Port, error) {
-		address := link
 		info, err := os.Lstat(link)
 		if err != nil {
 			return nil, err
 		}
-		if info.Mode().IsRegular() {
-			text, err := os.ReadFile(link)
-			if err != nil {
-				return nil, err
+		if !info.Mode().IsRegular() {
+			if wrong != nil {
+				return nil, fmt.Errorf("%s: %w", link, wrong)
 			}
-			address = strings.TrimSpace(string(text))
+			return terminal(ctx)
 		}
-		open, err := line.Address(address, line.Mode{})
+		text, err := os.ReadFile(link)
+		if err != nil {
+			return nil, err
+		}
+		open, err := line.Address(strings.TrimSpace(string(text)), line.Mode{})
 		if err != nil {
 			return nil, fmt.Errorf("%s: %w", link, err)
 		}

@@ -155,6 +155,55 @@ func TestAWriteThatHangsOnASerialDevicePoisonsThePort(t *testing.T) {
 	_ = master.Close()
 }
 
+// Each write that hangs keeps a descriptor and a thread until it comes back, so there are few.
+func TestADeviceThatTakesNoBytesIsNotOpenedOverAndOver(t *testing.T) {
+	master, slave := pty(t)
+	link := filepath.Join(t.TempDir(), "stage")
+	if err := os.Symlink(slave, link); err != nil {
+		t.Fatal(err)
+	}
+	open, err := line.Address(link, line.Mode{})
+	if err != nil {
+		t.Fatal(err)
+	}
+	hung := 0
+	for ; hung < 20; hung++ {
+		port, err := open(t.Context())
+		if err != nil {
+			if !strings.Contains(err.Error(), "writes hang") {
+				t.Fatal(err)
+			}
+			break
+		}
+		if err := port.SetWriteDeadline(time.Now().Add(20 * time.Millisecond)); err != nil {
+			t.Fatal(err)
+		}
+		if _, err := port.Write([]byte(strings.Repeat("x", 1<<20))); !errors.Is(err, os.ErrDeadlineExceeded) {
+			t.Fatalf("%v; want the deadline", err)
+		}
+		_ = port.Close()
+	}
+	if hung != 4 {
+		t.Errorf("%d openings before it is refused; want 4", hung)
+	}
+	// Plugged in anew, the writes come back with an error, and it may be opened.
+	second, fresh := pty(t)
+	defer func() { _ = second.Close() }()
+	if err := errors.Join(os.Remove(link), os.Symlink(fresh, link), master.Close()); err != nil {
+		t.Fatal(err)
+	}
+	for deadline := time.Now().Add(10 * time.Second); ; time.Sleep(time.Millisecond) {
+		port, err := open(t.Context())
+		if err == nil {
+			_ = port.Close()
+			break
+		}
+		if time.Now().After(deadline) {
+			t.Fatalf("after it was plugged in anew: %v", err)
+		}
+	}
+}
+
 func TestATCPLineAnswersAndIsOpenedAgain(t *testing.T) {
 	listener, err := net.Listen("tcp", "127.0.0.1:0")
 	if err != nil {

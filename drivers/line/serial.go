@@ -9,6 +9,7 @@ import (
 	"runtime/debug"
 	"strings"
 	"sync"
+	"sync/atomic"
 	"time"
 
 	"go.bug.st/serial"
@@ -80,8 +81,18 @@ func Address(address string, mode Mode) (func(context.Context) (Port, error), er
 	if err != nil {
 		return nil, err
 	}
-	return func(context.Context) (Port, error) { return openSerial(address, native) }, nil
+	hung := new(atomic.Int32)
+	return func(context.Context) (Port, error) {
+		if n := hung.Load(); n >= mostHung {
+			return nil, fmt.Errorf("%s: %d writes hang there; want the instrument to take its bytes, or to be plugged in anew", address, n)
+		}
+		return openSerial(address, native, hung)
+	}, nil
 }
+
+// mostHung bounds what a device that takes no bytes can cost: each write that hangs keeps a descriptor
+// and a thread.
+const mostHung = 4
 
 // soon is too short a time to sleep: a read with a nearer deadline only looks at what is there.
 const soon = time.Millisecond
@@ -89,7 +100,7 @@ const soon = time.Millisecond
 // openSerial locks the device before it opens it: opening alone would already disturb another
 // program's settings, and the exclusive mode that the library asks for does not hold against a
 // privileged one.
-func openSerial(path string, mode *serial.Mode) (*serialPort, error) {
+func openSerial(path string, mode *serial.Mode, hung *atomic.Int32) (*serialPort, error) {
 	hold, err := lock(path)
 	if err != nil {
 		return nil, fmt.Errorf("%s: %w", path, err)
@@ -112,19 +123,21 @@ func openSerial(path string, mode *serial.Mode) (*serialPort, error) {
 		hold.release()
 		return nil, errors.Join(fmt.Errorf("%s: %w", path, err), port.Close())
 	}
-	return &serialPort{port: port, hold: hold}, nil
+	return &serialPort{port: port, hold: hold, hung: hung}, nil
 }
 
 // serialPort makes a Port of the library's, which knows neither deadlines nor bounded writes.
 type serialPort struct {
 	port    serial.Port
 	hold    *held
+	hung    *atomic.Int32 // writes on this device that do not come back
 	readBy  time.Time
 	writeBy time.Time
 
-	mu     sync.Mutex
-	stuck  bool // a write has not come back
-	closed bool
+	mu      sync.Mutex
+	stuck   bool // a write has not come back
+	counted bool // in hung
+	closed  bool
 }
 
 func (p *serialPort) SetReadDeadline(t time.Time) error  { p.readBy = t; return nil }
@@ -175,6 +188,9 @@ func (p *serialPort) Write(b []byte) (int, error) {
 			}
 			p.mu.Lock()
 			p.stuck = false
+			if p.counted {
+				p.hung.Add(-1)
+			}
 			late := p.closed
 			p.mu.Unlock()
 			if late {
@@ -195,6 +211,12 @@ func (p *serialPort) Write(b []byte) (int, error) {
 	case o := <-back:
 		return o.n, o.err
 	case <-late:
+		p.mu.Lock()
+		if p.stuck && !p.counted {
+			p.counted = true
+			p.hung.Add(1)
+		}
+		p.mu.Unlock()
 		return 0, fmt.Errorf("the device takes no bytes: %w", os.ErrDeadlineExceeded)
 	}
 }
