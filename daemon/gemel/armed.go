@@ -16,8 +16,19 @@ import (
 const armFile = "armed.json"
 
 type arming struct {
+	At    time.Time `json:"at"`
 	Until time.Time `json:"until"`
 	Who   string    `json:"who"`
+}
+
+// backwards is how far a clock may be set back, as it is now and then by a time service, and the bench
+// still be armed. Beyond it nobody knows how long ago the word was given.
+const backwards = time.Minute
+
+// covers says whether the bench is armed at a moment of the wall's clock. No more than a day is
+// believed, whatever the clock did meanwhile.
+func (a arming) covers(now time.Time) bool {
+	return !now.Before(a.At.Add(-backwards)) && now.Before(a.Until) && now.Before(a.At.Add(25*time.Hour))
 }
 
 // armedIn says whether the bench of a data folder is armed. Simulated ones always are.
@@ -31,7 +42,7 @@ func armedIn(data string, simulated bool) func(time.Time) bool {
 			return false
 		}
 		var a arming
-		return json.Unmarshal(text, &a) == nil && now.Before(a.Until)
+		return json.Unmarshal(text, &a) == nil && a.covers(now)
 	}
 }
 
@@ -45,14 +56,15 @@ func (armCommand) Help() string {
 }
 
 func (c *armCommand) Run(_ context.Context, con *console) error {
-	until, err := nextClock(c.Until, time.Now())
+	now := time.Now()
+	until, err := nextClock(c.Until, now)
 	if err != nil {
 		return errUse{err}
 	}
 	if _, err := os.Stat(c.Data); errors.Is(err, fs.ErrNotExist) {
 		return errUse{fmt.Errorf("no data folder %s; name the one that the daemon serves with --data", c.Data)}
 	}
-	text, err := json.Marshal(arming{Until: until, Who: whoami()})
+	text, err := json.Marshal(arming{At: now, Until: until, Who: whoami()})
 	if err != nil {
 		return err
 	}
