@@ -648,33 +648,6 @@ func TestTheWireLogIsBoundedAndInOrder(t *testing.T) {
 	})
 }
 
-// 120 000 exchanges are what a night of 30 000 gates costs on the counter's line.
-func BenchmarkAnExchangeInVirtualTime(b *testing.B) {
-	near, far := drivertest.Cable()
-	l := line.New(line.Settings{Open: func(context.Context) (line.Port, error) { return near, nil }})
-	ctx, cancel := context.WithCancel(b.Context())
-	defer cancel()
-	go func() { _ = l.Run(ctx) }()
-	go func() {
-		buf := make([]byte, 256)
-		for {
-			if _, err := far.Read(buf); err != nil {
-				return
-			}
-			_, _ = far.Write([]byte("12034,9876,512;0;173\n"))
-		}
-	}()
-	s := l.Seat(line.SeatSettings{Device: "counter"})
-	if _, err := s.Connect(ctx); err != nil {
-		b.Fatal(err)
-	}
-	for b.Loop() {
-		if _, err := s.Ask(ctx, line.Question{Op: "q", Send: []byte("*ESE 173;:FETC?;*ESE?"), Judge: anything}); err != nil {
-			b.Fatal(err)
-		}
-	}
-}
-
 func TestAPortThatIsLostAtOnceIsOpenedAgainWithPauses(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
 		tries := 0
