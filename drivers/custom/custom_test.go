@@ -192,6 +192,30 @@ func FuzzDecoding(f *testing.F) {
 	})
 }
 
+// A pattern that is taken covers whole answers and nothing else.
+func FuzzPatterns(f *testing.F) {
+	for _, s := range [][2]string{{"P(?P<angle>-?[0-9]+)", "P-28640"}, {"OK|BUSY", "xOK"}, {"a)|(b", "ax"}, {"(?i)ready", "READY now"}, {"(?P<reason>.*)x", "E1x"}, {"[", ""}, {"(?s:.)+$", "a\nb"}, {"x\\z|y", "yx"}} {
+		f.Add(s[0], []byte(s[1]))
+	}
+	f.Fuzz(func(t *testing.T, pattern string, answer []byte) {
+		re, err := parsePattern(pattern, []string{"angle", "reason"})
+		if err != nil || re == nil {
+			return
+		}
+		if re.MatchString("") {
+			t.Fatalf("%q matches nothing at all", pattern)
+		}
+		if at := re.FindIndex(answer); at != nil && (at[0] != 0 || at[1] != len(answer)) {
+			t.Fatalf("%q matches %q in %q; want whole answers only", pattern, answer[at[0]:at[1]], answer)
+		}
+		for name, text := range groupsOf(re, answer) {
+			if name != "angle" && name != "reason" || !strings.Contains(string(answer), text) {
+				t.Fatalf("%q of %q: group %s is %q", pattern, answer, name, text)
+			}
+		}
+	})
+}
+
 func FuzzTemplates(f *testing.F) {
 	f.Add(`M{angle}\x0d`)
 	f.Fuzz(func(t *testing.T, s string) {

@@ -116,13 +116,13 @@ func parsePattern(text string, groups []string) (*regexp.Regexp, error) {
 	if len(text) > 1000 {
 		return nil, fmt.Errorf("a pattern of %d characters; want at most 1000", len(text))
 	}
+	// By itself first: between the anchors "a)|(b" would compile, and they would hold half of it each.
+	if _, err := regexp.Compile(text); err != nil {
+		return nil, fmt.Errorf("%q is no RE2 pattern: %w", text, err)
+	}
 	re, err := regexp.Compile(`\A(?:` + text + `)\z`)
 	if err != nil {
-		// The compiler quotes the pattern as it got it; the user wrote it without the anchors.
-		if _, own := regexp.Compile(text); own != nil {
-			err = own
-		}
-		return nil, fmt.Errorf("%q is no RE2 pattern: %w", text, err)
+		return nil, fmt.Errorf("%q is no RE2 pattern between anchors: %w", text, err)
 	}
 	if re.MatchString("") {
 		return nil, fmt.Errorf("%q also matches an empty answer; want a pattern that an answer must fit", text)

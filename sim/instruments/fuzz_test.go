@@ -5,6 +5,8 @@ import (
 	"strings"
 	"testing"
 	"time"
+
+	"gemel/sim/source"
 )
 
 func FuzzBlock(f *testing.F) {
@@ -117,6 +119,56 @@ func FuzzMechanism(f *testing.F) {
 				}
 			}
 			at = next
+		}
+	})
+}
+
+// Whatever comes over the line, a controller answers in whole lines and its axes stay within its limits and
+// the way to its reference.
+func FuzzControllers(f *testing.F) {
+	for _, s := range []string{"M1 500000\nP1\nS1\n", "H1\nR1\nX\n", "M1 -99999999999\n", "\x18P1\r\n", "G90 G0 A50\nWHERE\nREST\n\x03", "MARK A\nREF A\nREFD\n", "G1 A1 F0.001\n", "M1 1\x18\n\n", "WHO\nI\n"} {
+		f.Add([]byte(s), true)
+		f.Add([]byte(s), false)
+	}
+	f.Fuzz(func(t *testing.T, text []byte, plain bool) {
+		w, err := NewWorld(WorldConfig{Model: new(source.Model)})
+		if err != nil {
+			t.Fatal(err)
+		}
+		axis := AxisConfig{Letter: "A", Axis: "one", LowDeg: -60, HighDeg: 60, SpeedDegS: 10, AccelDegS2: 20, BacklashDeg: 0.1, StepsPerDeg: 1000, Homed: true}
+		var hear func(time.Time, byte)
+		var a *actor
+		if plain {
+			axis.Letter = "1"
+			p, err := NewPlain(w, PlainConfig{Name: "p", Axes: []AxisConfig{axis}})
+			if err != nil {
+				t.Fatal(err)
+			}
+			hear, a = p.heard, &p.actor
+		} else {
+			r, err := NewRotary(w, RotaryConfig{Name: "r", Axes: []AxisConfig{axis}})
+			if err != nil {
+				t.Fatal(err)
+			}
+			hear, a = r.heard, &r.actor
+		}
+		now := w.origin
+		for i, b := range text[:min(len(text), 400)] {
+			now = now.Add(time.Duration(i%7) * 100 * time.Millisecond)
+			w.settle(now)
+			hear(now, b)
+			if deg := w.axes[0].path.axis(now); math.IsNaN(deg) || deg < -60-RunUpDeg-0.2 || deg > 60+RunUpDeg+0.2 {
+				t.Fatalf("after %q the axis stands at %g deg", text[:i+1], deg)
+			}
+		}
+		w.settle(now.Add(24 * time.Hour))
+		for _, s := range a.out {
+			if strings.Count(s.text, "\n") != 1 || !strings.HasSuffix(s.text, "\n") || len(s.text) > 1000 {
+				t.Fatalf("%q is answered %q; want one line", text, s.text)
+			}
+		}
+		if len(w.ledger.Records()) > 0 && w.axes[0].seeking {
+			t.Fatalf("after %q it seeks for ever", text)
 		}
 	})
 }
