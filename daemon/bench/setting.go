@@ -29,6 +29,10 @@ type Setting struct {
 	PerVolt float64          // of a bias: relative change of the efficiency
 	AddsHz  [2]float64       // of a lamp: to what is recorded at signal and idler, for each 1 of Unit
 
+	// Stand is where it is brought before anything is counted that a recipe does not step it for, in
+	// Unit; nil: it stays as it is found. Without a word of the file it is where the light is as declared.
+	Stand *float64
+
 	isAt strict.Place
 	settingReading
 }
@@ -82,6 +86,13 @@ func (r *reader) settings(v strict.Value) {
 			}
 		}
 		readIs(m, &s)
+		if stand := m.Opt("stand"); stand.Given() {
+			x, _ := unit.In(stand.Quantity(s.Kind, -1e30, 1e30), s.Unit)
+			x = tidy(x)
+			if s.Stand = &x; stand.Good() && (x < s.Low || x > s.High) {
+				stand.Fail(fmt.Sprintf("%g %s, beyond its limits", x, s.Unit), fmt.Sprintf("%g %s to %g %s", s.Low, s.Unit, s.High, s.Unit))
+			}
+		}
 		done(m, s.Device)
 		r.file.Settings = append(r.file.Settings, s)
 	}
@@ -232,6 +243,21 @@ func (f *File) truthOf(s Setting) (t settingTruth, neutral, perVolt float64) {
 		perVolt = *t.perVolt
 	}
 	return t, neutral, perVolt
+}
+
+// stand is where a setting is brought that no recipe steps.
+func (s Setting) stand(o *Optics) (value float64, ok bool) {
+	switch {
+	case s.Stand != nil:
+		return *s.Stand, true
+	case s.Is == "", s.Is == instruments.Delay && s.Centre == nil, s.Is != instruments.Delay && s.Is != instruments.RoomLight && o == nil:
+		return 0, false
+	}
+	value, err := unit.In(s.neutral(o), s.Unit)
+	if err != nil || value < s.Low || value > s.High {
+		return 0, false
+	}
+	return tidy(value), true
 }
 
 // neutral is the value, in the base unit of its kind, at which the light is as the file declares.

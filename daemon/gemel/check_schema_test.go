@@ -180,7 +180,7 @@ func onlyFound() map[string][]string {
 			"line-real-on-a-simulated-bench", "line-simulated-without-simulation", "line-that-is-not-there", "line-used-by-nothing", "line-with-two-baud-rates",
 			"name-twice", "park-leaves-no-room-to-approach", "park-outside-its-limits", "protector-of-nothing", "pump-outside-the-crystal-data",
 			"sense-is-zero", "sensor-measured-once", "setting-centre-of-no-delay", "setting-is-what-another-is", "setting-of-an-iris-that-is-a-fibre",
-			"setting-slope-of-no-bias", "setting-tolerance-of-another-kind", "simulated-axis-without-acceleration", "simulated-bench-without-optics",
+			"setting-slope-of-no-bias", "setting-stands-beyond-its-limits", "setting-tolerance-of-another-kind", "simulated-axis-without-acceleration", "simulated-bench-without-optics",
 			"simulated-counter-that-speaks-custom", "simulated-instruments-on-one-line", "simulated-run-up-shorter-than-it-is",
 			"simulated-setting-that-speaks-nanoseconds", "simulated-setting-that-starts-beyond-its-limits", "simulated-truth-of-another-setting",
 			"simulated-truth-of-no-axis", "simulated-truth-of-no-setting", "two-axes-in-one-role", "two-axes-on-one-letter",

@@ -23,6 +23,9 @@ type Bench struct {
 	Pump      drivers.Shutter // nil: none, and darks are refused
 	Sensors   []drivers.Sensor
 	Settings  []drivers.Setting
+	// Stand is where settings are brought that the plan does not step, in their units: a run that was
+	// stopped in a scan of the delay must not spoil the next one. Others stay as they are found.
+	Stand map[drivers.DeviceName]float64
 
 	// HomeOrder is the order in which a controller's axes search their zero, one after another.
 	HomeOrder map[drivers.DeviceName][]drivers.AxisName

@@ -372,7 +372,11 @@ func (e *Engine) turn(ctx context.Context) error {
 		if who := e.progress.cutBy; who != "" {
 			return e.end(ctx, protocol.Stopped, fmt.Sprintf("stopped by %s after a point: %d of %d readings accepted, the closing ones among them", who, e.progress.Accepted, e.progress.Planned()), map[string]any{"who": who})
 		}
-		return e.end(ctx, protocol.Finished, fmt.Sprintf("finished: %d of %d readings accepted, %d set aside", e.progress.Accepted, e.progress.Planned(), e.progress.SetAside), nil)
+		text := fmt.Sprintf("finished: %d of %d readings accepted, %d set aside", e.progress.Accepted, e.progress.Planned(), e.progress.SetAside)
+		if n := e.progress.leftOut; n > 0 {
+			text += fmt.Sprintf("; %d visits were left out, which did not fit", n)
+		}
+		return e.end(ctx, protocol.Finished, text, nil)
 	}
 	if task.kind == lightTask {
 		if b, again := e.oldReference(); again {
@@ -566,6 +570,10 @@ func (e *Engine) publishSnapshot() {
 	s := Snapshot{State: p.State, Causes: append([]protocol.Cause{}, p.Causes...), Reason: p.Reason, Accepted: p.Accepted, SetAside: p.SetAside, Planned: p.Planned(), RestBad: p.restBad}
 	if p.State == protocol.Running {
 		s.TimeLeft = p.timeLeft()
+		if end := e.Plan.Schedule.FinishBy; s.TimeLeft != nil && !end.IsZero() {
+			left := max(0, min(*s.TimeLeft, end.Sub(e.now())))
+			s.TimeLeft = &left
+		}
 	}
 	e.mu.Lock()
 	e.snapshot = s

@@ -643,3 +643,29 @@ func TestEveryReadingSaysWhereTheSteppedSettingsStand(t *testing.T) {
 		}
 	})
 }
+
+func TestSettingsThatNobodyStepsAreBroughtWhereTheyStand(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		value := 22.4 // where a scan that was stopped left it
+		n := newNight(t, nil)
+		n.eng.Bench.Settings = []drivers.Setting{offSetting{fakeDevice{n.world, "delay"}, &value}}
+		n.eng.Bench.Stand = map[drivers.DeviceName]float64{"delay": 18.4}
+		if state, err := n.eng.Run(t.Context()); state != protocol.Finished || err != nil {
+			t.Fatalf("Run() = %s, %v; want finished", state, err)
+		}
+		sets := 0
+		for _, what := range n.heard() {
+			if strings.HasPrefix(what, "set delay") {
+				sets++
+			}
+		}
+		if sets != 1 {
+			t.Errorf("it was set %d times; want once", sets)
+		}
+		for _, r := range n.readings(t) {
+			if len(r.Settings) != 1 || r.Settings[0].Target != 18.4 || r.Settings[0].Before != 18.401 {
+				t.Errorf("reading %d has %+v; want the delay where it stands", r.Sequence, r.Settings)
+			}
+		}
+	})
+}

@@ -2,6 +2,7 @@ package engine
 
 import (
 	"errors"
+	"fmt"
 	"slices"
 	"strings"
 	"testing"
@@ -149,8 +150,12 @@ func TestAScheduleWaitsAndThenLeavesOutWhatDoesNotFit(t *testing.T) {
 		if last.Kind != protocol.Dark || last.EndedAt.After(began.Add(2*time.Hour+90*time.Second)) {
 			t.Errorf("the last reading is %s at %s; want the closing dark before the end", last.Kind, last.EndedAt)
 		}
-		if got := n.eng.Snapshot(); got.Accepted >= 60 || got.Accepted < 15 || got.Accepted != got.Planned {
-			t.Errorf("%d accepted of %d planned; want the cut sweep to be all there is", got.Accepted, got.Planned)
+		if got := n.eng.Snapshot(); got.Accepted >= 60 || got.Accepted < 15 || got.Accepted != got.Planned-n.eng.progress.leftOut {
+			t.Errorf("%d accepted of %d planned; want what was left out to be all that is missing", got.Accepted, got.Planned)
+		}
+		events := n.events(t)
+		if text := events[len(events)-1].Text; !strings.Contains(text, fmt.Sprintf("%d visits were left out", n.eng.progress.leftOut)) {
+			t.Errorf("it ended with %q; want what was left out told", text)
 		}
 		if p := n.fold(t); !p.cut {
 			t.Error("the cut is not in the journal: a resumed run would go on")

@@ -36,6 +36,8 @@ type Progress struct {
 	guard       string                          // the guard that broke last
 	cut         bool                            // the rest of the sweep is left out, by the schedule or by a person
 	cutBy       string                          // the person; empty: the schedule
+	leftOut     int                             // visits left out so
+	givenUp     int                             // readings given up after their retries
 	warm        bool                            // the warm-up is over
 	ref         references                      // where the references stand
 	refined     []scan.Point                    // points added after the first pass
@@ -365,9 +367,10 @@ func (p *Progress) applyEvent(ev *protocol.Event) {
 		}
 	case protocol.SetAside:
 		if key, ok := eventKey(ev.Detail); ok && key.kind == restTask {
-			p.cut = true
+			p.cut, p.leftOut = true, numberIn(ev.Detail, "left_out")
 			p.cutBy, _ = ev.Detail["who"].(string)
 		} else if ok {
+			p.givenUp++
 			p.finish(key, ev.At.Time)
 		}
 	}
@@ -452,15 +455,18 @@ func (p *Progress) lastOrStart(kind taskKind) time.Time {
 	return p.startedAt
 }
 
-// Planned counts the readings of the whole run: those taken, those that are still certain to
-// come. What goes by the clock is counted when it is taken.
+// Planned counts the readings of the whole run: those taken, those given up or left out, and those
+// that are still certain to come. What goes by the clock is counted when it is taken.
 func (p *Progress) Planned() int {
 	if p.thePlan == nil {
 		return 0
 	}
-	n := len(p.done) + p.left()
+	n := p.Accepted + p.givenUp + p.leftOut + p.left()
 	for _, c := range p.cadences() {
-		n += (p.series[c.kind].taken + p.ahead(c)) * p.readings(c)
+		n += p.ahead(c) * p.readings(c)
+	}
+	if _, begun := p.ref.begun(); begun && p.series[referenceTask].taken == 0 {
+		n -= p.ref.placed
 	}
 	return n
 }

@@ -84,6 +84,9 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 		Settings: []protocol.Setting{}, Sensors: []protocol.Sensor{}, Counts: []protocol.Count{}, Slices: []protocol.Slice{}, Angles: []protocol.Angle{}}
 	point := e.progress.point(e.progress.nearest().Point)
 	targets := point.Axes
+	if err := e.set(ctx, r, e.unstepped()); err != nil {
+		return nil, err
+	}
 	switch t.kind {
 	case lightTask:
 		r.Point, r.Visit = &t.visit.Point, &t.visit.Visit
@@ -357,12 +360,30 @@ func (e *Engine) scatter(slices []protocol.Slice) *protocol.Scatter {
 	return worst
 }
 
+// unstepped are the settings that the plan does not step, with where they stand.
+func (e *Engine) unstepped() []scan.SettingTarget {
+	var all []scan.SettingTarget
+	for _, s := range e.Bench.Settings {
+		value, ok := e.Bench.Stand[s.Name()]
+		if ok && !slices.ContainsFunc(e.Plan.Points[0].Settings, func(t scan.SettingTarget) bool { return t.Setting == s.Name() }) {
+			all = append(all, scan.SettingTarget{Setting: s.Name(), Value: value})
+		}
+	}
+	return all
+}
+
 // set brings settings to their targets and notes what was read back.
 func (e *Engine) set(ctx context.Context, r *protocol.Reading, targets []scan.SettingTarget) error {
 	for _, t := range targets {
 		s := e.setting(t.Setting)
-		delete(e.told, t.Setting)
-		value, err := s.Set(ctx, t.Value)
+		var value float64
+		var err error
+		if told, is := e.told[t.Setting]; is && told == t.Value {
+			value, err = s.Get(ctx)
+		} else {
+			delete(e.told, t.Setting)
+			value, err = s.Set(ctx, t.Value)
+		}
 		if err != nil {
 			return err
 		}
