@@ -89,9 +89,9 @@ type Keeper struct {
 
 	// order is held while it is decided whose turn it is, and while that is changed. It may be held
 	// for as long as a journal takes to be read, so no status waits for it. It is taken before mu.
-	order sync.Mutex
+	order lock
 	// events is held while an event of the bench finds its place.
-	events sync.Mutex
+	events lock
 
 	mu      sync.Mutex // held for moments only
 	current *engine.Engine
@@ -105,8 +105,18 @@ func New(c Config) *Keeper {
 	if c.Armed == nil {
 		c.Armed = func(time.Time) bool { return c.Bench.Simulated }
 	}
-	return &Keeper{Config: c, wake: make(chan struct{}, 1)}
+	return &Keeper{Config: c, wake: make(chan struct{}, 1), order: make(lock, 1), events: make(lock, 1)}
 }
+
+// lock is a mutex that is held while the disk or the bench is waited for. It is a channel because
+// virtual time passes for who waits on one, and for who waits for a mutex it does not.
+type lock chan struct{}
+
+// Lock waits until nobody else holds it.
+func (l lock) Lock() { l <- struct{}{} }
+
+// Unlock lets the next one have it.
+func (l lock) Unlock() { <-l }
 
 // Run brings the bench to rest, takes up what is unfinished, and then executes runs as they are
 // asked for, until ctx ends. An error means that the logbook or this program is broken.

@@ -60,7 +60,9 @@ var changes = []change{
 		return regexp.MustCompile(`(?m)^    (trip_rate|floor|glance): .*\n`).ReplaceAllString(t, "")
 	}},
 	{"falling", func(t string) string { return strings.ReplaceAll(t, "approach: rising", "approach: falling") }},
-	{"watched", func(t string) string { return strings.Replace(t, "detectors:\n", "detectors:\n  watch: 2 s\n", 1) }},
+	{"watched", func(t string) string {
+		return regexp.MustCompile(`(?m)^    glance: .*\n`).ReplaceAllString(t, "${0}    watch: 1500 ms\n")
+	}},
 	{"steps", func(t string) string { // positions that are only counted, and verified
 		return regexp.MustCompile(`(?m)^    position_from: encoder\n    error: 0.004 deg\n`).ReplaceAllString(t,
 			"    position_from: steps\n    error: 0.004 deg\n    verify_home: {every: 5 min, tolerance: 0.01 deg}\n")
@@ -70,7 +72,7 @@ var changes = []change{
 // members are the benches that nights are drawn on; "plain" is the file as it stands.
 var members = []string{"plain", "plain", "custom", "split", "wide", "bare", "open", "attended fenced", "attended", "tight", "blind", "falling",
 	"custom bare", "split attended", "split open tight", "custom wide falling", "split wide", "custom attended fenced blind",
-	"watched", "watched tight", "steps", "steps attended", "split steps watched", "custom steps"}
+	"watched", "tight watched", "steps", "steps attended", "split watched steps", "custom steps"}
 
 // block replaces what begins with a line and is indented deeper, or is empty or a comment between.
 func block(text, head, with string) string {
@@ -104,6 +106,7 @@ func ownDialect(name, line, identity string) string {
       stop: {bytes: '\x18'}
       homed: {send: "Z{address}", match: "1", otherwise: "0"}
       home: {send: "H{address}", match: OK}
+      mark: {send: "R{address}", match: OK}
       identity: {send: I, match: "I(?P<identity>.+)"}
 `, name, line, identity)
 }
@@ -116,7 +119,7 @@ func (f *Family) Bench(words string) (*bench.File, error) {
 		return file, f.bad[words]
 	}
 	text := f.Text
-	for _, word := range strings.Fields(words) {
+	for word := range strings.FieldsSeq(words) {
 		if word == "plain" {
 			continue
 		}

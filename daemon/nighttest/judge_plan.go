@@ -11,6 +11,7 @@ import (
 	"gemel/protocol"
 	"gemel/scan"
 	"gemel/sim/instruments"
+	"gemel/sim/trouble"
 )
 
 // planned follows one run through its plan: the points it decided, the visits it makes in their order,
@@ -490,13 +491,20 @@ func (j *judge) guarded(where string, b *protocol.Reading, seen *instruments.See
 			}
 		}
 		scale, ok := j.facts.Sensors[string(g.Sensor)]
-		if !ok || scale.Quantity != "W" {
+		if !ok || scale.Quantity != "W" || j.stuck(scale.Device, b) {
 			continue
 		}
 		if w := seen.PumpMeanW / scale.Factor; w < g.Low*(1-meterNoise) || w > g.High*(1+meterNoise) {
 			j.say("%s was accepted at a pump power of %.4g mW; the guard wants %g to %g", where, w, g.Low, g.High)
 		}
 	}
+}
+
+// stuck says whether a sensor measured the same for ever around a reading: nobody can tell.
+func (j *judge) stuck(device string, b *protocol.Reading) bool {
+	return slices.ContainsFunc(j.effects, func(e *effect) bool {
+		return e.trouble.Kind == trouble.StuckValue && e.trouble.Device == device && !b.EndedAt.Before(e.at) && b.StartedAt.Before(e.at.Add(e.trouble.For+time.Minute))
+	})
 }
 
 // meterNoise is five times the virtual meter's own, relative.

@@ -845,6 +845,9 @@ func FactsOf(f *bench.File) Facts {
 		facts.Pump = string(f.Pump.Name)
 	}
 	for _, d := range f.Detectors {
+		if d.Watch > 0 && (facts.Watch == 0 || d.Watch < facts.Watch) {
+			facts.Watch = d.Watch
+		}
 		facts.Detectors = append(facts.Detectors, DetectorFact{Name: d.Name, Channel: string(d.Channel), TripHz: d.TripHz, FloorHz: d.FloorHz, Protector: string(d.ProtectBy)})
 	}
 	return facts

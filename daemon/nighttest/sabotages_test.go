@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"context"
 	"encoding/json"
+	"maps"
 	"slices"
 	"time"
 
@@ -154,17 +155,13 @@ func (s *stale) Move(ctx context.Context, targets map[drivers.AxisName]unit.Angl
 func (s *stale) Where(ctx context.Context) (map[drivers.AxisName]unit.Angle, error) {
 	if s.at != nil {
 		copied := map[drivers.AxisName]unit.Angle{}
-		for a, x := range s.at {
-			copied[a] = x
-		}
+		maps.Copy(copied, s.at)
 		return copied, nil
 	}
 	at, err := s.Stage.Where(ctx)
 	if err == nil {
 		s.at = map[drivers.AxisName]unit.Angle{}
-		for a, x := range at {
-			s.at[a] = x
-		}
+		maps.Copy(s.at, at)
 	}
 	return at, err
 }
