@@ -532,7 +532,7 @@ type latch struct {
 }
 
 // latchedGives is what a latched detector gives of what it should.
-const latchedGives = 1e-4
+const latchedGives = 1e-6
 
 // gives is what an arm's detector gives of what it should. A latched one shows it first in light.
 func (w *World) gives(arm string, at time.Time, open float64) float64 {

@@ -47,7 +47,7 @@ func (t Trouble) Surfaces() Surface {
 	case RestartMoving:
 		return Surface{Events: []string{"trouble", "held", "set_aside"}, Doubts: true, Text: "the motion ends short, the zero is lost, and the run holds until it is homed"}
 	case Stall:
-		return Surface{Events: []string{"trouble", "doubted", "held", "set_aside"}, Doubts: true, Text: "an encoder shows that the axis did not arrive; counted steps hide it until the zero is verified, and then readings back to the last good check are doubted"}
+		return Surface{Harmless: true, Events: []string{"trouble", "taken_again", "doubted", "held", "set_aside"}, Doubts: true, Text: "an encoder shows that the axis did not arrive, and it is sent again; counted steps hide it until the zero is verified, and then readings back to the last good check are doubted"}
 	case ModeHop:
 		return Surface{Undetectable: "no instrument measures the pump's wavelength, and the light at one place says nothing of why it changed", Text: "where a reference is taken, its ratios or centres may leave their bounds; otherwise it is in the counts as they truly were"}
 	case TemperatureDrift:
@@ -63,9 +63,9 @@ func (t Trouble) Surfaces() Surface {
 	case Hung:
 		return Surface{Retried: true, Events: []string{"trouble", "held", "set_aside"}, Text: "a write that hangs is given up after a bound, and the line is opened again"}
 	case WrongGate:
-		return Surface{Events: []string{"set_aside"}, Doubts: true, Text: "the counter's status calls its gate time doubtful, or the gate ends when it should not; its reading is set aside"}
+		return Surface{Events: []string{"set_aside", "taken_again", "held"}, Doubts: true, Text: "the counter's status calls its gate time doubtful, or the gate ends when it should not; its reading is set aside"}
 	case Overflow:
-		return Surface{Events: []string{"set_aside"}, Doubts: true, Text: "the counter's status says that a channel ran over, and the reading is set aside"}
+		return Surface{Events: []string{"set_aside", "taken_again", "held"}, Doubts: true, Text: "the counter's status says that a channel ran over, and the reading is set aside"}
 	case Latched:
 		return Surface{Events: []string{"set_aside", "held", "trouble"}, Doubts: true, Text: "below a declared floor the detector is protected and the run holds; without a floor a disturbed dwell is set aside"}
 	case StuckValue:
