@@ -292,6 +292,7 @@ type Status struct {
 	ReadingsPlanned  int          `json:"readings_planned"`
 	ReadingsSetAside int          `json:"readings_set_aside"`
 	TimeLeft         *Seconds     `json:"time_left_s"` // null while holding, or unknown
+	EndedAt          *Time        `json:"ended_at"`    // null while the run goes on
 	Queue            []RunID      `json:"queue"`
 	Waiting          []WaitingRun `json:"waiting"` // the same with titles
 	Armed            bool         `json:"armed"`

@@ -75,6 +75,13 @@ func sentence(s protocol.Status) string {
 		return fmt.Sprintf("Bench %s is idle.", s.Bench) + next(s.Waiting)
 	}
 	var b strings.Builder
+	if s.State.Final() {
+		fmt.Fprintf(&b, "Run %s, %q: %s", s.Run, s.Title, orElse(strings.TrimSuffix(s.Reason, "."), string(s.State)))
+		if s.EndedAt != nil {
+			fmt.Fprintf(&b, ", at %s", s.EndedAt.Local().Format(time.DateTime))
+		}
+		return b.String() + "." + next(s.Waiting)
+	}
 	fmt.Fprintf(&b, "Run %s is %s", s.Run, s.State)
 	if len(s.Causes) > 0 {
 		words := make([]string, len(s.Causes))
@@ -87,22 +94,53 @@ func sentence(s protocol.Status) string {
 	if s.ReadingsSetAside > 0 {
 		fmt.Fprintf(&b, ", %d set aside", s.ReadingsSetAside)
 	}
-	if s.TimeLeft != nil {
-		fmt.Fprintf(&b, ", about %s left", s.TimeLeft.Duration().Round(time.Second))
-	}
-	b.WriteString(".")
-	if (s.State == protocol.Holding || s.State.Final() || strings.HasPrefix(s.Reason, "waiting")) && s.Reason != "" {
+	b.WriteString(left(s) + ".")
+	if (s.State == protocol.Holding || strings.HasPrefix(s.Reason, "waiting")) && s.Reason != "" {
 		b.WriteString(" " + strings.TrimSuffix(s.Reason, ".") + ".")
 	}
 	if s.State == protocol.Holding {
 		for _, c := range s.Causes {
 			if c == protocol.ByOperator || c == protocol.ByTrouble || c == protocol.ByRestart {
 				b.WriteString(" It waits for a person: gemel resume, or gemel stop.")
+				if n := len(s.Waiting); n > 0 {
+					fmt.Fprintf(&b, " Until then nothing behind it begins: %s in the queue.", count(n, "run"))
+				}
 				break
 			}
 		}
 	}
 	return b.String() + next(s.Waiting)
+}
+
+// left says what a run still needs. Before the first reading only the dwells are known, and what is
+// about them is not.
+func left(s protocol.Status) string {
+	taken := s.State == protocol.Running && s.ReadingsPlanned > 0 && s.ReadingsAccepted >= s.ReadingsPlanned
+	switch {
+	case taken:
+		return "; the bench comes to rest, and the result is being worked out"
+	case s.TimeLeft == nil:
+		return ""
+	case s.ReadingsAccepted == 0 && s.TimeLeft.Duration() < time.Minute:
+		return ""
+	case s.ReadingsAccepted == 0:
+		return fmt.Sprintf(", at least %s left", roughly(s.TimeLeft.Duration()))
+	case s.TimeLeft.Duration() < time.Second:
+		return ", less than 1 s left"
+	}
+	return fmt.Sprintf(", about %s left", roughly(s.TimeLeft.Duration()))
+}
+
+// roughly prints a time with its two largest units.
+func roughly(d time.Duration) string {
+	switch d = d.Round(time.Second); {
+	case d >= time.Hour:
+		d = d.Round(time.Minute)
+		return strings.TrimSuffix(fmt.Sprintf("%d h %d min", d/time.Hour, d%time.Hour/time.Minute), " 0 min")
+	case d >= time.Minute:
+		return strings.TrimSuffix(fmt.Sprintf("%d min %d s", d/time.Minute, d%time.Minute/time.Second), " 0 s")
+	}
+	return fmt.Sprintf("%d s", d/time.Second)
 }
 
 // next names the runs that wait.

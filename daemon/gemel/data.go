@@ -13,6 +13,15 @@ import (
 
 func logbookFile(data string) string { return filepath.Join(data, "logbook.db") }
 
+// openBook opens the logbook of a data folder for reading.
+func openBook(data string) (*logbook.Book, error) {
+	if _, err := os.Stat(logbookFile(data)); errors.Is(err, os.ErrNotExist) {
+		return nil, errUse{fmt.Errorf("no logbook in %s; name the data folder with --data", data)}
+	}
+	book, err := logbook.OpenReadOnly(logbookFile(data))
+	return book, whenDamaged(data, err)
+}
+
 type noteCommand struct {
 	Data string `default:"gemel-data" placeholder:"DIR" help:"Data folder."`
 	On   string `default:"-" placeholder:"RUN" help:"The run it is about; without it, the bench."`
@@ -55,9 +64,9 @@ func (c *exportCommand) Run(ctx context.Context, con *console) (err error) {
 	if c.Snapshot != "" && (c.Run_ != "" || c.To != "") {
 		return errUse{errors.New("--snapshot beside other flags; want it alone: it copies all runs")}
 	}
-	book, err := logbook.OpenReadOnly(logbookFile(c.Data))
+	book, err := openBook(c.Data)
 	if err != nil {
-		return whenDamaged(c.Data, err)
+		return err
 	}
 	defer book.Close()
 	if c.Snapshot != "" {

@@ -79,6 +79,9 @@ func (c *handCommand) script(ctx context.Context, con *console, h *handHold) err
 			return nil
 		}
 		r, err := h.ask(ctx, q)
+		if err != nil && interrupted(ctx, err) {
+			return fmt.Errorf("stopped during %q; the bench comes to rest", text)
+		}
 		if err != nil {
 			return err
 		}

@@ -10,6 +10,7 @@ import (
 	"os"
 	"os/signal"
 	"syscall"
+	"time"
 
 	"github.com/alecthomas/kong"
 
@@ -81,17 +82,21 @@ func Main(args []string, stdin io.Reader, stdout, stderr io.Writer) int {
 		fmt.Fprintf(stderr, "gemel: %v; see gemel --help\n", err)
 		return exitWrongUse
 	}
-	// The first signal asks for the rest state; a second one ends the wait for it.
+	// The first signal asks for the rest state; one that comes later ends the wait for it. What comes
+	// within a second of the first is the same wish: a key that bounces, or a shell that passes it on.
 	// A terminal that is closed asks for it, too, and one who stopped reading must not end a night.
 	ctx, cancel := signal.NotifyContext(context.Background(), os.Interrupt, syscall.SIGTERM, syscall.SIGHUP)
 	signal.Ignore(syscall.SIGPIPE)
 	defer cancel()
-	context.AfterFunc(ctx, cancel)
+	context.AfterFunc(ctx, func() { time.AfterFunc(sameWish, cancel) })
 	con := &console{in: stdin, out: stdout, err: stderr, terminal: isTerminal(stderr)}
 	parsed.BindTo(ctx, (*context.Context)(nil))
 	err = parsed.Run(con)
 	return con.report(err)
 }
+
+// sameWish is how long after the first signal another one adds nothing to it.
+const sameWish = time.Second
 
 // errNotFinished makes the exit code 1 without another word: the run has told its story.
 var errNotFinished = errors.New("not finished")

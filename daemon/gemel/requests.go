@@ -30,7 +30,11 @@ type remoteFlags struct {
 // connect finds the daemon.
 func (f remoteFlags) connect(role string) (*client.Client, error) {
 	if f.NATS == "" {
-		return client.ConnectFolder(f.Data, role)
+		cl, err := client.ConnectFolder(f.Data, role)
+		if errors.Is(err, client.ErrNotRunning) || errors.Is(err, client.ErrGone) {
+			err = fmt.Errorf("%w; start one with gemel serve --bench FILE, or name the folder of one that runs with --data", err)
+		}
+		return cl, err
 	}
 	if f.Creds == "" || f.On == "" {
 		return nil, errUse{errors.New("--nats needs --creds FILE and --on BENCH")}
@@ -103,14 +107,16 @@ type runFlags struct {
 	Which string `arg:"" optional:"" name:"run" help:"The run; without it the current one."`
 }
 
-func (c *runFlags) ask(ctx context.Context, con *console, do func(*client.Client, context.Context, protocol.RunRequest) (protocol.RunReply, error)) error {
+// ask sends a request. goesOn says in words what was asked of a run that runs on: was is how it
+// stood before.
+func (c *runFlags) ask(ctx context.Context, con *console, do func(*client.Client, context.Context, protocol.RunRequest) (protocol.RunReply, error), goesOn func(was protocol.State) string) error {
 	return c.with(ctx, protocol.ControlRole, func(ctx context.Context, cl *client.Client) error {
+		s, err := cl.Status(ctx)
+		if err != nil {
+			return err
+		}
 		run := protocol.RunID(c.Which)
 		if run == "" {
-			s, err := cl.Status(ctx)
-			if err != nil {
-				return err
-			}
 			switch active := s.Run != "" && !s.State.Final(); {
 			case active:
 				run = s.Run
@@ -127,9 +133,16 @@ func (c *runFlags) ask(ctx context.Context, con *console, do func(*client.Client
 		if c.JSON {
 			return con.json(r)
 		}
-		if r.Run == protocol.BenchRun {
+		was := s.State
+		if s.Run != r.Run {
+			was = ""
+		}
+		switch {
+		case r.Run == protocol.BenchRun:
 			fmt.Fprint(con.out, "nobody has the bench in hand any more; it is at rest")
-		} else {
+		case r.State == protocol.Running:
+			fmt.Fprintf(con.out, "run %s %s", r.Run, goesOn(was))
+		default:
 			fmt.Fprintf(con.out, "run %s is %s", r.Run, r.State)
 		}
 		for i, cause := range r.Causes {
@@ -143,6 +156,8 @@ func (c *runFlags) ask(ctx context.Context, con *console, do func(*client.Client
 	})
 }
 
+func stillRuns(protocol.State) string { return "is running" }
+
 type stopCommand struct {
 	runFlags
 	AfterPoint bool `help:"Let the open point end, and take the closing darks, backgrounds and references first."`
@@ -152,16 +167,18 @@ func (stopCommand) Help() string { return "Example:\n  gemel stop\n  gemel stop 
 func (c *stopCommand) Run(ctx context.Context, con *console) error {
 	if c.AfterPoint {
 		c.patience = sliceTime
-		return c.ask(ctx, con, (*client.Client).StopAfterPoint)
+		return c.ask(ctx, con, (*client.Client).StopAfterPoint, func(protocol.State) string {
+			return "stops after this point, with its closing readings"
+		})
 	}
-	return c.ask(ctx, con, (*client.Client).Stop)
+	return c.ask(ctx, con, (*client.Client).Stop, stillRuns)
 }
 
 type holdCommand struct{ runFlags }
 
 func (holdCommand) Help() string { return "Example:\n  gemel hold" }
 func (c *holdCommand) Run(ctx context.Context, con *console) error {
-	return c.ask(ctx, con, (*client.Client).Hold)
+	return c.ask(ctx, con, (*client.Client).Hold, stillRuns)
 }
 
 type resumeCommand struct{ runFlags }
@@ -170,7 +187,12 @@ func (resumeCommand) Help() string {
 	return "Example:\n  gemel resume\n\nWhere a controller lost its zero, this is your word that its axes may search for it now: be there."
 }
 func (c *resumeCommand) Run(ctx context.Context, con *console) error {
-	return c.ask(ctx, con, (*client.Client).Resume)
+	return c.ask(ctx, con, (*client.Client).Resume, func(was protocol.State) string {
+		if was == protocol.Running {
+			return "is running; nothing held it"
+		}
+		return "goes on"
+	})
 }
 
 type statusCommand struct{ remoteFlags }
@@ -185,7 +207,11 @@ func (c *statusCommand) Run(ctx context.Context, con *console) error {
 		if c.JSON {
 			return con.json(s)
 		}
-		fmt.Fprintln(con.out, sentence(s))
+		text := sentence(s)
+		if idle := s.Run == "" || s.State.Final(); idle && s.Hand == "" && len(s.Waiting) == 0 {
+			text += " Nothing waits; gemel start --recipe FILE begins a run."
+		}
+		fmt.Fprintln(con.out, text)
 		return nil
 	})
 }

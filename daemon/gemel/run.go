@@ -32,6 +32,19 @@ Ctrl-C stops the run and brings the bench to rest. A run that was killed goes on
 }
 
 func (c *runCommand) Run(ctx context.Context, con *console) error {
+	err := c.run(ctx, con)
+	if err != nil && interrupted(ctx, err) {
+		return errors.New("stopped before anything moved")
+	}
+	return err
+}
+
+// interrupted says whether an error is only that a person or the system asked for the end.
+func interrupted(ctx context.Context, err error) bool {
+	return ctx.Err() != nil && (errors.Is(err, ctx.Err()) || errors.Is(err, context.Cause(ctx)))
+}
+
+func (c *runCommand) run(ctx context.Context, con *console) error {
 	text, err := strict.ReadFile(c.Recipe)
 	if err != nil {
 		return err

@@ -169,11 +169,20 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 			return report.Refine(ctx, s.book, run, plan, s.file, round)
 		},
 		Foresee: foreseer(s.file),
+		Told:    s.told,
 		Behind:  func() int64 { return s.courier.Behind() },
 		Room:    s.book.Room(cmp.Or(s.file.LeastRoom, logbook.LeastRoom)),
 		Step:    killpoint(),
 	})
 	return s, s.serve(ctx)
+}
+
+// told logs what a service's own log should say of its runs; the journal has all of it.
+func (s *session) told(ev protocol.Event) {
+	switch ev.Kind {
+	case protocol.Began, protocol.Held, protocol.WentOn, protocol.Interrupted, protocol.Trouble, protocol.OperatorDid, protocol.Ended:
+		s.log.Info().Str("run", string(ev.Run)).Str("state", string(ev.State)).Msg(ev.Text)
+	}
 }
 
 // crew starts a group that close will stop and wait for.

@@ -14,6 +14,7 @@ import (
 	"gemel/daemon/logbook"
 	"gemel/drivers"
 	"gemel/protocol"
+	"gemel/protocol/strict"
 	"gemel/protocol/unit"
 	"gemel/scan/engine"
 )
@@ -212,7 +213,7 @@ func (k *Keeper) admit(o *handOrder, queue []logbook.Waiting) error {
 	case o.q.Session == "" && s.letGo && time.Since(s.last) > handLease:
 		s.name, s.who = rand.Text(), o.by // whoever let go of the lines went away: the next one goes on
 	default:
-		return protocol.Refuse(409, fmt.Sprintf("%s has the bench under their hand since %s; it is free when they leave, or %s after the last they asked", s.who, s.since.Local().Format("15:04:05"), handLease))
+		return protocol.Refuse(409, fmt.Sprintf("%s has the bench under their hand since %s; it is free when they leave, or %s after the last they asked", s.who, s.since.Local().Format("15:04:05"), strict.Span(handLease)))
 	}
 	return nil
 }

@@ -74,6 +74,9 @@ type Config struct {
 	MayHome bool
 	// Hand is what hand work has to know beside the bench.
 	Hand engine.HandFacts
+	// Told hears of every event of a run once it is written, in the goroutine that wrote it; nil:
+	// nobody listens.
+	Told func(protocol.Event)
 	// Behind tells how many entries are not published yet; nil: nothing is published.
 	Behind func() int64
 	// Room is handed to the engine: why a run should hold before the disk is full. Nil: it is not asked.
@@ -97,6 +100,7 @@ type Keeper struct {
 	current *engine.Engine
 	row     logbook.RunRow // of current, or of the run before
 	last    engine.Snapshot
+	ended   time.Time // of the run before
 	hands   hands
 }
 
@@ -206,7 +210,7 @@ func (k *Keeper) RunOne(ctx context.Context, run protocol.RunID) (protocol.State
 func (k *Keeper) execute(ctx context.Context, eng *engine.Engine) (protocol.State, error) {
 	state, err := eng.Run(ctx)
 	k.mu.Lock()
-	k.current, k.last = nil, eng.Snapshot()
+	k.current, k.last, k.ended = nil, eng.Snapshot(), time.Now()
 	k.mu.Unlock()
 	return state, err
 }
@@ -214,7 +218,7 @@ func (k *Keeper) execute(ctx context.Context, eng *engine.Engine) (protocol.Stat
 // engine makes the engine of a run.
 func (k *Keeper) engine(row logbook.RunRow, plan scan.Plan, past engine.Progress) *engine.Engine {
 	c := engine.Config{
-		Bench: k.Bench, Plan: plan, RunID: row.Run, Log: appender{k.Book}, Past: past,
+		Bench: k.Bench, Plan: plan, RunID: row.Run, Log: k.appender(), Past: past,
 		ResumeAfterRestart: k.ResumeAfterRestart, MayHome: k.MayHome, Room: k.Room, Step: k.Step, Conclude: k.concluder(row.Run, plan),
 	}
 	// The engine asks from one goroutine.
@@ -269,7 +273,7 @@ func (k *Keeper) append(ctx context.Context, run protocol.RunID, sequence int64,
 	if err != nil {
 		return err
 	}
-	return k.Book.Append(ctx, entry)
+	return k.appender().Append(ctx, entry)
 }
 
 func (k *Keeper) eventEntry(run protocol.RunID, sequence int64, kind protocol.EventKind, text string, state protocol.State, causes []protocol.Cause, detail map[string]any) (protocol.Entry, error) {
@@ -459,6 +463,9 @@ func (k *Keeper) Stop(ctx context.Context, q protocol.RunRequest) (protocol.RunR
 // StopAfterPoint ends a run when its open point is done and the closing readings are taken; one that
 // waits in the queue is stopped there.
 func (k *Keeper) StopAfterPoint(ctx context.Context, q protocol.RunRequest) (protocol.RunReply, error) {
+	if q.Run == protocol.BenchRun {
+		return k.stopHand(ctx, q) // hand work has no points
+	}
 	eng, err := k.find(ctx, q)
 	if err != nil {
 		return protocol.RunReply{}, err
@@ -508,6 +515,12 @@ func (k *Keeper) find(ctx context.Context, q protocol.RunRequest) (*engine.Engin
 	if q.Run == "" {
 		return nil, protocol.Refuse(400, "no run named; want the run you mean, so that a late request cannot hit another")
 	}
+	if q.Run == protocol.BenchRun {
+		if s := k.handSession(); s != nil {
+			return nil, protocol.Refuse(409, fmt.Sprintf("the bench is in the hand of %s, and no run moves it; want a stop, which ends that at rest", s.who))
+		}
+		return nil, protocol.Refuse(409, "nobody has the bench in hand, and no run is named; want the run you mean")
+	}
 	if eng := k.executing(q.Run); eng != nil {
 		return eng, nil
 	}
@@ -552,6 +565,8 @@ func (k *Keeper) Status(ctx context.Context) protocol.Status {
 	snap := k.last
 	if k.current != nil {
 		snap = k.current.Snapshot()
+	} else if snap.State.Final() {
+		s.EndedAt = &protocol.Time{Time: k.ended}
 	}
 	s.Run, s.Title = k.row.Run, k.row.Title
 	s.State, s.Causes, s.Reason = snap.State, snap.Causes, snap.Reason
@@ -564,13 +579,24 @@ func (k *Keeper) Status(ctx context.Context) protocol.Status {
 }
 
 // appender gives the engine its one method, and tells it which refusals are for ever.
-type appender struct{ book Book }
+type appender struct {
+	book Book
+	told func(protocol.Event)
+}
+
+func (k *Keeper) appender() appender { return appender{k.Book, k.Told} }
 
 func (a appender) Append(ctx context.Context, e protocol.Entry) error {
 	err := a.book.Append(ctx, e)
 	for _, never := range []error{logbook.ErrGap, logbook.ErrDifferent, logbook.ErrNoRun, logbook.ErrBody, logbook.ErrReadOnly} {
 		if errors.Is(err, never) {
 			return fmt.Errorf("%w: %w", engine.ErrConflict, err)
+		}
+	}
+	if err == nil && a.told != nil && e.Kind == protocol.EventEntry {
+		var ev protocol.Event
+		if json.Unmarshal(e.Body, &ev) == nil {
+			a.told(ev)
 		}
 	}
 	return err
