@@ -8,9 +8,11 @@ import (
 	"gemel/daemon/bench"
 	"gemel/drivers"
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan"
 	"gemel/scan/estimate"
 	"gemel/scan/forecast"
+	"gemel/sim/source"
 )
 
 // Foreseen is what a forecast is asked with, beside bench file and plan.
@@ -96,7 +98,40 @@ func forecastBench(file *bench.File) forecast.Bench {
 	for _, s := range file.Settings {
 		b.Settings = append(b.Settings, forecast.Setting{Name: s.Name, Unit: s.Unit, Settle: s.Settle})
 	}
+	b.Pace, b.PumpPower = float64(file.Pace()), pumpPower(file)
 	return b
+}
+
+// pumpPower is what the bench's one sensor of power shows by what the optics declare; nil where there
+// is none, or where several leave it open which one looks at the pump.
+func pumpPower(file *bench.File) *forecast.PumpPower {
+	if file.Optics == nil {
+		return nil
+	}
+	var w *forecast.PumpPower
+	for _, s := range file.Sensors {
+		if s.Kind != unit.Power {
+			continue
+		}
+		if w != nil {
+			return nil
+		}
+		value, err := unit.In(file.Optics.PumpPower, s.Unit)
+		if err != nil {
+			return nil
+		}
+		w = &forecast.PumpPower{Sensor: s.Name, Unit: s.Unit, Value: value}
+	}
+	for _, s := range file.Settings {
+		var p source.Pose
+		if file.Set(&p, s.Name, 1); w == nil || p.PumpW == 0 {
+			continue
+		}
+		if one, err := unit.In(p.PumpW, w.Unit); err == nil {
+			w.By, w.ByUnit = s.Name, one
+		}
+	}
+	return w
 }
 
 // bitsAsked are the bits of one question and its answer on a serial line, start and stop bits in them.

@@ -18,24 +18,11 @@ import (
 // optics it can say nothing, and the estimate names what it misses. The warnings, such as a crystal
 // set used outside its range, belong into every result.
 func model(f *bench.File, result scan.Result, rows estimate.Rows) (m estimate.Model, warnings []string) {
-	optics, err := f.Source()
-	if err != nil {
-		return m, nil
-	}
-	w := witness{file: f, optics: optics, result: result}
-	if m, err := source.New(optics); err == nil {
+	w, foreseen := witnessOf(f, result, rows)
+	if m, err := source.New(w.optics); err == nil {
 		warnings = m.Warnings()
 	}
-	w.perfect, _ = source.New(perfect(optics)) // nil where the optics cannot be computed
-	for _, r := range rows.Readings {
-		if _, doubtful := rows.Doubtful[r.Sequence]; r.Kind == protocol.Light && r.Accepted && !doubtful {
-			w.lights = append(w.lights, r)
-		}
-	}
-	if len(w.lights) == 0 {
-		return m, warnings
-	}
-	if w.perfect == nil && result.Kind != scan.Efficiency {
+	if len(w.lights) == 0 || !foreseen && result.Kind != scan.Efficiency {
 		return m, warnings
 	}
 	switch result.Kind {
@@ -64,6 +51,23 @@ type witness struct {
 	lights []protocol.Reading
 
 	perfect *source.Model // with perfect detectors, for the shape of a profile
+}
+
+// witnessOf is false where the model has nothing to say of a profile: no optics, or no light.
+func witnessOf(f *bench.File, result scan.Result, rows estimate.Rows) (w witness, ok bool) {
+	w = witness{file: f, result: result}
+	optics, err := f.Source()
+	if err != nil {
+		return w, false
+	}
+	w.optics = optics
+	w.perfect, _ = source.New(perfect(optics)) // nil where the optics cannot be computed
+	for _, r := range rows.Readings {
+		if _, doubtful := rows.Doubtful[r.Sequence]; r.Kind == protocol.Light && r.Accepted && !doubtful {
+			w.lights = append(w.lights, r)
+		}
+	}
+	return w, w.perfect != nil && len(w.lights) > 0
 }
 
 func perfect(o source.Optics) source.Optics {
@@ -172,7 +176,6 @@ func (w witness) profile(lights []protocol.Reading, tiltDeg float64) func(float6
 	}
 	base := w.pose(lights[0])
 	follow := w.follow(lights)
-	of := string(w.result.Of)
 	return func(deg float64) float64 {
 		p := base
 		for _, f := range follow {
@@ -180,15 +183,31 @@ func (w witness) profile(lights []protocol.Reading, tiltDeg float64) func(float6
 		}
 		w.file.Put(&p, w.result.Along, deg)
 		p.TiltDeg += tiltDeg
-		r := w.perfect.Rates(p)
-		switch of {
-		case w.channelOf(w.file.Optics.Signal):
-			return r.SignalHz
-		case w.channelOf(w.file.Optics.Idler):
-			return r.IdlerHz
-		}
-		return r.PairsHz
+		return w.rate(p)
 	}
+}
+
+// at is profile's rate at a planned point; what the point does not name stands as it last stood.
+func (w witness) at(point scan.Point) float64 {
+	p := w.pose(w.lights[len(w.lights)-1])
+	for _, s := range point.Settings {
+		w.file.Set(&p, s.Setting, s.Value)
+	}
+	for _, a := range point.Axes {
+		w.file.Put(&p, a.Axis, a.Angle.Degrees())
+	}
+	return w.rate(p)
+}
+
+func (w witness) rate(p source.Pose) float64 {
+	r := w.perfect.Rates(p)
+	switch string(w.result.Of) {
+	case w.channelOf(w.file.Optics.Signal):
+		return r.SignalHz
+	case w.channelOf(w.file.Optics.Idler):
+		return r.IdlerHz
+	}
+	return r.PairsHz
 }
 
 // profileAt is profile for the readings at one place of the other axis.

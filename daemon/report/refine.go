@@ -65,16 +65,8 @@ func (known past) refine(plan scan.Plan, file *bench.File) (estimate.Refinement,
 		}
 		return route.Stand(facts.Axes, facts.KeepOuts, at, route.State{})
 	}
-	if facts.Expect != nil && len(known.rows.Readings) > 0 {
-		last := known.rows.Readings[len(known.rows.Readings)-1]
-		q.Expect = func(p scan.Point) float64 {
-			p.Axes = standingAt(p.Axes, last)
-			at, _ := angleAt(p, plan.Refine.Along)
-			return ratesAlong(facts.Expect, plan.Refine.Of, plan.Refine.Along, p)(at.Degrees())
-		}
-		if len(known.points) == 0 || !(q.Expect(known.points[0]) >= 0) {
-			q.Expect = nil
-		}
+	if w, ok := witnessOf(file, scan.Result{Of: plan.Refine.Of, Along: plan.Refine.Along}, known.rows); ok {
+		q.Expect = w.at // the profile that the result is fitted with, so that both say the same
 	}
 	return estimate.Refine(known.rows, Constants(file), q), nil
 }
@@ -200,15 +192,6 @@ func (p past) spent() time.Duration {
 		return 0
 	}
 	return max(0, p.lastAt.Sub(p.refinedAt.Time))
-}
-
-func angleAt(p scan.Point, axis drivers.AxisName) (unit.Angle, bool) {
-	for _, t := range p.Axes {
-		if t.Axis == axis {
-			return t.Angle, true
-		}
-	}
-	return 0, false
 }
 
 // placed sets the target of an axis; one that is there already stays unless it is to be replaced.

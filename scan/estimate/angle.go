@@ -24,9 +24,11 @@ const onePercent = 0.01
 // asymmetric is how different the two halves of an interval may be and still be called symmetric.
 const asymmetric = 0.05
 
-// Peak is the angle at which a profile stands, by Poisson likelihood (FitPeak). Accidentals of a
+// Peak is the angle at which a profile stands, by Poisson likelihood (FitPeak); of a predicted profile
+// it is the middle between the half maxima, which a flat top's maximum is not. Accidentals of a
 // coincidence channel and the dark counts of a singles channel are known parts of the expectation,
-// never subtracted; power is exposure, never a divisor. The axis's own error is common to all
+// never subtracted; power is exposure, never a divisor; the declared dead time of a singles channel
+// compresses the profile. The axis's own error is common to all
 // readings, so it is not averaged down. The error is a *Refusal where there is nothing to fit.
 func Peak(rows Rows, bench Bench, model Model, q PeakQuestion) (Result, error) {
 	if q.Coverage == 0 {
@@ -62,7 +64,7 @@ func Peak(rows Rows, bench Bench, model Model, q PeakQuestion) (Result, error) {
 	if err != nil {
 		return Result{}, &Refusal{Reasons: []string{fmt.Sprintf("%s: %v", q.Shape, err)}}
 	}
-	centre := fit.CentreDeg()
+	centre := fit.middleDeg()
 	b, err := Propagate(func(x []float64) float64 { return x[0] + x[1] }, []Input{
 		{Quantity: "fit of the " + string(q.Shape) + " profile", Symbol: "x_fit", Unit: "deg", Estimate: centre, U: fit.Fit.U(centreParam), Evaluation: TypeA, Distribution: Normal},
 		{Quantity: "error of the axis", Symbol: "x_axis", Unit: "deg", U: zero.U, Evaluation: TypeB, Distribution: Normal},
@@ -93,6 +95,7 @@ func gather(kinds map[protocol.ReadingKind][]protocol.Reading, bench Bench, q Pe
 	if isPair && !(bench.Counter.Window.U > 0) {
 		no.addf("the coincidence window is %g s without an uncertainty; want its u, since accidentals are part of the profile", bench.Counter.Window.Value)
 	}
+	detector, _ := bench.counts(q.Channel)
 	var darks []dim
 	if !isPair {
 		for _, row := range kinds[protocol.Dark] {
@@ -133,7 +136,7 @@ func gather(kinds map[protocol.ReadingKind][]protocol.Reading, bench Bench, q Pe
 			no.addf("reading %d: no channel %q", row.Sequence, q.Channel)
 			return nil
 		}
-		s := Spot{AngleDeg: angle, Counts: counts, Exposure: row.Gate.Duration().Seconds()}
+		s := Spot{AngleDeg: angle, Counts: counts, Exposure: row.Gate.Duration().Seconds(), GateS: row.Gate.Duration().Seconds(), DeadS: detector.DeadTime.Value, Dead: detector.Model}
 		if isPair {
 			d, err := channels{s: pair[0], d: pair[1], c: q.Channel}.read(row)
 			if err != nil {

@@ -138,6 +138,16 @@ func (b Bench) arm(name string) (Arm, bool) {
 	return Arm{}, false
 }
 
+// counts finds the arm whose singles a channel counts.
+func (b Bench) counts(channel string) (Arm, bool) {
+	for _, a := range b.Arms {
+		if a.Channel == channel {
+			return a, true
+		}
+	}
+	return Arm{}, false
+}
+
 func samePair(a, b [2]string) bool { return a == b || a == [2]string{b[1], b[0]} }
 
 // coincidence finds the channel that counts coincidences of two singles channels.

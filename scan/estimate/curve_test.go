@@ -264,7 +264,7 @@ func TestAnotherCutIsTheTiltsZeroByAnotherName(t *testing.T) {
 }
 
 func TestTuningCurvesCoverTheTruth(t *testing.T) {
-	times := 10
+	times := 3
 	if *long {
 		times = 1000
 	}
@@ -369,7 +369,9 @@ func TestAPlaceWithoutAPeakIsLeftOutAndSaid(t *testing.T) {
 	for i := range rows.Readings[:33] {
 		rows.Readings[i].Counts[0].Counts, rows.Readings[i].Slices = uint64(5), nil
 	}
-	res, err := TuningCurve(rows, withTilt(), tuning(t, o), tuningQuestion)
+	q := tuningQuestion
+	q.Trials = 5
+	res, err := TuningCurve(rows, withTilt(), tuning(t, o), q)
 	if err != nil {
 		t.Fatal(err)
 	}

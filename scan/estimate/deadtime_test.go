@@ -190,7 +190,7 @@ func TestCoupledDeadTimesAgreeWithEvents(t *testing.T) {
 		w := world{etaT: 0.3, etaD: 0.6, pathD: 1, noiseT: 1e5, noiseD: 1e5, modelT: c.modelT, modelD: c.modelD, tauT: c.tauT, tauD: c.tauD,
 			windowS: 1e-12, randomStream: rand.New(rand.NewPCG(71, uint64(i)))}
 		w.pairsHz = c.load / c.tauD / w.etaD
-		gateS := 0.1
+		gateS := 0.03
 		if *long {
 			gateS = 2
 		}

@@ -31,12 +31,25 @@ const halfSinc = 1.3915573782515102
 // Spot is one reading of a profile. Its expected counts are Exposure × (shape + background) +
 // Known: gate time and pump power belong in the exposure, inside the likelihood, since counts
 // divided by a power are no counts any more. Known counts (accidentals, dark) are in no unit but
-// counts.
+// counts. Where the detector's dead time is declared, what it loses of them is taken off: a top is
+// lower by it than its flanks.
 type Spot struct {
 	AngleDeg float64
 	Counts   float64
 	Exposure float64
 	Known    float64
+
+	GateS float64       // of the reading, for the rate that the dead time sees
+	DeadS float64       // 0: none is declared
+	Dead  DeadTimeModel // of the detector
+}
+
+// recorded is what the detector makes of counts that it would record without a dead time.
+func (s Spot) recorded(counts float64) float64 {
+	if !(s.DeadS > 0 && s.GateS > 0) {
+		return counts
+	}
+	return s.GateS * s.Dead.Observed(counts/s.GateS, s.DeadS)
 }
 
 // the first parameter of every shape
@@ -212,7 +225,7 @@ func (f *PeakFit) rate(x float64, p []float64) float64 {
 	return p[heightParam] * gauss(v, p[widthParam])
 }
 
-// RateHz is the fitted profile with its background, in counts per exposure.
+// RateHz is the fitted profile with its background, in counts per exposure, before any dead time.
 func (f PeakFit) RateHz(x float64) float64 { return f.rate(x, f.Fit.Params) + f.ground(f.Fit.Params) }
 
 func (f *PeakFit) ground(p []float64) float64 {
@@ -233,7 +246,7 @@ func softBox(v, width, edge float64) float64 {
 func (f *PeakFit) expected(p, m []float64) {
 	g := f.ground(p)
 	for i, s := range f.data {
-		m[i] = s.Exposure*(f.rate(s.AngleDeg, p)+g) + s.Known
+		m[i] = s.recorded(s.Exposure*(f.rate(s.AngleDeg, p)+g) + s.Known)
 	}
 }
 

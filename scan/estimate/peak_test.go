@@ -2,9 +2,15 @@ package estimate
 
 import (
 	"errors"
+	"fmt"
 	"math"
 	"math/rand/v2"
+	"strings"
 	"testing"
+
+	"gemel/protocol"
+	"gemel/protocol/unit"
+	"gemel/scan"
 )
 
 func TestCashAgreesWithThePublishedTerms(t *testing.T) {
@@ -124,14 +130,17 @@ func TestGoodnessIsJudgedByWhatFewCountsReallyDo(t *testing.T) {
 	// At a tenth of a count a reading the statistic is far from its degrees of freedom; the
 	// simulated one is not.
 	r := rand.New(rand.NewPCG(8, 8))
-	low, n := 0, 30
+	low, n := 0, 12
+	if *long {
+		n = 100
+	}
 	for range n {
 		data := profileData(r, func(x float64) float64 { return 0.1 + 2*gauss(x-1, 0.4) }, 0, 2, 60, ones)
 		f, err := FitPeak(data, GaussianPeak, nil)
 		if err != nil {
 			continue
 		}
-		g := f.Goodness(60, 5)
+		g := f.Goodness(40, 5)
 		if g.P < 0.1 {
 			low++
 		}
@@ -139,8 +148,8 @@ func TestGoodnessIsJudgedByWhatFewCountsReallyDo(t *testing.T) {
 			t.Errorf("mean statistic %.3f of the degrees of freedom; want it visibly below at such counts", ratio)
 		}
 	}
-	if low > 9 {
-		t.Errorf("%d of %d honest data sets below p = 0.1; want about 3", low, n)
+	if low > 1+n/4 {
+		t.Errorf("%d of %d honest data sets below p = 0.1; want about a tenth", low, n)
 	}
 }
 
@@ -199,9 +208,9 @@ func TestKnownCountsAreExpectedNotSubtracted(t *testing.T) {
 func TestFitsRefuseEmptyProfiles(t *testing.T) {
 	for _, data := range [][]Spot{
 		nil,
-		{{1, 0, 1, 0}, {2, 0, 1, 0}, {3, 0, 1, 0}, {4, 0, 1, 0}, {5, 0, 1, 0}},
-		{{1, 5, 1, 0}, {1, 6, 1, 0}, {1, 4, 1, 0}, {1, 6, 1, 0}, {1, 5, 1, 0}},
-		{{1, 5, 1, 0}, {2, 6, 1, 0}},
+		spotsOf(1, 0, 2, 0, 3, 0, 4, 0, 5, 0),
+		spotsOf(1, 5, 1, 6, 1, 4, 1, 6, 1, 5),
+		spotsOf(1, 5, 2, 6),
 	} {
 		if f, err := FitPeak(data, GaussianPeak, nil); err == nil {
 			t.Errorf("%v: fitted %v; want an error", data, f.Fit.Params)
@@ -233,7 +242,7 @@ func TestPeakAnglesCoverTheTruth(t *testing.T) {
 			t.Parallel()
 			const axisU = 0.002
 			inside, tried, miss := 0, 0, 0.0
-			top := highest(c.rate, 2.3, 3.4)
+			middle := betweenHalves(c.rate, 2.3, 3.4)
 			for i := range times {
 				r := rand.New(rand.NewPCG(uint64(500+k), uint64(i)))
 				offset, shift := 0.05*(2*r.Float64()-1), axisU*r.NormFloat64()
@@ -245,10 +254,10 @@ func TestPeakAnglesCoverTheTruth(t *testing.T) {
 					continue
 				}
 				tried++
-				if res.Interval.Low <= top+offset && top+offset <= res.Interval.High {
+				if res.Interval.Low <= middle+offset && middle+offset <= res.Interval.High {
 					inside++
 				}
-				miss += (*res.Value - top - offset) / *res.U
+				miss += (*res.Value - middle - offset) / *res.U
 			}
 			share := float64(inside) / float64(times)
 			t.Logf("%.2f %% covered, mean miss %+.3f u, %d of %d fitted", 100*share, miss/float64(tried), tried, times)
@@ -261,6 +270,22 @@ func TestPeakAnglesCoverTheTruth(t *testing.T) {
 			}
 		})
 	}
+}
+
+// betweenHalves is the middle of the places where a rate is at least half of its highest, looked at one
+// by one.
+func betweenHalves(rate func(x float64) float64, low, high float64) float64 {
+	const step = 1e-5
+	top, first, last := 0., math.Inf(1), math.Inf(-1)
+	for x := low; x < high; x += step {
+		top = math.Max(top, rate(x))
+	}
+	for x := low; x < high; x += step {
+		if rate(x) >= top/2 {
+			first, last = math.Min(first, x), math.Max(last, x)
+		}
+	}
+	return (first + last) / 2
 }
 
 func spotRows(data []Spot) Rows {
@@ -302,5 +327,80 @@ func TestAPeakIsReportedWithWhatItNeeds(t *testing.T) {
 		if !found {
 			t.Errorf("a flat night: warnings %q; want to be told that there is no peak", res.Warnings)
 		}
+	}
+}
+
+// spotsOf takes angles and counts in turn, of one exposure each.
+func spotsOf(pairs ...float64) (data []Spot) {
+	for i := 0; i+1 < len(pairs); i += 2 {
+		data = append(data, Spot{AngleDeg: pairs[i], Counts: pairs[i+1], Exposure: 1})
+	}
+	return data
+}
+
+func TestADeclaredDeadTimeCompressesThePredictedProfile(t *testing.T) {
+	const tau, gate = 45e-9, 3.
+	shape := func(x float64) float64 { return softBox(x-2.86, 0.6, 0.12) }
+	for _, model := range []DeadTimeModel{NonParalysable, Paralysable} {
+		r := rand.New(rand.NewPCG(5, 5))
+		var data []Spot
+		for i := range 41 {
+			x := 1.9 + 0.0475*float64(i)
+			true := 1000 + 320e3*shape(x)
+			// Knoll's formulas, written out: what the package has is under test.
+			seen := true / (1 + true*tau)
+			if model == Paralysable {
+				seen = true * math.Exp(-true*tau)
+			}
+			data = append(data, Spot{AngleDeg: x, Counts: drawPoisson(r, gate*seen), Exposure: gate, GateS: gate, DeadS: tau, Dead: model})
+		}
+		f, err := FitPeak(data, PredictedPeak, shape)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if g := f.Goodness(60, 1); g.P < onePercent {
+			t.Errorf("%s: p = %.3g; want a fit that its own counts bear out", model, g.P)
+		}
+		near(t, "scale", f.Fit.Params[1], 320e3, 4*f.Fit.U(1))
+		near(t, "background", f.Fit.Params[2], 1000, 4*f.Fit.U(2))
+		for i := range data {
+			data[i].DeadS = 0
+		}
+		if f, err = FitPeak(data, PredictedPeak, shape); err != nil {
+			t.Fatal(err)
+		}
+		if g := f.Goodness(99, 1); g.P > onePercent {
+			t.Errorf("%s, not declared: p = %.3g; want the flattened top to show", model, g.P)
+		}
+	}
+}
+
+func TestThePeakOfAPredictedProfileIsTheMiddleOfItsHalfMaxima(t *testing.T) {
+	// A top that leans: its maximum stands at its right end, the middle of the half maxima does not.
+	lean := func(x float64) float64 { return softBox(x-2.86, 0.6, 0.05) * (1 + 0.1*(x-2.86)) }
+	middle := betweenHalves(lean, 2, 3.8)
+	rows := Rows{Run: "run", Doubtful: map[int64]string{}}
+	r := rand.New(rand.NewPCG(6, 6))
+	for i := range 41 {
+		x := 1.96 + 0.045*float64(i)
+		one := row(int64(i+1), protocol.Light, testStart, 1, []gateCounts{{d: int(drawPoisson(r, 50+20000*lean(x)))}}, EveryPair)
+		rows.Readings = append(rows.Readings, at(one, "idler_arm", x, i, 1))
+	}
+	p, err := Peak(rows, Bench{AxisError: map[string]Constant{"idler_arm": {U: 0.004}}}, Model{Profile: lean}, PeakQuestion{Axis: "idler_arm", Channel: "idler", Trials: 20})
+	if err != nil {
+		t.Fatal(err)
+	}
+	near(t, "peak", *p.Value, middle, 0.003)
+	if highest(lean, 2, 3.8)-middle < 0.1 {
+		t.Fatal("the maximum is the middle; want a profile where they differ")
+	}
+	q := RefineQuestion{Of: scan.Refine{Of: "idler", Along: "idler_arm", Below: unit.Degrees(0.05), AtMost: 10},
+		Axis: scan.Axis{Name: "idler_arm", Low: 0, High: 10 * unit.Degree}, Expect: func(p scan.Point) float64 { return lean(p.Axes[0].Angle.Degrees()) }}
+	for i := range rows.Readings {
+		q.Points = append(q.Points, scan.Point{Axes: []scan.AxisTarget{{Axis: "idler_arm", Angle: rows.Readings[i].Angles[0].Target}}})
+	}
+	want := fmt.Sprintf("idler_arm peak at %s deg", figure(*p.Value, 5))
+	if d := Refine(rows, Bench{}, q); !strings.HasPrefix(d.Grounds, want) {
+		t.Errorf("the refinement says %q, the result %q", d.Grounds, want)
 	}
 }

@@ -98,7 +98,7 @@ func (q RefineQuestion) gridAbout(l refineLine, fit PeakFit, failed error, room 
 	centre, told := l.summit(), fmt.Sprintf("the highest rate of %s along %s is at", q.Of.Of, q.Of.Along)
 	note := fmt.Sprintf(" (no fit: %v)", failed)
 	if failed == nil {
-		centre, told = middleOf(fit), fmt.Sprintf("%s maximum of %s at", q.Of.Along, q.Of.Of)
+		centre, told = fit.middleDeg(), fmt.Sprintf("%s maximum of %s at", q.Of.Along, q.Of.Of)
 		note = fmt.Sprintf(", u %s deg", figure(fit.Fit.U(centreParam), 2))
 	}
 	told = fmt.Sprintf("%s %s deg%s%s", told, figure(centre, 5), note, l.where)
@@ -138,7 +138,7 @@ const flatChance = 1e-4
 // sharpen adds places where counts lower the fitted centre's uncertainty.
 func (q RefineQuestion) sharpen(l refineLine, fit PeakFit, room int, why string) Refinement {
 	u, goal := fit.Fit.U(centreParam), q.Of.Below.Degrees()
-	told := fmt.Sprintf("%s peak at %s deg, u %s deg, asked %s deg%s", q.Of.Along, figure(middleOf(fit), 5), figure(u, 2), figure(goal, 2), l.where)
+	told := fmt.Sprintf("%s peak at %s deg, u %s deg, asked %s deg%s", q.Of.Along, figure(fit.middleDeg(), 5), figure(u, 2), figure(goal, 2), l.where)
 	switch {
 	case fit.Fit.Bounded[centreParam] || !(u > 0):
 		return Refinement{Grounds: fmt.Sprintf("%s of %s: the readings do not hold its position; no points are added", q.Of.Along, q.Of.Of)}

@@ -317,19 +317,6 @@ func (l refineLine) fit(q RefineQuestion) (PeakFit, error) {
 	return best, nil
 }
 
-// middleOf is half way between a fitted profile's half maxima. A flat top's maximum itself stands
-// anywhere on it, and not twice at the same place.
-func middleOf(f PeakFit) float64 {
-	if f.Shape != PredictedPeak {
-		return f.CentreDeg()
-	}
-	top, span := f.profile(f.topDeg), f.data[len(f.data)-1].AngleDeg-f.data[0].AngleDeg
-	at := func(side float64) float64 {
-		return half(func(v float64) float64 { return f.profile(f.topDeg+side*v) / top }, 0, span)
-	}
-	return f.CentreDeg() + (at(1)-at(-1))/2
-}
-
 // candidates is how many places a full width is divided into.
 const candidates = 40
 
@@ -340,8 +327,8 @@ func (l refineLine) best(fit PeakFit, q RefineQuestion, goalDeg float64, most in
 	fwhm, _ := fit.FWHMDeg()
 	low, high := fit.data[0].AngleDeg, fit.data[len(fit.data)-1].AngleDeg
 	grain := max(sensible(unit.Degrees(fwhm/candidates)), q.Axis.Tolerance, 1)
-	first := unit.Angle(math.Ceil(math.Max(low, middleOf(fit)-1.5*fwhm) * float64(unit.Degree) / float64(grain)))
-	last := unit.Angle(math.Floor(math.Min(high, middleOf(fit)+1.5*fwhm) * float64(unit.Degree) / float64(grain)))
+	first := unit.Angle(math.Ceil(math.Max(low, fit.middleDeg()-1.5*fwhm) * float64(unit.Degree) / float64(grain)))
+	last := unit.Angle(math.Floor(math.Min(high, fit.middleDeg()+1.5*fwhm) * float64(unit.Degree) / float64(grain)))
 	step := max(1, (last-first)/(4*candidates))
 	var exposure, known float64
 	for _, s := range fit.data {
@@ -357,7 +344,7 @@ func (l refineLine) best(fit PeakFit, q RefineQuestion, goalDeg float64, most in
 		}
 		at = append(at, a)
 		each := exposure / float64(len(fit.data))
-		one.data = append(one.data, Spot{AngleDeg: a.Degrees(), Exposure: each, Known: known / exposure * each})
+		one.data = append(one.data, Spot{AngleDeg: a.Degrees(), Exposure: each, Known: known / exposure * each, GateS: each, DeadS: fit.data[0].DeadS, Dead: fit.data[0].Dead})
 	}
 	if len(at) == 0 {
 		return nil, fit.Fit.U(centreParam)
