@@ -75,6 +75,14 @@ func (k *Keeper) Hand(ctx context.Context, q protocol.HandRequest, answer func(p
 	}
 }
 
+// acts names what may be asked for by hand.
+func acts() (names []string) {
+	for _, act := range protocol.HandActs() {
+		names = append(names, string(act))
+	}
+	return names
+}
+
 // safeByHand says whether an act can make light or motion.
 func safeByHand(q protocol.HandRequest) bool {
 	switch q.Act {
@@ -93,7 +101,7 @@ func handProblem(q protocol.HandRequest) error {
 		protocol.HandWhere: "", protocol.HandRelease: "", protocol.HandTake: "", protocol.HandRest: "", protocol.HandStay: "", protocol.HandLeave: "",
 	}[q.Act]
 	if !known {
-		return protocol.Refuse(400, fmt.Sprintf("act %.40q; want one of %v", q.Act, protocol.HandActs()))
+		return protocol.Refuse(400, fmt.Sprintf("act %.40q; want one of %s", q.Act, strings.Join(acts(), ", ")))
 	}
 	var has []string
 	for _, f := range []struct {

@@ -56,14 +56,18 @@ func (m Map) Has(key string) bool {
 }
 
 // Need returns the value of a key that must be there.
-func (m Map) Need(key string) Value {
+func (m Map) Need(key string) Value { return m.NeedLike(key, "this key written") }
+
+// NeedLike is Need of a key for which something else may stand, or whose form is worth an example:
+// want says so when it is missing.
+func (m Map) NeedLike(key, want string) Value {
 	v := m.Opt(key)
 	if p := m.probe(); p != nil {
 		return p.need(v)
 	}
 	if v.node == nil && m.node != nil {
 		at := m.place.child(key)
-		m.doc.report(at, "missing", "this key written")
+		m.doc.report(at, "missing", want)
 	}
 	return v
 }

@@ -352,7 +352,7 @@ func quantitySchema(kind unit.Kind, negative bool, bounds, suffix string) map[st
 	schema := map[string]any{"type": "string", "pattern": "^" + unit.Pattern(kind, negative) + suffix + "$", quantityName: name}
 	text := `a value with its unit, such as "2 ns" or "50 mW"`
 	if kind != "" {
-		text = example(kind)
+		text = unit.Example(kind)
 	}
 	if suffix != "" {
 		text = fmt.Sprintf("an angle per time such as \"1.5 deg%s\"", suffix)

@@ -1,6 +1,7 @@
 package strict
 
 import (
+	"cmp"
 	"errors"
 	"fmt"
 	"math"
@@ -168,16 +169,20 @@ func (v Value) scalar(want string) (string, bool) {
 func (v Value) quoted() bool { return v.node.Style != 0 }
 
 // Text returns one line of text, not empty, at most 400 characters.
-func (v Value) Text(or ...string) string {
+func (v Value) Text(or ...string) string { return v.TextLike("", or...) }
+
+// TextLike is Text of a form that want names, for what is no text: a number there lacks more than
+// its quotes.
+func (v Value) TextLike(want string, or ...string) string {
 	if p := v.probe(); p != nil {
 		return probed(v, textShape(vagueText, 400, false, false), likeText, or)
 	}
-	s, ok := v.scalar("text")
+	s, ok := v.scalar(cmp.Or(want, "text"))
 	if !ok {
 		return first(or)
 	}
 	if !v.quoted() && v.node.Tag != "!!str" {
-		v.Failf("text: write it in quotes, %q", shorten(s))
+		v.Failf("%s", cmp.Or(want, fmt.Sprintf("text: write it in quotes, %q", shorten(s))))
 		return first(or)
 	}
 	if strings.TrimSpace(s) == "" {
@@ -318,7 +323,7 @@ func (v Value) Angle(low, high unit.Angle, or ...unit.Angle) unit.Angle {
 		}
 		return probed(v, angleShape(low, high, ""), a, or)
 	}
-	s, ok := v.scalar(example(unit.Plane))
+	s, ok := v.scalar(unit.Example(unit.Plane))
 	if !ok {
 		return first(or)
 	}
@@ -390,7 +395,7 @@ func (v Value) Duration(low, high time.Duration, or ...time.Duration) time.Durat
 	if p := v.probe(); p != nil {
 		return probed(v, durationShape(low, high), end(p, low, high), or)
 	}
-	s, ok := v.scalar(example(unit.Time))
+	s, ok := v.scalar(unit.Example(unit.Time))
 	if !ok {
 		return first(or)
 	}
@@ -412,7 +417,7 @@ func (v Value) Quantity(kind unit.Kind, low, high float64, or ...float64) float6
 	if p := v.probe(); p != nil {
 		return probed(v, quantityShape(kind, low, high), end(p, finite(low), finite(high)), or)
 	}
-	s, ok := v.scalar(example(kind))
+	s, ok := v.scalar(unit.Example(kind))
 	if !ok {
 		return first(or)
 	}
@@ -530,10 +535,10 @@ func allUnits() [][]string {
 
 func (v Value) failUnit(err error, kind unit.Kind) {
 	if errors.Is(err, unit.ErrNoUnit) {
-		v.Fail(shorten(v.node.Value)+" has no unit", example(kind))
+		v.Fail(shorten(v.node.Value)+" has no unit", unit.Example(kind))
 		return
 	}
-	v.failParsed(err, example(kind))
+	v.failParsed(err, unit.Example(kind))
 }
 
 func (v Value) failParsed(err error, want string) {
@@ -542,30 +547,6 @@ func (v Value) failParsed(err error, want string) {
 		return
 	}
 	v.Failf("%s", want)
-}
-
-func example(kind unit.Kind) string {
-	switch kind {
-	case unit.Plane:
-		return `an angle such as "1.5 deg"`
-	case unit.Time:
-		return `a time such as "2 s"`
-	case unit.Length:
-		return `a length such as "405 nm"`
-	case unit.Rate:
-		return `a rate such as "250 kHz"`
-	case unit.Power:
-		return `a power such as "50 mW"`
-	case unit.Temperature:
-		return `a temperature such as "20 Cel"`
-	case unit.Share:
-		return `a share such as "65 %" or 0.65`
-	case unit.Voltage:
-		return `a voltage such as "5 V"`
-	case unit.Current:
-		return `a current such as "20 mA"`
-	}
-	return "a " + string(kind) + " with its unit"
 }
 
 // Span prints a time as a person writes it in a file.

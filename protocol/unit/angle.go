@@ -103,7 +103,7 @@ var angleUnits = map[string]Angle{
 
 // ParseAngle reads "1.5 deg", "30 arcmin", "12 arcsec" or "4.2 mrad".
 func ParseAngle(text string) (Angle, error) {
-	number, name, err := split(text)
+	number, name, err := split(text, Plane)
 	if err != nil {
 		return 0, err
 	}

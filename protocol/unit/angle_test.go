@@ -127,10 +127,10 @@ func TestDegreesAndRadiansRoundOnce(t *testing.T) {
 
 func TestWhatIsNoAngleIsRefused(t *testing.T) {
 	for text, want := range map[string]string{
-		"1.5":                            `1.5 has no unit; want a value with its unit, such as "2 s" or "1.5 deg"`,
-		"":                               `""; want a number, one space and a unit, such as "2 s" or "1.5 deg"`,
-		"deg":                            `"deg"; want a number, one space and a unit, such as "2 s" or "1.5 deg"`,
-		"1.5deg":                         `"1.5deg"; want a number, one space and a unit, such as "2 s" or "1.5 deg"`,
+		"1.5":                            `1.5 has no unit; want a value with its unit, such as "1.5 deg"`,
+		"":                               `""; want a number, one space and a unit, such as "1.5 deg"`,
+		"deg":                            `"deg"; want a number, one space and a unit, such as "1.5 deg"`,
+		"1.5deg":                         `"1.5deg"; want a number, one space and a unit, such as "1.5 deg"`,
 		"2 s":                            `unit "s"; want an angle in deg, mrad, arcmin or arcsec`,
 		"1 Deg":                          `unit "Deg"; want an angle in deg, mrad, arcmin or arcsec`,
 		"1 mdeg":                         `unit "mdeg"; want an angle in deg, mrad, arcmin or arcsec`,

@@ -96,10 +96,44 @@ func Pattern(kind Kind, negative bool) string {
 	return space + number + behind + space
 }
 
+// sample is a value of the kind as it is written; of no kind two of them.
+func sample(kind Kind) string {
+	switch kind {
+	case Plane:
+		return `"1.5 deg"`
+	case Time:
+		return `"2 s"`
+	case Length:
+		return `"405 nm"`
+	case Rate:
+		return `"250 kHz"`
+	case Power:
+		return `"50 mW"`
+	case Temperature:
+		return `"20 Cel"`
+	case Share:
+		return `"65 %" or 0.65`
+	case Voltage:
+		return `"5 V"`
+	case Current:
+		return `"20 mA"`
+	}
+	return `"2 s" or "1.5 deg"`
+}
+
+// Example says what a value of the kind looks like, such as `a time such as "2 s"`.
+func Example(kind Kind) string {
+	article := "a "
+	if strings.ContainsRune("aeiou", rune(kind[0])) {
+		article = "an "
+	}
+	return article + string(kind) + " such as " + sample(kind)
+}
+
 // Parse reads a quantity of the given kind, such as "405 nm", and returns it in the base unit.
 // The error is an *Error, or wraps ErrNoUnit for a plain number.
 func Parse(text string, kind Kind) (float64, error) {
-	v, got, _, err := ParseAny(text)
+	v, got, _, err := parse(text, kind)
 	if err != nil {
 		return 0, err
 	}
@@ -112,13 +146,22 @@ func Parse(text string, kind Kind) (float64, error) {
 // ParseAny reads a quantity of whatever kind its unit says. It returns the value in the kind's
 // base unit, the kind, and the unit as written.
 func ParseAny(text string) (value float64, kind Kind, name string, err error) {
-	number, name, err := split(text)
+	return parse(text, "")
+}
+
+// parse is ParseAny for a text that should be of a kind, if one is named: its examples are of that.
+func parse(text string, want Kind) (value float64, kind Kind, name string, err error) {
+	number, name, err := split(text, want)
 	if err != nil {
 		return 0, "", "", err
 	}
 	s, ok := scales[name]
 	if !ok {
-		return 0, "", "", &Error{Text: text, Found: fmt.Sprintf("unknown unit %q", name), Want: "a unit such as deg, s, ms, nm, mm, mW, kHz, Cel, %"}
+		known := []string{"deg", "s", "ms", "nm", "mm", "mW", "kHz", "Cel", "%"}
+		if want != "" {
+			known = Units(want)
+		}
+		return 0, "", "", &Error{Text: text, Found: fmt.Sprintf("unknown unit %q", name), Want: "a unit such as " + strings.Join(known, ", ")}
 	}
 	f, err := decimalFloat(number)
 	if err != nil {
@@ -141,7 +184,7 @@ var nanoseconds = map[string]uint64{"ps": 1, "ns": 1, "us": 1e3, "ms": 1e6, "s":
 
 // ParseDuration reads a time such as "2 s", "500 ms" or "1.5 h", exactly to the nanosecond.
 func ParseDuration(text string) (time.Duration, error) {
-	number, name, err := split(text)
+	number, name, err := split(text, Time)
 	if err != nil {
 		return 0, err
 	}
@@ -173,7 +216,7 @@ func wrongUnit(text string, kind Kind) error {
 const blanks = " \t\r\n"
 
 // split cuts "1.5 deg" in two. A plain number wraps ErrNoUnit.
-func split(text string) (number, name string, err error) {
+func split(text string, kind Kind) (number, name string, err error) {
 	text = strings.Trim(text, blanks)
 	number, name, _ = strings.Cut(text, " ")
 	name = strings.Trim(name, blanks)
@@ -182,9 +225,9 @@ func split(text string) (number, name string, err error) {
 			return before, "%", nil
 		}
 		if checkDecimal(number) == nil {
-			return "", "", fmt.Errorf("%s %w; want a value with its unit, such as \"2 s\" or \"1.5 deg\"", number, ErrNoUnit)
+			return "", "", fmt.Errorf("%s %w; want a value with its unit, such as %s", number, ErrNoUnit, sample(kind))
 		}
-		return "", "", &Error{Text: text, Found: strconv.Quote(text), Want: `a number, one space and a unit, such as "2 s" or "1.5 deg"`}
+		return "", "", &Error{Text: text, Found: strconv.Quote(text), Want: "a number, one space and a unit, such as " + sample(kind)}
 	}
 	return number, name, nil
 }

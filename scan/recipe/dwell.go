@@ -149,11 +149,12 @@ func readCadenceOr(m strict.Map, at strict.Place, what string, or scan.Dwell) Ca
 	if c.Dwell = or; dwell.Given() {
 		c.Dwell = readTime(dwell)
 	}
-	if text := every.Text(); every.Good() {
+	const often = `a number of points such as "10 points", or a time such as "30 min"`
+	if text := every.TextLike(often); every.Good() {
 		if n := every.Match(everyPoints); n != nil {
 			c.EveryPoints, _ = strconv.Atoi(n[1])
 		} else if strings.Contains(text, "point") {
-			every.Failf(`a number of points such as "10 points", or a time such as "30 min"`)
+			every.Failf(often)
 		} else if c.Every = every.Duration(time.Second, maxDwell); every.Good() && c.Every <= c.Dwell.Time {
 			every.Failf("more than the %s's own dwell of %s, or nothing else would be counted", what, strict.Span(c.Dwell.Time))
 		}
@@ -167,7 +168,7 @@ func readCadenceOr(m strict.Map, at strict.Place, what string, or scan.Dwell) Ca
 		}
 	}
 	if m.Given() && !every.Given() && !also.Given() {
-		m.Need("every")
+		m.NeedLike("every", `how often: "every: 30 min", "every: 20 points", "also: [start, end]" or both keys`)
 	}
 	return c
 }

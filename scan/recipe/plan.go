@@ -5,6 +5,7 @@ import (
 	"math"
 	"slices"
 	"strconv"
+	"strings"
 	"time"
 
 	"gemel/drivers"
@@ -166,7 +167,7 @@ func (r *Recipe) trigger(f Facts, results []*scan.Result) (drivers.Channel, []pr
 		}
 	}
 	if c == "" && efficiencies == 0 {
-		return "", []protocol.Finding{r.dwellAt.Finding("heralds of no channel", fmt.Sprintf(`"of" with the trigger's channel or detector, one of %q`, f.singles()))}
+		return "", []protocol.Finding{r.dwellAt.Finding("heralds of no channel", fmt.Sprintf(`"of" with the trigger's channel or detector, %s`, oneOf(f.singles())))}
 	}
 	return c, nil
 }
@@ -388,7 +389,7 @@ func known(name string, names []string) string {
 	if near := strict.Nearest(name, names); near != "" {
 		return fmt.Sprintf("%q, which is nearest", near)
 	}
-	return fmt.Sprintf("one of %q", names)
+	return oneOf(names)
 }
 
 // dwells are all that a plan counts for. What plan and recipe share is parted first.
@@ -502,4 +503,19 @@ func (r *Recipe) place(p int, at []int) {
 		}
 		p = line
 	}
+}
+
+// oneOf lists the names there are, each in quotes.
+func oneOf(names []string) string {
+	quoted := make([]string, len(names))
+	for i, name := range names {
+		quoted[i] = strconv.Quote(name)
+	}
+	switch len(quoted) {
+	case 0:
+		return "none: the bench file has none"
+	case 1:
+		return quoted[0]
+	}
+	return "one of " + strings.Join(quoted, ", ")
 }

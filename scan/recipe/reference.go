@@ -340,7 +340,7 @@ func (r *Recipe) referenceChannels(f Facts, results []*scan.Result, out *scan.Re
 		}
 		return nil
 	}
-	return []protocol.Finding{q.Cadence.at.Finding("references of which coincidences", fmt.Sprintf(`"of" with a coincidence channel, one of %q`, f.coincidences()))}
+	return []protocol.Finding{q.Cadence.at.Finding("references of which coincidences", fmt.Sprintf(`"of" with a coincidence channel, %s`, oneOf(f.coincidences())))}
 }
 
 func (f Facts) coincidences() []string {

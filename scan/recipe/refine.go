@@ -65,7 +65,8 @@ func readRefine(v strict.Value) *Refine {
 const maxRefined = 10_000
 
 func readPoints(v strict.Value) int {
-	if v.Text(); !v.Good() {
+	want := fmt.Sprintf(`a number of points from 1 to %d, such as "40 points"`, maxRefined)
+	if v.TextLike(want); !v.Good() {
 		return 0
 	}
 	var n int
@@ -73,7 +74,7 @@ func readPoints(v strict.Value) int {
 		n, _ = strconv.Atoi(m[1])
 	}
 	if n == 0 || n > maxRefined {
-		v.Failf(`a number of points from 1 to %d, such as "40 points"`, maxRefined)
+		v.Failf("%s", want)
 	}
 	return n
 }

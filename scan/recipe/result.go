@@ -308,7 +308,7 @@ func (r *Recipe) fit(f Facts, q *Result, out *scan.Result) []protocol.Finding {
 	case scan.TuningCurve, scan.ConjugateMap:
 		findings = append(findings, r.against(f, q, axis, need)...)
 		if q.Kind == scan.ConjugateMap && !pairs && out.Of != "" {
-			findings = append(findings, q.ofAt.Finding(fmt.Sprintf("a conjugate map of the single counts %q", q.Of), fmt.Sprintf("a coincidence channel, one of %q: single counts do not know where the other arm stands", f.coincidences())))
+			findings = append(findings, q.ofAt.Finding(fmt.Sprintf("a conjugate map of the single counts %q", q.Of), fmt.Sprintf("a coincidence channel, %s: single counts do not know where the other arm stands", oneOf(f.coincidences()))))
 		}
 	}
 	return findings
@@ -370,7 +370,7 @@ func (r *Recipe) delay(f Facts, q *Result, out *scan.Result) (findings []protoco
 	var pairs bool
 	out.Of, pairs, findings = f.channel(q.Of, q.ofAt)
 	if findings == nil && !pairs {
-		findings = append(findings, q.ofAt.Finding(fmt.Sprintf("the delay of the single counts %q", q.Of), fmt.Sprintf("a coincidence channel, one of %q", f.coincidences())))
+		findings = append(findings, q.ofAt.Finding(fmt.Sprintf("the delay of the single counts %q", q.Of), fmt.Sprintf("a coincidence channel, %s", oneOf(f.coincidences()))))
 	}
 	if _, found := f.setting(q.Setting, q.settingAt); found != nil {
 		return append(findings, found...)

@@ -50,12 +50,13 @@ func readClock(v strict.Value) *Clock {
 	if !v.Given() {
 		return nil
 	}
-	if v.Text(); !v.Good() {
+	const want = `a time of the day from "00:00" to "23:59"`
+	if v.TextLike(want); !v.Good() {
 		return nil
 	}
 	n := v.Match(clockTime)
 	if n == nil {
-		v.Failf(`a time of the day from "00:00" to "23:59"`)
+		v.Failf(want)
 		return nil
 	}
 	c := &Clock{}

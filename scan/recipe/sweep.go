@@ -75,7 +75,7 @@ func readEntry(m strict.Map, seen map[string]bool) (e Entry, ok bool) {
 			of.Fail("a setting as conjugate of an axis", "an arm")
 		}
 	case m.Given():
-		m.Need("axis")
+		m.NeedLike("axis", `"axis" or "setting", with its name`)
 	}
 	e.nameAt, e.ofAt = name.Place(), of.Place()
 	e.ConjugateOf = drivers.AxisName(of.Token())

@@ -155,7 +155,11 @@ func readValues(m strict.Map, isAngle, conjugate bool) Values {
 	case conjugate:
 		return Values{listed: []listed{{number: number{value: new(big.Rat)}, at: m.Place()}}}
 	case ways == 0:
-		m.Fail("no values", want)
+		also := ""
+		if isAngle {
+			also = "; or conjugate_of, on an arm"
+		}
+		m.Fail("no values", want+also)
 		return Values{}
 	case ways > 1, at.Given() && step.Given():
 		m.Fail("values given in two ways", want)

@@ -44,10 +44,10 @@ func readWarmUp(v strict.Value) *WarmUp {
 	}
 	for _, e := range entries {
 		one := Steady{Sensor: drivers.DeviceName(e.Name), nameAt: e.Key, at: e.Value.Place()}
-		if e.Value.Text(); !e.Value.Good() {
+		const want = `how little it may move, and over which time, such as "0.5 %% over 10 min"`
+		if e.Value.TextLike(strings.ReplaceAll(want, "%%", "%")); !e.Value.Good() {
 			continue
 		}
-		const want = `how little it may move, and over which time, such as "0.5 %% over 10 min"`
 		parts := e.Value.Match(movesOver)
 		if parts == nil {
 			e.Value.Failf(want)
