@@ -2,9 +2,12 @@ package main
 
 import (
 	"context"
+	"errors"
 	"fmt"
 	"io"
 	"os"
+	"path/filepath"
+	"strings"
 	"time"
 
 	"gemel/daemon/bench"
@@ -13,6 +16,7 @@ import (
 	"gemel/daemon/remote"
 	"gemel/daemon/report"
 	"gemel/protocol"
+	"gemel/protocol/strict"
 	"gemel/scan"
 	"gemel/scan/engine"
 	"gemel/scan/forecast"
@@ -41,6 +45,20 @@ It takes for granted that every reading succeeds at once, that no guard breaks a
 }
 
 func (c *forecastCommand) Run(ctx context.Context, con *console) error {
+	err := c.run(ctx, con)
+	if e, bad := errors.AsType[*strict.Error](err); bad && c.JSON {
+		if err := con.json(map[string]any{"sound": []string{}, "findings": e.Findings}); err != nil {
+			return err
+		}
+		return errNotFinished
+	}
+	return err
+}
+
+func (c *forecastCommand) run(ctx context.Context, con *console) error {
+	if err := plottable(c.Plot); err != nil {
+		return err
+	}
 	file, err := loadBench(c.Bench)
 	if err != nil {
 		return err
@@ -75,6 +93,20 @@ func (c *forecastCommand) Run(ctx context.Context, con *console) error {
 	return err
 }
 
+// plottable says before any work whether a picture can be written there.
+func plottable(path string) error {
+	if path == "" {
+		return nil
+	}
+	if ending := filepath.Ext(path); !strings.EqualFold(ending, ".svg") {
+		return errUse{fmt.Errorf("--plot %s: pictures are SVG; want a name that ends in .svg", path)}
+	}
+	if at, err := os.Stat(filepath.Dir(path)); err != nil || !at.IsDir() {
+		return errUse{fmt.Errorf("--plot %s: no folder %s; want one that exists", path, filepath.Dir(path))}
+	}
+	return nil
+}
+
 // foreseer makes the forecasts that a daemon is asked for.
 func foreseer(file *bench.File) func(context.Context, scan.Plan, time.Time, string) (protocol.Forecast, error) {
 	return func(_ context.Context, plan scan.Plan, begins time.Time, asked string) (protocol.Forecast, error) {
@@ -82,6 +114,9 @@ func foreseer(file *bench.File) func(context.Context, scan.Plan, time.Time, stri
 		if asked != "" {
 			aim, err := forecast.ParseAim(asked)
 			if err != nil {
+				return protocol.Forecast{}, protocol.Refuse(400, err.Error())
+			}
+			if err := aim.Fits(plan.Results); err != nil {
 				return protocol.Forecast{}, protocol.Refuse(400, err.Error())
 			}
 			o.Aim = &aim
@@ -125,6 +160,11 @@ func (c *forecastCommand) work(ctx context.Context, file *bench.File, r *recipe.
 	plan, err := r.Plan(facts)
 	if err != nil {
 		return nil, err
+	}
+	if o.Aim != nil {
+		if err := o.Aim.Fits(plan.Results); err != nil {
+			return nil, errUse{err}
+		}
 	}
 	return report.Forecast(file, plan, o)
 }

@@ -4,9 +4,11 @@ package main
 
 import (
 	"encoding/json"
+	"errors"
 	"io/fs"
 	"os"
 	"path/filepath"
+	"reflect"
 	"regexp"
 	"strings"
 	"testing"
@@ -80,11 +82,32 @@ func TestForecastsThatAreAskedWrongly(t *testing.T) {
 	for _, c := range []struct{ name, flag, value, want string }{
 		{"an aim without a unit", "--aim", "0.5", `aim "0.5"`},
 		{"a run without its data", "--from", "r1", "want --data with the folder of a run"},
+		{"an aim of another kind", "--aim", "0.5 deg", `want a share such as "0.5 %"`},
+		{"a picture that is none", "--plot", filepath.Join(t.TempDir(), "x.png"), "want a name that ends in .svg"},
+		{"a picture in no folder", "--plot", filepath.Join(t.TempDir(), "none", "x.svg"), "no folder"},
 		{"a folder without a logbook", "--data", t.TempDir(), "want --data with the folder of a run"},
 	} {
 		if _, said, code := gemel(t, append(args, c.flag, c.value)...); code != exitWrongUse || !strings.Contains(said, c.want) {
 			t.Errorf("%s: exit %d, %q; want %d and %q", c.name, code, said, exitWrongUse, c.want)
 		}
+	}
+}
+
+// Findings come as JSON where JSON was asked for, as check gives them.
+func TestAForecastOfABadRecipeGivesItsFindingsAsJSON(t *testing.T) {
+	bad := filepath.Join(t.TempDir(), "bad.yaml")
+	if err := os.WriteFile(bad, []byte("title: 5\n"), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	args := []string{"--json", "--bench", "../../configs/demo-bench.yaml", "--recipe", bad}
+	said, _, code := gemel(t, append([]string{"forecast"}, args...)...)
+	checked, _, want := gemel(t, append([]string{"check"}, args...)...)
+	var forecast, check struct{ Findings []protocol.Finding }
+	if err := errors.Join(json.Unmarshal([]byte(said), &forecast), json.Unmarshal([]byte(checked), &check)); err != nil {
+		t.Fatal(err)
+	}
+	if code != want || len(forecast.Findings) == 0 || !reflect.DeepEqual(forecast.Findings, check.Findings) {
+		t.Errorf("exit %d, %q; check says exit %d, %q", code, said, want, checked)
 	}
 }
 
@@ -99,14 +122,14 @@ func TestTheReadmesForecastIsATrueOne(t *testing.T) {
 	shown := clock.ReplaceAllString(string(readme), "done at")
 	lines := 0
 	for line := range strings.SplitSeq(clock.ReplaceAllString(said, "done at"), "\n") {
-		if strings.Contains(line, "from counting") || strings.Contains(line, "floor") || strings.HasPrefix(line, "  each ") || strings.Contains(line, "the run then takes") {
+		if strings.Contains(line, "from counting") || strings.Contains(line, "floor") || strings.HasPrefix(line, "  each ") || strings.HasPrefix(line, "65 points") || strings.Contains(line, "about ") || strings.Contains(line, "the run then takes") {
 			lines++
 			if !strings.Contains(shown, line+"\n") {
 				t.Errorf("the README does not show %q", line)
 			}
 		}
 	}
-	if lines < 5 {
+	if lines < 7 {
 		t.Errorf("%d lines compared of\n%s", lines, said)
 	}
 }

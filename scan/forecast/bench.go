@@ -22,6 +22,27 @@ type Bench struct {
 	Sensors     []drivers.DeviceName
 	Settings    []Setting
 	Costs       Costs
+	PumpPower   *PumpPower // nil: no sensor is known to show it
+	Pace        float64    // bench seconds in a real one; 0 and 1: the bench's clock is the wall's
+}
+
+// PumpPower is what the sensor of the pump's power shows, by what the optics declare.
+type PumpPower struct {
+	Sensor drivers.DeviceName
+	Unit   string             // the sensor's
+	Value  float64            // in it
+	By     drivers.DeviceName // the setting that sets it; empty: none
+	ByUnit float64            // one of that setting's units, in the sensor's
+}
+
+// at is what it shows at a point.
+func (w PumpPower) at(p scan.Point) float64 {
+	for _, t := range p.Settings {
+		if w.By != "" && t.Setting == w.By {
+			return t.Value * w.ByUnit
+		}
+	}
+	return w.Value
 }
 
 // Shutter is a shutter that the engine opens and closes.

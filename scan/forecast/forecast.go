@@ -1,7 +1,6 @@
 package forecast
 
 import (
-	"fmt"
 	"math"
 	"slices"
 	"time"
@@ -50,6 +49,12 @@ type Forecast struct {
 	spent   Spent
 	track   []step
 	local   *time.Location
+	stuck   map[int]error // points to which no way is free
+
+	longestSet time.Duration // of references, from the reading before it to its own last one's end
+	setBegan   time.Duration
+	setOf      int // the set that is open, counted from 1; 0: none
+	lastEnd    time.Duration
 }
 
 // step is one reading in the picture.
@@ -179,12 +184,7 @@ func course1(a Ask) (*Forecast, *rowMaker, error) {
 	if r := f.rates; r != nil {
 		f.RatesAt, f.Interpolation = r.evaluated, r.error
 	}
-	for point, err := range c.stuck {
-		if point >= 0 {
-			f.Warnings = append(f.Warnings, fmt.Sprintf("no way to point %d is free: %v", point, err))
-		}
-	}
-	slices.Sort(f.Warnings)
+	f.stuck = c.stuck
 	return f, maker, nil
 }
 
@@ -219,7 +219,15 @@ func (f *Forecast) see(r *taken) {
 		f.Backgrounds++
 	case protocol.Reference:
 		f.References++
+		if f.setOf != r.set+1 {
+			f.setOf, f.setBegan = r.set+1, f.lastEnd
+			if f.lastEnd == 0 {
+				f.setBegan = r.started
+			}
+		}
+		f.longestSet = max(f.longestSet, r.ended-f.setBegan)
 	}
+	f.lastEnd = r.ended
 }
 
 // point is one of the sweep's, or one that a refinement added.

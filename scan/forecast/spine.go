@@ -15,7 +15,7 @@ import (
 // the pump, darks as notches in it, waiting as white space, references in one column of their own.
 func (f *Forecast) Draw(w io.Writer) error {
 	const width, top, bottom, left, right = 760., 96., 44., 74., 70.
-	const wide = 104 // letters of a line
+	const wide = 104 // letters of a line in the picture
 	whole := f.Duration.Duration()
 	height := top + bottom + math.Min(900, math.Max(360, 3*float64(len(f.track))))
 	y := func(d time.Duration) float64 {
@@ -36,7 +36,7 @@ func (f *Forecast) Draw(w io.Writer) error {
 	}
 	for _, h := range f.hours(whole) {
 		line(`<path d="M%.1f %.1fH%.1f" stroke-width="0.4" stroke-dasharray="1 5"/>`, left, y(h), width-right+50)
-		text(left-10, y(h)+4, "end", f.BeginsAt.Add(h).In(f.local).Format("15:04"))
+		text(left-10, y(h)+4, "end", f.hourOf(h, whole))
 	}
 	tracks := f.tracks(left+14, spine-26, spine+26, width-right-14)
 	// The pump, thick while something is counted.
@@ -126,10 +126,16 @@ func (f *Forecast) tracks(left, leftEnd, rightStart, right float64) []track {
 			return
 		}
 		t := track{letter: letter, name: string(f.bench.Axes[axis].Name), axis: axis, dash: dash, from: from, to: to, low: math.Inf(1), high: math.Inf(-1), letterX: (from + to) / 2}
-		for _, s := range f.track {
-			if s.kind == protocol.Light {
-				v := s.at[axis].Degrees()
-				t.low, t.high = math.Min(t.low, v), math.Max(t.high, v)
+		// By all points: of a long run only every so many readings are drawn.
+		for i, n := range f.visits {
+			if n == 0 {
+				continue
+			}
+			for _, target := range f.point(i).Axes {
+				if target.Axis == f.bench.Axes[axis].Name {
+					v := target.Angle.Degrees()
+					t.low, t.high = math.Min(t.low, v), math.Max(t.high, v)
+				}
 			}
 		}
 		if math.IsInf(t.low, 0) {
@@ -221,6 +227,20 @@ func (f *Forecast) hours(whole time.Duration) []time.Duration {
 		}
 	}
 	return append(all, whole)
+}
+
+// hourOf is what a moment is called beside the picture: with its day where it is another than before.
+func (f *Forecast) hourOf(h, whole time.Duration) string {
+	t := f.BeginsAt.Add(h).In(f.local)
+	switch {
+	case whole < 20*time.Hour:
+		return t.Format("15:04")
+	case t.Hour() == 0 && t.Minute() == 0:
+		return t.Format("2 Jan")
+	case h == 0 || h == whole:
+		return t.Format("2 Jan 15:04")
+	}
+	return t.Format("15:04")
 }
 
 func (f *Forecast) key(tracks []track) string {

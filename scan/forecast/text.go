@@ -2,10 +2,14 @@ package forecast
 
 import (
 	"fmt"
+	"math"
 	"slices"
+	"strconv"
 	"strings"
+	"time"
 
 	"gemel/protocol"
+	"gemel/scan"
 )
 
 // sentence says the run in one: points, time, end, worth.
@@ -24,6 +28,9 @@ func (f *Forecast) sentence() string {
 		fmt.Fprintf(&b, " and %d added", f.PointsAdded)
 	}
 	fmt.Fprintf(&b, ", %s, done at %s", span(f.Duration.Duration()), f.clock(f.FinishesAt.Time))
+	if pace := f.bench.Pace; pace > 1 {
+		fmt.Fprintf(&b, " bench time (after %s on the wall's clock)", span(time.Duration(float64(f.Duration.Duration())/pace)))
+	}
 	if f.LeftOut > 0 {
 		fmt.Fprintf(&b, " with %s left out", plural(f.LeftOut, "visit"))
 	}
@@ -32,7 +39,7 @@ func (f *Forecast) sentence() string {
 		if i > 0 {
 			sep = ", "
 		}
-		kind := strings.ReplaceAll(r.Kind, "_", " ")
+		kind := f.subject(i)
 		switch {
 		case r.Uncertainty == nil:
 			fmt.Fprintf(&b, "%sno %s is forecast", sep, kind)
@@ -49,10 +56,43 @@ func (f *Forecast) sentence() string {
 	return b.String()
 }
 
+// wide is how many letters a line of the text has at most, where words allow it.
+const wide = 100
+
+// folded breaks a line between words; what follows is indented by two more than the line itself.
+func folded(line string, wide int) string {
+	var b strings.Builder
+	indent := len(line) - len(strings.TrimLeft(line, " \n"))
+	hang := strings.Repeat(" ", len(strings.TrimLeft(line[:indent], "\n"))+2)
+	for {
+		runes := []rune(strings.TrimLeft(line, "\n"))
+		lead := len([]rune(line)) - len(runes)
+		if len(runes) <= wide {
+			break
+		}
+		at := -1
+		for i := wide; i > len(hang); i-- {
+			if runes[i] == ' ' && runes[i-1] != ' ' && !(digit(runes[i-1]) && i+1 < len(runes) && digit(runes[i+1])) {
+				at = i
+				break
+			}
+		}
+		if at < 0 {
+			break
+		}
+		b.WriteString(line[:lead] + string(runes[:at]) + "\n")
+		line = hang + strings.TrimLeft(string(runes[at:]), " ")
+	}
+	b.WriteString(line + "\n")
+	return b.String()
+}
+
+func digit(r rune) bool { return r >= '0' && r <= '9' }
+
 // Text is the forecast for a person: the sentence, then what it rests on.
 func (f *Forecast) Text() string {
 	var b strings.Builder
-	line := func(format string, args ...any) { fmt.Fprintf(&b, format+"\n", args...) }
+	line := func(format string, args ...any) { b.WriteString(folded(fmt.Sprintf(format, args...), wide)) }
 	line("%s", f.Sentence)
 	if len(f.Warnings) > 0 {
 		line("\nMind")
@@ -133,10 +173,10 @@ func (f *Forecast) textOfCounts(line func(string, ...any)) {
 		f.perVisit(i, rate)
 		var parts []string
 		for n, c := range f.singles {
-			parts = append(parts, fmt.Sprintf("%s %.4g", c, rate[n]))
+			parts = append(parts, fmt.Sprintf("%s %s", c, number(rate[n], 4)))
 		}
 		for n, c := range f.pairs {
-			parts = append(parts, fmt.Sprintf("%s %.4g (%.3g accidental)", c, rate[len(f.singles)+n], rate[len(f.singles)+len(f.pairs)+n]))
+			parts = append(parts, fmt.Sprintf("%s %s (%s accidental)", c, number(rate[len(f.singles)+n], 4), number(rate[len(f.singles)+len(f.pairs)+n], 3)))
 		}
 		line("  %s, point %d (%s): %s", name, i, f.where(i), strings.Join(parts, ", "))
 	}
@@ -165,19 +205,93 @@ func (f *Forecast) where(i int) string {
 	return strings.Join(parts, ", ")
 }
 
+// subject names a result by what it is of.
+func (f *Forecast) subject(i int) string {
+	if i >= len(f.plan.Results) {
+		return strings.ReplaceAll(f.Results[i].Kind, "_", " ")
+	}
+	q := f.plan.Results[i]
+	name := strings.ReplaceAll(string(q.Kind), "_", " ")
+	of := string(q.Along)
+	switch q.Kind {
+	case scan.Efficiency:
+		of = string(q.UnderTest)
+		for _, d := range f.bench.Detectors {
+			if d.Channel == q.UnderTest {
+				of = d.Name
+			}
+		}
+	case scan.Delay:
+		of = string(q.Setting)
+	case scan.Drift:
+		of = ""
+	}
+	if of == "" || of == name {
+		return name
+	}
+	name += " of " + of
+	for k, other := range f.plan.Results { // two of the same axis
+		if k != i && other.Kind == q.Kind && other.Along == q.Along && other.Of != q.Of {
+			return name + " in " + string(q.Of)
+		}
+	}
+	return name
+}
+
+// about prints a result's value to the two digits that its uncertainty has.
+func about(r protocol.ForecastResult) string {
+	value, u, unit := *r.Value, *r.Uncertainty, r.Unit
+	if unit == "1" {
+		value, u, unit = 100*value, 100*u, "%"
+	}
+	decimals := 3
+	if u > 0 && !math.IsInf(u, 0) {
+		decimals = max(0, min(12, 1-int(math.Floor(math.Log10(u)))))
+	}
+	text := strconv.FormatFloat(value, 'f', decimals, 64)
+	if strings.Trim(text, "-0.") == "" {
+		text = strings.TrimPrefix(text, "-")
+	}
+	return strings.TrimSpace(text + " " + unit)
+}
+
+// number prints so many significant digits, without an exponent, in groups of three where there are
+// more than four before the point.
+func number(v float64, digits int) string {
+	if v == 0 || math.IsNaN(v) || math.IsInf(v, 0) {
+		return fmt.Sprint(v)
+	}
+	if math.Abs(v) < 1e-6 || math.Abs(v) >= 1e15 {
+		return fmt.Sprintf("%.*g", digits, v)
+	}
+	scaled, _ := strconv.ParseFloat(strconv.FormatFloat(v, 'g', digits, 64), 64)
+	text := strconv.FormatFloat(scaled, 'f', -1, 64)
+	whole, rest, _ := strings.Cut(text, ".")
+	sign := strings.TrimRight(whole, "0123456789")
+	whole = whole[len(sign):]
+	if len(whole) > 4 {
+		for at := len(whole) - 3; at > 0; at -= 3 {
+			whole = whole[:at] + " " + whole[at:]
+		}
+	}
+	if rest != "" {
+		rest = "." + rest
+	}
+	return sign + whole + rest
+}
+
 func (f *Forecast) textOfWorth(line func(string, ...any)) {
 	if len(f.Results) == 0 {
 		return
 	}
 	line("\nWorth, as standard uncertainty")
-	for _, r := range f.Results {
-		kind := strings.ReplaceAll(r.Kind, "_", " ")
+	for n, r := range f.Results {
+		kind := f.subject(n)
 		if r.Uncertainty == nil {
 			line("  %s: %s", kind, strings.Join(r.Because, "; "))
 			continue
 		}
-		unit := map[bool]string{true: "", false: " " + r.Unit}[r.Unit == "1"]
-		line("  %s of about %.4g%s to %s", kind, *r.Value, unit, f.inUnit(*r.Uncertainty, r))
+		line("  %s: about %s, to %s", kind, about(r), f.inUnit(*r.Uncertainty, r))
 		if r.Counting != nil {
 			line("    from counting, which more time makes less: %s", f.inUnit(*r.Counting, r))
 			line("    floor, which no time makes less: %s", f.inUnit(*r.Floor, r))
@@ -186,7 +300,7 @@ func (f *Forecast) textOfWorth(line func(string, ...any)) {
 			if i == mostTold || *r.Floor > 0 && s.Contribution < *r.Floor/20 {
 				break
 			}
-			line("      %-50s %s", s.Quantity, f.inUnit(s.Contribution, r))
+			line("      %-9s %s", f.inUnit(s.Contribution, r), s.Quantity)
 		}
 		for _, why := range r.Because {
 			line("    %s", why)
@@ -205,14 +319,16 @@ func (f *Forecast) textOfAim(line func(string, ...any)) {
 		return
 	}
 	if m.Heralds != nil {
-		line("  each dwell needs %d counts of %s, within %s", *m.Heralds, f.plan.Dwell.Trigger, span(m.Dwell.Duration()))
+		line("  each dwell needs %s of %s, within %s", plural(int(*m.Heralds), "count"), f.plan.Dwell.Trigger, span(m.Dwell.Duration()))
 	} else if m.Dwell != nil {
 		line("  each dwell has to last %s", span(m.Dwell.Duration()))
 	}
 	if m.Beside != nil {
 		line("  each %s %s", f.besideKind(), span(m.Beside.Duration()))
 	}
-	if m.BestShare != nil && m.Share != nil {
+	if m.BestShare != nil && m.Share != nil && *m.BestShare == 0 {
+		line("  the %ss take nothing from this uncertainty; they have %s of the counting time, and less would do", f.besideKind(), share(*m.Share))
+	} else if m.BestShare != nil && m.Share != nil {
 		line("  of the counting time the %ss should have %s for the least uncertainty; they have %s now", f.besideKind(), share(*m.BestShare), share(*m.Share))
 	}
 	if m.Duration != nil {

@@ -47,6 +47,8 @@ func (f *Forecast) warn(a Ask) error {
 		}
 	}
 	f.warnOfBand(a.Band)
+	f.warnOfWorth(a)
+	f.warnOfGuards(a)
 	for _, e := range a.Plan.Open() {
 		name := string(e.Ask.Axis)
 		if name == "" {
@@ -82,7 +84,9 @@ func (f *Forecast) warnOfWays(a Ask) error {
 		return err
 	}
 	dark, told := 0, 0
+	known := map[int]bool{}
 	for _, x := range findings {
+		known[x.Point] = true
 		if x.PumpClosed && a.Bench.Pump != nil {
 			dark++
 			continue
@@ -107,8 +111,25 @@ func (f *Forecast) warnOfWays(a Ask) error {
 		}
 		f.warnf("and %s points more like that", more)
 	}
+	// What the course found on its way, darks, backgrounds and references included.
+	if len(findings) < route.MostFindings {
+		points := make([]int, 0, len(f.stuck))
+		for point := range f.stuck {
+			if point >= 0 && !known[point] {
+				points = append(points, point)
+			}
+		}
+		slices.Sort(points)
+		for i, point := range points {
+			if i == mostTold {
+				f.warnf("and no way to %s more", plural(len(points)-mostTold, "point"))
+				break
+			}
+			f.warnf("no way to point %d is free: %v", point, f.stuck[point])
+		}
+	}
 	if dark > 0 {
-		f.warnf("%d ways are free only with the pump shutter closed: it is closed for them", dark)
+		f.warnf("%s only with the pump shutter closed: it is closed meanwhile", map[bool]string{true: "1 way is free", false: fmt.Sprintf("%d ways are free", dark)}[dark == 1])
 	}
 	return nil
 }
@@ -288,10 +309,10 @@ func (f *Forecast) warnOfRates(a Ask) {
 	}
 	for d, x := range a.Bench.Detectors {
 		if trip[d].many > 0 {
-			f.warnf("%s would count %.3g /s at point %d, above its trip rate of %.3g /s; so at %s", x.Name, trip[d].value, trip[d].point, x.TripHz, plural(trip[d].many, "point"))
+			f.warnf("%s would count %s /s at point %d, above its trip rate of %s /s; so at %s", x.Name, number(trip[d].value, 3), trip[d].point, number(x.TripHz, 3), plural(trip[d].many, "point"))
 		}
 		if floor[d].many > 0 {
-			f.warnf("%s would count %.3g /s at point %d, below half of its floor of %.3g /s, and be taken for latched; so at %s", x.Name, -floor[d].value, floor[d].point, x.FloorHz, plural(floor[d].many, "point"))
+			f.warnf("%s would count %s /s at point %d, below half of its floor of %s /s, and be taken for latched; so at %s", x.Name, number(-floor[d].value, 3), floor[d].point, number(x.FloorHz, 3), plural(floor[d].many, "point"))
 		}
 		if load[d].many > 0 {
 			f.warnf("count rate times dead time of %s is %.3f at point %d, above %.1f: its correction will matter; so at %s", x.Name, load[d].value, load[d].point, mostLoad, plural(load[d].many, "point"))
@@ -304,7 +325,7 @@ func (f *Forecast) warnOfRates(a Ask) {
 		}
 	}
 	if under.many > 0 {
-		f.warnf("%d counts of %s are not reached within %s at %s, by %.3g at most (point %d): these dwells last their longest", a.Plan.Dwell.Heralds, a.Plan.Dwell.Trigger, span(a.Plan.Dwell.Time), plural(under.many, "point"), under.value, under.point)
+		f.warnf("%s of %s are not reached within %s at %s, by %s at most (point %d): these dwells last their longest", plural(int(a.Plan.Dwell.Heralds), "count"), a.Plan.Dwell.Trigger, span(a.Plan.Dwell.Time), plural(under.many, "point"), number(under.value, 3), under.point)
 	}
 	f.warnOfSpans(a)
 }
@@ -339,7 +360,7 @@ func (f *Forecast) warnOfOverflow(a Ask, highest []worst) {
 	full := math.Pow(2, float64(a.Bench.Counter.Bits))
 	for k, c := range f.channels() {
 		if n := highest[k].value * gate.Seconds(); n >= full {
-			f.warnf("channel %s would count %.3g in a gate of %s at point %d, beyond the counter's %d bits: %.3g; want slices of %s at most", c, n, span(gate), highest[k].point, a.Bench.Counter.Bits, full,
+			f.warnf("channel %s would count %s in a gate of %s at point %d, beyond the counter's %d bits: %s; want slices of %s at most", c, number(n, 3), span(gate), highest[k].point, a.Bench.Counter.Bits, number(full, 10),
 				span(time.Duration(full/highest[k].value*float64(time.Second)).Truncate(time.Millisecond)))
 		}
 	}
@@ -374,6 +395,31 @@ func (f *Forecast) warnOfSpans(a Ask) {
 	}
 }
 
+// reach is what a sweep along an axis meets at one place of the axis against which it is taken.
+type reach struct {
+	at                   string // empty: the result has one place alone
+	low, high, top       float64
+	lowHz, highHz, topHz float64
+}
+
+func (r *reach) see(at, hz float64) {
+	switch {
+	case at < r.low:
+		r.low, r.lowHz = at, hz
+	case at == r.low:
+		r.lowHz = math.Max(r.lowHz, hz)
+	}
+	switch {
+	case at > r.high:
+		r.high, r.highHz = at, hz
+	case at == r.high:
+		r.highHz = math.Max(r.highHz, hz)
+	}
+	if hz > r.topHz {
+		r.top, r.topHz = at, hz
+	}
+}
+
 func (f *Forecast) warnOfSpan(q scan.Result, k int, along drivers.AxisName) {
 	place := func(p scan.Point) (at float64, ok bool) {
 		for _, t := range p.Axes {
@@ -389,8 +435,8 @@ func (f *Forecast) warnOfSpan(q scan.Result, k int, along drivers.AxisName) {
 		return 0, false
 	}
 	got := make(row, len(f.rates.channels))
-	low, high, top := math.Inf(1), math.Inf(-1), math.Inf(-1)
-	lowHz, highHz, topHz, where := 0.0, 0.0, math.Inf(-1), ""
+	var places []*reach
+	known := map[unit.Angle]*reach{}
 	for i, p := range f.plan.Points {
 		at, ok := place(p)
 		if !ok || p.Empty != "" || !stands(p, q.At) {
@@ -401,41 +447,59 @@ func (f *Forecast) warnOfSpan(q scan.Result, k int, along drivers.AxisName) {
 		if math.IsNaN(hz) {
 			continue
 		}
-		switch {
-		case at < low:
-			low, lowHz = at, hz
-		case at == low:
-			lowHz = math.Max(lowHz, hz)
+		var against unit.Angle
+		text := ""
+		if q.Against != "" {
+			for _, t := range p.Axes {
+				if t.Axis == q.Against {
+					against = t.Angle
+				}
+			}
 		}
-		switch {
-		case at > high:
-			high, highHz = at, hz
-		case at == high:
-			highHz = math.Max(highHz, hz)
+		one := known[against]
+		if one == nil {
+			if q.Against != "" {
+				text = fmt.Sprintf("at %s %s ", q.Against, against)
+			}
+			one = &reach{at: text, low: math.Inf(1), high: math.Inf(-1), topHz: math.Inf(-1)}
+			known[against] = one
+			places = append(places, one)
 		}
-		if hz > topHz {
-			top, topHz = at, hz
-		}
-	}
-	if !(high > low) || !(topHz > 0) {
-		return
+		one.see(at, hz)
 	}
 	name, unitOf := string(along), "deg"
 	if along == "" {
 		name, unitOf = string(q.Setting), f.unitOf(q.Setting)
 	}
-	switch {
-	case top == low:
-		where = "lower"
-	case top == high:
-		where = "upper"
+	curve := q.Kind == scan.TuningCurve || q.Kind == scan.ConjugateMap
+	told := 0
+	for _, r := range places {
+		if !(r.high > r.low) || !(r.topHz > 0) {
+			continue
+		}
+		where := ""
+		switch {
+		case r.top == r.low:
+			where = "lower"
+		case r.top == r.high:
+			where = "upper"
+		}
+		half := r.topHz / 2
+		flank := where == "" && !curve && (r.lowHz > half || r.highHz > half)
+		if where == "" && !flank {
+			continue
+		}
+		if told++; told > mostTold {
+			continue
+		}
+		if where != "" {
+			f.warnf("%sthe span of %s, %s to %s %s, misses the peak: the most counts of %s (%s /s) are at its %s end", r.at, name, number(r.low, 4), number(r.high, 4), unitOf, f.channels()[k], number(r.topHz, 3), where)
+		} else {
+			f.warnf("%sthe span of %s, %s to %s %s, holds one flank at most: at its ends there are %s and %s counts of %s a second, at the top %s", r.at, name, number(r.low, 4), number(r.high, 4), unitOf, number(r.lowHz, 3), number(r.highHz, 3), f.channels()[k], number(r.topHz, 3))
+		}
 	}
-	if where != "" {
-		f.warnf("the span of %s, %.4g to %.4g %s, misses the peak: the most counts of %s (%.3g /s) are at its %s end", name, low, high, unitOf, f.channels()[k], topHz, where)
-		return
-	}
-	if half := topHz / 2; q.Kind != scan.TuningCurve && q.Kind != scan.ConjugateMap && (lowHz > half || highHz > half) {
-		f.warnf("the span of %s, %.4g to %.4g %s, holds one flank at most: at its ends there are %.3g and %.3g counts of %s a second, at the top %.3g", name, low, high, unitOf, lowHz, highHz, f.channels()[k], topHz)
+	if told > mostTold {
+		f.warnf("and so at %s more of %s", plural(told-mostTold, "place"), q.Against)
 	}
 }
 
@@ -463,6 +527,9 @@ func (f *Forecast) clock(t time.Time) string {
 	t = t.In(f.local).Round(time.Minute)
 	if b := f.BeginsAt.In(f.local); t.YearDay() == b.YearDay() && t.Year() == b.Year() || t.Sub(b) < 20*time.Hour {
 		return t.Format("15:04")
+	}
+	if t.Year() != f.BeginsAt.In(f.local).Year() {
+		return t.Format("15:04 on 2 Jan 2006")
 	}
 	return t.Format("15:04 on 2 Jan")
 }

@@ -18,6 +18,7 @@ type Aim struct {
 	Text     string
 	Share    float64 // of the value; 0: Absolute counts
 	Absolute float64 // degrees, or seconds
+	Time     bool    // Absolute is a time
 }
 
 // ParseAim reads "0.5 %", "0.01 deg" or "0.2 ns".
@@ -31,7 +32,7 @@ func ParseAim(text string) (Aim, error) {
 	case unit.Share:
 		a.Share = base
 	case unit.Time:
-		a.Absolute = base
+		a.Absolute, a.Time = base, true
 	default:
 		angle, aerr := unit.ParseAngle(text)
 		if aerr != nil {
@@ -43,6 +44,31 @@ func ParseAim(text string) (Aim, error) {
 		return Aim{}, fmt.Errorf("aim %q; want more than nothing", text)
 	}
 	return a, nil
+}
+
+// Fits says whether the aim is one for a plan's first result: a share for an efficiency or a drift, an
+// angle or a time for a place.
+func (a Aim) Fits(results []scan.Result) error {
+	if len(results) == 0 {
+		return fmt.Errorf("aim %q: the recipe asks for no result; want a key \"result\"", a.Text)
+	}
+	q := results[0]
+	what := strings.ReplaceAll(string(q.Kind), "_", " ")
+	switch q.Kind {
+	case scan.Efficiency, scan.Drift:
+		if a.Share == 0 {
+			return fmt.Errorf("aim %q for the recipe's first result, a number without unit (%s); want a share such as \"0.5 %%\"", a.Text, what)
+		}
+	case scan.Delay:
+		if a.Share > 0 || !a.Time {
+			return fmt.Errorf("aim %q for the recipe's first result, a %s; want a time such as \"0.2 ns\"", a.Text, what)
+		}
+	default:
+		if a.Share > 0 || a.Time {
+			return fmt.Errorf("aim %q for the recipe's first result, an angle (%s); want one such as \"0.01 deg\"", a.Text, what)
+		}
+	}
+	return nil
 }
 
 // worth asks the estimate what the run's counts would come to.
@@ -151,13 +177,18 @@ func (f *Forecast) aim(a Ask, m *rowMaker) {
 		return
 	}
 	first := f.Results[0]
+	if err := a.Aim.Fits(a.Plan.Results); err != nil {
+		no("%v", err)
+		return
+	}
 	out.Wanted = a.Aim.Absolute
-	if a.Aim.Share > 0 {
+	switch {
+	case a.Plan.Results[0].Kind == scan.Drift: // a relative change already
+		out.Wanted = a.Aim.Share
+	case a.Aim.Share > 0:
 		out.Wanted = a.Aim.Share * math.Abs(*first.Value)
-		if first.Unit == "deg" || first.Unit == "s" {
-			no("a share of an angle or a time means nothing; want an aim in %s", first.Unit)
-			return
-		}
+	case first.Unit == "ns":
+		out.Wanted *= 1e9
 	}
 	results, err := a.Results(m.rows)
 	if err != nil {
@@ -268,13 +299,20 @@ func (f *Forecast) inUnit(u float64, r protocol.ForecastResult) string {
 	case r.Unit == "1": // a relative change
 		return share(u)
 	case r.Unit == "s":
-		return fmt.Sprintf("%.2g ps", u*1e12)
+		return shortTime(u * 1e12)
 	case r.Unit == "ns":
-		return fmt.Sprintf("%.2g ps", u*1e3)
-	case r.Unit == "deg":
-		return fmt.Sprintf("%.2g mdeg", u*1e3)
+		return shortTime(u * 1e3)
+	case r.Unit == "deg" && u < 0.0995:
+		return number(u*1e3, 2) + " mdeg"
 	}
-	return strings.TrimSpace(fmt.Sprintf("%.2g %s", u, r.Unit))
+	return strings.TrimSpace(number(u, 2) + " " + r.Unit)
+}
+
+func shortTime(ps float64) string {
+	if ps >= 995 {
+		return number(ps/1e3, 2) + " ns"
+	}
+	return number(ps, 2) + " ps"
 }
 
 // share prints a share in percent, to two digits where there are not more before the point.
@@ -282,7 +320,7 @@ func share(v float64) string {
 	if v >= 0.1 {
 		return fmt.Sprintf("%.0f %%", 100*v)
 	}
-	return fmt.Sprintf("%.2g %%", 100*v)
+	return number(100*v, 2) + " %"
 }
 
 // floorNames says what a floor is made of: what alone is a quarter of its variance or more.
