@@ -29,7 +29,8 @@ const asymmetric = 0.05
 // coincidence channel and the dark counts of a singles channel are known parts of the expectation,
 // never subtracted; power is exposure, never a divisor; the declared dead time of a singles channel
 // compresses the profile. The axis's own error is common to all
-// readings, so it is not averaged down. The error is a *Refusal where there is nothing to fit.
+// readings, so it is not averaged down. The error is a *Refusal where there is
+// nothing to fit, or what was fitted may be nothing.
 func Peak(rows Rows, bench Bench, model Model, q PeakQuestion) (Result, error) {
 	if q.Coverage == 0 {
 		q.Coverage = 0.95
@@ -63,6 +64,9 @@ func Peak(rows Rows, bench Bench, model Model, q PeakQuestion) (Result, error) {
 	}
 	if err != nil {
 		return Result{}, &Refusal{Reasons: []string{fmt.Sprintf("%s: %v", q.Shape, err)}}
+	}
+	if err := fit.stands(q.Channel); err != nil {
+		return Result{}, &Refusal{Reasons: []string{err.Error()}}
 	}
 	centre := fit.middleDeg()
 	b, err := Propagate(func(x []float64) float64 { return x[0] + x[1] }, []Input{
@@ -225,12 +229,22 @@ func describe(r *Result, fit PeakFit, q PeakQuestion) {
 	if d, ok := fit.decide(); ok {
 		r.noteValue("decision threshold, net counts", d.Threshold, "1", fmt.Sprintf("net %.4g ± %.3g counts within the width (ISO 11929, 5 %%)", d.Net, d.U))
 		r.noteValue("detection limit, net counts", d.Limit, "1", "5 % of either error")
-		if !d.Detected {
-			r.Warnings = append(r.Warnings, "no peak is decided to be there: the net counts within its width are below the decision threshold")
-		}
 	}
 	r.Residuals = fit.Residuals()
 	r.fitted = fit.RateHz
+}
+
+// stands refuses a profile that was fitted to nothing: a place would be driven to. The counts must be
+// more uneven than chance makes them, as a refinement asks too, and those within the width above the
+// decision threshold.
+func (f PeakFit) stands(channel string) error {
+	if p := (refineLine{data: f.data}).flat(); p > flatChance {
+		return fmt.Errorf("no peak of %s stands out: counts so uneven come by chance with p = %.2g; want more counts, or a sweep over the light", channel, p)
+	}
+	if d, ok := f.decide(); ok && !d.Detected {
+		return fmt.Errorf("no peak of %s is decided to be there: %.4g ± %.3g net counts within its width, with a decision threshold of %.4g (ISO 11929, 5 %%); want more counts, or a sweep over the light", channel, d.Net, d.U, d.Threshold)
+	}
+	return nil
 }
 
 // decide compares the counts within the width with those well outside it.

@@ -317,15 +317,23 @@ func TestAPeakIsReportedWithWhatItNeeds(t *testing.T) {
 	if res, err := Peak(spotRows(flank), skerry(EveryPair), Model{}, PeakQuestion{Axis: "idler_arm", Channel: "idler"}); !errors.As(err, &no) {
 		t.Errorf("one flank only: got %v ± %v; want a refusal", *res.Value, *res.U)
 	}
-	flat := profileData(rand.New(rand.NewPCG(3, 10)), func(float64) float64 { return 5 }, 2.3, 3.4, 45, ones)
-	res, err = Peak(spotRows(flat), skerry(EveryPair), Model{Profile: func(x float64) float64 { return gauss(x-2.86, 0.2) }}, PeakQuestion{Axis: "idler_arm", Channel: "idler"})
-	if err == nil {
-		found := false
-		for _, w := range res.Warnings {
-			found = found || w == "no peak is decided to be there: the net counts within its width are below the decision threshold"
+}
+
+func TestAPeakFittedToNothingIsNoValue(t *testing.T) {
+	shape := func(x float64) float64 { return gauss(x-2.86, 0.2) }
+	for seed := range uint64(12) {
+		for _, rate := range []float64{0.25, 5, 800} { // 11 counts in all, up to plenty
+			flat := profileData(rand.New(rand.NewPCG(30, seed)), func(float64) float64 { return rate }, 2.3, 3.4, 45, ones)
+			for _, model := range []Model{{Profile: shape}, {}} {
+				var no *Refusal
+				if res, err := Peak(spotRows(flat), skerry(EveryPair), model, PeakQuestion{Axis: "idler_arm", Channel: "idler", Trials: 1}); !errors.As(err, &no) {
+					t.Errorf("seed %d, %g counts a reading: %g ± %g deg; want a refusal", seed, rate, *res.Value, *res.U)
+				}
+			}
 		}
-		if !found {
-			t.Errorf("a flat night: warnings %q; want to be told that there is no peak", res.Warnings)
+		weak := profileData(rand.New(rand.NewPCG(31, seed)), func(x float64) float64 { return 0.1 + 8*shape(x) }, 2.3, 3.4, 45, ones)
+		if _, err := Peak(spotRows(weak), skerry(EveryPair), Model{Profile: shape}, PeakQuestion{Axis: "idler_arm", Channel: "idler", Trials: 1}); err != nil {
+			t.Errorf("seed %d: %v; want a peak where eight counts a reading are one", seed, err)
 		}
 	}
 }

@@ -73,6 +73,9 @@ func Zero(rows Rows, bench Bench, model Model, q ZeroQuestion) (Result, error) {
 		if err == nil {
 			err = fit.inSweep()
 		}
+		if err == nil {
+			err = fit.stands(q.Channel)
+		}
 		if err != nil {
 			no.addf("%s on the side %s: %v; want a sweep of %s that crosses the ring on both sides of the pump", q.Channel, name, err, q.Axis)
 			continue
@@ -117,9 +120,6 @@ func Zero(rows Rows, bench Bench, model Model, q ZeroQuestion) (Result, error) {
 		r.noteValue("goodness of fit, side "+name, g.P, "1", fmt.Sprintf("Cash statistic %.4g on %d degrees of freedom; %d simulated data sets gave %.4g on average", g.Statistic, side[i].Fit.Freedom, g.Trials, g.Mean))
 		if g.P < onePercent {
 			r.Warnings = append(r.Warnings, fmt.Sprintf("the %s profile does not describe the readings on the side %s (p = %.2g)", shape, name, g.P))
-		}
-		if d, ok := side[i].decide(); ok && !d.Detected {
-			r.Warnings = append(r.Warnings, fmt.Sprintf("no peak is decided to be there on the side %s: its net counts are below the decision threshold", name))
 		}
 		r.Residuals = append(r.Residuals, side[i].Residuals()...)
 	}
