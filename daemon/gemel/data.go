@@ -24,28 +24,32 @@ func openBook(data string) (*logbook.Book, error) {
 
 type noteCommand struct {
 	Data string `default:"gemel-data" placeholder:"DIR" help:"Data folder."`
-	On   string `default:"-" placeholder:"RUN" help:"The run it is about; without it, the bench."`
+	On   string `name:"run" aliases:"on" default:"-" placeholder:"RUN" help:"The run it is about; without it, the bench."`
 	Text string `arg:"" help:"What you have to say."`
 }
 
 func (noteCommand) Help() string {
-	return "Example:\n  gemel note --on 20310203-220000-0badcafe \"door opened at 01:10 for the dewar\""
+	return "Example:\n  gemel note --run 20310203-220000-0badcafe \"door opened at 01:10 for the dewar\""
 }
 
 func (c *noteCommand) Run(ctx context.Context, con *console) error {
-	if _, err := os.Stat(logbookFile(c.Data)); err != nil {
-		return errUse{fmt.Errorf("no logbook in %s; name the data folder with --data", c.Data)}
-	}
-	book, err := logbook.OpenForNotes(c.Data)
-	if err != nil {
-		return err
-	}
-	defer book.Close()
-	if err := book.AddNote(ctx, protocol.RunID(c.On), whoami(), c.Text); err != nil {
+	if err := writeNote(ctx, c.Data, protocol.RunID(c.On), c.Text); err != nil {
 		return err
 	}
 	fmt.Fprintln(con.out, "noted")
 	return nil
+}
+
+func writeNote(ctx context.Context, data string, run protocol.RunID, text string) error {
+	if _, err := os.Stat(logbookFile(data)); err != nil {
+		return errUse{fmt.Errorf("no logbook in %s; name the data folder with --data", data)}
+	}
+	book, err := logbook.OpenForNotes(data)
+	if err != nil {
+		return err
+	}
+	defer book.Close()
+	return book.AddNote(ctx, run, whoami(), text)
 }
 
 type exportCommand struct {

@@ -12,6 +12,7 @@ import (
 
 	"gemel/protocol"
 	"gemel/protocol/client"
+	"gemel/protocol/strict"
 	"gemel/protocol/unit"
 )
 
@@ -35,8 +36,9 @@ AXIS +0.1 deg            move it on; AXIS by -0.1 deg moves it back, AXIS to -0.
 pump open | pump close   the pump's shutter
 detectors open | close   all detectors; a detector's name for one
 SETTING 1.2 ns           give a setting a value
-gate 0.5 s               gate of the live rates
+gate 0.5 s               gate of the live rates, and of a look without one
 look 2 s                 count one gate, and write it down
+note TEXT                write what you have to say into the logbook
 where                    ask every device how it stands
 home AXIS                let an axis search its zero: be there
 rest                     everything closed and still, at once
@@ -57,7 +59,10 @@ func (c *handCommand) Run(ctx context.Context, con *console) error {
 		return err
 	}
 	defer cl.Close()
-	h := &handHold{client: cl, who: whoami()}
+	h := &handHold{client: cl, who: whoami(), gate: gate}
+	if c.NATS == "" {
+		h.note = func(text string) error { return writeNote(ctx, c.Data, protocol.BenchRun, text) }
+	}
 	defer h.leave(ctx, con)
 	if _, err := h.ask(ctx, protocol.HandRequest{Act: protocol.HandWhere}); err != nil {
 		return err
@@ -65,12 +70,21 @@ func (c *handCommand) Run(ctx context.Context, con *console) error {
 	if len(c.Do) > 0 {
 		return c.script(ctx, con, h)
 	}
-	return h.live(ctx, con, keyboard, gate)
+	return h.live(ctx, con, keyboard)
 }
 
 // script does acts one after another, and ends with the first that fails.
 func (c *handCommand) script(ctx context.Context, con *console, h *handHold) error {
 	for _, text := range c.Do {
+		if said, is, err := h.own(text); is {
+			if err != nil {
+				return errUse{fmt.Errorf("--do %q: %w", text, err)}
+			}
+			if !c.JSON { // which is of what the daemon answers
+				fmt.Fprintln(con.out, strings.Join(said, "\n"))
+			}
+			continue
+		}
 		q, err := h.parse(text)
 		if err != nil {
 			return errUse{fmt.Errorf("--do %q: %w", text, err)}
@@ -97,12 +111,53 @@ func (c *handCommand) script(ctx context.Context, con *console, h *handHold) err
 	return nil
 }
 
+// own does what needs no daemon; is says whether the line was such an act.
+func (h *handHold) own(text string) (said []string, is bool, err error) {
+	name, rest, _ := strings.Cut(strings.TrimSpace(text), " ")
+	switch rest = strings.TrimSpace(rest); {
+	case name == "help" && rest == "":
+		return strings.Split(handHelp, "\n"), true, nil
+	case name == "gate":
+		d, err := unit.ParseDuration(rest)
+		if err != nil || d <= 0 {
+			return nil, true, fmt.Errorf("gate %q; want a time such as \"0.5 s\"", rest)
+		}
+		h.gate = d
+		return []string{"gate " + strict.Span(d)}, true, nil
+	case name == "note" && rest == "":
+		return nil, true, errors.New(`a note of nothing; want its text behind it`)
+	case name == "note" && h.note == nil:
+		return nil, true, errors.New("notes go into a logbook on this machine; want gemel note beside it")
+	case name == "note":
+		return []string{"noted"}, true, h.note(rest)
+	}
+	return nil, false, nil
+}
+
 // told is a reply as a sentence; how everything stands where that was asked.
 func told(r protocol.HandReply) string {
+	if r.Act == protocol.HandLook {
+		return r.Text + inTheDark(r)
+	}
 	if r.Act != protocol.HandWhere {
 		return r.Text
 	}
 	return strings.Join(standing(r), "\n")
+}
+
+// inTheDark says which shutters were closed while it was counted: what was counted is then no light
+// of theirs.
+func inTheDark(r protocol.HandReply) string {
+	var closed []string
+	for _, s := range r.Shutters {
+		if !s.Open && s.Trouble == "" {
+			closed = append(closed, s.Guards)
+		}
+	}
+	if len(closed) == 0 {
+		return ""
+	}
+	return "; closed all the while: " + strings.Join(closed, ", ")
 }
 
 // standing says how the bench stands, a line for each kind of thing.
@@ -148,6 +203,8 @@ type handHold struct {
 	client *client.Client
 	who    string
 	last   protocol.HandReply
+	gate   time.Duration           // of a look that names none
+	note   func(text string) error // nil: there is no logbook to write to
 }
 
 // handTime bounds one act: a search for a zero takes its time.
@@ -240,6 +297,9 @@ func (h *handHold) parsePlain(name string, rest []string) (q protocol.HandReques
 	if name != "look" {
 		return q, false, nil
 	}
+	if len(rest) == 0 && h.gate > 0 {
+		return protocol.HandRequest{Act: protocol.HandLook, Gate: protocol.Seconds(h.gate)}, true, nil
+	}
 	gate, err := unit.ParseDuration(strings.Join(rest, " "))
 	if err != nil {
 		err = fmt.Errorf("look: %w", err)
@@ -285,7 +345,7 @@ func parseSet(s protocol.HandValue, rest []string) (protocol.HandRequest, error)
 
 // names lists what a line may begin with.
 func (h *handHold) names() []string {
-	names := []string{"look", "where", "rest", "release", "take", "home", "leave"}
+	names := []string{"look", "gate", "where", "rest", "release", "take", "home", "note", "help", "leave"}
 	for _, a := range h.last.Axes {
 		names = append(names, a.Axis)
 	}

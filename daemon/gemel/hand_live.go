@@ -14,7 +14,6 @@ import (
 
 	"gemel/daemon/crew"
 	"gemel/protocol"
-	"gemel/protocol/unit"
 )
 
 // liveEvery is the least time between two looks, and stayEvery the time between two words to a
@@ -28,7 +27,6 @@ const (
 type handLive struct {
 	hold    *handHold
 	screen  handScreen
-	gate    time.Duration
 	act     chan protocol.HandRequest // to the one who asks, one after another
 	urgent  chan protocol.HandRequest // to the one who does not wait
 	answers chan handAnswer
@@ -48,15 +46,15 @@ type handAnswer struct {
 }
 
 // live shows rates and takes acts from the keyboard until the person leaves.
-func (h *handHold) live(ctx context.Context, con *console, keyboard *os.File, gate time.Duration) error {
-	l := &handLive{hold: h, gate: gate, act: make(chan protocol.HandRequest, 1), urgent: make(chan protocol.HandRequest, 4), answers: make(chan handAnswer, 8)}
+func (h *handHold) live(ctx context.Context, con *console, keyboard *os.File) error {
+	l := &handLive{hold: h, act: make(chan protocol.HandRequest, 1), urgent: make(chan protocol.HandRequest, 4), answers: make(chan handAnswer, 8)}
 	old, err := term.MakeRaw(int(keyboard.Fd()))
 	if err != nil {
 		return fmt.Errorf("terminal: %w", err)
 	}
 	fmt.Fprint(con.err, "\x1b[?1049h") // a page of its own, so that what was there before comes back
 	defer func() {
-		fmt.Fprint(con.err, "\x1b[?1049l")
+		fmt.Fprint(con.err, "\x1b[?1049l\r\x1b[K") // whatever the terminal makes of it, the shell gets a line of its own
 		_ = term.Restore(int(keyboard.Fd()), old)
 	}()
 	keys := make(chan rune, 64)
@@ -151,7 +149,7 @@ func (l *handLive) advance() {
 			l.ask(l.act, protocol.HandRequest{Act: protocol.HandStay})
 		}
 	case time.Since(l.asked) >= liveEvery:
-		l.ask(l.act, protocol.HandRequest{Act: protocol.HandLook, Gate: protocol.Seconds(l.gate), Live: true})
+		l.ask(l.act, protocol.HandRequest{Act: protocol.HandLook, Gate: protocol.Seconds(l.hold.gate), Live: true})
 	}
 }
 
@@ -254,21 +252,13 @@ func (l *handLive) sequence(r rune) {
 
 // typed takes a whole line.
 func (l *handLive) typed(text string) (leave bool) {
-	gate, isGate := strings.CutPrefix(text, "gate ")
-	switch {
-	case text == "":
+	if text == "" {
 		return false
-	case text == "help":
-		l.screen.said = strings.Split(handHelp, "\n")
-		return false
-	case isGate:
-		d, err := unit.ParseDuration(gate)
-		if err != nil || d <= 0 {
-			l.screen.said = []string{fmt.Sprintf("gate %q; want a time such as \"0.5 s\"", gate)}
-			return false
+	}
+	if said, is, err := l.hold.own(text); is {
+		if l.screen.said = said; err != nil {
+			l.screen.said = []string{err.Error()}
 		}
-		l.gate = d
-		l.screen.said = nil
 		return false
 	}
 	q, err := l.hold.parse(text)
@@ -300,7 +290,7 @@ func (l *handLive) draw(keyboard *os.File) string {
 		width, height = 80, 24
 	}
 	s := &l.screen
-	s.head = fmt.Sprintf("%s, gate %.9g s", l.hold.client.Bench(), l.gate.Seconds())
+	s.head = fmt.Sprintf("%s, gate %.9g s", l.hold.client.Bench(), l.hold.gate.Seconds())
 	if l.hold.last.LetGo {
 		s.head = l.hold.client.Bench() + ": the lines are another program's; take brings them back"
 		s.look = nil

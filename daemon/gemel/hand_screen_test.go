@@ -201,8 +201,8 @@ func TestKeysMakeALineAndTheArrowsBringOneBack(t *testing.T) {
 	if press("\x1b[B"); string(l.typing) != "pump open" {
 		t.Errorf("down is %q", string(l.typing))
 	}
-	if press("\x15gate 2 s\r"); l.gate.Seconds() != 2 {
-		t.Errorf("gate %s; want 2 s", l.gate)
+	if press("\x15gate 2 s\r"); l.hold.gate.Seconds() != 2 {
+		t.Errorf("gate %s; want 2 s", l.hold.gate)
 	}
 	if press("help\r"); len(l.screen.said) < 10 {
 		t.Errorf("help is %q", l.screen.said)

@@ -110,7 +110,7 @@ func (c *console) report(err error) int {
 	if err == nil {
 		return exitDone
 	}
-	if errors.Is(err, errNotFinished) {
+	if errors.Is(err, errNotFinished) || errors.Is(err, syscall.EPIPE) { // whoever read has seen enough
 		return exitFailed
 	}
 	if e, ok := errors.AsType[*strict.Error](err); ok {

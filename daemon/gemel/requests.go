@@ -6,6 +6,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"strings"
 	"sync"
 	"time"
 
@@ -63,6 +64,18 @@ func (f remoteFlags) with(ctx context.Context, role string, do func(context.Cont
 	return err
 }
 
+// findings prints what is wrong with files as JSON where JSON was asked for.
+func (c *console) findings(err error, asJSON bool) error {
+	e, ok := errors.AsType[*strict.Error](err)
+	if !ok || !asJSON {
+		return err
+	}
+	if err := c.json(map[string]any{"findings": e.Findings}); err != nil {
+		return err
+	}
+	return errNotFinished
+}
+
 func (c *console) json(v any) error { return json.NewEncoder(c.out).Encode(v) }
 
 type startCommand struct {
@@ -88,7 +101,11 @@ func (c *startCommand) Run(ctx context.Context, con *console) error {
 		}
 		q.Recipe = string(text)
 	}
-	return c.with(ctx, protocol.ControlRole, func(ctx context.Context, cl *client.Client) error {
+	return con.findings(c.start(ctx, con, q), c.JSON)
+}
+
+func (c *startCommand) start(ctx context.Context, con *console, q protocol.StartRequest) error {
+	err := c.with(ctx, protocol.ControlRole, func(ctx context.Context, cl *client.Client) error {
 		r, err := cl.Start(ctx, q)
 		if err != nil {
 			return err
@@ -99,6 +116,12 @@ func (c *startCommand) Run(ctx context.Context, con *console) error {
 		fmt.Fprintf(con.out, "queued as %s\n", r.Run)
 		return nil
 	})
+	if e, ok := errors.AsType[*strict.Error](err); ok && c.Recipe != "" {
+		for i := range e.Findings { // the daemon knows the text, and not where it is from
+			e.Findings[i].File = c.Recipe
+		}
+	}
+	return err
 }
 
 // runFlags name a run, or leave it to be the current one.
@@ -299,7 +322,9 @@ func (c *followCommand) journal(ctx context.Context, con *console, aside *aside,
 			return err
 		}
 		if c.JSON {
-			fmt.Fprintf(con.out, "%s\n", e.Body)
+			if _, err := fmt.Fprintf(con.out, "%s\n", e.Body); err != nil {
+				return err
+			}
 		} else if err := tell(con, e); err != nil {
 			return err
 		}
@@ -356,6 +381,9 @@ func tell(con *console, e protocol.Entry) error {
 		}
 		for _, n := range r.Counts {
 			fmt.Fprintf(con.out, " %s %d", n.Channel, n.Counts)
+			if s := r.Gate.Duration().Seconds(); s > 0 {
+				fmt.Fprintf(con.out, " (%.4g /s)", float64(n.Counts)/s)
+			}
 		}
 		fmt.Fprintf(con.out, " in %.4g s", r.Gate.Duration().Seconds())
 		if !r.Accepted {
@@ -373,9 +401,47 @@ func tell(con *console, e protocol.Entry) error {
 			return err
 		}
 		fmt.Fprintf(con.out, "%s  %s %d  %s decided (%s)", p.At.Local().Format("15:04:05"), p.Run, p.Sequence, count(len(p.Points), "point"), p.Grounds)
+	case protocol.ResultEntry:
+		text, err := resultLine(e.Body)
+		if err != nil {
+			return err
+		}
+		fmt.Fprint(con.out, text)
 	default:
 		fmt.Fprintf(con.out, "%s %d  %s", e.Run, e.Sequence, e.Kind)
 	}
 	_, err := fmt.Fprintln(con.out)
 	return err
+}
+
+// resultLine says a result in a line; gemel report tells all of it.
+func resultLine(body []byte) (string, error) {
+	var r struct {
+		protocol.Head
+		Kind    string   `json:"kind"`
+		Axis    string   `json:"axis"`
+		Value   *float64 `json:"value"`
+		U       *float64 `json:"standard_uncertainty"`
+		Unit    string   `json:"unit"`
+		Because []string `json:"because"`
+	}
+	if err := json.Unmarshal(body, &r); err != nil {
+		return "", err
+	}
+	what := strings.ReplaceAll(r.Kind, "_", " ")
+	if r.Axis != "" {
+		what += " along " + r.Axis
+	}
+	text := fmt.Sprintf("%s  %s %d  result: %s: ", r.At.Local().Format("15:04:05"), r.Run, r.Sequence, what)
+	if r.Value == nil {
+		return text + "no value, because " + strings.Join(r.Because, "; "), nil
+	}
+	text += fmt.Sprintf("%.6g", *r.Value)
+	if r.U != nil {
+		text += fmt.Sprintf(" with standard uncertainty %.2g", *r.U)
+	}
+	if r.Unit != "1" {
+		text += " " + r.Unit
+	}
+	return text, nil
 }

@@ -36,7 +36,7 @@ func (c *runCommand) Run(ctx context.Context, con *console) error {
 	if err != nil && interrupted(ctx, err) {
 		return errors.New("stopped before anything moved")
 	}
-	return err
+	return con.findings(err, c.JSON)
 }
 
 // interrupted says whether an error is only that a person or the system asked for the end.

@@ -3,6 +3,9 @@
 package main
 
 import (
+	"encoding/json"
+	"os"
+	"os/exec"
 	"path/filepath"
 	"strings"
 	"syscall"
@@ -102,5 +105,64 @@ func TestAKeyThatBouncesIsOneWishToStop(t *testing.T) {
 	}
 	if said := p.err.String(); !strings.Contains(said, "stopping: the bench comes to rest") && !strings.Contains(said, "stopped before anything moved") {
 		t.Errorf("it said %s; want that it stops, or that nothing had moved", said)
+	}
+}
+
+func TestALookSaysWhatWasClosed(t *testing.T) {
+	r := handed()
+	r.Act, r.Text = protocol.HandLook, "counted 1 s"
+	if got := told(r); got != "counted 1 s; closed all the while: signal, idler" {
+		t.Errorf("%q; want the closed detectors named", got)
+	}
+	r.Shutters[1].Open = true
+	if got := told(r); got != "counted 1 s" {
+		t.Errorf("%q; want no word of shutters when all are open", got)
+	}
+}
+
+func TestFollowSaysAResultInALine(t *testing.T) {
+	for body, want := range map[string]string{
+		`{"run": "r1", "sequence": 9, "at": "2031-02-03T04:05:06.000000000Z", "kind": "peak", "axis": "idler_arm", "value": 2.86528, "standard_uncertainty": 0.00012, "unit": "deg"}`: "result: peak along idler_arm: 2.86528 with standard uncertainty 0.00012 deg",
+		`{"run": "r1", "sequence": 9, "at": "2031-02-03T04:05:06.000000000Z", "kind": "tuning_curve", "value": null, "because": ["no light"]}`:                                        "result: tuning curve: no value, because no light",
+	} {
+		if got, err := resultLine([]byte(body)); err != nil || !strings.HasSuffix(got, want) {
+			t.Errorf("%q, %v; want %q", got, err, want)
+		}
+	}
+}
+
+func TestActsWithoutADaemonAreTakenInAScriptToo(t *testing.T) {
+	dir := t.TempDir()
+	data := filepath.Join(dir, "data")
+	p, _ := serve(t, nil, "--bench", demoBenchFile, "--data", data)
+	out := must(t, "hand", "--data", data, "--do", "help", "--do", "gate 1 s", "--do", "note the lid is off", "--do", "look")
+	for _, want := range []string{"the end, at rest", "gate 1 s", "noted", "closed all the while: "} {
+		if !strings.Contains(out, want) {
+			t.Errorf("it does not say %q:\n%s", want, out)
+		}
+	}
+	recipe := writeFile(t, filepath.Join(dir, "bad.yaml"), "title: A\ndwell: 5\n")
+	for _, args := range [][]string{{"start", "--data", data}, {"run", "--data", data + "-2", "--bench", demoBenchFile}} {
+		out, errOut, code := gemel(t, append(args, "--json", "--recipe", recipe)...)
+		var said struct{ Findings []protocol.Finding }
+		if err := json.Unmarshal([]byte(out), &said); err != nil || code != exitFailed || len(said.Findings) != 1 || said.Findings[0].File != recipe || said.Findings[0].Line != 2 {
+			t.Errorf("%s --json ended with %d: %s%s%v; want the finding, in the file that was named", args[0], code, out, errOut, err)
+		}
+	}
+	quit(t, p)
+}
+
+func TestWhoeverStopsReadingHearsNoComplaint(t *testing.T) {
+	r, w, err := os.Pipe()
+	if err != nil {
+		t.Fatal(err)
+	}
+	r.Close()
+	p := &program{t: t, cmd: exec.Command(binary, "check", "--schema", "bench"), out: newOutput(), err: newOutput(), ended: make(chan struct{})}
+	p.cmd.Stdout, p.cmd.Stderr = w, p.err
+	err = p.cmd.Run()
+	w.Close()
+	if code := p.cmd.ProcessState.ExitCode(); code != exitFailed || p.err.String() != "" {
+		t.Errorf("it ended with %d, %v: %q; want 1 and not a word", code, err, p.err)
 	}
 }
