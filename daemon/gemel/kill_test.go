@@ -68,7 +68,7 @@ const killRecipe = `
 title: Killed over and over
 sweep:
   - {axis: signal_arm, at: 2.864 deg}
-  - {axis: idler_arm, around: 2.864 deg, span: 0.4 deg, step: 0.1 deg}
+  - {axis: idler_arm, around: 2.864 deg, span: 0.8 deg, step: 0.2 deg}
 dwell: {time: 20 ms, slice: 10 ms}
 repeat: {times: 2, as: passes}
 dark: {every: 10 points, dwell: 20 ms, also: [start, end]}
@@ -176,8 +176,17 @@ func campaign(t *testing.T, seed uint64, deaths []death) {
 		writeFile(t, file, story.Story())
 		t.Errorf("the judge says (-kill.seed %d; the whole story with -artifacts):\n  %s", seed, strings.Join(wrong, "\n  "))
 	}
+	if !slices.ContainsFunc(journal, refinedBy) {
+		t.Error("no refinement added a point")
+	}
 	mustNotice(t, journal, ledger.all(t), c, facts)
 	t.Logf("%d kills over %d runs, %d journal entries, %d records of the world, in %s", len(deaths), len(runs), len(journal), len(ledger.all(t)), time.Since(began).Round(100*time.Millisecond))
+}
+
+// refinedBy says whether an entry added points to a sweep.
+func refinedBy(m nighttest.Moment) bool {
+	var points protocol.Points
+	return m.Journal.Kind == protocol.PointEntry && json.Unmarshal(m.Journal.Body, &points) == nil && points.Refined > 0 && len(points.Points) > 0
 }
 
 // mustNotice takes one thing at a time out of a time line that the judge found flawless, since a

@@ -210,7 +210,7 @@ func quick(t *testing.T, dir string, more ...change) string {
 		{`^  clock: \d+`, "  clock: 1"},
 		{`speed: [0-9.]+ deg/s$`, "speed: 2000 deg/s"},
 		{`acceleration: [0-9.]+ deg/s2`, "acceleration: 200000 deg/s2"},
-		{`settle(_open|_closed)?: [0-9]+ ms`, "settle$1: 2 ms"},
+		{`settle(_open|_closed)?: [0-9]+ m?s`, "settle$1: 2 ms"},
 		{`glance: 10 ms`, "glance: 1 ms"},
 	}, more...)...)
 }

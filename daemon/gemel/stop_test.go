@@ -3,10 +3,12 @@
 package main
 
 import (
+	"encoding/json"
 	"flag"
 	"fmt"
 	"math"
 	"path/filepath"
+	"slices"
 	"strings"
 	"syscall"
 	"testing"
@@ -79,6 +81,39 @@ func phases() []phase {
 			must(t, "hold", "--data", data)
 		},
 	}}
+	all = append(all, phase{
+		name: "during a reference", rare: true,
+		recipe: "title: Referred\nsweep: [{axis: signal_arm, at: 2.864 deg}, {axis: idler_arm, from: 2 deg, to: 3 deg, step: 1 deg}]\ndwell: 20 ms\nreference: {axes: [idler_arm], on: [top], at: {signal_arm: 2.864 deg, idler_arm: 2.864 deg}, every: 1 point, dwell: {time: 40 s, slice: 20 s}}\n",
+		reach: func(t *testing.T, l *truth, _ string) {
+			l.await(t, 0, "a gate of a reference", func(r instruments.Record) bool { return r.Kind == instruments.GateOpened && r.Gate.SetS > 1 })
+		},
+	}, phase{
+		name: "in a refinement", rare: true,
+		recipe: "title: Refined\nsweep:\n  - {axis: signal_arm, at: 2.864 deg}\n  - {axis: idler_arm, around: 2.864 deg, span: 0.8 deg, step: 0.2 deg}\ndwell: {time: 1 s, slice: 500 ms}\nrefine: {along: idler_arm, of: pairs, around: maximum, span: 0.1 deg, step: 0.05 deg, at_most: 4 points, within: 20 min}\n",
+		reach: func(t *testing.T, l *truth, data string) {
+			n := 0
+			light := func(r instruments.Record) bool { return r.Kind == instruments.GateOpened && r.Gate.SetS > 0.3 }
+			for range 11 { // two slices of five points, and one of the first that was added
+				_, n = l.await(t, n, "a point", light)
+			}
+			refined := func(e protocol.Numbered) bool {
+				var points protocol.Points
+				return e.Kind == protocol.PointEntry && json.Unmarshal(e.Body, &points) == nil && points.Refined > 0
+			}
+			if !slices.ContainsFunc(entriesOf(t, data), refined) {
+				t.Error("no refinement was decided")
+			}
+		},
+	}, phase{
+		name: "during a warm-up", rare: true,
+		recipe: farRecipe + "schedule: {warm_up: {steady: {pump_power: 0.5 % over 10 min}, at_most: 2 h}}\n",
+		reach: func(t *testing.T, l *truth, _ string) {
+			n := 0
+			for range 2 {
+				_, n = l.await(t, n, "a look at the power", func(r instruments.Record) bool { return r.Kind == instruments.SensorRead })
+			}
+		},
+	})
 	for i, device := range []string{"rotary", "counter", "shutter", "signal_shield", "monitor"} {
 		first := 20
 		if device == "shutter" {
