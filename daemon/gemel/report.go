@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"strings"
 
 	"gemel/daemon/logbook"
 	"gemel/daemon/report"
@@ -32,7 +33,7 @@ func (reportCommand) Help() string {
 
 The results are worked out from the logbook file alone: recipe and bench file are read from the run's own header, and a copy of the file gives the same digits.
 
---json prints one object: the recipe's first result, and under the key results the list of all of them, the first included. The exit code is 0 only if each has a value; one without says why under because.`
+--json prints one object: the recipe's first result, under the key results the list of all of them, the first included, and under the key night what happened to the run: holds, interruptions, doubts, what was left out, notes. The exit code is 0 only if each has a value; one without says why under because.`
 }
 
 func (c *reportCommand) Run(ctx context.Context, con *console) error {
@@ -55,25 +56,37 @@ func (c *reportCommand) Run(ctx context.Context, con *console) error {
 	if err != nil {
 		return err
 	}
+	for _, r := range all {
+		if len(o.Off) > 0 && r.Kind != "efficiency" {
+			fmt.Fprintf(con.err, "--without switches corrections of an efficiency off; a %s has none of them\n", strings.ReplaceAll(r.Kind, "_", " "))
+		}
+	}
+	night, err := report.NightOf(ctx, book, run)
+	if err != nil {
+		return err
+	}
+	// The report first: a picture that cannot be drawn must not take it away.
+	err = con.results(all, night, c.JSON)
 	if c.Plot != "" {
 		if err := writePicture(c.Plot, func(w io.Writer) error { return report.Plot(w, all) }); err != nil {
 			return err
 		}
 	}
-	return con.results(all, c.JSON)
+	return err
 }
 
-// results prints a run's results. One that was refused is a failure that says why.
-func (c *console) results(all []estimate.Result, asJSON bool) error {
+// results prints a run's results, and what happened in its night. A result that was refused is a
+// failure that says why.
+func (c *console) results(all []estimate.Result, night report.Night, asJSON bool) error {
 	if asJSON {
-		text, err := report.JSON(all)
+		text, err := report.JSONWith(all, &night)
 		if err != nil {
 			return err
 		}
 		if _, err := c.out.Write(text); err != nil {
 			return err
 		}
-	} else if _, err := fmt.Fprint(c.out, report.Text(all)); err != nil {
+	} else if _, err := fmt.Fprint(c.out, report.Text(all)+"\n"+night.Text()); err != nil {
 		return err
 	}
 	for _, r := range all {
@@ -84,15 +97,27 @@ func (c *console) results(all []estimate.Result, asJSON bool) error {
 	return nil
 }
 
+// lastWithResult is the last run that has something to report: of those whose recipe asks for a result
+// the last with a reading, so that a run withdrawn before it began hides none.
 func lastWithResult(ctx context.Context, book *logbook.Book, file string) (protocol.RunID, error) {
 	runs, err := book.Runs(ctx)
 	if err != nil {
 		return "", err
 	}
+	var empty protocol.RunID
 	for i := len(runs) - 1; i >= 0; i-- {
-		if _, err := report.All(ctx, book, runs[i].Run, report.Options{}); !errors.Is(err, report.ErrNoResult) {
-			return runs[i].Run, nil
+		if _, err := report.All(ctx, book, runs[i].Run, report.Options{}); errors.Is(err, report.ErrNoResult) {
+			continue
 		}
+		for range book.Readings(ctx, runs[i].Run) {
+			return runs[i].Run, nil // an error, too, is one to show
+		}
+		if empty == "" {
+			empty = runs[i].Run
+		}
+	}
+	if empty != "" {
+		return empty, nil
 	}
 	return "", fmt.Errorf("%s holds no run whose recipe asks for a result", file)
 }

@@ -96,7 +96,11 @@ func forecastBench(file *bench.File) forecast.Bench {
 		b.Sensors = append(b.Sensors, s.Name)
 	}
 	for _, s := range file.Settings {
-		b.Settings = append(b.Settings, forecast.Setting{Name: s.Name, Unit: s.Unit, Settle: s.Settle})
+		one := forecast.Setting{Name: s.Name, Unit: s.Unit, Settle: s.Settle}
+		if value, ok := file.Stands(s); ok {
+			one.Stand = &value
+		}
+		b.Settings = append(b.Settings, one)
 	}
 	b.Pace, b.PumpPower = float64(file.Pace()), pumpPower(file)
 	return b

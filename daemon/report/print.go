@@ -20,11 +20,15 @@ func Text(all []estimate.Result) string {
 // JSON is one object: the first result's keys, and under results the list of all, in the recipe's
 // order, the first included. Who asks for one number reads it as ever; who asks for several reads the
 // list.
-func JSON(all []estimate.Result) ([]byte, error) {
+func JSON(all []estimate.Result) ([]byte, error) { return JSONWith(all, nil) }
+
+// JSONWith is JSON with the night under the key night.
+func JSONWith(all []estimate.Result, night *Night) ([]byte, error) {
 	text, err := json.MarshalIndent(struct {
 		estimate.Result
 		Results []estimate.Result `json:"results"`
-	}{all[0], all}, "", "  ")
+		Night   *Night            `json:"night,omitempty"`
+	}{all[0], all, night}, "", "  ")
 	if err != nil {
 		return nil, fmt.Errorf("results of %s: %w", all[0].Run, err)
 	}

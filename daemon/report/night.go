@@ -1,0 +1,266 @@
+package report
+
+import (
+	"context"
+	"encoding/json"
+	"fmt"
+	"strconv"
+	"strings"
+	"time"
+
+	"gemel/daemon/logbook"
+	"gemel/protocol"
+)
+
+// Night is what happened to a run beside its numbers: what a reader of the results should know before
+// believing them.
+type Night struct {
+	State         protocol.State   `json:"state"`
+	Ended         string           `json:"ended"` // how, in the run's words; empty while it goes on
+	Accepted      int              `json:"readings_accepted"`
+	SetAside      int              `json:"readings_set_aside"` // taken and refused
+	Planned       int              `json:"readings_planned"`   // 0: it never began
+	LeftOut       int              `json:"visits_left_out"`    // by the schedule, a refinement's time or a person
+	TakenAgain    int              `json:"taken_again"`
+	GivenUp       int              `json:"given_up"` // visits
+	Interruptions []Happening      `json:"interruptions"`
+	Holds         []Hold           `json:"holds"`
+	Doubts        []Happening      `json:"doubts"`
+	Cuts          []Happening      `json:"cuts"` // why visits were left out
+	Troubles      []Happening      `json:"troubles"`
+	Earlier       []EarlierOfNight `json:"earlier_values"` // of other runs' results, that points were made of
+	Notes         []NoteOfNight    `json:"notes"`          // that people wrote
+}
+
+// Happening is one event.
+type Happening struct {
+	At   protocol.Time `json:"at"`
+	Text string        `json:"text"`
+}
+
+// Hold is a stretch in which the run waited.
+type Hold struct {
+	From protocol.Time  `json:"from"`
+	To   *protocol.Time `json:"to"` // null: it still holds
+	Why  []string       `json:"why"`
+}
+
+// EarlierOfNight is a value that was taken from another run.
+type EarlierOfNight struct {
+	Kind  string         `json:"kind"`
+	Of    string         `json:"of"` // axis or setting
+	Title string         `json:"title"`
+	Run   protocol.RunID `json:"run"`
+	Value float64        `json:"value"` // degrees, or the setting's unit
+	U     float64        `json:"standard_uncertainty"`
+	Unit  string         `json:"unit"` // empty: the setting's
+}
+
+// NoteOfNight is what somebody wrote on the run.
+type NoteOfNight struct {
+	At   protocol.Time `json:"at"`
+	Who  string        `json:"who"`
+	Text string        `json:"text"`
+}
+
+// NightOf reads a run's journal and notes.
+func NightOf(ctx context.Context, book *logbook.Book, run protocol.RunID) (Night, error) {
+	row, err := book.Run(ctx, run)
+	if err != nil {
+		return Night{}, err
+	}
+	n := Night{State: row.State, Interruptions: []Happening{}, Holds: []Hold{}, Doubts: []Happening{}, Cuts: []Happening{}, Troubles: []Happening{}, Earlier: []EarlierOfNight{}, Notes: []NoteOfNight{}}
+	const page = 500
+	for after := int64(0); ; {
+		entries, err := book.Entries(ctx, run, after, page)
+		if err != nil {
+			return Night{}, err
+		}
+		for _, e := range entries {
+			if err := n.add(e); err != nil {
+				return Night{}, fmt.Errorf("run %s: entry %d: %w", run, e.Sequence, err)
+			}
+			after = e.Sequence
+		}
+		if len(entries) < page {
+			break
+		}
+	}
+	taken, _, err := book.Taken(ctx, run)
+	if err != nil {
+		return Night{}, err
+	}
+	for _, v := range taken {
+		one := EarlierOfNight{Kind: v.Kind, Of: v.Axis + v.Setting, Title: v.From, Run: v.Run, U: v.U}
+		switch {
+		case v.Angle != nil:
+			one.Value, one.Unit = v.Angle.Degrees(), "deg"
+		case v.Value != nil:
+			one.Value = *v.Value
+		}
+		n.Earlier = append(n.Earlier, one)
+	}
+	notes, err := book.Notes(ctx, run)
+	if err != nil {
+		return Night{}, err
+	}
+	for _, one := range notes {
+		n.Notes = append(n.Notes, NoteOfNight{one.At, one.Who, one.Text})
+	}
+	return n, nil
+}
+
+// add takes one entry in.
+func (n *Night) add(e protocol.Entry) error {
+	switch e.Kind {
+	case protocol.ReadingEntry:
+		var r struct {
+			Kind     protocol.ReadingKind `json:"kind"`
+			Accepted bool                 `json:"accepted"`
+		}
+		if err := json.Unmarshal(e.Body, &r); err != nil {
+			return err
+		}
+		switch {
+		case r.Kind == protocol.Check:
+		case r.Accepted:
+			n.Accepted++
+		default:
+			n.SetAside++
+		}
+	case protocol.EventEntry:
+		var ev protocol.Event
+		if err := json.Unmarshal(e.Body, &ev); err != nil {
+			return err
+		}
+		n.event(ev)
+	}
+	return nil
+}
+
+func (n *Night) event(ev protocol.Event) {
+	number := func(key string) int { v, _ := ev.Detail[key].(float64); return int(v) }
+	here := Happening{ev.At, ev.Text}
+	switch ev.Kind {
+	case protocol.Began:
+		n.Planned = number("readings_planned")
+	case protocol.Interrupted:
+		n.Interruptions = append(n.Interruptions, here)
+	case protocol.Doubted:
+		n.Doubts = append(n.Doubts, here)
+	case protocol.Trouble, protocol.GuardBroken:
+		n.Troubles = append(n.Troubles, here)
+	case protocol.TakenAgain:
+		n.TakenAgain++
+	case protocol.SetAside:
+		if left := number("left_out"); left > 0 {
+			n.LeftOut += left
+			n.Cuts = append(n.Cuts, here)
+		} else {
+			n.GivenUp++
+			n.Troubles = append(n.Troubles, here)
+		}
+	case protocol.Ended:
+		n.Ended = ev.Text
+	}
+	// A hold begins with the first event that leaves the run holding, and ends with the first that does not.
+	open := len(n.Holds) > 0 && n.Holds[len(n.Holds)-1].To == nil
+	switch {
+	case ev.State == "":
+	case ev.State == protocol.Holding && open:
+		if ev.Kind == protocol.Held || ev.Kind == protocol.Interrupted || ev.Kind == protocol.GuardBroken {
+			last := &n.Holds[len(n.Holds)-1]
+			last.Why = append(last.Why, ev.Text)
+		}
+	case ev.State == protocol.Holding:
+		n.Holds = append(n.Holds, Hold{From: ev.At, Why: []string{ev.Text}})
+	case open:
+		to := ev.At
+		n.Holds[len(n.Holds)-1].To = &to
+	}
+}
+
+// listed is how many happenings of a kind are printed; the JSON has them all.
+const listed = 12
+
+// Text is the night for a person.
+func (n Night) Text() string {
+	var b strings.Builder
+	b.WriteString("The night\n")
+	line := func(format string, a ...any) { fmt.Fprintf(&b, "  "+format+"\n", a...) }
+	how := n.Ended
+	if how == "" {
+		how = "it is " + string(n.State)
+	}
+	switch {
+	case n.Planned == 0:
+		how += "; it never began"
+	case !strings.Contains(how, "readings accepted"):
+		how += fmt.Sprintf("; %d of %d readings accepted", n.Accepted, n.Planned)
+	}
+	line("%s", how)
+	if n.LeftOut > 0 {
+		line("%d of %d visits left out", n.LeftOut, max(n.Planned, n.LeftOut))
+	}
+	list := func(what string, all []Happening) {
+		for i, h := range all {
+			if i == listed {
+				line("… and %d more like these; --json has them all", len(all)-listed)
+				break
+			}
+			line("%s  %s%s", when(h.At), what, h.Text)
+		}
+	}
+	list("", n.Cuts)
+	list("", n.Interruptions)
+	for _, h := range n.Holds {
+		span := "held from " + when(h.From) + ", still"
+		if h.To != nil {
+			span = fmt.Sprintf("held from %s to %s (%s)", when(h.From), when(*h.To), spoken(h.To.Sub(h.From.Time)))
+		}
+		line("%s: %s", span, strings.Join(h.Why, "; "))
+	}
+	list("doubt: ", n.Doubts)
+	list("", n.Troubles)
+	if n.TakenAgain+n.SetAside+n.GivenUp > 0 {
+		line("taken again: %d; readings set aside: %d; visits given up: %d", n.TakenAgain, n.SetAside, n.GivenUp)
+	}
+	for _, v := range n.Earlier {
+		unit := v.Unit
+		if unit == "" {
+			unit = "in the setting's unit"
+		}
+		line("%s of %s taken from %q, run %s: %s, u %s %s", v.Kind, v.Of, v.Title, v.Run, plain(v.Value), strconv.FormatFloat(v.U, 'g', 2, 64), unit)
+	}
+	for _, one := range n.Notes {
+		line("note of %s, %s: %s", one.Who, when(one.At), one.Text)
+	}
+	if n.quiet() {
+		line("nothing else happened: no interruption, no hold, no doubt")
+	}
+	return b.String()
+}
+
+func (n Night) quiet() bool {
+	return n.LeftOut+n.TakenAgain+n.SetAside+n.GivenUp+len(n.Interruptions)+len(n.Holds)+len(n.Doubts)+len(n.Troubles)+len(n.Earlier)+len(n.Notes) == 0
+}
+
+func when(t protocol.Time) string { return t.UTC().Format("2006-01-02 15:04:05") }
+
+// spoken is a duration as recipes are written.
+func spoken(d time.Duration) string {
+	d = d.Round(time.Second)
+	var parts []string
+	for _, u := range []struct {
+		of   time.Duration
+		name string
+	}{{time.Hour, "h"}, {time.Minute, "min"}, {time.Second, "s"}} {
+		if k := d / u.of; k > 0 {
+			parts, d = append(parts, fmt.Sprintf("%d %s", k, u.name)), d%u.of
+		}
+	}
+	if len(parts) == 0 {
+		return "less than 1 s"
+	}
+	return strings.Join(parts, " ")
+}
