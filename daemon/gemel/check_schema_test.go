@@ -197,7 +197,7 @@ func onlyFound() map[string][]string {
 			"efficiencies-of-two-triggers-on-heralds", "efficiency-by-a-setting-that-is-not-swept", "efficiency-of-a-coincidence-channel",
 			"efficiency-of-all-points-of-a-sweep", "efficiency-of-detectors-never-counted-together", "efficiency-of-its-own-trigger",
 			"efficiency-without-background-and-dark", "gate-is-longer-than-the-counter-has", "guard-bounds-are-the-wrong-way-round",
-			"guard-gives-up-without-holding", "guard-has-another-unit", "guard-of-a-rate-in-another-unit", "guard-of-darks-that-are-not-counted",
+			"guard-gives-up-without-holding", "guard-has-another-unit", "guard-of-the-rate-of-nobody", "guard-of-darks-that-are-not-counted",
 			"guard-of-references-that-are-not-repeated", "guard-of-references-that-are-not-taken", "guard-watches-no-sensor", "heralds-in-one-slice",
 			"heralds-of-a-coincidence-channel", "heralds-of-an-unknown-channel", "heralds-of-no-channel", "heralds-of-the-detector-under-test",
 			"last-slice-is-shorter-than-the-counter-has", "lock-step-beyond-a-soft-limit", "lock-step-with-another-number-of-values",

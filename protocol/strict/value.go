@@ -574,7 +574,7 @@ func inBase(x float64, kind unit.Kind) string {
 			continue
 		}
 		s := strconv.FormatFloat(in, 'g', 6, 64) + " " + name
-		if best == "" || len(s) < len(best) {
+		if e := strings.Contains(best, "e+"); best == "" || e && !strings.Contains(s, "e+") || len(s) < len(best) && !strings.Contains(s, "e+") {
 			best = s
 		}
 	}

@@ -7,6 +7,7 @@ import (
 	"gemel/drivers"
 	"gemel/protocol"
 	"gemel/protocol/strict"
+	"gemel/protocol/unit"
 	"gemel/scan"
 )
 
@@ -26,8 +27,9 @@ type Guard struct {
 
 // maxGuards and maxGiveUp are far beyond use.
 const (
-	maxGuards = 32
-	maxGiveUp = 7 * 24 * time.Hour
+	maxGuards    = 32
+	maxGuardedHz = 1e9
+	maxGiveUp    = 7 * 24 * time.Hour
 )
 
 func (r *Recipe) readGuards(v strict.Value) {
@@ -66,6 +68,11 @@ func (r *Recipe) readGuards(v strict.Value) {
 			age.Failf("more than the %s between two references, or every one would be too old", strict.Span(r.Reference.Every))
 		}
 		if ends := within.List(2, 2); len(ends) == 2 {
+			if rate.Given() || darkRate.Given() { // whatever the bench: both are counts per second
+				for _, end := range ends {
+					end.Quantity(unit.Rate, 0, maxGuardedHz)
+				}
+			}
 			g.low, _ = readNumber(ends[0], false)
 			g.high, _ = readNumber(ends[1], false)
 			g.lowAt, g.highAt = ends[0].Place(), ends[1].Place()
