@@ -245,6 +245,10 @@ func (f *File) truthOf(s Setting) (t settingTruth, neutral, perVolt float64) {
 	return t, neutral, perVolt
 }
 
+// Stands says where a run brings a setting that its recipe does not step, in the setting's unit; false:
+// it stays as it is found.
+func (f *File) Stands(s Setting) (value float64, ok bool) { return s.stand(f.Optics) }
+
 // stand is where a setting is brought that no recipe steps.
 func (s Setting) stand(o *Optics) (value float64, ok bool) {
 	switch {

@@ -77,6 +77,7 @@ type Setting struct {
 	Name   drivers.DeviceName
 	Unit   string
 	Settle time.Duration // after it was set
+	Stand  *float64      // where it is brought when the plan does not step it; nil: it stays as it is
 }
 
 // Costs is what takes time beside moving, settling and counting.

@@ -74,6 +74,8 @@ type course struct {
 	pumped  bool         // pump shutter open
 	shown   bool         // protectors open
 	gate    time.Duration
+	still   []scan.SettingTarget           // settings that the plan does not step, where they stand
+	told    map[drivers.DeviceName]float64 // what each setting was last set to
 
 	now    time.Duration
 	spent  Spent
@@ -111,7 +113,7 @@ func newCourse(plan *scan.Plan, b *Bench) (*course, error) {
 	}
 	n := len(b.Axes)
 	c := &course{plan: plan, bench: b, walk: walk, here: slices.Clone(b.Start), there: make([]unit.Angle, n), due: make([]bool, n), sent: make([]bool, n),
-		target: make([]bool, n), stand: slices.Clone(b.Start), stuck: map[int]error{}}
+		target: make([]bool, n), stand: slices.Clone(b.Start), stuck: map[int]error{}, told: map[drivers.DeviceName]float64{}}
 	if len(c.here) != n {
 		return nil, fmt.Errorf("forecast: %d axes stand somewhere of %d; want all", len(c.here), n)
 	}
@@ -124,6 +126,12 @@ func newCourse(plan *scan.Plan, b *Bench) (*course, error) {
 	}
 	if plan.Refine == nil { // its points are not in the plan
 		walk.Only(*plan, at)
+	}
+	for _, s := range b.Settings {
+		stepped := len(plan.Points) > 0 && slices.ContainsFunc(plan.Points[0].Settings, func(t scan.SettingTarget) bool { return t.Setting == s.Name })
+		if s.Stand != nil && !stepped {
+			c.still = append(c.still, scan.SettingTarget{Setting: s.Name, Value: *s.Stand})
+		}
 	}
 	if len(plan.Points) > 0 {
 		for _, t := range plan.Points[0].Axes {
@@ -263,6 +271,7 @@ func (c *course) take(f engine.Foreseen, r *taken) {
 			h.moved[i] = c.there[i] - c.here[i]
 		}
 	}
+	c.set(c.still)
 	c.set(settings)
 	c.goTo(f.Visit.Point, any)
 	light := f.Kind != protocol.Dark
@@ -280,6 +289,9 @@ func (c *course) take(f engine.Foreseen, r *taken) {
 	c.dwell(f, r)
 	c.spend(c.shownAll)
 	c.spend(c.whereAll)
+	for _, s := range c.still {
+		c.overhead(c.bench.Costs.ask(s.Setting, askGet))
+	}
 	for _, s := range settings {
 		c.overhead(c.bench.Costs.ask(s.Setting, askGet))
 	}
@@ -337,8 +349,14 @@ func (c *course) aim(targets []scan.AxisTarget, stay bool) {
 	}
 }
 
+// set brings settings where they have to be. One that was brought there before is only asked.
 func (c *course) set(settings []scan.SettingTarget) {
 	for _, t := range settings {
+		if v, told := c.told[t.Setting]; told && v == t.Value {
+			c.overhead(c.bench.Costs.ask(t.Setting, askGet))
+			continue
+		}
+		c.told[t.Setting] = t.Value
 		var settle time.Duration
 		if i := slices.IndexFunc(c.bench.Settings, func(s Setting) bool { return s.Name == t.Setting }); i >= 0 {
 			settle = c.bench.Settings[i].Settle

@@ -213,3 +213,26 @@ func TestAKeepOutIsToldOnce(t *testing.T) {
 		t.Errorf("point 4 is told of %d times; want once: %q", told, foreseen(t, a).Warnings)
 	}
 }
+
+// A setting that settles takes its time once: where it stands already it is only asked.
+func TestASettingSettlesOnlyWhenItIsChanged(t *testing.T) {
+	took := func(change func(*Ask)) time.Duration {
+		a := Ask{Plan: small(), Bench: arms(), Expect: even(2e4, 5e5, 5e3)}
+		change(&a)
+		return foreseen(t, a).Settling.Duration()
+	}
+	bare := took(func(*Ask) {})
+	stand := 45.0
+	lamp := []Setting{{Name: "lamp", Unit: "%", Settle: 5 * time.Second, Stand: &stand}}
+	if more := took(func(a *Ask) { a.Bench.Settings = lamp }) - bare; more != 5*time.Second {
+		t.Errorf("a setting that stands: %s more; want 5 s", more)
+	}
+	if more := took(func(a *Ask) {
+		a.Bench.Settings = lamp
+		for i := range a.Plan.Points {
+			a.Plan.Points[i].Settings = []scan.SettingTarget{{Setting: "lamp", Value: float64(i / 5)}}
+		}
+	}) - bare; more != 15*time.Second {
+		t.Errorf("a setting stepped twice: %s more; want 15 s", more)
+	}
+}
