@@ -160,7 +160,7 @@ func gather(kinds map[protocol.ReadingKind][]protocol.Reading, bench Bench, q Pe
 		r.Used = append(r.Used, row.Sequence)
 	}
 	if len(data) == 0 {
-		no.addf("no light reading counts; want a sweep of %s", q.Axis)
+		no.addf("no light reading counts: %d set aside; want a run that took some along %s", len(r.SetAside), q.Axis)
 	}
 	return data
 }

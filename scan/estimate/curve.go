@@ -256,6 +256,12 @@ func newComparison(rows Rows, bench Bench, model Model, q CurveQuestion, kind st
 	c.r.Unit, c.r.Coverage = "deg", q.Coverage
 	c.r.Curve = &Curve{Along: q.Along, Against: q.Against}
 	no := &Refusal{}
+	kinds, aside := rows.split()
+	c.r.SetAside = aside
+	if len(kinds[protocol.Light]) == 0 {
+		no.addf("the run has no light reading that counts: %d taken, %d set aside; want it to be run, or the reasons below to be mended", len(rows.Readings), len(aside))
+		return c, no
+	}
 	if model.ProfileAt == nil || model.Bare == nil {
 		no.addf("the bench describes no optics to compare with; want the blocks optics and arms in the bench file, or the result kind peak")
 	}
@@ -264,8 +270,6 @@ func newComparison(rows Rows, bench Bench, model Model, q CurveQuestion, kind st
 			no.addf("%s: the axis's standard uncertainty (error) is not declared; an angle without it would claim the fit's alone", axis)
 		}
 	}
-	kinds, aside := rows.split()
-	c.r.SetAside = aside
 	byPlace := map[float64][]protocol.Reading{}
 	for _, row := range kinds[protocol.Light] {
 		i := slices.IndexFunc(row.Angles, func(a protocol.Angle) bool { return a.Axis == q.Against })

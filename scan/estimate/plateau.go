@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 	"slices"
+	"strings"
 
 	"gemel/protocol"
 )
@@ -79,7 +80,7 @@ func (p Plateau) choose(rows Rows, lights []protocol.Reading, ch channels, windo
 		if math.Abs(angle[i]-centre[fold[i]]) <= p.HalfWidthDeg+1e-9 { // the edge counts, whatever the last bit says
 			kept = append(kept, r)
 		} else {
-			aside = append(aside, Aside{r.Sequence, fmt.Sprintf("off the plateau: %s at %.4f deg, centre %.4f ± %.4f deg", p.Axis, angle[i], centre[fold[i]], p.HalfWidthDeg)})
+			aside = append(aside, Aside{r.Sequence, fmt.Sprintf(offPlateau, p.Axis, angle[i], centre[fold[i]], p.HalfWidthDeg)})
 		}
 	}
 	if len(kept) == 0 {
@@ -166,4 +167,63 @@ func middleOfTop(lights []protocol.Reading, axis string, ch channels, windowS fl
 		failed = err
 	}
 	return 0, 0, failed
+}
+
+// offPlateau is the reason of a reading that a sweep takes to find the plateau, and that is none of it.
+const offPlateau = "off the plateau: %s at %.4f deg, centre %.4f ± %.4f deg"
+
+// byDesign says of a reading whether it is off the plateau, which is no fault of it, and where.
+func (a Aside) byDesign() (atDeg, centreDeg float64, ok bool) {
+	var axis string
+	n, _ := fmt.Sscanf(a.Reason, "off the plateau: %s at %f deg, centre %f", &axis, &atDeg, &centreDeg)
+	return atDeg, centreDeg, n == 3
+}
+
+// asideText lists readings set aside for a person: those off the plateau as stretches, those in a row
+// that share a reason as one.
+func asideText(list []Aside) string {
+	var b strings.Builder
+	type stretch struct{ low, high float64 }
+	none := stretch{math.Inf(1), math.Inf(-1)}
+	side := [2]stretch{none, none} // below the centre, above it
+	off := 0
+	var rest []Aside
+	for _, a := range list {
+		at, centre, ok := a.byDesign()
+		if !ok {
+			rest = append(rest, a)
+			continue
+		}
+		off++
+		s := &side[0]
+		if at > centre {
+			s = &side[1]
+		}
+		s.low, s.high = math.Min(s.low, at), math.Max(s.high, at)
+	}
+	if off > 0 {
+		var where []string
+		for _, s := range side {
+			switch {
+			case s.low == s.high:
+				where = append(where, fmt.Sprintf("%.3f", s.low))
+			case s.low < s.high:
+				where = append(where, fmt.Sprintf("%.3f to %.3f", s.low, s.high))
+			}
+		}
+		fmt.Fprintf(&b, "  %d %s off the plateau, as planned, at %s deg\n", off, plural(off, "reading"), strings.Join(where, " and "))
+	}
+	for i := 0; i < len(rest); {
+		k := i + 1
+		for k < len(rest) && rest[k].Reason == rest[i].Reason {
+			k++
+		}
+		if k == i+1 {
+			fmt.Fprintf(&b, "  reading %d: %s\n", rest[i].Sequence, rest[i].Reason)
+		} else {
+			fmt.Fprintf(&b, "  %d readings, %d to %d: %s\n", k-i, rest[i].Sequence, rest[k-1].Sequence, rest[i].Reason)
+		}
+		i = k
+	}
+	return b.String()
 }

@@ -246,17 +246,23 @@ func (r Result) Text() string {
 		}
 	}
 	if len(r.SetAside) > 0 {
-		b.WriteString("\nSet aside\n")
-		for _, a := range r.SetAside {
-			fmt.Fprintf(&b, "  reading %d: %s\n", a.Sequence, a.Reason)
-		}
+		b.WriteString("\nSet aside\n" + asideText(r.SetAside))
 	}
 	return b.String()
 }
 
 // Sentence says the result: value ± expanded uncertainty, k, readings kept and set aside.
 func (r Result) Sentence() string {
-	counts := fmt.Sprintf("%d readings kept, %d set aside", len(r.Used), len(r.SetAside))
+	off := 0
+	for _, a := range r.SetAside {
+		if _, _, ok := a.byDesign(); ok {
+			off++
+		}
+	}
+	counts := fmt.Sprintf("%d %s kept, %d set aside", len(r.Used), plural(len(r.Used), "reading"), len(r.SetAside)-off)
+	if off > 0 {
+		counts += fmt.Sprintf(", %d off the plateau as planned", off)
+	}
 	if r.Value == nil {
 		return fmt.Sprintf("No %s from %s (%s): %s.", strings.ReplaceAll(r.Kind, "_", " "), r.Run, counts, strings.Join(r.Because, "; "))
 	}

@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"encoding/json"
 	"errors"
+	"fmt"
 	"math"
 	"math/rand/v2"
 	"regexp"
@@ -254,5 +255,40 @@ func TestHostileRowsGiveANumberOrARefusal(t *testing.T) {
 	}
 	if numbers < 200 || refusals < 200 {
 		t.Errorf("%d numbers and %d refusals; want plenty of both", numbers, refusals)
+	}
+}
+
+func TestReadingsOffThePlateauAreOneLineAndNoTrouble(t *testing.T) {
+	r := Result{Run: "r", Kind: "efficiency", Because: []string{"none"}, Used: []int64{1}}
+	for i, deg := range []float64{2.361, 2.561, 2.761, 2.961, 3.361} {
+		r.SetAside = append(r.SetAside, Aside{int64(10 + i), fmt.Sprintf(offPlateau, "idler_arm", deg, 2.8601, 0.05)})
+	}
+	for i := range 3 {
+		r.SetAside = append(r.SetAside, Aside{int64(20 + i), "the pump left its band"})
+	}
+	r.SetAside = append(r.SetAside, Aside{30, "doubtful: it slipped"})
+	text := r.Text()
+	for _, want := range []string{
+		"(1 reading kept, 4 set aside, 5 off the plateau as planned)",
+		"Set aside\n  5 readings off the plateau, as planned, at 2.361 to 2.761 and 2.961 to 3.361 deg\n  3 readings, 20 to 22: the pump left its band\n  reading 30: doubtful: it slipped\n",
+	} {
+		if !strings.Contains(text, want) {
+			t.Errorf("no %q in\n%s", want, text)
+		}
+	}
+}
+
+func TestARunWithoutLightIsToldSoAndNotOfOptics(t *testing.T) {
+	dark := Rows{Run: "r", Readings: []protocol.Reading{row(1, protocol.Dark, testStart, 1, []gateCounts{{}}, EveryPair)}}
+	for name, err := range map[string]error{
+		"tuning curve": func() error { _, err := TuningCurve(dark, withTilt(), Model{}, tuningQuestion); return err }(),
+		"peak": func() error {
+			_, err := Peak(dark, skerry(EveryPair), Model{}, PeakQuestion{Axis: "idler_arm", Channel: "idler"})
+			return err
+		}(),
+	} {
+		if err == nil || !strings.Contains(err.Error(), "no light reading") || strings.Contains(err.Error(), "optics") {
+			t.Errorf("%s: %v; want to be told that there is no light", name, err)
+		}
 	}
 }
