@@ -371,8 +371,9 @@ func TestALineThatTakesNoBytesHoldsNothingUp(t *testing.T) {
 	t.Logf("after %s: %d descriptors, %d threads; %d and %d before", window, after, threadsAfter, descriptors, threads)
 	asked := time.Now()
 	must(t, "hold", "--data", s.data)
-	if took := time.Since(asked); took > 5*time.Second {
-		t.Errorf("hold was answered after %s", took)
+	// The rest state is tried on that line too, which costs an opening and a write that hangs.
+	if took := time.Since(asked); took > 20*time.Second {
+		t.Errorf("hold was answered after %s; want the tries on a dead line bounded", took)
 	}
 	s.plug.pull()
 	s.plug.in(filepath.Join(s.sim, "counter"))
