@@ -62,6 +62,12 @@ func (j *judge) place(r *instruments.Record) {
 			}
 		}
 		delete(p.searched, r.Device)
+	case instruments.Stalled:
+		for axis, span := range r.Axes {
+			if j.axis(axis).Proof != drivers.Proved { // it counts the steps that were not made
+				p.off[axis] += span.FromDeg - span.ToDeg
+			}
+		}
 	case instruments.Slipped:
 		p.slipped = r.At
 		for axis, span := range r.Axes {

@@ -14,7 +14,8 @@ import (
 type effect struct {
 	trouble  trouble.Trouble
 	at       time.Time
-	run      protocol.RunID // that was running then; empty: none
+	run      protocol.RunID // that was under way then; empty: none
+	met      bool           // that run was counting, and had to meet it
 	readings int            // accepted readings of that run that began since
 	surfaced bool           // as it declares
 	shown    bool           // somehow: in an event, a reading set aside, a check
@@ -31,9 +32,10 @@ func (j *judge) troubled(r *instruments.Record) {
 		return
 	}
 	e := &effect{trouble: l[0], at: r.At}
-	if s := j.runs[j.current]; s != nil && s.state == protocol.Running && s.counting && !j.killed && !j.waits.full &&
-		(e.trouble.Device == "" || !j.hinders(e.trouble.Device)) { // behind another trouble of its device it is met by nobody
+	if s := j.runs[j.current]; s != nil && s.began && !s.state.Final() {
 		e.run = j.current
+		e.met = s.state == protocol.Running && s.counting && !j.killed && !j.waits.full &&
+			(e.trouble.Device == "" || !j.hinders(e.trouble.Device)) // behind another trouble of its device it is met by nobody
 	}
 	j.effects = append(j.effects, e)
 }
@@ -57,7 +59,7 @@ const unseen = 6
 func (j *judge) died() {
 	for _, e := range j.effects {
 		if !e.surfaced && e.readings < unseen {
-			e.run = ""
+			e.met = false
 		}
 	}
 }
@@ -98,7 +100,7 @@ func (j *judge) accepted(where string, b *protocol.Reading) {
 // demands says whether a trouble that took effect must have shown in the journal: the run met it.
 func (j *judge) demands(e *effect) bool {
 	s := e.trouble.Surfaces()
-	if s.Harmless || len(s.Events) == 0 || e.run == "" || e.readings < unseen {
+	if s.Harmless || len(s.Events) == 0 || !e.met || e.readings < unseen {
 		return false
 	}
 	switch e.trouble.Kind {
@@ -112,6 +114,9 @@ func (j *judge) demands(e *effect) bool {
 		return false // judged by the light at the detector
 	case trouble.Restart, trouble.RestartMoving, trouble.Unplug:
 		return slices.Contains(j.facts.Controls, e.trouble.Device) // the others lose nothing that a reading rests on
+	}
+	if d := e.trouble.For; d > 0 && d < longestDwell(j.facts.Plans[e.run])+5*time.Second {
+		return false // it may have come and gone within one gate
 	}
 	return e.trouble.Device == "" || j.needed(e.trouble.Device)
 }
