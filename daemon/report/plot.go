@@ -95,6 +95,9 @@ func profiled(r estimate.Result) picture {
 	p := picture{across: "angle / deg", up: "counts / s", fromZero: true,
 		key: "Circles: readings less what is known of them (darks, accidentals), with the root of their counts; line: the fit; below: what it leaves, in units of its uncertainty"}
 	scale := 1.
+	if r.Axis != "" {
+		p.across = r.Axis + " / deg"
+	}
 	if _, unit := r.Residuals[0].Place(); unit == "s" {
 		p.across, scale = "delay / ns", 1e9
 	}

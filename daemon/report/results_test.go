@@ -51,6 +51,11 @@ func TestAPictureNeedsSomethingToDraw(t *testing.T) {
 	if err := Plot(&b, []estimate.Result{refused, aPeak(2)}); err != nil || strings.Count(b.String(), "<circle") != 9 || !strings.Contains(b.String(), "no light") {
 		t.Errorf("%v; want the one, and the other's reason", err)
 	}
+	named := aPeak(2)
+	named.Axis = "idler_arm"
+	if err := Plot(&b, []estimate.Result{named}); err != nil || !strings.Contains(b.String(), ">idler_arm / deg<") {
+		t.Errorf("%v; want the axis named", err)
+	}
 	if strings.Contains(b.String(), "NaN") || strings.Contains(b.String(), "Inf") {
 		t.Error("the picture has places that are none")
 	}

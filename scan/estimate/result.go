@@ -202,17 +202,17 @@ func (r Result) Text() string {
 			if row.Covariance {
 				dof, u = "", ""
 			}
-			fmt.Fprintf(&b, "  %-*s %-10s %13s %-5s %11s %-2s %-12s %5s %12s %12s %7.1f%%\n", wide, row.Quantity, row.Symbol, figure(row.Estimate, 7), row.Unit, u,
-				row.Evaluation, row.Distribution, dof, figure(row.Sensitivity, 3), figure(row.Contribution, 3), 100*row.Share)
+			fmt.Fprintf(&b, "  %-*s %-10s %13s %-5s %11s %-2s %-12s %5s %12s %12s %7s%%\n", wide, row.Quantity, row.Symbol, figure(row.Estimate, 7), row.Unit, u,
+				row.Evaluation, row.Distribution, dof, figure(row.Sensitivity, 3), figure(row.Contribution, 3), fixed(100*row.Share, 1))
 		}
 		if r.U != nil {
 			fmt.Fprintf(&b, "  combined standard uncertainty %s; coverage factor %s: %s\n", figure(*r.U, 3), figure(*r.K, 4), r.KBecause)
 			b.WriteString("  printed uncertainties are rounded here only; the JSON carries all digits\n")
 		}
 	}
-	if d := r.Dispersion; d != nil {
-		fmt.Fprintf(&b, "\nScatter between readings: Birge ratio %.3f over %d readings (chi square %.1f on %d degrees of freedom, p = %.3g)%s.\n", d.Birge, d.Readings, d.ChiSquare, d.Freedom, d.P,
-			map[bool]string{true: ": more than counting explains, so the counting rows are multiplied by it", false: ": counting explains it"}[d.Significant])
+	if d := r.Dispersion; d != nil && d.Freedom > 0 {
+		fmt.Fprintf(&b, "\nScatter between readings: Birge ratio %.3f over %d values (chi square %.1f on %d degrees of freedom, p = %.3g)%s.\n", d.Birge, d.Readings, d.ChiSquare, d.Freedom, d.P,
+			map[bool]string{true: ": more than counting explains, so the counting rows are multiplied by it", false: ": no more than counting explains, at the level of 1 %"}[d.Significant])
 	}
 	if m := r.MonteCarlo; m != nil {
 		fmt.Fprintf(&b, "\nMonte Carlo (JCGM 101), %d trials: mean %s, u %s, interval %s to %s. %s\n", m.Trials, figure(m.Mean, 6), figure(m.U, 3), figure(m.Symmetric.Low, 6), figure(m.Symmetric.High, 6), m.Sentence)

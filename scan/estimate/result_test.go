@@ -292,3 +292,15 @@ func TestARunWithoutLightIsToldSoAndNotOfOptics(t *testing.T) {
 		}
 	}
 }
+
+func TestDigitsSayNoMoreThanThereIs(t *testing.T) {
+	v, u, k := 1., 0.1, 1.96
+	r := Result{Run: "r", Kind: "peak", Value: &v, U: &u, Expanded: &u, K: &k, Budget: []Row{{Quantity: "x", Share: -1e-9}}, Dispersion: &Dispersion{Birge: 1, Readings: 1, P: 1}}
+	if text := r.Text(); strings.Contains(text, "-0.0%") || !strings.Contains(text, " 0.0%") || strings.Contains(text, "Birge") {
+		t.Errorf("%s\nwant a share of 0.0%%, and no word on the scatter of one reading", text)
+	}
+	r.Dispersion = &Dispersion{Birge: 1.3, Readings: 8, ChiSquare: 12, Freedom: 7, P: 0.0472}
+	if text := r.Text(); !strings.Contains(text, "p = 0.0472): no more than counting explains, at the level of 1 %.") {
+		t.Errorf("%s\nwant the level that p is held against", text)
+	}
+}
