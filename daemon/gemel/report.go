@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"path/filepath"
 	"strings"
 
 	"gemel/daemon/logbook"
@@ -37,6 +38,9 @@ The results are worked out from the logbook file alone: recipe and bench file ar
 }
 
 func (c *reportCommand) Run(ctx context.Context, con *console) error {
+	if c.Plot != "" && !strings.EqualFold(filepath.Ext(c.Plot), ".svg") {
+		return fmt.Errorf("--plot %q: a picture is SVG; want a name that ends in .svg", c.Plot)
+	}
 	book, err := logbook.OpenReadOnly(logbookFile(c.Data))
 	if err != nil {
 		return err
