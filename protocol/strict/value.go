@@ -567,15 +567,16 @@ func Span(d time.Duration) string {
 
 // inBase prints a bound in the unit of its kind that makes it shortest to read.
 func inBase(x float64, kind unit.Kind) string {
-	best := ""
+	best, size := "", 0.0
 	for _, name := range unit.Units(kind) {
 		in, err := unit.In(x, name)
 		if err != nil {
 			continue
 		}
 		s := strconv.FormatFloat(in, 'g', 6, 64) + " " + name
-		if e := strings.Contains(best, "e+"); best == "" || e && !strings.Contains(s, "e+") || len(s) < len(best) && !strings.Contains(s, "e+") {
-			best = s
+		e, mine := strings.Contains(best, "e+"), strings.Contains(s, "e+")
+		if best == "" || e && !mine || len(s) < len(best) && !mine || e && mine && math.Abs(in) < size {
+			best, size = s, math.Abs(in)
 		}
 	}
 	return strings.TrimSuffix(best, " 1")
