@@ -214,7 +214,8 @@ func (f *Forecast) warnOfSteps(a Ask) {
 // warnOfGuards is about guards that what is expected would break.
 func (f *Forecast) warnOfGuards(a Ask) {
 	for _, g := range a.Plan.Guards {
-		unitOf, value := "/s", func(int) float64 { return math.NaN() }
+		unitOf := "/s"
+		var value func(int) float64
 		gate := min(a.Plan.Dwell.Slice, a.Plan.Dwell.Time)
 		got := make(row, 0)
 		if f.rates != nil {
