@@ -269,5 +269,17 @@ func (k *Keeper) endWaiting(ctx context.Context, row logbook.RunRow, text, by st
 		}
 		last++
 	}
+	if row.State != protocol.Queued {
+		past, err := k.fold(ctx, row.Run)
+		if err != nil {
+			return err
+		}
+		for _, d := range past.Unverified(k.Bench.Axes) {
+			if err := k.append(ctx, row.Run, last+1, protocol.Doubted, d.Text, past.State, past.Causes, d.Detail); err != nil {
+				return err
+			}
+			last++
+		}
+	}
 	return k.append(ctx, row.Run, last+1, protocol.Ended, text, protocol.Stopped, nil, map[string]any{"who": by})
 }

@@ -462,10 +462,23 @@ func (e *Engine) putBack(ctx context.Context) (done bool, err error) {
 // end brings the bench to rest and closes the run for ever. The rest state comes first.
 func (e *Engine) end(ctx context.Context, state protocol.State, text string, detail map[string]any) error {
 	bad := e.rest(ctx)
+	if err := e.doubtUnseen(ctx); err != nil {
+		return err
+	}
 	if err := e.event(ctx, protocol.Ended, text+withBad(bad), state, nil, detail); err != nil {
 		return err
 	}
 	return errEnded
+}
+
+// doubtUnseen writes which readings rest on zeros that nobody verified since.
+func (e *Engine) doubtUnseen(ctx context.Context) error {
+	for _, d := range e.progress.Unverified(e.Bench.Axes) {
+		if err := e.note(ctx, protocol.Doubted, d.Text, d.Detail); err != nil {
+			return err
+		}
+	}
+	return nil
 }
 
 // shutdown leaves the run unfinished, at rest, holding for a restart.
@@ -492,6 +505,9 @@ func (e *Engine) afterPanic(ctx context.Context, value any) (protocol.State, err
 	bad := e.rest(fresh)
 	err := fmt.Errorf("engine: panic: %v\n%s", value, stack)
 	text := fmt.Sprintf("failed: a bug in this program: %v%s", value, withBad(bad))
+	if werr := e.doubtUnseen(fresh); werr != nil {
+		return e.progress.State, errors.Join(err, werr)
+	}
 	if werr := e.event(fresh, protocol.Ended, text, protocol.Failed, nil, map[string]any{"stack": string(stack)}); werr != nil {
 		return e.progress.State, errors.Join(err, werr)
 	}

@@ -168,6 +168,28 @@ func (e *Engine) doubtUnverified(ctx context.Context, lost []drivers.AxisName) e
 	return nil
 }
 
+// Doubt is what an event of the kind doubted says.
+type Doubt struct {
+	Text   string
+	Detail map[string]any
+}
+
+// Unverified lists what is to be doubted when a run ends with its closing verification not made: the
+// readings since an axis whose position is only counted was last known to stand where it says.
+func (p *Progress) Unverified(axes []scan.Axis) (all []Doubt) {
+	for _, a := range axes {
+		z := p.zeros[a.Name]
+		if a.Verify == nil || p.lastTaken <= z.sequence {
+			continue
+		}
+		from, to := z.sequence+1, p.Next-1
+		why := fmt.Sprintf("the run ended before the zero of %s was verified again", a.Name)
+		all = append(all, Doubt{fmt.Sprintf("%s; readings %d to %d are doubtful", why, from, to),
+			map[string]any{"axes": []drivers.AxisName{a.Name}, "from_sequence": from, "to_sequence": to, "why": why}})
+	}
+	return all
+}
+
 // searchAgain finds the zero of an axis that slipped, or holds for somebody who may.
 func (e *Engine) searchAgain(ctx, op context.Context, a scan.Axis) error {
 	if !e.homing && !e.Bench.Unattended[a.Controller] {

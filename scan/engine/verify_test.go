@@ -149,3 +149,35 @@ func TestAZeroLostBeforeItWasVerifiedDoubtsWhatItCounted(t *testing.T) {
 		}
 	})
 }
+
+func TestARunThatEndsUnverifiedDoubtsWhatItCountedSince(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		n := counted(t, func(time.Duration) unit.Angle { return 0 })
+		done := make(chan protocol.State)
+		go func() {
+			state, _ := n.eng.Run(t.Context())
+			done <- state
+		}()
+		time.Sleep(12 * time.Second)
+		if _, err := n.eng.Stop(t.Context(), "mara"); err != nil {
+			t.Fatal(err)
+		}
+		if state := <-done; state != protocol.Stopped {
+			t.Fatalf("it ended %s; want stopped", state)
+		}
+		events := n.events(t)
+		last := events[len(events)-2]
+		if last.Kind != protocol.Doubted || !strings.Contains(last.Text, "ended before the zero of signal_arm was verified again") {
+			t.Fatalf("events %s, then %q; want the doubt before the end", kinds(events), last.Text)
+		}
+		zero := slices.IndexFunc(events, func(e protocol.Event) bool { return e.Kind == protocol.HomedEvent })
+		for _, e := range events[zero:] {
+			if e.Kind == protocol.HomedEvent {
+				zero = int(e.Sequence)
+			}
+		}
+		if from, to := numberIn(last.Detail, "from_sequence"), numberIn(last.Detail, "to_sequence"); from != zero+1 || to != int(last.Sequence)-1 {
+			t.Errorf("doubted %d to %d; want all since entry %d", from, to, zero)
+		}
+	})
+}
