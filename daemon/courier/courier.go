@@ -163,9 +163,7 @@ func (c *Courier) pass(ctx context.Context, more func(context.Context) bool) (ca
 		return 0, err
 	}
 	if last.Renew != nil { // what stands behind a hole would never be filled in front of it
-		if last.Sequence > 0 {
-			c.become(fmt.Errorf("stream %s: messages are missing: it is made anew and filled again from the logbook", protocol.Stream(c.bench)))
-		}
+		c.become(fmt.Errorf("stream %s: messages are missing: it is made anew and filled again from the logbook", protocol.Stream(c.bench)))
 		if err := last.Renew(ctx); err != nil {
 			return 0, fmt.Errorf("stream %s: messages are missing, and it cannot be made anew: %w", protocol.Stream(c.bench), err)
 		}

@@ -23,6 +23,9 @@ type StreamConfig struct {
 	// that grew empty by age cannot tell a restarted courier where it ended, and is filled again.
 	MaxAge time.Duration
 
+	// Own says that the server lives in this process, and that nobody but it keeps its files.
+	Own bool
+
 	// Duplicates is the broker's own window, 0 is 10 minutes. Nothing here relies on it.
 	Duplicates time.Duration
 }
@@ -37,6 +40,7 @@ const checkTime = 2 * time.Minute
 type Stream struct {
 	js   jetstream.JetStream
 	want jetstream.StreamConfig
+	own  bool
 
 	unchecked bool // what it holds is still to be read through
 }
@@ -48,7 +52,7 @@ func NewStream(conn *nats.Conn, c StreamConfig) (*Stream, error) {
 	if err != nil {
 		return nil, err
 	}
-	return &Stream{js: js, want: jetstream.StreamConfig{
+	return &Stream{js: js, own: c.Own, want: jetstream.StreamConfig{
 		Name:        protocol.Stream(c.Bench),
 		Description: "journal of bench " + c.Bench,
 		Subjects:    protocol.StreamSubjects(c.Bench),
@@ -85,6 +89,11 @@ func (s *Stream) Last(ctx context.Context) (Last, error) {
 	switch {
 	case errors.Is(err, jetstream.ErrStreamNotFound):
 		stream, err = s.js.CreateStream(ctx, s.want)
+		if err == nil && s.own { // one that lay there damaged: the server may count on from what it did not find
+			if err = s.renew(ctx); err == nil {
+				stream, err = s.js.Stream(ctx, s.want.Name)
+			}
+		}
 	case err == nil && !s.asWanted(stream.CachedInfo().Config):
 		stream, err = s.js.UpdateStream(ctx, s.want)
 	}
@@ -94,9 +103,6 @@ func (s *Stream) Last(ctx context.Context) (Last, error) {
 	state := stream.CachedInfo().State
 	end := Last{Sequence: state.LastSeq}
 	if state.Msgs == 0 {
-		if s.unchecked { // a server that finds nothing in damaged files may expect the next number all the same
-			end.Renew = s.renew
-		}
 		return end, nil
 	}
 	if state.LastSeq-state.FirstSeq+1 != state.Msgs {

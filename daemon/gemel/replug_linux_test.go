@@ -225,7 +225,17 @@ func newPlugged(t *testing.T, line string, more ...change) *plugged {
 // gate waits for the next gate that closes.
 func (s *plugged) gate() {
 	s.t.Helper()
+	over := false
+	defer func() {
+		if !over {
+			entries := entriesOf(s.t, s.data)
+			for _, e := range entries[max(0, len(entries)-5):] {
+				s.t.Logf("%.600s", e.Body)
+			}
+		}
+	}()
 	_, s.gates = s.ledger.await(s.t, s.gates, "a gate", func(r instruments.Record) bool { return r.Kind == instruments.GateClosed })
+	over = true
 }
 
 // latest skips what happened already.

@@ -263,7 +263,7 @@ func (s *session) carry(ctx context.Context) error {
 	if err != nil {
 		return err
 	}
-	stream, err := courier.NewStream(conn, courier.StreamConfig{Bench: s.file.Name})
+	stream, err := courier.NewStream(conn, courier.StreamConfig{Bench: s.file.Name, Own: true})
 	if err != nil {
 		return err
 	}
