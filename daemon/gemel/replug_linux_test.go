@@ -265,7 +265,7 @@ func TestACableThatIsPluggedInAgainIsFoundByItsPathAndAnotherInstrumentIsRefused
 	if *realAll {
 		times = 50
 	}
-	s := newPlugged(t, "counter", change{"device: simulated}", "device: simulated, answer_within: 200 ms, longest_answer: 400 ms}"})
+	s := newPlugged(t, "counter", change{"device: simulated}", "device: simulated, answer_within: 500 ms, longest_answer: 1 s}"})
 	long := strings.Replace(killRecipe, "times: 2", fmt.Sprint("times: ", 4+times), 1)
 	run := started(t, s.data, long, "plugged")
 	counter := filepath.Join(s.sim, "counter")
@@ -362,7 +362,7 @@ func TestADeadLineDoesNotKeepTheProcessorBusy(t *testing.T) {
 // tries that follow do not pile up.
 func TestALineThatTakesNoBytesHoldsNothingUp(t *testing.T) {
 	t.Parallel()
-	s := newPlugged(t, "counter", change{"device: simulated}", "device: simulated, answer_within: 200 ms, longest_answer: 400 ms}"})
+	s := newPlugged(t, "counter", change{"device: simulated}", "device: simulated, answer_within: 500 ms, longest_answer: 1 s}"})
 	long := strings.Replace(killRecipe, "times: 2", "times: 6", 1)
 	started(t, s.data, long, "deaf")
 	s.gate()
