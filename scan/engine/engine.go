@@ -6,6 +6,7 @@ import (
 	"errors"
 	"fmt"
 	"runtime/debug"
+	"strings"
 	"sync"
 	"time"
 
@@ -537,6 +538,9 @@ func (e *Engine) event(ctx context.Context, kind protocol.EventKind, text string
 	}
 	if detail == nil {
 		detail = map[string]any{}
+	}
+	if bad := withBad(e.progress.restBad); state == protocol.Holding && !strings.Contains(text, bad) {
+		text += bad // whatever a run says while it holds, it says this too
 	}
 	body := &protocol.Event{Kind: kind, Text: text, State: state, Causes: causes, Detail: detail}
 	if err := e.write(ctx, protocol.EventEntry, &body.Head, body, protocol.EventSchema); err != nil {

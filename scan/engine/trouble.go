@@ -360,6 +360,9 @@ func (e *Engine) waitOut(ctx context.Context) error {
 	if patience := e.patienceNow(); !p.holds(protocol.ByOperator) && e.now().Sub(e.waitsSince) > patience {
 		return e.end(ctx, protocol.Failed, fmt.Sprintf("failed: it did not mend within %s; it was %s", patience, p.Reason), nil)
 	}
+	if p.restBad != "" {
+		e.rest(ctx) // a blade that stuck may move by now
+	}
 	pause := time.Minute
 	switch {
 	case p.holds(protocol.ByGuard):
