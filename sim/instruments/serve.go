@@ -6,6 +6,7 @@ import (
 	"io"
 	"os"
 	"slices"
+	"strings"
 	"syscall"
 	"time"
 
@@ -216,6 +217,9 @@ func (a *actor) meet(s *spell, at time.Time, line string) {
 		return
 	}
 	s.met = true
+	if i := strings.IndexByte(line, '\n'); i >= 0 {
+		line = line[:i+1] // how many lines one read brings is the wire's affair, and no part of the night
+	}
 	a.w.record(Record{At: at, Device: a.name, Kind: Befell, Text: s.trouble.String(), Line: line})
 }
 
