@@ -53,7 +53,7 @@ func TestNight(t *testing.T) {
 	}
 	many, first := *nightsFlag, *seedFlag
 	if many == 0 {
-		if many = 250; testing.Short() || raced {
+		if many = 200; testing.Short() || raced {
 			many = 25
 		}
 	}
