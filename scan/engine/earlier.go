@@ -13,6 +13,9 @@ import (
 func (e *Engine) findEarlier(ctx context.Context) error {
 	if e.Replan != nil {
 		plan, err := e.Replan(ctx)
+		if ctx.Err() != nil {
+			return ctx.Err() // the end of the program decides nothing
+		}
 		if err != nil {
 			return e.end(ctx, protocol.Failed, "failed: the recipe cannot be run with the values that earlier results give: "+err.Error(), nil)
 		}

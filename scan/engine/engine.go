@@ -402,6 +402,9 @@ func (e *Engine) conclude(ctx context.Context) error {
 	}
 	e.rest(ctx) // it may take a while, and nothing moves meanwhile
 	objects, err := e.Conclude(ctx)
+	if ctx.Err() != nil {
+		return ctx.Err() // the end of the program decides nothing
+	}
 	if err != nil {
 		e.progress.concluded = true
 		return e.note(ctx, protocol.Trouble, "no result: "+err.Error(), nil)

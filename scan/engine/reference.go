@@ -104,6 +104,9 @@ func (e *Engine) judge(ctx context.Context) error {
 		return nil
 	}
 	verdict, err := e.Judge(ctx, f.set, f.baseline)
+	if ctx.Err() != nil {
+		return ctx.Err() // the end of the program decides nothing
+	}
 	if err != nil {
 		return e.note(ctx, protocol.Trouble, fmt.Sprintf("reference %d cannot be judged: %s", f.set, firstLine(err)), map[string]any{"reference": f.set, "compared_with": f.baseline})
 	}

@@ -27,6 +27,9 @@ func (e *Engine) refine(ctx context.Context) error {
 	default:
 		e.rest(ctx) // it may take a while, and nothing moves meanwhile
 		more, err := e.Refine(ctx, body.Refined)
+		if ctx.Err() != nil {
+			return ctx.Err() // the end of the program decides nothing
+		}
 		if err != nil {
 			body.Grounds = "not refined: " + firstLine(err)
 			break

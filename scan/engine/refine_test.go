@@ -196,3 +196,44 @@ func TestNobodyGoesToAnEmptyPoint(t *testing.T) {
 		}
 	})
 }
+
+func TestTheEndOfTheProgramDecidesNothing(t *testing.T) {
+	for name, arrange := range map[string]func(*Config, context.CancelFunc){
+		"while the plan is worked out again": func(c *Config, end context.CancelFunc) {
+			c.Plan.Earlier = []scan.Earlier{{Ask: scan.EarlierAsk{Kind: scan.Peak, Axis: "signal_arm"}, Otherwise: scan.Stop}}
+			c.Replan = func(ctx context.Context) (scan.Plan, error) { end(); return scan.Plan{}, ctx.Err() }
+		},
+		"while points are chosen": func(c *Config, end context.CancelFunc) {
+			c.Plan.Refine = &scan.Refine{AtMost: 5}
+			c.Refine = func(ctx context.Context, _ int) (Refinement, error) { end(); return Refinement{}, ctx.Err() }
+		},
+		"while the result is worked out": func(c *Config, end context.CancelFunc) {
+			c.Plan.Results = []scan.Result{{Kind: scan.Efficiency}}
+			c.Conclude = func(ctx context.Context) ([]json.RawMessage, error) { end(); return nil, ctx.Err() }
+		},
+	} {
+		synctest.Test(t, func(t *testing.T) {
+			ctx, end := context.WithCancel(t.Context())
+			n := newNight(t, func(c *Config) { arrange(c, end) })
+			if state, err := n.eng.Run(ctx); state != protocol.Holding || err != nil {
+				t.Errorf("%s: Run() = %s, %v; want a hold for the restart", name, state, err)
+			}
+			if got := kinds(n.events(t)); got != "began held" {
+				t.Errorf("%s: events %s; want nothing decided", name, got)
+			}
+			for _, p := range n.points(t) {
+				if p.Refined > 0 {
+					t.Errorf("%s: a refinement was written: %q", name, p.Grounds)
+				}
+			}
+		})
+	}
+	synctest.Test(t, func(t *testing.T) {
+		ctx, end := context.WithCancel(t.Context())
+		n := referenced(t, scan.Stop, never)
+		n.eng.Config.Judge = func(ctx context.Context, _, _ int) (Verdict, error) { end(); return Verdict{}, ctx.Err() }
+		if state, _ := n.eng.Run(ctx); state != protocol.Holding || kinds(n.events(t)) != "began held" {
+			t.Errorf("while a reference is judged: %s, events %s; want a hold and no verdict", state, kinds(n.events(t)))
+		}
+	})
+}
