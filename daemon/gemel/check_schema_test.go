@@ -292,7 +292,7 @@ func TestWhatTheReaderAcceptsIsValid(t *testing.T) {
 				t.Fatalf("accepted, but\n%v\n%s", err, text)
 			}
 		})
-		if accepted == 0 {
+		if accepted == 0 && !testing.Short() { // of the twenty of the short form all may be refused
 			t.Errorf("%s: none of %d changed files accepted; want some, or nothing is tested", name, tried)
 		}
 		t.Logf("%s: %d of %d changed files accepted, all valid", name, accepted, tried)
