@@ -30,7 +30,9 @@ func (c *serveCommand) Run(ctx context.Context, con *console) error {
 	}
 	defer s.close()
 	con.caution(s.file)
-	log.Info().Str("bench", s.file.Name).Str("url", s.broker.Contact().URL).Str("data", s.data).Msg("serving")
+	s.keeper.Serving = func() {
+		log.Info().Str("bench", s.file.Name).Str("url", s.broker.Contact().URL).Str("data", s.data).Msg("serving")
+	}
 	fated, done := s.fated(ctx)
 	defer done()
 	if err := s.keeper.Run(fated); err != nil {

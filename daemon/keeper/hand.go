@@ -258,20 +258,20 @@ func (k *Keeper) openHands() (closeHands func()) {
 	k.mu.Lock()
 	k.hands.serving = true
 	k.mu.Unlock()
-	return func() {
-		k.mu.Lock()
-		k.hands.serving, k.hands.session = false, nil
-		k.mu.Unlock()
-		k.refuseHands(503, "the daemon is ending; nothing was done")
-	}
+	return func() { refuseHands(k.closeSession(false), 503, "the daemon is ending; nothing was done") }
 }
 
-// refuseHands answers every order that waits.
-func (k *Keeper) refuseHands(code int, text string) {
+// closeSession ends the session, if there is one, and returns the orders that still waited for it:
+// what comes after belongs to another.
+func (k *Keeper) closeSession(serving bool) (waiting []*handOrder) {
 	k.mu.Lock()
-	waiting := k.hands.waiting
-	k.hands.waiting = nil
-	k.mu.Unlock()
+	defer k.mu.Unlock()
+	waiting = k.hands.waiting
+	k.hands = hands{serving: serving}
+	return waiting
+}
+
+func refuseHands(waiting []*handOrder, code int, text string) {
 	for _, o := range waiting {
 		o.answer(protocol.HandReply{}, protocol.Refuse(code, text))
 	}
@@ -347,10 +347,10 @@ func (w *handWork) loop(ctx context.Context) (why string, last *handOrder) {
 		reply, err := w.carryOut(ctx, o)
 		w.now = nil
 		w.touch()
-		o.answer(reply, err)
-		if !w.begun {
-			return "", nil
+		if !w.begun { // answered when the bench is free again, so that who asks next is not told of this session
+			return "", &handOrder{q: o.q, by: o.by, answer: func(protocol.HandReply, error) { o.answer(reply, err) }}
 		}
+		o.answer(reply, err)
 	}
 }
 
@@ -728,10 +728,7 @@ func (w *handWork) end(ctx context.Context, why string, last *handOrder, bug err
 		}
 		recorded = w.record(ctx, kind, why+how, map[string]any{"who": w.who(), handDetail: handEnds})
 	}
-	k := w.k
-	k.mu.Lock()
-	k.hands.session, k.hands.cancel = nil, nil
-	k.mu.Unlock()
+	waiting := w.k.closeSession(true)
 	if last != nil {
 		reply := w.hand.State()
 		reply.Act, reply.Session, reply.Text, reply.Recorded = last.q.Act, w.name(), why+how, recorded
@@ -741,8 +738,8 @@ func (w *handWork) end(ctx context.Context, why string, last *handOrder, bug err
 		}
 		last.answer(reply, err)
 	}
-	k.refuseHands(409, "no such session of hand work: it ended just now, and nothing more was done")
-	k.nudge() // a run may wait
+	refuseHands(waiting, 409, "no such session of hand work: it ended just now, and nothing more was done")
+	w.k.nudge() // a run may wait
 }
 
 // tellCutHand writes that hand work was cut short by the end of the program, if the journal says so.

@@ -325,6 +325,53 @@ func TestWhatIsWrongWithAnActIsToldAndNothingIsDone(t *testing.T) {
 	})
 }
 
+// Whoever was answered that a session is over, or was refused before it began, may ask anew at once.
+func TestAnAnswerThatEndsASessionLeavesNothingOfIt(t *testing.T) {
+	lend(t, nil, func(t *testing.T, l *lending) {
+		for range 200 {
+			if a := <-l.ask(protocol.HandRequest{Act: protocol.HandWhere, ExpiresAt: &protocol.Time{Time: time.Now()}}); code(a.err) != 408 {
+				t.Fatalf("a request that is late: %v; want 408", a.err)
+			}
+			if _, err := l.k.Stop(t.Context(), protocol.RunRequest{Run: protocol.BenchRun}); code(err) != 409 {
+				t.Fatalf("a stop with nobody there: %v; want 409", err)
+			}
+			l.do(protocol.HandRequest{Act: protocol.HandWhere})
+			l.do(protocol.HandRequest{Act: protocol.HandLeave})
+			l.session = ""
+		}
+	})
+}
+
+func TestHandWorkIsTakenOnceTheKeeperSaysThatItServes(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		serving := make(chan struct{})
+		k, _ := keeping(t, func(c *Config) {
+			c.Bench = &engine.Bench{Name: "skerry", Pace: 1, Simulated: true}
+			c.Serving = func() { close(serving) }
+		})
+		where := func(to chan<- error) {
+			k.Hand(t.Context(), protocol.HandRequest{Act: protocol.HandWhere, Who: "ann"}, func(_ protocol.HandReply, err error) { to <- err })
+		}
+		answers := make(chan error, 1)
+		where(answers)
+		if err := <-answers; code(err) != 503 {
+			t.Error("hand work was taken before anybody serves; want 503")
+		}
+		ctx, cancel := context.WithCancel(t.Context())
+		ended := make(chan error, 1)
+		go func() { ended <- k.Run(ctx) }()
+		<-serving
+		where(answers)
+		if err := <-answers; err != nil {
+			t.Errorf("right after the word: %v; want the bench", err)
+		}
+		cancel()
+		if err := <-ended; err != nil {
+			t.Errorf("Run() = %v; want nil", err)
+		}
+	})
+}
+
 func TestAnUnarmedBenchIsClosedAndLookedAtAndNothingElse(t *testing.T) {
 	armed := false
 	lend(t, func(c *Config) { c.Armed = func(time.Time) bool { return armed } }, func(t *testing.T, l *lending) {

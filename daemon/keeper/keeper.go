@@ -74,6 +74,8 @@ type Config struct {
 	MayHome bool
 	// Hand is what hand work has to know beside the bench.
 	Hand engine.HandFacts
+	// Serving is called by Run when every request is taken from then on; nil: nobody waits for that.
+	Serving func()
 	// Told hears of every event of a run once it is written, in the goroutine that wrote it; nil:
 	// nobody listens.
 	Told func(protocol.Event)
@@ -126,6 +128,9 @@ func (l lock) Unlock() { <-l }
 // asked for, until ctx ends. An error means that the logbook or this program is broken.
 func (k *Keeper) Run(ctx context.Context) error {
 	defer k.openHands()()
+	if k.Serving != nil {
+		k.Serving()
+	}
 	if bad := engine.Rest(ctx, k.Bench); bad != "" {
 		if err := k.benchEvent(ctx, protocol.Trouble, "at the start the rest state was not reached: "+bad, nil); err != nil && !errors.Is(err, logbook.ErrFull) {
 			return err

@@ -13,6 +13,7 @@ import (
 	"regexp"
 	"runtime/debug"
 	"strconv"
+	"strings"
 	"sync"
 	"time"
 
@@ -68,12 +69,18 @@ func Serve(ctx context.Context, conn *nats.Conn, keeper Keeper, c Config) error 
 	}
 	h := &handlers{ctx: context.WithoutCancel(ctx), keeper: keeper, panicked: c.Panicked}
 	defer h.end(service)
+	add := func(verb string, handle micro.Handler) error {
+		err := service.AddEndpoint(verb, handle, micro.WithEndpointSubject(protocol.DoSubject(c.Bench, verb)), micro.WithEndpointPendingLimits(pendingRequests, pendingBytes))
+		if err != nil {
+			return fmt.Errorf("remote: %s: %w", verb, err)
+		}
+		return nil
+	}
 	for verb, handle := range map[string]handler{
 		"start":    h.start,
 		"stop":     h.onRun(keeper.Stop),
 		"hold":     h.onRun(keeper.Hold),
 		"resume":   h.onRun(keeper.Resume),
-		"status":   h.status,
 		"queue":    h.queue,
 		"reorder":  h.reorder,
 		"withdraw": h.onRun(keeper.Withdraw),
@@ -81,19 +88,18 @@ func Serve(ctx context.Context, conn *nats.Conn, keeper Keeper, c Config) error 
 		"stop_after_point": h.onRun(keeper.StopAfterPoint),
 		"forecast":         h.forecast,
 	} {
-		err := service.AddEndpoint(verb, h.guarded(verb, handle),
-			micro.WithEndpointSubject(protocol.DoSubject(c.Bench, verb)),
-			micro.WithEndpointPendingLimits(pendingRequests, pendingBytes))
-		if err != nil {
-			return fmt.Errorf("remote: %s: %w", verb, err)
+		if err := add(verb, h.guarded(verb, handle)); err != nil {
+			return err
 		}
 	}
 	if hands, can := keeper.(Hands); can {
-		err := service.AddEndpoint("hand", h.hand(hands), micro.WithEndpointSubject(protocol.DoSubject(c.Bench, "hand")),
-			micro.WithEndpointPendingLimits(pendingRequests, pendingBytes))
-		if err != nil {
-			return fmt.Errorf("remote: hand: %w", err)
+		if err := add("hand", h.hand(hands)); err != nil {
+			return err
 		}
+	}
+	// The last one, and the broker keeps their order: where a status is answered, everything is.
+	if err := add("status", h.guarded("status", h.status)); err != nil {
+		return err
 	}
 	<-ctx.Done()
 	return nil
@@ -133,6 +139,9 @@ func (h *handlers) enter() bool {
 
 func (h *handlers) guarded(verb string, handle handler) micro.Handler {
 	return micro.HandlerFunc(func(r micro.Request) {
+		if !own(r.Reply()) {
+			return
+		}
 		if !h.enter() {
 			refuse(r, protocol.Refuse(503, "the daemon is ending; nothing was done"))
 			return
@@ -160,6 +169,13 @@ func (h *handlers) guarded(verb string, handle handler) micro.Handler {
 		// A requester that is gone is its own affair; the service counts the error.
 		_ = r.Respond(body)
 	})
+}
+
+// own says whether an answer may go to a reply subject. The service publishes with more rights than
+// who asks: an answer on a subject of the bench or of the server would be an entry of the journal, a
+// beat or a request that a watcher had it send. Such a request is not carried out either.
+func own(reply string) bool {
+	return !strings.HasPrefix(reply, "gemel.") && !strings.HasPrefix(reply, "$")
 }
 
 // refuse answers with the error headers and the findings.
