@@ -46,9 +46,10 @@ type Last struct {
 	Sequence uint64
 
 	// Renew is not nil when messages are missing between the stream's first and its last, by damage:
-	// the limits take from the front only. It makes the stream anew, empty. Message is then one that is
-	// still there, if any is.
-	Renew func(context.Context) error
+	// the limits take from the front only; or when the last is no courier's. It makes the stream anew,
+	// empty. Message is then one that is still there, if any is.
+	Renew   func(context.Context) error
+	Because string // of Renew: what is wrong
 }
 
 // Sink is a stream.
@@ -163,9 +164,9 @@ func (c *Courier) pass(ctx context.Context, more func(context.Context) bool) (ca
 		return 0, err
 	}
 	if last.Renew != nil { // what stands behind a hole would never be filled in front of it
-		c.become(fmt.Errorf("stream %s: messages are missing: it is made anew and filled again from the logbook", protocol.Stream(c.bench)))
+		c.become(fmt.Errorf("stream %s: %s: it is made anew and filled again from the logbook", protocol.Stream(c.bench), last.Because))
 		if err := last.Renew(ctx); err != nil {
-			return 0, fmt.Errorf("stream %s: messages are missing, and it cannot be made anew: %w", protocol.Stream(c.bench), err)
+			return 0, fmt.Errorf("stream %s: %s, and it cannot be made anew: %w", protocol.Stream(c.bench), last.Because, err)
 		}
 		last, cursor = Last{}, 0
 	}

@@ -106,14 +106,19 @@ func (s *Stream) Last(ctx context.Context) (Last, error) {
 		return end, nil
 	}
 	if state.LastSeq-state.FirstSeq+1 != state.Msgs {
-		end.Renew = s.renew
+		end.Renew, end.Because = s.renew, missing
 	}
 	m, err := stream.GetMsg(ctx, state.LastSeq)
-	if errors.Is(err, jetstream.ErrMsgNotFound) {
-		end.Renew = s.renew
-		if m, err = stream.GetMsg(ctx, state.FirstSeq); errors.Is(err, jetstream.ErrMsgNotFound) {
-			return end, nil // whose they were cannot be seen
-		}
+	switch {
+	case errors.Is(err, jetstream.ErrMsgNotFound):
+		end.Renew, end.Because = s.renew, missing
+		m, err = stream.GetMsg(ctx, state.FirstSeq)
+	case err == nil && s.stray(m):
+		end.Renew, end.Because = s.renew, "it ends in a message that is no entry"
+		m, err = stream.GetMsg(ctx, state.FirstSeq)
+	}
+	if errors.Is(err, jetstream.ErrMsgNotFound) || err == nil && s.stray(m) {
+		return end, nil // whose they were cannot be seen
 	}
 	if err != nil {
 		return Last{}, fmt.Errorf("message %d: %w", state.LastSeq, err)
@@ -125,10 +130,18 @@ func (s *Stream) Last(ctx context.Context) (Last, error) {
 			return Last{}, fmt.Errorf("reading it through: %w", err)
 		}
 		if s.unchecked = !whole; !whole {
-			end.Renew = s.renew
+			end.Renew, end.Because = s.renew, missing
 		}
 	}
 	return end, nil
+}
+
+const missing = "messages are missing"
+
+// stray says whether a message was sent by nobody. On a server of our own only the daemon may publish
+// here, but the server itself sends its answers wherever who asks wants them.
+func (s *Stream) stray(m *jetstream.RawStreamMsg) bool {
+	return s.own && m.Header.Get(nats.MsgIdHdr) == ""
 }
 
 // whole says whether every message from the first to the last can be read.

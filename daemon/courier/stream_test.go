@@ -6,6 +6,7 @@ import (
 	"os"
 	"path/filepath"
 	"slices"
+	"strings"
 	"sync"
 	"testing"
 	"time"
@@ -241,6 +242,45 @@ func TestAStreamWithOtherSettingsIsChangedAndKeepsItsMessages(t *testing.T) {
 	}
 	if got, want := p.ids(), j.ids(); !slices.Equal(got, want) {
 		t.Errorf("the stream holds %v; want %v", got, want)
+	}
+}
+
+// A reader may name any subject for an answer of the server's, also one that the stream takes.
+func TestAStreamOfOurOwnThatGotAnAnswerOfTheServersIsFilledAgain(t *testing.T) {
+	for _, before := range []int64{0, 3} {
+		p := newPlace(t)
+		own := courier.StreamConfig{Own: true}
+		j := &journal{}
+		if before > 0 {
+			j.add(entries("r1", 1, before)...)
+		}
+		finish(t, j, p.stream(own))
+		if err := p.conn.PublishRequest("$JS.API.INFO", "gemel.skerry.event.r1", nil); err != nil {
+			t.Fatal(err)
+		}
+		for in := uint64(before); in == uint64(before); { // the answer is on its way
+			stream, err := p.js().Stream(t.Context(), protocol.Stream(bench))
+			if err != nil {
+				t.Fatal(err)
+			}
+			in = stream.CachedInfo().State.Msgs
+		}
+		var said []string
+		c := courier.New(bench, j, p.stream(own), func(err error) {
+			if err != nil {
+				said = append(said, err.Error())
+			}
+		})
+		j.add(entries("r1", before+1, before+2)...)
+		if err := c.Finish(t.Context()); err != nil {
+			t.Errorf("Finish: %v; want nil", err)
+		}
+		if got, want := p.ids(), j.ids(); !slices.Equal(got, want) {
+			t.Errorf("the stream holds %q; want %v", got, want)
+		}
+		if len(said) != 1 || !strings.Contains(said[0], "no entry: it is made anew") {
+			t.Errorf("the courier said %q; want one word on the stray message", said)
+		}
 	}
 }
 

@@ -22,6 +22,9 @@ type Hands interface {
 // hand is the endpoint of hand work.
 func (h *handlers) hand(keeper Hands) micro.Handler {
 	return micro.HandlerFunc(func(r micro.Request) {
+		if !own(r.Reply()) {
+			return
+		}
 		if !h.enter() {
 			refuse(r, protocol.Refuse(503, "the daemon is ending; nothing was done"))
 			return
