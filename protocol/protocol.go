@@ -124,11 +124,12 @@ type Reading struct {
 	Sensors   []Sensor     `json:"sensors"`
 	Counts    []Count      `json:"counts"` // summed over the slices; a tag channel shows its last value
 	Slices    []Slice      `json:"slices"`
-	Scatter   *Scatter     `json:"scatter"`             // null with fewer than two slices
-	Glance    *Slice       `json:"glance"`              // the short look at the light before the dwell; not in the counts
-	LostGates int          `json:"lost_gates"`          // gates that were opened in this dwell and whose counts are not here
-	Attempt   int          `json:"attempt"`             // 1, or more when it was taken again
-	Reference *ReferenceOf `json:"reference,omitempty"` // of the kind reference: which of the set's readings it is
+	Scatter   *Scatter     `json:"scatter"`               // null with fewer than two slices
+	Glance    *Slice       `json:"glance"`                // the short look at the light before the dwell; not in the counts
+	LostGates int          `json:"lost_gates"`            // gates that were opened in this dwell and whose counts are not here
+	Attempt   int          `json:"attempt"`               // 1, or more when it was taken again
+	Reference *ReferenceOf `json:"reference,omitempty"`   // of the kind reference: which of the set's readings it is
+	Tag       string       `json:"tag_channel,omitempty"` // the channel that numbers gates, and whose counts are no amount; empty: none, or not told
 	Simulated *int         `json:"simulated"`
 }
 

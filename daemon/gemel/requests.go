@@ -380,6 +380,10 @@ func tell(con *console, e protocol.Entry) error {
 			fmt.Fprintf(con.out, " %s %s deg", a.Axis, a.After.Fixed(3))
 		}
 		for _, n := range r.Counts {
+			if n.Channel == r.Tag {
+				fmt.Fprintf(con.out, " gate %d by %s", n.Counts, n.Channel) // a number, and no amount
+				continue
+			}
 			fmt.Fprintf(con.out, " %s %d", n.Channel, n.Counts)
 			if s := r.Gate.Duration().Seconds(); s > 0 {
 				fmt.Fprintf(con.out, " (%.4g /s)", float64(n.Counts)/s)

@@ -131,6 +131,20 @@ func TestFollowSaysAResultInALine(t *testing.T) {
 	}
 }
 
+func TestFollowTakesTheNumberOfAGateForNoCount(t *testing.T) {
+	r := protocol.Reading{Head: protocol.Head{Run: "r1", Sequence: 7}, Kind: protocol.Dark, Accepted: true, Gate: protocol.Seconds(2 * time.Second),
+		Counts: []protocol.Count{{Channel: "signal", Counts: 500}, {Channel: "gates", Counts: 4711}}, Tag: "gates"}
+	body, err := json.Marshal(r)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var out strings.Builder
+	err = tell(&console{out: &out}, protocol.Entry{Kind: protocol.ReadingEntry, Body: body})
+	if want := "dark: signal 500 (250 /s) gate 4711 by gates in 2 s\n"; err != nil || !strings.HasSuffix(out.String(), want) {
+		t.Errorf("%q, %v; want %q", out.String(), err, want)
+	}
+}
+
 func TestActsWithoutADaemonAreTakenInAScriptToo(t *testing.T) {
 	dir := t.TempDir()
 	data := filepath.Join(dir, "data")

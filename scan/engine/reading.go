@@ -80,7 +80,7 @@ func (e *Engine) protectNow(ctx context.Context) {
 // take moves, proves, lights, counts and judges. The reading is nil as long as no gate was
 // opened. With an error it is what was counted until then, to be set aside.
 func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
-	r := &protocol.Reading{Kind: protocol.ReadingKind(t.kind), Simulated: e.simulated, Attempt: e.progress.attempts[t.key()] + 1,
+	r := &protocol.Reading{Kind: protocol.ReadingKind(t.kind), Simulated: e.simulated, Tag: string(e.Bench.Tag), Attempt: e.progress.attempts[t.key()] + 1,
 		Settings: []protocol.Setting{}, Sensors: []protocol.Sensor{}, Counts: []protocol.Count{}, Slices: []protocol.Slice{}, Angles: []protocol.Angle{}}
 	point := e.progress.point(e.progress.nearest().Point)
 	targets := point.Axes

@@ -440,7 +440,7 @@ func (e *Engine) lookAtLight(ctx context.Context) error {
 // an instrument, or what judge says; err is the logbook's.
 func (e *Engine) check(ctx context.Context, pump bool, judge func(*protocol.Reading) error) (against error, interrupted bool, err error) {
 	op, end := e.operation(ctx)
-	r := &protocol.Reading{Kind: protocol.Check, Simulated: e.simulated, Attempt: 1, StartedAt: protocol.Time{Time: e.now()},
+	r := &protocol.Reading{Kind: protocol.Check, Simulated: e.simulated, Tag: string(e.Bench.Tag), Attempt: 1, StartedAt: protocol.Time{Time: e.now()},
 		Settings: []protocol.Setting{}, Sensors: []protocol.Sensor{}, Counts: []protocol.Count{}, Slices: []protocol.Slice{}, Angles: []protocol.Angle{}}
 	if pump {
 		var at map[drivers.AxisName]unit.Angle
