@@ -8,6 +8,7 @@ import (
 	"math"
 	"os"
 	"path/filepath"
+	"reflect"
 	"strconv"
 	"strings"
 	"testing"
@@ -87,11 +88,37 @@ func TestTheDemoFindsTheRingAndWritesEveryReadingOnce(t *testing.T) {
 		}
 	}
 	eachOnce(t, data, summary.Run, summary.Accepted)
+	sameMorning(t, p.out.String(), must(t, "report", "--data", data, "--json"))
 	exported(t, must(t, "export", "--data", data), summary.Accepted)
 	t.Log(strings.TrimSpace(must(t, "check", "--data", data)))
 	_, errOut, code := gemel(t, "status", "--data", data)
 	if code != exitFailed || !strings.Contains(errOut, "no daemon is running here") || !strings.Contains(errOut, data) {
 		t.Errorf("status: exit code %d, %q; want 1 and that no daemon runs there", code, errOut)
+	}
+}
+
+// sameMorning compares what a run and a later report tell of its results and its night.
+func sameMorning(t *testing.T, run, report string) {
+	t.Helper()
+	type morning struct {
+		Results []json.RawMessage `json:"results"`
+		Night   json.RawMessage   `json:"night"`
+	}
+	var told [2]morning
+	for i, text := range []string{run, report} {
+		if err := json.Unmarshal([]byte(text), &told[i]); err != nil {
+			t.Fatal(err)
+		}
+		again, err := json.Marshal(told[i]) // the one is indented
+		if err != nil {
+			t.Fatal(err)
+		}
+		if err := json.Unmarshal(again, &told[i]); err != nil {
+			t.Fatal(err)
+		}
+	}
+	if len(told[0].Results) == 0 || !strings.Contains(string(told[0].Night), `"readings_accepted"`) || !reflect.DeepEqual(told[0], told[1]) {
+		t.Errorf("the run tells %s\nand the report %s", told[0], told[1])
 	}
 }
 

@@ -90,7 +90,7 @@ func (c *console) results(all []estimate.Result, night report.Night, asJSON bool
 		if _, err := c.out.Write(text); err != nil {
 			return err
 		}
-	} else if _, err := fmt.Fprint(c.out, report.Text(all)+"\n"+night.Text()); err != nil {
+	} else if _, err := fmt.Fprint(c.out, report.Morning(all, night)); err != nil {
 		return err
 	}
 	for _, r := range all {

@@ -79,12 +79,16 @@ func (c *runCommand) run(ctx context.Context, con *console) error {
 	if pairs != "" {
 		summary.findMost(pairs)
 	}
+	unsaid := summary.takeMorning(context.WithoutCancel(ctx), s.book)
 	if c.JSON {
 		if err := json.NewEncoder(con.out).Encode(summary); err != nil {
 			return err
 		}
-	} else if err := con.tell(context.WithoutCancel(ctx), s, summary, pairs); err != nil {
+	} else if err := con.tell(summary, pairs); err != nil {
 		return err
+	}
+	if unsaid != nil {
+		return unsaid // after what can be said
 	}
 	if state != protocol.Finished {
 		return errNotFinished
@@ -133,19 +137,15 @@ func devices(b *engine.Bench) []drivers.Device {
 	return append(all, b.Counter)
 }
 
-// tell prints the table, and under it the results that the recipe asks for.
-func (c *console) tell(ctx context.Context, s *session, sum *summary, pairs string) error {
+// tell prints the table, and under it what gemel report prints.
+func (c *console) tell(sum *summary, pairs string) error {
 	if err := sum.print(c.out, pairs); err != nil {
 		return err
 	}
-	all, err := report.All(ctx, s.book, sum.Run, report.Options{})
-	if errors.Is(err, report.ErrNoResult) {
+	if sum.Night == nil {
 		return nil
 	}
-	if err != nil {
-		return err
-	}
-	_, err = fmt.Fprint(c.out, "\n"+report.Text(all))
+	_, err := fmt.Fprint(c.out, "\n"+report.Morning(sum.Results, *sum.Night))
 	return err
 }
 

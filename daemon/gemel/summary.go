@@ -3,6 +3,7 @@ package main
 import (
 	"cmp"
 	"context"
+	"errors"
 	"fmt"
 	"io"
 	"slices"
@@ -10,8 +11,10 @@ import (
 	"text/tabwriter"
 
 	"gemel/daemon/logbook"
+	"gemel/daemon/report"
 	"gemel/protocol"
 	"gemel/protocol/unit"
+	"gemel/scan/estimate"
 )
 
 // summary is a run at a glance: what was counted at each point, sums over the accepted readings.
@@ -26,8 +29,12 @@ type summary struct {
 	Points    []pointRow     `json:"points"`
 	Dark      *pointRow      `json:"dark"`
 	Most      *pointRow      `json:"most_coincident"` // null without a coincidence channel
-	axes      []string
-	channels  []string
+	// As gemel report gives them; no results where the recipe asks for none.
+	Results []estimate.Result `json:"results"`
+	Night   *report.Night     `json:"night"`
+
+	axes     []string
+	channels []string
 }
 
 type pointRow struct {
@@ -89,6 +96,20 @@ func summarise(ctx context.Context, book *logbook.Book, run protocol.RunID) (*su
 	}
 	slices.SortFunc(s.Points, func(a, b pointRow) int { return cmp.Compare(*a.Point, *b.Point) })
 	return s, nil
+}
+
+// takeMorning works out what gemel report tells of the run.
+func (s *summary) takeMorning(ctx context.Context, book *logbook.Book) error {
+	all, err := report.All(ctx, book, s.Run, report.Options{})
+	if err != nil && !errors.Is(err, report.ErrNoResult) {
+		return err
+	}
+	night, err := report.NightOf(ctx, book, s.Run)
+	if err != nil {
+		return err
+	}
+	s.Results, s.Night = append([]estimate.Result{}, all...), &night
+	return nil
 }
 
 func newRow(point *int) *pointRow {

@@ -17,6 +17,14 @@ func Text(all []estimate.Result) string {
 	return strings.Join(parts, "\n"+strings.Repeat("- ", 36)+"\n\n")
 }
 
+// Morning is what a person reads of a run: its results, and what happened in its night.
+func Morning(all []estimate.Result, night Night) string {
+	if len(all) == 0 {
+		return night.Text()
+	}
+	return Text(all) + "\n" + night.Text()
+}
+
 // JSON is one object: the first result's keys, and under results the list of all, in the recipe's
 // order, the first included. Who asks for one number reads it as ever; who asks for several reads the
 // list.
