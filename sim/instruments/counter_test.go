@@ -261,6 +261,28 @@ func TestLedgerIsInOrderAndOnPaper(t *testing.T) {
 	})
 }
 
+func TestALedgerThatForgetsIsOnPaperAlone(t *testing.T) {
+	bubble(t, func(t *testing.T) {
+		var kept, paper bytes.Buffer
+		for _, l := range []*instruments.Ledger{instruments.NewLedger(&kept), instruments.WriteOnly(&paper)} {
+			w, err := instruments.NewWorld(instruments.WorldConfig{Seed: 3, Pace: 10, Model: model(t), Still: still, Ledger: l})
+			if err != nil {
+				t.Fatal(err)
+			}
+			c := plug(t, t.Context(), counter(t, w, nil))
+			c.count(time.Second)
+			w.Settle()
+			if forgets, n := paper.Len() > 0, len(l.Records()); forgets != (n == 0) {
+				t.Errorf("%d records are kept; want none of the one that forgets alone", n)
+			}
+			c.hangUp()
+		}
+		if a, b := strings.Count(kept.String(), "\n"), strings.Count(paper.String(), "\n"); a == 0 || a != b {
+			t.Errorf("the one that forgets wrote %d lines; want %d, as the other did", b, a)
+		}
+	})
+}
+
 func TestCounterIntegratesRatesAlongAMotion(t *testing.T) {
 	bubble(t, func(t *testing.T) {
 		w := world(t, 1, "")

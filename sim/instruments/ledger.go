@@ -113,6 +113,7 @@ type LightTruth struct {
 type Ledger struct {
 	mu      sync.Mutex
 	records []Record
+	forgets bool
 	out     *json.Encoder
 	err     error
 }
@@ -127,6 +128,14 @@ func NewLedger(out io.Writer) *Ledger {
 	return l
 }
 
+// WriteOnly returns a ledger that keeps nothing, for worlds that may last for months: each record is
+// written to out, if that is not nil, and forgotten. Records finds none.
+func WriteOnly(out io.Writer) *Ledger {
+	l := NewLedger(out)
+	l.forgets = true
+	return l
+}
+
 func (l *Ledger) add(r Record) {
 	r.At = r.At.Round(0) // what is written reads back the same
 	if r.Gate != nil {
@@ -136,7 +145,9 @@ func (l *Ledger) add(r Record) {
 	}
 	l.mu.Lock()
 	defer l.mu.Unlock()
-	l.records = append(l.records, r)
+	if !l.forgets {
+		l.records = append(l.records, r)
+	}
 	if l.out != nil && l.err == nil {
 		l.err = l.out.Encode(r)
 	}
