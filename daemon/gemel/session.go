@@ -133,7 +133,7 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 			return nil, err
 		}
 		s.cleanup = append(s.cleanup, func() { _ = os.RemoveAll(folder) })
-		if options.Virtual, err = bench.NewVirtual(s.file, bench.VirtualOptions{Folder: folder, Ledger: instruments.NewLedger(nil), Troubles: trouble.List{}}); err != nil {
+		if options.Virtual, err = bench.NewVirtual(s.file, bench.VirtualOptions{Folder: folder, Ledger: instruments.WriteOnly(nil), Troubles: trouble.List{}}); err != nil {
 			return nil, err
 		}
 	}

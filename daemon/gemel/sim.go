@@ -58,7 +58,7 @@ func (c *simCommand) Run(ctx context.Context, con *console) (err error) {
 		defer func() { err = errors.Join(err, file.Close()) }()
 		out = file
 	}
-	ledger := instruments.NewLedger(out)
+	ledger := instruments.WriteOnly(out)
 	v, err := bench.NewVirtual(f, bench.VirtualOptions{Troubles: list, Ledger: ledger, Folder: folder})
 	if err != nil {
 		return err
