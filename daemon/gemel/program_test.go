@@ -321,7 +321,7 @@ func moved(records []instruments.Record) []string {
 	var all []string
 	for _, r := range records {
 		switch r.Kind {
-		case instruments.MoveStarted, instruments.HomeStarted, instruments.GateOpened, instruments.BladeOpened:
+		case instruments.MoveStarted, instruments.HomeStarted, instruments.MarkStarted, instruments.GateOpened, instruments.BladeOpened:
 			all = append(all, fmt.Sprintf("%s %s", r.Device, r.Kind))
 		}
 	}

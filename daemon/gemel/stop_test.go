@@ -25,6 +25,13 @@ var stopAll = flag.Bool("stop.all", false, "stop in every phase in every way, on
 // stopWithin is what is promised for every phase: until the stop bytes are at the instruments.
 const stopWithin = time.Second
 
+// restWithin is until it is answered, with the rest state reached and all of it written; restAtMost
+// the same where a line is out of step, and the engine's own bound for a rest state with the way to it.
+const (
+	restWithin = 2 * time.Second
+	restAtMost = 15 * time.Second
+)
+
 // phase is a place in a run's life at which somebody wants it to stop.
 type phase struct {
 	name     string
@@ -43,6 +50,45 @@ title: Far apart
 sweep: [{axis: signal_arm, from: 2 deg, to: 11 deg, step: 9 deg}]
 dwell: {time: 40 s, slice: 20 s}
 `
+
+const refinedRecipe = "title: Refined\nsweep:\n  - {axis: signal_arm, at: 2.864 deg}\n  - {axis: idler_arm, around: 2.864 deg, span: 0.8 deg, step: 0.2 deg}\ndwell: {time: 1 s, slice: 500 ms}\nrefine: {along: idler_arm, of: pairs, around: maximum, span: 0.1 deg, step: 0.05 deg, at_most: 4 points, within: 20 min}\n"
+
+const withBackground = farRecipe + "background: {turn: pump_waveplate, by: 45 deg, every: 30 min, dwell: 40 s, also: [start]}\n"
+
+func plateTurns(r instruments.Record) bool {
+	return r.Device == "plate" && r.Kind == instruments.MoveStarted
+}
+
+func wantRefined(t *testing.T, data string) {
+	t.Helper()
+	refined := func(e protocol.Numbered) bool {
+		var points protocol.Points
+		return e.Kind == protocol.PointEntry && json.Unmarshal(e.Body, &points) == nil && points.Refined > 0
+	}
+	if !slices.ContainsFunc(entriesOf(t, data), refined) {
+		t.Error("no refinement was decided")
+	}
+}
+
+// holds waits until the run holds for a cause.
+func holds(cause protocol.Cause) func(*testing.T, *truth, string) {
+	return func(t *testing.T, l *truth, data string) {
+		held := func() bool {
+			book, err := logbook.OpenReadOnly(filepath.Join(data, "logbook.db"))
+			if err != nil {
+				return false // not made yet
+			}
+			defer book.Close()
+			rows, err := book.Runs(t.Context())
+			return err == nil && len(rows) == 1 && slices.Contains(rows[0].Causes, cause)
+		}
+		for deadline := time.Now().Add(patience); !held(); <-time.After(20 * time.Millisecond) {
+			if time.Now().After(deadline) {
+				t.Fatalf("the run does not hold for %s within %s", cause, patience)
+			}
+		}
+	}
+}
 
 func gateIsLong(r instruments.Record) bool {
 	return r.Kind == instruments.GateOpened && r.Gate.SetS > 1
@@ -79,6 +125,63 @@ func phases() []phase {
 		},
 	}}
 	all = append(all, phase{
+		name: "during a dark", recipe: farRecipe + "dark: {every: 30 min, dwell: 40 s, also: [start]}\n",
+		reach: func(t *testing.T, l *truth, _ string) {
+			l.await(t, 0, "a dark's gate", gateIsLong)
+			for _, r := range l.all(t) {
+				if r.Device == "shutter" && r.Kind == instruments.BladeStarted && r.Text == "open" {
+					t.Error("the pump was opened before the first long gate; want a dark there")
+				}
+			}
+		},
+	}, phase{
+		name: "while the waveplate turns for a background", recipe: withBackground,
+		bench: []change{{`speed: 2000 deg/s\n    acceleration: 200000 deg/s2\n    tolerance: 0.01 deg`, "speed: 1 deg/s\n    acceleration: 200 deg/s2\n    tolerance: 0.01 deg"}},
+		reach: func(t *testing.T, l *truth, _ string) { l.await(t, 0, "the plate's turn", plateTurns) },
+	}, phase{
+		name: "during a background", recipe: withBackground, rare: true,
+		reach: func(t *testing.T, l *truth, _ string) {
+			_, n := l.await(t, 0, "the plate's turn", plateTurns)
+			l.await(t, n, "a background's gate", gateIsLong)
+		},
+	}, phase{
+		name: "while a zero is verified", recipe: farRecipe,
+		bench: []change{
+			{`speed: 2000 deg/s$`, "speed: 1 deg/s"},
+			{`error: 0.004 deg\n    home: \{unattended: true, order: 1,`, "error: 0.004 deg\n    verify_home: {tolerance: 0.02 deg}\n    home: {unattended: true, order: 1,"},
+		},
+		reach: func(t *testing.T, l *truth, _ string) {
+			l.await(t, 0, "a search for a mark", func(r instruments.Record) bool { return r.Kind == instruments.MarkStarted })
+			for _, r := range l.all(t) {
+				if r.Kind == instruments.MarkFound {
+					t.Error("the mark was found already; want the stop to meet its search")
+				}
+			}
+		},
+	}, phase{
+		name: "while a person is waited for, because of a lost zero", recipe: farRecipe,
+		bench: []change{{`home: \{unattended: true, `, "home: {"}, {`signal_arm: \{play`, "signal_arm: {homed: false, play"}},
+		reach: holds("trouble"),
+	}, phase{
+		name: "while a guard is waited for", rare: true,
+		recipe: farRecipe + "guards:\n  - {watch: pump_power, within: [100 mW, 200 mW], otherwise: hold, give_up_after: 30 min}\n",
+		reach:  holds("guard"),
+	}, phase{
+		name: "on the way to a point that a refinement added", rare: true,
+		bench:  []change{{`speed: 2000 deg/s$`, "speed: 0.2 deg/s"}},
+		recipe: refinedRecipe,
+		reach: func(t *testing.T, l *truth, data string) {
+			n := 0
+			for range 10 { // two slices of five points
+				_, n = l.await(t, n, "a slice", func(r instruments.Record) bool { return r.Kind == instruments.GateClosed && r.Gate.SetS > 0.3 })
+			}
+			l.await(t, n, "the way to the next point", func(r instruments.Record) bool {
+				s, is := r.Axes["idler_arm"]
+				return r.Kind == instruments.MoveStarted && is && s.FromDeg != s.ToDeg
+			})
+			wantRefined(t, data)
+		},
+	}, phase{
 		name: "during a reference", rare: true,
 		recipe: "title: Referred\nsweep: [{axis: signal_arm, at: 2.864 deg}, {axis: idler_arm, from: 2 deg, to: 3 deg, step: 1 deg}]\ndwell: 20 ms\nreference: {axes: [idler_arm], on: [top], at: {signal_arm: 2.864 deg, idler_arm: 2.864 deg}, every: 1 point, dwell: {time: 40 s, slice: 20 s}}\n",
 		reach: func(t *testing.T, l *truth, _ string) {
@@ -86,20 +189,14 @@ func phases() []phase {
 		},
 	}, phase{
 		name: "in a refinement", rare: true,
-		recipe: "title: Refined\nsweep:\n  - {axis: signal_arm, at: 2.864 deg}\n  - {axis: idler_arm, around: 2.864 deg, span: 0.8 deg, step: 0.2 deg}\ndwell: {time: 1 s, slice: 500 ms}\nrefine: {along: idler_arm, of: pairs, around: maximum, span: 0.1 deg, step: 0.05 deg, at_most: 4 points, within: 20 min}\n",
+		recipe: refinedRecipe,
 		reach: func(t *testing.T, l *truth, data string) {
 			n := 0
 			light := func(r instruments.Record) bool { return r.Kind == instruments.GateOpened && r.Gate.SetS > 0.3 }
 			for range 11 { // two slices of five points, and one of the first that was added
 				_, n = l.await(t, n, "a point", light)
 			}
-			refined := func(e protocol.Numbered) bool {
-				var points protocol.Points
-				return e.Kind == protocol.PointEntry && json.Unmarshal(e.Body, &points) == nil && points.Refined > 0
-			}
-			if !slices.ContainsFunc(entriesOf(t, data), refined) {
-				t.Error("no refinement was decided")
-			}
+			wantRefined(t, data)
 		},
 	}, phase{
 		name: "during a warm-up", rare: true,
@@ -153,6 +250,7 @@ type way struct {
 type stopping struct {
 	bench, recipe, data, lines string
 	p                          *program
+	acked                      time.Time // when the request was answered; zero: the program's end is the answer
 }
 
 func (s *stopping) serve(t *testing.T) {
@@ -199,10 +297,11 @@ var ways = []way{{
 		}
 		asked := time.Now()
 		r, err := cl.Stop(within(t), protocol.RunRequest{Run: status.Run, Who: "the test"})
+		s.acked = time.Now()
 		if err != nil || r.State != protocol.Stopped || !r.Recorded {
 			t.Errorf("stop was answered %+v, %v; want stopped and recorded", r, err)
 		}
-		t.Logf("answered after %s", time.Since(asked).Round(time.Millisecond))
+		t.Logf("answered after %s", s.acked.Sub(asked).Round(time.Millisecond))
 		return asked
 	},
 	end: func(t *testing.T, s *stopping) {
@@ -210,8 +309,8 @@ var ways = []way{{
 		if code := s.p.wait(); code != exitDone {
 			t.Errorf("serve: exit code %d after SIGTERM; want 0\n%s", code, s.p.err)
 		}
-		if row := s.row(t); row.State != protocol.Stopped {
-			t.Errorf("the run is %s (%s); want stopped", row.State, row.Reason)
+		if row := s.row(t); row.State != protocol.Stopped || !strings.Contains(row.Reason, "the test") {
+			t.Errorf("the run is %s (%s); want stopped, and by whom", row.State, row.Reason)
 		}
 	},
 }, {
@@ -221,7 +320,7 @@ var ways = []way{{
 		if code := s.p.wait(); code != exitDone {
 			t.Errorf("serve: exit code %d; want 0\n%s", code, s.p.err)
 		}
-		if row := s.row(t); row.State != protocol.Holding || len(row.Causes) == 0 || row.Causes[len(row.Causes)-1] != protocol.ByRestart {
+		if row := s.row(t); row.State != protocol.Holding || len(row.Causes) == 0 || row.Causes[len(row.Causes)-1] != protocol.ByRestart || row.Reason == "" {
 			t.Errorf("the run is %s %v (%s); want it holding for the restart", row.State, row.Causes, row.Reason)
 		}
 	},
@@ -235,9 +334,10 @@ var ways = []way{{
 		if code := s.p.wait(); code != exitFailed {
 			t.Errorf("run: exit code %d; want 1: it did not finish\n%s", code, s.p.err)
 		}
-		if row := s.row(t); row.State != protocol.Stopped {
-			t.Errorf("the run is %s (%s); want stopped", row.State, row.Reason)
+		if row := s.row(t); row.State != protocol.Stopped || row.Reason == "" {
+			t.Errorf("the run is %s (%s); want stopped, and why", row.State, row.Reason)
 		}
+		t.Log(s.row(t).Reason)
 	},
 }}
 
@@ -274,6 +374,33 @@ func stop(t *testing.T, ph phase, w way) {
 		want = []string{map[string]string{"rotary": "rotary", "counter": "gate"}[ph.outOfStep]}
 	}
 	wantStopped(t, ledger.all(t), before, asked, want)
+	if s.acked.IsZero() {
+		s.acked = s.p.endedAt
+	}
+	bound := restWithin
+	if ph.outOfStep != "" {
+		bound = restAtMost
+	}
+	wantRest(t, ledger.all(t), asked, s.acked, bound)
+}
+
+// wantRest reads from the instruments' ledger that the rest state was there when the stop was
+// answered, within its bound, and that nothing came after.
+func wantRest(t *testing.T, records []instruments.Record, asked, acked time.Time, bound time.Duration) {
+	t.Helper()
+	if took := acked.Sub(asked); took > bound {
+		t.Errorf("the stop was answered after %s; want it within %s", took.Round(time.Millisecond), bound)
+	}
+	n := 0
+	for n < len(records) && !records[n].At.After(acked) {
+		n++
+	}
+	isAtRest(t, records[:n])
+	for _, r := range records[n:] {
+		if lit := r.Kind == instruments.BladeStarted && r.Text == "open"; lit || len(moved([]instruments.Record{r})) > 0 {
+			t.Errorf("%s %s %s came %s after the answer to the stop", r.Device, r.Kind, r.Text, r.At.Sub(acked).Round(time.Millisecond))
+		}
+	}
 }
 
 // wantStopped reads from the instruments' ledger what a stop did, and when.
