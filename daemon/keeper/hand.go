@@ -344,11 +344,15 @@ func (w *handWork) loop(ctx context.Context) (why string, last *handOrder) {
 			return fmt.Sprintf("%s took the hand off the bench", w.who()), o
 		}
 		w.now = o
+		first := !w.begun
 		reply, err := w.carryOut(ctx, o)
 		w.now = nil
 		w.touch()
 		if !w.begun { // answered when the bench is free again, so that who asks next is not told of this session
 			return "", &handOrder{q: o.q, by: o.by, answer: func(protocol.HandReply, error) { o.answer(reply, err) }}
+		}
+		if first && err != nil && !w.awaited() { // a refusal names no session: nobody could go on with this one
+			return fmt.Sprintf("the first act of %s was refused, so the hand work ended", w.who()), &handOrder{q: o.q, by: o.by, answer: func(protocol.HandReply, error) { o.answer(reply, err) }}
 		}
 		o.answer(reply, err)
 	}
@@ -364,6 +368,13 @@ func (w *handWork) name() string {
 	w.k.mu.Lock()
 	defer w.k.mu.Unlock()
 	return w.s.name
+}
+
+// awaited says whether another order waits already, such as the stop that cut the last one short.
+func (w *handWork) awaited() bool {
+	w.k.mu.Lock()
+	defer w.k.mu.Unlock()
+	return len(w.k.hands.waiting) > 0
 }
 
 func (w *handWork) touch() {

@@ -325,6 +325,23 @@ func TestWhatIsWrongWithAnActIsToldAndNothingIsDone(t *testing.T) {
 	})
 }
 
+// A refusal names no session: one that it left open would keep the bench from everybody.
+func TestASessionWhoseFirstActIsRefusedIsOverWithIt(t *testing.T) {
+	lend(t, nil, func(t *testing.T, l *lending) {
+		if a := <-l.ask(protocol.HandRequest{Act: protocol.HandShutter, Shutter: "/etc/passwd", Open: yes()}); code(a.err) != 409 || !strings.Contains(a.err.Error(), "want pump, detectors") {
+			t.Errorf("a shutter that is none: %v; want 409 with the names there are", a.err)
+		}
+		if s := l.k.Status(t.Context()); s.Hand != "" {
+			t.Errorf("status says %s has the bench; want nobody", s.Hand)
+		}
+		want := []string{"operator: ann took the bench in hand", "operator: the first act of ann was refused, so the hand work ended, with the bench at rest"}
+		if got := l.texts(); !slices.Equal(got, want) {
+			t.Errorf("written is %q; want %q", got, want)
+		}
+		l.do(move(unit.Degree)) // the next one is not told of the first
+	})
+}
+
 // Whoever was answered that a session is over, or was refused before it began, may ask anew at once.
 func TestAnAnswerThatEndsASessionLeavesNothingOfIt(t *testing.T) {
 	lend(t, nil, func(t *testing.T, l *lending) {
