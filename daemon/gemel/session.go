@@ -8,6 +8,7 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
+	"io/fs"
 	"os"
 	"os/user"
 	"path/filepath"
@@ -325,11 +326,26 @@ func recipesIn(folder string) func(string) (string, error) {
 		return nil
 	}
 	return func(name string) (string, error) {
-		name = strings.TrimSuffix(name, ".yaml")
-		if !protocol.IsToken(name) {
-			return "", fmt.Errorf("recipe name %q; want letters, digits, \"-\" and \"_\" only", name)
+		file := strings.TrimSuffix(name, ".yaml")
+		if !protocol.IsToken(file) || !filepath.IsLocal(file) { // some names are devices, on some systems
+			return "", fmt.Errorf("recipe name %.200q; want letters, digits, \"-\" and \"_\" only", name)
 		}
-		text, err := strict.ReadFile(filepath.Join(folder, name+".yaml"))
+		file = filepath.Join(folder, file+".yaml")
+		// Who asks from elsewhere is not told where the folder is.
+		info, err := os.Stat(file)
+		switch {
+		case err != nil && errors.Is(err, fs.ErrNotExist):
+			return "", fmt.Errorf("no recipe %q in the folder of recipes", name)
+		case err == nil && !info.Mode().IsRegular(): // opening a pipe would wait for whoever writes to it
+			return "", fmt.Errorf("recipe %q is no file; want one", name)
+		}
+		text, err := strict.ReadFile(file)
+		if path, is := errors.AsType[*fs.PathError](err); is {
+			return "", fmt.Errorf("recipe %q: %w", name, path.Err)
+		}
+		if _, large := errors.AsType[*strict.Error](err); large {
+			return "", fmt.Errorf("recipe %q is larger than %d bytes", name, strict.MaxBytes)
+		}
 		return string(text), err
 	}
 }
