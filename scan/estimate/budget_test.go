@@ -192,6 +192,7 @@ func TestActivityH4(t *testing.T) {
 // JCGM 101 examples (standards.md 5.3: computed there at 10^6 trials, in agreement with the
 // published ones as recalled).
 func TestMonteCarloExamples(t *testing.T) {
+	statistics(t)
 	sum := func(in ...Input) func(*rand.Rand) float64 {
 		return func(r *rand.Rand) (y float64) {
 			for _, i := range in {
@@ -221,6 +222,7 @@ func TestMonteCarloExamples(t *testing.T) {
 }
 
 func TestMassCalibrationByMonteCarlo(t *testing.T) {
+	statistics(t)
 	// JCGM 101, 9.3, the model recalled from memory: masses in mg, densities in kg/m3.
 	rect := func(a, b float64) Input {
 		return Input{Estimate: (a + b) / 2, U: (b - a) / 2 / math.Sqrt(3), Distribution: Rectangular}
@@ -258,6 +260,7 @@ func TestMassCalibrationByMonteCarlo(t *testing.T) {
 }
 
 func TestSquaresByMonteCarlo(t *testing.T) {
+	statistics(t)
 	for _, c := range []struct{ x1, mean, u, first float64 }{{0, 50e-6, 50e-6, 0}, {0.050, 2550e-6, 502.5e-6, 500e-6}} {
 		in := []Input{{Estimate: c.x1, U: 0.005, Distribution: Normal}, {U: 0.005, Distribution: Normal}}
 		f := func(x []float64) float64 { return x[0]*x[0] + x[1]*x[1] }
@@ -288,6 +291,7 @@ func TestNumericalToleranceIsHalfOfTheSecondDigit(t *testing.T) {
 }
 
 func TestDrawsHaveTheStandardUncertaintyTheyDeclare(t *testing.T) {
+	statistics(t)
 	for _, in := range []Input{
 		{Estimate: 3, U: 2, Distribution: Normal}, {Estimate: 3, U: 2, Distribution: Rectangular}, {Estimate: 3, U: 2, Distribution: Triangular},
 		{Estimate: 3, U: 2, Distribution: Arcsine}, {Estimate: 3, U: 2, Distribution: TwoPoint}, {Estimate: 12, U: math.Sqrt(12), Distribution: Counting}, {Estimate: 400, U: 20, Distribution: Counting},

@@ -73,6 +73,7 @@ func TestAnEfficiencyAtSeveralPowersIsShownOneByOne(t *testing.T) {
 }
 
 func TestAWrongWindowIsASlopeAgainstThePower(t *testing.T) {
+	statistics(t)
 	// Much light without partners on the tested detector, so that accidentals weigh.
 	rows, _ := atPowers(rand.New(rand.NewPCG(92, 1)), []float64{5, 30, 60, 90}, 30000, func(w *world) { w.noiseD = 2 * w.pairsHz })
 	b := skerry(EveryPair)
@@ -95,6 +96,7 @@ func TestAWrongWindowIsASlopeAgainstThePower(t *testing.T) {
 }
 
 func TestHonestPowersHaveNoSlope(t *testing.T) {
+	statistics(t)
 	times, found, inside, miss := 12, 0, 0, 0.0
 	if *long {
 		times = 500
@@ -157,6 +159,7 @@ func TestBackgroundsCountForTheirOwnPower(t *testing.T) {
 // As an engine writes it: backgrounds say nothing of the setting, which stands where the reading before
 // left it, always at the highest power here.
 func TestBackgroundsOfAnotherPowerAreScaledAboveTheDark(t *testing.T) {
+	statistics(t)
 	times, inside, miss, slopes := 8, 0, 0.0, 0
 	if *long {
 		times = 300

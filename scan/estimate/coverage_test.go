@@ -16,6 +16,15 @@ import (
 //	go test ./scan/estimate -run 'Cover|Bias|Coupled|PeaksAgainst|PeakAngles' -long -v -timeout 90m
 var long = flag.Bool("long", false, "run coverage and bias tests at full length")
 
+// statistics leaves a test out under the race detector that draws for long in its own goroutine: there
+// is nothing to race with, and what is drawn is the same.
+func statistics(t *testing.T) {
+	t.Helper()
+	if raced && !*long {
+		t.Skip("long statistics in one goroutine are held without the race detector")
+	}
+}
+
 // regime is a way of calibrating.
 type regime struct {
 	name   string
@@ -118,6 +127,7 @@ func benchFor(reg regime, logic Logic) Bench {
 }
 
 func TestCalibrationsCoverTheTruth(t *testing.T) {
+	statistics(t)
 	times := 40
 	if *long {
 		times = 2000
@@ -190,6 +200,7 @@ func TestCalibrationsCoverTheTruth(t *testing.T) {
 
 // Bias where the constants are exactly what is declared: what is left is the formulas' own.
 func TestBiasIsATenthOfTheUncertaintyAtTenMillionHeralds(t *testing.T) {
+	statistics(t)
 	runs, heralds := 1, 6e5
 	if *long {
 		runs, heralds = 10, 1e7

@@ -109,6 +109,7 @@ func TestADistanceThatPhaseMatchingDoesNotGiveIsSaid(t *testing.T) {
 }
 
 func TestZerosCoverTheTruth(t *testing.T) {
+	statistics(t)
 	times := 60
 	if *long {
 		times = 2000
@@ -247,6 +248,7 @@ func TestATuningCurveFindsTheTiltsAndTheArmsZero(t *testing.T) {
 }
 
 func TestAnotherCutIsTheTiltsZeroByAnotherName(t *testing.T) {
+	statistics(t)
 	o := ringOptics(t)
 	real := o
 	real.CutDeg += 0.05
@@ -264,6 +266,7 @@ func TestAnotherCutIsTheTiltsZeroByAnotherName(t *testing.T) {
 }
 
 func TestTuningCurvesCoverTheTruth(t *testing.T) {
+	statistics(t)
 	times := 3
 	if *long {
 		times = 1000
@@ -298,6 +301,7 @@ func TestTuningCurvesCoverTheTruth(t *testing.T) {
 }
 
 func TestAConjugateMapFindsWhatTheZerosLeave(t *testing.T) {
+	statistics(t)
 	// A crystal cut at 28.5 deg, tilted by 3 deg: a signal of 780 nm at 4 deg has its partner at
 	// 4.337 deg by an independent calculation (check S088). The optics' filters are those wavelengths.
 	want := matched(t, "S088")

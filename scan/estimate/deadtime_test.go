@@ -167,6 +167,7 @@ func TestPileUpAgreesWithThePublishedExample(t *testing.T) {
 
 // The exact coupled loss against events: nothing in world knows these formulas.
 func TestCoupledDeadTimesAgreeWithEvents(t *testing.T) {
+	statistics(t)
 	for i, c := range []struct {
 		name           string
 		modelT, modelD DeadTimeModel
@@ -228,6 +229,7 @@ func TestCoupledDeadTimesJoinTheirLimits(t *testing.T) {
 
 // What C - A misses of the true pairs, for windows longer and shorter than the dead times.
 func TestChancesInTheShadowOfDeadTimesAgreeWithEvents(t *testing.T) {
+	statistics(t)
 	for i, c := range []struct {
 		name          string
 		window        float64

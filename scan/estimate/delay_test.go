@@ -57,6 +57,7 @@ func plainDelay() delayWorld {
 }
 
 func TestDelayScansOfSingleTimesGiveTheWindowBack(t *testing.T) {
+	statistics(t)
 	times := 24
 	if *long {
 		times = 2000
@@ -139,6 +140,7 @@ func TestADelaySaysWhatTheWindowIs(t *testing.T) {
 // Detectors that a pair makes dead miss chance partners on one side more than on the other: by the
 // house's simulator of single events, whose heralds have a partner in 30 % and in 5 % of cases.
 func TestDeadTimesMakeTwoFloors(t *testing.T) {
+	statistics(t)
 	o := ringOptics(t)
 	o.Counter = source.Counter{WindowS: 4e-9, JitterS: 0.4e-9, Logic: source.EveryPair}
 	for _, arm := range []*source.Arm{&o.Signal, &o.Idler} {
@@ -191,6 +193,7 @@ func TestDelaysFindWhatTheBenchFileHasWrong(t *testing.T) {
 }
 
 func TestSharpEdgesCarryTheStepOfTheSweep(t *testing.T) {
+	statistics(t)
 	inside := 0
 	const times = 40
 	for i := range times {

@@ -248,6 +248,7 @@ func plainQuestion(use *Plateau) Question {
 }
 
 func TestTheBestPointIsBiasedAndThePlateauIsNot(t *testing.T) {
+	statistics(t)
 	for _, passes := range []int{1, 3} {
 		best, plateau, u := 0.0, 0.0, 0.0
 		const nights = 60

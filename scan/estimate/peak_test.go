@@ -44,6 +44,7 @@ func profileData(r *rand.Rand, rate func(x float64) float64, low, high float64, 
 func ones(int) float64 { return 1 }
 
 func TestPeaksComeBackFromCounts(t *testing.T) {
+	statistics(t)
 	soft := func(v, w, e float64) float64 {
 		return (math.Erf((w/2-v)/math.Sqrt2/e) + math.Erf((w/2+v)/math.Sqrt2/e)) / 2
 	}
@@ -223,6 +224,7 @@ func TestFitsRefuseEmptyProfiles(t *testing.T) {
 
 // Fitted angles against the truth, the axis's error drawn anew each time.
 func TestPeakAnglesCoverTheTruth(t *testing.T) {
+	statistics(t)
 	times := 60
 	if *long {
 		times = 2000

@@ -154,6 +154,7 @@ func TestAGridIsCutByWhatIsAllowed(t *testing.T) {
 }
 
 func TestNoGridIsPutAboutChance(t *testing.T) {
+	statistics(t)
 	of := scan.Refine{Of: "idler", Along: "idler_arm", Span: unit.Degrees(0.4), Step: unit.Degrees(0.02), AtMost: 40}
 	for seed := range uint64(60) {
 		run := newRefined(of, idlerSweep(2, 4, 0.1), func(scan.Point) float64 { return 50 }, rand.New(rand.NewPCG(83, seed)))
@@ -213,6 +214,7 @@ func TestAnAxisThatFollowsIsInterpolated(t *testing.T) {
 }
 
 func TestPositionsBecomeAsSharpAsAsked(t *testing.T) {
+	statistics(t)
 	times := 60
 	if *long {
 		times = 4000
@@ -333,6 +335,7 @@ func TestWhatCannotBeRefinedSaysWhy(t *testing.T) {
 // Whatever the counts: no point outside limits or forbidden ranges, no more than allowed, the same
 // decision from the same rows, and an end.
 func TestARefinementNeverLeavesItsBounds(t *testing.T) {
+	statistics(t)
 	rapid.Check(t, func(t *rapid.T) {
 		of := scan.Refine{Of: drivers.Channel(rapid.SampledFrom([]string{"idler", "pairs"}).Draw(t, "of")), Along: "idler_arm", AtMost: rapid.IntRange(0, 30).Draw(t, "at most")}
 		if rapid.Bool().Draw(t, "around") {

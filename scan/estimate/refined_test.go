@@ -29,6 +29,7 @@ func herald(r *rand.Rand, sequence int, deg float64, point, visit int, heralds f
 }
 
 func TestRefinedPointsDoNotChooseThePlateau(t *testing.T) {
+	statistics(t)
 	eff := func(deg float64) float64 { return 0.4 * softBox(deg, 0.7, 0.04) }
 	ch := channels{s: "signal", d: "idler", c: "pairs"}
 	use := Plateau{Axis: "idler_arm", HalfWidthDeg: 0.11}
@@ -111,6 +112,7 @@ func TestWithoutAPlateauOnlyTheSweepsPointsMakeAnEfficiency(t *testing.T) {
 
 // Where readings stand may depend on earlier counts: a likelihood does not mind.
 func TestRefinedPointsCountForAPeak(t *testing.T) {
+	statistics(t)
 	rate := func(x float64) float64 { return 4 + 60*gauss(x-0.03, 0.4) }
 	const times = 80
 	var miss, sq float64

@@ -68,6 +68,7 @@ func takeFrom(t *testing.T, o source.Optics, w world, n night, logic Logic) Rows
 }
 
 func TestCalibrationsOfTheHousesSimulatorCoverTheTruth(t *testing.T) {
+	statistics(t)
 	times := 25
 	if *long {
 		times = 2000
@@ -112,6 +113,7 @@ func TestCalibrationsOfTheHousesSimulatorCoverTheTruth(t *testing.T) {
 
 // A sweep of the idler arm across the ring as the model predicts it, zero offsets drawn.
 func TestPeaksAgainstTheModelsProfileCoverTheTruth(t *testing.T) {
+	statistics(t)
 	m, err := source.New(ringOptics(t))
 	if err != nil {
 		t.Fatal(err)
