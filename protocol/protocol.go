@@ -413,7 +413,8 @@ func (t Time) MarshalJSON() ([]byte, error) {
 	return json.Marshal(t.String())
 }
 
-// UnmarshalJSON reads any RFC 3339 time.
+// UnmarshalJSON reads any RFC 3339 time from the year 1 to 9999 in UTC: outside them nothing sorts as
+// text. The first instant of the year 1 is refused too; it would be taken for no time.
 func (t *Time) UnmarshalJSON(b []byte) error {
 	if bytes.Equal(b, []byte("null")) {
 		*t = Time{}
@@ -424,10 +425,10 @@ func (t *Time) UnmarshalJSON(b []byte) error {
 		return err
 	}
 	v, err := time.Parse(time.RFC3339Nano, s)
-	if err != nil {
-		return fmt.Errorf("time %q; want RFC 3339 such as \"2031-02-03T04:05:06.000000000Z\"", s)
+	if v = v.UTC(); err != nil || v.IsZero() || v.Year() < 1 || v.Year() > 9999 {
+		return fmt.Errorf("time %.80q; want RFC 3339 such as \"2031-02-03T04:05:06.000000000Z\"", s)
 	}
-	*t = Time{v.UTC()}
+	*t = Time{v}
 	return nil
 }
 

@@ -55,7 +55,8 @@ func TestNoTimeIsNull(t *testing.T) {
 }
 
 func TestTimesThatAreNoneAreRefused(t *testing.T) {
-	for _, body := range []string{`"2031-02-03"`, `"2031-02-03 04:05:06Z"`, `"2031-02-03T04:05:06"`, `"2031-02-30T04:05:06Z"`, `""`, `17`, `{}`} {
+	for _, body := range []string{`"2031-02-03"`, `"2031-02-03 04:05:06Z"`, `"2031-02-03T04:05:06"`, `"2031-02-30T04:05:06Z"`, `""`, `17`, `{}`,
+		`"0001-01-01T00:00:00Z"`, `"0001-01-01T01:00:00+01:00"`, `"0000-12-31T23:59:59Z"`, `"0001-01-01T00:00:00+00:01"`, `"9999-12-31T23:59:59-00:01"`} {
 		var back protocol.Time
 		if err := json.Unmarshal([]byte(body), &back); err == nil {
 			t.Errorf("%s is read as %v; want it refused", body, back)

@@ -414,7 +414,7 @@ func poisons() []string {
 	all := []string{
 		`null`, `true`, `false`, `{}`, `[]`, `""`, `0`, `-0`, `-1`, `1`, `1e999`, `-1e308`, `1e-400`, `NaN`, `Infinity`, `9223372036854775808`, `0.1e1`, `1e9`, `1e18`, `01`, `.5`, `[null]`, `[[]]`,
 		deep, objects, strings.Repeat("9", 5000), `"` + strings.Repeat("x", 1<<20) + `"`, `"` + strings.Repeat("x", 201) + `"`, `"` + strings.Repeat("\\u0000", 30) + `"`, "\"\xff\xfe\"", "\"\xed\xa0\x80\"", `"\ud800"`, `"\u202e"`, `"\u0085\u2028"`,
-		`"2001-01-01T00:00:00Z"`, `"9999-12-31T23:59:59Z"`, `"0000-01-01T00:00:00Z"`, `"2031-02-30T00:00:00Z"`, `"now"`, `"-9999-01-01T00:00:00Z"`,
+		`"2001-01-01T00:00:00Z"`, `"9999-12-31T23:59:59Z"`, `"0000-01-01T00:00:00Z"`, `"0001-01-01T00:00:00Z"`, `"2031-02-30T00:00:00Z"`, `"now"`, `"-9999-01-01T00:00:00Z"`,
 		`"title: a\ndwell: 1e300 s\n"`, `"title: a\ndwell: 10 s\nsweep: [{}]\n"`, `"a: &a [1,1,1,1,1,1,1,1]\nb: &b [*a,*a,*a,*a,*a,*a]\n"`, `"!!binary x"`, `"title: \"\\e[31m\"\ndwell: 10 s\n"`,
 		`"` + strings.Repeat("[", 10_000) + `"`, `"` + strings.Repeat(`a:\n `, 3000) + `"`,
 		`"control.nk"`, `"-"`, `"*"`, `">"`, `"gemel.skerry.do.stop"`, `"RUN0"`, `"RUN1"`, `["RUN1","RUN1"]`, `["RUN0"]`, `"leave"`, `"rest"`, `"stay"`, `"pump"`, `"detectors"`,
@@ -550,7 +550,9 @@ func TestNamedHostileRequestsGetTheirAnswer(t *testing.T) {
 		{"start", `{"recipe":"title: a\ndwell: 1 s\n","key":"late","who":"ann","expires_at":"` + past + `"}`, "408", "expired at " + beyond},
 		{"reorder", `{"runs":["RUN2"],"who":"ann","expires_at":"` + past + `"}`, "408", "expired at " + beyond},
 		{"hand", `{"act":"home","axis":"signal_arm","who":"ann","expires_at":"` + past + `"}`, "408", "expired at " + beyond},
-		{"stop", `{"run":"RUN0","who":"ann","expires_at":"0000-01-01T00:00:00Z"}`, "408", "expired at 0000-01-01T00:00:00.000000000Z"},
+		{"stop", `{"run":"RUN0","who":"ann","expires_at":"0001-01-01T00:00:01Z"}`, "408", "expired at 0001-01-01T00:00:01.000000000Z"},
+		{"stop", `{"run":"RUN0","who":"ann","expires_at":"0001-01-01T00:00:00Z"}`, "400", `request: time "0001-01-01T00:00:00Z"; want RFC 3339`}, // not: no expiry
+		{"stop", `{"run":"RUN0","who":"ann","expires_at":"0000-01-01T00:00:00Z"}`, "400", `request: time "0000-01-01T00:00:00Z"; want RFC 3339`},
 		// Runs that are none.
 		{"stop", `{"run":"../data","who":"ann"}`, "400", `run "../data"; want the name of the run that is meant`},
 		{"withdraw", `{"run":"*","who":"ann"}`, "400", `run "*"; want the name of the run that is meant`},

@@ -5,6 +5,7 @@ import (
 	"encoding/json"
 	"errors"
 	"testing"
+	"time"
 	"unicode/utf8"
 
 	"gemel/protocol"
@@ -17,6 +18,7 @@ func FuzzDecode(f *testing.F) {
 		`{}`, ``, `null`, `{"run":"r1","who":"night","expires_at":"2031-02-03T04:05:06Z"}`, `{"runs":["r1","r2"],"who":"ann"}`, `{"runs":[null]}`,
 		`{"runs":{}}`, `{"recipe":"title: x","key":"k"}`, `{"run":"r1","run":"r2"}`, `{"Run":"r1"}`, `{"run":"r1"}}`, "{\"run\":\"\xff\"}",
 		`{"runs":[[[[[[]]]]]]}`, `{"expires_at":"9999-12-31T23:59:59.999999999+23:59","run":"r"}`, `{"\u0072un":"r1"}`,
+		`{"act":"move","axis":"a","to_deg":1.5,"by_deg":-1e9,"who":"ann","live":true}`, `{"act":"look","gate_s":1e-9}`, `{"recipe":"a","aim":"b","expires_at":"0001-01-01T00:00:00Z"}`,
 	} {
 		f.Add([]byte(seed))
 	}
@@ -24,7 +26,12 @@ func FuzzDecode(f *testing.F) {
 		tried(t, data, protocol.StartRequest{})
 		tried(t, data, protocol.RunRequest{})
 		tried(t, data, protocol.ReorderRequest{})
+		tried(t, data, protocol.HandRequest{})
+		tried(t, data, protocol.ForecastRequest{})
 		tried(t, data, struct{}{})
+		if q, err := handRequest(data); err == nil && (len(q.Who) > maxName || q.ExpiresAt != nil && time.Since(q.ExpiresAt.Time) > time.Second) {
+			t.Errorf("%q is let through as %+v", data, q)
+		}
 	})
 }
 

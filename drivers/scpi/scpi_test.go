@@ -98,6 +98,12 @@ func FuzzDecoding(f *testing.F) {
 		if n, err := count(string(b)); err == nil && n >= 1<<53 {
 			t.Fatalf("%q read as %d", b, n)
 		}
+		if n, err := register(string(b)); err == nil && (n < 0 || n > 65535) {
+			t.Fatalf("%q read as the register %d", b, n)
+		}
+		if n := blockSize(b); n != 1 && (n < 3 || n > len(b) || b[1] < '1' || b[1] > '9') {
+			t.Fatalf("%q begins with a block of %d bytes", b, n)
+		}
 	})
 }
 
