@@ -214,6 +214,7 @@ func cases(t testing.TB) []struct {
 // TestRatesAgreeWithBruteForceIntegration holds absolute integrals to 1 % and the collected
 // fraction to 0.1 % of one.
 func TestRatesAgreeWithBruteForceIntegration(t *testing.T) {
+	statistics(t)
 	const n = 1 << 18 // its own noise is then up to 7e-4 of the fraction; 2^23 points agreed to 1e-4
 	for i, c := range cases(t) {
 		if testing.Short() && i > 2 {
@@ -246,6 +247,7 @@ func TestRatesAgreeWithBruteForceIntegration(t *testing.T) {
 }
 
 func TestTwiceTheEffortChangesNothingThatMatters(t *testing.T) {
+	statistics(t)
 	for _, c := range cases(t) {
 		m, err := New(c.o)
 		if err != nil {

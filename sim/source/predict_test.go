@@ -337,6 +337,7 @@ func TestThePlotIsWellFormedAndShowsBothDaughtersAndArms(t *testing.T) {
 
 // Whatever is asked within the bounds that are printed is answered, and JSON can carry the answer.
 func TestRandomQuestionsAreAnswered(t *testing.T) {
+	statistics(t)
 	rng := rand.New(rand.NewPCG(31, 2))
 	decades := func(lo, hi float64) float64 { return lo * math.Pow(hi/lo, rng.Float64()) }
 	names, matched, apertures := crystal.Names(), 0, 0

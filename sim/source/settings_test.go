@@ -45,6 +45,7 @@ func TestADelayLeavesTheShareOfPairsThatTheWindowStillOverlaps(t *testing.T) {
 
 // One gate at three delays, so that the events' own delays must be right, too.
 func TestEventsAtADelayAreCountedAsOftenAsExpected(t *testing.T) {
+	statistics(t)
 	o := bench(t)
 	o.Counter.WindowS, o.Counter.JitterS = 4e-9, 0.5e-9
 	m := model(t, o)

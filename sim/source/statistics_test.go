@@ -43,6 +43,7 @@ func assertChiSquare(t *testing.T, what string, chi2 float64, degrees, family in
 }
 
 func TestPoissonDrawsArePoisson(t *testing.T) {
+	statistics(t)
 	means := []float64{0.02, 0.5, 3, 9.99, 10, 25, 130, 2500, 1e6}
 	for i, mean := range means {
 		rng := rand.New(rand.NewPCG(11, uint64(i)))
@@ -67,6 +68,7 @@ func TestPoissonDrawsArePoisson(t *testing.T) {
 }
 
 func TestBinomialDrawsAreBinomial(t *testing.T) {
+	statistics(t)
 	cases := []struct {
 		n uint64
 		p float64
@@ -95,6 +97,7 @@ func TestBinomialDrawsAreBinomial(t *testing.T) {
 }
 
 func TestGammaDrawsAreGamma(t *testing.T) {
+	statistics(t)
 	shapes := []float64{0.3, 1, 4.5, 200}
 	for i, shape := range shapes {
 		rng := rand.New(rand.NewPCG(13, uint64(i)))
