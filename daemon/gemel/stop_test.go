@@ -25,10 +25,11 @@ var stopAll = flag.Bool("stop.all", false, "stop in every phase in every way, on
 // stopWithin is what is promised for every phase: until the stop bytes are at the instruments.
 const stopWithin = time.Second
 
-// restWithin is until it is answered, with the rest state reached and all of it written; restAtMost
-// the same where a line is out of step, and the engine's own bound for a rest state with the way to it.
+// restWithin is until it is answered, with the rest state reached and all of it written: a question that
+// the stop cut short is waited out, for the 2 s that a line's longest answer is by default. restAtMost is
+// the same where a line is out of step: the engine's own bound for a rest state, and the way to it.
 const (
-	restWithin = 2 * time.Second
+	restWithin = 4 * time.Second
 	restAtMost = 15 * time.Second
 )
 
@@ -458,4 +459,59 @@ func wantStopped(t *testing.T, records []instruments.Record, before int, asked t
 		}
 	}
 	t.Log(strings.Join(report, ", "))
+}
+
+// The run before it was stopped, and the next in the queue is stopped at once: before its turn, while it
+// takes the bench, or just after. Nothing of it comes after the answer.
+func TestAStopMeetsARunThatIsJustAboutToBegin(t *testing.T) {
+	delays := []time.Duration{0, 40 * time.Millisecond}
+	if *stopAll {
+		delays = nil
+		for d := time.Duration(0); d < 400*time.Millisecond; d += 10 * time.Millisecond {
+			delays = append(delays, d)
+		}
+	}
+	dir := t.TempDir()
+	s := &stopping{bench: quick(t, dir), data: filepath.Join(dir, "data"), lines: filepath.Join(dir, "lines")}
+	sim, ledger := simulate(t, s.bench, s.lines, "")
+	var ok bool
+	if s.p, ok = serve(t, nil, "--bench", s.bench, "--data", s.data, "--lines", s.lines); !ok {
+		t.Fatalf("serve: %s", s.p.err)
+	}
+	cl, err := client.ConnectFolder(s.data, protocol.ControlRole)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer cl.Close()
+	stop := func(run protocol.RunID) {
+		t.Helper()
+		if r, err := cl.Stop(within(t), protocol.RunRequest{Run: run, Who: "the test"}); err != nil || r.State != protocol.Stopped || !r.Recorded {
+			t.Errorf("stop was answered %+v, %v; want stopped and recorded", r, err)
+		}
+	}
+	n := 0
+	for i, delay := range delays {
+		first := started(t, s.data, farRecipe, fmt.Sprint("first ", i))
+		_, n = ledger.await(t, n, "a long gate", gateIsLong)
+		second := started(t, s.data, farRecipe, fmt.Sprint("second ", i))
+		stop(first)
+		<-time.After(delay)
+		before, asked := len(ledger.all(t)), time.Now()
+		stop(second)
+		acked := time.Now()
+		<-time.After(150 * time.Millisecond) // for what would come after it
+		wantRest(t, ledger.all(t), asked, acked, restWithin)
+		row := awaitRow(t, s.p, s.data, second, "stopped", func(r logbook.RunRow) bool { return r.State == protocol.Stopped })
+		if !strings.Contains(row.Reason, "the test") {
+			t.Errorf("it was stopped for %q; want by whom", row.Reason)
+		}
+		// What was asked when the run ended may still be answered, so that a line is waited for; the stop
+		// itself is not.
+		wantStopped(t, ledger.all(t), before, asked, []string{"rotary", "plate", "gate", "pump"})
+	}
+	s.p.signal(syscall.SIGTERM)
+	if code := s.p.wait(); code != exitDone {
+		t.Errorf("serve: exit code %d\n%s", code, s.p.err)
+	}
+	quit(t, sim)
 }
