@@ -3,8 +3,11 @@ package logbook
 import (
 	"database/sql"
 	"os"
+	"strings"
 	"testing"
 	"time"
+
+	"gemel/protocol"
 )
 
 // Readers stand in the log from time to time, and one page is read after another all the while.
@@ -89,6 +92,10 @@ func TestAReaderThatNeverEndsDelaysAppendsBySmallAmounts(t *testing.T) {
 		began := time.Now()
 		mustAppend(t, b, aReading("r1", s))
 		slowest = max(slowest, time.Since(began))
+		s++
+	}
+	for size() < mostLog+1<<20 { // what is long fills the log sooner
+		mustAppend(t, b, event("r1", s, protocol.Trouble, protocol.Running, strings.Repeat("the line is gone; ", 10_000)))
 		s++
 	}
 	for size() < mostLog+2<<20 {
