@@ -427,10 +427,23 @@ func TestFollowYieldsNothingTwice(t *testing.T) {
 func TestAMessageThatIsNoEntryEndsFollowing(t *testing.T) {
 	b := newBus(t)
 	b.stream(t)
-	if _, err := b.js.Publish(t.Context(), "gemel.skerry.event.r1", []byte("{}")); err != nil {
+	if _, err := b.js.Publish(t.Context(), "gemel.skerry.event.r1", []byte("{}"), jetstream.WithMsgID("r2.1")); err != nil {
 		t.Fatal(err)
 	}
 	c := b.client(t, protocol.ControlRole)
 	h, _ := follow(t, c, "", 1)
-	h.want(t, `GEMEL_skerry: message on "gemel.skerry.event.r1" with id "": not an entry of a journal`)
+	h.want(t, `GEMEL_skerry: message on "gemel.skerry.event.r1" with id "r2.1": not an entry of a journal`)
+}
+
+// A reader may have the server answer on a subject of the journal.
+func TestAnAnswerOfTheServersAmongTheEntriesIsPassedOver(t *testing.T) {
+	b := newBus(t)
+	b.stream(t)
+	b.publish(t, "r1", 1, 2)
+	if _, err := b.js.Publish(t.Context(), "gemel.skerry.event.r1", []byte("{}")); err != nil {
+		t.Fatal(err)
+	}
+	b.publish(t, "r1", 3, 4)
+	h, _ := follow(t, b.client(t, protocol.ControlRole), "", 1)
+	h.want(t, ids("r1", 1, 4)...)
 }

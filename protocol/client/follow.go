@@ -167,6 +167,9 @@ func (f *follower) take(m jetstream.Msg, yield func(protocol.Entry, error) bool)
 		f.consumer = nil // something was lost on the way: ask again from there
 		return true, nil
 	}
+	if m.Headers().Get(nats.MsgIdHdr) == "" { // an answer of the server's, sent here by who asked; the daemon makes the stream anew
+		return true, nil
+	}
 	e, err := entry(m)
 	if err != nil {
 		return true, err
