@@ -4,7 +4,6 @@ import (
 	"context"
 	"errors"
 	"fmt"
-	"io"
 	"path/filepath"
 	"strings"
 
@@ -23,7 +22,7 @@ type reportCommand struct {
 	Displaced bool     `help:"Accidentals from the counter's displaced windows instead of the product of the rates."`
 	Trials    int      `placeholder:"N" help:"Propagate the uncertainties by Monte Carlo, too (JCGM 101), with so many trials."`
 	Seed      uint64   `default:"1" help:"Of the Monte Carlo trials."`
-	Plot      string   `placeholder:"FILE.svg" help:"Draw profiles with their fits, and curves against the model."`
+	Plot      string   `placeholder:"FILE.svg" help:"Draw the result; of several each in a file of its own, FILE-1-KIND.svg and so on."`
 }
 
 func (reportCommand) Help() string {
@@ -72,11 +71,35 @@ func (c *reportCommand) Run(ctx context.Context, con *console) error {
 	// The report first: a picture that cannot be drawn must not take it away.
 	err = con.results(all, night, c.JSON)
 	if c.Plot != "" {
-		if err := writePicture(c.Plot, func(w io.Writer) error { return report.Plot(w, all) }); err != nil {
+		if err := c.draw(ctx, con, book, run, all); err != nil {
 			return err
 		}
 	}
 	return err
+}
+
+// draw writes a picture for each result that can be drawn, and tells the names of the files.
+func (c *reportCommand) draw(ctx context.Context, con *console, book *logbook.Book, run protocol.RunID, all []estimate.Result) error {
+	beside, err := report.BesideOf(ctx, book, run, all)
+	if err != nil {
+		return err
+	}
+	pictures := report.Pictures(all, beside)
+	if len(pictures) == 0 {
+		return report.ErrNothingToDraw
+	}
+	for _, p := range pictures {
+		file := c.Plot
+		if len(all) > 1 {
+			ending := filepath.Ext(file)
+			file = fmt.Sprintf("%s-%d-%s%s", strings.TrimSuffix(file, ending), p.Number, strings.ReplaceAll(p.Kind, "_", "-"), ending)
+		}
+		if err := writePicture(file, p.Draw); err != nil {
+			return err
+		}
+		fmt.Fprintf(con.err, "drawn: the %s, %s\n", strings.ReplaceAll(p.Kind, "_", " "), file)
+	}
+	return nil
 }
 
 // results prints a run's results, and what happened in its night. A result that was refused is a

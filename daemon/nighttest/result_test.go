@@ -260,10 +260,12 @@ func TestSeveralResultsComeInTheRecipesOrder(t *testing.T) {
 		t.Errorf("%v: kind %q, %d results; want the first's own keys and a list of both", err, body.Kind, len(body.Results))
 	}
 	var picture strings.Builder
-	if err := report.Plot(&picture, all); err != nil {
-		t.Fatal(err)
+	for _, p := range report.Pictures(all, report.Beside{}) {
+		if err := p.Draw(&picture); err != nil {
+			t.Fatal(err)
+		}
 	}
-	if n := strings.Count(picture.String(), "<circle"); n != 16+16 {
+	if n := strings.Count(picture.String(), `r="2.6"`); n != 16+16 {
 		t.Errorf("%d readings drawn; want each in both pictures", n)
 	}
 	if d := xml.NewDecoder(strings.NewReader(picture.String())); !wellFormed(d) {

@@ -44,7 +44,9 @@ reference: {axes: [signal_arm, idler_arm], on: [low_flank, top, high_flank], eve
 result: {kind: drift}
 `
 
-func newJournal(t *testing.T, seed uint64) *journal {
+func newJournal(t *testing.T, seed uint64) *journal { return newJournalOf(t, seed, driftRecipe) }
+
+func newJournalOf(t *testing.T, seed uint64, recipeText string) *journal {
 	t.Helper()
 	file, err := bench.Load(filepath.Join("..", "..", "configs", "demo-bench.yaml"))
 	if err != nil {
@@ -62,7 +64,7 @@ func newJournal(t *testing.T, seed uint64) *journal {
 	if err != nil {
 		t.Fatal(err)
 	}
-	h := logbook.Header{Run: j.run, Title: "Drift", RecipeText: driftRecipe, BenchText: file.Text, Version: "test", QueuedAt: head.At}
+	h := logbook.Header{Run: j.run, Title: "Drift", RecipeText: recipeText, BenchText: file.Text, Version: "test", QueuedAt: head.At}
 	if _, err := book.NewRun(t.Context(), h, protocol.Entry{Run: j.run, Sequence: 1, Kind: protocol.EventEntry, Body: first}); err != nil {
 		t.Fatal(err)
 	}

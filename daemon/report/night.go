@@ -6,7 +6,6 @@ import (
 	"fmt"
 	"strconv"
 	"strings"
-	"time"
 
 	"gemel/daemon/logbook"
 	"gemel/protocol"
@@ -70,21 +69,8 @@ func NightOf(ctx context.Context, book *logbook.Book, run protocol.RunID) (Night
 		return Night{}, err
 	}
 	n := Night{State: row.State, Interruptions: []Happening{}, Holds: []Hold{}, Doubts: []Happening{}, Cuts: []Happening{}, Troubles: []Happening{}, Earlier: []EarlierOfNight{}, Notes: []NoteOfNight{}}
-	const page = 500
-	for after := int64(0); ; {
-		entries, err := book.Entries(ctx, run, after, page)
-		if err != nil {
-			return Night{}, err
-		}
-		for _, e := range entries {
-			if err := n.add(e); err != nil {
-				return Night{}, fmt.Errorf("run %s: entry %d: %w", run, e.Sequence, err)
-			}
-			after = e.Sequence
-		}
-		if len(entries) < page {
-			break
-		}
+	if err := each(ctx, book, run, n.add); err != nil {
+		return Night{}, err
 	}
 	taken, _, err := book.Taken(ctx, run)
 	if err != nil {
@@ -214,11 +200,7 @@ func (n Night) Text() string {
 	list("", n.Cuts)
 	list("", n.Interruptions)
 	for _, h := range n.Holds {
-		span := "held from " + when(h.From) + ", still"
-		if h.To != nil {
-			span = fmt.Sprintf("held from %s to %s (%s)", when(h.From), when(*h.To), spoken(h.To.Sub(h.From.Time)))
-		}
-		line("%s: %s", span, strings.Join(h.Why, "; "))
+		line("%s", h.sentence())
 	}
 	list("doubt: ", n.Doubts)
 	list("", n.Troubles)
@@ -246,21 +228,3 @@ func (n Night) quiet() bool {
 }
 
 func when(t protocol.Time) string { return t.UTC().Format("2006-01-02 15:04:05") }
-
-// spoken is a duration as recipes are written.
-func spoken(d time.Duration) string {
-	d = d.Round(time.Second)
-	var parts []string
-	for _, u := range []struct {
-		of   time.Duration
-		name string
-	}{{time.Hour, "h"}, {time.Minute, "min"}, {time.Second, "s"}} {
-		if k := d / u.of; k > 0 {
-			parts, d = append(parts, fmt.Sprintf("%d %s", k, u.name)), d%u.of
-		}
-	}
-	if len(parts) == 0 {
-		return "less than 1 s"
-	}
-	return strings.Join(parts, " ")
-}

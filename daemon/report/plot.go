@@ -7,46 +7,76 @@ import (
 	"math"
 	"strconv"
 	"strings"
+	"unicode/utf8"
 
+	"gemel/scan"
 	"gemel/scan/estimate"
 )
 
-// ErrNothingToDraw is returned where no result has a profile, a curve or values against a setting.
-var ErrNothingToDraw = errors.New("no result of this run has a profile, a curve or values against a setting to draw")
+// ErrNothingToDraw is returned where no result of a run has a value that a picture could show.
+var ErrNothingToDraw = errors.New("no result of this run has a value to draw")
 
-// The sheet, in units of the picture.
+// The sheet, in units of the picture: as wide as a telephone shows letters of this size readably.
 const (
-	sheetWidth               = 760.
-	left, right              = 84., 28.
-	mainHeight, residualHigh = 250., 76.
-	lineHigh                 = 16.
-	wrapAt                   = 104 // letters in a line
+	sheetWidth               = 480.
+	left, right              = 80., 16.
+	margin                   = 16.
+	mainHeight, residualHigh = 230., 70.
+	fontSize                 = 13.
+	lineHigh                 = 17.
+	letterWide               = 0.6 * fontSize // of the widest of the usual sans-serif faces, on average
+	wrapAt                   = 58             // letters in a line
+	titleAt                  = 44             // in a title, which is larger
 )
 
-// Plot draws the results as an SVG picture, one below the other, each under its sentence: readings as
-// circles with their counting uncertainty, the fit as a line, and what the fit leaves below it, in
-// units of the uncertainty. What was predicted is a broken line. One ink.
-func Plot(w io.Writer, all []estimate.Result) error {
-	var b strings.Builder
+// Picture is what can be drawn of one result.
+type Picture struct {
+	Number int // the result's place in the recipe, from 1
+	Kind   string
+	result estimate.Result
+	beside Beside
+}
+
+// Pictures lists what can be drawn of a run's results, in the recipe's order. One that has no value has
+// no picture.
+func Pictures(all []estimate.Result, beside Beside) []Picture {
+	var list []Picture
+	for i, r := range all {
+		p := Picture{i + 1, r.Kind, r, beside}
+		if _, ok := pictureOf(r); ok || r.Value != nil && (r.Drift != nil || r.Kind == string(scan.Efficiency)) {
+			list = append(list, p)
+		}
+	}
+	return list
+}
+
+// Draw draws the result as an SVG picture under its name, value and sentence, in one ink. Of a profile
+// or a curve: readings as circles with their counting uncertainty, the fit as a line, what was
+// predicted as a broken one, and what the fit leaves below it. Of an efficiency: the plateau, the
+// budget in quadrature and the spine of the night. Of a drift: each quantity of the references against
+// time, with its line, its bounds and what the run called bad.
+func (p Picture) Draw(w io.Writer) error {
 	s := &sheet{}
-	drawn := 0
-	for _, r := range all {
-		p, ok := pictureOf(r)
-		if ok {
-			drawn++
+	s.title(p.result, p.beside.title())
+	switch {
+	case p.result.Drift != nil:
+		s.drift(*p.result.Drift, p.beside)
+	case p.result.Kind == string(scan.Efficiency):
+		if one, ok := pictureOf(p.result); ok {
+			s.draw(one)
+		} else if one, ok := p.beside.plateau(p.result, p.Number-1); ok {
+			s.draw(one)
 		}
-		s.sentence(r)
-		if ok {
-			s.draw(p)
+		s.quadrature(p.result)
+		s.spine(p.beside)
+	default:
+		if one, ok := pictureOf(p.result); ok {
+			s.draw(one)
 		}
-		s.y += 26
 	}
-	if drawn == 0 {
-		return ErrNothingToDraw
-	}
-	fmt.Fprintf(&b, "<svg xmlns=\"http://www.w3.org/2000/svg\" viewBox=\"0 0 %g %g\" font-family=\"sans-serif\" font-size=\"12\" fill=\"none\" stroke=\"#222\">\n", sheetWidth, s.y)
-	fmt.Fprintf(&b, "<rect x=\"0\" y=\"0\" width=\"%g\" height=\"%g\" fill=\"#fff\" stroke=\"none\"/>\n%s</svg>\n", sheetWidth, s.y, s.b.String())
-	_, err := io.WriteString(w, b.String())
+	s.y += 16
+	_, err := fmt.Fprintf(w, "<svg xmlns=\"http://www.w3.org/2000/svg\" viewBox=\"0 0 %g %.0f\" font-family=\"sans-serif\" font-size=\"%g\" fill=\"none\" stroke=\"#222\">\n<rect x=\"0\" y=\"0\" width=\"%g\" height=\"%.0f\" fill=\"#fff\" stroke=\"none\"/>\n%s</svg>\n",
+		sheetWidth, s.y, fontSize, sheetWidth, s.y, s.b.String())
 	return err
 }
 
@@ -59,6 +89,7 @@ type picture struct {
 	hairlines  []hairline
 	residuals  []place // in units of the uncertainty
 	fromZero   bool
+	grains     bool // circles are filled where they are not hollow
 	key        string
 }
 
@@ -66,7 +97,8 @@ type place struct{ x, y float64 }
 
 type mark struct {
 	place
-	u float64
+	u      float64
+	hollow bool // not among those that make the result
 }
 
 type hairline struct {
@@ -110,7 +142,7 @@ func profiled(r estimate.Result) picture {
 		if rate != nil {
 			known = one.Expected/one.ExposureS - rate(at)
 		}
-		p.points = append(p.points, mark{place{at * scale, one.Counts/one.ExposureS - known}, math.Sqrt(math.Max(one.Counts, 1)) / one.ExposureS})
+		p.points = append(p.points, mark{place{at * scale, one.Counts/one.ExposureS - known}, math.Sqrt(math.Max(one.Counts, 1)) / one.ExposureS, false})
 		p.residuals = append(p.residuals, place{at * scale, one.Residual})
 	}
 	p.fitted = lineOf(rate, low, high, scale)
@@ -166,7 +198,7 @@ func curved(r estimate.Result) picture {
 			continue
 		}
 		low, high = math.Min(low, one.AgainstDeg), math.Max(high, one.AgainstDeg)
-		p.points = append(p.points, mark{place{one.AgainstDeg, one.AngleDeg}, one.U})
+		p.points = append(p.points, mark{place{one.AgainstDeg, one.AngleDeg}, one.U, false})
 		p.residuals = append(p.residuals, place{one.AgainstDeg, one.ResidualDeg / one.U})
 	}
 	fitted, predicted := r.Lines()
@@ -180,7 +212,7 @@ func bySetting(by estimate.BySetting) picture {
 		if one.Value == nil {
 			continue
 		}
-		p.points = append(p.points, mark{place{one.At, *one.Value}, one.OwnU})
+		p.points = append(p.points, mark{place{one.At, *one.Value}, one.OwnU, false})
 		p.fitted = append(p.fitted, place{one.At, one.LineAt})
 		p.residuals = append(p.residuals, place{one.At, (*one.Value - one.LineAt) / one.OwnU})
 	}
@@ -196,13 +228,24 @@ type sheet struct {
 func (s *sheet) line(format string, a ...any) { fmt.Fprintf(&s.b, format+"\n", a...) }
 
 // text stands on paper, whatever line passes behind it.
-func (s *sheet) text(x, y float64, anchor, text string) {
-	s.line(`<text x="%.1f" y="%.1f" text-anchor="%s" fill="#222" stroke="#fff" stroke-width="4" stroke-linejoin="round" paint-order="stroke">%s</text>`, x, y, anchor,
+func (s *sheet) text(x, y float64, anchor, text string) { s.lettered(x, y, anchor, "", text) }
+
+func (s *sheet) lettered(x, y float64, anchor, face, text string) {
+	s.line(`<text x="%.1f" y="%.1f" text-anchor="%s"%s fill="#222" stroke="#fff" stroke-width="4" stroke-linejoin="round" paint-order="stroke">%s</text>`, x, y, anchor, face,
 		strings.NewReplacer("&", "&amp;", "<", "&lt;", ">", "&gt;").Replace(text))
 }
 
-func (s *sheet) sentence(r estimate.Result) {
-	s.y += 8
+// title says what the picture is of, run and value first, and then the whole sentence.
+func (s *sheet) title(r estimate.Result, run string) {
+	s.y += 10
+	quantity := r.Quantity()
+	for _, row := range append(wrapped(strings.ToUpper(quantity[:1])+quantity[1:], titleAt), r.Stated()) {
+		s.y += 22
+		s.lettered(margin, s.y, "start", ` font-size="17" font-weight="bold"`, row)
+	}
+	s.y += 4
+	s.paragraph("run " + string(r.Run) + run)
+	s.y += 6
 	text := r.Sentence()
 	if r.Simulated != nil {
 		text += " Simulated."
@@ -211,41 +254,67 @@ func (s *sheet) sentence(r estimate.Result) {
 }
 
 func (s *sheet) paragraph(text string) {
-	for len(text) > 0 {
-		row := text
-		if len(row) > wrapAt {
-			if i := strings.LastIndexByte(row[:wrapAt], ' '); i > 0 {
-				row = row[:i]
-			}
-		}
+	for _, row := range wrapped(text, wrapAt) {
 		s.y += lineHigh
-		s.text(20, s.y, "start", row)
-		text = strings.TrimPrefix(text[len(row):], " ")
+		s.text(margin, s.y, "start", row)
 	}
 }
 
+// heading names a part of the picture.
+func (s *sheet) heading(text string) {
+	s.y += 14 + lineHigh
+	s.lettered(margin, s.y, "start", ` font-weight="bold"`, text)
+}
+
+func wrapped(text string, wide int) (rows []string) {
+	row := ""
+	for word := range strings.FieldsSeq(text) {
+		if row != "" && utf8.RuneCountInString(row)+1+utf8.RuneCountInString(word) > wide {
+			rows, row = append(rows, row), ""
+		}
+		if row != "" {
+			row += " "
+		}
+		row += word
+	}
+	return append(rows, row)
+}
+
 func (s *sheet) draw(p picture) {
+	s.y += 6
 	s.paragraph(p.key + ".")
-	top := s.y + 42
+	top := s.y + 20
+	if len(p.hairlines) > 0 {
+		top += 26 // their names
+	}
 	bottom := top + mainHeight
 	lowX, highX, lowY, highY := p.bounds()
 	x := func(v float64) float64 { return left + (v-lowX)/(highX-lowX)*(sheetWidth-left-right) }
 	y := func(v float64) float64 { return bottom - (v-lowY)/(highY-lowY)*mainHeight }
-	for _, v := range ticks(lowY, highY, 5) {
+	for _, v := range ticks(lowY, highY, 4) {
 		s.line(`<path d="M%.1f %.1fh-5" stroke-width="0.8"/>`, left, y(v))
 		s.text(left-9, y(v)+4, "end", plain(v))
 	}
 	s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="0.8"/>`, left, top, bottom)
-	s.upright(14, (top+bottom)/2, p.up)
+	s.upright(15, (top+bottom)/2, p.up)
 	foot := bottom + 18 + residualHigh
 	for i, h := range p.hairlines {
 		s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="0.5" stroke-dasharray="1 3"/>`, x(h.x), top-4, bottom)
-		s.text(x(h.x), top-8-float64(i%2)*12, "middle", h.text) // names of neighbours do not run into one another
+		// Names of neighbours do not run into one another.
+		anchor := "middle"
+		if n := len(p.hairlines); n == 3 && x(p.hairlines[2].x)-x(p.hairlines[0].x) < 100 {
+			anchor = [3]string{"end", "middle", "start"}[i]
+		}
+		s.text(x(h.x), top-8-float64(i%2)*15, anchor, h.text)
 	}
 	s.curve(p.predicted, x, y, ` stroke-dasharray="6 3"`)
 	s.curve(p.fitted, x, y, "")
 	for _, m := range p.points {
-		s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="0.7"/><circle cx="%.1f" cy="%.1f" r="2.6" fill="#fff"/>`, x(m.x), y(m.y-m.u), y(m.y+m.u), x(m.x), y(m.y))
+		fill := "#fff"
+		if p.grains && !m.hollow {
+			fill = "#222"
+		}
+		s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="0.7"/><circle cx="%.1f" cy="%.1f" r="2.6" fill="%s"/>`, x(m.x), y(m.y-m.u), y(m.y+m.u), x(m.x), y(m.y), fill)
 	}
 	// What is left.
 	most := 3.
@@ -261,12 +330,12 @@ func (s *sheet) draw(p picture) {
 		s.text(left-9, z(v)+4, "end", plain(v))
 	}
 	s.line(`<path d="M%.1f %.1fH%.1f" stroke-width="0.5"/>`, left, z(0), sheetWidth-right)
-	s.upright(14, mid, "left / u")
+	s.upright(15, mid, "left / u")
 	for _, r := range p.residuals {
-		s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="1.2"/>`, x(r.x), z(0), z(r.y))
+		s.line(`<path d="M%.1f %.1fV%.1f" stroke-width="1.2"/><circle cx="%.1f" cy="%.1f" r="1.3" fill="#222"/>`, x(r.x), z(0), z(r.y), x(r.x), z(r.y))
 	}
 	s.line(`<path d="M%.1f %.1fH%.1f" stroke-width="0.8"/>`, left, foot, sheetWidth-right)
-	for _, v := range ticks(lowX, highX, 6) {
+	for _, v := range spaced(lowX, highX, sheetWidth-left-right) {
 		s.line(`<path d="M%.1f %.1fv5" stroke-width="0.8"/>`, x(v), foot)
 		s.text(x(v), foot+18, "middle", plain(v))
 	}
@@ -334,6 +403,21 @@ func (p picture) bounds() (lowX, highX, lowY, highY float64) {
 		highY = lowY + 1
 	}
 	return lowX, highX, lowY, highY
+}
+
+// spaced are round numbers between two whose names fit side by side on so many units of the picture.
+func spaced(low, high, room float64) (list []float64) {
+	for least := 5; least > 0; least-- {
+		list = ticks(low, high, least)
+		wide := 0
+		for _, v := range list {
+			wide = max(wide, len(plain(v)))
+		}
+		if float64(len(list))*(float64(wide)+1.5)*letterWide <= room {
+			break
+		}
+	}
+	return list
 }
 
 // ticks are round numbers between two, at least so many.

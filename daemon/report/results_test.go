@@ -2,7 +2,6 @@ package report
 
 import (
 	"encoding/json"
-	"errors"
 	"math"
 	"strings"
 	"testing"
@@ -44,17 +43,28 @@ func TestOneResultIsAnObjectAndSeveralAreAListInIt(t *testing.T) {
 
 func TestAPictureNeedsSomethingToDraw(t *testing.T) {
 	var b strings.Builder
-	refused := estimate.Refused(estimate.Rows{Run: "r1"}, "peak", &estimate.Refusal{Reasons: []string{"no light"}})
-	if err := Plot(&b, []estimate.Result{refused}); !errors.Is(err, ErrNothingToDraw) || b.Len() > 0 {
-		t.Errorf("%v, %d bytes; want nothing drawn", err, b.Len())
+	draw := func(all ...estimate.Result) {
+		t.Helper()
+		for _, p := range Pictures(all, Beside{}) {
+			if err := p.Draw(&b); err != nil {
+				t.Fatal(err)
+			}
+		}
 	}
-	if err := Plot(&b, []estimate.Result{refused, aPeak(2)}); err != nil || strings.Count(b.String(), "<circle") != 9 || !strings.Contains(b.String(), "no light") {
-		t.Errorf("%v; want the one, and the other's reason", err)
+	refused := estimate.Refused(estimate.Rows{Run: "r1"}, "peak", &estimate.Refusal{Reasons: []string{"no light"}})
+	if draw(refused); b.Len() > 0 {
+		t.Errorf("%d bytes; want nothing drawn", b.Len())
+	}
+	if all := Pictures([]estimate.Result{refused, aPeak(2)}, Beside{}); len(all) != 1 || all[0].Number != 2 || all[0].Kind != "peak" {
+		t.Errorf("%d pictures; want one, of the second", len(all))
+	}
+	if draw(refused, aPeak(2)); strings.Count(b.String(), `r="2.6"`) != 9 {
+		t.Errorf("%d readings drawn; want 9", strings.Count(b.String(), `r="2.6"`))
 	}
 	named := aPeak(2)
 	named.Axis = "idler_arm"
-	if err := Plot(&b, []estimate.Result{named}); err != nil || !strings.Contains(b.String(), ">idler_arm / deg<") {
-		t.Errorf("%v; want the axis named", err)
+	if draw(named); !strings.Contains(b.String(), ">idler_arm / deg<") {
+		t.Error("want the axis named")
 	}
 	if strings.Contains(b.String(), "NaN") || strings.Contains(b.String(), "Inf") {
 		t.Error("the picture has places that are none")

@@ -9,6 +9,7 @@ import (
 	"unicode/utf8"
 
 	"gemel/protocol"
+	"gemel/scan"
 )
 
 // Result is a result with everything that is needed to check it. Its JSON is what `report --json`
@@ -270,17 +271,43 @@ func (r Result) Sentence() string {
 	if name == "" {
 		name = strings.ReplaceAll(r.Kind, "_", " ")
 	}
-	unit := ""
-	if r.Unit != "1" {
-		unit = " " + r.Unit
-	}
+	scale, unit := r.shownIn()
 	if i := r.Interval; i != nil && !r.symmetric() {
 		return fmt.Sprintf("The %s is %s%s, with a %.4g %% interval of %s to %s%s that is not symmetric (%s); %s.", name, figure(*r.Value, 4), unit, 100*r.Coverage,
 			figure(i.Low, 4), figure(i.High, 4), unit, r.KBecause, counts)
 	}
-	places := decimals(*r.Expanded)
+	places := decimals(scale * *r.Expanded)
 	return fmt.Sprintf("The %s is %s ± %s%s (expanded uncertainty, k = %.2f, %.4g %% coverage); %s.", name,
-		fixed(*r.Value, places), fixed(*r.Expanded, places), unit, *r.K, 100*r.Coverage, counts)
+		fixed(scale**r.Value, places), fixed(scale**r.Expanded, places), unit, *r.K, 100*r.Coverage, counts)
+}
+
+// shownIn is the factor and the unit, with its space, that a person reads a value in.
+func (r Result) shownIn() (scale float64, unit string) {
+	switch {
+	case r.Kind == string(scan.Drift) && r.Unit == "1":
+		return 100, " %" // a relative change: the tables under it have it so
+	case r.Unit == "1":
+		return 1, ""
+	}
+	return 1, " " + r.Unit
+}
+
+// Quantity names what the result is a number of.
+func (r Result) Quantity() string {
+	if r.quantity == "" {
+		return strings.ReplaceAll(r.Kind, "_", " ")
+	}
+	return strings.TrimSuffix(r.quantity, ",")
+}
+
+// Stated is the value with its standard uncertainty and unit; empty where there is no value.
+func (r Result) Stated() string {
+	if r.Value == nil || r.U == nil {
+		return ""
+	}
+	scale, unit := r.shownIn()
+	places := decimals(scale * *r.U)
+	return fmt.Sprintf("%s ± %s%s (u)", fixed(scale**r.Value, places), fixed(scale**r.U, places), unit)
 }
 
 // fixed prints so many decimals, and nothing never as less than nothing.
