@@ -2,6 +2,7 @@ package nighttest
 
 import (
 	"bytes"
+	"cmp"
 	"context"
 	"encoding/json"
 	"errors"
@@ -39,6 +40,15 @@ type Night struct {
 	Daemon bool          // one loop takes the runs from the queue, as serve does; else each is executed by itself, as run does
 	Model  *source.Model // of the bench, shared between nights; nil: made anew
 	Script
+	// Longest bounds it in bench time; 0: three days.
+	Longest time.Duration
+	// Zone is where the clock on the wall is that a schedule means; nil: UTC.
+	Zone *time.Location
+	// diary is what people do instead of asking for the recipes above and giving the script's orders.
+	// It is kept through all lives of a daemon, until it says that there is no more to do.
+	diary func(ctx context.Context, l *life, keep *keeper.Keeper) (done bool, err error)
+	// up is when a process that died is started again; nil: within half a minute.
+	up func(died time.Time) time.Time
 	// Wrap sabotages: it changes a part before it is used. For the table of sabotages only.
 	Wrap Sabotage
 }
@@ -160,6 +170,7 @@ type Sabotage struct {
 	Panics engine.Step // the engine panics once at this step
 	AtPart int         // at its Nth passing
 	Line   func([]Moment) []Moment
+	Facts  func(*Facts)
 }
 
 // Book is the logbook as keeper and courier see it together.
@@ -214,8 +225,7 @@ func (r *Result) Examine() Verdict {
 	return v
 }
 
-// longest bounds a night in bench time.
-const longest = 72 * time.Hour
+func (n *Night) longest() time.Duration { return cmp.Or(n.Longest, 72*time.Hour) }
 
 // Run runs a night in the caller's bubble, with the data folder given. The error is the test kit's
 // own, not the night's.
@@ -273,6 +283,7 @@ type kit struct {
 	mu      sync.Mutex
 	final   map[protocol.RunID]bool
 	over    chan struct{} // closed when every run is final
+	done    bool          // the diary is
 	journal []Moment
 	process []Moment
 	counts  line.Counts
@@ -305,9 +316,12 @@ func (k *kit) lives() error {
 		if err != nil || final {
 			return err
 		}
-		if time.Since(k.began) > longest {
-			k.stuck = fmt.Sprintf("the run is not final after %s", longest)
+		if most := k.longest(); time.Since(k.began) > most {
+			k.stuck = fmt.Sprintf("the run is not final after %s", most)
 			return nil
+		}
+		if k.up != nil {
+			time.Sleep(time.Until(k.up(time.Now())))
 		}
 		time.Sleep(17*time.Second + 331*time.Microsecond) // until somebody starts it again
 	}
@@ -403,7 +417,7 @@ func (k *kit) life() (final bool, err error) {
 		k.counts.Opened += c.Opened
 		k.counts.Lost += c.Lost
 	}
-	return k.allFinal() && !l.dead.Load(), err
+	return (k.done || k.diary == nil && k.allFinal()) && !l.dead.Load(), err
 }
 
 func (k *kit) allFinal() bool {
@@ -414,6 +428,9 @@ func (k *kit) allFinal() bool {
 
 // work executes the night's runs: as the daemon does, or each by itself.
 func (l *life) work(ctx context.Context, keep *keeper.Keeper) error {
+	if l.diary != nil {
+		return keep.Run(ctx)
+	}
 	if err := l.choose(ctx, keep); err != nil || ctx.Err() != nil {
 		return err
 	}
@@ -494,7 +511,10 @@ func (k *kit) plan(text string, accepted time.Time, earlier func(scan.EarlierAsk
 		return scan.Plan{}, err
 	}
 	facts := k.Bench.Facts()
-	facts.AcceptedAt, facts.Earlier = accepted, earlier
+	facts.AcceptedAt, facts.Earlier = accepted.UTC(), earlier
+	if k.Zone != nil {
+		facts.AcceptedAt = accepted.In(k.Zone)
+	}
 	return r.Plan(facts)
 }
 
@@ -574,6 +594,14 @@ func (l *life) people(ctx context.Context, keep *keeper.Keeper) error {
 	const look = 7 * time.Minute
 	const enough = 12 // fruitless resumes, after which nobody comes again
 	since, resumed := time.Time{}, 0
+	if l.diary != nil {
+		done, err := l.diary(ctx, l, keep)
+		if done {
+			l.kit.done = true
+			l.main.Stop()
+		}
+		return err
+	}
 	for {
 		wait := look + 13*time.Nanosecond
 		if l.orders < len(l.Orders) {
@@ -607,7 +635,7 @@ func (l *life) people(ctx context.Context, keep *keeper.Keeper) error {
 			since = time.Time{}
 			resumed++
 		}
-		if time.Since(l.began) > longest {
+		if time.Since(l.began) > l.longest() {
 			l.ask(ctx, keep, "stop")
 		}
 	}
@@ -664,7 +692,7 @@ func (r *recorder) record(e protocol.Entry) {
 	r.life.journal = append(r.life.journal, Moment{At: time.Now().UTC(), Journal: &e})
 	if k := r.life.kit; e.Kind == protocol.EventEntry && e.Run != protocol.BenchRun && bytes.Contains(e.Body, []byte(`"kind":"ended"`)) {
 		k.final[e.Run] = true
-		if len(k.runs) > 0 && len(k.final) == len(k.runs) {
+		if len(k.runs) > 0 && len(k.final) == len(k.runs) && k.diary == nil {
 			close(k.over)
 		}
 	}
@@ -763,28 +791,15 @@ func cutLast(id string) (run, number string, found bool) {
 func (k *kit) result() (*Result, error) {
 	k.virtual.World.Settle()
 	r := &Result{Facts: FactsOf(k.Bench), Took: time.Since(k.began), Lives: k.lived, Lines: k.counts, Stuck: k.stuck, Published: len(k.sink.stored)}
-	for i, text := range k.recipes() {
-		if i >= len(k.runs) {
-			break
-		}
-		plan, err := k.plan(text, k.began, nil)
-		if err != nil {
-			return nil, err
-		}
-		r.Facts.Plans[k.runs[i]] = plan
-	}
-	if last, ok := r.Facts.Plans[k.run()]; ok {
-		r.Facts.Visits = len(last.Visits())
-		if last.Dark != nil {
-			r.Facts.MinDarks = map[bool]int{true: 1}[last.Dark.AtStart] + map[bool]int{true: 1}[last.Dark.AtEnd]
-		}
-	}
 	r.Killed = k.killed
 	r.Facts.Noticed = k.counts.Retried + k.counts.Missing + k.counts.Strangers + k.counts.Strays + k.counts.Chatter + k.counts.Resynchronised + k.counts.Lost + k.counts.Restarts
 	r.Facts.CaughtUp = k.stuck == ""
 	r.Line = Merge(World(k.ledger.Records()), k.journal, k.sink.moments, k.process)
 	if k.Wrap.Line != nil {
 		r.Line = k.Wrap.Line(r.Line)
+	}
+	if k.Wrap.Facts != nil {
+		k.Wrap.Facts(&r.Facts)
 	}
 	book, err := logbook.OpenReadOnly(k.data + "/logbook.db")
 	if err != nil {
@@ -799,6 +814,9 @@ func (k *kit) result() (*Result, error) {
 		}
 		r.State, r.Reason = row.State, row.Reason
 		r.Ends = append(r.Ends, End{run, row.State, row.Reason})
+		if r.Facts.Plans[run], err = k.planned(book, row); err != nil {
+			return nil, err
+		}
 		for reading, err := range book.Readings(context.Background(), run) {
 			if err != nil {
 				return nil, err
@@ -810,7 +828,24 @@ func (k *kit) result() (*Result, error) {
 			}
 		}
 	}
+	if last, ok := r.Facts.Plans[k.run()]; ok {
+		r.Facts.Visits = len(last.Visits())
+	}
 	return r, nil
+}
+
+// planned is the plan of a run as its journal has it: reckoned from the moment at which it was accepted,
+// with the values of earlier results that it took, if it got as far.
+func (k *kit) planned(book *logbook.Book, row logbook.RunRow) (scan.Plan, error) {
+	values, decided, err := book.Taken(context.Background(), row.Run)
+	if err != nil {
+		return scan.Plan{}, err
+	}
+	var earlier func(scan.EarlierAsk) (scan.EarlierSource, error)
+	if decided {
+		earlier = func(ask scan.EarlierAsk) (scan.EarlierSource, error) { return logbook.Again(values, ask) }
+	}
+	return k.plan(row.RecipeText, row.QueuedAt.Time, earlier)
 }
 
 // FactsOf is what the judge must know of a bench.
