@@ -47,13 +47,25 @@ func TestMain(m *testing.M) {
 		}
 		defer os.RemoveAll(dir)
 		binary = filepath.Join(dir, "gemel")
-		if out, err := exec.Command("go", "build", "-tags", "killpoints", "-o", binary, ".").CombinedOutput(); err != nil {
+		args := []string{"build", "-tags", "killpoints", "-o", binary}
+		if raced {
+			args = append(args, "-race", "-gcflags=modernc.org/...=-race=false") // as .ci/run, so that it is compiled once
+			if flag.Lookup("test.skip").Value.String() == "" {
+				_ = flag.Set("test.skip", notRaced)
+			}
+		}
+		if out, err := exec.Command("go", append(args, ".")...).CombinedOutput(); err != nil {
 			fmt.Fprintf(os.Stderr, "go build: %v\n%s", err, out)
 			return 1
 		}
 		return m.Run()
 	}())
 }
+
+// notRaced are the tests that the race detector is spared. They count time, memory or descriptors, or
+// go through many deaths of the program, each a start of it; what runs at the same time in it does so
+// in the others too, and in the nights of daemon/nighttest.
+const notRaced = "Killed|Outlives|DieAndComeBack|AStop|Hostile|Largest|PluggedIn|DeadLine|TakesNoBytes|BrokersFolder|MistakeInAFile|ABugInTheProgram|PulledPlug|ClosedTerminal|Predict|Batch|PictureIsWhole|OnlyTheListed|WhatTheReader|EveryFileInConfigs"
 
 // patience bounds every wait of these tests. Nothing takes so long unless it hangs.
 const patience = 90 * time.Second
@@ -98,9 +110,16 @@ type program struct {
 // launch starts gemel in the background. It is killed at the end of the test if it lives then.
 func launch(t *testing.T, env []string, args ...string) *program {
 	t.Helper()
+	return launchBy(t, nil, env, args...)
+}
+
+// launchBy is launch for another user; nil is ours.
+func launchBy(t *testing.T, user *syscall.Credential, env []string, args ...string) *program {
+	t.Helper()
 	p := &program{t: t, cmd: exec.Command(binary, args...), out: newOutput(), err: newOutput(), ended: make(chan struct{})}
 	p.cmd.Env = append(os.Environ(), env...)
 	p.cmd.Stdout, p.cmd.Stderr = p.out, p.err
+	p.cmd.SysProcAttr = &syscall.SysProcAttr{Credential: user}
 	if err := p.cmd.Start(); err != nil {
 		t.Fatal(err)
 	}

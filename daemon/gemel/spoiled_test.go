@@ -97,6 +97,25 @@ func spoilings() []spoiling {
 			}
 			return nil
 		})},
+		{name: "every file is gone, and the folders are there", do: eachFile(os.Remove)},
+		{name: "an older copy stands there", do: func(t *testing.T, store string) {
+			if err := os.RemoveAll(store); err != nil {
+				t.Fatal(err)
+			}
+			if err := os.CopyFS(store, os.DirFS(olderThan(store))); err != nil {
+				t.Fatal(err)
+			}
+		}},
+		{name: "a file stands where the server's own folder was", do: func(t *testing.T, store string) {
+			if err := os.RemoveAll(filepath.Join(store, "jetstream")); err != nil {
+				t.Fatal(err)
+			}
+			writeFile(t, filepath.Join(store, "jetstream"), "")
+		}, mend: func(t *testing.T, store string) {
+			if err := os.Remove(filepath.Join(store, "jetstream")); err != nil {
+				t.Fatal(err)
+			}
+		}},
 		{name: "a file stands where the folder was", do: func(t *testing.T, store string) {
 			if err := os.RemoveAll(store); err != nil {
 				t.Fatal(err)
@@ -108,6 +127,24 @@ func spoilings() []spoiling {
 			}
 		}},
 	}
+}
+
+func olderThan(store string) string { return store + ".older" }
+
+// copyAside makes the copy that will be older some day. Files that come and go meanwhile, under a
+// server that works, are copied as they were met.
+func copyAside(t *testing.T, store string) {
+	t.Helper()
+	var err error
+	for range 100 {
+		if err = os.RemoveAll(olderThan(store)); err != nil {
+			t.Fatal(err)
+		}
+		if err = os.CopyFS(olderThan(store), os.DirFS(store)); err == nil {
+			return
+		}
+	}
+	t.Fatal(err)
 }
 
 // few is the short form. With -short it is one.
@@ -219,9 +256,12 @@ func TestABrokersFolderThatWasDamagedIsFilledAgainFromTheJournal(t *testing.T) {
 	finished := func(r logbook.RunRow) bool { return r.State == protocol.Finished }
 	awaitRow(t, p, data, started(t, data, shortRecipe, "first"), "finished", finished)
 	mustCatchUp(t, p, data)
+	copyAside(t, filepath.Join(data, "nats"))
+	awaitRow(t, p, data, started(t, data, shortRecipe, "second"), "finished", finished)
+	mustCatchUp(t, p, data)
 	all := spoilings()
 	if !*realAll {
-		all = few(all, "every file is cut in half", "the end of the messages is gone", "a file stands where the folder was")
+		all = few(all, "every file is cut in half", "the end of the messages is gone", "an older copy stands there", "a file stands where the folder was")
 	}
 	for i, s := range all {
 		began := time.Now()
@@ -258,7 +298,7 @@ func TestABrokersFolderThatIsDamagedMeanwhileHoldsNoReadingUp(t *testing.T) {
 	long := strings.Replace(shortRecipe, "dwell:", "repeat: {times: 1000, as: passes}\ndwell:", 1)
 	all := spoilings()
 	if !*realAll {
-		all = few(all, "every file is empty")
+		all = few(all, "every file is empty", "an older copy stands there")
 	}
 	dir := t.TempDir()
 	bench, lines := quick(t, dir), filepath.Join(dir, "lines")
@@ -278,6 +318,10 @@ func TestABrokersFolderThatIsDamagedMeanwhileHoldsNoReadingUp(t *testing.T) {
 		}
 		run := started(t, data, long, "long")
 		_, gates = ledger.await(t, gates, "a gate", gateClosed)
+		copyAside(t, filepath.Join(data, "nats"))
+		for range 5 {
+			_, gates = ledger.await(t, gates, "a gate", gateClosed)
+		}
 		s.do(t, filepath.Join(data, "nats"))
 		spoiled := time.Now()
 		longest, last := time.Duration(0), spoiled
@@ -305,4 +349,94 @@ func TestABrokersFolderThatIsDamagedMeanwhileHoldsNoReadingUp(t *testing.T) {
 		p.wait()
 		t.Logf("%s: %s at most between gates, %s in all", s.name, longest.Round(time.Millisecond), time.Since(began).Round(10*time.Millisecond))
 	}
+}
+
+// A folder that the daemon may not write to is said by its name at the start, and held up no reading
+// while it serves.
+func TestABrokersFolderThatIsNotWritableIsNamedAndHoldsNoReadingUp(t *testing.T) {
+	t.Parallel()
+	dir, err := os.MkdirTemp("", "gemel-unwritable-") // of all users, which t.TempDir is not everywhere
+	if err != nil {
+		t.Fatal(err)
+	}
+	t.Cleanup(func() { _ = os.RemoveAll(dir) })
+	data := filepath.Join(dir, "data")
+	store := filepath.Join(data, "nats")
+	if err := os.Mkdir(data, 0o755); err != nil {
+		t.Fatal(err)
+	}
+	var user *syscall.Credential
+	if os.Getuid() == 0 { // whom no permission binds: the daemon is somebody else then
+		user = &syscall.Credential{Uid: 65534, Gid: 65534}
+		for _, path := range []string{dir, filepath.Dir(binary)} {
+			if err := os.Chmod(path, 0o755); err != nil {
+				t.Fatal(err)
+			}
+		}
+		if err := os.Chown(data, 65534, 65534); err != nil {
+			t.Skipf("SKIPPED: root cannot give a folder away here, and nothing forbids root to write: %v", err)
+		}
+	}
+	args := []string{"serve", "--bench", quick(t, dir), "--data", data}
+	live := func() (*program, bool) {
+		p := launchBy(t, user, nil, args...)
+		return p, p.says(p.err, `"message":"serving"`)
+	}
+	mode := func(dirs os.FileMode) {
+		t.Helper()
+		var all []string
+		if err := filepath.WalkDir(store, func(path string, d fs.DirEntry, err error) error {
+			if err == nil && d.IsDir() {
+				all = append(all, path)
+			}
+			return err
+		}); err != nil {
+			t.Fatal(err)
+		}
+		for _, path := range all {
+			if err := os.Chmod(path, dirs); err != nil {
+				t.Fatal(err)
+			}
+		}
+	}
+	end := func(p *program) {
+		t.Helper()
+		p.signal(syscall.SIGTERM)
+		if code := p.wait(); code != exitDone {
+			t.Fatalf("serve: exit code %d\n%s", code, p.err)
+		}
+	}
+	finished := func(r logbook.RunRow) bool { return r.State == protocol.Finished }
+	p, ok := live()
+	if !ok {
+		t.Fatalf("serve: %s", p.err)
+	}
+	mode(0o500)
+	awaitRow(t, p, data, started(t, data, strings.Replace(shortRecipe, "dwell:", "repeat: {times: 3, as: passes}\ndwell:", 1), "meanwhile"), "finished", finished)
+	var longest time.Duration
+	var last time.Time
+	for _, e := range entriesOf(t, data) {
+		if at := headOf(t, e.Entry).At.Time; e.Kind == protocol.ReadingEntry {
+			if !last.IsZero() {
+				longest = max(longest, at.Sub(last))
+			}
+			last = at
+		}
+	}
+	if longest > 4*time.Second {
+		t.Errorf("%s between two readings; want nothing to wait for the broker", longest)
+	}
+	meanwhile := p.err.String()
+	end(p)
+	p, ok = live()
+	if ok || p.wait() != exitFailed || !strings.Contains(p.err.String(), store) || !strings.Contains(p.err.String(), "not writable") {
+		t.Errorf("serve says %q; want it to end with code 1 and a word on %s", p.err, store)
+	}
+	t.Logf("%s at most between readings; the next start: %s\nmeanwhile: %s", longest.Round(time.Millisecond), strings.TrimSpace(p.err.String()), meanwhile)
+	mode(0o700)
+	if p, ok = live(); !ok {
+		t.Fatalf("serve: %s", p.err)
+	}
+	mustCatchUp(t, p, data)
+	end(p)
 }
