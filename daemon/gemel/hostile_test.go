@@ -156,10 +156,10 @@ func (v *victim) arrange() {
 				if r, err := k.Hold(ctx, protocol.RunRequest{Run: v.runs[0], Who: "the harness"}); err == nil && r.State == protocol.Holding {
 					break
 				}
-				time.Sleep(time.Millisecond)
+				<-time.After(time.Millisecond)
 			}
 		}
-		time.Sleep(time.Millisecond)
+		<-time.After(time.Millisecond)
 	}
 }
 
@@ -641,7 +641,11 @@ func TestHostileRequestsAreAnsweredAndDoNoHarm(t *testing.T) {
 	idle, held := newVictim(t, false), newVictim(t, true)
 	idle.calm, held.calm = runtime.NumGoroutine(), runtime.NumGoroutine()
 	codes := map[string]int{}
-	for seed := *hostileSeed; seed < *hostileSeed+*hostileCount && !t.Failed(); seed++ {
+	count := *hostileCount
+	if testing.Short() {
+		count = min(count, 80)
+	}
+	for seed := *hostileSeed; seed < *hostileSeed+count && !t.Failed(); seed++ {
 		onHeld, q := drawn(seed)
 		v := idle
 		if onHeld {
@@ -653,7 +657,7 @@ func TestHostileRequestsAreAnsweredAndDoNoHarm(t *testing.T) {
 		}
 	}
 	t.Logf("answers by code: %v", codes)
-	if *hostileCount >= 250 && (codes[""] == 0 || codes["400"] == 0 || codes["408"] == 0) {
+	if count >= 250 && (codes[""] == 0 || codes["400"] == 0 || codes["408"] == 0) {
 		t.Errorf("answers by code: %v; want some accepted, some refused and some late, or nothing was tried", codes)
 	}
 }
