@@ -100,6 +100,9 @@ const (
 	slopeNoise = 64 << 10
 	perReading = 4   // bytes
 	perVisit   = 160 // bytes
+	// lateReaders are the descriptors of the logbook's second and third reader, a file and its log each:
+	// they are opened when a question first comes while another is answered, and stay.
+	lateReaders = 4
 	// mostWAL is what the logbook promises: 16 MiB, and what 64 appends may add before it looks again.
 	mostWAL = 16<<20 + 64*16<<10
 )
@@ -359,12 +362,16 @@ func (l *longRun) flat() {
 	if most := slopeNoise + perVisit*over; within > most {
 		t.Errorf("the heap grew by %.0f bytes within a run, over %.0f readings; want at most %.0f", within, over, most)
 	}
-	for what, of := range map[string]func(sample) float64{
-		"goroutines":  func(s sample) float64 { return float64(s.goroutines) },
-		"descriptors": func(s sample) float64 { return float64(s.files) },
+	for _, c := range []struct {
+		what string
+		of   func(sample) float64
+		more float64
+	}{
+		{"goroutines", func(s sample) float64 { return float64(s.goroutines) }, 0},
+		{"descriptors", func(s sample) float64 { return float64(s.files) }, lateReaders},
 	} {
-		if a, b := median(before, of), median(last, of); a != b {
-			t.Errorf("%s: %g in the second third, %g in the last; want the same", what, a, b)
+		if a, b := median(before, c.of), median(last, c.of); b > a+c.more {
+			t.Errorf("%s: %g in the second third, %g in the last; want at most %g", c.what, a, b, a+c.more)
 		}
 	}
 	for _, s := range l.samples {
