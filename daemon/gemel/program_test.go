@@ -38,6 +38,9 @@ func TestMain(m *testing.M) {
 	flag.Set("rapid.seed", "20310203") // the same draws every time; -rapid.seed overrides
 	flag.Parse()
 	os.Exit(func() int {
+		if flag.Lookup("test.fuzz").Value.String() != "" { // each worker of the fuzzer starts here, and needs no program
+			return m.Run()
+		}
 		dir, err := os.MkdirTemp("", "gemel-test-")
 		if err != nil {
 			fmt.Fprintln(os.Stderr, err)
