@@ -661,24 +661,3 @@ func TestHostileRequestsAreAnsweredAndDoNoHarm(t *testing.T) {
 		t.Errorf("answers by code: %v; want some accepted, some refused and some late, or nothing was tried", codes)
 	}
 }
-
-// FuzzRequests sends what a coverage-guided fuzzer finds to two live daemons.
-func FuzzRequests(f *testing.F) {
-	for i, h := range honest {
-		f.Add(uint8(i), uint64(0), []byte(h.body))
-		f.Add(uint8(i), uint64(i+1), []byte(h.body))
-	}
-	idle, held := newVictim(f, false), newVictim(f, true)
-	f.Fuzz(func(t *testing.T, which uint8, seed uint64, body []byte) {
-		idle.t, held.t = t, t
-		v := idle
-		if which&0x80 != 0 {
-			v = held
-		}
-		if seed != 0 {
-			body = twisted(rand.New(rand.NewPCG(seed, 18)), body)
-		}
-		v.calm = runtime.NumGoroutine()
-		v.attack(request{verb: honest[int(which&0x7f)%len(honest)].verb, body: body})
-	})
-}

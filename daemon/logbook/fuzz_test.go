@@ -5,6 +5,7 @@ import (
 	"bytes"
 	"encoding/csv"
 	"encoding/json"
+	"fmt"
 	"os"
 	"path/filepath"
 	"reflect"
@@ -21,13 +22,15 @@ func FuzzExport(f *testing.F) {
 	f.Add("a night", "pump low", "pump_power", "mW")
 	f.Add("a\nb\r\n# c", `"quoted", with a comma`, "s\x00e\u2028nsor", "")
 	f.Add("=1+1", "-", "=cmd", "\xff")
+	b, err := Open(f.TempDir())
+	if err != nil {
+		f.Fatal(err)
+	}
+	f.Cleanup(func() { _ = b.Close() })
+	runs := 0
 	f.Fuzz(func(t *testing.T, title, reason, sensor, unitName string) {
-		b, err := Open(t.TempDir())
-		if err != nil {
-			t.Fatal(err)
-		}
-		defer b.Close()
-		h := header("20310203T200000Z-f1", "")
+		runs++
+		h := header(protocol.RunID(fmt.Sprintf("20310203T200000Z-f%d", runs)), "")
 		h.Title = title
 		if _, err := b.NewRun(t.Context(), h, event(h.Run, 1, protocol.OperatorDid, protocol.Queued, "asked for")); err != nil {
 			return // refused, which other tests look at
