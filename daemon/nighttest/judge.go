@@ -36,12 +36,13 @@ import (
 //   - light above a trip rate closes the detector's shutter at once;
 //   - a controller that restarted is written down before any angle of its is believed again;
 //   - each kill of a run that was under way is followed by an interruption;
-//   - what places, lights, planned, effect and waits say in their files.
+//   - what places, lights, planned, turns, effect and waits say in their files.
 func Judge(line []Moment, facts Facts) []string { return Examine(line, facts).Wrong }
 
 // Verdict is what a night comes to.
 type Verdict struct {
 	Wrong   []string
+	Said    []string // the forms of the sentences in Wrong, as the judge's source has them
 	Effects []Effect
 }
 
@@ -72,7 +73,7 @@ func Examine(line []Moment, facts Facts) Verdict {
 		}
 	}
 	j.close()
-	v := Verdict{Wrong: j.wrong}
+	v := Verdict{Wrong: j.wrong, Said: j.said}
 	for _, e := range j.effects {
 		noticed := e.trouble.Wired() && facts.Noticed > 0
 		v.Effects = append(v.Effects, Effect{Kind: e.trouble.Kind, Surfaced: e.surfaced || noticed, Shown: e.surfaced || e.shown || noticed})
@@ -84,6 +85,7 @@ type judge struct {
 	facts Facts
 	now   time.Time
 	wrong []string
+	said  []string // the forms of what is wrong
 
 	runs      map[protocol.RunID]*runState
 	durable   []string // ids in the order of commit
@@ -109,6 +111,7 @@ type judge struct {
 	places      places
 	lights      lights
 	waits       waits
+	turns       turns
 	pumpMoves   bool                // its blade is on its way to be open
 	moveStarted time.Time           // of the last motion that is no search
 	out         map[string]bool     // devices whose plug is out
@@ -139,22 +142,20 @@ type gate struct {
 }
 
 type runState struct {
-	next         int64
-	state        protocol.State
-	causes       []protocol.Cause
-	began        bool
-	accepted     map[[2]int]int64
-	givenUp      int
-	darksGivenUp int
-	darks        int
-	owed         bool   // killed while under way: an interruption has to come
-	guard        string // that broke last
-	unreached    string // what in the present hold said that the rest state was not reached
-	counting     bool   // a reading was taken since it last began or went on: all is connected
-	planned      *planned
+	next      int64
+	state     protocol.State
+	causes    []protocol.Cause
+	began     bool
+	accepted  map[[2]int]int64
+	owed      bool   // killed while under way: an interruption has to come
+	guard     string // that broke last
+	unreached string // what in the present hold said that the rest state was not reached
+	counting  bool   // a reading was taken since it last began or went on: all is connected
+	planned   *planned
 }
 
 func (j *judge) say(format string, args ...any) {
+	j.said = append(j.said, format)
 	j.wrong = append(j.wrong, j.now.UTC().Format("15:04:05.000")+" "+fmt.Sprintf(format, args...))
 }
 
@@ -333,6 +334,9 @@ func (j *judge) journal(e *protocol.Entry) {
 	if e.Sequence != r.next {
 		j.say("run %s: entry %d became durable where %d was due", e.Run, e.Sequence, r.next)
 	}
+	if e.Sequence == 1 && r.next == 1 && e.Run != protocol.BenchRun {
+		j.asked(e.Run)
+	}
 	r.next = e.Sequence + 1
 	j.durable = append(j.durable, e.ID())
 	if j.bodies == nil {
@@ -368,6 +372,8 @@ func (j *judge) journal(e *protocol.Entry) {
 			return
 		}
 		j.event(r, &ev)
+	case protocol.ResultEntry:
+		j.result(fmt.Sprintf("run %s", e.Run), e)
 	}
 }
 
@@ -381,12 +387,12 @@ func (j *judge) reading(r *runState, b *protocol.Reading) {
 		slices = append([]protocol.Slice{*b.Glance}, slices...)
 	}
 	var last *gate
-	for _, s := range slices {
+	for i, s := range slices {
 		if g := j.explain(where, s); g != nil {
 			last = g
 			if b.Accepted {
 				j.angle(b, g)
-				j.light(where, b, g)
+				j.light(where, b, g, b.Glance != nil && i == 0)
 			}
 		}
 	}
@@ -424,23 +430,24 @@ func (j *judge) reading(r *runState, b *protocol.Reading) {
 		return
 	}
 	j.accepted(where, b)
-	switch b.Kind {
-	case protocol.Light:
+	if b.Kind == protocol.Light {
 		key := [2]int{*b.Point, *b.Visit}
 		if before, twice := r.accepted[key]; twice {
 			j.say("%s: point %d visit %d was accepted already as entry %d", where, key[0], key[1], before)
 		}
 		r.accepted[key] = b.Sequence
-	case protocol.Dark:
-		r.darks++
 	}
 	j.totals(where, b)
 }
 
 // light checks what light there truly was during a gate of an accepted reading, and its times.
-func (j *judge) light(where string, b *protocol.Reading, g *gate) {
+func (j *judge) light(where string, b *protocol.Reading, g *gate, isGlance bool) {
 	const slack = 50 * time.Millisecond // exchanges
-	if isGlance := b.StartedAt.After(g.opened.Add(slack)); b.EndedAt.Add(slack).Before(g.closed) || isGlance && (b.Glance == nil || g.closed.After(b.StartedAt.Add(slack))) {
+	began, ended := b.StartedAt.Add(-slack), b.EndedAt.Add(slack)
+	if isGlance {
+		began, ended = time.Time{}, b.StartedAt.Add(slack)
+	}
+	if g.opened.Before(began) || g.closed.After(ended) {
 		j.say("%s is said to last from %s to %s; its gate %d lasted from %s to %s", where, b.StartedAt, b.EndedAt, g.tag, g.opened.UTC(), g.closed.UTC())
 	}
 	seen := g.truth.Seen
@@ -448,7 +455,6 @@ func (j *judge) light(where string, b *protocol.Reading, g *gate) {
 		return
 	}
 	// A glance is no data, and too short for a latched detector to be told from a dark one.
-	isGlance := b.Glance != nil && g.opened.Before(b.StartedAt.Time)
 	for _, d := range j.facts.Detectors {
 		at := seen.Signal
 		if d.Name == "idler" {
@@ -550,24 +556,19 @@ func (j *judge) totals(where string, b *protocol.Reading) {
 func (j *judge) event(r *runState, ev *protocol.Event) {
 	where := fmt.Sprintf("run %s: %s", ev.Run, ev.Kind)
 	if ev.Run == protocol.BenchRun {
+		j.reordered(ev)
 		return
 	}
 	switch ev.Kind {
 	case protocol.Began:
+		if _, known := j.facts.Plans[ev.Run]; !known {
+			j.say("%s, and nobody asked for it", where)
+		}
+		j.turn(where, ev.Run)
 		j.current, r.began = ev.Run, true
 	case protocol.Interrupted:
 		j.current, r.owed, j.orphans = ev.Run, false, false
 		j.gates = nil // what was open when the process died is named by this
-	case protocol.SetAside:
-		switch task, _ := ev.Detail["task"].(string); task {
-		case "light":
-			r.givenUp++
-		case "rest":
-			left, _ := ev.Detail["left_out"].(float64)
-			r.givenUp += int(left)
-		default:
-			r.darksGivenUp++
-		}
 	case protocol.Doubted:
 		from, _ := ev.Detail["from_sequence"].(float64)
 		to, _ := ev.Detail["to_sequence"].(float64)
@@ -582,6 +583,9 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 	}
 	if r.state.Final() {
 		j.say("%s after the run was %s for ever", where, r.state)
+	}
+	if ev.Kind == protocol.Ended && ev.State == protocol.Finished && !r.state.Final() {
+		j.turns.finished = append(j.turns.finished, ev.Run)
 	}
 	r.state, r.causes = ev.State, ev.Causes
 	if name, ok := ev.Detail["guard"].(string); ok && ev.Kind == protocol.GuardBroken {
@@ -610,14 +614,6 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 	}
 	if r.state == protocol.Holding && len(r.causes) == 0 {
 		j.say("%s: holding without a cause", where)
-	}
-	if _, known := j.facts.Plans[ev.Run]; !known && ev.Kind == protocol.Ended && ev.State == protocol.Finished && j.facts.Visits > 0 {
-		if got := len(r.accepted) + r.givenUp; got < j.facts.Visits {
-			j.say("%s: finished with %d visits accepted and %d given up; want %d", where, len(r.accepted), r.givenUp, j.facts.Visits)
-		}
-		if r.darks+r.darksGivenUp < j.facts.MinDarks {
-			j.say("%s: finished with %d darks; want %d at least", where, r.darks, j.facts.MinDarks)
-		}
 	}
 	if ev.Kind == protocol.Ended && ev.Text == "" {
 		j.say("%s without a reason", where)

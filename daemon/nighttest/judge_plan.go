@@ -28,6 +28,7 @@ type planned struct {
 	done    map[scan.Visit]bool
 	cursor  int
 	cut     bool           // the rest is left out
+	warm    bool           // the warm-up is over
 	failed  map[string]int // by what is taken
 	series  map[protocol.ReadingKind]*repeated
 	wrote   time.Time // when the run's last entry became durable
@@ -92,8 +93,11 @@ func (j *judge) decided(b *protocol.Points) {
 		}
 	}
 	if b.Refined == 0 {
+		if len(p.points) == 0 {
+			j.earlier(where, p, b)
+		}
 		for i, q := range b.Points {
-			if n := len(p.points) + i; n < len(p.plan.Points) && p.plan.Repeat.Times > 0 && len(p.plan.Earlier) == 0 && !sameTargets(q, p.plan.Points[n]) {
+			if n := len(p.points) + i; n < len(p.plan.Points) && p.plan.Repeat.Times > 0 && len(p.plan.Open()) == 0 && !sameTargets(q, p.plan.Points[n]) {
 				j.say("%s: point %d is %+v; the plan has %+v", where, n, q, p.plan.Points[n])
 			}
 		}
@@ -156,6 +160,7 @@ func (j *judge) taken(where string, b *protocol.Reading) {
 	if !p.known {
 		return
 	}
+	j.due(where, p, b)
 	j.attempts(where, p, b)
 	j.settings(where, b)
 	j.sensors(where, b)
@@ -185,6 +190,9 @@ func (j *judge) visit(where string, p *planned, b *protocol.Reading) {
 	if v.Point >= len(p.points) {
 		j.say("%s is of point %d, and %d are decided", where, v.Point, len(p.points))
 		return
+	}
+	if p.cut {
+		j.say("%s is light, and what is left was left out before it", where)
 	}
 	if p.visited() {
 		j.say("%s is of point %d visit %d, and all visits were made", where, v.Point, v.Visit)
@@ -392,7 +400,9 @@ func (j *judge) follow(where string, ev *protocol.Event) {
 		}
 	case protocol.WentOn, protocol.GuardMended:
 		_, mended := ev.Detail["cause"]
-		if _, warm := ev.Detail["warm_up"]; !mended && !warm {
+		if _, warm := ev.Detail["warm_up"]; warm {
+			j.steady(where, p)
+		} else if !mended {
 			clear(p.failed)
 		}
 	case protocol.TakenAgain, protocol.Held:

@@ -138,7 +138,7 @@ func (j *judge) verdicts() {
 			j.say("%s took effect, and none of %v followed in %d readings", e.trouble, e.trouble.Surfaces().Events, e.readings)
 		}
 	}
-	if wired > 2*j.lives && j.facts.CaughtUp && j.facts.Noticed == 0 {
+	if wired > 2*j.lives && j.facts.CaughtUp && j.facts.AskedAgain == 0 {
 		j.say("%d troubles of lines took effect, and no line noticed anything", wired)
 	}
 }

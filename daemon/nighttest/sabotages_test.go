@@ -227,12 +227,14 @@ func (s *tardy) Close(ctx context.Context) error {
 	return s.Shutter.Close(context.WithoutCancel(ctx))
 }
 
-func protectLate() Sabotage {
-	return Sabotage{Bench: func(b *engine.Bench) {
-		for i := range b.Detectors {
-			b.Detectors[i].Protect = &tardy{b.Detectors[i].Protect, 20 * time.Second}
-		}
-	}}
+func protectAfter(by time.Duration) func() Sabotage {
+	return func() Sabotage {
+		return Sabotage{Bench: func(b *engine.Bench) {
+			for i := range b.Detectors {
+				b.Detectors[i].Protect = &tardy{b.Detectors[i].Protect, by}
+			}
+		}}
+	}
 }
 
 // slowly does nothing for an hour, once.
@@ -433,20 +435,25 @@ func rememberOneMore() Sabotage {
 	}}
 }
 
-// tamper changes the time line at its fortieth entry of the journal, as a file that lost or doubled
-// one would.
-func tamper(change func(line []Moment, i int) []Moment) func() Sabotage {
+// forged changes the time line at the nth moment of those that it is about: what the parts of the
+// program wrote is then no longer what happened, as after a file that lost or doubled something.
+func forged(nth int, is func(Moment) bool, change func(line []Moment, i int) []Moment) func() Sabotage {
 	return func() Sabotage {
 		return Sabotage{Line: func(line []Moment) []Moment {
 			n := 0
 			return change(line, slices.IndexFunc(line, func(m Moment) bool {
-				if m.Journal != nil {
+				if is(m) {
 					n++
 				}
-				return n == 40
+				return n == nth
 			}))
 		}}
 	}
+}
+
+// tamper is forged at the fortieth entry of the journal.
+func tamper(change func(line []Moment, i int) []Moment) func() Sabotage {
+	return forged(40, func(m Moment) bool { return m.Journal != nil }, change)
 }
 
 func moveBeforeDecided() Sabotage {

@@ -60,9 +60,8 @@ type Facts struct {
 	Controller map[string]string
 	// Plans are what each run was asked for. A finished run did all of it, or says what it gave up.
 	Plans map[protocol.RunID]scan.Plan
-	// Visits and MinDarks are the same of a run without a plan here.
-	Visits   int
-	MinDarks int
+	// Visits is how many the last of them makes without a refinement.
+	Visits int
 	// HomeOrder is by controller; Unattended ones may search with nobody there.
 	HomeOrder  map[string][]string
 	Unattended map[string]bool
@@ -72,6 +71,8 @@ type Facts struct {
 	Watch time.Duration
 	// Noticed is how many answers the lines waited for in vain, asked again for or dropped.
 	Noticed int
+	// AskedAgain is the same without what comes unasked on a quiet night, too: chatter and greetings.
+	AskedAgain int
 	// CaughtUp says that the courier was given the time to publish everything.
 	CaughtUp bool
 }
