@@ -238,10 +238,10 @@ func (r *reader) checkDetectors() {
 			}
 		}
 		if d.Watch > 0 && f.Counter.GateMax > f.Counter.GateMin && d.Watch < 2*f.Counter.GateMin {
-			r.fail(d.at, "a watch of "+strict.Span(d.Watch), "twice the counter's shortest gate, %s, or more", strict.Span(f.Counter.GateMin))
+			r.fail(d.at, "a watch of "+unit.Span(d.Watch), "twice the counter's shortest gate, %s, or more", unit.Span(f.Counter.GateMin))
 		}
 		if d.Glance > 0 && f.Counter.GateMax > 0 && (d.Glance < f.Counter.GateMin || d.Glance > f.Counter.GateMax) {
-			r.fail(d.at, "a glance of "+strict.Span(d.Glance), "a gate of the counter, %s to %s", strict.Span(f.Counter.GateMin), strict.Span(f.Counter.GateMax))
+			r.fail(d.at, "a glance of "+unit.Span(d.Glance), "a gate of the counter, %s to %s", unit.Span(f.Counter.GateMin), unit.Span(f.Counter.GateMax))
 		}
 	}
 	for _, s := range f.Protectors {

@@ -43,7 +43,7 @@ func (r *reader) lines(v strict.Value) {
 			m.Opt("stop_bits").Failf("1 or 2")
 		}
 		if longest := m.Opt("longest_answer"); longest.Good() && l.LongestAnswer < l.AnswerWithin {
-			longest.Failf("at least answer_within, %s", strict.Span(l.AnswerWithin))
+			longest.Failf("at least answer_within, %s", unit.Span(l.AnswerWithin))
 		}
 		serial := m.Has("baud") || m.Has("data_bits") || m.Has("parity") || m.Has("stop_bits")
 		switch tcp := strings.HasPrefix(l.Device, "tcp://"); {

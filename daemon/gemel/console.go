@@ -13,6 +13,7 @@ import (
 	"gemel/daemon/bench"
 	"gemel/daemon/keeper"
 	"gemel/protocol"
+	"gemel/protocol/unit"
 )
 
 func isTerminal(w io.Writer) bool {
@@ -133,14 +134,10 @@ func left(s protocol.Status) string {
 
 // roughly prints a time with its two largest units.
 func roughly(d time.Duration) string {
-	switch d = d.Round(time.Second); {
-	case d >= time.Hour:
+	if d = d.Round(time.Second); d >= time.Hour {
 		d = d.Round(time.Minute)
-		return strings.TrimSuffix(fmt.Sprintf("%d h %d min", d/time.Hour, d%time.Hour/time.Minute), " 0 min")
-	case d >= time.Minute:
-		return strings.TrimSuffix(fmt.Sprintf("%d min %d s", d/time.Minute, d%time.Minute/time.Second), " 0 s")
 	}
-	return fmt.Sprintf("%d s", d/time.Second)
+	return unit.Span(d)
 }
 
 // next names the runs that wait.

@@ -12,7 +12,6 @@ import (
 
 	"gemel/protocol"
 	"gemel/protocol/client"
-	"gemel/protocol/strict"
 	"gemel/protocol/unit"
 )
 
@@ -123,7 +122,7 @@ func (h *handHold) own(text string) (said []string, is bool, err error) {
 			return nil, true, fmt.Errorf("gate %q; want a time such as \"0.5 s\"", rest)
 		}
 		h.gate = d
-		return []string{"gate " + strict.Span(d)}, true, nil
+		return []string{"gate " + unit.Written(d)}, true, nil
 	case name == "note" && rest == "":
 		return nil, true, errors.New(`a note of nothing; want its text behind it`)
 	case name == "note" && h.note == nil:

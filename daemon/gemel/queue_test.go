@@ -220,10 +220,10 @@ func TestFollowTellsOfADeadDaemonAndGoesOnUnlessToldOtherwise(t *testing.T) {
 		})
 	}
 	q.kill()
-	if code := brief.wait(); code != exitFailed || !strings.Contains(brief.err.String(), "nothing was heard of bench skerry for 10s") || !strings.Contains(brief.err.String(), "given up") {
+	if code := brief.wait(); code != exitFailed || !strings.Contains(brief.err.String(), "nothing was heard of bench skerry for 10 s") || !strings.Contains(brief.err.String(), "given up") {
 		t.Errorf("follow --give-up: code %d, %s", code, brief.err)
 	}
-	if text := patient.err.String(); !strings.Contains(text, "nothing was heard of bench skerry for 5s") || !strings.Contains(text, "still following") {
+	if text := patient.err.String(); !strings.Contains(text, "nothing was heard of bench skerry for 5 s") || !strings.Contains(text, "still following") {
 		t.Errorf("follow says %q; want it to tell of the silence", text)
 	}
 	q.live()

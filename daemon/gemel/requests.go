@@ -263,7 +263,7 @@ func (c *followCommand) Run(ctx context.Context, con *console) error {
 	if c.Give != "" {
 		var err error
 		if patience, err = unit.ParseDuration(c.Give); err != nil || patience < silent {
-			return errUse{errors.Join(fmt.Errorf("--give-up %q; want %s or more", c.Give, strict.Span(silent)), err)}
+			return errUse{errors.Join(fmt.Errorf("--give-up %q; want %s or more", c.Give, unit.Span(silent)), err)}
 		}
 	}
 	cl, err := c.connect(protocol.WatchRole)

@@ -14,7 +14,6 @@ import (
 	"gemel/daemon/logbook"
 	"gemel/drivers"
 	"gemel/protocol"
-	"gemel/protocol/strict"
 	"gemel/protocol/unit"
 	"gemel/scan"
 )
@@ -116,7 +115,7 @@ func (k *Keeper) judge(ctx context.Context, ask scan.EarlierAsk, r result, now t
 		return no("gave no %s: %s; want one with a value", subject(ask), cmp.Or(strings.Join(r.Because, ", "), "it does not say why"))
 	}
 	if age := now.Sub(r.At.Time); ask.NotOlderThan > 0 && age > ask.NotOlderThan {
-		return no("ended %s ago; want at most %s", ago(age), strict.Span(ask.NotOlderThan))
+		return no("ended %s ago; want at most %s", ago(age), unit.Span(ask.NotOlderThan))
 	}
 	s := scan.EarlierSource{Run: string(r.Run), Sequence: r.Sequence}
 	if ask.Axis == "" {

@@ -14,7 +14,6 @@ import (
 	"gemel/daemon/logbook"
 	"gemel/drivers"
 	"gemel/protocol"
-	"gemel/protocol/strict"
 	"gemel/protocol/unit"
 	"gemel/scan/engine"
 )
@@ -221,7 +220,7 @@ func (k *Keeper) admit(o *handOrder, queue []logbook.Waiting) error {
 	case o.q.Session == "" && s.letGo && time.Since(s.last) > handLease:
 		s.name, s.who = rand.Text(), o.by // whoever let go of the lines went away: the next one goes on
 	default:
-		return protocol.Refuse(409, fmt.Sprintf("%s has the bench under their hand since %s; it is free when they leave, or %s after the last they asked", s.who, s.since.Local().Format("15:04:05"), strict.Span(handLease)))
+		return protocol.Refuse(409, fmt.Sprintf("%s has the bench under their hand since %s; it is free when they leave, or %s after the last they asked", s.who, s.since.Local().Format("15:04:05"), unit.Span(handLease)))
 	}
 	return nil
 }
@@ -399,7 +398,7 @@ func (w *handWork) next(ctx context.Context) (o *handOrder, why string) {
 		if w.hand.LetGo() {
 			left = handLease // another program works: nothing of ours is on, and only a person takes the lines back
 		} else if left <= 0 {
-			return nil, fmt.Sprintf("nothing was asked for %s, so the hand work of %s ended", handLease, w.who())
+			return nil, fmt.Sprintf("nothing was asked for %s, so the hand work of %s ended", unit.Span(handLease), w.who())
 		}
 		timer := time.NewTimer(min(left, handWatch))
 		select {

@@ -21,6 +21,7 @@ import (
 	"github.com/nats-io/nats.go/micro"
 
 	"gemel/protocol"
+	"gemel/protocol/unit"
 )
 
 // Keeper is the life of the bench as the requests see it. An error that is or wraps a
@@ -337,7 +338,7 @@ func inTime(expiry *protocol.Time) error {
 		return nil
 	}
 	if late := time.Since(expiry.Time); late >= 0 {
-		return protocol.Refuse(408, fmt.Sprintf("expired at %s, %v ago; nothing was done", expiry, late.Round(time.Millisecond)))
+		return protocol.Refuse(408, fmt.Sprintf("expired at %s, %s ago; nothing was done", expiry, unit.Span(late.Round(time.Millisecond))))
 	}
 	return nil
 }

@@ -13,6 +13,7 @@ import (
 	"gemel/daemon/logbook"
 	"gemel/drivers"
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan"
 	"gemel/scan/forecast"
 )
@@ -272,7 +273,7 @@ func (e *EarlierRun) compare(readings []protocol.Reading, foreseen []forecast.Ti
 		return time.Duration(sum * float64(time.Second))
 	}
 	e.Costs.Reading, e.Costs.Slice = mean(between), mean(inside)
-	e.Costs.From = fmt.Sprintf("as %s had it: %s a reading and %s a slice beyond 1.2 ms a question", e.From, e.Costs.Reading.Round(time.Millisecond), e.Costs.Slice.Round(time.Millisecond))
+	e.Costs.From = fmt.Sprintf("as %s had it: %s a reading and %s a slice beyond 1.2 ms a question", e.From, unit.Span(e.Costs.Reading.Round(time.Millisecond)), unit.Span(e.Costs.Slice.Round(time.Millisecond)))
 	if len(between) == 0 {
 		e.Costs.From = forecast.Measured(0).From + "; " + e.From + " has no two lights in a row to tell"
 	}

@@ -176,7 +176,7 @@ func (n Night) Text() string {
 	line := func(format string, a ...any) { fmt.Fprintf(&b, "  "+format+"\n", a...) }
 	how := n.Ended
 	if how == "" {
-		how = "it is " + string(n.State)
+		how = "by the last entry it is " + string(n.State) // whoever wrote it may be dead
 	}
 	switch {
 	case n.Planned == 0:

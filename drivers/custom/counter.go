@@ -10,6 +10,7 @@ import (
 
 	"gemel/drivers"
 	"gemel/drivers/line"
+	"gemel/protocol/unit"
 )
 
 // Counter is a counter whose language was declared: arm opens a gate, counts gives all channels,
@@ -92,7 +93,7 @@ func (c *Counter) Connect(ctx context.Context) error {
 // Count opens one gate, waits for its end and reads it.
 func (c *Counter) Count(ctx context.Context, gate time.Duration) (drivers.Gate, error) {
 	if gate <= 0 {
-		return drivers.Gate{}, c.errorf("count", drivers.GiveUp, "a gate of %v; want a positive time", gate)
+		return drivers.Gate{}, c.errorf("count", drivers.GiveUp, "a gate of %s; want a positive time", unit.Span(gate))
 	}
 	epoch := c.seat.Epoch()
 	g, mayBeOpen, err := c.count(ctx, gate, epoch)
@@ -161,7 +162,7 @@ func (c *Counter) count(ctx context.Context, gate time.Duration, epoch line.Epoc
 			}
 		}
 		if time.Now().After(by) {
-			return g, true, c.errorf("count", drivers.Retry, "no counts, or no two answers that agree, %v after a gate of %v", late, gate)
+			return g, true, c.errorf("count", drivers.Retry, "no counts, or no two answers that agree, %s after a gate of %s", unit.Span(late), unit.Span(gate))
 		}
 		if err := c.wait(ctx, "count", epoch, c.set.PollEvery); err != nil {
 			return g, true, err

@@ -7,6 +7,7 @@ import (
 
 	"gemel/drivers"
 	"gemel/drivers/line"
+	"gemel/protocol/unit"
 )
 
 // Shutter is a shutter whose language was declared.
@@ -77,7 +78,7 @@ func (d *device) atRest(ctx context.Context, op string, epoch line.Epoch, within
 			return err
 		}
 		if time.Now().After(by) {
-			return d.errorf(op, drivers.Retry, "not at rest within %v", within)
+			return d.errorf(op, drivers.Retry, "not at rest within %s", unit.Span(within))
 		}
 		if err := d.wait(ctx, op, epoch, every); err != nil {
 			return err

@@ -583,7 +583,7 @@ func (s *Stage) untilRest(ctx context.Context, op string, epoch line.Epoch, with
 			return nil
 		}
 		if time.Now().After(by) {
-			return s.errorf(op, drivers.Retry, "not at rest within %v", within)
+			return s.errorf(op, drivers.Retry, "not at rest within %s", unit.Span(within))
 		}
 		if err := s.wait(ctx, op, epoch, s.set.PollEvery); err != nil {
 			return err

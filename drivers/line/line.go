@@ -21,6 +21,7 @@ import (
 	"time"
 
 	"gemel/drivers"
+	"gemel/protocol/unit"
 )
 
 // Line is one line. Its port belongs to the goroutine in Run; everybody else talks to that one.
@@ -246,7 +247,7 @@ func (l *Line) await(j *job, start time.Time) (answer []byte, fault *Fault) {
 		left := within - time.Since(start)
 		if left <= 0 {
 			l.record.count(func(c *Counts) { c.Missing++ })
-			return nil, &Fault{Why: Missing, again: true, Err: fmt.Errorf("no answer within %v: %w", within, os.ErrDeadlineExceeded)}
+			return nil, &Fault{Why: Missing, again: true, Err: fmt.Errorf("no answer within %s: %w", unit.Span(within), os.ErrDeadlineExceeded)}
 		}
 		if _, f := l.read(min(slice, left)); f != nil {
 			return nil, f
@@ -539,7 +540,7 @@ func (l *Line) open(j *job, by time.Time) *Fault {
 		case j.ctx.Err() != nil:
 			return &Fault{Why: Ended, Err: fmt.Errorf("%w while opening: %w", endOf(j.ctx), l.notOpen())}
 		case ctx.Err() != nil:
-			return &Fault{Why: Lost, Err: fmt.Errorf("does not open, or stay open, within %v: %w", l.set.OpenWithin, l.notOpen())}
+			return &Fault{Why: Lost, Err: fmt.Errorf("does not open, or stay open, within %s: %w", unit.Span(l.set.OpenWithin), l.notOpen())}
 		}
 		l.inPort = true
 		port, err := l.set.Open(ctx)

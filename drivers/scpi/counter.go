@@ -12,6 +12,7 @@ import (
 
 	"gemel/drivers"
 	"gemel/drivers/line"
+	"gemel/protocol/unit"
 )
 
 // Counter is a gated counter. It opens a gate by INITiate, which it sends once and never again
@@ -140,7 +141,7 @@ func (c *Counter) Count(ctx context.Context, gate time.Duration) (drivers.Gate, 
 
 func (c *Counter) setGate(ctx context.Context, gate time.Duration, epoch line.Epoch) error {
 	if gate <= 0 || (c.set.GateMin > 0 && gate < c.set.GateMin) || (c.set.GateMax > 0 && gate > c.set.GateMax) {
-		return c.errorf("gate", drivers.GiveUp, "a gate of %v; want %v to %v", gate, c.set.GateMin, c.set.GateMax)
+		return c.errorf("gate", drivers.GiveUp, "a gate of %s; want %s to %s", unit.Span(gate), unit.Span(c.set.GateMin), unit.Span(c.set.GateMax))
 	}
 	if gate == c.gate {
 		return nil
@@ -166,7 +167,7 @@ func (c *Counter) setGate(ctx context.Context, gate time.Duration, epoch line.Ep
 		return c.errorf("gate", drivers.Retry, "read back: %w", err)
 	}
 	if math.Abs(seconds-gate.Seconds()) > c.set.GateWithin*gate.Seconds() {
-		return c.errorf("gate", drivers.GiveUp, "set to %v, read back as %q s; want them equal within a share of %g", gate, units[0], c.set.GateWithin)
+		return c.errorf("gate", drivers.GiveUp, "set to %s, read back as %q s; want them equal within a share of %g", unit.Written(gate), units[0], c.set.GateWithin)
 	}
 	c.gate, c.gateIs = gate, time.Duration(math.Round(seconds*1e9))
 	return nil
@@ -262,7 +263,7 @@ func (c *Counter) untilOver(ctx context.Context, epoch line.Epoch) error {
 			return nil
 		}
 		if time.Now().After(by) {
-			return c.errorf("count", drivers.Retry, "still counting %v after a gate of %v", late, c.gateIs)
+			return c.errorf("count", drivers.Retry, "still counting %s after a gate of %s", unit.Span(late), unit.Span(c.gateIs))
 		}
 		if err := c.wait(ctx, "count", epoch, c.set.PollEvery); err != nil {
 			return err

@@ -113,7 +113,7 @@ func (s *Setting) settled(ctx context.Context) error {
 			return nil
 		}
 		if time.Now().After(by) {
-			return s.errorf("set", drivers.Retry, "not settled within %v", s.set.SettleWithin)
+			return s.errorf("set", drivers.Retry, "not settled within %s", unit.Span(s.set.SettleWithin))
 		}
 		if err := s.wait(ctx, "set", nil, s.set.PollEvery); err != nil {
 			return err

@@ -7,6 +7,7 @@ import (
 
 	"gemel/drivers"
 	"gemel/drivers/line"
+	"gemel/protocol/unit"
 )
 
 // Shutter is a shutter behind an output or a relay. What such an instrument answers is what it
@@ -93,7 +94,7 @@ func (s *Shutter) reach(ctx context.Context, op string, epoch line.Epoch, open b
 		return err
 	}
 	if seen != open {
-		return s.errorf(op, drivers.Retry, "the sensor sees the blade %s %v after the command", openOr(seen), settle)
+		return s.errorf(op, drivers.Retry, "the sensor sees the blade %s %s after the command", openOr(seen), unit.Span(settle))
 	}
 	return nil
 }

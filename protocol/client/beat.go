@@ -11,6 +11,7 @@ import (
 	"github.com/nats-io/nats.go"
 
 	"gemel/protocol"
+	"gemel/protocol/unit"
 )
 
 // Silence says that no heartbeat of the bench came for a while: its daemon ended or hangs, or the
@@ -21,7 +22,7 @@ type Silence struct {
 }
 
 func (s *Silence) Error() string {
-	return fmt.Sprintf("nothing was heard of bench %s for %v: its daemon has ended or hangs, or the way to it is cut", s.Bench, s.For)
+	return fmt.Sprintf("nothing was heard of bench %s for %s: its daemon has ended or hangs, or the way to it is cut", s.Bench, unit.Span(s.For))
 }
 
 // Beats yields the heartbeats of the bench as they come, until ctx ends, which is not an error. When

@@ -372,7 +372,7 @@ func angleShape(low, high unit.Angle, suffix string) shape {
 
 func durationShape(low, high time.Duration) shape {
 	return shape{rank: specific, text: fmt.Sprint("time ", int64(low), " ", int64(high)), schema: func() map[string]any {
-		return quantitySchema(unit.Time, low < 0, Span(low)+" to "+Span(high), "")
+		return quantitySchema(unit.Time, low < 0, unit.Span(low)+" to "+unit.Span(high), "")
 	}}
 }
 

@@ -405,7 +405,7 @@ func (v Value) Duration(low, high time.Duration, or ...time.Duration) time.Durat
 		return first(or)
 	}
 	if t < low || t > high {
-		v.Failf("%s to %s", Span(low), Span(high))
+		v.Failf("%s to %s", unit.Span(low), unit.Span(high))
 		return first(or)
 	}
 	return t
@@ -547,22 +547,6 @@ func (v Value) failParsed(err error, want string) {
 		return
 	}
 	v.Failf("%s", want)
-}
-
-// Span prints a time as a person writes it in a file.
-func Span(d time.Duration) string {
-	for _, u := range []struct {
-		per  time.Duration
-		name string
-	}{{time.Hour, "h"}, {time.Minute, "min"}, {time.Second, "s"}, {time.Millisecond, "ms"}, {time.Microsecond, "us"}} {
-		if d != 0 && d%u.per == 0 {
-			return fmt.Sprintf("%d %s", d/u.per, u.name)
-		}
-	}
-	if d == 0 {
-		return "0 s"
-	}
-	return strconv.FormatFloat(d.Seconds(), 'f', -1, 64) + " s"
 }
 
 // inBase prints a bound in the unit of its kind that makes it shortest to read.

@@ -9,6 +9,7 @@ import (
 
 	"gemel/drivers"
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan"
 )
 
@@ -127,7 +128,7 @@ func (e *Engine) oldReference() (b *brokenGuard, again bool) {
 			continue
 		}
 		if age := e.now().Sub(p.ref.goodAt); age > g.ReferenceAge {
-			text := fmt.Sprintf("the last good reference is %s old; want at most %s", age.Round(time.Second), g.ReferenceAge)
+			text := fmt.Sprintf("the last good reference is %s old; want at most %s", unit.Span(age.Round(time.Second)), unit.Span(g.ReferenceAge))
 			if p.ref.goodAt.IsZero() {
 				text = "there is no good reference"
 			}

@@ -11,6 +11,7 @@ import (
 
 	"gemel/drivers"
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan"
 )
 
@@ -229,7 +230,7 @@ func (e *Engine) count(ctx context.Context, r *protocol.Reading, gate time.Durat
 	case g.Doubtful:
 		r.Reason = "the counter doubts its gate time"
 	case (g.Length-g.Set).Abs() > g.Set/1000 || (g.Set-gate).Abs() > gate/100:
-		r.Reason = fmt.Sprintf("a gate of the wrong length: asked %s, set %s, counted %s", gate, g.Set, g.Length)
+		r.Reason = fmt.Sprintf("a gate of the wrong length: asked %s, set %s, counted %s", unit.Span(gate), unit.Span(g.Set), unit.Span(g.Length))
 	}
 	return slice, nil
 }

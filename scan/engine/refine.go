@@ -5,6 +5,7 @@ import (
 	"fmt"
 
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan/route"
 )
 
@@ -23,7 +24,7 @@ func (e *Engine) refine(ctx context.Context) error {
 	case room <= 0:
 		body.Grounds = fmt.Sprintf("refined: the bound of %d points is reached", bound.AtMost)
 	case bound.Within > 0 && !p.refinedAt.IsZero() && e.now().Sub(p.refinedAt) >= bound.Within:
-		body.Grounds = fmt.Sprintf("refined: the bound of %s is reached", bound.Within)
+		body.Grounds = fmt.Sprintf("refined: the bound of %s is reached", unit.Span(bound.Within))
 	default:
 		e.rest(ctx) // it may take a while, and nothing moves meanwhile
 		more, err := e.Refine(ctx, body.Refined)

@@ -6,6 +6,7 @@ import (
 	"time"
 
 	"gemel/protocol"
+	"gemel/protocol/unit"
 )
 
 // overhead is what a reading may take beside its dwell before the run has measured it.
@@ -31,7 +32,7 @@ func (e *Engine) cutAtEnd(ctx context.Context, t task) (cut bool, err error) {
 	p := &e.progress
 	if within := e.refineWithin(); within > 0 && t.kind == lightTask && !p.cut && t.visit.Point >= len(e.Plan.Points) && e.now().Sub(p.refinedAt) >= within {
 		left := p.left()
-		return true, e.note(ctx, protocol.SetAside, fmt.Sprintf("%d added points are left out: refining may take %s", left, within), map[string]any{"task": string(restTask), "left_out": left})
+		return true, e.note(ctx, protocol.SetAside, fmt.Sprintf("%d added points are left out: refining may take %s", left, unit.Span(within)), map[string]any{"task": string(restTask), "left_out": left})
 	}
 	if !p.tooLate(t, e.now()) {
 		return false, nil

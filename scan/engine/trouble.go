@@ -309,7 +309,7 @@ func (e *Engine) append(ctx context.Context, entry protocol.Entry) error {
 			}
 		}
 		if e.now().Sub(since) > e.patience {
-			return fmt.Errorf("gave up after %s: %w", e.patience, err)
+			return fmt.Errorf("gave up after %s: %w", unit.Span(e.patience), err)
 		}
 	}
 }
@@ -358,7 +358,7 @@ const lookAgain = 30 * time.Second
 func (e *Engine) waitOut(ctx context.Context) error {
 	p := &e.progress
 	if patience := e.patienceNow(); !p.holds(protocol.ByOperator) && e.now().Sub(e.waitsSince) > patience {
-		return e.end(ctx, protocol.Failed, fmt.Sprintf("failed: it did not mend within %s; it was %s", patience, p.Reason), nil)
+		return e.end(ctx, protocol.Failed, fmt.Sprintf("failed: it did not mend within %s; it was %s", unit.Span(patience), p.Reason), nil)
 	}
 	if p.restBad != "" {
 		e.rest(ctx) // a blade that stuck may move by now

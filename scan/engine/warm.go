@@ -8,6 +8,7 @@ import (
 	"time"
 
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan"
 )
 
@@ -80,10 +81,10 @@ func (e *Engine) warming(ctx context.Context) (waited bool, err error) {
 		}
 		if !full || bad {
 			steady = false
-			e.warm.last = fmt.Errorf("%s varied by %.3g %s (%.3g %%) in %s", s.Sensor, spread, e.sensor(s.Sensor).Unit(), 100*relative, e.warm.seen[i].length())
+			e.warm.last = fmt.Errorf("%s varied by %.3g %s (%.3g %%) in %s", s.Sensor, spread, e.sensor(s.Sensor).Unit(), 100*relative, unit.Span(e.warm.seen[i].length()))
 			continue
 		}
-		words = append(words, fmt.Sprintf("%s varied by %.3g %s (%.3g %%) in %s", s.Sensor, spread, e.sensor(s.Sensor).Unit(), 100*relative, s.Over))
+		words = append(words, fmt.Sprintf("%s varied by %.3g %s (%.3g %%) in %s", s.Sensor, spread, e.sensor(s.Sensor).Unit(), 100*relative, unit.Span(s.Over)))
 	}
 	early := !e.Plan.Schedule.NotBefore.IsZero() && e.now().Before(e.Plan.Schedule.NotBefore)
 	switch {
@@ -93,7 +94,7 @@ func (e *Engine) warming(ctx context.Context) (waited bool, err error) {
 	case !early && !steady && w.AtMost > 0 && e.now().Sub(e.warm.since) > w.AtMost && e.now().Sub(e.Plan.Schedule.NotBefore) > w.AtMost:
 		last := e.warm.last
 		e.warm = nil
-		return true, e.holdFor(ctx, protocol.ByTrouble, fmt.Sprintf("held: not steady within %s: %s", w.AtMost, firstLine(last)), map[string]any{"warm_up": false})
+		return true, e.holdFor(ctx, protocol.ByTrouble, fmt.Sprintf("held: not steady within %s: %s", unit.Span(w.AtMost), firstLine(last)), map[string]any{"warm_up": false})
 	}
 	_ = e.Bench.Pace.Wait(op, max(every, 100*time.Millisecond))
 	return true, nil

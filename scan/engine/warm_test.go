@@ -75,7 +75,7 @@ func TestAWarmUpHoldsForAPersonInTheEnd(t *testing.T) {
 		}()
 		time.Sleep(70 * time.Minute)
 		synctest.Wait()
-		if s := n.eng.Snapshot(); s.State != protocol.Holding || !slices.Equal(s.Causes, []protocol.Cause{protocol.ByTrouble}) || !strings.Contains(s.Reason, "not steady within 1h0m0s: pump_power varied by 1 mW") {
+		if s := n.eng.Snapshot(); s.State != protocol.Holding || !slices.Equal(s.Causes, []protocol.Cause{protocol.ByTrouble}) || !strings.Contains(s.Reason, "not steady within 1 h: pump_power varied by 1 mW") {
 			t.Fatalf("after 70 min it is %s for %v: %s; want a hold that says what is not steady", s.State, s.Causes, s.Reason)
 		}
 		time.Sleep(time.Hour)

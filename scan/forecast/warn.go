@@ -534,19 +534,17 @@ func (f *Forecast) clock(t time.Time) string {
 	return t.Format("15:04 on 2 Jan")
 }
 
-// span prints a duration as people say it.
+// span prints a duration as people say it, no finer than a forecast knows it.
 func span(d time.Duration) string {
 	switch {
 	case d >= 48*time.Hour:
 		return fmt.Sprintf("%d d %d h", d/(24*time.Hour), d%(24*time.Hour)/time.Hour)
-	case d >= time.Hour:
-		return strings.TrimSuffix(fmt.Sprintf("%d h %d min", d/time.Hour, (d%time.Hour).Round(time.Minute)/time.Minute), " 0 min")
 	case d >= 10*time.Minute:
-		return fmt.Sprintf("%d min", d.Round(time.Minute)/time.Minute)
-	case d >= time.Minute:
-		return strings.TrimSuffix(fmt.Sprintf("%d min %d s", d/time.Minute, (d%time.Minute).Round(time.Second)/time.Second), " 0 s")
+		d = d.Round(time.Minute)
 	case d >= 10*time.Second:
-		return fmt.Sprintf("%.0f s", d.Seconds())
+		d = d.Round(time.Second)
+	default:
+		return fmt.Sprintf("%.3g s", d.Seconds()) // beside one another in a table: one unit
 	}
-	return fmt.Sprintf("%.3g s", d.Seconds())
+	return unit.Span(d)
 }

@@ -102,7 +102,7 @@ func readSlice(v strict.Value, dwell time.Duration) time.Duration {
 	if v.Good() && dwell > 0 {
 		switch n := (dwell + slice - 1) / slice; {
 		case slice > dwell:
-			v.Failf("no more than the dwell of %s", strict.Span(dwell))
+			v.Failf("no more than the dwell of %s", unit.Span(dwell))
 		case n > maxSlices:
 			v.Fail(fmt.Sprintf("%d slices", n), fmt.Sprintf("at most %d", maxSlices))
 		}
@@ -156,7 +156,7 @@ func readCadenceOr(m strict.Map, at strict.Place, what string, or scan.Dwell) Ca
 		} else if strings.Contains(text, "point") {
 			every.Failf(often)
 		} else if c.Every = every.Duration(time.Second, maxDwell); every.Good() && c.Every <= c.Dwell.Time {
-			every.Failf("more than the %s's own dwell of %s, or nothing else would be counted", what, strict.Span(c.Dwell.Time))
+			every.Failf("more than the %s's own dwell of %s, or nothing else would be counted", what, unit.Span(c.Dwell.Time))
 		}
 	}
 	for _, item := range also.List(1, 2) {

@@ -65,7 +65,7 @@ func (r *Recipe) readGuards(v strict.Value) {
 		case age.Good() && r.Reference.Every == 0 && r.Reference.EveryPoints == 0:
 			age.Fail("an age of references that are not repeated", `"every" in the key "reference"`)
 		case age.Good() && r.Reference.Every >= g.ReferenceAge:
-			age.Failf("more than the %s between two references, or every one would be too old", strict.Span(r.Reference.Every))
+			age.Failf("more than the %s between two references, or every one would be too old", unit.Span(r.Reference.Every))
 		}
 		if ends := within.List(2, 2); len(ends) == 2 {
 			if rate.Given() || darkRate.Given() { // whatever the bench: both are counts per second

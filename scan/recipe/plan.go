@@ -425,7 +425,7 @@ func (f Facts) watched(d scan.Dwell) scan.Dwell {
 func checkGates(d scan.Dwell, at strict.Place, f Facts) []protocol.Finding {
 	d = f.watched(d)
 	if n := (d.Time + d.Slice - 1) / d.Slice; n > maxSlices {
-		return []protocol.Finding{at.Finding(fmt.Sprintf("%d gates of %s, as often as the light has to be looked at", n, strict.Span(d.Slice)), fmt.Sprintf("at most %d: a shorter dwell and more repeats", maxSlices))}
+		return []protocol.Finding{at.Finding(fmt.Sprintf("%d gates of %s, as often as the light has to be looked at", n, unit.Span(d.Slice)), fmt.Sprintf("at most %d: a shorter dwell and more repeats", maxSlices))}
 	}
 	low, high := f.GateMin, f.GateMax
 	if high == 0 {
@@ -434,11 +434,11 @@ func checkGates(d scan.Dwell, at strict.Place, f Facts) []protocol.Finding {
 	rest := d.Time % d.Slice
 	switch {
 	case d.Slice > high:
-		return []protocol.Finding{at.Finding("a gate of "+strict.Span(d.Slice), fmt.Sprintf("at most %s, this counter's longest: cut the dwell, such as {time: %s, slice: %s}", strict.Span(high), strict.Span(d.Time), strict.Span(high)))}
+		return []protocol.Finding{at.Finding("a gate of "+unit.Span(d.Slice), fmt.Sprintf("at most %s, this counter's longest: cut the dwell, such as {time: %s, slice: %s}", unit.Span(high), unit.Written(d.Time), unit.Written(high)))}
 	case d.Slice < low:
-		return []protocol.Finding{at.Finding("a gate of "+strict.Span(d.Slice), fmt.Sprintf("at least %s, this counter's shortest", strict.Span(low)))}
+		return []protocol.Finding{at.Finding("a gate of "+unit.Span(d.Slice), fmt.Sprintf("at least %s, this counter's shortest", unit.Span(low)))}
 	case rest != 0 && rest < low:
-		return []protocol.Finding{at.Finding("a last slice of "+strict.Span(rest), fmt.Sprintf("at least %s, this counter's shortest: a slice that divides the dwell", strict.Span(low)))}
+		return []protocol.Finding{at.Finding("a last slice of "+unit.Span(rest), fmt.Sprintf("at least %s, this counter's shortest: a slice that divides the dwell", unit.Span(low)))}
 	}
 	return nil
 }

@@ -7,7 +7,6 @@ import (
 	"strings"
 	"time"
 
-	"gemel/protocol/strict"
 	"gemel/protocol/unit"
 	"gemel/scan"
 )
@@ -114,10 +113,7 @@ func printSpan(key string, d time.Duration) string {
 
 // span writes a time to the nanosecond.
 func span(d time.Duration) string {
-	if d%time.Microsecond != 0 {
-		return fmt.Sprintf("%d ns", d.Nanoseconds())
-	}
-	return strict.Span(d)
+	return unit.Written(d)
 }
 
 func printDwell(d scan.Dwell, of string) string {

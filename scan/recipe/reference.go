@@ -163,7 +163,7 @@ func (r *Recipe) reference(f Facts, results []*scan.Result) (*scan.Reference, []
 	set := time.Duration(len(out.Places)) * q.Dwell.Time
 	switch busy := q.busy(r, set); {
 	case q.Every > 0 && q.Every <= set:
-		findings = append(findings, q.everyAt.Finding(fmt.Sprintf("%s for a set of %d readings that counts %s", strict.Span(q.Every), len(out.Places), strict.Span(set)), "more time between two sets than one takes"))
+		findings = append(findings, q.everyAt.Finding(fmt.Sprintf("%s for a set of %d readings that counts %s", unit.Span(q.Every), len(out.Places), unit.Span(set)), "more time between two sets than one takes"))
 	case q.Every > 0 && busy >= 1:
 		findings = append(findings, q.everyAt.Finding("darks, backgrounds and references that take all the time there is", fmt.Sprintf("less often: they take %.0f min of every hour", 60*busy)))
 	}
@@ -483,9 +483,9 @@ func (r *Recipe) referenceBounds(f Facts, out scan.Reference) []protocol.Finding
 		default:
 			want := "at least " + show(roundedUp(least))
 			if dwell := time.Duration(roundedUp(q.Dwell.Time.Seconds()*least*least/(bound*bound)) * float64(time.Second)); dwell <= maxDwell {
-				want += fmt.Sprintf(`, or "dwell: %s" for the references`, strict.Span(dwell.Round(time.Millisecond)))
+				want += fmt.Sprintf(`, or "dwell: %s" for the references`, unit.Written(dwell.Round(time.Millisecond)))
 			}
-			findings = append(findings, at.Finding(fmt.Sprintf("%s, less than four times its own counting error of %s in %s", show(bound), show(roundedUp(u)), strict.Span(q.Dwell.Time)), want))
+			findings = append(findings, at.Finding(fmt.Sprintf("%s, less than four times its own counting error of %s in %s", show(bound), show(roundedUp(u)), unit.Span(q.Dwell.Time)), want))
 		}
 	}
 	percent := func(x float64) string { return strconv.FormatFloat(100*x, 'g', 6, 64) + " %" }

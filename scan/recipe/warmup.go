@@ -59,9 +59,9 @@ func readWarmUp(v strict.Value) *WarmUp {
 		case !ok || n.value.Sign() <= 0 || err != nil:
 			e.Value.Failf(want)
 		case over < time.Second || over > maxDwell:
-			e.Value.Failf("a time from %s to %s", strict.Span(time.Second), strict.Span(maxDwell))
+			e.Value.Failf("a time from %s to %s", unit.Span(time.Second), unit.Span(maxDwell))
 		case most.Good() && over > w.AtMost:
-			e.Value.Failf("a time within the %s of at_most", strict.Span(w.AtMost))
+			e.Value.Failf("a time within the %s of at_most", unit.Span(w.AtMost))
 		}
 		one.by, one.Over = n, over
 		w.Steady = append(w.Steady, one)
@@ -88,7 +88,7 @@ func (w *WarmUp) plan(f Facts) (*scan.WarmUp, []protocol.Finding) {
 		var err error
 		switch {
 		case kind != unit.Share && kindOf(s.by.unit) == unit.Share && kind == unit.Temperature:
-			findings = append(findings, s.at.Finding("a share of a temperature", fmt.Sprintf("a difference, such as \"0.1 K over %s\": the zero of its scale is nobody's", strict.Span(s.Over))))
+			findings = append(findings, s.at.Finding("a share of a temperature", fmt.Sprintf("a difference, such as \"0.1 K over %s\": the zero of its scale is nobody's", unit.Written(s.Over))))
 			continue
 		case kind != unit.Share && kindOf(s.by.unit) == unit.Share:
 			one.Relative, err = s.by.in("1")
