@@ -199,16 +199,16 @@ func describe(r *Result, fit PeakFit, q PeakQuestion) {
 	fwhm, u := fit.FWHMDeg()
 	switch {
 	case fit.Shape == PredictedPeak:
-		r.noteValue("full width at half maximum", fwhm, "deg", "the model's; not fitted")
-		r.noteValue("measured minus predicted angle", fit.Fit.Params[centreParam], "deg", fmt.Sprintf("± %.3g deg, the fit's alone", fit.Fit.U(centreParam)))
+		r.noteValue("full width at half maximum", fwhm, 0.001, "deg", "the model's; not fitted")
+		r.noteValue("measured minus predicted angle", fit.Fit.Params[centreParam], fit.Fit.U(centreParam), "deg", fmt.Sprintf("± %.3g deg, the fit's alone", fit.Fit.U(centreParam)))
 	case fit.Shape == FlatTop:
-		r.noteValue("full width at half maximum", fwhm, "deg", fmt.Sprintf("± %.3g deg", u))
+		r.noteValue("full width at half maximum", fwhm, u, "deg", fmt.Sprintf("± %.3g deg", u))
 	default:
 		text := fmt.Sprintf("± %.3g deg", u)
 		if i, err := fit.Interval(widthParam, q.Coverage); err == nil {
 			text += fmt.Sprintf("; %.4g %% profile-likelihood interval %.6g to %.6g deg", 100*q.Coverage, i.Low, i.High)
 		}
-		r.noteValue("full width at half maximum", fwhm, "deg", text)
+		r.noteValue("full width at half maximum", fwhm, u, "deg", text)
 	}
 	for i, name := range fit.Names {
 		if name == "height" || name == "background" || name == "scale" || fit.Shape == TwoPeaks && i >= centre2Param {
@@ -217,18 +217,18 @@ func describe(r *Result, fit PeakFit, q PeakQuestion) {
 				text = "on the edge of what is allowed"
 			}
 			unit := map[string]string{"height": "/s", "background": "/s", "second height": "/s", "second centre": "deg", "second fwhm": "deg"}[name]
-			r.noteValue(name, fit.Fit.Params[i], unit, text)
+			r.noteValue(name, fit.Fit.Params[i], fit.Fit.U(i), unit, text)
 		}
 	}
 	g := fit.Goodness(q.Trials, q.Seed)
-	r.noteValue("Cash statistic", g.Statistic, "1", fmt.Sprintf("%d degrees of freedom; %d simulated data sets gave %.4g on average", fit.Fit.Freedom, g.Trials, g.Mean))
-	r.noteValue("goodness of fit", g.P, "1", "share of simulated data sets that fit no better")
+	r.noteValue("Cash statistic", g.Statistic, 1, "1", fmt.Sprintf("%d degrees of freedom; %d simulated data sets gave %.4g on average", fit.Fit.Freedom, g.Trials, g.Mean))
+	r.noteValue("goodness of fit", g.P, 0.01, "1", "share of simulated data sets that fit no better")
 	if g.P < onePercent {
 		r.Warnings = append(r.Warnings, fmt.Sprintf("the %s profile does not describe the readings (p = %.2g): its angle and uncertainty are those of the wrong shape", fit.Shape, g.P))
 	}
 	if d, ok := fit.decide(); ok {
-		r.noteValue("decision threshold, net counts", d.Threshold, "1", fmt.Sprintf("net %.4g ± %.3g counts within the width (ISO 11929, 5 %%)", d.Net, d.U))
-		r.noteValue("detection limit, net counts", d.Limit, "1", "5 % of either error")
+		r.noteValue("decision threshold, net counts", d.Threshold, d.U, "1", fmt.Sprintf("net %.4g ± %.3g counts within the width (ISO 11929, 5 %%)", d.Net, d.U))
+		r.noteValue("detection limit, net counts", d.Limit, d.U, "1", "5 % of either error")
 	}
 	r.Residuals = fit.Residuals()
 	r.fitted = fit.RateHz

@@ -149,8 +149,8 @@ func Delay(rows Rows, bench Bench, q DelayQuestion) (Result, error) {
 	scan.floors(r.Delay, fit, bench, pair)
 	r.Delay.judge(&r, bench.Counter, q.Channel)
 	g := fit.Goodness(q.Trials, q.Seed)
-	r.noteValue("Cash statistic", g.Statistic, "1", fmt.Sprintf("%d degrees of freedom; %d simulated data sets gave %.4g on average", fit.Fit.Freedom, g.Trials, g.Mean))
-	r.noteValue("goodness of fit", g.P, "1", "share of simulated data sets that fit no better")
+	r.noteValue("Cash statistic", g.Statistic, 1, "1", fmt.Sprintf("%d degrees of freedom; %d simulated data sets gave %.4g on average", fit.Fit.Freedom, g.Trials, g.Mean))
+	r.noteValue("goodness of fit", g.P, 0.01, "1", "share of simulated data sets that fit no better")
 	if g.P < onePercent && !sharp {
 		r.Warnings = append(r.Warnings, fmt.Sprintf("a box with Gaussian edges on two floors does not describe the readings (p = %.2g): centre, width and capture are those of the wrong shape", g.P))
 	}

@@ -8,6 +8,7 @@ import (
 	"time"
 
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan"
 )
 
@@ -94,7 +95,7 @@ func Drift(rows Rows, bench Bench, q DriftQuestion) (Result, error) {
 		return Result{}, &Refusal{Reasons: []string{err.Error()}}
 	}
 	r.state(b)
-	r.Unit, r.quantity = first.ChangeUnit, fmt.Sprintf("drift of %s over %.2f h, from %d sets of references,", first.Quantity, hours, len(sets))
+	r.Unit, r.quantity = first.ChangeUnit, fmt.Sprintf("drift of %s over %s, from %d sets of references,", first.Quantity, unit.Span(d.To.Sub(d.From.Time).Round(time.Minute)), len(sets))
 	r.Drift = &d
 	if !(bench.Counter.Window.Value > 0) {
 		r.Warnings = append(r.Warnings, "the coincidence window is not declared, so accidentals are part of the ratios and of the profiles")

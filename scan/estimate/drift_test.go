@@ -67,7 +67,7 @@ func TestADriftIsFoundForWhatItIs(t *testing.T) {
 		t.Errorf("%+v; want set 13 the worst, and more scatter than counting explains", signal)
 	}
 	near(t, "the number: the ratio's change over the night", *r.Value, 8*quantityOf(t, r, "pairs per count of signal").PerHour, 1e-9)
-	for _, want := range []string{"drift of pairs per count of signal over 8.00 h, from 17 sets", "centre of signal_arm: ", "set 13 is farthest from the first, by 0.06", "\n  singles of idler\n"} {
+	for _, want := range []string{"drift of pairs per count of signal over 8 h, from 17 sets", "centre of signal_arm: ", "set 13 is farthest from the first, by 0.06", "\n  singles of idler\n"} {
 		if !strings.Contains(r.Text(), want) {
 			t.Errorf("%s\nwant %q in it", r.Text(), want)
 		}

@@ -298,8 +298,8 @@ func (c *calculation) refuseFilters(no *Refusal, r *Result, model Model) {
 		no.addf("the heralded band is not known; want a filter on the trigger arm and the pump wavelength, or a model that says it")
 		return
 	}
-	r.noteValue("wavelength", centre, "nm", "centre of the heralded band, vacuum")
-	r.noteValue("bandwidth", width, "nm", "full width at half maximum of the heralded band")
+	r.noteValue("wavelength", centre, 0.1, "nm", "centre of the heralded band, vacuum")
+	r.noteValue("bandwidth", width, 0.1, "nm", "full width at half maximum of the heralded band")
 	if f := c.test.Filter; f != nil {
 		low, high := f.CentreNm-f.WidthNm/2, f.CentreNm+f.WidthNm/2
 		if centre-width/2 < low || centre+width/2 > high {
@@ -372,7 +372,7 @@ func (c *calculation) takeBackground(kinds map[protocol.ReadingKind][]protocol.R
 		c.backgrounds = append(c.backgrounds, one)
 	}
 	if time > 0 && len(kinds[protocol.Background]) > 0 {
-		r.noteValue("dark count rate of the trigger", dark/time, "/s", "contained in the background, so not subtracted again")
+		r.noteValue("dark count rate of the trigger", dark/time, math.Sqrt(math.Max(dark, 1))/time, "/s", "contained in the background, so not subtracted again")
 	}
 	slices.SortStableFunc(c.backgrounds, func(a, b dim) int { return a.mid.Compare(b.mid) })
 	for i := range c.dwells {
@@ -890,16 +890,18 @@ func (c *calculation) conditions(r *Result, x []float64, q Question) {
 	net, a := c.c-c.accidentals(), c.chances*x[inWindow]
 	r.note("polarisation", orNone(c.test.Polarisation))
 	r.note("plane", orNone(c.test.Face)+": the plane that the efficiency refers to")
-	r.noteValue("count rate of the trigger", c.s/c.gateS, "/s", c.trigger.Name)
-	r.noteValue("count rate of the detector under test", c.d/c.gateS, "/s", c.test.Name)
-	r.noteValue("coincidence rate", c.c/c.gateS, "/s", "raw")
+	r.noteValue("count rate of the trigger", c.s/c.gateS, math.Sqrt(c.s)/c.gateS, "/s", c.trigger.Name)
+	r.noteValue("count rate of the detector under test", c.d/c.gateS, math.Sqrt(c.d)/c.gateS, "/s", c.test.Name)
+	r.noteValue("coincidence rate", c.c/c.gateS, math.Sqrt(c.c)/c.gateS, "/s", "raw")
 	r.note("detector settings", orNone(strings.Join(c.test.Settings, ", ")))
 	r.note("trigger settings", orNone(strings.Join(c.trigger.Settings, ", ")))
-	r.noteValue("coverage factor k", *r.K, "1", fmt.Sprintf("%.4g %% coverage", 100*q.Coverage))
-	r.noteValue("heralding efficiency, net", net/(c.s-c.background), "1", "(C - A)/(S - B): of arm and detector together, no detection efficiency")
+	r.noteValue("coverage factor k", *r.K, 0.1, "1", fmt.Sprintf("%.4g %% coverage", 100*q.Coverage))
+	r.noteValue("heralding efficiency, net", net/(c.s-c.background), math.Sqrt(c.c)/(c.s-c.background), "1", "(C - A)/(S - B): of arm and detector together, no detection efficiency")
 	if a > 0 {
-		r.noteValue("coincidence-to-accidental ratio, net", NetCAR(c.c, a), "1", "(C - A)/A")
-		r.noteValue("coincidence-to-accidental ratio, gross", GrossCAR(c.c, a), "1", "C/A")
+		gross := GrossCAR(c.c, a)
+		u := gross * math.Hypot(1/math.Sqrt(c.c), c.inputs[inWindow].U/x[inWindow])
+		r.noteValue("coincidence-to-accidental ratio, net", NetCAR(c.c, a), u, "1", "(C - A)/A")
+		r.noteValue("coincidence-to-accidental ratio, gross", gross, u, "1", "C/A")
 	}
 	r.note("counter logic", string(c.logic))
 	if c.trigger.Filter != nil {

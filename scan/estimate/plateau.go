@@ -50,7 +50,7 @@ func (p Plateau) choose(rows Rows, lights []protocol.Reading, ch channels, windo
 			centre[f] = p.Centre.Value
 		}
 		v := p.Centre.Value
-		notes = append(notes, Condition{Name: "plateau's centre", Value: &v, Unit: "deg", Text: "from elsewhere: " + p.Centre.From})
+		notes = append(notes, Condition{Name: "plateau's centre", Value: &v, Unit: "deg", u: p.Centre.U, Text: "from elsewhere: " + p.Centre.From})
 	} else {
 		names := slices.Compact(slices.Sorted(slices.Values(fold)))
 		if !parted(rows, lights, fold) {
@@ -73,7 +73,7 @@ func (p Plateau) choose(rows Rows, lights []protocol.Reading, ch channels, windo
 				return nil, nil, nil
 			}
 			centre[f] = v
-			notes = append(notes, Condition{Name: fmt.Sprintf("plateau's centre for part %d", f), Value: &v, Unit: "deg", Text: fmt.Sprintf("± %.2g deg, from the %d readings of the other parts", u, len(others))})
+			notes = append(notes, Condition{Name: fmt.Sprintf("plateau's centre for part %d", f), Value: &v, Unit: "deg", u: u, Text: fmt.Sprintf("± %.2g deg, from the %d readings of the other parts", u, len(others))})
 		}
 	}
 	for i, r := range lights {

@@ -77,7 +77,7 @@ func (q RefineQuestion) room() (points int, why string) {
 			left = int(max(0, q.Of.Within-q.Spent) / q.Each)
 		}
 		if left < points {
-			points, why = left, fmt.Sprintf("%s of %s are used, and a point takes %s", rounded(q.Spent), q.Of.Within, rounded(q.Each))
+			points, why = left, fmt.Sprintf("%s of %s are used, and a point takes %s", unit.Span(rounded(q.Spent)), unit.Span(q.Of.Within), unit.Span(rounded(q.Each)))
 		}
 	}
 	return max(0, points), why

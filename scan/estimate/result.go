@@ -81,14 +81,17 @@ type Condition struct {
 	Value *float64 `json:"value"`
 	Unit  string   `json:"unit"`
 	Text  string   `json:"text"`
+
+	u float64 // how well the value is known, for its digits; 0: not said
 }
 
 func (r *Result) note(name, text string) {
 	r.Condition = append(r.Condition, Condition{Name: name, Text: text})
 }
 
-func (r *Result) noteValue(name string, v float64, unit, text string) {
-	c := Condition{Name: name, Unit: unit, Text: text}
+// noteValue notes a number, which a person is shown to two digits of u, or six in all where u is 0.
+func (r *Result) noteValue(name string, v, u float64, unit, text string) {
+	c := Condition{Name: name, Unit: unit, Text: text, u: u}
 	if !math.IsNaN(v) && !math.IsInf(v, 0) {
 		c.Value = &v
 	}
@@ -223,7 +226,11 @@ func (r Result) Text() string {
 		for _, c := range r.Condition {
 			v := c.Text
 			if c.Value != nil {
-				v = strings.TrimSpace(figure(*c.Value, 6) + " " + strings.TrimPrefix(c.Unit, "1"))
+				v = figure(*c.Value, 6)
+				if c.u > 0 {
+					v = fixed(*c.Value, decimals(c.u))
+				}
+				v = strings.TrimSpace(v + " " + strings.TrimPrefix(c.Unit, "1"))
 				if c.Text != "" {
 					v += " (" + c.Text + ")"
 				}

@@ -117,7 +117,7 @@ func Zero(rows Rows, bench Bench, model Model, q ZeroQuestion) (Result, error) {
 	}
 	for i, name := range []string{"below zero", "above zero"} {
 		g := side[i].Goodness(q.Trials, q.Seed+uint64(i))
-		r.noteValue("goodness of fit, side "+name, g.P, "1", fmt.Sprintf("Cash statistic %.4g on %d degrees of freedom; %d simulated data sets gave %.4g on average", g.Statistic, side[i].Fit.Freedom, g.Trials, g.Mean))
+		r.noteValue("goodness of fit, side "+name, g.P, 0.01, "1", fmt.Sprintf("Cash statistic %.4g on %d degrees of freedom; %d simulated data sets gave %.4g on average", g.Statistic, side[i].Fit.Freedom, g.Trials, g.Mean))
 		if g.P < onePercent {
 			r.Warnings = append(r.Warnings, fmt.Sprintf("the %s profile does not describe the readings on the side %s (p = %.2g)", shape, name, g.P))
 		}
