@@ -317,6 +317,7 @@ func TestABrokersFolderThatIsDamagedMeanwhileHoldsNoReadingUp(t *testing.T) {
 			t.Fatalf("serve: %s", p.err)
 		}
 		run := started(t, data, long, "long")
+		before := len(ledger.all(t))
 		_, gates = ledger.await(t, gates, "a gate", gateClosed)
 		copyAside(t, filepath.Join(data, "nats"))
 		for range 5 {
@@ -347,7 +348,22 @@ func TestABrokersFolderThatIsDamagedMeanwhileHoldsNoReadingUp(t *testing.T) {
 		mustCatchUp(t, p, data)
 		p.signal(syscall.SIGTERM)
 		p.wait()
-		t.Logf("%s: %s at most between gates, %s in all", s.name, longest.Round(time.Millisecond), time.Since(began).Round(10*time.Millisecond))
+		dwelt, readings := 0, 0
+		for _, r := range ledger.all(t)[before:] {
+			if r.Kind == instruments.GateClosed && r.Gate.SetS > 0.005 { // no glance
+				dwelt++
+			}
+		}
+		for _, e := range entriesOf(t, data) {
+			if e.Kind == protocol.ReadingEntry {
+				readings++
+			}
+		}
+		// The stop came into one dwell, of two slices.
+		if readings == 0 || dwelt < 2*readings || dwelt > 2*readings+2 {
+			t.Errorf("%s: %d readings are in the logbook, and %d slices were counted; want two a reading, and at most two that the stop cut", s.name, readings, dwelt)
+		}
+		t.Logf("%s: %d readings, %s at most between gates, %s in all", s.name, readings, longest.Round(time.Millisecond), time.Since(began).Round(10*time.Millisecond))
 	}
 }
 
