@@ -10,6 +10,7 @@ import (
 	"strconv"
 	"strings"
 	"sync"
+	"sync/atomic"
 	"syscall"
 	"testing"
 	"time"
@@ -263,7 +264,7 @@ func TestACableThatIsPluggedInAgainIsFoundByItsPathAndAnotherInstrumentIsRefused
 		times = 2
 	}
 	if *realAll {
-		times = 50
+		times = 100
 	}
 	s := newPlugged(t, "counter", change{"device: simulated}", "device: simulated, answer_within: 500 ms, longest_answer: 1 s}"})
 	long := strings.Replace(killRecipe, "times: 2", fmt.Sprint("times: ", 4+times), 1)
@@ -304,6 +305,69 @@ func TestACableThatIsPluggedInAgainIsFoundByItsPathAndAnotherInstrumentIsRefused
 	s.end(long)
 }
 
+// newOpenings counts how often a file is opened by anybody.
+func newOpenings(t *testing.T, file string) (count func() int) {
+	t.Helper()
+	fd, err := unix.InotifyInit1(unix.IN_NONBLOCK | unix.IN_CLOEXEC)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if _, err := unix.InotifyAddWatch(fd, file, unix.IN_OPEN); err != nil {
+		t.Fatal(err)
+	}
+	// Events that are equal and wait become one, so each is taken as it comes.
+	events := os.NewFile(uintptr(fd), "inotify")
+	var n atomic.Int64
+	done := make(chan struct{})
+	go func() {
+		defer close(done)
+		b := make([]byte, unix.SizeofInotifyEvent)
+		for {
+			if _, err := events.Read(b); err != nil {
+				return
+			}
+			n.Add(1)
+		}
+	}()
+	t.Cleanup(func() {
+		_ = events.Close()
+		<-done
+	})
+	return func() int { return int(n.Load()) }
+}
+
+// A cable that was pulled for good: the run holds for a person, and says which line is gone. When it is
+// back the run goes on at a word.
+func TestACableThatDoesNotComeBackHoldsTheRunForAPerson(t *testing.T) {
+	t.Parallel()
+	if !*realAll {
+		t.Skip("SKIPPED: a minute is the shortest patience that a recipe may have; the long form waits for it")
+	}
+	s := newPlugged(t, "counter", change{"device: simulated}", "device: simulated, answer_within: 300 ms, longest_answer: 600 ms}"})
+	// Without the recipe's word it is waited for for ten minutes.
+	long := strings.Replace(strings.Replace(killRecipe, "times: 2", "times: 6", 1), "then: hold", "then: hold, give_up_after: 1 min", 1)
+	run := started(t, s.data, long, "gone")
+	s.gate()
+	s.plug.pull()
+	pulled := time.Now()
+	row := awaitRow(t, s.p, s.data, run, "holding", func(r logbook.RunRow) bool { return r.State == protocol.Holding })
+	took := time.Since(pulled)
+	if took < 55*time.Second || took > 85*time.Second {
+		t.Errorf("it holds %s after the cable was pulled; want the minute that the recipe gives, and at most one opening of 10 s and the tries for the rest state after it", took.Round(time.Millisecond))
+	}
+	if !slices.Contains(row.Causes, protocol.ByTrouble) || !strings.Contains(row.Reason, "counter") || !strings.Contains(row.Reason, "no such file") {
+		t.Errorf("the run holds for %v: %s; want the counter's line missing", row.Causes, row.Reason)
+	}
+	descriptors, _ := s.p.holds()
+	s.plug.in(filepath.Join(s.sim, "counter"))
+	s.latest()
+	must(t, "resume", "--data", s.data)
+	s.gate()
+	must(t, "stop", "--data", s.data)
+	t.Logf("held after %s with %d descriptors: %s", took.Round(time.Millisecond), descriptors, row.Reason)
+	s.end(long)
+}
+
 // A dead line is tried again with pauses: a daemon that waits for one costs little more than an idle one.
 func TestADeadLineDoesNotKeepTheProcessorBusy(t *testing.T) {
 	t.Parallel()
@@ -323,6 +387,18 @@ func TestADeadLineDoesNotKeepTheProcessorBusy(t *testing.T) {
 	s.gate()
 	s.plug.pull()
 	gone := over()
+	// A file that is no terminal: each try to open it is seen.
+	tries := newOpenings(t, writeFile(t, s.plug.link, ""))
+	counted := 5 * time.Second // in which the longest pause ends
+	if *realAll {
+		counted = time.Minute
+	}
+	<-time.After(counted)
+	dead := tries()
+	// Pauses grow from 50 ms to 2 s, of which chance takes up to half, and begin anew with each connect.
+	if n := int(counted/time.Second)*3/2 + 8; dead == 0 || dead > n {
+		t.Errorf("a dead path was tried %d times in %s; want 1 to %d", dead, counted, n)
+	}
 	// Something that opens and hangs up at once, over and over.
 	listener, err := net.Listen("tcp", "127.0.0.1:0")
 	if err != nil {
@@ -351,7 +427,7 @@ func TestADeadLineDoesNotKeepTheProcessorBusy(t *testing.T) {
 			t.Errorf("a daemon %s worked for %s in %s; an idle one for %s", what, took, window, idle)
 		}
 	}
-	t.Logf("in %s: idle %s, the line gone %s, hanging up %s (opened %d times)", window, idle, gone, hangsUp, len(opened))
+	t.Logf("in %s: idle %s, the line gone %s, a dead path tried %d times in %s, hanging up %s (opened %d times)", window, idle, gone, dead, counted, hangsUp, len(opened))
 	must(t, "stop", "--data", s.data)
 	s.plug.pull()
 	s.p.signal(syscall.SIGTERM)
