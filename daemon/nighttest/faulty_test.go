@@ -123,15 +123,15 @@ func leaveGateOpen() Sabotage {
 	return Sabotage{Sink: slowly, Bench: func(b *engine.Bench) { b.Counter = deaf{b.Counter} }}
 }
 
-// once does something when an entry that says a word has become durable, once.
-func once(word string, before bool, do func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error) func(Book) Book {
+// once does something, once, instead of writing an entry that says a word, or when it is durable.
+func once(word string, instead bool, do func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error) func(Book) Book {
 	done := false
 	return onAppend(func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
 		if done || !bytes.Contains(e.Body, []byte(word)) {
 			return on(ctx, e)
 		}
 		done = true
-		if before {
+		if instead {
 			return do(ctx, e, on)
 		}
 		if err := on(ctx, e); err != nil {
@@ -159,6 +159,24 @@ func openInAHold(pump bool) func() Sabotage {
 				_ = blade.Open(ctx)
 				_ = blade.Close(ctx)
 				return nil
+			}),
+		}
+	}
+}
+
+// turnsStill sends an arm far away just before an entry that says a word is written.
+func turnsStill(word string) func() Sabotage {
+	return func() Sabotage {
+		var stage drivers.Stage
+		return Sabotage{
+			Sink:  slowly,
+			Bench: func(b *engine.Bench) { stage = b.Stages[0] },
+			Book: once(word, true, func(ctx context.Context, e protocol.Entry, on func(context.Context, protocol.Entry) error) error {
+				go func() {
+					_ = stage.Move(context.WithoutCancel(ctx), map[drivers.AxisName]unit.Angle{"signal_arm": 11 * unit.Degree})
+				}()
+				time.Sleep(500 * time.Millisecond)
+				return on(ctx, e)
 			}),
 		}
 	}
@@ -353,16 +371,6 @@ func damage(word string) func() Sabotage {
 	}
 }
 
-// hiccups says that troubles of the wire happened, where no line noticed one.
-func hiccups(times int, text string) func() Sabotage {
-	return tamper(func(line []Moment, i int) []Moment {
-		for range times {
-			line = slices.Insert(line, i, Moment{At: line[i].At, World: &instruments.Record{At: line[i].At, Device: "counter", Kind: instruments.Troubled, Text: text}})
-		}
-		return line
-	})
-}
-
 // backward shows the queue from behind.
 type backward struct{ Book }
 
@@ -414,5 +422,14 @@ func (b flatterer) Results(ctx context.Context, run protocol.RunID) ([]protocol.
 func flatter(change func(*resultSeen)) func() Sabotage {
 	return func() Sabotage {
 		return Sabotage{Book: func(b Book) Book { return flatterer{b, change} }}
+	}
+}
+
+// demandMore says that the recipes asked for earlier values that are surer than what was taken.
+func demandMore(f *Facts) {
+	for _, p := range f.Plans {
+		for i := range p.Earlier {
+			p.Earlier[i].Ask.Below = 1 // of an angle's smallest parts
+		}
 	}
 }

@@ -114,10 +114,10 @@ type judge struct {
 	turns       turns
 	pumpMoves   bool                // its blade is on its way to be open
 	moveStarted time.Time           // of the last motion that is no search
+	turning     map[string]int      // motions under way, by controller
 	out         map[string]bool     // devices whose plug is out
 	values      map[string][]valued // by device, and quantity of a sensor
 	effects     []*effect
-	lives       int
 	wasKilled   bool
 }
 
@@ -180,6 +180,10 @@ func (j *judge) world(r *instruments.Record) {
 		j.gateEnded(r)
 	case instruments.MoveStarted, instruments.HomeStarted, instruments.MarkStarted:
 		j.moved = r.At
+		if j.turning == nil {
+			j.turning = map[string]int{}
+		}
+		j.turning[r.Device]++
 		if r.Kind == instruments.MoveStarted {
 			j.moveStarted = r.At
 		}
@@ -187,6 +191,8 @@ func (j *judge) world(r *instruments.Record) {
 		if j.resting() {
 			j.say("%s: a motion began while run %s is %s", r.Device, j.current, j.runs[j.current].state)
 		}
+	case instruments.MoveEnded, instruments.MoveStopped, instruments.HomeFound, instruments.MarkFound:
+		j.turning[r.Device]--
 	case instruments.BladeStarted:
 		if r.Device == j.facts.Pump {
 			j.pumpMoves = r.Text == "open"
@@ -639,6 +645,11 @@ func (j *judge) atRest(where, text string) {
 	if j.open != nil && !excused(j.facts.Counter) {
 		j.say("%s: a gate is open", where)
 	}
+	for _, name := range j.facts.Controls {
+		if j.turning[name] > 0 && !excused(name) {
+			j.say("%s: %s still turns", where, name)
+		}
+	}
 }
 
 func (j *judge) stream(e *protocol.Entry) {
@@ -671,7 +682,6 @@ func (j *judge) process(p *Process) {
 		}
 	case Started:
 		j.killed = false
-		j.lives++
 		j.waits.since = j.now
 		for name := range j.bright {
 			j.bright[name] = j.now // nobody could before; now the first act has to

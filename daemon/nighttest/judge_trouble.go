@@ -129,17 +129,10 @@ func (j *judge) needed(device string) bool {
 
 // verdicts judges every trouble at the end of the night.
 func (j *judge) verdicts() {
-	wired := 0
 	for _, e := range j.effects {
-		if e.trouble.Surfaces().Retried {
-			wired++
-		}
 		if j.demands(e) && !e.surfaced {
 			j.say("%s took effect, and none of %v followed in %d readings", e.trouble, e.trouble.Surfaces().Events, e.readings)
 		}
-	}
-	if wired > 2*j.lives && j.facts.CaughtUp && j.facts.AskedAgain == 0 {
-		j.say("%d troubles of lines took effect, and no line noticed anything", wired)
 	}
 }
 

@@ -84,7 +84,6 @@ func (j *judge) due(where string, p *planned, b *protocol.Reading) {
 func (j *judge) steady(where string, p *planned) {
 	p.warm = true
 	if p.plan.Schedule.WarmUp == nil {
-		j.say("%s: a warm-up is over that the plan does not have", where)
 		return
 	}
 	for _, s := range p.plan.Schedule.WarmUp.Steady {

@@ -71,8 +71,6 @@ type Facts struct {
 	Watch time.Duration
 	// Noticed is how many answers the lines waited for in vain, asked again for or dropped.
 	Noticed int
-	// AskedAgain is the same without what comes unasked on a quiet night, too: chatter and greetings.
-	AskedAgain int
 	// CaughtUp says that the courier was given the time to publish everything.
 	CaughtUp bool
 }
