@@ -432,7 +432,7 @@ func TestASilentPersonIsTakenForGone(t *testing.T) {
 			t.Errorf("asked after that: %v; want 409", a.err)
 		}
 		texts := l.texts()
-		if got := texts[len(texts)-1]; got != "operator: nothing was asked for 2m0s, so the hand work of ann ended, with the bench at rest" {
+		if got := texts[len(texts)-1]; got != "operator: nothing was asked for 2 min, so the hand work of ann ended, with the bench at rest" {
 			t.Errorf("written: %q", got)
 		}
 	})
