@@ -162,7 +162,16 @@ func (c *census) String(took time.Duration) string {
 	fmt.Fprintf(&b, "runs: %s; %s\n", counted(c.runs), counted(c.others))
 	fmt.Fprintf(&b, "benches: %s\n", counted(c.benches))
 	for _, k := range trouble.Kinds() {
-		fmt.Fprintf(&b, "%s: %d drawn, %d took effect, %d surfaced, %d shown\n", k, c.drawn[k], c.effect[k], c.surfaced[k], c.shown[k])
+		note := ""
+		switch s := (trouble.Trouble{Kind: k}).Surfaces(); {
+		case s.Undetectable != "":
+			note = "; no instrument shows it"
+		case s.Harmless && len(s.Events) == 0:
+			note = "; harmless, no event is asked for"
+		case s.Harmless:
+			note = "; may be harmless"
+		}
+		fmt.Fprintf(&b, "%s: %d drawn, %d took effect, %d surfaced, %d followed by some event%s\n", k, c.drawn[k], c.effect[k], c.surfaced[k], c.shown[k], note)
 	}
 	for _, s := range append(slices.Clone(engine.Steps), "") {
 		name := s

@@ -49,8 +49,8 @@ type Verdict struct {
 // Effect is a trouble that took effect: the ledger says so.
 type Effect struct {
 	Kind trouble.Kind
-	// Surfaced says that it showed as it declares, Shown that it showed somehow: in an event, or in
-	// what a line counts.
+	// Surfaced says that it showed in an event that it declares, Shown that some event of the run
+	// followed it that may have had it for a cause.
 	Surfaced, Shown bool
 }
 
@@ -75,8 +75,7 @@ func Examine(line []Moment, facts Facts) Verdict {
 	j.close()
 	v := Verdict{Wrong: j.wrong, Said: j.said}
 	for _, e := range j.effects {
-		noticed := e.trouble.Wired() && facts.Noticed > 0
-		v.Effects = append(v.Effects, Effect{Kind: e.trouble.Kind, Surfaced: e.surfaced || noticed, Shown: e.surfaced || e.shown || noticed})
+		v.Effects = append(v.Effects, Effect{Kind: e.trouble.Kind, Surfaced: e.surfaced, Shown: e.surfaced || e.shown})
 	}
 	return v
 }

@@ -792,7 +792,6 @@ func (k *kit) result() (*Result, error) {
 	k.virtual.World.Settle()
 	r := &Result{Facts: FactsOf(k.Bench), Took: time.Since(k.began), Lives: k.lived, Lines: k.counts, Stuck: k.stuck, Published: len(k.sink.stored)}
 	r.Killed = k.killed
-	r.Facts.Noticed = k.counts.Retried + k.counts.Missing + k.counts.Strangers + k.counts.Strays + k.counts.Chatter + k.counts.Resynchronised + k.counts.Lost + k.counts.Restarts
 	r.Facts.CaughtUp = k.stuck == ""
 	r.Line = Merge(World(k.ledger.Records()), k.journal, k.sink.moments, k.process)
 	if k.Wrap.Line != nil {

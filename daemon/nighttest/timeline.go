@@ -69,8 +69,6 @@ type Facts struct {
 	Sensors    map[string]Scale
 	// Watch is how long light at a detector may go unseen; 0: the longest gate of the plan.
 	Watch time.Duration
-	// Noticed is how many answers the lines waited for in vain, asked again for or dropped.
-	Noticed int
 	// CaughtUp says that the courier was given the time to publish everything.
 	CaughtUp bool
 }
