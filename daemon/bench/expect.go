@@ -22,6 +22,9 @@ type outlook struct {
 	warnings []string
 	err      error
 
+	shape   sync.Once
+	perfect *source.Model
+
 	mu     sync.Mutex
 	empty  map[unit.Angle]string // why there is no emission, by tilt
 	flanks map[flank][2]unit.Angle
@@ -83,6 +86,25 @@ func (f *File) outlooked() (*source.Model, error) {
 		}
 	})
 	return l.model, l.err
+}
+
+// Perfect is the model of the declared optics with perfect detectors, for the shapes of profiles: made
+// once, so that what one fit has worked out is quick for all others. It is nil where the bench has no
+// optics, or none that can be computed.
+func (f *File) Perfect() *source.Model {
+	l := f.outlook
+	l.shape.Do(func() {
+		o, err := f.Source()
+		if err != nil {
+			return
+		}
+		for _, arm := range []*source.Arm{&o.Signal, &o.Idler} {
+			arm.Detector = source.Detector{Efficiency: 1, Model: arm.Detector.Model}
+			arm.FluorescenceHzPerW, arm.StrayHzPerW = 0, 0
+		}
+		l.perfect, _ = source.New(o)
+	})
+	return l.perfect
 }
 
 // noEmission says why there is none at a tilt; empty: there is.

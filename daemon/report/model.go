@@ -61,21 +61,13 @@ func witnessOf(f *bench.File, result scan.Result, rows estimate.Rows) (w witness
 		return w, false
 	}
 	w.optics = optics
-	w.perfect, _ = source.New(perfect(optics)) // nil where the optics cannot be computed
+	w.perfect = f.Perfect()
 	for _, r := range rows.Readings {
 		if _, doubtful := rows.Doubtful[r.Sequence]; r.Kind == protocol.Light && r.Accepted && !doubtful {
 			w.lights = append(w.lights, r)
 		}
 	}
 	return w, w.perfect != nil && len(w.lights) > 0
-}
-
-func perfect(o source.Optics) source.Optics {
-	for _, arm := range []*source.Arm{&o.Signal, &o.Idler} {
-		arm.Detector = source.Detector{Efficiency: 1, Model: arm.Detector.Model}
-		arm.FluorescenceHzPerW, arm.StrayHzPerW = 0, 0
-	}
-	return o
 }
 
 // pose is how the bench stood at a reading, as the model wants it.
