@@ -21,7 +21,9 @@ type places struct {
 	unknown   map[string]bool    // its zero is lost: what it reports means nothing
 	off       map[string]float64 // true minus reported, of one that only counts
 	slipped   time.Time
-	searched  map[string]int // by controller: place in its order of the last search, from 1
+	moving    map[string]bool // an axis on its way
+	astray    map[string]bool // slipped on the way that it is on: it ends where nobody sent it
+	searched  map[string]int  // by controller: place in its order of the last search, from 1
 	searching map[string]bool
 	person    bool            // somebody let the run go on, and nothing held it since
 	pump      []openSince     // when the pump's blade began to open, and was closed, newest last
@@ -40,6 +42,7 @@ func (j *judge) place(r *instruments.Record) {
 	p := &j.places
 	if p.unknown == nil {
 		p.unknown, p.off, p.searched, p.blamed = map[string]bool{}, map[string]float64{}, map[string]int{}, map[string]bool{}
+		p.moving, p.astray = map[string]bool{}, map[string]bool{}
 	}
 	switch r.Kind {
 	case instruments.BladeStarted, instruments.BladeClosed:
@@ -77,10 +80,15 @@ func (j *judge) place(r *instruments.Record) {
 			if j.axis(axis).Proof != drivers.Proved {
 				p.off[axis] += span.ToDeg - span.FromDeg
 			}
+			p.astray[axis] = p.moving[axis]
 		}
 		p.stand = r.Stand // nobody's doing: the way there is not judged
 	case instruments.MoveStarted:
 		clear(p.searched)
+		for axis := range r.Axes {
+			p.moving[axis] = true
+			delete(p.astray, axis)
+		}
 	case instruments.MarkStarted:
 		j.inTheDark(r)
 	case instruments.HomeStarted:
@@ -98,6 +106,11 @@ func (j *judge) place(r *instruments.Record) {
 		j.way(p.stand, r.Stand, p.since, r.At)
 	}
 	p.stand, p.since = r.Stand, r.At
+	if r.Kind == instruments.MoveEnded || r.Kind == instruments.MoveStopped {
+		for axis := range r.Axes {
+			delete(p.moving, axis)
+		}
+	}
 	if r.Kind == instruments.HomeFound {
 		for axis := range r.Axes {
 			delete(p.unknown, axis)
@@ -112,7 +125,7 @@ const slipUnseen = 15 * time.Second
 // trusted says whether the axes that a keep-out is about are where they say, within its margin.
 func (j *judge) trusted(k scan.KeepOut) bool {
 	return !slices.ContainsFunc(axesOf(k), func(a string) bool {
-		return j.places.unknown[a] || math.Abs(j.places.off[a]) > k.Margin.Degrees()
+		return j.places.unknown[a] || j.places.astray[a] || math.Abs(j.places.off[a]) > k.Margin.Degrees()
 	})
 }
 
@@ -155,7 +168,7 @@ func (j *judge) way(from, to map[string]float64, began, ended time.Time) {
 		outside := func(x float64) bool {
 			return x < a.Low.Degrees()-a.Tolerance.Degrees()-slackDeg || x > a.High.Degrees()+a.Tolerance.Degrees()+slackDeg
 		}
-		if outside(x) && !outside(was) && !p.unknown[string(a.Name)] && math.Abs(p.off[string(a.Name)]) < slackDeg {
+		if outside(x) && !outside(was) && !p.unknown[string(a.Name)] && !p.astray[string(a.Name)] && math.Abs(p.off[string(a.Name)]) < slackDeg {
 			j.say("%s went to %.4f deg; its limits are %s to %s deg", a.Name, x, a.Low, a.High)
 		}
 	}

@@ -856,6 +856,9 @@ func FactsOf(f *bench.File) Facts {
 	}
 	for _, a := range f.Axes {
 		facts.Tolerance[string(a.Name)] = a.Tolerance.Degrees() + detection
+		if a.Verify != nil { // less than that no verification finds
+			facts.Tolerance[string(a.Name)] += a.Verify.Tolerance.Degrees()
+		}
 		facts.Axes = append(facts.Axes, a.Axis)
 		facts.Controller[string(a.Name)] = string(a.Axis.Controller)
 	}
