@@ -334,8 +334,11 @@ func TestTheJudgeFindsEverySabotage(t *testing.T) {
 			}
 		}
 	})
-	for _, row := range rows {
+	for i, row := range rows {
 		kept[row.invariant]++
+		if (raced || testing.Short()) && i%10 != 0 {
+			continue // the judge is one goroutine: what the detector is to see, a few nights show
+		}
 		t.Run(row.name, func(t *testing.T) {
 			t.Parallel()
 			words, recipe, found := strings.Cut(row.night, between)
