@@ -245,6 +245,7 @@ func (h *Hand) Look(ctx context.Context, gate time.Duration) (protocol.HandLooke
 		return protocol.HandLookedAt{}, refuseHand("gate %s; want %s to %s", gate, low, high)
 	}
 	var all protocol.Slice
+	var parts []protocol.Slice
 	doubt := ""
 	for left := gate; left > 0; {
 		part := left
@@ -256,7 +257,8 @@ func (h *Hand) Look(ctx context.Context, gate time.Duration) (protocol.HandLooke
 		if err != nil {
 			return protocol.HandLookedAt{}, err
 		}
-		if err := h.judge(ctx, slice); err != nil {
+		parts = append(parts, slice)
+		if err := h.judge(ctx, parts...); err != nil {
 			return protocol.HandLookedAt{}, err
 		}
 		all.Counts = sum(all.Counts, slice.Counts, h.e.Bench.Tag)
@@ -332,9 +334,9 @@ func (h *Hand) seeing() bool {
 
 func (h *Hand) sees(d Detector) bool { return d.Protect == nil || h.wanted[d.Protect.Name()] }
 
-// judge compares a gate with trips and floors. Behind a closed shutter nothing is expected, so only
+// judge compares gates, in their order, with trips and floors. Behind a closed shutter nothing is expected, so only
 // the trip counts there. What is too bright is protected before anything else happens.
-func (h *Hand) judge(ctx context.Context, s protocol.Slice) error {
+func (h *Hand) judge(ctx context.Context, gates ...protocol.Slice) error {
 	b := *h.e.Bench
 	b.Detectors = slices.Clone(b.Detectors)
 	for i := range b.Detectors {
@@ -342,7 +344,7 @@ func (h *Hand) judge(ctx context.Context, s protocol.Slice) error {
 			b.Detectors[i].FloorHz = 0
 		}
 	}
-	seen := (&Engine{Config: Config{Bench: &b}}).judgeLight(s.Counts, s.Gate.Duration(), s.Counts, s.Gate.Duration())
+	seen := (&Engine{Config: Config{Bench: &b}}).judgeLight(gates...)
 	bright, is := errors.AsType[*brightness](seen)
 	if !is {
 		return seen
