@@ -33,7 +33,8 @@ Ctrl-C stops the run and brings the bench to rest. A run that was killed goes on
 
 func (c *runCommand) Run(ctx context.Context, con *console) error {
 	err := c.run(ctx, con)
-	if err != nil && interrupted(ctx, err) {
+	started, _ := errors.AsType[*startError](err)
+	if err != nil && interrupted(ctx, err) && (started == nil || started.restBad == "") {
 		return errors.New("stopped before anything moved")
 	}
 	return con.findings(err, c.JSON)
@@ -97,16 +98,14 @@ func (c *runCommand) run(ctx context.Context, con *console) error {
 }
 
 // refuseHopeless ends a call before there is a run when a device is held by another program, or
-// is another one: no waiting mends that, and somebody sits at the keyboard. The rest state comes
-// first, as at every start.
+// is another one: no waiting mends that, and somebody sits at the keyboard. A bench that came to
+// rest has answered.
 func (s *session) refuseHopeless(ctx context.Context) error {
-	b := s.keeper.Bench
-	bad := engine.Rest(ctx, b)
-	if bad == "" {
+	if s.restBad == "" {
 		return nil
 	}
 	var hopeless []error
-	for _, d := range devices(b) {
+	for _, d := range devices(s.keeper.Bench) {
 		within, cancel := context.WithTimeout(ctx, 5*time.Second)
 		err := d.Connect(within)
 		cancel()
@@ -117,7 +116,7 @@ func (s *session) refuseHopeless(ctx context.Context) error {
 	if len(hopeless) == 0 {
 		return nil // what may mend itself is the run's to wait for
 	}
-	return fmt.Errorf("%w; no run was begun, and the bench may not be at rest: %s", errors.Join(hopeless...), bad)
+	return fmt.Errorf("%w; no run was begun, and the bench may not be at rest: %s", errors.Join(hopeless...), s.restBad)
 }
 
 // devices lists what a run cannot do without.

@@ -47,12 +47,15 @@ type benchFlags struct {
 
 // session is a bench brought to life: lines, virtual instruments, logbook, broker, keeper.
 type session struct {
-	file   *bench.File
-	data   string // folder
-	book   *logbook.Book
-	keeper *keeper.Keeper
-	broker *broker.Broker
-	log    zerolog.Logger
+	file  *bench.File
+	data  string // folder
+	bench *bench.Bench
+	// restBad is what of the rest state was not reached at the start; empty: the bench is at rest.
+	restBad string
+	book    *logbook.Book
+	keeper  *keeper.Keeper
+	broker  *broker.Broker
+	log     zerolog.Logger
 
 	courier *courier.Courier
 	crews   []*crew.Group
@@ -98,7 +101,8 @@ func declared(benchText string, axis drivers.AxisName) (string, error) {
 }
 
 // open builds and starts everything but the keeper's own work. Whatever was started is closed
-// again when it fails.
+// again when it fails. The first act is the rest state, because a process that died may have left
+// the bench hot: before the logbook and the broker, which may refuse to come up.
 // attended says that the person who gave the command is there: what an earlier call left unfinished
 // goes on without another word.
 func open(ctx context.Context, flags benchFlags, recipeFolder string, attended bool, log zerolog.Logger) (_ *session, err error) {
@@ -116,43 +120,38 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 	if flags.Lines != "" && !s.file.Simulated() {
 		return nil, errUse{errors.New("--lines is for simulated benches; a real bench names its devices in the bench file")}
 	}
-	if s.book, err = logbook.Open(flags.Data); err != nil {
-		if errors.Is(err, logbook.ErrLocked) {
-			return nil, fmt.Errorf("%w; one daemon a data folder: stop it, or name another --data", err)
+	folder, unheld := logbook.Hold(flags.Data)
+	if errors.Is(unheld, logbook.ErrLocked) { // the bench is that daemon's
+		return nil, fmt.Errorf("%w; one daemon a data folder: stop it, or name another --data", unheld)
+	}
+	if unheld == nil {
+		s.cleanup = append(s.cleanup, func() { _ = folder.Close() })
+	}
+	if err := s.build(ctx, flags); err != nil {
+		return nil, errors.Join(unheld, err)
+	}
+	s.restBad = engine.Rest(ctx, &s.bench.Bench)
+	defer func() {
+		if err != nil {
+			err = &startError{err, s.restBad}
 		}
+	}()
+	if unheld != nil {
+		return nil, unheld
+	}
+	if s.book, err = folder.Open(); err != nil {
 		if errors.Is(err, logbook.ErrDamaged) {
 			return nil, fmt.Errorf("%w; it was not written to: %s", err, afterDamage(flags.Data))
 		}
 		return nil, err
 	}
 	s.cleanup = append(s.cleanup, func() { _ = s.book.Close() })
-
-	options := bench.Options{Links: flags.Lines, Log: log, Wrap: sabotage()}
-	if s.file.Simulated() && flags.Lines == "" {
-		folder, err := os.MkdirTemp("", "gemel-lines-")
-		if err != nil {
-			return nil, err
-		}
-		s.cleanup = append(s.cleanup, func() { _ = os.RemoveAll(folder) })
-		if options.Virtual, err = bench.NewVirtual(s.file, bench.VirtualOptions{Folder: folder, Ledger: instruments.WriteOnly(nil), Troubles: trouble.List{}}); err != nil {
-			return nil, err
-		}
-	}
-	built, err := bench.Build(s.file, options)
-	if err != nil {
-		return nil, err
-	}
-	// Lines and instruments outlive ctx: after a signal the rest state still has to be reached.
-	lines := s.crew(ctx)
-	for _, a := range built.Actors() {
-		lines.Go(a.Name, a.Run)
-	}
 	if s.broker, err = broker.New(broker.Config{Bench: s.file.Name, Dir: flags.Data, Listen: orElse(flags.Listen, s.file.NATSListen), Log: func(text string) { log.Warn().Msg(text) }}); err != nil {
 		return nil, err
 	}
 	s.keeper = keeper.New(keeper.Config{
-		Book: s.book, Bench: &built.Bench, BenchText: s.file.Text, Version: version, Plan: planner(s.file, "recipe"),
-		Hand:   built.Hand(),
+		Book: s.book, Bench: &s.bench.Bench, AtRest: s.restBad == "", BenchText: s.file.Text, Version: version, Plan: planner(s.file, "recipe"),
+		Hand:   s.bench.Hand(),
 		Recipe: recipesIn(recipeFolder), Armed: armedIn(flags.Data, s.file.Simulated()), MayHome: flags.Home,
 		Declared:           declared,
 		ResumeAfterRestart: attended || s.file.AfterRestart == bench.AfterRestartResume || s.file.AfterRestart == "" && s.file.Simulated(),
@@ -176,6 +175,45 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 		Step:    killpoint(),
 	})
 	return s, s.serve(ctx)
+}
+
+// startError is why a start failed after its first act, and how that left the bench.
+type startError struct {
+	err     error
+	restBad string
+}
+
+func (e *startError) Error() string {
+	if e.restBad != "" {
+		return fmt.Sprintf("%v; THE REST STATE WAS NOT REACHED: %s", e.err, e.restBad)
+	}
+	return fmt.Sprintf("%v; the bench is at rest", e.err)
+}
+
+func (e *startError) Unwrap() error { return e.err }
+
+// build makes the bench, and starts its lines and, behind them, its virtual instruments.
+func (s *session) build(ctx context.Context, flags benchFlags) (err error) {
+	options := bench.Options{Links: flags.Lines, Log: s.log, Wrap: sabotage()}
+	if s.file.Simulated() && flags.Lines == "" {
+		folder, err := os.MkdirTemp("", "gemel-lines-")
+		if err != nil {
+			return err
+		}
+		s.cleanup = append(s.cleanup, func() { _ = os.RemoveAll(folder) })
+		if options.Virtual, err = bench.NewVirtual(s.file, bench.VirtualOptions{Folder: folder, Ledger: instruments.WriteOnly(nil), Troubles: trouble.List{}}); err != nil {
+			return err
+		}
+	}
+	if s.bench, err = bench.Build(s.file, options); err != nil {
+		return err
+	}
+	// Lines and instruments outlive ctx: after a signal the rest state still has to be reached.
+	lines := s.crew(ctx)
+	for _, a := range s.bench.Actors() {
+		lines.Go(a.Name, a.Run)
+	}
+	return nil
 }
 
 // told logs what a service's own log should say of its runs; the journal has all of it.
@@ -296,7 +334,8 @@ func (s *session) panicked(p *crew.Panic) {
 	s.log.Error().Str("actor", p.Actor).Interface("panic", p.Value).Bytes("stack", p.Stack).Msg("a bug in this program; the bench is brought to rest")
 }
 
-// close ends everything in the reverse of its start: what takes requests first, the logbook last.
+// close ends everything in the reverse of its start: what takes requests first, the hold on the data
+// folder last.
 func (s *session) close() {
 	for i := len(s.cleanup) - 1; i >= 0; i-- {
 		s.cleanup[i]()

@@ -57,6 +57,8 @@ type Config struct {
 	Declared func(benchText string, axis drivers.AxisName) (string, error)
 	// Recipe reads the text of a recipe by the name it has in the configured folder; nil: there is none.
 	Recipe func(name string) (string, error)
+	// AtRest says that whoever makes the keeper has just brought the bench to rest, and Run need not.
+	AtRest bool
 	// ResumeAfterRestart lets interrupted runs go on without a person.
 	ResumeAfterRestart bool
 	// Conclude works out a run's results, each as a JSON object, from what is written; it is asked
@@ -131,7 +133,11 @@ func (k *Keeper) Run(ctx context.Context) error {
 	if k.Serving != nil {
 		k.Serving()
 	}
-	if bad := engine.Rest(ctx, k.Bench); bad != "" {
+	bad := ""
+	if !k.AtRest {
+		bad = engine.Rest(ctx, k.Bench)
+	}
+	if bad != "" {
 		if err := k.benchEvent(ctx, protocol.Trouble, "at the start the rest state was not reached: "+bad, nil); err != nil && !errors.Is(err, logbook.ErrFull) {
 			return err
 		}

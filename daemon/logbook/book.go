@@ -64,7 +64,7 @@ var (
 // Book is an open logbook. All methods may be called from any goroutine.
 type Book struct {
 	file    string
-	lock    *flock.Flock // nil when read-only
+	lock    *flock.Flock // nil when read-only, and when a Folder has it
 	writer  *sql.DB      // one connection; nil when read-only
 	insert  *sql.Stmt    // on writer
 	readers *sql.DB
@@ -75,26 +75,57 @@ type Book struct {
 	onAppend []func()
 }
 
-// Open opens the logbook of a data folder, and makes both when they are not there. It holds the
-// folder's lock until Close: ErrLocked means that another daemon works there.
-func Open(dir string) (_ *Book, err error) {
-	if dir, err = filepath.Abs(dir); err != nil {
+// Folder is a data folder that is held against all other daemons.
+type Folder struct {
+	dir  string
+	lock *flock.Flock
+}
+
+// Hold makes a data folder when it is not there, and takes its lock: ErrLocked means that another
+// daemon works there.
+func Hold(dir string) (*Folder, error) {
+	dir, err := filepath.Abs(dir)
+	if err != nil {
 		return nil, fmt.Errorf("data folder: %w", err)
 	}
 	if err := os.MkdirAll(dir, 0o755); err != nil {
 		return nil, fmt.Errorf("data folder: %w", err)
 	}
-	b := &Book{file: filepath.Join(dir, fileName)}
+	// SQLite's own locks let two daemons take turns; one bench must have one.
+	lock, err := takeLock(dir)
+	if err != nil {
+		return nil, err
+	}
+	return &Folder{dir, lock}, nil
+}
+
+// Close lets go of the folder; its logbook must be closed before.
+func (f *Folder) Close() error { return f.lock.Close() }
+
+// Open opens the logbook of a data folder, and makes both when they are not there. It holds the
+// folder's lock until Close: ErrLocked means that another daemon works there.
+func Open(dir string) (*Book, error) {
+	f, err := Hold(dir)
+	if err != nil {
+		return nil, err
+	}
+	b, err := f.Open()
+	if err != nil {
+		_ = f.Close()
+		return nil, err
+	}
+	b.lock = f.lock
+	return b, nil
+}
+
+// Open opens the logbook of the folder, and makes it when it is not there.
+func (f *Folder) Open() (_ *Book, err error) {
+	b := &Book{file: filepath.Join(f.dir, fileName)}
 	defer func() {
 		if err != nil {
 			b.Close()
 		}
 	}()
-
-	// SQLite's own locks let two daemons take turns; one bench must have one.
-	if b.lock, err = takeLock(dir); err != nil {
-		return nil, err
-	}
 	if err := useDisk(); err != nil {
 		return nil, err
 	}
@@ -122,7 +153,7 @@ func Open(dir string) (_ *Book, err error) {
 	if b.folder, err = openFolder(b.file); err != nil {
 		return nil, err
 	}
-	_ = reserve(dir) // without it a stop on a full disk is only in memory; that is no reason not to begin
+	_ = reserve(f.dir) // without it a stop on a full disk is only in memory; that is no reason not to begin
 	return b, nil
 }
 
