@@ -128,6 +128,19 @@ func (e *Engine) protect(ctx context.Context) error {
 	return errors.Join(errs...)
 }
 
+// cover closes the detectors' shutters before anything else happens, none waiting for another's dead
+// line. Where one does not confirm it at once the whole rest state follows, and with it the pump's
+// shutter: a detector that cannot be protected gets no light that could be spared. The text says what
+// could not be reached.
+func (e *Engine) cover(ctx context.Context) (bad string) {
+	fresh, cancel := e.fresh(ctx, 5*time.Second)
+	defer cancel()
+	if left := e.attempt(fresh, e.restJobs()[:len(e.protectors())], restMoment, false); len(left) > 0 {
+		return e.rest(ctx)
+	}
+	return ""
+}
+
 // light sets the shutters for a reading: the pump open or closed, the detectors seeing. The pump
 // comes first, so that nothing is seen before it is as it should be.
 func (e *Engine) light(ctx context.Context, pump bool) error {

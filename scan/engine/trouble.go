@@ -15,32 +15,36 @@ import (
 	"gemel/scan/route"
 )
 
-// afterError does what an error's remedy asks for, and then takes the reading again or not.
-func (e *Engine) afterError(ctx context.Context, t task, err error) error {
+// afterError does what an error's remedy asks for, and then takes the reading again or not. bad says
+// what of the rest state was not reached when the detectors were covered: until it is, nothing is
+// counted and the pump stays closed.
+func (e *Engine) afterError(ctx context.Context, t task, err error, bad string) error {
 	if b, ok := errors.AsType[*brightness](err); ok {
-		if e.progress.attempts[t.key()] >= e.Plan.Trouble.Retries {
+		if bad == "" && e.progress.attempts[t.key()] >= e.Plan.Trouble.Retries {
 			return e.again(ctx, t, b.Error()) // it is bright here each time: the arm may look into the pump
 		}
 		detail := keyDetail(t)
 		detail["detector"], detail["rate_hz"], detail["limit_hz"] = b.detector, b.rateHz, b.limitHz
 		return e.holdFor(ctx, protocol.ByLight, "held: "+b.Error(), detail)
 	}
-	if b, ok := errors.AsType[*brokenGuard](err); ok {
-		return e.afterGuard(ctx, t, b)
+	guard, broken := errors.AsType[*brokenGuard](err)
+	_, elsewhere := errors.AsType[*notThere](err)
+	remedy := drivers.RemedyOf(err)
+	if broken || elsewhere {
+		remedy = drivers.Retry
 	}
-	if _, ok := errors.AsType[*notThere](err); ok {
-		return e.again(ctx, t, firstLine(err))
-	}
-	switch drivers.RemedyOf(err) {
-	case drivers.Retry:
-		return e.again(ctx, t, firstLine(err))
-	case drivers.Reconnect, drivers.HomeAgain:
-		if werr := e.trouble(ctx, err); werr != nil {
+	if bad != "" && remedy == drivers.Retry || remedy == drivers.Reconnect || remedy == drivers.HomeAgain {
+		if werr := e.note(ctx, protocol.Trouble, firstLine(err)+withBad(bad), errorDetail(err)); werr != nil {
 			return werr
 		}
 		if werr := e.getReady(ctx, false); werr != nil || e.progress.State != protocol.Running {
 			return werr
 		}
+	}
+	switch {
+	case broken:
+		return e.afterGuard(ctx, t, guard)
+	case remedy == drivers.Retry, remedy == drivers.Reconnect, remedy == drivers.HomeAgain:
 		return e.again(ctx, t, firstLine(err))
 	default:
 		return e.holdFor(ctx, protocol.ByTrouble, "held: "+firstLine(err), errorDetail(err))
@@ -292,6 +296,10 @@ func (e *Engine) append(ctx context.Context, entry protocol.Entry) error {
 		op, end := e.operation(ctx)
 		_ = e.Bench.Pace.Wait(op, pause)
 		end()
+		if e.progress.restBad != "" {
+			e.rest(ctx) // a blade that stuck may move by now
+			e.showHolding(protocol.ByStorage, "held: nothing can be written: "+err.Error())
+		}
 		if err = e.Log.Append(context.WithoutCancel(ctx), entry); err == nil {
 			e.progress.storageHeld = true
 			e.publishSnapshot()
@@ -498,7 +506,7 @@ func (e *Engine) lookOnce(ctx context.Context, r *protocol.Reading) error {
 		r.Slices, r.Counts = append(r.Slices, slice), sum(r.Counts, slices.Clone(slice.Counts), e.Bench.Tag)
 		r.GateSet += slice.GateSet
 		r.Gate += slice.Gate
-		if err := e.judgeLight(r.Slices...); err != nil {
+		if err := e.judgeLight(r.Counts, r.Gate.Duration(), slice.Counts, slice.Gate.Duration()); err != nil {
 			return err
 		}
 	}
