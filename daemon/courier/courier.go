@@ -7,7 +7,9 @@
 // acknowledged, the stream is asked for its last message, and the journal where that stands.
 // So neither a lost acknowledgement nor an outage longer than the broker's duplicate window
 // doubles anything, and a stream that comes back older or empty is filled again. A stream that
-// ends in something the journal does not hold is somebody else's: nothing is published to it.
+// ends in something the journal does not hold follows another logbook. On a server of our own that
+// is the one which stood here before a rescue, or before an older copy was put back: the stream is
+// made anew from the journal. On any other it is somebody else's: nothing is published to it.
 package courier
 
 import (
@@ -50,6 +52,10 @@ type Last struct {
 	// empty. Message is then one that is still there, if any is.
 	Renew   func(context.Context) error
 	Because string // of Renew: what is wrong
+
+	// Anew is what Renew is, for a whole stream that does not fit the journal. It is nil where the
+	// stream may be somebody else's.
+	Anew func(context.Context) error
 }
 
 // Sink is a stream.
@@ -160,6 +166,11 @@ func (c *Courier) pass(ctx context.Context, more func(context.Context) bool) (ca
 		return 0, fmt.Errorf("stream %s: %w", protocol.Stream(c.bench), err)
 	}
 	cursor, err := c.find(ctx, last)
+	if errors.Is(err, ErrForeign) && last.Anew != nil {
+		last.Renew, last.Because = last.Anew, fmt.Sprintf("it ends in message %d, id %q, which this logbook does not hold so: "+
+			"the logbook is a rescued one, or an older one put back", last.Sequence, last.ID)
+		err = nil
+	}
 	if err != nil {
 		return 0, err
 	}
@@ -168,7 +179,13 @@ func (c *Courier) pass(ctx context.Context, more func(context.Context) bool) (ca
 		if err := last.Renew(ctx); err != nil {
 			return 0, fmt.Errorf("stream %s: %s, and it cannot be made anew: %w", protocol.Stream(c.bench), last.Because, err)
 		}
-		last, cursor = Last{}, 0
+		cursor = 0
+		if last, err = c.sink.Last(ctx); err != nil { // the server may count on from what it had
+			return 0, fmt.Errorf("stream %s: %w", protocol.Stream(c.bench), err)
+		}
+		if last.Subject != "" || last.Renew != nil {
+			return 0, fmt.Errorf("stream %s: made anew, and not empty; want nothing in it", protocol.Stream(c.bench))
+		}
 	}
 	if err := c.stand(ctx, cursor); err != nil {
 		return 0, err
@@ -215,7 +232,7 @@ func (c *Courier) find(ctx context.Context, last Last) (int64, error) {
 		return 0, nil
 	}
 	foreign := func(found string) error {
-		return fmt.Errorf("stream %s: ends in message %d, %s; want an entry of this logbook: %w; nothing is published to it",
+		return fmt.Errorf("stream %s: ends in message %d, %s; want an entry of this logbook: %w; nothing is published to it until the stream is deleted at its server, after which it is filled from this logbook, or the other logbook is put back",
 			protocol.Stream(c.bench), last.Sequence, found, ErrForeign)
 	}
 	run, number, _ := strings.Cut(last.ID, ".")

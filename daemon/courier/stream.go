@@ -102,6 +102,9 @@ func (s *Stream) Last(ctx context.Context) (Last, error) {
 	}
 	state := stream.CachedInfo().State
 	end := Last{Sequence: state.LastSeq}
+	if s.own {
+		end.Anew = s.renew
+	}
 	if state.Msgs == 0 {
 		return end, nil
 	}
@@ -174,16 +177,23 @@ func (s *Stream) whole(stream jetstream.Stream, first, last uint64) (bool, error
 func (s *Stream) renew(ctx context.Context) error {
 	ctx, cancel := context.WithTimeout(ctx, answerTime)
 	defer cancel()
-	if err := s.js.DeleteStream(ctx, s.want.Name); err != nil && !errors.Is(err, jetstream.ErrStreamNotFound) {
-		return err
-	}
 	for {
-		_, err := s.js.CreateStream(ctx, s.want)
+		err := s.js.DeleteStream(ctx, s.want.Name)
+		if err != nil && !errors.Is(err, jetstream.ErrStreamNotFound) {
+			return err
+		}
+		var made jetstream.Stream
+		if made, err = s.js.CreateStream(ctx, s.want); err == nil {
+			// The files of the old one may still be on their way out, and be found again.
+			if n := made.CachedInfo().State.Msgs; n > 0 {
+				err = fmt.Errorf("%d messages of the old one came back", n)
+			}
+		}
 		if err == nil {
 			s.unchecked = false
 			return nil
 		}
-		sleep(ctx, renewPause) // the files of the old one may still be on their way out
+		sleep(ctx, renewPause)
 		if ctx.Err() != nil {
 			return err
 		}

@@ -3,6 +3,7 @@ package courier_test
 import (
 	"context"
 	"errors"
+	"fmt"
 	"os"
 	"path/filepath"
 	"slices"
@@ -297,6 +298,57 @@ func TestARealStreamOfAnotherLogbookIsRefused(t *testing.T) {
 	}
 	if got, want := p.ids(), theirs.ids(); !slices.Equal(got, want) {
 		t.Errorf("the stream holds %v; want only theirs %v", got, want)
+	}
+}
+
+// A rescued logbook ends before the stream does, and an older copy goes on with ids that the stream
+// holds with other bodies. Where the server is our own the stream is made anew, and says so by when it
+// was made.
+func TestAStreamOfOurOwnThatAnotherLogbookFilledIsMadeAnew(t *testing.T) {
+	for name, end := range map[string]int64{"the logbook ends before the stream": 4, "the logbook has the last id with another body": 6, "the logbook goes on beyond it": 9} {
+		t.Run(name, func(t *testing.T) {
+			p := newPlace(t)
+			newer, older := &journal{}, &journal{}
+			newer.add(entries("r1", 1, 6)...)
+			finish(t, newer, p.stream(courier.StreamConfig{Own: true}))
+			before, err := p.js().Stream(t.Context(), protocol.Stream(bench))
+			if err != nil {
+				t.Fatal(err)
+			}
+			older.add(entries("r1", 1, 4)...)
+			for _, e := range entries("r1", 5, end) {
+				e.Body = []byte(fmt.Sprintf(`{"run":"r1","sequence":%d,"other":true}`, e.Sequence))
+				older.add(e)
+			}
+			var said []string
+			c := courier.New(bench, older, p.stream(courier.StreamConfig{Own: true}), func(err error) {
+				if err != nil {
+					said = append(said, err.Error())
+				}
+			})
+			if err := c.Finish(t.Context()); err != nil {
+				t.Fatalf("Finish: %v", err)
+			}
+			if got, want := p.ids(), older.ids(); !slices.Equal(got, want) {
+				t.Errorf("the stream holds %v; want %v", got, want)
+			}
+			if n := c.Behind(); n != 0 || c.Trouble() != nil {
+				t.Errorf("%d behind, %v; want nothing left", n, c.Trouble())
+			}
+			if len(said) != 1 || !strings.Contains(said[0], `message 6, id "r1.6"`) || !strings.Contains(said[0], "made anew and filled again from the logbook") {
+				t.Errorf("said %q; want one word on why it is made anew", said)
+			}
+			after, err := p.js().Stream(t.Context(), protocol.Stream(bench))
+			if err != nil || after.CachedInfo().Created.Equal(before.CachedInfo().Created) {
+				t.Errorf("made at %v before and after (%v); want another time, by which followers know", before.CachedInfo().Created, err)
+			}
+			for n, e := range older.entries {
+				m, err := after.GetMsg(t.Context(), uint64(n+1))
+				if err != nil || string(m.Data) != string(e.Body) {
+					t.Errorf("message %d: %v, %v; want %s", n+1, m, err, e.Body)
+				}
+			}
+		})
 	}
 }
 

@@ -424,6 +424,61 @@ func TestFollowYieldsNothingTwice(t *testing.T) {
 	h.want(t, ids("r1", 31, 33)...)
 }
 
+// A rescued logbook, or an older one, goes on with sequences that were published with other bodies.
+// Whoever follows by sequence is told from which one on, and gets what holds now.
+func TestFollowSaysWhatAnotherLogbooksStreamContradicts(t *testing.T) {
+	b := newBus(t)
+	b.stream(t)
+	c := b.client(t, protocol.ControlRole)
+	ctx, cancel := context.WithCancel(t.Context())
+	defer cancel()
+	heard := make(chan string, 100)
+	done := make(chan struct{})
+	go func() {
+		defer close(done)
+		for e, err := range c.Follow(ctx, "", 1) {
+			if err != nil {
+				heard <- err.Error()
+				continue
+			}
+			heard <- e.ID() + " " + string(e.Body)
+		}
+	}()
+	want := func(list ...string) {
+		t.Helper()
+		for _, w := range list {
+			if got := <-heard; got != w {
+				t.Fatalf("got %q; want %q", got, w)
+			}
+		}
+	}
+	publish := func(n int64, body string) {
+		t.Helper()
+		id := protocol.Entry{Run: "r1", Sequence: n}.ID()
+		if _, err := b.js.Publish(t.Context(), "gemel.skerry.event.r1", []byte(body), jetstream.WithMsgID(id)); err != nil {
+			t.Fatal(err)
+		}
+	}
+	for n := int64(1); n <= 6; n++ {
+		publish(n, `{"old":true}`)
+	}
+	for n := 1; n <= 6; n++ {
+		want(fmt.Sprintf(`r1.%d {"old":true}`, n))
+	}
+	if err := b.js.DeleteStream(t.Context(), "GEMEL_skerry"); err != nil {
+		t.Fatal(err)
+	}
+	b.stream(t)
+	for n := int64(1); n <= 3; n++ {
+		publish(n, `{"old":true}`)
+	}
+	publish(4, `{"new":true}`)
+	publish(5, `{"new":true}`)
+	want("run r1: the stream was made anew from another logbook; from entry 4 on it is not what was followed", `r1.4 {"new":true}`, `r1.5 {"new":true}`)
+	cancel()
+	<-done
+}
+
 func TestAMessageThatIsNoEntryEndsFollowing(t *testing.T) {
 	b := newBus(t)
 	b.stream(t)

@@ -4,7 +4,9 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"hash/crc32"
 	"iter"
+	"maps"
 	"strconv"
 	"strings"
 	"time"
@@ -26,6 +28,18 @@ func (g *Gap) Error() string {
 	return fmt.Sprintf("run %s: entries %d to %d are not in the stream", g.Run, g.From, g.To)
 }
 
+// Replaced says that the stream was made anew and holds something else than what was yielded of a
+// run, from one entry on: the daemon's logbook is a rescued one, or an older one put back. What the
+// logbook holds now comes next.
+type Replaced struct {
+	Run  protocol.RunID
+	From int64 // the first sequence that is another entry
+}
+
+func (r *Replaced) Error() string {
+	return fmt.Sprintf("run %s: the stream was made anew from another logbook; from entry %d on it is not what was followed", r.Run, r.From)
+}
+
 // Waits of a follower. What is said of a missing answer holds for a broker that is away too.
 const (
 	batch     = 256
@@ -39,7 +53,9 @@ const (
 // stream holds with a sequence of at least from, then new ones as they come, until ctx ends, which
 // is not an error. With from 0 it yields new ones only. Each entry comes once, whatever the
 // connection or the stream go through, and entries of one run without gaps: a missing piece is
-// yielded as a *Gap, after which the entries go on. After any other error nothing more comes.
+// yielded as a *Gap, after which the entries go on. Where a stream made anew contradicts what was
+// yielded, a *Replaced comes and then the entries that hold now. After any other error nothing more
+// comes.
 func (c *Client) Follow(ctx context.Context, run protocol.RunID, from int64) iter.Seq2[protocol.Entry, error] {
 	return func(yield func(protocol.Entry, error) bool) {
 		js, err := jetstream.New(c.conn)
@@ -93,6 +109,7 @@ type follower struct {
 	consumer  jetstream.Consumer // nil when a new one is needed
 	delivered uint64             // by it, counted here
 	seen      map[protocol.RunID]int64
+	sums      map[protocol.RunID]map[int64]uint32 // of the bodies that were yielded: a renewed stream is compared with them
 }
 
 // round gets and yields one batch.
@@ -176,13 +193,29 @@ func (f *follower) take(m jetstream.Msg, yield func(protocol.Entry, error) bool)
 	}
 	f.next = meta.Sequence.Stream + 1
 	seen, known := f.seen[e.Run]
+	sums := f.sums[e.Run]
+	if f.sums == nil {
+		f.sums = map[protocol.RunID]map[int64]uint32{}
+	}
+	if sums == nil {
+		sums = map[int64]uint32{}
+		f.sums[e.Run] = sums
+	}
+	sum := crc32.ChecksumIEEE(e.Body)
+	if was, yielded := sums[e.Sequence]; yielded && was != sum {
+		if !yield(protocol.Entry{}, &Replaced{Run: e.Run, From: e.Sequence}) {
+			return false, nil
+		}
+		maps.DeleteFunc(sums, func(n int64, _ uint32) bool { return n >= e.Sequence })
+		seen = e.Sequence - 1
+	}
 	if known && e.Sequence <= seen || e.Sequence < f.from {
 		return true, nil
 	}
 	if known && e.Sequence > seen+1 && !yield(protocol.Entry{}, &Gap{Run: e.Run, From: seen + 1, To: e.Sequence - 1}) {
 		return false, nil
 	}
-	f.seen[e.Run] = e.Sequence
+	f.seen[e.Run], sums[e.Sequence] = e.Sequence, sum
 	return yield(e, nil), nil
 }
 
