@@ -157,7 +157,7 @@ func (e *Engine) take(ctx context.Context, t task) (*protocol.Reading, error) {
 		r.EndedAt = protocol.Time{Time: e.now()}
 		e.step(StepGated)
 		watch.sample(ctx)
-		if err := e.judgeLight(r.Counts, r.Gate.Duration(), slice.Counts, slice.Gate.Duration()); err != nil {
+		if err := e.judgeLight(r.Slices...); err != nil {
 			r.Sensors = watch.sums()
 			return r, err
 		}
@@ -245,25 +245,41 @@ func (e *Engine) glance(ctx context.Context, r *protocol.Reading) error {
 	}
 	r.Reason = "" // what speaks against a glance does not speak against the dwell
 	r.Glance = &slice
-	return e.judgeLight(slice.Counts, slice.Gate.Duration(), slice.Counts, slice.Gate.Duration())
+	return e.judgeLight(slice)
 }
 
 // floorCounts is how many counts a floor must predict before too few of them mean something: the
 // chance of none at all is then exp(-20).
 const floorCounts = 20
 
-// judgeLight compares rates with trip and floor: the last gate with the trip, since light must be
-// seen at once; all gates of the dwell with the floor, since little light needs time.
-func (e *Engine) judgeLight(all []protocol.Count, allTime time.Duration, last []protocol.Count, lastTime time.Duration) error {
+// judgeLight compares the rates of gates, given in their order, with trip and floor: the last one with
+// the trip, since light must be seen at once; with the floor the last ones that are long enough
+// together, since little light needs time. A detector that latches in the middle of a dwell must not
+// hide behind what it counted before.
+func (e *Engine) judgeLight(gates ...protocol.Slice) error {
+	last := gates[len(gates)-1]
 	for _, d := range e.Bench.Detectors {
-		if rate := rateOf(last, d.Channel, lastTime); d.TripHz > 0 && rate > d.TripHz {
+		if rate := rateOf(last.Counts, d.Channel, last.Gate.Duration()); d.TripHz > 0 && rate > d.TripHz {
 			return &brightness{detector: d.Name, rateHz: rate, limitHz: d.TripHz}
 		}
-		if rate := rateOf(all, d.Channel, allTime); d.FloorHz > 0 && d.FloorHz*allTime.Seconds() >= floorCounts && rate < d.FloorHz/2 {
+		if rate, enough := newestRate(gates, d); enough && rate < d.FloorHz/2 {
 			return &brightness{detector: d.Name, rateHz: rate, limitHz: d.FloorHz, floor: true}
 		}
 	}
 	return nil
+}
+
+// newestRate is a detector's rate in the last gates in which its floor predicts floorCounts.
+func newestRate(gates []protocol.Slice, d Detector) (rateHz float64, enough bool) {
+	counts, seconds := 0.0, 0.0
+	for _, g := range slices.Backward(gates) {
+		counts += float64(countOf(g.Counts, d.Channel))
+		seconds += g.Gate.Duration().Seconds()
+		if d.FloorHz*seconds >= floorCounts {
+			return counts / seconds, true
+		}
+	}
+	return 0, false
 }
 
 func countOf(counts []protocol.Count, channel drivers.Channel) uint64 {

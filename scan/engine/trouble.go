@@ -506,7 +506,7 @@ func (e *Engine) lookOnce(ctx context.Context, r *protocol.Reading) error {
 		r.Slices, r.Counts = append(r.Slices, slice), sum(r.Counts, slices.Clone(slice.Counts), e.Bench.Tag)
 		r.GateSet += slice.GateSet
 		r.Gate += slice.Gate
-		if err := e.judgeLight(r.Counts, r.Gate.Duration(), slice.Counts, slice.Gate.Duration()); err != nil {
+		if err := e.judgeLight(r.Slices...); err != nil {
 			return err
 		}
 	}
