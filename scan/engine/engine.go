@@ -230,7 +230,7 @@ func (e *Engine) openRun(ctx context.Context, restBad string) error {
 		}
 	}
 	if p.State == protocol.Running {
-		return e.getReady(ctx, true)
+		return e.getReady(ctx, nil)
 	}
 	return nil
 }

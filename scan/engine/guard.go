@@ -203,7 +203,7 @@ func (e *Engine) lookAtGuards(ctx context.Context) error {
 		return err
 	}
 	if state == protocol.Running {
-		return e.getReady(ctx, true)
+		return e.getReady(ctx, nil)
 	}
 	return nil
 }

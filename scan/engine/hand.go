@@ -109,7 +109,7 @@ func (h *Hand) connect(ctx context.Context) error {
 	clear(h.sent)
 	clear(h.homedAt)
 	clear(h.e.deaf)
-	if err := h.e.connectAll(ctx); err != nil {
+	if err := gravest(h.e.connectAll(ctx)); err != nil {
 		return err
 	}
 	h.look(ctx)

@@ -155,7 +155,7 @@ func (e *Engine) obey(ctx context.Context) (done bool, err error) {
 		e.step(StepAnswered)
 		if err == nil && o.kind == resumeOrder && e.progress.State == protocol.Running {
 			e.homing = true // for this time only: somebody is there now
-			err = e.getReady(ctx, true)
+			err = e.getReady(ctx, nil)
 			e.homing = false
 		}
 	}

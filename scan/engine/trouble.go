@@ -37,7 +37,7 @@ func (e *Engine) afterError(ctx context.Context, t task, err error, bad string) 
 		if werr := e.note(ctx, protocol.Trouble, firstLine(err)+withBad(bad), errorDetail(err)); werr != nil {
 			return werr
 		}
-		if werr := e.getReady(ctx, false); werr != nil || e.progress.State != protocol.Running {
+		if werr := e.getReady(ctx, err); werr != nil || e.progress.State != protocol.Running {
 			return werr
 		}
 	}
@@ -95,24 +95,39 @@ func (e *Engine) trouble(ctx context.Context, err error) error {
 const connectPatience = 10 * time.Minute
 
 // getReady connects what is not connected, after which the bench is in the rest state, and makes
-// sure of every zero and every angle. all says to do so though nothing is known to be wrong. The
-// run is left holding when a person is needed.
-func (e *Engine) getReady(ctx context.Context, all bool) error {
+// sure of every zero and every angle. after is the trouble that made it necessary, and is written; nil
+// says to do so though nothing is known to be wrong. What else is met on the way is written too, once
+// for each device: it may be over before anything asks again. The run is left holding when a person is
+// needed.
+func (e *Engine) getReady(ctx context.Context, after error) error {
 	op, end := e.operation(ctx)
 	defer end()
+	written := map[string]bool{}
+	if after != nil {
+		written[deviceOf(after)] = true
+	}
 	deadline := e.now().Add(min(connectPatience, e.patience))
 	for pause := time.Second; ; pause = min(2*pause, 30*time.Second) {
-		err := e.connectAll(op)
-		if err == nil {
+		met := e.connectAll(op)
+		if len(met) == 0 {
 			break
 		}
 		if op.Err() != nil {
 			return nil
 		}
-		e.showWaiting(err)
+		err := gravest(met)
 		if drivers.RemedyOf(err) == drivers.GiveUp || e.now().After(deadline) {
 			return e.holdFor(ctx, protocol.ByTrouble, "held: "+firstLine(err), errorDetail(err))
 		}
+		for _, each := range met {
+			if device := deviceOf(each); !written[device] {
+				written[device] = true
+				if werr := e.trouble(ctx, each); werr != nil || e.progress.storageHeld {
+					return werr // what was asked for while nothing could be written comes first
+				}
+			}
+		}
+		e.showWaiting(err)
 		if e.Bench.Pace.Wait(op, pause) != nil {
 			return nil
 		}
@@ -126,21 +141,23 @@ func (e *Engine) getReady(ctx context.Context, all bool) error {
 		return err
 	}
 	if _, err := e.where(op); err != nil && op.Err() == nil {
-		if !all && drivers.RemedyOf(err) <= drivers.Reconnect {
-			return nil // the next attempt at the reading meets it again, and is counted
+		if after != nil && drivers.RemedyOf(err) <= drivers.Reconnect {
+			if written[deviceOf(err)] {
+				return nil // the next attempt at the reading meets it again, and is counted
+			}
+			return e.trouble(ctx, err)
 		}
 		return e.holdFor(ctx, protocol.ByTrouble, "held: "+firstLine(err), errorDetail(err))
 	}
 	return nil
 }
 
-// connectAll connects every device, with all light off first. It tries them all, and returns the
-// gravest error: that another instrument answers must not hide behind a line that is merely away.
-func (e *Engine) connectAll(ctx context.Context) error {
-	var worst error
+// connectAll connects every device, with all light off first. It tries them all, and returns what each
+// that failed met; nothing but the end of ctx, where that ended.
+func (e *Engine) connectAll(ctx context.Context) (met []error) {
 	note := func(err error) bool {
-		if err != nil && (worst == nil || drivers.RemedyOf(err) > drivers.RemedyOf(worst)) {
-			worst = err
+		if err != nil {
+			met = append(met, err)
 		}
 		return err == nil
 	}
@@ -158,9 +175,28 @@ func (e *Engine) connectAll(ctx context.Context) error {
 		}
 	}
 	if err := context.Cause(ctx); err != nil {
-		return err
+		return []error{err}
+	}
+	return met
+}
+
+// gravest returns the first of the errors whose remedy asks most: that another instrument answers must
+// not hide behind a line that is merely away. It returns nil for none.
+func gravest(met []error) (worst error) {
+	for _, err := range met {
+		if worst == nil || drivers.RemedyOf(err) > drivers.RemedyOf(worst) {
+			worst = err
+		}
 	}
 	return worst
+}
+
+// deviceOf names the device that an error is of; empty: of none.
+func deviceOf(err error) string {
+	if d, ok := errors.AsType[*drivers.Error](err); ok {
+		return string(d.Device)
+	}
+	return ""
 }
 
 // findZero makes sure that every axis knows its zero. A search moves through angles nobody chose,
@@ -413,7 +449,7 @@ func (e *Engine) lookAtRoom(ctx context.Context) error {
 		return err
 	}
 	if e.progress.State == protocol.Running {
-		return e.getReady(ctx, true)
+		return e.getReady(ctx, nil)
 	}
 	return nil
 }
@@ -432,7 +468,7 @@ func (e *Engine) lookAtLight(ctx context.Context) error {
 			return err
 		}
 		if e.progress.State == protocol.Running {
-			return e.getReady(ctx, true)
+			return e.getReady(ctx, nil)
 		}
 	case !bright && drivers.RemedyOf(against) > drivers.Retry:
 		if err := e.trouble(ctx, against); err != nil {

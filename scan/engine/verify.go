@@ -99,7 +99,7 @@ func (e *Engine) verify(ctx context.Context, a scan.Axis) error {
 			return werr
 		}
 		end()
-		return e.getReady(ctx, false)
+		return e.getReady(ctx, err)
 	case err != nil:
 		return e.holdFor(ctx, protocol.ByTrouble, fmt.Sprintf("held: the zero of %s could not be verified: %s", a.Name, firstLine(err)), errorDetail(err))
 	}
