@@ -80,14 +80,12 @@ func (j *judge) hinders(device string) bool {
 	return false
 }
 
-// accepted counts a reading against the troubles that did not show yet. None may be accepted from a
-// detector below its floor: it is latched, or paralysed.
+// accepted counts a reading against the troubles that did not show yet. None may be accepted with a
+// detector that was below its floor for as long as it takes to tell: it is latched, or paralysed.
 func (j *judge) accepted(where string, b *protocol.Reading) {
 	for _, d := range j.facts.Detectors {
-		for _, c := range b.Counts {
-			if least := d.FloorHz / 2 * b.Gate.Duration().Seconds(); c.Channel == d.Channel && least > 12 && float64(c.Counts) < 0.9*least {
-				j.say("%s was accepted, and the %s detector counted %d, below its floor", where, d.Name, c.Counts)
-			}
+		if counts, seconds, low := belowFloor(d, b.Slices); low {
+			j.say("%s was accepted, and the %s detector counted %d in %.4g s, below its floor", where, d.Name, counts, seconds)
 		}
 	}
 	for _, e := range j.effects {
@@ -95,6 +93,30 @@ func (j *judge) accepted(where string, b *protocol.Reading) {
 			e.readings++
 		}
 	}
+}
+
+// belowFloor finds neighbouring gates, the fewest in which a detector at its floor would count twenty, in
+// which it counted less than half of that.
+func belowFloor(d DetectorFact, gates []protocol.Slice) (counts uint64, seconds float64, low bool) {
+	for end := range gates {
+		counts, seconds = 0, 0
+		for i := end; i >= 0 && d.FloorHz > 0; i-- {
+			seconds += gates[i].Gate.Duration().Seconds()
+			for _, c := range gates[i].Counts {
+				if c.Channel == d.Channel {
+					counts += c.Counts
+				}
+			}
+			if d.FloorHz*seconds < 20 {
+				continue
+			}
+			if float64(counts) < d.FloorHz/2*seconds*(1-1e-9) {
+				return counts, seconds, true
+			}
+			break
+		}
+	}
+	return 0, 0, false
 }
 
 // demands says whether a trouble that took effect must have shown in the journal: the run met it.

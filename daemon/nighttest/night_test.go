@@ -121,6 +121,26 @@ func TestEightHoursTakeSeconds(t *testing.T) {
 	}
 }
 
+func TestADetectorThatLatchesInALongDwellEndsIt(t *testing.T) {
+	n := Night{Bench: demoBench(t), Recipe: `
+title: Two long dwells
+sweep: [{axis: idler_arm, at: [2.864 deg, 3 deg]}]
+dwell: {time: 30 min, slice: 2 s}
+trouble: {retries: 3, then: hold}
+`}
+	var err error
+	if n.Script, err = ParseScript("| latched(idler, at 15m, for 40s)"); err != nil {
+		t.Fatal(err)
+	}
+	r := play(t, n)
+	demand(t, n, r, "")
+	// The dwell in which it latched is given up then, and not half an hour later. One look finds it still
+	// latched, the next one well.
+	if most := 80 * time.Minute; r.State != protocol.Finished || r.Accepted != 2+1 || r.SetAside != 1+1 || r.Took > most {
+		t.Errorf("%s (%s) with %d accepted, %d set aside, after %s; want two dwells accepted and one set aside within %s, and two looks", r.State, r.Reason, r.Accepted, r.SetAside, r.Took, most)
+	}
+}
+
 func TestANightReplayedIsTheSameNight(t *testing.T) {
 	f := family(t)
 	members, _ := f.Members()

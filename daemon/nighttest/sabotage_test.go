@@ -237,6 +237,7 @@ func TestTheJudgeFindsEverySabotage(t *testing.T) {
 		{"lights", "protects far too late", "", "| lamp(at 4m, for 5m, rate 6000000 Hz)", protectAfter(2 * time.Minute), "was in light above its trip rate for"},
 		{"floors", "takes a latched detector for a dark place", "", "| latched(idler, at 4m, for 5m)", ignoreFloor, "below its floor"},
 		{"floors", "accepts what its floor set aside", "", "| latched(idler, at 4m, for 5m)", reading(1, setAside), "below its floor"},
+		{"floors", "takes the mean of a long dwell for its rate", longDwell, "| latched(idler, at 5m, for 40s)", ignoreFloor, "below its floor"},
 		{"death", "counts when it is dead", "", "kill gated:30 |", actsAlone(instruments.GateOpened), "while no process lives"},
 		{"death", "moves when it is dead", "", "kill gated:30 |", actsAlone(instruments.MoveStarted), "while no process lives"},
 		{"death", "does its last things after its death", "", "kill gated:30 |", diedEarlier(60), "while no process lives"},
@@ -425,6 +426,7 @@ var (
 	stepsNight    = "steps" + between + oneLine(small)
 	shortNight    = "plain" + between + strings.Replace(oneLine(small), "trouble:", `schedule: {finish_by: "00:05"}, trouble:`, 1)
 	longShuffle   = "plain" + between + `{title: Long, sweep: [{axis: signal_arm, around: 2.864 deg, span: 1.6 deg, step: 0.1 deg}, {axis: idler_arm, around: 2.864 deg, span: 3 deg, step: 0.1 deg}], order: shuffled, dwell: 2 s}`
+	longDwell     = "plain" + between + `{title: Long dwells, sweep: [{axis: idler_arm, at: [2.864 deg, 3 deg]}], dwell: {time: 10 min, slice: 2 s}, trouble: {retries: 3, then: hold}}`
 	shuffledNight = "plain" + between + strings.Replace(oneLine(small), "order: serpentine", "order: shuffled", 1)
 )
 
