@@ -26,6 +26,9 @@ type Bench struct {
 	// Stand is where settings are brought that the plan does not step, in their units: a run that was
 	// stopped in a scan of the delay must not spoil the next one. Others stay as they are found.
 	Stand map[drivers.DeviceName]float64
+	// Within is how far a setting's value may be from what it was set to, in its unit. One without an
+	// entry is believed.
+	Within map[drivers.DeviceName]float64
 
 	// HomeOrder is the order in which a controller's axes search their zero, one after another.
 	HomeOrder map[drivers.DeviceName][]drivers.AxisName

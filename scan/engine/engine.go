@@ -107,6 +107,7 @@ type Engine struct {
 	commanded  map[drivers.AxisName]unit.Angle // where each axis has to stand: sent there and proved, or found there
 	sent       map[drivers.AxisName]bool       // it was sent there, by the approach its file declares
 	told       map[drivers.DeviceName]float64  // what each setting was last set to
+	strayed    map[drivers.DeviceName]bool     // settings that left what they were told: to be set again
 	opened     map[drivers.DeviceName]bool     // shutters that were opened, and not told to close since
 	simulated  *int
 	patience   time.Duration                    // no hold but an operator's lasts longer
@@ -139,7 +140,7 @@ type Snapshot struct {
 
 // New prepares an engine. It starts nothing and touches nothing.
 func New(c Config) *Engine {
-	e := &Engine{Config: c, progress: c.Past.clone(), commanded: map[drivers.AxisName]unit.Angle{}, sent: map[drivers.AxisName]bool{}, told: map[drivers.DeviceName]float64{}, opened: map[drivers.DeviceName]bool{}, deaf: map[drivers.DeviceName]time.Time{}}
+	e := &Engine{Config: c, progress: c.Past.clone(), commanded: map[drivers.AxisName]unit.Angle{}, sent: map[drivers.AxisName]bool{}, told: map[drivers.DeviceName]float64{}, strayed: map[drivers.DeviceName]bool{}, opened: map[drivers.DeviceName]bool{}, deaf: map[drivers.DeviceName]time.Time{}}
 	e.homing = c.MayHome
 	e.patience = c.Plan.Trouble.GiveUpAfter
 	if e.patience <= 0 {

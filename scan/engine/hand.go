@@ -610,7 +610,8 @@ func (h *Hand) stage(axis scan.Axis) drivers.Stage {
 	panic("engine: axis " + string(axis.Name) + " is on controller " + string(axis.Controller) + ", which the bench does not have")
 }
 
-// Set gives a setting a value in its unit, and returns what was read back.
+// Set gives a setting a value in its unit, and returns what was read back. The detectors are protected
+// meanwhile, for it may take long; those that a person had opened are opened again after it.
 func (h *Hand) Set(ctx context.Context, name drivers.DeviceName, value float64) (float64, error) {
 	if err := h.held(); err != nil {
 		return 0, err
@@ -622,12 +623,17 @@ func (h *Hand) Set(ctx context.Context, name drivers.DeviceName, value float64) 
 	if l, bounded := h.facts.Limits[name]; bounded && (value < l[0] || value > l[1]) {
 		return 0, refuseHand("%s: %.9g %s is beyond its limits; want %.9g to %.9g %s", name, value, s.Unit(), l[0], l[1], s.Unit())
 	}
+	again := h.opened()
+	if err := h.protect(ctx); err != nil {
+		return 0, err
+	}
+	defer h.lookAtShutters(ctx)
 	got, err := s.Set(ctx, value)
 	h.settings[name] = valueOf(name, s.Unit(), func() (float64, error) { return got, err })
 	if err != nil {
 		return 0, err
 	}
-	return got, h.glance(ctx) // it may have been the light
+	return got, h.open(ctx, again) // and judged: it may have been the light
 }
 
 // SettingUnit is the unit of a setting.

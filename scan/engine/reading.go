@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"math"
 	"slices"
 	"time"
 
@@ -383,15 +384,25 @@ func (e *Engine) unstepped() []scan.SettingTarget {
 	return all
 }
 
-// set brings settings to their targets and notes what was read back.
+// set brings settings to their targets, with the detectors protected while one moves, and notes what was
+// read back.
 func (e *Engine) set(ctx context.Context, r *protocol.Reading, targets []scan.SettingTarget) error {
+	shielded := false
 	for _, t := range targets {
 		s := e.setting(t.Setting)
 		var value float64
 		var err error
-		if told, is := e.told[t.Setting]; is && told == t.Value {
-			value, err = s.Get(ctx)
+		if told, is := e.told[t.Setting]; is && told == t.Value && !e.strayed[t.Setting] {
+			if value, err = s.Get(ctx); err == nil {
+				err = e.atTarget(s, value, t.Value, "before the dwell")
+			}
 		} else {
+			if !shielded {
+				if err := e.shield(ctx); err != nil {
+					return err
+				}
+				shielded = true
+			}
 			delete(e.told, t.Setting)
 			value, err = s.Set(ctx, t.Value)
 		}
@@ -399,36 +410,58 @@ func (e *Engine) set(ctx context.Context, r *protocol.Reading, targets []scan.Se
 			return err
 		}
 		e.told[t.Setting] = t.Value
+		delete(e.strayed, t.Setting)
 		r.Settings = append(r.Settings, protocol.Setting{Name: string(t.Setting), Target: t.Value, Before: value, After: value, Unit: s.Unit()})
 	}
 	return nil
+}
+
+// atTarget says whether a setting still has the value that it was set to. One that left it by itself,
+// or by somebody's hand, is set again at the next attempt.
+func (e *Engine) atTarget(s drivers.Setting, value, target float64, during string) error {
+	within, judged := e.Bench.Within[s.Name()]
+	if !judged || math.Abs(value-target) <= within+1e-9*math.Abs(target) {
+		return nil
+	}
+	e.strayed[s.Name()] = true
+	return &drivers.Error{Op: "get", Device: s.Name(), Remedy: drivers.Retry,
+		Err: fmt.Errorf("has left %.9g %s, which it was set to, and stands at %.9g %s %s; want it within %.3g", target, s.Unit(), value, s.Unit(), during, within)}
 }
 
 // noteSettings notes where the settings stand that the points step: what is counted beside the points
 // is counted there.
 func (e *Engine) noteSettings(ctx context.Context, r *protocol.Reading, stepped []scan.SettingTarget) error {
 	for _, t := range stepped {
+		if target, told := e.told[t.Setting]; told {
+			if err := e.set(ctx, r, []scan.SettingTarget{{Setting: t.Setting, Value: target}}); err != nil {
+				return err
+			}
+			continue
+		}
 		s := e.setting(t.Setting)
 		value, err := s.Get(ctx)
 		if err != nil {
 			return err
 		}
-		target, told := e.told[t.Setting]
-		if !told {
-			target = value
-		}
-		r.Settings = append(r.Settings, protocol.Setting{Name: string(t.Setting), Target: target, Before: value, After: value, Unit: s.Unit()})
+		r.Settings = append(r.Settings, protocol.Setting{Name: string(t.Setting), Target: value, Before: value, After: value, Unit: s.Unit()})
 	}
 	return nil
 }
 
 func (e *Engine) readBack(ctx context.Context, r *protocol.Reading) error {
 	for i := range r.Settings {
-		value, err := e.setting(drivers.DeviceName(r.Settings[i].Name)).Get(ctx)
+		s := e.setting(drivers.DeviceName(r.Settings[i].Name))
+		value, err := s.Get(ctx)
 		if err != nil {
 			return err
 		}
 		r.Settings[i].After = value
+		if _, told := e.told[s.Name()]; !told {
+			continue
+		}
+		if err := e.atTarget(s, value, r.Settings[i].Target, "after the dwell"); err != nil {
+			return err
+		}
 	}
 	return nil
 }

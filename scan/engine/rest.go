@@ -141,6 +141,21 @@ func (e *Engine) cover(ctx context.Context) (bad string) {
 	return ""
 }
 
+// shield closes the detectors' shutters that may be open, before something that takes its time: who
+// looks meanwhile is nobody.
+func (e *Engine) shield(ctx context.Context) error {
+	var errs []error
+	for _, s := range e.protectors() {
+		if !e.opened[s.Name()] {
+			if blade, err := s.State(ctx); err == nil && !blade.Open {
+				continue
+			}
+		}
+		errs = append(errs, e.shut(ctx, s))
+	}
+	return errors.Join(errs...)
+}
+
 // light sets the shutters for a reading: the pump open or closed, the detectors seeing. The pump
 // comes first, so that nothing is seen before it is as it should be.
 func (e *Engine) light(ctx context.Context, pump bool) error {
