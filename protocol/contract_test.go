@@ -105,7 +105,7 @@ func messages() map[string][]any {
 		"start_request": {protocol.StartRequest{Recipe: "title: x", RecipeName: "x", Key: "k", Who: "night", ExpiresAt: new(at("2031-02-03T04:05:06.5Z"))}, protocol.StartRequest{Key: "k"}},
 		"start_reply":   {protocol.StartReply{Run: "r1"}},
 		"run_request":   {protocol.RunRequest{Run: "r1", Who: "night", ExpiresAt: new(at("2031-02-03T04:05:06.5Z"))}, protocol.RunRequest{Run: "r1"}},
-		"run_reply":     {protocol.RunReply{Run: "r1", State: protocol.Stopped, Causes: []protocol.Cause{}, Recorded: true}},
+		"run_reply":     {protocol.RunReply{Run: "r1", State: protocol.Stopped, Causes: []protocol.Cause{}, Recorded: true, Rest: "close shutter: no answer"}, protocol.RunReply{Run: "r1", State: protocol.Stopped, Causes: []protocol.Cause{}}},
 		"queue_reply": {
 			protocol.QueueReply{Bench: "skerry", Queue: []protocol.QueuedRun{{Run: "r2", Title: "Peak", QueuedAt: at("2031-02-03T04:05:06.5Z"), Who: "ann", State: protocol.Queued, ReadingsPlanned: new(60)}}},
 			protocol.QueueReply{Bench: "skerry", Queue: []protocol.QueuedRun{{Run: "r2", QueuedAt: at("2031-02-03T04:05:06.5Z"), State: protocol.Holding}}},

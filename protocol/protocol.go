@@ -324,12 +324,14 @@ type RunRequest struct {
 }
 
 // RunReply is the run's state after the request. Recorded is false when it was done but could
-// not be written down (a full disk).
+// not be written down (a full disk). Rest says what of the rest state was not reached; it is empty
+// where all was, and for a run that goes on.
 type RunReply struct {
 	Run      RunID   `json:"run"`
 	State    State   `json:"state"`
 	Causes   []Cause `json:"causes"`
 	Recorded bool    `json:"recorded"`
+	Rest     string  `json:"rest,omitempty"`
 }
 
 // Finding is one thing wrong with a file or a request.

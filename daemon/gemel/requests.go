@@ -154,7 +154,7 @@ func (c *runFlags) ask(ctx context.Context, con *console, do func(*client.Client
 			return err
 		}
 		if c.JSON {
-			return con.json(r)
+			return errors.Join(con.json(r), notAtRest(r))
 		}
 		was := s.State
 		if s.Run != r.Run {
@@ -162,7 +162,7 @@ func (c *runFlags) ask(ctx context.Context, con *console, do func(*client.Client
 		}
 		switch {
 		case r.Run == protocol.BenchRun:
-			fmt.Fprint(con.out, "nobody has the bench in hand any more; it is at rest")
+			fmt.Fprint(con.out, "nobody has the bench in hand any more"+map[bool]string{true: "; it is at rest"}[r.Rest == ""])
 		case r.State == protocol.Running:
 			fmt.Fprintf(con.out, "run %s %s", r.Run, goesOn(was))
 		default:
@@ -174,9 +174,20 @@ func (c *runFlags) ask(ctx context.Context, con *console, do func(*client.Client
 		if !r.Recorded {
 			fmt.Fprint(con.out, "; done, not recorded: nothing can be written at the moment")
 		}
+		if r.Rest != "" {
+			fmt.Fprintf(con.out, "; THE REST STATE WAS NOT REACHED: %s", r.Rest)
+		}
 		fmt.Fprintln(con.out)
-		return nil
+		return notAtRest(r)
 	})
+}
+
+// notAtRest makes the exit code 1 where the bench may still be hot; what was asked for is done.
+func notAtRest(r protocol.RunReply) error {
+	if r.Rest != "" {
+		return errNotFinished
+	}
+	return nil
 }
 
 func stillRuns(protocol.State) string { return "is running" }

@@ -100,6 +100,18 @@ func declared(benchText string, axis drivers.AxisName) (string, error) {
 	return "", fmt.Errorf("no axis %q in the bench file", axis)
 }
 
+// axesIn lists the axes that a bench file declares.
+func axesIn(benchText string) (axes []scan.Axis, err error) {
+	f, err := bench.Parse("bench file in the logbook", []byte(benchText))
+	if err != nil {
+		return nil, err
+	}
+	for _, a := range f.Axes {
+		axes = append(axes, a.Axis)
+	}
+	return axes, nil
+}
+
 // open builds and starts everything but the keeper's own work. Whatever was started is closed
 // again when it fails. The first act is the rest state, because a process that died may have left
 // the bench hot: before the logbook and the broker, which may refuse to come up.
@@ -154,6 +166,7 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 		Hand:   s.bench.Hand(),
 		Recipe: recipesIn(recipeFolder), Armed: armedIn(flags.Data, s.file.Simulated()), MayHome: flags.Home,
 		Declared:           declared,
+		Axes:               axesIn,
 		ResumeAfterRestart: attended || s.file.AfterRestart == bench.AfterRestartResume || s.file.AfterRestart == "" && s.file.Simulated(),
 		Conclude: func(ctx context.Context, run protocol.RunID) ([]json.RawMessage, error) {
 			all, err := report.All(ctx, s.book, run, report.Options{})

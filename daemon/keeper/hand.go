@@ -48,6 +48,8 @@ type handOrder struct {
 	by     string // who asked
 	stop   bool   // by somebody who need not be the session's
 	answer func(protocol.HandReply, error)
+	// restBad is, once the session has ended with this order, what of the rest state was not reached.
+	restBad string
 }
 
 // ends says whether the session is over after it.
@@ -247,7 +249,7 @@ func (k *Keeper) stopHand(ctx context.Context, q protocol.RunRequest) (protocol.
 	case <-ctx.Done():
 		return protocol.RunReply{}, context.Cause(ctx)
 	case a := <-answers:
-		return protocol.RunReply{Run: protocol.BenchRun, State: protocol.Stopped, Causes: []protocol.Cause{}, Recorded: a.reply.Recorded}, a.err
+		return protocol.RunReply{Run: protocol.BenchRun, State: protocol.Stopped, Causes: []protocol.Cause{}, Recorded: a.reply.Recorded, Rest: o.restBad}, a.err
 	}
 }
 
@@ -742,6 +744,7 @@ func (w *handWork) end(ctx context.Context, why string, last *handOrder, bug err
 	if last != nil {
 		reply := w.hand.State()
 		reply.Act, reply.Session, reply.Text, reply.Recorded = last.q.Act, w.name(), why+how, recorded
+		last.restBad = bad
 		var err error
 		if bug != nil {
 			err = protocol.Refuse(500, why)

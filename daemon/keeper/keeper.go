@@ -55,6 +55,8 @@ type Config struct {
 	// angle of the axis means: its zero, its sense and its steps. Nil: only results under the very
 	// same bench file are taken.
 	Declared func(benchText string, axis drivers.AxisName) (string, error)
+	// Axes lists the axes that a bench file declares. Nil: the present one's are taken for all runs.
+	Axes func(benchText string) ([]scan.Axis, error)
 	// Recipe reads the text of a recipe by the name it has in the configured folder; nil: there is none.
 	Recipe func(name string) (string, error)
 	// AtRest says that whoever makes the keeper has just brought the bench to rest, and Run need not.
@@ -279,15 +281,21 @@ func (k *Keeper) fold(ctx context.Context, run protocol.RunID) (engine.Progress,
 	}
 }
 
-func (k *Keeper) append(ctx context.Context, run protocol.RunID, sequence int64, kind protocol.EventKind, text string, state protocol.State, causes []protocol.Cause, detail map[string]any) error {
-	entry, err := k.eventEntry(run, sequence, kind, text, state, causes, detail)
+// append writes an event at the present time, or at the time of the entry before it where the clock is
+// behind that: bench time may have run fast, and the machine's clock may have been set.
+func (k *Keeper) append(ctx context.Context, run protocol.RunID, sequence int64, lastAt time.Time, kind protocol.EventKind, text string, state protocol.State, causes []protocol.Cause, detail map[string]any) error {
+	at := time.Now()
+	if at.Before(lastAt) {
+		at = lastAt
+	}
+	entry, err := k.eventEntry(run, sequence, at, kind, text, state, causes, detail)
 	if err != nil {
 		return err
 	}
 	return k.appender().Append(ctx, entry)
 }
 
-func (k *Keeper) eventEntry(run protocol.RunID, sequence int64, kind protocol.EventKind, text string, state protocol.State, causes []protocol.Cause, detail map[string]any) (protocol.Entry, error) {
+func (k *Keeper) eventEntry(run protocol.RunID, sequence int64, at time.Time, kind protocol.EventKind, text string, state protocol.State, causes []protocol.Cause, detail map[string]any) (protocol.Entry, error) {
 	if causes == nil {
 		causes = []protocol.Cause{}
 	}
@@ -295,7 +303,7 @@ func (k *Keeper) eventEntry(run protocol.RunID, sequence int64, kind protocol.Ev
 		detail = map[string]any{}
 	}
 	body, err := json.Marshal(protocol.Event{
-		Head: protocol.Head{Schema: protocol.EventSchema, Bench: k.Bench.Name, Run: run, Sequence: sequence, At: protocol.Time{Time: time.Now()}},
+		Head: protocol.Head{Schema: protocol.EventSchema, Bench: k.Bench.Name, Run: run, Sequence: sequence, At: protocol.Time{Time: at}},
 		Kind: kind, Text: text, State: state, Causes: causes, Detail: detail,
 	})
 	return protocol.Entry{Run: run, Sequence: sequence, Kind: protocol.EventEntry, Body: body}, err
@@ -309,7 +317,15 @@ func (k *Keeper) benchEvent(ctx context.Context, kind protocol.EventKind, text s
 	if err != nil {
 		return err
 	}
-	return k.append(ctx, protocol.BenchRun, last+1, kind, text, "", nil, detail)
+	before, err := k.Book.Entries(ctx, protocol.BenchRun, max(0, last-1), 1)
+	if err != nil {
+		return err
+	}
+	var head protocol.Head
+	for _, e := range before {
+		_ = json.Unmarshal(e.Body, &head) // the logbook took it, so it is JSON; without a time it says nothing of this one's
+	}
+	return k.append(ctx, protocol.BenchRun, last+1, head.At.Time, kind, text, "", nil, detail)
 }
 
 func notArmed() error {
@@ -371,7 +387,7 @@ func (k *Keeper) Enqueue(ctx context.Context, q protocol.StartRequest) (protocol
 		return protocol.StartReply{}, refusal
 	}
 	run := k.name(now, q.Key)
-	first, err := k.eventEntry(run, 1, protocol.OperatorDid, "start asked for by "+who(q.Who), protocol.Queued, nil, map[string]any{"who": q.Who, "key": q.Key, "readings_planned": k.planned(plan)})
+	first, err := k.eventEntry(run, 1, now, protocol.OperatorDid, "start asked for by "+who(q.Who), protocol.Queued, nil, map[string]any{"who": q.Who, "key": q.Key, "readings_planned": k.planned(plan)})
 	if err != nil {
 		return protocol.StartReply{}, err
 	}
@@ -456,7 +472,7 @@ func (k *Keeper) Stop(ctx context.Context, q protocol.RunRequest) (protocol.RunR
 			return protocol.RunReply{}, err
 		}
 		if eng != nil {
-			reply, err := answered(eng.Stop(ctx, who(q.Who)))
+			reply, err := answered(ctx, eng, eng.Stop, q)
 			if err == nil && !reply.Recorded {
 				k.order.Lock()
 				defer k.order.Unlock()
@@ -484,7 +500,7 @@ func (k *Keeper) StopAfterPoint(ctx context.Context, q protocol.RunRequest) (pro
 	if eng == nil {
 		return k.Stop(ctx, q)
 	}
-	return answered(eng.StopAfterPoint(ctx, who(q.Who)))
+	return answered(ctx, eng, eng.StopAfterPoint, q)
 }
 
 // Hold makes the current run wait.
@@ -496,7 +512,7 @@ func (k *Keeper) Hold(ctx context.Context, q protocol.RunRequest) (protocol.RunR
 	if eng == nil {
 		return protocol.RunReply{}, protocol.Refuse(409, fmt.Sprintf("run %s waits in the queue; it can be stopped, or left to wait", q.Run))
 	}
-	return answered(eng.Hold(ctx, who(q.Who)))
+	return answered(ctx, eng, eng.Hold, q)
 }
 
 // Resume takes the causes away that a person may take away.
@@ -511,12 +527,17 @@ func (k *Keeper) Resume(ctx context.Context, q protocol.RunRequest) (protocol.Ru
 	if eng == nil {
 		return protocol.RunReply{}, protocol.Refuse(409, fmt.Sprintf("run %s waits in the queue; it begins when its turn comes", q.Run))
 	}
-	return answered(eng.Resume(ctx, who(q.Who)))
+	return answered(ctx, eng, eng.Resume, q)
 }
 
-func answered(r protocol.RunReply, err error) (protocol.RunReply, error) {
+// answered asks an engine, and adds to its answer what of the rest state was not reached.
+func answered(ctx context.Context, eng *engine.Engine, ask func(context.Context, string) (protocol.RunReply, error), q protocol.RunRequest) (protocol.RunReply, error) {
+	r, err := ask(ctx, who(q.Who))
 	if errors.Is(err, engine.ErrOver) {
 		return r, protocol.Refuse(409, "the run is over")
+	}
+	if err == nil && r.State != protocol.Running {
+		r.Rest = eng.Snapshot().RestBad
 	}
 	return r, err
 }

@@ -48,7 +48,7 @@ func (k *Keeper) payOwed(ctx context.Context) error {
 		case row.State.Final():
 			continue // it was written before the program ended
 		}
-		if err := k.endWaiting(ctx, row, "stopped by "+s.Who+", while nothing could be written", s.Who); err != nil {
+		if _, err := k.endWaiting(ctx, row, protocol.Stopped, "stopped by "+s.Who+", while nothing could be written", map[string]any{"who": s.Who}); err != nil {
 			return err
 		}
 	}

@@ -87,7 +87,8 @@ func (k *Keeper) take(ctx context.Context, row logbook.RunRow, plan scan.Plan, p
 		if _, found := errors.AsType[*strict.Error](planErr); found {
 			text = "failed: the recipe does not fit the bench any more: " + planErr.Error()
 		}
-		return nil, k.append(ctx, row.Run, past.Next, protocol.Ended, text, protocol.Failed, nil, nil)
+		_, err := k.endWaiting(ctx, row, protocol.Failed, text, nil)
+		return nil, err
 	}
 	eng := k.engine(row, plan, past)
 	k.mu.Lock()
@@ -232,7 +233,7 @@ func (k *Keeper) stopQueued(ctx context.Context, q protocol.RunRequest) (protoco
 		return protocol.RunReply{}, err
 	}
 	reply := protocol.RunReply{Run: q.Run, State: protocol.Stopped, Causes: []protocol.Cause{}, Recorded: true}
-	err = k.endWaiting(ctx, row, "stopped in the queue by "+who(q.Who), q.Who)
+	reply.Rest, err = k.endWaiting(ctx, row, protocol.Stopped, "stopped in the queue by "+who(q.Who), map[string]any{"who": q.Who})
 	if errors.Is(err, logbook.ErrFull) {
 		reply.Recorded = false
 		err = k.owe(q)
@@ -250,36 +251,50 @@ func (k *Keeper) busy() bool {
 // endWaiting ends a run that no engine executes. What had begun was interrupted first, and that is
 // told: what was counted at that moment is lost. The process that died may have left the bench hot,
 // and perhaps nobody has brought it to rest yet: that comes first, unless another run has the bench.
-func (k *Keeper) endWaiting(ctx context.Context, row logbook.RunRow, text, by string) error {
-	last, err := k.Book.Last(ctx, row.Run)
+// restBad is what of that was not reached.
+func (k *Keeper) endWaiting(ctx context.Context, row logbook.RunRow, state protocol.State, text string, detail map[string]any) (restBad string, err error) {
+	past, err := k.fold(ctx, row.Run)
 	if err != nil {
+		return "", err
+	}
+	add := func(kind protocol.EventKind, text string, state protocol.State, causes []protocol.Cause, detail map[string]any) error {
+		err := k.append(ctx, row.Run, past.Next, past.LastAt, kind, text, state, causes, detail)
+		if err == nil {
+			past.Next++
+		}
 		return err
 	}
-	if row.State != protocol.Queued && !k.busy() {
-		if bad := engine.Rest(ctx, k.Bench); bad != "" {
-			text += "; THE REST STATE WAS NOT REACHED: " + bad
-		}
-	}
-	if row.State != protocol.Queued && !slices.Contains(row.Causes, protocol.ByRestart) {
-		causes := append(slices.Clone(row.Causes), protocol.ByRestart)
-		err := k.append(ctx, row.Run, last+1, protocol.Interrupted, "interrupted: the program ended without a word; what was being counted is lost, nothing that was written is",
-			protocol.Holding, causes, map[string]any{"after_sequence": last})
-		if err != nil {
-			return err
-		}
-		last++
-	}
-	if row.State != protocol.Queued {
-		past, err := k.fold(ctx, row.Run)
-		if err != nil {
-			return err
-		}
-		for _, d := range past.Unverified(k.Bench.Axes) {
-			if err := k.append(ctx, row.Run, last+1, protocol.Doubted, d.Text, past.State, past.Causes, d.Detail); err != nil {
-				return err
+	if past.State != protocol.Queued {
+		if !k.busy() {
+			if restBad = engine.Rest(ctx, k.Bench); restBad != "" {
+				text += "; THE REST STATE WAS NOT REACHED: " + restBad
 			}
-			last++
+		}
+		causes := past.Causes
+		if !slices.Contains(causes, protocol.ByRestart) {
+			causes = append(slices.Clone(causes), protocol.ByRestart)
+			err := add(protocol.Interrupted, "interrupted: the program ended without a word; what was being counted is lost, nothing that was written is",
+				protocol.Holding, causes, map[string]any{"after_sequence": past.Next - 1})
+			if err != nil {
+				return restBad, err
+			}
+		}
+		for _, d := range past.Unverified(k.axesOf(row)) {
+			if err := add(protocol.Doubted, d.Text, protocol.Holding, causes, d.Detail); err != nil {
+				return restBad, err
+			}
 		}
 	}
-	return k.append(ctx, row.Run, last+1, protocol.Ended, text, protocol.Stopped, nil, map[string]any{"who": by})
+	return restBad, add(protocol.Ended, text, state, nil, detail)
+}
+
+// axesOf lists the axes of the bench file under which a run began: the one of today may not say any
+// more that a zero was to be verified.
+func (k *Keeper) axesOf(row logbook.RunRow) []scan.Axis {
+	if row.BenchText != k.BenchText && k.Axes != nil {
+		if axes, err := k.Axes(row.BenchText); err == nil {
+			return axes
+		}
+	}
+	return k.Bench.Axes
 }
