@@ -111,7 +111,7 @@ func seed(names ...string) uint64 {
 func (b *Bench) build(lines map[string]*line.Line) error {
 	f, pace := b.File, b.File.Pace()
 	e := engine.Bench{Name: f.Name, Pace: pace, Simulated: f.Simulated(), Tag: f.Counter.Tag, KeepOuts: f.KeepOuts,
-		HomeOrder: map[drivers.DeviceName][]drivers.AxisName{}, Unattended: map[drivers.DeviceName]bool{}, Stand: map[drivers.DeviceName]float64{}}
+		HomeOrder: map[drivers.DeviceName][]drivers.AxisName{}, Unattended: map[drivers.DeviceName]bool{}, Stand: map[drivers.DeviceName]float64{}, Within: map[drivers.DeviceName]float64{}}
 	var err error
 	for _, a := range f.Axes {
 		e.Axes = append(e.Axes, a.Axis)
@@ -158,6 +158,7 @@ func (b *Bench) build(lines map[string]*line.Line) error {
 			return err
 		}
 		e.Settings = append(e.Settings, made)
+		e.Within[s.Name] = s.tolerance(s.Unit)
 		if value, ok := s.stand(f.Optics); ok {
 			e.Stand[s.Name] = value
 		}

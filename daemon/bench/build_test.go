@@ -5,6 +5,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"math"
 	"os"
 	"strings"
 	"testing"
@@ -192,6 +193,40 @@ func TestAVirtualSettingChangesTheWorldAndIsReadBack(t *testing.T) {
 			}
 		}
 	})
+}
+
+func TestSettingsAreHeldToTheToleranceThatTheirFileDeclares(t *testing.T) {
+	text, err := os.ReadFile("../../configs/lab-bench.yaml")
+	if err != nil {
+		t.Fatal(err)
+	}
+	lab := string(text) + `
+settings:
+  power: {line: shutters, dialect: custom, unit: mW, limits: [0 mW, 50 mW], tolerance: 200 uW, asks: {set: {send: "L {value}", match: OK}, get: {send: "L?", match: "L=(?P<value>[0-9.]+)"}}}
+`
+	for _, c := range []struct {
+		text    string
+		options Options
+		want    map[drivers.DeviceName]float64
+	}{
+		{withSettings(t, "", ""), Options{Links: t.TempDir()}, map[drivers.DeviceName]float64{"delay": 0.002, "laser": 0.01, "lamp": 0.1, "oven": 0.02, "iris": 0.01, "bias": 0.01}},
+		{lab, Options{}, map[drivers.DeviceName]float64{"power": 0.2}},
+	} {
+		b, err := Build(parse(t, c.text), c.options)
+		if err != nil {
+			t.Fatal(err)
+		}
+		for _, s := range b.Settings {
+			got, is := b.Within[s.Name()]
+			if want, known := c.want[s.Name()]; known && (!is || math.Abs(got-want) > 1e-9) || !is {
+				t.Errorf("%s may be off by %g %s; want %g", s.Name(), got, s.Unit(), want)
+			}
+			delete(c.want, s.Name())
+		}
+		for name := range c.want {
+			t.Errorf("the bench has no setting %s", name)
+		}
+	}
 }
 
 func TestAnotherInstrumentAtTheLinesPathIsRefused(t *testing.T) {

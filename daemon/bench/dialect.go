@@ -190,7 +190,7 @@ type settingReading struct {
 	make   settingMaker
 	// What a virtual setting must know: the header that sets it, and the unit it speaks; empty: its own.
 	header, answerUnit string
-	tolerance          func(unit string) float64 // nil: nothing virtual speaks that dialect
+	tolerance          func(unit string) float64 // how far what is read back may be from what was set
 }
 
 func unitOf(v strict.Value) string {
@@ -368,7 +368,7 @@ func customSetting(m strict.Map) settingReading {
 		SettleWithin: m.Opt("settle_within").Duration(0, maxMove), Settle: m.Opt("settle").Duration(0, maxMove), PollEvery: m.Opt("poll_every").Duration(time.Millisecond, maxPoll),
 	}
 	read := inUnit(m, m.Need("tolerance"))
-	return settingReading{Settle: c.Settle, make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
+	return settingReading{Settle: c.Settle, tolerance: read, make: func(l *line.Line, pace drivers.Pace, d Setting) (drivers.Setting, error) {
 		c := c
 		c.Common, c.Unit, c.Tolerance = customFor(c.Common, d.Device, pace), d.Unit, read(d.Unit)
 		return custom.NewSetting(l, c)
