@@ -5,7 +5,9 @@ import (
 	"errors"
 	"fmt"
 	"os"
+	"path/filepath"
 	"strings"
+	"time"
 
 	"gemel/daemon/logbook"
 	"gemel/protocol"
@@ -64,9 +66,24 @@ func verify(ctx context.Context, data string) (string, []protocol.Finding, error
 		fmt.Fprintf(&words, "\n  %d entries are from before bodies had sums: that they are what was written cannot be checked", a.Unsummed)
 	}
 	for _, r := range runs {
-		fmt.Fprintf(&words, "\n  %s  %s  %q", r.Run, r.State, r.Title)
+		fmt.Fprintf(&words, "\n  %s  %s  %q%s", r.Run, r.State, r.Title, howItStands(r))
 	}
 	return words.String(), nil, nil
+}
+
+// howItStands says when a run ended, or since when it is underway, and of one that did not finish why.
+func howItStands(r logbook.RunRow) string {
+	text := ""
+	switch {
+	case !r.EndedAt.IsZero():
+		text = ", ended " + r.EndedAt.Local().Format(time.DateTime)
+	case !r.StartedAt.IsZero():
+		text = ", began " + r.StartedAt.Local().Format(time.DateTime)
+	}
+	if r.State == protocol.Finished || r.State == protocol.Queued || r.Reason == "" {
+		return text
+	}
+	return text + ": " + r.Reason
 }
 
 // rescue writes what is sound of a damaged logbook into a new one. Its exit code says whether
@@ -96,7 +113,7 @@ func rescue(ctx context.Context, con *console, data, to string, asJSON bool) err
 		if r.Rest != "" {
 			fmt.Fprintf(con.out, "  what is left and can be read is in %s\n", r.Rest)
 		}
-		fmt.Fprintf(con.out, "to go on with it: move %s and its -wal and -shm away, and put %s in its place\n", logbookFile(data), to)
+		fmt.Fprintf(con.out, "to go on with it: move %s and its -wal and -shm away, and put %s in its place; leave %s: the next start makes the stream in it anew from the new logbook, so copy it before that if what was published beyond this logbook still matters\n", logbookFile(data), to, filepath.Join(data, "nats"))
 	}
 	if err == nil && len(r.Left) > 0 {
 		return errNotFinished

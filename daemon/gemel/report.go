@@ -33,7 +33,7 @@ func (reportCommand) Help() string {
 
 The results are worked out from the logbook file alone: recipe and bench file are read from the run's own header, and a copy of the file gives the same digits.
 
---json prints one object: the recipe's first result, under the key results the list of all of them, the first included, and under the key night what happened to the run: holds, interruptions, doubts, what was left out, notes. The exit code is 0 only if each has a value; one without says why under because.`
+--json prints one object: the recipe's first result, under the key results the list of all of them, the first included, and under the key night what happened to the run: holds, interruptions, doubts, what was left out, notes. The exit code is 0 only if each has a value; one without says why under because. Of a run whose recipe asks for no result the night is printed, the list is empty, and the exit code is 0. Text tells times in local time, JSON in UTC.`
 }
 
 func (c *reportCommand) Run(ctx context.Context, con *console) error {
@@ -56,6 +56,9 @@ func (c *reportCommand) Run(ctx context.Context, con *console) error {
 		o.Off = append(o.Off, estimate.Step(step))
 	}
 	all, err := report.All(ctx, book, run, o)
+	if errors.Is(err, report.ErrNoResult) && c.Plot == "" {
+		return c.night(ctx, con, book, run)
+	}
 	if err != nil {
 		return err
 	}
@@ -75,6 +78,24 @@ func (c *reportCommand) Run(ctx context.Context, con *console) error {
 			return err
 		}
 	}
+	return err
+}
+
+// night prints what happened to a run whose recipe asks for no result.
+func (c *reportCommand) night(ctx context.Context, con *console, book *logbook.Book, run protocol.RunID) error {
+	n, err := report.NightOf(ctx, book, run)
+	if err != nil {
+		return err
+	}
+	if c.JSON {
+		text, err := report.NightJSON(n)
+		if err != nil {
+			return err
+		}
+		_, err = con.out.Write(text)
+		return err
+	}
+	_, err = fmt.Fprintf(con.out, "Run %s: %v; gemel export has its readings.\n\n%s", run, report.ErrNoResult, n.Text())
 	return err
 }
 
@@ -146,5 +167,5 @@ func lastWithResult(ctx context.Context, book *logbook.Book, file string) (proto
 	if empty != "" {
 		return empty, nil
 	}
-	return "", fmt.Errorf("%s holds no run whose recipe asks for a result", file)
+	return "", fmt.Errorf("%s holds no run whose recipe asks for a result; gemel report --run RUN tells what happened to one, gemel check --data DIR lists them", file)
 }

@@ -329,6 +329,10 @@ func (c *followCommand) journal(ctx context.Context, con *console, aside *aside,
 			aside.say(gap)
 			continue
 		}
+		if other, ok := errors.AsType[*client.Replaced](err); ok {
+			aside.say(other)
+			continue
+		}
 		if err != nil {
 			return err
 		}

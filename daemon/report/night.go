@@ -4,8 +4,10 @@ import (
 	"context"
 	"encoding/json"
 	"fmt"
+	"slices"
 	"strconv"
 	"strings"
+	"time"
 
 	"gemel/daemon/logbook"
 	"gemel/protocol"
@@ -27,8 +29,14 @@ type Night struct {
 	Doubts        []Happening      `json:"doubts"`
 	Cuts          []Happening      `json:"cuts"` // why visits were left out
 	Troubles      []Happening      `json:"troubles"`
+	Bench         []Happening      `json:"bench_troubles"` // outside any run, from the end of the run before on
 	Earlier       []EarlierOfNight `json:"earlier_values"` // of other runs' results, that points were made of
 	Notes         []NoteOfNight    `json:"notes"`          // that people wrote
+
+	run    protocol.RunID
+	began  protocol.Time // the first entry's
+	ended  protocol.Time
+	looked protocol.Time // when the bench was last looked at by a check
 }
 
 // Happening is one event.
@@ -68,8 +76,11 @@ func NightOf(ctx context.Context, book *logbook.Book, run protocol.RunID) (Night
 	if err != nil {
 		return Night{}, err
 	}
-	n := Night{State: row.State, Interruptions: []Happening{}, Holds: []Hold{}, Doubts: []Happening{}, Cuts: []Happening{}, Troubles: []Happening{}, Earlier: []EarlierOfNight{}, Notes: []NoteOfNight{}}
+	n := Night{run: run, began: row.QueuedAt, ended: row.EndedAt, State: row.State, Bench: []Happening{}, Interruptions: []Happening{}, Holds: []Hold{}, Doubts: []Happening{}, Cuts: []Happening{}, Troubles: []Happening{}, Earlier: []EarlierOfNight{}, Notes: []NoteOfNight{}}
 	if err := each(ctx, book, run, n.add); err != nil {
+		return Night{}, err
+	}
+	if err := n.addBench(ctx, book, row); err != nil {
 		return Night{}, err
 	}
 	taken, _, err := book.Taken(ctx, run)
@@ -96,6 +107,38 @@ func NightOf(ctx context.Context, book *logbook.Book, run protocol.RunID) (Night
 	return n, nil
 }
 
+// eveningBefore is how long before the run was asked for troubles of the bench belong to its night.
+const eveningBefore = 12 * time.Hour
+
+// addBench takes in what happened to the bench outside any run: since the run before ended, and until
+// this one did.
+func (n *Night) addBench(ctx context.Context, book *logbook.Book, row logbook.RunRow) error {
+	from := row.QueuedAt.Add(-eveningBefore)
+	runs, err := book.Runs(ctx)
+	if err != nil {
+		return err
+	}
+	for _, r := range runs {
+		if r.Run != row.Run && r.EndedAt.After(from) && r.EndedAt.Before(row.StartedAt.Time) {
+			from = r.EndedAt.Time
+		}
+	}
+	return each(ctx, book, protocol.BenchRun, func(e protocol.Entry) error {
+		var ev protocol.Event
+		if e.Kind != protocol.EventEntry {
+			return nil
+		}
+		if err := json.Unmarshal(e.Body, &ev); err != nil {
+			return err
+		}
+		wrong := ev.Kind == protocol.Trouble || ev.Kind == protocol.Interrupted || ev.Kind == protocol.Doubted
+		if wrong && !ev.At.Before(from) && (row.EndedAt.IsZero() || !ev.At.After(row.EndedAt.Time)) {
+			n.Bench = append(n.Bench, Happening{ev.At, ev.Text})
+		}
+		return nil
+	})
+}
+
 // add takes one entry in.
 func (n *Night) add(e protocol.Entry) error {
 	switch e.Kind {
@@ -103,12 +146,14 @@ func (n *Night) add(e protocol.Entry) error {
 		var r struct {
 			Kind     protocol.ReadingKind `json:"kind"`
 			Accepted bool                 `json:"accepted"`
+			EndedAt  protocol.Time        `json:"ended_at"`
 		}
 		if err := json.Unmarshal(e.Body, &r); err != nil {
 			return err
 		}
 		switch {
 		case r.Kind == protocol.Check:
+			n.looked = r.EndedAt
 		case r.Accepted:
 			n.Accepted++
 		default:
@@ -172,9 +217,9 @@ const listed = 12
 // Text is the night for a person.
 func (n Night) Text() string {
 	var b strings.Builder
-	b.WriteString("The night\n")
+	fmt.Fprintf(&b, "The night, in local time (%s)\n", zone(n.began))
 	line := func(format string, a ...any) { fmt.Fprintf(&b, "  "+format+"\n", a...) }
-	how := n.Ended
+	how := n.howItEnded()
 	if how == "" {
 		how = "by the last entry it is " + string(n.State) // whoever wrote it may be dead
 	}
@@ -194,16 +239,18 @@ func (n Night) Text() string {
 				line("… and %d more like these; --json has them all", len(all)-listed)
 				break
 			}
-			line("%s  %s%s", when(h.At), what, h.Text)
+			line("%s  %s%s", n.when(h.At), what, h.Text)
 		}
 	}
 	list("", n.Cuts)
-	list("", n.Interruptions)
-	for _, h := range n.Holds {
-		line("%s", h.sentence())
+	alone, holds := n.onceEach()
+	list("", alone)
+	for _, h := range holds {
+		line("%s", h.sentence(n.when))
 	}
 	list("doubt: ", n.Doubts)
 	list("", n.Troubles)
+	list("at the bench: ", n.Bench)
 	if n.TakenAgain+n.SetAside+n.GivenUp > 0 {
 		line("taken again: %d; readings set aside: %d; visits given up: %d", n.TakenAgain, n.SetAside, n.GivenUp)
 	}
@@ -215,7 +262,7 @@ func (n Night) Text() string {
 		line("%s of %s taken from %q, run %s: %s, u %s %s", v.Kind, v.Of, v.Title, v.Run, plain(v.Value), strconv.FormatFloat(v.U, 'g', 2, 64), unit)
 	}
 	for _, one := range n.Notes {
-		line("note of %s, %s: %s", one.Who, when(one.At), one.Text)
+		line("note of %s, %s: %s", one.Who, n.when(one.At), one.Text)
 	}
 	if n.quiet() {
 		line("nothing else happened: no interruption, no hold, no doubt")
@@ -224,7 +271,51 @@ func (n Night) Text() string {
 }
 
 func (n Night) quiet() bool {
-	return n.LeftOut+n.TakenAgain+n.SetAside+n.GivenUp+len(n.Interruptions)+len(n.Holds)+len(n.Doubts)+len(n.Troubles)+len(n.Earlier)+len(n.Notes) == 0
+	return n.LeftOut+n.TakenAgain+n.SetAside+n.GivenUp+len(n.Interruptions)+len(n.Holds)+len(n.Doubts)+len(n.Troubles)+len(n.Bench)+len(n.Earlier)+len(n.Notes) == 0
 }
 
-func when(t protocol.Time) string { return t.UTC().Format("2006-01-02 15:04:05") }
+// onceEach tells an interruption that left the run holding with its hold, or alone where that lasted
+// no second.
+func (n Night) onceEach() (alone []Happening, holds []Hold) {
+	alone = slices.Clone(n.Interruptions)
+	for _, h := range n.Holds {
+		at := slices.IndexFunc(alone, func(i Happening) bool { return i.At.Equal(h.From.Time) && i.Text == h.Why[0] })
+		switch {
+		case at < 0:
+		case len(h.Why) == 1 && h.To != nil && h.To.Sub(h.From.Time) < time.Second:
+			continue
+		default:
+			alone = slices.Delete(alone, at, at+1)
+		}
+		holds = append(holds, h)
+	}
+	return alone, holds
+}
+
+// howItEnded is how, in the run's words. Where a hold's patience was over, what it was for is told as
+// what it was: nobody knows whether it still stands.
+func (n Night) howItEnded() string {
+	const unmended = "failed: it did not mend within "
+	if n.State != protocol.Failed || !strings.HasPrefix(n.Ended, unmended) || len(n.Holds) == 0 {
+		return n.Ended
+	}
+	within, _, _ := strings.Cut(strings.TrimPrefix(n.Ended, unmended), ";")
+	last := n.Holds[len(n.Holds)-1]
+	why := strings.TrimPrefix(last.Why[len(last.Why)-1], "held: ")
+	how := fmt.Sprintf("failed: given up after a hold of %s without a change, which began at %s and was for: %s; ", within, n.when(last.From), why)
+	if n.looked.After(last.From.Time) {
+		return how + "the last look at it was at " + n.when(n.looked)
+	}
+	return how + "no look after that is written"
+}
+
+// when is a time for a person: local, with its zone where that is not the one that the head names.
+func (n Night) when(t protocol.Time) string {
+	text := t.Local().Format(time.DateTime)
+	if z := zone(t); z != zone(n.began) {
+		text += " " + z
+	}
+	return text
+}
+
+func zone(t protocol.Time) string { return t.Local().Format("UTC-07:00") }

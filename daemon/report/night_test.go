@@ -76,13 +76,132 @@ func TestTheNightSaysWhatWentWrongBesideTheNumbers(t *testing.T) {
 	}
 }
 
+// inZone sets the zone that times are told in until the test ends.
+func inZone(t *testing.T, ahead time.Duration) {
+	t.Helper()
+	was := time.Local
+	time.Local = time.FixedZone("", int(ahead.Seconds()))
+	t.Cleanup(func() { time.Local = was })
+}
+
+// atBench writes an event outside any run.
+func (j *journal) atBench(kind protocol.EventKind, text string, at time.Time) {
+	j.t.Helper()
+	last, err := j.book.Last(j.t.Context(), protocol.BenchRun)
+	if err != nil {
+		j.t.Fatal(err)
+	}
+	ev := protocol.Event{Head: j.head(protocol.EventSchema), Kind: kind, Text: text, Causes: []protocol.Cause{}, Detail: map[string]any{}}
+	ev.Run, ev.Sequence, ev.At = protocol.BenchRun, last+1, protocol.Time{Time: at}
+	body, err := json.Marshal(ev)
+	if err == nil {
+		err = j.book.Append(j.t.Context(), protocol.Entry{Run: protocol.BenchRun, Sequence: last + 1, Kind: protocol.EventEntry, Body: body})
+	}
+	if err != nil {
+		j.t.Fatal(err)
+	}
+}
+
+func TestTheNightTellsTheBenchsTroublesInLocalTime(t *testing.T) {
+	inZone(t, 2*time.Hour)
+	j := newJournal(t, 11)
+	j.atBench(protocol.Trouble, "at the start the rest state was not reached: laser: away", j.at.Add(-time.Minute))
+	j.atBench(protocol.Trouble, "of the week before", j.at.Add(-200*time.Hour))
+	j.atBench(protocol.OperatorDid, "the queue was put in order", j.at)
+	j.tells(protocol.Began, protocol.Running, "began", 0, map[string]any{"readings_planned": 1})
+	j.tells(protocol.Ended, protocol.Finished, "finished", time.Minute, nil)
+	j.atBench(protocol.Trouble, "of the day after", j.at.Add(time.Hour))
+	n, err := report.NightOf(t.Context(), j.book, j.run)
+	if err != nil {
+		t.Fatal(err)
+	}
+	want := "The night, in local time (UTC+02:00)\n  finished; 0 of 1 readings accepted\n" +
+		"  2031-02-03 23:59:00  at the bench: at the start the rest state was not reached: laser: away\n"
+	if n.Text() != want {
+		t.Errorf("%s\nwant\n%s", n.Text(), want)
+	}
+	body, err := report.NightJSON(n)
+	if err != nil || !strings.Contains(string(body), `"results": []`) || !strings.Contains(string(body), `"at": "2031-02-03T21:59:00`) {
+		t.Errorf("%v\n%s\nwant UTC and no results", err, body)
+	}
+}
+
+func TestAnInterruptionIsToldOnce(t *testing.T) {
+	for name, c := range map[string]struct {
+		held time.Duration
+		want string
+	}{
+		"where the run went on at once":      {0, "22:01:00  interrupted: dead\n"},
+		"with the hold that it left, if any": {time.Hour, "held from 2031-02-03 22:01:00 to 2031-02-03 23:01:00 (1 h): interrupted: dead\n"},
+	} {
+		t.Run(name, func(t *testing.T) {
+			inZone(t, 0)
+			j := newJournal(t, 12)
+			j.tells(protocol.Began, protocol.Running, "began", 0, map[string]any{"readings_planned": 1})
+			j.tells(protocol.Interrupted, protocol.Holding, "interrupted: dead", time.Minute, nil)
+			j.tells(protocol.WentOn, protocol.Running, "goes on", c.held, nil)
+			n, err := report.NightOf(t.Context(), j.book, j.run)
+			if err != nil {
+				t.Fatal(err)
+			}
+			if text := n.Text(); strings.Count(text, "interrupted: dead") != 1 || !strings.Contains(text, c.want) {
+				t.Errorf("%s\nwant once %q", text, c.want)
+			}
+		})
+	}
+}
+
+func TestAHoldThatWasGivenUpIsToldAsWhatItWas(t *testing.T) {
+	inZone(t, 0)
+	j := newJournal(t, 13)
+	j.tells(protocol.Began, protocol.Running, "began", 0, map[string]any{"readings_planned": 1})
+	j.tells(protocol.Held, protocol.Holding, "held: signal sees 900000 /s", time.Minute, nil)
+	j.at = j.at.Add(9 * time.Minute)
+	j.reading(protocol.Check, arms(2.88, 2.96), time.Second, func(*protocol.Reading) {})
+	looked := j.at.Add(-time.Second) // the reading ended; the journal took another second
+	j.tells(protocol.Ended, protocol.Failed, "failed: it did not mend within 10 min; it was held: signal sees 900000 /s", time.Minute, nil)
+	n, err := report.NightOf(t.Context(), j.book, j.run)
+	if err != nil {
+		t.Fatal(err)
+	}
+	want := "failed: given up after a hold of 10 min without a change, which began at 2031-02-03 22:01:00 and was for: signal sees 900000 /s; the last look at it was at " + looked.Format(time.DateTime)
+	if text := n.Text(); !strings.Contains(text, want) {
+		t.Errorf("%s\nwant %q", text, want)
+	}
+}
+
+func TestOfARunThatGoesOnARefusalSaysThatReadingsAreStillToCome(t *testing.T) {
+	j := newJournal(t, 14)
+	j.tells(protocol.Began, protocol.Running, "began", 0, map[string]any{"readings_planned": 20})
+	all, err := report.All(t.Context(), j.book, j.run, report.Options{})
+	if err != nil || len(all) == 0 || all[0].Value != nil {
+		t.Fatalf("%+v, %v; want a refusal", all, err)
+	}
+	early, err := report.NightOf(t.Context(), j.book, j.run)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if text := report.Morning(all, early); !strings.Contains(text, "yet: the run is running with 0 of 20 readings accepted") || strings.Contains(text, "kept") {
+		t.Errorf("%s", text)
+	}
+	j.tells(protocol.Ended, protocol.Stopped, "stopped", time.Minute, nil)
+	late, err := report.NightOf(t.Context(), j.book, j.run)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if text := report.Morning(all, late); !strings.Contains(text, all[0].Sentence()) {
+		t.Errorf("of a run that ended:\n%s", text)
+	}
+}
+
 func TestAQuietNightSaysSo(t *testing.T) {
 	j := newJournal(t, 8)
 	j.tells(protocol.Began, protocol.Running, "began", 0, map[string]any{"readings_planned": 1})
 	j.reading(protocol.Light, arms(2.88, 2.96), time.Second, func(*protocol.Reading) {})
 	j.tells(protocol.Ended, protocol.Finished, "finished: 1 of 1 readings accepted, 0 set aside", 0, nil)
 	n, err := report.NightOf(t.Context(), j.book, j.run)
-	if want := "The night\n  finished: 1 of 1 readings accepted, 0 set aside\n  nothing else happened: no interruption, no hold, no doubt\n"; err != nil || n.Text() != want {
+	inZone(t, 0)
+	if want := "The night, in local time (UTC+00:00)\n  finished: 1 of 1 readings accepted, 0 set aside\n  nothing else happened: no interruption, no hold, no doubt\n"; err != nil || n.Text() != want {
 		t.Errorf("%v\n%s", err, n.Text())
 	}
 }

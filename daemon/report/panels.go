@@ -7,6 +7,7 @@ import (
 	"strings"
 	"time"
 
+	"gemel/protocol"
 	"gemel/protocol/unit"
 	"gemel/scan/estimate"
 )
@@ -250,7 +251,7 @@ func signed(v, u float64) string {
 }
 
 // sentence says when and why a run waited.
-func (h Hold) sentence() string {
+func (h Hold) sentence(when func(protocol.Time) string) string {
 	span := "held from " + when(h.From) + ", still"
 	if h.To != nil {
 		lasted := "less than 1 s"

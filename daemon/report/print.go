@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"strings"
 
+	"gemel/protocol"
 	"gemel/scan/estimate"
 )
 
@@ -22,7 +23,33 @@ func Morning(all []estimate.Result, night Night) string {
 	if len(all) == 0 {
 		return night.Text()
 	}
-	return Text(all) + "\n" + night.Text()
+	text := Text(all)
+	for _, r := range all {
+		if r.Value == nil && !night.State.Final() {
+			text = strings.Replace(text, r.Sentence(), night.notYet(r), 1)
+		}
+	}
+	return text + "\n" + night.Text()
+}
+
+// notYet says of a run that goes on why it has no result so far.
+func (n Night) notYet(r estimate.Result) string {
+	return fmt.Sprintf("No %s from %s yet: the run is %s with %d of %d readings accepted, and what is there is too little for a value; it lacks so far: %s.",
+		strings.ReplaceAll(r.Kind, "_", " "), r.Run, n.State, n.Accepted, max(n.Planned, n.Accepted), strings.Join(r.Because, "; "))
+}
+
+// NightJSON is what JSONWith prints of a run whose recipe asks for no result: an empty list, and the
+// night.
+func NightJSON(n Night) ([]byte, error) {
+	text, err := json.MarshalIndent(struct {
+		Run     protocol.RunID    `json:"run"`
+		Results []estimate.Result `json:"results"`
+		Night   Night             `json:"night"`
+	}{n.run, []estimate.Result{}, n}, "", "  ")
+	if err != nil {
+		return nil, fmt.Errorf("night of %s: %w", n.run, err)
+	}
+	return append(text, '\n'), nil
 }
 
 // JSON is one object: the first result's keys, and under results the list of all, in the recipe's

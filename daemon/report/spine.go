@@ -213,7 +213,7 @@ func (s *sheet) holds(n Night) {
 			s.paragraph(fmt.Sprintf("and %d more holds", len(n.Holds)-i))
 			return
 		}
-		s.paragraph(h.sentence())
+		s.paragraph(h.sentence(inUTC))
 	}
 }
 
@@ -241,3 +241,6 @@ func earlier(a, b time.Time) time.Time {
 	}
 	return b
 }
+
+// inUTC is a time on a picture, whose clock is UTC.
+func inUTC(t protocol.Time) string { return t.UTC().Format(time.DateTime) }
