@@ -349,12 +349,18 @@ func (c *course) aim(targets []scan.AxisTarget, stay bool) {
 	}
 }
 
-// set brings settings where they have to be. One that was brought there before is only asked.
+// set brings settings where they have to be, with the detectors protected. One that was brought there
+// before is only asked.
 func (c *course) set(settings []scan.SettingTarget) {
+	shielded := false
 	for _, t := range settings {
 		if v, told := c.told[t.Setting]; told && v == t.Value {
 			c.overhead(c.bench.Costs.ask(t.Setting, askGet))
 			continue
+		}
+		if !shielded {
+			c.shield()
+			shielded = true
 		}
 		c.told[t.Setting] = t.Value
 		var settle time.Duration
@@ -362,6 +368,18 @@ func (c *course) set(settings []scan.SettingTarget) {
 			settle = c.bench.Settings[i].Settle
 		}
 		c.spend(expense{settle: settle, overhead: c.bench.Costs.ask(t.Setting, askSet)})
+	}
+}
+
+// shield closes the protectors that are open.
+func (c *course) shield() {
+	if c.shown {
+		c.spend(c.closeAll)
+		c.shown = false
+		return
+	}
+	for _, s := range c.bench.Protectors {
+		c.overhead(c.bench.Costs.ask(s.Name, askState))
 	}
 }
 
