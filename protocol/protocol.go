@@ -127,7 +127,7 @@ type Reading struct {
 	Scatter   *Scatter     `json:"scatter"`               // null with fewer than two slices
 	Glance    *Slice       `json:"glance"`                // the short look at the light before the dwell; not in the counts
 	LostGates int          `json:"lost_gates"`            // gates that were opened in this dwell and whose counts are not here
-	Attempt   int          `json:"attempt"`               // 1, or more when it was taken again
+	Attempt   int          `json:"attempt"`               // 1, and one more for each that failed since it was given up, or since a person or a restart let the run go on
 	Reference *ReferenceOf `json:"reference,omitempty"`   // of the kind reference: which of the set's readings it is
 	Tag       string       `json:"tag_channel,omitempty"` // the channel that numbers gates, and whose counts are no amount; empty: none, or not told
 	Simulated *int         `json:"simulated"`
