@@ -237,8 +237,18 @@ func (p *planned) made(v scan.Visit) {
 	}
 }
 
-// attempts judges the numbers of attempts: one more than failed since somebody let the run go on, and
-// no more than the recipe allows.
+// attempted names what attempts are counted of: a visit, one place of a set of references, or the dark or
+// background that is due. A set that was given up at its first place is begun under the same number again,
+// and from the first attempt.
+func attempted(task string, point, visit int) string {
+	if task == "light" || task == "reference" {
+		return fmt.Sprint(task, point, " ", visit)
+	}
+	return task
+}
+
+// attempts judges the numbers of attempts: one more than failed since somebody let the run go on or it was
+// given up, and no more than the recipe allows.
 func (j *judge) attempts(where string, p *planned, b *protocol.Reading) {
 	if b.Kind == protocol.Check {
 		return
@@ -246,9 +256,9 @@ func (j *judge) attempts(where string, p *planned, b *protocol.Reading) {
 	key := string(b.Kind)
 	switch b.Kind {
 	case protocol.Light:
-		key = fmt.Sprint(key, *b.Point, " ", *b.Visit)
+		key = attempted(key, *b.Point, *b.Visit)
 	case protocol.Reference:
-		key = fmt.Sprint(key, b.Reference.Place, " ", b.Reference.Set)
+		key = attempted(key, b.Reference.Place, b.Reference.Set)
 	}
 	if most := p.plan.Trouble.Retries + 1; b.Attempt < 1 || b.Attempt > most {
 		j.say("%s is attempt %d; the recipe allows %d", where, b.Attempt, most)
@@ -377,10 +387,11 @@ func (j *judge) follow(where string, ev *protocol.Event) {
 	number := func(name string) int { n, _ := ev.Detail[name].(float64); return int(n) }
 	switch ev.Kind {
 	case protocol.SetAside:
-		switch task, _ := ev.Detail["task"].(string); task {
+		task, _ := ev.Detail["task"].(string)
+		delete(p.failed, attempted(task, number("point"), number("visit")))
+		switch task {
 		case "light":
 			p.made(scan.Visit{Point: number("point"), Visit: number("visit")})
-			delete(p.failed, fmt.Sprint(task, number("point"), " ", number("visit")))
 		case "rest":
 			p.cut = true
 			left := 0
@@ -395,7 +406,6 @@ func (j *judge) follow(where string, ev *protocol.Event) {
 		default:
 			if kind := protocol.ReadingKind(task); p.series[kind] != nil {
 				p.began(kind)
-				delete(p.failed, task)
 			}
 		}
 	case protocol.WentOn, protocol.GuardMended:
@@ -410,10 +420,7 @@ func (j *judge) follow(where string, ev *protocol.Event) {
 		if task == "" || ev.Kind == protocol.Held && !slices.Contains(ev.Causes, protocol.ByLight) {
 			break
 		}
-		if task == "light" || task == "reference" {
-			task = fmt.Sprint(task, number("point"), " ", number("visit"))
-		}
-		p.failed[task]++
+		p.failed[attempted(task, number("point"), number("visit"))]++
 	case protocol.Doubted:
 		j.doubt(where, p, ev)
 	}

@@ -207,6 +207,7 @@ func TestTheJudgeFindsEverySabotage(t *testing.T) {
 		{"plan", "leaves out the closing dark", "", "|", withoutDark(6), "without a closing dark"},
 		{"attempts", "counts attempts wrongly", "", "|", reading(9, light(func(r *protocol.Reading) { r.Attempt = 2 })), "is attempt 2"},
 		{"attempts", "counts more attempts than are allowed", "", "|", reading(9, light(func(r *protocol.Reading) { r.Attempt = 5 })), "the recipe allows"},
+		{"attempts", "carries attempts over what was given up", givenUpNight, "| silent(counter, at 12s, for 15s)", reading(1, reference(func(r *protocol.Reading) { r.Attempt = 2 })), "is attempt 2, and 0 failed before it"},
 		{"shuffles", "takes another order than it wrote", shuffledNight, "|", points(func(p *protocol.Points) bool {
 			p.Grounds = "sweep, shuffled by seed 1"
 			return true
@@ -417,6 +418,7 @@ func sentences(t *testing.T) (all []string) {
 var (
 	watchedNight  = "plain" + between + oneLine(watched)
 	delayNight    = "plain" + between + `{title: Delays, sweep: [{axis: signal_arm, at: 2.864 deg}, {setting: delay, from: 15 ns, to: 25 ns, step: 0.5 ns}], dwell: 2 s, repeat: {times: 3, as: passes}}`
+	givenUpNight  = "plain" + between + `{title: Given up, sweep: [{axis: signal_arm, at: 2.864 deg}, {axis: idler_arm, around: 2.864 deg, span: 1 deg, step: 0.1 deg}], dwell: 2 s, reference: {axes: [signal_arm], on: [low_flank, top, high_flank], at: {signal_arm: 2.864 deg, idler_arm: 2.864 deg}, every: 6 points, dwell: 4 s, also: [start], otherwise: note}, trouble: {retries: 1, then: skip}}`
 	guardedNight  = "plain" + between + `{title: Guarded, sweep: [{axis: idler_arm, around: 2.864 deg, span: 1 deg, step: 0.1 deg}], dwell: 4 s, repeat: {times: 8, as: passes}, guards: [{watch: pump_power, within: [42 mW, 48 mW], otherwise: stop}]}`
 	ringNight     = "plain" + between + findRing + between + useRing("not_older_than: 12 h")
 	vagueNight    = "plain" + between + findRing + between + useRing("u_below: 0.00001 deg")
