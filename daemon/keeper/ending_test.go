@@ -136,6 +136,33 @@ func TestARunThatCannotGoOnIsInterruptedDoubtedAndFailed(t *testing.T) {
 	}
 }
 
+// stuck is a shutter whose blade does not move any more.
+type stuck struct{ shutter }
+
+func (s stuck) Close(context.Context) error { return nil }
+
+// Who reads the interruption alone must not take the bench for being at rest.
+func TestEveryWordOfARunThatIsEndedUnrestedSaysSo(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		open := true
+		k, book, run := cutShort(t, func(c *Config) { c.Bench.Axes = verified(); c.Bench.Pump = stuck{shutter{&open}} })
+		before := len(eventsOf(t, book, run))
+		if reply, err := k.Stop(t.Context(), protocol.RunRequest{Run: run, Who: "ann"}); err != nil || reply.State != protocol.Stopped {
+			t.Fatalf("Stop() = %+v, %v; want stopped", reply, err)
+		}
+		var kinds []string
+		for _, ev := range eventsOf(t, book, run)[before:] {
+			kinds = append(kinds, string(ev.Kind))
+			if !strings.Contains(ev.Text, "THE REST STATE WAS NOT REACHED: close shutter") {
+				t.Errorf("%s: %q; want it to say that the pump's shutter did not close", ev.Kind, ev.Text)
+			}
+		}
+		if got := strings.Join(kinds, " "); got != "interrupted doubted ended" {
+			t.Errorf("events %s; want interrupted, doubted, ended", got)
+		}
+	})
+}
+
 // The last entry of a run may lie ahead of the machine's clock: bench time runs faster there.
 func TestWhatTheKeeperWritesIsNeverBeforeTheEntryBeforeIt(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {

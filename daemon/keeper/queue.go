@@ -251,7 +251,7 @@ func (k *Keeper) busy() bool {
 // endWaiting ends a run that no engine executes. What had begun was interrupted first, and that is
 // told: what was counted at that moment is lost. The process that died may have left the bench hot,
 // and perhaps nobody has brought it to rest yet: that comes first, unless another run has the bench.
-// restBad is what of that was not reached.
+// restBad is what of that was not reached; each entry says it, from the first on.
 func (k *Keeper) endWaiting(ctx context.Context, row logbook.RunRow, state protocol.State, text string, detail map[string]any) (restBad string, err error) {
 	past, err := k.fold(ctx, row.Run)
 	if err != nil {
@@ -266,26 +266,24 @@ func (k *Keeper) endWaiting(ctx context.Context, row logbook.RunRow, state proto
 	}
 	if past.State != protocol.Queued {
 		if !k.busy() {
-			if restBad = engine.Rest(ctx, k.Bench); restBad != "" {
-				text += "; THE REST STATE WAS NOT REACHED: " + restBad
-			}
+			restBad = engine.Rest(ctx, k.Bench)
 		}
 		causes := past.Causes
 		if !slices.Contains(causes, protocol.ByRestart) {
 			causes = append(slices.Clone(causes), protocol.ByRestart)
-			err := add(protocol.Interrupted, "interrupted: the program ended without a word; what was being counted is lost, nothing that was written is",
+			err := add(protocol.Interrupted, "interrupted: the program ended without a word; what was being counted is lost, nothing that was written is"+notAtRest(restBad),
 				protocol.Holding, causes, map[string]any{"after_sequence": past.Next - 1})
 			if err != nil {
 				return restBad, err
 			}
 		}
 		for _, d := range past.Unverified(k.axesOf(row)) {
-			if err := add(protocol.Doubted, d.Text, protocol.Holding, causes, d.Detail); err != nil {
+			if err := add(protocol.Doubted, d.Text+notAtRest(restBad), protocol.Holding, causes, d.Detail); err != nil {
 				return restBad, err
 			}
 		}
 	}
-	return restBad, add(protocol.Ended, text, state, nil, detail)
+	return restBad, add(protocol.Ended, text+notAtRest(restBad), state, nil, detail)
 }
 
 // axesOf lists the axes of the bench file under which a run began: the one of today may not say any
