@@ -473,11 +473,7 @@ func (k *Keeper) Stop(ctx context.Context, q protocol.RunRequest) (protocol.RunR
 		}
 		if eng != nil {
 			reply, err := answered(ctx, eng, eng.Stop, q)
-			if err == nil && !reply.Recorded {
-				k.order.Lock()
-				defer k.order.Unlock()
-				_ = k.owe(q) // it is done, and was answered "not recorded": what fails here makes it no worse
-			}
+			k.oweUnrecorded(q, reply, err)
 			return reply, err
 		}
 		reply, err := k.stopQueued(ctx, q)
@@ -500,7 +496,9 @@ func (k *Keeper) StopAfterPoint(ctx context.Context, q protocol.RunRequest) (pro
 	if eng == nil {
 		return k.Stop(ctx, q)
 	}
-	return answered(ctx, eng, eng.StopAfterPoint, q)
+	reply, err := answered(ctx, eng, eng.StopAfterPoint, q)
+	k.oweUnrecorded(q, reply, err)
+	return reply, err
 }
 
 // Hold makes the current run wait.

@@ -22,6 +22,17 @@ func (k *Keeper) owe(q protocol.RunRequest) error {
 	return k.Book.Owe(append(owed, logbook.OwedStop{Run: q.Run, Who: who(q.Who)}))
 }
 
+// oweUnrecorded keeps a stop that an engine carried out and could not write. What fails here makes it
+// no worse: it is done, and was answered "not recorded".
+func (k *Keeper) oweUnrecorded(q protocol.RunRequest, reply protocol.RunReply, err error) {
+	if err != nil || reply.Recorded {
+		return
+	}
+	k.order.Lock()
+	defer k.order.Unlock()
+	_ = k.owe(q)
+}
+
 // payOwed writes the stops that were carried out when the journal had no room. It is asked when no
 // engine executes a run, and no run begins before it succeeds.
 func (k *Keeper) payOwed(ctx context.Context) error {

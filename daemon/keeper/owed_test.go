@@ -1,10 +1,12 @@
 package keeper
 
 import (
+	"context"
 	"errors"
 	"fmt"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 	"testing"
 	"testing/synctest"
@@ -12,6 +14,7 @@ import (
 
 	"gemel/daemon/logbook"
 	"gemel/protocol"
+	"gemel/scan"
 )
 
 // owing makes a keeper over a logbook in dir.
@@ -47,10 +50,15 @@ func TestAStopThatFoundNoRoomOutlivesTheProgram(t *testing.T) {
 	for _, c := range []struct {
 		name  string
 		begun time.Duration // until it is stopped; 0: it still waits
+		full  time.Duration // from then on it waits for room
+		ask   func(*Keeper, context.Context, protocol.RunRequest) (protocol.RunReply, error)
+		state protocol.State
 		want  string
 	}{
-		{"of a run that is executed", 5 * time.Second, "began interrupted ended stopped stopped by ann, while nothing could be written"},
-		{"of a run that waits", 0, "ended stopped stopped by ann, while nothing could be written"},
+		{"of a run that is executed", 5 * time.Second, 0, (*Keeper).Stop, protocol.Stopped, "began interrupted ended stopped stopped by ann, while nothing could be written"},
+		{"after the point that is open", 5 * time.Second, 0, (*Keeper).StopAfterPoint, protocol.Holding, "began interrupted ended stopped stopped by ann, while nothing could be written"},
+		{"after the point that waits for room", 5 * time.Second, 20 * time.Second, (*Keeper).StopAfterPoint, protocol.Stopped, "began interrupted ended stopped stopped by ann, while nothing could be written"},
+		{"of a run that waits", 0, 0, (*Keeper).Stop, protocol.Stopped, "ended stopped stopped by ann, while nothing could be written"},
 	} {
 		t.Run(c.name, func(t *testing.T) {
 			synctest.Test(t, func(t *testing.T) {
@@ -59,9 +67,10 @@ func TestAStopThatFoundNoRoomOutlivesTheProgram(t *testing.T) {
 				run := enqueue(t, k, "a")["a"]
 				stop := func() {
 					fill(t, book)
-					r, err := k.Stop(t.Context(), protocol.RunRequest{Run: run, Who: "ann"})
-					if err != nil || r.Recorded || r.State != protocol.Stopped {
-						t.Errorf("answered %+v, %v; want done, not recorded", r, err)
+					time.Sleep(c.full)
+					r, err := c.ask(k, t.Context(), protocol.RunRequest{Run: run, Who: "ann"})
+					if err != nil || r.Recorded || r.State != c.state {
+						t.Errorf("answered %+v, %v; want %s, not recorded", r, err, c.state)
 					}
 				}
 				if c.begun == 0 {
@@ -86,6 +95,47 @@ func TestAStopThatFoundNoRoomOutlivesTheProgram(t *testing.T) {
 			})
 		})
 	}
+}
+
+// A reading whose entry waits is lost to the engine's end, not to its patience: the run must not be
+// given to another engine, which would say that the program ended.
+func TestADiskThatIsFullForLongerThanThePatienceLosesNoReading(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		k, book := owing(t, t.TempDir())
+		defer func() { _ = book.Close() }()
+		c := k.Config
+		c.Plan = func(text string, _ time.Time, _ func(scan.EarlierAsk) (scan.EarlierSource, error)) (scan.Plan, error) {
+			return scan.Plan{Title: text, Points: []scan.Point{{}}, Dwell: scan.Dwell{Time: time.Minute, Slice: time.Minute}, Repeat: scan.Repeat{Times: 4},
+				Trouble: scan.Trouble{GiveUpAfter: 10 * time.Minute, Then: scan.Hold}}, nil
+		}
+		k = New(c)
+		run := enqueue(t, k, "a")["a"]
+		during(t, k, func() {
+			time.Sleep(90 * time.Second)
+			fill(t, book)
+			time.Sleep(time.Hour)
+			if s := k.Status(t.Context()); s.State != protocol.Holding || !slices.Equal(s.Causes, []protocol.Cause{protocol.ByStorage}) || s.ReadingsAccepted != 1 {
+				t.Errorf("full for an hour: %s for %v, %d readings; want held for storage with one reading", s.State, s.Causes, s.ReadingsAccepted)
+			}
+			if err := book.SetMaxPages(t.Context(), 0); err != nil {
+				t.Fatal(err)
+			}
+			time.Sleep(10 * time.Minute)
+		})
+		if got := kinds(t, book, run); !strings.HasPrefix(got, "began ended finished") {
+			t.Errorf("the journal has %s; want it to go on by itself", got)
+		}
+		entries, err := book.Entries(t.Context(), run, 0, 100)
+		taken := 0
+		for _, e := range entries {
+			if e.Kind == protocol.ReadingEntry {
+				taken++
+			}
+		}
+		if err != nil || taken != 4 {
+			t.Errorf("%d readings, %v; want four, none taken twice", taken, err)
+		}
+	})
 }
 
 func TestNothingBeginsBeforeAStopThatIsOwedIsWritten(t *testing.T) {

@@ -87,20 +87,37 @@ func (e *Engine) request(ctx context.Context, kind orderKind, who string) (proto
 	return o.reply, nil
 }
 
-// operation gives a context that ends when ctx does or when an order comes in.
+// operation gives a context that ends when ctx does or when an order comes in. An entry that waits for
+// room is an operation inside another one: what was ordered meanwhile ends that one, too.
 func (e *Engine) operation(ctx context.Context) (context.Context, func()) {
 	op, cancel := context.WithCancelCause(ctx)
 	e.mu.Lock()
 	defer e.mu.Unlock()
+	outer := e.cancelOp
 	e.cancelOp = cancel
-	if slices.ContainsFunc(e.pending, func(o *order) bool { return o.kind != closeOrder }) {
+	urgent := func() bool {
+		return slices.ContainsFunc(e.pending, func(o *order) bool { return o.kind != closeOrder })
+	}
+	if urgent() {
 		cancel(errOrdered)
 	}
 	return op, func() {
 		e.mu.Lock()
 		defer e.mu.Unlock()
-		e.cancelOp = nil
+		e.cancelOp = outer
 		cancel(nil)
+		if outer != nil && urgent() {
+			outer(errOrdered)
+		}
+	}
+}
+
+// interrupt ends the operation that is open, if there is one.
+func (e *Engine) interrupt() {
+	e.mu.Lock()
+	defer e.mu.Unlock()
+	if e.cancelOp != nil {
+		e.cancelOp(errOrdered)
 	}
 }
 

@@ -237,6 +237,9 @@ func (e *Engine) findZero(ctx, op context.Context) error {
 		if err := e.note(ctx, protocol.Trouble, fmt.Sprintf("%s has lost the zero of %v and searches for it", s.Name(), lost), detail); err != nil {
 			return err
 		}
+		if op.Err() != nil {
+			return nil // stopped while that had to wait for room
+		}
 		if err := s.Home(op, lost); err != nil {
 			if op.Err() != nil {
 				return nil
@@ -310,7 +313,8 @@ func (e *Engine) tellDeaf(ctx context.Context) error {
 }
 
 // append writes one entry, and waits while there is no room. The rest state comes first then; the
-// hold itself can only be told afterwards.
+// hold itself can only be told afterwards. This wait has no bound: that it was over could not be
+// written either, and what waits here would be lost. It counts for no other hold's patience.
 func (e *Engine) append(ctx context.Context, entry protocol.Entry) error {
 	err := e.Log.Append(context.WithoutCancel(ctx), entry)
 	if err == nil {
@@ -338,7 +342,11 @@ func (e *Engine) append(ctx context.Context, entry protocol.Entry) error {
 		}
 		if err = e.Log.Append(context.WithoutCancel(ctx), entry); err == nil {
 			e.progress.storageHeld = true
+			e.waitsSince = e.waitsSince.Add(e.now().Sub(since))
 			e.publishSnapshot()
+			if len(e.owed) > 0 {
+				e.interrupt() // what was being done here was stopped or held meanwhile
+			}
 			return nil
 		}
 		if errors.Is(err, ErrConflict) {
@@ -352,18 +360,16 @@ func (e *Engine) append(ctx context.Context, entry protocol.Entry) error {
 				e.owed = append(e.owed, o)
 			}
 		}
-		if e.now().Sub(since) > e.patience {
-			return fmt.Errorf("gave up after %s: %w", unit.Span(e.patience), err)
-		}
 	}
 }
 
-// payOwed writes what was asked for while nothing could be written: a stop before any hold.
+// payOwed writes what was asked for while nothing could be written: a stop before any hold. A stop
+// after the point is a plain one there, as of any run that holds.
 func (e *Engine) payOwed(ctx context.Context) error {
 	owed := e.owed
 	e.owed = nil
 	for _, o := range owed {
-		if o.kind == stopOrder {
+		if o.kind == stopOrder || o.kind == closeOrder {
 			return e.end(ctx, protocol.Stopped, "stopped by "+o.who+", while nothing could be written", map[string]any{"who": o.who})
 		}
 	}
@@ -375,7 +381,7 @@ func (e *Engine) answerUnrecorded(o *order) {
 		return
 	}
 	o.reply = protocol.RunReply{Run: e.RunID, State: protocol.Holding, Causes: []protocol.Cause{protocol.ByStorage}}
-	if o.kind == stopOrder {
+	if o.kind == stopOrder || o.kind == closeOrder && (o != e.obeying || e.progress.State == protocol.Holding) {
 		o.reply.State, o.reply.Causes = protocol.Stopped, []protocol.Cause{}
 	}
 	o.did, o.answered = true, true
