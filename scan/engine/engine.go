@@ -321,7 +321,11 @@ func (e *Engine) turn(ctx context.Context) error {
 	}
 	if e.progress.storageHeld {
 		e.progress.storageHeld = false
-		if err := e.note(ctx, protocol.WentOn, "there is room again: nothing could be written for a while, and the bench was at rest", map[string]any{"cause": protocol.ByStorage}); err != nil {
+		text := "there is room again: nothing could be written for a while, and the bench was at rest"
+		if bad := e.progress.restBad; bad != "" {
+			text = "there is room again: nothing could be written for a while" + withBad(bad)
+		}
+		if err := e.note(ctx, protocol.WentOn, text, map[string]any{"cause": protocol.ByStorage}); err != nil {
 			return err
 		}
 	}

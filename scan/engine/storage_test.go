@@ -296,3 +296,35 @@ func TestLittleRoomHoldsBeforeThereIsNone(t *testing.T) {
 		}
 	})
 }
+
+func TestTheBenchIsNotCalledAtRestWhereABladeStuckAllTheWhile(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		n := newNight(t, nil)
+		var met time.Time
+		n.fail = func(did string) error {
+			switch {
+			case did == "gate 1s pump=true" && met.IsZero():
+				met = time.Now()
+				n.setFull(true)
+				return retry(true)
+			case did == "close guard" && !met.IsZero() && time.Since(met) < 11*time.Minute:
+				return &drivers.Error{Op: "close", Device: "guard", Remedy: drivers.Retry, Err: errors.New("the sensor sees the blade open")}
+			}
+			return nil
+		}
+		room := during(10*time.Minute, func() { n.setFull(false) })
+		if state, err := n.eng.Run(t.Context()); state != protocol.Finished || err != nil {
+			t.Fatalf("Run() = %s, %v; want finished", state, err)
+		}
+		<-room
+		words := ""
+		for _, ev := range n.events(t) {
+			if strings.HasPrefix(ev.Text, "there is room again") {
+				words += ev.Text
+			}
+		}
+		if !strings.Contains(words, "NOT REACHED: protect by guard") || strings.Contains(words, "was at rest") {
+			t.Errorf("with room again it was said: %q; want that the guard did not close", words)
+		}
+	})
+}

@@ -563,5 +563,8 @@ func (e *Engine) connectQuietly(ctx context.Context) error {
 	op, end := e.operation(ctx)
 	defer end()
 	_ = e.connectAll(op)
+	if e.progress.restBad != "" {
+		e.rest(ctx) // what is reached by now must not be denied in the next word
+	}
 	return nil
 }
