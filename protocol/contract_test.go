@@ -37,6 +37,8 @@ func status() protocol.Status {
 		Bench: "skerry", Version: "1.0.0", State: protocol.Holding, Causes: []protocol.Cause{protocol.ByGuard, protocol.ByOperator}, Reason: "pump power",
 		Run: "20310203-0405-a", Title: "Ring", ReadingsAccepted: 3, ReadingsPlanned: 60, ReadingsSetAside: 1,
 		TimeLeft: new(protocol.Seconds(90 * time.Second)), EndedAt: new(at("2031-02-03T04:05:06.5Z")), Queue: []protocol.RunID{"r2"}, Waiting: []protocol.WaitingRun{{Run: "r2", Title: "Peak"}}, Armed: true, Simulated: new(20), Behind: 4, Hand: "ann",
+		HoldingSince: new(at("2031-02-03T04:05:06.5Z")), GivesUpAt: new(at("2031-02-03T16:05:06.5Z")), LooksAgain: new(protocol.Seconds(30 * time.Second)),
+		BenchTrouble: "at rest: no answer", BenchTroubleAt: new(at("2031-02-03T04:05:06.5Z")), Unpublished: "no broker",
 	}
 }
 

@@ -299,7 +299,13 @@ type Status struct {
 	Armed            bool         `json:"armed"`
 	Simulated        *int         `json:"simulated"` // null on a real bench, else the clock factor
 	Behind           int64        `json:"entries_unpublished"`
-	Hand             string       `json:"hand"` // who has the bench under their hand; empty: nobody
+	Hand             string       `json:"hand"`                // who has the bench under their hand; empty: nobody
+	HoldingSince     *Time        `json:"holding_since"`       // null where the run does not hold, or that is not known
+	GivesUpAt        *Time        `json:"gives_up_at"`         // when the hold fails the run; null: never by itself
+	LooksAgain       *Seconds     `json:"looks_again_every_s"` // null: nothing but a person ends the hold
+	BenchTrouble     string       `json:"bench_trouble"`       // outside any run, since the daemon's start; empty: none, or a run went over it
+	BenchTroubleAt   *Time        `json:"bench_trouble_at"`
+	Unpublished      string       `json:"unpublished_because"` // why entries wait; empty: nothing is wrong
 }
 
 // StartRequest asks for a run. Exactly one of Recipe and RecipeName is set.

@@ -100,6 +100,9 @@ func sentence(s protocol.Status) string {
 		b.WriteString(" " + strings.TrimSuffix(s.Reason, ".") + ".")
 	}
 	if s.State == protocol.Holding {
+		if s.LooksAgain != nil {
+			fmt.Fprintf(&b, " It looks again by itself every %s, and goes on when that is over.", unit.Span(s.LooksAgain.Duration()))
+		}
 		for _, c := range s.Causes {
 			if c == protocol.ByOperator || c == protocol.ByTrouble || c == protocol.ByRestart {
 				b.WriteString(" It waits for a person: gemel resume, or gemel stop.")
@@ -109,8 +112,27 @@ func sentence(s protocol.Status) string {
 				break
 			}
 		}
+		if s.GivesUpAt != nil {
+			fmt.Fprintf(&b, " If nothing ends the hold, the run fails at %s.", s.GivesUpAt.Local().Format(time.DateTime))
+		}
 	}
 	return b.String() + next(s.Waiting)
+}
+
+// beside says what is wrong beside any run.
+func beside(s protocol.Status) string {
+	text := ""
+	if s.BenchTrouble != "" {
+		text += "\nAt the bench"
+		if s.BenchTroubleAt != nil {
+			text += ", " + s.BenchTroubleAt.Local().Format(time.DateTime)
+		}
+		text += ": " + s.BenchTrouble
+	}
+	if s.Unpublished != "" {
+		text += fmt.Sprintf("\n%d entries are not published, the logbook has them: %s", s.Behind, s.Unpublished)
+	}
+	return text
 }
 
 // left says what a run still needs. Before the first reading only the dwells are known, and what is

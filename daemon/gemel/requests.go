@@ -245,7 +245,10 @@ func (c *statusCommand) Run(ctx context.Context, con *console) error {
 		if idle := s.Run == "" || s.State.Final(); idle && s.Hand == "" && len(s.Waiting) == 0 {
 			text += " Nothing waits; gemel start --recipe FILE begins a run."
 		}
-		fmt.Fprintln(con.out, text)
+		if s.Run != "" && s.State.Final() && s.Hand == "" {
+			text += fmt.Sprintf("\ngemel report --run %s tells its night.", s.Run)
+		}
+		fmt.Fprintln(con.out, text+beside(s))
 		return nil
 	})
 }

@@ -54,6 +54,7 @@ type session struct {
 	restBad string
 	book    *logbook.Book
 	keeper  *keeper.Keeper
+	teller  *teller // the keeper, for whoever asks how things are
 	broker  *broker.Broker
 	log     zerolog.Logger
 
@@ -187,6 +188,7 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 		Room:    s.book.Room(cmp.Or(s.file.LeastRoom, logbook.LeastRoom)),
 		Step:    killpoint(),
 	})
+	s.teller = &teller{Keeper: s.keeper, book: s.book, bench: &s.bench.Bench, courier: func() error { return s.courier.Trouble() }}
 	return s, s.serve(ctx)
 }
 
@@ -231,6 +233,7 @@ func (s *session) build(ctx context.Context, flags benchFlags) (err error) {
 
 // told logs what a service's own log should say of its runs; the journal has all of it.
 func (s *session) told(ev protocol.Event) {
+	s.teller.hear(ev)
 	switch ev.Kind {
 	case protocol.Began, protocol.Held, protocol.WentOn, protocol.Interrupted, protocol.Trouble, protocol.OperatorDid, protocol.Ended:
 		s.log.Info().Str("run", string(ev.Run)).Str("state", string(ev.State)).Msg(ev.Text)
@@ -278,12 +281,12 @@ func (s *session) serve(ctx context.Context) error {
 	}
 	front := s.crew(ctx)
 	front.Go("remote", func(ctx context.Context) error {
-		return remote.Serve(ctx, conn, s.keeper, remote.Config{Bench: s.file.Name, Version: version, Panicked: func(verb string, value any, stack []byte) {
+		return remote.Serve(ctx, conn, s.teller, remote.Config{Bench: s.file.Name, Version: version, Panicked: func(verb string, value any, stack []byte) {
 			s.log.Error().Str("request", verb).Interface("panic", value).Bytes("stack", stack).Msg("a request failed by a bug in this program; the bench goes on")
 		}})
 	})
 	front.Go("beat", func(ctx context.Context) error {
-		return remote.RunBeat(ctx, conn, func() protocol.Status { return s.keeper.Status(ctx) })
+		return remote.RunBeat(ctx, conn, func() protocol.Status { return s.teller.Status(ctx) })
 	})
 	return s.awaitRemote(front, conn)
 }

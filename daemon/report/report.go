@@ -59,6 +59,16 @@ func All(ctx context.Context, book *logbook.Book, run protocol.RunID, o Options)
 	return all, nil
 }
 
+// PlanOf works out a run's plan from the texts that it keeps.
+func PlanOf(ctx context.Context, book *logbook.Book, run protocol.RunID) (scan.Plan, error) {
+	row, err := book.Run(ctx, run)
+	if err != nil {
+		return scan.Plan{}, err
+	}
+	_, plan, err := planOf(ctx, book, row)
+	return plan, err
+}
+
 // planOf works out a run's bench and plan from the texts that it keeps.
 func planOf(ctx context.Context, book *logbook.Book, row logbook.RunRow) (*bench.File, scan.Plan, error) {
 	file, err := bench.Parse("bench file in the logbook", []byte(row.BenchText))
