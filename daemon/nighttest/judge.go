@@ -561,6 +561,7 @@ func (j *judge) totals(where string, b *protocol.Reading) {
 func (j *judge) event(r *runState, ev *protocol.Event) {
 	where := fmt.Sprintf("run %s: %s", ev.Run, ev.Kind)
 	if ev.Run == protocol.BenchRun {
+		j.unreached(ev)
 		j.reordered(ev)
 		return
 	}
@@ -574,6 +575,7 @@ func (j *judge) event(r *runState, ev *protocol.Event) {
 	case protocol.Interrupted:
 		j.current, r.owed, j.orphans = ev.Run, false, false
 		j.gates = nil // what was open when the process died is named by this
+		j.unreached(ev)
 	case protocol.Doubted:
 		from, _ := ev.Detail["from_sequence"].(float64)
 		to, _ := ev.Detail["to_sequence"].(float64)

@@ -15,7 +15,9 @@ type effect struct {
 	trouble  trouble.Trouble
 	at       time.Time
 	run      protocol.RunID // that was under way then; empty: none
-	met      bool           // that run was counting, and had to meet it
+	met      bool           // that run was counting, or asked for it, and had to meet it
+	starting bool           // it was met by the rest state with which a new process begins
+	passed   bool           // it is over
 	readings int            // accepted readings of that run that began since
 	surfaced bool           // as it declares
 	shown    bool           // somehow: in an event, a reading set aside, a check
@@ -24,6 +26,7 @@ type effect struct {
 // troubled takes a trouble in whose record says what it is. A kind that the judge never heard of is
 // held to what it declares.
 func (j *judge) troubled(r *instruments.Record) {
+	j.over(r)
 	if r.Text == "" || !strings.Contains(r.Text, "(") || r.Kind == instruments.Refused || r.Kind == instruments.LampOff || r.Kind == instruments.Plugged {
 		return
 	}
@@ -33,11 +36,36 @@ func (j *judge) troubled(r *instruments.Record) {
 	}
 	e := &effect{trouble: l[0], at: r.At}
 	if s := j.runs[j.current]; s != nil && s.began && !s.state.Final() {
-		e.run = j.current
-		e.met = s.state == protocol.Running && s.counting && !j.killed && !j.waits.full &&
+		e.run, e.starting = j.current, s.owed && !j.killed
+		e.met = s.state == protocol.Running && (s.counting || r.Kind == instruments.Befell) && !j.killed && !j.waits.full &&
 			(e.trouble.Device == "" || !j.hinders(e.trouble.Device)) // behind another trouble of its device it is met by nobody
 	}
 	j.effects = append(j.effects, e)
+}
+
+// over takes in that a trouble ended.
+func (j *judge) over(r *instruments.Record) {
+	for _, e := range j.effects {
+		if e.trouble.Device == r.Device && (r.Kind == instruments.Passed && r.Text == string(e.trouble.Kind) || r.Kind == instruments.Plugged && r.Text == e.trouble.String()) {
+			e.passed = true
+		}
+	}
+}
+
+// unreached takes in what a new process says of the rest state that it began with, in an event of the
+// bench or in the run's interruption: a device named there is a trouble written. What was over by the
+// interruption, and kept nothing from its rest state, need not show: the next act is to connect everything anew.
+func (j *judge) unreached(ev *protocol.Event) {
+	at := strings.Index(strings.ToLower(ev.Text), "not reached: ")
+	for _, e := range j.effects {
+		switch {
+		case !e.starting || e.surfaced:
+		case at >= 0 && e.trouble.Device != "" && strings.Contains(ev.Text[at:], " "+e.trouble.Device+": "):
+			e.surfaced = true
+		case ev.Kind == protocol.Interrupted:
+			e.met = e.met && !e.passed
+		}
+	}
 }
 
 // surfaces takes an event in: which troubles it may be the sign of.
