@@ -366,6 +366,9 @@ func (j *judge) value(r *instruments.Record) {
 	key := r.Device
 	switch r.Kind {
 	case instruments.ValueSet:
+		if !r.At.Equal(j.hindered) { // else it lost its power
+			j.covered(r)
+		}
 	case instruments.SensorRead:
 		key += " " + r.Text
 	default:
@@ -379,6 +382,15 @@ func (j *judge) value(r *instruments.Record) {
 		all = append(all[:0], all[2048:]...)
 	}
 	j.values[key] = all
+}
+
+// covered judges that no detector sees light while a setting moves: nobody looks at it meanwhile.
+func (j *judge) covered(r *instruments.Record) {
+	for _, d := range j.facts.Detectors {
+		if d.Protector != "" && j.guards[d.Protector] {
+			j.say("%s is set to %g with the %s detector open", r.Device, r.Value, d.Name)
+		}
+	}
 }
 
 // follow takes in what an event says about the plan.

@@ -278,6 +278,7 @@ func TestTheJudgeFindsEverySabotage(t *testing.T) {
 			}
 		})), "the plan allows"},
 		{"refinement", "ends refining without a word", watchedNight, "|", withoutPoints(func(p *protocol.Points) bool { return p.Refined > 0 && len(p.Points) == 0 }), "refining had no end"},
+		{"settings", "sets a setting with a detector open", delayNight, "|", fidget(30), "with the idler detector open"},
 		{"settings", "changes a setting while it counts", delayNight, "|", fidget(30), "while it was counted"},
 		{"settings", "writes another value of a setting than was decided", delayNight, "|", reading(9, light(func(r *protocol.Reading) {
 			for i := range r.Settings {
