@@ -107,6 +107,10 @@ const (
 	Check      ReadingKind = "check"      // a short look at the light before a dwell
 )
 
+// MostBody is the greatest body of an entry, in bytes: what is larger no broker of ours carries, and
+// everything behind it would wait for ever.
+const MostBody = 4<<20 - 4096
+
 // Reading is the counts of one completed dwell, with what was proved before and after.
 type Reading struct {
 	Head

@@ -2,6 +2,7 @@ package bench
 
 import (
 	"path/filepath"
+	"strconv"
 	"time"
 
 	"gemel/drivers"
@@ -62,7 +63,7 @@ func (f *File) Pace() drivers.Pace {
 // Facts are what a recipe must know of the bench.
 func (f *File) Facts() recipe.Facts {
 	facts := recipe.Facts{PumpShutter: f.Pump != nil, GateMin: f.Counter.GateMin, GateMax: f.Counter.GateMax,
-		Coincidences: f.Counter.Coincidences, Detectors: map[string]drivers.Channel{}, Pace: f.Pace()}
+		SliceBytes: f.Counter.sliceBytes(), Coincidences: f.Counter.Coincidences, Detectors: map[string]drivers.Channel{}, Pace: f.Pace()}
 	for _, c := range f.Counter.Channels {
 		if _, pairs := f.Counter.Coincidences[c]; !pairs && c != f.Counter.Tag {
 			facts.Singles = append(facts.Singles, c)
@@ -88,6 +89,24 @@ func (f *File) Facts() recipe.Facts {
 		facts.Settings = append(facts.Settings, recipe.Setting{Name: s.Name, Unit: s.Unit, Low: s.Low, High: s.High})
 	}
 	return facts
+}
+
+// sliceBytes is what one gate takes at most in the entry of its reading, in bytes: two times, each
+// channel with its name and its count, and the instrument's answer, which has each count again and a
+// few words.
+func (c Counter) sliceBytes() int {
+	const (
+		times = len(`{"gate_set_s":0.000000000,"gate_s":0.000000000,"counts":[],"raw":""},`) + 16
+		words = 64
+		one   = len(`{"channel":"","counts":},`)
+		exact = len("+1.234567890E+09,") // as an instrument may write it
+	)
+	digits := len(strconv.FormatUint(1<<max(c.Bits, 1), 10))
+	n := times + words
+	for _, ch := range c.Channels {
+		n += one + len(ch) + digits + max(digits+1, exact)
+	}
+	return n
 }
 
 // near resolves a path that the file names: relative ones start at the file.

@@ -11,6 +11,7 @@ import (
 	"strings"
 	"syscall"
 	"testing"
+	"time"
 
 	"gemel/daemon/logbook"
 	"gemel/sim/instruments"
@@ -129,4 +130,45 @@ func damage(t *testing.T, data, _ string) []string {
 	copy(text[2*4096:], bytes.Repeat([]byte{0x5a}, 10*4096))
 	writeFile(t, file, string(text))
 	return nil
+}
+
+// Who stops a bench whose shutter is stuck must not read that all is well.
+func TestAStopOfABenchThatStaysLitSaysSoAndFails(t *testing.T) {
+	if testing.Short() {
+		t.Skip("half a minute until the shutter sticks")
+	}
+	t.Parallel()
+	dir := t.TempDir()
+	bench, data, lines := quick(t, dir), filepath.Join(dir, "data"), filepath.Join(dir, "lines")
+	sim, ledger := simulate(t, bench, lines, "stuck_shutter(shutter, at 20s, for 5h)") // while the run goes on
+	p, ok := serve(t, nil, "--bench", bench, "--data", data, "--lines", lines)
+	if !ok {
+		t.Fatal(p.err)
+	}
+	must(t, "start", "--data", data, "--recipe", writeFile(t, filepath.Join(dir, "far.yaml"), farRecipe))
+	_, n := ledger.await(t, 0, "a long gate", gateIsLong)
+	began := ledger.all(t)[0].At
+	ledger.await(t, n, "a gate behind the time at which the shutter sticks", func(r instruments.Record) bool {
+		return r.Kind == instruments.GateOpened && r.At.Sub(began) > 22*time.Second
+	})
+	const says = "THE REST STATE WAS NOT REACHED: close shutter"
+	for _, c := range []struct {
+		args []string
+		says string
+	}{
+		{[]string{"hold"}, says},
+		{[]string{"stop", "--json"}, `"rest":"close shutter`},
+	} {
+		out, errOut, code := gemel(t, append(c.args, "--data", data)...)
+		if code != exitFailed || !strings.Contains(out, c.says) {
+			t.Errorf("%v: exit code %d; want %d and %q\n%s%s", c.args, code, exitFailed, c.says, out, errOut)
+		}
+	}
+	p.signal(syscall.SIGTERM)
+	p.wait()
+	quit(t, sim)
+	<-ledger.done
+	if is := blades(ledger.all(t)); is["shutter"] == "closed" {
+		t.Error("the shutter was closed all the same: nothing was tested")
+	}
 }

@@ -186,9 +186,10 @@ func (c *runCommand) execute(ctx context.Context, con *console, s *session, run 
 	defer done()
 	work := crew.New(fated, s.panicked)
 	work.Go("keeper", func(ctx context.Context) error {
-		defer work.Stop()
 		var err error
-		state, err = s.keeper.RunOne(ctx, run)
+		if state, err = s.keeper.RunOne(ctx, run); err == nil {
+			work.Stop() // not before an error: what ends the group first is what Wait returns
+		}
 		return err
 	})
 	work.Go("progress", func(ctx context.Context) error { return con.progress(ctx, s.keeper) })

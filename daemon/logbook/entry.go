@@ -83,10 +83,6 @@ func refused(err error) error {
 	return err
 }
 
-// mostBody is the greatest body, in bytes: what is larger no broker of ours carries, and everything
-// behind it would wait for ever. The greatest that the program makes is a fraction of it.
-const mostBody = 4<<20 - 4096
-
 // sumOf is what the columns named sum hold.
 func sumOf(parts ...string) int64 {
 	var sum uint32
@@ -107,8 +103,8 @@ func fits(e protocol.Entry) error {
 	if e.Sequence < 1 {
 		return fmt.Errorf("%w: sequence %d; want 1 or more", ErrGap, e.Sequence)
 	}
-	if len(e.Body) > mostBody {
-		return fmt.Errorf("%w: %d bytes; want at most %d", ErrBody, len(e.Body), mostBody)
+	if len(e.Body) > protocol.MostBody {
+		return fmt.Errorf("%w: %d bytes; want at most %d", ErrBody, len(e.Body), protocol.MostBody)
 	}
 	if !utf8.Valid(e.Body) {
 		return fmt.Errorf("%w: not UTF-8; want JSON", ErrBody)

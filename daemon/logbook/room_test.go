@@ -4,6 +4,8 @@ import (
 	"errors"
 	"strings"
 	"testing"
+
+	"gemel/protocol"
 )
 
 func TestRoomIsWantedTwiceOnceItWasTooLittle(t *testing.T) {
@@ -47,10 +49,10 @@ func TestABodyHasABound(t *testing.T) {
 		e = event("r1", 2, "trouble", "running", strings.Repeat("x", size-len(e.Body)))
 		return b.Append(t.Context(), e)
 	}
-	if err := fill(mostBody + 1); !errors.Is(err, ErrBody) {
+	if err := fill(protocol.MostBody + 1); !errors.Is(err, ErrBody) {
 		t.Errorf("one byte more: %v; want %v", err, ErrBody)
 	}
-	if err := fill(mostBody); err != nil {
+	if err := fill(protocol.MostBody); err != nil {
 		t.Error(err)
 	}
 }

@@ -25,6 +25,8 @@ type Facts struct {
 	GateMax     time.Duration
 	Watch       time.Duration // the longest gate without a look at the light: slices are cut to it; 0: none
 
+	SliceBytes int // what one gate takes at most in the entry of its reading; 0: no bound known
+
 	Singles      []drivers.Channel                      // channels that count one detector
 	Coincidences map[drivers.Channel][2]drivers.Channel // the two singles channels of each coincidence channel
 	Detectors    map[string]drivers.Channel             // the singles channel of each detector
@@ -422,10 +424,19 @@ func (f Facts) watched(d scan.Dwell) scan.Dwell {
 	return d
 }
 
+// restOfReading is more than an entry of a reading holds beside its slices, in bytes: some hundred for
+// each axis, setting, sensor and channel.
+const restOfReading = 256 << 10
+
 func checkGates(d scan.Dwell, at strict.Place, f Facts) []protocol.Finding {
 	d = f.watched(d)
-	if n := (d.Time + d.Slice - 1) / d.Slice; n > maxSlices {
+	n := int((d.Time + d.Slice - 1) / d.Slice)
+	if n > maxSlices {
 		return []protocol.Finding{at.Finding(fmt.Sprintf("%d gates of %s, as often as the light has to be looked at", n, unit.Span(d.Slice)), fmt.Sprintf("at most %d: a shorter dwell and more repeats", maxSlices))}
+	}
+	if f.SliceBytes > 0 && n > (protocol.MostBody-restOfReading)/f.SliceBytes {
+		return []protocol.Finding{at.Finding(fmt.Sprintf("%d gates of %s, each of up to %d bytes with this counter's channels and their names", n, unit.Span(d.Slice), f.SliceBytes),
+			fmt.Sprintf("at most %d, which one entry of the logbook holds: longer slices, or a shorter dwell and more repeats", (protocol.MostBody-restOfReading)/f.SliceBytes))}
 	}
 	low, high := f.GateMin, f.GateMax
 	if high == 0 {
