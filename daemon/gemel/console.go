@@ -106,6 +106,9 @@ func sentence(s protocol.Status) string {
 		for _, c := range s.Causes {
 			if c == protocol.ByOperator || c == protocol.ByTrouble || c == protocol.ByRestart {
 				b.WriteString(" It waits for a person: gemel resume, or gemel stop.")
+				if c == protocol.ByTrouble {
+					b.WriteString(" See to what is named first: a line or an instrument that comes back does not end this hold.")
+				}
 				if n := len(s.Waiting); n > 0 {
 					fmt.Fprintf(&b, " Until then nothing behind it begins: %s in the queue.", count(n, "run"))
 				}

@@ -28,7 +28,7 @@ func TestAHoldTellsHowLongItLastsAndWhatItWaitsFor(t *testing.T) {
 		"storage":            {protocol.Held, nil, []protocol.Cause{protocol.ByStorage}, 2 * time.Hour, 30 * time.Second, "It looks again by itself every 30 s"},
 		"a sensor's guard":   {protocol.GuardBroken, map[string]any{"guard": "power"}, []protocol.Cause{protocol.ByGuard}, time.Hour, 10 * time.Second, "It looks again by itself every 10 s"},
 		"a rate's guard":     {protocol.GuardBroken, map[string]any{"guard": "rate"}, []protocol.Cause{protocol.ByGuard}, 2 * time.Hour, 30 * time.Second, "It looks again by itself every 30 s"},
-		"a trouble":          {protocol.Held, nil, []protocol.Cause{protocol.ByTrouble}, 2 * time.Hour, 0, "It waits for a person: gemel resume, or gemel stop."},
+		"a trouble":          {protocol.Held, nil, []protocol.Cause{protocol.ByTrouble}, 2 * time.Hour, 0, "gemel resume, or gemel stop. See to what is named first"},
 		"an operator":        {protocol.Held, nil, []protocol.Cause{protocol.ByOperator}, 0, 0, "It waits for a person: gemel resume, or gemel stop."},
 		"light and operator": {protocol.Held, nil, []protocol.Cause{protocol.ByLight, protocol.ByOperator}, 0, 0, "It waits for a person: gemel resume, or gemel stop."},
 	} {

@@ -4,6 +4,7 @@ import (
 	"context"
 	"encoding/json"
 	"fmt"
+	"math"
 	"slices"
 	"strconv"
 	"strings"
@@ -35,8 +36,9 @@ type Night struct {
 
 	run    protocol.RunID
 	began  protocol.Time // the first entry's
-	ended  protocol.Time
 	looked protocol.Time // when the bench was last looked at by a check
+
+	beganAt int64 // the sequence of the entry that says that it began; 0: it did not
 }
 
 // Happening is one event.
@@ -76,7 +78,7 @@ func NightOf(ctx context.Context, book *logbook.Book, run protocol.RunID) (Night
 	if err != nil {
 		return Night{}, err
 	}
-	n := Night{run: run, began: row.QueuedAt, ended: row.EndedAt, State: row.State, Bench: []Happening{}, Interruptions: []Happening{}, Holds: []Hold{}, Doubts: []Happening{}, Cuts: []Happening{}, Troubles: []Happening{}, Earlier: []EarlierOfNight{}, Notes: []NoteOfNight{}}
+	n := Night{run: run, began: row.QueuedAt, State: row.State, Bench: []Happening{}, Interruptions: []Happening{}, Holds: []Hold{}, Doubts: []Happening{}, Cuts: []Happening{}, Troubles: []Happening{}, Earlier: []EarlierOfNight{}, Notes: []NoteOfNight{}}
 	if err := each(ctx, book, run, n.add); err != nil {
 		return Night{}, err
 	}
@@ -111,16 +113,42 @@ func NightOf(ctx context.Context, book *logbook.Book, run protocol.RunID) (Night
 const eveningBefore = 12 * time.Hour
 
 // addBench takes in what happened to the bench outside any run: since the run before ended, and until
-// this one did.
+// this one did. It goes by the order of commits: the clock of a simulated bench may run ahead of the
+// wall's, by which the bench's own events are dated.
 func (n *Night) addBench(ctx context.Context, book *logbook.Book, row logbook.RunRow) error {
-	from := row.QueuedAt.Add(-eveningBefore)
+	lastOf := func(run protocol.RunID) (int64, error) {
+		sequence, err := book.Last(ctx, run)
+		if err != nil {
+			return 0, err
+		}
+		id, _, err := book.Position(ctx, run, sequence)
+		return id, err
+	}
+	began, _, err := book.Position(ctx, row.Run, max(1, n.beganAt))
+	if err != nil {
+		return err
+	}
+	before := row.QueuedAt.Add(-eveningBefore)
+	from, to := int64(0), int64(math.MaxInt64)
+	if row.State.Final() {
+		if to, err = lastOf(row.Run); err != nil {
+			return err
+		}
+	}
 	runs, err := book.Runs(ctx)
 	if err != nil {
 		return err
 	}
 	for _, r := range runs {
-		if r.Run != row.Run && r.EndedAt.After(from) && r.EndedAt.Before(row.StartedAt.Time) {
-			from = r.EndedAt.Time
+		if r.Run == row.Run || r.StartedAt.IsZero() || !r.EndedAt.After(before) {
+			continue
+		}
+		id, err := lastOf(r.Run)
+		if err != nil {
+			return err
+		}
+		if id < began {
+			from = max(from, id)
 		}
 	}
 	return each(ctx, book, protocol.BenchRun, func(e protocol.Entry) error {
@@ -131,11 +159,14 @@ func (n *Night) addBench(ctx context.Context, book *logbook.Book, row logbook.Ru
 		if err := json.Unmarshal(e.Body, &ev); err != nil {
 			return err
 		}
-		wrong := ev.Kind == protocol.Trouble || ev.Kind == protocol.Interrupted || ev.Kind == protocol.Doubted
-		if wrong && !ev.At.Before(from) && (row.EndedAt.IsZero() || !ev.At.After(row.EndedAt.Time)) {
+		if wrong := ev.Kind == protocol.Trouble || ev.Kind == protocol.Interrupted || ev.Kind == protocol.Doubted; !wrong || ev.At.Before(before) {
+			return nil
+		}
+		id, _, err := book.Position(ctx, protocol.BenchRun, e.Sequence)
+		if err == nil && id > from && id < to {
 			n.Bench = append(n.Bench, Happening{ev.At, ev.Text})
 		}
-		return nil
+		return err
 	})
 }
 
@@ -175,6 +206,7 @@ func (n *Night) event(ev protocol.Event) {
 	switch ev.Kind {
 	case protocol.Began:
 		n.Planned = number("readings_planned")
+		n.beganAt = ev.Sequence
 	case protocol.Interrupted:
 		n.Interruptions = append(n.Interruptions, here)
 	case protocol.Doubted:
