@@ -33,7 +33,8 @@ import (
 //     nothing opens and nothing counts, but for looks at the light where light alone holds, or the
 //     guard of a rate alone, which alone may open the pump for it;
 //   - no gate opens and nothing moves after a stop was answered;
-//   - light above a trip rate closes the detector's shutter at once;
+//   - light above a trip rate closes the detector's shutter at once, whatever other device is dead, and
+//     the pump's where the detector's is kept from closing, until it is not any more;
 //   - a controller that restarted is written down before any angle of its is believed again;
 //   - each kill of a run that was under way is followed by an interruption;
 //   - what places, lights, planned, turns, effect and waits say in their files.
@@ -323,14 +324,21 @@ func (j *judge) gateEnded(r *instruments.Record) {
 const protectWithin = 5 * time.Second
 
 func (j *judge) checkBright() {
-	for name, since := range j.bright {
-		if j.killed {
-			continue // nobody lives to close it; the start will
+	for _, d := range j.facts.Detectors {
+		since, bright := j.bright[d.Name]
+		lasts := j.now.Sub(since)
+		if !bright || j.killed || lasts <= j.watchPeriod()+protectWithin {
+			continue // where nobody lives to close it the start will
 		}
-		if j.now.Sub(since) > j.watchPeriod()+protectWithin {
-			j.say("the %s detector is still open %s after a gate far above its trip rate", name, j.now.Sub(since).Round(time.Millisecond))
-			delete(j.bright, name)
+		also := ""
+		if j.withheld(d.Protector) {
+			if !j.pumpOpen || j.withheld(j.facts.Pump) {
+				continue // what cannot be protected has the pump closed before it, and is tried again
+			}
+			also = ", and so is the pump, though its protector cannot close"
 		}
+		j.say("the %s detector is still open %s after a gate far above its trip rate%s", d.Name, lasts.Round(time.Millisecond), also)
+		delete(j.bright, d.Name)
 	}
 }
 

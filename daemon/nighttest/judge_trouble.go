@@ -108,6 +108,17 @@ func (j *judge) hinders(device string) bool {
 	return false
 }
 
+// withheld says whether a device cannot be told, or cannot do, what it is told, or could not a moment ago:
+// a plug that is out, or a trouble that lasts. One bad answer is no reason.
+func (j *judge) withheld(device string) bool {
+	const moment = 2 * time.Minute // as often as what was not reached is tried again, and what a try may take
+	return j.out[device] || slices.ContainsFunc(j.effects, func(e *effect) bool {
+		t := e.trouble
+		forGood := t.Kind == trouble.Gone || t.Kind == trouble.DeadLine
+		return t.Device == device && (forGood || t.For > 0 && !j.now.After(e.at.Add(t.For+moment)))
+	})
+}
+
 // accepted counts a reading against the troubles that did not show yet. None may be accepted with a
 // detector that was below its floor for as long as it takes to tell: it is latched, or paralysed.
 func (j *judge) accepted(where string, b *protocol.Reading) {

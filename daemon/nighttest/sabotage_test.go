@@ -167,6 +167,7 @@ func TestTheJudgeFindsEverySabotage(t *testing.T) {
 		{"zeros", "writes nothing of a lost zero", "", "| restart(rotary, at 4m)", withoutEvents(protocol.Trouble, protocol.HomedEvent, protocol.Held, protocol.TakenAgain), "nobody wrote down that its zero is lost|none of [trouble"},
 		{"lights", "ignores too much light", "", "| lamp(at 4m, for 90s, rate 6000000 Hz)", ignoreLight, "still open"},
 		{"lights", "protects too late", "", "| lamp(at 4m, for 90s, rate 6000000 Hz)", protectAfter(20 * time.Second), "still open|was in light above its trip rate for"},
+		{"lights", "protects too late while the counter is silent", "", "| lamp(at 4m, for 90s, rate 6000000 Hz); silent(counter, at 4m0.2s, for 1m)", protectAfter(20 * time.Second), "still open"},
 		{"lights", "counts in too much light", "", "| lamp(at 4m, for 90s, rate 6000000 Hz)", ignoreLight, "was accepted, and the"},
 		{"pump and shields", "takes darks with the pump open", "", "|", darkInTheLight, "is a dark, and the pump was open"},
 		{"pump and shields", "takes light with the pump closed", "", "|", lightInTheDark, "is not dark, and the pump was open during 0 of"},
