@@ -112,6 +112,8 @@ type Engine struct {
 	simulated  *int
 	patience   time.Duration                    // no hold but an operator's lasts longer
 	waitsSince time.Time                        // when the present hold began to count: downtime does not
+	waited     map[string]time.Duration         // how long each guard has held since a visit was last done
+	doneThen   int                              // visits done by then
 	obeying    *order                           // the request being carried out
 	owed       []*order                         // answered "done, not recorded": written when there is room
 	homing     bool                             // a person allowed the next search for the zero
@@ -140,7 +142,7 @@ type Snapshot struct {
 
 // New prepares an engine. It starts nothing and touches nothing.
 func New(c Config) *Engine {
-	e := &Engine{Config: c, progress: c.Past.clone(), commanded: map[drivers.AxisName]unit.Angle{}, sent: map[drivers.AxisName]bool{}, told: map[drivers.DeviceName]float64{}, strayed: map[drivers.DeviceName]bool{}, opened: map[drivers.DeviceName]bool{}, deaf: map[drivers.DeviceName]time.Time{}}
+	e := &Engine{Config: c, progress: c.Past.clone(), waited: map[string]time.Duration{}, commanded: map[drivers.AxisName]unit.Angle{}, sent: map[drivers.AxisName]bool{}, told: map[drivers.DeviceName]float64{}, strayed: map[drivers.DeviceName]bool{}, opened: map[drivers.DeviceName]bool{}, deaf: map[drivers.DeviceName]time.Time{}}
 	e.homing = c.MayHome
 	e.patience = c.Plan.Trouble.GiveUpAfter
 	if e.patience <= 0 {

@@ -170,8 +170,18 @@ func (e *Engine) afterGuard(ctx context.Context, t task, b *brokenGuard) error {
 		return e.holdFor(ctx, protocol.ByTrouble, "held: "+b.Error(), detail)
 	}
 	bad := e.rest(ctx)
-	e.waitsSince = e.now()
+	e.waitsSince = e.now().Add(-e.waitedFor(b.guard.Name))
 	return e.event(ctx, protocol.GuardBroken, "held: "+b.Error()+withBad(bad), protocol.Holding, add(e.progress.Causes, protocol.ByGuard), detail)
+}
+
+// waitedFor is how long a guard has held already since a visit was last done: one that is met at each
+// look, and broken again at each dwell, must come to its end all the same.
+func (e *Engine) waitedFor(guard string) time.Duration {
+	if done := len(e.progress.done); done != e.doneThen {
+		e.doneThen = done
+		clear(e.waited)
+	}
+	return e.waited[guard]
 }
 
 // guardEvery is the time between two looks at a guard that holds the run.
@@ -180,8 +190,8 @@ const guardEvery = 10 * time.Second
 // lookAtGuards ends the hold when every guard is met again.
 func (e *Engine) lookAtGuards(ctx context.Context) error {
 	if g, ok := e.guardNamed(e.progress.guard); ok && g.Sensor == "" {
-		if len(e.progress.Causes) > 1 {
-			return nil // who holds as well may have the enclosure open: no light for a look
+		if e.mayBeOpen() {
+			return nil
 		}
 		if met, err := e.lookAtRate(ctx, g); !met || err != nil {
 			return err
@@ -195,6 +205,9 @@ func (e *Engine) lookAtGuards(ctx context.Context) error {
 		return nil
 	}
 	left := without(e.progress.Causes, protocol.ByGuard)
+	name := e.progress.guard
+	_ = e.waitedFor(name)
+	e.waited[name] = e.now().Sub(e.waitsSince)
 	state := protocol.Running
 	if len(left) > 0 {
 		state = protocol.Holding
@@ -208,10 +221,16 @@ func (e *Engine) lookAtGuards(ctx context.Context) error {
 	return nil
 }
 
-// lookAtRate counts one gate as the guard's readings are counted, at the place where the axes stand,
-// and says whether its rate is within bounds again. What it saw is written as a check.
+// lookAtRate counts as the guard's readings are counted, and for as long as what broke it, and says
+// whether its rate is within bounds again. What it saw is written as a check.
 func (e *Engine) lookAtRate(ctx context.Context, g scan.Guard) (met bool, err error) {
-	against, interrupted, err := e.check(ctx, g.Rate != "", func(r *protocol.Reading) error {
+	dwell := e.Plan.Dwell.Slices()
+	if g.DarkRate != "" && e.Plan.Dark != nil {
+		dwell = e.Plan.Dark.Dwell.Slices()
+	} else if len(dwell) > 1 {
+		dwell = dwell[:1] // light is judged slice by slice, a dark when it is whole
+	}
+	against, interrupted, err := e.check(ctx, g.Rate != "", dwell, func(r *protocol.Reading) error {
 		channel := func(q scan.Guard) drivers.Channel {
 			if q.Name != g.Name {
 				return ""
@@ -226,7 +245,15 @@ func (e *Engine) lookAtRate(ctx context.Context, g scan.Guard) (met bool, err er
 	if _, bright := errors.AsType[*brightness](against); bright {
 		return false, e.holdFor(ctx, protocol.ByLight, "held: "+against.Error(), nil)
 	}
-	if _, broken := errors.AsType[*brokenGuard](against); !broken && drivers.RemedyOf(against) > drivers.Retry {
+	if drivers.RemedyOf(against) == drivers.HomeAgain {
+		if err := e.trouble(ctx, against); err != nil {
+			return false, err
+		}
+		return false, e.getReadyHeld(ctx)
+	}
+	_, broken := errors.AsType[*brokenGuard](against)
+	_, elsewhere := errors.AsType[*notThere](against)
+	if !broken && !elsewhere && drivers.RemedyOf(against) > drivers.Retry {
 		if err := e.trouble(ctx, against); err != nil {
 			return false, err
 		}
@@ -246,7 +273,7 @@ func (e *Engine) guardNamed(name string) (scan.Guard, bool) {
 
 // patienceNow is how long the present hold may last.
 func (e *Engine) patienceNow() time.Duration {
-	if e.progress.holds(protocol.ByGuard) {
+	if e.progress.holds(protocol.ByGuard) && !e.mayBeOpen() { // a person who is waited for gets the recipe's time
 		if g, ok := e.guardNamed(e.progress.guard); ok && g.GiveUpAfter > 0 {
 			return g.GiveUpAfter
 		}

@@ -1,6 +1,7 @@
 package engine
 
 import (
+	"context"
 	"errors"
 	"fmt"
 	"slices"
@@ -11,6 +12,7 @@ import (
 
 	"gemel/drivers"
 	"gemel/protocol"
+	"gemel/protocol/unit"
 	"gemel/scan"
 )
 
@@ -219,4 +221,233 @@ func TestAGuardOfTheDarkRateLooksAtDarks(t *testing.T) {
 			t.Errorf("readings %s; want the dark, accepted", got)
 		}
 	})
+}
+
+// bounded ends a run that goes on for ever, long after it should have failed.
+func bounded(t *testing.T) context.Context {
+	ctx, cancel := context.WithTimeout(t.Context(), 3*time.Hour)
+	t.Cleanup(cancel)
+	return ctx
+}
+
+// rated is a night with a guard of the signal's rate, and rates that the test decides before each act.
+func rated(t *testing.T, giveUp time.Duration, change func(*Config), rates func(n *night, since time.Duration, what string)) *night {
+	t.Helper()
+	n := newNight(t, func(c *Config) {
+		c.Plan.Guards = []scan.Guard{{Name: "rate of signal", Rate: "signal", Low: 500, High: 2000, Otherwise: scan.Hold, GiveUpAfter: giveUp}}
+		if change != nil {
+			change(c)
+		}
+	})
+	began := time.Now()
+	n.world.fail = func(what string) error {
+		n.world.mu.Lock()
+		defer n.world.mu.Unlock()
+		n.world.rates["signal"], n.world.rates["idler"] = 1000, 800
+		rates(n, time.Since(began), what)
+		return nil
+	}
+	return n
+}
+
+func TestLightThatComesWhileARateGuardHoldsIsLookedAtFirst(t *testing.T) {
+	for _, c := range []struct {
+		name  string
+		held  bool // a person holds as well, and resumes after 20 min
+		rates func(n *night, since time.Duration, what string)
+		want  protocol.State
+		ended time.Duration
+		kinds string
+	}{
+		{"both mend", false, func(n *night, since time.Duration, _ string) {
+			if since > 6*time.Second && since < 3*time.Minute {
+				n.rates["signal"] = 200
+			}
+			if since > time.Minute && since < 2*time.Minute {
+				n.rates["idler"] = 5e6
+			}
+		}, protocol.Finished, 5 * time.Minute, "began guard_broken held went_on guard_mended ended"},
+		{"both mend while a person holds", true, func(n *night, since time.Duration, _ string) {
+			if since > 6*time.Second && since < 3*time.Minute {
+				n.rates["signal"] = 200
+			}
+			if since > time.Minute && since < 2*time.Minute {
+				n.rates["idler"] = 5e6
+			}
+		}, protocol.Finished, 25 * time.Minute, "began guard_broken held held went_on went_on guard_mended ended"},
+		{"the pump is too bright each time that it is opened", false, func(n *night, since time.Duration, what string) {
+			if since > 6*time.Second {
+				n.rates["signal"] = 200
+			}
+			if since > time.Minute && strings.HasSuffix(what, "pump=true") {
+				n.rates["idler"] = 5e6
+			}
+		}, protocol.Failed, 32 * time.Minute, ""},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			synctest.Test(t, func(t *testing.T) {
+				began := time.Now()
+				n := rated(t, 30*time.Minute, nil, c.rates)
+				done := during(0, func() {})
+				if c.held {
+					done = during(100*time.Second, func() {
+						if s := n.eng.Snapshot(); !slices.Equal(s.Causes, []protocol.Cause{protocol.ByGuard, protocol.ByLight}) {
+							t.Errorf("held for %v; want the guard and light", s.Causes)
+						}
+						if _, err := n.eng.Hold(t.Context(), "ann"); err != nil {
+							t.Error(err)
+						}
+						synctest.Wait()
+						before := len(n.heard())
+						time.Sleep(18 * time.Minute)
+						for _, l := range n.heard()[before:] {
+							if strings.HasPrefix(l, "open") || strings.HasPrefix(l, "gate") {
+								t.Errorf("%s while a person holds: the enclosure may be open", l)
+							}
+						}
+						if _, err := n.eng.Resume(t.Context(), "ann"); err != nil {
+							t.Error(err)
+						}
+					})
+				}
+				state, err := n.eng.Run(t.Context())
+				<-done
+				if took := time.Since(began); state != c.want || err != nil || took > c.ended {
+					t.Errorf("Run() = %s, %v after %s; want %s within %s", state, err, took, c.want, c.ended)
+				}
+				if got := kinds(n.events(t)); c.kinds != "" && got != c.kinds {
+					t.Errorf("events %s; want %s", got, c.kinds)
+				}
+				n.atRest(t)
+			})
+		})
+	}
+}
+
+func TestALookAtARateIsNoLaxerThanTheDwellThatBrokeIt(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		n := rated(t, 10*time.Minute, func(c *Config) {
+			for i := range c.Bench.Detectors {
+				c.Bench.Detectors[i].FloorHz = 0 // or the look counts longer for it
+			}
+		}, func(n *night, since time.Duration, _ string) {
+			if since > 6*time.Second {
+				n.rates["signal"] = 400 // within four standard deviations of 500 in 0.1 s, beyond them in 1 s
+			}
+		})
+		began := time.Now()
+		state, err := n.eng.Run(bounded(t))
+		if took := time.Since(began); state != protocol.Failed || err != nil || took > 12*time.Minute {
+			t.Errorf("Run() = %s, %v after %s; want failed in the guard's 10 min", state, err, took)
+		}
+		if got := kinds(n.events(t)); got != "began guard_broken ended" {
+			t.Errorf("events %s; want it broken once and never mended", got)
+		}
+	})
+}
+
+func TestAGuardThatEachDwellBreaksAgainComesToItsEnd(t *testing.T) {
+	for _, c := range []struct {
+		name string
+		well time.Duration // for how long light dwells are well again in between, from 5 min on
+		want time.Duration
+	}{
+		{"no dwell is accepted", 0, 10 * time.Minute},
+		{"one is accepted in between, and it begins anew", time.Minute, 15 * time.Minute},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			synctest.Test(t, func(t *testing.T) {
+				taken := 0
+				n := rated(t, 10*time.Minute, func(c *Config) { c.Plan.Repeat.Times = 200 }, func(n *night, since time.Duration, what string) {
+					well := since > 5*time.Minute && since < 5*time.Minute+c.well
+					if since > 6*time.Second && n.eng.progress.State == protocol.Running && strings.HasPrefix(what, "gate 1s pump=true") && !well {
+						n.rates["signal"] = 200 // each look finds it well
+						taken++
+					}
+				})
+				began := time.Now()
+				state, err := n.eng.Run(bounded(t))
+				if took := time.Since(began); state != protocol.Failed || err != nil || took < c.want || took > c.want+3*time.Minute {
+					t.Errorf("Run() = %s, %v after %s; want failed after %s", state, err, took, c.want)
+				}
+				if taken < 10 || !strings.Contains(kinds(n.events(t)), "guard_mended guard_broken") {
+					t.Errorf("broken %d times; want it to be met and broken by turns", taken)
+				}
+			})
+		})
+	}
+}
+
+// losing is a stage that says where it is only while it knows its zero.
+type losing struct{ fakeStage }
+
+func (s losing) Where(ctx context.Context) (map[drivers.AxisName]unit.Angle, error) {
+	if !s.w.homed {
+		return nil, &drivers.Error{Op: "where", Device: s.name, Remedy: drivers.HomeAgain, Err: errors.New("signal_arm does not know its zero")}
+	}
+	return s.fakeStage.Where(ctx)
+}
+
+func (s losing) Home(ctx context.Context, order []drivers.AxisName) error {
+	for _, a := range order {
+		s.w.at[a] = 0
+	}
+	for name, open := range s.w.open {
+		if open {
+			_ = s.w.act("searched with %s open", name)
+		}
+	}
+	return s.fakeStage.Home(ctx, order)
+}
+
+func TestAZeroThatIsLostWhileARateGuardHoldsIsFoundAsAtAnyOtherTime(t *testing.T) {
+	for _, c := range []struct {
+		name       string
+		unattended bool
+		kinds      string
+	}{
+		{"where the bench file allows it", true, "began guard_broken trouble trouble homed guard_mended ended"},
+		{"where a person has to say so", false, "began guard_broken trouble held went_on trouble homed guard_mended ended"},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			synctest.Test(t, func(t *testing.T) {
+				lost := false
+				n := rated(t, 15*time.Minute, func(cfg *Config) {
+					cfg.Bench.Unattended = map[drivers.DeviceName]bool{"rotary": c.unattended}
+					cfg.Bench.Stages = []drivers.Stage{losing{cfg.Bench.Stages[0].(fakeStage)}}
+				}, func(n *night, since time.Duration, _ string) {
+					if since > 6*time.Second && since < 3*time.Minute || n.at["idler_arm"] != 3*unit.Degree {
+						n.rates["signal"] = 200 // there is no light where a search leaves the arms
+					}
+					if since > 10*time.Second && !lost {
+						lost, n.homed = true, false
+					}
+				})
+				done := during(0, func() {})
+				if !c.unattended {
+					done = during(50*time.Minute, func() {
+						if s := n.eng.Snapshot(); !slices.Equal(s.Causes, []protocol.Cause{protocol.ByGuard, protocol.ByTrouble}) {
+							t.Errorf("held for %v (%s); want the guard, and trouble for a person", s.Causes, s.Reason)
+						}
+						if _, err := n.eng.Resume(t.Context(), "ann"); err != nil {
+							t.Error(err)
+						}
+					})
+				}
+				state, err := n.eng.Run(t.Context())
+				<-done
+				if state != protocol.Finished || err != nil {
+					t.Fatalf("Run() = %s, %v, events %s; want finished", state, err, kinds(n.events(t)))
+				}
+				if got := kinds(n.events(t)); got != c.kinds {
+					t.Errorf("events %s; want %s", got, c.kinds)
+				}
+				for _, l := range n.heard() {
+					if strings.HasPrefix(l, "searched with") {
+						t.Error(l)
+					}
+				}
+			})
+		})
+	}
 }

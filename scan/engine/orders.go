@@ -143,6 +143,7 @@ func (e *Engine) obey(ctx context.Context) (done bool, err error) {
 		return false, nil
 	}
 	e.obeying = o
+	held := 0
 	defer func() {
 		e.obeying = nil
 		if !o.answered {
@@ -163,6 +164,7 @@ func (e *Engine) obey(ctx context.Context) (done bool, err error) {
 			err = e.holdFor(ctx, protocol.ByOperator, "held by "+o.who, map[string]any{"who": o.who})
 		}
 	case resumeOrder:
+		held = len(e.progress.Causes)
 		if e.progress.State == protocol.Holding {
 			err = e.release(ctx, "resumed by "+o.who, map[string]any{"who": o.who}, protocol.ByOperator, protocol.ByTrouble, protocol.ByRestart)
 		}
@@ -173,6 +175,10 @@ func (e *Engine) obey(ctx context.Context) (done bool, err error) {
 		if err == nil && o.kind == resumeOrder && e.progress.State == protocol.Running {
 			e.homing = true // for this time only: somebody is there now
 			err = e.getReady(ctx, nil)
+			e.homing = false
+		} else if err == nil && o.kind == resumeOrder && len(e.progress.Causes) < held && !e.mayBeOpen() {
+			e.homing = true // what a guard still holds for may need the zero to be looked at
+			err = e.getReadyHeld(ctx)
 			e.homing = false
 		}
 	}
@@ -223,7 +229,9 @@ func (e *Engine) answer(o *order, recorded bool) {
 // holdFor adds a cause, after the rest state, and writes it.
 func (e *Engine) holdFor(ctx context.Context, cause protocol.Cause, text string, detail map[string]any) error {
 	bad := e.rest(ctx)
-	e.waitsSince = e.now()
+	if cause != protocol.ByLight || e.progress.State != protocol.Holding {
+		e.waitsSince = e.now() // light that a look at a guard saw begins no new wait, or the two could go on for ever
+	}
 	return e.event(ctx, protocol.Held, text+withBad(bad), protocol.Holding, add(e.progress.Causes, cause), detail)
 }
 
@@ -234,7 +242,10 @@ func (e *Engine) release(ctx context.Context, text string, detail map[string]any
 		return nil
 	}
 	state := protocol.Running
-	e.waitsSince = e.now()
+	if slices.Contains(causes, protocol.ByOperator) { // a person has seen it
+		e.waitsSince = e.now()
+		clear(e.waited)
+	}
 	if len(left) > 0 {
 		state = protocol.Holding
 		text += fmt.Sprintf("; still held by %s", join(left))

@@ -133,10 +133,7 @@ func (e *Engine) getReady(ctx context.Context, after error) error {
 		}
 	}
 	e.publishSnapshot()
-	clear(e.commanded) // angles are proved anew
-	clear(e.sent)
-	clear(e.told)
-	clear(e.deaf)
+	e.forget()
 	if err := e.findZero(ctx, op); err != nil || e.progress.State != protocol.Running || op.Err() != nil {
 		return err
 	}
@@ -150,6 +147,26 @@ func (e *Engine) getReady(ctx context.Context, after error) error {
 		return e.holdFor(ctx, protocol.ByTrouble, "held: "+firstLine(err), errorDetail(err))
 	}
 	return nil
+}
+
+// forget makes sure that angles are proved anew, and settings and sensors asked again.
+func (e *Engine) forget() {
+	clear(e.commanded)
+	clear(e.sent)
+	clear(e.told)
+	clear(e.deaf)
+}
+
+// getReadyHeld does during a hold that nobody is needed for what getReady does before the next reading,
+// but waits for no line: what is away is met again at the next look.
+func (e *Engine) getReadyHeld(ctx context.Context) error {
+	op, end := e.operation(ctx)
+	defer end()
+	if e.connectAll(op) != nil || op.Err() != nil {
+		return nil
+	}
+	e.forget()
+	return e.findZero(ctx, op)
 }
 
 // connectAll connects every device, with all light off first. It tries them all, and returns what each
@@ -414,8 +431,9 @@ func (e *Engine) waitOut(ctx context.Context) error {
 		e.rest(ctx) // a blade that stuck may move by now
 	}
 	pause := time.Minute
+	light := p.holds(protocol.ByLight) && !e.mayBeOpen() // before any guard: a rate is looked at with the pump open
 	switch {
-	case p.holds(protocol.ByGuard):
+	case p.holds(protocol.ByGuard) && !light:
 		pause = guardEvery
 		if g, ok := e.guardNamed(p.guard); ok && g.Sensor == "" {
 			pause = lookAgain // it opens the light for a moment
@@ -431,12 +449,19 @@ func (e *Engine) waitOut(ctx context.Context) error {
 		return nil
 	case p.holds(protocol.ByStorage):
 		return e.lookAtRoom(ctx)
+	case light:
+		return e.lookAtLight(ctx)
 	case p.holds(protocol.ByGuard):
 		return e.lookAtGuards(ctx)
-	case len(p.Causes) == 1 && p.holds(protocol.ByLight): // who holds as well may have the enclosure open
-		return e.lookAtLight(ctx)
 	}
 	return nil
+}
+
+// mayBeOpen says whether somebody may have the enclosure open: then no light for a look. A guard, the
+// light and a full disk hold by themselves.
+func (e *Engine) mayBeOpen() bool {
+	p := &e.progress
+	return p.holds(protocol.ByOperator) || p.holds(protocol.ByTrouble) || p.holds(protocol.ByRestart)
 }
 
 func (e *Engine) room() error {
@@ -463,7 +488,7 @@ func (e *Engine) lookAtRoom(ctx context.Context) error {
 // lookAtLight opens the detectors for a moment, with the pump closed, and ends the hold when the
 // light is well. What it saw is written as a check.
 func (e *Engine) lookAtLight(ctx context.Context) error {
-	against, interrupted, err := e.check(ctx, false, func(*protocol.Reading) error { return nil })
+	against, interrupted, err := e.check(ctx, false, nil, func(*protocol.Reading) error { return nil })
 	if err != nil || interrupted {
 		return err
 	}
@@ -485,16 +510,17 @@ func (e *Engine) lookAtLight(ctx context.Context) error {
 	return nil
 }
 
-// check counts one gate during a hold, with the pump open or closed, and comes back to rest. What it
-// saw is written as a reading of the kind check. against is what speaks against going on: the light,
-// an instrument, or what judge says; err is the logbook's.
-func (e *Engine) check(ctx context.Context, pump bool, judge func(*protocol.Reading) error) (against error, interrupted bool, err error) {
+// check counts for a moment during a hold, with the pump open or closed, and comes back to rest. Gates
+// of dwell follow where that is too short for what is judged. What it saw is written as a reading of
+// the kind check. against is what speaks against going on: the light, an instrument, or what judge
+// says; err is the logbook's.
+func (e *Engine) check(ctx context.Context, pump bool, dwell []time.Duration, judge func(*protocol.Reading) error) (against error, interrupted bool, err error) {
 	op, end := e.operation(ctx)
 	r := &protocol.Reading{Kind: protocol.Check, Simulated: e.simulated, Tag: string(e.Bench.Tag), Attempt: 1, StartedAt: protocol.Time{Time: e.now()},
 		Settings: []protocol.Setting{}, Sensors: []protocol.Sensor{}, Counts: []protocol.Count{}, Slices: []protocol.Slice{}, Angles: []protocol.Angle{}}
 	if pump {
 		var at map[drivers.AxisName]unit.Angle
-		if at, against = e.where(op); against == nil {
+		if at, against = e.whereToLook(op); against == nil {
 			against = e.mayOpen(at)
 		}
 	}
@@ -502,7 +528,7 @@ func (e *Engine) check(ctx context.Context, pump bool, judge func(*protocol.Read
 		against = e.light(op, pump)
 	}
 	if against == nil {
-		against = e.lookOnce(op, r)
+		against = e.lookOnce(op, r, dwell)
 	}
 	if against == nil {
 		against = judge(r)
@@ -526,9 +552,22 @@ func (e *Engine) check(ctx context.Context, pump bool, judge func(*protocol.Read
 	return against, interrupted, nil
 }
 
+// whereToLook says where the axes are. Those that were not sent to their point since they were last in
+// doubt are sent there first, pump closed and detectors protected: a rate means something there only.
+func (e *Engine) whereToLook(ctx context.Context) (map[drivers.AxisName]unit.Angle, error) {
+	targets := e.progress.point(e.progress.nearest().Point).Axes
+	for _, t := range targets {
+		if !e.sent[t.Axis] {
+			return e.goTo(ctx, targets)
+		}
+	}
+	return e.where(ctx)
+}
+
 // lookOnce counts a short gate, and where that is too short for a detector's floor to mean something
 // a longer one: a detector that so much light has latched looks as if it were dark for a moment, too.
-func (e *Engine) lookOnce(ctx context.Context, r *protocol.Reading) error {
+// Then it counts gates of dwell until it has counted for as long as they are together.
+func (e *Engine) lookOnce(ctx context.Context, r *protocol.Reading, dwell []time.Duration) error {
 	gate, floor := 100*time.Millisecond, time.Duration(0)
 	for _, d := range e.Bench.Detectors {
 		gate = max(gate, d.Glance)
@@ -536,8 +575,16 @@ func (e *Engine) lookOnce(ctx context.Context, r *protocol.Reading) error {
 			floor = max(floor, min(longestLook, time.Duration(1.1*floorCounts/d.FloorHz*float64(time.Second))))
 		}
 	}
-	for _, gate := range []time.Duration{gate, floor} {
-		if gate == 0 || gate <= r.Gate.Duration() {
+	enough := time.Duration(0)
+	for _, gate := range dwell {
+		enough += gate
+	}
+	for i, gate := range append([]time.Duration{gate, floor}, dwell...) {
+		want := gate
+		if i > 1 {
+			want = enough
+		}
+		if gate == 0 || want <= r.Gate.Duration() {
 			continue
 		}
 		slice, err := e.count(ctx, r, gate)
