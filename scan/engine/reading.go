@@ -403,7 +403,9 @@ func (e *Engine) set(ctx context.Context, r *protocol.Reading, targets []scan.Se
 				}
 				shielded = true
 			}
-			delete(e.told, t.Setting)
+			if !e.strayed[t.Setting] { // which is not noted where it stands before it was set again
+				delete(e.told, t.Setting)
+			}
 			value, err = s.Set(ctx, t.Value)
 		}
 		if err != nil {

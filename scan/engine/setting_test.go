@@ -201,6 +201,47 @@ func TestASettingThatStaysOffHoldsTheRun(t *testing.T) {
 	})
 }
 
+func TestNoDarkIsTakenBesideASettingThatLeftItsValueAndCannotBeSetAgain(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		value, strayed := 45.0, false
+		n := newNight(t, func(c *Config) {
+			for i := range c.Plan.Points {
+				c.Plan.Points[i].Settings = []scan.SettingTarget{{Setting: "laser", Value: float64(45 + i)}}
+			}
+		})
+		n.eng.Bench.Settings = []drivers.Setting{oven{fakeDevice{n.world, "laser"}, &value, false}}
+		n.eng.Bench.Within = map[drivers.DeviceName]float64{"laser": 0.1}
+		darks := 0
+		n.world.fail = func(what string) error {
+			switch {
+			case what == "gate 1s pump=false":
+				if darks++; darks == 2 {
+					value, strayed = 20, true
+				}
+			case strings.HasPrefix(what, "set laser") && strayed:
+				return &drivers.Error{Op: "set", Device: "laser", Remedy: drivers.Retry, Err: context.DeadlineExceeded}
+			}
+			return nil
+		}
+		done := during(5*time.Hour, func() {
+			if s := n.eng.Snapshot(); s.State != protocol.Holding || !strings.Contains(s.Reason, "laser: set") {
+				t.Errorf("%s, %q; want it held, because the laser cannot be set", s.State, s.Reason)
+			}
+			if _, err := n.eng.Stop(t.Context(), "ann"); err != nil {
+				t.Error(err)
+			}
+		})
+		n.eng.patience = 20 * time.Hour
+		_, _ = n.eng.Run(t.Context())
+		<-done
+		for _, r := range n.readings(t) {
+			if r.Accepted && r.Settings[0].After == 20 {
+				t.Errorf("reading %d accepted with %+v", r.Sequence, r.Settings)
+			}
+		}
+	})
+}
+
 func TestAHandSetsWithTheDetectorsProtectedAndOpensThemAgain(t *testing.T) {
 	for _, fails := range []bool{false, true} {
 		t.Run(fmt.Sprintf("it fails: %v", fails), func(t *testing.T) {
