@@ -83,7 +83,7 @@ func howItStands(r logbook.RunRow) string {
 	if r.State == protocol.Finished || r.State == protocol.Queued || r.Reason == "" {
 		return text
 	}
-	return text + ": " + r.Reason
+	return text + ": " + asItWas(r.Reason)
 }
 
 // rescue writes what is sound of a damaged logbook into a new one. Its exit code says whether

@@ -77,7 +77,7 @@ func sentence(s protocol.Status) string {
 	}
 	var b strings.Builder
 	if s.State.Final() {
-		fmt.Fprintf(&b, "Run %s, %q: %s", s.Run, s.Title, orElse(strings.TrimSuffix(s.Reason, "."), string(s.State)))
+		fmt.Fprintf(&b, "Run %s, %q: %s", s.Run, s.Title, orElse(strings.TrimSuffix(asItWas(s.Reason), "."), string(s.State)))
 		if s.EndedAt != nil {
 			fmt.Fprintf(&b, ", at %s", s.EndedAt.Local().Format(time.DateTime))
 		}
@@ -120,6 +120,12 @@ func sentence(s protocol.Status) string {
 		}
 	}
 	return b.String() + next(s.Waiting)
+}
+
+// asItWas tells what a hold that was given up had been for as what it was: whether it still stands
+// nobody knows.
+func asItWas(reason string) string {
+	return strings.Replace(reason, "; it was held: ", "; what the hold was for, when it began: ", 1)
 }
 
 // beside says what is wrong beside any run.

@@ -43,6 +43,9 @@ func TestAStatusIsSaidOnceAndLeavesNoQuestionOpen(t *testing.T) {
 		"over": {with(func(s *protocol.Status) {
 			s.State, s.Reason, s.EndedAt = protocol.Finished, "finished: 18 of 18 readings accepted", &protocol.Time{Time: time.Date(2031, 2, 3, 4, 5, 6, 0, time.Local)}
 		}), `Run r1, "Ring": finished: 18 of 18 readings accepted, at 2031-02-03 04:05:06.`},
+		"given up after a hold": {with(func(s *protocol.Status) {
+			s.State, s.Reason, s.EndedAt = protocol.Failed, "failed: it did not mend within 2 h; it was held: signal sees 9e+05 /s", &protocol.Time{Time: time.Date(2031, 2, 3, 4, 5, 6, 0, time.Local)}
+		}), `Run r1, "Ring": failed: it did not mend within 2 h; what the hold was for, when it began: signal sees 9e+05 /s, at 2031-02-03 04:05:06.`},
 		"held in front of others": {with(func(s *protocol.Status) {
 			s.State, s.Causes, s.Reason, s.TimeLeft = protocol.Holding, []protocol.Cause{protocol.ByOperator}, "held by ann", nil
 			s.Waiting = []protocol.WaitingRun{{Run: "r2", Title: "Peak"}}
