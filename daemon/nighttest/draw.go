@@ -251,10 +251,10 @@ func (d dice) script(file *bench.File, plans []scan.Plan) Script {
 		return (t.Kind == trouble.Gone || t.Kind == trouble.DeadLine) && !d.in(3) // most nights are to get through
 	})
 	answered := 0
-	for range []int{0, 1, 2, 3, 3, 3, 3, 3}[d.IntN(8)] {
+	for range []int{0, 1, 3, 3, 3, 3, 3, 3}[d.IntN(8)] {
 		// Each life has to be long enough to meet its kill.
 		k := Kill{After: d.within(length / 4)}
-		if !d.in(7) {
+		if !d.in(12) {
 			k = Kill{Step: engine.Steps[d.IntN(len(engine.Steps))], Nth: d.between(1, 15)}
 			switch k.Step {
 			case engine.StepRested:
