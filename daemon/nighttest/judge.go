@@ -35,6 +35,8 @@ import (
 //   - no gate opens and nothing moves after a stop was answered;
 //   - light above a trip rate closes the detector's shutter at once, whatever other device is dead, and
 //     the pump's where the detector's is kept from closing, until it is not any more;
+//   - no setting is set with a detector open, and none was below its floor in an accepted reading for as
+//     long as it takes to tell;
 //   - a controller that restarted is written down before any angle of its is believed again;
 //   - each kill of a run that was under way is followed by an interruption;
 //   - what places, lights, planned, turns, effect and waits say in their files.
