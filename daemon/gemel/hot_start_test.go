@@ -22,8 +22,8 @@ import (
 func TestAStartThatFailsLeavesTheBenchAtRest(t *testing.T) {
 	for _, c := range []struct {
 		name string
-		// hinder puts something in the way, and returns what the start is given beside its folders.
-		hinder func(t *testing.T, data, lines string) []string
+		// hinder puts something in the way, and returns what the start is given beside the usual.
+		hinder func(t *testing.T, data, lines string) (more []string)
 		says   []string
 		lit    bool // the pump's shutter cannot be reached
 	}{{
@@ -43,10 +43,21 @@ func TestAStartThatFailsLeavesTheBenchAtRest(t *testing.T) {
 	}, {
 		name: "the logbook is damaged, and the pump's shutter has no line",
 		hinder: func(t *testing.T, data, lines string) []string {
-			if err := os.Remove(filepath.Join(lines, "pump_shutter")); err != nil {
+			links, err := os.ReadDir(lines)
+			if err != nil {
 				t.Fatal(err)
 			}
-			return damage(t, data, lines)
+			fewer := t.TempDir()
+			for _, link := range links {
+				to, err := os.Readlink(filepath.Join(lines, link.Name()))
+				if err == nil && link.Name() != "pump_shutter" {
+					err = os.Symlink(to, filepath.Join(fewer, link.Name()))
+				}
+				if err != nil {
+					t.Fatal(err)
+				}
+			}
+			return append(damage(t, data, lines), "--lines", fewer)
 		},
 		says: []string{"damaged", "THE REST STATE WAS NOT REACHED: close shutter"},
 		lit:  true,

@@ -227,6 +227,7 @@ func TestTheAnswerToAStopOrAHoldSaysWhatIsNotAtRest(t *testing.T) {
 			}
 		}
 		during(t, k, func() {
+			time.Sleep(time.Second) // until it serves
 			taken := make(chan error, 1)
 			k.Hand(t.Context(), protocol.HandRequest{Act: protocol.HandWhere, Who: "ann"}, func(_ protocol.HandReply, err error) { taken <- err })
 			if err := <-taken; err != nil {
