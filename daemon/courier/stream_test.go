@@ -317,7 +317,7 @@ func TestAStreamOfOurOwnThatAnotherLogbookFilledIsMadeAnew(t *testing.T) {
 			}
 			older.add(entries("r1", 1, 4)...)
 			for _, e := range entries("r1", 5, end) {
-				e.Body = []byte(fmt.Sprintf(`{"run":"r1","sequence":%d,"other":true}`, e.Sequence))
+				e.Body = fmt.Appendf(nil, `{"run":"r1","sequence":%d,"other":true}`, e.Sequence)
 				older.add(e)
 			}
 			var said []string
