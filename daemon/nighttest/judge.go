@@ -190,7 +190,9 @@ func (j *judge) world(r *instruments.Record) {
 			j.moveStarted = r.At
 		}
 		j.mustNotAct("%s: a motion began", r.Device)
-		if j.resting() {
+		// A zero that is lost while nothing but a guard keeps the run is searched then, so that it is found when
+		// the guard is content; how it is searched is judged as ever.
+		if j.resting() && !(r.Kind != instruments.MoveStarted && j.watched()) {
 			j.say("%s: a motion began while run %s is %s", r.Device, j.current, j.runs[j.current].state)
 		}
 	case instruments.MoveEnded, instruments.MoveStopped, instruments.HomeFound, instruments.MarkFound:
@@ -250,18 +252,22 @@ func (j *judge) resting() bool {
 	return r != nil && (r.state == protocol.Holding || r.state.Final())
 }
 
-// mayLook says whether the current run holds for light and nothing else, and may look at it. For the
-// guard of a rate of light it may open the pump, too.
+// watched says whether the current run holds for light or a guard and nothing else: nobody may have
+// reached into the bench.
+func (j *judge) watched() bool {
+	r := j.runs[j.current]
+	return r != nil && r.state == protocol.Holding && !slices.ContainsFunc(r.causes, func(c protocol.Cause) bool { return c != protocol.ByLight && c != protocol.ByGuard })
+}
+
+// mayLook says whether the current run holds for light or a guard and nothing else, and may look at it.
+// For the guard of a rate of light it may open the pump, too, once the light is well.
 func (j *judge) mayLook(pump bool) bool {
 	r := j.runs[j.current]
-	if r == nil || r.state != protocol.Holding || len(r.causes) != 1 {
+	if !j.watched() {
 		return false
 	}
-	if r.causes[0] == protocol.ByLight {
+	if slices.Contains(r.causes, protocol.ByLight) {
 		return !pump
-	}
-	if r.causes[0] != protocol.ByGuard {
-		return false
 	}
 	for _, g := range j.facts.Plans[j.current].Guards {
 		if g.Name == r.guard {
