@@ -62,7 +62,7 @@ func TestWhatIsAskedForOnAFullDiskComesTrueWhenThereIsRoom(t *testing.T) {
 						}
 					}
 				})
-				state, err := n.eng.Run(t.Context())
+				state, err := n.eng.Run(bounded(t))
 				<-done
 				if state != c.state || err != nil {
 					t.Fatalf("Run() = %s, %v; want %s", state, err, c.state)
@@ -145,7 +145,7 @@ func TestAStopIsHeardInASearchWhoseWordHadToWaitForRoom(t *testing.T) {
 					}
 				})
 				began := time.Now()
-				state, err := n.eng.Run(t.Context())
+				state, err := n.eng.Run(bounded(t))
 				<-done
 				<-freed
 				if took := time.Since(began); state != protocol.Stopped || err != nil || took > 3*time.Minute {
