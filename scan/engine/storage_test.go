@@ -317,14 +317,14 @@ func TestTheBenchIsNotCalledAtRestWhereABladeStuckAllTheWhile(t *testing.T) {
 			t.Fatalf("Run() = %s, %v; want finished", state, err)
 		}
 		<-room
-		words := ""
+		var words strings.Builder
 		for _, ev := range n.events(t) {
 			if strings.HasPrefix(ev.Text, "there is room again") {
-				words += ev.Text
+				words.WriteString(ev.Text)
 			}
 		}
-		if !strings.Contains(words, "NOT REACHED: protect by guard") || strings.Contains(words, "was at rest") {
-			t.Errorf("with room again it was said: %q; want that the guard did not close", words)
+		if !strings.Contains(words.String(), "NOT REACHED: protect by guard") || strings.Contains(words.String(), "was at rest") {
+			t.Errorf("with room again it was said: %q; want that the guard did not close", words.String())
 		}
 	})
 }
