@@ -49,11 +49,12 @@ func TestAStartThatFailsLeavesTheBenchAtRest(t *testing.T) {
 			}
 			fewer := t.TempDir()
 			for _, link := range links {
-				to, err := os.Readlink(filepath.Join(lines, link.Name()))
-				if err == nil && link.Name() != "pump_shutter" {
-					err = os.Symlink(to, filepath.Join(fewer, link.Name()))
+				// To the link, not to where it leads now: the simulator makes a terminal anew when its host hangs
+				// up, under a name that begins with a dot until it takes the old one's place.
+				if link.Name() == "pump_shutter" || strings.HasPrefix(link.Name(), ".") {
+					continue
 				}
-				if err != nil {
+				if err := os.Symlink(filepath.Join(lines, link.Name()), filepath.Join(fewer, link.Name())); err != nil {
 					t.Fatal(err)
 				}
 			}
