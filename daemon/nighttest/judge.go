@@ -190,9 +190,9 @@ func (j *judge) world(r *instruments.Record) {
 			j.moveStarted = r.At
 		}
 		j.mustNotAct("%s: a motion began", r.Device)
-		// A zero that is lost while nothing but a guard keeps the run is searched then, so that it is found when
-		// the guard is content; how it is searched is judged as ever.
-		if j.resting() && !(r.Kind != instruments.MoveStarted && j.watched()) {
+		// A zero that is lost while nothing but a guard keeps the run is searched then, and the axes go to
+		// their point in the dark, so that a rate is looked at there; how it is searched is judged as ever.
+		if j.resting() && !(j.watched() && (r.Kind != instruments.MoveStarted || !j.pumpOpen && !slices.Contains(j.runs[j.current].causes, protocol.ByLight))) {
 			j.say("%s: a motion began while run %s is %s", r.Device, j.current, j.runs[j.current].state)
 		}
 	case instruments.MoveEnded, instruments.MoveStopped, instruments.HomeFound, instruments.MarkFound:
