@@ -188,7 +188,7 @@ func open(ctx context.Context, flags benchFlags, recipeFolder string, attended b
 		Room:    s.book.Room(cmp.Or(s.file.LeastRoom, logbook.LeastRoom)),
 		Step:    killpoint(),
 	})
-	s.teller = &teller{Keeper: s.keeper, book: s.book, bench: &s.bench.Bench, courier: func() error { return s.courier.Trouble() }}
+	s.teller = &teller{Keeper: s.keeper, book: s.book, courier: func() error { return s.courier.Trouble() }}
 	return s, s.serve(ctx)
 }
 

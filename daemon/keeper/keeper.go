@@ -605,6 +605,16 @@ func (k *Keeper) Status(ctx context.Context) protocol.Status {
 		left := protocol.Seconds(k.Bench.Pace.Real(*snap.TimeLeft).Round(100 * time.Millisecond))
 		s.TimeLeft = &left
 	}
+	if h := snap.Hold; h != nil {
+		s.HoldingSince = &protocol.Time{Time: h.Since}
+		if !h.GivesUpAt.IsZero() {
+			s.GivesUpAt = &protocol.Time{Time: h.GivesUpAt}
+		}
+		if h.Looks > 0 {
+			every := protocol.Seconds(k.Bench.Pace.Real(h.Looks))
+			s.LooksAgain = &every
+		}
+	}
 	return s
 }
 

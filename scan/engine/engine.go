@@ -138,6 +138,14 @@ type Snapshot struct {
 	Planned  int
 	TimeLeft *time.Duration // bench time; nil while holding or before anything is known
 	RestBad  string         // why the rest state could not be reached; empty when it was
+	Hold     *Hold          // nil while the run does not hold
+}
+
+// Hold is how long a hold lasts.
+type Hold struct {
+	Since     time.Time     // by the machine's clock: what counts towards its end
+	GivesUpAt time.Time     // by the machine's clock: when it fails the run; zero: never by itself
+	Looks     time.Duration // between two looks at what mends itself, bench time; 0: a person ends it
 }
 
 // New prepares an engine. It starts nothing and touches nothing.
@@ -606,6 +614,9 @@ func (e *Engine) publishSnapshot() {
 		}
 	}
 	e.mu.Lock()
+	if p.State == protocol.Holding {
+		s.Hold = e.snapshot.Hold // until waitOut knows better
+	}
 	e.snapshot = s
 	e.mu.Unlock()
 }

@@ -430,17 +430,9 @@ func (e *Engine) waitOut(ctx context.Context) error {
 	if p.restBad != "" {
 		e.rest(ctx) // a blade that stuck may move by now
 	}
-	pause := time.Minute
 	light := p.holds(protocol.ByLight) && !e.mayBeOpen() // before any guard: a rate is looked at with the pump open
-	switch {
-	case p.holds(protocol.ByGuard) && !light:
-		pause = guardEvery
-		if g, ok := e.guardNamed(p.guard); ok && g.Sensor == "" {
-			pause = lookAgain // it opens the light for a moment
-		}
-	case p.holds(protocol.ByLight), p.holds(protocol.ByStorage):
-		pause = lookAgain
-	}
+	pause := e.pause(light)
+	e.showHold(pause)
 	op, end := e.operation(ctx)
 	err := e.Bench.Pace.Wait(op, pause)
 	end()
@@ -455,6 +447,37 @@ func (e *Engine) waitOut(ctx context.Context) error {
 		return e.lookAtGuards(ctx)
 	}
 	return nil
+}
+
+// pause is how long the run holds until the next look, or until the patience is asked about again.
+func (e *Engine) pause(light bool) time.Duration {
+	p := &e.progress
+	switch {
+	case p.holds(protocol.ByGuard) && !light:
+		if g, ok := e.guardNamed(p.guard); ok && g.Sensor == "" {
+			return lookAgain // it opens the light for a moment
+		}
+		return guardEvery
+	case p.holds(protocol.ByLight), p.holds(protocol.ByStorage):
+		return lookAgain
+	}
+	return time.Minute
+}
+
+// showHold lets whoever asks for the status know how long this hold lasts.
+func (e *Engine) showHold(pause time.Duration) {
+	p := &e.progress
+	held := e.now().Sub(e.waitsSince)
+	h := Hold{Since: time.Now().Add(-e.Bench.Pace.Real(held))}
+	if !p.holds(protocol.ByOperator) {
+		h.GivesUpAt = h.Since.Add(e.Bench.Pace.Real(e.patienceNow()))
+	}
+	if !e.mayBeOpen() && (p.holds(protocol.ByGuard) || p.holds(protocol.ByLight) || p.holds(protocol.ByStorage)) {
+		h.Looks = pause
+	}
+	e.mu.Lock()
+	defer e.mu.Unlock()
+	e.snapshot.Hold = &h
 }
 
 // mayBeOpen says whether somebody may have the enclosure open: then no light for a look. A guard, the

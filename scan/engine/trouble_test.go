@@ -5,9 +5,11 @@ import (
 	"slices"
 	"testing"
 	"testing/synctest"
+	"time"
 
 	"gemel/drivers"
 	"gemel/protocol"
+	"gemel/scan"
 )
 
 // A trouble may be over before the run is ready again: it is written when it is met, or never.
@@ -72,4 +74,39 @@ func TestEachDeviceThatFailsWhileTheBenchIsMadeReadyIsWritten(t *testing.T) {
 			})
 		})
 	}
+}
+
+// A status tells of a hold what the engine itself goes by.
+func TestAHoldShowsHowLongItLasts(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		for _, c := range []struct {
+			causes []protocol.Cause
+			guard  string
+			fails  time.Duration // after it began; 0: never
+			looks  time.Duration // 0: a person
+		}{
+			{[]protocol.Cause{protocol.ByLight}, "", 2 * time.Hour, 30 * time.Second},
+			{[]protocol.Cause{protocol.ByStorage}, "", 2 * time.Hour, 30 * time.Second},
+			{[]protocol.Cause{protocol.ByGuard}, "power", time.Hour, 10 * time.Second},
+			{[]protocol.Cause{protocol.ByGuard}, "rate", 2 * time.Hour, 30 * time.Second},
+			{[]protocol.Cause{protocol.ByGuard, protocol.ByLight}, "power", time.Hour, 30 * time.Second}, // the light is looked at first
+			{[]protocol.Cause{protocol.ByGuard, protocol.ByTrouble}, "power", 2 * time.Hour, 0},
+			{[]protocol.Cause{protocol.ByTrouble}, "", 2 * time.Hour, 0},
+			{[]protocol.Cause{protocol.ByLight, protocol.ByOperator}, "", 0, 0},
+		} {
+			plan := scan.Plan{Trouble: scan.Trouble{GiveUpAfter: 2 * time.Hour}, Guards: []scan.Guard{{Name: "power", Sensor: "pump_power", GiveUpAfter: time.Hour}, {Name: "rate", Rate: "signal"}}}
+			e := New(Config{Bench: &Bench{Pace: 10}, Plan: plan})
+			e.origin, e.benchZero = time.Now(), time.Now()
+			e.progress.Causes, e.progress.guard = c.causes, c.guard
+			e.waitsSince = e.now().Add(-10 * time.Minute) // a minute of the machine's
+			e.showHold(e.pause(e.progress.holds(protocol.ByLight) && !e.mayBeOpen()))
+			h := e.Snapshot().Hold
+			if got := time.Since(h.Since); got != time.Minute {
+				t.Errorf("%v: held for %s; want 1 min", c.causes, got)
+			}
+			if h.Looks != c.looks || h.GivesUpAt.IsZero() != (c.fails == 0) || c.fails > 0 && h.GivesUpAt.Sub(h.Since) != c.fails/10 {
+				t.Errorf("%v: looks every %s and gives up at %s after %s; want %s and %s", c.causes, h.Looks, h.GivesUpAt, h.Since, c.looks, c.fails/10)
+			}
+		}
+	})
 }
